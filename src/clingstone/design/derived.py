@@ -1,0 +1,134 @@
+"""Designs made from a design: columns added, groups absorbed, rows collapsed to cells."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+
+from clingstone.design.design import Contrast, Design, Term
+from clingstone.design.response import Response
+from clingstone.maths.basis import Basis, aliased
+from clingstone.maths.once import Array, frozen
+from clingstone.maths.partition import Partition
+from clingstone.needs import NotSupported
+
+
+def extend(design: Design, name: str, columns: Array) -> Design:
+    """The design with further columns (n, k), on the user's scale, as one more term.
+
+    Columns that the design already spans are left out; NotSupported if none is left.
+    """
+    columns = np.asarray(columns, dtype=float)
+    columns = columns[:, None] if columns.ndim == 1 else columns
+    if design.root is not None:
+        columns = columns * design.root[:, None]
+    rest = design.basis.project(columns)
+    size = np.linalg.norm(columns, axis=0)
+    rest = rest[:, np.linalg.norm(rest, axis=0) > 1e-9 * np.where(size == 0, 1.0, size)]
+    drop = set(aliased(rest)) if rest.shape[1] else set()
+    keep = [j for j in range(rest.shape[1]) if j not in drop]
+    if not keep:
+        raise NotSupported(f"the model already spans {name}")
+    p, k = design.p, len(keep)
+    basis = design.basis.extend(rest[:, keep])
+    names = tuple(f"{name} {j + 1}" for j in range(k)) if k > 1 else (name,)
+    term = Term(name, tuple(range(p, p + k)), "numeric")
+    pad = (0.0,) * k
+    return replace(
+        design,
+        basis=basis,
+        names=design.names + names,
+        terms=(*design.terms, term),
+        contrasts=tuple(Contrast(c.name, c.weights + pad, c.kind, c.of) for c in design.contrasts),
+    )
+
+
+def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
+    """Cell means swept out of every column; the names of coefficients that this removes come back too."""
+    root = np.ones(design.n) if design.root is None else design.root
+    X = design.Q @ design.basis.R
+    X = X - root[:, None] * (part.sums(X * root[:, None]) / part.sums(root**2)[:, None])[part.codes]
+    original = np.linalg.norm(design.basis.R, axis=0)
+    gone = [j for j in range(design.p) if np.linalg.norm(X[:, j]) <= 1e-9 * original[j]]
+    keep = [j for j in range(design.p) if j not in gone]
+    lost = [keep[i] for i in aliased(X[:, keep])] if keep else []
+    keep = [j for j in keep if j not in lost]
+    place = {old: new for new, old in enumerate(keep)}
+    terms = []
+    for t in design.terms:
+        columns = tuple(place[j] for j in t.columns if j in place)
+        if columns:
+            terms.append(replace(t, columns=columns))
+    contrasts = tuple(
+        Contrast(c.name, tuple(c.weights[j] for j in keep), c.kind, c.of)
+        for c in design.contrasts
+        if all(c.weights[j] == 0 for j in range(design.p) if j not in place)
+    )
+    basis = Basis.of(X[:, keep]) if keep else Basis(np.zeros((design.n, 0)), np.zeros((0, 0)))
+    derived = replace(
+        design,
+        basis=basis,
+        names=tuple(design.names[j] for j in keep),
+        terms=tuple(terms),
+        contrasts=contrasts,
+        swept=design.swept + part.count,
+    )
+    return derived, tuple(design.names[j] for j in sorted({*gone, *lost}))
+
+
+def collapse(response: Response, part: Partition) -> Response:
+    """Cell means of every column of the design and of y: one row per cell, no structures but places.
+
+    Coefficients that vary only within cells drop out.
+    """
+    design = response.design
+    root = np.ones(design.n) if design.root is None else design.root
+    weight = part.sums(root**2)
+    X = part.sums((design.Q @ design.basis.R) * root[:, None]) / weight[:, None]
+    drop = set(aliased(X))
+    keep = [j for j in range(design.p) if j not in drop]
+    sites = design.spatial
+    held = None
+    if sites is not None and part.relation(sites.part) in ("same", "nested"):
+        held = replace(sites, part=Partition("site", frozen(sites.part.codes[part.first]), sites.part.labels))
+    place = {old: new for new, old in enumerate(keep)}
+    terms = []
+    for t in design.terms:
+        columns = tuple(place[j] for j in t.columns if j in place)
+        if columns:
+            terms.append(replace(t, columns=columns))
+    small = Design(
+        basis=Basis.of(X[:, keep]),
+        names=tuple(design.names[j] for j in keep),
+        terms=tuple(terms),
+        spatial=held,
+        neighbours=design.neighbours if held is not None else (),
+        covariates={k: part.means(v) for k, v in design.covariates.items()},
+        known=design.known,
+    )
+    Y = part.sums(whole(response) * root[:, None]) / weight[:, None]
+    return Response.of(small, Y)
+
+
+def whole(response: Response) -> Array:
+    """(n, B) the weight-scaled Y that a response stands for."""
+    return np.asarray(response.design.Q @ response.coef + response.residual)
+
+
+def onto(response: Response, derived: Design) -> Response:
+    """The same y over a derived design of the same rows (``extend`` or ``absorb``)."""
+    Y = whole(response)
+    if derived.swept > response.design.swept:
+        raise ValueError("use sweep() to carry y onto a design with absorbed groups")
+    e = derived.basis.project(Y)
+    return Response(derived, frozen(derived.Q.T @ Y), frozen(e), frozen(np.einsum("ij,ij->j", e, e)))
+
+
+def sweep(response: Response, derived: Design, part: Partition) -> Response:
+    """The same y over a design from which the cells of ``part`` were absorbed."""
+    Y = whole(response)
+    root = np.ones(derived.n) if derived.root is None else derived.root
+    Y = Y - root[:, None] * (part.sums(Y * root[:, None]) / part.sums(root**2)[:, None])[part.codes]
+    e = derived.basis.project(Y)
+    return Response(derived, frozen(derived.Q.T @ Y), frozen(e), frozen(np.einsum("ij,ij->j", e, e)))

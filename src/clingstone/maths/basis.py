@@ -1,0 +1,124 @@
+"""The column space of a design: X = QR, contrasts in that basis, and Grams of [Q, e]."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+
+import numpy as np
+import numpy.typing as npt
+from scipy import linalg
+
+from clingstone.maths.once import Array, frozen
+
+RANK_TOLERANCE = 1e-10
+
+
+@dataclass(frozen=True, eq=False)
+class Basis:
+    """X = QR with Q orthonormal. X itself is not kept.
+
+    Parameters
+    ----------
+    Q : (n, p), orthonormal columns.
+    R : (p, p), so that the design's columns are Q @ R. Upper triangular up to a column order.
+    """
+
+    Q: Array
+    R: Array
+    inverse: Array = field(init=False, repr=False)
+
+    def __post_init__(self) -> None:
+        object.__setattr__(self, "inverse", np.linalg.inv(self.R) if self.R.size else self.R)
+
+    @classmethod
+    def of(cls, X: Array) -> Basis:
+        """Q and R of a design of full column rank.
+
+        Columns are scaled to unit length first, so the rank rule does not depend on units. Raises
+        ``ValueError`` for an aliased design; ask :func:`aliased` for the columns first.
+        """
+        scale = np.linalg.norm(X, axis=0)
+        if np.any(scale == 0):
+            raise ValueError("a design column is zero in every row")
+        Q, R = np.linalg.qr(X / scale)
+        if X.shape[1] and np.abs(np.diag(R)).min() < RANK_TOLERANCE:
+            raise ValueError("the design columns are linearly dependent")
+        return cls(frozen(Q), frozen(R * scale))
+
+    @property
+    def n(self) -> int:
+        return int(self.Q.shape[0])
+
+    @property
+    def p(self) -> int:
+        return int(self.Q.shape[1])
+
+    @property
+    def leverage(self) -> Array:
+        """(n,) diagonal of the hat matrix."""
+        return np.asarray(np.einsum("ij,ij->i", self.Q, self.Q))
+
+    def contrast(self, c: Array) -> Array:
+        """w = R⁻ᵀc, so that c'β̂ = w'Q'y and Var(c'β̂) = σ²‖w‖². c: (p,) or (k, p) → (p,) or (p, k)."""
+        return np.asarray(self.inverse.T @ np.asarray(c, dtype=float).T)
+
+    def coefficients(self, coef: Array) -> Array:
+        """β̂ = R⁻¹Q'y from Q'y, (p,) or (p, B)."""
+        return np.asarray(self.inverse @ coef)
+
+    def project(self, Y: Array) -> Array:
+        """MY: what the design leaves over."""
+        # Twice is enough: a second pass removes what rounding leaves of large means.
+        first = Y - self.Q @ (self.Q.T @ Y)
+        return np.asarray(first - self.Q @ (self.Q.T @ first))
+
+    def extend(self, columns: Array) -> Basis:
+        """Basis of [X, columns], the old columns first and unchanged. Columns (n, k)."""
+        cross = self.Q.T @ columns
+        new = Basis.of(self.project(columns))
+        p, k = self.p, columns.shape[1]
+        R = np.zeros((p + k, p + k))
+        R[:p, :p], R[:p, p:], R[p:, p:] = self.R, cross, new.R
+        return Basis(frozen(np.hstack([self.Q, new.Q])), frozen(R))
+
+
+def aliased(X: Array) -> tuple[int, ...]:
+    """Columns that are linear combinations of others, by pivoted QR on unit-length columns.
+
+    The rule: a pivot below 1e-10 of the largest. Earlier columns are kept where there is a choice.
+    """
+    scale = np.linalg.norm(X, axis=0)
+    zero = tuple(int(j) for j in np.flatnonzero(scale == 0))
+    Z = X / np.where(scale == 0, 1.0, scale)
+    kept: list[int] = []
+    lost: list[int] = list(zero)
+    # The p × p factor carries the same dependencies as X and is cheap to examine column by column.
+    R: npt.NDArray[np.float64] = np.asarray(  # p × p
+        linalg.qr(Z, mode="r", check_finite=False)[0][: X.shape[1]]
+    )
+    Q = np.zeros((R.shape[0], 0))
+    for j in range(X.shape[1]):
+        if j in zero:
+            continue
+        rest = R[:, j] - Q @ (Q.T @ R[:, j])
+        rest -= Q @ (Q.T @ rest)
+        size = float(np.linalg.norm(rest))
+        if size < RANK_TOLERANCE:
+            lost.append(j)
+        else:
+            kept.append(j)
+            Q = np.hstack([Q, rest[:, None] / size])
+    return tuple(sorted(lost))
+
+
+@dataclass(frozen=True, eq=False)
+class Gram:
+    """[Q, e]'V⁻¹[Q, e] for B columns of e, with ln|V|; V is on the scale where σ² = 1.
+
+    QQ (p, p) · QE (p, B) · EE (B,) · logdet scalar.
+    """
+
+    QQ: Array
+    QE: Array
+    EE: Array
+    logdet: float

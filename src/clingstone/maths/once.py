@@ -1,0 +1,44 @@
+"""One cache rule: a pure value of a frozen object is worked out once and kept with the object."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from functools import wraps
+from typing import Any, TypeVar, cast
+
+import numpy as np
+import numpy.typing as npt
+
+Array = npt.NDArray[np.float64]
+Codes = npt.NDArray[np.int32]
+F = TypeVar("F", bound=Callable[..., Any])
+
+
+def once(method: F) -> F:
+    """Keep the value of a pure method under (method, keys of its arguments).
+
+    Arguments that have a ``key`` attribute (partitions, forms) are known by it; all others must
+    be hashable. The store lives in the instance's ``__dict__``, so it is neither compared nor
+    shown, and travels with a pickled object.
+    """
+    name = method.__qualname__
+
+    @wraps(method)
+    def kept(self: Any, *args: Any, **kwargs: Any) -> Any:
+        store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
+        key = (
+            name,
+            *(getattr(a, "key", a) for a in args),
+            *((k, getattr(v, "key", v)) for k, v in sorted(kwargs.items())),
+        )
+        if key not in store:
+            store[key] = method(self, *args, **kwargs)
+        return store[key]
+
+    return cast(F, kept)
+
+
+def frozen(array: npt.NDArray[Any]) -> npt.NDArray[Any]:
+    """The same array, marked read-only: shared arrays must not be edited by a reader."""
+    array.flags.writeable = False
+    return array

@@ -1,0 +1,114 @@
+"""One run: every argument, the seed, progress and threads."""
+
+from __future__ import annotations
+
+import zlib
+from collections.abc import Callable, Iterator, Mapping
+from contextlib import contextmanager
+from dataclasses import dataclass, field
+from typing import Any, Literal, Protocol
+
+import numpy as np
+
+from clingstone.needs import Limits
+
+Missing = Literal["stop", "drop", "own-group"]
+Ties = Literal["stop", "replicate", "mean"]
+Weights = Literal["precision", "frequency"]
+Alternative = Literal["two-sided", "greater", "less"]
+
+
+@dataclass(frozen=True)
+class Settings:
+    """Every argument of ``examine``: the source of the Python signature, the options and results.json.
+
+    model : formula such as ``"y ~ x + arm"``.
+    residual : column of residuals, when no model is given.
+    group : one column, nested columns ``"a/b"``, or a tuple of crossed columns.
+    time, series : column of time; column that says which rows form one ordered series.
+    coords : two columns of coordinates. lonlat : True for longitude, latitude; None to decide
+        from names and values.
+    neighbours : "knn" or "band", with a number after a colon ("knn:6", "band:12.5").
+    weights, weights_kind : column of weights and what they mean.
+    focus : terms whose intervals matter; default all but the constant.
+    contrasts : {name: {coefficient: weight}} linear combinations.
+    means : factors whose level means are wanted.
+    unadjusted : also fit each focus term alone.
+    assigned : {term: group level} or {term: {"unit": level, "within": level}}.
+    sampled : group level that was sampled.
+    missing : what to do with a missing id, time or place. ties : with equal times in a series.
+    confidence : level of intervals, in (0, 1). alternative : direction of the primary tests.
+    material : band of standard-error factors that do not matter.
+    rehearsal : "auto", "none" or a number of replicates. seed : of every random number.
+    """
+
+    model: str | None = None
+    residual: str | None = None
+    group: str | tuple[str, ...] | None = None
+    time: str | None = None
+    series: str | None = None
+    coords: tuple[str, str] | None = None
+    lonlat: bool | None = None
+    polygons: str | None = None
+    neighbours: str | None = None
+    weights: str | None = None
+    weights_kind: Weights = "precision"
+    focus: tuple[str, ...] | None = None
+    contrasts: Mapping[str, Mapping[str, float]] | None = None
+    means: tuple[str, ...] | None = None
+    unadjusted: bool = False
+    assigned: Mapping[str, Any] | None = None
+    sampled: str | None = None
+    missing: Missing = "stop"
+    ties: Ties = "stop"
+    confidence: float = 0.95
+    alternative: Alternative = "two-sided"
+    material: tuple[float, float] = (0.95, 1.10)
+    rehearsal: str | int = "auto"
+    seed: int = 0
+
+
+class Progress(Protocol):
+    """What a caller may pass as ``progress``: called with (label, done, total)."""
+
+    def __call__(self, label: str, done: int, total: int) -> None: ...
+
+
+@dataclass(frozen=True, eq=False)
+class Run:
+    """Settings, thresholds and the source of every random number."""
+
+    settings: Settings = field(default_factory=Settings)
+    limits: Limits = field(default_factory=Limits)
+    report: Progress | None = None
+
+    def child(self, purpose: str, index: int = 0) -> np.random.Generator:
+        """A generator keyed by (seed, purpose, index).
+
+        Numbers drawn for one purpose do not move when another test, order or worker is added.
+        """
+        return np.random.default_rng([self.settings.seed, zlib.crc32(purpose.encode()), index])
+
+    @contextmanager
+    def progress(self, label: str, total: int) -> Iterator[Callable[[int], None]]:
+        """Yields ``advance(steps)``; silent when nobody listens."""
+        done = 0
+
+        def advance(steps: int = 1) -> None:
+            nonlocal done
+            done += steps
+            if self.report is not None:
+                self.report(label, done, total)
+
+        if self.report is not None:
+            self.report(label, 0, total)
+        yield advance
+
+
+@contextmanager
+def one_thread() -> Iterator[None]:
+    """One BLAS thread inside: the factorizations here are small, and two threads make them slower."""
+    from threadpoolctl import threadpool_limits
+
+    with threadpool_limits(limits=1, user_api="blas"):
+        yield
