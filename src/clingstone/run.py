@@ -6,11 +6,11 @@ import zlib
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from typing import Any, Literal, Protocol
+from typing import Any, Literal, Protocol, get_args
 
 import numpy as np
 
-from clingstone.needs import Limits
+from clingstone.needs import InputError, Limits, NotSupported
 
 Missing = Literal["stop", "drop", "own-group"]
 Ties = Literal["stop", "replicate", "mean"]
@@ -66,6 +66,38 @@ class Settings:
     material: tuple[float, float] = (0.95, 1.10)
     rehearsal: str | int = "auto"
     seed: int = 0
+
+    def __post_init__(self) -> None:
+        _one_of("missing", self.missing, get_args(Missing))
+        _one_of("ties", self.ties, get_args(Ties))
+        _one_of("alternative", self.alternative, get_args(Alternative))
+        if self.weights_kind == "survey":
+            raise NotSupported(
+                "survey weights are not supported: no theory here joins them with dependent errors",
+                "Use weights_kind='precision' if a weight says how exact a row is, 'frequency' if it counts rows.",
+            )
+        _one_of("weights_kind", self.weights_kind, get_args(Weights))
+        if not 0.5 <= self.confidence < 1:
+            raise InputError(
+                f"confidence={self.confidence} is not a level from 0.5 up to 1",
+                "Write 95 % as confidence=0.95.",
+            )
+        low, high = self.material
+        if not 0 < low <= 1 <= high:
+            raise InputError(
+                f"material=({low}, {high}) must be two positive factors on either side of 1",
+                "The default is (0.95, 1.10): standard errors 5 % too wide or 10 % too narrow matter.",
+            )
+        if isinstance(self.rehearsal, str):
+            _one_of("rehearsal", self.rehearsal, ("auto", "none"))
+        if self.seed < 0:
+            raise InputError(f"seed={self.seed} is negative", "Use a whole number from 0 upwards.")
+
+
+def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:
+    if value not in choices:
+        listed = ", ".join(repr(c) for c in choices)
+        raise InputError(f"{name}={value!r} is not one of {listed}", f"Choose one of {listed}.")
 
 
 class Progress(Protocol):

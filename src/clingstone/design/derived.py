@@ -77,6 +77,20 @@ def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
     return derived, tuple(design.names[j] for j in sorted({*gone, *lost}))
 
 
+def only(design: Design, term: Term) -> Design:
+    """The design with the constant and one term: for a term's unadjusted estimate."""
+    keep = [j for t in design.terms if t.kind == "constant" for j in t.columns] + list(term.columns)
+    place = {old: new for new, old in enumerate(keep)}
+    kept = [t for t in design.terms if t.kind == "constant" or t.name == term.name]
+    return replace(
+        design,
+        basis=Basis.of(design.Q @ design.basis.R[:, keep]),
+        names=tuple(design.names[j] for j in keep),
+        terms=tuple(replace(t, columns=tuple(place[j] for j in t.columns)) for t in kept),
+        contrasts=(),
+    )
+
+
 def collapse(response: Response, part: Partition) -> Response:
     """Cell means of every column of the design and of y: one row per cell, no structures but places.
 
