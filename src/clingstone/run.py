@@ -14,7 +14,7 @@ from clingstone.needs import InputError, Limits, NotSupported
 
 Missing = Literal["stop", "drop", "own-group"]
 Ties = Literal["stop", "replicate", "mean"]
-Weights = Literal["precision", "frequency"]
+Weights = Literal["precision", "frequency", "survey"]
 Alternative = Literal["two-sided", "greater", "less"]
 
 
@@ -74,9 +74,9 @@ class Settings:
         if self.weights_kind == "survey":
             raise NotSupported(
                 "survey weights are not supported: no theory here joins them with dependent errors",
-                "Use weights_kind='precision' if a weight says how exact a row is, 'frequency' if it counts rows.",
+                "Use 'precision' if a weight says how exact a row is, 'frequency' if it counts rows.",
             )
-        _one_of("weights_kind", self.weights_kind, get_args(Weights))
+        _one_of("weights_kind", self.weights_kind, ("precision", "frequency"))
         if not 0.5 <= self.confidence < 1:
             raise InputError(
                 f"confidence={self.confidence} is not a level from 0.5 up to 1",
