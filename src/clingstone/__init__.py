@@ -1,3 +1,84 @@
-"""Which rows of a regression hang together, what that does to its intervals, and what to report."""
+"""Which rows of a regression hang together, what that does to its intervals, and what to report.
+
+    import clingstone
+
+    examination = clingstone.examine("trial.csv", model="pressure ~ arm + age", group="clinic")
+    print(examination)
+    examination.save("trial-clingstone")
+
+Names are resolved on first use, so that ``import clingstone`` loads nothing heavy.
+"""
+
+from __future__ import annotations
+
+import sys
+from importlib import import_module
+from types import ModuleType
+from typing import TYPE_CHECKING, Any
+
+if TYPE_CHECKING:
+    from clingstone.case import Case as Case
+    from clingstone.examine import Examination as Examination
+    from clingstone.examine import examine as examine
+    from clingstone.examine import refit as refit
+    from clingstone.examine import replay as replay
+    from clingstone.needs import InputError as InputError
+    from clingstone.needs import Limits as Limits
+    from clingstone.needs import NotSupported as NotSupported
+    from clingstone.results import Results as Results
+    from clingstone.run import Settings as Settings
 
 __version__ = "0.1.0"
+
+_HOMES = {
+    "Case": "case",
+    "Examination": "examine",
+    "examine": "examine",
+    "refit": "examine",
+    "replay": "examine",
+    "InputError": "needs",
+    "Limits": "needs",
+    "NotSupported": "needs",
+    "Results": "results",
+    "Settings": "run",
+}
+__all__ = [
+    "Case",
+    "Examination",
+    "InputError",
+    "Limits",
+    "NotSupported",
+    "Results",
+    "Settings",
+    "__version__",
+    "examine",
+    "refit",
+    "replay",
+]
+
+
+def __getattr__(name: str) -> Any:
+    if name not in _HOMES:
+        raise AttributeError(f"module 'clingstone' has no attribute {name!r}")
+    value = getattr(import_module(f"clingstone.{_HOMES[name]}"), name)
+    globals()[name] = value
+    return value
+
+
+def __dir__() -> list[str]:
+    return sorted(__all__)
+
+
+class _Package(ModuleType):
+    """The package, in which ``examine`` is always the function.
+
+    Importing the module clingstone.examine would otherwise put the module in the function's place.
+    """
+
+    def __setattr__(self, name: str, value: Any) -> None:
+        if name == "examine" and isinstance(value, ModuleType):
+            value = value.examine
+        super().__setattr__(name, value)
+
+
+sys.modules[__name__].__class__ = _Package

@@ -217,7 +217,9 @@ def _write(value: Any, indent: str = "") -> str:
     """JSON with one line for a list of bare numbers or words, so that files can be read and diffed."""
     deeper = indent + "  "
     if isinstance(value, Mapping) and value:
-        rows = [f"{deeper}{json.dumps(key, ensure_ascii=False)}: {_write(value[key], deeper)}" for key in value]
+        rows = [
+            f"{deeper}{json.dumps(key, ensure_ascii=False)}: {_write(value[key], deeper)}" for key in value
+        ]
         return "{\n" + ",\n".join(rows) + f"\n{indent}}}"
     if isinstance(value, list | tuple) and any(isinstance(item, Mapping | list | tuple) for item in value):
         return "[\n" + ",\n".join(deeper + _write(item, deeper) for item in value) + f"\n{indent}]"
