@@ -1,0 +1,23 @@
+"""Remedies: what else can be reported in place of the ordinary intervals."""
+
+from __future__ import annotations
+
+from clingstone.needs import InputError
+from clingstone.remedies.longrun import Hac
+from clingstone.remedies.refit import explain, refit
+from clingstone.remedies.remedy import Remedy
+from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
+
+REMEDIES: tuple[Remedy, ...] = (Ordinary(), HeteroscedasticityRobust(), ClusterRobust(), Hac())
+
+
+def remedy(id: str) -> Remedy:
+    """The registered remedy of an id. Raises InputError with the known ids."""
+    for found in REMEDIES:
+        if found.id == id:
+            return found
+    known = ", ".join(r.id for r in REMEDIES)
+    raise InputError(f"there is no remedy named {id!r}", f"Known: {known}.")
+
+
+__all__ = ["REMEDIES", "explain", "refit", "remedy"]

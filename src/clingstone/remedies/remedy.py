@@ -10,7 +10,7 @@ import numpy as np
 
 from clingstone.design.design import Design, Term
 from clingstone.maths.once import Array
-from clingstone.needs import Family, Needs, Refusal
+from clingstone.needs import Family, Limits, Needs, Refusal
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -54,9 +54,20 @@ class Account:
 
 
 class Ready(Protocol):
-    """A remedy prepared for one design: live, holds arrays."""
+    """A remedy prepared for one design: live, holds arrays.
 
-    unusable: Mapping[str, Refusal]  # coefficient or contrast name → why it cannot be served
+    unusable : coefficient or contrast name → why it cannot be served. rule : the df rule in a word or
+    two, as a table shows it. notes : what a reader should know of this fit, one sentence each.
+    """
+
+    @property
+    def unusable(self) -> Mapping[str, Refusal]: ...
+
+    @property
+    def rule(self) -> str: ...
+
+    @property
+    def notes(self) -> tuple[str, ...]: ...
 
     def fit(self, fits: Fits) -> Estimates: ...
 
@@ -64,25 +75,50 @@ class Ready(Protocol):
 
 
 class Remedy(Protocol):
-    """A frozen dataclass of settings."""
+    """A frozen dataclass of settings; all but ``at`` and the conventions have defaults."""
 
-    id: str
-    name: str  # as a reader sees it: "cluster-robust, by clinic"
-    covers: frozenset[Family]
-    estimand: Estimand
-    needs: Needs
-    source: str
+    @property
+    def id(self) -> str: ...
+
+    @property
+    def name(self) -> str:
+        """As a reader sees it: "cluster-robust, by clinic"."""
+        ...
+
+    @property
+    def at(self) -> str:
+        """The level at which it is run; "" until chosen, and where there is no choice."""
+        ...
+
+    @property
+    def covers(self) -> frozenset[Family]: ...
+
+    @property
+    def estimand(self) -> Estimand: ...
+
+    @property
+    def needs(self) -> Needs: ...
+
+    @property
+    def source(self) -> str: ...
+
+    @property
+    def limits(self) -> Limits: ...
 
     def abouts(self, design: Design) -> tuple[str, ...]:
-        """The levels at which it can be run ("" when there is no choice)."""
+        """The levels at which it can be run, the default first; ("",) when there is no choice."""
+        ...
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        """The error model of the user's data that ``prepare`` wants, or None."""
         ...
 
     def prepare(self, design: Design, working: ErrorModel | None) -> Ready:
         """All that needs no y. Raises NotSupported(reason, hint)."""
         ...
 
-    def conventions(self) -> tuple[Remedy, ...]:
-        """The same remedy under the other common settings."""
+    def conventions(self) -> tuple[tuple[str, Remedy], ...]:
+        """The same remedy under the other common settings, each with words for them."""
         ...
 
 
@@ -100,7 +136,7 @@ class Interval:
     low: float
     high: float
     p: float
-    status: str  # "ok", "boundary", "caveat: …", "unusable: …"
+    status: str  # "ok", "boundary: …", "caveat: …", "unusable: …"
 
 
 @dataclass(frozen=True)

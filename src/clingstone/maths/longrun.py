@@ -1,0 +1,194 @@
+"""Long-run variance on a regular grid of time: equal-weighted cosines and the Bartlett kernel.
+
+Rows sit on the ticks of their series; a missing tick is a zero score (amplitude modulation, Parzen 1963).
+Sources: Lazarus, Lewis, Stock & Watson (2018) for the cosines; Newey & West (1987, 1994) for Bartlett;
+Bakirov & Székely (2006) for the law of a ratio with one positive weight.
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy import fft, optimize, signal
+
+from clingstone.maths.once import Array, once
+
+NODES = 80
+_theta, _weight = np.polynomial.legendre.leggauss(NODES)
+ANGLE = (_theta + 1) * np.pi / 4  # Gauss-Legendre on (0, π/2)
+WEIGHT = _weight * np.pi / 4
+Places = npt.NDArray[np.int64]
+
+
+@dataclass(frozen=True, eq=False)
+class Grid:
+    """Series laid end to end on one grid of ticks.
+
+    place : (n,) grid position of each row. starts, lengths : (S,) of each series, in ticks.
+    """
+
+    place: Places
+    starts: Places
+    lengths: Places
+
+    @classmethod
+    def of(cls, codes: npt.NDArray[np.int32], tick: Places) -> Grid:
+        """From the series of each row (nondecreasing codes) and its whole step, increasing in a series."""
+        change = np.r_[True, codes[1:] != codes[:-1]]
+        first = np.flatnonzero(change)
+        last = np.r_[first[1:], len(codes)] - 1
+        lengths = tick[last] - tick[first] + 1
+        starts = np.r_[0, np.cumsum(lengths)[:-1]]
+        series = np.cumsum(change) - 1
+        return cls(starts[series] + tick - tick[first][series], starts, lengths)
+
+    @property
+    def N(self) -> int:
+        return int(self.lengths.sum())
+
+    def spread(self, block: Array) -> Array:
+        """(n, k) rows → (N, k) ticks, zeros where a tick has no row."""
+        out = np.zeros((self.N, *block.shape[1:]))
+        out[self.place] = block
+        return out
+
+    @property
+    @once
+    def counts(self) -> Places:
+        """(S,) cosines per series, ν = ⌊0.4 N^⅔⌋, at least one; none for a series of one tick."""
+        nu = np.floor(0.4 * self.lengths ** (2 / 3)).astype(np.int64)
+        return np.asarray(np.where(self.lengths > 1, np.maximum(nu, 1), 0))
+
+    def cosine_sums(self, block: Array) -> Array:
+        """(Σν, k) √(N/ν)·Λ_j, Λ_j = √(2/N) Σ_t cos(πj(t−½)/N) u_t, so that Ŝ = Λ'Λ. O(N k log N)."""
+        U = self.spread(block)
+        out = []
+        for start, N, nu in zip(self.starts, self.lengths, self.counts, strict=True):
+            if nu:
+                turned = fft.dct(U[start : start + N], type=2, axis=0)[1 : nu + 1]
+                out.append(turned / np.sqrt(2 * nu))  # scipy's transform carries a factor 2
+        return np.vstack(out)
+
+    def cosines(self) -> Array:
+        """(n, Σν) the same as a matrix C: Λ = C'u. For n small by contract."""
+        C = np.zeros((self.N, int(self.counts.sum())))
+        j = 0
+        for start, N, nu in zip(self.starts, self.lengths, self.counts, strict=True):
+            t = np.arange(N) + 0.5
+            angle = np.outer(t, np.arange(1, nu + 1)) * (np.pi / N)
+            C[start : start + N, j : j + nu] = np.sqrt(2 / nu) * np.cos(angle)
+            j += nu
+        return np.asarray(C[self.place])
+
+    def correlate(self, block: Array, rho: float) -> Array:
+        """ΩH for Ω_ts = ρ^|t−s| within series, H (n, k): one filter each way on the ticks."""
+        if rho == 0.0:
+            return block
+        U = self.spread(block)
+        out = np.empty_like(U)
+        for start, N in zip(self.starts, self.lengths, strict=True):
+            u = U[start : start + N]
+            ahead = signal.lfilter([1.0], [1.0, -rho], u, axis=0)
+            back = signal.lfilter([1.0], [1.0, -rho], u[::-1], axis=0)[::-1]
+            out[start : start + N] = ahead + back - u
+        return np.asarray(out[self.place])
+
+    def bartlett(self, block: Array, lags: int) -> Array:
+        """(k, k) Σ_j (1 − |j|/(lags+1)) Γ_j of the columns of block, series by series. O(Nk²), any lags."""
+        L = lags + 1
+        U = self.spread(block)
+        out = np.zeros((U.shape[1], U.shape[1]))
+        for start, N in zip(self.starts, self.lengths, strict=True):
+            # A Bartlett sum is the mean square of moving sums of L ticks over the zero-padded series.
+            total = np.vstack([np.zeros(U.shape[1]), np.cumsum(U[start : start + N], axis=0)])
+            index = np.arange(N + L - 1)
+            moving = total[np.minimum(index + 1, N)] - total[np.maximum(index + 1 - L, 0)]
+            out += moving.T @ moving / L
+        return out
+
+
+@dataclass(frozen=True, eq=False)
+class RatioLaw:
+    """Law of t² = (a'ε)²/‖F'ε‖² for normal ε, from the covariance G of [a'ε, F'ε].
+
+    weights : (q,) λ, the eigenvalues of Cov(F'ε). load : (q+1,) v, so that at c the matrix of the form
+    (a'ε)² − c²‖F'ε‖² is diag(0, −c²λ) + vv': a diagonal plus rank one, with one positive eigenvalue.
+    """
+
+    weights: Array
+    load: Array
+
+    @classmethod
+    def of(cls, G: Array) -> RatioLaw:
+        """G : (q+1, q+1) covariance, a'ε first."""
+        values, vectors = np.linalg.eigh(G[1:, 1:])
+        kept = values > 1e-14 * values[-1]
+        values, vectors = values[kept], vectors[:, kept]
+        load = (vectors.T @ G[1:, 0]) / np.sqrt(values)  # Cov(a'ε, whitened F'ε)
+        rest = max(float(G[0, 0] - load @ load), 0.0)
+        return cls(values, np.r_[np.sqrt(rest), load])
+
+    @property
+    def df(self) -> float:
+        """Satterthwaite df of the denominator, (Σλ)²/Σλ²."""
+        return float(self.weights.sum() ** 2 / np.sum(self.weights**2))
+
+    def tail(self, t: Array) -> Array:
+        """P(|T| > |t|) for (B,) values, with relative accuracy; NaN stays NaN."""
+        t = np.atleast_1d(np.asarray(t, dtype=float))
+        out = np.full(len(t), np.nan)
+        out[t == 0] = 1.0
+        out[np.isposinf(np.abs(t))] = 0.0
+        ok = np.flatnonzero(np.isfinite(t) & (t != 0))
+        step = max(1, int(4e6 // (NODES * len(self.load))))
+        for i in range(0, len(ok), step):
+            out[ok[i : i + step]] = self._tail(np.abs(t[ok[i : i + step]]))
+        return out
+
+    def _tail(self, c: Array) -> Array:
+        delta = np.hstack([np.zeros((len(c), 1)), -np.outer(c**2, self.weights)])
+        v2 = self.load**2
+        top = _positive_root(delta, v2)
+        # With ω₀ the positive and ωⱼ ≤ 0 the other eigenvalues, ηⱼ = −ωⱼ/ω₀ and x = cos²θ:
+        # P = (2/π) ∫₀^{π/2} cos^q θ Π(x + ηⱼ)^{−½} dθ. The product comes from the secular equation,
+        # its root at x = 1 divided out exactly: Π(x + ηⱼ) = Π_k(x − δ_k/ω₀) · ω₀Σ v²/((ω₀−δ)(xω₀−δ)).
+        x = np.cos(ANGLE) ** 2
+        scaled = delta / top[:, None]
+        share = v2 / (top[:, None] - delta)
+        gap = x[None, :, None] - scaled[:, None, :]
+        log_product = np.log(gap).sum(axis=2) + np.log((share[:, None, :] / gap).sum(axis=2))
+        q = delta.shape[1] - 1
+        integrand = np.exp(q * np.log(np.cos(ANGLE)) - log_product / 2)
+        return np.asarray(np.clip(2 / np.pi * integrand @ WEIGHT, 0.0, 1.0))
+
+    @once
+    def quantile(self, alpha: float) -> float:
+        """c with P(|T| > c) = alpha, by root finding in ln c."""
+
+        def excess(log_c: float) -> float:
+            return float(np.log(self.tail(np.exp([log_c]))[0]) - np.log(alpha))
+
+        low, high = -1.0, 1.5
+        while excess(low) < 0:
+            low -= 2
+        while excess(high) > 0:
+            high += 2
+        return float(np.exp(optimize.brentq(excess, low, high, xtol=1e-12)))
+
+
+def _positive_root(delta: Array, v2: Array) -> Array:
+    """(B,) the root ω > 0 of 1 = Σ v²/(ω − δ), δ ≤ 0 (B, q+1): bisection in ln ω, then Newton."""
+    high = np.log(np.full(len(delta), v2.sum()))
+    low = high - 700.0
+    for _ in range(60):
+        middle = (low + high) / 2
+        above = np.sum(v2 / (np.exp(middle)[:, None] - delta), axis=1) > 1
+        low, high = np.where(above, middle, low), np.where(above, high, middle)
+    omega = np.exp((low + high) / 2)
+    for _ in range(3):
+        gap = omega[:, None] - delta
+        f = np.sum(v2 / gap, axis=1)
+        omega = np.maximum(omega + (f - 1) / np.sum(v2 / gap**2, axis=1) * f, omega / 2)
+    return np.asarray(omega)

@@ -1,0 +1,221 @@
+"""Ordinary least squares with a long-run variance: the equal-weighted cosine estimator."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, ClassVar, Literal
+
+import numpy as np
+
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.maths import reference
+from clingstone.maths.longrun import Grid, RatioLaw
+from clingstone.maths.once import Array
+from clingstone.needs import Family, Limits, Needs, NotSupported, memory
+from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.sandwich import hotelling_joint
+from clingstone.structure.serial import Series
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import ErrorModel, Fits
+
+EXACT_ROWS = 10_000  # above, t with ν df: the exact law would need an n × ν array
+RHO_LIMIT = 0.999  # a working ρ nearer to one has no stationary law to refer to
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class LongRunReady(LinearReady):
+    """lags : of the Bartlett kernel, None for cosines. nu : df of the cosines, all series together.
+
+    laws : per reported row, the exact law of t under AR(1) with ``rho``; empty when t is used.
+    """
+
+    grid: Grid
+    lags: int | None
+    nu: float
+    rho: float
+    laws: tuple[RatioLaw, ...]
+
+    def block(self, response: Response, columns: tuple[int, ...]) -> Array:
+        a = self.design.Q @ self.W[:, list(columns)]
+        scores = a[:, :, None] * response.residual[:, None, :]
+        if self.lags is None:
+            L = np.stack([self.grid.cosine_sums(scores[:, i]) for i in range(len(columns))], axis=1)
+            return np.asarray(np.einsum("rsb,rtb->stb", L, L))
+        each = [self.grid.bartlett(scores[:, :, b], self.lags) for b in range(response.B)]
+        return self.design.n / self.design.m * np.stack(each, axis=2)
+
+    def variance(self, response: Response) -> Array:
+        return np.stack([self.block(response, (j,))[0, 0] for j in range(len(self.names))])
+
+    def refer(self, estimate: Array, se: Array, confidence: float) -> tuple[Array, Array, Array]:
+        if not self.laws:
+            return reference.t_rows(estimate, se, self.df, confidence)
+        se = np.where(se > 0, se, np.nan)
+        c = np.array([law.quantile(1 - confidence) for law in self.laws])[:, None]
+        p = np.stack([law.tail(t) for law, t in zip(self.laws, estimate / se, strict=True)])
+        return estimate - c * se, estimate + c * se, p
+
+    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
+        q = len(columns)
+        if self.lags is not None:
+            return wald / q, float(q), np.inf, reference.f_tail(wald / q, q, np.inf)
+        return hotelling_joint(wald, q, self.nu)
+
+    def account(self, fits: Fits) -> Account:
+        items: list[tuple[str, str]] = [("series", f"{len(self.grid.lengths)}"), ("steps", f"{self.grid.N}")]
+        if missing := self.grid.N - self.design.n:
+            items.append(("missing steps, entered as zero scores", f"{missing}"))
+        if self.lags is not None:
+            return Account(
+                estimator="ordinary least squares",
+                covariance="long-run variance of the scores, Bartlett kernel",
+                factor="n/(n − p)",
+                df_rule=self.rule,
+                reference="normal",
+                items=(*items, ("lags", f"{self.lags}")),
+                source="newey-west-1987",
+            )
+        items.append(("cosines ν = ⌊0.4 N^⅔⌋", f"{int(self.grid.counts.sum())}"))
+        if self.laws:
+            items.append(("ρ of the working AR(1) in the law of t", f"{self.rho:.3f}"))
+        return Account(
+            estimator="ordinary least squares",
+            covariance="long-run variance of the scores, equal-weighted cosines",
+            factor="none",
+            df_rule=self.rule,
+            reference="exact law of t under the working AR(1)" if self.laws else "t",
+            items=tuple(items),
+            source="lazarus-2018" + (", bakirov-szekely-2006" if self.laws else ""),
+        )
+
+
+@dataclass(frozen=True)
+class Hac:
+    """Ordinary estimates with a covariance that allows dependence along time.
+
+    The mean of the first ν squared cosine sums of the scores (Lazarus, Lewis, Stock & Watson 2018). Up to
+    10,000 rows the t statistic is referred to its own law under normal errors with the AR(1) correlation
+    fitted to the data, a ratio of quadratic forms of rank ν + 1; above, to t with ν df.
+    """
+
+    kernel: Literal["cosine", "bartlett"] = "cosine"
+    law: Literal["exact", "t", "normal"] = "exact"
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    id: ClassVar[str] = "hac"
+    name: ClassVar[str] = "robust to dependence along time"
+    covers: ClassVar[frozenset[Family]] = frozenset({"serial"})
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
+    source: ClassVar[str] = "lazarus-2018"
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return ("",)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        """The AR(1) of the residuals, or None where these data cannot carry one."""
+        if "serial" not in fits.components:
+            return None
+        return fits[{"serial"}]
+
+    def prepare(self, design: Design, working: ErrorModel | None) -> LongRunReady:
+        positive_m(design)
+        serial = design.serial
+        grid = self._grid(serial)
+        names, W = reported(design)
+        rho, notes = _working_rho(working)
+        if len(grid.lengths) > 1:
+            notes += (
+                f"The {len(grid.lengths)} series enter as blocks; "
+                "what they differ in as a whole is not covered.",
+            )
+        laws: tuple[RatioLaw, ...] = ()
+        if self.kernel == "cosine" and self.law == "exact" and design.n <= EXACT_ROWS:
+            laws = _exact_laws(design, grid, W, rho)
+            df = np.array([law.df for law in laws])
+            rule = "exact cosine law"
+        elif self.law == "normal" or self.kernel == "bartlett":
+            df, rule = np.full(len(names), np.inf), "normal quantile"
+        else:
+            df, rule = np.full(len(names), _block_df(grid)), "ν cosines"
+        lags = None if self.kernel == "cosine" else int(4 * (grid.N / 100) ** (2 / 9))
+        return LongRunReady(
+            design,
+            names,
+            W,
+            df[:, None],
+            rule,
+            notes=notes,
+            grid=grid,
+            lags=lags,
+            nu=_block_df(grid),
+            rho=rho,
+            laws=laws,
+        )
+
+    def _grid(self, serial: Series | None) -> Grid:
+        if serial is None:
+            raise NotSupported("no serial structure was declared", "Name the time column with time=.")
+        if serial.tick is None:
+            raise NotSupported(
+                "the times are irregularly spaced, and cosines need whole steps",
+                "Use ar1, which works by elapsed time, or cluster-robust by series.",
+            )
+        if serial.ties:
+            raise NotSupported(
+                f"{serial.ties} rows share their series and time with another row",
+                "Name the column that tells the series apart with series=.",
+            )
+        least = self.limits.serial_estimate_rows
+        short = int(np.sum(serial.part.sizes < least))
+        if short:
+            raise NotSupported(
+                f"{short} of {serial.part.count} series have fewer than {least} rows "
+                f"(the shortest has {serial.part.sizes.min()})",
+                "With many short series use cluster-robust by series; with one, ar1.",
+            )
+        return Grid.of(serial.part.codes, serial.tick)
+
+    def conventions(self) -> tuple[tuple[str, Hac], ...]:
+        return (
+            ("the same cosines with t and ν df", replace(self, law="t")),
+            (
+                "Bartlett kernel, ⌊4(n/100)^(2/9)⌋ lags, factor n/(n − p), normal quantile",
+                replace(self, kernel="bartlett", law="normal"),
+            ),
+        )
+
+
+def _block_df(grid: Grid) -> float:
+    """ν for one series; for several, Satterthwaite's df of the blocks under equal spread, (ΣN)²/Σ N²/ν."""
+    nu, N = grid.counts, grid.lengths
+    return float(N.sum() ** 2 / np.sum(N**2 / nu))
+
+
+def _working_rho(working: ErrorModel | None) -> tuple[float, tuple[str, ...]]:
+    if working is None or "serial.rho" not in working.shape:
+        return 0.0, ("The law of t takes independent errors, because no serial correlation could be fitted.",)
+    rho = float(working.shape["serial.rho"][0])
+    if abs(rho) <= RHO_LIMIT:
+        return rho, ()
+    held = float(np.copysign(RHO_LIMIT, rho))
+    return held, (f"The fitted correlation of {rho:.4f} is held at {held} in the law of t.",)
+
+
+def _exact_laws(design: Design, grid: Grid, W: Array, rho: float) -> tuple[RatioLaw, ...]:
+    """Per reported row, the law of (a'ε)²/‖F'ε‖², a = Qw, F = MD_aC, under Ω = AR(1) with ρ."""
+    q = int(grid.counts.sum())
+    memory(8.0 * design.n * q * 4, f"the exact law with {q} cosines")
+    C = grid.cosines()
+    laws = []
+    for w in W.T:
+        a = design.Q @ w
+        F = a[:, None] * C
+        F -= design.Q @ (design.Q.T @ F)
+        H = np.column_stack([a, F])
+        G = H.T @ grid.correlate(H, rho)
+        laws.append(RatioLaw.of((G + G.T) / 2))
+    return tuple(laws)

@@ -1,0 +1,166 @@
+"""From a remedy to a Refit: rows with their status, joint tests, and the same under other conventions."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+from typing import TYPE_CHECKING, Any, cast
+
+import numpy as np
+
+from clingstone.design.design import Design
+from clingstone.maths.once import Array
+from clingstone.needs import Family, NotSupported
+from clingstone.remedies.remedy import Estimates, Interval, JointTest, Ready, Refit, Remedy, multi, rows
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
+
+PERFECT = 1e-24  # e'e below this part of y'y: the model fits every row and leaves no spread
+
+
+def at(remedy: Remedy, level: str, fits: Fits) -> Remedy:
+    """The remedy set to run at a level ("" for its default), under the run's thresholds.
+
+    Raises NotSupported when the design has no such level for it.
+    """
+    choices = remedy.abouts(fits.design)
+    if not choices:
+        raise NotSupported(
+            f"{remedy.id} has no level to work at in these data",
+            "It needs a partition of the rows in which some cell has two rows or more.",
+        )
+    chosen = level or choices[0]
+    known = {*choices, *fits.design.partitions, ""}
+    if chosen not in known:
+        raise NotSupported(f"{remedy.id} cannot be run at {chosen!r}", f"It can at: {', '.join(choices)}.")
+    return cast(Remedy, replace(cast(Any, remedy), at=chosen, limits=fits.run.limits))
+
+
+def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
+    """Run a remedy at a level on one column of y. Raises NotSupported(reason, hint)."""
+    if fits.response.B != 1:
+        raise ValueError("a Refit is made of one column of y; read many columns with Ready.fit")
+    design = fits.design
+    refusal = remedy.needs.check(design)
+    if refusal is not None:
+        raise refusal.error()
+    _stop_if_perfect(fits)
+    remedy = at(remedy, level, fits)
+    ready = remedy.prepare(design, remedy.working(fits))
+    found = ready.fit(fits)
+    boundary = bool(found.boundary[0]) if found.boundary is not None else False
+    converged = bool(found.converged[0]) if found.converged is not None else True
+    notes = ready.notes
+    if not converged:
+        notes += ("The likelihood search stopped before it settled.",)
+    return Refit(
+        remedy=remedy.id,
+        name=remedy.name,
+        at=remedy.at,
+        covers=covered(remedy, design),
+        estimand=remedy.estimand,
+        intervals=_intervals(remedy, ready, found, fits),
+        terms=_terms(remedy, found),
+        account=ready.account(fits),
+        coefficients=design.names,
+        estimate=tuple(float(v) for v in found.estimate[: design.p, 0]),
+        covariance=None if found.covariance is None else tuple(map(_floats, found.covariance)),
+        confidence=fits.run.settings.confidence,
+        notes=notes + _unjoined(ready, found, design),
+        boundary=boundary,
+        converged=converged,
+    )
+
+
+def explain(remedy: Remedy, level: str, fits: Fits) -> tuple[tuple[str, tuple[Interval, ...]], ...]:
+    """What every interval becomes under the other common conventions, those refused left out."""
+    out = []
+    for words, other in remedy.conventions():
+        try:
+            out.append((words, refit(other, level or remedy.at, fits).intervals))
+        except NotSupported:
+            continue  # a convention that these data cannot carry has no number to compare with
+    return tuple(out)
+
+
+def covered(remedy: Remedy, design: Design) -> tuple[Family, ...]:
+    """Families that the remedy covers in this design: clusters cover what lies wholly within them."""
+    part = design.partitions.get(remedy.at)
+    if remedy.id != "cluster-robust" or part is None:
+        return tuple(sorted(remedy.covers))
+    out: set[Family] = set()
+    if design.group is not None and any(part.relation(g) in ("same", "nests") for g in design.group.levels):
+        out.add("group")
+    if design.serial is not None and part.relation(design.serial.part) in ("same", "nests"):
+        out.add("serial")
+    return tuple(sorted(out))
+
+
+def _stop_if_perfect(fits: Fits) -> None:
+    response = fits.response
+    total = float(response.ss[0] + np.sum(response.coef[:, 0] ** 2))
+    if float(response.ss[0]) <= PERFECT * total:
+        raise NotSupported(
+            "the model fits every row exactly, so there is no spread to judge an interval by",
+            "Look for a predictor that is the response in other units.",
+        )
+
+
+def _intervals(remedy: Remedy, ready: Ready, found: Estimates, fits: Fits) -> tuple[Interval, ...]:
+    names, weights = rows(fits.design)
+    ordinary = np.sqrt(fits.response.s2[0]) * np.linalg.norm(fits.design.basis.contrast(weights), axis=0)
+    df = np.broadcast_to(found.df, found.se.shape)[:, 0]
+    out = []
+    for j, name in enumerate(names):
+        se = float(found.se[j, 0])
+        out.append(
+            Interval(
+                term=name,
+                remedy=remedy.id,
+                estimate=float(found.estimate[j, 0]),
+                se=se,
+                se_ratio=se / float(ordinary[j]),
+                df=float(df[j]),
+                df_rule=ready.rule,
+                low=float(found.low[j, 0]),
+                high=float(found.high[j, 0]),
+                p=float(found.p[j, 0]),
+                status=_status(name, float(df[j]), ready, found, remedy),
+            )
+        )
+    return tuple(out)
+
+
+def _status(name: str, df: float, ready: Ready, found: Estimates, remedy: Remedy) -> str:
+    if name in ready.unusable:
+        return f"unusable: {ready.unusable[name].reason}"
+    if found.boundary is not None and bool(found.boundary[0]):
+        return "boundary: a dependence parameter was estimated at the end of its range"
+    if df < remedy.limits.df_floor:
+        return f"caveat: {df:.1f} degrees of freedom, below {remedy.limits.df_floor:g}"
+    return "ok"
+
+
+def _terms(remedy: Remedy, found: Estimates) -> tuple[JointTest, ...]:
+    return tuple(
+        JointTest(term, remedy.id, _first(F), float(df1), _first(df2), _first(p))
+        for term, (F, df1, df2, p) in found.joint.items()
+    )
+
+
+def _unjoined(ready: Ready, found: Estimates, design: Design) -> tuple[str, ...]:
+    """A sentence per multi-df term that has no joint test."""
+    return tuple(
+        f"There is no joint test of {term.name}: the covariance of its {len(term.columns)} coefficients "
+        "leaves it no degrees of freedom."
+        for term in multi(design)
+        if term.name not in found.joint
+    )
+
+
+def _first(value: Array | float) -> float:
+    return float(np.ravel(value)[0])
+
+
+def _floats(row: Array) -> tuple[float, ...]:
+    return tuple(float(v) for v in row)

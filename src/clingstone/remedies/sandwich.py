@@ -1,0 +1,380 @@
+"""Ordinary least squares: its own covariance, and covariances robust to unequal spread and to clusters."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, ClassVar, Literal
+
+import numpy as np
+
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.maths import reference, sandwich
+from clingstone.maths.once import Array, once
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.linear import Joint, LinearReady, few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.remedy import Account, Estimand
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import ErrorModel, Fits
+
+KNOWN = Needs(known_design=True)
+
+
+# ---- ordinary -------------------------------------------------------------------------
+
+
+@dataclass(frozen=True, eq=False)
+class OrdinaryReady(LinearReady):
+    def variance(self, response: Response) -> Array:
+        return np.asarray(np.sum(self.W**2, axis=0)[:, None] * response.s2)
+
+    def block(self, response: Response, columns: tuple[int, ...]) -> Array:
+        w = self.W[:, list(columns)]
+        return (w.T @ w)[:, :, None] * response.s2
+
+    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
+        q, df2 = len(columns), float(self.df[0, 0])
+        F = wald / q
+        return F, float(q), df2, reference.f_tail(F, q, df2)
+
+    def account(self, fits: Fits) -> Account:
+        return Account(
+            estimator="ordinary least squares" if self.design.root is None else "weighted least squares",
+            covariance="s²(X′X)⁻¹, independent errors of one variance",
+            factor="s² = e′e/(n − p)",
+            df_rule=self.rule,
+            reference="t" if np.isfinite(self.df).all() else "normal",
+            items=(("n − p", f"{self.design.m}"), ("s", f"{float(np.sqrt(fits.response.s2[0])):.6g}")),
+            source="",
+        )
+
+
+@dataclass(frozen=True)
+class Ordinary:
+    """Ordinary least squares with independent errors of one variance: what every refit is compared with."""
+
+    normal: bool = False
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    id: ClassVar[str] = "ordinary"
+    name: ClassVar[str] = "ordinary"
+    covers: ClassVar[frozenset[Family]] = frozenset()
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = KNOWN
+    source: ClassVar[str] = ""
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return ("",)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
+
+    def prepare(self, design: Design, working: ErrorModel | None = None) -> OrdinaryReady:
+        positive_m(design)
+        names, W = reported(design)
+        df = np.full((len(names), 1), np.inf if self.normal else float(design.m))
+        return OrdinaryReady(design, names, W, df, "normal quantile" if self.normal else "n − p")
+
+    def conventions(self) -> tuple[tuple[str, Ordinary], ...]:
+        return (("normal quantile in place of t", replace(self, normal=True)),)
+
+
+# ---- heteroscedasticity-robust ----------------------------------------------------------
+
+HC = Literal["HC0", "HC1", "HC2", "HC3"]
+_DELTA = {"HC0": 0, "HC1": 0, "HC2": 1, "HC3": 2}
+_HC_FACTOR = {
+    "HC0": "none",
+    "HC1": "n/(n − p)",
+    "HC2": "residuals divided by √(1 − leverage)",
+    "HC3": "residuals divided by (1 − leverage)",
+}
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class RowRobustReady(LinearReady):
+    """T : (n, k) adjusted contrast weights. own_df : Satterthwaite df, and T² for joint tests."""
+
+    kind: HC
+    T: Array
+    own_df: bool
+
+    @property
+    def _scale(self) -> float:
+        return self.design.n / self.design.m if self.kind == "HC1" else 1.0
+
+    def variance(self, response: Response) -> Array:
+        return self._scale * ((self.T**2).T @ response.residual**2)
+
+    def block(self, response: Response, columns: tuple[int, ...]) -> Array:
+        T = self.T[:, list(columns)]
+        q = T.shape[1]
+        products = (T[:, :, None] * T[:, None, :]).reshape(len(T), q * q)
+        return self._scale * (products.T @ response.residual**2).reshape(q, q, -1)
+
+    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
+        q = len(columns)
+        if not self.own_df:
+            F, df2 = wald / q, float(self.df[0, 0])
+            return F, float(q), df2, reference.f_tail(F, q, df2)
+        return hotelling_joint(wald, q, self._eta(columns))
+
+    @once
+    def _eta(self, columns: tuple[int, ...]) -> float:
+        return sandwich.row_joint_df(self.design.Q, self.T[:, list(columns)])
+
+    def account(self, fits: Fits) -> Account:
+        return Account(
+            estimator="ordinary least squares",
+            covariance=f"sandwich with one score per row ({self.kind})",
+            factor=_HC_FACTOR[self.kind],
+            df_rule=self.rule,
+            reference="t" if np.isfinite(self.df).all() else "normal",
+            items=(("largest leverage", f"{float(self.design.basis.leverage.max()):.3g}"),),
+            source="mackinnon-white-1985, bell-mccaffrey-2002, satterthwaite-1946",
+        )
+
+
+@dataclass(frozen=True)
+class HeteroscedasticityRobust:
+    """Ordinary estimates with a covariance that allows every row its own variance (HC2 by default).
+
+    MacKinnon & White (1985); Satterthwaite df under equal variances, Bell & McCaffrey (2002) with every
+    row a cluster of its own.
+    """
+
+    kind: HC = "HC2"
+    df: Literal["satterthwaite", "residual", "normal"] = "satterthwaite"
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    id: ClassVar[str] = "heteroscedasticity-robust"
+    covers: ClassVar[frozenset[Family]] = frozenset()
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = KNOWN
+    source: ClassVar[str] = "mackinnon-white-1985"
+
+    @property
+    def name(self) -> str:
+        return f"robust to unequal spread ({self.kind})"
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return ("",)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
+
+    def prepare(self, design: Design, working: ErrorModel | None = None) -> RowRobustReady:
+        positive_m(design)
+        names, W = reported(design)
+        T, lost, _ = sandwich.row_weights(design.Q, W, _DELTA[self.kind])
+        unusable: dict[str, Refusal] = {
+            name: Refusal(
+                "one row alone decides it, so that row's residual is zero and says nothing of its spread",
+                "More rows of that kind would be needed.",
+            )
+            for j, name in enumerate(names)
+            if lost[j] > 1e-8
+        }
+        own = self.df == "satterthwaite"
+        df = sandwich.row_df(design.Q, T) if own else np.full(len(names), self._plain_df(design))
+        if own:
+            unusable = {**few_df(names, df), **unusable}
+        stop_if_none_left(names, unusable)
+        rule = {"satterthwaite": "Satterthwaite", "residual": "n − p", "normal": "normal quantile"}[self.df]
+        return RowRobustReady(design, names, W, df[:, None], rule, unusable, kind=self.kind, T=T, own_df=own)
+
+    def _plain_df(self, design: Design) -> float:
+        return float(design.m) if self.df == "residual" else np.inf
+
+    def conventions(self) -> tuple[tuple[str, HeteroscedasticityRobust], ...]:
+        return (
+            ("HC0 with a normal quantile", replace(self, kind="HC0", df="normal")),
+            ("HC1, factor n/(n − p), t with n − p df", replace(self, kind="HC1", df="residual")),
+            ("HC2 with n − p df", replace(self, kind="HC2", df="residual")),
+            ("HC3 with n − p df", replace(self, kind="HC3", df="residual")),
+            ("HC3 with its own Satterthwaite df", replace(self, kind="HC3", df="satterthwaite")),
+        )
+
+
+# ---- cluster-robust -----------------------------------------------------------------------
+
+CR = Literal["CR0", "CR1", "CR1S", "CR2", "CR3"]
+_CR_FACTOR = {
+    "CR0": "none",
+    "CR1": "G/(G − 1)",
+    "CR1S": "G/(G − 1) · (n − 1)/(n − p)",
+    "CR2": "each cluster's residuals multiplied by (I − H_gg)^(−½)",
+    "CR3": "each cluster's residuals multiplied by (I − H_gg)^(−1)",
+}
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class ClusterReady(LinearReady):
+    """at, part : the clusters. weights : contrasts adjusted per cluster. own_df : as above."""
+
+    kind: CR
+    at: str
+    part: Partition
+    weights: sandwich.Adjusted
+    own_df: bool
+
+    @property
+    def _scale(self) -> float:
+        return sandwich.cluster_factor(self.kind, self.part.count, self.design.n, self.design.p)
+
+    def variance(self, response: Response) -> Array:
+        return self._scale * sandwich.cluster_variance(self.weights.a, response.scores(self.part))
+
+    def block(self, response: Response, columns: tuple[int, ...]) -> Array:
+        a = self.weights.a[list(columns)]
+        return self._scale * sandwich.cluster_covariance(a, response.scores(self.part))
+
+    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
+        q = len(columns)
+        if not self.own_df:
+            F, df2 = wald / q, float(self.df[0, 0])
+            return F, float(q), df2, reference.f_tail(F, q, df2)
+        return hotelling_joint(wald, q, self._eta(columns))
+
+    @once
+    def _eta(self, columns: tuple[int, ...]) -> float:
+        pick = list(columns)
+        return sandwich.cluster_joint_df(self.weights.a[pick], self.weights.b[pick])
+
+    def account(self, fits: Fits) -> Account:
+        part, weights = self.part, self.weights
+        share = np.einsum("kgp,kgp->kg", weights.a, weights.b)
+        total = share.sum(axis=1, keepdims=True)
+        share = share / np.where(total > 0, total, 1.0)
+        j = int(np.argmax(share.max(axis=1)))
+        g = int(np.argmax(share[j]))
+        return Account(
+            estimator="ordinary least squares",
+            covariance=f"sandwich with one score per {self.at} ({self.kind})",
+            factor=_CR_FACTOR[self.kind],
+            df_rule=self.rule,
+            reference="t" if np.isfinite(self.df).all() else "normal",
+            items=(
+                ("clusters", f"{part.count}"),
+                ("rows per cluster", f"{part.sizes.min()} to {part.sizes.max()}"),
+                ("working model", "independent errors of one variance"),
+                ("largest part one cluster has in a variance", f"{share[j, g]:.0%} ({part.labels[g]})"),
+            ),
+            source="bell-mccaffrey-2002, satterthwaite-1946, pustejovsky-tipton-2018",
+        )
+
+
+@dataclass(frozen=True)
+class ClusterRobust:
+    """Ordinary estimates with a covariance that allows any dependence within clusters.
+
+    CR2 with an independent working model and Satterthwaite df per coefficient (Bell & McCaffrey 2002);
+    joint tests by the approximate Hotelling T² of Pustejovsky & Tipton (2018). Clusters may be a group
+    level, the series or the sites.
+    """
+
+    kind: CR = "CR2"
+    df: Literal["satterthwaite", "clusters", "normal"] = "satterthwaite"
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    id: ClassVar[str] = "cluster-robust"
+    covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = KNOWN
+    source: ClassVar[str] = "bell-mccaffrey-2002"
+
+    @property
+    def name(self) -> str:
+        return f"cluster-robust, by {self.at}" if self.at else "cluster-robust"
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        """Partitions of two cells or more that are not one row per cell; equal ones once."""
+        found: dict[str, Partition] = {}
+        for key, part in design.partitions.items():
+            if not 2 <= part.count < design.n:
+                continue
+            if all(part.relation(other) != "same" for other in found.values()):
+                found[key] = part
+        return tuple(found)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
+
+    def prepare(self, design: Design, working: ErrorModel | None = None) -> ClusterReady:
+        positive_m(design)
+        part = _clusters(design, self.at)
+        names, W = reported(design)
+        power = self.kind if self.kind in ("CR2", "CR3") else "CR0"
+        weights = sandwich.adjust(design.scores(part), W, power)
+        unusable: Mapping[str, Refusal] = {
+            name: Refusal(
+                f"{self.at} {part.labels[weights.at[j]]} alone decides it, so how it would differ "
+                "between clusters cannot be seen",
+                f"A second {self.at} of that kind would be needed.",
+            )
+            for j, name in enumerate(names)
+            if weights.lost[j] > 1e-8
+        }
+        own = self.df == "satterthwaite"
+        if own:
+            df = sandwich.cluster_df(weights.a, weights.b)
+            unusable = {**few_df(names, df), **unusable}
+        else:
+            df = np.full(len(names), part.count - 1.0 if self.df == "clusters" else np.inf)
+        stop_if_none_left(names, unusable)
+        rule = {"satterthwaite": "Satterthwaite", "clusters": "clusters − 1", "normal": "normal quantile"}
+        return ClusterReady(
+            design,
+            names,
+            W,
+            df[:, None],
+            rule[self.df],
+            unusable,
+            kind=self.kind,
+            at=self.at,
+            part=part,
+            weights=weights,
+            own_df=own,
+        )
+
+    def conventions(self) -> tuple[tuple[str, ClusterRobust], ...]:
+        return (
+            ("CR0 with a normal quantile", replace(self, kind="CR0", df="normal")),
+            ("CR1, factor G/(G − 1), t with G − 1 df", replace(self, kind="CR1", df="clusters")),
+            (
+                "CR1 with the further factor (n − 1)/(n − p), t with G − 1 df",
+                replace(self, kind="CR1S", df="clusters"),
+            ),
+            ("CR1 with both factors and a normal quantile", replace(self, kind="CR1S", df="normal")),
+            ("CR2 with G − 1 df", replace(self, kind="CR2", df="clusters")),
+            ("CR3 with G − 1 df", replace(self, kind="CR3", df="clusters")),
+        )
+
+
+def _clusters(design: Design, at: str) -> Partition:
+    part = design.partitions.get(at)
+    if part is None:
+        known = ", ".join(design.partitions) or "none"
+        raise NotSupported(f"the design has no partition named {at!r}", f"Known: {known}.")
+    if part.count < 2:
+        raise NotSupported(
+            f"there is one {at}; clusters are compared with each other, so at least two are needed",
+            "Use a remedy for dependence inside one series or one map, or a finer level.",
+        )
+    if part.count == design.n:
+        raise NotSupported(
+            f"every row is a {at} of its own, so clusters hold no repeated rows",
+            "Use heteroscedasticity-robust, which is the same thing here.",
+        )
+    return part
+
+
+def hotelling_joint(wald: Array, q: int, eta: float) -> Joint | None:
+    """F and p of an approximate T² with η df, or None where η leaves no denominator."""
+    if not eta - q + 1 > 0:
+        return None
+    F, df2 = reference.hotelling(wald, q, eta)
+    return F, float(q), df2, reference.f_tail(F, q, df2)
