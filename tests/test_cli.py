@@ -5,6 +5,7 @@ Where only the shell is on trial, a stand-in takes the place of the verbs and re
 
 from __future__ import annotations
 
+import inspect
 import shlex
 import subprocess
 import sys
@@ -16,6 +17,7 @@ from typing import Any
 
 import pytest
 
+import clingstone
 import plain
 from clingstone import cli
 from clingstone.demo import DEMOS
@@ -26,7 +28,7 @@ from clingstone.run import Settings
 
 
 class Verbs:
-    """Stand-in for clingstone.examine: records calls, saves one file, says one line."""
+    """Stand-in for clingstone.examination: records calls, saves one file, says one line."""
 
     def __init__(self) -> None:
         self.calls: list[tuple[Path, dict[str, Any]]] = []
@@ -40,7 +42,8 @@ class Verbs:
             raise self.error
         return _Said(self)
 
-    def replay(self, folder: Path) -> tuple[bool, tuple[str, ...]]:
+    def replay(self, folder: Path, data: Path | None = None) -> tuple[bool, tuple[str, ...]]:
+        self.calls.append((folder, {"data": data}))
         if self.error is not None:
             raise self.error
         return self.agrees, (f"replayed {folder}",)
@@ -61,7 +64,7 @@ class _Said(SimpleNamespace):
 @pytest.fixture
 def verbs(monkeypatch: pytest.MonkeyPatch, tmp_path: Path) -> Verbs:
     stand_in = Verbs()
-    monkeypatch.setitem(sys.modules, "clingstone.examine", stand_in)  # type: ignore[arg-type]
+    monkeypatch.setitem(sys.modules, "clingstone.examination", stand_in)  # type: ignore[arg-type]
     monkeypatch.chdir(tmp_path)
     return stand_in
 
@@ -144,6 +147,13 @@ def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
         rehearsal=400,
         seed=7,
     )
+
+
+def test_examine_in_python_has_the_same_arguments() -> None:
+    signature = inspect.signature(clingstone.examine).parameters
+    assert list(signature) == ["data", *(each.name for each in fields(Settings)), "progress"]
+    for each in fields(Settings):
+        assert signature[each.name].default == each.default, each.name
 
 
 def test_one_group_is_a_word_and_lonlat_can_be_denied(verbs: Verbs, run: Run) -> None:
@@ -317,7 +327,11 @@ def test_an_interrupt_is_status_130(verbs: Verbs, run: Run) -> None:
 def test_replay_says_what_it_found_and_by_status_whether_it_agrees(verbs: Verbs, run: Run) -> None:
     assert run("replay saved") == (0, "replayed saved\n", "")
     verbs.agrees = False
-    assert run("replay saved")[:2] == (1, "replayed saved\n")
+    assert run("replay saved --data moved/trial.csv")[:2] == (1, "replayed saved\n")
+    assert verbs.calls == [
+        (Path("saved"), {"data": None}),
+        (Path("saved"), {"data": Path("moved/trial.csv")}),
+    ]
 
 
 def test_version(run: Run) -> None:
@@ -358,7 +372,6 @@ def test_demo_without_a_name_is_the_trial(verbs: Verbs, run: Run) -> None:
 
 
 def test_a_missing_file_from_the_shell(tmp_path: Path) -> None:
-    pytest.importorskip("clingstone.examine")
     done = subprocess.run(
         [sys.executable, "-m", "clingstone", "examine", "nowhere.csv", "--model", "y ~ x"],
         cwd=tmp_path,

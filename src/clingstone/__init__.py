@@ -11,17 +11,15 @@ Names are resolved on first use, so that ``import clingstone`` loads nothing hea
 
 from __future__ import annotations
 
-import sys
 from importlib import import_module
-from types import ModuleType
 from typing import TYPE_CHECKING, Any
 
 if TYPE_CHECKING:
     from clingstone.case import Case as Case
-    from clingstone.examine import Examination as Examination
-    from clingstone.examine import examine as examine
-    from clingstone.examine import refit as refit
-    from clingstone.examine import replay as replay
+    from clingstone.examination import Examination as Examination
+    from clingstone.examination import examine as examine
+    from clingstone.examination import refit as refit
+    from clingstone.examination import replay as replay
     from clingstone.needs import InputError as InputError
     from clingstone.needs import Limits as Limits
     from clingstone.needs import NotSupported as NotSupported
@@ -32,10 +30,10 @@ __version__ = "0.1.0"
 
 _HOMES = {
     "Case": "case",
-    "Examination": "examine",
-    "examine": "examine",
-    "refit": "examine",
-    "replay": "examine",
+    "Examination": "examination",
+    "examine": "examination",
+    "refit": "examination",
+    "replay": "examination",
     "InputError": "needs",
     "Limits": "needs",
     "NotSupported": "needs",
@@ -67,18 +65,3 @@ def __getattr__(name: str) -> Any:
 
 def __dir__() -> list[str]:
     return sorted(__all__)
-
-
-class _Package(ModuleType):
-    """The package, in which ``examine`` is always the function.
-
-    Importing the module clingstone.examine would otherwise put the module in the function's place.
-    """
-
-    def __setattr__(self, name: str, value: Any) -> None:
-        if name == "examine" and isinstance(value, ModuleType):
-            value = value.examine
-        super().__setattr__(name, value)
-
-
-sys.modules[__name__].__class__ = _Package

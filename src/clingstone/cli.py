@@ -20,7 +20,7 @@ from clingstone.needs import InputError, NotSupported
 from clingstone.options import Option, settings_options
 
 if TYPE_CHECKING:
-    from clingstone.examine import Examination
+    from clingstone.examination import Examination
     from clingstone.run import Progress
 
 app = typer.Typer(
@@ -123,12 +123,15 @@ def demo(
 @app.command(short_help="Run a saved examination again and compare every number.")
 def replay(
     folder: Annotated[Path, typer.Argument(metavar="DIR", help="A folder that clingstone saved.")],
+    data: Annotated[
+        Path | None, typer.Option("--data", metavar="FILE", help="Where the data are, if they were moved.")
+    ] = None,
     debug: Debug = False,
 ) -> None:
     """Run a saved examination again and say whether every number agrees."""
-    from clingstone.examine import replay as again
+    from clingstone.examination import replay as again
 
-    agrees, lines = again(folder)
+    agrees, lines = again(folder, data)
     for line in lines:
         typer.echo(line)
     if not agrees:
@@ -142,7 +145,7 @@ def _run(
     folder = out if out is not None else None if json else Path(f"{data.stem}-clingstone")
     if folder is not None and not overwrite:
         _free(folder)
-    from clingstone.examine import examine
+    from clingstone.examination import examine
 
     with _progress(quiet) as progress:
         examination = examine(data, **arguments, progress=progress)
