@@ -1,4 +1,4 @@
-"""Dependence structures as components of V = Σ σ²ₖKₖ(φₖ) + σ²I, and the algebra of a set of them."""
+"""Dependence structures as components of V = Σ σ²ₖKₖ(φₖ) + σ²I, and which of them a design can carry."""
 
 from __future__ import annotations
 
@@ -8,10 +8,14 @@ from typing import Protocol
 
 import numpy as np
 
+from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths.basis import Gram
 from clingstone.maths.once import Array
-from clingstone.needs import Family
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, Limits, Refusal
+
+SITE = "group:site"  # key of the unstructured part of places that repeat
 
 
 @dataclass(frozen=True)
@@ -30,12 +34,18 @@ class Component:
 
 @dataclass(frozen=True)
 class Parameter:
-    """One working parameter of an algebra: name, bounds on the working scale, starting values."""
+    """One working parameter of an algebra: name, bounds on the working scale, starting values.
+
+    scan : uniform nodes over the region in which an estimate can be told from its neighbours.
+    vanishes : ``low`` stands for a component that is not there (a variance of zero).
+    """
 
     name: str
     low: float
     high: float
     starts: tuple[float, ...]
+    scan: tuple[float, ...] = ()
+    vanishes: bool = False
 
 
 class Algebra(Protocol):
@@ -52,7 +62,8 @@ class Algebra(Protocol):
         ...
 
     def shape(self, theta: Array) -> Mapping[str, Array]:
-        """What readers know: "serial.rho" per base step, "spatial.range" the practical range in the sites' unit."""
+        """What readers know: "serial.rho" per base step, "spatial.range" the practical
+        range in the sites' unit."""
         ...
 
     def spread(self, key: str, theta: Array) -> Array:
@@ -66,3 +77,122 @@ class Algebra(Protocol):
     def whiten(self, theta: Array, block: Array) -> Array:
         """L⁻¹ block with LL' = V, or any equivalent square root: (n, k) → (n, k)."""
         ...
+
+
+def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict[str, Refusal]]:
+    """Components that these data can carry, in building order, and why the others cannot be had.
+
+    Every declared structure gives one component per group level, one for order and one for place.
+    Places that repeat and are not a declared group level give one more, ``group:site``: what the rows
+    of one place share beyond what neighbouring places share.
+    """
+    found: dict[str, Component] = {}
+    refused: dict[str, Refusal] = {}
+    levels: list[Partition] = []
+    for level in design.group.levels if design.group is not None else ():
+        key = f"group:{level.key}"
+        no = _group(design, level, levels, limits)
+        if no is None:
+            found[key] = Component(key, "group", level.key, level.key)
+            levels.append(level)
+        else:
+            refused[key] = no
+    if design.spatial is not None:
+        part = design.spatial.part
+        declared_too = any(level.relation(part) == "same" for level in levels)
+        if not declared_too and _group(design, part, levels, limits) is None:
+            found[SITE] = Component(SITE, "spatial", "site", "place, unstructured")
+    if design.serial is not None:
+        no = _serial(design, limits)
+        within = "" if design.serial.part.count == 1 else f" within {design.serial.part.key}"
+        if no is None:
+            found["serial"] = Component("serial", "serial", "series", f"{design.serial.name}{within}")
+        else:
+            refused["serial"] = no
+    if design.spatial is not None:
+        no = _spatial(design, limits)
+        if no is None:
+            found["spatial"] = Component("spatial", "spatial", "site", "place")
+        else:
+            refused["spatial"] = no
+    return found, refused
+
+
+def _group(design: Design, level: Partition, kept: list[Partition], limits: Limits) -> Refusal | None:
+    name = level.key
+    if design.swept:
+        return Refusal(
+            "group means were swept out of this model, and with them what groups share",
+            "Fit error models to the model itself.",
+        )
+    if level.count < limits.groups_estimate:
+        return Refusal(
+            f"{name}: {level.count} groups; a variance between groups needs {limits.groups_estimate} or more",
+            "With few groups, give each its own level in the model (a factor) instead.",
+        )
+    if level.count == level.n:
+        return Refusal(
+            f"{name}: every group has a single row, so groups and rows cannot be told apart",
+            "Repeated rows per group would be needed.",
+        )
+    same = next((k for k in kept if k.relation(level) == "same"), None)
+    if same is not None:
+        return Refusal(
+            f"{name} and {same.key} divide the rows alike, so only one of them can be estimated",
+            f"Read the variance of {same.key} as that of both.",
+        )
+    total = design.sizes(level)
+    left = float(total.sum()) - float(np.sum(design.sums(level) ** 2))
+    if left <= 1e-9 * float(total.sum()):
+        return Refusal(
+            f"the model already has its own level for every {name}",
+            f"Leave the columns of {name} out of the model to estimate a variance between groups.",
+        )
+    return None
+
+
+def _serial(design: Design, limits: Limits) -> Refusal | None:
+    series = design.serial
+    assert series is not None
+    if design.swept:
+        return Refusal(
+            "group means were swept out of this model; its rows no longer follow an AR(1) process",
+            "Fit error models to the model itself.",
+        )
+    if bool(np.any(series.steps[~np.isnan(series.steps)] <= 0)):
+        return Refusal(
+            f"rows share their {series.name} with another row of the same series",
+            'Average them with ties="mean", or name a finer series=.',
+        )
+    sizes = series.part.sizes
+    longest, enough = int(sizes.max()), int(np.sum(sizes >= limits.serial_estimate_short))
+    if longest < limits.serial_estimate_rows and enough < limits.serial_estimate_series:
+        return Refusal(
+            f"the longest series has {longest} rows, and {enough} series have "
+            f"{limits.serial_estimate_short} rows or more",
+            f"One series of {limits.serial_estimate_rows} rows, or {limits.serial_estimate_series} series of "
+            f"{limits.serial_estimate_short}, would be needed.",
+        )
+    return None
+
+
+def _spatial(design: Design, limits: Limits) -> Refusal | None:
+    sites = design.spatial
+    assert sites is not None
+    if design.swept:
+        return Refusal(
+            "group means were swept out of this model, and with them what neighbouring places share",
+            "Fit error models to the model itself.",
+        )
+    if sites.count < limits.sites_estimate:
+        return Refusal(
+            f"{sites.count} distinct places; a spatial covariance needs at least {limits.sites_estimate}",
+            "More places would be needed.",
+        )
+    if sites.count > limits.dense_sites:
+        return Refusal(
+            f"{sites.count:,} distinct places; the dense covariance is made for "
+            f"{limits.dense_sites:,} or fewer",
+            "Average rows over larger places, or take a sample of places.",
+        )
+    return None

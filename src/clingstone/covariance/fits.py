@@ -2,17 +2,30 @@
 
 from __future__ import annotations
 
+import itertools
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
 
-from clingstone.covariance.components import Algebra, Component
+import numpy as np
+
+from clingstone.covariance.algebras import Chosen, choose
+from clingstone.covariance.components import Component, declared
+from clingstone.covariance.kept import kept
+from clingstone.design.derived import onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths.once import Array
-from clingstone.needs import Refusal
+from clingstone.maths import reml
+from clingstone.maths.basis import Gram
+from clingstone.maths.lattice import minimise_columns
+from clingstone.maths.once import Array, frozen
+from clingstone.maths.search import Flags, minimise
+from clingstone.needs import NotSupported, Refusal, memory
 from clingstone.run import Run
 
 Node = frozenset[str]
+
+FACED = 2  # the most working parameters that a shared grid serves
+SLOW_COLUMNS = 200  # columns that a bootstrap gets when each needs a search of its own
 
 
 @dataclass(frozen=True, eq=False)
@@ -31,8 +44,8 @@ class ErrorModel:
     theta: Array
     sigma2: Array
     loglik: Array
-    at_bound: Array
-    converged: Array
+    at_bound: Flags
+    converged: Flags
     variances: Mapping[str, Array]
     shape: Mapping[str, Array]
     history: tuple[str, ...] = ()
@@ -44,7 +57,8 @@ class ErrorModel:
         one base step apart in one series, two rows at one place. For a serial process without
         separate row noise the share is thus |ρ| times its variance, the rest counts as row noise.
         """
-        raise NotImplementedError
+        total = np.sum(list(self.variances.values()), axis=0)
+        return {key: variance / total for key, variance in self.variances.items()}
 
 
 class Fits:
@@ -54,7 +68,13 @@ class Fits:
     ----------
     components : supported components by key, in building order.
     refused : declared structures that the data cannot carry, with the reason.
+    left_out : supported components that the joint model of ``full_node`` does without, with the reason.
     depth : "exact" for one column of y, "fast" (shared grid, interpolated) for many.
+
+    Notes
+    -----
+    "fast" serves models of one or two working parameters; models of three or more are searched column
+    by column from the first column's optimum.
     """
 
     response: Response
@@ -63,7 +83,11 @@ class Fits:
     refused: Mapping[str, Refusal]
 
     def __init__(self, response: Response, run: Run) -> None:
-        raise NotImplementedError
+        self.response, self.run = response, run
+        self.components, self.refused = kept(
+            self.design, ("declared", run.limits), lambda: declared(response.design, run.limits)
+        )
+        self._models: dict[Node, ErrorModel] = {}
 
     @property
     def design(self) -> Design:
@@ -75,16 +99,53 @@ class Fits:
 
     def __getitem__(self, node: Iterable[str]) -> ErrorModel:
         """The REML fit of a set of components (the empty set is independence). Raises NotSupported."""
-        raise NotImplementedError
+        key = frozenset(node)
+        if key not in self._models:
+            self._models[key] = self._fit(key)
+        return self._models[key]
 
-    def algebra(self, node: Iterable[str]) -> Algebra:
+    def algebra(self, node: Iterable[str]) -> Chosen:
         """The algebra of a set of components. Raises NotSupported(reason, hint)."""
-        raise NotImplementedError
+        key = frozenset(node)
+        for name in sorted(key - set(self.components)):
+            if name in self.refused:
+                raise self.refused[name].error()
+            raise NotSupported(
+                f"no component {name!r} was declared", "Declare the structure with group=, time= or coords=."
+            )
+        chosen = tuple(c for k, c in self.components.items() if k in key)
+        limits = self.run.limits
+        return kept(self.design, ("algebra", key, limits), lambda: choose(self.design, chosen, limits))
 
     @property
     def full_node(self) -> Node:
-        """The largest set of supported components whose algebra these data can carry."""
-        raise NotImplementedError
+        """The largest set of supported components whose algebra these data can carry.
+
+        Of sets of equal size, the one that keeps the earlier components.
+        """
+        return self._full[0]
+
+    @property
+    def left_out(self) -> Mapping[str, Refusal]:
+        return self._full[1]
+
+    @property
+    def _full(self) -> tuple[Node, Mapping[str, Refusal]]:
+        return kept(self.design, ("full", self.run.limits), self._largest)
+
+    def _largest(self) -> tuple[Node, Mapping[str, Refusal]]:
+        keys = tuple(self.components)
+        why: NotSupported | None = None
+        for size in range(len(keys), 0, -1):
+            for some in itertools.combinations(keys, size):
+                try:
+                    self.algebra(some)
+                except NotSupported as stop:
+                    why = why or stop
+                    continue
+                out = {k: Refusal(str(why), why.hint) for k in keys if k not in some} if why else {}
+                return frozenset(some), out
+        return frozenset(), {}
 
     @property
     def full(self) -> ErrorModel:
@@ -94,9 +155,178 @@ class Fits:
         return self[self.full_node - {key}]
 
     def redraw(self, node: Iterable[str], B: int, purpose: str) -> Fits:
-        """Parametric bootstrap: fits of B columns drawn from the fitted model of a node."""
-        raise NotImplementedError
+        """Parametric bootstrap: fits of B columns drawn from the fitted model of a node.
+
+        The draws come from the first column's estimates, with a mean of zero (every statistic of the
+        residuals, and every interval's coverage, is the same whatever the mean). When the node needs
+        a search for each column (three or more working parameters), at most 200 columns are drawn:
+        read ``response.B``.
+        """
+        algebra, model = self.algebra(node), self[node]
+        if len(algebra.parameters) > FACED:
+            B = min(B, SLOW_COLUMNS)
+        memory(4 * 8.0 * self.design.n * B, f"{B:,} simulated columns of {self.design.n:,} rows")
+        rng = self.run.child(f"redraw:{purpose}:{'+'.join(model.node)}")
+        Y = algebra.draw(model.theta[:, 0], float(model.sigma2[0]), rng, B)
+        return Fits(_response(self.design, Y), self.run)
 
     def onto(self, derived: Design) -> Fits:
         """Fits of the same y over an extended design."""
-        raise NotImplementedError
+        return Fits(onto(self.response, derived), self.run)
+
+    def information(self, node: Iterable[str], column: int = 0) -> Array:
+        """(1 + d, 1 + d) observed information of (ln σ², θ) at the fit; NaN for what is at a bound."""
+        algebra, model = self.algebra(node), self[node]
+        theta = model.theta[:, column].copy()
+        free = ~model.at_bound[:, column]
+
+        def gram(part: Array) -> Gram:
+            full = theta.copy()
+            full[free] = part
+            return algebra.gram(full, self.response)
+
+        inner = reml.observed_information(
+            gram, self.design.m, theta[free], float(model.sigma2[column]), column
+        )
+        out = np.full((len(theta) + 1, len(theta) + 1), np.nan)
+        keep = np.flatnonzero(np.concatenate([[True], free]))
+        out[np.ix_(keep, keep)] = inner
+        return out
+
+    # ---- one node -----------------------------------------------------------------------
+
+    def _fit(self, node: Node) -> ErrorModel:
+        algebra = self.algebra(node)
+        self._check()
+        d = len(algebra.parameters)
+        if d == 0:
+            return self._independent()
+        if self.response.B == 1:
+            return self._exact(node, algebra)
+        return self._fast(node, algebra) if d <= FACED else self._one_by_one(node, algebra)
+
+    def _check(self) -> None:
+        if self.design.m < 1:
+            raise NotSupported(
+                f"{self.design.n} rows and {self.design.n - self.design.m} coefficients leave nothing to "
+                "estimate a variance from",
+                "More rows, or a smaller model, would be needed.",
+            )
+        size = np.einsum("ij,ij->j", self.response.coef, self.response.coef) + self.response.ss
+        if bool(np.any(self.response.ss <= 1e-24 * size)):
+            raise NotSupported(
+                "the model fits every row exactly, so no residual variance is left",
+                "Look for the response, or a copy of it, among the predictors.",
+            )
+
+    def _independent(self) -> ErrorModel:
+        gram = reml.independent(self.design.p, self.response.ss)
+        B = self.response.B
+        value = reml.criterion(gram, self.design.m)
+        none = np.zeros((0, B))
+        return self._model(
+            frozenset(), none, self.response.s2, value, none.astype(bool), np.ones(B, dtype=bool), ()
+        )
+
+    def _model(
+        self,
+        node: Node,
+        theta: Array,
+        sigma2: Array,
+        value: Array,
+        at_bound: Flags,
+        converged: Flags,
+        history: tuple[str, ...],
+    ) -> ErrorModel:
+        algebra = self.algebra(node)
+        variances = algebra.variances(theta, sigma2)
+        order = tuple(k for k in self.components if k in node)
+        if node == self.full_node:
+            history += tuple(f"{k} is not in the joint model: {r.reason}" for k, r in self.left_out.items())
+        return ErrorModel(
+            order,
+            tuple(p.name for p in algebra.parameters),
+            frozen(theta),
+            frozen(sigma2),
+            frozen(-value / 2),
+            frozen(_idle(algebra, theta, at_bound)),
+            frozen(converged),
+            variances,
+            algebra.shape(theta),
+            history,
+        )
+
+    def _exact(self, node: Node, algebra: Chosen) -> ErrorModel:
+        m = self.design.m
+        with self.run.progress("fitting " + ", ".join(sorted(node)), 1) as advance:
+            best = minimise(
+                lambda t: float(reml.criterion(algebra.gram(t, self.response), m)[0]), algebra.parameters
+            )
+            advance(1)
+        sigma2 = reml.scale(algebra.gram(best.theta, self.response), m)
+        theta, bound = best.theta[:, None], best.at_bound[:, None]
+        done = np.array([best.converged])
+        return self._model(node, theta, sigma2, np.array([best.value]), bound, done, best.history)
+
+    def _fast(self, node: Node, algebra: Chosen) -> ErrorModel:
+        m, p = self.design.m, self.design.p
+
+        def surface(thetas: Array) -> tuple[Array, Array]:
+            value = np.empty((thetas.shape[1], self.response.B))
+            log_rss = np.empty_like(value)
+            for k, gram in enumerate(algebra.grams(thetas, self.response)):
+                _, c, logdet = reml.reduced(gram)
+                value[k] = gram.logdet + logdet + reml.profiled(c, m)
+                log_rss[k] = np.log(np.maximum(c, 1e-300))
+            return value, log_rss
+
+        best = minimise_columns(surface, algebra.parameters)
+        note = f"shared grid of θ, interpolated, for {self.response.B:,} columns of y ({p} coefficients)"
+        return self._model(
+            node,
+            best.theta,
+            np.exp(best.log_rss) / m,
+            best.value,
+            best.at_bound,
+            np.ones(self.response.B, dtype=bool),
+            (note,),
+        )
+
+    def _one_by_one(self, node: Node, algebra: Chosen) -> ErrorModel:
+        m, warm, found = self.design.m, None, []
+        with self.run.progress("fitting " + ", ".join(sorted(node)), self.response.B) as advance:
+            for b in range(self.response.B):
+                column = self.response.column(b)
+
+                def value(t: Array, column: Response = column) -> float:
+                    return float(reml.criterion(algebra.gram(t, column), m)[0])
+
+                best = minimise(value, algebra.parameters, warm)
+                warm = best.theta if warm is None else warm
+                found.append((best, float(reml.scale(algebra.gram(best.theta, column), m)[0])))
+                advance(1)
+        return self._model(
+            node,
+            np.stack([best.theta for best, _ in found], axis=1),
+            np.array([sigma2 for _, sigma2 in found]),
+            np.array([best.value for best, _ in found]),
+            np.stack([best.at_bound for best, _ in found], axis=1),
+            np.array([best.converged for best, _ in found]),
+            (f"{self.response.B:,} columns of y, each searched from the first one's optimum",),
+        )
+
+
+def _response(design: Design, Y: Array) -> Response:
+    """A response from Y that is already on the scale of the basis."""
+    e = design.basis.project(Y)
+    return Response(design, frozen(design.Q.T @ Y), frozen(e), frozen(np.einsum("ij,ij->j", e, e)))
+
+
+def _idle(algebra: Chosen, theta: Array, at_bound: Flags) -> Flags:
+    """Bounds, and with them the shape of a component of zero variance: it is not identified."""
+    out = at_bound.copy()
+    for piece in algebra.pieces:
+        where = algebra.slices[piece.key]
+        if where.stop - where.start > 1:
+            out[where] |= piece.variance(theta[where]) == 0
+    return out

@@ -1,0 +1,322 @@
+"""The algebra of a set of components: exact V⁻¹ and ln|V| by layers, or densely when rows are few.
+
+Layers, from the rows upwards (each exact, none larger than the number of cells or sites):
+
+    row noise     I, or the AR(1) correlation within series
+    intercepts    levels that nest one another, finest first, each holding whole series
+    places        the spatial covariance between sites, with coarser levels that hold whole sites
+
+A set that does not stack (crossed levels, series that cut across groups) goes to ``Dense``.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from itertools import pairwise
+
+import numpy as np
+from scipy import linalg
+
+from clingstone.covariance.components import Component, Parameter
+from clingstone.covariance.kept import kept
+from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.maths import groups, matern, reml
+from clingstone.maths.basis import Gram
+from clingstone.maths.groups import Classes, Load
+from clingstone.maths.once import Array, once
+from clingstone.maths.partition import Partition
+from clingstone.needs import Limits, NotSupported
+
+
+@dataclass(frozen=True, eq=False)
+class Pieces:
+    """What every algebra can say of its components one by one."""
+
+    design: Design
+    pieces: tuple[Piece, ...]
+
+    @property
+    def parameters(self) -> tuple[Parameter, ...]:
+        return tuple(parameter for piece in self.pieces for parameter in piece.parameters)
+
+    @property
+    @once
+    def slices(self) -> Mapping[str, slice]:
+        """Where each component's working parameters stand in θ."""
+        out, start = {}, 0
+        for piece in self.pieces:
+            end = start + len(piece.parameters)
+            out[piece.key] = slice(start, end)
+            start = end
+        return out
+
+    def own(self, piece: Piece, theta: Array) -> Array:
+        return np.asarray(theta[self.slices[piece.key]])
+
+    def variances(self, theta: Array, sigma2: Array) -> Mapping[str, Array]:
+        """Variance of each component and of "row" noise, (B,); θ (d, B), σ² (B,).
+
+        An AR(1) process without noise of its own counts with |ρ|σ², the rest is row noise.
+        """
+        out, row = {}, np.asarray(sigma2, dtype=float)
+        for piece in self.pieces:
+            out[piece.key] = piece.variance(self.own(piece, theta)) * sigma2
+            if isinstance(piece, SerialPiece):
+                row = row - out[piece.key]
+        return {**out, "row": row}
+
+    def shape(self, theta: Array) -> Mapping[str, Array]:
+        out: dict[str, Array] = {}
+        for piece in self.pieces:
+            out.update(piece.shape(self.own(piece, theta)))
+        return out
+
+    def spread(self, key: str, theta: Array) -> Array:
+        """(p, p) Q'KQ; Σ variances[key]·spread(key) over components and "row" is Q'Var(y)Q."""
+        if key == "row":
+            return np.eye(self.design.p)
+        piece = next(piece for piece in self.pieces if piece.key == key)
+        return piece.spread(self.own(piece, theta))
+
+    def draw(self, theta: Array, sigma2: float, rng: np.random.Generator, B: int) -> Array:
+        """(n, B) draws from N(0, σ²V(θ)), on the scale of the basis."""
+        total = np.zeros((self.design.n, B))
+        if not any(isinstance(piece, SerialPiece) for piece in self.pieces):
+            total = rng.standard_normal((self.design.n, B))
+        for piece in self.pieces:
+            total += piece.draw(self.own(piece, theta), rng, B)
+        return np.asarray(np.sqrt(sigma2) * total)
+
+    def dense(self, theta: Array) -> Array:
+        """(n, n) V(θ); for small n."""
+        serial = any(isinstance(piece, SerialPiece) for piece in self.pieces)
+        V = np.zeros((self.design.n, self.design.n)) if serial else np.eye(self.design.n)
+        for piece in self.pieces:
+            V += piece.dense(self.own(piece, theta))
+        return V
+
+    def gram(self, theta: Array, response: Response) -> Gram:
+        raise NotSupported("no algebra was chosen for these components")
+
+    def grams(self, thetas: Array, response: Response) -> list[Gram]:
+        """Grams at many θ (d, K)."""
+        return [self.gram(theta, response) for theta in thetas.T]
+
+
+@dataclass(frozen=True, eq=False)
+class Layered(Pieces):
+    """Row noise, nested intercepts, places: see the head of the file.
+
+    serial : the AR(1) row noise, or None. chain : intercepts below the sites, finest first.
+    spatial : between the sites, or None. above : levels that hold whole sites.
+    """
+
+    serial: SerialPiece | None = None
+    chain: tuple[GroupPiece, ...] = ()
+    spatial: SpatialPiece | None = None
+    above: tuple[GroupPiece, ...] = ()
+
+    def gram(self, theta: Array, response: Response) -> Gram:
+        theta = np.asarray(theta, dtype=float)
+        gram, load = self._rows(theta, response)
+        for step, piece in enumerate(self.chain):
+            ratio = float(piece.variance(self.own(piece, theta)[:, None])[0])
+            last = step + 1 == len(self.chain) and self.spatial is None
+            if step == 0 and last and self.serial is None:
+                return self._classes(piece.part, response).lower(gram, ratio)
+            assert load is not None
+            gram = groups.lower(gram, load, ratio)
+            if not last:
+                load = load.shrunk(ratio).lifted(self._up[step])
+        if self.spatial is None:
+            return gram
+        assert load is not None
+        return matern.top(gram, load, self._between(theta))
+
+    # ---- rows: I or AR(1) --------------------------------------------------------------
+
+    @property
+    def _cells(self) -> Partition | None:
+        """The first partition above the rows."""
+        if self.chain:
+            return self.chain[0].part
+        return None if self.spatial is None else self.spatial.sites.part
+
+    def _rows(self, theta: Array, response: Response) -> tuple[Gram, Load | None]:
+        if self.serial is None:
+            return reml.independent(self.design.p, response.ss), self._plain(response)
+        rho = float(self.serial.rho(self.own(self.serial, theta)))
+        if not self.serial.links.few:
+            return self._by_row(rho, response)
+        return self._by_form(rho, response)
+
+    def _plain(self, response: Response) -> Load | None:
+        cells = self._cells
+        if cells is None:
+            return None
+        return Load(self.design.sizes(cells), self.design.sums(cells), response.sums(cells))
+
+    def _classes(self, part: Partition, response: Response) -> Classes:
+        def make() -> Classes:
+            return Classes.of(Load(self.design.sizes(part), self.design.sums(part), response.sums(part)))
+
+        return kept(response, ("classes", part.key), make)
+
+    def _by_form(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
+        """R⁻¹ as a weighted sum of fixed forms."""
+        assert self.serial is not None
+        links = self.serial.links
+        weights, logdet = links.weights(rho)
+        QQ, QE, EE = np.eye(self.design.p), np.zeros((self.design.p, response.B)), response.ss.copy()
+        load = self._plain(response)
+        for length, pair in enumerate(links.forms):
+            for which, form in enumerate(pair):
+                w = weights[length][which]
+                QQ += w * self.design.gram(form)
+                qe, ee = response.gram(form)
+                QE += w * qe
+                EE += w * ee
+                if load is not None:
+                    c, TQ, TE = self._form_load(length, which, response)
+                    load = Load(load.c + w * c, load.TQ + w * TQ, load.TE + w * TE)
+        return Gram(QQ, QE, EE, logdet), load
+
+    def _form_load(self, length: int, which: int, response: Response) -> tuple[Array, Array, Array]:
+        """Z'Sz, Z'SQ and Z'SE of one form over the first cells, Z carrying √weights."""
+        assert self.serial is not None
+        assert self._cells is not None
+        part, form = self._cells, self.serial.links.forms[length][which]
+        z = self._ones
+        Sz = form.apply(z)
+
+        def of_design() -> tuple[Array, Array]:
+            return part.sums(z * Sz), part.sums(Sz[:, None] * self.design.Q)
+
+        c, TQ = kept(self.design, ("form load", part.key, form.key), of_design)
+        TE = kept(
+            response, ("form load", part.key, form.key), lambda: part.sums(Sz[:, None] * response.residual)
+        )
+        return c, TQ, TE
+
+    def _by_row(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
+        """Rows whitened one by one: irregular times."""
+        assert self.serial is not None
+        links = self.serial.links
+        WQ, WE = links.whiten(rho, self.design.Q), links.whiten(rho, response.residual)
+        gram = Gram(WQ.T @ WQ, WQ.T @ WE, np.einsum("ij,ij->j", WE, WE), links.logdet(rho))
+        cells = self._cells
+        if cells is None:
+            return gram, None
+        w = links.whiten(rho, self._ones)
+        return gram, Load(cells.sums(w * w), cells.sums(w[:, None] * WQ), cells.sums(w[:, None] * WE))
+
+    @property
+    @once
+    def _ones(self) -> Array:
+        return np.ones(self.design.n) if self.design.root is None else self.design.root
+
+    # ---- upwards: intercepts, places ----------------------------------------------------
+
+    @property
+    @once
+    def _up(self) -> tuple[Partition, ...]:
+        """Cells of each level of the chain put into the cells of the next level or of the sites."""
+        parts = [piece.part for piece in self.chain]
+        if self.spatial is not None:
+            parts.append(self.spatial.sites.part)
+        return tuple(
+            Partition(f"{low.key}>{high.key}", low.parent(high), high.labels) for low, high in pairwise(parts)
+        )
+
+    def _between(self, theta: Array) -> Array:
+        """(S, S) covariance of the sites' effects."""
+        assert self.spatial is not None
+        own = self.own(self.spatial, theta)
+        K = np.asarray(self.spatial.variance(own[:, None])[0] * self.spatial.R(own))
+        for piece in self.above:
+            up = piece.part.codes[self.spatial.sites.part.first]
+            K += piece.variance(self.own(piece, theta)[:, None])[0] * (up[:, None] == up)
+        return K
+
+    def whiten(self, theta: Array, block: Array) -> Array:
+        """A square root of V⁻¹ applied to (n, k) rows on the scale of the basis, layer by layer."""
+        u, out = self._ones, np.array(block, dtype=float)
+        if self.serial is not None:
+            rho = float(self.serial.rho(self.own(self.serial, theta)))
+            u, out = self.serial.links.whiten(rho, u), self.serial.links.whiten(rho, out)
+        for piece in self.chain:
+            ratio = float(piece.variance(self.own(piece, theta)[:, None])[0])
+            u, out = groups.whiten(piece.part, u, out, ratio)
+        if self.spatial is None:
+            return out
+        part = self.spatial.sites.part
+        L, root = matern.factor(part.sums(u * u), self._between(theta))
+        return matern.whiten(L, root, part.codes, u, out, part.sums(u[:, None] * out))
+
+
+@dataclass(frozen=True, eq=False)
+class Dense(Pieces):
+    """V as an n × n array; for sets that do not stack, and as the plain twin of those that do."""
+
+    def _factor(self, theta: Array) -> Array:
+        return np.asarray(np.linalg.cholesky(self.dense(np.asarray(theta, dtype=float))), dtype=float)
+
+    def gram(self, theta: Array, response: Response) -> Gram:
+        L = self._factor(theta)
+        W = linalg.solve_triangular(L, np.hstack([self.design.Q, response.residual]), lower=True)
+        WQ, WE = W[:, : self.design.p], W[:, self.design.p :]
+        logdet = float(2 * np.log(np.diag(L)).sum())
+        return Gram(WQ.T @ WQ, WQ.T @ WE, np.einsum("ij,ij->j", WE, WE), logdet)
+
+    def whiten(self, theta: Array, block: Array) -> Array:
+        return np.asarray(linalg.solve_triangular(self._factor(theta), block, lower=True))
+
+
+Chosen = Layered | Dense
+
+
+def choose(design: Design, components: Sequence[Component], limits: Limits) -> Chosen:
+    """The cheapest exact algebra of a set of components. Raises NotSupported."""
+    pieces = tuple(_piece(design, component) for component in components)
+    layered = stack(design, pieces)
+    if layered is not None:
+        return layered
+    if design.n <= limits.dense_rows:
+        return Dense(design, pieces)
+    names = ", ".join(component.label for component in components)
+    raise NotSupported(
+        f"{names} cut across one another; fitting them together needs a table of at most "
+        f"{limits.dense_rows:,} rows, and this one has {design.n:,}",
+        "Fit them one at a time, or declare levels that nest.",
+    )
+
+
+def _piece(design: Design, component: Component) -> Piece:
+    if component.key == "serial":
+        assert design.serial is not None
+        return SerialPiece(component.key, design, design.serial)
+    if component.key == "spatial":
+        assert design.spatial is not None
+        return SpatialPiece(component.key, design, design.spatial)
+    return GroupPiece(component.key, design, design.partitions[component.part])
+
+
+def stack(design: Design, pieces: Sequence[Piece]) -> Layered | None:
+    """The pieces in layers, or None when they do not stack."""
+    serial = next((p for p in pieces if isinstance(p, SerialPiece)), None)
+    spatial = next((p for p in pieces if isinstance(p, SpatialPiece)), None)
+    levels = [p for p in pieces if isinstance(p, GroupPiece)]
+    above: list[GroupPiece] = []
+    if spatial is not None:
+        above = [p for p in levels if p.part.relation(spatial.sites.part) == "nests"]
+    chain = sorted((p for p in levels if p not in above), key=lambda p: -p.part.count)
+    # From the rows up, every layer must hold whole cells of the one below it.
+    rising = [serial.series.part] if serial is not None else []
+    rising += [p.part for p in chain]
+    rising += [spatial.sites.part] if spatial is not None else []
+    if any(high.relation(low) not in ("nests", "same") for low, high in pairwise(rising)):
+        return None
+    return Layered(design, tuple(pieces), serial, tuple(chain), spatial, tuple(above))

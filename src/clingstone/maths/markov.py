@@ -1,0 +1,133 @@
+"""AR(1) and its continuous-time form within series, by elapsed steps.
+
+Rows stand in series and time order. Two neighbours of one series that are Δ base steps apart
+correlate φ = ρ^Δ; R is the correlation matrix. R⁻¹ is tridiagonal:
+
+    R⁻¹ = I + Σ_Δ [ φ²/(1 − φ²) D_Δ − φ/(1 − φ²) A_Δ ],   ln|R| = Σ_links ln(1 − φ²),
+
+A_Δ the adjacency of the links of length Δ, D_Δ diagonal: how many such links a row has. So a Gram at
+any ρ is a short weighted sum of fixed ones when few lengths occur (Jones 1980 for gaps). When many
+occur (irregular times) rows are whitened one by one: w_t = (z_t − φ_t z_{t−1})/√(1 − φ_t²).
+"""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+from scipy import linalg, sparse
+
+from clingstone.maths.forms import Form
+from clingstone.maths.once import Array, once
+
+FEW_LENGTHS = 24
+
+
+@dataclass(frozen=True, eq=False)
+class Links:
+    """Neighbouring rows of one series.
+
+    steps : (n,) base steps since the row before in the same series, NaN at the start of a series.
+    """
+
+    steps: Array
+
+    @property
+    def n(self) -> int:
+        return len(self.steps)
+
+    @property
+    @once
+    def later(self) -> npt.NDArray[np.int64]:
+        """Rows that have a row before them; that row is ``later − 1``."""
+        return np.flatnonzero(~np.isnan(self.steps))
+
+    @property
+    @once
+    def lengths(self) -> tuple[Array, npt.NDArray[np.int64]]:
+        """Distinct link lengths (D,) and how often each occurs (D,)."""
+        length, count = np.unique(self.steps[self.later], return_counts=True)
+        return length, count
+
+    @property
+    def few(self) -> bool:
+        return len(self.lengths[0]) <= FEW_LENGTHS
+
+    @property
+    @once
+    def forms(self) -> tuple[tuple[Form, Form], ...]:
+        """(D_Δ, A_Δ) for each distinct length."""
+        out = []
+        for length in self.lengths[0]:
+            rows = self.later[self.steps[self.later] == length]
+            degree = np.bincount(np.concatenate([rows, rows - 1]), minlength=self.n).astype(float)
+            ends = np.concatenate([rows, rows - 1]), np.concatenate([rows - 1, rows])
+            ones = np.ones(2 * len(rows))
+            A = sparse.csr_array((ones, ends), shape=(self.n, self.n))
+            D = sparse.csr_array(sparse.diags_array(degree))
+            out.append(
+                (Form(f"links:{length:g}:ends", D, 0.0, 2.0), Form(f"links:{length:g}:pairs", A, -2.0, 2.0))
+            )
+        return tuple(out)
+
+    def weights(self, rho: float) -> tuple[list[tuple[float, float]], float]:
+        """Weights of (D_Δ, A_Δ) in R⁻¹ − I, and ln|R|."""
+        length, count = self.lengths
+        phi, rest = correlation(rho, length)
+        pairs = [(float(f * f / v), float(-f / v)) for f, v in zip(phi, rest, strict=True)]
+        return pairs, float(count @ np.log(rest))
+
+    def whiten(self, rho: float, block: Array) -> Array:
+        """L⁻¹ block with LL' = R; block (n,) or (n, k)."""
+        phi, rest = correlation(rho, self.steps[self.later])
+        shape = (-1,) + (1,) * (block.ndim - 1)
+        out = np.array(block, dtype=float)
+        out[self.later] -= phi.reshape(shape) * block[self.later - 1]
+        out[self.later] /= np.sqrt(rest).reshape(shape)
+        return out
+
+    def logdet(self, rho: float) -> float:
+        """ln|R|."""
+        length, count = self.lengths
+        return float(count @ np.log(correlation(rho, length)[1]))
+
+    def colour(self, rho: float, block: Array) -> Array:
+        """L block with LL' = R: white noise (n, k) to the stationary process, x_t = φx_{t−1} + √(1−φ²)z_t."""
+        phi, rest = correlation(rho, self.steps[self.later])
+        band = np.ones((2, self.n))
+        band[1] = 0.0
+        band[1, self.later - 1] = -phi
+        noise = np.array(block, dtype=float)
+        noise[self.later] *= np.sqrt(rest)[:, None]
+        return np.asarray(linalg.solve_banded((1, 0), band, noise, overwrite_b=True, check_finite=False))
+
+    def apply(self, rho: float, block: Array) -> Array:
+        """R block, one pass forwards and one back."""
+        phi, rest = correlation(rho, self.steps[self.later])
+        band = np.ones((2, self.n))
+        band[1] = 0.0
+        band[1, self.later - 1] = -phi
+        # R = LL' with L = C⁻¹S, C bidiagonal with unit diagonal, S the innovations' deviations.
+        variance = np.ones((self.n, 1))
+        variance[self.later, 0] = rest
+        upper = np.ones((2, self.n))
+        upper[0] = 0.0
+        upper[0, self.later] = -phi
+        back = linalg.solve_banded((0, 1), upper, block, check_finite=False)
+        return np.asarray(linalg.solve_banded((1, 0), band, variance * back, check_finite=False))
+
+    def dense(self, rho: float) -> Array:
+        """(n, n) R; for small n."""
+        return self.apply(rho, np.eye(self.n))
+
+
+def correlation(rho: float, steps: Array) -> tuple[Array, Array]:
+    """φ = ρ^Δ and 1 − φ², the latter without cancellation when φ is near one."""
+    if rho == 0.0:
+        return np.zeros_like(steps), np.ones_like(steps)
+    log = np.log(abs(rho)) * steps
+    phi = np.exp(log)
+    if rho < 0:
+        phi = np.where(np.round(steps).astype(np.int64) % 2 == 1, -phi, phi)
+    return phi, -np.expm1(2 * log)

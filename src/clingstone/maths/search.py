@@ -1,0 +1,221 @@
+"""The minimum of a smooth criterion over a box, with its boundaries told apart.
+
+One coordinate: a scan, then Brent's method in every promising bracket. Several: L-BFGS-B from the
+best of a product of starts, each vanishing component tried at zero, then Newton steps.
+"""
+
+from __future__ import annotations
+
+import itertools
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass
+from typing import Any, Protocol
+
+import numpy as np
+import numpy.typing as npt
+from scipy import optimize
+
+from clingstone.maths.once import Array
+from clingstone.maths.reml import gradient, hessian
+
+Criterion = Callable[[Array], float]
+_TIGHT: Any = {"ftol": 1e-13, "gtol": 1e-6, "maxiter": 200}
+Flags = npt.NDArray[np.bool_]
+
+
+class Axis(Protocol):
+    """One coordinate: its bounds, starts, a uniform scan, and whether ``low`` means "not there"."""
+
+    @property
+    def name(self) -> str: ...
+    @property
+    def low(self) -> float: ...
+    @property
+    def high(self) -> float: ...
+    @property
+    def starts(self) -> tuple[float, ...]: ...
+    @property
+    def scan(self) -> tuple[float, ...]: ...
+    @property
+    def vanishes(self) -> bool: ...
+
+
+@dataclass(frozen=True, eq=False)
+class Optimum:
+    """θ̂ (d,), the criterion there, which coordinates are at a bound, and how the search ended."""
+
+    theta: Array
+    value: float
+    at_bound: Flags
+    converged: bool
+    history: tuple[str, ...] = ()
+
+
+def slack(value: float) -> float:
+    """A difference in −2ℓ_R that rounding can make: two values this close are equal."""
+    return 1e-7 + 1e-11 * abs(value)
+
+
+def minimise(f: Criterion, axes: Sequence[Axis], warm: Array | None = None) -> Optimum:
+    """The smallest value of f over the box of the axes. ``warm``: one start instead of many."""
+    if not axes:
+        return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
+    if len(axes) == 1:
+        return _line(f, axes[0])
+    return _several(f, axes, warm)
+
+
+def _line(f: Criterion, axis: Axis) -> Optimum:
+    def g(x: float) -> float:
+        return f(np.array([x]))
+
+    nodes = np.unique([axis.low, *axis.scan, axis.high])
+    values = np.array([g(x) for x in nodes])
+    padded = np.concatenate([[np.inf], values, [np.inf]])
+    valleys = np.flatnonzero((values <= padded[:-2]) & (values <= padded[2:]))
+    valleys = valleys[np.argsort(values[valleys], kind="stable")][:3]
+    best, at, calls = float(values.min()), float(nodes[int(values.argmin())]), len(nodes)
+    for i in valleys.tolist():
+        low, high = nodes[max(i - 1, 0)], nodes[min(i + 1, len(nodes) - 1)]
+        found = optimize.minimize_scalar(g, bounds=(low, high), method="bounded", options={"xatol": 1e-9})
+        calls += int(found.nfev)
+        if found.fun < best:
+            best, at = float(found.fun), float(found.x)
+    bound = False
+    for value, x in ((values[0], axis.low), (values[-1], axis.high)):
+        near = abs(at - x) < 1e-3 * (axis.high - axis.low) or axis.vanishes
+        if near and value <= best + slack(best):
+            best, at, bound = float(value), x, True
+            break
+    return Optimum(
+        np.array([at]), float(best), np.array([bound]), True, (f"{calls} evaluations of {axis.name}",)
+    )
+
+
+def _several(f: Criterion, axes: Sequence[Axis], warm: Array | None) -> Optimum:
+    box = np.array([[a.low, a.high] for a in axes])
+    counted = _Counted(f, box)
+    starts = [np.asarray(warm, dtype=float)] if warm is not None else _starts(counted, axes)
+    free = np.ones(len(axes), dtype=bool)
+    runs = [_descend(counted, s, free, box) for s in starts]
+    theta, value = min(runs, key=lambda run: float(run[1]))
+    theta, value, pinned = _pin(counted, axes, theta, value, box)
+    edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
+    theta, value, ok = _polish(counted, theta, value, ~(edge | pinned), box)
+    agree = sum(v <= value + 1e-3 for _, v in runs)
+    note = f"{counted.calls} evaluations, {agree} of {len(runs)} starts reached the optimum"
+    return Optimum(theta, value, edge | pinned, ok, (note,))
+
+
+class _Counted:
+    """The criterion, counted, kept inside the box, and infinite where it cannot be evaluated."""
+
+    def __init__(self, f: Criterion, box: Array) -> None:
+        self.f, self.box, self.calls = f, box, 0
+
+    def __call__(self, theta: Array) -> float:
+        self.calls += 1
+        try:
+            value = self.f(np.clip(theta, self.box[:, 0], self.box[:, 1]))
+        except np.linalg.LinAlgError:
+            return 1e300
+        return value if np.isfinite(value) else 1e300
+
+
+def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
+    grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
+    order = np.argsort([f(s) for s in grid], kind="stable")
+    return [grid[i] for i in order[:keep]]
+
+
+def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
+    """L-BFGS-B over the free coordinates."""
+    if not free.any():
+        return start, f(start)
+
+    def whole(part: Array) -> Array:
+        theta = start.copy()
+        theta[free] = part
+        return theta
+
+    def inner(part: Array) -> float:
+        return f(whole(part))
+
+    found = optimize.minimize(
+        inner,
+        start[free],
+        jac=lambda part: gradient(inner, part),
+        method="L-BFGS-B",
+        bounds=optimize.Bounds(box[free, 0], box[free, 1]),
+        options=_TIGHT,
+    )
+    return whole(np.asarray(found.x)), float(found.fun)
+
+
+def _pin(
+    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array
+) -> tuple[Array, float, Flags]:
+    """Components that are as good left out: their coordinate goes to ``low`` and is kept there."""
+    pinned = np.zeros(len(axes), dtype=bool)
+    for i, axis in enumerate(axes):
+        if not axis.vanishes:
+            continue
+        out = theta.copy()
+        out[i] = axis.low
+        if f(out) > value + 10:
+            continue
+        free = ~pinned
+        free[i] = False
+        out, v = _descend(f, out, free, box)
+        if v > value + slack(value):
+            continue
+        back = _uphill(f, axis, i, out, v)
+        if back is not None:
+            # The criterion falls again as the component grows: an inner minimum was missed.
+            again, w = _descend(f, back, ~pinned, box)
+            if w < v - slack(v):
+                theta, value = again, w
+                continue
+        theta, value, pinned[i] = out, v, True
+    return theta, value, pinned
+
+
+def _uphill(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array | None:
+    for x in axis.scan[:: max(1, len(axis.scan) // 8)]:
+        trial = at.copy()
+        trial[i] = x
+        if f(trial) < value - slack(value):
+            return trial
+    return None
+
+
+def _polish(f: Criterion, theta: Array, value: float, free: Flags, box: Array) -> tuple[Array, float, bool]:
+    """Newton steps on the free coordinates; converged when the Newton decrement is below 1e-6."""
+    if not free.any():
+        return theta, value, True
+    for _ in range(6):
+
+        def g(part: Array, here: Array = theta) -> float:
+            whole = here.copy()
+            whole[free] = part
+            return f(whole)
+
+        slope, H = gradient(g, theta[free]), hessian(g, theta[free])
+        size, U = np.linalg.eigh(H)
+        if size.min() <= 0:
+            return theta, value, bool(np.abs(slope).max() < 1e-3)
+        step = U @ ((U.T @ slope) / size)
+        decrement = float(slope @ step)
+        if decrement < 1e-9:
+            return theta, value, True
+        for shrink in (1.0, 0.5, 0.1):
+            part = np.clip(theta[free] - shrink * step, box[free, 0], box[free, 1])
+            v = g(part)
+            if v < value:
+                theta = theta.copy()
+                theta[free] = part
+                value = v
+                break
+        else:
+            return theta, value, decrement < 1e-6
+    return theta, value, decrement < 1e-6
