@@ -250,6 +250,14 @@ def test_a_taken_folder_stops_before_the_work(verbs: Verbs, run: Run, tmp_path: 
     assert verbs.saved[-1] == (Path("out"), True)
 
 
+def test_without_out_an_earlier_run_is_kept(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    for name in ("trial-clingstone", "trial-clingstone-2"):
+        (tmp_path / name).mkdir()
+    assert "in  trial-clingstone-3/" in run("demo")[1]
+    run("demo --overwrite")
+    assert verbs.saved == [(Path("trial-clingstone-3"), False), (Path("trial-clingstone"), True)]
+
+
 def test_signs_that_an_old_console_lacks_are_replaced(verbs: Verbs, monkeypatch: pytest.MonkeyPatch) -> None:
     import io
 

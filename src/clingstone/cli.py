@@ -10,6 +10,7 @@ import inspect
 import sys
 from collections.abc import Callable, Iterator, Sequence
 from contextlib import contextmanager
+from itertools import count
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
@@ -142,7 +143,7 @@ def _run(
     data: Path, arguments: dict[str, Any], out: Path | None, *, json: bool, overwrite: bool, quiet: bool
 ) -> None:
     """Examine, save, print. With --json a folder is written only when --out names one."""
-    folder = out if out is not None else None if json else Path(f"{data.stem}-clingstone")
+    folder = out if out is not None else None if json else _unused(f"{data.stem}-clingstone", overwrite)
     if folder is not None and not overwrite:
         _free(folder)
     from clingstone.examination import examine
@@ -157,6 +158,13 @@ def _run(
         _write(to_json(examination.results))
     elif not quiet:
         _write(_printed(examination, folder))
+
+
+def _unused(name: str, overwrite: bool) -> Path:
+    """The folder of that name, or the first of NAME-2, NAME-3 … that is not there yet."""
+    if overwrite or not Path(name).exists():
+        return Path(name)
+    return next(path for path in (Path(f"{name}-{k}") for k in count(2)) if not path.exists())
 
 
 def _free(folder: Path) -> None:
