@@ -3,12 +3,22 @@
 from __future__ import annotations
 
 from clingstone.needs import InputError
+from clingstone.remedies.gls import Gls
 from clingstone.remedies.longrun import Hac
 from clingstone.remedies.refit import explain, refit
 from clingstone.remedies.remedy import Remedy
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
 
-REMEDIES: tuple[Remedy, ...] = (Ordinary(), HeteroscedasticityRobust(), ClusterRobust(), Hac())
+REMEDIES: tuple[Remedy, ...] = (
+    Ordinary(),
+    HeteroscedasticityRobust(),
+    ClusterRobust(),
+    Gls("mixed-intercept", df="kenward-roger"),
+    Gls("ar1"),
+    Hac(),
+    Gls("spatial-gls"),
+    Gls("joint"),
+)
 
 
 def remedy(id: str) -> Remedy:

@@ -50,7 +50,7 @@ def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
     found = ready.fit(fits)
     boundary = bool(found.boundary[0]) if found.boundary is not None else False
     converged = bool(found.converged[0]) if found.converged is not None else True
-    notes = ready.notes
+    notes = ready.notes + found.notes
     if not converged:
         notes += ("The likelihood search stopped before it settled.",)
     return Refit(

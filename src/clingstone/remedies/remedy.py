@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Literal, Protocol
 
 import numpy as np
+import numpy.typing as npt
 
 from clingstone.design.design import Design, Term
 from clingstone.maths.once import Array
@@ -17,6 +18,7 @@ if TYPE_CHECKING:
 
     from clingstone.covariance.fits import ErrorModel, Fits
 
+Flags = npt.NDArray[np.bool_]
 Estimand = Literal["pooled", "within", "between", "mean-repaired"]
 
 
@@ -36,8 +38,9 @@ class Estimates:
     p: Array
     covariance: Array | None = None
     joint: Mapping[str, tuple[Array, float, Array | float, Array]] = field(default_factory=dict)
-    boundary: Array | None = None  # (B,) bool
-    converged: Array | None = None  # (B,) bool
+    boundary: Flags | None = None  # (B,)
+    converged: Flags | None = None  # (B,)
+    notes: tuple[str, ...] = ()  # what only y could tell, one sentence each
 
 
 @dataclass(frozen=True)

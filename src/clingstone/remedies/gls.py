@@ -1,0 +1,361 @@
+"""Generalised least squares under a fitted error model: groups, order, places, or all together."""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, Literal
+
+import numpy as np
+from scipy import optimize
+
+from clingstone.covariance.components import SITE, Component, declared
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.maths import curvature, groups, reference, reml
+from clingstone.maths.basis import Gram
+from clingstone.maths.kenward import Kenward
+from clingstone.maths.once import Array
+from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.linear import Joint, positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, multi
+from clingstone.remedies.words import gls_account
+
+if TYPE_CHECKING:
+    from clingstone.covariance.components import Algebra
+    from clingstone.covariance.fits import ErrorModel, Fits
+
+Kind = Literal["mixed-intercept", "ar1", "spatial-gls", "joint"]
+Rule = Literal["kenward-roger", "satterthwaite", "residual", "normal"]
+DRAWS = 400  # simulated columns behind an expected information, when the observed one has no inverse
+TOGETHER = " + "  # joins the levels of a nesting that are fitted together
+
+_NEEDS: dict[Kind, Needs] = {
+    "mixed-intercept": Needs(parts=frozenset({"group"}), known_design=True),
+    "ar1": Needs(parts=frozenset({"serial"}), known_design=True),
+    "spatial-gls": Needs(parts=frozenset({"spatial"}), known_design=True),
+    "joint": Needs(known_design=True),
+}
+_COVERS: dict[Kind, frozenset[Family]] = {
+    "mixed-intercept": frozenset({"group"}),
+    "ar1": frozenset({"serial"}),
+    "spatial-gls": frozenset({"spatial"}),
+    "joint": frozenset({"group", "serial", "spatial"}),
+}
+_SOURCES: dict[Kind, str] = {
+    "mixed-intercept": "kenward-roger-1997",
+    "ar1": "harville-1977",
+    "spatial-gls": "harville-1977",
+    "joint": "harville-1977",
+}
+_RULES: dict[Rule, str] = {
+    "kenward-roger": "Kenward–Roger",
+    "satterthwaite": "Satterthwaite",
+    "residual": "n − p",
+    "normal": "normal quantile",
+}
+
+
+@dataclass(frozen=True, eq=False)
+class Column:
+    """One column of y under its fitted model: β̂ and Φ in the basis, and where its df come from.
+
+    phi : (p, p), adjusted where the rule adjusts it. df : contrast (p,) → df. joint : contrasts
+    (p, q) → (scale of the F statistic, denominator df).
+    """
+
+    coef: Array
+    phi: Array
+    df: Callable[[Array], float]
+    joint: Callable[[Array], tuple[float, float]]
+    notes: tuple[str, ...] = ()
+
+
+@dataclass(frozen=True, eq=False)
+class GlsReady:
+    """A GLS remedy over one design; the error model comes from ``Fits`` at each reading."""
+
+    remedy: Gls
+    design: Design
+    names: tuple[str, ...]
+    W: Array
+    rule: str
+    components: tuple[Component, ...]
+    unusable: Mapping[str, Refusal] = field(default_factory=dict)
+
+    @property
+    def notes(self) -> tuple[str, ...]:
+        return ()
+
+    def fit(self, fits: Fits) -> Estimates:
+        model, columns = self.columns(fits)
+        k, B = len(self.names), len(columns)
+        estimate, se, df = np.empty((k, B)), np.empty((k, B)), np.empty((k, B))
+        for b, column in enumerate(columns):
+            estimate[:, b] = self.W.T @ column.coef
+            se[:, b] = np.sqrt(np.einsum("ik,ij,jk->k", self.W, column.phi, self.W))
+            df[:, b] = [column.df(w) for w in self.W.T]
+        low, high, p = reference.t_rows(estimate, se, df, fits.run.settings.confidence)
+        W = self.W[:, : self.design.p]
+        covariance = W.T @ columns[0].phi @ W if B == 1 else None
+        joint = {t.name: _joint(columns, self.W[:, list(t.columns)]) for t in multi(self.design)}
+        notes = tuple(dict.fromkeys(note for column in columns for note in column.notes))
+        return Estimates(
+            estimate,
+            se,
+            df,
+            low,
+            high,
+            p,
+            covariance,
+            joint,
+            boundary=np.asarray(np.any(model.at_bound, axis=0)),
+            converged=np.asarray(model.converged, dtype=bool),
+            notes=notes,
+        )
+
+    def columns(self, fits: Fits) -> tuple[ErrorModel, list[Column]]:
+        """The fitted error model and every column of y under it."""
+        node = self.remedy.node(fits)
+        model, algebra = fits[node], fits.algebra(node)
+        response = fits.response
+        out = []
+        for b in range(response.B):
+            one = response if response.B == 1 else response.column(b)
+            out.append(self._column(fits, model, algebra, one, b))
+        return model, out
+
+    def account(self, fits: Fits) -> Account:
+        return gls_account(self.remedy.estimation, self.rule, self.components, fits[self.remedy.node(fits)])
+
+    # ---- one column ----------------------------------------------------------------------
+
+    def _column(self, fits: Fits, model: ErrorModel, algebra: Algebra, y: Response, b: int) -> Column:
+        def gram(theta: Array) -> Gram:
+            return algebra.gram(theta, y)
+
+        theta, bound = model.theta[:, b], model.at_bound[:, b]
+        restricted = self.remedy.estimation == "REML"
+        if not restricted:
+            theta = _most_likely(gram, theta, bound, algebra, self.design.n)
+        m = self.design.m if restricted else self.design.n
+        here = gram(theta)
+        delta, _, _ = reml.reduced(here)
+        coef = y.coef[:, 0] + delta[:, 0]
+        s2 = float(reml.scale(here, m)[0])
+        if self.remedy.df in ("residual", "normal"):
+            df = float(self.design.m) if self.remedy.df == "residual" else np.inf
+            phi = np.asarray(s2 * np.linalg.inv(here.QQ))
+            return Column(coef, phi, lambda w: df, lambda L: (1.0, df))
+        if self._kenward:
+            return self._kenward_column(coef, model, s2, bool(bound.any()), b)
+        free = [int(i) for i in np.flatnonzero(~bound)]
+        found = curvature.slopes(gram, theta, free, m, restricted)
+        notes: tuple[str, ...] = ()
+        if not found.sound:
+            found, notes = self._expected(fits, algebra, theta, free, s2, m, restricted, gram)
+        if not found.sound:
+            note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
+            return Column(coef, found.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
+        return Column(coef, found.phi, found.df, lambda L: (1.0, found.joint(L)), notes)
+
+    @property
+    def _kenward(self) -> bool:
+        one = len(self.components) == 1 and self.components[0].family == "group"
+        return self.remedy.df == "kenward-roger" and one and self.remedy.estimation == "REML"
+
+    def _kenward_column(self, coef: Array, model: ErrorModel, s2: float, bound: bool, b: int) -> Column:
+        level = self.design.partitions[self.components[0].part]
+        tau2 = 0.0 if bound else float(model.variances[self.components[0].key][b])
+        seen = groups.expected_information(
+            self.design.n, self.design.sizes(level), self.design.sums(level), s2, tau2
+        )
+        kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
+        top = float(self.design.m)
+        # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
+        phi = kr.phi if bound else kr.adjusted
+        return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, top)), kr.joint)
+
+    def _expected(
+        self,
+        fits: Fits,
+        algebra: Algebra,
+        theta: Array,
+        free: list[int],
+        s2: float,
+        m: int,
+        restricted: bool,
+        gram: Callable[[Array], Gram],
+    ) -> tuple[curvature.Slopes, tuple[str, ...]]:
+        """The same with the expected information, by columns drawn from the fitted model."""
+        errors = algebra.draw(theta, s2, fits.run.child("expected-information"), DRAWS)
+        e = self.design.basis.project(errors)
+        drawn = Response(self.design, self.design.Q.T @ errors, e, np.einsum("ij,ij->j", e, e))
+        found = curvature.slopes(
+            gram, theta, free, m, restricted, lambda at: algebra.gram(at, drawn), sigma2=s2
+        )
+        note = f"The df use the expected information, from {DRAWS} simulated columns."
+        return found, (note,)
+
+
+@dataclass(frozen=True)
+class Gls:
+    """Generalised least squares with REML error parameters, one remedy for every error model.
+
+    kind : which structures are fitted. df : Kenward-Roger holds for one group level; every other model
+    takes Satterthwaite's df. estimation : REML, or ML to show what it would give.
+    """
+
+    id: Kind = "mixed-intercept"
+    df: Rule = "satterthwaite"
+    estimation: Literal["REML", "ML"] = "REML"
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+
+    @property
+    def name(self) -> str:
+        if self.id == "mixed-intercept":
+            return (
+                f"random intercept of {self.at.replace(TOGETHER, ' and ')}" if self.at else "random intercept"
+            )
+        return {
+            "ar1": "autoregressive errors along time",
+            "spatial-gls": "spatial errors",
+            "joint": "all structures fitted together",
+        }[self.id]
+
+    @property
+    def covers(self) -> frozenset[Family]:
+        return _COVERS[self.id]
+
+    @property
+    def estimand(self) -> Estimand:
+        return "pooled"
+
+    @property
+    def needs(self) -> Needs:
+        return _NEEDS[self.id]
+
+    @property
+    def source(self) -> str:
+        return _SOURCES[self.id]
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        """For groups: all levels together first when there are several, then each."""
+        if self.id != "mixed-intercept":
+            return ("",)
+        if design.group is None:
+            return ()
+        keys = tuple(level.key for level in design.group.levels)
+        return keys if len(keys) == 1 else (TOGETHER.join(keys), *keys)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
+
+    def keys(self, design: Design) -> tuple[str, ...]:
+        """Component keys that this remedy asks for; Raises NotSupported for what the data cannot carry."""
+        found, refused = declared(design, self.limits)
+        if self.id == "joint":
+            if len(found) < 2:
+                raise _too_few(found, refused)
+            return tuple(found)
+        if self.id == "mixed-intercept":
+            wanted = [f"group:{key}" for key in self.at.split(TOGETHER)]
+        elif self.id == "ar1":
+            wanted = ["serial"]
+        else:
+            wanted = [*_site_level(design, found), "spatial"]
+        for key in wanted:
+            if key not in found:
+                unknown = Refusal(f"these data have no structure named {key}")
+                raise refused.get(key, unknown).error()
+        return tuple(wanted)
+
+    def node(self, fits: Fits) -> frozenset[str]:
+        if self.id != "joint":
+            return frozenset(self.keys(fits.design))
+        node = fits.full_node
+        if len(node) < 2:
+            raise _too_few(fits.components, fits.refused)
+        return node
+
+    def prepare(self, design: Design, working: ErrorModel | None) -> GlsReady:
+        positive_m(design)
+        found, _ = declared(design, self.limits)
+        components = tuple(found[key] for key in self.keys(design))
+        names, W = reported(design)
+        kenward = len(components) == 1 and components[0].family == "group" and self.estimation == "REML"
+        rule = "satterthwaite" if self.df == "kenward-roger" and not kenward else self.df
+        return GlsReady(self, design, names, W, _RULES[rule], components)
+
+    def conventions(self) -> tuple[tuple[str, Gls], ...]:
+        out = []
+        if self.df == "kenward-roger":
+            out.append(
+                (
+                    "the same fit, Satterthwaite df from the observed information",
+                    replace(self, df="satterthwaite"),
+                )
+            )
+        out += [
+            ("the same fit, n − p df", replace(self, df="residual")),
+            ("the same fit, normal quantile", replace(self, df="normal")),
+            (
+                "maximum likelihood in place of REML, normal quantile",
+                replace(self, df="normal", estimation="ML"),
+            ),
+        ]
+        return tuple(out)
+
+
+def _site_level(design: Design, found: Mapping[str, Component]) -> list[str]:
+    """The component of what rows of one place share, where places repeat."""
+    if SITE in found:
+        return [SITE]
+    if design.spatial is None or design.group is None:
+        return []
+    same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
+    return [f"group:{v.key}" for v in same if f"group:{v.key}" in found]
+
+
+def _too_few(found: Mapping[str, Component], refused: Mapping[str, Refusal]) -> NotSupported:
+    have = ", ".join(c.label for c in found.values()) or "none"
+    return NotSupported(
+        f"a joint model needs two structures that can be estimated; here: {have}",
+        "; ".join(f"{key}: {no.reason}" for key, no in refused.items()),
+    )
+
+
+def _joint(columns: list[Column], L: Array) -> Joint:
+    q = L.shape[1]
+    F, df2 = np.empty(len(columns)), np.empty(len(columns))
+    for b, column in enumerate(columns):
+        effect = (L.T @ column.coef)[:, None]
+        wald = reference.wald(effect, (L.T @ column.phi @ L)[:, :, None])[0]
+        scale, df2[b] = column.joint(L)
+        F[b] = scale * wald / q
+    return F, float(q), df2, reference.f_tail(F, q, df2)
+
+
+def _most_likely(
+    gram: Callable[[Array], Gram], theta: Array, bound: Flags, algebra: Algebra, n: int
+) -> Array:
+    """θ of maximum likelihood, from the REML estimate; parameters at a bound stay there."""
+    free = np.flatnonzero(~bound)
+    if not len(free):
+        return theta
+
+    def whole(part: Array) -> Array:
+        out = theta.copy()
+        out[free] = part
+        return out
+
+    def minus_two(part: Array) -> float:
+        found = gram(whole(part))
+        return float(found.logdet + reml.profiled(reml.rss(found), n)[0])
+
+    box = [(algebra.parameters[i].low, algebra.parameters[i].high) for i in free]
+    found = optimize.minimize(
+        minus_two, theta[free], method="Nelder-Mead", bounds=box, options={"xatol": 1e-7, "fatol": 1e-9}
+    )
+    return whole(np.asarray(found.x))

@@ -1,0 +1,64 @@
+"""How a fitted error model explains itself: its parameters, in the words of an Account."""
+
+from __future__ import annotations
+
+from typing import TYPE_CHECKING
+
+from clingstone.covariance.components import Component
+from clingstone.remedies.remedy import Account
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import ErrorModel
+
+_SHAPES = {
+    "serial.rho": "ρ per step",
+    "spatial.range": "practical range (correlation 0.05)",
+}
+_DF_SOURCE = {
+    "Kenward–Roger": "kenward-roger-1997",
+    "Satterthwaite": "satterthwaite-1946, giesbrecht-burns-1985, fai-cornelius-1996",
+}
+_COVARIANCE = {
+    "Kenward–Roger": "σ²(X′V⁻¹X)⁻¹, adjusted for the estimation of the variances (Kenward–Roger)",
+}
+
+
+def gls_account(estimation: str, rule: str, components: tuple[Component, ...], model: ErrorModel) -> Account:
+    """Estimator, covariance, factor, df rule and every error parameter of a GLS fit."""
+    parts = " and ".join(_part(c) for c in components)
+    items = [(f"variance of {c.label}", f"{float(model.variances[c.key][0]):.6g}") for c in components]
+    items.append(("variance of row noise", f"{float(model.variances['row'][0]):.6g}"))
+    total = sum(float(v[0]) for v in model.variances.values())
+    for c in components:
+        if c.family == "group" and total > 0:
+            share = float(model.variances[c.key][0]) / total
+            items.append((f"share of {c.label} in the residual variance", f"{share:.3f}"))
+    items += [
+        (words, f"{float(model.shape[key][0]):.6g}") for key, words in _SHAPES.items() if key in model.shape
+    ]
+    if bool(model.at_bound.any()):
+        named = [n for n, at in zip(model.names, model.at_bound[:, 0], strict=True) if at]
+        items.append(("at the end of its range", ", ".join(named)))
+    sources = ["patterson-thompson-1971", "harville-1977"] if estimation == "REML" else ["harville-1977"]
+    if rule in _DF_SOURCE:
+        sources.append(_DF_SOURCE[rule])
+    how = "restricted maximum likelihood" if estimation == "REML" else "maximum likelihood"
+    return Account(
+        estimator=f"generalised least squares, error parameters by {how}: {parts}",
+        covariance=_COVARIANCE.get(rule, "σ²(X′V⁻¹X)⁻¹"),
+        factor="σ² = e′V⁻¹e/(n − p)" if estimation == "REML" else "σ² = e′V⁻¹e/n",
+        df_rule=rule,
+        reference="normal" if rule == "normal quantile" else "t",
+        items=tuple(items),
+        source=", ".join(sources),
+    )
+
+
+def _part(component: Component) -> str:
+    if component.family == "group":
+        return f"a random intercept of {component.label}"
+    if component.key == "serial":
+        return f"AR(1) over {component.label}"
+    if component.key == "spatial":
+        return "exponential correlation over place with a nugget"
+    return f"a random intercept of each {component.part}"
