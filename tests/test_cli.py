@@ -6,6 +6,7 @@ Where only the shell is on trial, a stand-in takes the place of the verbs and re
 from __future__ import annotations
 
 import inspect
+import resource
 import shlex
 import subprocess
 import sys
@@ -379,15 +380,32 @@ def test_demo_without_a_name_is_the_trial(verbs: Verbs, run: Run) -> None:
 # ---- the real thing, from a shell --------------------------------------------------------------
 
 
+def _shell(folder: Path, *words: str) -> subprocess.CompletedProcess[str]:
+    command = [sys.executable, "-m", "clingstone", *words]
+    return subprocess.run(command, cwd=folder, capture_output=True, text=True)
+
+
 def test_a_missing_file_from_the_shell(tmp_path: Path) -> None:
-    done = subprocess.run(
-        [sys.executable, "-m", "clingstone", "examine", "nowhere.csv", "--model", "y ~ x"],
-        cwd=tmp_path,
-        capture_output=True,
-        text=True,
-    )
+    done = _shell(tmp_path, "examine", "nowhere.csv", "--model", "y ~ x")
     assert (done.returncode, done.stdout) == (2, "")
     assert done.stderr.startswith("clingstone: ")
     assert "nowhere.csv" in done.stderr
     assert "Traceback" not in done.stderr
     assert list(tmp_path.iterdir()) == []
+
+
+def test_the_demo_runs_whole_in_ten_seconds_and_replays(tmp_path: Path) -> None:
+    """Seconds of processor time, start-up included, so that a busy machine does not decide."""
+    before = resource.getrusage(resource.RUSAGE_CHILDREN)
+    done = _shell(tmp_path, "demo")
+    after = resource.getrusage(resource.RUSAGE_CHILDREN)
+    assert (done.returncode, done.stderr) == (0, "")
+    assert after.ru_utime + after.ru_stime - before.ru_utime - before.ru_stime < 10
+    lines = done.stdout.splitlines()
+    assert max(map(len, lines)) <= 80
+    assert "trial-clingstone/" in lines[-1]
+    saved = {path.name for path in (tmp_path / "trial-clingstone").iterdir()}
+    assert {"report.html", "methods.md", "references.bib", "results.json"} <= saved
+    again = _shell(tmp_path, "replay", "trial-clingstone")
+    assert (again.returncode, again.stderr) == (0, ""), again.stdout
+    assert "every number agrees" in again.stdout
