@@ -7,6 +7,7 @@ from dataclasses import dataclass, field, fields
 from typing import TYPE_CHECKING, Literal, Protocol
 
 import numpy as np
+import numpy.typing as npt
 
 from clingstone.design.design import Design
 from clingstone.maths.once import Array
@@ -22,17 +23,24 @@ Verdict = Literal["present", "unclear", "not detected", "not applicable"]
 
 @dataclass(frozen=True)
 class About:
-    """At what a test is run: a level, a lag, a neighbourhood, a predictor."""
+    """At what a test is run: a level, a lag, a neighbourhood, a predictor.
+
+    primary : False for a second look at the same thing (other neighbourhoods), which never decides.
+    """
 
     key: str = ""  # what the code looks up: "clinic", "1", "knn:6", "dose"
     words: str = ""  # what a sentence says: "rows of one clinic", "one day apart"
+    primary: bool = True
 
 
 @dataclass(frozen=True, eq=False)
 class Reading:
     """A test read on B columns of y. Every array is (B,); a scalar is the same for all columns.
 
-    effect : the size that a reader understands (an ICC, a correlation, a share), with an interval.
+    estimate, low, high : the size that a reader understands (an ICC, a correlation, a share), with
+        its interval at the run's confidence.
+    flag : (B,) bool, decides in place of p for a test without a null law (duplicates).
+    rows : rows of the design that the reading points at (outliers, duplicates), for column 0.
     """
 
     statistic: Array
@@ -48,14 +56,24 @@ class Reading:
     n_used: int = 0
     caveats: tuple[str, ...] = ()
     log_p: Array | None = None
+    flag: npt.NDArray[np.bool_] | None = None
+    rows: tuple[int, ...] = ()
 
 
 @dataclass(frozen=True)
 class Curve:
     """What a figure draws; plain numbers.
 
-    kind : "autocorrelation", "group-means", "variogram", "map", "function", "network".
-    x, y, low, high, size : one number per mark (size: pairs or rows behind it); labels per mark.
+    kind : what the marks are.
+        "autocorrelation": x elapsed time (in ``unit``), y correlation, low and high the band in which
+        it lies in 95 % of data without dependence, size the number of pairs.
+        "group-means": x rank, y mean residual, low and high its interval, size rows, labels groups.
+        "variogram": x distance, y semivariance (1 without dependence), low and high a simultaneous
+        envelope, size pairs.
+        "map": x and y are the coordinates of the sites, size the mean residual there (signed).
+        "function": x the covariate, y the mean residual in a bin, low and high its interval, size rows;
+        the line "repaired" is what a flexible curve would add.
+    x, y, low, high, size : one number per mark; labels per mark.
     lines : further named lines, each a pair of tuples (x, y).
     """
 
@@ -75,7 +93,10 @@ class Curve:
 
 @dataclass(frozen=True)
 class Finding:
-    """One test on the user's data: effect first, then statistic and p."""
+    """One test on the user's data: effect first, then statistic and p.
+
+    rows : rows of the design that it points at; ``Case.kept`` leads from them to the user's rows.
+    """
 
     structure: Family
     test: str
@@ -88,7 +109,7 @@ class Finding:
     alternative: str
     p: float
     p_method: str
-    p_adjusted: float | None  # Holm over the primary tests; None for exploratory ones
+    p_adjusted: float | None  # Holm over its family of tests; None where p is not adjusted
     estimate: float
     estimate_name: str
     low: float
@@ -102,6 +123,7 @@ class Finding:
     given: tuple[str, ...] = ()  # structures fitted first
     primary: bool = False
     curve: Curve | None = None
+    rows: tuple[int, ...] = ()
 
 
 @dataclass(frozen=True)
@@ -134,17 +156,36 @@ class Evidence:
 
 
 class Test(Protocol):
-    """A test: what it needs, at what it is run, and how it reads B columns of y."""
+    """A test: what it needs, at what it is run, and how it reads B columns of y.
 
-    id: str
-    family: Family
-    null: str
-    alternative: str
-    needs: Needs
-    source: str
-    primary: bool
+    ``null`` and ``alternative`` are sentences; ``source`` is a key of the bibliography; ``givens``
+    lists the sets of other components that the test knows how to fit first at this place.
+    """
+
+    @property
+    def id(self) -> str: ...
+
+    @property
+    def family(self) -> Family: ...
+
+    @property
+    def null(self) -> str: ...
+
+    @property
+    def alternative(self) -> str: ...
+
+    @property
+    def needs(self) -> Needs: ...
+
+    @property
+    def source(self) -> str: ...
+
+    @property
+    def primary(self) -> bool: ...
 
     def abouts(self, design: Design) -> tuple[About, ...]: ...
+
+    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]: ...
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading: ...
 

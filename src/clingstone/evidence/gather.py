@@ -1,0 +1,180 @@
+"""All tests run, alone and given the other structures; p adjusted; verdicts; words."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Sequence
+from dataclasses import dataclass
+
+import numpy as np
+import numpy.typing as npt
+
+from clingstone.covariance.fits import Fits
+from clingstone.evidence.finding import About, Curve, Evidence, Finding, Reading, Test, column
+from clingstone.evidence.judge import VERDICTS, verdicts
+from clingstone.evidence.nested import level_name
+from clingstone.evidence.read import holm
+from clingstone.evidence.registry import TESTS
+from clingstone.maths.once import Array
+from clingstone.needs import NotSupported, Refusal
+
+ALONE: frozenset[str] = frozenset()
+
+
+@dataclass(frozen=True, eq=False)
+class Item:
+    """One test at one place, alone or given other structures: its reading, or why there is none."""
+
+    test: Test
+    about: About
+    given: frozenset[str]
+    reading: Reading | None
+    refusal: Refusal | None = None
+
+    @property
+    def decides(self) -> bool:
+        """Primary tests read alone enter Holm's adjustment and the verdict of their structure."""
+        return self.test.primary and self.about.primary and not self.given and self.reading is not None
+
+
+@dataclass(frozen=True, eq=False)
+class Columns:
+    """Tests read on B columns of y, without words.
+
+    items : K of them. p, adjusted (K, B) : adjusted equals p where a test is not adjusted.
+    verdict (K, B) : places in ``VERDICTS``.
+    """
+
+    items: tuple[Item, ...]
+    p: Array
+    adjusted: Array
+    verdict: npt.NDArray[np.int8]
+
+
+def gather(fits: Fits, tests: Sequence[Test] = TESTS) -> Evidence:
+    """Every test that these data can carry, as Findings of column 0.
+
+    Each is read alone and, where it knows how, given the other declared structures. Holm adjusts the
+    primary tests over the structures, and the curve tests under dependence over the covariates; the
+    others are exploratory and not adjusted. A refusal becomes a Finding ``not applicable``.
+    """
+    columns = read_columns(fits, tests)
+    known = zip(columns.items, columns.p, columns.adjusted, columns.verdict, strict=True)
+    return Evidence(tuple(_finding(fits, item, p, adjusted, code) for item, p, adjusted, code in known))
+
+
+def read_columns(fits: Fits, tests: Sequence[Test] = TESTS, given: bool = True) -> Columns:
+    """All tests on all B columns. given : also read them given the other structures."""
+    with fits.run.progress("tests", len(tests)) as advance:
+        items: list[Item] = []
+        for test in tests:
+            items.extend(_items(fits, test, given))
+            advance(1)
+    B = fits.response.B
+    p = np.array([_p(item, B) for item in items]).reshape(len(items), B)
+    adjusted = p.copy()
+    for family in (
+        [i for i, item in enumerate(items) if item.decides],
+        [i for i, item in enumerate(items) if item.test.id == "functional-form" and item.given],
+    ):
+        if family:
+            adjusted[family] = holm(p[family])
+    verdict = np.array([_codes(fits, item, adjusted[i]) for i, item in enumerate(items)], dtype=np.int8)
+    return Columns(tuple(items), p, adjusted, verdict.reshape(len(items), B))
+
+
+def read_column(fits: Fits, test: Test, about: About, given: frozenset[str] = ALONE) -> Item:
+    """One test at one place on all B columns; a refusal instead of an exception."""
+    try:
+        return Item(test, about, given, test.read(fits, about, given))
+    except NotSupported as refused:
+        return Item(test, about, given, None, Refusal(str(refused), refused.hint))
+
+
+def _items(fits: Fits, test: Test, given: bool) -> Iterable[Item]:
+    design = fits.design
+    if any(getattr(design, part) is None for part in test.needs.parts):
+        return
+    abouts = test.abouts(design)
+    refusal = test.needs.check(design)
+    if refusal is not None and abouts:
+        yield Item(test, abouts[0], ALONE, None, refusal)
+        return
+    for about in abouts:
+        yield read_column(fits, test, about)
+        for others in test.givens(fits, about) if given else ():
+            yield read_column(fits, test, about, others)
+
+
+def _p(item: Item, B: int) -> Array:
+    return np.full(B, np.nan) if item.reading is None else np.asarray(np.broadcast_to(item.reading.p, B))
+
+
+def _codes(fits: Fits, item: Item, p: Array) -> npt.NDArray[np.int8]:
+    if item.reading is None:
+        return np.zeros(fits.response.B, dtype=np.int8)
+    return verdicts(fits, item.test, item.about, item.reading, p)
+
+
+def _finding(fits: Fits, item: Item, p: Array, adjusted: Array, code: npt.NDArray[np.int8]) -> Finding:
+    test, about, reading = item.test, item.about, item.reading
+    verdict = VERDICTS[int(code[0])]
+    held = item.decides or (test.id == "functional-form" and bool(item.given))
+    nothing = reading is not None and reading.flag is None and bool(np.isnan(p[0]))
+    shown = reading or Reading(statistic=np.array([np.nan]), p=np.array([np.nan]))
+    return Finding(
+        structure=test.family,
+        test=test.id,
+        about=about.key,
+        about_words=about.words,
+        statistic=column(shown.statistic),
+        statistic_name=shown.statistic_name,
+        df=shown.df,
+        df2=shown.df2,
+        alternative=test.alternative,
+        p=column(shown.p),
+        p_method=shown.p_method,
+        p_adjusted=float(adjusted[0]) if held and not np.isnan(p[0]) else None,
+        estimate=column(shown.estimate),
+        estimate_name=shown.estimate_name,
+        low=column(shown.low),
+        high=column(shown.high),
+        n_used=shown.n_used,
+        verdict=verdict,
+        caveats=shown.caveats,
+        sentence=_sentence(fits, item, nothing),
+        source=test.source,
+        null=test.null,
+        given=tuple(sorted(item.given)),
+        primary=test.primary and about.primary and not item.given,
+        curve=_curve(fits, item),
+        rows=shown.rows,
+    )
+
+
+def _sentence(fits: Fits, item: Item, nothing: bool) -> str:
+    if item.refusal is not None:
+        reason = item.refusal.reason
+        words = f"Not tested ({item.about.words or item.test.id}): {reason}."
+        return f"{words} {item.refusal.hint}".strip()
+    if nothing:
+        return "The model leaves nothing over (or nothing that varies), so there is nothing to test."
+    assert item.reading is not None
+    said = item.test.sentence(item.reading, item.about)
+    if not item.given:
+        return said
+    names = " and ".join(_label(fits, key) for key in sorted(item.given))
+    return f"With {names} taken into account, {said[:1].lower()}{said[1:]}"
+
+
+def _label(fits: Fits, key: str) -> str:
+    found = fits.components.get(key)
+    return found.label if found is not None else level_name(key.removeprefix("group:"))
+
+
+def _curve(fits: Fits, item: Item) -> Curve | None:
+    if item.reading is None or item.given or fits.response.B != 1:
+        return None
+    try:
+        return item.test.curve(fits, item.about)
+    except NotSupported:
+        return None

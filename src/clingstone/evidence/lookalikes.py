@@ -1,0 +1,280 @@
+"""What can be taken for dependence, or spoil a test for it: unequal variance, outliers, shape, copies."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+from scipy import special, stats
+
+from clingstone.design.derived import whole
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.evidence.finding import About, Reading, column
+from clingstone.evidence.read import Plain, degenerate, normal_quantile
+from clingstone.evidence.words import between, counted, number, p_value
+from clingstone.maths.once import Array, once
+from clingstone.needs import Family, Needs, NotSupported
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
+
+FITTED = "fitted"
+
+
+@dataclass(frozen=True)
+class Heteroscedasticity(Plain):
+    """Koenker's studentised Breusch–Pagan statistic on fitted values or on one covariate.
+
+    n R² of e² on the variable. The size is the ratio of residual standard deviations between the
+    upper and the lower fifth of the rows by that variable; its interval uses
+    Var ln s² ≈ (kurtosis − 1)/rows. Dependence can disturb it: a screen, not a verdict.
+    """
+
+    id: str = "heteroscedasticity"
+    family: Family = "lookalike"
+    null: str = "The spread of the residuals does not change with the variable."
+    alternative: str = "The spread of the residuals changes with the variable."
+    needs: Needs = field(default=Needs(frozenset(), {"residual df": 10}, known_design=True))
+    source: str = "koenker-1981"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        numeric = [k for k, x in design.covariates.items() if np.ptp(x) > 0]
+        return (
+            About(FITTED, "the fitted values", primary=False),
+            *(About(k, k, primary=False) for k in numeric[:8]),
+        )
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        design, response = fits.design, fits.response
+        z = _variable(response, about.key)
+        e2 = response.residual**2
+        lost = degenerate(response) | (np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0))
+        if lost.all():
+            raise NotSupported(f"{about.words} do not vary beyond rounding, or nothing is left over")
+        r2 = _r2(np.where(lost, np.nan, e2), z)
+        low, estimate, high = _spread_ratio(response.residual, z, normal_quantile(fits))
+        return Reading(
+            statistic=design.n * r2,
+            statistic_name="nR²",
+            df=1.0,
+            p=np.asarray(special.chdtrc(1, design.n * r2)),
+            log_p=np.asarray(stats.chi2.logsf(design.n * r2, 1)),
+            p_method="chi-squared, large samples",
+            estimate=np.where(lost, np.nan, estimate),
+            estimate_name="ratio of residual standard deviations, upper to lower fifth",
+            low=np.where(lost, np.nan, low),
+            high=np.where(lost, np.nan, high),
+            n_used=design.n,
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        interval = between(column(reading.low), column(reading.high), "number")
+        return (
+            f"In the upper fifth of {about.words} the residuals spread "
+            f"{number(column(reading.estimate))} times{interval} as far as in the lower fifth "
+            f"(Koenker's nR² = {number(column(reading.statistic))}, "
+            f"{p_value(column(reading.p), column(reading.log_p))})."
+        )
+
+
+def _variable(response: Response, key: str) -> Array:
+    """(n, B) fitted values per column, or (n, 1) a covariate."""
+    design = response.design
+    if key != FITTED:
+        return np.asarray(design.covariates[key], dtype=float)[:, None]
+    fitted = design.Q @ response.coef
+    return np.asarray(fitted if design.root is None else fitted / design.root[:, None])
+
+
+def _r2(e2: Array, z: Array) -> Array:
+    a, b = e2 - e2.mean(axis=0), z - z.mean(axis=0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        cross = np.sum(a * b, axis=0) ** 2
+        return np.asarray(cross / (np.sum(a * a, axis=0) * np.sum(b * b, axis=0)))
+
+
+def _spread_ratio(e: Array, z: Array, quantile: float) -> tuple[Array, Array, Array]:
+    """Low, estimate and high of sd(upper fifth)/sd(lower fifth), each (B,)."""
+    low_cut, high_cut = np.quantile(z, [0.2, 0.8], axis=0)
+    lower, upper = z <= low_cut, z >= high_cut
+    counts = lower.sum(axis=0), upper.sum(axis=0)
+    e2 = e**2
+    with np.errstate(divide="ignore", invalid="ignore"):
+        log = 0.5 * np.log(
+            (np.sum(e2 * upper, axis=0) / counts[1]) / (np.sum(e2 * lower, axis=0) / counts[0])
+        )
+        kurtosis = np.mean(e2**2, axis=0) / np.mean(e2, axis=0) ** 2
+        half = quantile * 0.5 * np.sqrt((kurtosis - 1) * (1 / counts[0] + 1 / counts[1]))
+        return np.exp(log - half), np.exp(log), np.exp(log + half)
+
+
+@dataclass(frozen=True)
+class Outliers(Plain):
+    """The largest externally studentised residual, with Bonferroni's p.
+
+    t_i = r_i √((m − 1)/(m − r_i²)), r_i = e_i/(s √(1 − h_i)); t with m − 1 degrees of freedom. The
+    size is r_i, the residual in residual standard deviations.
+    """
+
+    id: str = "outliers"
+    family: Family = "lookalike"
+    null: str = "No row lies further out than chance would put one of so many."
+    alternative: str = "Some row lies further out than chance would put one of so many."
+    needs: Needs = field(default=Needs(frozenset(), {"residual df": 3}))
+    source: str = "cook-weisberg-1982"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return (About("", "all rows"),)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        design, response = fits.design, fits.response
+        free = 1.0 - design.basis.leverage
+        usable = free > 1e-8  # a row with leverage 1 has no residual of its own
+        e = response.residual[usable] / np.sqrt(free[usable])[:, None]
+        lost = degenerate(response)
+        r = e / np.sqrt(np.where(lost, np.nan, response.s2))
+        place = np.argmax(np.abs(np.nan_to_num(r)), axis=0)
+        most = r[place, np.arange(response.B)]
+        with np.errstate(divide="ignore", invalid="ignore"):
+            t = most * np.sqrt((design.m - 1) / np.maximum(design.m - most**2, 0.0))
+            each = 2 * stats.t.sf(np.abs(t), design.m - 1)
+            log_p = np.minimum(stats.t.logsf(np.abs(t), design.m - 1) + np.log(2.0 * usable.sum()), 0.0)
+        return Reading(
+            statistic=t,
+            statistic_name="studentised residual",
+            df=float(design.m - 1),
+            p=np.minimum(usable.sum() * each, 1.0),
+            log_p=log_p,
+            p_method="t with Bonferroni's correction",
+            estimate=most,
+            estimate_name="largest residual in standard deviations",
+            n_used=int(usable.sum()),
+            rows=(int(np.flatnonzero(usable)[place[0]]),),
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        return (
+            f"The largest residual lies {number(abs(column(reading.estimate)))} standard deviations "
+            f"{'above' if column(reading.estimate) > 0 else 'below'} its fitted value; among "
+            f"{counted(reading.n_used, 'row')}, "
+            f"{p_value(column(reading.p), column(reading.log_p))}."
+        )
+
+
+@dataclass(frozen=True)
+class Normality(Plain):
+    """Skewness and kurtosis of the residuals at once (D'Agostino & Pearson 1973); only a screen.
+
+    Residuals are nearer to normal than errors, and the tests for dependence hold for heavy tails that
+    are alike in all rows; the size is the skewness.
+    """
+
+    id: str = "normality"
+    family: Family = "lookalike"
+    null: str = "The residuals are shaped like normal ones."
+    alternative: str = "The residuals are skewed, or heavier or lighter in the tails than normal ones."
+    needs: Needs = field(default=Needs(frozenset(), {"rows": 20, "residual df": 10}))
+    source: str = "dagostino-pearson-1973"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return (About("", "all rows"),)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        response = fits.response
+        lost = degenerate(response)
+        e = np.where(lost, np.nan, response.residual)
+        with np.errstate(divide="ignore", invalid="ignore"):
+            skew = np.asarray(stats.skew(e, axis=0))
+            heavy = np.asarray(stats.kurtosis(e, axis=0))
+            K2 = stats.skewtest(e, axis=0).statistic ** 2 + stats.kurtosistest(e, axis=0).statistic ** 2
+        return Reading(
+            statistic=np.asarray(K2),
+            statistic_name="K²",
+            df=2.0,
+            p=np.asarray(special.chdtrc(2, K2)),
+            log_p=np.asarray(stats.chi2.logsf(K2, 2)),
+            p_method="chi-squared, large samples",
+            estimate=skew,
+            estimate_name="skewness",
+            n_used=fits.design.n,
+            caveats=(f"excess kurtosis {number(column(heavy))}", "a screen only: never decides"),
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        return (
+            f"The residuals have skewness {number(column(reading.estimate))} and {reading.caveats[0]} "
+            f"(0 and 0 when normal; K² = {number(column(reading.statistic))}, "
+            f"{p_value(column(reading.p), column(reading.log_p))})."
+        )
+
+
+@once
+def row_codes(design: Design) -> npt.NDArray[np.int64]:
+    """(n,) which distinct row of model columns and raw covariates each row is.
+
+    Columns are compared at nine digits of their size: QR leaves rounding in the last few.
+    """
+    X = np.column_stack([design.Q @ design.basis.R, *design.covariates.values()])
+    if design.root is not None:
+        X[:, : design.p] /= design.root[:, None]
+    scale = np.abs(X).max(axis=0)
+    grid = np.round(X / np.where(scale > 0, scale, 1.0) * 1e9)
+    return np.asarray(np.unique(grid, axis=0, return_inverse=True)[1]).ravel().astype(np.int64)
+
+
+@dataclass(frozen=True)
+class Duplicates(Plain):
+    """Rows identical in y and in every column of the model: copies look like perfect dependence.
+
+    A count, without a null law. Counts and rounded values produce honest repeats, so it never decides.
+    """
+
+    id: str = "duplicates"
+    family: Family = "lookalike"
+    null: str = "No row is a copy of another."
+    alternative: str = "Some rows are copies of others."
+    needs: Needs = field(default=Needs(frozenset(), {"rows": 2}, known_design=True))
+    source: str = ""
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return (About("", "rows identical in the response and all columns of the model"),)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        codes = row_codes(fits.design)
+        Y = whole(fits.response)
+        copies = [copies_of(codes, Y[:, b]) for b in range(fits.response.B)]
+        count = np.array([float(len(rows)) for rows in copies])
+        return Reading(
+            statistic=count,
+            statistic_name="copies",
+            p=np.full(len(count), np.nan),
+            p_method="a count, no test",
+            estimate=count / fits.design.n,
+            estimate_name="share of rows that copy another",
+            n_used=fits.design.n,
+            flag=count > 0,
+            rows=tuple(int(r) for r in copies[0][:50]),
+            caveats=("rounded or counted values can repeat honestly",) if count[0] else (),
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        count = int(column(reading.statistic))
+        if not count:
+            return "No row is identical to another in the response and all columns of the model."
+        verb = "copies" if count == 1 else "copy"
+        return f"{counted(count, 'row')} {verb} an earlier row in the response and all columns of the model."
+
+
+def copies_of(codes: npt.NDArray[np.int64], y: Array) -> npt.NDArray[np.int64]:
+    """Rows whose code and y (to nine digits) have occurred in an earlier row."""
+    scale = float(np.abs(y).max()) or 1.0
+    order = np.lexsort((np.arange(len(y)), np.round(y / scale * 1e9), codes))
+    same = (np.diff(codes[order]) == 0) & (np.diff(np.round(y[order] / scale * 1e9)) == 0)
+    return np.sort(order[1:][same])

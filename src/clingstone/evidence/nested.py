@@ -1,0 +1,286 @@
+"""Groups: the F test with the intraclass correlation as its size, and the REML correlation."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+from scipy import special, stats
+
+from clingstone.design.design import Design
+from clingstone.evidence.anova import anova, icc_interval
+from clingstone.evidence.finding import About, Curve, Reading, column
+from clingstone.evidence.read import Plain, degenerate, exceedance, floats
+from clingstone.evidence.words import between, correlation, degrees, number, p_value, percent
+from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, Needs, NotSupported
+from clingstone.run import Run
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
+
+RLRT_DRAWS = 10_000
+RLRT_DENSE = 1500  # groups up to which the spectrum of Z'MZ is taken densely
+CURVE_GROUPS = 200
+
+
+def level_name(key: str) -> str:
+    """What a sentence calls a level: "ward" for "clinic/ward"."""
+    return key.rsplit("/", 1)[-1]
+
+
+def levels(design: Design) -> tuple[About, ...]:
+    """One place for each group level."""
+    if design.group is None:
+        return ()
+    return tuple(About(level.key, f"rows of one {level_name(level.key)}") for level in design.group.levels)
+
+
+def _repeats(design: Design, about: About) -> Partition:
+    assert design.group is not None
+    part = design.group[about.key]
+    name = level_name(about.key)
+    if part.count < 2:
+        raise NotSupported(f"there is only one {name}", "At least 2 are needed, some with several rows.")
+    if part.sizes.max() < 2:
+        raise NotSupported(
+            f"every {name} has a single row, so likeness within a {name} cannot be seen",
+            f"Several rows of at least one {name} would be needed.",
+        )
+    return part
+
+
+@dataclass(frozen=True)
+class GroupF(Plain):
+    """Exact F test of group effects, its size the signed analysis-of-variance correlation.
+
+    F = (SSB/r)/(SSW/(n − rank[X, Z])) with r = rank Z'MZ is F distributed under normal errors for any
+    unbalance and any covariates. Given other structures it is a restricted likelihood ratio of two
+    REML fits, with a half-and-half chi-squared mixture on 0 and 1 degrees of freedom (Self & Liang
+    1987), conservative with few groups.
+    """
+
+    id: str = "group-f"
+    family: Family = "group"
+    null: str = "Rows of one group are no more alike than rows of different groups."
+    alternative: str = "Rows of one group are more alike than rows of different groups."
+    needs: Needs = field(default=Needs(frozenset({"group"}), {"groups": 2}))
+    source: str = "harville-fenech-1985"
+    primary: bool = True
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return levels(design)
+
+    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
+        """All other components that the data can carry at once."""
+        key, full = f"group:{about.key}", fits.full_node
+        return (full - {key},) if key in full and len(full) > 1 else ()
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        if given:
+            return _ratio_given(fits, f"group:{about.key}", given)
+        design, response = fits.design, fits.response
+        part = _repeats(design, about)
+        table = anova(response, part)
+        if table.df1 == 0:
+            raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
+        if table.df2 < 1:
+            raise NotSupported("the model and the groups together leave no degrees of freedom within groups")
+        lost = degenerate(response)
+        F = np.where(lost, np.nan, table.F)
+        steps = 46 if fits.depth == "exact" else 26
+        low, high = icc_interval(response, part, table, fits.run.settings.confidence, steps)
+        return Reading(
+            statistic=F,
+            statistic_name="F",
+            df=float(table.df1),
+            df2=float(table.df2),
+            p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
+            log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
+            p_method="exact F, one-sided",
+            estimate=np.where(lost, np.nan, table.icc),
+            estimate_name="intraclass correlation",
+            low=np.where(lost, np.nan, low),
+            high=np.where(lost, np.nan, high),
+            n_used=design.n,
+            caveats=_group_caveats(design, part),
+        )
+
+    def curve(self, fits: Fits, about: About) -> Curve | None:
+        return group_means(fits, about)
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        icc, words = column(reading.estimate), about.words[:1].upper() + about.words[1:]
+        size = f"{correlation(icc)}{between(column(reading.low), column(reading.high))}"
+        if reading.statistic_name != "F":
+            return (
+                f"{words} share {percent(icc)} % of what the model leaves over (restricted likelihood "
+                f"ratio {number(column(reading.statistic))}, "
+                f"{p_value(column(reading.p), column(reading.log_p))})."
+            )
+        tail = (
+            f"F = {number(column(reading.statistic))} on {degrees(reading.df, reading.df2)}, "
+            f"{p_value(column(reading.p), column(reading.log_p))}."
+        )
+        return f"{words} have an intraclass correlation (likeness beyond the model) of {size}; {tail}"
+
+
+def _group_caveats(design: Design, part: Partition) -> tuple[str, ...]:
+    out = []
+    if part.count < 5:
+        out.append(f"only {part.count} groups: the correlation is known very roughly")
+    if not design.known:
+        out.append("only residuals were given: the degrees of freedom ignore the model's other columns")
+    return tuple(out)
+
+
+def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:
+    """Restricted likelihood ratio for one variance, other components fitted in both models."""
+    wide, narrow = fits[given | {key}], fits[given]
+    statistic = np.maximum(2.0 * (wide.loglik - narrow.loglik), 0.0)
+    statistic = np.where(degenerate(fits.response), np.nan, statistic)
+    p, log_p = half_mixture(statistic)
+    return Reading(
+        statistic=statistic,
+        statistic_name="restricted likelihood ratio",
+        df=1.0,
+        p=p,
+        log_p=log_p,
+        p_method="half-and-half chi-squared mixture (approximate)",
+        estimate=np.asarray(wide.shares()[key]),
+        estimate_name="share of the residual variance",
+        n_used=fits.design.n,
+        caveats=("the mixture is conservative with few groups",),
+    )
+
+
+def half_mixture(statistic: Array) -> tuple[Array, Array]:
+    """p and log p of a likelihood ratio under ½χ²₀ + ½χ²₁ (Self & Liang 1987); NaN stays NaN."""
+    zero = statistic <= 0
+    p = np.where(zero, 1.0, 0.5 * special.chdtrc(1, statistic))
+    return p, np.where(zero, 0.0, stats.chi2.logsf(statistic, 1) - np.log(2.0))
+
+
+def group_means(fits: Fits, about: About) -> Curve | None:
+    """Mean residual of each group with its interval, sorted; at most 200 groups, evenly by rank.
+
+    1'e_g has variance σ²(n_g − ‖Q_g'1‖²); σ² is the mean square within groups.
+    """
+    design, response = fits.design, fits.response
+    part = _repeats(design, about)
+    table = anova(response, part)
+    if table.df2 < 1:
+        return None
+    sizes = design.sizes(part)
+    means = response.sums(part)[:, 0] / sizes
+    spread = np.maximum(sizes - np.sum(design.sums(part) ** 2, axis=1), 0.0)
+    t = float(special.stdtrit(table.df2, 0.5 + fits.run.settings.confidence / 2))
+    half = t * np.sqrt(float(table.within[0]) / table.df2 * spread) / sizes
+    order = np.argsort(means, kind="stable")
+    note = ""
+    if len(order) > CURVE_GROUPS:
+        order = order[np.unique(np.linspace(0, len(order) - 1, CURVE_GROUPS).round().astype(int))]
+        note = f"{CURVE_GROUPS} of {part.count} groups, evenly by rank"
+    name = level_name(about.key)
+    return Curve(
+        kind="group-means",
+        x=floats(np.arange(1, len(order) + 1)),
+        y=floats(means[order]),
+        low=floats((means - half)[order]),
+        high=floats((means + half)[order]),
+        size=floats(part.sizes[order]),
+        labels=tuple(part.labels[g] for g in order),
+        x_name=name,
+        y_name="mean residual",
+        note=note,
+    )
+
+
+@dataclass(frozen=True)
+class IntraclassCorrelation(Plain):
+    """REML intraclass correlation, tested by the restricted likelihood ratio with its exact null law.
+
+    The law is that of Crainiceanu & Ruppert (2004), from 10,000 draws in the spectrum of Z'MZ; above
+    1,500 groups the half-and-half mixture, which is then close. The interval is the exact one of the
+    variance ratio, cut at 0 because REML shares are not negative.
+    """
+
+    id: str = "intraclass-correlation"
+    family: Family = "group"
+    null: str = "The variance between groups is zero."
+    alternative: str = "The variance between groups is greater than zero."
+    needs: Needs = field(default=Needs(frozenset({"group"}), {"groups": 2}))
+    source: str = "crainiceanu-ruppert-2004"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return levels(design)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        design, key = fits.design, f"group:{about.key}"
+        part = _repeats(design, about)
+        table = anova(fits.response, part)
+        if table.df1 == 0 or table.df2 < 1:
+            raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
+        if key not in fits.components:
+            refusal = fits.refused.get(key)
+            reason, hint = (refusal.reason, refusal.hint) if refusal else ("no such component", "")
+            raise NotSupported(reason, hint)
+        model = fits[{key}]
+        lost = degenerate(fits.response)
+        statistic = np.maximum(2.0 * (model.loglik - fits[frozenset()].loglik), 0.0)
+        statistic = np.where(lost, np.nan, statistic)
+        if part.count <= RLRT_DENSE:
+            p = exceedance(statistic, restricted_ratio_draws(design, part, table.df1, fits.run))
+            method = f"exact law of the restricted likelihood ratio, {RLRT_DRAWS:,} draws"
+        else:
+            p = half_mixture(statistic)[0]
+            method = "half-and-half chi-squared mixture"
+        steps = 46 if fits.depth == "exact" else 26
+        low, high = icc_interval(fits.response, part, table, fits.run.settings.confidence, steps)
+        return Reading(
+            statistic=statistic,
+            statistic_name="restricted likelihood ratio",
+            df=1.0,
+            p=p,
+            p_method=method,
+            estimate=np.where(lost, np.nan, model.shares()[key]),
+            estimate_name="intraclass correlation (REML)",
+            low=np.where(lost, np.nan, np.maximum(low, 0.0)),
+            high=np.where(lost, np.nan, np.maximum(high, 0.0)),
+            n_used=design.n,
+            caveats=_group_caveats(design, part),
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        return (
+            f"By restricted maximum likelihood, {about.words} share {percent(column(reading.estimate))} %"
+            f"{between(column(reading.low), column(reading.high), 'percent')} of what the model leaves over "
+            f"(restricted likelihood ratio {number(column(reading.statistic))}, "
+            f"{p_value(column(reading.p))})."
+        )
+
+
+def restricted_ratio_draws(design: Design, part: Partition, rank: int, run: Run) -> Array:
+    """Draws of the restricted likelihood ratio without a group effect (Crainiceanu & Ruppert 2004).
+
+    sup_λ m ln(1 + N/D) − Σ ln(1+λμ), N = Σ λμ/(1+λμ) w², D = Σ w²/(1+λμ) + χ²_{m−r}. Equal and
+    neighbouring μ share one χ² draw: at most 40 bins. The λ grid starts lower with more groups.
+    """
+    t = design.sums(part)
+    spectrum = np.linalg.eigvalsh(np.diag(design.sizes(part)) - t @ t.T)[-rank:]
+    bins = np.array_split(spectrum, min(40, rank))
+    mu = np.array([b.mean() for b in bins])
+    df = np.array([len(b) for b in bins])
+    rng = run.child(f"restricted-lr:{part.key}")
+    w2 = rng.chisquare(df, size=(RLRT_DRAWS, len(df)))
+    rest = rng.chisquare(design.m - rank, size=RLRT_DRAWS)
+    scale = float(np.average(mu, weights=df))
+    grid = np.geomspace(0.02 / (scale * np.sqrt(rank)), 1e3 / scale, 60)
+    shrink = 1.0 / (1.0 + np.outer(mu, grid))  # (bins, grid)
+    D = w2 @ shrink + rest[:, None]
+    N = w2.sum(axis=1)[:, None] - w2 @ shrink
+    values = design.m * np.log1p(N / D) + (df[:, None] * np.log(shrink)).sum(axis=0)
+    return np.asarray(np.maximum(values.max(axis=1), 0.0))

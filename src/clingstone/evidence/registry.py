@@ -1,0 +1,40 @@
+"""Every test, in the order in which a reader meets them."""
+
+from __future__ import annotations
+
+from clingstone.evidence.finding import Test
+from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
+from clingstone.evidence.mean import FunctionalForm, Trend, TrendSurface
+from clingstone.evidence.nested import GroupF, IntraclassCorrelation
+from clingstone.evidence.portmanteau import BreuschGodfrey, LjungBox
+from clingstone.evidence.serial import DurbinWatson, IrregularSerial, PanelDurbinWatson
+from clingstone.evidence.spatial import Geary, Moran
+from clingstone.evidence.variogram import Variogram
+
+TESTS: tuple[Test, ...] = (
+    GroupF(),
+    IntraclassCorrelation(),
+    DurbinWatson(),
+    PanelDurbinWatson(),
+    IrregularSerial(),
+    BreuschGodfrey(),
+    LjungBox(),
+    Moran(),
+    Geary(),
+    Variogram(),
+    FunctionalForm(),
+    Trend(),
+    TrendSurface(),
+    Heteroscedasticity(),
+    Outliers(),
+    Normality(),
+    Duplicates(),
+)
+
+
+def by_id(test: str) -> Test:
+    """The registered test of an id. Raises KeyError."""
+    for found in TESTS:
+        if found.id == test:
+            return found
+    raise KeyError(test)

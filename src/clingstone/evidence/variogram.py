@@ -1,0 +1,176 @@
+"""Variogram of residuals over sites, with a simultaneous envelope of independent data."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from typing import TYPE_CHECKING
+
+import numpy as np
+import numpy.typing as npt
+from scipy import sparse
+from scipy.spatial.distance import pdist
+
+from clingstone.design.design import Design
+from clingstone.design.response import Response
+from clingstone.evidence.finding import About, Curve, Reading, column
+from clingstone.evidence.read import Plain, degenerate, exceedance, floats, normal_quantile, simulated
+from clingstone.evidence.spatial import at_sites, site_design, sites_of
+from clingstone.evidence.words import between, correlation, number, p_value
+from clingstone.maths.once import Array, once
+from clingstone.needs import Family, Needs, NotSupported
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
+
+ALL_PAIRS = 3000  # sites up to which every pair is used
+NEAR, RANDOM_PAIRS = 30, 200_000
+BINS, FEWEST_PAIRS = 12, 30
+DRAWS = 199
+
+
+@dataclass(frozen=True, eq=False)
+class Bins:
+    """Pairs of sites in distance bins.
+
+    distance (K,) mean distance, along the great circle for longitude and latitude. pairs (K,).
+    forms : K sparse (S, S) matrices G with e'Ge = mean over the pairs of a bin of
+    (e_i − e_j)²/(2 − h_ii − h_jj + 2h_ij): 1·σ² in every bin without dependence.
+    """
+
+    distance: Array
+    pairs: npt.NDArray[np.int64]
+    forms: tuple[sparse.csr_array, ...]
+
+    def read(self, response: Response) -> Array:
+        """(K, B) semivariance over s²."""
+        e = response.residual
+        with np.errstate(divide="ignore", invalid="ignore"):
+            values = np.stack([np.einsum("ij,ij->j", e, G @ e) for G in self.forms])
+            return np.asarray(values / np.where(degenerate(response), np.nan, response.s2))
+
+
+@once
+def pairs_of(design: Design, seed: int) -> Bins:
+    """Bins of about equal numbers of pairs, up to half the largest distance between sites."""
+    small = site_design(design)
+    sites = sites_of(small)
+    i, j, apart = _pairs(small, np.random.default_rng(seed))
+    keep = (apart <= sites.extent / 2) & (apart > 0)
+    i, j, apart = i[keep], j[keep], apart[keep]
+    order = np.argsort(apart, kind="stable")
+    count = max(1, min(BINS, len(order) // FEWEST_PAIRS))
+    h, Q, n = small.basis.leverage, small.Q, small.n
+    expected = 2 - h[i] - h[j] + 2 * np.einsum("ij,ij->i", Q[i], Q[j])
+    forms = []
+    bins = np.array_split(order, count)
+    for b in bins:
+        usable = b[expected[b] > 1e-8]
+        w = 1.0 / (expected[usable] * len(usable))
+        half = sparse.coo_array((w, (i[usable], j[usable])), shape=(n, n))
+        ends = np.bincount(i[usable], w, n) + np.bincount(j[usable], w, n)
+        forms.append(sparse.csr_array(sparse.diags_array(ends) - half - half.T))
+    distance = sites.along(np.array([apart[b].mean() for b in bins]))
+    return Bins(distance, np.array([len(b) for b in bins], dtype=np.int64), tuple(forms))
+
+
+def _pairs(
+    small: Design, rng: np.random.Generator
+) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64], Array]:
+    """Every pair of sites, or near pairs and random ones when there are many sites."""
+    sites = sites_of(small)
+    S, points = sites.count, sites.points
+    if S <= ALL_PAIRS:
+        i, j = np.triu_indices(S, 1)
+        return i.astype(np.int64), j.astype(np.int64), np.asarray(pdist(points))
+    _, near = sites.tree.query(points, k=min(NEAR, S - 1) + 1)
+    one = np.repeat(np.arange(S), near.shape[1])
+    two = near.ravel()
+    draw = rng.integers(0, S, size=(RANDOM_PAIRS, 2))
+    one, two = np.concatenate([one, draw[:, 0]]), np.concatenate([two, draw[:, 1]])
+    codes = np.unique((np.minimum(one, two).astype(np.int64) * S + np.maximum(one, two))[one != two])
+    i, j = codes // S, codes % S
+    return i, j, np.linalg.norm(points[i] - points[j], axis=1)
+
+
+@dataclass(frozen=True)
+class Variogram(Plain):
+    """Largest departure of the residual variogram from flat, against draws of Mz on the same pairs.
+
+    Each squared difference is divided by its expectation without dependence, so residual bias is
+    out. The statistic is the largest departure in standard deviations of the draws; p is exact for
+    normal errors. The size is 1 − semivariance in the first bin: the correlation of the closest sites.
+    """
+
+    id: str = "variogram"
+    family: Family = "spatial"
+    null: str = "Squared differences between sites do not depend on their distance."
+    alternative: str = "Squared differences between sites depend on their distance."
+    needs: Needs = field(default=Needs(frozenset({"spatial"}), {"sites": 10}))
+    source: str = "matheron-1963"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return (About("", "up to half the largest distance"),)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        bins, response, centre, spread, drawn = _prepared(fits)
+        value = bins.read(response)
+        first = 1.0 - value[0]
+        half = normal_quantile(fits) * float(spread[0])
+        distance = float(bins.distance[0])
+        unit = sites_of(fits.design).unit
+        return Reading(
+            statistic=_departure(value, centre, spread),
+            statistic_name="largest departure, in standard deviations",
+            p=exceedance(_departure(value, centre, spread), drawn),
+            p_method=f"exact by {DRAWS} draws",
+            estimate=np.clip(first, -1.0, 1.0),
+            estimate_name=f"correlation of sites {number(distance)}{' ' + unit if unit else ''} apart",
+            low=np.clip(first - half, -1.0, 1.0),
+            high=np.clip(first + half, -1.0, 1.0),
+            n_used=int(bins.pairs.sum()),
+        )
+
+    def curve(self, fits: Fits, about: About) -> Curve | None:
+        bins, response, centre, spread, drawn = _prepared(fits)
+        value = bins.read(response)[:, 0]
+        if np.isnan(value).any():
+            return None
+        reach = float(np.quantile(drawn, fits.run.settings.confidence))
+        return Curve(
+            kind="variogram",
+            x=floats(bins.distance),
+            y=floats(value),
+            low=floats(np.maximum(centre - reach * spread, 0.0)),
+            high=floats(centre + reach * spread),
+            size=floats(bins.pairs),
+            x_name="distance between sites",
+            y_name="semivariance (1 without dependence)",
+            unit=sites_of(fits.design).unit,
+            note=f"envelope: all points at once in {DRAWS} draws of independent residuals",
+        )
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        r = f"{correlation(column(reading.estimate))}{between(column(reading.low), column(reading.high))}"
+        name = reading.estimate_name.removeprefix("correlation of ")
+        return (
+            f"Residuals of {name} correlate {r}; the variogram departs from flat by "
+            f"{number(column(reading.statistic))} standard deviations at most ({p_value(column(reading.p))})."
+        )
+
+
+def _prepared(fits: Fits) -> tuple[Bins, Response, Array, Array, Array]:
+    """Bins, the site-level response, mean and sd of the draws per bin, and their largest departures."""
+    small = site_design(fits.design)
+    if small.m < 5:
+        raise NotSupported(f"{small.m} degrees of freedom between sites", "At least 5 would be needed.")
+    bins = pairs_of(fits.design, fits.run.settings.seed)
+    response = at_sites(fits.response)
+    null = bins.read(simulated(response, fits, "variogram", DRAWS))
+    centre, spread = null.mean(axis=1), null.std(axis=1, ddof=1)
+    return bins, response, centre, spread, _departure(null, centre, spread)
+
+
+def _departure(values: Array, centre: Array, spread: Array) -> Array:
+    """(B,) largest |γ − centre| / spread over the bins."""
+    return np.asarray(np.max(np.abs(values - centre[:, None]) / spread[:, None], axis=0))
