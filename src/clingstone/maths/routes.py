@@ -1,0 +1,348 @@
+"""Which way to the law of a ratio: by the structure of the form and the size of the problem.
+
+| form | what is left over | route |
+| any, or a core that small | up to DENSE rows or cells | eigenvalues of MSM |
+| paths, groups | any n | known eigenvectors of S |
+| long paths | any n, values of moderate depth | Chebyshev moments |
+| sparse | up to SPARSE rows | one factorization per node |
+| the rest | any n | a three-point spectrum with the same four traces: approximate |
+"""
+
+from __future__ import annotations
+
+from collections.abc import Sequence
+
+import numpy as np
+from scipy import linalg, sparse
+
+from clingstone.maths.basis import Basis
+from clingstone.maths.chains import Chains
+from clingstone.maths.forms import Form
+from clingstone.maths.once import Array, once
+from clingstone.maths.partition import Partition
+from clingstone.maths.spectra import Eigen, Factored, Modes, Polynomials, Spectrum, line
+from clingstone.maths.traces import projected, residual_df, sweep_out
+
+SMALL = 200  # always by eigenvalues
+DENSE = 1500
+SPARSE = 20_000
+LINKS = 30  # stored entries per row up to which a factorization stays sparse
+LONG = 2_000  # paths from which Chebyshev moments are cheaper than all eigenvectors
+TERMS = 192  # most Chebyshev moments
+PATHS = 200  # most paths handled one by one
+WHOLE = 1e-12  # 1 − squared cosine at which a direction of Q counts as an eigenvector
+
+WORDS = {
+    "eigen": "exact, from eigenvalues",
+    "modes": "exact, from the known spectrum of the form",
+    "polynomials": "exact, from the known spectrum of the form",
+    "factored": "exact, from sparse factorizations",
+    "traces": "approximate, from the first four moments",
+    "interpolated": "interpolated between exact values",
+    "constant": "the statistic cannot vary under this design",
+}
+
+
+def name(form: Form, swept: Partition | None) -> str:
+    """The route's name: "eigen", "modes", "factored" or "traces"."""
+    if form.order <= SMALL:
+        return "eigen"
+    if form.chains is not None and (swept is None or _unions(form.chains, swept)):
+        return "modes"
+    if form.part is not None and form.diagonal_core is not None and swept is None:
+        return "modes"
+    if form.order + (swept.count if swept is not None and form.part is not None else 0) <= DENSE:
+        return "eigen"
+    if swept is None and form.order <= SPARSE and form.core.nnz <= LINKS * form.order:
+        return "factored"
+    return "traces"
+
+
+@once
+def spectrum(basis: Basis, form: Form, swept: Partition | None) -> Spectrum:
+    """The spectrum of an exact route; kept with the basis. Raises ValueError for the route "traces"."""
+    way = name(form, swept)
+    if way == "eigen":
+        return _eigen(basis, form, swept)
+    if way == "modes":
+        if form.chains is None:
+            return _cell_modes(form, basis.Q)
+        Q = basis.Q if swept is None else sweep_out(basis, swept).Q
+        return _chain_modes(form.chains, Q, 0 if swept is None else swept.count)
+    if way == "factored":
+        return _factored(basis, form)
+    raise ValueError(f"no exact route for the form {form.key}")
+
+
+# ---- eigenvalues --------------------------------------------------------------------------
+
+
+def _coordinates(form: Form, U: Array) -> tuple[Array, int]:
+    """An orthonormal block in the coordinates of a form, and the dimensions left where S and U are zero.
+
+    For cells, U falls partly outside the span of Z̃; a square root of what is outside adds a few rows.
+    """
+    V = form.coordinates(U)
+    if form.part is None:
+        return V, 0
+    outside = form.n - form.order
+    value, vector = np.linalg.eigh(np.eye(U.shape[1]) - V.T @ V)
+    keep = value > WHOLE
+    extra = np.sqrt(value[keep])[:, None] * vector[:, keep].T
+    return np.vstack([V, extra[: max(outside, 0)]]), max(outside - int(keep.sum()), 0)
+
+
+def _eigen(basis: Basis, form: Form, swept: Partition | None) -> Eigen:
+    """All eigenvalues of MSM on range M, by one dense symmetric problem of the order of the core."""
+    U = basis.Q
+    if swept is not None:
+        rest = sweep_out(basis, swept)
+        dummies = swept.indicator.T.toarray() / np.sqrt(swept.sizes)
+        U = np.hstack([dummies, rest.Q])
+    V, zeros = _coordinates(form, U)
+    A = np.zeros((V.shape[0], V.shape[0]))
+    A[: form.order, : form.order] = form.core.toarray()
+    # M A M + κVV' moves the directions of V beyond the spectrum, where they are dropped.
+    kappa = 2.0 * max(abs(form.low), abs(form.high), 1e-300)
+    AV = A @ V
+    core = V.T @ AV
+    A -= V @ AV.T
+    A -= (AV - V @ (core + kappa * np.eye(V.shape[1]))) @ V.T
+    found = linalg.eigvalsh(0.5 * (A + A.T), check_finite=False, overwrite_a=True)
+    values: Array = np.asarray(found, dtype=float)[: len(found) - V.shape[1]]
+    if zeros:
+        return Eigen(np.append(values, 0.0), np.append(np.ones(len(values)), float(zeros)))
+    return Eigen(values, np.ones(len(values)))
+
+
+# ---- known eigenvectors -------------------------------------------------------------------
+
+
+def triangle(rows: Array) -> Array:
+    """R of rows = QR, for one block (k, p) or a stack of them."""
+    return np.asarray(np.linalg.qr(rows, mode="r"))
+
+
+def _compressed(rows: Array, p: int) -> Array:
+    """At most p rows with the same Gram."""
+    return rows if len(rows) <= p else triangle(rows)
+
+
+def _unions(chains: Chains, swept: Partition) -> bool:
+    """True if the indicators of the swept cells lie in the null space of a path Laplacian.
+
+    Each cell must be a union of whole paths; sweeping it then only removes that many zero eigenvalues.
+    """
+    if chains.kind != "differences":
+        return False
+    codes = chains.in_order(swept.codes)
+    return bool(np.all(codes == np.repeat(codes[chains.starts], chains.lengths)))
+
+
+def _chain_modes(chains: Chains, Q: Array, removed: int) -> Modes:
+    p = Q.shape[1]
+    values: list[Array] = []
+    counts: list[Array] = []
+    rows: list[Array] = []
+    row_values: list[Array] = []
+    zero_rows: list[Array] = []
+    zero_count = -float(removed)
+    for b, count, block in chains.transformed(Q):
+        if chains.kind == "differences":
+            zero_rows.append(block[0])
+            zero_count += count
+            b, block = b[1:], block[1:]
+        if count > p and len(b):
+            block = triangle(block) if p else block[:, :0]
+        values.append(b)
+        counts.append(np.full(len(b), float(count)))
+        rows.append(block.reshape(-1, p))
+        row_values.append(np.repeat(b, block.shape[1]))
+    if chains.kind == "differences":
+        kept = _compressed(np.vstack(zero_rows), p)
+        values.append(np.zeros(1))
+        counts.append(np.array([zero_count]))
+        rows.append(kept)
+        row_values.append(np.zeros(len(kept)))
+    return _deflated(values, counts, rows, row_values)
+
+
+def _cell_modes(form: Form, Q: Array) -> Modes:
+    diagonal = form.diagonal_core
+    assert diagonal is not None
+    p = Q.shape[1]
+    V = form.coordinates(Q)
+    distinct, place, count = np.unique(diagonal, return_inverse=True, return_counts=True)
+    order = np.argsort(place, kind="stable")
+    blocks = [_compressed(b, p) for b in np.split(V[order], np.cumsum(count)[:-1])]
+    outside, zeros = _outside(form, V)
+    values = [distinct, np.zeros(1)]
+    counts = [count.astype(float), np.array([float(zeros)])]
+    return _deflated(
+        values,
+        counts,
+        [*blocks, outside],
+        [*(np.full(len(b), v) for b, v in zip(blocks, distinct, strict=True)), np.zeros(len(outside))],
+    )
+
+
+def _outside(form: Form, V: Array) -> tuple[Array, int]:
+    """Rows of Q outside the span of the cells (a square root of I − V'V), and the dimension there."""
+    value, vector = np.linalg.eigh(np.eye(V.shape[1]) - V.T @ V)
+    keep = value > WHOLE
+    return np.sqrt(value[keep])[:, None] * vector[:, keep].T, form.n - form.order
+
+
+def _deflated(
+    values: Sequence[Array], counts: Sequence[Array], rows: Sequence[Array], row_values: Sequence[Array]
+) -> Modes:
+    """Modes, after directions of Q that are themselves eigenvectors at an end of the spectrum are removed.
+
+    The constant is one for every Laplacian; without this a value near the end would leave no room for
+    the contour, though no eigenvalue of MSM lies there.
+    """
+    b, c = np.concatenate(values), np.concatenate(counts)
+    F, f = np.vstack(rows), np.concatenate(row_values)
+    used = c > 0
+    b, c = b[used], c[used]
+    for _ in range(F.shape[1] + 1):
+        changed = False
+        for end in (b.min(), b.max()):
+            inside = f == end
+            _, size, right = np.linalg.svd(F[inside])
+            whole = np.flatnonzero(size**2 > 1.0 - WHOLE)
+            if len(whole) == 0:
+                continue
+            keep = np.delete(right, whole, axis=0).T  # the other directions of Q
+            F = F @ keep
+            c = np.where(b == end, c - len(whole), c)
+            changed = True
+        left = c > 0.5
+        if not changed or not left.any():
+            break
+        rows_left = np.isin(f, b[left])
+        b, c, F, f = b[left], c[left], F[rows_left], f[rows_left]
+    return Modes(b, c, F, f)
+
+
+# ---- long paths, sparse forms, four traces ------------------------------------------------
+
+
+def polynomials(basis: Basis, form: Form, swept: Partition | None, t: float) -> Polynomials | None:
+    """Chebyshev moments, as many as a value t needs; None where paths are short or t is too far out.
+
+    On the saddle r = x̄, the value on [−1, 1]; the nodes that matter lie within 10/√K'' of it.
+    """
+    chains = form.chains
+    if chains is None or swept is not None or chains.n < LONG or len(chains.lengths) > PATHS:
+        return None
+    low, high = chains.interval
+    half = 0.5 * (high - low)
+    x = min(abs((t - low) / half - 1.0), 0.999)
+    s = saddle(chains, t)
+    # K'' = ½n·Var of 2(S − t)/D under the limiting spectrum, 4·half²(1 − x²)... kept simple: its value at 0.
+    reach = 10.0 / np.sqrt(2.0 * chains.n * half**2 * (0.5 + x**2)) * (1.0 + x)
+    alpha, beta = line(chains, np.array([s + 1j * reach]), t)
+    r = float(np.abs(-beta / (alpha + np.sqrt(alpha - beta) * np.sqrt(alpha + beta)))[0])
+    r = max(r, x)
+    if r >= 0.99:
+        return None
+    need = int(np.ceil(np.log(1e-16 * (1.0 - r)) / np.log(max(r, 1e-3)))) + 1
+    top = 16 * int(np.ceil(need / 16))
+    if top > TERMS or chains.lengths.min() <= 2 * top:
+        return None
+    return Polynomials(chains, _moments(basis, form, top), form.n)
+
+
+def saddle(chains: Chains, t: float) -> float:
+    """The saddle point of K for a long path: r = x̄, so that s = v/(2·half·(1 − vr)), v = 2r/(1 + r²)."""
+    low, high = chains.interval
+    half = 0.5 * (high - low)
+    r = float(np.clip((t - low) / half - 1.0, -1.0 + 1e-9, 1.0 - 1e-9))
+    v = 2.0 * r / (1.0 + r**2)
+    return v / (2.0 * half * (1.0 - v * r))
+
+
+@once
+def _moments(basis: Basis, form: Form, top: int) -> Array:
+    assert form.chains is not None
+    return form.chains.moments(basis.Q, top)
+
+
+def _factored(basis: Basis, form: Form) -> Factored:
+    V, zeros = _coordinates(form, basis.Q)
+    extra = V.shape[0] - form.order
+    A = form.core if extra == 0 else sparse.block_diag([form.core, sparse.csr_array((extra, extra))])
+    low, high = sharp_bounds(form)
+    return Factored(sparse.csr_array(A), V, zeros, min(low, 0.0), max(high, 0.0))
+
+
+@once
+def sharp_bounds(form: Form) -> tuple[float, float]:
+    """Bounds of the spectrum of S from Lanczos, opened by 0.1 % of its length, inside the form's own."""
+    from scipy.sparse.linalg import eigsh
+
+    start = np.random.default_rng(0).standard_normal(form.order)
+    ends = eigsh(form.core, k=2, which="BE", v0=start, tol=1e-4, return_eigenvectors=False)
+    room = 1e-3 * float(ends.max() - ends.min())
+    return max(form.low, float(ends.min()) - room), min(form.high, float(ends.max()) + room)
+
+
+@once
+def surrogate(basis: Basis, form: Form, swept: Partition | None, upper: bool) -> Eigen:
+    """A three-point spectrum with the same τ₀ … τ₄, one point at the end of the spectrum on that side.
+
+    Gauss–Radau quadrature of the spectral measure (Golub 1973): its law lies in the attainable range,
+    is monotone, and has the first four moments of the true one.
+    """
+    m = float(residual_df(basis, swept))
+    tau = projected(basis, form, swept, 4)
+    return radau(np.array([m, *tau]), form.high if upper else form.low)
+
+
+def radau(tau: Array, end: float) -> Eigen:
+    """Three points with power sums τ₀ … τ₄, one of them ``end``; two or one where fewer suffice."""
+    m, mean = float(tau[0]), float(tau[1] / tau[0])
+    # Central moments of the spectral measure, in units of its standard deviation.
+    c2 = tau[2] / m - mean**2
+    if c2 <= 1e-14 * max(mean**2, end**2):
+        return Eigen(np.array([mean]), np.array([m]))
+    sd = np.sqrt(c2)
+    c3 = (tau[3] / m - 3 * mean * tau[2] / m + 2 * mean**3) / sd**3
+    c4 = (tau[4] / m - 4 * mean * tau[3] / m + 6 * mean**2 * tau[2] / m - 3 * mean**4) / sd**4
+    # Recurrence of the orthogonal polynomials: a₀ = 0, b₁² = 1, a₁ = c₃, b₂² = c₄ − c₃² − 1.
+    a1, b2 = c3, c4 - c3**2 - 1.0
+    if b2 <= 1e-12:
+        J = np.array([[0.0, 1.0], [1.0, a1]])
+    else:
+        x = (end - mean) / sd
+        p1, p2 = x, (x - a1) * x - 1.0
+        a2 = x - b2 * p1 / p2 if p2 != 0 else x
+        J = np.array([[0.0, 1.0, 0.0], [1.0, a1, np.sqrt(b2)], [0.0, np.sqrt(b2), a2]])
+    point, vector = np.linalg.eigh(J)
+    return Eigen(mean + sd * point, m * vector[0] ** 2)
+
+
+def extremes(basis: Basis, form: Form, swept: Partition | None) -> tuple[float, float]:
+    """The extreme eigenvalues of MSM on range M by Lanczos, to about 1e-9 of the spectrum's length.
+
+    Directions that M removes are moved to the middle of the spectrum, so that they are never an end.
+    """
+    from scipy.sparse.linalg import LinearOperator, eigsh
+
+    rest = None if swept is None else sweep_out(basis, swept)
+    Q = basis.Q if rest is None else rest.Q
+    middle = projected(basis, form, swept, 2)[0] / residual_df(basis, swept)
+
+    def left(v: Array) -> Array:
+        v = v - Q @ (Q.T @ v)
+        return v if rest is None else np.asarray(rest.sweep(v))
+
+    def apply(v: Array) -> Array:
+        kept = left(np.asarray(v, dtype=float).ravel())
+        return left(form.apply(kept) - middle * kept)
+
+    operator = LinearOperator((form.n, form.n), matvec=apply, dtype=float)
+    start = np.random.default_rng(0).standard_normal(form.n)
+    ends = eigsh(operator, k=2, which="BE", v0=start, tol=1e-9, return_eigenvectors=False)
+    return middle + float(ends.min()), middle + float(ends.max())
