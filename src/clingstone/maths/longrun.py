@@ -178,6 +178,26 @@ class RatioLaw:
         return float(np.exp(optimize.brentq(excess, low, high, xtol=1e-12)))
 
 
+def joint_law(G: Array, A: Array) -> tuple[float, float]:
+    """(η, scale): scale · (η−q+1)/(ηq) · Wald is referred to F(q, η−q+1).
+
+    The variance estimate is V_st = Σ_j f_sj f_tj with Cov(f_sj, f_tl) = G_st,jl, G (q, q, r, r), and the
+    contrasts have covariance A (q, q). η matches the moments of V to a Wishart, as for clusters
+    (Pustejovsky & Tipton 2018); the scale is the mean ratio of V's expectation to A. With independent
+    scores η = r and the scale is one, which is the test of Lazarus et al. (2018).
+    """
+    omega = np.einsum("stjj->st", G)
+    q = len(omega)
+    values, vectors = np.linalg.eigh((omega + omega.T) / 2)
+    if values[0] <= 1e-10 * values[-1]:
+        return np.nan, np.nan
+    T = (vectors / np.sqrt(values)) @ vectors.T
+    G = np.einsum("su,uvjl,vt->stjl", T, G, T)
+    same = np.einsum("ssjl,ttjl->", G, G)
+    cross = np.einsum("stjl,tsjl->", G, G)
+    return float(q * (q + 1) / (same + cross)), float(q / np.trace(T @ A @ T))
+
+
 def _positive_root(delta: Array, v2: Array) -> Array:
     """(B,) the root ω > 0 of 1 = Σ v²/(ω − δ), δ ≤ 0 (B, q+1): bisection in ln ω, then Newton."""
     high = np.log(np.full(len(delta), v2.sum()))

@@ -22,7 +22,7 @@ from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, mult
 from clingstone.remedies.words import gls_account
 
 if TYPE_CHECKING:
-    from clingstone.covariance.components import Algebra
+    from clingstone.covariance.algebras import Chosen
     from clingstone.covariance.fits import ErrorModel, Fits
 
 Kind = Literal["mixed-intercept", "ar1", "spatial-gls", "joint"]
@@ -130,7 +130,7 @@ class GlsReady:
 
     # ---- one column ----------------------------------------------------------------------
 
-    def _column(self, fits: Fits, model: ErrorModel, algebra: Algebra, y: Response, b: int) -> Column:
+    def _column(self, fits: Fits, model: ErrorModel, algebra: Chosen, y: Response, b: int) -> Column:
         def gram(theta: Array) -> Gram:
             return algebra.gram(theta, y)
 
@@ -179,7 +179,7 @@ class GlsReady:
     def _expected(
         self,
         fits: Fits,
-        algebra: Algebra,
+        algebra: Chosen,
         theta: Array,
         free: list[int],
         s2: float,
@@ -337,9 +337,7 @@ def _joint(columns: list[Column], L: Array) -> Joint:
     return F, float(q), df2, reference.f_tail(F, q, df2)
 
 
-def _most_likely(
-    gram: Callable[[Array], Gram], theta: Array, bound: Flags, algebra: Algebra, n: int
-) -> Array:
+def _most_likely(gram: Callable[[Array], Gram], theta: Array, bound: Flags, algebra: Chosen, n: int) -> Array:
     """θ of maximum likelihood, from the REML estimate; parameters at a bound stay there."""
     free = np.flatnonzero(~bound)
     if not len(free):

@@ -10,8 +10,8 @@ import numpy as np
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
-from clingstone.maths.longrun import Grid, RatioLaw
-from clingstone.maths.once import Array
+from clingstone.maths.longrun import Grid, RatioLaw, joint_law
+from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, memory
 from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand
@@ -62,7 +62,21 @@ class LongRunReady(LinearReady):
         q = len(columns)
         if self.lags is not None:
             return wald / q, float(q), np.inf, reference.f_tail(wald / q, q, np.inf)
-        return hotelling_joint(wald, q, self.nu)
+        if not self.laws:
+            return hotelling_joint(wald, q, self.nu)
+        eta, scale = self._joint_law(columns)
+        return hotelling_joint(scale * wald, q, eta)
+
+    @once
+    def _joint_law(self, columns: tuple[int, ...]) -> tuple[float, float]:
+        """η and scale under the working AR(1); Lazarus et al. (2018) take η = ν and a scale of one."""
+        a = self.design.Q @ self.W[:, list(columns)]
+        q, r = len(columns), int(self.grid.counts.sum())
+        memory(8.0 * self.design.n * q * r * 3, f"the joint law of {q} coefficients with {r} cosines")
+        F = (a[:, :, None] * self.grid.cosines()[:, None, :]).reshape(self.design.n, q * r)
+        F -= self.design.Q @ (self.design.Q.T @ F)
+        G = (F.T @ self.grid.correlate(F, self.rho)).reshape(q, r, q, r)
+        return joint_law(G.transpose(0, 2, 1, 3), a.T @ self.grid.correlate(a, self.rho))
 
     def account(self, fits: Fits) -> Account:
         items: list[tuple[str, str]] = [("series", f"{len(self.grid.lengths)}"), ("steps", f"{self.grid.N}")]

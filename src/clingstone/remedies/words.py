@@ -26,16 +26,17 @@ _COVARIANCE = {
 def gls_account(estimation: str, rule: str, components: tuple[Component, ...], model: ErrorModel) -> Account:
     """Estimator, covariance, factor, df rule and every error parameter of a GLS fit."""
     parts = " and ".join(_part(c) for c in components)
-    items = [(f"variance of {c.label}", f"{float(model.variances[c.key][0]):.6g}") for c in components]
-    items.append(("variance of row noise", f"{float(model.variances['row'][0]):.6g}"))
-    total = sum(float(v[0]) for v in model.variances.values())
-    for c in components:
-        if c.family == "group" and total > 0:
-            share = float(model.variances[c.key][0]) / total
-            items.append((f"share of {c.label} in the residual variance", f"{share:.3f}"))
-    items += [
-        (words, f"{float(model.shape[key][0]):.6g}") for key, words in _SHAPES.items() if key in model.shape
-    ]
+    variances = {key: float(v[0]) for key, v in model.variances.items()}
+    # An AR(1) process is the row noise itself: what it shares with its neighbours and the rest are one.
+    noise = "row noise" if "serial" not in variances else "the autoregressive errors"
+    shown = {c.label: variances[c.key] for c in components if c.key != "serial"}
+    shown[noise] = variances["row"] + variances.get("serial", 0.0)
+    total = sum(shown.values())
+    items = [(f"variance of {label}", f"{value:.6g}") for label, value in shown.items()]
+    levels = [c.label for c in components if c.family == "group"]
+    items += [(f"intraclass correlation of {name}", f"{shown[name] / total:.3f}") for name in levels]
+    known = [key for key in _SHAPES if key in model.shape]
+    items += [(_SHAPES[key], f"{float(model.shape[key][0]):.6g}") for key in known]
     if bool(model.at_bound.any()):
         named = [n for n, at in zip(model.names, model.at_bound[:, 0], strict=True) if at]
         items.append(("at the end of its range", ", ".join(named)))
