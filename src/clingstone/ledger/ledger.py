@@ -2,103 +2,93 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from clingstone.covariance.fits import Fits
+from clingstone.evidence.finding import Evidence, Test
+from clingstone.ledger import standing as judge
+from clingstone.ledger.consequence import Parts, inflation, parts, tipping
+from clingstone.ledger.detect import detectable
+from clingstone.ledger.entries import (
+    Detectable,
+    Inflation,
+    Ledger,
+    Parameter,
+    Share,
+    Standing,
+    Tipping,
+)
+from clingstone.ledger.region import Region, region
+from clingstone.ledger.sizes import parameters, shares
+from clingstone.remedies.remedy import rows
 
-from clingstone.evidence.finding import Verdict
-from clingstone.needs import Family
-
-
-@dataclass(frozen=True)
-class Standing:
-    """One structure judged: alone, given the others, and the verdict. The only judge of structures."""
-
-    structure: Family
-    key: str  # "group:clinic", "serial", "spatial"
-    label: str
-    verdict: Verdict
-    p_alone: float
-    p_given: float  # restricted likelihood ratio given all the others; NaN when there is no other
-    given: tuple[str, ...]
-    because: str
-
-
-@dataclass(frozen=True)
-class Share:
-    """Share of the residual variance, 0 … 1, with its interval. ``key`` "row" is row noise."""
-
-    structure: Family | None
-    key: str
-    label: str
-    share: float
-    low: float
-    high: float
-
-
-@dataclass(frozen=True)
-class Parameter:
-    """A dependence parameter that readers know: ICC, ρ per step, half-life, practical range."""
-
-    key: str  # "group:clinic"
-    name: str  # "intraclass correlation", "ρ", "half-life", "practical range", "standard deviation"
-    estimate: float
-    low: float
-    high: float
-    unit: str = ""
-    note: str = ""  # "at its bound", …
+__all__ = [
+    "Detectable",
+    "Inflation",
+    "Ledger",
+    "Parameter",
+    "Share",
+    "Standing",
+    "Tipping",
+    "focus_rows",
+    "weigh",
+]
 
 
-@dataclass(frozen=True)
-class Inflation:
-    """What one structure adds to the variance of an ordinary coefficient.
+def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None) -> Ledger:
+    """Judge every declared structure on the first column of y, and say what it does.
 
-    low, estimate, high : the structure's part of Var(β̂)/Var_ordinary(β̂), at the ends of its
-        parameter's interval; parts add up over structures (and "row") to the square of the total
-        factor. The row with ``key`` "total" holds standard-error factors instead.
+    Parameters
+    ----------
+    fits : error models of the user's y. evidence : what ``gather`` found.
+    tests : where the primary tests are looked up for detectable sizes; default all registered.
+
+    Returns
+    -------
+    Ledger
+        The standing of each structure comes from its own test and from the restricted likelihood
+        ratio given all the others; shares and parameters are those of the adequate model, the
+        inflation table that of the fit with every structure, so that what was left out is seen too.
     """
+    if tests is None:
+        from clingstone.evidence import TESTS
 
-    term: str
-    key: str
-    low: float
-    estimate: float
-    high: float
-
-
-@dataclass(frozen=True)
-class Tipping:
-    """The parameter value at which a focus interval would take in zero, or None."""
-
-    term: str
-    key: str
-    parameter: str
-    value: float | None
-    sentence: str
-
-
-@dataclass(frozen=True)
-class Detectable:
-    """The smallest parameter that the primary test would have found in 80 % of such data."""
-
-    key: str
-    parameter: str
-    value: float
-    power: float
-    sentence: str
+        tests = TESTS
+    confidence = fits.run.settings.confidence
+    full = region(fits, fits.full_node, confidence)
+    found = parts(fits, full)
+    focus = focus_rows(fits)
+    standing = judge.examine(fits, evidence, found, full, focus)
+    node, history = judge.adequate(fits, standing)
+    kept = full if node == fits.full_node else region(fits, node, confidence)
+    return Ledger(
+        model=tuple(key for key in fits.components if key in node),
+        standing=standing,
+        shares=shares(fits, kept, full),
+        parameters=parameters(fits, kept, full),
+        inflation=_table(fits, found, full),
+        tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
+        detectable=detectable(fits, standing, tests),
+        refused=tuple((key, refusal.reason) for key, refusal in fits.refused.items()),
+        history=history,
+        method=full.method,
+    )
 
 
-@dataclass(frozen=True)
-class Ledger:
-    """Structures, their sizes, and their consequence."""
+def focus_rows(fits: Fits) -> tuple[str, ...]:
+    """Coefficients of focus terms, then named contrasts: the intervals that matter to the user."""
+    design = fits.design
+    if not design.known:
+        return ()
+    names, _ = rows(design)
+    terms = tuple(design.names[j] for t in design.focus() for j in t.columns)
+    return (*terms, *(c for c in names[design.p :]))
 
-    model: tuple[str, ...]  # the adequate set of components
-    standing: tuple[Standing, ...]
-    shares: tuple[Share, ...]
-    parameters: tuple[Parameter, ...]
-    inflation: tuple[Inflation, ...]
-    tipping: tuple[Tipping, ...]
-    detectable: tuple[Detectable, ...]
-    refused: tuple[tuple[str, str], ...] = ()  # (key, reason) of structures not estimated
-    history: tuple[str, ...] = ()
 
-    def factor(self, term: str) -> Inflation | None:
-        """Standard-error factors of a coefficient: low, estimate, high."""
-        return next((i for i in self.inflation if i.term == term and i.key == "total"), None)
+def _table(fits: Fits, found: Parts, full: Region) -> tuple[Inflation, ...]:
+    return inflation(found, full) if fits.design.known else ()
+
+
+def _simple(fits: Fits) -> tuple[str, ...]:
+    """Components that have a tipping point in one parameter."""
+    return tuple(
+        k for k in fits.components if k in fits.full_node and (k == "serial" or k.startswith("group:"))
+    )

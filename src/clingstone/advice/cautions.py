@@ -1,0 +1,200 @@
+"""The second half of the rule table: what lowers the state, and what only warns."""
+
+from __future__ import annotations
+
+from clingstone.advice.expressions import fact
+from clingstone.advice.rule import ANY, GROUP, SERIAL, SPATIAL, Rule, Then
+
+CAVEATS = (
+    Rule(
+        "mean-in-doubt",
+        fact("mean in doubt"),
+        Then("caveat"),
+        "A {missing part of the mean} and a dependence between rows explain the same pattern here; these "
+        "data cannot tell which it is. The refit with the mean repaired stands beside the advised one.",
+        "yue-2002, hamed-2009, florax-de-graaff-2004",
+        "strong",
+    ),
+    Rule(
+        "mean-as-well",
+        fact("curve under dependence")
+        & ~fact("dependence goes with the mean")
+        & ~fact("mean in doubt")
+        & ANY,
+        Then("caveat"),
+        "A {missing part of the mean} seems to be missing from the model, and the dependence stays when "
+        "it is added: put it into the model as well.",
+        "mizon-1995, mcmillen-2003",
+        "strong",
+    ),
+    Rule(
+        "mean-alone",
+        fact("curve under dependence") & ~ANY,
+        Then("caution"),
+        "A {missing part of the mean} seems to be missing from the model: look at it before the intervals.",
+        "ramsey-1969, stone-koo-1985",
+        "strong",
+    ),
+    Rule(
+        "few-groups-caveat",
+        GROUP & (fact("groups") < 10),
+        Then("caveat"),
+        "{groups} groups are few; the interval rests on a small-sample approximation.",
+        "cameron-miller-2015",
+        "convention",
+    ),
+    Rule(
+        "few-effective-clusters",
+        GROUP & fact("focus at group level") & (fact("effective clusters") < 10) & (fact("groups") >= 10),
+        Then("caveat"),
+        "The {groups} groups are so unequal that they count as {effective clusters} for the focus term.",
+        "carter-schnepel-steigerwald-2017",
+        "strong",
+    ),
+    Rule(
+        "few-treated-groups",
+        GROUP
+        & fact("focus at group level")
+        & (fact("groups in the smaller arm") >= 3)
+        & (fact("groups in the smaller arm") < 6),
+        Then("caveat"),
+        "Only {groups in the smaller arm} groups carry {term of the smaller arm}; the interval leans on "
+        "equal variances in both arms.",
+        "mackinnon-webb-2017",
+        "strong",
+    ),
+    Rule(
+        "low-df",
+        fact("lowest df of the advised refit") < 4,
+        Then("caveat"),
+        "The advised interval has only {lowest df of the advised refit} degrees of freedom: read it as a "
+        "rough range.",
+        "tipton-2015, pustejovsky-tipton-2018",
+        "convention",
+    ),
+    Rule(
+        "one-group-dominates",
+        GROUP & (fact("largest share of one group") >= 0.25) & (fact("groups") >= 8),
+        Then("caution"),
+        "One group holds {largest share of one group} of the information on {term of the largest share}.",
+        "mackinnon-nielsen-webb-2023",
+        "convention",
+    ),
+    Rule(
+        "short-series",
+        SERIAL & ~GROUP & (fact("rows in the longest series") < 50) & (fact("series") < 20),
+        Then("caveat"),
+        "With {rows in the longest series} rows the correlation is estimated too low, and the interval is "
+        "corrected only in part.",
+        "park-mitchell-1980, mcknight-2000",
+        "strong",
+    ),
+    Rule(
+        "few-sites",
+        SPATIAL & (fact("sites") < 50),
+        Then("caveat"),
+        "With {sites} sites the range of the dependence is known only roughly.",
+        "webster-oliver-2007",
+        "convention",
+    ),
+    Rule(
+        "long-range",
+        SPATIAL & (fact("range over extent") >= 0.25) & (fact("range over extent") < 0.5),
+        Then("caveat"),
+        "The dependence reaches over {range over extent} of the map's width; few independent places remain.",
+        "muller-watson-2022, webster-oliver-2007",
+        "moderate",
+    ),
+    Rule(
+        "not-covered",
+        fact("plausible structure not covered"),
+        Then("caveat"),
+        "The advised refit does not cover {names not covered}, which could still matter.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "not-sized",
+        fact("declared but not sized"),
+        Then("caution"),
+        "These data are too few to size {names not sized}; a silent test says little there.",
+        "park-mitchell-1980, webster-oliver-2007",
+        "strong",
+    ),
+    Rule(
+        "at-its-bound",
+        fact("advised refit at its bound"),
+        Then("caution"),
+        "The advised model estimates its dependence at the edge of the possible range; this does not show "
+        "that the rows are independent.",
+        "self-liang-1987",
+        "strong",
+    ),
+    Rule(
+        "not-converged",
+        fact("advised refit did not converge"),
+        Then("caveat"),
+        "The search for the advised model's parameters did not settle.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "not-attributable",
+        fact("not attributable"),
+        Then("caution"),
+        "These data cannot say which of {names not attributable} makes the rows hang together; the advised "
+        "refit need not know.",
+        "jones-boadi-boateng-1991",
+        "strong",
+    ),
+    Rule(
+        "between-differs",
+        GROUP & fact("between differs from within"),
+        Then("caution"),
+        "Within groups and between groups {term that differs} goes with the response differently: the pooled "
+        "coefficient mixes two effects. Consider reporting both.",
+        "mundlak-1978, bell-jones-2015, bell-2019",
+        "strong",
+    ),
+    Rule(
+        "spatial-confounding",
+        SPATIAL & fact("coefficient moves"),
+        Then("caution"),
+        "The coefficient of {term that moves} moves by more than its standard error when space enters the "
+        "error: a sign of spatial confounding, not of a cleaned estimate.",
+        "hodges-reich-2010, paciorek-2010",
+        "strong",
+    ),
+    Rule(
+        "unequal-variances",
+        fact("unequal variances"),
+        Then("caution"),
+        "The residuals spread unequally; intervals that assume equal spread may be off.",
+        "white-1980, mackinnon-white-1985",
+        "strong",
+    ),
+    Rule(
+        "outlying-rows",
+        fact("outlying rows"),
+        Then("caution"),
+        "Single rows lie far from the rest and may carry the result.",
+        "cook-weisberg-1982",
+        "strong",
+    ),
+    Rule(
+        "all-groups-in-sample",
+        GROUP & fact("assigned or sampled by group"),
+        Then("caution"),
+        "If the table holds most of all the groups there are, the interval is on the wide side.",
+        "abadie-2023",
+        "moderate",
+    ),
+    Rule(
+        "chosen-after-looking",
+        ANY & ~fact("assigned or sampled by group"),
+        Then("caution"),
+        "The correction was chosen after looking at the residuals; a choice fixed beforehand outranks it.",
+        "leeb-potscher-2005",
+        "strong",
+    ),
+)

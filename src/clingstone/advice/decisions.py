@@ -1,0 +1,202 @@
+"""The first half of the rule table: states that come before any remedy, and which remedy is preferred."""
+
+from __future__ import annotations
+
+from clingstone.advice.expressions import fact
+from clingstone.advice.rule import ANY, GROUP, KNOWN, SERIAL, SPATIAL, Rule, Then
+
+# ---- states that come before any remedy --------------------------------------------------------
+
+STATES = (
+    Rule(
+        "residuals-alone",
+        ~KNOWN & ANY,
+        Then("state", "not correctable", needed="the data and the model formula, not residuals alone"),
+        "Something hangs together, but from residuals alone no interval can be recomputed.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "mean-first",
+        fact("curve under dependence") & fact("dependence goes with the mean"),
+        Then("state", "mean first"),
+        "A missing {missing part of the mean} explains what looked like dependence: with it in the model, "
+        "{dependence left}.",
+        "mizon-1995, mcmillen-2003, florax-de-graaff-2004",
+        "strong",
+    ),
+    Rule(
+        "nothing-to-cover",
+        ~ANY,
+        Then("state", "nothing found"),
+        "No structure was found, and none whose interval still leaves room to move a focus interval.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "two-treated-groups",
+        GROUP & fact("focus at group level") & (fact("groups in the smaller arm") < 3),
+        Then(
+            "state",
+            "not correctable",
+            needed="at least 3 and better 6 groups in each arm, or a randomisation test of the assignment",
+        ),
+        "Only {groups in the smaller arm} of {groups} groups carry {term of the smaller arm}: no standard "
+        "error can be trusted for it.",
+        "mackinnon-webb-2017, mackinnon-webb-2018",
+        "strong",
+    ),
+    Rule(
+        "too-few-groups",
+        GROUP & fact("focus at group level") & (fact("groups") < 5),
+        Then("state", "not correctable", needed="at least 5 groups, better 10 or more"),
+        "{groups} groups are too few to size the variation between groups, and a focus term varies only "
+        "between them.",
+        "leyrat-2018, mcneish-stapleton-2016",
+        "strong",
+    ),
+    Rule(
+        "series-too-short",
+        SERIAL & ~fact("serial estimable"),
+        Then("state", "not correctable", needed="one series of 20 times, or 8 series of 5"),
+        "The longest series has {rows in the longest series} rows: too short to size the dependence in time.",
+        "park-mitchell-1980, krone-2016",
+        "strong",
+    ),
+    Rule(
+        "sites-too-few",
+        SPATIAL & ~fact("spatial estimable"),
+        Then("state", "not correctable", needed="20 distinct sites, better 50"),
+        "{sites} distinct sites are too few to size a dependence that fades with distance.",
+        "webster-oliver-2007",
+        "moderate",
+    ),
+    Rule(
+        "range-too-long",
+        SPATIAL & fact("spatial present") & (fact("range over extent") >= 0.5),
+        Then(
+            "state",
+            "not correctable",
+            needed="sites over an area at least twice as wide as the range, or a predictor that varies "
+            "at shorter distances",
+        ),
+        "The dependence reaches {range over extent} of the map's width: the map holds hardly more than one "
+        "independent place.",
+        "muller-watson-2022, bester-conley-hansen-2011",
+        "strong",
+    ),
+)
+
+# Speaks when no refit covers what has to be covered; settle() names it, no fact does.
+NO_REMEDY = Rule(
+    "no-remedy-covers",
+    ANY & ~fact("some refit covers it"),
+    Then("state", "not correctable", needed="more groups, longer series or more sites, as the refusals say"),
+    "No correction that these data can carry covers {names to cover}.",
+    "own",
+    "strong",
+)
+
+# ---- which remedy, the first that holds and could be fitted ----------------------------------------
+
+PREFER = (
+    Rule(
+        "many-short-series",
+        GROUP
+        & SERIAL
+        & ~SPATIAL
+        & fact("series within groups")
+        & (fact("groups") >= 20)
+        & (fact("rows in the longest series") <= 20),
+        Then("prefer", "cluster-robust", at="group level"),
+        "{groups} groups with at most {rows in the longest series} times each: rows of a group may depend on "
+        "each other in any way, in time as well, and the robust covariance carries it.",
+        "hansen-2007, kezdi-2003, bertrand-2004",
+        "strong",
+    ),
+    Rule(
+        "several-structures",
+        (GROUP & SERIAL) | (GROUP & SPATIAL) | (SERIAL & SPATIAL),
+        Then("prefer", "joint"),
+        "More than one structure has to be covered, and one error model carries them together.",
+        "jones-boadi-boateng-1991, baltagi-li-1995",
+        "moderate",
+    ),
+    Rule(
+        "few-groups",
+        GROUP & ~SERIAL & ~SPATIAL & fact("focus at group level") & (fact("groups") < 40),
+        Then("prefer", "mixed-intercept", at="mixed level"),
+        "A focus term varies only between groups and {groups} groups are few: restricted likelihood with "
+        "small-sample degrees of freedom keeps its level there.",
+        "leyrat-2018, kenward-roger-1997, elff-2021",
+        "strong",
+    ),
+    Rule(
+        "many-groups",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & fact("focus at group level")
+        & (fact("groups") >= 40)
+        & (fact("effective clusters") >= 10),
+        Then("prefer", "cluster-robust", at="group level"),
+        "{groups} groups are enough for the robust covariance, which asks nothing of the dependence inside "
+        "a group.",
+        "imbens-kolesar-2016, pustejovsky-tipton-2018",
+        "strong",
+    ),
+    Rule(
+        "within-focus",
+        GROUP & ~SERIAL & ~SPATIAL & ~fact("focus at group level") & (fact("effective clusters") >= 10),
+        Then("prefer", "cluster-robust", at="group level"),
+        "The focus terms vary within groups, where their slopes may differ from group to group: the robust "
+        "covariance allows for that, a plain random intercept does not.",
+        "barr-2013, bell-2019, cameron-miller-2015",
+        "strong",
+    ),
+    Rule(
+        "group-otherwise",
+        GROUP & ~SERIAL & ~SPATIAL,
+        Then("prefer", "mixed-intercept", at="mixed level"),
+        "With {effective clusters} effective clusters the robust covariance rests on too little; the random "
+        "intercept borrows strength from its model.",
+        "carter-schnepel-steigerwald-2017, imbens-kolesar-2016",
+        "strong",
+    ),
+    Rule(
+        "series-as-clusters",
+        SERIAL & ~GROUP & ~SPATIAL & (fact("series") >= 20) & (fact("rows in the longest series") <= 20),
+        Then("prefer", "cluster-robust", at="series level"),
+        "{series} series of at most {rows in the longest series} times: each series may depend on itself in "
+        "any way.",
+        "hansen-2007, kezdi-2003, bertrand-2004",
+        "strong",
+    ),
+    Rule(
+        "long-regular-series",
+        SERIAL & ~GROUP & ~SPATIAL & (fact("rows in the longest series") >= 200) & fact("regular times"),
+        Then("prefer", "hac"),
+        "{rows in the longest series} equally spaced rows: the long-run variance can be estimated without a "
+        "model of the dependence.",
+        "lazarus-2018, kiefer-vogelsang-2005",
+        "strong",
+    ),
+    Rule(
+        "serial-model",
+        SERIAL & ~GROUP & ~SPATIAL,
+        Then("prefer", "ar1"),
+        "{rows in the longest series} rows in the longest series: with so few, a model of the dependence "
+        "does better than a long-run variance.",
+        "park-mitchell-1980, lazarus-2018",
+        "moderate",
+    ),
+    Rule(
+        "spatial-model",
+        SPATIAL & ~GROUP & ~SERIAL,
+        Then("prefer", "spatial-gls"),
+        "{sites} sites and a dependence that fades within {range over extent} of the map's width: its "
+        "covariance can be fitted.",
+        "dormann-2007, beale-2010",
+        "moderate",
+    ),
+)

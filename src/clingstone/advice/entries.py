@@ -1,0 +1,75 @@
+"""What an advice holds, and the scores that a rehearsal may bring. Plain numbers and words."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+from typing import Literal
+
+State = Literal["supported", "supported with caveat", "mean first", "not correctable", "nothing found"]
+REPAIRED = "repaired-mean"
+
+
+@dataclass(frozen=True)
+class Reason:
+    """One sentence of advice with the rule that gave it, the facts that it read, and its source."""
+
+    sentence: str
+    rule: str
+    facts: tuple[tuple[str, str], ...]
+    source: str
+    strength: str = ""
+
+
+@dataclass(frozen=True)
+class Choice:
+    """A remedy at a level: the id, and "" or a group level, series or sites."""
+
+    remedy: str
+    at: str = ""
+    because: str = ""
+
+
+@dataclass(frozen=True)
+class Advice:
+    """What to report and why; the last step of an examination."""
+
+    state: State
+    headline: str
+    structures: frozenset[str]  # families judged present
+    levels: tuple[str, ...]  # group levels, series or sites that the advised remedy works at
+    protected: frozenset[str]  # families covered though only plausible
+    remedy: str  # id; "" when none can be advised
+    at: str
+    mean_in_doubt: bool
+    because: tuple[Reason, ...]
+    cautions: tuple[Reason, ...]
+    alternatives: tuple[Choice, ...]
+    refused: tuple[tuple[str, str, str], ...]  # remedy, reason, what would be needed
+
+
+@dataclass(frozen=True)
+class Score:
+    """What a rehearsal found of one remedy: smallest coverage over the plausible set, its Monte-Carlo
+    standard error, and the mean width relative to the ordinary interval, over the focus terms."""
+
+    remedy: str
+    at: str
+    coverage: float
+    mcse: float
+    width: float
+
+
+@dataclass(frozen=True)
+class Scores:
+    """The table that a rehearsal fills and the chooser reads."""
+
+    rows: tuple[Score, ...]
+    confidence: float = 0.95
+
+    def adequate(self, remedy: str, at: str) -> bool | None:
+        """Coverage not below nominal − 2·MCSE − 0.01; None for a remedy that was not rehearsed."""
+        row = self.get(remedy, at)
+        return None if row is None else row.coverage >= self.confidence - 2 * row.mcse - 0.01
+
+    def get(self, remedy: str, at: str) -> Score | None:
+        return next((r for r in self.rows if (r.remedy, r.at) == (remedy, at)), None)

@@ -1,0 +1,210 @@
+"""Named facts about a design, its dependence and its mean, each with unit, value and sentence."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+from dataclasses import dataclass, replace
+
+import numpy as np
+
+from clingstone.advice.groups import group_facts
+from clingstone.advice.mean import Missing, missing_part
+from clingstone.advice.named import Fact, named, words, yes
+from clingstone.covariance.fits import Fits
+from clingstone.design.design import Design
+from clingstone.display import listed, percent
+from clingstone.evidence.finding import Evidence
+from clingstone.ledger.ledger import Ledger, Standing
+from clingstone.needs import Limits
+from clingstone.run import Settings
+
+FAMILIES = ("group", "serial", "spatial")
+
+
+@dataclass(frozen=True)
+class Facts(Mapping[str, Fact]):
+    """Facts by name, and what the sentences of an advice need besides.
+
+    A fact that is not known is left out. ``ledger`` is the one that the facts were read from;
+    ``missing`` the part of the mean that seems to be missing, if one does.
+    """
+
+    known: Mapping[str, Fact]
+    ledger: Ledger
+    focus: tuple[str, ...] = ()
+    missing: Missing | None = None
+    material: tuple[float, float] = (0.95, 1.10)
+
+    def __getitem__(self, name: str) -> Fact:
+        return self.known[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self.known)
+
+    def __len__(self) -> int:
+        return len(self.known)
+
+    def text(self, name: str) -> str:
+        """A fact as words say it; "not known" where it is not."""
+        return self.known[name].text if name in self.known else "not known"
+
+    def word(self, name: str) -> str:
+        """The value of a fact that is a word; "" where it is not known."""
+        return str(self.known[name].value) if name in self.known else ""
+
+    def says(self, name: str) -> bool:
+        """A yes-or-no fact; False where it is not known."""
+        return name in self.known and bool(np.all(np.asarray(self.known[name].value) == 1))
+
+    def plus(self, more: Mapping[str, Fact]) -> Facts:
+        """The same facts with further ones."""
+        return replace(self, known={**self.known, **more})
+
+
+def facts(fits: Fits, evidence: Evidence, ledger: Ledger, settings: Settings | None = None) -> Facts:
+    """Everything that the rules may ask about, on the first column of y.
+
+    settings : those of the run, unless others are given.
+    """
+    design = fits.design
+    settings = fits.run.settings if settings is None else settings
+    focus = tuple(design.names[j] for t in design.focus() for j in t.columns) if design.known else ()
+    missing = missing_part(fits, evidence, ledger) if design.known else None
+    found = [
+        *structure_facts(ledger),
+        *_design_facts(design, fits.run.limits),
+        *group_facts(design, fits, ledger),
+        *_spatial_facts(design, ledger),
+        *_consequence_facts(ledger, focus, settings.material),
+        *_evidence_facts(evidence),
+        *mean_facts(missing),
+    ]
+    return Facts({f.name: f for f in found}, ledger, focus, missing, settings.material)
+
+
+# ---- structures ---------------------------------------------------------------------------------
+
+
+def covered(standing: Standing) -> bool:
+    """Whether a structure has to be covered: present, plausible and material, or fixed by the design."""
+    return (
+        standing.verdict == "present"
+        or (standing.verdict == "unclear" and standing.matters)
+        or (standing.fixed and standing.verdict != "not applicable")
+    )
+
+
+def structure_facts(ledger: Ledger) -> list[Fact]:
+    """Per family: present, to cover; and what cannot be told apart."""
+    out = []
+    for family in FAMILIES:
+        mine = [s for s in ledger.standing if s.structure == family]
+        present = [s.label for s in mine if s.verdict == "present"]
+        cover = [s.label for s in mine if covered(s)]
+        out.append(yes(f"{family} present", bool(present), f"present: {listed(present) or 'nothing'}"))
+        out.append(yes(f"{family} to cover", bool(cover), f"to cover: {listed(cover) or 'nothing'}"))
+    tied = [s.label for s in ledger.standing if "cannot say which" in s.because]
+    out.append(yes("not attributable", len(tied) > 1, f"not told apart: {listed(tied) or 'nothing'}"))
+    out.append(words("names not attributable", listed(tied)))
+    unsized = [
+        s.label
+        for s in ledger.standing
+        if ledger.share(s.key) is None and s.verdict in ("unclear", "not detected") and not covered(s)
+    ]
+    out.append(yes("declared but not sized", bool(unsized), f"not sized: {listed(unsized) or 'nothing'}"))
+    out.append(words("names not sized", listed(unsized)))
+    shown = [s.label for s in ledger.standing if s.verdict == "present"]
+    out.append(words("names present", listed(shown)))
+    out.append(words("names to cover", listed([s.label for s in ledger.standing if covered(s)])))
+    return out
+
+
+def _design_facts(design: Design, limits: Limits) -> list[Fact]:
+    counts = design.counts
+    out = [
+        yes("columns of the model known", design.known, "the columns of the model are known"),
+        named("rows", design.n),
+    ]
+    series = design.serial
+    if series is not None:
+        longest, number = counts["rows in the longest series"], counts["series"]
+        enough = longest >= limits.serial_estimate_rows or (
+            counts["series of 5 rows or more"] >= limits.serial_estimate_series
+        )
+        out += [
+            named("rows in the longest series", longest),
+            named("series", number),
+            yes("serial estimable", enough, "the series are long or many enough for a correlation in time"),
+            yes("regular times", series.spacing != "irregular", f"spacing of the times: {series.spacing}"),
+            words("series level", series.part.key),
+        ]
+        if design.group is not None:
+            inside = any(level.relation(series.part) in ("same", "nests") for level in design.group.levels)
+            out.append(yes("series within groups", inside, "every series lies within one group"))
+    if design.spatial is not None:
+        sites = design.spatial.count
+        out += [
+            named("sites", sites),
+            yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
+        ]
+    return out
+
+
+def _spatial_facts(design: Design, ledger: Ledger) -> list[Fact]:
+    reach = ledger.parameter("spatial", "practical range")
+    standing = ledger.of("spatial")
+    if reach is None or standing is None or not covered(standing):
+        return []
+    if design.spatial is None or not design.spatial.extent > 0 or not np.isfinite(reach.estimate):
+        return []
+    ratio = reach.estimate / design.spatial.extent
+    return [named("range over extent", ratio, "of the map's width", percent(min(ratio, 9.99)))]
+
+
+def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[float, float]) -> list[Fact]:
+    out = []
+    largest = None
+    for term in focus:
+        total = ledger.factor(term)
+        if total is None:
+            continue
+        outside = total.low < material[0] or total.high > material[1]
+        out.append(
+            yes(
+                f"material: {term}",
+                outside,
+                f"standard error of {term}: {total.estimate:.2f} ({total.low:.2f} to {total.high:.2f}) times "
+                "the ordinary one",
+            )
+        )
+        if largest is None or abs(np.log(total.high)) > abs(np.log(largest.high)):
+            largest = total
+    if largest is not None:
+        out.append(named("largest factor", largest.high, "times the ordinary standard error"))
+    return out
+
+
+def _evidence_facts(evidence: Evidence) -> list[Fact]:
+    pairs = {"unequal variances": "heteroscedasticity", "outlying rows": "outliers"}
+    out = []
+    for name, test in pairs.items():
+        finding = evidence.get(test)
+        if finding is not None and finding.verdict != "not applicable":
+            out.append(yes(name, finding.verdict == "present", finding.sentence))
+    return out
+
+
+def mean_facts(missing: Missing | None) -> list[Fact]:
+    """What is known of a part of the mean that seems to be missing."""
+    if missing is None:
+        return [
+            yes("curve under dependence", False, "no missing part of the mean shows under the dependence"),
+            yes("mean in doubt", False, "the mean and the dependence do not compete"),
+        ]
+    return [
+        yes("curve under dependence", missing.shows, f"{missing.what} shows under the fitted dependence"),
+        yes("dependence goes with the mean", missing.explains, missing.left),
+        yes("mean in doubt", missing.doubt, missing.left),
+        words("missing part of the mean", missing.what),
+        words("dependence left", missing.left),
+    ]

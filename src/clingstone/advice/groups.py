@@ -1,0 +1,202 @@
+"""Facts about groups: counts, effective clusters, arms, the level at which to correct."""
+
+from __future__ import annotations
+
+import numpy as np
+from scipy import stats
+
+from clingstone.advice.named import Fact, named, words, yes
+from clingstone.covariance.fits import Fits
+from clingstone.design.derived import extend
+from clingstone.design.design import Design, Term, rows_of
+from clingstone.display import percent
+from clingstone.evidence.mean import f_test_given
+from clingstone.ledger.ledger import Ledger
+from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
+from clingstone.needs import NotSupported
+from clingstone.remedies.gls import TOGETHER
+
+DIFFERS = 0.05  # level of the between-against-within comparison
+
+
+def group_facts(design: Design, fits: Fits, ledger: Ledger) -> list[Fact]:
+    """Facts at the level at which a correction would be made; none without groups."""
+    if design.group is None:
+        return []
+    level = correction_level(design, ledger)
+    part = design.group[level]
+    out = [
+        words("group level", level),
+        words("mixed level", mixed_level(design, ledger)),
+        named("groups", part.count),
+        *_assigned(design),
+    ]
+    if not design.known:
+        return out
+    focus = design.focus()
+    at_level = [t for t in focus if _constant(design, t, part)]
+    out.append(
+        yes(
+            "focus at group level",
+            bool(at_level),
+            "focus terms that vary only between groups: " + (", ".join(t.name for t in at_level) or "none"),
+        )
+    )
+    icc = ledger.parameter(f"group:{level}", "intraclass correlation")
+    out += _effective(design, part, focus, icc.estimate if icc is not None else 0.0)
+    out += _arms(design, part, at_level)
+    out += _between(fits, part, focus, f"group:{level}")
+    return out
+
+
+def correction_level(design: Design, ledger: Ledger) -> str:
+    """The level to correct at: that of assignment or sampling, else the coarsest to be covered.
+
+    Where nothing is to be covered, the finest level that holds repeats. Coarser is safer for the
+    standard error and costs degrees of freedom (Cameron & Miller 2015).
+    """
+    groups = design.group
+    assert groups is not None
+    fixed = [level.key for level in groups.levels if level.key in design.assignment.levels]
+    if fixed:
+        return fixed[0]
+    found = wanted_levels(design, ledger)
+    if found:
+        return found[0]
+    repeats = [level.key for level in groups.levels if 1 < level.count < level.n]
+    return repeats[-1] if repeats else groups.finest.key
+
+
+def wanted_levels(design: Design, ledger: Ledger) -> list[str]:
+    """Levels to be covered, outermost first when nested."""
+    assert design.group is not None
+    keys = {
+        s.key.removeprefix("group:")
+        for s in ledger.standing
+        if s.verdict == "present" or (s.verdict == "unclear" and s.matters) or s.fixed
+    }
+    return [level.key for level in design.group.levels if level.key in keys]
+
+
+def mixed_level(design: Design, ledger: Ledger) -> str:
+    """Where a mixed model works: every level together when several are to be covered."""
+    wanted = wanted_levels(design, ledger)
+    return (
+        correction_level(design, ledger)
+        if len(wanted) < 2
+        else TOGETHER.join(level.key for level in _levels(design))
+    )
+
+
+def _levels(design: Design) -> tuple[Partition, ...]:
+    assert design.group is not None
+    return design.group.levels
+
+
+def _assigned(design: Design) -> list[Fact]:
+    levels = design.assignment.levels
+    pairs = [f"{term} assigned by {level}" for term, level in design.assignment.assigned.items()]
+    if design.assignment.sampled:
+        pairs.append(f"{design.assignment.sampled} sampled")
+    return [
+        yes(
+            "assigned or sampled by group",
+            bool(levels),
+            "design facts: " + (", ".join(pairs) or "none given"),
+        ),
+        words("assigned level", levels[0] if levels else ""),
+        words("design facts", " and ".join(pairs)),
+    ]
+
+
+def columns(design: Design, term: Term) -> Array:
+    """(n, q) design columns of a term on the user's scale."""
+    return rows_of(design, design.Q @ design.basis.R[:, list(term.columns)])
+
+
+def _constant(design: Design, term: Term, part: Partition) -> bool:
+    X = columns(design, term)
+    return bool(np.all(np.abs(X - X[part.first][part.codes]) <= 1e-9 * (np.abs(X).max() + 1e-300)))
+
+
+def effective_clusters(design: Design, part: Partition, weights: Array, icc: float) -> float:
+    """G* = G/(1 + Γ) of one contrast (Carter, Schnepel & Steigerwald 2017), at an intraclass correlation.
+
+    Γ is the squared coefficient of variation over groups of γ_g = (1−ρ)w'Q_g'Q_gw + ρ(w'Q_g'1)².
+    """
+    w = design.basis.contrast(weights)
+    inside = np.einsum("p,gpq,q->g", w, design.scores(part), w)
+    between = (design.sums(part) @ w) ** 2
+    gamma = (1 - icc) * inside + icc * between
+    mean = gamma.mean()
+    if not mean > 0:
+        return float("nan")
+    return float(part.count / (1 + np.mean((gamma - mean) ** 2) / mean**2))
+
+
+def _effective(design: Design, part: Partition, focus: tuple[Term, ...], icc: float) -> list[Fact]:
+    eye = np.eye(design.p)
+    found: list[tuple[float, str]] = []
+    heavy: list[tuple[float, str]] = []
+    for j in (j for t in focus for j in t.columns):
+        w = design.basis.contrast(eye[j])
+        found.append((effective_clusters(design, part, eye[j], icc), design.names[j]))
+        inside = np.einsum("p,gpq,q->g", w, design.scores(part), w)
+        heavy.append((float(inside.max() / inside.sum()), design.names[j]))
+    if not found:
+        return []
+    least, term = min(found)
+    most, name = max(heavy)
+    return [
+        named("effective clusters", least, f"for {term}"),
+        named("largest share of one group", most, f"of the information on {name}", percent(most)),
+        words("term of the largest share", name),
+    ]
+
+
+def _arms(design: Design, part: Partition, terms: list[Term]) -> list[Fact]:
+    """The smaller of the two sets of groups that a two-valued group-level column divides."""
+    least: tuple[int, str] | None = None
+    for term in terms:
+        X = columns(design, term)[part.first]
+        for column, j in zip(X.T, term.columns, strict=True):
+            values, sizes = np.unique(np.round(column, 9), return_counts=True)
+            if len(values) == 2 and (least is None or sizes.min() < least[0]):
+                least = (int(sizes.min()), design.names[j])
+    if least is None:
+        return []
+    return [
+        named("groups in the smaller arm", least[0], f"for {least[1]}"),
+        words("term of the smaller arm", least[1]),
+    ]
+
+
+def _between(fits: Fits, part: Partition, focus: tuple[Term, ...], key: str) -> list[Fact]:
+    """Do group means of a row-level focus predictor add to it, under the fitted intercepts?
+
+    Mundlak's comparison: the coefficient of the group means, by GLS at the variance fitted without
+    them, against t with the number of groups less the columns.
+    """
+    if key not in fits.components or fits.design.p >= part.count - 2:
+        return []
+    design = fits.design
+    least: tuple[float, str] | None = None
+    for term in focus:
+        if term.kind != "numeric" or len(term.columns) != 1 or _constant(design, term, part):
+            continue
+        x = columns(design, term)[:, 0]
+        try:
+            wider = extend(design, f"{term.name} between", part.means(x)[part.codes])
+            F, q, _ = f_test_given(fits, wider, frozenset({key}))
+        except NotSupported:
+            continue
+        p = float(stats.f.sf(F[0], q, part.count - wider.p))
+        if least is None or p < least[0]:
+            least = (p, term.name)
+    if least is None:
+        return []
+    return [
+        yes("between differs from within", least[0] < DIFFERS, f"{least[1]}: p = {least[0]:.2g}"),
+        words("term that differs", least[1]),
+    ]

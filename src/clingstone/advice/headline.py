@@ -1,0 +1,136 @@
+"""The headline: what hangs together, how strongly, and what it does to a focus interval."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from clingstone.advice.facts import Facts, covered
+from clingstone.covariance.components import SITE
+from clingstone.display import NBSP, listed, percent, percent_span, significant, times
+from clingstone.ledger.ledger import Ledger, Parameter, Standing
+from clingstone.remedies.remedy import Refit
+
+
+def dependence(ledger: Ledger, *, only_present: bool = False) -> str:
+    """One sentence per structure that is present or to be covered, largest share first."""
+    chosen = [s for s in ledger.standing if (s.verdict == "present" if only_present else covered(s))]
+    chosen.sort(key=lambda s: -_share(ledger, s))
+    return " ".join(_sentence(ledger, s) for s in chosen)
+
+
+def _share(ledger: Ledger, standing: Standing) -> float:
+    share = ledger.share(standing.key)
+    return share.share if share is not None else -1.0
+
+
+def _sentence(ledger: Ledger, s: Standing) -> str:
+    if s.key == "serial":
+        return _serial(ledger, s)
+    if s.key == "spatial":
+        return _spatial(ledger, s)
+    subject = "Rows of one place" if s.key == SITE else f"The rows of one {s.label}"
+    share = ledger.share(s.key)
+    if share is None:
+        return f"{subject} {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+    amount = f"{percent(share.share)} ({percent_span(share.low, share.high)})"
+    return f"{subject} {_verb(s)}: they share {amount} of what the model leaves over."
+
+
+def _serial(ledger: Ledger, s: Standing) -> str:
+    rho = ledger.parameter(s.key, "ρ")
+    if rho is None:
+        return f"Rows that follow each other in time {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+    half = ledger.parameter(s.key, "half-life")
+    reach = f", half of it gone after {_with_unit(half)}" if half is not None and half.estimate > 0 else ""
+    return f"Rows that follow each other in time {_verb(s)}: correlation {_figure(rho)} {rho.unit}{reach}."
+
+
+def _spatial(ledger: Ledger, s: Standing) -> str:
+    share, reach = ledger.share(s.key), ledger.parameter(s.key, "practical range")
+    if share is None:
+        return f"Near places {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+    amount = f"{percent(share.share)} ({percent_span(share.low, share.high)})"
+    out = "" if reach is None or not np.isfinite(reach.estimate) else f", out to about {_with_unit(reach)}"
+    return f"Near places {_verb(s)}: they share {amount} of what the model leaves over{out}."
+
+
+def _verb(s: Standing) -> str:
+    return "hang together" if s.verdict == "present" else "may hang together"
+
+
+def _figure(q: Parameter) -> str:
+    return f"{significant(q.estimate)} ({significant(q.low)} to {significant(q.high)})"
+
+
+def _with_unit(q: Parameter) -> str:
+    text = significant(q.estimate)
+    unit = q.unit if text in ("1", "1.0") or not q.unit or len(q.unit) <= 3 else f"{q.unit}s"
+    return f"{text}{NBSP}{unit}".strip()
+
+
+# ---- consequence -----------------------------------------------------------------------------
+
+
+def widths(facts: Facts, refits: tuple[Refit, ...], advised: Refit | None) -> list[tuple[str, float]]:
+    """How much wider each focus interval is under the advised refit than under the ordinary fit."""
+    ordinary = next((r for r in refits if r.remedy == "ordinary"), None)
+    if advised is None or ordinary is None or advised is ordinary:
+        return []
+    out = []
+    base = {row.term: row.high - row.low for row in ordinary.intervals}
+    for row in advised.intervals:
+        wide = row.high - row.low
+        if row.term in facts.focus and np.isfinite(wide) and base.get(row.term, 0.0) > 0:
+            out.append((row.term, wide / base[row.term]))
+    return out
+
+
+def consequence(found: list[tuple[str, float]], material: tuple[float, float]) -> str:
+    """What it does to the focus interval that moves most."""
+    if not found:
+        return ""
+    term, factor = max(found, key=lambda pair: abs(np.log(pair[1])))
+    if material[0] <= factor <= material[1]:
+        return f"It moves the intervals of {listed([t for t, _ in found][:3])} little." if found else ""
+    others = [t for t, f in found if t != term and not material[0] <= f <= material[1]]
+    more = f", and those of {listed(others[:2])} change too" if others else ""
+    return f"It matters for {term}: its interval should be {times(factor)}{more}."
+
+
+def nothing(ledger: Ledger) -> str:
+    """The headline when nothing was found, with what these data could have shown."""
+    could = [d for d in ledger.detectable if np.isfinite(d.value)]
+    if not ledger.standing:
+        return "No structure was declared, so no dependence between rows could be looked for."
+    words = [
+        f"{_article(d.parameter)} {d.parameter} of {significant(d.value)} or more ({_label(ledger, d.key)})"
+        for d in could
+    ]
+    end = f"; these data could have shown {listed(words, 'or')}" if words else ""
+    return f"No dependence was detected that could move a focus interval{end}."
+
+
+def _article(name: str) -> str:
+    return "an" if name[0] in "aeiou" else "a"
+
+
+def _label(ledger: Ledger, key: str) -> str:
+    found = ledger.of(key)
+    return found.label if found is not None else key
+
+
+def filled(text: str, facts: Facts) -> str:
+    """A rule's words with {fact names} replaced by what the facts say."""
+    out, rest = "", text
+    while "{" in rest:
+        head, tail = rest.split("{", 1)
+        name, rest = tail.split("}", 1)
+        out += head + facts.text(name)
+    return out + rest
+
+
+def read_by(text: str, names: tuple[str, ...], facts: Facts) -> tuple[tuple[str, str], ...]:
+    """(name, words) of the facts that a rule read, in its condition or in its words."""
+    inside = [part.split("}")[0] for part in text.split("{")[1:]]
+    wanted = dict.fromkeys((*names, *inside))
+    return tuple((name, facts.text(name)) for name in wanted if name in facts)

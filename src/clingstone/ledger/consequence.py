@@ -1,0 +1,201 @@
+"""What dependence does to the ordinary fit: parts of each variance, total factors, tipping points.
+
+Var(c'β̂) of ordinary least squares under V = Σ σ²ₖKₖ is Σ σ²ₖ w'Q'KₖQw with w = R⁻ᵀc, and what the
+ordinary fit believes it to be is E s²·‖w‖² with E s² = tr(MV)/m. Both are linear in V, so the parts
+of the structures add up.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass
+
+import numpy as np
+from scipy import stats
+
+from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.fits import Fits
+from clingstone.design.design import Design
+from clingstone.ledger.entries import Inflation, Tipping
+from clingstone.ledger.region import Region
+from clingstone.maths.once import Array
+from clingstone.remedies.remedy import rows
+
+NODES = 17  # values of a shape parameter at which Q'KQ is worked out; linear between them
+
+
+@dataclass(frozen=True, eq=False)
+class Parts:
+    """Parts of Var(β̂)/Var_ordinary(β̂) over the columns of a region.
+
+    terms (k,) : coefficients, then named contrasts. part : key → (k, P). mean : key → (P,) the
+    part of E s² per unit variance; variance : key → (P,) σ²ₖ.
+    """
+
+    terms: tuple[str, ...]
+    plain: Mapping[str, Array]  # key → (k, P), w'Q'KₖQw/‖w‖² for unit variance
+    mean: Mapping[str, Array]  # key → (P,), tr(MKₖ)/m
+    variance: Mapping[str, Array]  # key → (P,)
+
+    def expected(self, variance: Mapping[str, Array] | None = None) -> Array:
+        """E s², (P,)."""
+        v = self.variance if variance is None else variance
+        return np.asarray(sum(v[key] * self.mean[key] for key in v))
+
+    def part(self, key: str) -> Array:
+        """(k, P) the structure's part of the variance ratio."""
+        return np.asarray(self.variance[key] * self.plain[key] / self.expected())
+
+    def factor(self, variance: Mapping[str, Array] | None = None) -> Array:
+        """(k, P) standard-error factors, the root of all parts."""
+        v = self.variance if variance is None else variance
+        total = sum(v[key] * self.plain[key] for key in v)
+        return np.asarray(np.sqrt(total / self.expected(v)))
+
+    def due_to(self, key: str) -> Array:
+        """(k, P) factor with the structure over the factor if its variance were row noise."""
+        without = dict(self.variance)
+        without["row"] = without["row"] + without[key]
+        without[key] = np.zeros_like(without[key])
+        return np.asarray(self.factor() / self.factor(without))
+
+
+def parts(fits: Fits, region: Region) -> Parts:
+    """Parts of every coefficient and named contrast over a likelihood region."""
+    design, model = fits.design, region.model
+    names, weights = rows(design)
+    W = design.basis.contrast(weights)  # (p, k)
+    size = np.einsum("pk,pk->k", W, W)
+    plain: dict[str, Array] = {}
+    mean: dict[str, Array] = {}
+    algebra = fits.algebra(frozenset(model.node))
+    for key in model.variances:
+        spread, trace = _spreads(design, algebra, region, key)
+        plain[key] = np.einsum("pk,Bpq,qk->kB", W, spread, W) / size[:, None]
+        mean[key] = (trace - np.einsum("Bpp->B", spread)) / design.m
+    return Parts(names, plain, mean, model.variances)
+
+
+def trace_of(design: Design, key: str) -> float:
+    """tr K of one component of unit variance on the basis scale: n, or the total precision weight.
+
+    Weights scale the row noise alone; a serial process is the row noise itself.
+    """
+    if key in ("row", "serial") or design.root is None:
+        return float(design.n)
+    return float(np.sum(design.root**2))
+
+
+def _spreads(design: Design, algebra: Chosen, region: Region, key: str) -> tuple[Array, float]:
+    """(P, p, p) Q'KQ at every column of the region, or (1, p, p) where it does not move; and tr K."""
+    p, model = design.p, region.model
+    if key == "row":
+        return np.eye(p)[None], float(design.n)
+    trace = trace_of(design, key)
+    if p == 0:
+        return np.zeros((1, 0, 0)), trace
+    shape = _moving(model.shape, key)
+    if shape is None:
+        return algebra.spread(key, model.theta[:, 0])[None], trace
+    at = np.log(shape) if key == "spatial" else shape
+    if not np.any(np.isfinite(at)):
+        return np.eye(p)[None], trace  # of no variance anywhere: K is never used
+    at = np.where(np.isfinite(at), at, np.nanmin(at))
+    chosen = _nodes(at)
+    known = np.array([algebra.spread(key, model.theta[:, i]).ravel() for i in chosen])
+    out = np.empty((len(at), p * p))
+    for j in range(p * p):
+        out[:, j] = np.interp(at, at[chosen], known[:, j])
+    return out.reshape(-1, p, p), trace
+
+
+def _moving(shape: Mapping[str, Array], key: str) -> Array | None:
+    return next((np.asarray(v, dtype=float) for name, v in shape.items() if name.split(".")[0] == key), None)
+
+
+def _nodes(at: Array) -> list[int]:
+    """Columns whose shape values cover the range evenly; the ends and the estimate are among them."""
+    aims = np.linspace(at.min(), at.max(), NODES)
+    near = {int(np.argmin(np.abs(at - aim))) for aim in aims} | {0}
+    order = sorted(near, key=lambda i: at[i])
+    kept: list[int] = []
+    for i in order:
+        if not kept or at[i] > at[kept[-1]]:
+            kept.append(i)
+    return kept
+
+
+def inflation(found: Parts, region: Region) -> tuple[Inflation, ...]:
+    """The inflation table: per coefficient or contrast a row per structure, "row", and "total"."""
+    out: list[Inflation] = []
+    factor = found.factor()
+    pieces = {key: found.part(key) for key in found.variance}
+    for k, term in enumerate(found.terms):
+        for key, piece in pieces.items():
+            low, estimate, high = region.interval(piece[k])
+            out.append(Inflation(term, key, low, estimate, high))
+        low, estimate, high = region.interval(factor[k])
+        out.append(Inflation(term, "total", low, estimate, high))
+    return tuple(out)
+
+
+# ---- tipping points ------------------------------------------------------------------------
+
+
+def tipping(fits: Fits, keys: tuple[str, ...], focus: tuple[str, ...]) -> tuple[Tipping, ...]:
+    """For each focus row and each group level or serial structure: where the interval takes in zero.
+
+    The ordinary estimate is held, its variance is that of a single structure whose parameter runs
+    from 0 to 0.95, σ² is scaled to the observed e'e, and the t quantile keeps m degrees of freedom.
+    """
+    out: list[Tipping] = []
+    for key in keys:
+        s, mixed, mean = _scan(fits, key)
+        out += [_tip(fits, key, term, s, mixed, mean) for term in focus]
+    return tuple(out)
+
+
+def _scan(fits: Fits, key: str) -> tuple[Array, Array, Array]:
+    """s (P,), Q'((1−s)I + sK)Q (P, p, p), and tr(M·)/m of each; for a series s is ρ and K = K(ρ)."""
+    design, algebra = fits.design, fits.algebra(frozenset({key}))
+    if key == "serial":
+        bound = algebra.parameters[0]
+        theta = np.linspace(bound.low, bound.high, 401)[None]
+        rho = np.asarray(algebra.shape(theta)["serial.rho"], dtype=float)
+        order = np.argsort(rho)
+        order = order[(rho[order] > 0) & (rho[order] <= 0.95)]
+        grid = order[np.unique(np.linspace(0, len(order) - 1, 60).astype(int))]
+        s = np.r_[0.0, rho[grid]]
+        spread = np.array([np.eye(design.p), *(algebra.spread(key, theta[:, i]) for i in grid)])
+    else:
+        s = np.linspace(0.0, 0.95, 96)
+        spread = algebra.spread(key, fits[{key}].theta[:, 0])[None]
+    mixed = (1 - s)[:, None, None] * np.eye(design.p) + s[:, None, None] * spread
+    trace = (1 - s) * design.n + s * trace_of(design, key)
+    return s, mixed, (trace - np.einsum("Bpp->B", mixed)) / design.m
+
+
+def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -> Tipping:
+    design, component = fits.design, fits.components[key]
+    names, weights = rows(design)
+    w = design.basis.contrast(weights[names.index(term)])
+    t = float(stats.t.isf((1 - fits.run.settings.confidence) / 2, design.m))
+    sigma2 = float(fits.response.ss[0]) / (design.m * mean)
+    gap = abs(float(w @ fits.response.coef[:, 0])) - t * np.sqrt(
+        sigma2 * np.einsum("p,Bpq,q->B", w, mixed, w)
+    )
+    parameter = "ρ" if key == "serial" else "intraclass correlation"
+    if gap[0] <= 0:
+        sentence = f"The ordinary interval of {term} takes in zero without any dependence."
+        return Tipping(term, key, parameter, None, sentence)
+    crossed = np.flatnonzero(gap <= 0)
+    if not crossed.size:
+        sentence = (
+            f"No {parameter} up to 0.95 ({component.label}) would make the interval of {term} take in zero."
+        )
+        return Tipping(term, key, parameter, None, sentence)
+    i = int(crossed[0])
+    value = float(s[i - 1] + (s[i] - s[i - 1]) * gap[i - 1] / (gap[i - 1] - gap[i]))
+    article = "a" if key == "serial" else "an"
+    sentence = f"From {article} {parameter} of {value:.2g} on ({component.label}) the interval of {term} takes in zero."
+    return Tipping(term, key, parameter, value, sentence)

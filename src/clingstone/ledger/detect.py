@@ -1,0 +1,144 @@
+"""What these data could have shown: the smallest dependence that the primary test finds in 80 %."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+
+import numpy as np
+
+from clingstone.covariance.fits import Fits
+from clingstone.design.response import Response
+from clingstone.evidence.finding import About, Test
+from clingstone.ledger.entries import Detectable, Standing
+from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
+from clingstone.needs import NotSupported
+from clingstone.structure.serial import Series
+
+POWER = 0.80
+DRAWS = 200
+LEVEL = 0.05
+ROUNDS = 5
+NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial share"}
+
+Drawer = Callable[[float, np.random.Generator, int], Array]
+
+
+def detectable(fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ...]) -> tuple[Detectable, ...]:
+    """For every structure that was not found: its smallest detectable size, where its test is run."""
+    out = []
+    for one in standing:
+        if one.verdict in ("present", "not applicable"):
+            continue
+        test, about = _test_of(fits, one, tests)
+        drawer = _drawer(fits, one)
+        if test is None or about is None or drawer is None:
+            continue
+        value = smallest(fits, test, about, drawer, one.key)
+        out.append(_entry(one, value))
+    return tuple(out)
+
+
+def _entry(one: Standing, value: float) -> Detectable:
+    name = NAMES[one.structure]
+    found = f"of {value:.2g} or more in 80 % of such data" if np.isfinite(value) else "of no size up to 0.95"
+    article = "an" if name[0] in "aeiou" else "a"
+    return Detectable(
+        one.key, name, value, POWER, f"The test for {one.label} would have found {article} {name} {found}."
+    )
+
+
+def _test_of(fits: Fits, one: Standing, tests: tuple[Test, ...]) -> tuple[Test | None, About | None]:
+    for test in tests:
+        if test.family != one.structure or not test.primary:
+            continue
+        if test.needs.check(fits.design) is not None:
+            continue
+        abouts = test.abouts(fits.design)
+        level = one.key.removeprefix("group:")
+        chosen = [a for a in abouts if a.key == level] if one.structure == "group" else list(abouts[:1])
+        if chosen:
+            return test, chosen[0]
+    return None, None
+
+
+# ---- draws -----------------------------------------------------------------------------------
+
+
+def _drawer(fits: Fits, one: Standing) -> Drawer | None:
+    design = fits.design
+    if one.structure == "group":
+        part = design.partitions.get(one.key.removeprefix("group:"))
+        return None if part is None else _groups(part)
+    if one.structure == "serial":
+        return None if design.serial is None else _series(design.serial)
+    return _sites(fits)
+
+
+def _groups(part: Partition) -> Drawer:
+    def draw(share: float, rng: np.random.Generator, B: int) -> Array:
+        shared = rng.standard_normal((part.count, B))[part.codes]
+        return np.asarray(np.sqrt(share) * shared + np.sqrt(1 - share) * rng.standard_normal((part.n, B)))
+
+    return draw
+
+
+def _series(series: Series) -> Drawer:
+    starts = np.flatnonzero(np.isnan(series.steps))
+    place = np.arange(series.part.n) - starts[np.cumsum(np.isnan(series.steps)) - 1]
+    by_place = [np.flatnonzero(place == k) for k in range(int(place.max()) + 1)]
+
+    def draw(rho: float, rng: np.random.Generator, B: int) -> Array:
+        Y = rng.standard_normal((series.part.n, B))
+        for row in by_place[1:]:
+            r = rho ** series.steps[row][:, None]
+            Y[row] = r * Y[row - 1] + np.sqrt(1 - r**2) * Y[row]
+        return Y
+
+    return draw
+
+
+def _sites(fits: Fits) -> Drawer | None:
+    """Exponential field at the fitted range plus row noise; a tenth of the extent when it has none."""
+    sites = fits.design.spatial
+    if sites is None or sites.count > fits.run.limits.dense_sites:
+        return None
+    length = sites.extent / 10
+    if "spatial" in fits.full_node:
+        fitted = float(fits.full.shape["spatial.range"][0])
+        length = min(max(fitted, sites.extent / 20), sites.extent / 2) / 3
+    distance = np.linalg.norm(sites.points[:, None] - sites.points[None], axis=2)
+    root = np.linalg.cholesky(np.exp(-distance / length) + 1e-10 * np.eye(sites.count))
+
+    def draw(share: float, rng: np.random.Generator, B: int) -> Array:
+        field = (root @ rng.standard_normal((sites.count, B)))[sites.part.codes]
+        return np.asarray(np.sqrt(share) * field + np.sqrt(1 - share) * rng.standard_normal(field.shape))
+
+    return draw
+
+
+# ---- search ----------------------------------------------------------------------------------
+
+
+def power(fits: Fits, test: Test, about: About, drawer: Drawer, value: float, purpose: str) -> float:
+    """Share of draws in which the test finds a dependence of this size at the 5 % level."""
+    # The same random numbers at every value: the power curve is then smooth in the value.
+    rng = fits.run.child(f"detectable {purpose}")
+    again = Fits(Response.of(fits.design, drawer(value, rng, DRAWS)), fits.run)
+    p = np.broadcast_to(np.asarray(test.read(again, about, frozenset()).p, dtype=float), (DRAWS,))
+    return float(np.mean(p < LEVEL))
+
+
+def smallest(fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str) -> float:
+    """The size at which power reaches 80 %, by bisection and one linear step; NaN when none to 0.95 does."""
+    try:
+        low, high = (0.0, LEVEL), (0.95, power(fits, test, about, drawer, 0.95, purpose))
+        if high[1] < POWER:
+            return float("nan")
+        for _ in range(ROUNDS):
+            middle = (low[0] + high[0]) / 2
+            at = power(fits, test, about, drawer, middle, purpose)
+            low, high = ((middle, at), high) if at < POWER else (low, (middle, at))
+    except NotSupported:
+        return float("nan")
+    return low[0] + (high[0] - low[0]) * (POWER - low[1]) / (high[1] - low[1])

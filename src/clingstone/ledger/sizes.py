@@ -1,0 +1,107 @@
+"""How large each structure is: shares of the residual variance, and the parameters readers know."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from clingstone.covariance.fits import Fits
+from clingstone.ledger.entries import Parameter, Share
+from clingstone.ledger.region import Region
+from clingstone.maths.once import Array
+
+LEFT_OUT = "not kept in the model; the upper end is that of the fit with every structure"
+AT_ZERO = "estimated at zero, the edge of its range"
+
+
+def shares(fits: Fits, kept: Region, full: Region) -> tuple[Share, ...]:
+    """Shares in the adequate model, which add to 1; a structure left out is shown with its upper end."""
+    held = kept.model.shares()
+    every = full.model.shares()
+    out: list[Share] = []
+    for key, component in fits.components.items():
+        family, label = component.family, component.label
+        if key in held:
+            low, estimate, high = kept.interval(held[key])
+            note = AT_ZERO if estimate <= 1e-6 else ""
+            out.append(Share(family, key, label, estimate, low, high, note))
+        elif key in every:
+            high = full.interval(every[key])[2]
+            out.append(Share(family, key, label, 0.0, 0.0, high, LEFT_OUT))
+    low, estimate, high = kept.interval(held["row"])
+    return (*out, Share(None, "row", "single rows", estimate, low, high))
+
+
+def parameters(fits: Fits, kept: Region, full: Region) -> tuple[Parameter, ...]:
+    """ICC and standard deviation per group level, ρ and half-life, practical range."""
+    out: list[Parameter] = []
+    for key, component in fits.components.items():
+        at, note = (kept, "") if key in kept.model.variances else (full, LEFT_OUT)
+        if key not in at.model.variances:
+            continue
+        read = {"group": _group, "serial": _serial, "spatial": _spatial}.get(component.family)
+        if read is not None:
+            out += read(fits, at, key, note)
+        out.append(_deviation(at, key, note))
+    out.append(_deviation(kept, "row", ""))
+    return tuple(out)
+
+
+def _deviation(at: Region, key: str, note: str) -> Parameter:
+    low, estimate, high = at.interval(np.sqrt(at.model.variances[key]))
+    return Parameter(key, "standard deviation", estimate, low, high, "unit of the response", note)
+
+
+def total(at: Region) -> Array:
+    """(P,) residual variance of a row."""
+    return np.asarray(sum(at.model.variances.values()))
+
+
+def icc(fits: Fits, at: Region, key: str) -> Array:
+    """(P,) correlation of two rows of one group of a level, and so of every level that holds it."""
+    variance = at.model.variances
+    groups = fits.design.group
+    value = np.array(variance[key], dtype=float)
+    if groups is not None and groups.arrangement == "nested":
+        levels = [f"group:{level.key}" for level in groups.levels]
+        outer = levels[: levels.index(key)] if key in levels else []
+        value = value + sum((variance[o] for o in outer if o in variance), start=np.zeros_like(value))
+    return np.asarray(value / total(at))
+
+
+def _group(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
+    low, estimate, high = at.interval(icc(fits, at, key))
+    return [Parameter(key, "intraclass correlation", estimate, low, high, "", note or _edge(estimate))]
+
+
+def _serial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
+    series = fits.design.serial
+    rho = np.asarray(at.model.shape["serial.rho"], dtype=float)
+    low, estimate, high = at.interval(rho)
+    step = _step(series.step, series.unit) if series is not None else "step"
+    out = [Parameter(key, "ρ", estimate, low, high, f"per {step}", note or _edge(estimate))]
+    if estimate > 0 and series is not None:
+        ends = [float(_half_life(np.array(v))) * series.step for v in (low, estimate, high)]
+        out.append(Parameter(key, "half-life", ends[1], ends[0], ends[2], series.unit, note))
+    return out
+
+
+def _half_life(rho: Array) -> Array:
+    """Steps in which a correlation falls to one half; 0 for ρ ≤ 0."""
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.where(rho <= 0, 0.0, np.where(rho >= 1, np.inf, np.log(0.5) / np.log(rho)))
+
+
+def _step(step: float, unit: str) -> str:
+    unit = unit or "unit of time"
+    return unit if step == 1 else f"{step:g} {unit}s"
+
+
+def _spatial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
+    sites = fits.design.spatial
+    low, estimate, high = at.interval(at.model.shape["spatial.range"])
+    unit = sites.unit if sites is not None else ""
+    return [Parameter(key, "practical range", estimate, low, high, unit, note)]
+
+
+def _edge(estimate: float) -> str:
+    return AT_ZERO if abs(estimate) <= 1e-6 else ""

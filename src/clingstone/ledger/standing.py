@@ -1,0 +1,339 @@
+"""The only judge of structures: alone, given all the others, and what the two together say."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, replace
+
+import numpy as np
+from scipy import stats
+
+from clingstone.covariance.components import SITE
+from clingstone.covariance.fits import Fits
+from clingstone.evidence.finding import Evidence, Finding, Verdict
+from clingstone.ledger.consequence import Parts
+from clingstone.ledger.entries import Standing
+from clingstone.ledger.region import Region
+from clingstone.needs import Family, NotSupported
+
+LEVEL = 0.05  # of the tests, alone and given
+MASKED = 0.01  # a structure seen only when the others are fitted needs more than LEVEL
+UNITS = 30  # independent units from which a boundary mixture of χ² is used
+DRAWS = 199  # parametric bootstrap otherwise
+BIG_SITES = 600  # sites from which a spatial bootstrap costs too much
+
+
+@dataclass(frozen=True)
+class Seen:
+    """What is known of one component before the table is read."""
+
+    key: str
+    family: Family
+    label: str
+    p_alone: float
+    p_adjusted: float  # Holm over structures, where the test was primary
+    p_given: float
+    given: tuple[str, ...]
+    p_method: str
+    matters: bool
+    worst: float
+    worst_term: str
+
+    @property
+    def alone(self) -> bool | None:
+        """Seen by its own test; None when no test was made."""
+        return None if np.isnan(self.p_adjusted) else self.p_adjusted < LEVEL
+
+    @property
+    def held(self) -> bool | None:
+        """Seen when all the others are fitted; None when there is no other."""
+        return None if np.isnan(self.p_given) else self.p_given < LEVEL
+
+
+# ---- alone -----------------------------------------------------------------------------------
+
+
+def own_finding(evidence: Evidence, key: str, family: Family) -> Finding | None:
+    """The test by which a component is judged alone: the primary one, at its own level."""
+    found = [f for f in evidence.of(family) if not f.given and np.isfinite(f.p)]
+    if key == SITE:
+        found = []  # what rows of one place share has no test of its own
+    elif key.startswith("group:"):
+        level = key.removeprefix("group:")
+        found = [f for f in found if f.about == level and f.test != "group-endogeneity"]
+        found.sort(key=lambda f: (not f.primary, f.test != "group-f"))
+    else:
+        found = [f for f in found if f.primary]
+    return found[0] if found else None
+
+
+# ---- given all the others ----------------------------------------------------------------------
+
+
+def restricted_lr(fits: Fits, key: str) -> tuple[float, str]:
+    """p of the restricted likelihood ratio of one component given all the others, and how it was got.
+
+    ½χ²₀ + ½χ²₁ for a variance with 30 or more units (Self & Liang 1987; Stram & Lee 1994), χ²₁ for ρ,
+    which lies inside its range; otherwise, and always for a spatial range, which does not exist
+    under the null (Davies 1987), a parametric bootstrap from the fit without the component.
+    """
+    rest = fits.full_node - {key}
+    try:
+        without = fits[rest]
+    except NotSupported as error:
+        return float("nan"), f"not available: {error}"
+    statistic = max(0.0, 2 * float(fits.full.loglik[0] - without.loglik[0]))
+    if key == "serial":
+        return float(stats.chi2.sf(statistic, 1)), "χ² with 1 df"
+    if key.startswith("group:"):
+        part = fits.design.partitions.get(fits.components[key].part)
+        if part is not None and part.count >= UNITS:
+            return 0.5 * float(stats.chi2.sf(statistic, 1)) if statistic > 0 else 1.0, "½χ²₀ + ½χ²₁"
+    sites = fits.design.spatial
+    if sites is not None and sites.count > BIG_SITES and "spatial" in fits.full_node:
+        mixed = 0.5 * (stats.chi2.sf(statistic, 1) + stats.chi2.sf(statistic, 2))
+        return (float(mixed) if statistic > 0 else 1.0), "½χ²₁ + ½χ²₂, approximate (many sites)"
+    return _bootstrap(fits, key, rest, statistic)
+
+
+def _bootstrap(fits: Fits, key: str, rest: frozenset[str], statistic: float) -> tuple[float, str]:
+    again = fits.redraw(rest, DRAWS, f"restricted-lr {key}")
+    drawn = 2 * (again[fits.full_node].loglik - again[rest].loglik)
+    drawn = drawn[np.isfinite(drawn)]
+    # The fast fits of the redraws are interpolated: a tie is a tie up to that error.
+    p = (1 + int(np.sum(drawn >= statistic - 1e-6))) / (1 + drawn.size)
+    return p, f"parametric bootstrap, {drawn.size} draws"
+
+
+# ---- consequence ---------------------------------------------------------------------------------
+
+
+def consequence(
+    found: Parts, region: Region, key: str, focus: tuple[str, ...], material: tuple[float, float]
+) -> tuple[bool, float, str]:
+    """Could the structure matter: (outside the band?, the furthest factor, its row)."""
+    if key not in found.variance or not focus:
+        return False, float("nan"), ""
+    due = found.due_to(key)
+    worst, term = 1.0, ""
+    for k, name in enumerate(found.terms):
+        if name not in focus:
+            continue
+        low, _, high = region.interval(due[k])
+        for value in (low, high):
+            if abs(np.log(value)) > abs(np.log(worst)):
+                worst, term = value, name
+    return bool(worst < material[0] or worst > material[1]), worst, term
+
+
+# ---- reading the table -----------------------------------------------------------------------------
+
+
+def judge(seen: tuple[Seen, ...]) -> tuple[Standing, ...]:
+    """Read the table of alone × given all the others."""
+    return tuple(_judge(one, tuple(o for o in seen if o.key != one.key)) for one in seen)
+
+
+def _judge(one: Seen, others: tuple[Seen, ...]) -> Standing:
+    verdict, because = _read(one, others)
+    return Standing(
+        structure=one.family,
+        key=one.key,
+        label=one.label,
+        verdict=verdict,
+        p_alone=one.p_alone,
+        p_given=one.p_given,
+        given=one.given,
+        because=because,
+        p_method=one.p_method,
+        matters=one.matters,
+        worst=one.worst,
+        worst_term=one.worst_term,
+    )
+
+
+def _read(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
+    alone, held = one.alone, one.held
+    if alone is None and held is None:
+        return _quiet(one, "No test of its own was made")
+    if alone is None:
+        if held:
+            return "present", "It shows when the other structures are fitted; no test of its own was made."
+        return _quiet(one, "It does not show when the other structures are fitted")
+    if held is None:
+        return (
+            ("present", "Its own test shows it.") if alone else _quiet(one, "Its own test does not show it")
+        )
+    if alone and held:
+        return "present", "It shows by its own test and still when the other structures are fitted."
+    if alone:
+        return _lost(one, others)
+    if held:
+        if one.p_given * (1 + len(others)) < MASKED:
+            return "present", "Its own test misses it, but the joint fit shows it clearly: others masked it."
+        return "unclear", "Only the joint fit shows it; its own test does not."
+    return _quiet(one, "Neither its own test nor the joint fit shows it")
+
+
+def _lost(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
+    """Seen alone, gone when the others are fitted."""
+    takers = [o.label for o in others if o.held]
+    if takers:
+        names = _and(takers)
+        return _quiet(one, f"Its own test shows it, but its signal is explained by {names}")
+    rivals = [o.label for o in others if o.alone]
+    if rivals:
+        return (
+            "present",
+            f"It and {_and(rivals)} show alone and neither shows given the other: something hangs together, "
+            "and these data cannot say which. Use a remedy that covers both.",
+        )
+    return "present", "Its own test shows it; the joint fit has too little to tell it from the others."
+
+
+def _quiet(one: Seen, reason: str) -> tuple[Verdict, str]:
+    if one.matters:
+        return (
+            "unclear",
+            f"{reason}, but its interval reaches a standard error of {one.worst_term} {_times(one.worst)} "
+            "that without it.",
+        )
+    return "not detected", f"{reason}."
+
+
+def _times(factor: float) -> str:
+    return f"{factor:.2g} times" if np.isfinite(factor) else "many times"
+
+
+def _and(names: list[str]) -> str:
+    return names[0] if len(names) == 1 else ", ".join(names[:-1]) + " and " + names[-1]
+
+
+# ---- from findings and fits ------------------------------------------------------------------------
+
+
+def examine(
+    fits: Fits, evidence: Evidence, found: Parts | None, region: Region | None, focus: tuple[str, ...]
+) -> tuple[Standing, ...]:
+    """Standing of every component, and of every declared structure that could not be estimated."""
+    material = fits.run.settings.material
+    seen: list[Seen] = []
+    node = fits.full_node
+    for key, component in fits.components.items():
+        if key not in node:
+            continue
+        finding = own_finding(evidence, key, component.family)
+        p = finding.p if finding is not None else float("nan")
+        adjusted = p if finding is None or finding.p_adjusted is None else finding.p_adjusted
+        others = tuple(k for k in node if k != key)
+        p_given, method = restricted_lr(fits, key) if others else (float("nan"), "")
+        matters, worst, term = (
+            consequence(found, region, key, focus, material)
+            if found is not None and region is not None
+            else (False, float("nan"), "")
+        )
+        seen.append(
+            Seen(
+                key,
+                component.family,
+                component.label,
+                p,
+                adjusted,
+                p_given,
+                tuple(fits.components[k].label for k in fits.components if k in others),
+                method,
+                matters,
+                worst,
+                term,
+            )
+        )
+    levels = {f"group:{level}" for level in fits.design.assignment.levels}
+    judged = tuple(replace(s, fixed=s.key in levels) for s in judge(tuple(seen)))
+    return judged + _unfitted(fits, evidence, {s.key for s in judged})
+
+
+def _unfitted(fits: Fits, evidence: Evidence, done: set[str]) -> tuple[Standing, ...]:
+    """Declared structures without a fitted component: judged by their test alone."""
+    design = fits.design
+    declared: list[tuple[str, Family, str]] = []
+    if design.group is not None:
+        declared += [(f"group:{level.key}", "group", level.key) for level in design.group.levels]
+    if design.serial is not None:
+        declared.append(("serial", "serial", f"{design.serial.name} order"))
+    if design.spatial is not None:
+        declared.append(("spatial", "spatial", "place"))
+    fixed = {f"group:{level}" for level in design.assignment.levels}
+    out = []
+    for key, family, label in declared:
+        if key in done:
+            continue
+        finding = own_finding(evidence, key, family)
+        refusal = fits.refused.get(key)
+        reason = f" Its size is not estimated: {refusal.reason}." if refusal is not None else ""
+        if finding is None:
+            verdict: Verdict = "not applicable"
+            because = f"No test could be made.{reason}"
+        else:
+            p = finding.p if finding.p_adjusted is None else finding.p_adjusted
+            verdict = finding.verdict
+            because = ("Its own test shows it." if p < LEVEL else "Its own test does not show it.") + reason
+        out.append(
+            Standing(
+                family,
+                key,
+                label,
+                verdict,
+                finding.p if finding is not None else float("nan"),
+                float("nan"),
+                (),
+                because,
+                matters=_unsized_matters(finding),
+                fixed=key in fixed,
+            )
+        )
+    return tuple(out)
+
+
+def _unsized_matters(finding: Finding | None) -> bool:
+    """A structure without a size matters when its test shows it, or when its own interval says it could.
+
+    Only an intraclass correlation has an exact interval with few units; a silent test of a short
+    series or of few sites says little either way, and a caution says that.
+    """
+    if finding is None:
+        return False
+    p = finding.p if finding.p_adjusted is None else finding.p_adjusted
+    return p < LEVEL or (finding.structure == "group" and finding.verdict == "unclear")
+
+
+# ---- the adequate set ------------------------------------------------------------------------------
+
+
+def adequate(fits: Fits, standing: tuple[Standing, ...]) -> tuple[frozenset[str], tuple[str, ...]]:
+    """The full set without what is neither present, plausible nor fixed by the design; and the path."""
+    node = fits.full_node
+    history = [f"every structure: {_names(fits, node)}; 2ℓ_R = {2 * float(fits[node].loglik[0]):.2f}"]
+    idle = [
+        s
+        for s in standing
+        if s.key in node
+        and not s.fixed
+        and (s.verdict == "not detected" or (s.verdict == "unclear" and not s.matters))
+    ]
+    idle.sort(key=lambda s: -(s.p_given if np.isfinite(s.p_given) else s.p_alone))
+    for s in idle:
+        try:
+            smaller = fits[node - {s.key}]
+        except NotSupported as error:
+            history.append(f"{s.label} kept: the model without it cannot be fitted ({error})")
+            continue
+        drop = 2 * float(fits[node].loglik[0] - smaller.loglik[0])
+        node = node - {s.key}
+        history.append(
+            f"left out {s.label}: {s.verdict}, and it could not move a focus interval beyond the band "
+            f"({_times(s.worst)} at the most); 2ℓ_R falls by {max(drop, 0.0):.2f}"
+        )
+    return node, tuple(history)
+
+
+def _names(fits: Fits, node: frozenset[str]) -> str:
+    return ", ".join(c.label for key, c in fits.components.items() if key in node) or "none"
