@@ -359,8 +359,9 @@ def test_a_demo_shows_its_question_and_the_command_that_asks_it(verbs: Verbs, ru
     assert (status, err) == (0, "")
     demo = DEMOS[name]
     assert " ".join(out.split()).startswith(demo.question)
-    assert f"  {demo.command}\n" in out
-    run(demo.command.removeprefix("clingstone ") + " --out typed")
+    assert f"\n{demo.command}\n" in out
+    assert max(map(len, out.splitlines())) <= 80
+    run(demo.command.replace("\\\n", "").removeprefix("clingstone ") + " --out typed")
     (file, asked), (typed_file, typed) = verbs.calls
     assert file == demo.path
     assert typed_file == Path(f"{name}.csv")

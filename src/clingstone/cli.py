@@ -117,7 +117,7 @@ def demo(
     """Examine one of the demonstration data sets (an invented valley; see demo_data/README.md)."""
     chosen = find(name)
     if not (json or quiet):
-        typer.echo(f"{_wrapped(chosen.question)}\n\n  {chosen.command}\n")
+        typer.echo(f"{_wrapped(chosen.question)}\n\n{chosen.command}\n")
     _run(chosen.path, dict(chosen.arguments), out, json=json, overwrite=overwrite, quiet=quiet)
 
 

@@ -30,7 +30,9 @@ class Demo:
 
     @property
     def command(self) -> str:
-        return shlex.join(["clingstone", "examine", f"{self.name}.csv", *self.options])
+        """As one would type it, a line for each option."""
+        words = shlex.join(["clingstone", "examine", f"{self.name}.csv", *self.options])
+        return words.replace(" --", " \\\n    --")
 
 
 DEMOS: Mapping[str, Demo] = {
