@@ -18,8 +18,11 @@ def t_two_sided(t: Array, df: Array | float) -> Array:
     df = np.asarray(df, dtype=float)
     finite = np.where(np.isfinite(df) & (df > 0), df, 1.0)
     with np.errstate(invalid="ignore", over="ignore"):
-        # I_x(ν/2, ½) with x = ν/(ν+t²) is the two-sided tail itself, so nothing is subtracted from one.
-        p = special.betainc(finite / 2, 0.5, finite / (finite + t2))
+        # I_x(ν/2, ½) with x = ν/(ν+t²) is the two-sided tail itself, so nothing is subtracted from one;
+        # below t² = ν the complement in 1 − x = t²/(ν+t²) keeps the digits that x near one has lost.
+        far = special.betainc(finite / 2, 0.5, finite / (finite + t2))
+        near = special.betaincc(0.5, finite / 2, t2 / (finite + t2))
+        p = np.where(t2 < finite, near, far)
         p = np.where(np.isposinf(df), special.erfc(np.sqrt(t2 / 2)), p)
     return np.asarray(np.where(np.isnan(t2) | ~(df > 0), np.nan, p))
 
@@ -28,8 +31,10 @@ def t_quantile(alpha: float, df: Array | float) -> Array:
     """c with P(|T| > c) = alpha; df may be infinite; NaN where df is not positive."""
     df = np.asarray(df, dtype=float)
     finite = np.where(np.isfinite(df) & (df > 0), df, 1.0)
-    y = special.betainccinv(0.5, finite / 2, alpha)  # y = t²/(ν+t²)
-    c = np.sqrt(finite * y / (1 - y))
+    y = special.betainccinv(0.5, finite / 2, alpha)  # t²/(ν+t²)
+    x = special.betaincinv(finite / 2, 0.5, alpha)  # ν/(ν+t²)
+    with np.errstate(divide="ignore"):
+        c = np.sqrt(finite * np.where(y < 0.5, y / (1 - y), (1 - x) / x))
     c = np.where(np.isposinf(df), np.sqrt(2) * special.erfcinv(alpha), c)
     return np.asarray(np.where(df > 0, c, np.nan))
 
