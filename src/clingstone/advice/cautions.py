@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from clingstone.advice.expressions import fact
-from clingstone.advice.rule import ANY, GROUP, SERIAL, SPATIAL, Rule, Then
+from clingstone.advice.rule import ANY, GROUP, SERIAL, SHOWN, SPATIAL, Rule, Then
 
 CAVEATS = (
     Rule(
@@ -20,7 +20,7 @@ CAVEATS = (
         fact("curve under dependence")
         & ~fact("dependence goes with the mean")
         & ~fact("mean in doubt")
-        & ANY,
+        & SHOWN,
         Then("caveat"),
         "A {missing part of the mean} seems to be missing from the model, and the dependence stays when "
         "it is added: put it into the model as well.",
@@ -29,7 +29,7 @@ CAVEATS = (
     ),
     Rule(
         "mean-alone",
-        fact("curve under dependence") & ~ANY,
+        fact("curve under dependence") & ~SHOWN,
         Then("caution"),
         "A {missing part of the mean} seems to be missing from the model: look at it before the intervals.",
         "ramsey-1969, stone-koo-1985",
@@ -125,8 +125,8 @@ CAVEATS = (
         "at-its-bound",
         fact("advised refit at its bound"),
         Then("caution"),
-        "The advised model estimates its dependence at the edge of the possible range; this does not show "
-        "that the rows are independent.",
+        "The advised model estimates one of its variances or correlations at the edge of the possible range; "
+        "such an estimate is rough.",
         "self-liang-1987",
         "strong",
     ),

@@ -71,7 +71,7 @@ def settle(
         mean_in_doubt=facts.says("mean in doubt"),
         because=(*_design_reason(facts), *(_reason(r, facts) for r in because)),
         cautions=tuple(_reason(r, facts) for r in beside),
-        alternatives=_alternatives(shortlist, refits, advised),
+        alternatives=_alternatives(shortlist, refits, advised, need),
         refused=_refused(shortlist, refits, state_rule, facts),
     )
 
@@ -240,14 +240,18 @@ def _levels(facts: Facts, advised: Refit | None) -> tuple[str, ...]:
 
 
 def _alternatives(
-    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None
+    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None, need: frozenset[str]
 ) -> tuple[Choice, ...]:
-    made = {(r.remedy, r.at) for r in refits}
+    """Refits that cover what has to be covered; with nothing to cover, every correction by the design."""
+    covers = {(r.remedy, r.at): set(r.covers) for r in refits}
     best = (advised.remedy, advised.at) if advised is not None else None
     return tuple(
         c
         for c in shortlist.candidates
-        if (c.remedy, c.at) in made and (c.remedy, c.at) != best and c.remedy != "ordinary"
+        if (c.remedy, c.at) in covers
+        and (c.remedy, c.at) != best
+        and c.remedy != "ordinary"
+        and (c.remedy == REPAIRED or ((need or covers[c.remedy, c.at]) and need <= covers[c.remedy, c.at]))
     )
 
 

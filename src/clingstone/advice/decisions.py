@@ -3,14 +3,14 @@
 from __future__ import annotations
 
 from clingstone.advice.expressions import fact
-from clingstone.advice.rule import ANY, GROUP, KNOWN, SERIAL, SPATIAL, Rule, Then
+from clingstone.advice.rule import ANY, GROUP, KNOWN, SERIAL, SHOWN, SPATIAL, Rule, Then
 
 # ---- states that come before any remedy --------------------------------------------------------
 
 STATES = (
     Rule(
         "residuals-alone",
-        ~KNOWN & ANY,
+        ~KNOWN & SHOWN,
         Then("state", "not correctable", needed="the data and the model formula, not residuals alone"),
         "Something hangs together, but from residuals alone no interval can be recomputed.",
         "own",
@@ -27,7 +27,7 @@ STATES = (
     ),
     Rule(
         "nothing-to-cover",
-        ~ANY,
+        ~ANY | (~KNOWN & ~SHOWN),
         Then("state", "nothing found"),
         "No structure was found, and none whose interval still leaves room to move a focus interval.",
         "own",
@@ -54,6 +54,16 @@ STATES = (
         "between them.",
         "leyrat-2018, mcneish-stapleton-2016",
         "strong",
+    ),
+    Rule(
+        "groups-as-factor",
+        GROUP & ~fact("focus at group level") & (fact("groups") < 5),
+        Then(
+            "state", "not correctable", needed="the groups as a factor in the model, which then carries them"
+        ),
+        "{groups} groups are too few for any correction between them; as a factor in the model they need none.",
+        "gomes-2022, oberpriller-2021",
+        "moderate",
     ),
     Rule(
         "series-too-short",
@@ -106,12 +116,26 @@ PREFER = (
         & SERIAL
         & ~SPATIAL
         & fact("series within groups")
-        & (fact("groups") >= 20)
-        & (fact("rows in the longest series") <= 20),
+        & (fact("effective clusters") >= 10)
+        & (((fact("groups") >= 20) & (fact("rows in the longest series") <= 20)) | (fact("groups") >= 40)),
         Then("prefer", "cluster-robust", at="group level"),
         "{groups} groups with at most {rows in the longest series} times each: rows of a group may depend on "
         "each other in any way, in time as well, and the robust covariance carries it.",
         "hansen-2007, kezdi-2003, bertrand-2004",
+        "strong",
+    ),
+    Rule(
+        "within-focus-in-time",
+        GROUP
+        & SERIAL
+        & ~SPATIAL
+        & fact("series within groups")
+        & ~fact("focus at group level")
+        & (fact("effective clusters") >= 10),
+        Then("prefer", "cluster-robust", at="group level"),
+        "The focus terms vary within groups, where their slopes may differ from group to group and rows "
+        "follow each other in time: the robust covariance allows for both.",
+        "barr-2013, bell-2019, hansen-2007",
         "strong",
     ),
     Rule(

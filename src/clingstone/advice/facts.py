@@ -14,7 +14,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, percent
 from clingstone.evidence.finding import Evidence
-from clingstone.ledger.ledger import Ledger, Standing
+from clingstone.ledger.ledger import Ledger, Standing, focus_rows
 from clingstone.needs import Limits
 from clingstone.run import Settings
 
@@ -68,7 +68,7 @@ def facts(fits: Fits, evidence: Evidence, ledger: Ledger, settings: Settings | N
     """
     design = fits.design
     settings = fits.run.settings if settings is None else settings
-    focus = tuple(design.names[j] for t in design.focus() for j in t.columns) if design.known else ()
+    focus = focus_rows(fits)
     missing = missing_part(fits, evidence, ledger) if design.known else None
     found = [
         *structure_facts(ledger),

@@ -11,7 +11,7 @@ from clingstone.design.derived import extend
 from clingstone.design.design import Design, Term, rows_of
 from clingstone.display import percent
 from clingstone.evidence.mean import f_test_given
-from clingstone.ledger.ledger import Ledger
+from clingstone.ledger.ledger import Ledger, focus_terms
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
@@ -34,7 +34,7 @@ def group_facts(design: Design, fits: Fits, ledger: Ledger) -> list[Fact]:
     ]
     if not design.known:
         return out
-    focus = design.focus()
+    focus = focus_terms(design)
     at_level = [t for t in focus if _constant(design, t, part)]
     out.append(
         yes(
@@ -44,7 +44,7 @@ def group_facts(design: Design, fits: Fits, ledger: Ledger) -> list[Fact]:
         )
     )
     icc = ledger.parameter(f"group:{level}", "intraclass correlation")
-    out += _effective(design, part, focus, icc.estimate if icc is not None else 0.0)
+    out += _effective(design, part, tuple(at_level) or focus, icc.estimate if icc is not None else 0.0)
     out += _arms(design, part, at_level)
     out += _between(fits, part, focus, f"group:{level}")
     return out

@@ -7,8 +7,10 @@ import numpy as np
 from clingstone.advice.facts import Facts, covered
 from clingstone.covariance.components import SITE
 from clingstone.display import NBSP, listed, percent, percent_span, significant, times
-from clingstone.ledger.ledger import Ledger, Parameter, Standing
+from clingstone.ledger.ledger import Ledger, Parameter, Share, Standing
 from clingstone.remedies.remedy import Refit
+
+TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
 
 
 def dependence(ledger: Ledger, *, only_present: bool = False) -> str:
@@ -32,8 +34,7 @@ def _sentence(ledger: Ledger, s: Standing) -> str:
     share = ledger.share(s.key)
     if share is None:
         return f"{subject} {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
-    amount = f"{percent(share.share)} ({percent_span(share.low, share.high)})"
-    return f"{subject} {_verb(s)}: they share {amount} of what the model leaves over."
+    return f"{subject} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
 
 
 def _serial(ledger: Ledger, s: Standing) -> str:
@@ -49,9 +50,12 @@ def _spatial(ledger: Ledger, s: Standing) -> str:
     share, reach = ledger.share(s.key), ledger.parameter(s.key, "practical range")
     if share is None:
         return f"Near places {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
-    amount = f"{percent(share.share)} ({percent_span(share.low, share.high)})"
     out = "" if reach is None or not np.isfinite(reach.estimate) else f", out to about {_with_unit(reach)}"
-    return f"Near places {_verb(s)}: they share {amount} of what the model leaves over{out}."
+    return f"Near places {_verb(s)}: they share {_amount(share)} of what the model leaves over{out}."
+
+
+def _amount(share: Share) -> str:
+    return f"{percent(share.share)} ({percent_span(share.low, share.high)})"
 
 
 def _verb(s: Standing) -> str:
@@ -64,7 +68,7 @@ def _figure(q: Parameter) -> str:
 
 def _with_unit(q: Parameter) -> str:
     text = significant(q.estimate)
-    unit = q.unit if text in ("1", "1.0") or not q.unit or len(q.unit) <= 3 else f"{q.unit}s"
+    unit = f"{q.unit}s" if q.unit in TIMES and text not in ("1", "1.0") else q.unit
     return f"{text}{NBSP}{unit}".strip()
 
 

@@ -63,10 +63,10 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     """The most telling missing part of the mean, or None.
 
     A curve in a covariate must show under the fitted dependence. A trend or a surface, which has
-    next to no power there, is looked at when it shows in the ordinary fit and its structure has to
-    be covered; it counts only when it takes at least half of that structure away.
+    next to no power there, is looked at when it shows in the ordinary fit and its structure is
+    present; it counts only when it takes at least half of that structure away.
     """
-    needed = [s for s in ledger.standing if s.verdict == "present" or s.matters]
+    needed = [s for s in ledger.standing if s.verdict == "present"]
     curve = _curve(evidence)
     if curve is not None:
         found = _try(fits, curve, needed)
@@ -150,7 +150,7 @@ def _remains(fits: Fits, again: Fits, needed: list[Standing]) -> list[Remains]:
 
 def _left(left: list[Remains], finding: Finding) -> str:
     if not left:
-        return "no dependence had to be covered"
+        return "no dependence was found that it could explain"
     shares = listed(
         f"the share of {r.label} falls from {percent(r.before)} to {percent(r.after)}" for r in left
     )

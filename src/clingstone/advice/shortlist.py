@@ -55,6 +55,8 @@ def shortlist_for(facts: Facts, fits: Fits) -> Shortlist:
     for one in REMEDIES:
         if not one.needs.parts <= _declared(design):
             continue  # nothing to refuse: the structure was not declared
+        if one.id == "joint" and len(fits.components) + len(fits.refused) < 2:
+            continue  # one structure alone needs no joint model
         refusal = one.needs.check(design)
         if refusal is not None:
             refused.append((one.id, refusal.reason, refusal.hint))

@@ -197,5 +197,8 @@ def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -
     i = int(crossed[0])
     value = float(s[i - 1] + (s[i] - s[i - 1]) * gap[i - 1] / (gap[i - 1] - gap[i]))
     article = "a" if key == "serial" else "an"
-    sentence = f"From {article} {parameter} of {value:.2g} on ({component.label}) the interval of {term} takes in zero."
+    sentence = (
+        f"From {article} {parameter} of {value:.2g} on ({component.label}) the interval of {term} "
+        "takes in zero."
+    )
     return Tipping(term, key, parameter, value, sentence)

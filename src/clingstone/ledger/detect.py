@@ -28,7 +28,7 @@ def detectable(fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ..
     """For every structure that was not found: its smallest detectable size, where its test is run."""
     out = []
     for one in standing:
-        if one.verdict in ("present", "not applicable"):
+        if one.verdict in ("present", "not applicable") or one.p_alone < LEVEL:
             continue
         test, about = _test_of(fits, one, tests)
         drawer = _drawer(fits, one)

@@ -3,9 +3,10 @@
 from __future__ import annotations
 
 from clingstone.covariance.fits import Fits
+from clingstone.design.design import Design, Term
 from clingstone.evidence.finding import Evidence, Test
 from clingstone.ledger import standing as judge
-from clingstone.ledger.consequence import Parts, inflation, parts, tipping
+from clingstone.ledger.consequence import inflation, parts, tipping
 from clingstone.ledger.detect import detectable
 from clingstone.ledger.entries import (
     Detectable,
@@ -16,8 +17,9 @@ from clingstone.ledger.entries import (
     Standing,
     Tipping,
 )
-from clingstone.ledger.region import Region, region
+from clingstone.ledger.region import region
 from clingstone.ledger.sizes import parameters, shares
+from clingstone.needs import NotSupported
 from clingstone.remedies.remedy import rows
 
 __all__ = [
@@ -29,6 +31,7 @@ __all__ = [
     "Standing",
     "Tipping",
     "focus_rows",
+    "focus_terms",
     "weigh",
 ]
 
@@ -53,23 +56,43 @@ def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None)
 
         tests = TESTS
     confidence = fits.run.settings.confidence
-    full = region(fits, fits.full_node, confidence)
+    try:
+        full = region(fits, fits.full_node, confidence)
+    except NotSupported as error:
+        return _unfitted(fits, evidence, error)
     found = parts(fits, full)
     focus = focus_rows(fits)
     standing = judge.examine(fits, evidence, found, full, focus)
     node, history = judge.adequate(fits, standing)
     kept = full if node == fits.full_node else region(fits, node, confidence)
+    left_out = {**fits.refused, **fits.left_out}
     return Ledger(
         model=tuple(key for key in fits.components if key in node),
         standing=standing,
         shares=shares(fits, kept, full),
         parameters=parameters(fits, kept, full),
-        inflation=_table(fits, found, full),
+        inflation=inflation(found, full) if fits.design.known else (),
         tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
         detectable=detectable(fits, standing, tests),
-        refused=tuple((key, refusal.reason) for key, refusal in fits.refused.items()),
+        refused=tuple((key, refusal.reason) for key, refusal in left_out.items()),
         history=history,
         method=full.method,
+    )
+
+
+def _unfitted(fits: Fits, evidence: Evidence, error: NotSupported) -> Ledger:
+    """No error model can be fitted at all (a perfect fit): the tests alone are left to judge by."""
+    keys = fits.components or fits.refused
+    return Ledger(
+        model=(),
+        standing=judge.examine(fits, evidence, None, None, ()),
+        shares=(),
+        parameters=(),
+        inflation=(),
+        tipping=(),
+        detectable=(),
+        refused=tuple((key, str(error)) for key in keys),
+        history=(f"no error model was fitted: {error}",),
     )
 
 
@@ -79,12 +102,12 @@ def focus_rows(fits: Fits) -> tuple[str, ...]:
     if not design.known:
         return ()
     names, _ = rows(design)
-    terms = tuple(design.names[j] for t in design.focus() for j in t.columns)
-    return (*terms, *(c for c in names[design.p :]))
+    return (*(design.names[j] for t in focus_terms(design) for j in t.columns), *names[design.p :])
 
 
-def _table(fits: Fits, found: Parts, full: Region) -> tuple[Inflation, ...]:
-    return inflation(found, full) if fits.design.known else ()
+def focus_terms(design: Design) -> tuple[Term, ...]:
+    """Terms in focus; all but the constant when none is named; the constant when it is all there is."""
+    return design.focus() or tuple(t for t in design.terms if t.kind != "constant") or design.terms
 
 
 def _simple(fits: Fits) -> tuple[str, ...]:

@@ -179,7 +179,8 @@ def _lost(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
     takers = [o.label for o in others if o.held]
     if takers:
         names = _and(takers)
-        return _quiet(one, f"Its own test shows it, but its signal is explained by {names}")
+        verb = "may be" if one.matters else "is"
+        return _quiet(one, f"Its own test shows it, but its signal {verb} explained by {names}")
     rivals = [o.label for o in others if o.alone]
     if rivals:
         return (
@@ -194,7 +195,7 @@ def _quiet(one: Seen, reason: str) -> tuple[Verdict, str]:
     if one.matters:
         return (
             "unclear",
-            f"{reason}, but its interval reaches a standard error of {one.worst_term} {_times(one.worst)} "
+            f"{reason}; its interval reaches a standard error of {one.worst_term} {_times(one.worst)} "
             "that without it.",
         )
     return "not detected", f"{reason}."
@@ -217,7 +218,7 @@ def examine(
     """Standing of every component, and of every declared structure that could not be estimated."""
     material = fits.run.settings.material
     seen: list[Seen] = []
-    node = fits.full_node
+    node = fits.full_node if found is not None else frozenset()
     for key, component in fits.components.items():
         if key not in node:
             continue
@@ -231,6 +232,8 @@ def examine(
             if found is not None and region is not None
             else (False, float("nan"), "")
         )
+        if not fits.design.known:
+            matters = finding is not None and finding.verdict == "unclear"
         seen.append(
             Seen(
                 key,
@@ -254,11 +257,10 @@ def examine(
 def _unfitted(fits: Fits, evidence: Evidence, done: set[str]) -> tuple[Standing, ...]:
     """Declared structures without a fitted component: judged by their test alone."""
     design = fits.design
-    declared: list[tuple[str, Family, str]] = []
-    if design.group is not None:
-        declared += [(f"group:{level.key}", "group", level.key) for level in design.group.levels]
+    groups = design.group.levels if design.group is not None else ()
+    declared: list[tuple[str, Family, str]] = [(f"group:{g.key}", "group", g.key) for g in groups]
     if design.serial is not None:
-        declared.append(("serial", "serial", f"{design.serial.name} order"))
+        declared.append(("serial", "serial", design.serial.name))
     if design.spatial is not None:
         declared.append(("spatial", "spatial", "place"))
     fixed = {f"group:{level}" for level in design.assignment.levels}
@@ -267,7 +269,8 @@ def _unfitted(fits: Fits, evidence: Evidence, done: set[str]) -> tuple[Standing,
         if key in done:
             continue
         finding = own_finding(evidence, key, family)
-        refusal = fits.refused.get(key)
+        label = fits.components[key].label if key in fits.components else label
+        refusal = fits.refused.get(key) or fits.left_out.get(key)
         reason = f" Its size is not estimated: {refusal.reason}." if refusal is not None else ""
         if finding is None:
             verdict: Verdict = "not applicable"
