@@ -1,0 +1,145 @@
+"""References: from the keys that findings, refits and rules carry to BibTeX and plain text.
+
+The entries stand in ``sources.bib`` beside this file. A DOI is given there only where it was
+confirmed in an outside text.
+"""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Iterable, Mapping
+from dataclasses import dataclass
+from functools import cache
+from importlib.resources import files
+
+from clingstone.display import listed
+from clingstone.results import Reference, Results
+
+OWN = "own"  # the source of a rule that rests on this package's own reasoning; no reference
+
+_ENTRY = re.compile(r"@(\w+)\{([^,\s]+),\n(.*?)\n\}", re.S)
+_FIELD = re.compile(r"^\s*(\w+) = \{(.*)\},$", re.M)
+
+
+@dataclass(frozen=True)
+class Source:
+    """One entry of sources.bib."""
+
+    key: str
+    kind: str
+    fields: Mapping[str, str]
+    bibtex: str
+
+    @property
+    def text(self) -> str:
+        """The entry as one line of a reference list."""
+        get = {k: v.replace(r"\&", "&") for k, v in self.fields.items()}
+        venue = get.get("journal") or get.get("booktitle") or get.get("publisher", "")
+        volume = get.get("volume", "") + (f"({get['number']})" if "number" in get else "")
+        pages = get.get("pages", "").replace("--", "–")
+        where = ", ".join(part for part in (f"{venue} {volume}".strip(), pages) if part)
+        title = get["title"] + ("" if get["title"][-1] in "?!." else ".")
+        line = f"{authors(get['author'])} ({get['year']}). {title} {where}."
+        return f"{line} doi:{get['doi']}" if "doi" in get else line
+
+    @property
+    def cited(self) -> str:
+        """As a sentence cites it: "Kenward & Roger 1997"."""
+        names = [_family(n) for n in self.fields["author"].split(" and ")]
+        many = len(names) > 2 or "others" in names
+        return f"{f'{names[0]} et al.' if many else ' & '.join(names)} {self.fields['year']}"
+
+
+@cache
+def sources() -> Mapping[str, Source]:
+    """Every known source by its key."""
+    text = files("clingstone.writeup").joinpath("sources.bib").read_text(encoding="utf-8")
+    found = {}
+    for match in _ENTRY.finditer(text):
+        kind, key, body = match.groups()
+        found[key] = Source(key, kind, dict(_FIELD.findall(body)), match.group(0))
+    return found
+
+
+def source(key: str) -> Source:
+    """One source. Raises KeyError for a key that sources.bib does not hold."""
+    return sources()[key]
+
+
+def keys_in(text: str) -> tuple[str, ...]:
+    """Keys in a source field, in order: "bell-mccaffrey-2002, satterthwaite-1946"."""
+    return tuple(part.strip() for part in re.split(r"[,;]", text) if part.strip() and part.strip() != OWN)
+
+
+def used(results: Results) -> tuple[str, ...]:
+    """Keys of every finding with numbers, refit and reason, each once, in order of first use."""
+    fields: Iterable[str] = (
+        *(f.source for f in results.evidence if f.verdict != "not applicable"),
+        *(fit.account.source for fit in results.refits),
+        *(reason.source for reason in (*results.advice.because, *results.advice.cautions)),
+    )
+    return tuple(dict.fromkeys(key for text in fields for key in keys_in(text)))
+
+
+def references_of(results: Results) -> tuple[Reference, ...]:
+    """The references of an examination, sorted by key.
+
+    A source that is not in sources.bib is kept as the words in which it was given, so that a reader
+    still sees what a rule rests on.
+    """
+    out = []
+    for key in sorted(used(results)):
+        known = sources().get(key)
+        out.append(Reference(key, known.bibtex, known.text) if known else _as_given(key))
+    return tuple(out)
+
+
+def _as_given(words: str) -> Reference:
+    key = re.sub(r"[^a-z0-9]+", "-", words.lower()).strip("-")
+    return Reference(key, f"@misc{{{key},\n  note = {{{words}}},\n}}", words)
+
+
+def bibtex(results: Results) -> str:
+    """references.bib: the sources of an examination, and the software itself."""
+    entries = [r.bibtex for r in references_of(results)]
+    return "\n\n".join([*entries, software(results)]) + "\n"
+
+
+def software(results: Results) -> str:
+    """The entry that cites this software at its version."""
+    lines = (
+        "@software{clingstone,",
+        "  title = {clingstone: which rows of a regression hang together, and what to report},",
+        f"  version = {{{results.clingstone}}},",
+        "}",
+    )
+    return "\n".join(lines)
+
+
+def cite(text: str) -> str:
+    """A source field as words in brackets: "(Bell & McCaffrey 2002; Satterthwaite 1946)"; "" for none."""
+    known = sources()
+    words = [known[k].cited if k in known else k for k in keys_in(text)]
+    return f"({'; '.join(words)})" if words else ""
+
+
+def authors(field: str) -> str:
+    """ "Bell, Robert M. and McCaffrey, Daniel F." → "Bell, R. M. & McCaffrey, D. F."."""
+    names = [_initials(n) for n in field.split(" and ")]
+    if names[-1] == "others":
+        return f"{', '.join(names[:-1])} et al."
+    return listed(names, "&")
+
+
+def _initials(name: str) -> str:
+    family, comma, given = name.partition(", ")
+    if not comma:
+        return name
+    short = " ".join(
+        p if p == "Jr." else "-".join(h[0] + "." for h in p.split("-") if h) for p in given.split()
+    )
+    return f"{family}, {short}"
+
+
+def _family(name: str) -> str:
+    return name.partition(", ")[0]

@@ -1,0 +1,297 @@
+"""The two figures that answer: the interval ladder and the share bar. Both draw only what Results hold."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Sequence
+from dataclasses import dataclass
+from typing import TYPE_CHECKING, Literal
+
+from clingstone.display import Cell, Column, Table, number, percent, percent_span, span, times, wrapped
+from clingstone.ledger.ledger import Share
+from clingstone.results import Results
+from clingstone.writeup import tables
+from clingstone.writeup.look import LIGHT, mark
+from clingstone.writeup.plate import SMALL, TEXT, Plate, axes, blank, clip, few_ticks, say
+from clingstone.writeup.read import advised, decimals, focus_rows, level_percent, ordered, ordinary, row_of
+
+if TYPE_CHECKING:
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
+
+PANELS = 6  # focus rows drawn on the first screen; the rest stand in the tables
+PHONE = 480.0  # narrower than this, labels go above their rungs
+
+
+@dataclass(frozen=True)
+class Rung:
+    """One interval of the ladder, ready to be drawn."""
+
+    label: str
+    figures: str
+    estimate: float
+    low: float
+    high: float
+    kind: str  # "advised", "ordinary", "other"
+
+
+def ladder(results: Results) -> Plate | None:
+    """Per focus row, one rung per refit on one shared axis; None when nothing was fitted."""
+    names = [n for n in focus_rows(results) if _rungs(results, n)][:PANELS]
+    if not names:
+        return None
+    drawn = [(name, _rungs(results, name)) for name in names]
+    table = _ladder_table(results, drawn)
+    return Plate(
+        "intervals",
+        f"{level_percent(results)} intervals under each refit",
+        _ladder_alt(results, names),
+        table,
+        lambda width: _paint_ladder(drawn, width),
+    )
+
+
+def _rungs(results: Results, name: str) -> list[Rung]:
+    places = decimals(results, name)
+    best, base = advised(results), ordinary(results)
+    out = []
+    for fit in ordered(results):
+        row = row_of(fit, name)
+        if row is None:
+            continue
+        kind = "advised" if fit is best else "ordinary" if fit is base else "other"
+        figures = f"{number(row.estimate, places)}  ({span(row.low, row.high, places)})"
+        label = f"advised: {fit.name}" if kind == "advised" else fit.name
+        out.append(Rung(label, figures, row.estimate, row.low, row.high, kind))
+    return out
+
+
+def _ladder_table(results: Results, drawn: Sequence[tuple[str, list[Rung]]]) -> Table:
+    columns = (
+        Column("term", "row"),
+        Column("refit", "refit"),
+        Column("estimate", "estimate", "right"),
+        Column("low", "low", "right"),
+        Column("high", "high", "right"),
+    )
+    rows = [
+        [
+            Cell(name, name),
+            Cell(r.label, r.label),
+            *(Cell(number(v, decimals(results, name)), v) for v in (r.estimate, r.low, r.high)),
+        ]
+        for name, rungs in drawn
+        for r in rungs
+    ]
+    return Table.of("Intervals as drawn", columns, rows)
+
+
+def _ladder_alt(results: Results, names: Sequence[str]) -> str:
+    words = []
+    for name in names:
+        best, base = row_of(advised(results), name), row_of(ordinary(results), name)
+        places = decimals(results, name)
+        if best is not None and base is not None and best is not base:
+            ratio = times(tables.wider(results, name))
+            words.append(
+                f"{name}: the advised interval runs from {span(best.low, best.high, places)}, the ordinary "
+                f"one from {span(base.low, base.high, places)}; the advised one is {ratio}."
+            )
+        else:
+            row = best or base
+            if row is not None:
+                words.append(f"{name}: the interval runs from {span(row.low, row.high, places)}.")
+    return " ".join(words)
+
+
+def _paint_ladder(drawn: Sequence[tuple[str, list[Rung]]], width: float) -> Figure:
+    plan = _plan([r for _, rungs in drawn for r in rungs], width)
+    head, foot = 32.0, 36.0
+    figure = blank(width, sum(head + plan.rung * len(rungs) + foot for _, rungs in drawn))
+    top = 0.0
+    for name, rungs in drawn:
+        say(figure, 0, top + 14, clip(name, width - 10, 13), fontsize=13, fontweight="bold")
+        _panel(figure, rungs, top + head, plan)
+        top += head + plan.rung * len(rungs) + foot
+    return figure
+
+
+@dataclass(frozen=True)
+class Plan:
+    """Where things stand in a ladder, in pixels; on a phone words stand above their rung."""
+
+    width: float
+    phone: bool
+    left: float
+    right: float
+    rung: float
+    words: int  # lines of words above a rung (phone) or beside it
+
+
+LETTER = 0.6 * (SMALL + 1)  # a wide guess of the mean letter, since the page's font is not known here
+
+
+def _plan(rungs: Sequence[Rung], width: float) -> Plan:
+    figures = max(len(r.figures) for r in rungs) * LETTER + 4
+    label = max(len(r.label) for r in rungs) * LETTER * 1.08
+    if width < PHONE:
+        one = label + figures < width
+        return Plan(width, True, 4.0, 8.0, 42.0 if one else 58.0, 1 if one else 2)
+    room = width - figures - 24
+    left = min(label + 12, max(0.5 * room, room - 220))
+    return Plan(width, False, left, figures + 12, 26.0 if label + 12 <= left else 36.0, 2)
+
+
+def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
+    panel = axes(figure, plan.left, top, plan.width - plan.left - plan.right, plan.rung * len(rungs))
+    low, high = _reach(rungs)
+    panel.set_xlim(low, high)
+    panel.set_ylim(len(rungs), 0)
+    panel.set_yticks([])
+    few_ticks(panel)
+    lift = 1 - 16 / plan.rung if plan.phone else 0.5
+    for i, r in enumerate(rungs):
+        if low <= 0 <= high:
+            reach = (i + lift - 9 / plan.rung, i + lift + 9 / plan.rung) if plan.phone else (i, i + 1)
+            panel.plot([0, 0], reach, color=LIGHT.faint, linewidth=1.2, zorder=0)
+        _draw_rung(panel, r, i + lift, low, high)
+        _rung_words(figure, r, top + plan.rung * i, plan)
+    if not low <= 0 <= high:
+        side, words = (plan.left, "← zero") if low > 0 else (plan.width - plan.right, "zero →")
+        y = top + plan.rung * len(rungs) + 26
+        say(figure, side, y, words, ha="left" if low > 0 else "right", fontsize=SMALL, color=LIGHT.muted)
+
+
+def _rung_words(figure: Figure, r: Rung, top: float, plan: Plan) -> None:
+    chosen = r.kind == "advised"
+    style = {"fontsize": SMALL + 1, "fontweight": "bold" if chosen else "normal"}
+    style["color"] = LIGHT.accent if chosen else LIGHT.ink
+    if plan.phone:
+        say(
+            figure,
+            0,
+            top + 9,
+            clip(r.label, plan.width if plan.words == 2 else plan.width - 130, SMALL + 1),
+            **style,
+        )
+        x, y = (0.0, top + 25) if plan.words == 2 else (plan.width, top + 9)
+        say(figure, x, y, r.figures, ha="left" if plan.words == 2 else "right", **style)
+        return
+    most = max(12, int((plan.left - 8) / (LETTER * (1.08 if chosen else 1))))
+    lines = wrapped(r.label, most)[:2]
+    middle = top + plan.rung / 2
+    for k, line in enumerate(lines):
+        say(figure, 0, middle + 14 * (k - (len(lines) - 1) / 2), line, **style)
+    say(figure, plan.width, middle, r.figures, ha="right", **style)
+
+
+def _reach(rungs: Sequence[Rung]) -> tuple[float, float]:
+    """Axis ends: every finite end, and zero unless it lies more than twice the data's length away."""
+    ends = [v for r in rungs for v in (r.low, r.high, r.estimate) if math.isfinite(v)]
+    low, high = min(ends), max(ends)
+    length = high - low or abs(high) or 1.0
+    if low > 0 and low <= 2 * length:
+        low = 0.0
+    elif high < 0 and -high <= 2 * length:
+        high = 0.0
+    margin = 0.04 * (high - low or length)
+    return low - margin, high + margin
+
+
+def _draw_rung(panel: Axes, r: Rung, line: float, low: float, high: float) -> None:
+    """Ordinary hollow and dashed, advised solid and heavy, the others thin: told apart without colour."""
+    ends = [max(r.low, low), min(r.high, high)]
+    style = {
+        "advised": {"color": LIGHT.accent, "linewidth": 3.4},
+        "ordinary": {"color": LIGHT.ink, "linewidth": 1.3, "linestyle": (0, (4, 2))},
+        "other": {"color": LIGHT.muted, "linewidth": 1.1},
+    }[r.kind]
+    panel.plot(ends, [line, line], solid_capstyle="butt", **style)  # type: ignore[arg-type]
+    face = {"advised": LIGHT.accent, "ordinary": LIGHT.paper, "other": LIGHT.muted}[r.kind]
+    edge = {"advised": LIGHT.accent, "ordinary": LIGHT.ink, "other": LIGHT.muted}[r.kind]
+    size = {"advised": 8.5, "ordinary": 7.0, "other": 4.5}[r.kind]
+    panel.plot([r.estimate], [line], "o", markersize=size, markerfacecolor=face, markeredgecolor=edge)
+
+
+def share_bar(results: Results) -> Plate | None:
+    """What is left over, split by structure; each share's interval as a whisker below the bar."""
+    parts = [s for s in results.ledger.shares if math.isfinite(s.share)]
+    if not parts:
+        return None
+    told = ", ".join(
+        f"{s.label} {percent(s.share)}"
+        + (f" ({percent_span(s.low, s.high)})" if math.isfinite(s.low + s.high) else "")
+        for s in parts
+    )
+    return Plate(
+        "shares",
+        "What the model leaves over, by structure",
+        f"Shares of the residual variance: {told}.",
+        tables.shares(results),
+        lambda width: _paint_shares(parts, width),
+    )
+
+
+def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
+    phone = width < PHONE
+    row = 26.0
+    height = 44 + row * len(parts) + 30
+    figure = blank(width, height)
+    left, right = (0.32 * width, 10.0) if phone else (0.34 * width, 0.27 * width)
+    bar = axes(figure, 0 if phone else left, 6, width - (0 if phone else left + right), 26)
+    bar.axis("off")
+    bar.set_xlim(0, 1)
+    bar.set_ylim(0, 1)
+    total = sum(max(0.0, s.share) for s in parts) or 1.0
+    at = 0.0
+    for s in parts:
+        part = max(0.0, s.share) / total
+        m = mark(s.structure)
+        face = getattr(LIGHT, m.role)
+        bar.barh([0.5], [part], 1, left=at, facecolor=face, edgecolor=LIGHT.paper, hatch=m.hatch, linewidth=1)
+        at += part
+    panel = axes(figure, left, 42, width - left - right, row * len(parts))
+    panel.set_xlim(0, 1)
+    panel.set_ylim(len(parts), 0)
+    panel.set_yticks([])
+    panel.set_xticks([0, 0.5, 1], ["0 %", "50 %", "100 %"])
+    sides: tuple[Literal["left", "center", "right"], ...] = ("left", "center", "right")
+    for label, side in zip(panel.get_xticklabels(), sides, strict=True):
+        label.set_horizontalalignment(side)
+    for i, s in enumerate(parts):
+        _draw_share(figure, panel, s, i, 42 + row * (i + 0.5), (left, right, width, phone))
+    return figure
+
+
+def _draw_share(
+    figure: Figure,
+    panel: Axes,
+    s: Share,
+    i: int,
+    y: float,
+    room: tuple[float, float, float, bool],
+) -> None:
+    left, _, width, phone = room
+    m = mark(s.structure)
+    face = getattr(LIGHT, m.role)
+    if math.isfinite(s.low + s.high):
+        panel.plot([s.low, s.high], [i + 0.5] * 2, color=LIGHT.ink, linewidth=1.2, zorder=1)
+    panel.plot(
+        [s.share],
+        [i + 0.5],
+        m.marker,
+        markersize=9,
+        markerfacecolor=face,
+        markeredgecolor=LIGHT.ink,
+        zorder=2,
+    )
+    label = s.label
+    figures = percent(s.share)
+    if math.isfinite(s.low + s.high):
+        figures += f"  ({percent_span(s.low, s.high)})"
+    if phone:
+        say(figure, 0, y - 6, clip(label, left - 6, SMALL), fontsize=SMALL)
+        say(figure, 0, y + 7, figures, fontsize=SMALL - 1, color=LIGHT.muted)
+    else:
+        say(figure, 0, y, clip(label, left - 10, TEXT - 0.5), fontsize=TEXT - 0.5)
+        say(figure, width, y, figures, ha="right", fontsize=TEXT - 0.5)

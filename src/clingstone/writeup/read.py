@@ -1,0 +1,100 @@
+"""What every part of the write-up asks of Results: the advised refit, the focus rows, the digits."""
+
+from __future__ import annotations
+
+import math
+
+from clingstone.display import decimals_for
+from clingstone.remedies.remedy import Interval, Refit
+from clingstone.results import Results
+
+ORDINARY = "ordinary"
+
+
+def advised(results: Results) -> Refit | None:
+    """The refit that the advice names, or None when nothing is advised or it was not fitted."""
+    named = [r for r in results.refits if r.remedy == results.advice.remedy]
+    return next((r for r in named if r.at == results.advice.at), named[0] if named else None)
+
+
+def ordinary(results: Results) -> Refit | None:
+    return next((r for r in results.refits if r.remedy == ORDINARY), None)
+
+
+def ordered(results: Results) -> tuple[Refit, ...]:
+    """Refits as a reader meets them: the advised one, the ordinary one, then the others."""
+    first = [advised(results), ordinary(results)]
+    chosen = list(dict.fromkeys(id(r) for r in first if r is not None))
+    lead = [r for key in chosen for r in results.refits if id(r) == key]
+    return (*lead, *(r for r in results.refits if id(r) not in chosen))
+
+
+def term_of(coefficient: str) -> str:
+    """ "dose × arm: treated" belongs to the term "dose × arm"."""
+    return " × ".join(part.split(": ")[0] for part in coefficient.split(" × "))
+
+
+def names_of(results: Results) -> tuple[str, ...]:
+    """Every reported row: coefficients, contrasts, means, and parts such as "x [within]"."""
+    seen: dict[str, None] = {}
+    for fit in results.refits:
+        seen.update(dict.fromkeys(row.term for row in fit.intervals))
+    return tuple(seen)
+
+
+def focus_rows(results: Results) -> tuple[str, ...]:
+    """Names of the interval rows that the focus asks for, in the order of the focus."""
+    names = names_of(results)
+    focus = results.case.focus or tuple(t for t in results.case.terms if t != "constant")
+    out: dict[str, None] = {}
+    for term in focus:
+        exact = [n for n in names if n == term or n.startswith(f"{term} [")]
+        out.update(dict.fromkeys(exact or [n for n in names if term_of(n) == term]))
+    return tuple(out)
+
+
+def row_of(fit: Refit | None, name: str) -> Interval | None:
+    """A row of a refit that has numbers to show, or None."""
+    if fit is None:
+        return None
+    return next((r for r in fit.intervals if r.term == name and math.isfinite(r.estimate)), None)
+
+
+def decimals(results: Results, name: str) -> int:
+    """Decimals for every rung of one row.
+
+    Two significant digits of the advised (else ordinary) standard error, and at least one of the
+    smallest, so that no interval is printed with equal ends.
+    """
+    rows = [row_of(fit, name) for fit in ordered(results)]
+    errors = [r.se for r in rows if r is not None and math.isfinite(r.se) and r.se > 0]
+    if not errors:
+        return 2
+    return max(decimals_for(errors[0]), decimals_for(min(errors), 1))
+
+
+def structure_of(results: Results, key: str) -> str | None:
+    """The family of a component key: "group:clinic" is a group, "row" belongs to none."""
+    for share in results.ledger.shares:
+        if share.key == key:
+            return share.structure
+    family = key.split(":")[0]
+    return family if family in ("group", "serial", "spatial") else None
+
+
+def label_of(results: Results, key: str) -> str:
+    """How a reader knows a component: the label that the ledger gave it."""
+    labels = {s.key: s.label for s in results.ledger.shares} | {
+        s.key: s.label for s in results.ledger.standing
+    }
+    if key in labels:
+        return labels[key]
+    return "row noise" if key == "row" else key.split(":", 1)[-1]
+
+
+def level_percent(results: Results) -> str:
+    """The confidence level as words: "95 %"."""
+    level = 100 * float(
+        results.settings.get("confidence", results.refits[0].confidence if results.refits else 0.95)
+    )
+    return f"{level:g}\u00a0%"

@@ -1,0 +1,299 @@
+"""The report: one HTML page that stands alone, leading with the answer."""
+
+from __future__ import annotations
+
+import math
+from collections.abc import Iterable, Mapping
+from functools import cache
+from importlib.resources import files
+from typing import TYPE_CHECKING, Any
+
+from clingstone.display import Table, clean, significant
+from clingstone.evidence.finding import Finding
+from clingstone.remedies.remedy import Refit
+from clingstone.results import Results
+from clingstone.writeup import curves, figures, tables
+from clingstone.writeup.bibliography import cite, references_of
+from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
+from clingstone.writeup.methods import checklist, report_this
+from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
+from clingstone.writeup.read import advised, focus_rows, label_of, ordered
+from clingstone.writeup.sentences import USUAL, dependence, design, model, sections
+from clingstone.writeup.terminal import case_line
+
+if TYPE_CHECKING:
+    from jinja2 import Environment
+
+STATES = {
+    "supported": "These data support a correction.",
+    "supported with caveat": "These data support a correction, with a caveat.",
+    "mean first": "Mend the mean of the model first.",
+    "not correctable": "These data cannot carry a correction.",
+    "nothing found": "No dependence that matters was detected.",
+}
+
+CONTENTS = (
+    ("case", "What was read"),
+    ("evidence", "What the residuals say"),
+    ("ledger", "How strong, and what it does"),
+    ("intervals", "Every interval"),
+    ("advice", "Why this advice"),
+    ("explain", "How each interval was reached"),
+    ("methods", "Methods text"),
+    ("references", "References"),
+    ("again", "To do it again"),
+    ("cautions", "Cautions"),
+)
+
+TITLES = {
+    "group": "Groups",
+    "serial": "Order in time",
+    "spatial": "Places",
+    "mean": "The mean of the model",
+    "lookalike": "What can look like dependence",
+}
+
+
+def report(results: Results) -> str:
+    """The whole page. The same results give the same bytes."""
+    view: dict[str, Any] = {
+        "results": results,
+        "css": _raw(_css()),
+        "js": _raw(_asset("report.js")),
+        "contents": CONTENTS,
+        "methods": sections(results),
+        "references": results.references or references_of(results),
+    }
+    view |= _answer(results) | _case(results) | _ledger(results) | _intervals(results) | _advice(results)
+    view |= {"evidence": _evidence(results), "again": [_table(t) for t in _again(results)]}
+    rows = [(item, asks, where) for item, asks, where in checklist(results)]
+    view["checklist"] = _table(_plain("Reporting items", ("item", "asks for", "answered under"), rows))
+    return _environment().get_template("report.html.j2").render(view)
+
+
+def fragment(results: Results) -> str:
+    """The answer alone, for a notebook."""
+    drawn = [p for p in (figures.ladder(results), figures.share_bar(results)) if p is not None]
+    view = {
+        "results": results,
+        "state": STATES[results.advice.state],
+        "plates": [_raw(by_role(p.svg())) for p in drawn],
+        "report_this": report_this(results),
+        "light": _raw(variables(LIGHT)),
+        "dark": _raw(variables(DARK)),
+    }
+    return _environment().get_template("fragment.html.j2").render(view)
+
+
+@cache
+def _environment() -> Environment:
+    from jinja2 import Environment, PackageLoader, StrictUndefined
+
+    return Environment(
+        loader=PackageLoader("clingstone.writeup", "templates"),
+        autoescape=True,
+        undefined=StrictUndefined,
+        trim_blocks=True,
+        lstrip_blocks=True,
+    )
+
+
+def _asset(name: str) -> str:
+    return files("clingstone.writeup").joinpath("templates", name).read_text(encoding="utf-8")
+
+
+def _css() -> str:
+    css = _asset("report.css").replace("@LIGHT@", variables(LIGHT)).replace("@DARK@", variables(DARK))
+    return css.replace("@FONT@", PAGE_FONT)
+
+
+def _raw(html: str) -> Any:
+    """Markup that is ours: templates, tables and figures, whose texts were escaped when they were made."""
+    from markupsafe import Markup
+
+    return Markup(html)
+
+
+def _table(table: Table) -> Mapping[str, Any]:
+    bare = Table(table.caption, table.columns, table.rows)
+    return {"caption": table.caption, "html": _raw(bare.to_html()), "note": clean(table.note)}
+
+
+def _plate(plate: Plate) -> Mapping[str, Any]:
+    shown = plate.table
+    if len(shown.rows) > curves.TABLED:
+        note = f"The first {curves.TABLED} of {len(shown.rows)}; the file of the figure holds them all."
+        shown = Table(shown.caption, shown.columns, shown.rows[: curves.TABLED], note)
+    return {
+        "name": plate.name,
+        "caption": plate.caption,
+        "wide": _raw(by_role(plate.svg(WIDE))),
+        "narrow": _raw(by_role(plate.svg(NARROW))),
+        "table": _table(shown),
+    }
+
+
+def _plain(caption: str, heads: Iterable[str], rows: Iterable[Iterable[str]]) -> Table:
+    from clingstone.display import Column
+
+    return Table.of(caption, [Column(h, h) for h in heads], rows)
+
+
+def _answer(results: Results) -> dict[str, Any]:
+    ladder, shares = figures.ladder(results), figures.share_bar(results)
+    hidden = len(focus_rows(results)) - figures.PANELS
+    return {
+        "case_line": clean(case_line(results)),
+        "state": STATES[results.advice.state],
+        "ladder": _plate(ladder) if ladder else None,
+        "shares": _plate(shares) if shares else None,
+        "more_focus": f"{hidden} more focus rows stand under “Every interval”." if hidden > 0 else "",
+        "report_this": report_this(results),
+        "how_sure": list(how_sure(results)),
+    }
+
+
+def how_sure(results: Results) -> Iterable[str]:
+    """What supports the advice, and what is not settled."""
+    if results.rehearsal is None:
+        yield (
+            "Not rehearsed on this design: the advice rests on published rules, not on a coverage measured "
+            "for these data."
+        )
+    for name in focus_rows(results)[: figures.PANELS]:
+        factor = results.ledger.factor(name)
+        if factor is not None and math.isfinite(factor.low + factor.high):
+            low, high = sorted((factor.low, factor.high))
+            yield (
+                f"The standard error of {name} should be {significant(factor.estimate)} times the ordinary "
+                f"one; anything from {significant(low)} to {significant(high)} is compatible with these data."
+            )
+    if results.advice.mean_in_doubt:
+        yield "Whether the mean or the dependence makes the pattern is not settled."
+    yield from (f"Not settled: {reason.sentence}" for reason in results.advice.cautions)
+    if not results.advice.structures:
+        yield from (d.sentence for d in results.ledger.detectable)
+
+
+def _case(results: Results) -> dict[str, Any]:
+    words = [s.text for s in (*design(results), *model(results)) if not s.blank]
+    sizes = tables.groups(results)
+    return {"case_words": words, "case_tables": [_table(sizes)] if sizes else []}
+
+
+def _evidence(results: Results) -> list[dict[str, Any]]:
+    plates = curves.plates_by_structure(results)
+    parts = []
+    for structure, title in TITLES.items():
+        found = [f for f in results.evidence if f.structure == structure]
+        if not found:
+            continue
+        m = mark(structure)
+        own = structure in ("group", "serial", "spatial")
+        parts.append(
+            {
+                "title": title,
+                "role": m.role if own else "",
+                "glyph": m.glyph if own else "·",
+                "findings": [_finding(f) for f in sorted(found, key=lambda f: not f.primary)],
+                "plates": [_plate(p) for p in plates.get(structure, ())],
+                "table": _table(tables.evidence(results, structure)),
+            }
+        )
+    return parts
+
+
+def _finding(f: Finding) -> dict[str, Any]:
+    return {
+        "words": f.sentence,
+        "verdict": f.verdict,
+        "exploratory": not f.primary and f.verdict != "not applicable",
+        "caveats": f.caveats,
+    }
+
+
+def _ledger(results: Results) -> dict[str, Any]:
+    ledger = results.ledger
+    shown = []
+    if ledger.parameters:
+        shown.append(tables.parameters(results))
+    if ledger.inflation:
+        shown.append(tables.inflation(results))
+    told = [s.text for s in dependence(results)]
+    count = len(ledger.standing)
+    refused = [f"{label_of(results, key)} was not estimated: {reason}" for key, reason in ledger.refused]
+    return {
+        "standing": told[:count] + refused,
+        "ledger_tables": [_table(t) for t in shown],
+        "turning": [t.sentence for t in ledger.tipping] + [d.sentence for d in ledger.detectable],
+        "history": list(ledger.history),
+    }
+
+
+def _intervals(results: Results) -> dict[str, Any]:
+    joint = tables.joint(results)
+    return {
+        "interval_tables": [_table(tables.intervals(results, n)) for n in focus_rows(results)],
+        "other_tables": [_table(tables.intervals(results, n)) for n in tables.other_rows(results)],
+        "joint": _table(joint) if joint else None,
+    }
+
+
+def _advice(results: Results) -> dict[str, Any]:
+    advice = results.advice
+    refused = tables.refused(results)
+    best = advised(results)
+    return {
+        "because": [f"{r.sentence} {cite(r.source)}".strip() for r in advice.because],
+        "alternatives": [_alternative(results, c.remedy, c.at, c.because) for c in advice.alternatives],
+        "refused": _table(refused) if refused else None,
+        "accounts": [
+            {"name": fit.name, "advised": fit is best, "rows": list(_account(fit))}
+            for fit in ordered(results)
+        ],
+        "cautions": [f"{r.sentence} {cite(r.source)}".strip() for r in advice.cautions] + list(USUAL),
+    }
+
+
+def _alternative(results: Results, remedy: str, at: str, because: str) -> str:
+    named = next(
+        (f.name for f in results.refits if f.remedy == remedy and f.at == at), remedy.replace("-", " ")
+    )
+    return f"{named}: {because}" if because else named
+
+
+def _account(fit: Refit) -> Iterable[tuple[str, str]]:
+    a = fit.account
+    yield "estimator", a.estimator
+    yield "covariance", a.covariance
+    yield "small-sample factor", a.factor
+    yield "degrees of freedom", a.df_rule
+    yield "reference distribution", a.reference
+    yield from a.items
+    if fit.boundary:
+        yield "boundary", "a variance was estimated at its bound of zero"
+    if not fit.converged:
+        yield "convergence", "the search for the variances did not converge"
+    for note in fit.notes:
+        yield "note", note
+    if cite(a.source):
+        yield "sources", cite(a.source)[1:-1]
+
+
+def _again(results: Results) -> list[Table]:
+    settings = {k: _shown(v) for k, v in results.settings.items() if v is not None}
+    origin = {k: _shown(v) for k, v in results.case.origin.items()}
+    versions = {"clingstone": results.clingstone, **results.versions}
+    return [
+        tables.pairs("The data as read", ("what", "value"), origin),
+        tables.pairs("Settings, every argument that was given or taken", ("argument", "value"), settings),
+        tables.pairs("Versions", ("software", "version"), versions),
+    ]
+
+
+def _shown(value: Any) -> str:
+    if isinstance(value, Mapping):
+        return ", ".join(f"{k}: {_shown(v)}" for k, v in value.items())
+    if isinstance(value, (list, tuple)):
+        return ", ".join(_shown(v) for v in value)
+    return str(value)

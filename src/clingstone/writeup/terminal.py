@@ -1,0 +1,140 @@
+"""What a terminal shows: the answer in 80 columns, the intervals that move, why, and what is not settled."""
+
+from __future__ import annotations
+
+import math
+
+from clingstone.display import (
+    COLUMNS,
+    clean,
+    columns_of,
+    count,
+    degrees,
+    listed,
+    number,
+    pad,
+    significant,
+    span,
+    wrapped,
+)
+from clingstone.remedies.remedy import Interval, Refit
+from clingstone.results import Results
+from clingstone.writeup.read import advised, decimals, focus_rows, level_percent, ordered, ordinary, row_of
+
+ROWS = 6  # focus rows shown
+REFITS = 6  # refits shown for each
+
+
+def terminal(results: Results, width: int = COLUMNS) -> str:
+    """The answer as plain text of at most ``width`` columns."""
+    parts = [
+        wrapped(case_line(results), width),
+        wrapped(results.advice.headline, width),
+        _intervals(results, width),
+        _why(results, width),
+        _unsettled(results, width),
+    ]
+    return "\n\n".join("\n".join(lines) for lines in parts if lines)
+
+
+def case_line(results: Results) -> str:
+    """ "clinics.csv · 412 rows, 12 clinics of 9 to 71 rows, arm assigned by clinic"."""
+    case = results.case
+    parts = [count(case.n, "row")]
+    for g in case.group:
+        name = g.key.split("/")[-1]
+        sizes = (
+            f" of {g.smallest} to {g.largest} rows" if g.smallest < g.largest else f" of {g.smallest} rows"
+        )
+        parts.append(count(g.count, name) + sizes)
+    if case.serial is not None:
+        s = case.serial
+        parts.append(f"{count(s.count, 'series', 'series')} in {s.time}, {s.spacing}")
+    if case.spatial is not None:
+        extent = f"{significant(case.spatial.extent)} {case.spatial.unit}".rstrip()
+        parts.append(f"{count(case.spatial.sites, 'site')} over {extent}")
+    parts += [f"{term} assigned by {level}" for term, level in case.assigned.items()]
+    dropped = sum(case.dropped.values())
+    if dropped:
+        reasons = listed(f"{n} {reason}" for reason, n in case.dropped.items())
+        parts.append(f"{count(dropped, 'row')} left out ({reasons})")
+    return f"{case.name} · {', '.join(parts)}"
+
+
+def _intervals(results: Results, width: int) -> list[str]:
+    """Per focus row, the refits one under the other, advised first after the ordinary fit."""
+    names = focus_rows(results)
+    lines: list[str] = []
+    for name in names[:ROWS]:
+        shown = [(fit, row) for fit in _order(results) if (row := row_of(fit, name)) is not None][:REFITS]
+        if lines and shown:
+            lines.append("")
+        lines += _block(results, name, shown, width)
+    if len(names) > ROWS:
+        lines += ["", *wrapped(f"{len(names) - ROWS} more focus rows stand in the report.", width, "  ")]
+    if lines:
+        key = f"Intervals at {level_percent(results)}; df: degrees of freedom."
+        lines += ["", *wrapped(key, width, "  ")]
+    return lines
+
+
+def _order(results: Results) -> tuple[Refit, ...]:
+    """The ordinary fit first, so that the eye moves from what was to what is advised."""
+    base = ordinary(results)
+    return (*((base,) if base else ()), *(f for f in ordered(results) if f is not base))
+
+
+def _block(results: Results, name: str, shown: list[tuple[Refit, Interval]], width: int) -> list[str]:
+    places, best = decimals(results, name), advised(results)
+    labels = [("advised: " if fit is best else "") + clean(fit.name) for fit, _ in shown]
+    figures = [_figures(row, places) for _, row in shown]
+    ends = [max(map(columns_of, column)) for column in zip(*figures, strict=True)] if figures else []
+    tail = sum(ends) + 2 * len(ends)
+    title = clean(name)
+    left = max(columns_of(title), 4)
+    room = width - 2 - left - 2 - tail
+    if room < 24:  # the name of the row stands on a line of its own
+        lines, left, title, room = [*wrapped(title, width, "  ")], 2, "", width - 6 - tail
+    else:
+        lines = []
+    label_room = min(room, max(map(columns_of, labels), default=0))
+    for k, (label, cells) in enumerate(zip(labels, figures, strict=True)):
+        words = wrapped(label, max(12, label_room), "", "  ")
+        body = "  ".join(pad(c, w, True) for c, w in zip(cells, ends, strict=True))
+        head = pad(title if k == 0 else "", left)
+        lines.append(f"  {head}  {pad(words[0], label_room)}  {body}".rstrip())
+        lines += [f"  {' ' * left}  {more}" for more in words[1:]]
+    return lines
+
+
+def _figures(row: Interval, places: int) -> tuple[str, str, str]:
+    df = f"{degrees(row.df)} df" if math.isfinite(row.df) else ""
+    return number(row.estimate, places), f"({span(row.low, row.high, places)})", df
+
+
+def _why(results: Results, width: int) -> list[str]:
+    advice = results.advice
+    sentences = [r.sentence for r in advice.because]
+    if advice.state == "not correctable":
+        sentences += [f"{_words(why)} {_words(needed)}".strip() for _, why, needed in advice.refused[:2]]
+    lines: list[str] = []
+    for sentence in sentences:
+        lines += wrapped(sentence, width)
+    if not advice.structures:
+        lines += [line for d in results.ledger.detectable for line in wrapped(d.sentence, width)]
+    return lines
+
+
+def _words(text: str) -> str:
+    """A fragment as a sentence of its own."""
+    text = text.strip()
+    if not text:
+        return ""
+    return text[0].upper() + text[1:] + ("" if text[-1] in ".?!" else ".")
+
+
+def _unsettled(results: Results, width: int) -> list[str]:
+    cautions = [r.sentence for r in results.advice.cautions]
+    if results.advice.mean_in_doubt:
+        cautions.append("The mean itself is in doubt; see the curve and trend checks in the report.")
+    return [line for c in cautions for line in wrapped(f"Not settled: {c}", width, "", "  ")]
