@@ -3,14 +3,28 @@
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
+from pathlib import Path
+from typing import Any
 
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.design import declare
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.intake import columns, files, fitted, formula, frames, model
+from clingstone.intake.columns import Columns, Role
+from clingstone.intake.frames import Table
+from clingstone.intake.model import Blocks
+from clingstone.intake.words import count, instead, rows
+from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
+from clingstone.needs import InputError, memory
 from clingstone.run import Settings
+
+MOST_LABELS = 40
+MOST_SITES = 2000
 
 
 @dataclass(frozen=True)
@@ -114,3 +128,342 @@ class Case:
     @property
     def design(self) -> Design:
         return self.response.design
+
+    # ---- ways in ------------------------------------------------------------------------
+
+    @classmethod
+    def of(cls, data: Any, settings: Settings) -> Case:
+        """A case from a path, a data frame, or a fitted ordinary or weighted regression.
+
+        Raises
+        ------
+        InputError : anything that the user can mend; the message says what, where and why.
+        NotSupported : what was asked cannot be carried by these data.
+        """
+        if fitted.is_fit(data):
+            return cls._of_fit(fitted.recover(data), settings, "data")
+        if isinstance(data, (str, Path)):
+            frame, origin, notes = files.read(data)
+            table = frames.table(frame)
+            return cls._of_table(replace(table, notes=(*notes, *table.notes)), settings, origin)
+        return cls._of_table(frames.table(data), settings, {})
+
+    @classmethod
+    def from_formula(cls, data: Any, model: str, **options: Any) -> Case:
+        """A case from data and a formula; ``options`` are those of ``examine``."""
+        return cls.of(data, _settings(options | {"model": model}))
+
+    @classmethod
+    def from_fit(cls, result: Any, data: Any = None, **options: Any) -> Case:
+        """A case from a statsmodels OLS or WLS result.
+
+        ``data`` is the frame with ids, times and places; the frame of a formula is used where none
+        is given. Rows are matched by their labels.
+        """
+        if not fitted.is_fit(result):
+            raise InputError(
+                f"a {type(result).__name__} was given where a fitted regression is needed",
+                "Give the result of .fit() of an OLS or WLS model.",
+            )
+        return cls._of_fit(fitted.recover(result, data), _settings(options), "data")
+
+    @classmethod
+    def from_residuals(cls, residual: Any, data: Any = None, **options: Any) -> Case:
+        """A case from residuals alone: tests run, refits are refused.
+
+        ``residual`` is a column of ``data``, or values. A pandas Series goes with the row labels of
+        a pandas frame; bare values go with rows by number and must be as many.
+        """
+        if isinstance(residual, str):
+            return cls.of(data, _settings(options | {"residual": residual}))
+        table, name = _with_residual(residual, {} if data is None else data)
+        return cls._of_table(table, _settings(options | {"residual": name}), {})
+
+    @classmethod
+    def _of_table(cls, table: Table, settings: Settings, origin: Mapping[str, str]) -> Case:
+        if (settings.model is None) == (settings.residual is None):
+            both = settings.model is not None
+            raise InputError(
+                "both model= and residual= were given" if both else "neither model= nor residual= was given",
+                "Give a model such as 'y ~ x', or the name of a column of residuals with residual=.",
+            )
+        declared = declare.declaration(settings, table)
+        parsed = None if settings.model is None else formula.parse(settings.model, table.names)
+        roles: dict[Role, tuple[str, ...]] = {
+            "response": parsed.made_of if parsed else (str(settings.residual),),
+            "predictor": parsed.predictors if parsed else (),
+            "weight": () if settings.weights is None else (settings.weights,),
+            **declared.roles,
+        }
+        numeric = [*roles["weight"], *roles["place"], *(() if parsed else roles["response"])]
+        got = columns.gather(table, roles, settings.missing, numeric)
+        if settings.weights is not None and settings.weights_kind == "frequency":
+            got = _repeated(got, settings.weights)
+        found = (
+            model.blocks(parsed, got.frame, got.kept) if parsed else _residuals(got, str(settings.residual))
+        )
+        used = [n for names in roles.values() for n in names]
+        notes = (*got.notes, *frames.wide_note(table.names, used, roles["response"]))
+        return cls._made(
+            table, declared, settings, replace(got, notes=notes), found, _root(got, settings), origin
+        )
+
+    @classmethod
+    def _of_fit(cls, fit: fitted.Fitted, settings: Settings, name: str) -> Case:
+        for option in ("model", "residual", "weights"):
+            if getattr(settings, option) is not None:
+                raise InputError(
+                    f"{option}= was given with a fitted model, which has its own", f"Leave {option}= out."
+                )
+        table = fit.table.take(fit.places)
+        declared = declare.declaration(settings, table)
+        roles: dict[Role, tuple[str, ...]] = {"predictor": fit.columns, **declared.roles}
+        got = columns.gather(table, roles, settings.missing, list(roles["place"]))
+        found = fit.blocks.ordered(got.kept)
+        root = None if fit.weights is None else np.sqrt(fit.weights[got.kept])
+        dropped = dict(got.dropped)
+        if unused := fit.table.rows - len(fit.places):
+            dropped = {"not used by the fit": unused} | dropped
+        got = replace(
+            got,
+            kept=fit.places[got.kept],
+            rows_read=fit.table.rows,
+            dropped=dropped,
+            notes=(*fit.notes, *got.notes),
+        )
+        return cls._made(
+            table, declared, settings, got, found, root, {"file": name, "format": "fitted model"}
+        )
+
+    @classmethod
+    def _made(
+        cls,
+        table: Table,
+        declared: declare.Declaration,
+        settings: Settings,
+        got: Columns,
+        found: Blocks,
+        root: Array | None,
+        origin: Mapping[str, str],
+    ) -> Case:
+        model.checked(found, root)
+        held = declare.structures(declared, settings, got.frame, got.kept, table)
+        found = found.ordered(held.order)
+        root = None if root is None else root[held.order]
+        design = declare.design(found, held, settings, root, known=settings.residual is None)
+        return cls(
+            response=Response.of(design, found.y),
+            settings=settings,
+            name=origin.get("file", "data"),
+            formula=found.formula,
+            response_name=found.response,
+            kept=got.kept[held.order],
+            rows_read=got.rows_read,
+            dropped=got.dropped,
+            notes=(*got.notes, *found.notes, *held.notes),
+            origin={**origin, "fingerprint": got.fingerprint},
+            transformed=found.transformed,
+        )
+
+    # ---- ways out -----------------------------------------------------------------------
+
+    def to_rows(self, values: npt.ArrayLike) -> Array:
+        """Values (n,) or (n, k) of the design's rows in the order of the user's table; NaN where left out."""
+        array = np.asarray(values, dtype=float)
+        if array.shape[:1] != self.kept.shape:
+            raise ValueError(f"{array.shape[:1]} values for {len(self.kept)} rows of the design")
+        out = np.full((self.rows_read, *array.shape[1:]), np.nan)
+        out[self.kept] = array
+        return out
+
+    def summary(self) -> CaseSummary:
+        """What was read, dropped and declared, as plain numbers and words."""
+        design = self.design
+        return CaseSummary(
+            name=self.name,
+            n=design.n,
+            p=design.p,
+            response=self.response_name,
+            formula=self.formula,
+            terms=tuple(t.name for t in design.terms),
+            coefficients=design.names,
+            focus=tuple(t.name for t in design.focus()),
+            varies={t.name: design.level_of(t.name) for t in design.terms},
+            group=_group_summaries(design),
+            arrangement=design.group.arrangement if design.group is not None else "",
+            serial=_serial_summary(design),
+            spatial=_spatial_summary(design),
+            assigned=dict(design.assignment.assigned),
+            sampled=design.assignment.sampled or "",
+            dropped=dict(self.dropped),
+            rows_read=self.rows_read,
+            notes=self.notes,
+            origin=dict(self.origin),
+            transformed=self.transformed,
+        )
+
+    def __repr__(self) -> str:
+        design = self.design
+        parts = [count(design.n, "row")]
+        if design.group is not None:
+            parts += [f"{level.count:,} {level.key}" for level in design.group.levels]
+        if design.serial is not None:
+            parts.append(f"{count(design.serial.part.count, 'series', 'series')} by {design.serial.name}")
+        if design.spatial is not None:
+            parts.append(count(design.spatial.count, "site"))
+        what = self.formula or f"residuals {self.response_name}"
+        return f"Case({self.name}: {what}; {', '.join(parts)})"
+
+
+def _settings(options: Mapping[str, Any]) -> Settings:
+    """Settings from options by name; a list is a tuple, one name for several is a tuple of one."""
+    names = [f.name for f in fields(Settings)]
+    for name in options:
+        if name not in names:
+            raise InputError(f"there is no option ‘{name}’", instead(name, names))
+    given = {k: tuple(v) if isinstance(v, list) else v for k, v in options.items()}
+    for name in ("focus", "means"):
+        if isinstance(given.get(name), str):
+            given[name] = (given[name],)
+    return Settings(**given)
+
+
+def _with_residual(residual: Any, data: Any) -> tuple[Table, str]:
+    """The table with one more column of residuals, matched by row label, else by number."""
+    import pandas as pd
+
+    values = (
+        residual if isinstance(residual, pd.Series) else pd.Series(np.asarray(residual, dtype=float).ravel())
+    )
+    name = "residual"
+    if isinstance(data, Mapping) and not data:
+        return frames.table(pd.DataFrame({name: values})), name
+    table = frames.table(data)
+    while name in table.names:
+        name += " given"
+    note: tuple[str, ...] = ()
+    labelled = isinstance(residual, pd.Series) and table.index is not None
+    if labelled and values.index.is_unique and table.index is not None and table.index.is_unique:
+        lost = values.index.difference(table.index)
+        if len(lost):
+            raise InputError(
+                f"{count(len(lost), 'residual')}, such as the one labelled ‘{lost[0]}’, has no row in the data",
+                "Give residuals whose row labels are those of the data.",
+            )
+        values = values.reindex(table.index)
+    elif len(values) == table.rows and not (labelled and not values.index.equals(table.index)):
+        note = ("Residuals without row labels are matched to the rows by their number.",)
+    else:
+        raise InputError(
+            f"{len(values):,} residuals cannot be matched to {table.rows:,} rows without row labels of their own",
+            "Give them as a column of the data, or as a pandas Series with the row labels of the data.",
+        )
+    column, inner = values.reset_index(drop=True).rename(name), table.fetch
+    return (
+        replace(
+            table,
+            names=(*table.names, name),
+            fetch=lambda n: column if n == name else inner(n),
+            notes=(*table.notes, *note),
+        ),
+        name,
+    )
+
+
+def _residuals(got: Columns, name: str) -> Blocks:
+    """Residuals stand over the constant alone, with no terms."""
+    y = got.frame[name].to_numpy(dtype=float)
+    return Blocks(y, np.ones((len(y), 1)), ("constant",), (), name, "")
+
+
+def _root(got: Columns, settings: Settings) -> Array | None:
+    """Square roots of precision weights."""
+    if settings.weights is None or settings.weights_kind == "frequency":
+        return None
+    weight = got.frame[settings.weights].to_numpy(dtype=float)
+    return None if np.all(weight == 1) else np.sqrt(weight)
+
+
+def _repeated(got: Columns, name: str) -> Columns:
+    """Each row as often as its frequency says."""
+    weight = got.frame[name].to_numpy(dtype=float)
+    part = np.flatnonzero(weight != np.round(weight))
+    if len(part):
+        raise InputError(
+            f"{name} counts rows (weights_kind='frequency') and is not a whole number in {rows(got.kept[part])}",
+            "Use weights_kind='precision' if it says how exact a row is.",
+        )
+    memory(8.0 * float(weight.sum()) * (len(got.frame.columns) + 10), "repeating rows by their frequency")
+    again = np.repeat(np.arange(len(weight)), weight.astype(np.int64))
+    note = f"{len(weight):,} rows stand for {len(again):,} by their frequency in {name}."
+    return replace(
+        got,
+        frame=got.frame.iloc[again].reset_index(drop=True),
+        kept=got.kept[again],
+        notes=(*got.notes, note),
+    )
+
+
+def _group_summaries(design: Design) -> tuple[GroupSummary, ...]:
+    if design.group is None:
+        return ()
+    levels = design.group.levels
+    nested = design.group.arrangement == "nested"
+    return tuple(
+        _group_summary(level, levels[i - 1].key if nested and i else "") for i, level in enumerate(levels)
+    )
+
+
+def _group_summary(level: Partition, parent: str) -> GroupSummary:
+    sizes = level.sizes
+    return GroupSummary(
+        key=level.key,
+        count=level.count,
+        smallest=int(sizes.min()),
+        median=float(np.median(sizes)),
+        largest=int(sizes.max()),
+        cv=float(np.std(sizes, ddof=1) / np.mean(sizes)) if level.count > 1 else 0.0,
+        singletons=int(np.sum(sizes == 1)),
+        parent=parent,
+        labels=level.labels[:MOST_LABELS],
+        sizes=tuple(int(s) for s in sizes[:MOST_LABELS]),
+    )
+
+
+def _serial_summary(design: Design) -> SerialSummary | None:
+    serial = design.serial
+    if serial is None:
+        return None
+    return SerialSummary(
+        time=serial.name,
+        series=serial.part.key,
+        count=serial.part.count,
+        shortest=int(serial.part.sizes.min()),
+        longest=int(serial.part.sizes.max()),
+        spacing=serial.spacing,
+        step=float(serial.step),
+        unit=serial.unit,
+        gaps=serial.gaps,
+        ties=serial.ties,
+        first=serial.first,
+        last=serial.last,
+    )
+
+
+def _spatial_summary(design: Design) -> SpatialSummary | None:
+    sites = design.spatial
+    if sites is None:
+        return None
+    shown = sites.xy[:: max(1, -(-sites.count // MOST_SITES))]
+    return SpatialSummary(
+        names=sites.names,
+        kind=sites.kind,
+        sites=sites.count,
+        rows_per_site=design.n / sites.count,
+        extent=float(sites.along(np.asarray(sites.extent))),
+        unit=sites.unit,
+        neighbours=tuple(graph.about for graph in design.neighbours),
+        islands=design.neighbours[0].islands if design.neighbours else 0,
+        x=tuple(float(v) for v in shown[:, 0]),
+        y=tuple(float(v) for v in shown[:, 1]),
+    )

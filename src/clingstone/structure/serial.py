@@ -2,17 +2,26 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import Any, Literal
+from collections.abc import Sequence
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.maths.once import Array, once
+from clingstone.intake.words import count, listed, rows
+from clingstone.maths.once import Array, frozen, once
 from clingstone.maths.partition import Partition
+from clingstone.needs import InputError, NotSupported
+from clingstone.structure.clock import Clock, read
+from clingstone.structure.group import Groups
+from clingstone.structure.spacing import Grid, Spacing, judge
 
-Spacing = Literal["regular", "regular with gaps", "irregular"]
+if TYPE_CHECKING:
+    import pandas as pd
+
 Rows = npt.NDArray[np.int64]
+WHOLE = "all rows"
 
 
 @dataclass(frozen=True, eq=False)
@@ -27,6 +36,7 @@ class Series:
     tick : (n,) whole steps since the first time, or None when the spacing is irregular.
     spacing : judged over all series. gaps : number of missing steps inside series.
     ties : rows that share their series and time with an earlier row.
+    first, last : earliest and latest time, as the user wrote them.
     """
 
     name: str
@@ -39,6 +49,8 @@ class Series:
     gaps: int = 0
     ties: int = 0
     notes: tuple[str, ...] = ()
+    first: str = ""
+    last: str = ""
 
     @property
     @once
@@ -54,41 +66,172 @@ class Series:
 
     @once
     def pairs(self, lag: int) -> tuple[Rows, Rows]:
-        """Rows (earlier, later) of one series exactly ``lag`` base steps apart. Needs ``tick``."""
+        """Rows (earlier, later) of one series exactly ``lag`` base steps apart. Needs ``tick``.
+
+        Where several rows share a series and a time, each of them is paired.
+        """
         if self.tick is None:
             raise ValueError("irregular times have no lags in whole steps")
         # Series are laid end to end on one integer line, far enough apart never to meet.
         span = int(self.tick.max() - self.tick.min()) + lag + 1
         place = self.part.codes.astype(np.int64) * span + (self.tick - self.tick.min())
-        later = np.searchsorted(place, place + lag)
-        ok = later < len(place)
-        ok[ok] = place[later[ok]] == place[ok] + lag
-        earlier = np.flatnonzero(ok)
-        return earlier, later[ok]
+        begin = np.searchsorted(place, place + lag)
+        found = np.searchsorted(place, place + lag, side="right") - begin
+        earlier = np.repeat(np.arange(len(place)), found)
+        within = np.arange(len(earlier)) - np.repeat(np.cumsum(found) - found, found)
+        return earlier, np.repeat(begin, found) + within
 
     @property
     @once
     def runs(self) -> Partition:
-        """Rows → maximal stretches of one series without a missing step. Needs ``tick``."""
+        """Rows → maximal stretches of one series without a missing step. Needs ``tick``.
+
+        Rows that share a series and a time stay in one stretch.
+        """
         if self.tick is None:
             raise ValueError("irregular times have no runs of consecutive steps")
         starts = np.ones(self.part.n, dtype=bool)
-        starts[1:] = ~(self.steps[1:] == 1.0)
+        starts[1:] = ~(self.steps[1:] <= 1.0)
         codes = (np.cumsum(starts) - 1).astype(np.int32)
         return Partition("run", codes, tuple(str(i) for i in range(int(codes[-1]) + 1)))
 
     def take(self, rows: npt.NDArray[Any]) -> Series:
         """The same structure on some rows, in their stored order."""
         tick = None if self.tick is None else self.tick[rows]
-        return Series(
-            self.name,
-            self.part.take(rows),
-            self.elapsed[rows],
-            self.unit,
-            self.step,
-            tick,
-            self.spacing,
-            self.gaps,
-            self.ties,
-            self.notes,
+        return replace(self, part=self.part.take(rows), elapsed=self.elapsed[rows], tick=tick)
+
+
+def build(
+    name: str,
+    values: pd.Series,
+    series: Partition | None = None,
+    groups: Groups | None = None,
+    ties: str = "stop",
+    places: Rows | None = None,
+) -> tuple[Series, Rows]:
+    """Series from a column of times without missing values, and the order of rows that goes with it.
+
+    Parameters
+    ----------
+    name, values : the column, (n,).
+    series : rows → series where the user named them. Without it: the finest group level within
+        which time is unique (levels of one row per cell are passed over), else the whole table.
+    ties : "stop", or "replicate" to keep and count rows that share series and time.
+    places : (n,) positions in the user's table, for messages.
+
+    Returns
+    -------
+    The Series in (series, time) order, and the order: row i of the series is row order[i] of the
+    input. Tied rows keep the order of the table.
+
+    Raises
+    ------
+    InputError : times that cannot be read; tied times under "stop". NotSupported : ties="mean".
+    """
+    places = np.arange(len(values)) if places is None else places
+    clock = read(name, values, places)
+    if ties == "mean":
+        raise NotSupported(
+            "ties='mean' is not carried out here: averaging rows of unequal number changes their weights",
+            "Average such rows before, with their number as precision weight, or use ties='replicate'.",
         )
+    part, notes = (series, []) if series is not None else _default(name, clock, groups, ties, places)
+    tied = _tied(clock, part)
+    if len(tied) and ties == "stop":
+        raise _tie_error(name, clock, part, tied, places, groups)
+    order = np.lexsort((clock.counts, part.codes)).astype(np.int64)
+    found = part.take(order)
+    grid = judge(clock.counts[order], found.codes)
+    unit, per = clock.unit_for(grid.step)
+    counts = clock.counts[order]
+    if len(tied):
+        notes.append(
+            f"{count(len(tied), 'row')} share their series and time with another row; they are replicates."
+        )
+    notes.extend(_grid_notes(name, grid, found, unit, per))
+    return (
+        Series(
+            name=name,
+            part=found,
+            elapsed=frozen(np.asarray((counts - counts.min()) / per, dtype=float)),
+            unit=unit,
+            step=grid.step / per,
+            tick=None if grid.tick is None else frozen(grid.tick),
+            spacing=grid.spacing,
+            gaps=grid.gaps,
+            ties=len(tied),
+            notes=(*clock.notes, *notes),
+            first=clock.show(int(np.argmin(clock.counts))),
+            last=clock.show(int(np.argmax(clock.counts))),
+        ),
+        order,
+    )
+
+
+def _tied(clock: Clock, part: Partition) -> Rows:
+    """Rows whose series and time an earlier row of the table has already."""
+    order = np.lexsort((np.arange(part.n), clock.counts, part.codes))
+    again = (np.diff(part.codes[order]) == 0) & (np.diff(clock.counts[order]) == 0)
+    return np.sort(order[1:][again])
+
+
+def _default(
+    name: str, clock: Clock, groups: Groups | None, ties: str, places: Rows
+) -> tuple[Partition, list[str]]:
+    """Which rows form a series when nobody said."""
+    whole = Partition(WHOLE, frozen(np.zeros(len(places), dtype=np.int32)), (WHOLE,))
+    levels = () if groups is None else tuple(g for g in groups.levels if g.count < g.n)
+    fine_first: Sequence[Partition] = sorted(levels, key=lambda g: -g.count)
+    for level in (*fine_first, whole):
+        if not len(_tied(clock, level)):
+            note = f"Each {level.key} is one series." if level.key != WHOLE else "All rows form one series."
+            return level, [f"{note} To choose another, name it with series=."]
+    candidates = [*fine_first, whole]
+    best = min(candidates, key=lambda level: len(_tied(clock, level)))
+    if ties == "replicate":
+        return best, [f"Each {best.key} is one series." if best.key != WHOLE else "All rows form one series."]
+    raise _tie_error(name, clock, best, _tied(clock, best), places, groups)
+
+
+def _tie_error(
+    name: str, clock: Clock, part: Partition, tied: Rows, places: Rows, groups: Groups | None
+) -> InputError:
+    row = int(tied[0])
+    twins = np.flatnonzero((part.codes == part.codes[row]) & (clock.counts == clock.counts[row]))
+    where = "in the whole table" if part.key == WHOLE else f"within {part.key}"
+    example = f"{name} {clock.show(row)}" + (
+        "" if part.key == WHOLE else f" of {part.key} {part.labels[part.codes[row]]}"
+    )
+    hint = "Name the column that tells the series apart with series="
+    hint += " or group=" if groups is None else ""
+    hint += ", or, if these rows are repeats of one occasion, use ties='replicate'."
+    if any(unit == "hour" for unit, _ in clock.units):
+        hint += " Local clock times without a zone repeat an hour in autumn: give times with their zone."
+    return InputError(
+        f"{name} is not unique {where}: {count(len(tied), 'row')} "
+        f"{'shares' if len(tied) == 1 else 'share'} series and time with an earlier row "
+        f"(for instance {example}: {rows(places[twins])}), so their order is unknown",
+        hint,
+    )
+
+
+def _grid_notes(name: str, grid: Grid, part: Partition, unit: str, per: float) -> list[str]:
+    step = f"{grid.step / per:g}" + (f" {unit}{'' if grid.step == per else 's'}" if unit else "")
+    alone = int(np.sum(part.sizes == 1))
+    notes = []
+    if grid.spacing == "regular with gaps":
+        total = part.n + grid.gaps
+        notes.append(
+            f"{name} runs in steps of {step} with {count(grid.gaps, 'missing step')} "
+            f"({100 * grid.gaps / total:.2g} % of {total:,}); no lag is formed across one."
+        )
+    elif grid.spacing == "irregular" and alone < part.count:
+        notes.append(f"{name} is irregular: the median step is {step}, and lags are elapsed times.")
+    if grid.near > 0:
+        notes.append(
+            f"Times lie within {100 * grid.near:.2g} % of a step of a regular grid and are put on it."
+        )
+    if alone:
+        named = listed([part.labels[i] for i in np.flatnonzero(part.sizes == 1)], most=3)
+        notes.append(f"{count(alone, 'series', 'series')} of one row ({named}) tell nothing of order.")
+    return notes

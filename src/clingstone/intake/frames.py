@@ -1,0 +1,200 @@
+"""Any data frame as named columns: pandas, polars, Arrow, whatever narwhals takes, geographic frames."""
+
+from __future__ import annotations
+
+import re
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+import numpy.typing as npt
+
+from clingstone.intake.delimited import unique_names
+from clingstone.intake.words import instead, listed, rows
+from clingstone.needs import InputError
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+PLACE_X, PLACE_Y = "geometry x", "geometry y"
+
+
+@dataclass(frozen=True, eq=False)
+class Table:
+    """Columns by name, fetched when asked for.
+
+    index : row labels, where the frame has some that can identify rows. lonlat, unit : what the
+    coordinate reference system of a geographic frame says of ``place``.
+    """
+
+    names: tuple[str, ...]
+    rows: int
+    fetch: Callable[[str], pd.Series] = field(repr=False)
+    index: pd.Index | None = None
+    place: tuple[str, str] | None = None
+    lonlat: bool | None = None
+    unit: str = ""
+    notes: tuple[str, ...] = ()
+
+    def __contains__(self, name: str) -> bool:
+        return name in self.names
+
+    def take(self, places: npt.NDArray[np.int64]) -> Table:
+        """The same columns on some rows, counted anew from 0."""
+        fetch = self.fetch
+        return replace(
+            self,
+            rows=len(places),
+            fetch=lambda name: fetch(name).iloc[places].reset_index(drop=True),
+            index=None if self.index is None else self.index[places],
+        )
+
+    def column(self, name: str, used: str) -> pd.Series:
+        """One column, rows counted from 0. ``used`` says for what, if it is not there."""
+        if name not in self.names:
+            raise InputError(
+                f"there is no column ‘{name}’ ({used})",
+                instead(name, [n for n in self.names if n not in (PLACE_X, PLACE_Y)]),
+            )
+        return self.fetch(name)
+
+
+def table(data: Any) -> Table:
+    """The columns of a data frame of any kind, or of a mapping of name → values.
+
+    Named index levels of a pandas frame become columns. Raises InputError for what is no table,
+    has no rows, or repeats a column name.
+    """
+    import pandas as pd
+
+    if isinstance(data, Mapping):
+        try:
+            data = pd.DataFrame(dict(data))
+        except ValueError as error:
+            raise InputError(
+                f"these columns make no table: {error}", "Give columns of equal length."
+            ) from error
+    found = _pandas(data) if isinstance(data, pd.DataFrame) else _narwhals(data)
+    unique_names(list(found.names))
+    if not found.rows:
+        raise InputError("the table has no rows", "Give a table with at least one row.")
+    return found
+
+
+def _pandas(frame: pd.DataFrame) -> Table:
+    import pandas as pd
+
+    if frame.columns.nlevels > 1:
+        raise InputError(
+            f"the column names have {frame.columns.nlevels} levels",
+            "Join them into one name per column first.",
+        )
+    index = frame.index
+    levels = {
+        str(n): index.get_level_values(i)
+        for i, n in enumerate(index.names)
+        if n is not None and n not in frame.columns
+    }
+    columns = {str(c): i for i, c in enumerate(frame.columns)}
+    names = [*levels, *(str(c) for c in frame.columns)]
+    place = _geometry(frame)
+
+    def fetch(name: str) -> pd.Series:
+        if name in place.columns:
+            return place.columns[name].reset_index(drop=True)
+        if name in levels:
+            return pd.Series(levels[name], name=name).reset_index(drop=True)
+        return frame.iloc[:, columns[name]].reset_index(drop=True).rename(name)
+
+    return Table(
+        (*names, *place.columns), len(frame), fetch, index, place.names, place.lonlat, place.unit, place.notes
+    )
+
+
+def _narwhals(data: Any) -> Table:
+    import narwhals as nw
+
+    try:
+        frame = nw.from_native(data)
+    except TypeError as error:
+        raise InputError(
+            f"{type(data).__name__} is no table that is known here",
+            "Give a data frame (pandas, polars, Arrow …), a path to a file, or a fitted ordinary regression.",
+        ) from error
+    eager = frame.collect() if isinstance(frame, nw.LazyFrame) else frame
+    return Table(tuple(eager.columns), len(eager), lambda name: _series(eager[name]))
+
+
+def _series(column: Any) -> pd.Series:
+    """A pandas column; by way of Python values where pyarrow is not installed."""
+    import pandas as pd
+
+    try:
+        found: pd.Series = column.to_pandas()
+    except ImportError:
+        found = pd.Series(column.to_list(), name=column.name)
+    return found.reset_index(drop=True)
+
+
+@dataclass(frozen=True, eq=False)
+class _Place:
+    columns: Mapping[str, pd.Series] = field(default_factory=dict)
+    names: tuple[str, str] | None = None
+    lonlat: bool | None = None
+    unit: str = ""
+    notes: tuple[str, ...] = ()
+
+
+def _geometry(frame: pd.DataFrame) -> _Place:
+    """Points, or a point inside each shape, of a geographic frame."""
+    import pandas as pd
+
+    name = getattr(frame, "_geometry_column_name", None)
+    if name is None or name not in frame.columns or not hasattr(frame, "crs"):
+        return _Place()
+    shapes: Any = frame[name]
+    notes = []
+    crs: Any = shapes.crs
+    if crs is not None and crs.to_epsg() == 3857:
+        shapes, crs = shapes.to_crs(4326), shapes.to_crs(4326).crs
+        notes.append("Web Mercator stretches distances, so the places are turned to longitude and latitude.")
+    there = shapes.notna() & ~shapes.is_empty
+    invalid = ~shapes[there].is_valid
+    if invalid.any():
+        raise InputError(
+            f"{rows(invalid.to_numpy().nonzero()[0])} of ‘{name}’ hold shapes that cross themselves",
+            "Mend them, for instance with make_valid().",
+        )
+    points = shapes
+    if not (shapes[there].geom_type == "Point").all():
+        points = shapes.representative_point()
+        notes.append("Shapes are stood for by a point inside each of them.")
+    blank = pd.Series(float("nan"), index=range(len(frame)))
+    x, y = blank.copy(), blank.copy()
+    x[there.to_numpy()], y[there.to_numpy()] = points[there].x.to_numpy(), points[there].y.to_numpy()
+    lonlat = None if crs is None else bool(crs.is_geographic)
+    unit = "" if crs is None or lonlat else _axis_unit(crs)
+    return _Place({PLACE_X: x, PLACE_Y: y}, (PLACE_X, PLACE_Y), lonlat, unit, tuple(notes))
+
+
+def _axis_unit(crs: Any) -> str:
+    named: Sequence[str] = [axis.unit_name for axis in crs.axis_info]
+    return {"metre": "m", "kilometre": "km", "foot": "ft", "US survey foot": "ft"}.get(
+        named[0] if named else "", ""
+    )
+
+
+def wide_note(names: Sequence[str], used: Sequence[str], response: Sequence[str]) -> tuple[str, ...]:
+    """A note where the response has sisters that differ by a number only: one measure in wide form."""
+    for name in response:
+        stem = re.fullmatch(r"(.*?[^\d\s])[_. ]?\d+", name)
+        if stem is None:
+            continue
+        alike = [n for n in names if re.fullmatch(re.escape(stem.group(1)) + r"[_. ]?\d+", n)]
+        if len(alike) > 2 and not any(n in used for n in alike if n != name):
+            return (
+                f"{listed(alike)} look like one measure at several times, side by side. To use them all, put them "
+                "under each other: one row per time, with columns for the subject and the time.",
+            )
+    return ()
