@@ -26,9 +26,13 @@ COMPLEX_STEP = 1e-20
 
 @dataclass(frozen=True)
 class Integral:
-    """ln of the tail on the side of c, its relative accuracy, and the nodes used."""
+    """ln of the tail on the side of c, its relative accuracy, and the nodes used.
+
+    log_bound : K(c), never below ln of the tail.
+    """
 
     log_tail: float
+    log_bound: float
     accuracy: float
     nodes: int
 
@@ -120,8 +124,8 @@ def integrate(
         if accuracy <= tolerance or change <= 10.0 * rounding:
             break
     if estimate <= 0.0:
-        return Integral(-np.inf, 1.0, nodes)
-    return Integral(base + float(np.log(estimate / np.pi)), accuracy, nodes)
+        return Integral(-np.inf, base, 1.0, nodes)
+    return Integral(base + float(np.log(estimate / np.pi)), base, accuracy, nodes)
 
 
 def _first_pass(

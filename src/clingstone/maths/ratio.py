@@ -159,7 +159,7 @@ class Law:
 
     def _lattice(self) -> Lattice:
         low, high = self.form.low, self.form.high
-        if routes.name(self.form, self.swept) == "eigen":
+        if routes.name(self.form, self.swept) in ("eigen", "modes"):
             low, high = self.range
         mean, sd = self.mean, float(np.sqrt(self.variance))
 

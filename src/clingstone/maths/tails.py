@@ -6,6 +6,7 @@ from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
 
 import numpy as np
+import numpy.typing as npt
 from scipy import special
 
 from clingstone.maths.contour import Complex, abscissa, integrate
@@ -15,6 +16,7 @@ from clingstone.maths.spectra import Factored, Spectrum, edge
 # Two eigenvalues closer than this, relative to the larger, are one: T then cannot vary.
 CONSTANT = 1e-12
 POINTS = 8  # of the local interpolation polynomial
+FAR = 38.0  # normal score whose tail is 1e-315
 
 
 @dataclass(frozen=True, eq=False)
@@ -22,7 +24,8 @@ class Tails:
     """P(T < t) and P(T > t) for (B,) values t, each with relative accuracy, and how they were got.
 
     accuracy : (B,) estimated relative error of the smaller tail (of the numerical work, not of an
-        approximation that ``method`` names). Where T cannot vary and equals t, both tails are 1. A value
+        approximation that ``method`` names); 1 where only its order is known, which happens below 1e-280:
+        its logarithm is then an upper bound, or extrapolated. Where T cannot vary and equals t, both tails are 1. A value
         that is not a number gives tails that are not a number.
     """
 
@@ -102,13 +105,15 @@ def both(
         max(guess, abs(start)),
         edge(spectrum, t, upper),
         tolerance=0.3 if slow else 0.02,
+        most=10 if slow else 60,
     )
     if not found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
     tail = integrate(log_det, c, width, tolerance=1e-10 if slow else 1e-13)
     if tail.accuracy > 1e-6 and found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    small = min(tail.log_tail, 0.0)
+    # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds the tail.
+    small = min(tail.log_tail if tail.accuracy < 1e-2 else tail.log_bound, 0.0)
     large = float(np.log1p(-np.exp(small))) if small > -700.0 else 0.0
     return Both(large, small, tail.accuracy) if upper else Both(small, large, tail.accuracy)
 
@@ -137,12 +142,24 @@ class Lattice:
     @property
     def step(self) -> float:
         spread = (self.mean - self.low) * (self.high - self.mean) / (self.high - self.low)
-        return min(self.sd / spread, 0.5)
+        return min(self.sd / spread, 0.25)
 
     def node(self, k: int) -> float:
         """t of node k."""
         u = np.log((self.mean - self.low) / (self.high - self.mean)) + k * self.step
         return float(self.low + (self.high - self.low) * special.expit(u))
+
+    def _scores(self, nodes: npt.NDArray[np.int64]) -> Array:
+        """Scores at nodes of one side, from the middle outwards; a straight line in u once p is below 1e-300."""
+        out = np.empty(len(nodes))
+        for i, k in enumerate(nodes):
+            if i > 1 and min(abs(out[i - 1]), abs(out[i - 2])) > FAR:
+                slope = (out[i - 1] - out[i - 2]) / (nodes[i - 1] - nodes[i - 2])
+                out[i:] = out[i - 1] + slope * (nodes[i:] - nodes[i - 1])
+                break
+            score = self.exact(int(k), self.node(int(k))).score
+            out[i] = score if np.isfinite(score) else np.sign(score) * 1e3
+        return out
 
     def tails(self, values: Array, method: str) -> Tails:
         inside = (values > self.low) & (values < self.high)
@@ -153,11 +170,10 @@ class Lattice:
         place = u / self.step
         first = np.floor(place).astype(int) - POINTS // 2 + 1
         needed = np.unique((first[:, None] + np.arange(POINTS)).ravel())
-        known = {int(k): self.exact(int(k), self.node(int(k))).score for k in needed}
         base = int(needed.min())
         table = np.full(int(needed.max()) - base + 1, np.nan)
-        for k, value in known.items():
-            table[k - base] = value
+        for side in (needed[needed >= 0], needed[needed < 0][::-1]):
+            table[side - base] = self._scores(side)
         scores = table[first[:, None] - base + np.arange(POINTS)]
         score = np.einsum("ij,ij->i", _lagrange(place - first), scores)
         score = np.where(values >= self.high, np.inf, np.where(values <= self.low, -np.inf, score))
@@ -168,7 +184,7 @@ class Lattice:
             special.log_ndtr(score),
             special.log_ndtr(-score),
             method,
-            np.full(len(values), 1e-5),
+            np.where(np.abs(score) < FAR, 1e-5, 1.0),
         )
 
 
