@@ -123,6 +123,11 @@ def cite(text: str) -> str:
     return f"({'; '.join(words)})" if words else ""
 
 
+def with_source(sentence: str, source: str) -> str:
+    """A sentence with its source in brackets before the full stop."""
+    return f"{sentence.rstrip(' .')} {cite(source)}".rstrip() + "."
+
+
 def authors(field: str) -> str:
     """ "Bell, Robert M. and McCaffrey, Daniel F." → "Bell, R. M. & McCaffrey, D. F."."""
     names = [_initials(n) for n in field.split(" and ")]

@@ -126,7 +126,7 @@ def _lines(panel: Axes, curve: Curve, x_to: float, color: str) -> None:
         if not x:
             continue
         hue = color if k == 0 else LIGHT.ink
-        panel.plot(x, y, color=hue, linewidth=2, linestyle=styles[k % 3])  # type: ignore[arg-type]
+        panel.plot(x, y, color=hue, linewidth=2, linestyle=styles[k % 3])
         panel.annotate(
             name, (x[-1], y[-1]), xytext=(-2, -15), textcoords="offset points", ha="right", fontsize=SMALL,
             color=LIGHT.ink,
@@ -186,7 +186,7 @@ def paint_groups(curve: Curve, structure: str, width: float) -> Figure:
     order = np.argsort(np.array(curve.y), kind="stable")
     count = len(order)
     labelled = len(curve.labels) > 0 and count <= LISTED
-    row = 17.0 if labelled else max(1.2, min(8.0, 420 / count))
+    row = 19.0 if labelled else max(1.2, min(8.0, 420 / count))
     left = min(150.0, 0.36 * width) if labelled else 8.0
     figure = blank(width, 20 + row * count + 44)
     panel = axes(figure, left, 12, width - left - 12, row * count + 6)

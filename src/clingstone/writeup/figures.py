@@ -106,11 +106,11 @@ def _ladder_alt(results: Results, names: Sequence[str]) -> str:
 
 def _paint_ladder(drawn: Sequence[tuple[str, list[Rung]]], width: float) -> Figure:
     plan = _plan([r for _, rungs in drawn for r in rungs], width)
-    head, foot = 32.0, 36.0
+    head, foot = 34.0, 40.0
     figure = blank(width, sum(head + plan.rung * len(rungs) + foot for _, rungs in drawn))
     top = 0.0
     for name, rungs in drawn:
-        say(figure, 0, top + 14, clip(name, width - 10, 13), fontsize=13, fontweight="bold")
+        say(figure, 0, top + 14, clip(name, width - 10, 14.5), fontsize=14.5, fontweight="bold")
         _panel(figure, rungs, top + head, plan)
         top += head + plan.rung * len(rungs) + foot
     return figure
@@ -136,10 +136,10 @@ def _plan(rungs: Sequence[Rung], width: float) -> Plan:
     label = max(len(r.label) for r in rungs) * LETTER * 1.08
     if width < PHONE:
         one = label + figures < width
-        return Plan(width, True, 4.0, 8.0, 42.0 if one else 58.0, 1 if one else 2)
+        return Plan(width, True, 4.0, 8.0, 46.0 if one else 64.0, 1 if one else 2)
     room = width - figures - 24
     left = min(label + 12, max(0.5 * room, room - 220))
-    return Plan(width, False, left, figures + 12, 26.0 if label + 12 <= left else 36.0, 2)
+    return Plan(width, False, left, figures + 12, 29.0 if label + 12 <= left else 40.0, 2)
 
 
 def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
@@ -158,7 +158,7 @@ def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
         _rung_words(figure, r, top + plan.rung * i, plan)
     if not low <= 0 <= high:
         side, words = (plan.left, "← zero") if low > 0 else (plan.width - plan.right, "zero →")
-        y = top + plan.rung * len(rungs) + 26
+        y = top + plan.rung * len(rungs) + 29
         say(figure, side, y, words, ha="left" if low > 0 else "right", fontsize=SMALL, color=LIGHT.muted)
 
 
@@ -174,7 +174,7 @@ def _rung_words(figure: Figure, r: Rung, top: float, plan: Plan) -> None:
             clip(r.label, plan.width if plan.words == 2 else plan.width - 130, SMALL + 1),
             **style,
         )
-        x, y = (0.0, top + 25) if plan.words == 2 else (plan.width, top + 9)
+        x, y = (0.0, top + 27) if plan.words == 2 else (plan.width, top + 9)
         say(figure, x, y, r.figures, ha="left" if plan.words == 2 else "right", **style)
         return
     most = max(12, int((plan.left - 8) / (LETTER * (1.08 if chosen else 1))))
@@ -234,10 +234,10 @@ def share_bar(results: Results) -> Plate | None:
 
 def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
     phone = width < PHONE
-    row = 26.0
+    row = 38.0 if phone else 29.0
     height = 44 + row * len(parts) + 30
     figure = blank(width, height)
-    left, right = (0.32 * width, 10.0) if phone else (0.34 * width, 0.27 * width)
+    left, right = (0.41 * width, 10.0) if phone else (0.34 * width, 0.27 * width)
     bar = axes(figure, 0 if phone else left, 6, width - (0 if phone else left + right), 26)
     bar.axis("off")
     bar.set_xlim(0, 1)
@@ -290,8 +290,8 @@ def _draw_share(
     if math.isfinite(s.low + s.high):
         figures += f"  ({percent_span(s.low, s.high)})"
     if phone:
-        say(figure, 0, y - 6, clip(label, left - 6, SMALL), fontsize=SMALL)
-        say(figure, 0, y + 7, figures, fontsize=SMALL - 1, color=LIGHT.muted)
+        say(figure, 0, y - 8, clip(label, left - 6, SMALL), fontsize=SMALL)
+        say(figure, 0, y + 8, figures, fontsize=SMALL - 0.5, color=LIGHT.muted)
     else:
         say(figure, 0, y, clip(label, left - 10, TEXT - 0.5), fontsize=TEXT - 0.5)
         say(figure, width, y, figures, ha="right", fontsize=TEXT - 0.5)

@@ -19,8 +19,8 @@ if TYPE_CHECKING:
 WIDE = 660.0  # CSS pixels, as wide as the page's column of figures
 NARROW = 336.0  # a phone of 360 pixels less its margins
 PAGE_FONT = "system-ui, -apple-system, 'Segoe UI', 'Noto Sans', 'Liberation Sans', Arial, sans-serif"
-TEXT = 12.0
-SMALL = 10.5
+TEXT = 13.5
+SMALL = 12.0
 
 
 @dataclass(frozen=True)

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 from collections.abc import Iterable, Mapping
 from functools import cache
 from importlib.resources import files
@@ -13,7 +14,7 @@ from clingstone.evidence.finding import Finding
 from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
 from clingstone.writeup import curves, figures, tables
-from clingstone.writeup.bibliography import cite, references_of
+from clingstone.writeup.bibliography import cite, references_of, with_source
 from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
 from clingstone.writeup.methods import checklist, report_this
 from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
@@ -95,7 +96,13 @@ def _environment() -> Environment:
         undefined=StrictUndefined,
         trim_blocks=True,
         lstrip_blocks=True,
+        finalize=_tied,
     )
+
+
+def _tied(value: Any) -> Any:
+    """Numbers keep their unit: a plain text never breaks between a figure and its per cent sign."""
+    return re.sub(r"(\d) %", "\\1\u00a0%", value) if type(value) is str else value
 
 
 def _asset(name: str) -> str:
@@ -194,7 +201,7 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
             {
                 "title": title,
                 "role": m.role if own else "",
-                "glyph": m.glyph if own else "·",
+                "glyph": m.glyph if own else "•",
                 "findings": [_finding(f) for f in sorted(found, key=lambda f: not f.primary)],
                 "plates": [_plate(p) for p in plates.get(structure, ())],
                 "table": _table(tables.evidence(results, structure)),
@@ -244,14 +251,14 @@ def _advice(results: Results) -> dict[str, Any]:
     refused = tables.refused(results)
     best = advised(results)
     return {
-        "because": [f"{r.sentence} {cite(r.source)}".strip() for r in advice.because],
+        "because": [with_source(r.sentence, r.source) for r in advice.because],
         "alternatives": [_alternative(results, c.remedy, c.at, c.because) for c in advice.alternatives],
         "refused": _table(refused) if refused else None,
         "accounts": [
             {"name": fit.name, "advised": fit is best, "rows": list(_account(fit))}
             for fit in ordered(results)
         ],
-        "cautions": [f"{r.sentence} {cite(r.source)}".strip() for r in advice.cautions] + list(USUAL),
+        "cautions": [with_source(r.sentence, r.source) for r in advice.cautions] + list(USUAL),
     }
 
 

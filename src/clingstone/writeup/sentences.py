@@ -23,7 +23,7 @@ from clingstone.display import (
 )
 from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
-from clingstone.writeup.bibliography import cite
+from clingstone.writeup.bibliography import with_source
 from clingstone.writeup.items import ITEMS, Section, Sentence
 from clingstone.writeup.read import (
     advised,
@@ -70,8 +70,7 @@ def noun(g: GroupSummary) -> str:
 def design(results: Results) -> Iterable[Sentence]:
     case = results.case
     yield Sentence(
-        f"The analysis rests on {number(case.n, 0)} of the {count(case.rows_read, 'row')} read from "
-        f"{case.name}.",
+        f"The analysis rests on {_part(case.n, case.rows_read)} read from {case.name}.",
         ("M2",),
     )
     if case.dropped:
@@ -85,12 +84,21 @@ def design(results: Results) -> Iterable[Sentence]:
     yield from _assignment(results)
 
 
+def _part(kept: int, read: int) -> str:
+    return f"all {count(read, 'row')}" if kept == read else f"{number(kept, 0)} of the {count(read, 'row')}"
+
+
+def _sizes(smallest: int, largest: int) -> str:
+    if smallest == largest:
+        return count(smallest, "row")
+    return f"{number(smallest, 0)} to {number(largest, 0)} rows"
+
+
 def _group_words(g: GroupSummary) -> str:
     inside = f" within {g.parent}" if g.parent else ""
     text = (
-        f"Rows are grouped by {g.key}{inside}: {count(g.count, noun(g))} of {number(g.smallest, 0)} to "
-        f"{number(g.largest, 0)} rows (median {g.median:g}, coefficient of variation of size "
-        f"{number(g.cv, 2)})"
+        f"Rows are grouped by {g.key}{inside}: {count(g.count, noun(g))} of {_sizes(g.smallest, g.largest)} "
+        f"(median {g.median:g}, coefficient of variation of size {number(g.cv, 2)})"
     )
     return text + (f", {g.singletons} of them with a single row." if g.singletons else ".")
 
@@ -98,12 +106,12 @@ def _group_words(g: GroupSummary) -> str:
 def _order_and_place(results: Results) -> Iterable[Sentence]:
     s, p = results.case.serial, results.case.spatial
     if s is not None:
-        step = f", one step being {significant(s.step, 3)} {s.unit}".rstrip() if s.step else ""
+        step = f", one step being {s.step:g} {s.unit}".rstrip() if s.step else ""
         gaps = f"; {count(s.gaps, 'step')} missing inside series" if s.gaps else ""
         ties = f"; {count(s.ties, 'row')} at a time already taken" if s.ties else ""
         yield Sentence(
             f"Order in time is given by {s.time} within {s.series}: {count(s.count, 'series', 'series')} of "
-            f"{s.shortest} to {s.longest} rows from {s.first} to {s.last}, spacing {s.spacing}"
+            f"{_sizes(s.shortest, s.longest)} from {s.first} to {s.last}, spacing {s.spacing}"
             f"{step}{gaps}{ties}.",
             ("M3",),
         )
@@ -224,8 +232,7 @@ def checks(results: Results) -> Iterable[Sentence]:
             else ""
         )
         caveats = "".join(f" {_no_stop(c)}." for c in f.caveats)
-        source = cite(f.source)
-        said = f"{_no_stop(f.sentence)} {source}." if source else f"{_no_stop(f.sentence)}."
+        said = with_source(f.sentence, f.source)
         label = "" if f.primary else " (exploratory)"
         yield Sentence(f"{_upper(test_words(f))}{label}: {said}{how}{holm}{caveats}", ("M12",))
     skipped = [f for f in results.evidence if f.verdict == "not applicable"]
@@ -244,10 +251,12 @@ def estimates(results: Results) -> Iterable[Sentence]:
         yield Sentence(f"No refit is advised ({results.advice.state}): {results.advice.headline}", ("M6",))
         return
     account = best.account
-    yield Sentence(
+    ingredients = (
         f"The advised refit is: {best.name}. Estimator: {account.estimator}; covariance: "
-        f"{account.covariance}; small-sample factor: {account.factor}{_items(best)} {cite(account.source)}".rstrip()
-        + ".",
+        f"{account.covariance}; small-sample factor: {account.factor}{_items(best)}"
+    )
+    yield Sentence(
+        with_source(ingredients, account.source),
         ("M6", "M7", "M14") if _has_clusters(best) else ("M6", "M7"),
     )
     yield Sentence(
@@ -295,9 +304,7 @@ def estimate_words(results: Results, fit: Refit, name: str) -> str:
 
 def _choice(results: Results) -> Iterable[Sentence]:
     for reason in results.advice.because:
-        yield Sentence(
-            f"Why this refit: {_no_stop(reason.sentence)} {cite(reason.source)}".rstrip() + ".", ("M6", "M11")
-        )
+        yield Sentence(f"Why this refit: {with_source(reason.sentence, reason.source)}", ("M6", "M11"))
     if results.case.assigned or results.case.sampled:
         level = listed(
             dict.fromkeys([*results.case.assigned.values(), *filter(None, [results.case.sampled])])
@@ -342,7 +349,7 @@ def software(results: Results) -> Iterable[Sentence]:
     seed = results.settings.get("seed")
     with_seed = f" The seed of every random number was {seed}." if seed is not None else ""
     yield Sentence(
-        f"Computed with clingstone {results.clingstone}{f' ({versions})' if versions else ''}.{with_seed}",
+        f"Computed with clingstone {results.clingstone}{versions}.{with_seed}",
         ("M17",),
     )
 
@@ -357,7 +364,7 @@ USUAL = (
 def cautions(results: Results) -> Iterable[Sentence]:
     for reason in results.advice.cautions:
         item = ("M14",) if "cluster" in reason.rule or "group" in reason.rule else ("M12",)
-        yield Sentence(f"{_no_stop(reason.sentence)} {cite(reason.source)}".rstrip() + ".", item)
+        yield Sentence(with_source(reason.sentence, reason.source), item)
     if results.advice.mean_in_doubt:
         yield Sentence(
             "Whether the mean or the dependence between rows makes the pattern is not settled.", ("M12",)
