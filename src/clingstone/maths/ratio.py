@@ -155,7 +155,12 @@ class Law:
         long = routes.polynomials(self.basis, self.form, self.swept, t)
         spectrum = long or routes.spectrum(self.basis, self.form, self.swept)
         start = 0.0 if self.form.chains is None else routes.saddle(self.form.chains, t)
-        return both(spectrum, t, (first, second), lambda: self.range, start)
+        found = both(spectrum, t, (first, second), lambda: self.range, start)
+        if found.accuracy > 1e-8 and way == "modes" and self.form.order <= routes.DENSE:
+            # Near an end of the attainable range the spectrum of S leaves the contour too little room.
+            sharp = routes.eigen(self.basis, self.form, self.swept)
+            return both(sharp, t, (first, second), lambda: (sharp.low, sharp.high))
+        return found
 
     def _lattice(self) -> Lattice:
         low, high = self.form.low, self.form.high

@@ -63,7 +63,7 @@ def spectrum(basis: Basis, form: Form, swept: Partition | None) -> Spectrum:
     """The spectrum of an exact route; kept with the basis. Raises ValueError for the route "traces"."""
     way = name(form, swept)
     if way == "eigen":
-        return _eigen(basis, form, swept)
+        return eigen(basis, form, swept)
     if way == "modes":
         if form.chains is None:
             return _cell_modes(form, basis.Q)
@@ -92,7 +92,8 @@ def _coordinates(form: Form, U: Array) -> tuple[Array, int]:
     return np.vstack([V, extra[: max(outside, 0)]]), max(outside - int(keep.sum()), 0)
 
 
-def _eigen(basis: Basis, form: Form, swept: Partition | None) -> Eigen:
+@once
+def eigen(basis: Basis, form: Form, swept: Partition | None) -> Eigen:
     """All eigenvalues of MSM on range M, by one dense symmetric problem of the order of the core."""
     U = basis.Q
     if swept is not None:

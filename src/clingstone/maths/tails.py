@@ -24,9 +24,11 @@ class Tails:
     """P(T < t) and P(T > t) for (B,) values t, each with relative accuracy, and how they were got.
 
     accuracy : (B,) estimated relative error of the smaller tail (of the numerical work, not of an
-        approximation that ``method`` names); 1 where only its order is known, which happens below 1e-280:
-        its logarithm is then an upper bound, or extrapolated. Where T cannot vary and equals t, both tails are 1. A value
-        that is not a number gives tails that are not a number.
+        approximation that ``method`` names); 1 where only its order is known, which happens only where the
+        tail is below 1e-280: its logarithm is then an upper bound, or extrapolated.
+
+    Where T cannot vary and equals t, both tails are 1. A value that is not a number gives tails that are
+    not a number.
     """
 
     lower: Array
@@ -112,7 +114,7 @@ def both(
     tail = integrate(log_det, c, width, tolerance=1e-10 if slow else 1e-13)
     if tail.accuracy > 1e-6 and found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds the tail.
+    # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds it.
     small = min(tail.log_tail if tail.accuracy < 1e-2 else tail.log_bound, 0.0)
     large = float(np.log1p(-np.exp(small))) if small > -700.0 else 0.0
     return Both(large, small, tail.accuracy) if upper else Both(small, large, tail.accuracy)
@@ -150,7 +152,7 @@ class Lattice:
         return float(self.low + (self.high - self.low) * special.expit(u))
 
     def _scores(self, nodes: npt.NDArray[np.int64]) -> Array:
-        """Scores at nodes of one side, from the middle outwards; a straight line in u once p is below 1e-300."""
+        """Scores at nodes of one side, from the middle outwards; a straight line in u beyond FAR."""
         out = np.empty(len(nodes))
         for i, k in enumerate(nodes):
             if i > 1 and min(abs(out[i - 1]), abs(out[i - 2])) > FAR:
