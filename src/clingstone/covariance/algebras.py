@@ -16,7 +16,6 @@ from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
-from scipy import linalg
 
 from clingstone.covariance.components import Component, Parameter
 from clingstone.covariance.kept import kept
@@ -29,6 +28,8 @@ from clingstone.maths.groups import Classes, Load
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits, NotSupported
+
+HEAVY_SITES = 800
 
 
 @dataclass(frozen=True, eq=False)
@@ -101,6 +102,11 @@ class Pieces:
     def gram(self, theta: Array, response: Response) -> Gram:
         raise NotSupported("no algebra was chosen for these components")
 
+    @property
+    def heavy(self) -> bool:
+        """One Gram takes long enough for a search to spare them."""
+        return False
+
     def grams(self, thetas: Array, response: Response) -> list[Gram]:
         """Grams at many θ (d, K)."""
         return [self.gram(theta, response) for theta in thetas.T]
@@ -119,6 +125,10 @@ class Layered(Pieces):
     spatial: SpatialPiece | None = None
     above: tuple[GroupPiece, ...] = ()
 
+    @property
+    def heavy(self) -> bool:
+        return self.spatial is not None and self.spatial.sites.count > HEAVY_SITES
+
     def gram(self, theta: Array, response: Response) -> Gram:
         theta = np.asarray(theta, dtype=float)
         gram, load = self._rows(theta, response)
@@ -135,6 +145,21 @@ class Layered(Pieces):
             return gram
         assert load is not None
         return matern.top(gram, load, self._between(theta))
+
+    def grams(self, thetas: Array, response: Response) -> list[Gram]:
+        """As ``gram`` at each column of θ (d, K); places alone share one eigendecomposition per range."""
+        if self.spatial is None or self.serial is not None or self.chain or self.above or response.B == 1:
+            return super().grams(thetas, response)
+        load = self._plain(response)
+        assert load is not None
+        base = reml.independent(self.design.p, response.ss)
+        out: list[Gram] = [base] * thetas.shape[1]
+        for reach in np.unique(thetas[0]):
+            at = np.flatnonzero(thetas[0] == reach)
+            spectrum = matern.Spectrum.of(load, self.spatial.R(thetas[:, at[0]]))
+            for k, ratio in zip(at.tolist(), self.spatial.variance(thetas[:, at]), strict=True):
+                out[k] = spectrum.top(base, float(ratio))
+        return out
 
     # ---- rows: I or AR(1) --------------------------------------------------------------
 
@@ -189,17 +214,17 @@ class Layered(Pieces):
         assert self.serial is not None
         assert self._cells is not None
         part, form = self._cells, self.serial.links.forms[length][which]
-        z = self._ones
-        Sz = form.apply(z)
+        z, key = self._ones, ("form load", part.key, form.key)
 
         def of_design() -> tuple[Array, Array]:
+            Sz = form.apply(z)
             return part.sums(z * Sz), part.sums(Sz[:, None] * self.design.Q)
 
-        c, TQ = kept(self.design, ("form load", part.key, form.key), of_design)
-        TE = kept(
-            response, ("form load", part.key, form.key), lambda: part.sums(Sz[:, None] * response.residual)
-        )
-        return c, TQ, TE
+        def of_response() -> Array:
+            return part.sums(form.apply(z)[:, None] * response.residual)
+
+        c, TQ = kept(self.design, key, of_design)
+        return c, TQ, kept(response, key, of_response)
 
     def _by_row(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
         """Rows whitened one by one: irregular times."""
@@ -266,13 +291,13 @@ class Dense(Pieces):
 
     def gram(self, theta: Array, response: Response) -> Gram:
         L = self._factor(theta)
-        W = linalg.solve_triangular(L, np.hstack([self.design.Q, response.residual]), lower=True)
+        W = reml.forward(L, np.hstack([self.design.Q, response.residual]))
         WQ, WE = W[:, : self.design.p], W[:, self.design.p :]
         logdet = float(2 * np.log(np.diag(L)).sum())
         return Gram(WQ.T @ WQ, WQ.T @ WE, np.einsum("ij,ij->j", WE, WE), logdet)
 
     def whiten(self, theta: Array, block: Array) -> Array:
-        return np.asarray(linalg.solve_triangular(self._factor(theta), block, lower=True))
+        return reml.forward(self._factor(theta), block)
 
 
 Chosen = Layered | Dense

@@ -260,7 +260,9 @@ class Fits:
         m = self.design.m
         with self.run.progress("fitting " + ", ".join(sorted(node)), 1) as advance:
             best = minimise(
-                lambda t: float(reml.criterion(algebra.gram(t, self.response), m)[0]), algebra.parameters
+                lambda t: float(reml.criterion(algebra.gram(t, self.response), m)[0]),
+                algebra.parameters,
+                starts=1 if algebra.heavy else 3,
             )
             advance(1)
         sigma2 = reml.scale(algebra.gram(best.theta, self.response), m)
@@ -301,8 +303,8 @@ class Fits:
                 def value(t: Array, column: Response = column) -> float:
                     return float(reml.criterion(algebra.gram(t, column), m)[0])
 
-                best = minimise(value, algebra.parameters, warm)
-                warm = best.theta if warm is None else warm
+                best = minimise(value, algebra.parameters, warm=warm)
+                warm = best if warm is None else warm
                 found.append((best, float(reml.scale(algebra.gram(best.theta, column), m)[0])))
                 advance(1)
         return self._model(

@@ -210,7 +210,7 @@ class SpatialPiece:
             float(np.log(1e-8 / c.max())),
             RATIO_HIGH,
             tuple(float(np.log(x)) for x in (0.25 / mean, 1.0, 4.0)),
-            tuple(np.linspace(np.log(0.02 / mean), 7.0, 17)),
+            tuple(np.linspace(np.log(0.02 / mean), 10.0, 21)),
             True,
         )
         return reach, ratio

@@ -6,6 +6,8 @@ three dimensions (Stein 1999; Gneiting 2013, Bernoulli 19).
 
 from __future__ import annotations
 
+from dataclasses import dataclass
+
 import numpy as np
 import numpy.typing as npt
 from scipy import linalg
@@ -13,6 +15,7 @@ from scipy import linalg
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
 from clingstone.maths.once import Array
+from clingstone.maths.reml import forward
 
 # Distance at which the correlation has fallen to 0.05, in units of the range parameter φ: the root
 # of kernel(x, 1, smoothness) = 0.05.
@@ -41,7 +44,7 @@ def top(gram: Gram, load: Load, K: Array) -> Gram:
     """
     L, root = factor(load.c, K)
     TQ, TE = load.TQ / root[:, None], load.TE / root[:, None]
-    HQ, HE = _forward(L, TQ), _forward(L, TE)
+    HQ, HE = forward(L, TQ), forward(L, TE)
     return Gram(
         gram.QQ - TQ.T @ TQ + HQ.T @ HQ,
         gram.QE - TQ.T @ TE + HQ.T @ HE,
@@ -50,17 +53,44 @@ def top(gram: Gram, load: Load, K: Array) -> Gram:
     )
 
 
+@dataclass(frozen=True, eq=False)
+class Spectrum:
+    """Sites at the top of a model whose c does not depend on θ, for every variance ratio at once.
+
+    With D^½RD^½ = UΛU', the Gram at K = λR changes by −H' diag(λΛ/(1 + λΛ)) H, H = U'D^{−½}T: one
+    eigendecomposition per range, O(S·columns) per λ.
+    """
+
+    values: Array
+    HQ: Array
+    HE: Array
+
+    @classmethod
+    def of(cls, load: Load, R: Array) -> Spectrum:
+        root = np.sqrt(load.c)
+        values, U = linalg.eigh(R * root[:, None] * root, overwrite_a=True, check_finite=False)
+        HQ, HE = U.T @ (load.TQ / root[:, None]), U.T @ (load.TE / root[:, None])
+        return cls(np.maximum(values, 0.0), HQ, HE)
+
+    def top(self, gram: Gram, ratio: float) -> Gram:
+        """As :func:`top` with K = λR."""
+        w = ratio * self.values / (1 + ratio * self.values)
+        WQ = self.HQ * w[:, None]
+        return Gram(
+            gram.QQ - WQ.T @ self.HQ,
+            gram.QE - WQ.T @ self.HE,
+            gram.EE - w @ (self.HE * self.HE),
+            gram.logdet + float(np.log1p(ratio * self.values).sum()),
+        )
+
+
 def factor(c: Array, K: Array) -> tuple[Array, Array]:
     """L (S, S) with LL' = I + D^½KD^½, and √c (S,)."""
     root = np.sqrt(c)
     B = K * root[:, None]
     B *= root
     B[np.diag_indices_from(B)] += 1.0
-    return np.asarray(linalg.cholesky(B, lower=True, overwrite_a=True, check_finite=False)), root
-
-
-def _forward(L: Array, block: Array) -> Array:
-    return np.asarray(linalg.solve_triangular(L, block, lower=True, check_finite=False))
+    return np.asarray(np.linalg.cholesky(B)), root
 
 
 def whiten(L: Array, root: Array, codes: npt.NDArray[np.int32], u: Array, block: Array, sums: Array) -> Array:
@@ -69,5 +99,5 @@ def whiten(L: Array, root: Array, codes: npt.NDArray[np.int32], u: Array, block:
     u (n,) : indicator whitened by what lies below; sums (S, k) = U'block; L, root from :func:`factor`.
     """
     inside = sums / root[:, None]
-    change = (_forward(L, inside) - inside) / root[:, None]
+    change = (forward(L, inside) - inside) / root[:, None]
     return np.asarray(block + u[:, None] * change[codes])

@@ -17,7 +17,7 @@ from __future__ import annotations
 from collections.abc import Callable
 
 import numpy as np
-from scipy import linalg
+from scipy.linalg import lapack
 
 from clingstone.maths.basis import Gram
 from clingstone.maths.once import Array
@@ -40,10 +40,16 @@ def reduced(gram: Gram) -> tuple[Array, Array, float]:
     if gram.QQ.shape[0] == 0:
         return np.zeros_like(gram.QE), gram.EE, 0.0
     L = np.linalg.cholesky(gram.QQ)
-    half = linalg.solve_triangular(L, gram.QE, lower=True, check_finite=False)
+    half = forward(L, gram.QE)
     rss = gram.EE - np.einsum("ij,ij->j", half, half)
-    delta = linalg.solve_triangular(L, half, lower=True, trans="T", check_finite=False)
+    delta, _ = lapack.dtrtrs(L, half, lower=1, trans=1)
     return np.asarray(delta), np.asarray(rss), float(2 * np.log(np.diag(L)).sum())
+
+
+def forward(L: Array, block: Array) -> Array:
+    """L⁻¹ block for a lower triangle L; straight to LAPACK, since a search calls it thousands of times."""
+    solved, _ = lapack.dtrtrs(L, block, lower=1)
+    return np.asarray(solved)
 
 
 def rss(gram: Gram) -> Array:

@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 from typing import Any, Protocol
 
 import numpy as np
@@ -42,13 +42,22 @@ class Axis(Protocol):
 
 @dataclass(frozen=True, eq=False)
 class Optimum:
-    """θ̂ (d,), the criterion there, which coordinates are at a bound, and how the search ended."""
+    """θ̂ (d,), the criterion there, which coordinates are at a bound, and how the search ended.
+
+    curvature (d, d), start (d,) : second derivatives, and the best point before components were put to
+    zero; what a search of a similar criterion starts from.
+    """
 
     theta: Array
     value: float
     at_bound: Flags
     converged: bool
     history: tuple[str, ...] = ()
+    curvature: Array = field(default_factory=lambda: np.eye(0), repr=False)
+    start: Array = field(default_factory=lambda: np.zeros(0), repr=False)
+
+
+Descent = Callable[[Criterion, Array, Flags, Array], tuple[Array, float]]
 
 
 def slack(value: float) -> float:
@@ -56,13 +65,17 @@ def slack(value: float) -> float:
     return 1e-7 + 1e-11 * abs(value)
 
 
-def minimise(f: Criterion, axes: Sequence[Axis], warm: Array | None = None) -> Optimum:
-    """The smallest value of f over the box of the axes. ``warm``: one start instead of many."""
+def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None, starts: int = 3) -> Optimum:
+    """The smallest value of f over the box of the axes.
+
+    starts : of the product of the axes' starts, how many of the best are followed. warm : the optimum
+    of a similar criterion; the search then starts from there alone, with its curvature.
+    """
     if not axes:
         return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
     if len(axes) == 1:
         return _line(f, axes[0])
-    return _several(f, axes, warm)
+    return _several(f, axes, warm, starts)
 
 
 def _line(f: Criterion, axis: Axis) -> Optimum:
@@ -92,19 +105,23 @@ def _line(f: Criterion, axis: Axis) -> Optimum:
     )
 
 
-def _several(f: Criterion, axes: Sequence[Axis], warm: Array | None) -> Optimum:
+def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, keep: int) -> Optimum:
     box = np.array([[a.low, a.high] for a in axes])
     counted = _Counted(f, box)
-    starts = [np.asarray(warm, dtype=float)] if warm is not None else _starts(counted, axes)
     free = np.ones(len(axes), dtype=bool)
-    runs = [_descend(counted, s, free, box) for s in starts]
+    if warm is not None:
+        descend: Descent = _Quasi(warm.curvature)
+        runs = [descend(counted, warm.start, free, box)]
+    else:
+        descend = _descend
+        runs = [_descend(counted, start, free, box) for start in _starts(counted, axes, keep)]
     theta, value = min(runs, key=lambda run: float(run[1]))
-    theta, value, pinned = _pin(counted, axes, theta, value, box)
+    theta, value, pinned = _pin(counted, axes, theta, value, box, descend)
     edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
-    theta, value, ok = _polish(counted, theta, value, ~(edge | pinned), box)
+    theta, value, ok, curvature = _polish(counted, theta, value, ~(edge | pinned), box, warm)
     agree = sum(v <= value + 1e-3 for _, v in runs)
     note = f"{counted.calls} evaluations, {agree} of {len(runs)} starts reached the optimum"
-    return Optimum(theta, value, edge | pinned, ok, (note,))
+    return Optimum(theta, value, edge | pinned, ok, (note,), curvature, runs[0][0])
 
 
 class _Counted:
@@ -122,7 +139,7 @@ class _Counted:
         return value if np.isfinite(value) else 1e300
 
 
-def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
+def _starts(f: Criterion, axes: Sequence[Axis], keep: int) -> list[Array]:
     grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
     order = np.argsort([f(s) for s in grid], kind="stable")
     return [grid[i] for i in order[:keep]]
@@ -141,24 +158,70 @@ def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array
     def inner(part: Array) -> float:
         return f(whole(part))
 
+    def slope(part: Array) -> Array:
+        return gradient(inner, part)
+
     found = optimize.minimize(
         inner,
         start[free],
-        jac=lambda part: gradient(inner, part),
+        jac=slope,
         method="L-BFGS-B",
-        bounds=optimize.Bounds(box[free, 0], box[free, 1]),
+        bounds=[(float(low), float(high)) for low, high in box[free]],
         options=_TIGHT,
     )
     return whole(np.asarray(found.x)), float(found.fun)
 
 
+class _Quasi:
+    """Projected BFGS from a known curvature: few evaluations when the start is close."""
+
+    def __init__(self, curvature: Array) -> None:
+        self.curvature = curvature
+
+    def __call__(self, f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
+        theta, value = start.copy(), f(start)
+        H = self.curvature.copy()
+        slope = gradient(f, theta)
+        for _ in range(40):
+            out = ((theta <= box[:, 0]) & (slope > 0)) | ((theta >= box[:, 1]) & (slope < 0))
+            move = free & ~out
+            if not move.any():
+                break
+            step = np.zeros_like(theta)
+            step[move] = -np.linalg.solve(H[np.ix_(move, move)], slope[move])
+            if -float(step @ slope) < 1e-8:
+                break
+            for shrink in (1.0, 0.4, 0.15, 0.03):
+                trial = np.clip(theta + shrink * step, box[:, 0], box[:, 1])
+                new = f(trial)
+                if new < value:
+                    break
+            else:
+                break
+            after = gradient(f, trial)
+            s, y = trial - theta, after - slope
+            if float(s @ y) > 1e-10:
+                Hs = H @ s
+                H += np.outer(y, y) / float(s @ y) - np.outer(Hs, Hs) / float(s @ Hs)
+            theta, value, slope = trial, new, after
+        return theta, value
+
+
 def _pin(
-    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array
+    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array, descend: Descent
 ) -> tuple[Array, float, Flags]:
-    """Components that are as good left out: their coordinate goes to ``low`` and is kept there."""
+    """Components that are as good left out: their coordinate goes to ``low`` and is kept there.
+
+    So does a coordinate to an end of its range when that is as good (a criterion that is flat out there).
+    """
     pinned = np.zeros(len(axes), dtype=bool)
     for i, axis in enumerate(axes):
-        if not axis.vanishes:
+        for end in (axis.high,) if axis.vanishes else (axis.low, axis.high):
+            out = theta.copy()
+            out[i] = end
+            if f(out) <= value + slack(value):
+                theta, pinned[i] = out, True
+        if not axis.vanishes or pinned[i]:
             continue
         out = theta.copy()
         out[i] = axis.low
@@ -166,7 +229,7 @@ def _pin(
             continue
         free = ~pinned
         free[i] = False
-        out, v = _descend(f, out, free, box)
+        out, v = descend(f, out, free, box)
         if v > value + slack(value):
             continue
         back = _uphill(f, axis, i, out, v)
@@ -189,25 +252,47 @@ def _uphill(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array 
     return None
 
 
-def _polish(f: Criterion, theta: Array, value: float, free: Flags, box: Array) -> tuple[Array, float, bool]:
-    """Newton steps on the free coordinates; converged when the Newton decrement is below 1e-6."""
-    if not free.any():
-        return theta, value, True
-    for _ in range(6):
+def _polish(
+    f: Criterion, theta: Array, value: float, free: Flags, box: Array, warm: Optimum | None
+) -> tuple[Array, float, bool, Array]:
+    """Newton steps on the free coordinates; converged when the Newton decrement is below 1e-6.
 
-        def g(part: Array, here: Array = theta) -> float:
+    Returns the curvature too, with that of ``warm`` (or one) for coordinates at a bound.
+    """
+    d = len(theta)
+    curvature = np.eye(d) if warm is None else warm.curvature.copy()
+    decrement = 0.0
+    for _ in range(6):
+        if warm is not None:
+            # The curvature is known well enough: the gradient alone tells whether the search has arrived.
+            part = np.flatnonzero(free)
+            slope = gradient(f, theta)[part]
+            decrement = float(slope @ np.linalg.solve(curvature[np.ix_(part, part)], slope))
+            if decrement < 1e-6:
+                return theta, value, True, curvature
+
+        def g(part: Array, here: Array = theta, at: Flags = free) -> float:
             whole = here.copy()
-            whole[free] = part
+            whole[at] = part
             return f(whole)
 
+        if not free.any():
+            return theta, value, True, curvature
         slope, H = gradient(g, theta[free]), hessian(g, theta[free])
+        # A coordinate that changes nothing (the range of a component of zero variance) is left alone.
+        alive = np.diag(H) > 1e-9 * np.abs(H).max()
+        if not alive.all():
+            free = free.copy()
+            free[np.flatnonzero(free)[~alive]] = False
+            continue
         size, U = np.linalg.eigh(H)
         if size.min() <= 0:
-            return theta, value, bool(np.abs(slope).max() < 1e-3)
+            return theta, value, bool(np.abs(slope).max() < 1e-3), curvature
+        curvature[np.ix_(free, free)] = H
         step = U @ ((U.T @ slope) / size)
         decrement = float(slope @ step)
-        if decrement < 1e-9:
-            return theta, value, True
+        if decrement < 1e-8:
+            return theta, value, True, curvature
         for shrink in (1.0, 0.5, 0.1):
             part = np.clip(theta[free] - shrink * step, box[free, 0], box[free, 1])
             v = g(part)
@@ -217,5 +302,5 @@ def _polish(f: Criterion, theta: Array, value: float, free: Flags, box: Array) -
                 value = v
                 break
         else:
-            return theta, value, decrement < 1e-6
-    return theta, value, decrement < 1e-6
+            break
+    return theta, value, decrement < 1e-6, curvature
