@@ -18,9 +18,9 @@ from clingstone.run import Alternative
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
-# Squared norm of the residuals, relative to y, below which the model is said to fit perfectly:
-# rounding of y'y in double precision leaves about this much (METHOD: 1e-24 of y'y).
-PERFECT = 1e-24
+# Squared norm of the residuals, relative to y'y, below which the model is said to fit perfectly: the
+# projection leaves a few units of rounding of y per row, and a factor of 64 keeps well clear of it.
+PERFECT = (64 * np.finfo(float).eps) ** 2
 
 
 def degenerate(response: Response) -> npt.NDArray[np.bool_]:
@@ -65,10 +65,17 @@ def normal_quantile(fits: Fits) -> float:
     return float(special.ndtri(0.5 + fits.run.settings.confidence / 2))
 
 
-def fisher_z(estimate: Array, sd: float, quantile: float) -> tuple[Array, Array]:
-    """Interval of a correlation on Fisher's scale: tanh(atanh r ± z·sd)."""
-    z = np.arctanh(np.clip(estimate, -0.999, 0.999))
-    return np.tanh(z - quantile * sd), np.tanh(z + quantile * sd)
+def arcsine(estimate: Array, sd: float, quantile: float) -> tuple[Array, Array]:
+    """Interval of a serial correlation: sin(arcsin r ± z·sd), sd that at 0.
+
+    Var r ≈ (1 − ρ²)/n for a first-order process (not (1 − ρ²)²/n as for pairs), so the arcsine, not
+    Fisher's z, makes it even.
+    """
+    z = np.arcsin(np.clip(estimate, -1.0, 1.0))
+    bound = np.pi / 2
+    return np.sin(np.clip(z - quantile * sd, -bound, bound)), np.sin(
+        np.clip(z + quantile * sd, -bound, bound)
+    )
 
 
 def simulated(response: Response, fits: Fits, purpose: str, draws: int, index: int = 0) -> Response:

@@ -8,14 +8,16 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import sparse
 
+from clingstone.covariance.kept import kept
 from clingstone.design.derived import sweep
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.autocorrelation import elapsed_curve, lag_curve
+from clingstone.evidence.calibrate import curve
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.nested import level_name
-from clingstone.evidence.read import Plain, direction, fisher_z, normal_quantile, ratio, tail_p
+from clingstone.evidence.read import Plain, arcsine, direction, normal_quantile, ratio, tail_p
 from clingstone.evidence.words import between, correlation, counted, number, p_value
 from clingstone.maths.forms import Form, differences, graph, lagged
 from clingstone.maths.once import Array, once
@@ -131,12 +133,28 @@ def one_step(response: Response, form: Form, law: Law, doubled: bool = True) -> 
     """Score estimate ρ̂ of V = I + ρK at ρ = 0, and its exact null standard deviation.
 
     With T = e'Se/e'e and K = 2S (``doubled``) or K = S: dE T/dρ at 0 is κ = (m + 2) Var T, or half of
-    it, so ρ̂ = (T − E T)/κ is right to first order for any design: the bias of a residual
-    autocorrelation (E T < 0, and shrinkage by the regressors) is taken out. Larger ρ in short series
-    is still understated.
+    it, so ρ̂ = (T − E T)/κ is right to first order for any design.
     """
     slope = (response.design.m + 2) * law.variance * (1.0 if doubled else 0.5)
     return (ratio(response, form) - law.mean) / slope, float(np.sqrt(law.variance) / slope)
+
+
+def correlation_of_errors(fits: Fits, response: Response, lag: Form, law: Law) -> tuple[Array, Array, Array]:
+    """Correlation one step apart and both ends of its interval, each (B,).
+
+    By inversion of the mean of T under a first-order process (``calibrate``) where the rows can be
+    laid out on steps, else one score step with an arcsine interval.
+    """
+    run, key = fits.run, None if law.swept is None else law.swept.key
+    found = kept(
+        fits.design,
+        ("serial curve", key, run.settings.seed),
+        lambda: curve(response.design, law, run.child("serial interval")),
+    )
+    if found is not None:
+        return found.invert(ratio(response, lag), normal_quantile(fits))
+    rho, sd = one_step(response, lag, law)
+    return (np.clip(rho, -0.999, 0.999), *arcsine(rho, sd, normal_quantile(fits)))
 
 
 def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading:
@@ -155,16 +173,15 @@ def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading
     alternative = fits.run.settings.alternative
     tails = law_of(design, form, swept).tails(d, fits.depth)
     p, log_p = tail_p(tails, alternative, "lower")
-    rho, sd = one_step(response, lag, law_of(design, lag, swept))
-    low, high = fisher_z(rho, sd, normal_quantile(fits))
+    rho, low, high = correlation_of_errors(fits, response, lag, law_of(design, lag, swept))
     return Reading(
         statistic=d,
         statistic_name=name,
         p=p,
         log_p=log_p,
         p_method=f"{tails.method}, {direction(alternative)}",
-        estimate=np.clip(rho, -0.999, 0.999),
-        estimate_name=f"correlation of residuals {step_words(series)}",
+        estimate=rho,
+        estimate_name=f"correlation of errors {step_words(series)}",
         low=low,
         high=high,
         n_used=pairs,
@@ -178,8 +195,6 @@ def _caveats(design: Design, series: Series) -> tuple[str, ...]:
         out.append(
             f"{counted(series.gaps, 'missing step')} inside series: only rows one step apart are compared"
         )
-    if series.part.sizes.max() < 30:
-        out.append("in short series the correlation is understated when it is large")
     if not design.known:
         out.append("only residuals were given: the null law ignores the model's other columns")
     return tuple(out)
@@ -188,7 +203,7 @@ def _caveats(design: Design, series: Series) -> tuple[str, ...]:
 def _sentence(reading: Reading, about: About) -> str:
     r = f"{correlation(column(reading.estimate))}{between(column(reading.low), column(reading.high))}"
     return (
-        f"Residuals {about.words} correlate {r}, over {counted(reading.n_used, 'pair')} of rows "
+        f"Errors {about.words} correlate {r}, by residuals over {counted(reading.n_used, 'pair')} of rows "
         f"({reading.statistic_name} {number(column(reading.statistic), 3)}, "
         f"{p_value(column(reading.p), column(reading.log_p))})."
     )
@@ -207,8 +222,9 @@ def _group_givens(fits: Fits) -> tuple[frozenset[str], ...]:
 class DurbinWatson(Plain):
     """Durbin–Watson statistic of one regular series, with its exact null law at any length.
 
-    d = Σ(e_t − e_{t−1})²/e'e. The size is the lag-one correlation by one score step, corrected for
-    its null mean; its interval is Fisher's z with the exact null standard deviation.
+    d = Σ(e_t − e_{t−1})²/e'e. The size is the correlation of the errors one step apart: the residual
+    correlation with what the regressors took from it put back, and an interval by inversion of its
+    mean and standard deviation under a first-order process (``calibrate``).
     """
 
     id: str = "durbin-watson"
@@ -261,7 +277,8 @@ class IrregularSerial(DurbinWatson):
 
     Pairs more than 4 median gaps or 8 rows apart, and rows at the same time, are left out of K; the
     law is exact for the ratio so defined. The size is the correlation at one median gap by one score
-    step of V = I + ρeK, with Fisher's z and the exact null standard deviation.
+    step of V = I + ρeK, which understates large ones, with an arcsine interval from the exact null
+    standard deviation.
     """
 
     id: str = "irregular-serial"
@@ -290,7 +307,7 @@ class IrregularSerial(DurbinWatson):
         p, log_p = tail_p(tails, alternative, "upper")
         rho, sd = one_step(response, form, law, doubled=False)
         rho, sd = rho / np.e, sd / np.e
-        low, high = fisher_z(rho, sd, normal_quantile(fits))
+        low, high = arcsine(rho, sd, normal_quantile(fits))
         return Reading(
             statistic=value,
             statistic_name="ratio of near products",
@@ -298,7 +315,7 @@ class IrregularSerial(DurbinWatson):
             log_p=log_p,
             p_method=f"{tails.method}, {direction(alternative)}",
             estimate=np.clip(rho, -0.999, 0.999),
-            estimate_name="correlation of residuals one median gap apart",
+            estimate_name="correlation of errors one median gap apart",
             low=low,
             high=high,
             n_used=int(form.S.nnz // 2),

@@ -10,13 +10,14 @@ import numpy.typing as npt
 from scipy import sparse
 from scipy.spatial.distance import pdist
 
+from clingstone.covariance.kept import kept
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, degenerate, exceedance, floats, normal_quantile, simulated
 from clingstone.evidence.spatial import at_sites, site_design, sites_of
 from clingstone.evidence.words import between, correlation, number, p_value
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -49,12 +50,11 @@ class Bins:
             return np.asarray(values / np.where(degenerate(response), np.nan, response.s2))
 
 
-@once
-def pairs_of(design: Design, seed: int) -> Bins:
+def pairs_of(design: Design, rng: np.random.Generator) -> Bins:
     """Bins of about equal numbers of pairs, up to half the largest distance between sites."""
     small = site_design(design)
     sites = sites_of(small)
-    i, j, apart = _pairs(small, np.random.default_rng(seed))
+    i, j, apart = _pairs(small, rng)
     keep = (apart <= sites.extent / 2) & (apart > 0)
     i, j, apart = i[keep], j[keep], apart[keep]
     order = np.argsort(apart, kind="stable")
@@ -97,8 +97,8 @@ class Variogram(Plain):
     """Largest departure of the residual variogram from flat, against draws of Mz on the same pairs.
 
     Each squared difference is divided by its expectation without dependence, so residual bias is
-    out. The statistic is the largest departure in standard deviations of the draws; p is exact for
-    normal errors. The size is 1 − semivariance in the first bin: the correlation of the closest sites.
+    out. The statistic is the largest departure in standard deviations of the draws; p comes from
+    normal draws. The size is 1 − semivariance in the first bin: the correlation of the closest sites.
     """
 
     id: str = "variogram"
@@ -123,7 +123,7 @@ class Variogram(Plain):
             statistic=_departure(value, centre, spread),
             statistic_name="largest departure, in standard deviations",
             p=exceedance(_departure(value, centre, spread), drawn),
-            p_method=f"exact by {DRAWS} draws",
+            p_method=f"by {DRAWS} draws of independent residuals",
             estimate=np.clip(first, -1.0, 1.0),
             estimate_name=f"correlation of sites {number(distance)}{' ' + unit if unit else ''} apart",
             low=np.clip(first - half, -1.0, 1.0),
@@ -164,7 +164,8 @@ def _prepared(fits: Fits) -> tuple[Bins, Response, Array, Array, Array]:
     small = site_design(fits.design)
     if small.m < 5:
         raise NotSupported(f"{small.m} degrees of freedom between sites", "At least 5 would be needed.")
-    bins = pairs_of(fits.design, fits.run.settings.seed)
+    key = ("variogram pairs", fits.run.settings.seed)
+    bins = kept(fits.design, key, lambda: pairs_of(fits.design, fits.run.child("variogram pairs")))
     response = at_sites(fits.response)
     null = bins.read(simulated(response, fits, "variogram", DRAWS))
     centre, spread = null.mean(axis=1), null.std(axis=1, ddof=1)
