@@ -70,7 +70,9 @@ def test_df_do_not_depend_on_the_parameters():
     for i in range(2):
         for j in range(2):
             a, b = np.eye(2)[i] * step, np.eye(2)[j] * step
-            corners = minus_two(at + a + b) - minus_two(at + a - b) - minus_two(at - a + b) + minus_two(at - a - b)
+            corners = (
+                minus_two(at + a + b) - minus_two(at + a - b) - minus_two(at - a + b) + minus_two(at - a - b)
+            )
             H[i, j] = corners / (8 * step[i] * step[j])
     for w in np.eye(3):
         g = np.array(
@@ -117,4 +119,6 @@ def test_an_information_without_an_inverse_is_told():
     H = np.array([[10.0, 3.0], [3.0, -1.0]])
     unsound = curvature.Slopes(np.eye(1), np.zeros((1, 1, 1)), H, 20.0)
     assert not unsound.sound
-    assert not curvature.Slopes(np.eye(1), np.zeros((1, 1, 1)), np.array([[4.0, 2.0], [2.0, 1.0]]), 20.0).sound
+    assert not curvature.Slopes(
+        np.eye(1), np.zeros((1, 1, 1)), np.array([[4.0, 2.0], [2.0, 1.0]]), 20.0
+    ).sound

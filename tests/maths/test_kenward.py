@@ -27,7 +27,9 @@ def dense(Q, group, sigma2, tau2):
     W = np.linalg.inv(info)
     P = [-Q.T @ Vi @ a @ Vi @ Q for a in D]
     inner = sum(
-        W[i, j] * (Q.T @ Vi @ D[i] @ Vi @ D[j] @ Vi @ Q - P[i] @ phi @ P[j]) for i in range(2) for j in range(2)
+        W[i, j] * (Q.T @ Vi @ D[i] @ Vi @ D[j] @ Vi @ Q - P[i] @ phi @ P[j])
+        for i in range(2)
+        for j in range(2)
     )
     return phi, phi + 2 * phi @ inner @ phi, P, W
 

@@ -46,7 +46,11 @@ def test_f_tail_agrees_with_scipy(q, df):
 
 
 def test_rows_invert_one_distribution():
-    estimate, se, df = np.array([[2.0], [2.0], [1.0]]), np.array([[1.0], [0.0], [np.nan]]), np.full((3, 1), 7.3)
+    estimate, se, df = (
+        np.array([[2.0], [2.0], [1.0]]),
+        np.array([[1.0], [0.0], [np.nan]]),
+        np.full((3, 1), 7.3),
+    )
     low, high, p = reference.t_rows(estimate, se, df, 1 - float(reference.t_two_sided(2.0, 7.3)))
     assert low[0, 0] == pytest.approx(0.0, abs=1e-12)
     assert high[0, 0] == pytest.approx(4.0)

@@ -125,7 +125,7 @@ def test_a_direction_that_one_cluster_decides_is_told_and_leaves_the_rest_alone(
 
 
 def test_cr2_is_unbiased_under_the_working_model():
-    basis, part, M, _ = problem(seed=8)
+    basis, _, M, _ = problem(seed=8)
     W = basis.contrast(np.eye(3))
     adjusted = sandwich.adjust(M, W, "CR2")
     D = np.einsum("sgp,tgp->stg", adjusted.a, adjusted.b).sum(axis=2)

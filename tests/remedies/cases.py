@@ -77,7 +77,7 @@ def fits(of: Design, Y, confidence: float = 0.95) -> Fits:
 
 
 def clustered(G: int = 12, seed: int = 3, sizes=(3, 9), p: int = 3):
-    """X (constant, a row covariate, an arm by cluster), groups and y with an intraclass correlation of 0.2."""
+    """X (constant, a row covariate, an arm by cluster), groups, and y of intraclass correlation 0.2."""
     rng = np.random.default_rng(seed)
     group = np.repeat(np.arange(G), rng.integers(*sizes, G))
     n = len(group)

@@ -63,7 +63,7 @@ def test_the_exact_p_agrees_with_draws_from_the_working_law():
 
 
 def test_student_t_undercovers_a_trend_where_the_exact_law_does_not():
-    # Size of t with ν df for a trend at n = 50, ρ = 0.5 is about twice nominal (simulation of the methods note).
+    # Size of t with ν df for a trend at n = 50, ρ = 0.5 is about twice nominal.
     n, rho = 50, 0.5
     X, tick, _ = trend(n=n)
     of = design(X, tick=tick)
@@ -153,7 +153,7 @@ def test_no_order_and_weights_are_refused():
 
 
 def test_a_correlation_next_to_one_is_held_and_told():
-    X, tick, y = trend()
+    X, tick, _ = trend()
     ready = HAC.prepare(design(X, tick=tick), working(0.99999))
     assert ready.rho == 0.999
     assert "held at 0.999" in ready.notes[0]

@@ -156,7 +156,9 @@ def test_sites_with_repeats_take_their_own_intercept_along():
     assert "practical range (correlation 0.05)" in dict(account.items)
     named = fits(design(X, xy=xy, group=np.unique(xy, axis=0, return_inverse=True)[1].ravel()), y)
     assert SPATIAL.node(named) == {"group:clinic", "spatial"}
-    assert refit(SPATIAL, "", named).get("x2").se == pytest.approx(refit(SPATIAL, "", run).get("x2").se, rel=1e-4)
+    assert refit(SPATIAL, "", named).get("x2").se == pytest.approx(
+        refit(SPATIAL, "", run).get("x2").se, rel=1e-4
+    )
 
 
 # ---- refusals -----------------------------------------------------------------------------
@@ -176,8 +178,12 @@ def test_refusals_come_from_the_covariance_room_with_their_reason():
 
 def test_joint_needs_two_structures():
     X, group, y = clustered()
-    with pytest.raises(NotSupported, match="needs two structures that can be estimated; here: clinic") as stop:
-        refit(JOINT, "", fits(design(X, group=group, tick=np.arange(len(y)), series=np.arange(len(y)) // 3), y))
+    with pytest.raises(
+        NotSupported, match="needs two structures that can be estimated; here: clinic"
+    ) as stop:
+        refit(
+            JOINT, "", fits(design(X, group=group, tick=np.arange(len(y)), series=np.arange(len(y)) // 3), y)
+        )
     assert "serial" in stop.value.hint
 
 
@@ -282,7 +288,7 @@ def test_kenward_roger_covers_with_eight_unequal_clinics():
 
 
 def test_satterthwaite_covers_a_trend_in_a_short_series():
-    # n = 20, ρ = 0.7: the size of t with n − p df is about 0.13, Satterthwaite's about 0.07 (methods note).
+    # n = 20, ρ = 0.7: the size of t with n − p df is about 0.13, Satterthwaite's about 0.07.
     n = 20
     X = np.column_stack([np.ones(n), np.arange(n)])
     of = design(X, tick=np.arange(n))

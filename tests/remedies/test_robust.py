@@ -169,7 +169,9 @@ def test_a_joint_test_without_df_is_left_out_and_told():
     group = np.repeat(np.arange(3), 12)
     X = np.column_stack([np.ones(36), rng.normal(size=(36, 3))])
     terms = (Term("constant", (0,), "constant"), Term("blend", (1, 2, 3), "interaction"))
-    result = refit(remedy("cluster-robust"), "clinic", fits(design(X, group=group, terms=terms), rng.normal(size=36)))
+    result = refit(
+        remedy("cluster-robust"), "clinic", fits(design(X, group=group, terms=terms), rng.normal(size=36))
+    )
     assert result.terms == ()
     assert "no joint test of blend" in result.notes[0]
 

@@ -249,6 +249,9 @@ class Gls:
         keys = tuple(level.key for level in design.group.levels)
         return keys if len(keys) == 1 else (TOGETHER.join(keys), *keys)
 
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return frozenset(fits.components[key].family for key in self.node(fits))
+
     def working(self, fits: Fits) -> ErrorModel | None:
         return None
 

@@ -129,6 +129,9 @@ class Hac:
     def abouts(self, design: Design) -> tuple[str, ...]:
         return ("",)
 
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return self.covers
+
     def working(self, fits: Fits) -> ErrorModel | None:
         """The AR(1) of the residuals, or None where these data cannot carry one."""
         if "serial" not in fits.components:

@@ -9,7 +9,7 @@ import numpy as np
 
 from clingstone.design.design import Design
 from clingstone.maths.once import Array
-from clingstone.needs import Family, NotSupported
+from clingstone.needs import NotSupported
 from clingstone.remedies.remedy import Estimates, Interval, JointTest, Ready, Refit, Remedy, multi, rows
 
 if TYPE_CHECKING:
@@ -57,7 +57,7 @@ def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
         remedy=remedy.id,
         name=remedy.name,
         at=remedy.at,
-        covers=covered(remedy, design),
+        covers=tuple(sorted(remedy.covering(fits))),
         estimand=remedy.estimand,
         intervals=_intervals(remedy, ready, found, fits),
         terms=_terms(remedy, found),
@@ -81,19 +81,6 @@ def explain(remedy: Remedy, level: str, fits: Fits) -> tuple[tuple[str, tuple[In
         except NotSupported:
             continue  # a convention that these data cannot carry has no number to compare with
     return tuple(out)
-
-
-def covered(remedy: Remedy, design: Design) -> tuple[Family, ...]:
-    """Families that the remedy covers in this design: clusters cover what lies wholly within them."""
-    part = design.partitions.get(remedy.at)
-    if remedy.id != "cluster-robust" or part is None:
-        return tuple(sorted(remedy.covers))
-    out: set[Family] = set()
-    if design.group is not None and any(part.relation(g) in ("same", "nests") for g in design.group.levels):
-        out.add("group")
-    if design.serial is not None and part.relation(design.serial.part) in ("same", "nests"):
-        out.add("serial")
-    return tuple(sorted(out))
 
 
 def _stop_if_perfect(fits: Fits) -> None:

@@ -112,6 +112,10 @@ class Remedy(Protocol):
         """The levels at which it can be run, the default first; ("",) when there is no choice."""
         ...
 
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        """The families that it covers in these data: ``covers``, or fewer."""
+        ...
+
     def working(self, fits: Fits) -> ErrorModel | None:
         """The error model of the user's data that ``prepare`` wants, or None."""
         ...

@@ -69,6 +69,9 @@ class Ordinary:
     def abouts(self, design: Design) -> tuple[str, ...]:
         return ("",)
 
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return self.covers
+
     def working(self, fits: Fits) -> ErrorModel | None:
         return None
 
@@ -163,6 +166,9 @@ class HeteroscedasticityRobust:
     def abouts(self, design: Design) -> tuple[str, ...]:
         return ("",)
 
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return self.covers
+
     def working(self, fits: Fits) -> ErrorModel | None:
         return None
 
@@ -201,6 +207,7 @@ class HeteroscedasticityRobust:
 
 # ---- cluster-robust -----------------------------------------------------------------------
 
+_WITHIN = ("same", "nests")
 CR = Literal["CR0", "CR1", "CR1S", "CR2", "CR3"]
 _CR_FACTOR = {
     "CR0": "none",
@@ -299,6 +306,16 @@ class ClusterRobust:
             if all(part.relation(other) != "same" for other in found.values()):
                 found[key] = part
         return tuple(found)
+
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        """Clusters cover what lies wholly within them."""
+        design, part = fits.design, _clusters(fits.design, self.at)
+        out: set[Family] = set()
+        if design.group is not None and any(part.relation(g) in _WITHIN for g in design.group.levels):
+            out.add("group")
+        if design.serial is not None and part.relation(design.serial.part) in _WITHIN:
+            out.add("serial")
+        return frozenset(out)
 
     def working(self, fits: Fits) -> ErrorModel | None:
         return None
