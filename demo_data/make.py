@@ -96,9 +96,8 @@ def lambs() -> pd.DataFrame:
     twin, ram = rng.random_sample(total) < 0.55, rng.random_sample(total) < 0.5
     own = true["flock sd"] * _scaled(rng.normal(size=10))[flock] + true["lamb sd"] * rng.normal(size=total)
     rows = []
-    for visit in (1, 14, 28, 42, 63, 84):
-        day = visit + rng.randint(-1, 2, size=10)[flock] * (visit > 1)
-        seen = rng.random_sample(total) < (1.0 if visit == 1 else 0.88)
+    for day in (0, 14, 28, 42, 56, 70):
+        seen = rng.random_sample(total) < (1.0 if day == 0 else 0.88)
         growth = 4.3 + true["grown weight"] * (1 - np.exp(-true["rate per day"] * day))
         fixed = growth + true["twin"] * twin + true["ram"] * ram
         weight = fixed + own + true["noise sd"] * rng.normal(size=total)

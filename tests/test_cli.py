@@ -21,10 +21,11 @@ import pytest
 import clingstone
 import plain
 from clingstone import cli
+from clingstone.case import CaseSummary
 from clingstone.demo import DEMOS
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import field_help, settings_options
-from clingstone.results import from_json
+from clingstone.results import from_json, to_json
 from clingstone.run import Settings
 
 
@@ -341,6 +342,25 @@ def test_replay_says_what_it_found_and_by_status_whether_it_agrees(verbs: Verbs,
         (Path("saved"), {"data": None}),
         (Path("saved"), {"data": Path("moved/trial.csv")}),
     ]
+
+
+def test_replay_looks_here_beside_the_folder_and_among_the_demonstrations(
+    verbs: Verbs, run: Run, tmp_path: Path
+) -> None:
+    def asked(name: str) -> Path | None:
+        case = plain.example(CaseSummary, origin={"file": name})
+        (tmp_path / "kept" / "saved").mkdir(parents=True, exist_ok=True)
+        (tmp_path / "kept" / "saved" / "results.json").write_text(to_json(plain.results(case=case)))
+        run("replay kept/saved")
+        found: Path | None = verbs.calls[-1][1]["data"]
+        return found
+
+    assert asked("mine.csv") is None
+    (tmp_path / "kept" / "mine.csv").touch()
+    assert asked("mine.csv") == tmp_path / "kept" / "mine.csv"
+    (tmp_path / "mine.csv").touch()
+    assert asked("mine.csv") == Path("mine.csv")
+    assert asked("wells.csv") == DEMOS["wells"].path
 
 
 def test_version(run: Run) -> None:

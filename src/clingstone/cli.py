@@ -16,7 +16,7 @@ from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 
-from clingstone.demo import DEMOS, find
+from clingstone.demo import DEMOS, data_folder, find
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import Option, settings_options
 
@@ -132,11 +132,26 @@ def replay(
     """Run a saved examination again and say whether every number agrees."""
     from clingstone.examination import replay as again
 
-    agrees, lines = again(folder, data)
+    agrees, lines = again(folder, data if data is not None else _data_of(folder))
     for line in lines:
         typer.echo(line)
     if not agrees:
         raise typer.Exit(1)
+
+
+def _data_of(folder: Path) -> Path | None:
+    """The file of a saved run where it can be looked for: here, beside the folder, among the demonstrations.
+
+    Only its name is kept in results.json; that it is the same data is seen by the fingerprint.
+    """
+    from clingstone.results import read_tree
+
+    saved = folder / "results.json"
+    if not saved.is_file():
+        return None  # the verb says so
+    name = read_tree(saved.read_text(encoding="utf-8"))["case"]["origin"].get("file", "")
+    places = (Path(), folder.absolute().parent, data_folder())
+    return next((place / name for place in places if name and (place / name).is_file()), None)
 
 
 def _run(

@@ -53,8 +53,8 @@ DEMOS: Mapping[str, Demo] = {
     ),
     "lambs": Demo(
         "lambs",
-        "Lambs of ten flocks were weighed up to six times in their first twelve weeks. How much lighter "
-        "are twins, and how fast do lambs grow?",
+        "Lambs of ten flocks were weighed at birth and every fortnight for ten weeks. How much lighter are "
+        "twins, and how fast do lambs grow?",
         {
             "model": "weight ~ day + birth + sex",
             "group": "flock/lamb",
