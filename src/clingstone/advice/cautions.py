@@ -28,6 +28,15 @@ CAVEATS = (
         "strong",
     ),
     Rule(
+        "after-the-repair",
+        fact("curve under dependence") & fact("dependence goes with the mean") & fact("mean in doubt"),
+        Then("caution"),
+        "That no dependence is seen once the {missing part of the mean} is in does not show that none is "
+        "left: put it into the model and examine again.",
+        "florax-de-graaff-2004",
+        "strong",
+    ),
+    Rule(
         "mean-alone",
         fact("curve under dependence") & ~SHOWN,
         Then("caution"),

@@ -71,7 +71,7 @@ def settle(
         mean_in_doubt=facts.says("mean in doubt"),
         because=(*_design_reason(facts), *(_reason(r, facts) for r in because)),
         cautions=tuple(_reason(r, facts) for r in beside),
-        alternatives=_alternatives(shortlist, refits, advised, need),
+        alternatives=() if state == "not correctable" else _alternatives(shortlist, refits, advised, need),
         refused=_refused(shortlist, refits, state_rule, facts),
     )
 

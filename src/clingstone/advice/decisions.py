@@ -9,6 +9,14 @@ from clingstone.advice.rule import ANY, GROUP, KNOWN, SERIAL, SHOWN, SPATIAL, Ru
 
 STATES = (
     Rule(
+        "nothing-left",
+        fact("nothing left over"),
+        Then("state", "not correctable", needed="a model that leaves something over"),
+        "The model fits every row exactly: look for the response, or a copy of it, among the predictors.",
+        "own",
+        "strong",
+    ),
+    Rule(
         "residuals-alone",
         ~KNOWN & SHOWN,
         Then("state", "not correctable", needed="the data and the model formula, not residuals alone"),
@@ -61,7 +69,8 @@ STATES = (
         Then(
             "state", "not correctable", needed="the groups as a factor in the model, which then carries them"
         ),
-        "{groups} groups are too few for any correction between them; as a factor in the model they need none.",
+        "{groups} groups are too few for any correction between them; as a factor in the model they need "
+        "none.",
         "gomes-2022, oberpriller-2021",
         "moderate",
     ),

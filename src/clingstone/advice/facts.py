@@ -72,7 +72,7 @@ def facts(fits: Fits, evidence: Evidence, ledger: Ledger, settings: Settings | N
     missing = missing_part(fits, evidence, ledger) if design.known else None
     found = [
         *structure_facts(ledger),
-        *_design_facts(design, fits.run.limits),
+        *_design_facts(design, ledger, fits.run.limits),
         *group_facts(design, fits, ledger),
         *_spatial_facts(design, ledger),
         *_consequence_facts(ledger, focus, settings.material),
@@ -119,10 +119,11 @@ def structure_facts(ledger: Ledger) -> list[Fact]:
     return out
 
 
-def _design_facts(design: Design, limits: Limits) -> list[Fact]:
+def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
     counts = design.counts
     out = [
         yes("columns of the model known", design.known, "the columns of the model are known"),
+        yes("nothing left over", not ledger.shares, "the model fits every row exactly"),
         named("rows", design.n),
     ]
     series = design.serial

@@ -30,17 +30,17 @@ def _sentence(ledger: Ledger, s: Standing) -> str:
         return _serial(ledger, s)
     if s.key == "spatial":
         return _spatial(ledger, s)
-    subject = "Rows of one place" if s.key == SITE else f"The rows of one {s.label}"
+    subject = "Rows of one place" if s.key == SITE else f"The rows of one {s.label.split('/')[-1]}"
     share = ledger.share(s.key)
     if share is None:
-        return f"{subject} {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+        return f"{subject} {_verb(s)}; how strongly cannot be sized."
     return f"{subject} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
 
 
 def _serial(ledger: Ledger, s: Standing) -> str:
     rho = ledger.parameter(s.key, "ρ")
     if rho is None:
-        return f"Rows that follow each other in time {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+        return f"Rows that follow each other in time {_verb(s)}; how strongly cannot be sized."
     half = ledger.parameter(s.key, "half-life")
     reach = f", half of it gone after {_with_unit(half)}" if half is not None and half.estimate > 0 else ""
     return f"Rows that follow each other in time {_verb(s)}: correlation {_figure(rho)} {rho.unit}{reach}."
@@ -49,7 +49,7 @@ def _serial(ledger: Ledger, s: Standing) -> str:
 def _spatial(ledger: Ledger, s: Standing) -> str:
     share, reach = ledger.share(s.key), ledger.parameter(s.key, "practical range")
     if share is None:
-        return f"Near places {_verb(s)}; {s.because[0].lower()}{s.because[1:]}"
+        return f"Near places {_verb(s)}; how strongly cannot be sized."
     out = "" if reach is None or not np.isfinite(reach.estimate) else f", out to about {_with_unit(reach)}"
     return f"Near places {_verb(s)}: they share {_amount(share)} of what the model leaves over{out}."
 

@@ -9,9 +9,11 @@ import numpy as np
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, p_value, percent, significant
-from clingstone.evidence.finding import Evidence, Finding
+from clingstone.evidence import TESTS
+from clingstone.evidence.finding import Evidence, Finding, column
 from clingstone.evidence.mean import extension
 from clingstone.ledger.consequence import parts
+from clingstone.ledger.detect import primary_test
 from clingstone.ledger.ledger import Ledger, Standing, focus_rows
 from clingstone.ledger.region import region
 from clingstone.ledger.standing import LEVEL, consequence
@@ -28,8 +30,8 @@ class Missing:
     """A part of the mean that seems to be missing.
 
     what : words, such as "curve in dose". shows : it shows under the fitted dependence.
-    explains : with it in the model no structure is left that could move a focus interval.
-    doubt : mean and dependence explain the same pattern, and these data cannot tell which it is.
+    explains : with it in the model no structure that was present is seen any more.
+    doubt : these data cannot tell the mean from dependence, or what is left could still matter.
     left : what is left of the dependence, as half a sentence.
     wider : the design with the part added, live.
     """
@@ -53,10 +55,16 @@ class Remains:
     after: float
     worst: float
     matters: bool
+    p: float  # of its own test, with the part in the model
 
     @property
     def halved(self) -> bool:
         return self.after < self.before / 2
+
+    @property
+    def gone(self) -> bool:
+        """Its own test no longer shows it and at least half of its share went."""
+        return self.halved and not self.p < LEVEL
 
 
 def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | None:
@@ -115,10 +123,11 @@ def _try(fits: Fits, finding: Finding, needed: list[Standing]) -> Missing | None
         return None
     what = _words(fits, finding)
     is_curve = finding.test == CURVE
-    gone = bool(left) and not any(r.matters for r in left)
+    gone = bool(left) and all(r.gone for r in left)
     halved = bool(left) and all(r.halved for r in left)
-    explains = is_curve and gone and halved
-    doubt = halved and not explains
+    explains = is_curve and gone
+    # That it is no longer seen does not show that it is not there: what remains at its upper end counts.
+    doubt = halved and not (explains and not any(r.matters for r in left))
     return Missing(what, finding.test, finding.about, is_curve, explains, doubt, _left(left, finding), wider)
 
 
@@ -144,7 +153,11 @@ def _remains(fits: Fits, again: Fits, needed: list[Standing]) -> list[Remains]:
     out = []
     for s in keys:
         matters, worst, _ = consequence(found, place, s.key, focus, settings.material)
-        out.append(Remains(s.label, float(before[s.key][0]), float(after[s.key][0]), worst, matters))
+        test, about = primary_test(again, s, TESTS)
+        p = float("nan")
+        if test is not None and about is not None:
+            p = column(test.read(again, about, frozenset()).p)
+        out.append(Remains(s.label, float(before[s.key][0]), float(after[s.key][0]), worst, matters, p))
     return out
 
 

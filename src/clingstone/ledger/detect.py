@@ -6,6 +6,7 @@ from collections.abc import Callable
 
 import numpy as np
 
+from clingstone.covariance.components import SITE
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.evidence.finding import About, Test
@@ -19,6 +20,7 @@ POWER = 0.80
 DRAWS = 200
 LEVEL = 0.05
 ROUNDS = 5
+LARGEST = 0.95
 NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial share"}
 
 Drawer = Callable[[float, np.random.Generator, int], Array]
@@ -30,7 +32,7 @@ def detectable(fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ..
     for one in standing:
         if one.verdict in ("present", "not applicable") or one.p_alone < LEVEL:
             continue
-        test, about = _test_of(fits, one, tests)
+        test, about = primary_test(fits, one, tests)
         drawer = _drawer(fits, one)
         if test is None or about is None or drawer is None:
             continue
@@ -41,14 +43,16 @@ def detectable(fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ..
 
 def _entry(one: Standing, value: float) -> Detectable:
     name = NAMES[one.structure]
-    found = f"of {value:.2g} or more in 80 % of such data" if np.isfinite(value) else "of no size up to 0.95"
     article = "an" if name[0] in "aeiou" else "a"
-    return Detectable(
-        one.key, name, value, POWER, f"The test for {one.label} would have found {article} {name} {found}."
-    )
+    words = f"{article} {name} of {value:.2g} or more" if np.isfinite(value) else f"no {name} up to {LARGEST}"
+    sentence = f"The test for {one.label} would have found {words} in 80 % of such data."
+    return Detectable(one.key, name, value, POWER, sentence)
 
 
-def _test_of(fits: Fits, one: Standing, tests: tuple[Test, ...]) -> tuple[Test | None, About | None]:
+def primary_test(fits: Fits, one: Standing, tests: tuple[Test, ...]) -> tuple[Test | None, About | None]:
+    """The test by which a structure is judged alone, and where it is read; None where none can be."""
+    if one.key == SITE:
+        return None, None
     for test in tests:
         if test.family != one.structure or not test.primary:
             continue
@@ -132,7 +136,7 @@ def power(fits: Fits, test: Test, about: About, drawer: Drawer, value: float, pu
 def smallest(fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str) -> float:
     """The size at which power reaches 80 %, by bisection and one linear step; NaN when none to 0.95 does."""
     try:
-        low, high = (0.0, LEVEL), (0.95, power(fits, test, about, drawer, 0.95, purpose))
+        low, high = (0.0, LEVEL), (LARGEST, power(fits, test, about, drawer, LARGEST, purpose))
         if high[1] < POWER:
             return float("nan")
         for _ in range(ROUNDS):
