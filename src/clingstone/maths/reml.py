@@ -39,7 +39,7 @@ def reduced(gram: Gram) -> tuple[Array, Array, float]:
     """
     if gram.QQ.shape[0] == 0:
         return np.zeros_like(gram.QE), gram.EE, 0.0
-    L = np.linalg.cholesky(gram.QQ)
+    L: Array = np.asarray(np.linalg.cholesky(gram.QQ), dtype=float)
     half = forward(L, gram.QE)
     rss = gram.EE - np.einsum("ij,ij->j", half, half)
     delta, _ = lapack.dtrtrs(L, half, lower=1, trans=1)
