@@ -74,6 +74,17 @@ def test_joint_scale_and_df_follow_the_paper_step_by_step():
     assert (scale, df2) == pytest.approx((m / (E * (m - 2)), m), rel=1e-10)
 
 
+def test_where_the_moments_of_f_do_not_exist_the_df_of_the_contrasts_are_combined():
+    # Four groups and two regressors between them leave one df: A₂ is not below q.
+    group = np.repeat(np.arange(4), [3, 4, 5, 6])
+    x = np.array([[0.0, 1.0], [1.0, 0.0], [2.0, 2.0], [3.0, -1.0]])[group]
+    Q, _ = np.linalg.qr(np.column_stack([np.ones(18), x]))
+    kr = closed_form(Q, group, 1.0, 1.0)
+    scale, df2 = kr.joint(np.eye(3)[:, 1:])
+    assert scale == 1.0
+    assert 0 < df2 < 4
+
+
 @pytest.mark.parametrize("tau2", [0.0, 0.5, 20.0])
 def test_balanced_between_and_within_terms_have_their_exact_df(tau2):
     # 9 groups of 4 in 3 arms, a within-group factor of 4 levels: the exact tests have F(2, 6) and F(3, 24)

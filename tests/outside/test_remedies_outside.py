@@ -378,6 +378,16 @@ def test_group_and_ar1_together_equal_nlme_lme(name, estimate, se):
     assert [r.se for r in result.intervals] == pytest.approx(se, rel=1e-4)
 
 
+def test_a_likelihood_that_rises_to_a_random_walk_is_told():
+    # gls(consumption ~ dpi, corAR1, REML) on USMacroG: the restricted likelihood rises all the way to φ = 1.
+    d = data("AER", "USMacroG")
+    run = fits(design(columns(d.dpi), tick=np.arange(len(d))), d.consumption.to_numpy(float))
+    result = refit(remedy("ar1"), "", run)
+    assert result.boundary
+    assert "cannot be told from a random walk" in result.notes[0]
+    assert result.get("x1").status.startswith("boundary")
+
+
 def spatial_data(name, y, x):
     geopandas = pytest.importorskip("geopandas")
     from libpysal.examples import get_path

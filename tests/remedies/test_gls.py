@@ -123,6 +123,9 @@ def test_a_variance_at_zero_is_a_boundary_with_few_df_and_no_error():
     ordinary = refit(remedy("ordinary"), "", run)
     assert [r.se for r in result.intervals] == pytest.approx([r.se for r in ordinary.intervals])
     assert result.get("x1").df < 12 < result.get("x2").df
+    assert result.notes == (
+        "The variance of clinic was estimated at zero, so the fit is the one without it.",
+    )
     # Without Kenward-Roger the df at the boundary are those of the residuals.
     plain = refit(replace(MIXED, df="satterthwaite"), "", run)
     assert plain.get("x1").df == pytest.approx(57.0)
@@ -159,6 +162,16 @@ def test_sites_with_repeats_take_their_own_intercept_along():
     assert refit(SPATIAL, "", named).get("x2").se == pytest.approx(
         refit(SPATIAL, "", run).get("x2").se, rel=1e-4
     )
+
+
+def test_a_level_with_too_few_groups_is_left_out_of_the_default():
+    rng = np.random.default_rng(8)
+    ward = np.repeat(np.arange(12), 6)
+    X = np.column_stack([np.ones(72), rng.normal(size=72)])
+    of = design(X, group=ward % 4, outer=ward // 4)
+    assert MIXED.abouts(of) == ("district/ward",)
+    y = rng.normal(size=12)[ward] + rng.normal(size=72)
+    assert refit(MIXED, "", fits(of, y)).at == "district/ward"
 
 
 # ---- refusals -----------------------------------------------------------------------------

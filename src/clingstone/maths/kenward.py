@@ -12,6 +12,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from clingstone.maths.once import Array
+from clingstone.maths.reference import fai_cornelius
 
 
 @dataclass(frozen=True, eq=False)
@@ -42,7 +43,11 @@ class Kenward:
         return float(2.0 / (g @ self.W @ g))
 
     def joint(self, L: Array) -> tuple[float, float]:
-        """(scale, df2) so that scale · (1/q) β'L(L'Φ_AL)⁻¹L'β is referred to F(q, df2). L (p, q), q ≥ 2."""
+        """(scale, df2) so that scale · (1/q) β'L(L'Φ_AL)⁻¹L'β is referred to F(q, df2). L (p, q), q ≥ 2.
+
+        Where the approximated mean or variance of F does not exist (few groups), the df of the q
+        independent contrasts are combined instead (Fai & Cornelius 1996) and the scale is one.
+        """
         q = L.shape[1]
         theta = L @ np.linalg.solve(L.T @ self.phi @ L, L.T)
         T = np.einsum("ab,bc,icd,de->iae", theta, self.phi, self.P, self.phi)
@@ -57,4 +62,7 @@ class Kenward:
         variance = 2 / q * (1 + c1 * B) / ((1 - c2 * B) ** 2 * (1 - c3 * B))
         rho = variance / (2 * mean**2)
         df2 = 4 + (q + 2) / (q * rho - 1)
+        if not (q > A2 and c2 * B < 1 and c3 * B < 1 and df2 > 2):
+            _, vectors = np.linalg.eigh(L.T @ self.phi @ L)
+            return 1.0, fai_cornelius(np.array([self.df(L @ v) for v in vectors.T]))
         return df2 / (mean * (df2 - 2)), df2

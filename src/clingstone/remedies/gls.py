@@ -19,7 +19,7 @@ from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.linear import Joint, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, multi
-from clingstone.remedies.words import gls_account
+from clingstone.remedies.words import bound_notes, gls_account
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -100,6 +100,7 @@ class GlsReady:
         covariance = W.T @ columns[0].phi @ W if B == 1 else None
         joint = {t.name: _joint(columns, self.W[:, list(t.columns)]) for t in multi(self.design)}
         notes = tuple(dict.fromkeys(note for column in columns for note in column.notes))
+        notes += bound_notes(self.components, model) if B == 1 else ()
         return Estimates(
             estimate,
             se,
@@ -246,7 +247,10 @@ class Gls:
             return ("",)
         if design.group is None:
             return ()
-        keys = tuple(level.key for level in design.group.levels)
+        found, _ = declared(design, self.limits)
+        declared_keys = tuple(level.key for level in design.group.levels)
+        # Where no level can be estimated, all are kept: the refusal then says why.
+        keys = tuple(k for k in declared_keys if f"group:{k}" in found) or declared_keys
         return keys if len(keys) == 1 else (TOGETHER.join(keys), *keys)
 
     def covering(self, fits: Fits) -> frozenset[Family]:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import ABC, abstractmethod
 from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
@@ -22,7 +23,7 @@ Joint = tuple[Array, float, Array | float, Array]
 
 
 @dataclass(frozen=True, eq=False)
-class LinearReady:
+class LinearReady(ABC):
     """Ordinary least squares with a covariance of its own; subclasses give the covariance.
 
     names (k,), W (p, k) : reported rows as contrasts in the basis. df : (k, 1).
@@ -38,20 +39,20 @@ class LinearReady:
 
     # ---- given by subclasses -----------------------------------------------------------
 
+    @abstractmethod
     def variance(self, response: Response) -> Array:
         """(k, B) variance of every reported row."""
-        raise TypeError("a subclass gives the variance")
 
+    @abstractmethod
     def block(self, response: Response, columns: tuple[int, ...]) -> Array:
         """(q, q, B) covariance of some reported rows."""
-        raise TypeError("a subclass gives the covariance")
 
+    @abstractmethod
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         """F, df1, df2, p from the Wald statistic of some coefficients, or None where there is no df."""
-        raise TypeError("a subclass gives the joint test")
 
-    def account(self, fits: Fits) -> Account:
-        raise TypeError("a subclass gives the account")
+    @abstractmethod
+    def account(self, fits: Fits) -> Account: ...
 
     # ---- shared ------------------------------------------------------------------------
 

@@ -63,3 +63,37 @@ def _part(component: Component) -> str:
     if component.key == "spatial":
         return "exponential correlation over place with a nugget"
     return f"a random intercept of each {component.part}"
+
+
+def bound_notes(components: tuple[Component, ...], model: ErrorModel) -> tuple[str, ...]:
+    """A sentence per parameter of one column of y that was estimated at the end of its range."""
+    out = []
+    label = {c.key: c.label for c in components}
+    for name, at in zip(model.names, model.at_bound[:, 0], strict=True):
+        key, what = name.rsplit(".", 1)
+        if not at:
+            continue
+        gone = float(model.variances[key][0]) <= 0
+        if what == "log_ratio" and gone:
+            out.append(
+                f"The variance of {label[key]} was estimated at zero, so the fit is the one without it."
+            )
+        elif what == "log_ratio":
+            out.append(f"No row noise is left beside {label[key]}: its share was estimated at the whole.")
+        elif what == "log_range" and not gone:
+            out.append(
+                "The range was estimated at the end of what these places can show: shorter than the gaps "
+                "between them, or longer than the map."
+            )
+        elif key == "serial":
+            out.append(_serial_note(float(model.shape["serial.rho"][0])))
+    return tuple(out)
+
+
+def _serial_note(rho: float) -> str:
+    if abs(rho) > 0.99:
+        return (
+            f"The correlation along time was estimated at {rho:.4f}, which cannot be told from a random walk; "
+            "consider a model of the changes from one step to the next."
+        )
+    return f"The correlation along time was estimated at the end of its range ({rho:.3f} per step)."
