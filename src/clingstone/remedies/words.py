@@ -93,7 +93,7 @@ def bound_notes(components: tuple[Component, ...], model: ErrorModel) -> tuple[s
 def _serial_note(rho: float) -> str:
     if abs(rho) > 0.99:
         return (
-            f"The correlation along time was estimated at {rho:.4f}, which cannot be told from a random walk; "
-            "consider a model of the changes from one step to the next."
+            f"The correlation along time was estimated at {rho:.4f}, which cannot be told from a random "
+            "walk; consider a model of the changes from one step to the next."
         )
     return f"The correlation along time was estimated at the end of its range ({rho:.3f} per step)."
