@@ -138,10 +138,10 @@ def times(factor: float) -> str:
 
 
 def degrees(df: float) -> str:
-    """Degrees of freedom to one decimal; "∞" for a normal reference; whole numbers stay whole."""
+    """Degrees of freedom: one decimal below 100, whole above; "∞" for a normal reference."""
     if not math.isfinite(df):
         return number(df, 0)
-    return number(df, 0) if df == round(df) or df >= 1000 else number(df, 1)
+    return number(df, 0) if df == round(df) or df >= 100 else number(df, 1)
 
 
 def count(n: int, noun: str, plural: str = "") -> str:
@@ -262,6 +262,12 @@ class Table:
             if len(row) != len(heads):
                 raise ValueError(f"a row of {len(row)} cells in a table of {len(heads)} columns")
         return cls(caption, heads, body, note)
+
+    def without_empty(self) -> Table:
+        """The same table without columns in which no row has a word to show."""
+        kept = [j for j in range(len(self.columns)) if j == 0 or any(row[j].text for row in self.rows)]
+        columns = tuple(self.columns[j] for j in kept)
+        return Table(self.caption, columns, tuple(tuple(r[j] for j in kept) for r in self.rows), self.note)
 
     def shown(self) -> list[list[str]]:
         """Cell texts, decimals aligned, column by column turned back into rows."""

@@ -43,7 +43,8 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
         name = _name(f.curve, f.about, taken)
         taken.add(name)
         paint = _painter(f.curve, f.structure, lonlat)
-        plate = Plate(name, _caption(f.curve, f), f.sentence, curve_table(f.curve), paint)
+        quiet = f.structure in ("mean", "lookalike") and f.verdict == "not detected"
+        plate = Plate(name, _caption(f.curve, f), f.sentence, curve_table(f.curve), paint, quiet)
         out.setdefault(f.structure, []).append(plate)
     return out
 
@@ -119,18 +120,19 @@ def _band(panel: Axes, curve: Curve, x: np.ndarray) -> None:
         )
 
 
-def _lines(panel: Axes, curve: Curve, x_to: float, color: str) -> None:
-    """Named lines, each labelled at its end instead of in a legend."""
-    styles: tuple[object, ...] = ("-", (0, (5, 2)), (0, (1, 1.5)))
+LINES: tuple[tuple[str, object], ...] = (("line", "-"), ("dashed", (0, (5, 2))), ("dotted", (0, (1, 1.5))))
+
+
+def _lines(figure: Figure, panel: Axes, curve: Curve, color: str) -> None:
+    """Named lines; their names stand above the panel at the right, instead of in a legend."""
+    told = []
     for k, (name, (x, y)) in enumerate(curve.lines.items()):
-        if not x:
-            continue
+        words, style = LINES[k % len(LINES)]
         hue = color if k == 0 else LIGHT.ink
-        panel.plot(x, y, color=hue, linewidth=2, linestyle=styles[k % 3])
-        panel.annotate(
-            name, (x[-1], y[-1]), xytext=(-2, -15), textcoords="offset points", ha="right", fontsize=SMALL,
-            color=LIGHT.ink,
-        )  # fmt: skip
+        panel.plot(x, y, color=hue, linewidth=2, linestyle=style)
+        told.append(f"{words}: {name}")
+    width = figure.get_size_inches()[0] * 72
+    say(figure, width, 10, "; ".join(told), ha="right", fontsize=SMALL, color=LIGHT.muted)
 
 
 def paint_autocorrelation(curve: Curve, structure: str, width: float) -> Figure:
@@ -229,7 +231,7 @@ def paint_variogram(curve: Curve, structure: str, width: float) -> Figure:
     panel = axes(figure, 48, 26, width - 60, 206)
     hue = getattr(LIGHT, mark(structure).role)
     _band(panel, curve, np.array(curve.x))
-    _lines(panel, curve, max(curve.x), hue)
+    _lines(figure, panel, curve, hue)
     size = np.array(curve.size or [1.0] * len(curve.x))
     area = 14 + 60 * size / size.max()
     panel.scatter(
@@ -324,7 +326,7 @@ def paint_function(curve: Curve, structure: str, width: float) -> Figure:
     if curve.low and curve.high:
         panel.vlines(curve.x, curve.low, curve.high, color=LIGHT.faint, linewidth=2)
     panel.plot(curve.x, curve.y, "o", color=LIGHT.muted, markersize=4 if len(curve.x) <= 60 else 2.5)
-    _lines(panel, curve, max(curve.x), LIGHT.accent)
+    _lines(figure, panel, curve, LIGHT.accent)
     few_ticks(panel)
     few_ticks(panel, "y")
     say(figure, 0, 10, curve.y_name or "partial residual", fontsize=SMALL, color=LIGHT.muted)

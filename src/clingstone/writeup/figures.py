@@ -20,6 +20,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 PANELS = 6  # focus rows drawn on the first screen; the rest stand in the tables
+RUNGS = 6  # refits drawn for each row on the first screen
 PHONE = 480.0  # narrower than this, labels go above their rungs
 
 
@@ -35,15 +36,18 @@ class Rung:
     kind: str  # "advised", "ordinary", "other"
 
 
-def ladder(results: Results) -> Plate | None:
-    """Per focus row, one rung per refit on one shared axis; None when nothing was fitted."""
+def ladder(results: Results, most: int | None = RUNGS) -> Plate | None:
+    """Per focus row, one rung per refit on one shared axis; None when nothing was fitted.
+
+    most : rungs of each row; None draws every refit.
+    """
     names = [n for n in focus_rows(results) if _rungs(results, n)][:PANELS]
     if not names:
         return None
-    drawn = [(name, _rungs(results, name)) for name in names]
+    drawn = [(name, _rungs(results, name)[:most]) for name in names]
     table = _ladder_table(results, drawn)
     return Plate(
-        "intervals",
+        "intervals" if most else "intervals-all",
         f"{level_percent(results)} intervals under each refit",
         _ladder_alt(results, names),
         table,

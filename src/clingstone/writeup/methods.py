@@ -116,7 +116,8 @@ def _estimates(results: Results) -> str:
         else "Estimates"
     )
     rule = f"degrees of freedom: {best.account.df_rule}"
-    text = f"{start} from {best.account.estimator} ({best.name}; {rule}): {'; '.join(told)}"
+    name = "" if best.name in best.account.estimator else f"{best.name}; "
+    text = f"{start} from {best.account.estimator} ({name}{rule}): {'; '.join(told)}"
     if base is not None and base is not best:
         plain = [
             f"{span(row.low, row.high, decimals(results, name))} for {name}"

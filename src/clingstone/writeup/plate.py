@@ -29,6 +29,7 @@ class Plate:
 
     name : stem of its files. caption : one line above it. alt : states its finding in words.
     table : the numbers behind it. paint : draws it at a width in CSS pixels.
+    quiet : nothing was detected in it, and a page may fold it away.
     """
 
     name: str
@@ -36,6 +37,7 @@ class Plate:
     alt: str
     table: Table
     paint: Callable[[float], Figure]
+    quiet: bool = False
 
     def svg(self, width: float = WIDE) -> str:
         """An SVG whose text is text and whose bytes depend on nothing but the numbers."""

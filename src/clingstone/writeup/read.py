@@ -22,8 +22,10 @@ def ordinary(results: Results) -> Refit | None:
 
 
 def ordered(results: Results) -> tuple[Refit, ...]:
-    """Refits as a reader meets them: the advised one, the ordinary one, then the others."""
-    first = [advised(results), ordinary(results)]
+    """Refits as a reader meets them: advised, ordinary, the alternatives of the advice, the others."""
+    named = {(fit.remedy, fit.at): fit for fit in reversed(results.refits)}
+    alternatives = [named.get((c.remedy, c.at)) for c in results.advice.alternatives]
+    first = [advised(results), ordinary(results), *alternatives]
     chosen = list(dict.fromkeys(id(r) for r in first if r is not None))
     lead = [r for key in chosen for r in results.refits if id(r) == key]
     return (*lead, *(r for r in results.refits if id(r) not in chosen))

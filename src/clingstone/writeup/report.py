@@ -25,6 +25,8 @@ from clingstone.writeup.terminal import case_line
 if TYPE_CHECKING:
     from jinja2 import Environment
 
+LONG = 190  # characters of a headline beyond which it is set smaller
+
 STATES = {
     "supported": "These data support a correction.",
     "supported with caveat": "These data support a correction, with a caveat.",
@@ -152,6 +154,7 @@ def _answer(results: Results) -> dict[str, Any]:
     return {
         "case_line": clean(case_line(results)),
         "state": STATES[results.advice.state],
+        "long": len(results.advice.headline) > LONG,
         "ladder": _plate(ladder) if ladder else None,
         "shares": _plate(shares) if shares else None,
         "more_focus": f"{hidden} more focus rows stand under “Every interval”." if hidden > 0 else "",
@@ -171,9 +174,11 @@ def how_sure(results: Results) -> Iterable[str]:
         factor = results.ledger.factor(name)
         if factor is not None and math.isfinite(factor.low + factor.high):
             low, high = sorted((factor.low, factor.high))
+            shown = significant(factor.estimate)
+            words = "about the ordinary one" if shown == "1.0" else f"{shown} times the ordinary one"
             yield (
-                f"The standard error of {name} should be {significant(factor.estimate)} times the ordinary "
-                f"one; anything from {significant(low)} to {significant(high)} is compatible with these data."
+                f"The standard error of {name} should be {words}; anything "
+                f" from {significant(low)} to {significant(high)} is compatible with these data."
             )
     if results.advice.mean_in_doubt:
         yield "Whether the mean or the dependence makes the pattern is not settled."
@@ -183,7 +188,7 @@ def how_sure(results: Results) -> Iterable[str]:
 
 
 def _case(results: Results) -> dict[str, Any]:
-    words = [s.text for s in (*design(results), *model(results)) if not s.blank]
+    words = [" ".join(s.text for s in part(results) if not s.blank) for part in (design, model)]
     sizes = tables.groups(results)
     return {"case_words": words, "case_tables": [_table(sizes)] if sizes else []}
 
@@ -195,6 +200,7 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
         found = [f for f in results.evidence if f.structure == structure]
         if not found:
             continue
+        first = _leading(found)
         m = mark(structure)
         own = structure in ("group", "serial", "spatial")
         parts.append(
@@ -202,12 +208,20 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
                 "title": title,
                 "role": m.role if own else "",
                 "glyph": m.glyph if own else "•",
-                "findings": [_finding(f) for f in sorted(found, key=lambda f: not f.primary)],
-                "plates": [_plate(p) for p in plates.get(structure, ())],
+                "findings": [_finding(f) for f in first],
+                "others": [_finding(f) for f in found if f not in first],
+                "plates": [_plate(p) for p in plates.get(structure, ()) if not p.quiet],
+                "quiet": [_plate(p) for p in plates.get(structure, ()) if p.quiet],
                 "table": _table(tables.evidence(results, structure)),
             }
         )
     return parts
+
+
+def _leading(found: list[Finding]) -> list[Finding]:
+    """Primary findings, and every reading of a test that saw or may have seen something."""
+    seen = {(f.test, f.about) for f in found if f.primary or f.verdict in ("present", "unclear")}
+    return sorted((f for f in found if (f.test, f.about) in seen), key=lambda f: not f.primary)
 
 
 def _finding(f: Finding) -> dict[str, Any]:
@@ -215,7 +229,7 @@ def _finding(f: Finding) -> dict[str, Any]:
         "words": f.sentence,
         "verdict": f.verdict,
         "exploratory": not f.primary and f.verdict != "not applicable",
-        "caveats": f.caveats,
+        "caveats": [f"{c.rstrip(' .')}." for c in f.caveats],
     }
 
 
@@ -239,7 +253,11 @@ def _ledger(results: Results) -> dict[str, Any]:
 
 def _intervals(results: Results) -> dict[str, Any]:
     joint = tables.joint(results)
+    full = figures.ladder(results, None)
+    short = figures.ladder(results)
+    whole = full is not None and short is not None and len(full.table.rows) > len(short.table.rows)
     return {
+        "full_ladder": _plate(full) if full is not None and whole else None,
         "interval_tables": [_table(tables.intervals(results, n)) for n in focus_rows(results)],
         "other_tables": [_table(tables.intervals(results, n)) for n in tables.other_rows(results)],
         "joint": _table(joint) if joint else None,

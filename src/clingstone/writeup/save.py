@@ -58,7 +58,8 @@ def save(
 
 def plates(results: Results) -> tuple[Plate, ...]:
     """Every figure of an examination: the two of the first screen, then those of the evidence."""
-    lead = [p for p in (figures.ladder(results), figures.share_bar(results)) if p is not None]
+    drawn = (figures.ladder(results), figures.share_bar(results), figures.ladder(results, None))
+    lead = [p for p in drawn if p is not None]
     return (*lead, *curves.plates(results))
 
 

@@ -18,6 +18,7 @@ from clingstone.display import (
     p_value,
     percent,
     percent_span,
+    plural_of,
     significant,
     span,
 )
@@ -74,7 +75,7 @@ def design(results: Results) -> Iterable[Sentence]:
         ("M2",),
     )
     if case.dropped:
-        reasons = listed(f"{number(n, 0)} ({why})" for why, n in case.dropped.items())
+        reasons = listed(f"{number(n, 0)} for {why}" for why, n in case.dropped.items())
         yield Sentence(f"Rows left out: {reasons}.", ("M4",))
     else:
         yield Sentence("No row was left out.", ("M4",))
@@ -82,6 +83,10 @@ def design(results: Results) -> Iterable[Sentence]:
         yield Sentence(_group_words(g), ("M2", "M3"))
     yield from _order_and_place(results)
     yield from _assignment(results)
+
+
+def _units(step: float, unit: str) -> str:
+    return unit if step == 1 or not unit.isalpha() else plural_of(unit)
 
 
 def _part(kept: int, read: int) -> str:
@@ -106,7 +111,7 @@ def _group_words(g: GroupSummary) -> str:
 def _order_and_place(results: Results) -> Iterable[Sentence]:
     s, p = results.case.serial, results.case.spatial
     if s is not None:
-        step = f", one step being {s.step:g} {s.unit}".rstrip() if s.step else ""
+        step = f", one step being {s.step:g} {_units(s.step, s.unit)}".rstrip() if s.step else ""
         gaps = f"; {count(s.gaps, 'step')} missing inside series" if s.gaps else ""
         ties = f"; {count(s.ties, 'row')} at a time already taken" if s.ties else ""
         yield Sentence(
@@ -163,7 +168,7 @@ def model(results: Results) -> Iterable[Sentence]:
         )
     else:
         yield Sentence("Only residuals were given; the model that left them is not known here.", ("M5",))
-    varies = {t: level for t, level in case.varies.items() if level != "constant"}
+    varies = {t: level for t, level in case.varies.items() if level not in ("constant", "all rows")}
     if varies:
         words = listed(f"{t} between {_between(level)}" for t, level in varies.items())
         yield Sentence(f"Where each term varies: {words}.", ("M5",))
@@ -185,7 +190,7 @@ def dependence(results: Results) -> Iterable[Sentence]:
             f"; given {listed(s.given)}, {p_value(s.p_given)}" if s.given and math.isfinite(s.p_given) else ""
         )
         alone = f" ({p_value(s.p_alone)} alone{given})" if math.isfinite(s.p_alone) else ""
-        yield Sentence(f"{s.label}, judged {s.verdict}{alone}: {_no_stop(s.because)}.", ("M6", "M12"))
+        yield Sentence(f"{s.label}, judged {s.verdict}{alone}. {_upper(_no_stop(s.because))}.", ("M6", "M12"))
     for p in ledger.parameters:
         places = parameter_decimals(p)
         unit = f" {p.unit}" if p.unit else ""
@@ -231,7 +236,7 @@ def checks(results: Results) -> Iterable[Sentence]:
             if adjusted is not None and not math.isnan(adjusted)
             else ""
         )
-        caveats = "".join(f" {_no_stop(c)}." for c in f.caveats)
+        caveats = "".join(f" Caveat: {_no_stop(c)}." for c in f.caveats)
         said = with_source(f.sentence, f.source)
         label = "" if f.primary else " (exploratory)"
         yield Sentence(f"{_upper(test_words(f))}{label}: {said}{how}{holm}{caveats}", ("M12",))

@@ -129,7 +129,8 @@ def evidence(results: Results, structure: str) -> Table:
         Column("p_adjusted", "adjusted p", "right"),
         Column("verdict", "verdict"),
     )
-    return Table.of(STRUCTURES.get(structure, structure).capitalize(), columns, rows)
+    caption = STRUCTURES.get(structure, structure).capitalize()
+    return Table.of(caption, columns, rows).without_empty()
 
 
 def test_words(f: Finding) -> str:
@@ -201,7 +202,7 @@ def parameters(results: Results) -> Table:
         Column("unit", "unit"),
         Column("note", "note"),
     )
-    return Table.of("How strong the dependence is", columns, rows)
+    return Table.of("How strong the dependence is", columns, rows).without_empty()
 
 
 def parameter_decimals(p: Parameter) -> int:
@@ -224,34 +225,33 @@ def _parameter_cells(results: Results, p: Parameter) -> list[Cell]:
 
 
 def inflation(results: Results) -> Table:
-    """Variance parts that add up, and the standard-error factor, per coefficient."""
-    rows = [_inflation_cells(results, i) for i in results.ledger.inflation]
+    """Per coefficient: variance parts that add up, and the standard-error factor with its range."""
+    rows = results.ledger.inflation
+    keys = list(dict.fromkeys(i.key for i in rows if i.key != "total"))
+    cells = {(i.term, i.key): i for i in rows}
     columns = (
         Column("term", "coefficient"),
-        Column("key", "part"),
-        Column("estimate", "estimate", "right"),
-        Column("low", "at the weakest", "right"),
-        Column("high", "at the strongest", "right"),
+        *(Column(key, f"part of {label_of(results, key)}", "right") for key in keys),
+        Column("total", "standard-error factor", "right"),
+        Column("range", "weakest to strongest", "right"),
     )
+    body = []
+    for term in dict.fromkeys(i.term for i in rows):
+        parts = [_part_cell(cells.get((term, key))) for key in keys]
+        total = cells.get((term, "total"))
+        low, high = sorted((total.low, total.high)) if total is not None else (math.nan, math.nan)
+        ends = span(low, high, 2) if total is not None else ""
+        body.append([Cell(term, term), *parts, _part_cell(total), Cell(ends)])
     note = (
         "Parts are shares of the variance that the ordinary fit reports, and add up to the square "
-        "of the factor. The factor multiplies the ordinary standard error. Weakest and strongest are the "
-        "ends of the dependence interval."
+        "of the factor. The factor multiplies the ordinary standard error; its range is that over the "
+        "dependence interval."
     )
-    return Table.of("What each structure does to the ordinary intervals", columns, rows, note)
+    return Table.of("What each structure does to the ordinary intervals", columns, body, note)
 
 
-def _inflation_cells(results: Results, i: Inflation) -> list[Cell]:
-    total = i.key == "total"
-    part = "standard-error factor" if total else f"variance part: {label_of(results, i.key)}"
-    ends = sorted((i.low, i.high)) if total else (i.low, i.high)
-    return [
-        Cell(i.term, i.term),
-        Cell(part, i.key),
-        Cell(number(i.estimate, 2), i.estimate),
-        Cell(number(ends[0], 2), i.low),
-        Cell(number(ends[1], 2), i.high),
-    ]
+def _part_cell(i: Inflation | None) -> Cell:
+    return Cell("") if i is None else Cell(number(i.estimate, 2), i.estimate)
 
 
 def joint(results: Results) -> Table | None:

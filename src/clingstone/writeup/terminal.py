@@ -56,7 +56,9 @@ def case_line(results: Results) -> str:
     parts += [f"{term} assigned by {level}" for term, level in case.assigned.items()]
     dropped = sum(case.dropped.values())
     if dropped:
-        reasons = listed(f"{n} {reason}" for reason, n in case.dropped.items())
+        reasons = listed(
+            f"{n} for {why}" if len(case.dropped) > 1 else why for why, n in case.dropped.items()
+        )
         parts.append(f"{count(dropped, 'row')} left out ({reasons})")
     return f"{case.name} · {', '.join(parts)}"
 
