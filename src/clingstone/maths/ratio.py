@@ -20,6 +20,7 @@ from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.positive import one_positive, t_tail
 from clingstone.maths.spectra import Eigen, Modes
+from clingstone.maths.surrogate import surrogate
 from clingstone.maths.tails import (
     ALWAYS,
     CONSTANT,
@@ -150,7 +151,7 @@ class Law:
         way = routes.name(self.form, self.swept)
         first, second = projected(self.basis, self.form, self.swept, 2)
         if way == "traces" or (fast and way == "factored"):
-            summary = routes.surrogate(self.basis, self.form, self.swept, t >= self.mean)
+            summary = surrogate(self.basis, self.form, self.swept, t >= self.mean)
             return both(summary, t, (first, second), lambda: (summary.low, summary.high))
         long = routes.polynomials(self.basis, self.form, self.swept, t)
         spectrum = long or routes.spectrum(self.basis, self.form, self.swept)

@@ -226,7 +226,7 @@ def _deflated(
     return Modes(b, c, F, f)
 
 
-# ---- long paths, sparse forms, four traces ------------------------------------------------
+# ---- long paths and sparse forms ----------------------------------------------------------
 
 
 def polynomials(basis: Basis, form: Form, swept: Partition | None, t: float) -> Polynomials | None:
@@ -239,13 +239,16 @@ def polynomials(basis: Basis, form: Form, swept: Partition | None, t: float) -> 
         return None
     low, high = chains.interval
     half = 0.5 * (high - low)
-    x = min(abs((t - low) / half - 1.0), 0.999)
+    x = float(np.clip((t - low) / half - 1.0, -0.999, 0.999))
     s = saddle(chains, t)
-    # K'' = ½n·Var of 2(S − t)/D under the limiting spectrum, 4·half²(1 − x²)... kept simple: its value at 0.
-    reach = 10.0 / np.sqrt(2.0 * chains.n * half**2 * (0.5 + x**2)) * (1.0 + x)
-    alpha, beta = line(chains, np.array([s + 1j * reach]), t)
-    r = float(np.abs(-beta / (alpha + np.sqrt(alpha - beta) * np.sqrt(alpha + beta)))[0])
-    r = max(r, x)
+    alpha, beta = line(chains, np.array([s + 0j]), t)
+    place = np.cos(np.pi * (np.arange(1024) + 0.5) / 1024)  # the limiting spectrum on [−1, 1]
+    curve = 2.0 * chains.n * half**2 * np.mean(((place - x) / (alpha + beta * place).real) ** 2)
+    reach = 1.0 / np.sqrt(curve)
+    side = 1.0 if x > 0 else -1.0
+    alpha, beta = line(chains, np.array([s + side * reach + 10j * reach]), t)
+    r = float(np.abs(beta / (alpha + np.sqrt(alpha - beta) * np.sqrt(alpha + beta)))[0])
+    r = max(r, abs(x))
     if r >= 0.99:
         return None
     need = int(np.ceil(np.log(1e-16 * (1.0 - r)) / np.log(max(r, 1e-3)))) + 1
@@ -287,41 +290,6 @@ def sharp_bounds(form: Form) -> tuple[float, float]:
     ends = eigsh(form.core, k=2, which="BE", v0=start, tol=1e-4, return_eigenvectors=False)
     room = 1e-3 * float(ends.max() - ends.min())
     return max(form.low, float(ends.min()) - room), min(form.high, float(ends.max()) + room)
-
-
-@once
-def surrogate(basis: Basis, form: Form, swept: Partition | None, upper: bool) -> Eigen:
-    """A three-point spectrum with the same τ₀ … τ₄, one point at the end of the spectrum on that side.
-
-    Gauss–Radau quadrature of the spectral measure (Golub 1973): its law lies in the attainable range,
-    is monotone, and has the first four moments of the true one.
-    """
-    m = float(residual_df(basis, swept))
-    tau = projected(basis, form, swept, 4)
-    return radau(np.array([m, *tau]), form.high if upper else form.low)
-
-
-def radau(tau: Array, end: float) -> Eigen:
-    """Three points with power sums τ₀ … τ₄, one of them ``end``; two or one where fewer suffice."""
-    m, mean = float(tau[0]), float(tau[1] / tau[0])
-    # Central moments of the spectral measure, in units of its standard deviation.
-    c2 = tau[2] / m - mean**2
-    if c2 <= 1e-14 * max(mean**2, end**2):
-        return Eigen(np.array([mean]), np.array([m]))
-    sd = np.sqrt(c2)
-    c3 = (tau[3] / m - 3 * mean * tau[2] / m + 2 * mean**3) / sd**3
-    c4 = (tau[4] / m - 4 * mean * tau[3] / m + 6 * mean**2 * tau[2] / m - 3 * mean**4) / sd**4
-    # Recurrence of the orthogonal polynomials: a₀ = 0, b₁² = 1, a₁ = c₃, b₂² = c₄ − c₃² − 1.
-    a1, b2 = c3, c4 - c3**2 - 1.0
-    if b2 <= 1e-12:
-        J = np.array([[0.0, 1.0], [1.0, a1]])
-    else:
-        x = (end - mean) / sd
-        p1, p2 = x, (x - a1) * x - 1.0
-        a2 = x - b2 * p1 / p2 if p2 != 0 else x
-        J = np.array([[0.0, 1.0, 0.0], [1.0, a1, np.sqrt(b2)], [0.0, np.sqrt(b2), a2]])
-    point, vector = np.linalg.eigh(J)
-    return Eigen(mean + sd * point, m * vector[0] ** 2)
 
 
 def extremes(basis: Basis, form: Form, swept: Partition | None) -> tuple[float, float]:

@@ -25,6 +25,7 @@ from clingstone.maths.partition import Partition
 
 # A column of an orthonormal block that keeps less than this of its length is spanned by the cells.
 SPANNED = 1e-9
+KEPT = 100_000_000
 
 
 def combine(plain: Sequence[float], B: Sequence[Array]) -> list[float]:
@@ -158,8 +159,13 @@ def overlap(a: Form, b: Form) -> float:
     return float(a.matrix.multiply(N @ b.matrix @ N.T).sum())
 
 
-def cross_traces(forms: Sequence[Form], basis: Basis, swept: Partition | None = None) -> Array:
-    """(K, K) τ_ab = tr(MS_aMS_b), symmetric; the diagonal is τ₂ of each form."""
+def cross_traces(
+    forms: Sequence[Form], basis: Basis, swept: Partition | None = None, keep: int = KEPT
+) -> Array:
+    """(K, K) τ_ab = tr(MS_aMS_b), symmetric; the diagonal is τ₂ of each form.
+
+    The products S_kQ are held together up to ``keep`` numbers, else made again for each pair.
+    """
     rest = None if swept is None else sweep_out(basis, swept)
     Q = basis.Q if rest is None else rest.Q
 
@@ -168,14 +174,14 @@ def cross_traces(forms: Sequence[Form], basis: Basis, swept: Partition | None = 
         return block if rest is None else rest.sweep(block)
 
     K = len(forms)
-    keep = K * Q.size <= 100_000_000
-    held = [applied(f) for f in forms] if keep else []
-    small = [_symmetric(Q.T @ (held[k] if keep else applied(forms[k]))) for k in range(K)]
+    together = K * Q.size <= keep
+    held = [applied(f) for f in forms] if together else []
+    small = [_symmetric(Q.T @ (held[k] if together else applied(forms[k]))) for k in range(K)]
     out = np.empty((K, K))
     for a in range(K):
-        left = held[a] if keep else applied(forms[a])
+        left = held[a] if together else applied(forms[a])
         for b in range(a, K):
-            right = held[b] if keep else applied(forms[b])
+            right = held[b] if together else applied(forms[b])
             plain = overlap(forms[a], forms[b]) - (
                 0.0 if swept is None else _cells_lost(forms[a], forms[b], swept)
             )
