@@ -8,6 +8,7 @@ packages. Exact tail probabilities of lmtest and spdep are compared where those 
 from __future__ import annotations
 
 import os
+import warnings
 from typing import Any
 
 import numpy as np
@@ -18,6 +19,7 @@ from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Reading
 from clingstone.evidence.nested import restricted_ratio_draws
 from clingstone.evidence.portmanteau import partial_r2, plain
+from clingstone.evidence.read import holm
 from clingstone.maths.partition import Partition
 from clingstone.run import Run
 from clingstone.structure.neighbours import Neighbours
@@ -97,7 +99,9 @@ def test_breusch_godfrey_equals_statsmodels() -> None:
     made, df = huron(), data("datasets", "LakeHuron")
     t = np.asarray(df["time"] - 1875)
     result = OLS(df["value"], np.column_stack([np.ones(98), t])).fit()
-    lm = acorr_breusch_godfrey(result, nlags=2, result_object=False)[0]
+    with warnings.catch_warnings():
+        warnings.simplefilter("ignore", FutureWarning)  # of a new result type in later versions
+        lm = acorr_breusch_godfrey(result, nlags=2)[0]
     assert 98 * partial_r2(made.response, 2)[0][0] == pytest.approx(lm, rel=1e-8)
 
 
@@ -314,6 +318,16 @@ def test_moran_of_a_constant_equals_esda() -> None:
     theirs = esda.Moran(frame["CRIME"].to_numpy(), w, permutations=0)
     law_reading = first("moran", fits(made, frame["CRIME"]))
     assert law_reading.statistic[0] == pytest.approx(theirs.I, rel=1e-10)
+
+
+# ---- p-values together ------------------------------------------------------------------
+
+
+def test_holm_equals_statsmodels() -> None:
+    from statsmodels.stats.multitest import multipletests
+
+    p = np.array([0.012, 0.2, 0.012, 0.9, 0.0004, 0.05])
+    np.testing.assert_allclose(holm(p), multipletests(p, method="holm")[1], rtol=1e-12)
 
 
 # ---- lookalikes -------------------------------------------------------------------------

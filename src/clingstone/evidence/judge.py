@@ -7,6 +7,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.covariance.kept import kept
 from clingstone.evidence.finding import About, Reading, Test, Verdict
 from clingstone.evidence.matter import factor_at, group_factors, serial_factors, spatial_factors
 from clingstone.maths.once import Array
@@ -32,12 +33,15 @@ def could_matter(fits: Fits, test: Test, about: About, reading: Reading) -> npt.
     """(B,) could an effect at the upper end of its interval matter?
 
     For a structure: would it move the standard error of a coefficient in focus by more than the upper
-    end of ``material``, in the model of that structure alone. False where there is no interval.
+    end of ``material``, in the model of that structure alone. A share of groups without an interval
+    counts with its estimate; anything else without an interval is taken not to matter.
     """
     B = fits.response.B
-    if reading.high is None or reading.low is None:
+    top = reading.estimate if reading.high is None and test.family == "group" else reading.high
+    if top is None:
         return np.zeros(B, dtype=bool)
-    high, low = np.broadcast_to(reading.high, B), np.broadcast_to(reading.low, B)
+    high = np.broadcast_to(top, B)
+    low = high if reading.low is None else np.broadcast_to(reading.low, B)
     if test.family == "mean":
         return np.asarray(high >= MATTERS_MEAN)
     if test.family == "lookalike":
@@ -55,7 +59,9 @@ def _factors(fits: Fits, test: Test, about: About) -> Array | None:
         return None  # their sizes are not correlations of one step
     if test.family == "serial":
         return np.asarray(serial_factors(fits.design))
-    return np.asarray(spatial_factors(fits.design, about.key))
+    child = fits.run.child("site factors")
+    place = ("site factors", about.key, fits.run.settings.seed)
+    return kept(fits.design, place, lambda: spatial_factors(fits.design, about.key, child))
 
 
 def verdicts(fits: Fits, test: Test, about: About, reading: Reading, p: Array) -> npt.NDArray[np.int8]:

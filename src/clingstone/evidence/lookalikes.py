@@ -216,7 +216,7 @@ class Normality(Plain):
 
 @once
 def row_codes(design: Design) -> npt.NDArray[np.int64]:
-    """(n,) which distinct row of model columns and raw covariates each row is.
+    """(n,) which distinct row of model columns, raw covariates and declared structures each row is.
 
     Columns are compared at nine digits of their size: QR leaves rounding in the last few.
     """
@@ -225,14 +225,19 @@ def row_codes(design: Design) -> npt.NDArray[np.int64]:
         X[:, : design.p] /= design.root[:, None]
     scale = np.abs(X).max(axis=0)
     grid = np.round(X / np.where(scale > 0, scale, 1.0) * 1e9)
-    return np.asarray(np.unique(grid, axis=0, return_inverse=True)[1]).ravel().astype(np.int64)
+    ids = [part.codes for part in design.partitions.values()]
+    if design.serial is not None:
+        ids.append(np.unique(design.serial.elapsed, return_inverse=True)[1].astype(np.int32))
+    keys = np.column_stack([grid, *ids])
+    return np.asarray(np.unique(keys, axis=0, return_inverse=True)[1]).ravel().astype(np.int64)
 
 
 @dataclass(frozen=True)
 class Duplicates(Plain):
-    """Rows identical in y and in every column of the model: copies look like perfect dependence.
+    """Rows identical in y, in every column of the model, and in group, time and place.
 
-    A count, without a null law. Counts and rounded values produce honest repeats, so it never decides.
+    Copies look like perfect dependence. A count, without a null law: rounded and counted values can
+    repeat honestly, so it never decides.
     """
 
     id: str = "duplicates"
@@ -244,7 +249,7 @@ class Duplicates(Plain):
     primary: bool = False
 
     def abouts(self, design: Design) -> tuple[About, ...]:
-        return (About("", "rows identical in the response and all columns of the model"),)
+        return (About("", "rows identical in every column used"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         codes = row_codes(fits.design)
@@ -267,9 +272,9 @@ class Duplicates(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         count = int(column(reading.statistic))
         if not count:
-            return "No row is identical to another in the response and all columns of the model."
+            return "No row is identical to another in every column used."
         verb = "copies" if count == 1 else "copy"
-        return f"{counted(count, 'row')} {verb} an earlier row in the response and all columns of the model."
+        return f"{counted(count, 'row')} {verb} an earlier row in every column used."
 
 
 def copies_of(codes: npt.NDArray[np.int64], y: Array) -> npt.NDArray[np.int64]:

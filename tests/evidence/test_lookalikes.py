@@ -1,0 +1,124 @@
+"""Unequal variance, outliers, shape and copies."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from clingstone.covariance.fits import Fits
+from clingstone.design.response import Response
+from clingstone.evidence.finding import About
+from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
+from clingstone.needs import NotSupported
+from clingstone.run import Run
+
+from .factories import design, fits
+
+ALL = About("", "all rows")
+
+
+def test_studentised_statistic_equals_the_regression_of_squares() -> None:
+    rng = np.random.default_rng(1)
+    x, B = rng.standard_normal(50), 3
+    many = Fits(Response.of(design(x), rng.standard_normal((50, B)) + x[:, None]), Run())
+    reading = Heteroscedasticity().read(many, About("fitted", "the fitted values"))
+    for b in range(B):
+        e2 = many.response.residual[:, b] ** 2
+        r = np.corrcoef(e2, x)[0, 1]  # the fitted values are linear in x
+        assert reading.statistic[b] == pytest.approx(50 * r**2)
+        assert reading.p[b] == pytest.approx(stats.chi2.sf(50 * r**2, 1))
+
+
+def test_ratio_of_spreads_is_recovered_and_covered() -> None:
+    rng = np.random.default_rng(2)
+    n, B = 400, 500
+    x = np.repeat(np.arange(5.0), n // 5)  # the outer fifths are the outer values
+    y = np.exp(0.25 * x)[:, None] * rng.standard_normal((n, B))
+    reading = Heteroscedasticity().read(Fits(Response.of(design(x), y), Run()), About("x1", "x1"))
+    true = np.exp(0.25 * 4)
+    assert reading.estimate is not None
+    assert np.median(reading.estimate) == pytest.approx(true, rel=0.03)
+    assert reading.low is not None
+    assert reading.high is not None
+    inside = np.mean((reading.low < true) & (true < reading.high))
+    assert inside > 0.93  # the pooled kurtosis makes it wide, never narrow, when spreads differ
+
+
+def test_size_with_heavy_tails() -> None:
+    rng = np.random.default_rng(3)
+    x, B = rng.standard_normal(300), 2000
+    y = rng.standard_t(6, size=(300, B))
+    reading = Heteroscedasticity().read(Fits(Response.of(design(x), y), Run()), About("x1", "x1"))
+    assert np.mean(reading.p < 0.05) == pytest.approx(0.05, abs=0.02)
+
+
+def test_a_constant_fit_has_no_variable_to_follow() -> None:
+    made = fits(design(n=20), np.random.default_rng(4).standard_normal(20))
+    with pytest.raises(NotSupported, match="do not vary"):
+        Heteroscedasticity().read(made, About("fitted", "the fitted values"))
+
+
+def test_outlier_is_named_by_row_and_equals_leaving_it_out() -> None:
+    rng = np.random.default_rng(5)
+    x, y = rng.standard_normal(30), rng.standard_normal(30)
+    y[17] += 9
+    reading = Outliers().read(fits(design(x), y), ALL)
+    assert reading.rows == (17,)
+    keep = np.arange(30) != 17
+    X = np.column_stack([np.ones(30), x])
+    b, rest, *_ = np.linalg.lstsq(X[keep], y[keep], rcond=None)
+    s2 = rest[0] / 27
+    spread = 1 + X[17] @ np.linalg.solve(X[keep].T @ X[keep], X[17])
+    t = (y[17] - X[17] @ b) / np.sqrt(s2 * spread)
+    assert reading.statistic[0] == pytest.approx(t)
+    assert reading.p[0] == pytest.approx(min(30 * 2 * stats.t.sf(abs(t), 27), 1.0))
+
+
+def test_size_of_the_outlier_test() -> None:
+    rng = np.random.default_rng(6)
+    made = Fits(Response.of(design(rng.standard_normal(25)), rng.standard_normal((25, 4000))), Run())
+    assert np.mean(Outliers().read(made, ALL).p < 0.05) == pytest.approx(0.05, abs=0.012)
+
+
+def test_shape_is_told_with_skewness() -> None:
+    rng = np.random.default_rng(7)
+    skewed = Normality().read(fits(design(n=300), rng.exponential(size=300)), ALL)
+    assert skewed.p[0] < 1e-6
+    assert skewed.estimate is not None
+    assert skewed.estimate[0] > 1
+    many = Fits(Response.of(design(n=200), rng.standard_normal((200, 2000))), Run())
+    assert np.mean(Normality().read(many, ALL).p < 0.05) == pytest.approx(0.055, abs=0.02)
+
+
+def test_copies_are_counted_in_y_and_in_the_model() -> None:
+    rng = np.random.default_rng(8)
+    x, y = rng.standard_normal(20), rng.standard_normal(20)
+    x2, y2 = np.concatenate([x, x[:3]]), np.concatenate([y, y[:2], [99.0]])
+    reading = Duplicates().read(fits(design(x2), y2), ALL)
+    assert reading.statistic[0] == 2
+    assert reading.rows == (20, 21)
+    assert reading.flag is not None
+    assert bool(reading.flag[0])
+    assert "2 rows copy" in Duplicates().sentence(reading, ALL)
+    none = Duplicates().read(fits(design(x), y), ALL)
+    assert none.statistic[0] == 0
+    assert "No row is identical" in Duplicates().sentence(none, ALL)
+
+
+def test_copies_in_several_columns_and_units() -> None:
+    rng = np.random.default_rng(9)
+    x = np.tile(rng.standard_normal(10), 2)
+    Y = rng.standard_normal((20, 2))
+    Y[10:, 1] = Y[:10, 1]
+    for scale in (1.0, 1e6, 1e-6):
+        count = Duplicates().read(Fits(Response.of(design(scale * x), scale * Y), Run()), ALL).statistic
+        assert count.tolist() == [0.0, 10.0]
+
+
+def test_rows_of_other_times_or_groups_are_no_copies() -> None:
+    x, y = np.zeros(6), np.array([1.0, 1, 2, 2, 3, 3])
+    x[:2] = 1.0
+    made = design(x, groups={"g": [0, 1, 0, 0, 1, 1]}, time=[0, 1, 2, 2, 3, 4])
+    reading = Duplicates().read(fits(made, y), ALL)
+    assert reading.rows == (3,)
