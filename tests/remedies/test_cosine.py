@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from clingstone.design.design import Term
+from clingstone.design.design import Contrast, Term
 from clingstone.needs import NotSupported
 from clingstone.remedies import explain, refit, remedy
 from tests.remedies.cases import ar1, design, fits
@@ -115,6 +115,20 @@ def test_the_joint_test_holds_its_size_under_the_working_law():
     plain = np.mean(replace(HAC, law="t").prepare(of, working(rho)).fit(run).joint["pair"][3] < 0.05)
     assert plain > 0.08
     assert 0.03 < exact < 0.07
+
+
+def test_many_columns_and_contrasts_are_read_as_one_by_one():
+    X, tick, y = trend()
+    of = design(X, tick=tick, contrasts=[Contrast("gap", (0.0, 1.0, -1.0))])
+    Y = np.column_stack([y, ar1(80, 0.3, 2, np.random.default_rng(1))])
+    ready = HAC.prepare(of, working(0.4))
+    found = ready.fit(fits(of, Y))
+    for b in range(3):
+        one = ready.fit(fits(of, Y[:, b]))
+        for name in ("estimate", "se", "low", "high", "p"):
+            assert np.allclose(getattr(found, name)[:, [b]], getattr(one, name), rtol=1e-9)
+        c = np.array([0.0, 1.0, -1.0])
+        assert one.se[3, 0] == pytest.approx(np.sqrt(c @ one.covariance @ c))
 
 
 def test_several_long_series_are_blocks():

@@ -199,10 +199,13 @@ def joint_law(G: Array, A: Array) -> tuple[float, float]:
 
 
 def _positive_root(delta: Array, v2: Array) -> Array:
-    """(B,) the root ω > 0 of 1 = Σ v²/(ω − δ), δ ≤ 0 (B, q+1): bisection in ln ω, then Newton."""
+    """(B,) the root ω > 0 of 1 = Σ v²/(ω − δ), δ ≤ 0 (B, q+1): bisection in ln ω, then Newton.
+
+    δ₀ = 0, so the root lies between v₀² and Σv².
+    """
     high = np.log(np.full(len(delta), v2.sum()))
-    low = high - 700.0
-    for _ in range(60):
+    low = np.maximum(high - 700.0, np.log(max(float(v2[0]), 1e-300)))
+    for _ in range(40):
         middle = (low + high) / 2
         above = np.sum(v2 / (np.exp(middle)[:, None] - delta), axis=1) > 1
         low, high = np.where(above, middle, low), np.where(above, high, middle)
