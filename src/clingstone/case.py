@@ -17,10 +17,10 @@ from clingstone.intake import columns, files, fitted, formula, frames, model
 from clingstone.intake.columns import Columns, Role
 from clingstone.intake.frames import Table
 from clingstone.intake.model import Blocks
-from clingstone.intake.words import count, instead, rows
+from clingstone.intake.words import count, instead
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
-from clingstone.needs import InputError, memory
+from clingstone.needs import InputError
 from clingstone.run import Settings
 
 MOST_LABELS = 40
@@ -176,7 +176,7 @@ class Case:
         """
         if isinstance(residual, str):
             return cls.of(data, _settings(options | {"residual": residual}))
-        table, name = _with_residual(residual, {} if data is None else data)
+        table, name = frames.with_residual(residual, data)
         return cls._of_table(table, _settings(options | {"residual": name}), {})
 
     @classmethod
@@ -198,7 +198,7 @@ class Case:
         numeric = [*roles["weight"], *roles["place"], *(() if parsed else roles["response"])]
         got = columns.gather(table, roles, settings.missing, numeric)
         if settings.weights is not None and settings.weights_kind == "frequency":
-            got = _repeated(got, settings.weights)
+            got = columns.repeated(got, settings.weights)
         found = (
             model.blocks(parsed, got.frame, got.kept) if parsed else _residuals(got, str(settings.residual))
         )
@@ -321,53 +321,11 @@ def _settings(options: Mapping[str, Any]) -> Settings:
     for name in options:
         if name not in names:
             raise InputError(f"there is no option ‘{name}’", instead(name, names))
-    given = {k: tuple(v) if isinstance(v, list) else v for k, v in options.items()}
+    given: dict[str, Any] = {k: tuple(v) if isinstance(v, list) else v for k, v in options.items()}
     for name in ("focus", "means"):
         if isinstance(given.get(name), str):
             given[name] = (given[name],)
     return Settings(**given)
-
-
-def _with_residual(residual: Any, data: Any) -> tuple[Table, str]:
-    """The table with one more column of residuals, matched by row label, else by number."""
-    import pandas as pd
-
-    values = (
-        residual if isinstance(residual, pd.Series) else pd.Series(np.asarray(residual, dtype=float).ravel())
-    )
-    name = "residual"
-    if isinstance(data, Mapping) and not data:
-        return frames.table(pd.DataFrame({name: values})), name
-    table = frames.table(data)
-    while name in table.names:
-        name += " given"
-    note: tuple[str, ...] = ()
-    labelled = isinstance(residual, pd.Series) and table.index is not None
-    if labelled and values.index.is_unique and table.index is not None and table.index.is_unique:
-        lost = values.index.difference(table.index)
-        if len(lost):
-            raise InputError(
-                f"{count(len(lost), 'residual')}, such as the one labelled ‘{lost[0]}’, has no row in the data",
-                "Give residuals whose row labels are those of the data.",
-            )
-        values = values.reindex(table.index)
-    elif len(values) == table.rows and not (labelled and not values.index.equals(table.index)):
-        note = ("Residuals without row labels are matched to the rows by their number.",)
-    else:
-        raise InputError(
-            f"{len(values):,} residuals cannot be matched to {table.rows:,} rows without row labels of their own",
-            "Give them as a column of the data, or as a pandas Series with the row labels of the data.",
-        )
-    column, inner = values.reset_index(drop=True).rename(name), table.fetch
-    return (
-        replace(
-            table,
-            names=(*table.names, name),
-            fetch=lambda n: column if n == name else inner(n),
-            notes=(*table.notes, *note),
-        ),
-        name,
-    )
 
 
 def _residuals(got: Columns, name: str) -> Blocks:
@@ -382,26 +340,6 @@ def _root(got: Columns, settings: Settings) -> Array | None:
         return None
     weight = got.frame[settings.weights].to_numpy(dtype=float)
     return None if np.all(weight == 1) else np.sqrt(weight)
-
-
-def _repeated(got: Columns, name: str) -> Columns:
-    """Each row as often as its frequency says."""
-    weight = got.frame[name].to_numpy(dtype=float)
-    part = np.flatnonzero(weight != np.round(weight))
-    if len(part):
-        raise InputError(
-            f"{name} counts rows (weights_kind='frequency') and is not a whole number in {rows(got.kept[part])}",
-            "Use weights_kind='precision' if it says how exact a row is.",
-        )
-    memory(8.0 * float(weight.sum()) * (len(got.frame.columns) + 10), "repeating rows by their frequency")
-    again = np.repeat(np.arange(len(weight)), weight.astype(np.int64))
-    note = f"{len(weight):,} rows stand for {len(again):,} by their frequency in {name}."
-    return replace(
-        got,
-        frame=got.frame.iloc[again].reset_index(drop=True),
-        kept=got.kept[again],
-        notes=(*got.notes, note),
-    )
 
 
 def _group_summaries(design: Design) -> tuple[GroupSummary, ...]:

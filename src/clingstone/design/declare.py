@@ -13,7 +13,7 @@ from clingstone.design.design import Assignment, Contrast, Design, Term
 from clingstone.intake import wanted
 from clingstone.intake.columns import Role
 from clingstone.intake.frames import Table
-from clingstone.intake.model import Blocks
+from clingstone.intake.model import Blocks, TermBlock
 from clingstone.intake.words import count, instead, listed
 from clingstone.maths.basis import Basis
 from clingstone.maths.once import Array, frozen
@@ -116,7 +116,7 @@ def structures(
     declared: Declaration, settings: Settings, frame: pd.DataFrame, places: Order, table: Table
 ) -> Structures:
     """Groups, series, sites and neighbourhoods of rows without missing ids, times or places."""
-    groups = grouping.build(declared.group, dict(frame)) if declared.group else None  # type: ignore[arg-type]
+    groups = grouping.build(declared.group, {str(c): frame[c] for c in frame}) if declared.group else None
     serial, order = None, np.arange(len(frame), dtype=np.int64)
     if declared.time is not None:
         serial, order = ordering.build(
@@ -231,7 +231,7 @@ def _level(groups: Groups | None, name: str, what: str) -> Partition:
     return found
 
 
-def _constant_in_units(found: Blocks, term: wanted.TermBlock, unit: Partition) -> None:
+def _constant_in_units(found: Blocks, term: TermBlock, unit: Partition) -> None:
     X = found.X[:, list(term.columns)]
     off = np.any(np.abs(X - X[unit.first][unit.codes]) > 1e-9 * (np.abs(X).max(axis=0) + 1e-300), axis=1)
     if off.any():

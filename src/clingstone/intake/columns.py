@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import hashlib
 from collections.abc import Mapping, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Any, Literal
 
 import numpy as np
@@ -12,7 +12,7 @@ import numpy.typing as npt
 
 from clingstone.intake.frames import Table
 from clingstone.intake.words import count, listed, quoted, rows
-from clingstone.needs import InputError
+from clingstone.needs import InputError, memory
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -69,7 +69,7 @@ def gather(
     for name in numeric:
         frame[name] = numbers(frame[name])
     _finite(frame, [n for role in ROLES if role not in IDS for n in roles.get(role, ())])
-    gone = {name: _missing(frame[name]) for name in frame}
+    gone = {name: _missing(frame[name]) for name in used}
     keep = np.ones(len(frame), dtype=bool)
     dropped: dict[str, int] = {}
     for role in ROLES:
@@ -94,11 +94,32 @@ def gather(
         raise InputError(f"no row is left of {len(frame):,} ({why})", "Check these columns.")
     kept = np.flatnonzero(keep).astype(np.int64)
     held = frame.iloc[kept].reset_index(drop=True)
-    for name in held:
+    for name in used:
         if pd.api.types.is_bool_dtype(held[name].infer_objects().dtype):
             held[name] = held[name].astype(bool)
     notes = (*table.notes, *_remarks(held, kept, roles))
     return Columns(held, kept, len(frame), dropped, notes, mark)
+
+
+def repeated(got: Columns, name: str) -> Columns:
+    """Each row as often as its frequency says."""
+    weight = got.frame[name].to_numpy(dtype=float)
+    part = np.flatnonzero(weight != np.round(weight))
+    if len(part):
+        raise InputError(
+            f"{name} counts rows (weights_kind='frequency') and is not a whole number in "
+            f"{rows(got.kept[part])}",
+            "Use weights_kind='precision' if it says how exact a row is.",
+        )
+    memory(8.0 * float(weight.sum()) * (len(got.frame.columns) + 10), "repeating rows by their frequency")
+    again = np.repeat(np.arange(len(weight)), weight.astype(np.int64))
+    note = f"{len(weight):,} rows stand for {len(again):,} by their frequency in {name}."
+    return replace(
+        got,
+        frame=got.frame.iloc[again].reset_index(drop=True),
+        kept=got.kept[again],
+        notes=(*got.notes, note),
+    )
 
 
 def plain(column: pd.Series) -> pd.Series:
@@ -112,11 +133,15 @@ def plain(column: pd.Series) -> pd.Series:
     if isinstance(dtype, pd.CategoricalDtype):
         return column.cat.remove_unused_categories()
     if pd.api.types.is_bool_dtype(dtype) or pd.api.types.is_datetime64_any_dtype(dtype):
-        return column if not column.isna().any() or dtype == object else column.astype(object)
+        return (
+            column
+            if not column.isna().any() or pd.api.types.is_object_dtype(dtype)
+            else column.astype(object)
+        )
     if pd.api.types.is_numeric_dtype(dtype):
         whole = pd.api.types.is_integer_dtype(dtype) and not column.isna().any()
         return column.astype("int64" if whole and not str(dtype).lower().startswith("uint64") else "float64")
-    if dtype == object:
+    if pd.api.types.is_object_dtype(dtype):
         there = column.dropna()
         if len(there) and all(
             isinstance(v, (kinds.Real, decimal.Decimal)) and not isinstance(v, (bool, np.bool_))
@@ -154,7 +179,8 @@ def text_error(column: pd.Series, hint: str = "") -> InputError:
         )
     values = quoted(dict.fromkeys(str(text.iloc[i]) for i in wrong), 3)
     return InputError(
-        f"{name} holds text where numbers are needed: {rows(wrong)} {'has' if len(wrong) == 1 else 'have'} {values}",
+        f"{name} holds text where numbers are needed: {rows(wrong)} "
+        f"{'has' if len(wrong) == 1 else 'have'} {values}",
         hint or "Mend these values, or leave them empty if they are missing.",
     )
 
@@ -207,8 +233,10 @@ def _missing(column: pd.Series) -> npt.NDArray[np.bool_]:
     import pandas as pd
 
     gone = column.isna().to_numpy(dtype=bool)
-    if pd.api.types.is_string_dtype(column.dtype) or column.dtype == object:
-        gone = gone | np.array([isinstance(v, str) and not v.strip() for v in column], dtype=bool)
+    if pd.api.types.is_string_dtype(column.dtype) or pd.api.types.is_object_dtype(column.dtype):
+        codes, distinct = pd.factorize(column)
+        blank = np.array([isinstance(v, str) and not v.strip() for v in distinct] + [False], dtype=bool)
+        gone = gone | blank[codes]
     return gone
 
 
@@ -250,7 +278,7 @@ def _missing_error(
 def _own_groups(column: pd.Series, lost: npt.NDArray[np.bool_]) -> pd.Series:
     filled = column.astype(object)
     for i in np.flatnonzero(lost):
-        filled.iloc[i] = f"(row {i + 1})"
+        filled.iloc[int(i)] = f"(row {i + 1})"
     return filled
 
 

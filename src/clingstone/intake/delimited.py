@@ -145,9 +145,11 @@ def _equal_lengths(text: str, separator: str, width: int, name: str) -> None:
     if wrong:
         place, found = wrong[0]
         raise InputError(
-            f"{count(len(wrong), 'row')} of {name} {'has' if len(wrong) == 1 else 'have'} another number of fields "
+            f"{count(len(wrong), 'row')} of {name} {'has' if len(wrong) == 1 else 'have'} another "
+            "number of fields "
             f"than the header's {width}: {rows(place - 1)} has {found}",
-            f"The separator was taken to be a {SEPARATORS[separator]}. Quote fields that contain it, or mend the rows.",
+            f"The separator was taken to be a {SEPARATORS[separator]}. Quote fields that contain "
+            "it, or mend the rows.",
         )
 
 
@@ -196,8 +198,7 @@ def typed(column: pd.Series, decimal: str, notes: list[str]) -> pd.Series:
         return _numbers(number, gone, name)
     # These two may be words of the user's own in a column of text: no treatment, a placeholder.
     word = plain.isin(("None", "."))
-    for value in sorted(set(plain[word])):
-        notes.append(f"‘{value}’ in {name} is kept as a value of its own.")
+    notes.extend(f"‘{v}’ in {name} is kept as a value of its own." for v in sorted(set(plain[word])))
     _tell_missing(name, plain[gone & ~word], notes)
     return column.where(~(gone & ~word))
 

@@ -63,7 +63,8 @@ def _suffix(path: Path) -> str:
     found = [s for s in SUFFIXES if name.endswith(s)]
     if not found:
         raise InputError(
-            f"{path.name} has {'the suffix ' + path.suffix if path.suffix else 'no suffix'}, which is not read here",
+            f"{path.name} has {'the suffix ' + path.suffix if path.suffix else 'no suffix'}, which "
+            "is not read here",
             f"Files that are read: {listed(SUFFIXES, most=20)}.",
         )
     return max(found, key=len)
@@ -157,7 +158,7 @@ def _excel(path: Path, columns: Collection[str] | None) -> tuple[pd.DataFrame, s
     try:
         with pd.ExcelFile(path) as book:
             sheets = [str(s) for s in book.sheet_names]
-            raw = book.parse(sheets[0], header=None, dtype=object)
+            raw = pd.read_excel(book, sheet_name=sheets[0], header=None, dtype=object)
     except ImportError as error:
         raise InputError(f"{path.name} needs a reader of Excel files", _EXTRA) from error
     except (ValueError, KeyError, OSError, zipfile.BadZipFile) as error:

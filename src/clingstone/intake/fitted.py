@@ -100,7 +100,8 @@ def _places(fit: Any, found: Table, own: bool) -> tuple[npt.NDArray[np.int64], l
     """Positions of the rows of a fit, by label; by number only where the arrays had no labels."""
     labels = fit.data.row_labels
     used = len(fit.endog)
-    gone = [] if fit.data.missing_row_idx is None else list(fit.data.missing_row_idx)
+    missing = getattr(fit.data, "missing_row_idx", None)
+    gone = [] if missing is None else list(missing)
     if (own or labels is None) and found.rows == used + len(gone):
         note = (
             []
@@ -119,7 +120,8 @@ def _places(fit: Any, found: Table, own: bool) -> tuple[npt.NDArray[np.int64], l
     if not found.index.is_unique:
         twice = list(dict.fromkeys(found.index[found.index.duplicated()]))
         raise InputError(
-            f"row labels of the data occur more than once ({quoted(twice)}), so the rows of the fit cannot be found",
+            f"row labels of the data occur more than once ({quoted(twice)}), so the rows of the "
+            "fit cannot be found",
             "Reset the index, fit again, and give both.",
         )
     places = found.index.get_indexer(labels)
@@ -127,7 +129,7 @@ def _places(fit: Any, found: Table, own: bool) -> tuple[npt.NDArray[np.int64], l
     if len(lost):
         raise InputError(
             f"{count(len(lost), 'row')} of the fit, such as the one labelled ‘{labels[lost[0]]}’, "
-            "are not in the data that were given",
+            f"{'is' if len(lost) == 1 else 'are'} not in the data that were given",
             "Give the frame that the model was fitted to.",
         )
     return np.asarray(places, dtype=np.int64), []
@@ -208,10 +210,10 @@ def _check_same(found: Table, places: npt.NDArray[np.int64], columns: dict[str, 
 def _check_coefficients(result: Any, y: Array, X: Array, weights: Array | None) -> None:
     """The fit must be the least-squares fit of its own y and X."""
     root = np.ones(len(y)) if weights is None else np.sqrt(weights)
-    ours = np.linalg.lstsq(X * root[:, None], y * root, rcond=None)[0]
+    ours = np.asarray(np.linalg.lstsq(X * root[:, None], y * root, rcond=None)[0], dtype=float)
     theirs = np.asarray(result.params, dtype=float)
-    gap = np.linalg.norm(X @ (ours - theirs))
-    if not gap <= AGREE * max(np.linalg.norm(y), 1e-300):
+    gap = float(np.linalg.norm(X @ (ours - theirs)))
+    if not gap <= AGREE * max(float(np.linalg.norm(y)), 1e-300):
         raise InputError(
             "least squares on the model's own columns does not give its coefficients "
             f"({_first_gap(result, ours, theirs)})",

@@ -11,7 +11,7 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.intake.delimited import unique_names
-from clingstone.intake.words import instead, listed, rows
+from clingstone.intake.words import count, instead, listed, rows
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -194,7 +194,52 @@ def wide_note(names: Sequence[str], used: Sequence[str], response: Sequence[str]
         alike = [n for n in names if re.fullmatch(re.escape(stem.group(1)) + r"[_. ]?\d+", n)]
         if len(alike) > 2 and not any(n in used for n in alike if n != name):
             return (
-                f"{listed(alike)} look like one measure at several times, side by side. To use them all, put them "
+                f"{listed(alike)} look like one measure at several times, side by side. To use "
+                "them all, put them "
                 "under each other: one row per time, with columns for the subject and the time.",
             )
     return ()
+
+
+def with_residual(residual: Any, data: Any) -> tuple[Table, str]:
+    """The table with one more column of residuals, matched by row label, else by number."""
+    import pandas as pd
+
+    values = (
+        residual if isinstance(residual, pd.Series) else pd.Series(np.asarray(residual, dtype=float).ravel())
+    )
+    name = "residual"
+    if data is None:
+        return table(pd.DataFrame({name: values})), name
+    held = table(data)
+    while name in held.names:
+        name += " given"
+    note: tuple[str, ...] = ()
+    labelled = isinstance(residual, pd.Series) and held.index is not None
+    if labelled and values.index.is_unique and held.index is not None and held.index.is_unique:
+        lost = values.index.difference(held.index)
+        if len(lost):
+            raise InputError(
+                f"{count(len(lost), 'residual')}, such as the one labelled ‘{lost[0]}’, has no row "
+                "in the data",
+                "Give residuals whose row labels are those of the data.",
+            )
+        values = values.reindex(held.index)
+    elif len(values) == held.rows and not (labelled and not values.index.equals(held.index)):
+        note = ("Residuals without row labels are matched to the rows by their number.",)
+    else:
+        raise InputError(
+            f"{len(values):,} residuals cannot be matched to {held.rows:,} rows without row "
+            "labels of their own",
+            "Give them as a column of the data, or as a pandas Series with the row labels of the data.",
+        )
+    column, inner = values.reset_index(drop=True).rename(name), held.fetch
+    return (
+        replace(
+            held,
+            names=(*held.names, name),
+            fetch=lambda n: column if n == name else inner(n),
+            notes=(*held.notes, *note),
+        ),
+        name,
+    )

@@ -129,7 +129,8 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
     n, p = found.X.shape
     if np.all(found.y == found.y[0]):
         raise InputError(
-            f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is nothing to explain",
+            f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is "
+            "nothing to explain",
             "Check the column and the rows that were kept.",
         )
     if n <= p:
@@ -138,7 +139,8 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
             f" ({widest.name} alone has {len(widest.columns)})" if widest and len(widest.columns) > 1 else ""
         )
         raise InputError(
-            f"{count(n, 'row')} cannot carry {count(p, 'coefficient')}{most}: nothing is left over to judge by",
+            f"{count(n, 'row')} cannot carry {count(p, 'coefficient')}{most}: nothing is left over "
+            "to judge by",
             "Use fewer terms or more rows. Many groups belong in group=, not in the formula.",
         )
     X = found.X if root is None else found.X * root[:, None]
@@ -182,7 +184,8 @@ def _check_text(parsed: Parsed, frame: pd.DataFrame) -> None:
         if name not in parsed.declared and mostly_numbers(frame[name]):
             raise text_error(
                 frame[name],
-                f"Mend these values, or leave them empty if they are missing. If {name} is a factor, write C({name}).",
+                f"Mend these values, or leave them empty if they are missing. If {name} is a "
+                f"factor, write C({name}).",
             )
 
 
@@ -204,7 +207,8 @@ def _factors(parsed: Parsed, frame: pd.DataFrame) -> pd.DataFrame:
             made[name] = column
         if isinstance(made[name].dtype, pd.CategoricalDtype) and len(made[name].cat.categories) < 2:
             raise InputError(
-                f"the factor {name} has one level (‘{made[name].cat.categories[0]}’) in all rows that are kept",
+                f"the factor {name} has one level (‘{made[name].cat.categories[0]}’) in all rows "
+                "that are kept",
                 f"Leave {name} out of the model.",
             )
     return pd.DataFrame(made)
@@ -244,7 +248,8 @@ def _evaluation_error(parsed: Parsed, frame: pd.DataFrame, error: Exception) -> 
             return text_error(frame[name])
     return InputError(
         f"the model cannot be worked out: {' '.join(str(error).split())}",
-        "Functions that can be used: log, log10, log2, exp, poly, bs, center, scale, C, I, and np. functions.",
+        "Functions that can be used: log, log10, log2, exp, poly, bs, center, scale, C, I, and np. "
+        "functions.",
     )
 
 
@@ -252,7 +257,8 @@ def _check_values(name: str, values: Array, kept: npt.NDArray[np.int64]) -> None
     bad = np.flatnonzero(~np.isfinite(values))
     if len(bad):
         raise InputError(
-            f"{name} has no finite value in {rows(kept[bad])} (a logarithm of 0 or less, or a division by 0?)",
+            f"{name} has no finite value in {rows(kept[bad])} (a logarithm of 0 or less, or a "
+            "division by 0?)",
             "Mend these values, or use another function.",
         )
 
@@ -269,7 +275,9 @@ def _named(spec: Any, data: pd.DataFrame) -> tuple[tuple[str, ...], tuple[TermBl
         if not columns:
             continue
         used = [
-            v for f in part.term.factors for v in notation.variables(f.expr, f.eval_method.value, list(data))
+            v
+            for f in part.term.factors
+            for v in notation.variables(f.expr, f.eval_method.value, [str(c) for c in data])
         ]
         terms.append(
             TermBlock(
@@ -324,7 +332,8 @@ def _remarks(y: Array, response: str) -> tuple[str, ...]:
     if len(distinct) == 2 and len(np.unique(y)) == 2:
         a, b = (f"{v:g}" for v in distinct)
         return (
-            f"{response} takes two values only ({a} and {b}): the model is for a mean that changes in a straight "
+            f"{response} takes two values only ({a} and {b}): the model is for a mean that changes "
+            "in a straight "
             "line, and what looks like dependence may be a misfit.",
         )
     return ()

@@ -22,6 +22,10 @@ UNIT_WORDS = {
     "months": "month", "week": "week", "weeks": "week", "day": "day", "days": "day", "hour": "hour",
     "hours": "hour", "minute": "minute", "minutes": "minute", "second": "second", "seconds": "second",
 }  # fmt: skip
+PERIODS = (
+    ("Q", "quarter"), ("Y", "year"), ("A", "year"), ("W", "week"), ("D", "day"), ("H", "hour"),
+    ("MIN", "minute"), ("T", "minute"), ("S", "second"), ("M", "month"),
+)  # fmt: skip
 ORDINAL_WORDS = {"visit", "wave", "round", "session", "timepoint", "occasion"}
 MONTHS = ("jan", "feb", "mar", "apr", "may", "jun", "jul", "aug", "sep", "oct", "nov", "dec")
 
@@ -56,6 +60,7 @@ def read(name: str, values: pd.Series, places: npt.NDArray[np.int64]) -> Clock:
     """
     import pandas as pd
 
+    values = values.infer_objects()
     dtype = values.dtype
     if isinstance(dtype, pd.CategoricalDtype):
         if dtype.ordered:
@@ -105,7 +110,8 @@ def _numbers(name: str, values: pd.Series) -> Clock:
     notes = (f"{name} is counted in {unit}s, after its name.",) if unit else ()
     if word in ORDINAL_WORDS:
         notes = (
-            f"{name} counts occasions: they are taken as equally far apart. If they were not, give a time column.",
+            f"{name} counts occasions: they are taken as equally far apart. If they were not, give "
+            "a time column.",
         )
     if whole:
         return Clock(number.astype(np.int64), ((unit, 1.0),), lambda i: f"{number[i]:.0f}", notes)
@@ -115,12 +121,8 @@ def _numbers(name: str, values: pd.Series) -> Clock:
 def _periods(name: str, periods: pd.PeriodIndex, values: pd.Series) -> Clock:
     """Ordinals of pandas periods: steps of equal number, whatever the days in a month."""
     freq = str(periods.freqstr).upper()
-    word = next(
-        (w for start, w in (("Q", "quarter"), ("Y", "year"), ("A", "year"), ("W", "week"), ("D", "day"),
-                            ("H", "hour"), ("MIN", "minute"), ("T", "minute"), ("S", "second"), ("M", "month"))
-         if re.sub(r"^\d+", "", freq).startswith(start)),
-        "",
-    )  # fmt: skip
+    base = re.sub(r"^\d+", "", freq)
+    word = next((w for start, w in PERIODS if base.startswith(start)), "")
     return Clock(np.asarray(periods.asi8, dtype=np.int64), ((word, 1.0),), _shown(values))
 
 
@@ -192,7 +194,7 @@ _ISO = re.compile(
 )
 _YEAR_FIRST = re.compile(r"(\d{4})[/.](\d{1,2})[/.](\d{1,2})")
 _QUARTER = re.compile(r"(?:(?P<y>\d{4})[-\s]?[Qq](?P<q>[1-4])|[Qq](?P<q2>[1-4])[-/\s]?(?P<y2>\d{4}))")
-_MONTH = re.compile(r"(?:(?P<y>\d{4})[-/Mm.](?P<m>\d{1,2})|(?P<m2>\d{1,2})[-/.](?P<y2>\d{4}))")
+_MONTH = re.compile(r"(?:(?P<y>\d{4})[-/Mm](?P<m>\d{1,2})|(?P<m2>\d{1,2})[-/.](?P<y2>\d{4}))")
 _WEEK = re.compile(r"(\d{4})-?W(\d{2})")
 _WORD_MONTH = re.compile(r"([A-Za-z]{3,9})\.?[-\s](\d{4})")
 _WORD_DAY = re.compile(
@@ -203,14 +205,25 @@ _NUMERIC_DAY = re.compile(r"(\d{1,2})[/.-](\d{1,2})[/.-](\d{4}|\d{2})(?:\s.*)?")
 _NUMBER = re.compile(r"[+-]?\d+(?:\.\d+)?")
 
 
+def _readers() -> tuple[tuple[re.Pattern[str], Callable[..., Clock]], ...]:
+    """Patterns in the order in which they are tried; the first that fits every text is taken."""
+    return (
+        (_QUARTER, _quarters),
+        (_WEEK, _weeks),
+        (_ISO, _iso),
+        (_YEAR_FIRST, _year_first),
+        (_MONTH, _months),
+        (_WORD_MONTH, _word_months),
+        (_WORD_DAY, _word_days),
+        (_NUMERIC_DAY, _numeric_days),
+        (_NUMBER, _plain),
+    )
+
+
 def _text(name: str, texts: Sequence[str], places: npt.NDArray[np.int64]) -> Clock:
     """Counts of distinct texts that all follow one pattern."""
-    readers = (
-        (_QUARTER, _quarters), (_WEEK, _weeks), (_ISO, _iso), (_YEAR_FIRST, _year_first), (_MONTH, _months),
-        (_WORD_MONTH, _word_months), (_WORD_DAY, _word_days), (_NUMERIC_DAY, _numeric_days), (_NUMBER, _plain),
-    )  # fmt: skip
     best, missed = 0, list(range(len(texts)))
-    for pattern, reader in readers:
+    for pattern, reader in _readers():
         matches = [pattern.fullmatch(t) for t in texts]
         wrong = [i for i, m in enumerate(matches) if m is None]
         if not wrong:
@@ -268,7 +281,7 @@ def _iso(name: str, texts: Sequence[str], matches: Matches, places: Any) -> Cloc
     bad = np.flatnonzero(stamps.isna().to_numpy())
     if len(bad):
         raise InputError(
-            f"{name} has {quoted((texts[i] for i in bad), 3)} in {rows(places[bad], 3)}, "
+            f"{name} has {quoted((texts[int(i)] for i in bad), 3)} in {rows(places[bad], 3)}, "
             "which is no date of the calendar or time of the clock",
             "Mend these times.",
         )
@@ -276,7 +289,7 @@ def _iso(name: str, texts: Sequence[str], matches: Matches, places: Any) -> Cloc
 
 
 def _year_first(name: str, texts: Sequence[str], matches: Matches, places: Any) -> Clock:
-    return _dates(name, texts, [tuple(map(int, m.groups())) for m in matches], places)
+    return _dates(name, texts, [(int(m[1]), int(m[2]), int(m[3])) for m in matches], places)
 
 
 def _numeric_days(name: str, texts: Sequence[str], matches: Matches, places: Any) -> Clock:

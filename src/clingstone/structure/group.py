@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import itertools
 import re
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass, replace
@@ -194,13 +195,14 @@ def _arrange(levels: tuple[Partition, ...], notes: list[str]) -> tuple[tuple[Par
             apart.append(level)
         else:
             notes.append(
-                f"{twin.key} and {level.key} put the same rows together: they are one level, kept as {twin.key}."
+                f"{twin.key} and {level.key} put the same rows together: they are one level, kept "
+                f"as {twin.key}."
             )
     levels = tuple(apart)
     if len(levels) == 1:
         return levels, "one level"
     ordered = sorted(levels, key=lambda level: level.count)
-    pairs = list(zip(ordered, ordered[1:], strict=False))
+    pairs = list(itertools.pairwise(ordered))
     if pairs and all(outer.relation(inner) == "nests" for outer, inner in pairs):
         chain = " / ".join(level.key for level in ordered)
         notes.append(f"Declared side by side, but the labels are nested: {chain}. They are read as nested.")
@@ -221,8 +223,8 @@ def _recycled(outer: Partition, inner: Partition) -> list[str]:
         return []
     some = quoted((inner.labels[i] for i in again), most=4)
     return [
-        f"Labels of {inner.key} recur under several {outer.key} ({some}): they are read as different "
-        f"{inner.key}, told apart by their {outer.key}."
+        f"Labels of {inner.key} recur in several groups of {outer.key} ({some}): each pair of "
+        f"{outer.key} and {inner.key} is a group of its own."
     ]
 
 

@@ -91,7 +91,8 @@ def _default_k(count: int) -> int:
 def _knn(sites: Sites, k: int) -> Neighbours:
     if k > sites.count - 1:
         raise InputError(
-            f"{k} nearest sites were asked for, and each of the {sites.count} sites has {sites.count - 1} others",
+            f"{k} nearest sites were asked for, and each of the {sites.count} sites has "
+            f"{sites.count - 1} others",
             f"Use neighbours='knn:{_default_k(sites.count)}' or fewer.",
         )
     about = "nearest site" if k == 1 else f"{k} nearest sites"
@@ -101,7 +102,7 @@ def _knn(sites: Sites, k: int) -> Neighbours:
 def _nearest(sites: Sites, k: int) -> Edges:
     """(focal, neighbour) of the k nearest, ties settled by site number."""
     reach = min(sites.count, 2 * k + 4)
-    distance, found = sites.tree.query(sites.points, k=reach)
+    distance, found = (np.asarray(a) for a in sites.tree.query(sites.points, k=reach))
     own = found == np.arange(sites.count)[:, None]
     # Distances that agree to rounding count as equal, so that a rotated map keeps its ties.
     grain = 1e-9 * max(float(distance.max()), 1e-300)
@@ -149,7 +150,7 @@ def _within(along: float, unit: str) -> str:
 def _chosen_band(sites: Sites) -> Neighbours | None:
     """The band chosen from the data; None where it would join nearly all sites, or too many."""
     k = min(4, sites.count - 1)
-    fourth = sites.tree.query(sites.points, k=k + 1)[0][:, -1]
+    fourth = np.asarray(sites.tree.query(sites.points, k=k + 1)[0])[:, -1]
     straight = float(np.quantile(fourth, 0.9))
     try:
         focal, neighbour = _pairs(sites, straight)

@@ -34,8 +34,9 @@ def judge(counts: npt.NDArray[Any], codes: npt.NDArray[np.int32]) -> Grid:
     """Judge rows that are already in (series, time) order.
 
     The step is the largest that divides all steps (whole counts: their greatest common divisor).
-    It makes a regular grid if it is also the most common step, or if at least half of the grid's
-    places hold a row; otherwise times are irregular and the step is the median one.
+    It makes a regular grid if it is also the single most common step, or if at least half of the grid's
+    places hold a row. Else times within a hundredth of a step of some grid count as lying on it.
+    Otherwise they are irregular, and the step is the median one.
     """
     same = codes[1:] == codes[:-1]
     steps = np.diff(counts)[same]
@@ -47,23 +48,26 @@ def judge(counts: npt.NDArray[Any], codes: npt.NDArray[np.int32]) -> Grid:
         whole = np.round(steps / divisor).astype(np.int64)
         starts = int(np.sum(~same)) + 1
         missing = int(np.sum(whole - 1))
-        usual = bool(np.sum(whole == 1) * 2 > len(whole)) or _most_common(whole) == 1
+        usual = _most_common(whole) == 1
         if usual or (len(whole) + starts) >= FILLED * (len(whole) + starts + missing):
             spacing: Spacing = "regular with gaps" if missing else "regular"
             return Grid(spacing, divisor, _ticks(counts, codes, divisor), missing)
-    step = float(np.median(steps))
+    median = float(np.median(steps))
+    step = _fitted_step(counts, codes, median)
     tick = _ticks(counts, codes, step)
     near = _off(counts, codes, tick, step)
     moved = np.diff(tick)[same]
     if near <= OFF_GRID and np.all(moved[np.diff(counts)[same] > 0] >= 1):
         missing = int(np.sum(np.maximum(moved - 1, 0)))
         return Grid("regular with gaps" if missing else "regular", step, tick, missing, near)
-    return Grid("irregular", step, None, 0)
+    return Grid("irregular", median, None, 0)
 
 
-def _most_common(whole: npt.NDArray[np.int64]) -> int:
+def _most_common(whole: npt.NDArray[np.int64]) -> int | None:
+    """The step that occurs most often, if there is one such."""
     values, times = np.unique(whole, return_counts=True)
-    return int(values[np.argmax(times)])
+    top = values[times == times.max()]
+    return int(top[0]) if len(top) == 1 else None
 
 
 def _divisor(steps: npt.NDArray[Any]) -> float | None:
@@ -81,7 +85,8 @@ def _divisor(steps: npt.NDArray[Any]) -> float | None:
 def _starts(codes: npt.NDArray[np.int32]) -> npt.NDArray[np.int64]:
     """(n,) the first row of each row's series."""
     first = np.flatnonzero(np.r_[True, codes[1:] != codes[:-1]])
-    return np.repeat(first, np.diff(np.r_[first, len(codes)]))
+    out: npt.NDArray[np.int64] = np.repeat(first, np.diff(np.r_[first, len(codes)]))
+    return out
 
 
 def _ticks(counts: npt.NDArray[Any], codes: npt.NDArray[np.int32], step: float) -> npt.NDArray[np.int64]:
@@ -92,7 +97,15 @@ def _ticks(counts: npt.NDArray[Any], codes: npt.NDArray[np.int32], step: float) 
     begin = counts[_starts(codes)]
     inside = np.round((counts - begin) / step)
     before = np.round((begin - counts.min()) / step)
-    return (inside + before).astype(np.int64)
+    tick: npt.NDArray[np.int64] = (inside + before).astype(np.int64)
+    return tick
+
+
+def _fitted_step(counts: npt.NDArray[Any], codes: npt.NDArray[np.int32], step: float) -> float:
+    """The step that fits best, by least squares of elapsed time on whole steps within series."""
+    inside = np.asarray(counts - counts[_starts(codes)], dtype=float)
+    whole = np.round(inside / step)
+    return float(np.sum(whole * inside) / np.sum(whole**2)) if np.any(whole) else step
 
 
 def _off(

@@ -136,7 +136,8 @@ def build(
         null = int(np.sum((x == 0) & (y == 0)))
         if null:
             notes.append(
-                f"{count(null, 'row')} {'lies' if null == 1 else 'lie'} exactly at 0, 0, in the ocean off Africa: "
+                f"{count(null, 'row')} {'lies' if null == 1 else 'lie'} exactly at 0, 0, in the "
+                "ocean off Africa: "
                 "often a sign of missing coordinates."
             )
         if np.abs(y).max() > 85:
@@ -197,7 +198,8 @@ def _out_of_range(x: Array, y: Array, names: tuple[str, str], places: npt.NDArra
     nx, ny = names
     if np.all(np.abs(x) <= 90) and np.any(np.abs(y) > 90) and np.all(np.abs(y) <= 360):
         return InputError(
-            f"{ny} goes up to {np.abs(y).max():g} in {rows(places[np.abs(y) > 90], 3)}, and no latitude exceeds 90; "
+            f"{ny} goes up to {np.abs(y).max():g} in {rows(places[np.abs(y) > 90], 3)}, and no "
+            "latitude exceeds 90; "
             f"{nx} stays within 90, so the two look swapped",
             f"If {ny} holds the longitude, rename the two columns.",
         )
