@@ -18,7 +18,7 @@ from clingstone.intake.columns import Columns, Role
 from clingstone.intake.frames import Table
 from clingstone.intake.model import Blocks
 from clingstone.intake.words import count, instead
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, frozen
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError
 from clingstone.run import Settings
@@ -257,7 +257,7 @@ class Case:
             name=origin.get("file", "data"),
             formula=found.formula,
             response_name=found.response,
-            kept=got.kept[held.order],
+            kept=frozen(got.kept[held.order]),
             rows_read=got.rows_read,
             dropped=got.dropped,
             notes=(*got.notes, *found.notes, *held.notes),

@@ -98,6 +98,15 @@ def test_text_where_numbers_are_needed_shows_rows_and_values() -> None:
     assert said == "w holds numbers stored as text, such as ‘01’ in row 1"
 
 
+def test_row_numbers_are_those_of_the_table_when_rows_are_already_lost() -> None:
+    held = table(flocks()).take(np.array([0, 3, 4, 5]))
+    frame = flocks(flock=["a", "a", "b", "b", None, "c"])
+    said, _ = message(lambda: gather(table(frame).take(np.array([0, 3, 4, 5])), {"group": ("flock",)}))
+    assert said.startswith("missing: flock in 1 row (row 5)")
+    assert held.places.tolist() == [0, 3, 4, 5]
+    assert held.take(np.array([1, 3])).places.tolist() == [3, 5]
+
+
 def test_infinite_values_are_named() -> None:
     said, _ = message(lambda: read(flocks(age=[1.0, np.inf, 2, -np.inf, 1, 1])))
     assert said.startswith("age is infinite in rows 2 and 4")

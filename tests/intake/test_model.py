@@ -163,6 +163,17 @@ def test_models_that_cannot_be_read(model: str, said: str) -> None:
     assert hint
 
 
+def test_rows_are_those_of_the_table_though_some_were_left_out() -> None:
+    frame = trial()
+    frame.loc[[0, 1], "y"] = np.nan
+    assert message(lambda: made("y ~ lab", frame))[0].startswith(
+        "lab holds text where numbers are needed: rows 3, 7"
+    )
+    frame.loc[6, "dose"] = 0
+    said, _ = message(lambda: made("y ~ np.log(dose)", frame))
+    assert said.startswith("np.log(dose) has no finite value in row 7 ")
+
+
 def test_text_with_odd_values_may_be_declared_a_factor() -> None:
     assert "write C(lab)" in message(lambda: made("y ~ lab"))[1]
     assert made("y ~ C(lab)").names == ("constant", "lab: 2", "lab: 4", "lab: <3")

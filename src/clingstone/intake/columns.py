@@ -19,6 +19,7 @@ if TYPE_CHECKING:
 
 Role = Literal["response", "predictor", "weight", "group", "time", "series", "place"]
 ROLES: tuple[Role, ...] = ("response", "predictor", "weight", "group", "time", "series", "place")
+Places = npt.NDArray[np.int64]
 MEASURED = ("response", "predictor", "weight")
 IDS = ("group", "series")
 SENTINELS = (-9, -99, -999, -9999, -99999, -1e30, 999, 9999, 99999, 999999, 1e30)
@@ -28,8 +29,8 @@ SENTINELS = (-9, -99, -999, -9999, -99999, -1e30, 999, 9999, 99999, 999999, 1e30
 class Columns:
     """Used columns on the rows that stay.
 
-    frame : those columns, rows counted from 0. kept : (n,) position of each row in the user's
-    table. dropped : rows left out, by reason. fingerprint : of the used columns before any row
+    frame : those columns, rows counted from 0. kept : (n,) position of each row in the table that
+    was given. dropped : rows left out, by reason. fingerprint : of the used columns before any row
     was left out.
     """
 
@@ -67,8 +68,8 @@ def gather(
     frame = pd.DataFrame({name: plain(table.column(name, role)) for name, role in used.items()})
     mark = fingerprint(frame)
     for name in numeric:
-        frame[name] = numbers(frame[name])
-    _finite(frame, [n for role in ROLES if role not in IDS for n in roles.get(role, ())])
+        frame[name] = numbers(frame[name], table.places)
+    _finite(frame, [n for role in ROLES if role not in IDS for n in roles.get(role, ())], table.places)
     gone = {name: _missing(frame[name]) for name in used}
     keep = np.ones(len(frame), dtype=bool)
     dropped: dict[str, int] = {}
@@ -78,14 +79,14 @@ def gather(
             if not lost.any():
                 continue
             if role not in MEASURED and not _settled(role, missing):
-                raise _missing_error(role, gone, keep, roles)
+                raise _missing_error(role, gone, keep, roles, table.places)
             if role in IDS and missing == "own-group":
-                frame[name] = _own_groups(frame[name], lost)
+                frame[name] = _own_groups(frame[name], lost, table.places)
                 continue
             dropped[f"missing {name} ({role})"] = int(lost.sum())
             keep &= ~lost
     for name in roles.get("weight", ()):
-        lost = _no_weight(frame[name].to_numpy(dtype=float), keep, name)
+        lost = _no_weight(frame[name].to_numpy(dtype=float), keep, name, table.places)
         if lost.any():
             dropped[f"weight 0 ({name})"] = int(lost.sum())
             keep &= ~lost
@@ -97,7 +98,7 @@ def gather(
     for name in used:
         if pd.api.types.is_bool_dtype(held[name].infer_objects().dtype):
             held[name] = held[name].astype(bool)
-    notes = (*table.notes, *_remarks(held, kept, roles))
+    notes = (*table.notes, *_remarks(held, table.places[kept]))
     return Columns(held, kept, len(frame), dropped, notes, mark)
 
 
@@ -151,7 +152,7 @@ def plain(column: pd.Series) -> pd.Series:
     return column
 
 
-def numbers(column: pd.Series) -> pd.Series:
+def numbers(column: pd.Series, places: Places) -> pd.Series:
     """The column as decimals, or an error that shows which rows hold something else."""
     import pandas as pd
 
@@ -159,11 +160,11 @@ def numbers(column: pd.Series) -> pd.Series:
         return column.astype(float)
     if pd.api.types.is_numeric_dtype(column.dtype):
         return column.astype(float)
-    raise text_error(column)
+    raise text_error(column, places)
 
 
-def text_error(column: pd.Series, hint: str = "") -> InputError:
-    """Text where numbers are needed: which rows, which values."""
+def text_error(column: pd.Series, places: Places, hint: str = "") -> InputError:
+    """Text where numbers are needed: which rows (of the user's table), which values."""
     import pandas as pd
 
     name = str(column.name)
@@ -174,12 +175,12 @@ def text_error(column: pd.Series, hint: str = "") -> InputError:
     if not len(wrong):
         first = int(np.flatnonzero(there)[0])
         return InputError(
-            f"{name} holds numbers stored as text, such as ‘{text.iloc[first]}’ in {rows(first)}",
+            f"{name} holds numbers stored as text, such as ‘{text.iloc[first]}’ in {rows(places[first])}",
             hint or "Store them as numbers (a decimal comma or thousands marks may be in the way).",
         )
     values = quoted(dict.fromkeys(str(text.iloc[i]) for i in wrong), 3)
     return InputError(
-        f"{name} holds text where numbers are needed: {rows(wrong)} "
+        f"{name} holds text where numbers are needed: {rows(places[wrong])} "
         f"{'has' if len(wrong) == 1 else 'have'} {values}",
         hint or "Mend these values, or leave them empty if they are missing.",
     )
@@ -240,7 +241,7 @@ def _missing(column: pd.Series) -> npt.NDArray[np.bool_]:
     return gone
 
 
-def _finite(frame: pd.DataFrame, names: Sequence[str]) -> None:
+def _finite(frame: pd.DataFrame, names: Sequence[str], places: Places) -> None:
     import pandas as pd
 
     for name in dict.fromkeys(names):
@@ -250,7 +251,7 @@ def _finite(frame: pd.DataFrame, names: Sequence[str]) -> None:
         infinite = np.flatnonzero(np.isinf(column.to_numpy()))
         if len(infinite):
             raise InputError(
-                f"{name} is infinite in {rows(infinite)}, and no sum can be formed with that",
+                f"{name} is infinite in {rows(places[infinite])}, and no sum can be formed with that",
                 "Mend these values, or leave them empty if they are missing.",
             )
 
@@ -260,7 +261,11 @@ def _settled(role: Role, missing: str) -> bool:
 
 
 def _missing_error(
-    role: Role, gone: Mapping[str, Any], keep: npt.NDArray[np.bool_], roles: Mapping[Role, Sequence[str]]
+    role: Role,
+    gone: Mapping[str, Any],
+    keep: npt.NDArray[np.bool_],
+    roles: Mapping[Role, Sequence[str]],
+    places: Places,
 ) -> InputError:
     counts = {
         name: np.flatnonzero(gone[name] & keep)
@@ -268,38 +273,40 @@ def _missing_error(
         if r not in MEASURED
         for name in dict.fromkeys(roles.get(r, ()))
     }
-    shown = listed(f"{name} in {count(len(i), 'row')} ({rows(i, 3)})" for name, i in counts.items() if len(i))
+    shown = listed(
+        f"{name} in {count(len(i), 'row')} ({rows(places[i], 3)})" for name, i in counts.items() if len(i)
+    )
     word = {"group": "group", "series": "series", "time": "time", "place": "place"}[role]
     hint = "Fill them in, or leave these rows out with missing='drop'"
     hint += ", or let each be a group of its own with missing='own-group'." if role in IDS else "."
     return InputError(f"missing: {shown}; a row without its {word} cannot be set beside the others", hint)
 
 
-def _own_groups(column: pd.Series, lost: npt.NDArray[np.bool_]) -> pd.Series:
+def _own_groups(column: pd.Series, lost: npt.NDArray[np.bool_], places: Places) -> pd.Series:
     filled = column.astype(object)
     for i in np.flatnonzero(lost):
-        filled.iloc[int(i)] = f"(row {i + 1})"
+        filled.iloc[int(i)] = f"(row {places[i] + 1})"
     return filled
 
 
-def _no_weight(weight: npt.NDArray[Any], keep: npt.NDArray[np.bool_], name: str) -> npt.NDArray[np.bool_]:
+def _no_weight(
+    weight: npt.NDArray[Any], keep: npt.NDArray[np.bool_], name: str, places: Places
+) -> npt.NDArray[np.bool_]:
     negative = np.flatnonzero((weight < 0) & keep)
     if len(negative):
         raise InputError(
-            f"{name} is negative in {rows(negative)}, and a weight cannot be", "Mend these weights."
+            f"{name} is negative in {rows(places[negative])}, and a weight cannot be", "Mend these weights."
         )
     return np.asarray((weight == 0) & keep)
 
 
-def _remarks(
-    frame: pd.DataFrame, kept: npt.NDArray[np.int64], roles: Mapping[Role, Sequence[str]]
-) -> list[str]:
+def _remarks(frame: pd.DataFrame, places: Places) -> list[str]:
     import pandas as pd
 
     notes = []
     twice = frame.duplicated(keep="first").to_numpy()
     if twice.any():
-        some = rows(kept[twice], 3)
+        some = rows(places[twice], 3)
         notes.append(
             f"{count(int(twice.sum()), 'row')} equal another row in every column used ({some}); "
             "they are kept. If they are copies, n is too large."

@@ -25,7 +25,8 @@ class Table:
     """Columns by name, fetched when asked for.
 
     index : row labels, where the frame has some that can identify rows. lonlat, unit : what the
-    coordinate reference system of a geographic frame says of ``place``.
+    coordinate reference system of a geographic frame says of ``place``. picked : positions of the
+    rows in the user's table, where only some are held.
     """
 
     names: tuple[str, ...]
@@ -36,9 +37,15 @@ class Table:
     lonlat: bool | None = None
     unit: str = ""
     notes: tuple[str, ...] = ()
+    picked: npt.NDArray[np.int64] | None = None
 
     def __contains__(self, name: str) -> bool:
         return name in self.names
+
+    @property
+    def places(self) -> npt.NDArray[np.int64]:
+        """(rows,) positions in the user's table."""
+        return np.arange(self.rows) if self.picked is None else self.picked
 
     def take(self, places: npt.NDArray[np.int64]) -> Table:
         """The same columns on some rows, counted anew from 0."""
@@ -48,6 +55,7 @@ class Table:
             rows=len(places),
             fetch=lambda name: fetch(name).iloc[places].reset_index(drop=True),
             index=None if self.index is None else self.index[places],
+            picked=self.places[places],
         )
 
     def column(self, name: str, used: str) -> pd.Series:
@@ -220,8 +228,9 @@ def with_residual(residual: Any, data: Any) -> tuple[Table, str]:
         lost = values.index.difference(held.index)
         if len(lost):
             raise InputError(
-                f"{count(len(lost), 'residual')}, such as the one labelled ‘{lost[0]}’, has no row "
-                "in the data",
+                f"{count(len(lost), 'residual')}, such as the one labelled ‘{lost[0]}’, "
+                f"{'has' if len(lost) == 1 else 'have'} "
+                "no row in the data",
                 "Give residuals whose row labels are those of the data.",
             )
         values = values.reindex(held.index)

@@ -77,14 +77,14 @@ def blocks(parsed: Parsed, frame: pd.DataFrame, kept: npt.NDArray[np.int64]) -> 
     """
     from formulaic.errors import FormulaicError
 
-    _check_text(parsed, frame)
+    _check_text(parsed, frame, kept)
     data = _factors(parsed, frame)
     _check_size(parsed, data)
     try:
         with np.errstate(all="ignore"):  # what is not finite is told below, with its rows
             matrices: Any = parsed.formula.get_model_matrix(data, context={}, na_action="ignore")
     except FormulaicError as error:
-        raise _evaluation_error(parsed, frame, error) from error
+        raise _evaluation_error(parsed, frame, kept, error) from error
     left, right = matrices.lhs, matrices.rhs
     spec = right.model_spec
     names, terms = _named(spec, data)
@@ -168,13 +168,13 @@ def _aliased_error(found: Blocks, X: Array, lost: tuple[int, ...]) -> InputError
     )
 
 
-def _check_text(parsed: Parsed, frame: pd.DataFrame) -> None:
+def _check_text(parsed: Parsed, frame: pd.DataFrame, kept: npt.NDArray[np.int64]) -> None:
     """The response must be numbers; a predictor of text that looks like numbers is not made a factor."""
     import pandas as pd
 
     for name in parsed.made_of:
         if not pd.api.types.is_numeric_dtype(frame[name].dtype):
-            raise text_error(frame[name])
+            raise text_error(frame[name], kept)
     for name in parsed.predictors:
         dtype = frame[name].dtype
         if pd.api.types.is_datetime64_any_dtype(dtype):
@@ -184,6 +184,7 @@ def _check_text(parsed: Parsed, frame: pd.DataFrame) -> None:
         if name not in parsed.declared and mostly_numbers(frame[name]):
             raise text_error(
                 frame[name],
+                kept,
                 f"Mend these values, or leave them empty if they are missing. If {name} is a "
                 f"factor, write C({name}).",
             )
@@ -240,12 +241,14 @@ def _check_size(parsed: Parsed, data: pd.DataFrame) -> None:
     memory(8.0 * 3 * len(data) * wide, f"a design of {len(data):,} rows and about {wide:,} columns")
 
 
-def _evaluation_error(parsed: Parsed, frame: pd.DataFrame, error: Exception) -> InputError:
+def _evaluation_error(
+    parsed: Parsed, frame: pd.DataFrame, kept: npt.NDArray[np.int64], error: Exception
+) -> InputError:
     import pandas as pd
 
     for name in parsed.predictors:
         if not pd.api.types.is_numeric_dtype(frame[name].dtype) and name not in parsed.lookups:
-            return text_error(frame[name])
+            return text_error(frame[name], kept)
     return InputError(
         f"the model cannot be worked out: {' '.join(str(error).split())}",
         "Functions that can be used: log, log10, log2, exp, poly, bs, center, scale, C, I, and np. "

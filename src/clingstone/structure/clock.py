@@ -181,7 +181,9 @@ def _objects(name: str, values: pd.Series, places: npt.NDArray[np.int64]) -> Clo
     if all(issubclass(k, str) for k in kinds):
         codes, distinct = pd.factorize(values)
         texts = [str(t).strip() for t in distinct]
-        clock = _text(name, texts, places[np.unique(codes, return_index=True)[1]])
+        clock = _text(
+            name, texts, places[np.unique(codes, return_index=True)[1]], lambda i: places[np.isin(codes, i)]
+        )
         return Clock(clock.counts[codes], clock.units, _shown(values), clock.notes)
     odd = sorted({k.__name__ for k in kinds})
     raise InputError(f"{name} mixes {listed(odd)}, which are not times of one kind", "Give numbers or dates.")
@@ -220,8 +222,16 @@ def _readers() -> tuple[tuple[re.Pattern[str], Callable[..., Clock]], ...]:
     )
 
 
-def _text(name: str, texts: Sequence[str], places: npt.NDArray[np.int64]) -> Clock:
-    """Counts of distinct texts that all follow one pattern."""
+def _text(
+    name: str,
+    texts: Sequence[str],
+    places: npt.NDArray[np.int64],
+    every: Callable[[Sequence[int]], npt.NDArray[np.int64]],
+) -> Clock:
+    """Counts of distinct texts that all follow one pattern.
+
+    places : the first row of each text. every : all rows of some texts.
+    """
     best, missed = 0, list(range(len(texts)))
     for pattern, reader in _readers():
         matches = [pattern.fullmatch(t) for t in texts]
@@ -237,8 +247,8 @@ def _text(name: str, texts: Sequence[str], places: npt.NDArray[np.int64]) -> Clo
             "Write months as 2019-03 and days as 2019-03-19.",
         )
     raise InputError(
-        f"{name} cannot be read as times: {rows(places[missed], 3)} "
-        f"{'has' if len(missed) == 1 else 'have'} {quoted((texts[i] for i in missed), 3)}",
+        f"{name} cannot be read as times: {rows(every(missed), 3)} "
+        f"{'has' if len(every(missed)) == 1 else 'have'} {quoted((texts[i] for i in missed), 3)}",
         "Use numbers, 2021, 2021-03, 2021Q3, 2021-03-04 or 2021-03-04 13:30, one kind throughout.",
     )
 
