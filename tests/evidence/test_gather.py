@@ -25,7 +25,7 @@ from clingstone.evidence.matter import (
 )
 from clingstone.evidence.read import holm
 from clingstone.evidence.spatial import moran_form, site_design
-from clingstone.evidence.words import between, correlation, degrees, number, p_value, percent
+from clingstone.evidence.words import amount, between, correlation, degrees, listed, number, p_value, percent
 from clingstone.needs import Limits
 from clingstone.run import Run
 
@@ -260,6 +260,10 @@ def test_factor_between_grid_points_never_falls() -> None:
         (p_value(0.031), "p = 0.031"),
         (p_value(0.42), "p = 0.42"),
         (p_value(0.0004), "p = 0.0004"),
+        (p_value(0.00009999), "p = 0.0001"),
+        (amount(14.0), "14"),
+        (amount(7.19214), "7.192"),
+        (listed(["clinic", "order in time", "place"]), "clinic, order in time and place"),
         (p_value(1.0), "p = 1.00"),
         (p_value(3e-8), "p below 10⁻⁷"),
         (p_value(0.0, -800.0), "p below 10⁻³⁴⁷"),

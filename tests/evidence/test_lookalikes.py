@@ -45,6 +45,16 @@ def test_ratio_of_spreads_is_recovered_and_covered() -> None:
     assert inside > 0.93  # the pooled kurtosis makes it wide, never narrow, when spreads differ
 
 
+@pytest.mark.parametrize("share", [0.5, 0.9, 0.1])
+def test_a_rare_or_common_value_is_compared_with_the_rest(share: float) -> None:
+    rng = np.random.default_rng(10)
+    x = (rng.uniform(size=4000) < share).astype(float)
+    y = np.where(x == 1, 3.0, 1.0) * rng.standard_normal(4000)
+    reading = Heteroscedasticity().read(fits(design(x), y), About("x1", "x1"))
+    assert reading.estimate is not None
+    assert reading.estimate[0] == pytest.approx(3.0, rel=0.15)
+
+
 def test_size_with_heavy_tails() -> None:
     rng = np.random.default_rng(3)
     x, B = rng.standard_normal(300), 2000

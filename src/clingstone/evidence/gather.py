@@ -14,6 +14,7 @@ from clingstone.evidence.judge import VERDICTS, verdicts
 from clingstone.evidence.nested import level_name
 from clingstone.evidence.read import holm
 from clingstone.evidence.registry import TESTS
+from clingstone.evidence.words import listed
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported, Refusal
 
@@ -162,13 +163,17 @@ def _sentence(fits: Fits, item: Item, nothing: bool) -> str:
     said = item.test.sentence(item.reading, item.about)
     if not item.given:
         return said
-    names = " and ".join(_label(fits, key) for key in sorted(item.given))
+    names = listed([_label(key) for key in sorted(item.given, key=_reading_order)])
     return f"With {names} taken into account, {said[:1].lower()}{said[1:]}"
 
 
-def _label(fits: Fits, key: str) -> str:
-    found = fits.components.get(key)
-    return found.label if found is not None else level_name(key.removeprefix("group:"))
+def _reading_order(key: str) -> tuple[int, str]:
+    return ("group", "serial", "spatial").index(key.partition(":")[0]), key
+
+
+def _label(key: str) -> str:
+    family, _, level = key.partition(":")
+    return level_name(level) if family == "group" else {"serial": "order in time", "spatial": "place"}[family]
 
 
 def _curve(fits: Fits, item: Item) -> Curve | None:

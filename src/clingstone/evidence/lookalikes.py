@@ -65,7 +65,7 @@ class Heteroscedasticity(Plain):
             log_p=np.asarray(stats.chi2.logsf(design.n * r2, 1)),
             p_method="chi-squared, large samples",
             estimate=np.where(lost, np.nan, estimate),
-            estimate_name="ratio of residual standard deviations, upper to lower fifth",
+            estimate_name="ratio of residual standard deviations, upper to lower end",
             low=np.where(lost, np.nan, low),
             high=np.where(lost, np.nan, high),
             n_used=design.n,
@@ -74,8 +74,8 @@ class Heteroscedasticity(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         interval = between(column(reading.low), column(reading.high), "number")
         return (
-            f"In the upper fifth of {about.words} the residuals spread "
-            f"{number(column(reading.estimate))} times{interval} as far as in the lower fifth "
+            f"At the upper end of {about.words} the residuals spread "
+            f"{number(column(reading.estimate))} times{interval} as far as at the lower end "
             f"(Koenker's nR² = {number(column(reading.statistic))}, "
             f"{p_value(column(reading.p), column(reading.log_p))})."
         )
@@ -98,9 +98,14 @@ def _r2(e2: Array, z: Array) -> Array:
 
 
 def _spread_ratio(e: Array, z: Array, quantile: float) -> tuple[Array, Array, Array]:
-    """Low, estimate and high of sd(upper fifth)/sd(lower fifth), each (B,)."""
+    """Low, estimate and high of sd(upper fifth)/sd(lower fifth), each (B,).
+
+    Where one value fills both fifths, it is one end and everything above it (else below) the other.
+    """
     low_cut, high_cut = np.quantile(z, [0.2, 0.8], axis=0)
-    lower, upper = z <= low_cut, z >= high_cut
+    tied, top = low_cut == high_cut, high_cut == z.max(axis=0)
+    lower = np.where(tied & top, z < low_cut, z <= low_cut)
+    upper = np.where(tied & ~top, z > high_cut, z >= high_cut)
     counts = lower.sum(axis=0), upper.sum(axis=0)
     e2 = e**2
     with np.errstate(divide="ignore", invalid="ignore"):

@@ -18,7 +18,7 @@ from clingstone.evidence.calibrate import curve
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.nested import level_name
 from clingstone.evidence.read import Plain, arcsine, direction, normal_quantile, ratio, tail_p
-from clingstone.evidence.words import between, correlation, counted, number, p_value
+from clingstone.evidence.words import amount, between, correlation, counted, number, p_value
 from clingstone.maths.forms import Form, differences, graph, lagged
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
@@ -46,7 +46,7 @@ def step_words(series: Series, lag: int = 1) -> str:
     if series.tick is None or series.step != 1 or not series.unit:
         size = "one step" if lag == 1 else f"{lag} steps"
         if series.unit:
-            size += f" of {number(series.step * lag, 3)} {series.unit}s" if series.step * lag != 1 else ""
+            size += f" of {amount(series.step * lag)} {series.unit}s" if series.step * lag != 1 else ""
         return f"{size} apart"
     return f"one {unit} apart" if lag == 1 else f"{lag} {unit}s apart"
 
@@ -291,7 +291,7 @@ class IrregularSerial(DurbinWatson):
         if _kind(series) != self.id:
             return ()
         unit = f" {series.unit}s" if series.unit else " in time"
-        return (About("1", f"{number(median_gap(series), 3)}{unit} apart (the median gap)"),)
+        return (About("1", f"{amount(median_gap(series))}{unit} apart (the median gap)"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         series = series_of(fits.design)

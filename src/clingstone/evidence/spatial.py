@@ -14,7 +14,17 @@ from clingstone.design.response import Response
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.nested import level_name
-from clingstone.evidence.read import Plain, degenerate, direction, floats, normal_quantile, ratio, tail_p
+from clingstone.evidence.read import (
+    Plain,
+    degenerate,
+    direction,
+    exceedance,
+    floats,
+    normal_quantile,
+    ratio,
+    simulated,
+    tail_p,
+)
 from clingstone.evidence.serial import law_of
 from clingstone.evidence.words import between, correlation, number, p_value
 from clingstone.maths.basis import Basis
@@ -30,6 +40,7 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 CURVE_SITES = 5000
+DRAWS = 999
 GEARY_EXACT = 2000  # sites up to which the second statistic gets the exact tail too
 
 
@@ -189,7 +200,9 @@ class Moran(Plain):
             low=np.clip(size - z, -1.0, 1.0),
             high=np.clip(size + z, -1.0, 1.0),
             n_used=design.n,
-            caveats=_caveats(fits, nb) + _unequal(fits, response, law, p),
+            caveats=_caveats(fits, nb)
+            + _unequal(fits, response, law, p)
+            + self._elsewhere(fits, about, given),
         )
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
@@ -202,6 +215,13 @@ class Moran(Plain):
             f"and 1 the most that these sites allow (Moran's I {number(column(reading.statistic))}, "
             f"{p_value(column(reading.p), column(reading.log_p))})."
         )
+
+
+def standardised(response: Response, keys: list[str]) -> Array:
+    """(K, B) (T − E T)/sd T at each neighbourhood."""
+    design = response.design
+    laws = [law_of(design, moran_form(design, key)) for key in keys]
+    return np.stack([(ratio(response, w.form) - w.mean) / np.sqrt(w.variance) for w in laws])
 
 
 def robust_z(response: Response, law: Law) -> Array:
@@ -227,6 +247,25 @@ def _unequal(fits: Fits, response: Response, law: Law, p: Array) -> tuple[str, .
     if (robust < 0.05) == (float(p[0]) < 0.05):
         return ()
     return (f"if the sites have unequal variances, {p_value(robust)}, which changes the picture",)
+
+
+def _elsewhere(fits: Fits, about: About, given: frozenset[str]) -> tuple[str, ...]:
+    """How the other neighbourhoods read, with one p for the largest of all; never a choice."""
+    design = site_design(fits.design)
+    keys = [nb.key for nb in design.neighbours if nb.W.nnz]
+    if fits.depth != "exact" or given or not about.primary or len(keys) < 2 or design.n > CURVE_SITES:
+        return ()
+    response = at_sites(fits.response)
+    if bool(degenerate(response)[0]):
+        return ()
+    sizes = np.abs(standardised(response, keys))[:, 0]
+    drawn = np.abs(standardised(simulated(response, fits, "neighbourhoods", DRAWS), keys)).max(axis=0)
+    p = float(exceedance(sizes.max(keepdims=True), drawn)[0])
+    large = int(np.sum(sizes > special.ndtri(0.975)))
+    return (
+        f"of {len(keys)} neighbourhoods, {large} show more likeness (or less) than 95 % of independent "
+        f"data would; {p_value(p)} for the largest of them",
+    )
 
 
 @dataclass(frozen=True)

@@ -13,9 +13,20 @@ def number(value: float, digits: int = 2) -> str:
         return "not known" if math.isnan(value) else ("∞" if value > 0 else f"{MINUS}∞")
     if value == 0:
         return "0"
-    place = digits - 1 - math.floor(math.log10(abs(value)))
+    power = int(f"{value:.{digits - 1}e}".split("e")[1])  # of the rounded number: 9.99e-5 is 1.0e-4
+    place = digits - 1 - power
     text = f"{round(value, place):.{max(place, 0)}f}"
     return text.replace("-", MINUS)
+
+
+def amount(value: float) -> str:
+    """A measured amount as it is, up to four digits: "14", "7.192"."""
+    return f"{value:,.4g}".replace("-", MINUS)
+
+
+def listed(names: list[str]) -> str:
+    """ "a", "a and b", "a, b and c"."""
+    return names[0] if len(names) == 1 else f"{', '.join(names[:-1])} and {names[-1]}"
 
 
 def correlation(value: float) -> str:
