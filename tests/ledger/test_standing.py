@@ -1,0 +1,180 @@
+"""Reading the table of alone × given all the others, restricted likelihood ratios, the adequate set."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy import stats
+
+from clingstone.evidence import gather
+from clingstone.ledger.ledger import weigh
+from clingstone.ledger.standing import Seen, judge, restricted_lr
+from clingstone.run import one_thread
+from tests.ledger import factories as make
+
+NAN = float("nan")
+
+
+def seen(key: str, alone: float, given: float, matters: bool = False) -> Seen:
+    family = "group" if key.startswith("group:") else key
+    return Seen(key, family, key.split(":")[-1], alone, alone, given, (), "", matters, 1.5, "x")
+
+
+def verdicts(*rows: Seen) -> list[tuple[str, str]]:
+    return [(s.verdict, s.because) for s in judge(rows)]
+
+
+def test_alone_and_given_is_present():
+    (group, _), (serial, _) = verdicts(seen("group:ward", 0.001, 0.002), seen("serial", 0.6, 0.7))
+    assert (group, serial) == ("present", "not detected")
+
+
+def test_a_signal_that_another_explains_is_not_a_second_structure():
+    (serial, because), _ = verdicts(seen("serial", 0.001, 0.4), seen("group:ward", 0.001, 0.001))
+    assert serial == "not detected"
+    assert "explained by ward" in because
+
+
+def test_an_explained_signal_that_could_still_matter_is_unclear():
+    (serial, because), _ = verdicts(
+        seen("serial", 0.001, 0.4, matters=True), seen("group:ward", 0.001, 0.001)
+    )
+    assert serial == "unclear"
+    assert "may be explained by ward" in because
+    assert "1.5 times" in because
+
+
+def test_two_that_cannot_be_told_apart_are_both_present():
+    out = verdicts(seen("serial", 0.001, 0.3), seen("group:ward", 0.002, 0.2))
+    assert [v for v, _ in out] == ["present", "present"]
+    assert all("cannot say which" in b for _, b in out)
+
+
+@pytest.mark.parametrize(("p", "verdict"), [(0.02, "unclear"), (0.001, "present")])
+def test_a_masked_structure_needs_more(p, verdict):
+    (serial, _), _ = verdicts(seen("serial", 0.4, p), seen("group:ward", 0.001, 0.001))
+    assert serial == verdict
+
+
+def test_alone_without_others_rests_on_its_own_test():
+    assert verdicts(seen("group:ward", 0.001, NAN))[0][0] == "present"
+    assert verdicts(seen("group:ward", 0.3, NAN))[0][0] == "not detected"
+    assert verdicts(seen("group:ward", 0.3, NAN, matters=True))[0][0] == "unclear"
+
+
+def test_a_component_without_a_test_of_its_own_rests_on_the_joint_fit():
+    (site, _), _ = verdicts(seen("group:site", NAN, 0.001), seen("spatial", 0.001, 0.001))
+    assert site == "present"
+
+
+def test_no_sentence_says_that_a_structure_is_absent():
+    for alone in (0.001, 0.3):
+        for given in (0.001, 0.3, NAN):
+            for because in (
+                b for _, b in verdicts(seen("serial", alone, given), seen("group:a", 0.2, given))
+            ):
+                assert "absent" not in because
+                assert "significant" not in because
+
+
+def panel(rng, tau: float, rho: float, G: int = 40, n: int = 6):
+    subject, day = np.repeat(np.arange(G), n), np.tile(np.arange(n), G)
+    y = tau * rng.standard_normal(G)[subject] + make.ar1(rng, G, n, rho)
+    design = make.design(
+        {"x": rng.standard_normal(G * n)}, groups={"subject": subject}, series=subject, tick=day
+    )
+    return make.fits(design, y)
+
+
+def test_restricted_lr_is_the_difference_of_two_fits():
+    f = panel(np.random.default_rng(1), 0.5, 0.4)
+    p, method = restricted_lr(f, "serial")
+    statistic = 2 * float(f.full.loglik[0] - f[{"group:subject"}].loglik[0])
+    assert p == pytest.approx(stats.chi2.sf(statistic, 1), rel=1e-12)
+    assert "1 df" in method
+
+
+@pytest.mark.parametrize(("key", "tau", "rho"), [("serial", 0.8, 0.0), ("group:subject", 0.0, 0.4)])
+def test_size_given_the_other_structure(key, tau, rho):
+    """At 5 %, one structure strong and the other not there; 400 columns, Monte-Carlo error 1.1 points."""
+    rng = np.random.default_rng(5)
+    f = panel(rng, tau, rho)
+    with one_thread():
+        # one strong structure, drawn from its own law
+        node = f.full_node - {key}
+        many = f.redraw(node, 400, "size of the restricted likelihood ratio")
+        lr = np.maximum(0.0, 2 * (many[f.full_node].loglik - many[node].loglik))
+    p = stats.chi2.sf(lr, 1) * (1.0 if key == "serial" else 0.5)
+    assert np.mean(p < 0.05) == pytest.approx(0.05, abs=0.035)
+
+
+def test_size_of_a_spatial_variance_is_conservative():
+    """½χ²₀ + ½χ²₂ at 5 % under independence; 800 columns, Monte-Carlo error 0.8 points."""
+    rng = np.random.default_rng(3)
+    xy = rng.uniform(size=(50, 2))
+    f = make.fits(make.design({"x": rng.standard_normal(50)}, xy=xy), rng.standard_normal(50))
+    with one_thread():
+        many = f.redraw(frozenset(), 800, "size of the spatial likelihood ratio")
+        lr = np.maximum(0.0, 2 * (many[{"spatial"}].loglik - many[frozenset()].loglik))
+    size = np.mean(0.5 * stats.chi2.sf(lr, 2) < 0.05)
+    assert size <= 0.05 + 0.02
+    assert size > 0.005
+
+
+def test_few_units_get_a_bootstrap_and_it_agrees_with_the_mixture_roughly():
+    rng = np.random.default_rng(4)
+    ward = np.repeat(np.arange(24), 8)
+    hospital = ward // 3
+    y = (
+        0.35 * rng.standard_normal(8)[hospital]
+        + 0.5 * rng.standard_normal(24)[ward]
+        + rng.standard_normal(192)
+    )
+    f = make.fits(
+        make.design(
+            {"x": rng.standard_normal(192)}, groups={"hospital": hospital, "ward": ward}, arrangement="nested"
+        ),
+        y,
+    )
+    p, method = restricted_lr(f, "group:ward")
+    statistic = 2 * float(f.full.loglik[0] - f[{"group:hospital"}].loglik[0])
+    mixture = 0.5 * float(stats.chi2.sf(statistic, 1))
+    assert statistic > 1
+    assert "199 draws" in method
+    assert p == pytest.approx(mixture, abs=0.06)
+
+
+def test_a_subject_effect_is_not_serial_dependence():
+    """Strong subject effects raise the serial statistic; the ledger says that they explain it."""
+    f = panel(np.random.default_rng(12), 1.5, 0.0, G=60, n=8)
+    with one_thread():
+        ledger = weigh(f, gather(f))
+    assert ledger.of("group:subject").verdict == "present"
+    serial = ledger.of("serial")
+    assert serial.p_alone < 0.001
+    assert serial.verdict != "present"
+    assert ledger.model == ("group:subject",) or serial.verdict == "unclear"
+
+
+def test_what_is_left_out_is_recorded_and_still_shown():
+    f = panel(np.random.default_rng(14), 1.0, 0.0, G=150, n=6)
+    with one_thread():
+        ledger = weigh(f, gather(f))
+    assert ledger.model == ("group:subject",)
+    assert any("left out day" in line for line in ledger.history)
+    assert sum(s.share for s in ledger.shares) == pytest.approx(1.0, abs=1e-9)
+    share = ledger.share("serial")
+    assert (share.share, share.low) == (0.0, 0.0)
+    assert 0 < share.high < 0.3
+    assert share.note
+
+
+def test_a_level_that_the_design_fixes_is_never_left_out():
+    rng = np.random.default_rng(15)
+    clinic = np.repeat(np.arange(80), 10)
+    design = make.design({"x": rng.standard_normal(800)}, groups={"clinic": clinic}, assigned={"x": "clinic"})
+    f = make.fits(design, rng.standard_normal(800))
+    with one_thread():
+        ledger = weigh(f, gather(f))
+    assert ledger.of("group:clinic").fixed
+    assert ledger.model == ("group:clinic",)
