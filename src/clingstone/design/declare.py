@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
@@ -136,7 +136,21 @@ def structures(
         sites = placing.build(x, y, declared.coords, lonlat, table.unit if own else "", places)
         near = neighbourhoods.build(sites, settings.neighbours)
         sites = sites.take(order)
-    return Structures(order, None if groups is None else groups.take(order), serial, sites, near)
+    return Structures(order, _set_apart(groups, order, serial, sites), serial, sites, near)
+
+
+def _set_apart(
+    groups: Groups | None, order: Order, serial: Series | None, sites: Sites | None
+) -> Groups | None:
+    """Groups in the common order, none of them under the key of the series or the sites."""
+    if groups is None:
+        return None
+    moved = groups.take(order)
+    if sites is not None:
+        moved = moved.apart_from(sites.part)
+    if serial is not None:
+        moved = moved.apart_from(replace(serial.part, key="series")).apart_from(serial.part)
+    return moved
 
 
 def _series(declared: Declaration, frame: pd.DataFrame, groups: Groups | None) -> Partition | None:

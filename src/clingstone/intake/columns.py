@@ -165,11 +165,14 @@ def numbers(column: pd.Series, places: Places) -> pd.Series:
 
 def text_error(column: pd.Series, places: Places, hint: str = "") -> InputError:
     """Text where numbers are needed: which rows (of the user's table), which values."""
+    import numbers
+
     import pandas as pd
 
     name = str(column.name)
     text = column.astype(object).where(column.notna(), None)
-    parsed = pd.to_numeric(pd.Series([v if isinstance(v, str) else None for v in text]), errors="coerce")
+    readable = [v if isinstance(v, (str, numbers.Real)) else None for v in text]
+    parsed = pd.to_numeric(pd.Series(readable, dtype=object), errors="coerce")
     there = np.array([v is not None for v in text])
     wrong = np.flatnonzero(parsed.isna().to_numpy() & there)
     if not len(wrong):
@@ -187,12 +190,17 @@ def text_error(column: pd.Series, places: Places, hint: str = "") -> InputError:
 
 
 def mostly_numbers(column: pd.Series) -> bool:
-    """Whether a column of text looks like numbers with a few odd values among them."""
+    """Whether a column that is no numbers holds some, or text that mostly looks like them."""
+    import numbers as kinds
+
     import pandas as pd
 
     if pd.api.types.is_numeric_dtype(column.dtype) or isinstance(column.dtype, pd.CategoricalDtype):
         return False
-    distinct = pd.Series([v for v in column.dropna().unique() if isinstance(v, str)], dtype=object)
+    values = list(column.dropna().unique())
+    if any(isinstance(v, kinds.Real) and not isinstance(v, (bool, np.bool_)) for v in values):
+        return True
+    distinct = pd.Series([v for v in values if isinstance(v, str)], dtype=object)
     if len(distinct) < 3:
         return False
     parsed = pd.to_numeric(distinct.str.replace(",", ".", regex=False), errors="coerce")

@@ -127,7 +127,7 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
         a set to drop).
     """
     n, p = found.X.shape
-    if np.all(found.y == found.y[0]):
+    if np.ptp(found.y) <= 1e-13 * np.abs(found.y).max():
         raise InputError(
             f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is "
             "nothing to explain",
@@ -177,9 +177,9 @@ def _check_text(parsed: Parsed, frame: pd.DataFrame, kept: npt.NDArray[np.int64]
             raise text_error(frame[name], kept)
     for name in parsed.predictors:
         dtype = frame[name].dtype
-        if pd.api.types.is_datetime64_any_dtype(dtype):
+        if pd.api.types.is_datetime64_any_dtype(dtype) or dtype.kind == "m":
             raise InputError(
-                f"{name} is a date, not a number or a factor", "Make a numeric column of it first."
+                f"{name} is a time, not a number or a factor", "Make a column of numbers of it first."
             )
         if name not in parsed.declared and mostly_numbers(frame[name]):
             raise text_error(

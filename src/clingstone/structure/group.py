@@ -17,6 +17,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import InputError
 
 Arrangement = Literal["one level", "nested", "crossed"]
+APART = " (group)"  # ends the name of a level that would else share it with the series or the sites
 
 
 @dataclass(frozen=True, eq=False)
@@ -50,8 +51,21 @@ class Groups:
         """The level of that key, or the only level whose last column has that name."""
         if name in self:
             return self[name]
-        found = [level for level in self.levels if level.key.rsplit("/", 1)[-1] == name]
+        found = [v for v in self.levels if v.key.removesuffix(APART).rsplit("/", 1)[-1] == name]
         return found[0] if len(found) == 1 else None
+
+    def apart_from(self, other: Partition) -> Groups:
+        """The same levels, one of them renamed where it bears the key of another partition of other cells.
+
+        What is worked out per partition is kept under its key, so two must not share one.
+        """
+        clash = [v for v in self.levels if v.key == other.key and v.relation(other) != "same"]
+        if not clash:
+            return self
+        renamed = tuple(replace(v, key=v.key + APART) if v in clash else v for v in self.levels)
+        note = f"The group level {other.key} is called ‘{other.key}{APART}’, apart from "
+        f"{other.key} as structure."
+        return replace(self, levels=renamed, notes=(*self.notes, note))
 
     def take(self, rows: npt.NDArray[Any]) -> Groups:
         """The same levels on some rows, in the order given."""
