@@ -132,6 +132,48 @@ def test_sparse_factorizations_match_eigenvalues():
     assert np.allclose(law.range, [known.low, known.high], atol=1e-7)
 
 
+def test_sparse_factorizations_with_cell_means_out():
+    part, basis, _ = panel(5, 30, 110)
+    n = part.n
+    assert n > routes.DENSE
+    earlier, later = twins.within(part.codes)
+    kernel = sparse.coo_array((np.linspace(0.2, 1.0, len(earlier)), (earlier, later)), shape=(n, n))
+    for form in (forms.lagged(earlier, later, n, "lag"), forms.graph(kernel.tocsr(), "kernel")):
+        law = Law(form, basis, part)
+        assert routes.name(form, part) == "factored"
+        known = routes.eigen(basis, form, part)
+        t = law.mean + np.sqrt(law.variance) * np.array([-6.0, -1.0, 0.5, 4.0])
+        got, twin = law.tails(t), eigen_tails(known.values, t)
+        assert np.allclose(got.log_upper, twin.log_upper, rtol=1e-9)
+        assert np.allclose(got.log_lower, twin.log_lower, rtol=1e-9)
+    # A link between two cells is beyond this route.
+    assert routes.name(forms.lagged(*twins.step(n), n, "across"), part) == "traces"
+
+
+@pytest.mark.parametrize("n", [50, 500, 2100])
+def test_a_model_without_columns(n):
+    """Every column may be absorbed by the cells; the law then has the form's own spectrum."""
+    bare = Basis(np.zeros((n, 0)), np.zeros((0, 0)))
+    part = Partition.of("g", np.arange(n) // 7)
+    W = twins.nearest(n, 4)[1]
+    for form in (
+        forms.differences(*twins.step(n), n, "d"),
+        forms.lagged(*twins.within(part.codes), n, "l"),
+        forms.cells(part),
+        forms.graph(W, "g"),
+    ):
+        law = Law(form, bare)
+        value = np.linalg.eigvalsh(form.S.toarray())
+        t = law.mean + np.sqrt(law.variance) * np.array([-1.0, 2.0])
+        twin = eigen_tails(value, t)
+        assert np.allclose(law.tails(t).log_lower, twin.log_lower, rtol=1e-9)
+        assert np.allclose(law.tails(t).log_upper, twin.log_upper, rtol=1e-9)
+    swept = Law(forms.differences(*twins.within(part.codes), n, "fe"), bare, part)
+    whole = Basis.of(np.eye(part.count)[part.codes])
+    direct = Law(forms.differences(*twins.within(part.codes), n, "dummies"), whole)
+    assert swept.tails(1.9).log_lower[0] == pytest.approx(direct.tails(1.9).log_lower[0], rel=1e-9)
+
+
 # ---- identities ---------------------------------------------------------------------------
 
 
@@ -435,7 +477,7 @@ def test_routes_agree_on_one_form():
     basis = twins.trend_design(n, 5, 9)
     form = forms.differences(*twins.step(n), n, "path")
     law = Law(form, basis)
-    sparse_route = routes._factored(basis, form)
+    sparse_route = routes.factored(basis, form)
     for t in (1.2, 1.95, 2.4):
         a = both(routes.eigen(basis, form, None), t, law.traces[:2], lambda: law.range)
         b = both(routes.spectrum(basis, form, None), t, law.traces[:2], lambda: law.range)

@@ -143,9 +143,9 @@ def _linked(
     apart = int(later[0] - earlier[0]) if len(earlier) else 1
     if apart > 0 and np.all(later - earlier == apart):  # bands need no sort: several times faster
         band = weight * np.bincount(earlier, minlength=n - apart)
-        bands = np.zeros((3, n))  # by column: entries (i + apart, i), (i, i), (i − apart, i)
+        bands: Array = np.zeros((3, n))  # by column: entries (i + apart, i), (i, i), (i − apart, i)
         bands[0, : n - apart], bands[1], bands[2, apart:] = band, diagonal, band
-        S = sparse.csr_array(sparse.dia_array((bands, (-apart, 0, apart)), shape=(n, n)))
+        S: sparse.csr_array = sparse.dia_array((bands, np.array([-apart, 0, apart])), shape=(n, n)).tocsr()
     else:
         both = (np.concatenate([earlier, later]), np.concatenate([later, earlier]))
         pairs = sparse.coo_array((np.full(len(both[0]), weight), both), shape=(n, n))

@@ -21,7 +21,7 @@ from clingstone.maths.forms import Form
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.spectra import Eigen, Factored, Modes, Polynomials, Spectrum, line
-from clingstone.maths.traces import projected, residual_df, sweep_out
+from clingstone.maths.traces import cell_coordinates, projected, residual_df, sweep_out
 
 SMALL = 200  # always by eigenvalues
 DENSE = 1500
@@ -53,7 +53,8 @@ def name(form: Form, swept: Partition | None) -> str:
         return "modes"
     if form.order + (swept.count if swept is not None and form.part is not None else 0) <= DENSE:
         return "eigen"
-    if swept is None and form.order <= SPARSE and form.core.nnz <= LINKS * form.order:
+    separate = swept is None or (form.part is None and _separate(form, swept))
+    if separate and form.order <= SPARSE and form.core.nnz <= LINKS * form.order:
         return "factored"
     return "traces"
 
@@ -70,37 +71,33 @@ def spectrum(basis: Basis, form: Form, swept: Partition | None) -> Spectrum:
         Q = basis.Q if swept is None else sweep_out(basis, swept).Q
         return _chain_modes(form.chains, Q, 0 if swept is None else swept.count)
     if way == "factored":
-        return _factored(basis, form)
+        return factored(basis, form, swept)
     raise ValueError(f"no exact route for the form {form.key}")
 
 
 # ---- eigenvalues --------------------------------------------------------------------------
 
 
-def _coordinates(form: Form, U: Array) -> tuple[Array, int]:
-    """An orthonormal block in the coordinates of a form, and the dimensions left where S and U are zero.
+def _extended(form: Form, V: Array) -> tuple[Array, int]:
+    """Coordinates of an orthonormal block, and the dimensions left where S and the block are zero.
 
-    For cells, U falls partly outside the span of Z̃; a square root of what is outside adds a few rows.
+    For cells, the block falls partly outside the span of Z̃; a square root of that adds a few rows.
     """
-    V = form.coordinates(U)
     if form.part is None:
         return V, 0
-    outside = form.n - form.order
-    value, vector = np.linalg.eigh(np.eye(U.shape[1]) - V.T @ V)
-    keep = value > WHOLE
-    extra = np.sqrt(value[keep])[:, None] * vector[:, keep].T
-    return np.vstack([V, extra[: max(outside, 0)]]), max(outside - int(keep.sum()), 0)
+    outside, room = _outside(form, V)
+    outside = outside[:room]
+    return np.vstack([V, outside]), room - len(outside)
 
 
 @once
 def eigen(basis: Basis, form: Form, swept: Partition | None) -> Eigen:
     """All eigenvalues of MSM on range M, by one dense symmetric problem of the order of the core."""
-    U = basis.Q
+    V = form.coordinates(basis.Q)
     if swept is not None:
-        rest = sweep_out(basis, swept)
-        dummies = swept.indicator.T.toarray() / np.sqrt(swept.sizes)
-        U = np.hstack([dummies, rest.Q])
-    V, zeros = _coordinates(form, U)
+        rest = form.coordinates(sweep_out(basis, swept).Q)
+        V = np.hstack([cell_coordinates(form, swept).toarray(), rest])
+    V, zeros = _extended(form, V)
     A = np.zeros((V.shape[0], V.shape[0]))
     A[: form.order, : form.order] = form.core.toarray()
     # M A M + κVV' moves the directions of V beyond the spectrum, where they are dropped.
@@ -119,14 +116,12 @@ def eigen(basis: Basis, form: Form, swept: Partition | None) -> Eigen:
 # ---- known eigenvectors -------------------------------------------------------------------
 
 
-def triangle(rows: Array) -> Array:
-    """R of rows = QR, for one block (k, p) or a stack of them."""
-    return np.asarray(np.linalg.qr(rows, mode="r"))
-
-
-def _compressed(rows: Array, p: int) -> Array:
-    """At most p rows with the same Gram."""
-    return rows if len(rows) <= p else triangle(rows)
+def _compressed(rows: Array) -> Array:
+    """At most p rows with the same Gram, for one block (k, p) or a stack of them (…, k, p)."""
+    k, p = rows.shape[-2:]
+    if k <= p:
+        return rows
+    return rows[..., :0, :] if p == 0 else np.asarray(np.linalg.qr(rows, mode="r"))
 
 
 def _unions(chains: Chains, swept: Partition) -> bool:
@@ -153,14 +148,13 @@ def _chain_modes(chains: Chains, Q: Array, removed: int) -> Modes:
             zero_rows.append(block[0])
             zero_count += count
             b, block = b[1:], block[1:]
-        if count > p and len(b):
-            block = triangle(block) if p else block[:, :0]
+        block = _compressed(block) if len(b) else block
         values.append(b)
         counts.append(np.full(len(b), float(count)))
-        rows.append(block.reshape(-1, p))
+        rows.append(block.reshape(len(b) * block.shape[1], p))
         row_values.append(np.repeat(b, block.shape[1]))
     if chains.kind == "differences":
-        kept = _compressed(np.vstack(zero_rows), p)
+        kept = _compressed(np.vstack(zero_rows))
         values.append(np.zeros(1))
         counts.append(np.array([zero_count]))
         rows.append(kept)
@@ -171,11 +165,10 @@ def _chain_modes(chains: Chains, Q: Array, removed: int) -> Modes:
 def _cell_modes(form: Form, Q: Array) -> Modes:
     diagonal = form.diagonal_core
     assert diagonal is not None
-    p = Q.shape[1]
     V = form.coordinates(Q)
     distinct, place, count = np.unique(diagonal, return_inverse=True, return_counts=True)
     order = np.argsort(place, kind="stable")
-    blocks = [_compressed(b, p) for b in np.split(V[order], np.cumsum(count)[:-1])]
+    blocks = [_compressed(b) for b in np.split(V[order], np.cumsum(count)[:-1])]
     outside, zeros = _outside(form, V)
     values = [distinct, np.zeros(1)]
     counts = [count.astype(float), np.array([float(zeros)])]
@@ -273,12 +266,21 @@ def _moments(basis: Basis, form: Form, top: int) -> Array:
     return form.chains.moments(basis.Q, top)
 
 
-def _factored(basis: Basis, form: Form) -> Factored:
-    V, zeros = _coordinates(form, basis.Q)
+@once
+def _separate(form: Form, cells: Partition) -> bool:
+    """True if the form has no entry between rows of two different cells."""
+    entries = form.core.tocoo()
+    return bool(np.all(cells.codes[entries.row] == cells.codes[entries.col]))
+
+
+def factored(basis: Basis, form: Form, swept: Partition | None = None) -> Factored:
+    """The sparse form itself, with Q in its coordinates."""
+    Q = basis.Q if swept is None else sweep_out(basis, swept).Q
+    V, zeros = _extended(form, form.coordinates(Q))
     extra = V.shape[0] - form.order
     A = form.core if extra == 0 else sparse.block_diag([form.core, sparse.csr_array((extra, extra))])
     low, high = sharp_bounds(form)
-    return Factored(sparse.csr_array(A), V, zeros, min(low, 0.0), max(high, 0.0))
+    return Factored(sparse.csr_array(A), V, zeros, min(low, 0.0), max(high, 0.0), swept)
 
 
 @once

@@ -19,6 +19,7 @@ from scipy import sparse
 from clingstone.maths.chains import Chains
 from clingstone.maths.contour import Complex, log_pivots
 from clingstone.maths.once import Array, once
+from clingstone.maths.partition import Partition
 
 NUMBERS_AT_ONCE = 2_000_000
 
@@ -187,8 +188,12 @@ class Factored:
     """General sparse S: one sparse factorization of D(z) per node.
 
     A (N, N) sparse symmetric, V (N, p) orthonormal: Q in the coordinates of A. zeros : dimensions on
-    which S is zero and Q too. Where Re D is positive definite, elimination without pivoting is stable
-    and every pivot has a positive real part.
+    which S is zero and Q too. cells : cells whose means are swept out as well, with no entry of A
+    between two of them and V orthogonal to them; then D⁻¹Z̃ is D⁻¹1 cut into cells, Z̃'D⁻¹Z̃ is
+    diagonal, and a Schur complement of order p is left.
+
+    Where Re D is positive definite, elimination without pivoting is stable and every pivot has a
+    positive real part.
     """
 
     A: sparse.csr_array
@@ -196,37 +201,48 @@ class Factored:
     zeros: int
     low: float
     high: float
+    cells: Partition | None = None
 
     @property
     def m(self) -> float:
-        return float(self.V.shape[0] - self.V.shape[1] + self.zeros)
+        swept = 0 if self.cells is None else self.cells.count
+        return float(self.V.shape[0] - self.V.shape[1] + self.zeros - swept)
 
     @property
     @once
-    def ordering(self) -> tuple[sparse.csc_array, Array]:
-        """A and V with rows in an order that keeps factors sparse, found once."""
+    def ordering(self) -> tuple[sparse.csc_array, Array, sparse.csr_array | None]:
+        """A, V and the cells' unit vectors (G, N) with rows in an order that keeps factors sparse."""
         from scipy.sparse.linalg import splu
 
-        shifted = sparse.csc_array(
-            self.A + sparse.eye_array(self.A.shape[0]) * (1.0 + abs(self.A).sum(axis=1).max())
-        )
-        found = splu(
-            shifted, permc_spec="MMD_AT_PLUS_A", diag_pivot_thresh=0.0, options={"SymmetricMode": True}
-        )
+        shift = 1.0 + float(abs(self.A).sum(axis=1).max())  # makes the matrix diagonally dominant
+        shifted = sparse.csc_array(self.A + shift * sparse.eye_array(self.A.shape[0]))
+        found = splu(shifted, "MMD_AT_PLUS_A", 0.0, options={"SymmetricMode": True})
         order = np.argsort(found.perm_c)
-        return sparse.csc_array(self.A[order][:, order]), self.V[order]
+        unit = None
+        if self.cells is not None:
+            scale = sparse.diags_array(1.0 / np.sqrt(self.cells.sizes))
+            unit = sparse.csr_array(scale @ self.cells.indicator[:, order])
+        return sparse.csc_array(self.A[order][:, order]), self.V[order], unit
 
     def log_det(self, z: Complex, t: float) -> Complex:
         from scipy.sparse.linalg import splu
 
-        A, V = self.ordering
+        A, V, unit = self.ordering
         eye = sparse.csc_array(sparse.eye_array(A.shape[0]))
         p = V.shape[1]
+        right = V.astype(complex)
+        if unit is not None:
+            right = np.column_stack([right, unit.T @ np.ones(unit.shape[0])])
         out = np.empty(len(z), dtype=complex)
         S = np.empty((len(z), p, p), dtype=complex)
         for j, node in enumerate(z):
             D = sparse.csc_array((1.0 + 2.0 * node * t) * eye - (2.0 * node) * A)
-            factor = splu(D, permc_spec="NATURAL", diag_pivot_thresh=0.0, options={"SymmetricMode": True})
+            factor = splu(D, "NATURAL", 0.0, options={"SymmetricMode": True})
             out[j] = np.log(factor.U.diagonal()).sum() + self.zeros * np.log(1.0 + 2.0 * node * t)
-            S[j] = V.T @ factor.solve(V.astype(complex))
-        return np.asarray(out + log_pivots(S) if p else out)
+            solved = factor.solve(right) if right.shape[1] else right
+            S[j] = V.T @ solved[:, :p]
+            if unit is not None:
+                on_cells = unit @ solved  # Z̃'D⁻¹Q, and the diagonal of Z̃'D⁻¹Z̃
+                out[j] += np.log(on_cells[:, p]).sum()
+                S[j] -= on_cells[:, :p].T @ (on_cells[:, :p] / on_cells[:, p:])
+        return np.asarray(out + log_pivots(S))
