@@ -63,8 +63,13 @@ def gather(fits: Fits, tests: Sequence[Test] = TESTS) -> Evidence:
     return Evidence(tuple(_finding(fits, item, p, adjusted, code) for item, p, adjusted, code in known))
 
 
-def read_columns(fits: Fits, tests: Sequence[Test] = TESTS, given: bool = True) -> Columns:
-    """All tests on all B columns. given : also read them given the other structures."""
+def read_columns(fits: Fits, tests: Sequence[Test] = TESTS, given: bool | None = None) -> Columns:
+    """All tests on all B columns, without words.
+
+    given : also read them given the other structures; by default only for a single column, because
+    it fits the joint model to every column (seconds per hundred columns with three structures).
+    """
+    given = fits.response.B == 1 if given is None else given
     with fits.run.progress("tests", len(tests)) as advance:
         items: list[Item] = []
         for test in tests:

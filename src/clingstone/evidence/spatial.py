@@ -200,9 +200,7 @@ class Moran(Plain):
             low=np.clip(size - z, -1.0, 1.0),
             high=np.clip(size + z, -1.0, 1.0),
             n_used=design.n,
-            caveats=_caveats(fits, nb)
-            + _unequal(fits, response, law, p)
-            + self._elsewhere(fits, about, given),
+            caveats=(*_caveats(fits, nb), *_unequal(fits, response, law, p), *_elsewhere(fits, about, given)),
         )
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
