@@ -36,10 +36,8 @@ def decimals_for(se: float, significant: int = 2) -> int:
     """
     if not math.isfinite(se) or se <= 0:
         return 2
-    lead = math.floor(math.log10(se))
-    # 0.0996 to two digits is 0.10: rounding may carry into the next decade.
-    if round(se / 10.0**lead, significant - 1) >= 10:
-        lead += 1
+    # Rounding may carry into the next decade: 0.0996 to two digits is 0.10.
+    lead = int(f"{se:.{significant - 1}e}".split("e")[1])
     return significant - 1 - lead
 
 

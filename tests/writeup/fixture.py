@@ -155,7 +155,8 @@ def trial(hostile: str = "") -> Results:
         covers=("group",),
         df_rule="Kenward–Roger",
         account=Account(
-            f"generalised least squares with a random intercept per {clinic}, variance by restricted maximum likelihood",
+            f"generalised least squares with a random intercept per {clinic}, variance by restricted "
+            "maximum likelihood",
             "Kenward–Roger adjusted (X′V⁻¹X)⁻¹",
             "none beyond the adjustment",
             "Kenward–Roger, expected information",
@@ -314,7 +315,8 @@ def trial(hostile: str = "") -> Results:
     )
     advice = Advice(
         state="supported with caveat",
-        headline=f"The rows of a {clinic} hang together: they share 18 % (6 to 41 %) of what the model leaves over. "
+        headline=f"The rows of a {clinic} hang together: they share 18 % (6 to 41 %) of what the model "
+        "leaves over. "
         f"It matters for {arm}: its interval should be 2.3 times as wide.",
         structures=frozenset({"group"}),
         levels=(clinic,),
@@ -567,7 +569,8 @@ def stream() -> Results:
         at="",
         levels=("all rows",),
         structures=frozenset({"serial"}),
-        headline="Days that follow each other hang together: one day apart, residuals correlate by 0.69 (0.63 to 0.74). "
+        headline="Days that follow each other hang together: one day apart, residuals correlate by 0.69 "
+        "(0.63 to 0.74). "
         "It matters for elapsed: its interval should be 2.7 times as wide.",
         because=(
             Reason(
@@ -643,7 +646,8 @@ def wells() -> Results:
             primary=True,
             source="moran-1950, cliff-ord-1981",
             curve=chart,
-            sentence="A well resembles its 6 nearest wells: 0.38 (0.20 to 0.56) of what is attainable (I = 0.31, p = 2 × 10⁻⁵).",
+            sentence="A well resembles its 6 nearest wells: 0.38 (0.20 to 0.56) of what is attainable "
+            "(I = 0.31, p = 2 × 10⁻⁵).",
         ),
         finding(
             "spatial",

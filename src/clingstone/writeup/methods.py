@@ -33,10 +33,11 @@ def methods_items(results: Results) -> tuple[tuple[str, tuple[str, ...]], ...]:
 def checklist(results: Results) -> tuple[tuple[str, str, str], ...]:
     """Item, what it asks, and where the text answers it: section titles, or what is left to fill in."""
     rows = []
+    parts = sections(results)
     for item, words in ITEMS.items():
         places = [
             f"{part.title}{' (blank left)' if s.blank else ''}"
-            for part in sections(results)
+            for part in parts
             for s in part.sentences
             if item in s.items
         ]

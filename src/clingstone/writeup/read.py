@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from clingstone.display import decimals_for
+from clingstone.display import decimals_for, number
 from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
 
@@ -100,3 +100,22 @@ def level_percent(results: Results) -> str:
         results.settings.get("confidence", results.refits[0].confidence if results.refits else 0.95)
     )
     return f"{level:g}\u00a0%"
+
+
+BASES = {"log": math.e, "log2": 2.0, "log10": 10.0}
+
+
+def as_ratio(results: Results, fit: Refit, row: Interval) -> str:
+    """A coefficient of a logarithm as a ratio with its interval: "1.04 (1.01 to 1.07)"; else "".
+
+    Only coefficients are ratios: the constant and named means are levels, not differences.
+    """
+    base = BASES.get(results.case.transformed)
+    if base is None or row.term == "constant" or row.term not in fit.coefficients:
+        return ""
+    values = [base**v if v * math.log(base) < 700 else math.inf for v in (row.estimate, row.low, row.high)]
+    if not math.isfinite(values[0]):
+        return ""
+    places = decimals_for(values[0] * math.log(base) * row.se)
+    estimate, low, high = (number(v, places) for v in values)
+    return f"{estimate} ({low} to {high})"

@@ -28,6 +28,7 @@ from clingstone.writeup.bibliography import with_source
 from clingstone.writeup.items import ITEMS, Section, Sentence
 from clingstone.writeup.read import (
     advised,
+    as_ratio,
     decimals,
     focus_rows,
     label_of,
@@ -301,9 +302,11 @@ def estimate_words(results: Results, fit: Refit, name: str) -> str:
         return ""
     places = decimals(results, name)
     df = f"; {degrees(row.df)} degrees of freedom" if math.isfinite(row.df) else ""
+    ratio = as_ratio(results, fit, row)
+    factor = f", as a ratio {ratio}" if ratio else ""
     return (
         f"{number(row.estimate, places)} ({level_percent(results)} interval "
-        f"{span(row.low, row.high, places)}{df}; {p_value(row.p)})"
+        f"{span(row.low, row.high, places)}{df}; {p_value(row.p)}){factor}"
     )
 
 

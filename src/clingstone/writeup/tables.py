@@ -23,6 +23,7 @@ from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
 from clingstone.writeup.read import (
     advised,
+    as_ratio,
     decimals,
     focus_rows,
     label_of,
@@ -54,24 +55,26 @@ def intervals(results: Results, name: str) -> Table:
         Column("remedy", "refit"),
         Column("estimate", "estimate", "decimal"),
         Column("interval", f"{level_percent(results)} interval", "right"),
+        Column("ratio", "as a ratio", "right"),
         Column("se", "standard error", "decimal"),
         Column("se_ratio", "against ordinary", "decimal"),
         Column("df", "degrees of freedom", "decimal"),
         Column("df_rule", "rule"),
         Column("p", "p", "right"),
     )
-    return Table.of(name, columns, rows, _status_note(results, name))
+    return Table.of(name, columns, rows, _status_note(results, name)).without_empty()
 
 
 def _interval_cells(results: Results, fit: Refit, row: Interval, places: int) -> list[Cell]:
     best = advised(results)
     name = f"{fit.name} (advised)" if best is fit else fit.name
     if not math.isfinite(row.estimate):
-        return [Cell(name, fit.remedy), *(Cell(t) for t in ("not given", "", "", "", "", row.status, ""))]
+        return [Cell(name, fit.remedy), *(Cell(t) for t in ("not given", "", "", "", "", "", row.status, ""))]
     return [
         Cell(name, fit.remedy),
         Cell(number(row.estimate, places), row.estimate),
         Cell(span(row.low, row.high, places)),
+        Cell(as_ratio(results, fit, row)),
         Cell(number(row.se, places), row.se),
         Cell(number(row.se_ratio, 2), row.se_ratio),
         Cell(degrees(row.df), row.df),

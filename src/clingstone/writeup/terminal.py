@@ -101,8 +101,11 @@ def _block(results: Results, name: str, shown: list[tuple[Refit, Interval]], wid
         lines = []
     label_room = min(room, max(map(columns_of, labels), default=0))
     for k, (label, cells) in enumerate(zip(labels, figures, strict=True)):
-        words = wrapped(label, max(12, label_room), "", "  ")
         body = "  ".join(pad(c, w, True) for c, w in zip(cells, ends, strict=True))
+        if room < 12:  # a narrow window: figures under their refit
+            lines += [*wrapped(label, width, "    "), *wrapped("  ".join(cells), width, "      ")]
+            continue
+        words = wrapped(label, label_room, "", "  ")
         head = pad(title if k == 0 else "", left)
         lines.append(f"  {head}  {pad(words[0], label_room)}  {body}".rstrip())
         lines += [f"  {' ' * left}  {more}" for more in words[1:]]
