@@ -78,6 +78,18 @@ def test_a_design_that_can_show_nothing_says_so():
     assert np.isnan(value)
 
 
+def test_large_data_show_small_correlations():
+    """The search is on a log scale: 200 groups of 20 see an ICC near 0.01 (closed form 0.0142)."""
+    f = silent_groups(200, 20)
+    with one_thread():
+        test, about = primary_test(f, weigh(f, gather(f)).standing[0], TESTS)
+        value = smallest(f, test, about, _groups(f.design.group.levels[0]), "here")
+    cut = stats.f.isf(0.05, 199, 200 * 19)
+    ratio = cut / stats.f.isf(0.8, 199, 200 * 19)  # 1 + mλ at 80 %
+    exact = (ratio - 1) / 20 / (1 + (ratio - 1) / 20)
+    assert value == pytest.approx(exact, rel=0.15)
+
+
 def test_same_seed_same_number():
     with one_thread():
         first, second = (weigh(f, gather(f)).detectable for f in (silent_groups(), silent_groups()))

@@ -136,3 +136,24 @@ def test_interval_of_the_icc_covers(truth):
     assert hits / draws >= 0.95 - 3 * np.sqrt(0.95 * 0.05 / draws)
     if truth:
         assert hits / draws <= 0.95 + 3.5 * np.sqrt(0.95 * 0.05 / draws)
+
+
+def test_the_ellipsoid_of_large_problems_is_near_the_region():
+    """Forced on a problem where both can be had: shares within a quarter of the interval's width."""
+    from clingstone.ledger import region as module
+
+    rng = np.random.default_rng(9)
+    G, n = 80, 8
+    subject, day = np.repeat(np.arange(G), n), np.tile(np.arange(n), G)
+    y = rng.standard_normal(G)[subject] + make.ar1(rng, G, n, 0.4)
+    f = make.fits(
+        make.design({"x": rng.standard_normal(G * n)}, groups={"s": subject}, series=subject, tick=day), y
+    )
+    full = region(f, f.full_node, 0.95)
+    walk = module._Walk(f.algebra(f.full_node), f.response, f.full.theta[:, 0], 2 * CUT)
+    rough = module.Region(module._columns(f, f.full_node, walk.ellipsoid()), 0.95, "")
+    for key in ("group:s", "serial"):
+        exact, near = full.interval(full.model.shares()[key]), rough.interval(rough.model.shares()[key])
+        width = exact[2] - exact[0]
+        assert near[0] == pytest.approx(exact[0], abs=0.25 * width)
+        assert near[2] == pytest.approx(exact[2], abs=0.25 * width)

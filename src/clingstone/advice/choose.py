@@ -11,6 +11,7 @@ from clingstone.advice.named import Fact, named, words, yes
 from clingstone.advice.rules import CAVEATS, NO_REMEDY, PREFER, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.display import listed
+from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.remedy import Refit
 
 __all__ = [
@@ -233,7 +234,7 @@ def _levels(facts: Facts, advised: Refit | None) -> tuple[str, ...]:
     if advised is None or advised.remedy in ("ordinary", REPAIRED):
         return ()
     if advised.at:
-        return (advised.at,)
+        return tuple(advised.at.split(TOGETHER))
     keys = [s for s in facts.ledger.standing if covered(s) and s.structure in advised.covers]
     names = {"serial": facts.word("series level") or "series", "spatial": "site"}
     return tuple(dict.fromkeys(names.get(s.key, s.key.removeprefix("group:")) for s in keys))

@@ -95,10 +95,15 @@ def consequence(found: list[tuple[str, float]], material: tuple[float, float]) -
         return ""
     term, factor = max(found, key=lambda pair: abs(np.log(pair[1])))
     if material[0] <= factor <= material[1]:
-        return f"It moves the intervals of {listed([t for t, _ in found][:3])} little." if found else ""
+        return f"It moves the intervals of {listed(_named(t) for t, _ in found[:3])} little."
     others = [t for t, f in found if t != term and not material[0] <= f <= material[1]]
-    more = f", and those of {listed(others[:2])} change too" if others else ""
-    return f"It matters for {term}: its interval should be {times(factor)}{more}."
+    more = f", and those of {listed(map(_named, others[:2]))} change too" if others else ""
+    return f"It matters for {_named(term)}: its interval should be {times(factor)}{more}."
+
+
+def _named(term: str) -> str:
+    """A level of a factor holds a colon of its own."""
+    return f"“{term}”" if ":" in term else term
 
 
 def nothing(ledger: Ledger) -> str:

@@ -17,10 +17,12 @@ from clingstone.needs import NotSupported
 from clingstone.structure.serial import Series
 
 POWER = 0.80
-DRAWS = 200
+DRAWS, FEWEST = 200, 40
+ROW_DRAWS = 5e6  # rows × draws in all; fewer draws beyond 25,000 rows
+CHUNK = 4e6  # rows × draws held at a time, 32 MB
 LEVEL = 0.05
-ROUNDS = 5
-LARGEST = 0.95
+ROUNDS = 3
+SMALLEST, FIRST, LARGEST = 0.001, 0.32, 0.95
 NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial share"}
 
 Drawer = Callable[[float, np.random.Generator, int], Array]
@@ -126,23 +128,46 @@ def _sites(fits: Fits) -> Drawer | None:
 
 def power(fits: Fits, test: Test, about: About, drawer: Drawer, value: float, purpose: str) -> float:
     """Share of draws in which the test finds a dependence of this size at the 5 % level."""
-    # The same random numbers at every value: the power curve is then smooth in the value.
-    rng = fits.run.child(f"detectable {purpose}")
-    again = Fits(Response.of(fits.design, drawer(value, rng, DRAWS)), fits.run)
-    p = np.broadcast_to(np.asarray(test.read(again, about, frozenset()).p, dtype=float), (DRAWS,))
-    return float(np.mean(p < LEVEL))
+    n = fits.design.n
+    draws = int(np.clip(ROW_DRAWS / n, FEWEST, DRAWS))
+    size = max(1, int(CHUNK / n))
+    found = 0
+    for chunk, start in enumerate(range(0, draws, size)):
+        B = min(size, draws - start)
+        # The same random numbers at every value: the power curve is then smooth in the value.
+        rng = fits.run.child(f"detectable {purpose}", chunk)
+        again = Fits(Response.of(fits.design, drawer(value, rng, B)), fits.run)
+        p = np.broadcast_to(np.asarray(test.read(again, about, frozenset()).p, dtype=float), (B,))
+        found += int(np.sum(p < LEVEL))
+    return found / draws
 
 
 def smallest(fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str) -> float:
-    """The size at which power reaches 80 %, by bisection and one linear step; NaN when none to 0.95 does."""
+    """The size at which power reaches 80 %; NaN when none up to 0.95 does.
+
+    Halved from 0.32 until the power falls short, or raised to 0.95; then bisected on the log scale,
+    with one linear step. Below 0.001 it is no longer looked for.
+    """
+
+    def at(value: float) -> float:
+        return power(fits, test, about, drawer, value, purpose)
+
     try:
-        low, high = (0.0, LEVEL), (LARGEST, power(fits, test, about, drawer, LARGEST, purpose))
+        high = (FIRST, at(FIRST))
         if high[1] < POWER:
-            return float("nan")
+            low, high = high, (LARGEST, at(LARGEST))
+            if high[1] < POWER:
+                return float("nan")
+        else:
+            low = (high[0] / 2, at(high[0] / 2))
+            while low[1] >= POWER and low[0] > SMALLEST:
+                high, low = low, (low[0] / 2, at(low[0] / 2))
+            if low[1] >= POWER:
+                return low[0]
         for _ in range(ROUNDS):
-            middle = (low[0] + high[0]) / 2
-            at = power(fits, test, about, drawer, middle, purpose)
-            low, high = ((middle, at), high) if at < POWER else (low, (middle, at))
+            middle = float(np.sqrt(low[0] * high[0]))
+            found = (middle, at(middle))
+            low, high = (found, high) if found[1] < POWER else (low, found)
     except NotSupported:
         return float("nan")
     return low[0] + (high[0] - low[0]) * (POWER - low[1]) / (high[1] - low[1])

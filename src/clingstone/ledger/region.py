@@ -22,8 +22,9 @@ from clingstone.maths.once import Array
 RAYS = {2: 24, 3: 48}  # directions of the first round, by number of parameters; 64 above
 SECOND = 10  # directions from each extreme point in the second round
 BISECTIONS = 9
-HEAVY = 3e8  # multiplications per evaluation above which the second round is left out
-TOO_HEAVY = 2e9  # … above which the region is the ellipsoid of the curvature at the estimate
+GRID = 61  # values of a single parameter
+HEAVY = 1.5e7  # multiplications per evaluation above which the second round is left out
+TOO_HEAVY = 3e8  # … above which the region is the ellipsoid of the curvature at the estimate
 
 
 @dataclass(frozen=True, eq=False)
@@ -70,7 +71,7 @@ def region(fits: Fits, node: frozenset[str], confidence: float) -> Region:
     elif work > TOO_HEAVY and d > 1:
         points, method = walk.ellipsoid(), "curvature of the restricted likelihood (large problem)"
     elif d == 1:
-        points, method = walk.line(), "profile likelihood"
+        points, method = walk.line(GRID if work <= HEAVY else GRID // 2), "profile likelihood"
     else:
         rng = fits.run.child("likelihood region " + "+".join(sorted(node)))
         rays = RAYS.get(d, 64)
@@ -146,16 +147,16 @@ class _Walk:
     def _at(self, start: Array, direction: Array, step: float) -> Array:
         return np.asarray(np.clip(start + step * direction, self.low, self.high))
 
-    def line(self) -> list[Array]:
+    def line(self, count: int) -> list[Array]:
         """One parameter: the outermost crossings on a grid, refined, and what lies between."""
-        grid = np.linspace(self.low[0], self.high[0], 61)
+        grid = np.linspace(self.low[0], self.high[0], count)
         held = [g for g in grid if self.inside(np.array([g]))]
         ends = []
         for side in (-1.0, 1.0):
             outer = [g for g in held if side * (g - self.best[0]) > 0]
             start = np.array([max(outer, key=lambda g: side * g)]) if outer else self.best
             ends.append(self.edge(start, np.array([side])))
-        between = np.linspace(ends[0][0], ends[1][0], 25)
+        between = np.linspace(ends[0][0], ends[1][0], count // 2)
         return [self.best, *ends, *(np.array([g]) for g in between if self.inside(np.array([g])))]
 
     def widths(self) -> tuple[Array, Array]:
