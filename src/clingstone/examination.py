@@ -1,0 +1,338 @@
+"""The verbs that people call, and what ``examine`` gives back."""
+
+from __future__ import annotations
+
+import platform
+from collections.abc import Mapping
+from dataclasses import asdict, dataclass, replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
+
+import numpy as np
+
+from clingstone.advice.choose import REPAIRED, Advice, settle, shortlist_for
+from clingstone.advice.facts import facts as gather_facts
+from clingstone.case import Case
+from clingstone.covariance.fits import Fits
+from clingstone.design.derived import only, onto
+from clingstone.evidence.finding import Evidence
+from clingstone.evidence.gather import gather
+from clingstone.ledger.ledger import Ledger, weigh
+from clingstone.needs import InputError, NotSupported
+from clingstone.remedies import explain as explain_at
+from clingstone.remedies import refit as refit_at
+from clingstone.remedies import remedy as remedy_of
+from clingstone.remedies.remedy import Interval, Refit
+from clingstone.results import SCHEMA, Reference, Results, compare, from_json
+from clingstone.run import Alternative, Missing, Progress, Run, Settings, Ties, Weights, one_thread
+
+if TYPE_CHECKING:
+    import pandas as pd
+
+
+def examine(
+    data: Any,
+    *,
+    model: str | None = None,
+    residual: str | None = None,
+    group: str | tuple[str, ...] | list[str] | None = None,
+    time: str | None = None,
+    series: str | None = None,
+    coords: tuple[str, str] | list[str] | None = None,
+    lonlat: bool | None = None,
+    polygons: str | None = None,
+    neighbours: str | None = None,
+    weights: str | None = None,
+    weights_kind: Weights = "precision",
+    focus: str | tuple[str, ...] | list[str] | None = None,
+    contrasts: Mapping[str, Mapping[str, float]] | None = None,
+    means: str | tuple[str, ...] | list[str] | None = None,
+    unadjusted: bool = False,
+    assigned: Mapping[str, Any] | None = None,
+    sampled: str | None = None,
+    missing: Missing = "stop",
+    ties: Ties = "stop",
+    confidence: float = 0.95,
+    alternative: Alternative = "two-sided",
+    material: tuple[float, float] = (0.95, 1.10),
+    rehearsal: str | int = "auto",
+    seed: int = 0,
+    progress: Progress | None = None,
+) -> Examination:
+    """Find which rows hang together, what that does to each interval, and what to report.
+
+    Parameters
+    ----------
+    data : path of a file (CSV, Parquet, Excel, Stata), any dataframe that narwhals reads, or a
+        fitted statsmodels OLS or WLS result of a formula.
+    model : formula such as ``"weight ~ day + birth"``.
+    progress : called with (label, done, total) while heavy work runs.
+
+    All other arguments are those of :class:`clingstone.Settings`.
+
+    Returns
+    -------
+    Examination
+
+    Raises
+    ------
+    InputError : the data or an argument is wrong; the message says what, where, and the ``hint``
+        what to do.
+    NotSupported : these data cannot carry what was asked.
+    """
+    settings = settings_of({k: v for k, v in locals().items() if k not in ("data", "progress")})
+    with one_thread():
+        return _steps(Case.of(data, settings), Run(settings, report=progress))
+
+
+def settings_of(arguments: Mapping[str, Any]) -> Settings:
+    """Settings from arguments as a person writes them: lists become tuples, one name a tuple of one."""
+
+    def many(value: Any) -> Any:
+        return (value,) if isinstance(value, str) else None if value is None else tuple(value)
+
+    given = dict(arguments)
+    for name in ("focus", "means"):
+        given[name] = many(given.get(name))
+    for name in ("group", "coords", "material"):
+        if isinstance(given.get(name), list):
+            given[name] = tuple(given[name])
+    return Settings(**given)
+
+
+def _steps(case: Case, run: Run) -> Examination:
+    settings = run.settings
+    if isinstance(settings.rehearsal, int):
+        raise NotSupported(
+            "rehearsals are not part of this version",
+            "Leave rehearsal at 'auto'; the advice then rests on its rules.",
+        )
+    with run.progress("examining", 5) as advance:
+        fits = Fits(case.response, run)
+        evidence = gather(fits)
+        advance(1)
+        ledger = weigh(fits, evidence)
+        advance(1)
+        facts = gather_facts(fits, evidence, ledger)
+        shortlist = shortlist_for(facts, fits)
+        refits = shortlist.refit(fits)
+        advance(1)
+        advice = settle(shortlist, facts, refits, None)
+        if settings.unadjusted:
+            refits = (*refits, *_alone(fits, advice, refits))
+        advance(1)
+        results = _write(case, fits, evidence, ledger, advice, refits)
+        advance(1)
+    return Examination(case, fits, results)
+
+
+def _alone(fits: Fits, advice: Advice, refits: tuple[Refit, ...]) -> tuple[Refit, ...]:
+    """Each focus term fitted alone with the constant, under the advised remedy."""
+    advised = next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
+    if advised is None or not fits.design.known or advice.remedy == REPAIRED:
+        return ()
+    rows: list[Interval] = []
+    for term in fits.design.focus():
+        derived = only(fits.design, term)
+        alone = refit_at(remedy_of(advice.remedy), advice.at, Fits(onto(fits.response, derived), fits.run))
+        names = [fits.design.names[j] for j in term.columns]
+        rows += [replace(alone.get(name), term=f"{name} [alone]") for name in names]
+    return (
+        replace(
+            advised,
+            name=f"{advised.name}, each term alone",
+            intervals=tuple(rows),
+            terms=(),
+            coefficients=(),
+            estimate=(),
+            covariance=None,
+        ),
+    )
+
+
+def _write(
+    case: Case, fits: Fits, evidence: Evidence, ledger: Ledger, advice: Advice, refits: tuple[Refit, ...]
+) -> Results:
+    """The plain bundle, with its methods text and references."""
+    from clingstone.writeup.bibliography import references_of
+    from clingstone.writeup.methods import methods_text
+
+    bare = Results(
+        clingstone=version(),
+        schema=SCHEMA,
+        case=case.summary(),
+        evidence=evidence.findings,
+        ledger=ledger,
+        advice=advice,
+        refits=refits,
+        rehearsal=None,
+        methods="",
+        references=(),
+        settings=asdict(fits.run.settings),
+        versions=versions(),
+    )
+    cited: tuple[Reference, ...] = references_of(bare)
+    return replace(bare, methods=methods_text(bare), references=cited)
+
+
+def version() -> str:
+    from clingstone import __version__
+
+    return __version__
+
+
+def versions() -> dict[str, str]:
+    """Versions of Python and of the libraries whose numbers these are."""
+    from importlib.metadata import version as of
+
+    libraries = ("numpy", "scipy", "pandas", "formulaic", "statsmodels", "libpysal", "esda", "matplotlib")
+    return {"clingstone": version(), "Python": platform.python_version()} | {k: of(k) for k in libraries}
+
+
+@dataclass(frozen=True, eq=False, repr=False)
+class Examination:
+    """What was found: plain results, and the live case and fits they came from."""
+
+    case: Case
+    fits: Fits
+    results: Results
+
+    @property
+    def evidence(self) -> Evidence:
+        """All findings; ``.to_frame()`` gives a table."""
+        return Evidence(self.results.evidence)
+
+    @property
+    def ledger(self) -> Ledger:
+        return self.results.ledger
+
+    @property
+    def advice(self) -> Advice:
+        return self.results.advice
+
+    @property
+    def refits(self) -> tuple[Refit, ...]:
+        return self.results.refits
+
+    @property
+    def intervals(self) -> pd.DataFrame:
+        """One row per term × remedy; the ordinary fit is ``remedy == "ordinary"``."""
+        import pandas as pd
+
+        return pd.DataFrame([asdict(row) for row in self.results.intervals])
+
+    @property
+    def terms(self) -> pd.DataFrame:
+        """Joint tests of terms with more than one coefficient."""
+        import pandas as pd
+
+        columns = ["term", "remedy", "F", "df1", "df2", "p"]
+        return pd.DataFrame([asdict(row) for row in self.results.terms], columns=columns)
+
+    @property
+    def rehearsal(self) -> Mapping[str, Any] | None:
+        return self.results.rehearsal
+
+    @property
+    def methods(self) -> str:
+        """The text for a methods section, in Markdown."""
+        return self.results.methods
+
+    @property
+    def references(self) -> tuple[Reference, ...]:
+        return self.results.references
+
+    def explain(self, remedy: str, at: str | None = None) -> tuple[tuple[str, tuple[Interval, ...]], ...]:
+        """What the numbers of one remedy become under the other common conventions."""
+        found = next((r for r in self.refits if r.remedy == remedy and at in (None, r.at)), None)
+        if found is None:
+            have = ", ".join(dict.fromkeys(r.remedy for r in self.refits))
+            raise InputError(f"there is no refit {remedy!r} here", f"Choose one of {have}.")
+        with one_thread():
+            return explain_at(remedy_of(found.remedy), found.at, self.fits)
+
+    def save(self, folder: str | Path, *, overwrite: bool = False) -> Path:
+        """Write report.html, methods.md, tables, figures and results.json into a folder."""
+        from clingstone.writeup.save import save
+
+        return save(self.results, Path(folder), overwrite=overwrite)
+
+    def report(self) -> str:
+        """The report as one HTML page."""
+        from clingstone.writeup.report import report
+
+        return report(self.results)
+
+    def __str__(self) -> str:
+        from clingstone.writeup.terminal import terminal
+
+        return terminal(self.results)
+
+    def __repr__(self) -> str:
+        advice = self.results.advice
+        return f"<Examination of {self.results.case.name}: {advice.state}; {advice.headline}>"
+
+    def _repr_html_(self) -> str:
+        from clingstone.writeup.report import fragment
+
+        return fragment(self.results)
+
+
+def refit(case: Case, remedy: str, at: str = "") -> Refit:
+    """One remedy on a case.
+
+    Raises InputError for an unknown remedy, NotSupported when these data cannot carry it.
+    """
+    with one_thread():
+        return refit_at(remedy_of(remedy), at, Fits(case.response, Run(case.settings)))
+
+
+def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]:
+    """Run a saved examination again and compare every number to 1e-8.
+
+    data : where the data are now, when the path in results.json no longer leads to them.
+
+    Returns
+    -------
+    (agrees, lines) : lines say what was compared and where numbers differ.
+
+    Raises
+    ------
+    InputError : the folder holds no results.json, or the data are not found or have changed.
+    """
+    path = Path(folder) / "results.json"
+    if not path.is_file():
+        raise InputError(f"{path} is not there", "Give a folder that clingstone saved.")
+    saved = from_json(path.read_text(encoding="utf-8"))
+    origin = saved.case.origin
+    source = data if data is not None else origin.get("file")
+    if source is None:
+        raise InputError(
+            "this examination was made from a table in memory, so there is no file to read again",
+            "Call clingstone.replay(folder, data=table).",
+        )
+    arguments = {k: _tuples(v) for k, v in saved.settings.items()}
+    settings = Settings(**arguments)
+    with one_thread():
+        case = Case.of(source, settings)
+        if case.origin.get("fingerprint") != origin.get("fingerprint"):
+            raise InputError(
+                f"the data have changed since {path} was written: their fingerprints differ",
+                "Give the data as they were, with data=, or examine the new data.",
+            )
+        again = _steps(case, Run(settings)).results
+    lines = compare(saved, again)
+    words = [f"{len(saved.evidence)} findings and {len(saved.intervals)} intervals compared to 1e-8"]
+    moved = [
+        f"{k}: {v} then, {again.versions.get(k)} now"
+        for k, v in saved.versions.items()
+        if again.versions.get(k) != v
+    ]
+    if moved:
+        words.append("versions differ: " + "; ".join(moved))
+    words.append("every number agrees" if not lines else f"{len(lines)} differ:")
+    return not lines, (*words, *lines)
+
+
+def _tuples(value: Any) -> Any:
+    return tuple(_tuples(v) for v in value) if isinstance(value, list | np.ndarray) else value
