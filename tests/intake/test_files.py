@@ -104,6 +104,12 @@ def test_long_whole_numbers_are_exact(tmp_path: Path) -> None:
     assert frame["id"].tolist() == [900719925474099311, 900719925474099312]
 
 
+def test_decimals_are_read_back_to_their_last_bit(tmp_path: Path) -> None:
+    given = np.random.default_rng(12).normal(size=2000) * 10.0 ** np.arange(-10, 10).repeat(100)
+    pd.DataFrame({"y": given}).to_csv(tmp_path / "w.csv", index=False)
+    assert files.read(tmp_path / "w.csv")[0]["y"].tolist() == given.tolist()
+
+
 def test_only_named_columns_are_kept(tmp_path: Path) -> None:
     frame, _, _ = files.read(written(tmp_path, "a,b,c\n1,2,3\n"), columns={"c", "a", "not there"})
     assert list(frame.columns) == ["a", "c"]

@@ -146,7 +146,11 @@ def test_times_are_shown_as_written() -> None:
         (["04/13/21", "04/14/21"], "t holds ‘04/13/21’, whose day, month and year cannot be told apart"),
         (["Mar-19", "Apr-19"], "t holds ‘Mar-19’, which may be a month of a year or a day of a month"),
         (["2021-03-04", "soon", "2021-03-05"], "t cannot be read as times: row 2 has ‘soon’"),
-        (["2021-02-30", "2021-03-01"], "t has ‘2021-02-30’ in row 1, which is no date of the calendar"),
+        (["2021-02-30", "2021-03-01"], "t has ‘2021-02-30’ in row 1, which is no day of the calendar"),
+        (
+            ["2021-02-30 10:00", "2021-03-01 10:00"],
+            "t has ‘2021-02-30 10:00’ in row 1, which is no date of the calendar",
+        ),
         (["30/02/2021", "01/03/2021"], "t has ‘30/02/2021’ in row 1, which is no day of the calendar"),
         (["2021-13", "2021-12"], "t has ‘2021-13’ in row 1, and no year has such a month"),
         (["2021-W54"], "t names a week that its year does not have"),

@@ -204,11 +204,9 @@ def typed(column: pd.Series, decimal: str, notes: list[str]) -> pd.Series:
 
 
 def _numbers(number: pd.Series, gone: pd.Series, name: str) -> pd.Series:
-    import pandas as pd
-
     if not gone.any() and number.str.fullmatch(r"[+-]?\d{1,18}").all():
         return number.astype("int64").rename(name)
-    values = pd.to_numeric(number).astype(float)
+    values = number.astype(float)  # rounds correctly, so a written number is read back to its last bit
     return values.reindex(gone.index).rename(name)
 
 

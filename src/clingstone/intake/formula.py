@@ -58,7 +58,7 @@ def parse(model: str, known: Sequence[str]) -> Parsed:
             "Write it as 'y ~ x + arm', interactions as 'x*arm', odd column names in `backticks`.",
         ) from error
     left, right = list(getattr(formula, "lhs", ())), getattr(formula, "rhs", ())
-    if len(left) != 1 or len(left[0].factors) != 1 or not isinstance(right, Sequence):
+    if len(left) != 1 or len(left[0].factors) != 1 or isinstance(right, tuple):
         raise InputError(
             f"the model ‘{model}’ needs one response on the left and one set of terms on the right",
             "Write 'y ~ x + arm', or 'log(y) ~ x'.",

@@ -268,7 +268,7 @@ def _check_values(name: str, values: Array, kept: npt.NDArray[np.int64]) -> None
 
 def _named(spec: Any, data: pd.DataFrame) -> tuple[tuple[str, ...], tuple[TermBlock, ...]]:
     """Names of columns and terms in our own words."""
-    labels = {f.expr: {str(v): _level(v) for v in state.levels} for f, state in spec.factor_contrasts.items()}
+    labels = _labels(spec, data)
     names: list[str] = []
     terms: list[TermBlock] = []
     for part in spec.structure:
@@ -291,6 +291,19 @@ def _named(spec: Any, data: pd.DataFrame) -> tuple[tuple[str, ...], tuple[TermBl
     if twice:
         raise InputError(f"the model has {quoted(twice)} more than once", "Leave out one of the terms.")
     return tuple(names), tuple(terms)
+
+
+def _labels(spec: Any, data: pd.DataFrame) -> dict[str, dict[str, str]]:
+    """Factor expression → level as the library prints it → level as we do."""
+    import pandas as pd
+
+    found: dict[str, dict[str, str]] = {}
+    for expression in {f.expr for part in spec.structure for f in part.term.factors}:
+        name = notation.short(expression)
+        if name not in data or (name == expression and not isinstance(data[name].dtype, pd.CategoricalDtype)):
+            continue
+        found[expression] = {str(v): _level(v) for v in data[name].unique()}
+    return found
 
 
 def _level(value: Any) -> str:

@@ -270,12 +270,16 @@ def _dates(name: str, texts: Sequence[str], parts: Sequence[tuple[int, int, int]
                 f"{name} has ‘{texts[i]}’ in {rows(places[i])}, which is no day of the calendar",
                 "Mend the date.",
             ) from None
-    return _datetimes(pd.DatetimeIndex(pd.to_datetime(pd.Series(stamps))), pd.Series(list(texts)))
+    days = np.array(stamps, dtype="datetime64[us]")  # microseconds reach beyond the years 1677 to 2262
+    return _datetimes(pd.DatetimeIndex(days), pd.Series(list(texts)))
 
 
 def _iso(name: str, texts: Sequence[str], matches: Matches, places: Any) -> Clock:
     import pandas as pd
 
+    if not any(":" in t for t in texts):
+        parts = [t.split("-") for t in texts]
+        return _dates(name, texts, [(int(a), int(b), int(c)) for a, b, c in parts], places)
     zoned = [m.group(1) is not None for m in matches]
     if any(zoned) and not all(zoned):
         plain = [i for i, z in enumerate(zoned) if not z]
