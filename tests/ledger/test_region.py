@@ -120,11 +120,11 @@ def test_scale_of_y_and_order_of_rows_change_nothing():
 
 @pytest.mark.parametrize("truth", [0.0, 0.3])
 def test_interval_of_the_icc_covers(truth):
-    """10 groups of 6: 300 data sets, nominal 95 %; the Monte-Carlo error of 300 is 1.3 points."""
+    """10 groups of 6: 120 data sets, nominal 95 %; the Monte-Carlo error of 120 is 2 points."""
     rng = np.random.default_rng(8)
     design = make.trial(rng, G=10, n=6).design
     clinic = design.group.levels[0].codes
-    hits, draws = 0, 300
+    hits, draws = 0, 120
     with one_thread():
         for _ in range(draws):
             y = np.sqrt(truth) * rng.standard_normal(10)[clinic]

@@ -13,10 +13,10 @@ from clingstone.remedies.remedy import Refit
 TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
 
 
-def dependence(ledger: Ledger, *, only_present: bool = False) -> str:
-    """One sentence per structure that is present or to be covered, largest share first."""
-    chosen = [s for s in ledger.standing if (s.verdict == "present" if only_present else covered(s))]
-    chosen.sort(key=lambda s: -_share(ledger, s))
+def dependence(ledger: Ledger) -> str:
+    """One sentence per structure to be covered: those present first, then by share."""
+    chosen = [s for s in ledger.standing if covered(s)]
+    chosen.sort(key=lambda s: (s.verdict != "present", -_share(ledger, s)))
     return " ".join(_sentence(ledger, s) for s in chosen)
 
 

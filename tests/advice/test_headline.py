@@ -1,0 +1,92 @@
+"""Headlines: what hangs together, how strongly, and what it does, in plain words."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import pytest
+
+from clingstone.advice import headline as say
+from clingstone.ledger.ledger import Inflation
+from tests.advice.synthetic import facts, ledger, refit
+
+BAND = (0.95, 1.10)
+
+
+def test_what_is_present_comes_before_what_may_be():
+    text = say.dependence(ledger(group="unclear", serial="present"))
+    assert text.index("follow each other in time hang together") < text.index("one clinic may hang together")
+
+
+def test_what_was_not_detected_is_not_in_the_headline():
+    assert say.dependence(ledger(group="not detected")) == ""
+
+
+def test_units_of_time_have_a_plural_and_symbols_have_none():
+    assert "after 1.4\u00a0days" in say.dependence(ledger(serial="present"))
+    assert "out to about 4.0\u00a0km." in say.dependence(ledger(spatial="present"))
+
+
+def test_an_inner_level_is_named_by_itself():
+    book = ledger(group="present")
+    book = replace(book, standing=(replace(book.standing[0], label="hospital/ward"),))
+    assert "The rows of one ward hang together" in say.dependence(book)
+
+
+def test_a_structure_without_a_size_says_so():
+    book = replace(ledger(group="present"), shares=())
+    assert "how strongly cannot be sized" in say.dependence(book)
+
+
+@pytest.mark.parametrize(
+    ("widths", "words"),
+    [
+        ([("arm", 2.3)], "It matters for arm: its interval should be 2.3 times as wide."),
+        ([("arm", 0.6)], "It matters for arm: its interval should be 0.60 times as wide."),
+        ([("arm", 1.05), ("x", 1.0)], "It moves the intervals of arm and x little."),
+        ([("arm: visits", 3.0)], "It matters for “arm: visits”: its interval should be 3.0 times as wide."),
+        (
+            [("arm", 2.0), ("x", 1.4), ("z", 1.0)],
+            "It matters for arm: its interval should be 2.0 times as wide, and those of x change too.",
+        ),
+        ([], ""),
+    ],
+)
+def test_consequence(widths, words):
+    assert say.consequence(widths, BAND) == words
+
+
+def test_widths_are_those_of_the_intervals_shown():
+    found = facts(ledger(group="present"))
+    refits = (refit("ordinary", "", 4.0), refit("mixed-intercept", "clinic", 9.2))
+    assert say.widths(found, refits, refits[1]) == [("arm", pytest.approx(2.3))]
+    assert say.widths(found, refits, refits[0]) == []
+    assert say.widths(found, refits, None) == []
+
+
+def test_nothing_declared_is_not_nothing_found():
+    book = replace(ledger(), standing=())
+    assert "No structure was declared" in say.nothing(book)
+
+
+def test_filled_words_and_the_facts_behind_them():
+    found = facts(ledger(group="present"), groups=12)
+    assert say.filled("{groups} groups, {no such fact}.", found) == "12 groups, not known."
+    assert say.read_by("{groups} groups", ("sites", "groups"), found) == (("groups", "12"),)
+
+
+def test_no_headline_uses_words_that_nobody_should_write():
+    for state in ("present", "unclear"):
+        text = say.dependence(ledger(group=state, serial=state, spatial=state))
+        for word in ("absent", "significant", "passed", "!", "detected"):
+            assert word not in text
+
+
+def test_a_ledger_hands_out_its_parts():
+    book = ledger(group="present")
+    assert book.factor("arm") == Inflation("arm", "total", 1.2, 1.8, 2.6)
+    assert book.factor("x") is None
+    assert book.of("group:clinic").label == "clinic"
+    assert book.of("nothing") is None
+    assert book.share("row").share == 0.6
+    assert book.parameter("serial", "ρ").estimate == 0.6
