@@ -332,3 +332,19 @@ def test_likelihood_rises_with_the_model() -> None:
     )
     assert none < group < both
     assert none < order < both
+
+
+def test_many_places_start_from_some_of_them(monkeypatch: pytest.MonkeyPatch) -> None:
+    rng = np.random.default_rng(12)
+    xy = rng.uniform(size=(300, 2))
+    D = np.linalg.norm(xy[:, None] - xy, axis=2)
+    y = np.linalg.cholesky(np.exp(-D / 0.1) + 0.3 * np.eye(300)) @ rng.standard_normal(300)
+    level = (np.arange(300) == 7).astype(float)  # a column that most subsets of places do not know
+    plain = fits(y, level, xy=xy)[{"spatial"}]
+    monkeypatch.setattr("clingstone.covariance.algebras.HEAVY_SITES", 100)
+    monkeypatch.setattr("clingstone.covariance.fits.START_SITES", 80)
+    started = fits(y, level, xy=xy)[{"spatial"}]
+    assert "of 1 starts" in started.history[0]
+    assert started.converged[0]
+    assert started.loglik[0] == pytest.approx(plain.loglik[0], abs=1e-6)
+    assert started.theta[:, 0] == pytest.approx(plain.theta[:, 0], abs=1e-3)

@@ -260,7 +260,8 @@ class Layered(Pieces):
         """(S, S) covariance of the sites' effects."""
         assert self.spatial is not None
         own = self.own(self.spatial, theta)
-        K = np.asarray(self.spatial.variance(own[:, None])[0] * self.spatial.R(own))
+        K = self.spatial.R(own)
+        K *= float(self.spatial.variance(own[:, None])[0])
         for piece in self.above:
             up = piece.part.codes[self.spatial.sites.part.first]
             K += piece.variance(self.own(piece, theta)[:, None])[0] * (up[:, None] == up)

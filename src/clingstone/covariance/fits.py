@@ -4,26 +4,28 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Iterable, Mapping
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
 from clingstone.covariance.algebras import Chosen, choose
 from clingstone.covariance.components import Component, declared
 from clingstone.covariance.kept import kept
+from clingstone.covariance.thin import thin
 from clingstone.design.derived import onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.lattice import minimise_columns
 from clingstone.maths.once import Array, frozen
-from clingstone.maths.search import Flags, minimise
+from clingstone.maths.search import Flags, Optimum, minimise
 from clingstone.needs import NotSupported, Refusal, memory
 from clingstone.run import Run
 
 Node = frozenset[str]
 
 FACED = 2  # the most working parameters that a shared grid serves
+START_SITES = 400  # places that give a large spatial search its start
 SLOW_COLUMNS = 200  # columns that a bootstrap gets when each needs a search of its own
 
 
@@ -241,18 +243,33 @@ class Fits:
         )
 
     def _exact(self, node: Node, algebra: Chosen) -> ErrorModel:
-        m = self.design.m
         with self.run.progress("fitting " + ", ".join(sorted(node)), 1) as advance:
-            best = minimise(
-                lambda t: float(reml.criterion(algebra.gram(t, self.response), m)[0]),
-                algebra.parameters,
-                starts=1 if algebra.heavy else 3,
-            )
+            best = self._search(algebra, self._head_start(node) if algebra.heavy else None)
             advance(1)
-        sigma2 = reml.scale(algebra.gram(best.theta, self.response), m)
+        sigma2 = reml.scale(algebra.gram(best.theta, self.response), self.design.m)
         theta, bound = best.theta[:, None], best.at_bound[:, None]
         done = np.array([best.converged])
         return self._model(node, theta, sigma2, np.array([best.value]), bound, done, best.history)
+
+    def _search(self, algebra: Chosen, warm: Optimum | None = None) -> Optimum:
+        """The optimum for the first column of y."""
+        column, m = self.response.column(0), self.design.m
+
+        def value(theta: Array) -> float:
+            return float(reml.criterion(algebra.gram(theta, column), m)[0])
+
+        return minimise(value, algebra.parameters, warm=warm)
+
+    def _head_start(self, node: Node) -> Optimum | None:
+        """The optimum for some of the places, its curvature scaled up to all rows; None if too few."""
+        small = Fits(thin(self.response, START_SITES, self.run.child("places to start from")), self.run)
+        try:
+            found = small._search(small.algebra(node))
+        except NotSupported:
+            return None
+        box = np.array([[p.low, p.high] for p in self.algebra(node).parameters])
+        start = np.clip(found.start, box[:, 0], box[:, 1])
+        return replace(found, start=start, curvature=found.curvature * self.design.m / small.design.m)
 
     def _fast(self, node: Node, algebra: Chosen) -> ErrorModel:
         m, p = self.design.m, self.design.p
@@ -279,17 +296,17 @@ class Fits:
         )
 
     def _one_by_one(self, node: Node, algebra: Chosen) -> ErrorModel:
-        m, warm, found = self.design.m, None, []
+        warm: Optimum | None = None
+        found = []
         with self.run.progress("fitting " + ", ".join(sorted(node)), self.response.B) as advance:
             for b in range(self.response.B):
-                column = self.response.column(b)
-
-                def value(t: Array, column: Response = column) -> float:
-                    return float(reml.criterion(algebra.gram(t, column), m)[0])
-
-                best = minimise(value, algebra.parameters, warm=warm)
+                one = Fits(self.response.column(b), self.run)
+                best = one._search(algebra, warm)
+                if not best.converged:
+                    best = one._search(algebra)
                 warm = best if warm is None else warm
-                found.append((best, float(reml.scale(algebra.gram(best.theta, column), m)[0])))
+                gram = algebra.gram(best.theta, one.response)
+                found.append((best, float(reml.scale(gram, self.design.m)[0])))
                 advance(1)
         return self._model(
             node,

@@ -11,6 +11,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 from scipy import linalg
+from scipy.linalg import lapack
 
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
@@ -26,7 +27,8 @@ def kernel(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
     """Correlation at a distance. ``reach`` is φ: e^{−d/φ} for smoothness ½, and for 3/2 and 5/2 the
     Matérn form in √(2κ)d/φ."""
     if smoothness == 0.5:
-        return np.exp(distance / -reach)
+        out = distance * (-1 / reach)
+        return np.asarray(np.exp(out, out=out))
     if smoothness == 1.5:
         x = np.sqrt(3) * distance / reach
         return np.asarray((1 + x) * np.exp(-x))
@@ -37,7 +39,7 @@ def kernel(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
 
 
 def top(gram: Gram, load: Load, K: Array) -> Gram:
-    """The Gram once site effects with covariance K (S, S) are added to V.
+    """The Gram once site effects with covariance K (S, S) are added to V. K is overwritten.
 
     load : the sites' c and t under what lies below (see ``maths.groups``). With D = diag(c) and
     B = I + D^½KD^½ = LL', the Gram changes by −T'D⁻¹T + ‖L⁻¹D^{−½}T‖², ln|V| by ln|B|.
@@ -85,12 +87,16 @@ class Spectrum:
 
 
 def factor(c: Array, K: Array) -> tuple[Array, Array]:
-    """L (S, S) with LL' = I + D^½KD^½, and √c (S,)."""
+    """L (S, S) with LL' = I + D^½KD^½ in its lower triangle, and √c (S,). K is overwritten."""
     root = np.sqrt(c)
-    B = K * root[:, None]
-    B *= root
-    B[np.diag_indices_from(B)] += 1.0
-    return np.asarray(np.linalg.cholesky(B)), root
+    K *= root[:, None]
+    K *= root
+    K[np.diag_indices_from(K)] += 1.0
+    # The transpose of a C-ordered symmetric array is the same array in LAPACK's order: no copy.
+    L, info = lapack.dpotrf(K.T, lower=1, clean=0, overwrite_a=1)
+    if info:
+        raise np.linalg.LinAlgError("the covariance of the sites is not positive definite")
+    return np.asarray(L), root
 
 
 def whiten(L: Array, root: Array, codes: npt.NDArray[np.int32], u: Array, block: Array, sums: Array) -> Array:

@@ -65,17 +65,17 @@ def slack(value: float) -> float:
     return 1e-7 + 1e-11 * abs(value)
 
 
-def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None, starts: int = 3) -> Optimum:
+def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None) -> Optimum:
     """The smallest value of f over the box of the axes.
 
-    starts : of the product of the axes' starts, how many of the best are followed. warm : the optimum
-    of a similar criterion; the search then starts from there alone, with its curvature.
+    warm : the optimum of a similar criterion; the search then starts from there alone, with its
+    curvature. Without it the best three of the product of the axes' starts are followed.
     """
     if not axes:
         return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
     if len(axes) == 1:
         return _line(f, axes[0])
-    return _several(f, axes, warm, starts)
+    return _several(f, axes, warm)
 
 
 def _line(f: Criterion, axis: Axis) -> Optimum:
@@ -104,7 +104,7 @@ def _line(f: Criterion, axis: Axis) -> Optimum:
     return Optimum(np.array([at]), float(best), np.array([bound]), True, (f"{counted.calls} evaluations",))
 
 
-def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, keep: int) -> Optimum:
+def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None) -> Optimum:
     box = np.array([[a.low, a.high] for a in axes])
     counted = _Counted(f, box)
     free = np.ones(len(axes), dtype=bool)
@@ -113,7 +113,7 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, keep: int
         runs = [descend(counted, warm.start, free, box)]
     else:
         descend = _descend
-        runs = [_descend(counted, start, free, box) for start in _starts(counted, axes, keep)]
+        runs = [_descend(counted, start, free, box) for start in _starts(counted, axes)]
     theta, value = min(runs, key=lambda run: float(run[1]))
     if warm is None:
         theta, value = _look_around(counted, axes, theta, value, box)
@@ -140,7 +140,7 @@ class _Counted:
         return value if np.isfinite(value) else 1e300
 
 
-def _starts(f: Criterion, axes: Sequence[Axis], keep: int) -> list[Array]:
+def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
     grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
     order = np.argsort([f(s) for s in grid], kind="stable")
     return [grid[i] for i in order[:keep]]
