@@ -273,3 +273,41 @@ def test_factor_between_grid_points_never_falls() -> None:
 )
 def test_numbers_in_words(said: str, expected: str) -> None:
     assert said == expected
+
+
+# ---- anything goes ----------------------------------------------------------------------
+
+
+def odd_design(rng: np.random.Generator) -> Any:
+    """Small designs of every mixture: ties, gaps, lone rows, weights, nested and crossed groups."""
+    n = int(rng.integers(6, 60))
+    g = np.sort(rng.integers(0, int(rng.integers(1, n // 2 + 1)), n))
+    how: dict[str, Any] = {}
+    if rng.random() < 0.6:
+        how["groups"] = {"a": g // 2, "a/b": g} if rng.random() < 0.5 else {"a": rng.integers(0, 4, n)}
+    if rng.random() < 0.6:
+        who, whole = g if rng.random() < 0.6 else np.zeros(n, int), bool(rng.random() < 0.7)
+        steps = rng.integers(0 if rng.random() < 0.2 else 1, 3, n) if whole else rng.exponential(1, n)
+        time = np.concatenate([np.cumsum(steps[who == k]) for k in np.unique(who)])
+        how.update(time=time, who=who, whole=whole)
+    site = np.unique(rng.integers(0, n, n), return_inverse=True)[1]
+    if rng.random() < 0.6 and site.max() > 5:
+        how.update(xy=rng.uniform(size=(site.max() + 1, 2)), site=site)
+    if rng.random() < 0.25:
+        how["weights"] = rng.uniform(0.2, 3, n)
+    return design(*(rng.standard_normal(n) for _ in range(int(rng.integers(0, 3)))), n=n, **how)
+
+
+@pytest.mark.filterwarnings("error")
+@pytest.mark.parametrize("seed", range(24))
+def test_no_design_breaks_the_tests_and_every_interval_holds_its_estimate(seed: int) -> None:
+    rng = np.random.default_rng(seed)
+    made = odd_design(rng)
+    y = (rng.standard_normal(made.n), rng.integers(0, 2, made.n), 1e8 + rng.standard_normal(made.n))[seed % 3]
+    for f in gather(fits(made, y)):
+        assert math.isnan(f.p) or 0 <= f.p <= 1
+        assert "not known" not in f.sentence
+        assert " nan" not in f.sentence
+        if not math.isnan(f.low):
+            assert f.low <= f.estimate + 1e-9, f.test
+            assert f.estimate <= f.high + 1e-9, f.test

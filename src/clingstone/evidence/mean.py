@@ -11,7 +11,7 @@ from scipy import special, stats
 from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.read import Plain, degenerate, floats
+from clingstone.evidence.read import Plain, around, degenerate, floats
 from clingstone.evidence.words import between, degrees, number, p_value, percent
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Needs, NotSupported
@@ -145,7 +145,7 @@ def explained(F: Array, q: int, df2: int, confidence: float) -> tuple[Array, Arr
         return np.where(known, out / (out + total), np.nan)
 
     alpha = 1 - confidence
-    return estimate, end(1 - alpha / 2), end(alpha / 2)
+    return around(estimate, end(1 - alpha / 2), end(alpha / 2), np.isnan(F))
 
 
 def _noncentrality(F: Array, q: int, df2: int, level: float) -> Array:

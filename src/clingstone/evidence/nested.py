@@ -11,7 +11,7 @@ from scipy import special, stats
 from clingstone.design.design import Design
 from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.read import Plain, degenerate, exceedance, floats
+from clingstone.evidence.read import Plain, around, degenerate, exceedance, floats
 from clingstone.evidence.words import between, correlation, degrees, number, p_value, percent
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
@@ -91,7 +91,9 @@ class GroupF(Plain):
         lost = degenerate(response)
         F = np.where(lost, np.nan, table.F)
         steps = 46 if fits.depth == "exact" else 26
-        low, high = icc_interval(response, part, table, fits.run.settings.confidence, steps)
+        icc, low, high = around(
+            table.icc, *icc_interval(response, part, table, fits.run.settings.confidence, steps), lost
+        )
         return Reading(
             statistic=F,
             statistic_name="F",
@@ -100,10 +102,10 @@ class GroupF(Plain):
             p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
             log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
             p_method="exact F, one-sided",
-            estimate=np.where(lost, np.nan, table.icc),
+            estimate=icc,
             estimate_name="intraclass correlation",
-            low=np.where(lost, np.nan, low),
-            high=np.where(lost, np.nan, high),
+            low=low,
+            high=high,
             n_used=design.n,
             caveats=_group_caveats(design, part),
         )
@@ -239,17 +241,19 @@ class IntraclassCorrelation(Plain):
             p = half_mixture(statistic)[0]
             method = "half-and-half chi-squared mixture"
         steps = 46 if fits.depth == "exact" else 26
-        low, high = icc_interval(fits.response, part, table, fits.run.settings.confidence, steps)
+        ends = icc_interval(fits.response, part, table, fits.run.settings.confidence, steps)
+        low, high = (np.maximum(end, 0.0) for end in ends)
+        share, low, high = around(np.asarray(model.shares()[key]), low, high, lost)
         return Reading(
             statistic=statistic,
             statistic_name="restricted likelihood ratio",
             df=1.0,
             p=p,
             p_method=method,
-            estimate=np.where(lost, np.nan, model.shares()[key]),
+            estimate=share,
             estimate_name="intraclass correlation (REML)",
-            low=np.where(lost, np.nan, np.maximum(low, 0.0)),
-            high=np.where(lost, np.nan, np.maximum(high, 0.0)),
+            low=low,
+            high=high,
             n_used=design.n,
             caveats=_group_caveats(design, part),
         )

@@ -78,6 +78,18 @@ def arcsine(estimate: Array, sd: float, quantile: float) -> tuple[Array, Array]:
     )
 
 
+def around(
+    estimate: Array, low: Array, high: Array, lost: npt.NDArray[np.bool_]
+) -> tuple[Array, Array, Array]:
+    """Estimate, low and high, NaN where nothing is left over, the ends widened to take in the estimate.
+
+    An exact interval can leave out the usual estimate when the statistic is far below its expectation.
+    """
+    parts = estimate, np.minimum(low, estimate), np.maximum(high, estimate)
+    inner, below, above = (np.where(lost, np.nan, part) for part in parts)
+    return inner, below, above
+
+
 def simulated(response: Response, fits: Fits, purpose: str, draws: int, index: int = 0) -> Response:
     """Residuals e* = Mz of normal draws: the exact null of anything that depends on e/‖e‖ alone."""
     design = response.design
