@@ -10,12 +10,11 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.display import Cell, Column, Table, significant
+from clingstone.display import Cell, Column, Table, number, significant
 from clingstone.evidence.finding import Curve, Finding
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say
-from clingstone.writeup.tables import test_words
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -80,7 +79,7 @@ def _caption(curve: Curve, f: Finding) -> str:
         return f"Mean residual of each {curve.x_name}"
     if curve.kind == "function" and (curve.x_name or f.about):
         return f"Residuals against {curve.x_name or f.about}"
-    return words if f.structure != "lookalike" else f"{words}: {test_words(f)}"
+    return words if f.structure != "lookalike" else f"{words}: {f.about_words or f.test}"
 
 
 def curve_table(curve: Curve) -> Table:
@@ -98,12 +97,17 @@ def curve_table(curve: Curve) -> Table:
             fields.append((key, key, values))
     if curve.size:
         fields.append(("size", _SIZES.get(curve.kind, "rows"), curve.size))
-    columns = [Column(key, head, "left" if key == "label" else "right") for key, head, _ in fields]
+    columns = [Column(key, head, "right" if j else "left") for j, (key, head, _) in enumerate(fields)]
     rows = [
-        [v if isinstance(v, str) else Cell(significant(float(v), 3), float(v)) for v in row]
+        [v if isinstance(v, str) else Cell(_shown(float(v)), float(v)) for v in row]
         for row in zip(*(values for _, _, values in fields), strict=True)
     ]
     return Table.of("Numbers behind the figure", columns, rows)
+
+
+def _shown(value: float) -> str:
+    """Whole numbers as they are (counts, lags, ranks); others to three digits."""
+    return number(value, 0) if value == round(value) and abs(value) < 1e7 else significant(value, 3)
 
 
 _SIZES = {"autocorrelation": "pairs", "variogram": "pairs", "group-means": "rows", "map": "mean residual"}
@@ -147,35 +151,25 @@ def paint_autocorrelation(curve: Curve, structure: str, width: float) -> Figure:
     panel.plot(x, curve.y, mark(structure).marker, color=hue, markersize=5)
     few_ticks(panel, "y")
     panel.tick_params(axis="x", length=0, labelbottom=False)
-    say(figure, 0, 10, curve.y_name or "correlation", fontsize=SMALL, color=LIGHT.muted)
-    below = axes(figure, 44, 226, width - 54, 32)
-    if curve.size:
-        below.bar(x, curve.size, width=0.6 * _gap(x), color=LIGHT.faint)
-        say(
-            figure,
-            0,
-            216,
-            f"pairs (at most {significant(max(curve.size), 3)})",
-            fontsize=SMALL,
-            color=LIGHT.muted,
-        )
-    below.set_yticks([])
+    below = _pairs(figure, curve, x, width)
     margin = 0.7 * _gap(x)
     for each in (panel, below):
-        each.set_xlim(
-            min(0.0, float(x.min()) - margin) if x.min() > 0 else x.min() - margin, x.max() + margin
-        )
+        each.set_xlim(min(0.0, float(x.min()) - margin), float(x.max()) + margin)
     few_ticks(below)
-    say(
-        figure,
-        width,
-        290,
-        with_unit(curve.x_name or "time apart", curve.unit),
-        ha="right",
-        fontsize=SMALL,
-        color=LIGHT.muted,
-    )
+    foot = with_unit(curve.x_name or "time apart", curve.unit)
+    say(figure, 0, 10, curve.y_name or "correlation", fontsize=SMALL, color=LIGHT.muted)
+    say(figure, width, 290, foot, ha="right", fontsize=SMALL, color=LIGHT.muted)
     return figure
+
+
+def _pairs(figure: Figure, curve: Curve, x: np.ndarray, width: float) -> Axes:
+    below = axes(figure, 44, 226, width - 54, 32)
+    below.set_yticks([])
+    if curve.size:
+        below.bar(x, curve.size, width=0.6 * _gap(x), color=LIGHT.faint)
+        words = f"pairs (at most {number(max(curve.size), 0)})"
+        say(figure, 0, 216, words, fontsize=SMALL, color=LIGHT.muted)
+    return below
 
 
 def _gap(x: np.ndarray) -> float:

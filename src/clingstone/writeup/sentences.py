@@ -240,10 +240,10 @@ def checks(results: Results) -> Iterable[Sentence]:
         caveats = "".join(f" Caveat: {_no_stop(c)}." for c in f.caveats)
         said = with_source(f.sentence, f.source)
         label = "" if f.primary else " (exploratory)"
-        yield Sentence(f"{_upper(test_words(f))}{label}: {said}{how}{holm}{caveats}", ("M12",))
+        yield Sentence(f"{_upper(test_words(results, f))}{label}: {said}{how}{holm}{caveats}", ("M12",))
     skipped = [f for f in results.evidence if f.verdict == "not applicable"]
     if skipped:
-        words = "; ".join(f"{test_words(f)} ({_no_stop(f.sentence)})" for f in skipped)
+        words = "; ".join(f"{test_words(results, f)} ({_no_stop(f.sentence)})" for f in skipped)
         yield Sentence(f"Not run: {words}.", ("M12",))
 
 

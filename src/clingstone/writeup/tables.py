@@ -10,6 +10,7 @@ from clingstone.display import (
     Table,
     decimals_for,
     degrees,
+    listed,
     number,
     p_figure,
     percent,
@@ -122,7 +123,7 @@ def evidence_file(results: Results) -> Table:
 
 def evidence(results: Results, structure: str) -> Table:
     """Findings of one structure: effect first, then statistic and p."""
-    rows = [_finding_cells(f) for f in results.evidence if f.structure == structure]
+    rows = [_finding_cells(results, f) for f in results.evidence if f.structure == structure]
     columns = (
         Column("test", "test"),
         Column("effect", "effect"),
@@ -136,12 +137,13 @@ def evidence(results: Results, structure: str) -> Table:
     return Table.of(caption, columns, rows).without_empty()
 
 
-def test_words(f: Finding) -> str:
+def test_words(results: Results, f: Finding) -> str:
     """The test as a reader names it, at what, and given what."""
     words = f.test.replace("-", " ")
     if f.about_words:
         words += f", {f.about_words}"
-    return words + (f"; given {', '.join(f.given)}" if f.given else "")
+    given = listed(label_of(results, key) for key in f.given)
+    return f"{words}; given {given}" if given else words
 
 
 def statistic_words(f: Finding) -> str:
@@ -153,14 +155,15 @@ def statistic_words(f: Finding) -> str:
     return f"{text} on {' and '.join(df)}" if df else text
 
 
-def _finding_cells(f: Finding) -> list[Cell]:
+def _finding_cells(results: Results, f: Finding) -> list[Cell]:
     has = math.isfinite(f.estimate)
     places = _effect_decimals(f)
     effect = f"{f.estimate_name}: {number(f.estimate, places)}" if has else ""
     adjusted = f.p_adjusted
     return [
         Cell(
-            test_words(f) + ("" if f.primary or f.verdict == "not applicable" else " (exploratory)"), f.test
+            test_words(results, f) + ("" if f.primary or f.verdict == "not applicable" else " (exploratory)"),
+            f.test,
         ),
         Cell(effect, f.estimate),
         Cell(span(f.low, f.high, places) if has and math.isfinite(f.low + f.high) else ""),

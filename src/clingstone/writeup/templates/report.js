@@ -27,7 +27,7 @@
   });
   var closed = [];
   window.addEventListener("beforeprint", function () {
-    closed = Array.from(document.querySelectorAll("details:not([open])"));
+    closed = Array.from(document.querySelectorAll("details:not([open]):not(.data)"));
     closed.forEach(function (each) { each.open = true; });
   });
   window.addEventListener("afterprint", function () {
