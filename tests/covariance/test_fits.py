@@ -269,15 +269,18 @@ def test_longitude_origin_changes_nothing() -> None:
     assert one.shape["spatial.range"][0] == pytest.approx(other.shape["spatial.range"][0], rel=1e-4)
 
 
-def test_equal_weights_only_rescale_the_row_noise() -> None:
+@pytest.mark.parametrize("weight", [1e-7, 4.0, 1e7])
+def test_equal_weights_only_rescale_the_row_noise(weight: float) -> None:
     rng = np.random.default_rng(10)
-    g = np.arange(60) // 6
-    y = rng.standard_normal(10)[g] + rng.standard_normal(60)
-    plain = fits(y, groups={"g": g})[{"group:g"}]
-    heavy = fits(y, groups={"g": g}, weights=np.full(60, 4.0))[{"group:g"}]
-    # V = τ²ZZ' + σ²Ω⁻¹: with ω = 4 throughout, τ² stays and σ² is four times as large.
-    assert heavy.variances["group:g"][0] == pytest.approx(plain.variances["group:g"][0], rel=1e-5)
-    assert heavy.variances["row"][0] == pytest.approx(4 * plain.variances["row"][0], rel=1e-5)
+    g, xy = np.arange(60) // 6, rng.uniform(size=(60, 2))
+    y = rng.standard_normal(10)[g] + rng.standard_normal(60) + np.sin(6 * xy[:, 0])
+    plain = fits(y, groups={"g": g}, xy=xy)
+    heavy = fits(y, groups={"g": g}, xy=xy, weights=np.full(60, weight))
+    # V = τ²ZZ' + σ²Ω⁻¹: with one weight ω throughout, τ² stays and σ² is ω times as large.
+    for key in ("group:g", "spatial"):
+        one, other = plain[{key}], heavy[{key}]
+        assert other.variances[key][0] == pytest.approx(one.variances[key][0], rel=1e-4)
+        assert other.variances["row"][0] == pytest.approx(weight * one.variances["row"][0], rel=1e-4)
 
 
 def test_weights_as_repeated_rows() -> None:

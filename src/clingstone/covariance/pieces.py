@@ -50,17 +50,19 @@ class Piece(Protocol):
         ...
 
 
-def ratio_parameter(name: str, cells: Array) -> Parameter:
+def ratio_parameter(name: str, cells: Array, n: int) -> Parameter:
     """ln λ, λ = σ²ₖ/σ². Low enough to be zero for the fullest cell; scanned from where it can be seen.
 
     The standard error of λ̂ near zero is about √(2/G)/c̄ for G cells of c̄ rows (Searle, Casella &
-    McCulloch 1992), so a hundredth of that cannot be told from zero.
+    McCulloch 1992), so a hundredth of that cannot be told from zero. cells : (G,) counts or total
+    weights of n rows; σ² is the variance of a row of weight one, so λ goes with 1/weight.
     """
-    mean = float(cells.mean())
+    mean, unit = float(cells.mean()), -float(np.log(cells.sum() / n))
     low = float(np.log(1e-8 / cells.max()))
     seen = float(np.log(0.01 * np.sqrt(2 / len(cells)) / mean))
-    scan = tuple(np.linspace(seen, 9.0, 41))
-    return Parameter(name, low, RATIO_HIGH, (float(np.log(0.2 / mean)), -0.7, 1.1), scan, True)
+    scan = tuple(np.linspace(seen, 9.0 + unit, 41))
+    starts = (float(np.log(0.2 / mean)), unit - 0.7, unit + 1.1)
+    return Parameter(name, low, RATIO_HIGH + unit, starts, scan, True)
 
 
 def ratio_of(theta: Array, parameter: Parameter) -> Array:
@@ -79,7 +81,7 @@ class GroupPiece:
     @property
     @once
     def parameters(self) -> tuple[Parameter, ...]:
-        return (ratio_parameter(f"{self.key}.log_ratio", self.design.sizes(self.part)),)
+        return (ratio_parameter(f"{self.key}.log_ratio", self.design.sizes(self.part), self.design.n),)
 
     def variance(self, theta: Array) -> Array:
         return ratio_of(theta[0], self.parameters[0])
@@ -204,13 +206,13 @@ class SpatialPiece:
             f"{self.key}.log_range", float(low), float(high), starts, tuple(np.linspace(low, high, 13))
         )
         c = self.design.sizes(self.sites.part)
-        mean = float(c.mean())
+        mean, unit = float(c.mean()), -float(np.log(c.sum() / self.design.n))
         ratio = Parameter(
             f"{self.key}.log_ratio",
             float(np.log(1e-8 / c.max())),
-            RATIO_HIGH,
-            tuple(float(np.log(x)) for x in (0.25 / mean, 1.0, 4.0)),
-            tuple(np.linspace(np.log(0.02 / mean), 10.0, 21)),
+            RATIO_HIGH + unit,
+            (float(np.log(0.25 / mean)), unit, unit + 1.4),
+            tuple(np.linspace(np.log(0.02 / mean), 10.0 + unit, 21)),
             True,
         )
         return reach, ratio

@@ -276,48 +276,51 @@ def _polish(
 
     Returns the curvature too, with that of ``warm`` (or one) for coordinates at a bound.
     """
-    d = len(theta)
-    curvature = np.eye(d) if warm is None else warm.curvature.copy()
+    curvature = np.eye(len(theta)) if warm is None else warm.curvature.copy()
+    if warm is not None and _arrived(f, theta, free, curvature):
+        return theta, value, True, curvature
     decrement = 0.0
     for _ in range(6):
-        if warm is not None:
-            # The curvature is known well enough: the gradient alone tells whether the search has arrived.
-            part = np.flatnonzero(free)
-            slope = gradient(f, theta)[part]
-            decrement = float(slope @ np.linalg.solve(curvature[np.ix_(part, part)], slope))
-            if decrement < 1e-6:
-                return theta, value, True, curvature
-
-        def g(part: Array, here: Array = theta, at: Flags = free) -> float:
-            whole = here.copy()
-            whole[at] = part
-            return f(whole)
-
+        slope, H = _differences(f, theta, free)
+        # A coordinate that changes nothing (the range of a component of zero variance) is left alone.
+        alive = np.diag(H) > 1e-9 * np.abs(H).max(initial=0.0)
+        free = free.copy()
+        free[np.flatnonzero(free)[~alive]] = False
         if not free.any():
             return theta, value, True, curvature
-        slope, H = gradient(g, theta[free]), hessian(g, theta[free])
-        # A coordinate that changes nothing (the range of a component of zero variance) is left alone.
-        alive = np.diag(H) > 1e-9 * np.abs(H).max()
-        if not alive.all():
-            free = free.copy()
-            free[np.flatnonzero(free)[~alive]] = False
-            continue
+        slope, H = slope[alive], H[np.ix_(alive, alive)]
         size, U = np.linalg.eigh(H)
         if size.min() <= 0:
             return theta, value, bool(np.abs(slope).max() < 1e-3), curvature
         curvature[np.ix_(free, free)] = H
-        step = U @ ((U.T @ slope) / size)
-        decrement = float(slope @ step)
+        step = np.zeros_like(theta)
+        step[free] = U @ ((U.T @ slope) / size)
+        decrement = float(slope @ step[free])
         if decrement < 1e-8:
-            return theta, value, True, curvature
+            break
         for shrink in (1.0, 0.5, 0.1):
-            part = np.clip(theta[free] - shrink * step, box[free, 0], box[free, 1])
-            v = g(part)
+            trial = np.clip(theta - shrink * step, box[:, 0], box[:, 1])
+            v = f(trial)
             if v < value:
-                theta = theta.copy()
-                theta[free] = part
-                value = v
+                theta, value = trial, v
                 break
         else:
             break
     return theta, value, decrement < 1e-6, curvature
+
+
+def _differences(f: Criterion, theta: Array, free: Flags) -> tuple[Array, Array]:
+    """Gradient and Hessian in the free coordinates."""
+
+    def inner(part: Array) -> float:
+        whole = theta.copy()
+        whole[free] = part
+        return f(whole)
+
+    return gradient(inner, theta[free]), hessian(inner, theta[free])
+
+
+def _arrived(f: Criterion, theta: Array, free: Flags, curvature: Array) -> bool:
+    """Whether the gradient alone, measured by a curvature known well enough, says that this is the end."""
+    slope = gradient(f, theta)[free]
+    return float(slope @ np.linalg.solve(curvature[np.ix_(free, free)], slope)) < 1e-6
