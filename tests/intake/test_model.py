@@ -88,6 +88,7 @@ def test_names_of_factors_and_interactions() -> None:
         ("y ~ `my col` + I(dose ** 2)", ("constant", "my col", "I(dose ** 2)")),
         ("y ~ scale(`my col`)", ("constant", "scale(`my col`)")),
         ("y ~ np.log(dose)", ("constant", "np.log(dose)")),
+        ("y ~ Q('my col')", ("constant", "Q('my col')")),
         ("y ~ dose:old", ("constant", "dose × old: False", "dose × old: True")),
     ],
 )
@@ -154,7 +155,12 @@ def test_a_response_of_two_values_is_noted() -> None:
         ("y ~ lab", "lab holds text where numbers are needed: rows 3, 7, 11, 15 and 2 more have ‘<3’"),
         ("y ~ log(arm)", "arm holds text where numbers are needed"),
         ("y ~ log(dose - 4)", "log(dose - 4) has no finite value in rows "),
-        ("y ~ nosuch(dose)", "the model cannot be worked out: Unable to evaluate factor `nosuch(dose)`"),
+        (
+            "y ~ nosuch(dose)",
+            "‘nosuch’ in ‘nosuch(dose)’ is no arithmetic or function that a model may use here",
+        ),
+        ("y ~ log(dose, 1, 2, 3, 4)", "the model cannot be worked out: Unable to evaluate factor"),
+        ("y ~ log(dose", "the model cannot be read"),
     ],
 )
 def test_models_that_cannot_be_read(model: str, said: str) -> None:
@@ -182,6 +188,32 @@ def test_numbers_with_a_word_among_them_and_times_are_no_factors() -> None:
     assert message(lambda: made("y ~ day", when))[0] == "day is a time, not a number or a factor"
     since = when.assign(day=when["day"] - when["day"].iloc[0])
     assert message(lambda: made("y ~ day", since))[0] == "day is a time, not a number or a factor"
+
+
+@pytest.mark.parametrize(
+    "part",
+    [
+        "__import__('os').getpid()",
+        "open('x')",
+        "np.load('x')",
+        "np.lib.format.read_array('x')",
+        "dose.to_csv('x')",
+        "I((lambda v: v)(dose))",
+        "I([v for v in dose])",
+        "I(dose.__class__)",
+        "{eval('1')}",
+        "contr.__init__(1)",
+    ],
+)
+def test_a_formula_cannot_run_anything_but_arithmetic(part: str) -> None:
+    said, hint = message(lambda: made(f"y ~ {part}"))
+    assert "no arithmetic or function" in said or "cannot be read" in said
+    assert hint
+
+
+def test_arithmetic_and_functions_that_may_be_used() -> None:
+    found = made("y ~ I(dose**2 + 1) + np.where(dose > 2, 1, 0) + {dose - 3} + np.clip(`my col`, -1, 1)")
+    assert len(found.names) == 5
 
 
 def test_text_with_odd_values_may_be_declared_a_factor() -> None:

@@ -139,6 +139,8 @@ def plain(column: pd.Series) -> pd.Series:
             if not column.isna().any() or pd.api.types.is_object_dtype(dtype)
             else column.astype(object)
         )
+    if dtype.kind == "c":
+        raise InputError(f"{column.name} holds complex numbers", "Give a column of real numbers.")
     if pd.api.types.is_numeric_dtype(dtype):
         whole = pd.api.types.is_integer_dtype(dtype) and not column.isna().any()
         return column.astype("int64" if whole and not str(dtype).lower().startswith("uint64") else "float64")

@@ -8,6 +8,8 @@ from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
 from typing import Any
 
+import numpy as np
+
 from clingstone.intake.words import listed, quoted
 from clingstone.needs import InputError
 
@@ -16,7 +18,13 @@ _RANDOM = re.compile(r"\([^()]*\|[^()]*\)|\|\|?")
 _ALL_OTHERS = re.compile(r"(?<![\w.`\])])\.(?![\w.(])")
 _TRANSFORMED = re.compile(r"(?:(?:np|numpy)\.)?(log|log2|log10|log1p|sqrt|cbrt|exp)\(.*\)", re.DOTALL)
 _FACTOR = re.compile(r"C\(\s*(`[^`]+`|\w+)\s*(?:,.*)?\)", re.DOTALL)
-_CONSTANTS = {"True", "False", "None"}
+_TICKED = "__ticked__"
+_NUMPY = ("where", "clip", "round", "pi", "e")
+_ALLOWED = (
+    ast.Expression, ast.Name, ast.Load, ast.Constant, ast.Call, ast.keyword, ast.Attribute,
+    ast.BinOp, ast.UnaryOp, ast.Compare, ast.BoolOp, ast.operator, ast.unaryop, ast.cmpop, ast.boolop,
+    ast.List, ast.Tuple, ast.Dict,
+)  # fmt: skip
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,7 +59,7 @@ def parse(model: str, known: Sequence[str]) -> Parsed:
     _refuse(model)
     try:
         formula = Formula(model)
-    except FormulaicError as error:
+    except (FormulaicError, SyntaxError) as error:
         plain = re.sub(r"\x1b\[[0-9;]*m", "", str(error)).replace("⧛", "»").replace("⧚", "«")
         raise InputError(
             f"the model cannot be read: {' '.join(plain.split())}",
@@ -108,25 +116,63 @@ def variables(expression: str, how: str, known: Sequence[str]) -> tuple[str, ...
     if how == "lookup":
         return (expression,)
     ticked = re.findall(r"`([^`]+)`", expression)
-    sound = re.sub(r"`[^`]+`", "__ticked__", expression)
     try:
-        tree = ast.parse(sound, mode="eval")
+        tree = ast.parse(re.sub(r"`[^`]+`", _TICKED, expression), mode="eval")
     except SyntaxError as error:
         raise InputError(
             f"‘{expression}’ in the model cannot be read: {error.msg}", "Check its brackets."
         ) from error
+    _only_arithmetic(expression, tree)
     called = {id(n.func) for n in ast.walk(tree) if isinstance(n, ast.Call)}
     roots = {id(n.value) for n in ast.walk(tree) if isinstance(n, ast.Attribute)}
     names = [
         n.id
         for n in ast.walk(tree)
         if isinstance(n, ast.Name)
-        and id(n) not in called
-        and n.id not in _CONSTANTS
-        and n.id != "__ticked__"
-        and (n.id in known or (n.id not in TRANSFORMS and id(n) not in roots))
+        and id(n) not in called | roots
+        and n.id != _TICKED
+        and (n.id in known or n.id not in TRANSFORMS)
     ]
-    return tuple(dict.fromkeys([*ticked, *names]))
+    quoted_names = [
+        str(n.args[0].value)
+        for n in ast.walk(tree)
+        if isinstance(n, ast.Call) and isinstance(n.func, ast.Name) and n.func.id == "Q"
+        if len(n.args) == 1 and isinstance(n.args[0], ast.Constant)
+    ]
+    return tuple(dict.fromkeys([*ticked, *quoted_names, *names]))
+
+
+def _only_arithmetic(expression: str, tree: ast.AST) -> None:
+    """Stop at anything but arithmetic and known functions.
+
+    A formula is worked out as Python, and may come from a saved folder that somebody else wrote.
+    """
+    from formulaic.transforms import TRANSFORMS
+
+    for node in ast.walk(tree):
+        if isinstance(node, ast.Attribute):
+            root = node.value.id if isinstance(node.value, ast.Name) else ""
+            if root in ("np", "numpy") and (
+                isinstance(getattr(np, node.attr, None), np.ufunc) or node.attr in _NUMPY
+            ):
+                continue
+            if root == "contr" and not node.attr.startswith("_"):
+                continue
+            raise _not_known(expression, ast.unparse(node))
+        if isinstance(node, ast.Call) and isinstance(node.func, ast.Name) and node.func.id not in TRANSFORMS:
+            raise _not_known(expression, node.func.id)
+        if not isinstance(node, _ALLOWED):
+            raise _not_known(expression, ast.unparse(node))
+
+
+def _not_known(expression: str, what: str) -> InputError:
+    inside = "" if what == expression else f" in ‘{expression}’"
+    return InputError(
+        f"‘{what}’{inside} is no arithmetic or function that a model may use here",
+        "Functions that may be used: log, log10, log2, exp, poly, bs, center, scale, C, I, and "
+        "those of numpy "
+        "that work value by value, such as np.sqrt. Make any other column before.",
+    )
 
 
 def short(expression: str) -> str:

@@ -127,12 +127,6 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
         a set to drop).
     """
     n, p = found.X.shape
-    if np.ptp(found.y) <= 1e-13 * np.abs(found.y).max():
-        raise InputError(
-            f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is "
-            "nothing to explain",
-            "Check the column and the rows that were kept.",
-        )
     if n <= p:
         widest = max(found.terms, key=lambda t: len(t.columns), default=None)
         most = (
@@ -142,6 +136,12 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
             f"{count(n, 'row')} cannot carry {count(p, 'coefficient')}{most}: nothing is left over "
             "to judge by",
             "Use fewer terms or more rows. Many groups belong in group=, not in the formula.",
+        )
+    if np.ptp(found.y) <= 1e-13 * np.abs(found.y).max():
+        raise InputError(
+            f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is "
+            "nothing to explain",
+            "Check the column and the rows that were kept.",
         )
     X = found.X if root is None else found.X * root[:, None]
     lost = aliased(X)
@@ -251,8 +251,7 @@ def _evaluation_error(
             return text_error(frame[name], kept)
     return InputError(
         f"the model cannot be worked out: {' '.join(str(error).split())}",
-        "Functions that can be used: log, log10, log2, exp, poly, bs, center, scale, C, I, and np. "
-        "functions.",
+        "Check the functions and their arguments.",
     )
 
 
