@@ -104,7 +104,10 @@ class Law:
 
     @property
     def range(self) -> tuple[float, float]:
-        """The smallest and the largest value that T can take: the extreme eigenvalues of MSM."""
+        """The smallest and the largest value that T can take: the extreme eigenvalues of MSM.
+
+        For large sparse forms by Lanczos, each end moved outwards by what its convergence leaves open.
+        """
         return (self.mean, self.mean) if self.constant else _range(self.basis, self.form, self.swept)
 
     def tails(self, values: npt.ArrayLike, depth: str = "exact") -> Tails:

@@ -1,10 +1,11 @@
 """Which way to the law of a ratio: by the structure of the form and the size of the problem.
 
-| form | what is left over | route |
-| any, or a core that small | up to DENSE rows or cells | eigenvalues of MSM |
+| form | size | route |
+| any | up to SMALL rows or cells | eigenvalues of MSM |
 | paths, groups | any n | known eigenvectors of S |
-| long paths | any n, values of moderate depth | Chebyshev moments |
-| sparse | up to SPARSE rows | one factorization per node |
+| long paths | any n, values not too near the ends | Chebyshev moments |
+| any | up to DENSE rows or cells | eigenvalues of MSM |
+| sparse | up to SPARSE rows or cells | one factorization per node |
 | the rest | any n | a three-point spectrum with the same four traces: approximate |
 """
 
@@ -18,6 +19,7 @@ from scipy import linalg, sparse
 from clingstone.maths.basis import Basis
 from clingstone.maths.chains import Chains
 from clingstone.maths.forms import Form
+from clingstone.maths.lanczos import spectrum_ends
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.spectra import Eigen, Factored, Modes, Polynomials, Spectrum, line
@@ -286,21 +288,16 @@ def factored(basis: Basis, form: Form, swept: Partition | None = None) -> Factor
 @once
 def sharp_bounds(form: Form) -> tuple[float, float]:
     """Bounds of the spectrum of S from Lanczos, opened by 0.1 % of its length, inside the form's own."""
-    from scipy.sparse.linalg import eigsh
-
-    start = np.random.default_rng(0).standard_normal(form.order)
-    ends = eigsh(form.core, k=2, which="BE", v0=start, tol=1e-4, return_eigenvectors=False)
-    room = 1e-3 * float(ends.max() - ends.min())
-    return max(form.low, float(ends.min()) - room), min(form.high, float(ends.max()) + room)
+    low, high = spectrum_ends(lambda v: form.core @ v, form.order, 60, 1e-3)
+    room = 1e-3 * (high - low)
+    return max(form.low, low - room), min(form.high, high + room)
 
 
 def extremes(basis: Basis, form: Form, swept: Partition | None) -> tuple[float, float]:
-    """The extreme eigenvalues of MSM on range M by Lanczos, to about 1e-9 of the spectrum's length.
+    """The extreme eigenvalues of MSM on range M by Lanczos, each moved outwards by its residual.
 
     Directions that M removes are moved to the middle of the spectrum, so that they are never an end.
     """
-    from scipy.sparse.linalg import LinearOperator, eigsh
-
     rest = None if swept is None else sweep_out(basis, swept)
     Q = basis.Q if rest is None else rest.Q
     middle = projected(basis, form, swept, 2)[0] / residual_df(basis, swept)
@@ -310,10 +307,9 @@ def extremes(basis: Basis, form: Form, swept: Partition | None) -> tuple[float, 
         return v if rest is None else np.asarray(rest.sweep(v))
 
     def apply(v: Array) -> Array:
-        kept = left(np.asarray(v, dtype=float).ravel())
+        kept = left(v)
         return left(form.apply(kept) - middle * kept)
 
-    operator = LinearOperator((form.n, form.n), matvec=apply, dtype=float)
-    start = np.random.default_rng(0).standard_normal(form.n)
-    ends = eigsh(operator, k=2, which="BE", v0=start, tol=1e-9, return_eigenvectors=False)
-    return middle + float(ends.min()), middle + float(ends.max())
+    steps = 300 if form.n <= SPARSE else 100
+    low, high = spectrum_ends(apply, form.n, steps)
+    return max(form.low, middle + low), min(form.high, middle + high)

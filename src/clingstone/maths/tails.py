@@ -111,7 +111,7 @@ def both(
     )
     if not found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    tail = integrate(log_det, c, width, tolerance=1e-10 if slow else 1e-13)
+    tail = integrate(log_det, c, width, tolerance=1e-9 if slow else 1e-13)
     if tail.accuracy > 1e-6 and found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
     # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds it.
