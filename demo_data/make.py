@@ -25,9 +25,9 @@ TRUTH = {
     "lambs": {
         "twin": -0.8,
         "ram": 0.5,
-        "flock sd": 0.7,
-        "lamb sd": 1.1,
-        "noise sd": 0.7,
+        "flock sd": 0.5,
+        "lamb sd": 0.7,
+        "noise sd": 0.5,
         "grown weight": 40.0,
         "rate per day": 0.011,
     },
@@ -98,7 +98,7 @@ def lambs() -> pd.DataFrame:
     rows = []
     for day in (0, 14, 28, 42, 56, 70):
         seen = rng.random_sample(total) < (1.0 if day == 0 else 0.88)
-        growth = 4.3 + true["grown weight"] * (1 - np.exp(-true["rate per day"] * day))
+        growth = 5.0 + true["grown weight"] * (1 - np.exp(-true["rate per day"] * day))
         fixed = growth + true["twin"] * twin + true["ram"] * ram
         weight = fixed + own + true["noise sd"] * rng.normal(size=total)
         rows.append(

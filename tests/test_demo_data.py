@@ -89,6 +89,7 @@ def test_lambs_are_numbered_afresh_and_growth_bends() -> None:
     assert frame["flock"].nunique() == 10
     assert frame["lamb"].nunique() < frame.drop_duplicates(["flock", "lamb"]).shape[0] == 85
     assert not frame.duplicated(["flock", "lamb", "day"]).any()
+    assert frame["weight"].min() > 1.0
     straight = _residuals(frame, "weight", ["day"])
     curved = _residuals(frame.assign(square=frame["day"] ** 2), "weight", ["day", "square"])
     assert np.sum(curved**2) < 0.85 * np.sum(straight**2)
