@@ -24,22 +24,24 @@ class Settings:
 
     model : formula such as ``"y ~ x + arm"``.
     residual : column of residuals, when no model is given.
-    group : one column, nested columns ``"a/b"``, or a tuple of crossed columns.
+    group : column of groups, or nested columns "a/b" from coarse to fine, or several crossed columns.
     time, series : column of time; column that says which rows form one ordered series.
-    coords : two columns of coordinates. lonlat : True for longitude, latitude; None to decide
-        from names and values.
+    coords : two columns of coordinates.
+    lonlat : whether they are longitude and latitude; left out, names and values decide.
+    polygons : column of shapes, each stood for by a point inside it.
     neighbours : "knn" or "band", with a number after a colon ("knn:6", "band:12.5").
-    weights, weights_kind : column of weights and what they mean.
-    focus : terms whose intervals matter; default all but the constant.
-    contrasts : {name: {coefficient: weight}} linear combinations.
+    weights, weights_kind : column of weights; whether a weight says how exact a row is or counts rows.
+    focus : terms whose intervals matter, by default all but the constant.
+    contrasts : named linear combinations of coefficients, {name: {coefficient: weight}}.
     means : factors whose level means are wanted.
     unadjusted : also fit each focus term alone.
-    assigned : {term: group level} or {term: {"unit": level, "within": level}}.
+    assigned : level at which a term was assigned, {term: level} or {term: {"unit": level, "within": level}}.
     sampled : group level that was sampled.
-    missing : what to do with a missing id, time or place. ties : with equal times in a series.
-    confidence : level of intervals, in (0, 1). alternative : direction of the primary tests.
+    missing, ties : what to do with a missing id, time or place; what to do with equal times in a series.
+    confidence, alternative : level of intervals, from 0.5 up to 1; direction of the primary tests.
     material : band of standard-error factors that do not matter.
-    rehearsal : "auto", "none" or a number of replicates. seed : of every random number.
+    rehearsal : "auto", "none" or a number of replicates.
+    seed : start of every random number.
     """
 
     model: str | None = None
