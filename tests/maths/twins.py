@@ -9,9 +9,11 @@ import numpy as np
 from scipy import integrate, sparse
 from scipy.spatial import cKDTree
 
+from clingstone.maths import forms
 from clingstone.maths.basis import Basis
 from clingstone.maths.forms import Form
 from clingstone.maths.partition import Partition
+from clingstone.maths.ratio import Law
 
 
 def residual_space(basis: Basis, swept: Partition | None = None) -> Any:
@@ -78,3 +80,45 @@ def weights(sites: Any, k: int) -> Any:
     near = cKDTree(sites).query(sites, k + 1)[1][:, 1:]
     rows = np.repeat(np.arange(n), k)
     return sparse.csr_array((np.full(n * k, 1.0 / k), (rows, near.ravel())), shape=(n, n))
+
+
+def panel(seed: int = 0, most: int = 30, series: int = 80) -> tuple[Partition, Basis, Any]:
+    """Unequal series with a column that is constant within them, and square roots of weights."""
+    rng = np.random.default_rng(seed)
+    codes = np.repeat(np.arange(series), rng.integers(1, most, series))
+    n = len(codes)
+    X = np.column_stack([np.ones(n), rng.standard_normal(series)[codes], rng.standard_normal((n, 2))])
+    return Partition.of("series", codes), Basis.of(X), np.sqrt(rng.uniform(0.4, 2.5, n))
+
+
+def laws() -> dict[str, Law]:
+    """One law for every route and kind of form; each small enough for its dense twin."""
+    out: dict[str, Law] = {}
+    for n in (9, 40, 700):
+        basis = trend_design(n, 4)
+        out[f"durbin-watson {n}"] = Law(forms.differences(*step(n), n, f"dw {n}"), basis)
+        out[f"lag 3, {n}"] = Law(forms.lagged(*step(n, 3), n, f"lag {n}"), basis)
+    part, basis, root = panel()
+    n = part.n
+    pairs = within(part.codes)
+    coarse = Partition.of("coarse", part.codes // 8)
+    out["panel"] = Law(forms.differences(*pairs, n, "panel"), basis)
+    out["panel, series means out"] = Law(forms.differences(*pairs, n, "panel fe"), basis, part)
+    out["panel, coarse means out"] = Law(forms.differences(*pairs, n, "panel coarse"), basis, coarse)
+    out["panel lag"] = Law(forms.lagged(*pairs, n, "panel lag"), basis)
+    out["panel lag, series means out"] = Law(forms.lagged(*pairs, n, "panel lag fe"), basis, part)
+    out["groups"] = Law(forms.cells(part), basis)
+    out["groups, weighted"] = Law(forms.cells(part, root), basis)
+    out["groups, coarse means out"] = Law(forms.cells(part), basis, coarse)
+    many, wide, many_root = panel(1, 6, 320)
+    out["many groups"] = Law(forms.cells(many), wide)
+    out["many groups, weighted"] = Law(forms.cells(many, many_root), wide)
+    sites, W = nearest(80, 5)
+    out["sites with rows"] = Law(forms.cells_graph(part, W, "sites"), basis)
+    out["sites with rows, weighted"] = Law(forms.cells_graph(part, W, "sites weighted", root), basis)
+    sites, W = nearest(300, 6, 2)
+    trend = Basis.of(np.column_stack([np.ones(300), sites]))
+    out["graph"] = Law(forms.graph(W, "graph"), trend)
+    times = Partition.of("unit", np.arange(300) % 40)
+    out["graph, unit means out"] = Law(forms.graph(W, "graph fe"), trend, times)
+    return out

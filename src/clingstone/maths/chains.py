@@ -100,7 +100,7 @@ class Chains:
 
         With ρ± = (α ± √(α²−β²))/2 and q = ρ₋/ρ₊: a path Laplacian of ℓ rows has determinant
         (α−β)(ρ₊^ℓ − ρ₋^ℓ)/(ρ₊ − ρ₋), a half adjacency (ρ₊^(ℓ+1) − ρ₋^(ℓ+1))/(ρ₊ − ρ₋). Every
-        logarithm below is of a number in the right half plane, so the branch is the right one.
+        logarithm below is of a number off the negative axis, so the branch is the right one.
         """
         root = np.sqrt(alpha - beta) * np.sqrt(alpha + beta)
         larger = 0.5 * (alpha + root)

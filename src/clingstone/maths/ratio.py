@@ -93,9 +93,9 @@ class Law:
     @property
     def constant(self) -> bool:
         """True where T cannot vary under this design."""
-        second = abs(projected(self.basis, self.form, self.swept, 2)[1])
-        scale = max(second / self.m, self.form.low**2, self.form.high**2)
-        return self.variance * (self.m + 2.0) / 2.0 <= CONSTANT * scale
+        first, second = projected(self.basis, self.form, self.swept, 2)
+        # tr S² is what the projected traces are differences of, and so the scale of their rounding.
+        return second - first**2 / self.m <= CONSTANT * max(abs(second), self.form.trace(2))
 
     @property
     def method(self) -> str:

@@ -89,7 +89,8 @@ def _extended(form: Form, V: Array) -> tuple[Array, int]:
         return V, 0
     outside, room = _outside(form, V)
     outside = outside[:room]
-    return np.vstack([V, outside]), room - len(outside)
+    whole: Array = np.linalg.qr(np.vstack([V, outside]))[0]  # unit length again, to the last digit
+    return whole, room - len(outside)
 
 
 @once
@@ -185,7 +186,7 @@ def _cell_modes(form: Form, Q: Array) -> Modes:
 def _outside(form: Form, V: Array) -> tuple[Array, int]:
     """Rows of Q outside the span of the cells (a square root of I − V'V), and the dimension there."""
     value, vector = np.linalg.eigh(np.eye(V.shape[1]) - V.T @ V)
-    keep = value > WHOLE
+    keep = value > max(WHOLE, 4e-16 * form.n)  # sums of n rows carry that much rounding
     return np.sqrt(value[keep])[:, None] * vector[:, keep].T, form.n - form.order
 
 

@@ -4,8 +4,8 @@ The determinant identity behind them: with D(z) = I − 2z(S − tI),
 
     det over range M  =  det D(z) · det( Q'D(z)⁻¹Q ).
 
-Each class gives ``log_det(z, t)`` for complex z (J,), with Re z inside ``bracket(t)``, on the branch that
-is real on the real axis: only logarithms of numbers in the right half plane are added.
+Each class gives ``log_det(z, t)`` for z (J,) in the upper half plane, or real and short of ``edge``, on
+the branch that is real there: only logarithms of numbers off the negative axis are added.
 """
 
 from __future__ import annotations
@@ -192,8 +192,8 @@ class Factored:
     between two of them and V orthogonal to them; then D⁻¹Z̃ is D⁻¹1 cut into cells, Z̃'D⁻¹Z̃ is
     diagonal, and a Schur complement of order p is left.
 
-    Where Re D is positive definite, elimination without pivoting is stable and every pivot has a
-    positive real part.
+    Where Re D is positive definite, elimination without pivoting is stable; no pivot meets the negative
+    real axis (see ``log_pivots``).
     """
 
     A: sparse.csr_array

@@ -9,12 +9,12 @@ import numpy as np
 import numpy.typing as npt
 from scipy import special
 
-from clingstone.maths.contour import Complex, abscissa, integrate
+from clingstone.maths.contour import Complex, integrate, saddle
 from clingstone.maths.once import Array
 from clingstone.maths.spectra import Factored, Spectrum, edge
 
-# Two eigenvalues closer than this, relative to the larger, are one: T then cannot vary.
-CONSTANT = 1e-12
+# A spread of eigenvalues below this, relative to their size, is rounding: T then cannot vary.
+CONSTANT = 1e-13
 POINTS = 8  # of the local interpolation polynomial
 FAR = 38.0  # normal score whose tail is 1e-315
 
@@ -102,17 +102,17 @@ def both(
         return spectrum.log_det(z, t)
 
     slow = isinstance(spectrum, Factored)
-    c, width, found = abscissa(
+    at = saddle(
         log_det,
         max(guess, abs(start)),
         edge(spectrum, t, upper),
         tolerance=0.3 if slow else 0.02,
         most=10 if slow else 60,
     )
-    if not found and _beyond(t, attainable(), upper):
+    if not at.found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    tail = integrate(log_det, c, width, tolerance=1e-9 if slow else 1e-13)
-    if tail.accuracy > 1e-6 and found and _beyond(t, attainable(), upper):
+    tail = integrate(log_det, at, tolerance=1e-9 if slow else 1e-13)
+    if tail.accuracy > 1e-6 and at.found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
     # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds it.
     small = min(tail.log_tail if tail.accuracy < 1e-2 else tail.log_bound, 0.0)
