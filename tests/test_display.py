@@ -7,6 +7,7 @@ import io
 import math
 import re
 
+import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
@@ -16,18 +17,27 @@ from clingstone.display import (
     Column,
     Table,
     align_decimals,
+    amount,
+    bounds,
     clean,
     columns_of,
     count,
     decimals_for,
     degrees,
+    freedom,
+    instead,
     latex,
     listed,
+    near,
     number,
     p_figure,
     p_value,
     percent,
+    percent_bounds,
     percent_span,
+    quoted,
+    rows,
+    sentence,
     significant,
     span,
     times,
@@ -59,9 +69,9 @@ def test_the_decimals_show_exactly_two_digits(se):
     [
         (-3.14159, 1, "−3.1"),
         (-0.004, 2, "0.00"),  # no minus before a zero
-        (12345.6, 0, "12\u202f346"),
-        (1234.5, 1, "1234.5"),
-        (1250.0, -2, "1200"),
+        (12345.6, 0, "12,346"),
+        (1234.5, 1, "1,234.5"),
+        (1250.0, -2, "1,200"),
         (math.nan, 2, "—"),
         (-math.inf, 1, "−∞"),
         (3.2e-9, 10, "3.2\u00a0×\u00a010⁻⁹"),
@@ -128,7 +138,45 @@ def test_words():
     assert count(2, "county") == "2 counties"
     assert count(2, "batch") == "2 batches"
     assert count(85, "series") == "85 series"
+    assert count(1204, "pair") == "1,204 pairs"
     assert listed(["a", "b", "c"]) == "a, b and c"
+    assert listed("abcdefgh", most=4) == "a, b, c and 5 more"
+    assert quoted([1, "x"]) == "‘1’ and ‘x’"
+    assert rows([2]) == "row 3"
+    assert rows(np.arange(50), 3) == "rows 1, 2 and 48 more"
+    assert rows(np.int64(0)) == "row 1"
+    assert near("Wieght", ["weight", "height", "day"])[0] == "weight"
+    assert instead("Wieght", ["weight", "day"]) == "Did you mean ‘weight’?"
+    assert sentence("  only 4 groups ") == "Only 4 groups."
+    assert sentence("") == ""
+
+
+@pytest.mark.parametrize(
+    ("said", "expected"),
+    [
+        (significant(-3.14159), "−3.1"),
+        (significant(412.4, 3), "412"),
+        (significant(72_800.0, 3), "72,800"),
+        (number(-0.001, 2), "0.00"),
+        (number(1936.0, 0, grouped=False), "1936"),
+        (number(19360.0, 0, grouped=False), "19,360"),
+        (bounds(-6.42, 0.18, 1), " (−6.4 to 0.2)"),
+        (bounds(math.nan, 1.0), ""),
+        (percent_bounds(0.06, 0.41), " (6 to 41 %)"),
+        (percent_bounds(0.06, math.nan), ""),
+        (amount(14.0), "14"),
+        (amount(7.19214), "7.192"),
+        (amount(0.25), "0.25"),
+        (amount(12_345.6), "12,346"),
+        (amount(1e12), "1.000 × 10¹²"),
+        (amount(2.5e-7), "2.500 × 10⁻⁷"),
+        (freedom(1.0), "1 degree of freedom"),
+        (freedom(10.43), "10.4 degrees of freedom"),
+        (freedom(11.0, 396.0), "11 and 396 degrees of freedom"),
+    ],
+)
+def test_numbers_in_sentences(said, expected):
+    assert said.replace("\u00a0", " ") == expected
 
 
 def test_labels_cannot_send_control_characters():

@@ -13,11 +13,11 @@ import numpy.typing as npt
 from clingstone.design import declare
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import count, instead
 from clingstone.intake import columns, files, fitted, formula, frames, model
 from clingstone.intake.columns import Columns, Role
 from clingstone.intake.frames import Table
 from clingstone.intake.model import Blocks
-from clingstone.intake.words import count, instead
 from clingstone.maths.once import Array, frozen
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError

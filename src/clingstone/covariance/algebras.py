@@ -18,14 +18,13 @@ from itertools import pairwise
 import numpy as np
 
 from clingstone.covariance.components import Component, Parameter
-from clingstone.covariance.kept import kept
 from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Classes, Load
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits, NotSupported
 

@@ -10,14 +10,13 @@ import numpy as np
 
 from clingstone.covariance.algebras import Chosen, choose
 from clingstone.covariance.components import Component, declared
-from clingstone.covariance.kept import kept
 from clingstone.covariance.thin import thin
 from clingstone.design.derived import onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.lattice import minimise_columns
-from clingstone.maths.once import Array, frozen
+from clingstone.maths.once import Array, frozen, kept
 from clingstone.maths.search import Flags, Optimum, minimise
 from clingstone.needs import NotSupported, Refusal, memory
 from clingstone.run import Run

@@ -10,11 +10,11 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.design.design import Assignment, Contrast, Design, Term
+from clingstone.display import count, instead, listed
 from clingstone.intake import wanted
 from clingstone.intake.columns import Role
 from clingstone.intake.frames import Table
 from clingstone.intake.model import Blocks, TermBlock
-from clingstone.intake.words import count, instead, listed
 from clingstone.maths.basis import Basis
 from clingstone.maths.once import Array, frozen
 from clingstone.maths.partition import Partition

@@ -9,12 +9,12 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.covariance.fits import Fits
+from clingstone.display import listed
 from clingstone.evidence.finding import About, Curve, Evidence, Finding, Reading, Test, column
 from clingstone.evidence.judge import VERDICTS, verdicts
 from clingstone.evidence.nested import level_name
 from clingstone.evidence.read import holm
 from clingstone.evidence.registry import TESTS
-from clingstone.evidence.words import listed
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported, Refusal
 
@@ -168,7 +168,7 @@ def _sentence(fits: Fits, item: Item, nothing: bool) -> str:
     said = item.test.sentence(item.reading, item.about)
     if not item.given:
         return said
-    names = listed([_label(key) for key in sorted(item.given, key=_reading_order)])
+    names = listed(_label(key) for key in sorted(item.given, key=_reading_order))
     return f"With {names} taken into account, {said[:1].lower()}{said[1:]}"
 
 

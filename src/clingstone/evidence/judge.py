@@ -7,10 +7,9 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.covariance.kept import kept
 from clingstone.evidence.finding import About, Reading, Test, Verdict
 from clingstone.evidence.matter import factor_at, group_factors, serial_factors, spatial_factors
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits

@@ -12,9 +12,9 @@ from scipy import special, stats
 from clingstone.design.derived import whole
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import bounds, count, decimals_for, number, p_value, significant
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.read import Plain, degenerate, normal_quantile
-from clingstone.evidence.words import between, counted, number, p_value
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Needs, NotSupported
 
@@ -72,12 +72,14 @@ class Heteroscedasticity(Plain):
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
-        interval = between(column(reading.low), column(reading.high), "number")
+        low, high = column(reading.low), column(reading.high)
+        places = max(1, decimals_for((high - low) / 2, 1))
         return (
             f"At the upper end of {about.words} the residuals spread "
-            f"{number(column(reading.estimate))} times{interval} as far as at the lower end "
-            f"(Koenker's nR² = {number(column(reading.statistic))}, "
-            f"{p_value(column(reading.p), column(reading.log_p))})."
+            f"{number(column(reading.estimate), places)} times{bounds(low, high, places)} as far as at the "
+            "lower end "
+            f"(Koenker's nR² = {significant(column(reading.statistic))}, "
+            f"{p_value(column(reading.p))})."
         )
 
 
@@ -164,10 +166,10 @@ class Outliers(Plain):
 
     def sentence(self, reading: Reading, about: About) -> str:
         return (
-            f"The largest residual lies {number(abs(column(reading.estimate)))} standard deviations "
+            f"The largest residual lies {significant(abs(column(reading.estimate)))} standard deviations "
             f"{'above' if column(reading.estimate) > 0 else 'below'} its fitted value; among "
-            f"{counted(reading.n_used, 'row')}, "
-            f"{p_value(column(reading.p), column(reading.log_p))}."
+            f"{count(reading.n_used, 'row')}, "
+            f"{p_value(column(reading.p))}."
         )
 
 
@@ -208,14 +210,17 @@ class Normality(Plain):
             estimate=skew,
             estimate_name="skewness",
             n_used=fits.design.n,
-            caveats=(f"excess kurtosis {number(column(heavy))}", "a screen only: never decides"),
+            caveats=(
+                f"Their excess kurtosis is {significant(column(heavy))} (0 when normal).",
+                "This is a screen only and decides nothing.",
+            ),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
         return (
-            f"The residuals have skewness {number(column(reading.estimate))} and {reading.caveats[0]} "
-            f"(0 and 0 when normal; K² = {number(column(reading.statistic))}, "
-            f"{p_value(column(reading.p), column(reading.log_p))})."
+            f"The residuals have skewness {significant(column(reading.estimate))} (0 when normal; skewness "
+            f"and kurtosis together, K² = {significant(column(reading.statistic))}, "
+            f"{p_value(column(reading.p))})."
         )
 
 
@@ -260,26 +265,26 @@ class Duplicates(Plain):
         codes = row_codes(fits.design)
         Y = whole(fits.response)
         copies = [copies_of(codes, Y[:, b]) for b in range(fits.response.B)]
-        count = np.array([float(len(rows)) for rows in copies])
+        counts = np.array([float(len(rows)) for rows in copies])
         return Reading(
-            statistic=count,
+            statistic=counts,
             statistic_name="copies",
-            p=np.full(len(count), np.nan),
+            p=np.full(len(counts), np.nan),
             p_method="a count, no test",
-            estimate=count / fits.design.n,
+            estimate=counts / fits.design.n,
             estimate_name="share of rows that copy another",
             n_used=fits.design.n,
-            flag=count > 0,
+            flag=counts > 0,
             rows=tuple(int(r) for r in copies[0][:50]),
-            caveats=("rounded or counted values can repeat honestly",) if count[0] else (),
+            caveats=("Rounded or counted values can repeat honestly.",) if counts[0] else (),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
-        count = int(column(reading.statistic))
-        if not count:
+        found = int(column(reading.statistic))
+        if not found:
             return "No row is identical to another in every column used."
-        verb = "copies" if count == 1 else "copy"
-        return f"{counted(count, 'row')} {verb} an earlier row in every column used."
+        verb = "copies" if found == 1 else "copy"
+        return f"{count(found, 'row')} {verb} an earlier row in every column used."
 
 
 def copies_of(codes: npt.NDArray[np.int64], y: Array) -> npt.NDArray[np.int64]:

@@ -10,9 +10,9 @@ from scipy import special, stats
 
 from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
+from clingstone.display import freedom, p_value, percent, percent_bounds, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, around, degenerate, floats
-from clingstone.evidence.words import between, degrees, number, p_value, percent
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Needs, NotSupported
 from clingstone.structure.spatial import Sites
@@ -209,19 +209,20 @@ class FunctionalForm(Plain):
         if given:
             return ()
         declared = [p for p in ("group", "serial", "spatial") if getattr(fits.design, p) is not None]
-        return ("takes the rows as independent: dependence alone can make it reject",) if declared else ()
+        words = "It takes the rows as independent, so dependence alone can make its p small."
+        return (words,) if declared else ()
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
         return function_curve(fits, about.key, fits.design.covariates[about.key], self.id)
 
     def sentence(self, reading: Reading, about: About) -> str:
-        share = f"{percent(column(reading.estimate))} %"
-        share += between(column(reading.low), column(reading.high), "percent")
+        share = percent(column(reading.estimate))
+        share += percent_bounds(column(reading.low), column(reading.high))
         words = about.words[:1].upper() + about.words[1:]
         return (
             f"{words} would explain {share} of what the model leaves over "
-            f"(F = {number(column(reading.statistic))} on {degrees(reading.df, reading.df2)}, "
-            f"{p_value(column(reading.p), column(reading.log_p))})."
+            f"(F = {significant(column(reading.statistic))} on {freedom(reading.df, reading.df2)}, "
+            f"{p_value(column(reading.p))})."
         )
 
 
@@ -251,7 +252,7 @@ class Trend(FunctionalForm):
     def caveats(self, given: bool, fits: Fits) -> tuple[str, ...]:
         if not given:
             return super().caveats(given, fits)
-        return ("a slow trend and slow dependence are hard to tell apart, so this seldom rejects",)
+        return ("A slow trend and slow dependence are hard to tell apart, so its p is seldom small.",)
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
         assert fits.design.serial is not None
@@ -278,7 +279,7 @@ class TrendSurface(Trend):
     def caveats(self, given: bool, fits: Fits) -> tuple[str, ...]:
         if not given:
             return FunctionalForm.caveats(self, given, fits)
-        return ("a smooth surface and smooth dependence are hard to tell apart, so this seldom rejects",)
+        return ("A smooth surface and smooth dependence are hard to tell apart, so its p is seldom small.",)
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
         return None

@@ -9,10 +9,10 @@ import numpy as np
 from scipy import special, stats
 
 from clingstone.design.design import Design
+from clingstone.display import bounds, freedom, number, p_value, percent, percent_bounds, significant
 from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, around, degenerate, exceedance, floats
-from clingstone.evidence.words import between, correlation, degrees, number, p_value, percent
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
@@ -115,16 +115,16 @@ class GroupF(Plain):
 
     def sentence(self, reading: Reading, about: About) -> str:
         icc, words = column(reading.estimate), about.words[:1].upper() + about.words[1:]
-        size = f"{correlation(icc)}{between(column(reading.low), column(reading.high))}"
+        size = f"{number(icc, 2)}{bounds(column(reading.low), column(reading.high))}"
         if reading.statistic_name != "F":
             return (
-                f"{words} share {percent(icc)} % of what the model leaves over (restricted likelihood "
-                f"ratio {number(column(reading.statistic))}, "
-                f"{p_value(column(reading.p), column(reading.log_p))})."
+                f"{words} share {percent(icc)} of what the model leaves over (restricted likelihood "
+                f"ratio {significant(column(reading.statistic))}, "
+                f"{p_value(column(reading.p))})."
             )
         tail = (
-            f"F = {number(column(reading.statistic))} on {degrees(reading.df, reading.df2)}, "
-            f"{p_value(column(reading.p), column(reading.log_p))}."
+            f"F = {significant(column(reading.statistic))} on {freedom(reading.df, reading.df2)}, "
+            f"{p_value(column(reading.p))}."
         )
         return f"{words} have an intraclass correlation (likeness beyond the model) of {size}; {tail}"
 
@@ -132,9 +132,9 @@ class GroupF(Plain):
 def _group_caveats(design: Design, part: Partition) -> tuple[str, ...]:
     out = []
     if part.count < 5:
-        out.append(f"only {part.count} groups: the correlation is known very roughly")
+        out.append(f"There are only {part.count} groups, so the correlation is known very roughly.")
     if not design.known:
-        out.append("only residuals were given: the degrees of freedom ignore the model's other columns")
+        out.append("Only residuals were given, so the degrees of freedom leave out the columns of the model.")
     return tuple(out)
 
 
@@ -154,7 +154,7 @@ def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:
         estimate=np.asarray(wide.shares()[key]),
         estimate_name="share of the residual variance",
         n_used=fits.design.n,
-        caveats=("the mixture is conservative with few groups",),
+        caveats=("With few groups this reference makes p too large rather than too small.",),
     )
 
 
@@ -260,9 +260,9 @@ class IntraclassCorrelation(Plain):
 
     def sentence(self, reading: Reading, about: About) -> str:
         return (
-            f"By restricted maximum likelihood, {about.words} share {percent(column(reading.estimate))} %"
-            f"{between(column(reading.low), column(reading.high), 'percent')} of what the model leaves over "
-            f"(restricted likelihood ratio {number(column(reading.statistic))}, "
+            f"By restricted maximum likelihood, {about.words} share {percent(column(reading.estimate))}"
+            f"{percent_bounds(column(reading.low), column(reading.high))} of what the model leaves over "
+            f"(restricted likelihood ratio {significant(column(reading.statistic))}, "
             f"{p_value(column(reading.p))})."
         )
 

@@ -10,10 +10,10 @@ from scipy import special, stats
 
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import count, freedom, number, p_value, percent, significant
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.read import Plain, degenerate, exceedance, ratio, simulated
 from clingstone.evidence.serial import enough, form_of, series_of, step_words
-from clingstone.evidence.words import counted, degrees, number, p_value, percent
 from clingstone.maths.once import Array
 from clingstone.maths.ratio import covariances, means
 from clingstone.needs import Family, Needs, NotSupported
@@ -40,7 +40,7 @@ def _whole_lags(design: Design, last: int) -> None:
         )
     pairs = len(series.pairs(last)[0])
     if pairs < 3:
-        raise NotSupported(f"only {counted(pairs, 'pair')} of rows {step_words(series, last)}")
+        raise NotSupported(f"only {count(pairs, 'pair')} of rows {step_words(series, last)}")
 
 
 @dataclass(frozen=True)
@@ -70,7 +70,7 @@ class BreuschGodfrey(Plain):
         enough(series_of(design), fits.run.limits)
         _whole_lags(design, k)
         if design.m - k < 2:
-            raise NotSupported(f"{design.m} residual degrees of freedom for {counted(k, 'lag')}")
+            raise NotSupported(f"{design.m} residual degrees of freedom for {count(k, 'lag')}")
         r2, rank = partial_r2(response, k)
         n, df2 = design.n, design.m - rank
         if fits.depth == "exact" and n <= DRAWN_GODFREY:
@@ -95,8 +95,8 @@ class BreuschGodfrey(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         return (
             f"Earlier residuals of the same series, {about.words}, explain "
-            f"{percent(column(reading.estimate))} % of the residual variance (Breusch–Godfrey "
-            f"{number(column(reading.statistic), 3)} on {degrees(reading.df)}, "
+            f"{percent(column(reading.estimate))} of the residual variance (Breusch–Godfrey "
+            f"{significant(column(reading.statistic), 3)} on {freedom(reading.df)}, "
             f"{p_value(column(reading.p))})."
         )
 
@@ -155,7 +155,7 @@ class LjungBox(Plain):
     def abouts(self, design: Design) -> tuple[About, ...]:
         longest = int(series_of(design).part.sizes.max())
         K = max(1, min(10, longest // 5))
-        return (About(str(K), f"up to {counted(K, 'step')} apart"),)
+        return (About(str(K), f"up to {count(K, 'step')} apart"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, response, K = fits.design, fits.response, int(about.key)
@@ -184,8 +184,8 @@ class LjungBox(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         return (
             f"Over lags {about.words}, the largest residual correlation is "
-            f"{number(column(reading.estimate))} ({reading.statistic_name} "
-            f"{number(column(reading.statistic), 3)} on {degrees(reading.df)}, "
+            f"{number(column(reading.estimate), 2)} ({reading.statistic_name} "
+            f"{significant(column(reading.statistic), 3)} on {freedom(reading.df)}, "
             f"{p_value(column(reading.p))})."
         )
 

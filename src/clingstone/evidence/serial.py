@@ -8,19 +8,18 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import sparse
 
-from clingstone.covariance.kept import kept
 from clingstone.design.derived import sweep
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import amount, bounds, count, number, p_value, significant
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.autocorrelation import elapsed_curve, lag_curve
 from clingstone.evidence.calibrate import curve
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.nested import level_name
 from clingstone.evidence.read import Plain, arcsine, direction, normal_quantile, ratio, tail_p
-from clingstone.evidence.words import amount, between, correlation, counted, number, p_value
 from clingstone.maths.forms import Form, differences, graph, lagged
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.ratio import Law
 from clingstone.needs import Family, Limits, Needs, NotSupported
@@ -166,7 +165,7 @@ def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading
     pairs = len(series.pairs(1)[0])
     if pairs < 3:
         raise NotSupported(
-            f"{counted(pairs, 'pair')} of rows {step_words(series)}", "At least 3 would be needed."
+            f"{count(pairs, 'pair')} of rows {step_words(series)}", "At least 3 would be needed."
         )
     form, lag = form_of(fits.design, "differences"), form_of(fits.design, "lag:1")
     d = ratio(response, form)
@@ -193,19 +192,19 @@ def _caveats(design: Design, series: Series) -> tuple[str, ...]:
     out = []
     if series.gaps:
         out.append(
-            f"{counted(series.gaps, 'missing step')} inside series: only rows one step apart are compared"
+            f"Series lack {count(series.gaps, 'step')} inside, so only rows one step apart are compared."
         )
     if not design.known:
-        out.append("only residuals were given: the null law ignores the model's other columns")
+        out.append("Only residuals were given, so the null law leaves out the columns of the model.")
     return tuple(out)
 
 
 def _sentence(reading: Reading, about: About) -> str:
-    r = f"{correlation(column(reading.estimate))}{between(column(reading.low), column(reading.high))}"
+    r = f"{number(column(reading.estimate), 2)}{bounds(column(reading.low), column(reading.high))}"
     return (
-        f"Errors {about.words} correlate {r}, by residuals over {counted(reading.n_used, 'pair')} of rows "
-        f"({reading.statistic_name} {number(column(reading.statistic), 3)}, "
-        f"{p_value(column(reading.p), column(reading.log_p))})."
+        f"Errors {about.words} correlate {r}, by residuals over {count(reading.n_used, 'pair')} of rows "
+        f"({reading.statistic_name} {significant(column(reading.statistic), 3)}, "
+        f"{p_value(column(reading.p))})."
     )
 
 
@@ -329,7 +328,8 @@ class IrregularSerial(DurbinWatson):
 def _tie_caveats(series: Series) -> tuple[str, ...]:
     if not series.ties:
         return ()
-    return (f"{counted(series.ties, 'row')} at the time of another: pairs at the same time are left out",)
+    have = "has" if series.ties == 1 else "have"
+    return (f"{count(series.ties, 'row')} {have} the time of another; pairs at one time are left out.",)
 
 
 def _kind(series: Series) -> str:

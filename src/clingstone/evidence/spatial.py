@@ -11,6 +11,7 @@ from scipy import sparse, special
 from clingstone.design.derived import collapse, sweep, whole
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import bounds, number, p_value, percent, significant
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.nested import level_name
@@ -26,7 +27,6 @@ from clingstone.evidence.read import (
     tail_p,
 )
 from clingstone.evidence.serial import law_of
-from clingstone.evidence.words import between, correlation, number, p_value
 from clingstone.maths.basis import Basis
 from clingstone.maths.forms import Form, graph
 from clingstone.maths.once import Array, frozen, once
@@ -132,16 +132,16 @@ def _caveats(fits: Fits, nb: Neighbours) -> tuple[str, ...]:
     design, sites = fits.design, sites_of(fits.design)
     out, sizes = [], sites.part.sizes
     if sites.count < fits.run.limits.sites_verdict:
-        out.append(f"only {sites.count} sites: too few for a verdict")
+        out.append(f"There are only {sites.count} sites, too few for a verdict.")
     if design.n > sites.count:
-        words = "tested on site means, because several rows share a site"
+        words = "It is tested on site means, because several rows share a site"
         if sizes.max() > sizes.min():
             words += f" ({sizes.min()} to {sizes.max()} rows each, so the means are not equally precise)"
-        out.append(words)
+        out.append(f"{words}.")
     if nb.islands:
-        out.append(f"{nb.islands} of {sites.count} sites have no neighbour")
+        out.append(f"{nb.islands} of {sites.count} sites have no neighbour.")
     if not design.known:
-        out.append("only residuals were given: the moments ignore the model's other columns")
+        out.append("Only residuals were given, so the moments leave out the columns of the model.")
     return tuple(out)
 
 
@@ -207,11 +207,11 @@ class Moran(Plain):
         return residual_map(fits) if about.primary else None
 
     def sentence(self, reading: Reading, about: About) -> str:
-        size = f"{correlation(column(reading.estimate))}{between(column(reading.low), column(reading.high))}"
+        size = f"{number(column(reading.estimate), 2)}{bounds(column(reading.low), column(reading.high))}"
         return (
             f"Residuals of neighbouring sites ({about.words}) are alike to {size}, where 0 is no likeness "
-            f"and 1 the most that these sites allow (Moran's I {number(column(reading.statistic))}, "
-            f"{p_value(column(reading.p), column(reading.log_p))})."
+            f"and 1 the most that these sites allow (Moran's I {significant(column(reading.statistic))}, "
+            f"{p_value(column(reading.p))})."
         )
 
 
@@ -244,7 +244,7 @@ def _unequal(fits: Fits, response: Response, law: Law, p: Array) -> tuple[str, .
     robust = float(2 * special.ndtr(-abs(robust_z(response, law)[0])))
     if (robust < 0.05) == (float(p[0]) < 0.05):
         return ()
-    return (f"if the sites have unequal variances, {p_value(robust)}, which changes the picture",)
+    return (f"If the sites have unequal variances, {p_value(robust)}, which changes the picture.",)
 
 
 def _elsewhere(fits: Fits, about: About, given: frozenset[str]) -> tuple[str, ...]:
@@ -261,8 +261,8 @@ def _elsewhere(fits: Fits, about: About, given: frozenset[str]) -> tuple[str, ..
     p = float(exceedance(sizes.max(keepdims=True), drawn)[0])
     large = int(np.sum(sizes > special.ndtri(0.975)))
     return (
-        f"of {len(keys)} neighbourhoods, {large} show more likeness (or less) than 95 % of independent "
-        f"data would; {p_value(p)} for the largest of them",
+        f"Of {len(keys)} neighbourhoods, {large} show more likeness (or less) than 95\u00a0% of independent "
+        f"data would; for the largest of them {p_value(p)}.",
     )
 
 
@@ -314,9 +314,9 @@ class Geary(Plain):
         size = column(reading.estimate)
         words = "less" if size >= 0 else "more"
         return (
-            f"Squared differences between neighbouring sites ({about.words}) are {number(abs(100 * size))} % "
-            f"{words} than without dependence (Geary's C {number(column(reading.statistic))}, "
-            f"{p_value(column(reading.p), column(reading.log_p))})."
+            f"Squared differences between neighbouring sites ({about.words}) are {percent(abs(size))} "
+            f"{words} than without dependence (Geary's C {significant(column(reading.statistic))}, "
+            f"{p_value(column(reading.p))})."
         )
 
 

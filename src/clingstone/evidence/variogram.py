@@ -10,14 +10,13 @@ import numpy.typing as npt
 from scipy import sparse
 from scipy.spatial.distance import pdist
 
-from clingstone.covariance.kept import kept
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import bounds, number, p_value, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, degenerate, exceedance, floats, normal_quantile, simulated
 from clingstone.evidence.spatial import at_sites, site_design, sites_of
-from clingstone.evidence.words import between, correlation, number, p_value
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -125,7 +124,7 @@ class Variogram(Plain):
             p=exceedance(_departure(value, centre, spread), drawn),
             p_method=f"by {DRAWS} draws of independent residuals",
             estimate=np.clip(first, -1.0, 1.0),
-            estimate_name=f"correlation of sites {number(distance)}{' ' + unit if unit else ''} apart",
+            estimate_name=f"correlation of sites {significant(distance)}{' ' + unit if unit else ''} apart",
             low=np.clip(first - half, -1.0, 1.0),
             high=np.clip(first + half, -1.0, 1.0),
             n_used=int(bins.pairs.sum()),
@@ -151,11 +150,12 @@ class Variogram(Plain):
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
-        r = f"{correlation(column(reading.estimate))}{between(column(reading.low), column(reading.high))}"
+        r = f"{number(column(reading.estimate), 2)}{bounds(column(reading.low), column(reading.high))}"
         name = reading.estimate_name.removeprefix("correlation of ")
         return (
             f"Residuals of {name} correlate {r}; the variogram departs from flat by "
-            f"{number(column(reading.statistic))} standard deviations at most ({p_value(column(reading.p))})."
+            f"{significant(column(reading.statistic))} standard deviations at most "
+            f"({p_value(column(reading.p))})."
         )
 
 

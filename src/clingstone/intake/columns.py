@@ -10,8 +10,8 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.display import count, listed, quoted, rows
 from clingstone.intake.frames import Table
-from clingstone.intake.words import count, listed, quoted, rows
 from clingstone.needs import InputError, memory
 
 if TYPE_CHECKING:

@@ -10,7 +10,7 @@ from collections.abc import Collection, Sequence
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from clingstone.intake.words import count, listed, quoted, rows
+from clingstone.display import count, listed, quoted, rows
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -125,7 +125,7 @@ def unique_names(names: Sequence[str]) -> None:
         list(dict.fromkeys(n for n in names if names.count(n) > 1)) if len(set(names)) < len(names) else []
     )
     if twice:
-        places = [listed((str(i + 1) for i, n in enumerate(names) if n == t)) for t in twice]
+        places = [listed((str(i + 1) for i, n in enumerate(names) if n == t), most=6) for t in twice]
         shown = listed(f"‘{t}’ (columns {p})" for t, p in zip(twice, places, strict=True))
         raise InputError(f"column names occur more than once: {shown}", "Give every column its own name.")
 

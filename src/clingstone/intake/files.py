@@ -8,8 +8,8 @@ from collections.abc import Collection
 from pathlib import Path
 from typing import TYPE_CHECKING
 
+from clingstone.display import listed, quoted
 from clingstone.intake import delimited
-from clingstone.intake.words import listed, quoted
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -84,7 +84,7 @@ def _bytes(path: Path) -> bytes:
         parent = path.parent
         if not parent.is_dir():
             raise InputError(f"there is no folder {parent}", "Check the path of the file.") from None
-        from clingstone.intake.words import near
+        from clingstone.display import near
 
         close = near(path.name, [p.name for p in parent.iterdir() if p.is_file()])
         hint = f"In that folder there is {quoted(close)}." if close else "Check the path of the file."

@@ -9,12 +9,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.display import count, quoted, rows
 from clingstone.intake import formula as notation
 from clingstone.intake import model as modelling
 from clingstone.intake.columns import plain
 from clingstone.intake.frames import Table, table
 from clingstone.intake.model import Blocks, Kind, TermBlock
-from clingstone.intake.words import count, quoted, rows
 from clingstone.maths.once import Array
 from clingstone.needs import InputError
 

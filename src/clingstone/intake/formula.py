@@ -10,7 +10,7 @@ from typing import Any
 
 import numpy as np
 
-from clingstone.intake.words import listed, quoted
+from clingstone.display import listed, quoted
 from clingstone.needs import InputError
 
 TIMES = " × "
@@ -238,7 +238,7 @@ def same_term(a: str, b: str) -> bool:
 
 def unknown(what: str, name: str, choices: Sequence[str]) -> InputError:
     """An error for a name that is no term, factor, coefficient or contrast."""
-    from clingstone.intake.words import near
+    from clingstone.display import near
 
     close = near(name, choices)
     hint = f"Did you mean {listed((f'‘{c}’' for c in close), last='or')}?" if close else ""

@@ -10,8 +10,8 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.display import count, instead, listed, rows
 from clingstone.intake.delimited import unique_names
-from clingstone.intake.words import count, instead, listed, rows
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -202,7 +202,7 @@ def wide_note(names: Sequence[str], used: Sequence[str], response: Sequence[str]
         alike = [n for n in names if re.fullmatch(re.escape(stem.group(1)) + r"[_. ]?\d+", n)]
         if len(alike) > 2 and not any(n in used for n in alike if n != name):
             return (
-                f"{listed(alike)} look like one measure at several times, side by side. To use "
+                f"{listed(alike, most=6)} look like one measure at several times, side by side. To use "
                 "them all, put them "
                 "under each other: one row per time, with columns for the subject and the time.",
             )

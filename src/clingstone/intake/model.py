@@ -9,10 +9,10 @@ from typing import TYPE_CHECKING, Any, Literal
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.display import count, listed, quoted, rows
 from clingstone.intake import formula as notation
 from clingstone.intake.columns import mostly_numbers, text_error
 from clingstone.intake.formula import Parsed
-from clingstone.intake.words import count, listed, quoted, rows
 from clingstone.maths.basis import aliased
 from clingstone.maths.once import Array
 from clingstone.needs import InputError, memory

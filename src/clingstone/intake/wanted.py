@@ -10,9 +10,9 @@ from typing import Literal
 
 import numpy as np
 
+from clingstone.display import instead
 from clingstone.intake.formula import TIMES, known_term, same_term, unknown
 from clingstone.intake.model import Blocks, TermBlock
-from clingstone.intake.words import instead
 from clingstone.needs import InputError
 
 

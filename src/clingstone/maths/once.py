@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
+from collections.abc import Callable, Hashable
 from functools import wraps
 from typing import Any, TypeVar, cast
 
@@ -12,6 +12,7 @@ import numpy.typing as npt
 Array = npt.NDArray[np.float64]
 Codes = npt.NDArray[np.int32]
 F = TypeVar("F", bound=Callable[..., Any])
+T = TypeVar("T")
 
 
 def once(method: F) -> F:
@@ -24,7 +25,7 @@ def once(method: F) -> F:
     name = method.__qualname__
 
     @wraps(method)
-    def kept(self: Any, *args: Any, **kwargs: Any) -> Any:
+    def looked_up(self: Any, *args: Any, **kwargs: Any) -> Any:
         store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
         key = (
             name,
@@ -35,7 +36,21 @@ def once(method: F) -> F:
             store[key] = method(self, *args, **kwargs)
         return store[key]
 
-    return cast(F, kept)
+    return cast(F, looked_up)
+
+
+def kept(owner: Any, key: tuple[Hashable, ...], make: Callable[[], T]) -> T:
+    """``make()``, once per owner and key, in the same store.
+
+    For values of a frozen object that its own class cannot know: the store lives and dies with the
+    object, so nothing is held longer than the rows it was made from.
+    """
+    store: dict[Any, Any] = owner.__dict__.setdefault("_once", {})
+    place = ("kept", *key)
+    if place not in store:
+        store[place] = make()
+    found: T = store[place]
+    return found
 
 
 def frozen(array: npt.NDArray[Any]) -> npt.NDArray[Any]:

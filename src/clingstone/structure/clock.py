@@ -10,7 +10,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.intake.words import count, listed, quoted, rows
+from clingstone.display import count, listed, quoted, rows
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -186,7 +186,9 @@ def _objects(name: str, values: pd.Series, places: npt.NDArray[np.int64]) -> Clo
         )
         return Clock(clock.counts[codes], clock.units, _shown(values), clock.notes)
     odd = sorted({k.__name__ for k in kinds})
-    raise InputError(f"{name} mixes {listed(odd)}, which are not times of one kind", "Give numbers or dates.")
+    raise InputError(
+        f"{name} mixes {listed(odd, most=6)}, which are not times of one kind", "Give numbers or dates."
+    )
 
 
 # ---- text -------------------------------------------------------------------------------------

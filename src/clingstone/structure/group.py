@@ -11,7 +11,7 @@ from typing import Any, Literal
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.intake.words import count, listed, quoted
+from clingstone.display import count, listed, quoted
 from clingstone.maths.once import frozen
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError

@@ -9,7 +9,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import sparse
 
-from clingstone.intake.words import count, number
+from clingstone.display import count, significant
 from clingstone.needs import InputError, NotSupported
 from clingstone.structure.spatial import EARTH_RADIUS_KM, Sites
 
@@ -144,7 +144,7 @@ def _band(sites: Sites, along: float) -> Neighbours:
 
 
 def _within(along: float, unit: str) -> str:
-    return f"sites within {number(along)}{' ' + unit if unit else ''}"
+    return f"sites within {significant(along, 3)}{' ' + unit if unit else ''}"
 
 
 def _chosen_band(sites: Sites) -> Neighbours | None:

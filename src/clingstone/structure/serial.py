@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.intake.words import count, listed, rows
+from clingstone.display import count, listed, rows
 from clingstone.maths.once import Array, frozen, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError, NotSupported

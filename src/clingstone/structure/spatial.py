@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy.spatial import cKDTree
 
-from clingstone.intake.words import count, number, rows
+from clingstone.display import count, rows, significant
 from clingstone.maths.once import Array, frozen, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError
@@ -164,7 +164,7 @@ def span(sites: Sites) -> str:
     across = float(sites.along(np.asarray(sites.extent)))
     unit = sites.unit or "units of the coordinates"
     how = "along the great circle" if sites.kind == "lonlat" else "in the plane"
-    return f"The sites span {number(across)} {unit} {how}."
+    return f"The sites span {significant(across, 3)} {unit} {how}."
 
 
 def _decide(

@@ -128,7 +128,7 @@ def few_ticks(panel: Axes, which: str = "x", most: int = 5) -> None:
     ticks = axis.get_majorticklocs()
     step = float(abs(ticks[1] - ticks[0])) if len(ticks) > 1 else 1.0
     places = _places(step)
-    axis.set_major_formatter(FuncFormatter(lambda value, _: number(float(value), places)))
+    axis.set_major_formatter(FuncFormatter(lambda value, _: number(float(value), places, grouped=False)))
 
 
 def _places(step: float) -> int:

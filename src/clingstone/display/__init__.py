@@ -1,0 +1,85 @@
+"""One way of saying numbers, words and tables.
+
+Every number that a person reads, in the terminal, the report, the methods text or an error message,
+is formatted here, so that the same number looks the same everywhere. Nothing here rounds before a
+decision: formatting is the last step.
+"""
+
+from __future__ import annotations
+
+from clingstone.display.numbers import (
+    MINUS,
+    MISSING,
+    NBSP,
+    amount,
+    bounds,
+    decimals_for,
+    degrees,
+    freedom,
+    number,
+    p_figure,
+    p_value,
+    percent,
+    percent_bounds,
+    percent_span,
+    significant,
+    span,
+    superscript,
+    times,
+)
+from clingstone.display.table import Cell, Column, Table, align_decimals, cell, latex
+from clingstone.display.words import (
+    COLUMNS,
+    clean,
+    columns_of,
+    count,
+    instead,
+    listed,
+    near,
+    pad,
+    plural_of,
+    quoted,
+    rows,
+    sentence,
+    wrapped,
+)
+
+__all__ = [
+    "COLUMNS",
+    "MINUS",
+    "MISSING",
+    "NBSP",
+    "Cell",
+    "Column",
+    "Table",
+    "align_decimals",
+    "amount",
+    "bounds",
+    "cell",
+    "clean",
+    "columns_of",
+    "count",
+    "decimals_for",
+    "degrees",
+    "freedom",
+    "instead",
+    "latex",
+    "listed",
+    "near",
+    "number",
+    "p_figure",
+    "p_value",
+    "pad",
+    "percent",
+    "percent_bounds",
+    "percent_span",
+    "plural_of",
+    "quoted",
+    "rows",
+    "sentence",
+    "significant",
+    "span",
+    "superscript",
+    "times",
+    "wrapped",
+]
