@@ -179,8 +179,8 @@ def test_a_correlation_next_to_one_is_held_and_told():
 def test_conventions_show_bartlett_with_a_normal_quantile():
     X, tick, y = trend()
     shown = dict(explain(HAC, "", fits(design(X, tick=tick), y)))
-    assert len(shown) == 2
-    rows = next(v for k, v in shown.items() if "Bartlett" in k)
+    assert len(shown) == 5
+    rows = next(v for k, v in shown.items() if "lags, factor n/(n − p), normal" in k)
     e = y - X @ np.linalg.lstsq(X, y, rcond=None)[0]
     lags = int(4 * (80 / 100) ** (2 / 9))
     weight = np.maximum(0, 1 - np.abs(tick[:, None] - tick) / (lags + 1))

@@ -7,6 +7,7 @@ Bakirov & Székely (2006) for the law of a ratio with one positive weight.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -97,16 +98,25 @@ class Grid:
 
     def bartlett(self, block: Array, lags: int) -> Array:
         """(k, k) Σ_j (1 − |j|/(lags+1)) Γ_j of the columns of block, series by series. O(Nk²), any lags."""
-        L = lags + 1
+        out = np.zeros((block.shape[1], block.shape[1]))
+        for moving in self._moving(block, lags + 1):
+            out += moving.T @ moving / (lags + 1)
+        return out
+
+    def bartlett_squares(self, block: Array, lags: int) -> Array:
+        """(k,) the diagonal of ``bartlett`` alone."""
+        out = np.zeros(block.shape[1])
+        for moving in self._moving(block, lags + 1):
+            out += np.einsum("ij,ij->j", moving, moving) / (lags + 1)
+        return out
+
+    def _moving(self, block: Array, L: int) -> Iterator[Array]:
+        """Moving sums of L ticks over each zero-padded series: a Bartlett sum is their mean square."""
         U = self.spread(block)
-        out = np.zeros((U.shape[1], U.shape[1]))
         for start, N in zip(self.starts, self.lengths, strict=True):
-            # A Bartlett sum is the mean square of moving sums of L ticks over the zero-padded series.
             total = np.vstack([np.zeros(U.shape[1]), np.cumsum(U[start : start + N], axis=0)])
             index = np.arange(N + L - 1)
-            moving = total[np.minimum(index + 1, N)] - total[np.maximum(index + 1 - L, 0)]
-            out += moving.T @ moving / L
-        return out
+            yield total[np.minimum(index + 1, N)] - total[np.maximum(index + 1 - L, 0)]
 
 
 @dataclass(frozen=True, eq=False)

@@ -5,6 +5,7 @@ from __future__ import annotations
 from clingstone.needs import InputError
 from clingstone.remedies.gls import Gls
 from clingstone.remedies.longrun import Hac
+from clingstone.remedies.periods import PanelHac
 from clingstone.remedies.refit import explain, refit
 from clingstone.remedies.remedy import Remedy
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
@@ -16,6 +17,7 @@ REMEDIES: tuple[Remedy, ...] = (
     Gls("mixed-intercept", df="kenward-roger"),
     Gls("ar1"),
     Hac(),
+    PanelHac(),
     Gls("spatial-gls"),
     Gls("joint"),
 )

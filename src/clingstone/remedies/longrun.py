@@ -1,4 +1,4 @@
-"""Ordinary least squares with a long-run variance: the equal-weighted cosine estimator."""
+"""Ordinary least squares with a long-run variance, within series."""
 
 from __future__ import annotations
 
@@ -13,6 +13,7 @@ from clingstone.maths import reference
 from clingstone.maths.longrun import Grid, RatioLaw, joint_law
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, memory
+from clingstone.remedies.kernel import Bandwidth, KernelReady, sweep
 from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand
 from clingstone.remedies.sandwich import hotelling_joint
@@ -27,13 +28,12 @@ RHO_LIMIT = 0.999  # a working ρ nearer to one has no stationary law to refer t
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class LongRunReady(LinearReady):
-    """lags : of the Bartlett kernel, None for cosines. nu : df of the cosines, all series together.
+    """nu : df of the cosines, all series together.
 
     laws : per reported row, the exact law of t under AR(1) with ``rho``; empty when t is used.
     """
 
     grid: Grid
-    lags: int | None
     nu: float
     rho: float
     laws: tuple[RatioLaw, ...]
@@ -41,11 +41,8 @@ class LongRunReady(LinearReady):
     def block(self, response: Response, columns: tuple[int, ...]) -> Array:
         a = self.design.Q @ self.W[:, list(columns)]
         scores = a[:, :, None] * response.residual[:, None, :]
-        if self.lags is None:
-            L = np.stack([self.grid.cosine_sums(scores[:, i]) for i in range(len(columns))], axis=1)
-            return np.asarray(np.einsum("rsb,rtb->stb", L, L))
-        each = [self.grid.bartlett(scores[:, :, b], self.lags) for b in range(response.B)]
-        return self.design.n / self.design.m * np.stack(each, axis=2)
+        L = np.stack([self.grid.cosine_sums(scores[:, i]) for i in range(len(columns))], axis=1)
+        return np.asarray(np.einsum("rsb,rtb->stb", L, L))
 
     def variance(self, response: Response) -> Array:
         return np.stack([self.block(response, (j,))[0, 0] for j in range(len(self.names))])
@@ -60,8 +57,6 @@ class LongRunReady(LinearReady):
 
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         q = len(columns)
-        if self.lags is not None:
-            return wald / q, float(q), np.inf, reference.f_tail(wald / q, q, np.inf)
         if not self.laws:
             return hotelling_joint(wald, q, self.nu)
         eta, scale = self._joint_law(columns)
@@ -82,19 +77,10 @@ class LongRunReady(LinearReady):
         items: list[tuple[str, str]] = [("series", f"{len(self.grid.lengths)}"), ("steps", f"{self.grid.N}")]
         if missing := self.grid.N - self.design.n:
             items.append(("missing steps, entered as zero scores", f"{missing}"))
-        if self.lags is not None:
-            return Account(
-                estimator="ordinary least squares",
-                covariance="long-run variance of the scores, Bartlett kernel",
-                factor="n/(n − p)",
-                df_rule=self.rule,
-                reference="normal",
-                items=(*items, ("lags", f"{self.lags}")),
-                source="newey-west-1987",
-            )
         items.append(("cosines ν = ⌊0.4 N^⅔⌋", f"{int(self.grid.counts.sum())}"))
         if self.laws:
             items.append(("ρ of the working AR(1) in the law of t", f"{self.rho:.3f}"))
+        items += sweep(_kernel(self.design, self.grid, self.names, self.W), fits.response)
         return Account(
             estimator="ordinary least squares",
             covariance="long-run variance of the scores, equal-weighted cosines",
@@ -113,10 +99,15 @@ class Hac:
     The mean of the first ν squared cosine sums of the scores (Lazarus, Lewis, Stock & Watson 2018). Up to
     10,000 rows the t statistic is referred to its own law under normal errors with the AR(1) correlation
     fitted to the data, a ratio of quadratic forms of rank ν + 1; above, to t with ν df.
+
+    kernel : cosines, or Bartlett (Newey & West 1987) with lags by ``bandwidth``. law : "exact" and "t" go
+    with cosines, "fixed-b" (Kiefer & Vogelsang 2005) and "normal" with Bartlett.
     """
 
     kernel: Literal["cosine", "bartlett"] = "cosine"
-    law: Literal["exact", "t", "normal"] = "exact"
+    law: Literal["exact", "t", "fixed-b", "normal"] = "exact"
+    bandwidth: Bandwidth = "textbook"
+    corrected: bool = True
     at: str = ""
     limits: Limits = field(default_factory=Limits)
     id: ClassVar[str] = "hac"
@@ -134,40 +125,38 @@ class Hac:
 
     def working(self, fits: Fits) -> ErrorModel | None:
         """The AR(1) of the residuals, or None where these data cannot carry one."""
-        if "serial" not in fits.components:
+        if "serial" not in fits.components or self.kernel == "bartlett":
             return None
         return fits[{"serial"}]
 
-    def prepare(self, design: Design, working: ErrorModel | None) -> LongRunReady:
+    def prepare(self, design: Design, working: ErrorModel | None) -> LongRunReady | KernelReady:
         positive_m(design)
-        serial = design.serial
-        grid = self._grid(serial)
+        grid = self._grid(design.serial)
         names, W = reported(design)
-        rho, notes = _working_rho(working)
+        notes: tuple[str, ...] = ()
         if len(grid.lengths) > 1:
-            notes += (
+            notes = (
                 f"The {len(grid.lengths)} series enter as blocks; "
                 "what they differ in as a whole is not covered.",
             )
+        if self.kernel == "bartlett":
+            fixed = self.law == "fixed-b"
+            return _kernel(design, grid, names, W, self.bandwidth, fixed, self.corrected, notes)
+        rho, said = _working_rho(working)
         laws: tuple[RatioLaw, ...] = ()
-        if self.kernel == "cosine" and self.law == "exact" and design.n <= EXACT_ROWS:
+        if self.law == "exact" and design.n <= EXACT_ROWS:
             laws = _exact_laws(design, grid, W, rho)
-            df = np.array([law.df for law in laws])
-            rule = "exact cosine law"
-        elif self.law == "normal" or self.kernel == "bartlett":
-            df, rule = np.full(len(names), np.inf), "normal quantile"
+            df, rule = np.array([law.df for law in laws]), "exact cosine law"
         else:
             df, rule = np.full(len(names), _block_df(grid)), "ν cosines"
-        lags = None if self.kernel == "cosine" else int(4 * (grid.N / 100) ** (2 / 9))
         return LongRunReady(
             design,
             names,
             W,
             df[:, None],
             rule,
-            notes=notes,
+            notes=said + notes,
             grid=grid,
-            lags=lags,
             nu=_block_df(grid),
             rho=rho,
             laws=laws,
@@ -197,13 +186,47 @@ class Hac:
         return Grid.of(serial.part.codes, serial.tick)
 
     def conventions(self) -> tuple[tuple[str, Hac], ...]:
+        bartlett = replace(self, kernel="bartlett", law="normal")
         return (
             ("the same cosines with t and ν df", replace(self, law="t")),
+            ("Bartlett kernel, ⌊4(n/100)^(2/9)⌋ lags, factor n/(n − p), normal quantile", bartlett),
             (
-                "Bartlett kernel, ⌊4(n/100)^(2/9)⌋ lags, factor n/(n − p), normal quantile",
-                replace(self, kernel="bartlett", law="normal"),
+                "Bartlett kernel, lags by the rule of Newey and West, no factor, normal quantile",
+                replace(bartlett, bandwidth="newey-west", corrected=False),
+            ),
+            (
+                "Bartlett kernel, lags by the rule of Andrews, factor n/(n − p), normal quantile",
+                replace(bartlett, bandwidth="andrews"),
+            ),
+            (
+                "Bartlett kernel, 1.3√n lags, factor n/(n − p), fixed-b critical values",
+                replace(bartlett, bandwidth="wide", law="fixed-b"),
             ),
         )
+
+
+def _kernel(
+    design: Design,
+    grid: Grid,
+    names: tuple[str, ...],
+    W: Array,
+    lags: Bandwidth = "textbook",
+    fixed: bool = False,
+    corrected: bool = True,
+    notes: tuple[str, ...] = (),
+) -> KernelReady:
+    return KernelReady.made(
+        design,
+        names,
+        W,
+        grid,
+        notes=notes,
+        lags=lags,
+        fixed=fixed,
+        corrected=corrected,
+        what="long-run variance of the scores, Bartlett kernel",
+        source="newey-west-1987",
+    )
 
 
 def _block_df(grid: Grid) -> float:
