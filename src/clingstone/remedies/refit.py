@@ -62,8 +62,8 @@ def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
         intervals=_intervals(remedy, ready, found, fits),
         terms=_terms(remedy, found),
         account=ready.account(fits),
-        coefficients=design.names,
-        estimate=tuple(float(v) for v in found.estimate[: design.p, 0]),
+        coefficients=_coefficients(found, design),
+        estimate=tuple(float(v) for v in found.estimate[: len(_coefficients(found, design)), 0]),
         covariance=None if found.covariance is None else tuple(map(_floats, found.covariance)),
         confidence=fits.run.settings.confidence,
         notes=notes + _unjoined(ready, found, design),
@@ -93,9 +93,18 @@ def _stop_if_perfect(fits: Fits) -> None:
         )
 
 
+def _coefficients(found: Estimates, design: Design) -> tuple[str, ...]:
+    """Names of the rows that ``covariance`` is of."""
+    if not found.names or found.covariance is None:
+        return design.names
+    return found.names[: len(found.covariance)]
+
+
 def _intervals(remedy: Remedy, ready: Ready, found: Estimates, fits: Fits) -> tuple[Interval, ...]:
     names, weights = rows(fits.design)
     ordinary = np.sqrt(fits.response.s2[0]) * np.linalg.norm(fits.design.basis.contrast(weights), axis=0)
+    if found.names and found.ordinary is not None:
+        names, ordinary = found.names, found.ordinary[:, 0]
     df = np.broadcast_to(found.df, found.se.shape)[:, 0]
     out = []
     for j, name in enumerate(names):
@@ -141,7 +150,8 @@ def _unjoined(ready: Ready, found: Estimates, design: Design) -> tuple[str, ...]
         f"There is no joint test of {term.name}: the covariance of its {len(term.columns)} coefficients "
         "leaves it no degrees of freedom."
         for term in multi(design)
-        if term.name not in found.joint
+        if not any(name == term.name or name.startswith(f"{term.name} [") for name in found.joint)
+        and not all(design.names[j] in ready.unusable for j in term.columns)
     )
 
 

@@ -41,6 +41,8 @@ class Estimates:
     boundary: Flags | None = None  # (B,)
     converged: Flags | None = None  # (B,)
     notes: tuple[str, ...] = ()  # what only y could tell, one sentence each
+    names: tuple[str, ...] = ()  # of the k rows, where they are not those of the design
+    ordinary: Array | None = None  # (k, B) ordinary standard errors beside such rows
 
 
 @dataclass(frozen=True)
