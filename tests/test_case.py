@@ -70,7 +70,7 @@ def test_sleepstudy() -> None:
     assert summary.serial is not None
     assert (summary.serial.count, summary.serial.spacing, summary.serial.unit) == (18, "regular", "day")
     assert summary.varies == {"constant": "all rows", "Days": "row"}
-    assert repr(case) == "Case(data: Reaction ~ Days; 180 rows, 18 Subject, 18 series by Days)"
+    assert repr(case) == "<Case data: Reaction ~ Days; 180 rows, 18 Subjects and 18 series in Days>"
 
 
 def test_columbus_as_a_geographic_frame() -> None:

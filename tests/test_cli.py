@@ -245,11 +245,21 @@ def test_a_taken_folder_stops_before_the_work(verbs: Verbs, run: Run, tmp_path: 
     (tmp_path / "out" / "thesis.tex").touch()
     status, out, err = run("examine a.csv --out out")
     assert (status, out) == (2, "")
-    assert "already there and not empty" in err
-    assert "--overwrite" in err
+    assert "holds files that were not written here: thesis.tex" in err
+    assert run("examine a.csv --out out --overwrite")[0] == 2  # what is not ours is never replaced
     assert len(verbs.calls) == 1
+
+
+def test_an_earlier_run_is_replaced_only_when_asked(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    (tmp_path / "out").mkdir()
+    (tmp_path / "out" / "results.json").touch()
+    status, _, err = run("examine a.csv --out out")
+    assert status == 2
+    assert "already holds an earlier report" in err
+    assert "--overwrite" in err
+    assert verbs.calls == []
     assert run("examine a.csv --out out --overwrite")[0] == 0
-    assert verbs.saved[-1] == (Path("out"), True)
+    assert verbs.saved == [(Path("out"), True)]
 
 
 def test_without_out_an_earlier_run_is_kept(verbs: Verbs, run: Run, tmp_path: Path) -> None:
@@ -347,8 +357,8 @@ def test_replay_says_what_it_found_and_by_status_whether_it_agrees(verbs: Verbs,
 def test_replay_looks_here_beside_the_folder_and_among_the_demonstrations(
     verbs: Verbs, run: Run, tmp_path: Path
 ) -> None:
-    def asked(name: str) -> Path | None:
-        case = plain.example(CaseSummary, origin={"file": name})
+    def asked(name: str, given: str = "") -> Path | None:
+        case = plain.example(CaseSummary, origin={"file": name, "path": given})
         (tmp_path / "kept" / "saved").mkdir(parents=True, exist_ok=True)
         (tmp_path / "kept" / "saved" / "results.json").write_text(to_json(plain.results(case=case)))
         run("replay kept/saved")
@@ -361,6 +371,10 @@ def test_replay_looks_here_beside_the_folder_and_among_the_demonstrations(
     (tmp_path / "mine.csv").touch()
     assert asked("mine.csv") == Path("mine.csv")
     assert asked("wells.csv") == DEMOS["wells"].path
+    (tmp_path / "data").mkdir()
+    (tmp_path / "data" / "mine.csv").touch()
+    assert asked("mine.csv", "data/mine.csv") == Path("data/mine.csv")
+    assert asked("mine.csv", "gone/mine.csv") == Path("mine.csv")
 
 
 def test_version(run: Run) -> None:

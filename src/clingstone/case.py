@@ -13,7 +13,8 @@ import numpy.typing as npt
 from clingstone.design import declare
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.display import count, instead
+from clingstone.display import Column, count, instead, listed
+from clingstone.display import Table as Shown
 from clingstone.intake import columns, files, fitted, formula, frames, model
 from clingstone.intake.columns import Columns, Role
 from clingstone.intake.frames import Table
@@ -109,8 +110,8 @@ class Case:
 
     response : B = 1. kept : (n,) position in the user's table of each row of the design, in the
     design's own order (by series and time where time is declared). dropped : rows left out, by
-    reason. notes : what a reader should know of the reading, one sentence each. origin : file,
-    encoding, separator, decimal mark, fingerprint.
+    reason. notes : what a reader should know of the reading, one sentence each. origin : file, path
+    as given, encoding, separator, decimal mark, fingerprint.
     """
 
     response: Response
@@ -144,6 +145,7 @@ class Case:
             return cls._of_fit(fitted.recover(data), settings, "data")
         if isinstance(data, (str, Path)):
             frame, origin, notes = files.read(data)
+            origin = {**origin, "path": str(data)}
             table = frames.table(frame)
             return cls._of_table(replace(table, notes=(*notes, *table.notes)), settings, origin)
         return cls._of_table(frames.table(data), settings, {})
@@ -303,16 +305,34 @@ class Case:
         )
 
     def __repr__(self) -> str:
+        what = self.formula or f"residuals {self.response_name}"
+        return f"<Case {self.name}: {what}; {listed(self._parts())}>"
+
+    def _parts(self) -> list[str]:
+        """Rows, groups, series and sites in words."""
         design = self.design
         parts = [count(design.n, "row")]
         if design.group is not None:
-            parts += [f"{level.count:,} {level.key}" for level in design.group.levels]
+            parts += [count(level.count, level.key.split("/")[-1]) for level in design.group.levels]
         if design.serial is not None:
-            parts.append(f"{count(design.serial.part.count, 'series', 'series')} by {design.serial.name}")
+            parts.append(f"{count(design.serial.part.count, 'series')} in {design.serial.name}")
         if design.spatial is not None:
             parts.append(count(design.spatial.count, "site"))
-        what = self.formula or f"residuals {self.response_name}"
-        return f"Case({self.name}: {what}; {', '.join(parts)})"
+        return parts
+
+    def table(self) -> Shown:
+        """What was read, dropped and declared, for a person."""
+        pairs = {"response": self.response_name, "model": self.formula or "not known: residuals alone"}
+        pairs["rows"] = listed(self._parts())
+        if self.dropped:
+            pairs["left out"] = listed(f"{count(n, 'row')}: {why}" for why, n in self.dropped.items())
+        if self.notes:
+            pairs["noticed"] = " ".join(self.notes)
+        columns = (Column("what", "what"), Column("value", "value"))
+        return Shown.of(self.name, columns, pairs.items())
+
+    def _repr_html_(self) -> str:
+        return self.table().to_html()
 
 
 def _settings(options: Mapping[str, Any]) -> Settings:

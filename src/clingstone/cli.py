@@ -140,16 +140,18 @@ def replay(
 
 
 def _data_of(folder: Path) -> Path | None:
-    """The file of a saved run where it can be looked for: here, beside the folder, among the demonstrations.
-
-    Only its name is kept in results.json; that it is the same data is seen by the fingerprint.
+    """The file of a saved run where it can be looked for: at its path as given, then by its name here,
+    beside the folder, among the demonstrations. That it is the same data is seen by the fingerprint.
     """
     from clingstone.results import read_tree
 
     saved = folder / "results.json"
     if not saved.is_file():
         return None  # the verb says so
-    name = read_tree(saved.read_text(encoding="utf-8"))["case"]["origin"].get("file", "")
+    origin = read_tree(saved.read_text(encoding="utf-8"))["case"]["origin"]
+    given, name = origin.get("path", ""), origin.get("file", "")
+    if given and Path(given).is_file():
+        return Path(given)
     places = (Path(), folder.absolute().parent, data_folder())
     return next((place / name for place in places if name and (place / name).is_file()), None)
 
@@ -159,8 +161,10 @@ def _run(
 ) -> None:
     """Examine, save, print. With --json a folder is written only when --out names one."""
     folder = out if out is not None else None if json else _unused(f"{data.stem}-clingstone", overwrite)
-    if folder is not None and not overwrite:
-        _free(folder)
+    if folder is not None:
+        from clingstone.writeup.save import check
+
+        check(folder, overwrite)  # before the work, not after it
     from clingstone.examination import examine
 
     with _progress(quiet) as progress:
@@ -180,15 +184,6 @@ def _unused(name: str, overwrite: bool) -> Path:
     if overwrite or not Path(name).exists():
         return Path(name)
     return next(path for path in (Path(f"{name}-{k}") for k in count(2)) if not path.exists())
-
-
-def _free(folder: Path) -> None:
-    """Stop before the work, not after it, when the folder is taken."""
-    if folder.exists() and (not folder.is_dir() or any(folder.iterdir())):
-        raise InputError(
-            f"{folder} is already there and not empty",
-            "Give another folder with --out, or --overwrite to replace an earlier run.",
-        )
 
 
 def _printed(examination: Examination, folder: Path | None) -> str:

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import platform
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
@@ -15,6 +16,8 @@ from clingstone.advice.facts import facts as gather_facts
 from clingstone.case import Case
 from clingstone.covariance.fits import Fits
 from clingstone.design.derived import only, onto
+from clingstone.design.design import Contrast
+from clingstone.display import amount, instead
 from clingstone.evidence.finding import Evidence
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import Ledger, weigh
@@ -22,7 +25,7 @@ from clingstone.needs import InputError, NotSupported
 from clingstone.remedies import explain as explain_at
 from clingstone.remedies import refit as refit_at
 from clingstone.remedies import remedy as remedy_of
-from clingstone.remedies.remedy import Interval, Refit
+from clingstone.remedies.remedy import Convention, Interval, Refit
 from clingstone.results import SCHEMA, Reference, Results, compare, from_json
 from clingstone.run import Alternative, Missing, Progress, Run, Settings, Ties, Weights, one_thread
 
@@ -81,8 +84,18 @@ def examine(
     NotSupported : these data cannot carry what was asked.
     """
     settings = settings_of({k: v for k, v in locals().items() if k not in ("data", "progress")})
+    _no_rehearsal(settings)
     with one_thread():
         return _steps(Case.of(data, settings), Run(settings, report=progress))
+
+
+def _no_rehearsal(settings: Settings) -> None:
+    """Stop before the data are read when what is asked cannot be done."""
+    if isinstance(settings.rehearsal, int):
+        raise NotSupported(
+            "rehearsals are not part of this version",
+            "Leave rehearsal at 'auto'; the advice then rests on its rules.",
+        )
 
 
 def settings_of(arguments: Mapping[str, Any]) -> Settings:
@@ -102,11 +115,6 @@ def settings_of(arguments: Mapping[str, Any]) -> Settings:
 
 def _steps(case: Case, run: Run) -> Examination:
     settings = run.settings
-    if isinstance(settings.rehearsal, int):
-        raise NotSupported(
-            "rehearsals are not part of this version",
-            "Leave rehearsal at 'auto'; the advice then rests on its rules.",
-        )
     with run.progress("examining", 5) as advance:
         fits = Fits(case.response, run)
         evidence = gather(fits)
@@ -118,12 +126,26 @@ def _steps(case: Case, run: Run) -> Examination:
         refits = shortlist.refit(fits)
         advance(1)
         advice = settle(shortlist, facts, refits, None)
+        refits = _explained(fits, advice, refits)
         if settings.unadjusted:
             refits = (*refits, *_alone(fits, advice, refits))
         advance(1)
         results = _write(case, fits, evidence, ledger, advice, refits)
         advance(1)
     return Examination(case, fits, results)
+
+
+def _explained(fits: Fits, advice: Advice, refits: tuple[Refit, ...]) -> tuple[Refit, ...]:
+    """The ordinary and the advised refit with their intervals under the other common conventions."""
+
+    def explained(r: Refit) -> Refit:
+        if r.remedy == REPAIRED or (
+            r.remedy != "ordinary" and (r.remedy, r.at) != (advice.remedy, advice.at)
+        ):
+            return r
+        return replace(r, conventions=explain_at(remedy_of(r.remedy), r.at, fits))
+
+    return tuple(explained(r) for r in refits)
 
 
 def _alone(fits: Fits, advice: Advice, refits: tuple[Refit, ...]) -> tuple[Refit, ...]:
@@ -146,6 +168,7 @@ def _alone(fits: Fits, advice: Advice, refits: tuple[Refit, ...]) -> tuple[Refit
             coefficients=(),
             estimate=(),
             covariance=None,
+            conventions=(),
         ),
     )
 
@@ -242,20 +265,54 @@ class Examination:
     def references(self) -> tuple[Reference, ...]:
         return self.results.references
 
-    def explain(self, remedy: str, at: str | None = None) -> tuple[tuple[str, tuple[Interval, ...]], ...]:
-        """What the numbers of one remedy become under the other common conventions."""
+    def refit(self, remedy: str | None = None, at: str | None = None) -> Refit:
+        """The refit of a remedy (at a level), by default the advised one.
+
+        Raises InputError when there is none.
+        """
+        if remedy is None:
+            remedy, at = self.advice.remedy, self.advice.at
         found = next((r for r in self.refits if r.remedy == remedy and at in (None, r.at)), None)
         if found is None:
-            have = ", ".join(dict.fromkeys(r.remedy for r in self.refits))
+            have = ", ".join(dict.fromkeys(r.remedy for r in self.refits)) or "none: nothing was refitted"
             raise InputError(f"there is no refit {remedy!r} here", f"Choose one of {have}.")
-        with one_thread():
-            return explain_at(remedy_of(found.remedy), found.at, self.fits)
+        return found
 
-    def save(self, folder: str | Path, *, overwrite: bool = False) -> Path:
-        """Write report.html, methods.md, tables, figures and results.json into a folder."""
+    def explain(self, remedy: str | None = None, at: str | None = None) -> tuple[Convention, ...]:
+        """What the numbers of one remedy (the advised one) become under the other common conventions."""
+        found = self.refit(remedy, at)
+        with one_thread():
+            return found.conventions or explain_at(remedy_of(found.remedy), found.at, self.fits)
+
+    def contrast(
+        self, weights: Mapping[str, float], remedy: str | None = None, at: str | None = None
+    ) -> Interval:
+        """A linear combination of coefficients under one remedy (the advised one).
+
+        weights : coefficient → weight, such as ``{"arm: visits": 1, "age": 10}``. The remedy is run
+        again with that combination among its rows, so that its standard error and degrees of freedom
+        are its own, and not put together from those of the coefficients.
+
+        Raises InputError for an unknown coefficient or remedy, NotSupported when these data cannot
+        carry the remedy or it cannot serve this combination.
+        """
+        found = self.refit(remedy, at)
+        design = self.case.design
+        name = " + ".join(f"{amount(w)} × {c}" for c, w in weights.items())
+        row = Contrast(name, _weights(design.names, weights))
+        derived = onto(self.case.response, replace(design, contrasts=(row,)))
+        with one_thread():
+            return refit_at(remedy_of(found.remedy), found.at, Fits(derived, self.fits.run)).get(name)
+
+    def save(self, folder: str | Path, *, overwrite: bool = False, progress: Progress | None = None) -> Path:
+        """Write report.html, methods.md, tables, figures and results.json into a folder.
+
+        progress : called with (label, done, total); the one given to ``examine`` unless another is.
+        Raises InputError when the folder is taken or cannot be written.
+        """
         from clingstone.writeup.save import save
 
-        return save(self.results, Path(folder), overwrite=overwrite)
+        return save(self.results, folder, overwrite=overwrite, progress=progress or self.fits.run.report)
 
     def report(self) -> str:
         """The report as one HTML page."""
@@ -276,6 +333,18 @@ class Examination:
         from clingstone.writeup.report import fragment
 
         return fragment(self.results)
+
+
+def _weights(names: tuple[str, ...], wanted: Mapping[str, float]) -> tuple[float, ...]:
+    """(p,) weights of a combination, in the order of the coefficients."""
+    for name, weight in wanted.items():
+        if name not in names:
+            raise InputError(f"the model has no coefficient ‘{name}’", instead(name, names))
+        if not math.isfinite(weight):
+            raise InputError(f"the weight of ‘{name}’ is {weight}", "Give a finite number.")
+    if not any(wanted.values()):
+        raise InputError("a contrast of weights 0 says nothing", "Give a weight other than 0.")
+    return tuple(float(wanted.get(name, 0.0)) for name in names)
 
 
 def refit(case: Case, remedy: str, at: str = "") -> Refit:
@@ -305,7 +374,7 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
         raise InputError(f"{path} is not there", "Give a folder that clingstone saved.")
     saved = from_json(path.read_text(encoding="utf-8"))
     origin = saved.case.origin
-    source = data if data is not None else origin.get("file")
+    source = data if data is not None else _where(origin)
     if source is None:
         raise InputError(
             "this examination was made from a table in memory, so there is no file to read again",
@@ -332,6 +401,12 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
         words.append("versions differ: " + "; ".join(moved))
     words.append("every number agrees" if not lines else f"{len(lines)} differ:")
     return not lines, (*words, *lines)
+
+
+def _where(origin: Mapping[str, str]) -> str | None:
+    """The path as given, else the name alone, whichever leads to a file; None for a table in memory."""
+    known = [origin[key] for key in ("path", "file") if origin.get(key)]
+    return next((p for p in known if Path(p).expanduser().is_file()), known[0] if known else None)
 
 
 def _tuples(value: Any) -> Any:

@@ -234,11 +234,12 @@ def compare(a: Results, b: Results, tolerance: float = 1e-8) -> tuple[str, ...]:
 
     Words, verdicts and counts must be equal. Numbers agree to ``tolerance`` relative to the
     larger; inside a list of numbers (a curve, a covariance) also to 1e-14 of the largest beside
-    them, because what is zero in theory is rounding noise in practice. ``versions`` and the
-    version of clingstone itself are not compared.
+    them, because what is zero in theory is rounding noise in practice. ``versions``, the
+    version of clingstone itself and the path of the data are not compared.
     """
     first, second = (json.loads(to_json(each)) for each in (a, b))
     for tree in (first, second):
+        tree["case"]["origin"].pop("path", None)  # the same data may have been moved
         for key in ("clingstone", "versions", "intervals", "terms"):  # tables: compared inside the refits
             tree.pop(key)
     return tuple(_differences("", first, second, tolerance, 0.0))
@@ -271,7 +272,7 @@ def _in_lists(path: str, a: list[Any], b: list[Any], tolerance: float) -> Iterat
 def _label(left: Any, right: Any, index: int) -> str:
     """What a reader calls this entry: its test, remedy, term or key, when both sides agree on it."""
     if isinstance(left, dict) and isinstance(right, dict):
-        names = ("test", "remedy", "at", "about", "term", "key", "name")
+        names = ("test", "remedy", "at", "about", "term", "key", "name", "words")
         shared = [left[n] for n in names if left.get(n) and left.get(n) == right.get(n)]
         if shared:
             return ", ".join(dict.fromkeys(map(str, shared)))

@@ -4,12 +4,13 @@ from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, fields
-from typing import TYPE_CHECKING, Literal, Protocol
+from typing import TYPE_CHECKING, Literal, Protocol, get_args
 
 import numpy as np
 import numpy.typing as npt
 
 from clingstone.design.design import Design
+from clingstone.display import Column, Table, count
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Needs
 
@@ -19,6 +20,7 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 Verdict = Literal["present", "unclear", "not detected", "not applicable"]
+VERDICT_ORDER: tuple[Verdict, ...] = get_args(Verdict)
 
 
 @dataclass(frozen=True)
@@ -126,7 +128,7 @@ class Finding:
     rows: tuple[int, ...] = ()
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Evidence:
     """All findings, in the order in which the tests are registered."""
 
@@ -146,6 +148,24 @@ class Evidence:
         return next(
             (f for f in self.findings if f.test == test and (about is None or f.about == about)), None
         )
+
+    def __repr__(self) -> str:
+        counts = {v: sum(f.verdict == v for f in self.findings) for v in VERDICT_ORDER}
+        told = ", ".join(f"{n} {verdict}" for verdict, n in counts.items() if n)
+        return f"<Evidence: {count(len(self.findings), 'finding')}{f' ({told})' if told else ''}>"
+
+    def table(self) -> Table:
+        """What every primary test says, and every other that saw something, for a person."""
+        shown = [f for f in self.findings if f.primary or f.verdict == "present"]
+        columns = (
+            Column("structure", "structure"),
+            Column("verdict", "verdict"),
+            Column("sentence", "finding"),
+        )
+        return Table.of("Evidence", columns, [[f.structure, f.verdict, f.sentence] for f in shown])
+
+    def _repr_html_(self) -> str:
+        return self.table().to_html()
 
     def to_frame(self) -> pd.DataFrame:
         """One row per finding, without the curves."""

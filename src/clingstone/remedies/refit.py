@@ -10,7 +10,17 @@ import numpy as np
 from clingstone.design.design import Design
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported
-from clingstone.remedies.remedy import Estimates, Interval, JointTest, Ready, Refit, Remedy, multi, rows
+from clingstone.remedies.remedy import (
+    Convention,
+    Estimates,
+    Interval,
+    JointTest,
+    Ready,
+    Refit,
+    Remedy,
+    multi,
+    rows,
+)
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -72,12 +82,12 @@ def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
     )
 
 
-def explain(remedy: Remedy, level: str, fits: Fits) -> tuple[tuple[str, tuple[Interval, ...]], ...]:
+def explain(remedy: Remedy, level: str, fits: Fits) -> tuple[Convention, ...]:
     """What every interval becomes under the other common conventions, those refused left out."""
     out = []
     for words, other in remedy.conventions():
         try:
-            out.append((words, refit(other, level or remedy.at, fits).intervals))
+            out.append(Convention(words, refit(other, level or remedy.at, fits).intervals))
         except NotSupported:
             continue  # a convention that these data cannot carry has no number to compare with
     return tuple(out)

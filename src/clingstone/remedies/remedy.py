@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+import math
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, Literal, Protocol
 
@@ -10,8 +11,22 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.design.design import Design, Term
+from clingstone.display import (
+    Cell,
+    Column,
+    Table,
+    bounds,
+    decimals_for,
+    degrees,
+    freedom,
+    instead,
+    number,
+    p_figure,
+    p_value,
+    span,
+)
 from clingstone.maths.once import Array
-from clingstone.needs import Family, Limits, Needs, Refusal
+from clingstone.needs import Family, InputError, Limits, Needs, Refusal
 
 if TYPE_CHECKING:
     import pandas as pd
@@ -56,6 +71,17 @@ class Account:
     reference: str  # "t", "exact", …
     items: tuple[tuple[str, str], ...] = ()  # further (name, value): kernel, bandwidth, λ, …
     source: str = ""  # keys of references, comma separated
+
+    def pairs(self) -> tuple[tuple[str, str], ...]:
+        """Every ingredient as (name, value), in reading order."""
+        return (
+            ("estimator", self.estimator),
+            ("covariance", self.covariance),
+            ("small-sample factor", self.factor),
+            ("degrees of freedom", self.df_rule),
+            ("reference distribution", self.reference),
+            *self.items,
+        )
 
 
 class Ready(Protocol):
@@ -161,11 +187,27 @@ class JointTest:
 
 
 @dataclass(frozen=True)
+class Convention:
+    """What every interval of a refit becomes under another common convention, in words and rows."""
+
+    words: str
+    intervals: tuple[Interval, ...]
+
+    def __iter__(self) -> Iterator[str | tuple[Interval, ...]]:
+        """So that ``dict(conventions)`` leads from words to rows."""
+        return iter((self.words, self.intervals))
+
+    def get(self, term: str) -> Interval | None:
+        return next((row for row in self.intervals if row.term == term), None)
+
+
+@dataclass(frozen=True)
 class Refit:
     """One remedy on the user's data; plain numbers and words.
 
     intervals : a row per coefficient, then per named contrast or mean. covariance : (p, p) of the
-    coefficients as nested tuples, None where the remedy has none.
+    coefficients as nested tuples, None where the remedy has none. conventions : the same remedy under
+    the other common settings, where they were asked for.
     """
 
     remedy: str
@@ -183,14 +225,98 @@ class Refit:
     notes: tuple[str, ...] = ()
     boundary: bool = False
     converged: bool = True
+    conventions: tuple[Convention, ...] = ()
 
     def get(self, term: str) -> Interval:
-        return next(row for row in self.intervals if row.term == term)
+        """The row of a coefficient, contrast or mean. Raises InputError with the near names."""
+        found = next((row for row in self.intervals if row.term == term), None)
+        if found is None:
+            names = [row.term for row in self.intervals]
+            raise InputError(f"there is no row ‘{term}’ in this refit", instead(term, names))
+        return found
+
+    def contrast(self, name: str) -> Interval:
+        """The row of a contrast that was named with ``contrasts=`` before the fit.
+
+        For a new combination ask :meth:`clingstone.Examination.contrast`, which refits: degrees of
+        freedom belong to the combination and cannot be read off those of the coefficients.
+        """
+        if name in self.coefficients:
+            raise InputError(f"‘{name}’ is a coefficient, not a contrast", "Ask get(name) for its row.")
+        return self.get(name)
+
+    def means(self, factor: str) -> tuple[Interval, ...]:
+        """The rows of the means of a factor ("arm", or "arm:visit" for cells) asked for with ``means=``."""
+        parts = factor.replace(" ", "").split(":")
+        found = tuple(row for row in self.intervals if _factors(row.term) == parts)
+        if not found:
+            raise InputError(f"no means of ‘{factor}’ were asked for", f"Fit again with means=[{factor!r}].")
+        return found
+
+    def explain(self, term: str) -> str:
+        """How the interval of a row was reached, and what it becomes under other conventions, as text."""
+        row = self.get(term)
+        lines = [f"{term}: {_said(row)}"]
+        lines += [f"  {name}: {value}" for name, value in self.account.pairs()]
+        for other in self.conventions:
+            changed = other.get(term)
+            if changed is not None:
+                lines.append(f"  {other.words}: {_said(changed)}")
+        return "\n".join(lines)
+
+    def __repr__(self) -> str:
+        shown = [f"{row.term} {_said(row)}" for row in self.intervals if row.term != "constant"]
+        more = f"; {len(shown) - 3} more rows" if len(shown) > 3 else ""
+        return f"<Refit: {self.name}; {'; '.join(shown[:3])}{more}>"
+
+    def table(self) -> Table:
+        """The rows as one table, for a person."""
+        level = f"{100 * self.confidence:g} % interval"
+        columns = (
+            Column("term", "row"),
+            Column("estimate", "estimate", "right"),
+            Column("interval", level, "right"),
+            Column("df", "degrees of freedom", "right"),
+            Column("p", "p", "right"),
+        )
+        return Table.of(self.name, columns, [_cells(row) for row in self.intervals])
+
+    def _repr_html_(self) -> str:
+        return self.table().to_html()
 
     def to_frame(self) -> pd.DataFrame:
         import pandas as pd
 
         return pd.DataFrame([vars(row) for row in self.intervals])
+
+
+def _factors(term: str) -> list[str]:
+    """ "mean of arm: visits × visit: 3" belongs to the factors arm and visit; [] for other rows."""
+    if not term.startswith("mean of "):
+        return []
+    return [part.split(": ")[0] for part in term.removeprefix("mean of ").split(" × ")]
+
+
+def _said(row: Interval) -> str:
+    """ "−3.7 (−10.6 to 3.1), 9.9 degrees of freedom, p = 0.25" """
+    if not math.isfinite(row.estimate):
+        return row.status
+    places = decimals_for(row.se)
+    df = f", {freedom(row.df)}" if math.isfinite(row.df) else ""
+    return f"{number(row.estimate, places)}{bounds(row.low, row.high, places)}{df}, {p_value(row.p)}"
+
+
+def _cells(row: Interval) -> list[Cell]:
+    if not math.isfinite(row.estimate):
+        return [Cell(row.term), Cell("not given"), Cell(""), Cell(""), Cell("")]
+    places = decimals_for(row.se)
+    return [
+        Cell(row.term, row.term),
+        Cell(number(row.estimate, places), row.estimate),
+        Cell(span(row.low, row.high, places)),
+        Cell(degrees(row.df), row.df),
+        Cell(p_figure(row.p), row.p),
+    ]
 
 
 def rows(design: Design) -> tuple[tuple[str, ...], Array]:

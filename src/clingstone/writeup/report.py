@@ -307,7 +307,7 @@ def _account(fit: Refit) -> Iterable[tuple[str, str]]:
 
 def _again(results: Results) -> list[Table]:
     settings = {k: _shown(v) for k, v in results.settings.items() if v is not None}
-    origin = {k: _shown(v) for k, v in results.case.origin.items()}
+    origin = {k: _shown(v) for k, v in results.case.origin.items() if k != "path"}
     versions = {"clingstone": results.clingstone, **results.versions}
     return [
         tables.pairs("The data as read", ("what", "value"), origin),

@@ -36,8 +36,7 @@ def save(
 
     Raises InputError when the folder holds anything else, is a file, or cannot be written.
     """
-    target = Path(folder).expanduser().absolute()
-    _check(target, overwrite)
+    target = check(folder, overwrite)
     steps = _steps(results)
     try:
         with _beside(target) as fresh:
@@ -89,11 +88,17 @@ def _write_plate(plate: Plate, folder: Path) -> None:
     (inside / f"{plate.name}.csv").write_text(plate.table.to_csv(), encoding="utf-8", newline="\n")
 
 
-def _check(target: Path, overwrite: bool) -> None:
+def check(folder: str | Path, overwrite: bool = False) -> Path:
+    """The folder as an absolute path, after a look whether it may be written; nothing is changed.
+
+    Raises InputError when it is a file, or holds anything but what an earlier call wrote, or that and
+    ``overwrite`` is false.
+    """
+    target = Path(folder).expanduser().absolute()
     if target.exists() and not target.is_dir():
         raise InputError(f"{target} is a file, not a folder", "Name a folder that does not exist yet.")
     if not target.exists() or not any(target.iterdir()):
-        return
+        return target
     others = _strangers(target)
     if others:
         shown = ", ".join(others[:3]) + (f" and {len(others) - 3} more" if len(others) > 3 else "")
@@ -106,6 +111,7 @@ def _check(target: Path, overwrite: bool) -> None:
             f"{target} already holds an earlier report",
             "Name another folder, or ask for it to be replaced (overwrite=True, --overwrite).",
         )
+    return target
 
 
 def _strangers(folder: Path) -> list[str]:
