@@ -10,6 +10,7 @@ import numpy as np
 from scipy import optimize
 
 from clingstone.covariance.components import SITE, Component, declared
+from clingstone.covariance.each import each
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import curvature, groups, reference, reml
@@ -17,6 +18,7 @@ from clingstone.maths.basis import Gram
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import Joint, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, multi
 from clingstone.remedies.words import bound_notes, gls_account
@@ -88,6 +90,10 @@ class GlsReady:
         return ()
 
     def fit(self, fits: Fits) -> Estimates:
+        if fits.response.B > 1 and self.remedy.estimation == "REML":
+            many = each(fits.algebra(self.remedy.node(fits)), fits.response)
+            if many is not None:
+                return read_each(self, fits, many)
         model, columns = self.columns(fits)
         k, B = len(self.names), len(columns)
         estimate, se, df = np.empty((k, B)), np.empty((k, B)), np.empty((k, B))
@@ -132,10 +138,14 @@ class GlsReady:
     # ---- one column ----------------------------------------------------------------------
 
     def _column(self, fits: Fits, model: ErrorModel, algebra: Chosen, y: Response, b: int) -> Column:
+        return self.column_at(fits, algebra, y, model.theta[:, b], model.at_bound[:, b])
+
+    def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column:
+        """One column of y at its REML estimate θ (d,), with the coordinates that are at a bound."""
+
         def gram(theta: Array) -> Gram:
             return algebra.gram(theta, y)
 
-        theta, bound = model.theta[:, b], model.at_bound[:, b]
         restricted = self.remedy.estimation == "REML"
         if not restricted:
             theta = _most_likely(gram, theta, bound, algebra, self.design.n)
@@ -148,33 +158,34 @@ class GlsReady:
             df = float(self.design.m) if self.remedy.df == "residual" else np.inf
             phi = np.asarray(s2 * np.linalg.inv(here.QQ))
             return Column(coef, phi, lambda w: df, lambda L: (1.0, df))
-        if self._kenward:
-            return self._kenward_column(coef, model, s2, bool(bound.any()), b)
+        if self.kenward:
+            found = algebra.variances(theta[:, None], np.array([s2]))[self.components[0].key]
+            return self._kenward_column(coef, s2, 0.0 if bound.any() else float(found[0]))
         free = [int(i) for i in np.flatnonzero(~bound)]
-        found = curvature.slopes(gram, theta, free, m, restricted)
+        bent = curvature.slopes(gram, theta, free, m, restricted)
         notes: tuple[str, ...] = ()
-        if not found.sound:
-            found, notes = self._expected(fits, algebra, theta, free, s2, m, restricted, gram)
-        if not found.sound:
+        if not bent.sound:
+            bent, notes = self._expected(fits, algebra, theta, free, s2, m, restricted, gram)
+        if not bent.sound:
             note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
-            return Column(coef, found.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
-        return Column(coef, found.phi, found.df, lambda L: (1.0, found.joint(L)), notes)
+            return Column(coef, bent.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
+        return Column(coef, bent.phi, bent.df, lambda L: (1.0, bent.joint(L)), notes)
 
     @property
-    def _kenward(self) -> bool:
+    def kenward(self) -> bool:
+        """Whether the df are Kenward and Roger's: one group level by REML."""
         one = len(self.components) == 1 and self.components[0].family == "group"
         return self.remedy.df == "kenward-roger" and one and self.remedy.estimation == "REML"
 
-    def _kenward_column(self, coef: Array, model: ErrorModel, s2: float, bound: bool, b: int) -> Column:
+    def _kenward_column(self, coef: Array, s2: float, tau2: float) -> Column:
         level = self.design.partitions[self.components[0].part]
-        tau2 = 0.0 if bound else float(model.variances[self.components[0].key][b])
         seen = groups.expected_information(
             self.design.n, self.design.sizes(level), self.design.sums(level), s2, tau2
         )
         kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
         top = float(self.design.m)
         # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
-        phi = kr.phi if bound else kr.adjusted
+        phi = kr.adjusted if tau2 > 0 else kr.phi
         return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, top)), kr.joint)
 
     def _expected(
