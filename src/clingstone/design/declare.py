@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
@@ -134,9 +134,19 @@ def structures(
         own = declared.coords == table.place
         lonlat = settings.lonlat if settings.lonlat is not None else table.lonlat if own else None
         sites = placing.build(x, y, declared.coords, lonlat, table.unit if own else "", places)
-        near = neighbourhoods.build(sites, settings.neighbours)
+        shapes = None if table.shapes is None or not own else table.shapes.iloc[places]
+        near = neighbourhoods.build(sites, settings.neighbours, shapes, _named_column(table, places))
         sites = sites.take(order)
     return Structures(order, _set_apart(groups, order, serial, sites), serial, sites, near)
+
+
+def _named_column(table: Table, places: Order) -> Callable[[str], pd.Series[Any]]:
+    """A column of the user's table on the rows read, for ids in a file of pairs."""
+
+    def column(name: str) -> pd.Series[Any]:
+        return table.column(name, "the ids of neighbours=").iloc[places].reset_index(drop=True)
+
+    return column
 
 
 def _set_apart(

@@ -26,7 +26,7 @@ class Table:
 
     index : row labels, where the frame has some that can identify rows. lonlat, unit : what the
     coordinate reference system of a geographic frame says of ``place``. picked : positions of the
-    rows in the user's table, where only some are held.
+    rows in the user's table, where only some are held. shapes : of a geographic frame.
     """
 
     names: tuple[str, ...]
@@ -38,6 +38,7 @@ class Table:
     unit: str = ""
     notes: tuple[str, ...] = ()
     picked: npt.NDArray[np.int64] | None = None
+    shapes: pd.Series[Any] | None = field(default=None, repr=False)
 
     def __contains__(self, name: str) -> bool:
         return name in self.names
@@ -56,6 +57,7 @@ class Table:
             fetch=lambda name: fetch(name).iloc[places].reset_index(drop=True),
             index=None if self.index is None else self.index[places],
             picked=self.places[places],
+            shapes=None if self.shapes is None else self.shapes.iloc[places].reset_index(drop=True),
         )
 
     def column(self, name: str, used: str) -> pd.Series:
@@ -116,7 +118,15 @@ def _pandas(frame: pd.DataFrame) -> Table:
         return frame.iloc[:, columns[name]].reset_index(drop=True).rename(name)
 
     return Table(
-        (*names, *place.columns), len(frame), fetch, index, place.names, place.lonlat, place.unit, place.notes
+        (*names, *place.columns),
+        len(frame),
+        fetch,
+        index,
+        place.names,
+        place.lonlat,
+        place.unit,
+        place.notes,
+        shapes=place.shapes,
     )
 
 
@@ -152,6 +162,7 @@ class _Place:
     lonlat: bool | None = None
     unit: str = ""
     notes: tuple[str, ...] = ()
+    shapes: pd.Series[Any] | None = None
 
 
 def _geometry(frame: pd.DataFrame) -> _Place:
@@ -183,7 +194,8 @@ def _geometry(frame: pd.DataFrame) -> _Place:
     x[there.to_numpy()], y[there.to_numpy()] = points[there].x.to_numpy(), points[there].y.to_numpy()
     lonlat = None if crs is None else bool(crs.is_geographic)
     unit = "" if crs is None or lonlat else _axis_unit(crs)
-    return _Place({PLACE_X: x, PLACE_Y: y}, (PLACE_X, PLACE_Y), lonlat, unit, tuple(notes))
+    whole = shapes.reset_index(drop=True)
+    return _Place({PLACE_X: x, PLACE_Y: y}, (PLACE_X, PLACE_Y), lonlat, unit, tuple(notes), whole)
 
 
 def _axis_unit(crs: Any) -> str:

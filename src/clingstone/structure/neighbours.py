@@ -2,18 +2,26 @@
 
 from __future__ import annotations
 
+from collections.abc import Callable
 from dataclasses import dataclass
-from typing import Any
+from pathlib import Path
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 from scipy import sparse
 
 from clingstone.display import count, significant
+from clingstone.maths.once import Array
 from clingstone.needs import InputError, NotSupported
+from clingstone.structure import given, triangles
 from clingstone.structure.spatial import EARTH_RADIUS_KM, Sites
 
+if TYPE_CHECKING:
+    import pandas as pd
+
 NEAREST = 6
+KINDS = ("knn", "band", "delaunay", "gabriel", "inverse", "contiguity", "rook", "pairs")
 Edges = tuple[npt.NDArray[np.int64], npt.NDArray[np.int64]]
 
 
@@ -24,6 +32,7 @@ class Neighbours:
     key : e.g. "knn:6"; about : how a sentence names it, e.g. "6 nearest sites".
     W : (S, S) row-standardised weights; rows of islands are zero.
     islands : sites without a neighbour. components : connected parts.
+    links : (S, S) the weights before they were divided by their row sums; None where all are equal.
     """
 
     key: str
@@ -31,17 +40,34 @@ class Neighbours:
     W: sparse.csr_array
     islands: int = 0
     components: int = 1
+    links: sparse.csr_array | None = None
+
+    @property
+    def table(self) -> sparse.csr_array:
+        """Weights before standardisation; ones where all are equal."""
+        if self.links is not None:
+            return self.links
+        return sparse.csr_array((np.ones(self.W.nnz), self.W.indices, self.W.indptr), self.W.shape)
 
 
-def build(sites: Sites, spec: str | None = None) -> tuple[Neighbours, ...]:
+def build(
+    sites: Sites,
+    spec: str | None = None,
+    shapes: pd.Series[Any] | None = None,
+    column: Callable[[str], pd.Series[Any]] | None = None,
+) -> tuple[Neighbours, ...]:
     """Neighbour graphs over sites, the primary one first; none where there are fewer than 3 sites.
 
     Parameters
     ----------
     spec : "knn" or "knn:8", "band" or "band:12.5" (in the sites' unit; kilometres along the great
-        circle for longitude and latitude). Default: 6 nearest sites (at most a quarter of the
-        others, at least 1), then a distance band chosen from the data. A named graph comes first
-        and the default of the other kind second.
+        circle for longitude and latitude), "delaunay", "gabriel", "inverse" or "inverse:2" (a power of
+        distance, over the band chosen from the data), "contiguity" or "rook" (shapes that share a
+        point, or an edge), "pairs:FILE" (see ``structure.given``). Default: 6 nearest sites (at most a
+        quarter of the others, at least 1), then a distance band chosen from the data. A named graph
+        comes first and the default of another kind second.
+    shapes : (n,) shapes of the rows, for contiguity. column : a column of the user's table, rows as
+        those of the sites, for a file of pairs.
 
     Notes
     -----
@@ -60,24 +86,52 @@ def build(sites: Sites, spec: str | None = None) -> tuple[Neighbours, ...]:
     if sites.count < 3:
         return ()
     nearest = _knn(sites, int(size) if kind == "knn" and size else _default_k(sites.count))
-    if kind == "band" and size is not None:
-        return (_band(sites, size), nearest)
-    chosen = _chosen_band(sites)
+    if kind == "knn":
+        chosen = _chosen_band(sites)
+        return (nearest, chosen) if chosen is not None else (nearest,)
+    named = _named(sites, kind, size, spec or "", shapes, column)
+    return (named, nearest) if named is not None else (nearest,)
+
+
+def _named(
+    sites: Sites,
+    kind: str,
+    size: float | None,
+    spec: str,
+    shapes: pd.Series[Any] | None,
+    column: Callable[[str], pd.Series[Any]] | None,
+) -> Neighbours | None:
     if kind == "band":
-        return (chosen, nearest) if chosen is not None else (nearest,)
-    return (nearest, chosen) if chosen is not None else (nearest,)
+        return _chosen_band(sites) if size is None else _band(sites, size)
+    if kind in ("delaunay", "gabriel"):
+        edges = triangles.edges(sites, kind == "gabriel")
+        return _graph(kind, f"neighbours in a {kind.capitalize()} graph", edges, sites.count)
+    if kind == "inverse":
+        return _inverse(sites, 1.0 if size is None else size)
+    if kind == "pairs":
+        name = spec.partition(":")[2]
+        edges, weight = given.pairs(Path(name), sites, column)
+        about = f"the pairs of {Path(name).name}"
+        return _graph(f"pairs:{Path(name).name}", about, edges, sites.count, weight)
+    edges = given.touching(sites, shapes, kind == "rook")
+    about = "places that share an edge" if kind == "rook" else "places that touch"
+    return _graph(kind, about, edges, sites.count)
 
 
 def _read(spec: str | None) -> tuple[str, float | None]:
     kind, _, size = (spec or "knn").partition(":")
+    if kind == "pairs" and size:
+        return kind, None
     try:
         value = float(size) if size else None
     except ValueError:
         value = -1.0
-    if kind not in ("knn", "band") or (value is not None and not 0 < value < np.inf):
+    bare = kind in ("delaunay", "gabriel", "contiguity", "rook") and value is not None
+    if kind not in KINDS or kind == "pairs" or bare or (value is not None and not 0 < value < np.inf):
         raise InputError(
             f"neighbours={spec!r} is no neighbourhood",
-            "Write neighbours='knn:6' for the 6 nearest sites, or 'band:12.5' for all within 12.5.",
+            "Write neighbours='knn:6' for the 6 nearest sites, 'band:12.5' for all within 12.5, 'delaunay', "
+            "'gabriel', 'inverse:1', 'contiguity' or 'rook' (with shapes), or 'pairs:FILE'.",
         )
     if kind == "knn" and value is not None and value != int(value):
         raise InputError(f"neighbours={spec!r} asks for {value:g} sites", "Give a whole number of sites.")
@@ -149,6 +203,19 @@ def _within(along: float, unit: str) -> str:
 
 def _chosen_band(sites: Sites) -> Neighbours | None:
     """The band chosen from the data; None where it would join nearly all sites, or too many."""
+    found = _chosen_edges(sites)
+    if found is None:
+        return None
+    edges, straight, alone = found
+    along = float(sites.along(np.asarray(straight)))
+    about = _within(along, sites.unit)
+    if alone:
+        about += f" ({count(alone, 'lone site')} joined to the nearest)"
+    return _graph(f"band:{along:.6g}", about, edges, sites.count)
+
+
+def _chosen_edges(sites: Sites) -> tuple[Edges, float, int] | None:
+    """Edges of the band chosen from the data, its straight length, and the lone sites joined to it."""
     k = min(4, sites.count - 1)
     fourth = np.asarray(sites.tree.query(sites.points, k=k + 1)[0])[:, -1]
     straight = float(np.quantile(fourth, 0.9))
@@ -163,19 +230,36 @@ def _chosen_band(sites: Sites) -> Neighbours | None:
         focal, neighbour = np.r_[focal, alone, joined], np.r_[neighbour, joined, alone]
         edges = np.unique(np.stack([focal, neighbour], axis=1), axis=0)
         focal, neighbour = edges[:, 0], edges[:, 1]
-    along = float(sites.along(np.asarray(straight)))
-    about = _within(along, sites.unit)
-    if len(alone):
-        about += f" ({count(len(alone), 'lone site')} joined to the nearest)"
-    return _graph(f"band:{along:.6g}", about, (focal, neighbour), sites.count)
+    return (focal, neighbour), straight, len(alone)
 
 
-def _graph(key: str, about: str, edges: Edges, size: int) -> Neighbours:
+def _inverse(sites: Sites, power: float) -> Neighbours | None:
+    """(d + d₀)^−α over the band chosen from the data, d along the surface.
+
+    d₀, a tenth of the median distance to the nearest site, keeps two sites that almost coincide from
+    holding most of the weight.
+    """
+    found = _chosen_edges(sites)
+    if found is None:
+        return None
+    edges, _, _ = found
+    near = np.asarray(sites.tree.query(sites.points, k=2)[0])[:, 1]
+    floor = 0.1 * float(np.median(sites.along(near)))
+    apart = np.linalg.norm(sites.points[edges[0]] - sites.points[edges[1]], axis=1)
+    weight = (sites.along(apart) / floor + 1.0) ** -power
+    which = "inverse distance" if power == 1 else f"inverse distance to the power {power:g}"
+    return _graph(f"inverse:{power:g}", f"near sites by {which}", edges, sites.count, weight)
+
+
+def _graph(key: str, about: str, edges: Edges, size: int, weight: Array | None = None) -> Neighbours:
     """Row-standardised weights through libpysal, with its islands and our count of connected parts."""
     from libpysal.graph import Graph
 
-    links = sparse.csr_array((np.ones(len(edges[0])), edges), shape=(size, size))
+    links = sparse.csr_array(
+        (np.ones(len(edges[0])) if weight is None else weight, edges), shape=(size, size)
+    )
     graph: Any = Graph.from_sparse(links).transform("r")
     W = sparse.csr_array(graph.sparse)
     parts = int(sparse.csgraph.connected_components(links, directed=True, connection="weak")[0])
-    return Neighbours(key, about, W, len(graph.isolates), parts)
+    raw = None if weight is None else links
+    return Neighbours(key, about, W, len(graph.isolates), parts, raw)

@@ -1,0 +1,100 @@
+"""What dependence between places does to what can be known: effective numbers, and confounding."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from clingstone.design.design import Design
+from clingstone.maths.once import Array
+
+MOVED = 2.0  # standard deviations of the difference at which an estimate is said to have moved
+SHIFTED = 0.25  # relative change that counts when the predictor is smooth over the map
+SMOOTH = 0.5  # share of a predictor that a cubic surface of place explains
+
+
+@dataclass(frozen=True, eq=False)
+class Spread:
+    """The fitted covariance V of the rows as the basis sees it.
+
+    QVQ, QIQ (p, p) : Q'VQ and Q'V⁻¹Q on the scale of y. total : mean variance of a row.
+    """
+
+    design: Design
+    QVQ: Array
+    QIQ: Array
+    total: float
+
+    def items(self) -> tuple[tuple[str, str], ...]:
+        """How many independent rows would know as much of the mean, and of each coefficient in focus.
+
+        For the mean of the rows n²/1'R1, and 1'R⁻¹1 for its best estimate (Griffith 2005; Vallejos &
+        Osorio 2014); for a coefficient n·σ²a'a/a'Va, which may lie above n: dependence hurts a
+        coefficient only as far as its predictor shares the pattern.
+        """
+        design, n = self.design, self.design.n
+        out = []
+        if design.root is None and np.sum(design.Q.sum(axis=0) ** 2) > n * (1 - 1e-8):
+            q = design.Q.sum(axis=0)
+            plain = n**2 * self.total / float(q @ self.QVQ @ q)
+            best = self.total * float(q @ self.QIQ @ q)
+            out.append(("rows, for the mean", f"{n:,} rows know it as well as {plain:.4g} independent ones"))
+            out.append(("the same for the best estimate of the mean", f"{best:.4g}"))
+        w = design.basis.contrast(np.eye(design.p))
+        for term in design.focus():
+            for j in term.columns:
+                a = w[:, j]
+                count = n * self.total * float(a @ a) / float(a @ self.QVQ @ a)
+                out.append((f"rows, for {design.names[j]} by least squares", f"{count:.4g}"))
+        return tuple(out)
+
+    def confounded(self, ordinary: Array, moved: Array) -> tuple[str, ...]:
+        """A sentence per coefficient that place and predictor contest (Hodges & Reich 2010).
+
+        ordinary, moved (p,) : β̂ by least squares and by generalised least squares, in the basis. Under
+        a correct mean their difference has variance Var(β̂_OLS) − Var(β̂_GLS), exact for this V
+        (Hausman 1978).
+        """
+        design = self.design
+        w = design.basis.contrast(np.eye(design.p))
+        gap = self.QVQ - np.linalg.inv(self.QIQ)
+        out = []
+        for term in design.focus():
+            for j in term.columns:
+                a = w[:, j]
+                one, two = float(a @ ordinary), float(a @ moved)
+                sd = np.sqrt(max(float(a @ gap @ a), 0.0))
+                far = sd > 0 and abs(two - one) > MOVED * sd
+                shifted = one != 0 and abs(two / one - 1) > SHIFTED
+                if not (far or shifted):
+                    continue
+                share = smoothness(design, j)
+                if far or share > SMOOTH:
+                    out.append(
+                        f"Place and {design.names[j]} carry the same pattern (a smooth surface explains "
+                        f"{share:.0%} of what is left of {design.names[j]} beside the other predictors): the "
+                        "estimate moves with the error model, and these data cannot split the two."
+                    )
+        return tuple(out)
+
+
+def smoothness(design: Design, j: int) -> float:
+    """Share of a predictor, beside the other predictors, that a cubic surface of place explains."""
+    assert design.spatial is not None
+    a = design.Q @ design.basis.contrast(np.eye(design.p))[:, j]
+    surface = _surface(design.spatial.points)[design.spatial.part.codes]
+    if design.root is not None:
+        surface = surface * design.root[:, None]
+    others = np.delete(np.eye(design.p), j, axis=0) @ design.basis.R.T
+    X = design.Q @ others.T
+    rest = surface - X @ np.linalg.lstsq(X, surface, rcond=None)[0] if X.shape[1] else surface
+    fitted = rest @ np.linalg.lstsq(rest, a, rcond=1e-8)[0]
+    return float(np.clip(fitted @ fitted / (a @ a), 0.0, 1.0))
+
+
+def _surface(points: Array) -> Array:
+    """(S, ·) all products of the coordinates up to the third degree."""
+    unit = (points - points.mean(axis=0)) / np.maximum(points.std(axis=0), 1e-300)
+    powers = np.indices((4,) * unit.shape[1]).reshape(unit.shape[1], -1).T
+    return np.column_stack([np.prod(unit**power, axis=1) for power in powers if power.sum() <= 3])
