@@ -11,14 +11,17 @@ A set that does not stack (crossed levels, series that cut across groups) goes t
 
 from __future__ import annotations
 
-from collections.abc import Mapping, Sequence
+from collections.abc import Sequence
 from dataclasses import dataclass
 from itertools import pairwise
 
 import numpy as np
 
-from clingstone.covariance.components import Component, Parameter
+from clingstone.covariance.base import Pieces
+from clingstone.covariance.bundles import SlopePiece, pieces_of
+from clingstone.covariance.components import Component, slope_of
 from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
+from clingstone.covariance.sloped import Sloped, sloped
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
@@ -29,86 +32,6 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import Limits, NotSupported
 
 HEAVY_SITES = 800
-
-
-@dataclass(frozen=True, eq=False)
-class Pieces:
-    """What every algebra can say of its components one by one."""
-
-    design: Design
-    pieces: tuple[Piece, ...]
-
-    @property
-    def parameters(self) -> tuple[Parameter, ...]:
-        return tuple(parameter for piece in self.pieces for parameter in piece.parameters)
-
-    @property
-    @once
-    def slices(self) -> Mapping[str, slice]:
-        """Where each component's working parameters stand in θ."""
-        out, start = {}, 0
-        for piece in self.pieces:
-            end = start + len(piece.parameters)
-            out[piece.key] = slice(start, end)
-            start = end
-        return out
-
-    def own(self, piece: Piece, theta: Array) -> Array:
-        return np.asarray(theta[self.slices[piece.key]])
-
-    def variances(self, theta: Array, sigma2: Array) -> Mapping[str, Array]:
-        """Variance of each component and of "row" noise, (B,); θ (d, B), σ² (B,).
-
-        An AR(1) process without noise of its own counts with |ρ|σ², the rest is row noise.
-        """
-        out, row = {}, np.asarray(sigma2, dtype=float)
-        for piece in self.pieces:
-            out[piece.key] = piece.variance(self.own(piece, theta)) * sigma2
-            if isinstance(piece, SerialPiece):
-                row = row - out[piece.key]
-        return {**out, "row": row}
-
-    def shape(self, theta: Array) -> Mapping[str, Array]:
-        out: dict[str, Array] = {}
-        for piece in self.pieces:
-            out.update(piece.shape(self.own(piece, theta)))
-        return out
-
-    def spread(self, key: str, theta: Array) -> Array:
-        """(p, p) Q'KQ; Σ variances[key]·spread(key) over components and "row" is Q'Var(y)Q."""
-        if key == "row":
-            return np.eye(self.design.p)
-        piece = next(piece for piece in self.pieces if piece.key == key)
-        return piece.spread(self.own(piece, theta))
-
-    def draw(self, theta: Array, sigma2: float, rng: np.random.Generator, B: int) -> Array:
-        """(n, B) draws from N(0, σ²V(θ)), on the scale of the basis."""
-        total = np.zeros((self.design.n, B))
-        if not any(isinstance(piece, SerialPiece) for piece in self.pieces):
-            total = rng.standard_normal((self.design.n, B))
-        for piece in self.pieces:
-            total += piece.draw(self.own(piece, theta), rng, B)
-        return np.asarray(np.sqrt(sigma2) * total)
-
-    def dense(self, theta: Array) -> Array:
-        """(n, n) V(θ); for small n."""
-        serial = any(isinstance(piece, SerialPiece) for piece in self.pieces)
-        V = np.zeros((self.design.n, self.design.n)) if serial else np.eye(self.design.n)
-        for piece in self.pieces:
-            V += piece.dense(self.own(piece, theta))
-        return V
-
-    def gram(self, theta: Array, response: Response) -> Gram:
-        raise NotSupported("no algebra was chosen for these components")
-
-    @property
-    def heavy(self) -> bool:
-        """One Gram takes long enough for a search to spare them."""
-        return False
-
-    def grams(self, thetas: Array, response: Response) -> list[Gram]:
-        """Grams at many θ (d, K)."""
-        return [self.gram(theta, response) for theta in thetas.T]
 
 
 @dataclass(frozen=True, eq=False)
@@ -300,12 +223,16 @@ class Dense(Pieces):
         return reml.forward(self._factor(theta), block)
 
 
-Chosen = Layered | Dense
+Chosen = Layered | Sloped | Dense
 
 
 def choose(design: Design, components: Sequence[Component], limits: Limits) -> Chosen:
     """The cheapest exact algebra of a set of components. Raises NotSupported."""
-    pieces = tuple(_piece(design, component) for component in components)
+    pieces = _pieces(design, components)
+    if pieces_of(pieces):
+        nested = sloped(design, pieces)
+        if nested is not None:
+            return nested
     layered = stack(design, pieces)
     if layered is not None:
         return layered
@@ -317,6 +244,26 @@ def choose(design: Design, components: Sequence[Component], limits: Limits) -> C
         f"{limits.dense_rows:,} rows, and this one has {design.n:,}",
         "Fit them one at a time, or declare levels that nest.",
     )
+
+
+def _pieces(design: Design, components: Sequence[Component]) -> tuple[Piece, ...]:
+    """In the order given; a slope may be correlated with what comes before it at its level."""
+    out: list[Piece] = []
+    for component in components:
+        found = slope_of(design, component.key)
+        if found is None:
+            out.append(_piece(design, component))
+            continue
+        level, x, apart = found
+        at_level = [p for p in out if isinstance(p, GroupPiece | SlopePiece) and p.part is level]
+        if not at_level:
+            raise NotSupported(
+                f"slopes of {x} that vary between {level.key} need an intercept that does so too",
+                f"Ask for group:{level.key} as well.",
+            )
+        earlier = [p.key for p in at_level if not (isinstance(p, SlopePiece) and p.apart)]
+        out.append(SlopePiece(component.key, design, level, x, apart, () if apart else tuple(earlier)))
+    return tuple(out)
 
 
 def _piece(design: Design, component: Component) -> Piece:
@@ -331,6 +278,8 @@ def _piece(design: Design, component: Component) -> Piece:
 
 def stack(design: Design, pieces: Sequence[Piece]) -> Layered | None:
     """The pieces in layers, or None when they do not stack."""
+    if pieces_of(tuple(pieces)):
+        return None
     serial = next((p for p in pieces if isinstance(p, SerialPiece)), None)
     spatial = next((p for p in pieces if isinstance(p, SpatialPiece)), None)
     levels = [p for p in pieces if isinstance(p, GroupPiece)]

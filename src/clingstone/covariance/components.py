@@ -13,7 +13,7 @@ from clingstone.design.response import Response
 from clingstone.maths.basis import Gram
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
-from clingstone.needs import Family, Limits, Refusal
+from clingstone.needs import Family, Limits, NotSupported, Refusal
 
 SITE = "group:site"  # key of the unstructured part of places that repeat
 
@@ -116,6 +116,66 @@ def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict
         else:
             refused["spatial"] = no
     return found, refused
+
+
+# Keys of slopes that vary between groups: "slope:<level>:<covariate>".
+SLOPE, APART = "slope:", "slope-apart:"
+
+
+def slope_key(level: str, x: str, apart: bool = False) -> str:
+    """Key of the slope of a covariate that varies between the groups of a level.
+
+    apart : uncorrelated with the intercept of the level.
+    """
+    return f"{APART if apart else SLOPE}{level}:{x}"
+
+
+def slope_of(design: Design, key: str) -> tuple[Partition, str, bool] | None:
+    """Level, covariate and whether it stands apart, of a slope's key; None for any other key."""
+    head = next((h for h in (SLOPE, APART) if key.startswith(h)), None)
+    if head is None or design.group is None:
+        return None
+    rest = key.removeprefix(head)
+    for level in design.group.levels:
+        x = rest.removeprefix(f"{level.key}:")
+        if rest.startswith(f"{level.key}:") and x in design.covariates:
+            return level, x, head == APART
+    return None
+
+
+def on_request(design: Design, key: str, limits: Limits) -> Component:
+    """A component that is fitted only when asked for by its key: slopes. Raises NotSupported."""
+    found = slope_of(design, key)
+    if found is None:
+        raise NotSupported(
+            f"no component {key!r} was declared", "Declare the structure with group=, time= or coords=."
+        )
+    level, x, _ = found
+    no = _group(design, level, [], limits) or _slope(design, level, x, limits)
+    if no is not None:
+        raise no.error()
+    return Component(key, "group", level.key, f"slope of {x} within {level.key}")
+
+
+def _slope(design: Design, level: Partition, x: str, limits: Limits) -> Refusal | None:
+    """Groups in which a slope can be seen: three rows or more, over two values of x or more."""
+    values = np.asarray(design.covariates[x], dtype=float)
+    inside = values - level.means(values)[level.codes]
+    size = float(np.abs(values).max())
+    moves = level.sums((np.abs(inside) > 1e-9 * size).astype(float)) > 0
+    if not moves.any():
+        return Refusal(
+            f"{x} does not vary within any {level.key}, so its slope cannot vary between them",
+            f"A predictor that varies within {level.key} would be needed.",
+        )
+    able = int(np.sum(moves & (level.sizes >= 3)))
+    if able < limits.groups_estimate:
+        return Refusal(
+            f"{able} of {level.count:,} groups of {level.key} have three rows or more over which {x} varies; "
+            f"a variance of slopes needs {limits.groups_estimate}",
+            "More rows in each group would be needed.",
+        )
+    return None
 
 
 def _group(design: Design, level: Partition, kept: list[Partition], limits: Limits) -> Refusal | None:

@@ -9,7 +9,7 @@ from dataclasses import dataclass, replace
 import numpy as np
 
 from clingstone.covariance.algebras import Chosen, choose
-from clingstone.covariance.components import Component, declared
+from clingstone.covariance.components import Component, declared, on_request
 from clingstone.covariance.thin import thin
 from clingstone.design.derived import onto
 from clingstone.design.design import Design
@@ -108,16 +108,24 @@ class Fits:
             self._models[key] = self._fit(key)
         return self._models[key]
 
+    def component(self, key: str) -> Component:
+        """One component: declared, or fitted only on request (slopes). Raises NotSupported."""
+        if key in self.components:
+            return self.components[key]
+        if key in self.refused:
+            raise self.refused[key].error()
+        return on_request(self.design, key, self.run.limits)
+
+    def ordered(self, node: Iterable[str]) -> tuple[str, ...]:
+        """Keys in building order: declared components first, then those on request by name."""
+        keys = frozenset(node)
+        known = tuple(k for k in self.components if k in keys)
+        return (*known, *sorted(keys - set(known)))
+
     def algebra(self, node: Iterable[str]) -> Chosen:
         """The algebra of a set of components. Raises NotSupported(reason, hint)."""
         key = frozenset(node)
-        for name in sorted(key - set(self.components)):
-            if name in self.refused:
-                raise self.refused[name].error()
-            raise NotSupported(
-                f"no component {name!r} was declared", "Declare the structure with group=, time= or coords=."
-            )
-        chosen = tuple(c for k, c in self.components.items() if k in key)
+        chosen = tuple(self.component(name) for name in self.ordered(key))
         limits = self.run.limits
         return kept(self.design, ("algebra", key, limits), lambda: choose(self.design, chosen, limits))
 
@@ -225,7 +233,7 @@ class Fits:
     ) -> ErrorModel:
         algebra = self.algebra(node)
         variances = algebra.variances(theta, sigma2)
-        order = tuple(k for k in self.components if k in node)
+        order = self.ordered(node)
         if node == self.full_node:
             history += tuple(f"{k} is not in the joint model: {r.reason}" for k, r in self.left_out.items())
         return ErrorModel(
@@ -257,7 +265,8 @@ class Fits:
         def value(theta: Array) -> float:
             return float(reml.criterion(algebra.gram(theta, column), m)[0])
 
-        return minimise(value, algebra.parameters, warm=warm)
+        found = algebra.minimum(column, m, warm)
+        return found if found is not None else minimise(value, algebra.parameters, warm=warm)
 
     def _head_start(self, node: Node) -> Optimum | None:
         """The optimum for some of the places, its curvature scaled up to all rows; None if too few."""
