@@ -9,6 +9,7 @@ from clingstone.remedies.periods import PanelHac
 from clingstone.remedies.refit import explain, refit
 from clingstone.remedies.remedy import Remedy
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
+from clingstone.remedies.spatial import SpatialError
 
 REMEDIES: tuple[Remedy, ...] = (
     Ordinary(),
@@ -19,6 +20,7 @@ REMEDIES: tuple[Remedy, ...] = (
     Hac(),
     PanelHac(),
     Gls("spatial-gls"),
+    SpatialError(),
     Gls("joint"),
 )
 
