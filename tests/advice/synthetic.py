@@ -30,7 +30,18 @@ def ledger(**present: str) -> Ledger:
     keys = {"group": "group:clinic", "serial": "serial", "spatial": "spatial"}
     labels = {"group": "clinic", "serial": "day", "spatial": "place"}
     standing = tuple(
-        Standing(f, keys[f], labels[f], v, 0.01, float("nan"), (), "", matters=v != "not detected")  # type: ignore[arg-type]
+        Standing(
+            f,  # type: ignore[arg-type]
+            keys[f],
+            labels[f],
+            v,  # type: ignore[arg-type]
+            0.01 if v == "present" else 0.4,
+            float("nan"),
+            (),
+            "",
+            matters=v != "not detected",
+            widens=v != "not detected",
+        )
         for f, v in present.items()
     )
     return Ledger(

@@ -44,7 +44,9 @@ def test_few_groups_and_a_group_level_focus():
     assert advice.structures == {"group"}
     assert advice.levels == ("clinic",)
     assert "The rows of one clinic hang together: they share 18\u00a0% (6 to 41\u00a0%)" in advice.headline
-    assert "It matters for arm: its interval should be 2.3 times as wide" in advice.headline
+    assert (
+        "It matters for arm: the advised interval is 2.3 times as wide as the ordinary one" in advice.headline
+    )
     (because,) = advice.because
     assert because.rule == "few-groups"
     assert ("groups", "12") in because.facts
@@ -166,9 +168,9 @@ def test_plausible_earns_protection():
 def curve(**more) -> Missing:
     values = {
         "shows": True,
-        "explains": True,
-        "doubt": False,
-        "left": "the share of day falls from 40 % to 2 %",
+        "goes": ("day",),
+        "left": "rows that follow each other in time no longer hang together",
+        "sign": "it would explain 30 % of what the model leaves over, p < 10⁻⁶",
     }
     return Missing("curve in dose", "functional-form", "dose", **{**values, **more})
 
@@ -190,7 +192,7 @@ def test_mean_first_without_its_refit_advises_no_numbers():
 def test_a_mean_in_doubt_shows_both():
     found = facts(
         ledger(serial="present"),
-        curve(explains=False, doubt=True),
+        curve(shows=False, goes=(), stays=("day",), doubt=True),
         rows_in_the_longest_series=120,
         series=1,
     )
@@ -203,7 +205,7 @@ def test_a_mean_in_doubt_shows_both():
 def test_a_curve_beside_a_dependence_that_stays():
     found = facts(
         ledger(serial="present"),
-        curve(explains=False, doubt=False),
+        curve(goes=(), stays=("day",)),
         rows_in_the_longest_series=120,
         series=1,
     )
@@ -254,7 +256,7 @@ def test_a_structure_left_uncovered_is_named():
     advice = decide(found, tuple(r for r in ALL if r.remedy != "joint"))
     assert advice.remedy in ("mixed-intercept", "cluster-robust")
     assert advice.state == "supported with caveat"
-    assert any("spatial dependence" in c.sentence for c in advice.cautions if c.rule == "not-covered")
+    assert any("between near places" in c.sentence for c in advice.cautions if c.rule == "not-covered")
 
 
 def test_unusable_focus_rows_rule_a_refit_out():

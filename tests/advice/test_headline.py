@@ -41,13 +41,33 @@ def test_a_structure_without_a_size_says_so():
 @pytest.mark.parametrize(
     ("widths", "words"),
     [
-        ([("arm", 2.3)], "It matters for arm: its interval should be 2.3 times as wide."),
-        ([("arm", 0.6)], "It matters for arm: its interval should be 0.60 times as wide."),
+        (
+            [("arm", 2.3)],
+            "It matters for arm: the advised interval is 2.3 times as wide as the ordinary one.",
+        ),
+        (
+            [("arm", 0.6)],
+            "It matters for arm: the advised interval is narrower, 0.60 times as wide as the ordinary one.",
+        ),
         ([("arm", 1.05), ("x", 1.0)], "It moves the intervals of arm and x little."),
-        ([("arm: visits", 3.0)], "It matters for “arm: visits”: its interval should be 3.0 times as wide."),
+        (
+            [("arm: visits", 3.0)],
+            "It matters for “arm: visits”: the advised interval is 3.0 times as wide as the ordinary one.",
+        ),
         (
             [("arm", 2.0), ("x", 1.4), ("z", 1.0)],
-            "It matters for arm: its interval should be 2.0 times as wide, and those of x change too.",
+            "It matters for arm: the advised interval is 2.0 times as wide as the ordinary one; that of x is "
+            "1.4 times as wide.",
+        ),
+        (
+            [("arm", 0.3), ("x", 1.4)],  # too narrow an ordinary interval is said before too wide a one
+            "It matters for x: the advised interval is 1.4 times as wide as the ordinary one; that of arm is "
+            "0.30 times as wide.",
+        ),
+        (
+            [("a", 5.0), ("b", 2.0), ("c", 1.5), ("d", 0.5)],
+            "It matters for a: the advised interval is 5.0 times as wide as the ordinary one; those of 3 "
+            "more focus rows change as well.",
         ),
         ([], ""),
     ],

@@ -8,7 +8,7 @@ from clingstone.advice.rule import ANY, GROUP, SERIAL, SHOWN, SPATIAL, Rule, The
 CAVEATS = (
     Rule(
         "mean-in-doubt",
-        fact("mean in doubt"),
+        fact("mean in doubt") & ~fact("curve under dependence"),
         Then("caveat"),
         "A {missing part of the mean} and a dependence between rows explain the same pattern here; these "
         "data cannot tell which it is. The refit with the mean repaired stands beside the advised one.",
@@ -19,11 +19,11 @@ CAVEATS = (
         "mean-as-well",
         fact("curve under dependence")
         & ~fact("dependence goes with the mean")
-        & ~fact("mean in doubt")
+        & ~fact("dependence appears with the mean")
         & SHOWN,
         Then("caveat"),
-        "A {missing part of the mean} seems to be missing from the model, and the dependence stays when "
-        "it is added: put it into the model as well.",
+        "A {missing part of the mean} seems to be missing from the model ({sign of the missing part}), and "
+        "the dependence stays when it is added: put it into the model as well.",
         "mizon-1995, mcmillen-2003",
         "strong",
     ),
@@ -31,8 +31,8 @@ CAVEATS = (
         "after-the-repair",
         fact("curve under dependence") & fact("dependence goes with the mean") & fact("mean in doubt"),
         Then("caution"),
-        "That no dependence is seen once the {missing part of the mean} is in does not show that none is "
-        "left: put it into the model and examine again.",
+        "That a dependence is no longer seen once the {missing part of the mean} is in does not show that "
+        "none is left: it could still widen a focus interval.",
         "florax-de-graaff-2004",
         "strong",
     ),
@@ -118,7 +118,7 @@ CAVEATS = (
         "not-covered",
         fact("plausible structure not covered"),
         Then("caveat"),
-        "The advised refit does not cover {names not covered}, which could still matter.",
+        "The advised refit does not cover dependence between {names not covered}, which could still matter.",
         "own",
         "strong",
     ),

@@ -2,14 +2,14 @@
 
 from __future__ import annotations
 
-import numpy as np
-
 from clingstone.advice import headline as say
-from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Score, Scores, State
-from clingstone.advice.facts import FAMILIES, Facts, covered
+from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
+from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
-from clingstone.advice.rules import CAVEATS, NO_REMEDY, PREFER, STATES, Rule
+from clingstone.advice.pick import Reached, covers, pick
+from clingstone.advice.rules import CAVEATS, NO_REMEDY, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
+from clingstone.advice.structures import FAMILIES, covered, families, needed, subject
 from clingstone.display import listed
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.remedy import Refit
@@ -19,6 +19,7 @@ __all__ = [
     "Advice",
     "Choice",
     "Reason",
+    "Repair",
     "Score",
     "Scores",
     "Shortlist",
@@ -27,18 +28,7 @@ __all__ = [
     "shortlist_for",
 ]
 
-# Without a rule that names one, and among equals in a rehearsal: the simplest first.
-ORDER = (
-    "ordinary",
-    "heteroscedasticity-robust",
-    "mixed-intercept",
-    "cluster-robust",
-    "ar1",
-    "hac",
-    "spatial-gls",
-    "joint",
-    REPAIRED,
-)
+MEAN = ("mean-first", "mean-then-dependence")
 
 
 def settle(
@@ -47,93 +37,81 @@ def settle(
     """Choose last: the state, then the remedy, then what to say beside it.
 
     Without ``scores`` the rule table decides; with them, the narrowest adequate remedy among those
-    that cover what has to be covered and estimate the same thing.
+    that cover what has to be covered and estimate the same thing. Where the mean comes first, what is
+    left is judged, corrected and cautioned about with the mean repaired.
     """
-    state_rule = _first(STATES, facts)
-    chosen, rule = (None, None) if _stops(state_rule) else _pick(facts, refits, scores)
-    need = _families(facts, "to cover")
-    if state_rule is None and chosen is None:
-        state_rule = NO_REMEDY
-    facts = facts.plus(_advised_facts(facts, refits, chosen, need))
-    beside = [r for r in CAVEATS if bool(r.when.read(facts))]
-    if state_rule is not None:
-        beside = [r for r in beside if r.then.kind == "caution" and r.id != "chosen-after-looking"]
-    state = _state(state_rule, beside)
-    advised = _advised(state, refits, chosen)
+    state_rule, here = _state_rule(facts)
+    state = state_rule.then.what if state_rule is not None else ""
+    chosen, rule = None, None
+    if state == "mean first":
+        chosen = next((r for r in refits if r.remedy == REPAIRED), None)
+        rule = shortlist.inner[1] if shortlist.inner is not None else None
+    elif not state:
+        chosen, rule = pick(facts, refits, scores, shortlist.reached, shortlist.twins)
+        if chosen is None:
+            state_rule = NO_REMEDY
+    need = needed(here.ledger)
+    known = {} if state == "mean first" else shortlist.reached
+    here = here.plus(_advised_facts(here, refits, chosen, need, known))
+    beside = _beside(state_rule, here)
+    decided = _state(state_rule, beside)
+    advised = (
+        next((r for r in refits if r.remedy == "ordinary"), None) if decided == "nothing found" else chosen
+    )
     because = [r for r in (state_rule, rule) if r is not None and r.id != "nothing-to-cover"]
+    present, covering = _families(here, "present"), families(here.ledger, need)
     return Advice(
-        state=state,
-        headline=_headline(state, state_rule, facts, refits, advised),
-        structures=_families(facts, "present"),
-        levels=_levels(facts, advised),
-        protected=need - _families(facts, "present") if advised is not None else frozenset(),
+        state=decided,
+        headline=_headline(decided, state_rule, here, refits, advised),
+        structures=present,
+        levels=_levels(here, advised, shortlist),
+        protected=covering - present if advised is not None else frozenset(),
         remedy=advised.remedy if advised is not None else "",
         at=advised.at if advised is not None else "",
         mean_in_doubt=facts.says("mean in doubt"),
-        because=(*_design_reason(facts), *(_reason(r, facts) for r in because)),
-        cautions=tuple(_reason(r, facts) for r in beside),
-        alternatives=() if state == "not correctable" else _alternatives(shortlist, refits, advised, need),
-        refused=_refused(shortlist, refits, state_rule, facts),
+        because=(*_design_reason(facts), *(_reason(r, here) for r in because)),
+        cautions=tuple(_reason(r, here) for r in beside),
+        alternatives=() if decided == "not correctable" else _alternatives(shortlist, refits, advised, here),
+        refused=_refused(shortlist, refits, state_rule, here),
+        repair=_repair(facts, shortlist),
     )
+
+
+def _state_rule(facts: Facts) -> tuple[Rule | None, Facts]:
+    """The first state that holds, and the facts that speak: with the mean repaired where it comes first.
+
+    When nothing can correct what is left after the repair, that is the state.
+    """
+    rule = _first(STATES, facts)
+    if rule is None or rule.id not in MEAN or facts.after is None:
+        return rule, facts
+    after = _first(tuple(r for r in STATES if r.id not in MEAN), facts.after)
+    if after is not None and after.then.what == "not correctable":
+        return after, facts.after
+    return rule, facts.after
 
 
 def _first(rules: tuple[Rule, ...], facts: Facts) -> Rule | None:
     return next((r for r in rules if bool(r.when.read(facts))), None)
 
 
-def _stops(rule: Rule | None) -> bool:
-    return rule is not None and rule.then.what in ("not correctable", "mean first", "nothing found")
-
-
 def _families(facts: Facts, what: str) -> frozenset[str]:
     return frozenset(f for f in FAMILIES if facts.says(f"{f} {what}"))
 
 
-def _pick(facts: Facts, refits: tuple[Refit, ...], scores: Scores | None) -> tuple[Refit | None, Rule | None]:
-    """The advised refit and the rule that named it (None when a rehearsal or the fallback did)."""
-    need, shown = _families(facts, "to cover"), _families(facts, "present")
-    usable = [r for r in refits if r.remedy != REPAIRED and _serves(r, facts)]
-    if scores is not None:
-        found = _rehearsed([r for r in usable if need <= set(r.covers)], scores)
-        if found is not None:
-            return found, None
-    for rule in PREFER:
-        if not bool(rule.when.read(facts)):
-            continue
-        at = facts.word(rule.then.at) if rule.then.at else ""
-        match = [r for r in usable if r.remedy == rule.then.what and at in ("", r.at)]
-        if match:
-            return match[0], rule
-    usable.sort(key=lambda r: ORDER.index(r.remedy) if r.remedy in ORDER else len(ORDER))
-    for wanted in (need, shown):
-        for fit in usable:
-            if wanted and wanted <= set(fit.covers):
-                return fit, None
-    return None, None
+ORDERED = {"caveat": 0, "caution": 1}
+STRENGTHS = ("strong", "moderate", "weak", "convention")
+LAST = "chosen-after-looking"  # true of every choice, so it is read last
 
 
-def _serves(fit: Refit, facts: Facts) -> bool:
-    """Every focus row has a finite interval."""
-    rows = [row for row in fit.intervals if row.term in facts.focus]
-    return all(
-        np.isfinite(row.low) and np.isfinite(row.high) and not row.status.startswith("unusable")
-        for row in rows
-    )
-
-
-def _rehearsed(fits: list[Refit], scores: Scores) -> Refit | None:
-    """The narrowest adequate one; widths within 1 % are equal and the simpler wins."""
-    good = [f for f in fits if scores.adequate(f.remedy, f.at)]
-    if not good:
-        return None
-
-    def width(fit: Refit) -> float:
-        row = scores.get(fit.remedy, fit.at)
-        return row.width if row is not None else float("inf")
-
-    least = min(map(width, good))
-    near = [f for f in good if width(f) <= 1.01 * least]
-    return min(near, key=lambda f: ORDER.index(f.remedy) if f.remedy in ORDER else len(ORDER))
+def _beside(state_rule: Rule | None, facts: Facts) -> list[Rule]:
+    """What lowers the state first, then what warns, the better founded before the others."""
+    beside = [r for r in CAVEATS if bool(r.when.read(facts))]
+    if state_rule is not None and state_rule.then.what != "mean first":
+        beside = [r for r in beside if r.then.kind == "caution" and r.id != LAST]
+    if state_rule is not None and state_rule.id in MEAN:
+        beside = [r for r in beside if r.id != "mean-alone"]
+    return sorted(beside, key=lambda r: (r.id == LAST, ORDERED[r.then.kind], STRENGTHS.index(r.strength)))
 
 
 def _state(rule: Rule | None, beside: list[Rule]) -> State:
@@ -142,23 +120,36 @@ def _state(rule: Rule | None, beside: list[Rule]) -> State:
     return "supported with caveat" if any(r.then.kind == "caveat" for r in beside) else "supported"
 
 
-def _advised(state: State, refits: tuple[Refit, ...], chosen: Refit | None) -> Refit | None:
-    wanted = {"nothing found": "ordinary", "mean first": REPAIRED}.get(state)
-    if wanted is None:
-        return chosen
-    return next((r for r in refits if r.remedy == wanted), None)
+def _repair(facts: Facts, shortlist: Shortlist) -> Repair | None:
+    missing = facts.missing
+    if missing is None or missing.after is None or shortlist.inner is None:
+        return None
+    inner, after = shortlist.inner[0], missing.after
+    return Repair(
+        missing.what,
+        missing.left,
+        missing.goes,
+        missing.stays,
+        missing.appears,
+        inner.remedy,
+        inner.at,
+        after.standing,
+        after.shares,
+        after.parameters,
+    )
 
 
 def _advised_facts(
-    facts: Facts, refits: tuple[Refit, ...], chosen: Refit | None, need: frozenset[str]
+    facts: Facts, refits: tuple[Refit, ...], chosen: Refit | None, need: frozenset[str], reached: Reached
 ) -> dict[str, Fact]:
     if chosen is None:
         return {}
     rows = [row for row in chosen.intervals if row.term in facts.focus]
-    lost = sorted(need - set(chosen.covers))
+    missed = need - covers(chosen, facts, reached)
+    lost = [subject(s) for s in facts.ledger.standing if s.key in missed]
     out = [
         yes("plausible structure not covered", bool(lost), f"not covered: {listed(lost) or 'nothing'}"),
-        words("names not covered", f"{listed(lost)} dependence"),
+        words("names not covered", listed(lost)),
         yes(
             "advised refit at its bound",
             chosen.boundary,
@@ -216,44 +207,51 @@ def _headline(
     ledger = facts.ledger
     if state == "nothing found":
         return say.nothing(ledger)
+    moved = say.consequence(say.widths(facts, refits, advised), facts.material)
     if state == "mean first":
         what = facts.text("missing part of the mean")
-        return f"A {what} seems to be missing from the model: with it, {facts.text('dependence left')}."
+        left = facts.text("dependence left")
+        return f"A {what} seems to be missing from the model: with it, {left}. {moved}".strip()
     about = say.dependence(ledger)
     if state == "not correctable" and rule is not None:
         return f"{about} These data cannot carry a correction: {_lower(say.filled(rule.because, facts))}"
-    return f"{about} {say.consequence(say.widths(facts, refits, advised), facts.material)}".strip()
+    return f"{about} {moved}".strip()
 
 
 def _lower(text: str) -> str:
     return text[0].lower() + text[1:]
 
 
-def _levels(facts: Facts, advised: Refit | None) -> tuple[str, ...]:
+def _levels(facts: Facts, advised: Refit | None, shortlist: Shortlist) -> tuple[str, ...]:
     """Where the advised remedy works: its own level, or those of every structure that it covers."""
-    if advised is None or advised.remedy in ("ordinary", REPAIRED):
+    if advised is None or advised.remedy == "ordinary":
         return ()
-    if advised.at:
-        return tuple(advised.at.split(TOGETHER))
+    at = advised.at
+    if advised.remedy == REPAIRED:
+        at = shortlist.inner[0].at if shortlist.inner is not None else ""
+    if at:
+        return tuple(at.split(TOGETHER))
     keys = [s for s in facts.ledger.standing if covered(s) and s.structure in advised.covers]
     names = {"serial": facts.word("series level") or "series", "spatial": "site"}
     return tuple(dict.fromkeys(names.get(s.key, s.key.removeprefix("group:")) for s in keys))
 
 
 def _alternatives(
-    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None, need: frozenset[str]
+    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None, facts: Facts
 ) -> tuple[Choice, ...]:
     """Refits that cover what has to be covered; with nothing to cover, every correction by the design."""
-    covers = {(r.remedy, r.at): set(r.covers) for r in refits}
+    made = {(r.remedy, r.at): r for r in refits}
     best = (advised.remedy, advised.at) if advised is not None else None
-    return tuple(
-        c
-        for c in shortlist.candidates
-        if (c.remedy, c.at) in covers
-        and (c.remedy, c.at) != best
-        and c.remedy != "ordinary"
-        and (c.remedy == REPAIRED or ((need or covers[c.remedy, c.at]) and need <= covers[c.remedy, c.at]))
-    )
+    need = needed(shortlist.facts.ledger)
+
+    def serves(choice: Choice) -> bool:
+        fit = made.get((choice.remedy, choice.at))
+        if fit is None or (choice.remedy, choice.at) == best or choice.remedy == "ordinary":
+            return False
+        found = covers(fit, shortlist.facts, shortlist.reached)
+        return choice.remedy == REPAIRED or (bool(need or fit.covers) and need <= found)
+
+    return tuple(c for c in shortlist.candidates if serves(c))
 
 
 def _refused(

@@ -26,11 +26,23 @@ STATES = (
     ),
     Rule(
         "mean-first",
-        fact("curve under dependence") & fact("dependence goes with the mean"),
+        fact("curve under dependence")
+        & fact("dependence goes with the mean")
+        & ~fact("dependence stays with the mean")
+        & ~fact("dependence appears with the mean"),
         Then("state", "mean first"),
-        "A missing {missing part of the mean} explains what looked like dependence: with it in the model, "
-        "{dependence left}.",
+        "A {missing part of the mean} explains what looked like dependence ({sign of the missing part}).",
         "mizon-1995, mcmillen-2003, florax-de-graaff-2004",
+        "strong",
+    ),
+    Rule(
+        "mean-then-dependence",
+        fact("curve under dependence")
+        & (fact("dependence goes with the mean") | fact("dependence appears with the mean")),
+        Then("state", "mean first"),
+        "A {missing part of the mean} changes what the dependence looks like ({sign of the missing part}): "
+        "mend the mean first, then correct for what stays.",
+        "mizon-1995, mcmillen-2003, yue-2002",
         "strong",
     ),
     Rule(

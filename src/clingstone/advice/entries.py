@@ -5,6 +5,8 @@ from __future__ import annotations
 from dataclasses import dataclass
 from typing import Literal
 
+from clingstone.ledger.ledger import Parameter, Share, Standing
+
 State = Literal["supported", "supported with caveat", "mean first", "not correctable", "nothing found"]
 REPAIRED = "repaired-mean"
 
@@ -30,12 +32,33 @@ class Choice:
 
 
 @dataclass(frozen=True)
+class Repair:
+    """What a missing part of the mean does to the structures, when it is put in.
+
+    what : "curve in day". goes, stays, appears : labels of structures that are no longer seen, that
+    stay, and that show only then. remedy, at : the remedy behind the repaired refit. standing, shares,
+    parameters : the ledger of the model with the part in.
+    """
+
+    what: str
+    left: str
+    goes: tuple[str, ...]
+    stays: tuple[str, ...]
+    appears: tuple[str, ...]
+    remedy: str
+    at: str
+    standing: tuple[Standing, ...]
+    shares: tuple[Share, ...]
+    parameters: tuple[Parameter, ...]
+
+
+@dataclass(frozen=True)
 class Advice:
     """What to report and why; the last step of an examination."""
 
     state: State
     headline: str
-    structures: frozenset[str]  # families judged present
+    structures: frozenset[str]  # families judged present; where the mean comes first, with it mended
     levels: tuple[str, ...]  # group levels, series or sites that the advised remedy works at
     protected: frozenset[str]  # families covered though only plausible
     remedy: str  # id; "" when none can be advised
@@ -45,6 +68,7 @@ class Advice:
     cautions: tuple[Reason, ...]
     alternatives: tuple[Choice, ...]
     refused: tuple[tuple[str, str, str], ...]  # remedy, reason, what would be needed
+    repair: Repair | None = None  # set when a part of the mean seems to be missing
 
 
 @dataclass(frozen=True)

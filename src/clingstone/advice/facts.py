@@ -10,15 +10,14 @@ import numpy as np
 from clingstone.advice.groups import group_facts
 from clingstone.advice.mean import Missing, missing_part
 from clingstone.advice.named import Fact, named, words, yes
+from clingstone.advice.structures import FAMILIES, covered
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, percent
 from clingstone.evidence.finding import Evidence
-from clingstone.ledger.ledger import Ledger, Standing, focus_rows
+from clingstone.ledger.ledger import Ledger, focus_rows
 from clingstone.needs import Limits
 from clingstone.run import Settings
-
-FAMILIES = ("group", "serial", "spatial")
 
 
 @dataclass(frozen=True)
@@ -26,7 +25,8 @@ class Facts(Mapping[str, Fact]):
     """Facts by name, and what the sentences of an advice need besides.
 
     A fact that is not known is left out. ``ledger`` is the one that the facts were read from;
-    ``missing`` the part of the mean that seems to be missing, if one does.
+    ``missing`` the part of the mean that seems to be missing, if one does; ``after`` the facts with
+    that part in the model.
     """
 
     known: Mapping[str, Fact]
@@ -34,6 +34,7 @@ class Facts(Mapping[str, Fact]):
     focus: tuple[str, ...] = ()
     missing: Missing | None = None
     material: tuple[float, float] = (0.95, 1.10)
+    after: Facts | None = None
 
     def __getitem__(self, name: str) -> Fact:
         return self.known[name]
@@ -66,10 +67,25 @@ def facts(fits: Fits, evidence: Evidence, ledger: Ledger, settings: Settings | N
 
     settings : those of the run, unless others are given.
     """
-    design = fits.design
     settings = fits.run.settings if settings is None else settings
     focus = focus_rows(fits)
-    missing = missing_part(fits, evidence, ledger) if design.known else None
+    missing = missing_part(fits, evidence, ledger) if fits.design.known else None
+    here = _facts(fits, evidence, ledger, focus, settings, missing)
+    if missing is None or missing.again is None or missing.after is None or missing.evidence is None:
+        return here
+    after = _facts(missing.again, missing.evidence, missing.after, focus, settings, missing)
+    return replace(here, after=after)
+
+
+def _facts(
+    fits: Fits,
+    evidence: Evidence,
+    ledger: Ledger,
+    focus: tuple[str, ...],
+    settings: Settings,
+    missing: Missing | None,
+) -> Facts:
+    design = fits.design
     found = [
         *structure_facts(ledger),
         *_design_facts(design, ledger, fits.run.limits),
@@ -83,15 +99,6 @@ def facts(fits: Fits, evidence: Evidence, ledger: Ledger, settings: Settings | N
 
 
 # ---- structures ---------------------------------------------------------------------------------
-
-
-def covered(standing: Standing) -> bool:
-    """Whether a structure has to be covered: present, plausible and material, or fixed by the design."""
-    return (
-        standing.verdict == "present"
-        or (standing.verdict == "unclear" and standing.matters)
-        or (standing.fixed and standing.verdict != "not applicable")
-    )
 
 
 def structure_facts(ledger: Ledger) -> list[Fact]:
@@ -202,10 +209,15 @@ def mean_facts(missing: Missing | None) -> list[Fact]:
             yes("curve under dependence", False, "no missing part of the mean shows under the dependence"),
             yes("mean in doubt", False, "the mean and the dependence do not compete"),
         ]
+    moves = {"goes": missing.goes, "stays": missing.stays, "appears": missing.appears}
     return [
         yes("curve under dependence", missing.shows, f"{missing.what} shows under the fitted dependence"),
-        yes("dependence goes with the mean", missing.explains, missing.left),
+        *(
+            yes(f"dependence {verb} with the mean", bool(names), f"{verb}: {listed(names) or 'nothing'}")
+            for verb, names in moves.items()
+        ),
         yes("mean in doubt", missing.doubt, missing.left),
         words("missing part of the mean", missing.what),
+        words("sign of the missing part", missing.sign),
         words("dependence left", missing.left),
     ]

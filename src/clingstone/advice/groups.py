@@ -6,6 +6,7 @@ import numpy as np
 from scipy import stats
 
 from clingstone.advice.named import Fact, named, words, yes
+from clingstone.advice.structures import needed
 from clingstone.covariance.fits import Fits
 from clingstone.design.derived import extend
 from clingstone.design.design import Design, Term, rows_of
@@ -71,11 +72,7 @@ def correction_level(design: Design, ledger: Ledger) -> str:
 def wanted_levels(design: Design, ledger: Ledger) -> list[str]:
     """Levels to be covered, outermost first when nested."""
     assert design.group is not None
-    keys = {
-        s.key.removeprefix("group:")
-        for s in ledger.standing
-        if s.verdict == "present" or (s.verdict == "unclear" and s.matters) or s.fixed
-    }
+    keys = {key.removeprefix("group:") for key in needed(ledger)}
     return [level.key for level in design.group.levels if level.key in keys]
 
 

@@ -4,9 +4,10 @@ from __future__ import annotations
 
 import numpy as np
 
-from clingstone.advice.facts import Facts, covered
+from clingstone.advice.facts import Facts
+from clingstone.advice.structures import covered, subject
 from clingstone.covariance.components import SITE
-from clingstone.display import NBSP, listed, percent, percent_span, significant, times
+from clingstone.display import NBSP, listed, percent, percent_span, significant
 from clingstone.ledger.ledger import Ledger, Parameter, Share, Standing
 from clingstone.remedies.remedy import Refit
 
@@ -30,11 +31,12 @@ def _sentence(ledger: Ledger, s: Standing) -> str:
         return _serial(ledger, s)
     if s.key == "spatial":
         return _spatial(ledger, s)
-    subject = "Rows of one place" if s.key == SITE else f"The rows of one {s.label.split('/')[-1]}"
+    named = subject(s)
+    start = f"The {named}" if s.key != SITE else "Rows of one place"
     share = ledger.share(s.key)
     if share is None:
-        return f"{subject} {_verb(s)}; how strongly cannot be sized."
-    return f"{subject} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
+        return f"{start} {_verb(s)}; how strongly cannot be sized."
+    return f"{start} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
 
 
 def _serial(ledger: Ledger, s: Standing) -> str:
@@ -76,7 +78,11 @@ def _with_unit(q: Parameter) -> str:
 
 
 def widths(facts: Facts, refits: tuple[Refit, ...], advised: Refit | None) -> list[tuple[str, float]]:
-    """How much wider each focus interval is under the advised refit than under the ordinary fit."""
+    """Per focus row, the width of the advised interval over that of the ordinary one.
+
+    The ratio holds both the standard error and the quantile: with few degrees of freedom an interval
+    is wider than its standard error alone would say.
+    """
     ordinary = next((r for r in refits if r.remedy == "ordinary"), None)
     if advised is None or ordinary is None or advised is ordinary:
         return []
@@ -90,15 +96,32 @@ def widths(facts: Facts, refits: tuple[Refit, ...], advised: Refit | None) -> li
 
 
 def consequence(found: list[tuple[str, float]], material: tuple[float, float]) -> str:
-    """What it does to the focus interval that moves most."""
+    """What it does to the focus interval that moves most, a widening before a narrowing; and the others."""
     if not found:
         return ""
-    term, factor = max(found, key=lambda pair: abs(np.log(pair[1])))
+    wider = [pair for pair in found if pair[1] > material[1]]
+    term, factor = max(wider or found, key=lambda pair: abs(np.log(pair[1])))
     if material[0] <= factor <= material[1]:
         return f"It moves the intervals of {listed(_named(t) for t, _ in found[:3])} little."
-    others = [t for t, f in found if t != term and not material[0] <= f <= material[1]]
-    more = f", and those of {listed(map(_named, others[:2]))} change too" if others else ""
-    return f"It matters for {_named(term)}: its interval should be {times(factor)}{more}."
+    others = [(t, f) for t, f in found if t != term and not material[0] <= f <= material[1]]
+    wide = f"the advised interval is {_times(factor)} the ordinary one"
+    return f"It matters for {_named(term)}: {wide}{_more(others)}."
+
+
+def _times(factor: float) -> str:
+    """ "2.3 times as wide as", "narrower, 0.81 times as wide as" """
+    shown = significant(factor)
+    return f"{'narrower, ' if factor < 1 else ''}{shown} times as wide as"
+
+
+def _more(others: list[tuple[str, float]]) -> str:
+    """ "; that of x is narrower too", "; those of x and z are wider too" """
+    if not others:
+        return ""
+    if len(others) > 2:
+        return f"; those of {len(others)} more focus rows change as well"
+    parts = [f"that of {_named(t)} is {significant(f)} times as wide" for t, f in others]
+    return f"; {listed(parts)}"
 
 
 def _named(term: str) -> str:
@@ -116,7 +139,7 @@ def nothing(ledger: Ledger) -> str:
         for d in could
     ]
     end = f"; these data could have shown {listed(words, 'or')}" if words else ""
-    return f"No dependence was detected that could move a focus interval{end}."
+    return f"No dependence was detected that could widen a focus interval{end}."
 
 
 def _article(name: str) -> str:

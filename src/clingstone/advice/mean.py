@@ -1,70 +1,56 @@
-"""The mean first: is a part of it missing, and does the dependence go when that part is put in?"""
+"""The mean first: is a part of it missing, and which dependence goes when that part is put in?"""
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 
 import numpy as np
 
+from clingstone.advice.structures import subject
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, p_value, percent, significant
 from clingstone.evidence import TESTS
-from clingstone.evidence.finding import Evidence, Finding, column
+from clingstone.evidence.finding import Evidence, Finding
+from clingstone.evidence.gather import gather
 from clingstone.evidence.mean import extension
-from clingstone.ledger.consequence import parts
-from clingstone.ledger.detect import primary_test
-from clingstone.ledger.ledger import Ledger, Standing, focus_rows
-from clingstone.ledger.region import region
-from clingstone.ledger.standing import LEVEL, consequence
+from clingstone.ledger.ledger import Ledger, Standing, focus_rows, focus_terms, judged
+from clingstone.ledger.standing import LEVEL
 from clingstone.needs import NotSupported
 
 # A smooth mean over time or place and a smooth error are one picture: such a part is never declared
 # the winner over dependence, only shown beside it.
 SMOOTH = {"trend": "serial", "trend-surface": "spatial"}
 CURVE = "functional-form"
+AGAIN = ("heteroscedasticity", "outliers")  # read again, besides the primary tests, with the part in
 
 
 @dataclass(frozen=True)
 class Missing:
-    """A part of the mean that seems to be missing.
+    """A part of the mean that seems to be missing, and the structures with it in the model.
 
     what : words, such as "curve in dose". shows : it shows under the fitted dependence.
-    explains : with it in the model no structure that was present is seen any more.
-    doubt : these data cannot tell the mean from dependence, or what is left could still matter.
-    left : what is left of the dependence, as half a sentence.
-    wider : the design with the part added, live.
+    goes : structures that were present and are no longer seen, half of their share or more gone.
+    stays : the other ones that were present. appears : those seen only with the part in.
+    doubt : these data cannot tell the mean from dependence, or what is no longer seen could still
+    widen a focus interval. sign, left : how clearly the part shows, and what is left of the
+    dependence, as half sentences. after : the ledger of the model with the part in; evidence and
+    again : what it was judged by, live.
     """
 
     what: str
     test: str
     about: str
     shows: bool
-    explains: bool
-    doubt: bool
-    left: str
-    wider: Design | None = field(default=None, compare=False, repr=False)
-
-
-@dataclass(frozen=True)
-class Remains:
-    """A structure before and after the part was added: shares, and the furthest factor after."""
-
-    label: str
-    before: float
-    after: float
-    worst: float
-    matters: bool
-    p: float  # of its own test, with the part in the model
-
-    @property
-    def halved(self) -> bool:
-        return self.after < self.before / 2
-
-    @property
-    def gone(self) -> bool:
-        """Its own test no longer shows it and at least half of its share went."""
-        return self.halved and not self.p < LEVEL
+    goes: tuple[str, ...] = ()
+    stays: tuple[str, ...] = ()
+    appears: tuple[str, ...] = ()
+    doubt: bool = False
+    sign: str = ""
+    left: str = ""
+    after: Ledger | None = field(default=None, compare=False, repr=False)
+    evidence: Evidence | None = field(default=None, compare=False, repr=False)
+    again: Fits | None = field(default=None, compare=False, repr=False)
 
 
 def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | None:
@@ -74,14 +60,13 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     next to no power there, is looked at when it shows in the ordinary fit and its structure is
     present; it counts only when it takes at least half of that structure away.
     """
-    needed = [s for s in ledger.standing if s.verdict == "present"]
     curve = _curve(evidence)
     if curve is not None:
-        found = _try(fits, curve, needed)
+        found = _try(fits, curve, ledger)
         if found is not None:
             return found
-    for finding in _smooth(evidence, needed):
-        found = _try(fits, finding, needed)
+    for finding in _smooth(evidence, ledger):
+        found = _try(fits, finding, ledger)
         if found is not None and found.doubt:
             return found
     return None
@@ -103,8 +88,8 @@ def _curve(evidence: Evidence) -> Finding | None:
     return best if p < LEVEL else None
 
 
-def _smooth(evidence: Evidence, needed: list[Standing]) -> list[Finding]:
-    families = {s.structure for s in needed}
+def _smooth(evidence: Evidence, ledger: Ledger) -> list[Finding]:
+    families = {s.structure for s in ledger.standing if s.verdict == "present"}
     found = [
         f
         for f in evidence.of("mean")
@@ -113,22 +98,59 @@ def _smooth(evidence: Evidence, needed: list[Standing]) -> list[Finding]:
     return sorted(found, key=lambda f: f.p)
 
 
-def _try(fits: Fits, finding: Finding, needed: list[Standing]) -> Missing | None:
-    """Add the part and see what is left; None when the model cannot carry it."""
+# ---- with the part in the model ------------------------------------------------------------------
+
+
+def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
+    """Add the part and judge every structure again; None when the model cannot carry it."""
     try:
-        wider = extension(fits.design, finding.test, finding.about)
-        again = fits.onto(wider)
-        left = _remains(fits, again, needed)
+        again = fits.onto(_focused(extension(fits.design, finding.test, finding.about), fits.design))
+        tests = tuple(t for t in TESTS if t.primary or t.id in AGAIN)
+        evidence = gather(again, tests)
+        after = judged(again, evidence, focus_rows(fits))
     except NotSupported:
         return None
-    what = _words(fits, finding)
+    pairs = [(s, now) for s in ledger.standing if (now := after.of(s.key)) is not None]
+    shown = [(s, now) for s, now in pairs if s.verdict == "present"]
+    goes = [now for s, now in shown if now.verdict != "present" and _halved(ledger, after, s.key)]
+    stays = [now for _, now in shown if now not in goes]
+    appears = [now for s, now in pairs if s.verdict != "present" and now.verdict == "present"]
     is_curve = finding.test == CURVE
-    gone = bool(left) and all(r.gone for r in left)
-    halved = bool(left) and all(r.halved for r in left)
-    explains = is_curve and gone
     # That it is no longer seen does not show that it is not there: what remains at its upper end counts.
-    doubt = halved and not (explains and not any(r.matters for r in left))
-    return Missing(what, finding.test, finding.about, is_curve, explains, doubt, _left(left, finding), wider)
+    open_end = [now for now in goes if now.widens]
+    mine = [s for s, _ in shown if s.structure == SMOOTH.get(finding.test)]
+    doubt = bool(open_end) if is_curve else any(_halved(ledger, after, s.key) for s in mine)
+    return Missing(
+        what=_words(fits, finding),
+        test=finding.test,
+        about=finding.about,
+        shows=is_curve,
+        goes=tuple(now.label for now in goes),
+        stays=tuple(now.label for now in stays),
+        appears=tuple(now.label for now in appears),
+        doubt=doubt,
+        sign=_sign(finding),
+        left=_left(ledger, after, goes, stays, appears, open_end),
+        after=after,
+        evidence=evidence,
+        again=again,
+    )
+
+
+def _focused(wider: Design, design: Design) -> Design:
+    """The added term never enters the focus, also when every term of the model is in it."""
+    if design.focus():
+        return wider
+    names = {t.name for t in focus_terms(design)}
+    return replace(wider, terms=tuple(replace(t, focus=t.name in names) for t in wider.terms))
+
+
+def _halved(before: Ledger, after: Ledger, key: str) -> bool:
+    one, two = before.share(key), after.share(key)
+    return one is not None and two is not None and two.share < one.share / 2
+
+
+# ---- words ---------------------------------------------------------------------------------------
 
 
 def _words(fits: Fits, finding: Finding) -> str:
@@ -140,35 +162,39 @@ def _words(fits: Fits, finding: Finding) -> str:
     return f"{finding.about} surface over the map"
 
 
-def _remains(fits: Fits, again: Fits, needed: list[Standing]) -> list[Remains]:
-    node = again.full_node
-    keys = [s for s in needed if s.key in node and s.key in fits.full_node]
-    if not keys:
-        return []
-    settings = fits.run.settings
-    place = region(again, node, settings.confidence)
-    found = parts(again, place)
-    focus = focus_rows(fits)
-    before, after = fits.full.shares(), again.full.shares()
-    out = []
-    for s in keys:
-        matters, worst, _ = consequence(found, place, s.key, focus, settings.material)
-        test, about = primary_test(again, s, TESTS)
-        p = float("nan")
-        if test is not None and about is not None:
-            p = column(test.read(again, about, frozenset()).p)
-        out.append(Remains(s.label, float(before[s.key][0]), float(after[s.key][0]), worst, matters, p))
-    return out
+def _sign(finding: Finding) -> str:
+    """ "it would explain 34 % of what the model leaves over, p < 10⁻⁶" """
+    return f"it would explain {percent(finding.estimate)} of what the model leaves over, {p_value(finding.p)}"
 
 
-def _left(left: list[Remains], finding: Finding) -> str:
-    if not left:
+def _left(
+    before: Ledger,
+    after: Ledger,
+    goes: list[Standing],
+    stays: list[Standing],
+    appears: list[Standing],
+    open_end: list[Standing],
+) -> str:
+    """What hangs together with the part in, and what no longer does."""
+    parts = [
+        f"{subject(now)} no longer hang together ({_share(before, now.key)} of the rest before, "
+        f"{_share(after, now.key)} after)"
+        for now in goes
+    ]
+    for now in stays:
+        verb = "still" if now.verdict == "present" else "may still"
+        parts.append(f"{subject(now)} {verb} hang together ({_share(after, now.key)})")
+    parts += [f"{subject(now)} turn out to hang together ({_share(after, now.key)})" for now in appears]
+    if not parts:
         return "no dependence was found that it could explain"
-    shares = listed(
-        f"the share of {r.label} falls from {percent(r.before)} to {percent(r.after)}" for r in left
-    )
-    worst = max((r.worst for r in left if np.isfinite(r.worst)), key=lambda f: abs(np.log(f)), default=1.0)
-    end = f"what is left could make a focus standard error {significant(worst)} times the ordinary one"
-    if not any(r.matters for r in left):
-        end = "what is left could not move a focus interval"
-    return f"{shares}, and {end} ({p_value(finding.p)} for the added part)"
+    worst = max((now.worst for now in open_end), key=lambda f: abs(np.log(f)), default=1.0)
+    if open_end:
+        parts.append(f"what is left could make a focus standard error {significant(worst)} times as large")
+    elif goes and not stays and not appears:
+        parts.append("what is left could not widen a focus interval")
+    return listed(parts)
+
+
+def _share(ledger: Ledger, key: str) -> str:
+    share = ledger.share(key)
+    return percent(share.share) if share is not None else "not sized"

@@ -2,15 +2,22 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, replace
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+
+import numpy as np
 
 from clingstone.advice.entries import REPAIRED, Choice
 from clingstone.advice.facts import Facts
+from clingstone.advice.pick import Reached, preferred, rank
+from clingstone.advice.rules import Rule
+from clingstone.advice.structures import needed, reach
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed
 from clingstone.needs import NotSupported
 from clingstone.remedies import REMEDIES, remedy
+from clingstone.remedies.gls import Gls
 from clingstone.remedies.refit import at as set_at
 from clingstone.remedies.refit import refit as run_remedy
 from clingstone.remedies.remedy import Refit, Remedy
@@ -20,20 +27,28 @@ LEVELS = 4  # levels at which one remedy is refitted at the most
 
 @dataclass(frozen=True)
 class Shortlist:
-    """Candidates to refit, the ordinary fit first, and what these data cannot carry."""
+    """Candidates to refit, the ordinary fit first, and what these data cannot carry.
+
+    reached : keys of the structures that each candidate covers. twins : an id that would give the
+    same fit as another one here → the one that is kept. inner : the remedy behind the repaired mean,
+    and the rule that named it.
+    """
 
     candidates: tuple[Choice, ...]
     refused: tuple[tuple[str, str, str], ...]
     facts: Facts
+    reached: Reached = field(default_factory=dict)
+    twins: Mapping[str, str] = field(default_factory=dict)
+    inner: tuple[Choice, Rule | None] | None = None
 
     def refit(self, fits: Fits) -> tuple[Refit, ...]:
         """Every candidate refitted on the first column of y, in the order of the shortlist."""
         out = []
         for choice in self.candidates:
             try:
-                if choice.remedy == REPAIRED:
-                    out.append(repaired(self.facts, fits))
-                else:
+                if choice.remedy == REPAIRED and self.inner is not None:
+                    out.append(_repaired(self.facts, self.inner[0], fits))
+                elif choice.remedy != REPAIRED:
                     out.append(run_remedy(remedy(choice.remedy), choice.at, fits))
             except NotSupported:
                 continue  # settle() says of a candidate without a refit that it could not be fitted
@@ -47,10 +62,10 @@ def shortlist_for(facts: Facts, fits: Fits) -> Shortlist:
     """Every registered remedy that the declared structures and the data carry.
 
     Candidates do not depend on the tests: the ordinary fit and the correction that the design implies
-    are always among them.
+    are always among them. Of two that are the same fit, only one is kept.
     """
     design = fits.design
-    candidates: list[Choice] = []
+    made: list[tuple[Choice, Remedy]] = []
     refused: list[tuple[str, str, str]] = []
     for one in REMEDIES:
         if not one.needs.parts <= _declared(design):
@@ -63,18 +78,27 @@ def shortlist_for(facts: Facts, fits: Fits) -> Shortlist:
             continue
         for level in one.abouts(design)[:LEVELS]:
             try:
-                ready = set_at(one, level, fits)
-                ready.prepare(design, ready.working(fits))
+                ready = _prepared(one, level, fits)
             except NotSupported as error:
                 refused.append((one.id, str(error), error.hint))
                 continue
-            candidates.append(Choice(one.id, level, _purpose(one, level)))
-    if facts.missing is not None and facts.missing.wider is not None:
-        candidates.append(
-            Choice(REPAIRED, facts.missing.about, f"the same with {facts.missing.what} in the mean")
-        )
+            made.append((Choice(one.id, level, _purpose(ready, level, fits)), ready))
+    kept, twins = _without_twins(made, fits)
+    candidates = [choice for choice, _ in kept]
+    inner = _inner(facts)
+    if inner is not None and facts.missing is not None:
+        words = f"the same with {facts.missing.what} in the mean"
+        candidates.append(Choice(REPAIRED, facts.missing.about, words))
     candidates.sort(key=lambda c: c.remedy != "ordinary")
-    return Shortlist(tuple(candidates), tuple(dict.fromkeys(refused)), facts)
+    reached = {(choice.remedy, choice.at): reach(ready, fits) for choice, ready in kept}
+    return Shortlist(tuple(candidates), tuple(dict.fromkeys(refused)), facts, reached, twins, inner)
+
+
+def _prepared(one: Remedy, level: str, fits: Fits) -> Remedy:
+    """The remedy set to a level, once it is known that these data carry it. Raises NotSupported."""
+    ready = set_at(one, level, fits)
+    ready.prepare(fits.design, ready.working(fits))
+    return ready
 
 
 def _declared(design: Design) -> frozenset[str]:
@@ -82,26 +106,92 @@ def _declared(design: Design) -> frozenset[str]:
     return frozenset(name for name, part in parts.items() if part is not None)
 
 
-def _purpose(one: Remedy, level: str) -> str:
+def _purpose(one: Remedy, level: str, fits: Fits) -> str:
     if one.id == "ordinary":
         return "the ordinary fit, for comparison"
-    if not one.covers:
+    declared = _declared(fits.design)
+    found = sorted(one.covering(fits) & declared)
+    if not found:
         return "for rows of unequal spread"
     where = f" at the level of {level}" if level else ""
-    return f"covers {listed(sorted(one.covers))} dependence{where}"
+    return f"covers {listed(found)} dependence{where}"
 
 
-def repaired(facts: Facts, fits: Fits) -> Refit:
-    """The ordinary fit with the missing part of the mean put in. Raises NotSupported."""
+def _without_twins(
+    made: list[tuple[Choice, Remedy]], fits: Fits
+) -> tuple[list[tuple[Choice, Remedy]], dict[str, str]]:
+    """Of the error models of the same structures one: that whose name says what it covers."""
+    models: dict[frozenset[str], tuple[Choice, Gls]] = {}
+    twins: dict[str, str] = {}
+    lost: set[Choice] = set()
+    for choice, one in made:
+        if not isinstance(one, Gls):
+            continue
+        node = one.node(fits)
+        if node not in models:
+            models[node] = (choice, one)
+            continue
+        earlier, model = models[node]
+        if model.covers == model.covering(fits):
+            lost.add(choice)
+            twins[choice.remedy] = earlier.remedy
+        else:
+            lost.add(earlier)
+            twins[earlier.remedy] = choice.remedy
+            models[node] = (choice, one)
+    return [pair for pair in made if pair[0] not in lost], twins
+
+
+# ---- the repaired mean ---------------------------------------------------------------------------
+
+
+def _inner(facts: Facts) -> tuple[Choice, Rule | None] | None:
+    """The remedy for what is left once the part is in the mean: by the same rules, read again there."""
+    missing, after = facts.missing, facts.after
+    if missing is None or missing.again is None or after is None:
+        return None
+    again, need = missing.again, needed(after.ledger)
+    if not need:
+        return Choice("ordinary"), None
+    for rule, what, level in preferred(after):
+        if _carries(remedy(what), level, again, after):
+            return Choice(what, level), rule
+    for one in sorted(REMEDIES, key=lambda r: rank(r.id)):
+        if one.needs.check(again.design) is not None:
+            continue
+        for level in one.abouts(again.design)[:LEVELS]:
+            if _carries(one, level, again, after) and need <= reach(set_at(one, level, again), again):
+                return Choice(one.id, level), None
+    return Choice("ordinary"), None
+
+
+def _carries(one: Remedy, level: str, fits: Fits, facts: Facts) -> bool:
+    """These data carry it, for every focus row."""
+    if one.needs.check(fits.design) is not None:
+        return False
+    try:
+        ready = set_at(one, level, fits)
+        unusable = ready.prepare(fits.design, ready.working(fits)).unusable
+    except NotSupported:
+        return False
+    return not set(unusable) & set(facts.focus)
+
+
+def _repaired(facts: Facts, inner: Choice, fits: Fits) -> Refit:
+    """The inner remedy with the missing part of the mean put in. Raises NotSupported."""
     missing = facts.missing
-    if missing is None or missing.wider is None:
+    if missing is None or missing.again is None:
         raise NotSupported("no part of the mean seems to be missing")
-    found = run_remedy(remedy("ordinary"), "", fits.onto(missing.wider))
-    rows = tuple(replace(row, remedy=REPAIRED) for row in found.intervals)
+    found = run_remedy(remedy(inner.remedy), inner.at, missing.again)
+    naive = {row.term: row.se for row in run_remedy(remedy("ordinary"), "", fits).intervals}
+    rows = tuple(
+        replace(row, remedy=REPAIRED, se_ratio=row.se / naive.get(row.term, np.nan))
+        for row in found.intervals
+    )
     return replace(
         found,
         remedy=REPAIRED,
-        name=f"ordinary, with {missing.what}",
+        name=f"{found.name}, with {missing.what}",
         at=missing.about,
         estimand="mean-repaired",
         intervals=rows,

@@ -21,10 +21,11 @@ class Standing:
     given: tuple[str, ...]
     because: str
     p_method: str = ""  # how p_given was got
-    matters: bool = False  # the upper end of its interval would move a focus interval
+    matters: bool = False  # an end of its interval would move a focus interval beyond the band
     fixed: bool = False  # the design fixes this level: assigned or sampled
     worst: float = float("nan")  # furthest standard-error factor of a focus term inside its interval
     worst_term: str = ""
+    widens: bool = False  # the upper end of its interval would widen a focus interval beyond the band
 
 
 @dataclass(frozen=True)

@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design, Term
 from clingstone.evidence.finding import Evidence, Test
@@ -32,6 +34,7 @@ __all__ = [
     "Tipping",
     "focus_rows",
     "focus_terms",
+    "judged",
     "weigh",
 ]
 
@@ -55,13 +58,28 @@ def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None)
         from clingstone.evidence import TESTS
 
         tests = TESTS
+    focus = focus_rows(fits)
+    found = judged(fits, evidence, focus)
+    if not found.shares:
+        return found
+    return replace(
+        found,
+        tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
+        detectable=detectable(fits, found.standing, tests),
+    )
+
+
+def judged(fits: Fits, evidence: Evidence, focus: tuple[str, ...]) -> Ledger:
+    """The ledger without tipping points and detectable sizes: standings, shares, consequences.
+
+    focus : the rows whose intervals matter (those of ``focus_rows`` for the user's own model).
+    """
     confidence = fits.run.settings.confidence
     try:
         full = region(fits, fits.full_node, confidence)
     except NotSupported as error:
         return _unfitted(fits, evidence, error)
     found = parts(fits, full)
-    focus = focus_rows(fits)
     standing = judge.examine(fits, evidence, found, full, focus)
     node, history = judge.adequate(fits, standing)
     kept = full if node == fits.full_node else region(fits, node, confidence)
@@ -72,8 +90,8 @@ def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None)
         shares=shares(fits, kept, full),
         parameters=parameters(fits, kept, full),
         inflation=inflation(found, full) if fits.design.known else (),
-        tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
-        detectable=detectable(fits, standing, tests),
+        tipping=(),
+        detectable=(),
         refused=tuple((key, refusal.reason) for key, refusal in left_out.items()),
         history=history,
         method=full.method,

@@ -38,6 +38,7 @@ class Seen:
     matters: bool
     worst: float
     worst_term: str
+    widens: bool = False
 
     @property
     def alone(self) -> bool | None:
@@ -108,22 +109,38 @@ def _bootstrap(fits: Fits, key: str, rest: frozenset[str], statistic: float) -> 
 # ---- consequence ---------------------------------------------------------------------------------
 
 
+@dataclass(frozen=True)
+class Reach:
+    """How far the interval of a structure reaches for a focus row.
+
+    matters : outside the band on either side. widens : above it. worst : the furthest factor, of
+    the row ``term``.
+    """
+
+    matters: bool = False
+    widens: bool = False
+    worst: float = float("nan")
+    term: str = ""
+
+
 def consequence(
     found: Parts, region: Region, key: str, focus: tuple[str, ...], material: tuple[float, float]
-) -> tuple[bool, float, str]:
-    """Could the structure matter: (outside the band?, the furthest factor, its row)."""
+) -> Reach:
+    """Could the structure matter for a focus row, anywhere inside its interval?"""
     if key not in found.variance or not focus:
-        return False, float("nan"), ""
+        return Reach()
     due = found.due_to(key)
-    worst, term = 1.0, ""
+    worst, term, widest = 1.0, "", 1.0
     for k, name in enumerate(found.terms):
         if name not in focus:
             continue
         low, _, high = region.interval(due[k])
+        widest = max(widest, high)
         for value in (low, high):
             if abs(np.log(value)) > abs(np.log(worst)):
                 worst, term = value, name
-    return bool(worst < material[0] or worst > material[1]), worst, term
+    widens = bool(widest > material[1])
+    return Reach(widens or bool(worst < material[0]), widens, worst, term)
 
 
 # ---- reading the table -----------------------------------------------------------------------------
@@ -149,6 +166,7 @@ def _judge(one: Seen, others: tuple[Seen, ...]) -> Standing:
         matters=one.matters,
         worst=one.worst,
         worst_term=one.worst_term,
+        widens=one.widens,
     )
 
 
@@ -228,13 +246,12 @@ def examine(
         adjusted = p if finding is None or finding.p_adjusted is None else finding.p_adjusted
         others = tuple(k for k in node if k != key)
         p_given, method = restricted_lr(fits, key) if others else (float("nan"), "")
-        matters, worst, term = (
-            consequence(found, region, key, focus, material)
-            if found is not None and region is not None
-            else (False, float("nan"), "")
-        )
+        reach = Reach()
+        if found is not None and region is not None:
+            reach = consequence(found, region, key, focus, material)
         if not fits.design.known:
-            matters = finding is not None and finding.verdict == "unclear"
+            unclear = finding is not None and finding.verdict == "unclear"
+            reach = Reach(unclear, unclear)
         seen.append(
             Seen(
                 key,
@@ -245,9 +262,10 @@ def examine(
                 p_given,
                 tuple(fits.components[k].label for k in fits.components if k in others),
                 method,
-                matters,
-                worst,
-                term,
+                reach.matters,
+                reach.worst,
+                reach.term,
+                reach.widens,
             )
         )
     levels = {f"group:{level}" for level in fits.design.assignment.levels}
@@ -292,6 +310,7 @@ def _unfitted(fits: Fits, evidence: Evidence, done: set[str]) -> tuple[Standing,
                 because,
                 matters=_unsized_matters(finding),
                 fixed=key in fixed,
+                widens=_unsized_matters(finding),
             )
         )
     return tuple(out)

@@ -1,0 +1,101 @@
+"""Which refit: the rules in their order, or a rehearsal, or else the simplest that covers."""
+
+from __future__ import annotations
+
+from collections.abc import Iterator, Mapping
+
+import numpy as np
+
+from clingstone.advice.entries import REPAIRED, Scores
+from clingstone.advice.facts import Facts
+from clingstone.advice.rules import PREFER, Rule
+from clingstone.advice.structures import families, needed
+from clingstone.remedies.remedy import Refit
+
+# Without a rule that names one, and among equals in a rehearsal: the simplest first.
+ORDER = (
+    "ordinary",
+    "heteroscedasticity-robust",
+    "mixed-intercept",
+    "cluster-robust",
+    "ar1",
+    "hac",
+    "spatial-gls",
+    "joint",
+    REPAIRED,
+)
+
+Reached = Mapping[tuple[str, str], frozenset[str]]  # (remedy, at) → keys of the structures it covers
+
+
+def preferred(facts: Facts) -> Iterator[tuple[Rule, str, str]]:
+    """The rules that hold, in order: (rule, remedy id, level or "")."""
+    for rule in PREFER:
+        if bool(rule.when.read(facts)):
+            yield rule, rule.then.what, facts.word(rule.then.at) if rule.then.at else ""
+
+
+def pick(
+    facts: Facts,
+    refits: tuple[Refit, ...],
+    scores: Scores | None,
+    reached: Reached,
+    twins: Mapping[str, str],
+) -> tuple[Refit | None, Rule | None]:
+    """The advised refit and the rule that named it (None when a rehearsal or the fallback did)."""
+    need, shown = needed(facts.ledger), needed(facts.ledger, shown=True)
+    usable = [r for r in refits if r.remedy != REPAIRED and _serves(r, facts)]
+    if scores is not None:
+        found = _rehearsed([r for r in usable if need <= covers(r, facts, reached)], scores)
+        if found is not None:
+            return found, None
+    for rule, what, at in preferred(facts):
+        name = twins.get(what, what)
+        match = [r for r in usable if r.remedy == name and (at in ("", r.at) or name != what)]
+        if match:
+            return match[0], rule
+    usable.sort(key=lambda r: rank(r.remedy))
+    for wanted in (need, shown):
+        for fit in usable:
+            if wanted and wanted <= covers(fit, facts, reached):
+                return fit, None
+    for fit in usable:
+        if need and families(facts.ledger, need) <= set(fit.covers):
+            return fit, None
+    return None, None
+
+
+def rank(remedy: str) -> int:
+    return ORDER.index(remedy) if remedy in ORDER else len(ORDER)
+
+
+def covers(fit: Refit, facts: Facts, reached: Reached) -> frozenset[str]:
+    """Keys that a refit covers; by family where the shortlist does not know it better."""
+    known = reached.get((fit.remedy, fit.at))
+    if known is not None:
+        return known
+    return frozenset(s.key for s in facts.ledger.standing if s.structure in fit.covers)
+
+
+def _serves(fit: Refit, facts: Facts) -> bool:
+    """Every focus row has a finite interval."""
+    rows = [row for row in fit.intervals if row.term in facts.focus]
+    return all(
+        np.isfinite(row.low) and np.isfinite(row.high) and not row.status.startswith("unusable")
+        for row in rows
+    )
+
+
+def _rehearsed(fits: list[Refit], scores: Scores) -> Refit | None:
+    """The narrowest adequate one; widths within 1 % are equal and the simpler wins."""
+    good = [f for f in fits if scores.adequate(f.remedy, f.at)]
+    if not good:
+        return None
+
+    def width(fit: Refit) -> float:
+        row = scores.get(fit.remedy, fit.at)
+        return row.width if row is not None else float("inf")
+
+    least = min(map(width, good))
+    near = [f for f in good if width(f) <= 1.01 * least]
+    return min(near, key=lambda f: rank(f.remedy))
