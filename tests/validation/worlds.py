@@ -1,0 +1,280 @@
+"""Worlds whose truth is known: a table, what is declared about it, and the covariance of its rows.
+
+In every world the coefficient of ``x`` is 0.5, so an interval for ``x`` either holds 0.5 or does not.
+``V`` is the true covariance of the rows, used for the oracle (generalised least squares at V) and for
+the true standard-error factor of the ordinary fit. ``misses`` names a part of the mean that the
+declared model leaves out.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Mapping
+from dataclasses import dataclass
+from typing import Any
+
+import numpy as np
+import pandas as pd
+
+SLOPE = 0.5
+Array = np.ndarray
+
+
+@dataclass(frozen=True)
+class Truth:
+    """One draw of a world. mean : what V does not hold, an offset beside x and the constant."""
+
+    x: Array
+    V: Array
+    columns: Mapping[str, Any]
+    mean: Array | float = 0.0
+    noise: Array | None = None  # errors drawn by the world itself; None to draw them from V
+
+
+@dataclass(frozen=True)
+class World:
+    """A scenario. ``holds`` : families of dependence that are really there and move x."""
+
+    name: str
+    words: str
+    draw: Callable[[np.random.Generator], Truth]
+    arguments: Mapping[str, Any]
+    holds: frozenset[str] = frozenset()
+    covered: bool = True  # whether 0.5 is what the declared model estimates
+
+    def table(self, rng: np.random.Generator) -> tuple[pd.DataFrame, Truth]:
+        """The user's table and the truth behind it."""
+        truth = self.draw(rng)
+        n = len(truth.x)
+        e = truth.noise
+        if e is None:
+            e = np.linalg.cholesky(truth.V + 1e-10 * np.eye(n)) @ rng.standard_normal(n)
+        y = 3.0 + SLOPE * truth.x + truth.mean + e
+        return pd.DataFrame({"y": y, "x": truth.x, **truth.columns}), truth
+
+
+# ---- predictors and covariances ---------------------------------------------------------------
+
+
+def sizes(G: int, m: int, equal: bool) -> Array:
+    """Rows per group: all m, or from 2 up to about 3m with the same mean."""
+    if equal:
+        return np.full(G, m)
+    raw = np.linspace(0.0, 1.0, G) ** 2
+    return np.maximum(2, np.round(2 + raw * 3 * (m - 2))).astype(int)
+
+
+def ar(rng: np.random.Generator, n: int, rho: float) -> Array:
+    """A stationary first-order process of variance 1."""
+    e = rng.standard_normal(n) * np.sqrt(1 - rho**2)
+    out = np.empty(n)
+    out[0] = rng.standard_normal()
+    for t in range(1, n):
+        out[t] = rho * out[t - 1] + e[t]
+    return out
+
+
+def toeplitz(n: int, rho: float) -> Array:
+    t = np.arange(n)
+    return np.asarray(rho ** np.abs(t[:, None] - t[None]))
+
+
+def same(code: Array) -> Array:
+    return np.asarray((code[:, None] == code[None]).astype(float))
+
+
+def field(points: Array, practical: float) -> Array:
+    d = np.linalg.norm(points[:, None] - points[None], axis=2)
+    return np.asarray(np.exp(-3.0 * d / practical))
+
+
+def smooth(rng: np.random.Generator, V: Array) -> Array:
+    return np.asarray(np.linalg.cholesky(V + 1e-8 * np.eye(len(V))) @ rng.standard_normal(len(V)))
+
+
+# ---- builders ----------------------------------------------------------------------------------
+
+
+def groups(
+    G: int, m: int, icc: float, level: str, equal: bool = True, slope: float = 0.0
+) -> Callable[..., Truth]:
+    """Random intercepts (and slopes of x, standard deviation ``slope``) of G groups."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g = np.repeat(np.arange(G), sizes(G, m, equal))
+        n = len(g)
+        x = rng.standard_normal(G)[g] if level == "group" else rng.standard_normal(n)
+        V = icc * same(g) + (1 - icc) * np.eye(n)
+        if slope:
+            V = V + slope**2 * same(g) * np.outer(x, x)
+        return Truth(x, V, {"g": [f"g{k}" for k in g]})
+
+    return draw
+
+
+def series(n: int, rho: float, predictor: str) -> Callable[..., Truth]:
+    """One series with first-order errors; x is the time itself, a process of its own, or rough."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        t = np.arange(n)
+        trend = (t - t.mean()) / t.std()
+        x = {"trend": lambda: trend, "ar": lambda: ar(rng, n, 0.7), "rough": lambda: rng.standard_normal(n)}
+        return Truth(x[predictor](), toeplitz(n, rho), {"t": t})
+
+    return draw
+
+
+def panel(G: int, T: int, icc: float, rho: float, level: str) -> Callable[..., Truth]:
+    """G series of T times: a random intercept and first-order errors within each."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g, t = np.repeat(np.arange(G), T), np.tile(np.arange(T), G)
+        x = {
+            "group": lambda: rng.standard_normal(G)[g],
+            "row": lambda: rng.standard_normal(G * T),
+            "ar": lambda: np.concatenate([ar(rng, T, 0.7) for _ in range(G)]),
+        }[level]()
+        inside = np.kron(np.eye(G), toeplitz(T, rho))
+        return Truth(x, icc * same(g) + (1 - icc) * inside, {"g": [f"g{k}" for k in g], "t": t})
+
+    return draw
+
+
+def places(n: int, practical: float, share: float, predictor: str, repeats: int = 1) -> Callable[..., Truth]:
+    """n sites in a square of side 100; exponential field of the given share, row noise besides."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        points = rng.uniform(0, 100, (n, 2))
+        code = np.repeat(np.arange(n), repeats)
+        N = n * repeats
+        K = field(points, practical) if share else np.eye(n)
+        V = share * K[np.ix_(code, code)] + (1 - share) * np.eye(N)
+        x = smooth(rng, field(points, 60.0))[code] if predictor == "smooth" else rng.standard_normal(N)
+        return Truth(x, V, {"east": points[code, 0], "north": points[code, 1]})
+
+    return draw
+
+
+def missed(G: int, m: int, what: str) -> Callable[..., Truth]:
+    """Independent rows whose mean lacks a curve in x or in z, or a trend in time."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        n = G * m
+        g = np.repeat(np.arange(G), m)
+        t = np.arange(n)
+        x = rng.standard_normal(n)
+        z = np.linspace(-2, 2, n) if what == "z" else rng.standard_normal(n)
+        add = {"x": 0.6 * (x**2 - 1), "z": 0.8 * (z**2 - np.mean(z**2)), "trend": 1.5 * (t / n - 0.5) * 2}
+        return Truth(x, np.eye(n), {"z": z, "g": [f"g{k}" for k in g], "t": t}, mean=add[what])
+
+    return draw
+
+
+def uneven(G: int, m: int, level: str) -> Callable[..., Truth]:
+    """Independent rows whose spread differs from group to group, fourfold between the ends."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g = np.repeat(np.arange(G), m)
+        sd = np.exp(np.linspace(np.log(0.5), np.log(2.0), G))
+        x = rng.standard_normal(G)[g] if level == "group" else rng.standard_normal(len(g))
+        return Truth(x, np.diag(sd[g] ** 2), {"g": [f"g{k}" for k in g]})
+
+    return draw
+
+
+def outlier(G: int, m: int) -> Callable[..., Truth]:
+    """Independent rows, one of them six standard deviations out."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g = np.repeat(np.arange(G), m)
+        e = rng.standard_normal(len(g))
+        e[rng.integers(len(g))] += 6.0
+        return Truth(rng.standard_normal(len(g)), np.eye(len(g)), {"g": [f"g{k}" for k in g]}, noise=e)
+
+    return draw
+
+
+def treated(G: int, m: int, arm: int, icc: float) -> Callable[..., Truth]:
+    """x is a treatment that ``arm`` of G groups received."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g = np.repeat(np.arange(G), m)
+        x = (g < arm).astype(float)
+        return Truth(x, icc * same(g) + (1 - icc) * np.eye(G * m), {"g": [f"g{k}" for k in g]})
+
+    return draw
+
+
+def nested(A: int, B: int, m: int, a: float, b: float, level: str) -> Callable[..., Truth]:
+    """Rows in b in a, both with effects of their own."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        ia = np.repeat(np.arange(A), B * m)
+        ib = np.repeat(np.arange(A * B), m)
+        n = A * B * m
+        x = {
+            "a": rng.standard_normal(A)[ia],
+            "b": rng.standard_normal(A * B)[ib],
+            "row": rng.standard_normal(n),
+        }
+        V = a * same(ia) + b * same(ib) + (1 - a - b) * np.eye(n)
+        return Truth(x[level], V, {"a": [f"a{k}" for k in ia], "b": [f"b{k}" for k in ib]})
+
+    return draw
+
+
+def crossed(A: int, B: int, a: float, b: float, level: str) -> Callable[..., Truth]:
+    """One row for each pair of an a and a b."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        ia, ib = np.repeat(np.arange(A), B), np.tile(np.arange(B), A)
+        x = {"a": rng.standard_normal(A)[ia], "row": rng.standard_normal(A * B)}[level]
+        V = a * same(ia) + b * same(ib) + (1 - a - b) * np.eye(A * B)
+        return Truth(x, V, {"a": [f"a{k}" for k in ia], "b": [f"b{k}" for k in ib]})
+
+    return draw
+
+
+def fanned(n: int) -> Callable[..., Truth]:
+    """Independent rows in groups of 5 whose spread grows with the distance of x from its middle."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        x = rng.standard_normal(n)
+        return Truth(x, np.diag(0.2 + x**2), {"g": [f"g{k // 5}" for k in range(n)]})
+
+    return draw
+
+
+def endogenous(G: int, m: int, tie: float) -> Callable[..., Truth]:
+    """Group effects that go with the group means of x: 0.5 is the coefficient within groups."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        g = np.repeat(np.arange(G), m)
+        u = rng.standard_normal(G)
+        x = rng.standard_normal(G * m) + u[g]
+        V = 0.2 * same(g) + 0.8 * np.eye(G * m)
+        return Truth(x, V, {"g": [f"g{k}" for k in g]}, mean=tie * u[g])
+
+    return draw
+
+
+def noisy(n: int, rho: float, share: float, predictor: str) -> Callable[..., Truth]:
+    """A slow first-order process under row noise: no first-order process, so the ar1 model is wrong."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        truth = series(n, rho, predictor)(rng)
+        return Truth(truth.x, share * truth.V + (1 - share) * np.eye(n), truth.columns)
+
+    return draw
+
+
+def seasonal(n: int, period: int) -> Callable[..., Truth]:
+    """Errors that repeat, fading, after one period: correlated at that lag and hardly before it."""
+
+    def draw(rng: np.random.Generator) -> Truth:
+        t = np.arange(n)
+        lag = np.abs(t[:, None] - t[None])
+        V = np.where(lag % period == 0, 0.7 ** (lag / period), 0.0)
+        x = np.concatenate([ar(rng, n, 0.0)[:period]] * (n // period + 1))[:n] + 0.3 * rng.standard_normal(n)
+        return Truth(x, V, {"t": t})
+
+    return draw
