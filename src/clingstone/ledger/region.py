@@ -17,7 +17,7 @@ from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.fits import ErrorModel, Fits
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 
 RAYS = {2: 24, 3: 48}  # directions of the first round, by number of parameters; 64 above
 SECOND = 10  # directions from each extreme point in the second round
@@ -59,7 +59,12 @@ def loglik(algebra: Chosen, theta: Array, response: Response) -> tuple[float, fl
 
 
 def region(fits: Fits, node: frozenset[str], confidence: float) -> Region:
-    """Sample the likelihood region of a node of the first column of y. Raises NotSupported."""
+    """The likelihood region of a node of the first column of y, sampled once. Raises NotSupported."""
+    place = ("likelihood region", node, confidence, fits.run.limits, fits.run.settings.seed)
+    return kept(fits.response, place, lambda: _sampled(fits, node, confidence))
+
+
+def _sampled(fits: Fits, node: frozenset[str], confidence: float) -> Region:
     fit = fits[node]
     algebra = fits.algebra(node)
     best = np.asarray(fit.theta[:, 0], dtype=float)
