@@ -108,11 +108,14 @@ class SerialPiece:
 
     Its variance in the ledger's sense is |ρ|σ², what neighbours in time share; the other (1 − |ρ|)σ²
     counts as row noise. So σ²R = |ρ|σ²K + (1 − |ρ|)σ²I with K of unit diagonal.
+
+    fading : ρ cannot be negative and is searched by its rate, also where times are whole steps.
     """
 
     key: str
     design: Design
     series: Series
+    fading: bool = False
 
     @property
     @once
@@ -122,7 +125,7 @@ class SerialPiece:
     @property
     def whole(self) -> bool:
         """Whole steps between rows, some of them odd: only then can ρ be negative."""
-        if self.series.tick is None:
+        if self.fading or self.series.tick is None:
             return False
         return bool(np.any(np.round(self.links.lengths[0]).astype(np.int64) % 2 == 1))
 

@@ -9,6 +9,7 @@ from clingstone.remedies.periods import PanelHac
 from clingstone.remedies.refit import explain, refit
 from clingstone.remedies.remedy import Remedy
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
+from clingstone.remedies.serial import Arma, Car1
 from clingstone.remedies.spatial import SpatialError
 
 REMEDIES: tuple[Remedy, ...] = (
@@ -17,6 +18,8 @@ REMEDIES: tuple[Remedy, ...] = (
     ClusterRobust(),
     Gls("mixed-intercept", df="kenward-roger"),
     Gls("ar1"),
+    Car1(),
+    Arma(),
     Hac(),
     PanelHac(),
     Gls("spatial-gls"),

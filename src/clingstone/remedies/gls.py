@@ -20,7 +20,7 @@ from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import Joint, positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, multi
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Remedy, multi
 from clingstone.remedies.words import bound_notes, gls_account
 
 if TYPE_CHECKING:
@@ -306,8 +306,8 @@ class Gls:
         rule = "satterthwaite" if self.df == "kenward-roger" and not kenward else self.df
         return GlsReady(self, design, names, W, _RULES[rule], components)
 
-    def conventions(self) -> tuple[tuple[str, Gls], ...]:
-        out = []
+    def conventions(self) -> tuple[tuple[str, Remedy], ...]:
+        out: list[tuple[str, Remedy]] = []
         if self.df == "kenward-roger":
             out.append(
                 (
@@ -323,6 +323,11 @@ class Gls:
                 replace(self, df="normal", estimation="ML"),
             ),
         ]
+        if self.id == "ar1":
+            from clingstone.remedies.praiswinsten import PraisWinsten
+
+            words = "Prais–Winsten: ρ from the residuals in two steps, n − p df"
+            out.append((words, PraisWinsten(self.at, self.limits)))
         return tuple(out)
 
 

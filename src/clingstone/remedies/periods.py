@@ -41,9 +41,7 @@ class PanelHac:
     name: ClassVar[str] = "robust to shocks that series share and to dependence along time"
     covers: ClassVar[frozenset[Family]] = frozenset({"serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(
-        parts=frozenset({"serial"}), counts={"series": 2}, known_design=True, unweighted=True
-    )
+    needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "driscoll-kraay-1998"
 
     def abouts(self, design: Design) -> tuple[str, ...]:
