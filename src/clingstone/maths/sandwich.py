@@ -49,6 +49,7 @@ def adjust(M: Array, W: Array, power: Power) -> Adjusted:
     a, b = np.empty((k, G, p)), np.empty((k, G, p))
     lost, at = np.zeros(k), np.zeros(k, dtype=np.int64)
     size = np.sum(W**2, axis=0)
+    size = np.where(size > 0, size, 1.0)
     for start in range(0, G, 4096):  # chunks keep the eigenvectors of many clusters from piling up
         part = slice(start, start + 4096)
         values, vectors = np.linalg.eigh(M[part])
@@ -177,3 +178,17 @@ def cluster_factor(kind: str, G: int, n: int, p: int) -> float:
     if kind == "CR1S":
         return G / (G - 1) * (n - 1) / (n - p)
     return 1.0
+
+
+# ---- crossed clusters ------------------------------------------------------------------
+
+
+def clipped(meat: Array) -> tuple[Array, Array]:
+    """A symmetric meat (p, p, B) with negative eigenvalues set to zero, and its eigenvalues (p, B), rising.
+
+    In the basis Q the result does not depend on units or coding of X, for those only rotate the meat.
+    """
+    values, vectors = np.linalg.eigh(np.moveaxis((meat + np.swapaxes(meat, 0, 1)) / 2, -1, 0))
+    kept = np.einsum("bij,bj,bkj->ikb", vectors, np.maximum(values, 0.0), vectors)
+    tiny = np.abs(values) <= 1e-12 * np.abs(values).max(axis=1, keepdims=True)
+    return np.asarray(kept), np.where(tiny, 0.0, values).T

@@ -13,7 +13,8 @@ from clingstone.design.response import Response
 from clingstone.maths import reference, sandwich
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
-from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.needs import Family, Limits, Needs, Refusal
+from clingstone.remedies.clusters import clusters, covered, levels
 from clingstone.remedies.linear import Joint, LinearReady, few_df, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand
 
@@ -207,7 +208,6 @@ class HeteroscedasticityRobust:
 
 # ---- cluster-robust -----------------------------------------------------------------------
 
-_WITHIN = ("same", "nests")
 CR = Literal["CR0", "CR1", "CR1S", "CR2", "CR3"]
 _CR_FACTOR = {
     "CR0": "none",
@@ -298,43 +298,22 @@ class ClusterRobust:
         return f"cluster-robust, by {self.at}" if self.at else "cluster-robust"
 
     def abouts(self, design: Design) -> tuple[str, ...]:
-        """Partitions of two cells or more that are not one row per cell; equal ones once."""
-        found: dict[str, Partition] = {}
-        for key, part in design.partitions.items():
-            if not 2 <= part.count < design.n:
-                continue
-            if all(part.relation(other) != "same" for other in found.values()):
-                found[key] = part
-        return tuple(found)
+        return levels(design)
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         """Clusters cover what lies wholly within them."""
-        design, part = fits.design, _clusters(fits.design, self.at)
-        out: set[Family] = set()
-        if design.group is not None and any(part.relation(g) in _WITHIN for g in design.group.levels):
-            out.add("group")
-        if design.serial is not None and part.relation(design.serial.part) in _WITHIN:
-            out.add("serial")
-        return frozenset(out)
+        return covered(fits.design, clusters(fits.design, self.at))
 
     def working(self, fits: Fits) -> ErrorModel | None:
         return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> ClusterReady:
         positive_m(design)
-        part = _clusters(design, self.at)
+        part = clusters(design, self.at)
         names, W = reported(design)
         power = self.kind if self.kind in ("CR2", "CR3") else "CR0"
         weights = sandwich.adjust(design.scores(part), W, power)
-        unusable: Mapping[str, Refusal] = {
-            name: Refusal(
-                f"{self.at} {part.labels[weights.at[j]]} alone decides it, so how it would differ "
-                "between clusters cannot be seen",
-                f"A second {self.at} of that kind would be needed.",
-            )
-            for j, name in enumerate(names)
-            if weights.lost[j] > 1e-8
-        }
+        unusable: Mapping[str, Refusal] = decided_by_one(weights, part, names, self.at)
         own = self.df == "satterthwaite"
         if own:
             df = sandwich.cluster_df(weights.a, weights.b)
@@ -371,22 +350,19 @@ class ClusterRobust:
         )
 
 
-def _clusters(design: Design, at: str) -> Partition:
-    part = design.partitions.get(at)
-    if part is None:
-        known = ", ".join(design.partitions) or "none"
-        raise NotSupported(f"the design has no partition named {at!r}", f"Known: {known}.")
-    if part.count < 2:
-        raise NotSupported(
-            f"there is one {at}; clusters are compared with each other, so at least two are needed",
-            "Use a remedy for dependence inside one series or one map, or a finer level.",
+def decided_by_one(
+    weights: sandwich.Adjusted, part: Partition, names: tuple[str, ...], at: str
+) -> dict[str, Refusal]:
+    """Rows that a single cluster decides, so that its scores say nothing of how clusters differ."""
+    return {
+        name: Refusal(
+            f"{at} {part.labels[weights.at[j]]} alone decides it, so how it would differ between clusters "
+            "cannot be seen",
+            f"A second {at} of that kind would be needed.",
         )
-    if part.count == design.n:
-        raise NotSupported(
-            f"every row is a {at} of its own, so clusters hold no repeated rows",
-            "Use heteroscedasticity-robust, which is the same thing here.",
-        )
-    return part
+        for j, name in enumerate(names)
+        if weights.lost[j] > 1e-8
+    }
 
 
 def hotelling_joint(wald: Array, q: int, eta: float) -> Joint | None:

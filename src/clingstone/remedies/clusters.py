@@ -1,0 +1,102 @@
+"""What every remedy that works on clusters asks of them: their partition, their arms, their number."""
+
+from __future__ import annotations
+
+import numpy as np
+
+from clingstone.design.design import Design, rows_of
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, NotSupported, Refusal
+
+WITHIN = ("same", "nests")
+FEW_TREATED = 3  # clusters in the smaller arm below which no resampling of clusters can be trusted
+SOME_TREATED = 6  # and below which it leans on equal variances (MacKinnon & Webb 2017, 2018)
+
+
+def clusters(design: Design, at: str) -> Partition:
+    """The partition named ``at``. Raises NotSupported when its cells cannot serve as clusters."""
+    part = design.partitions.get(at)
+    if part is None:
+        known = ", ".join(design.partitions) or "none"
+        raise NotSupported(f"the design has no partition named {at!r}", f"Known: {known}.")
+    if part.count < 2:
+        raise NotSupported(
+            f"there is one {at}; clusters are compared with each other, so at least two are needed",
+            "Use a remedy for dependence inside one series or one map, or a finer level.",
+        )
+    if part.count == design.n:
+        raise NotSupported(
+            f"every row is a {at} of its own, so clusters hold no repeated rows",
+            "Use heteroscedasticity-robust, which is the same thing here.",
+        )
+    return part
+
+
+def levels(design: Design) -> tuple[str, ...]:
+    """Partitions of two cells or more that are not one row per cell; equal ones once."""
+    found: dict[str, Partition] = {}
+    for key, part in design.partitions.items():
+        if not 2 <= part.count < design.n:
+            continue
+        if all(part.relation(other) != "same" for other in found.values()):
+            found[key] = part
+    return tuple(found)
+
+
+def group_levels(design: Design) -> tuple[str, ...]:
+    """Those of ``levels`` that are group levels."""
+    groups = design.group
+    return () if groups is None else tuple(key for key in levels(design) if key in groups)
+
+
+def covered(design: Design, part: Partition) -> frozenset[Family]:
+    """The families whose dependence lies wholly within the clusters."""
+    out: set[Family] = set()
+    if design.group is not None and any(part.relation(g) in WITHIN for g in design.group.levels):
+        out.add("group")
+    if design.serial is not None and part.relation(design.serial.part) in WITHIN:
+        out.add("serial")
+    return frozenset(out)
+
+
+def arms(design: Design, part: Partition) -> dict[str, int]:
+    """For each two-valued column: clusters that hold the rarer of its values."""
+    X = rows_of(design, design.Q @ design.basis.R)
+    out = {}
+    for j, name in enumerate(design.names):
+        low, high = X[:, j].min(), X[:, j].max()
+        near = 1e-9 * max(abs(low), abs(high))
+        upper = X[:, j] >= high - near
+        if high - low > near and np.all(upper | (X[:, j] <= low + near)):
+            held = (len(np.unique(part.codes[upper])), len(np.unique(part.codes[~upper])))
+            out[name] = min(held)
+    return out
+
+
+def few_treated(design: Design, part: Partition, at: str) -> tuple[dict[str, Refusal], tuple[str, ...]]:
+    """Coefficients that too few clusters carry, and sentences on those that few do."""
+    refused, notes = {}, []
+    for name, held in arms(design, part).items():
+        if held < FEW_TREATED:
+            refused[name] = Refusal(
+                f"only {held} of {part.count} clusters of {at} hold the rarer value of it, and resampling "
+                "clusters says nothing about so few",
+                "Permuting what was assigned (randomisation, with assigned=), or means of each group, are "
+                "still possible.",
+            )
+        elif held < min(SOME_TREATED, part.count / 2):
+            notes.append(
+                f"Only {held} of {part.count} clusters of {at} hold the rarer value of {name}: its interval "
+                "leans on equal variances in both kinds of cluster."
+            )
+    return refused, tuple(notes)
+
+
+def rank_note(part: Partition, p: int) -> tuple[str, ...]:
+    """A sentence where the clusters are too few for the covariance of all coefficients at once."""
+    if part.count > p:
+        return ()
+    return (
+        f"{part.count} clusters cannot carry the covariance of {p} coefficients at once: it has deficient "
+        f"rank. Single intervals stand; a joint test of {part.count} coefficients or more does not.",
+    )
