@@ -251,15 +251,17 @@ def test_a_ratio_at_its_lower_bound_is_zero() -> None:
     assert np.array_equal(gram.QQ, np.eye(f.design.p))
 
 
-def test_levels_that_cross_are_dense_when_small_and_refused_when_large() -> None:
+def test_what_does_not_stack_is_dense_when_small_and_refused_when_large() -> None:
     rng, y, x = table(120, 10)
-    groups = {"judge": rng.integers(0, 8, 120), "wine": rng.integers(0, 8, 120)}
-    assert isinstance(fits(y, x, groups=groups).algebra({"group:judge", "group:wine"}), Dense)
-    small = fits(y, x, groups=groups, limits=Limits(dense_rows=100))
-    with pytest.raises(NotSupported, match="judge, wine cut across one another") as stop:
-        small.algebra({"group:judge", "group:wine"})
+    groups = {"judge": rng.integers(0, 8, 120)}
+    series, time = np.repeat(np.arange(6), 20), np.tile(np.arange(20), 6)
+    where = {"groups": groups, "series": series, "time": time}
+    assert isinstance(fits(y, x, **where).algebra({"group:judge", "serial"}), Dense)
+    small = fits(y, x, **where, limits=Limits(dense_rows=100))
+    with pytest.raises(NotSupported, match="judge, t.* cut across one another") as stop:
+        small.algebra({"group:judge", "serial"})
     assert "nest" in stop.value.hint
     # What cannot be had together is left out of the joint model, with the reason.
     assert small.full_node == {"group:judge"}
-    assert "cut across" in small.left_out["group:wine"].reason
-    assert any("wine is not in the joint model" in line for line in small.full.history)
+    assert "cut across" in small.left_out["serial"].reason
+    assert any("serial is not in the joint model" in line for line in small.full.history)

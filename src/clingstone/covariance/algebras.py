@@ -20,6 +20,7 @@ import numpy as np
 from clingstone.covariance.base import Pieces
 from clingstone.covariance.bundles import SlopePiece, pieces_of
 from clingstone.covariance.components import Component, slope_of
+from clingstone.covariance.crossed import Crossed, crossed
 from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
 from clingstone.covariance.sloped import Sloped, sloped
 from clingstone.design.design import Design
@@ -223,7 +224,7 @@ class Dense(Pieces):
         return reml.forward(self._factor(theta), block)
 
 
-Chosen = Layered | Sloped | Dense
+Chosen = Layered | Sloped | Crossed | Dense
 
 
 def choose(design: Design, components: Sequence[Component], limits: Limits) -> Chosen:
@@ -236,6 +237,9 @@ def choose(design: Design, components: Sequence[Component], limits: Limits) -> C
     layered = stack(design, pieces)
     if layered is not None:
         return layered
+    cut = crossed(design, pieces)
+    if cut is not None:
+        return cut
     if design.n <= limits.dense_rows:
         return Dense(design, pieces)
     names = ", ".join(component.label for component in components)
