@@ -258,7 +258,7 @@ def test_what_does_not_stack_is_dense_when_small_and_refused_when_large() -> Non
     where = {"groups": groups, "series": series, "time": time}
     assert isinstance(fits(y, x, **where).algebra({"group:judge", "serial"}), Dense)
     small = fits(y, x, **where, limits=Limits(dense_rows=100))
-    with pytest.raises(NotSupported, match="judge, t.* cut across one another") as stop:
+    with pytest.raises(NotSupported, match=r"judge, t.* cut across one another") as stop:
         small.algebra({"group:judge", "serial"})
     assert "nest" in stop.value.hint
     # What cannot be had together is left out of the joint model, with the reason.
