@@ -3,19 +3,35 @@
 from __future__ import annotations
 
 from clingstone.needs import InputError
+from clingstone.remedies.between import WithinBetween
 from clingstone.remedies.gls import Gls
+from clingstone.remedies.groupt import GroupT
+from clingstone.remedies.jackknife import ClusterJackknife
 from clingstone.remedies.longrun import Hac
+from clingstone.remedies.means import GroupMeans
+from clingstone.remedies.multiway import MultiwayCluster
 from clingstone.remedies.periods import PanelHac
+from clingstone.remedies.randomisation import Randomisation
 from clingstone.remedies.refit import explain, refit
 from clingstone.remedies.remedy import Remedy
+from clingstone.remedies.resampled import WildClusterBootstrap
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
 from clingstone.remedies.serial import Arma, Car1
 from clingstone.remedies.spatial import SpatialError
+from clingstone.remedies.within import FixedEffects
 
 REMEDIES: tuple[Remedy, ...] = (
     Ordinary(),
     HeteroscedasticityRobust(),
     ClusterRobust(),
+    ClusterJackknife(),
+    WildClusterBootstrap(),
+    MultiwayCluster(),
+    Randomisation(),
+    GroupMeans(),
+    GroupT(),
+    FixedEffects(),
+    WithinBetween(),
     Gls("mixed-intercept", df="kenward-roger"),
     Gls("ar1"),
     Car1(),

@@ -148,7 +148,7 @@ class WildReady(ResampledReady):
                 ("smallest p that can come out", f"{self.least:.2g}"),
                 ("interval", "the values that are not rejected, found by inverting the test"),
             ),
-            source="cameron-gelbach-miller-2008, roodman-2019, mackinnon-webb-2018",
+            source="cameron-gelbach-miller-2008, roodman-2019, webb-2023, mackinnon-webb-2018",
         )
 
     @property
