@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from clingstone.needs import InputError
 from clingstone.remedies.between import WithinBetween
+from clingstone.remedies.components import SpatialComponents
 from clingstone.remedies.gls import Gls
 from clingstone.remedies.groupt import GroupT
 from clingstone.remedies.jackknife import ClusterJackknife
@@ -13,11 +14,13 @@ from clingstone.remedies.multiway import MultiwayCluster
 from clingstone.remedies.periods import PanelHac
 from clingstone.remedies.randomisation import Randomisation
 from clingstone.remedies.refit import explain, refit
+from clingstone.remedies.regions import RegionCluster
 from clingstone.remedies.remedy import Remedy
 from clingstone.remedies.resampled import WildClusterBootstrap
 from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust, Ordinary
 from clingstone.remedies.serial import Arma, Car1
 from clingstone.remedies.spatial import SpatialError
+from clingstone.remedies.spatialhac import SpatialHac
 from clingstone.remedies.within import FixedEffects
 
 REMEDIES: tuple[Remedy, ...] = (
@@ -40,6 +43,9 @@ REMEDIES: tuple[Remedy, ...] = (
     PanelHac(),
     Gls("spatial-gls"),
     SpatialError(),
+    SpatialHac(),
+    SpatialComponents(),
+    RegionCluster(),
     Gls("joint"),
 )
 

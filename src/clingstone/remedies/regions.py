@@ -1,0 +1,229 @@
+"""Ordinary least squares with a few large regions of the map as clusters."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, ClassVar
+
+import numpy as np
+import numpy.typing as npt
+from scipy.spatial.distance import cdist
+
+from clingstone.design.design import Design
+from clingstone.display import significant
+from clingstone.maths import sandwich
+from clingstone.maths.once import Array, frozen, kept
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, Limits, Needs, NotSupported
+from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.sandwich import ClusterReady
+from clingstone.remedies.spatialhac import spatial_node
+from clingstone.structure.spatial import Sites
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import ErrorModel, Fits
+
+COUNTS = (12, 8, 6, 4)  # of regions, the most first
+STARTS, ROUNDS = 20, 60
+SAMPLE = 5000  # sites that place the centres
+SHARE = 1 / 3  # of an even share of the rows that every region must hold
+
+
+@dataclass(frozen=True, eq=False)
+class Regions:
+    """Sites in compact regions. codes (S,). radius : of a disc as spread out as a region, median."""
+
+    codes: npt.NDArray[np.int32]
+    count: int
+    radius: float
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class RegionReady(ClusterReady):
+    """regions : the clusters on the map. reach : practical range of the fitted covariance, or NaN."""
+
+    regions: Regions
+    reach: float
+    unit: str
+
+    def account(self, fits: Fits) -> Account:
+        found = super().account(fits)
+        unit = f" {self.unit}" if self.unit else ""
+        own = (
+            ("regions", f"{self.regions.count}, compact and of like size"),
+            ("radius of a region", f"{significant(self.regions.radius, 3)}{unit}"),
+            ("practical range of the fitted dependence", f"{significant(self.reach, 3)}{unit}"),
+        )
+        return replace(found, items=(*own, *found.items[1:]), source="bester-conley-hansen-2011")
+
+
+@dataclass(frozen=True)
+class RegionCluster:
+    """Cluster-robust over a few large regions, factor G/(G − 1), t with G − 1 df.
+
+    Regions are taken as independent, which holds only where the dependence fades well inside one:
+    the practical range must not exceed half of a region's radius. The largest of 12, 8, 6 and 4 that
+    meets this is used (Bester, Conley & Hansen 2011).
+    """
+
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    count: int | None = None
+    id: ClassVar[str] = "region-cluster"
+    name: ClassVar[str] = "cluster-robust, by region of the map"
+    covers: ClassVar[frozenset[Family]] = frozenset({"spatial"})
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True)
+    source: ClassVar[str] = "bester-conley-hansen-2011"
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return ("",)
+
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        """Also groups and series that lie within one place each."""
+        design = fits.design
+        out: set[Family] = {"spatial"}
+        if design.spatial is not None:
+            part = design.spatial.part
+            if design.group is not None and all(
+                part.relation(g) in ("same", "nests") for g in design.group.levels
+            ):
+                out.add("group")
+            if design.serial is not None and part.relation(design.serial.part) in ("same", "nests"):
+                out.add("serial")
+        return frozenset(out)
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        node = spatial_node(fits)
+        return None if node is None else fits[node]
+
+    def prepare(self, design: Design, working: ErrorModel | None = None) -> RegionReady:
+        positive_m(design)
+        sites = design.spatial
+        if sites is None:
+            raise NotSupported("no places were declared", "Name coords=.")
+        if sites.count < self.limits.sites_estimate:
+            raise NotSupported(
+                f"{sites.count} distinct places; regions need {self.limits.sites_estimate}",
+                "More places would be needed.",
+            )
+        reach = _reach(working)
+        regions = self._chosen(sites, reach)
+        names, W = reported(design)
+        codes = regions.codes[sites.part.codes]
+        labels = tuple(f"region {g + 1}" for g in range(regions.count))
+        part = Partition(f"region:{regions.count}", frozen(codes), labels)
+        weights = kept(
+            design,
+            ("region weights", regions.count),
+            lambda: sandwich.adjust(design.scores(part), W, "CR0"),
+        )
+        df = np.full(len(names), part.count - 1.0)
+        unusable = few_df(names, df)
+        stop_if_none_left(names, unusable)
+        return RegionReady(
+            design,
+            names,
+            W,
+            df[:, None],
+            "regions − 1",
+            unusable,
+            kind="CR1",
+            at="region",
+            part=part,
+            weights=weights,
+            own_df=False,
+            regions=regions,
+            reach=reach,
+            unit=sites.unit,
+        )
+
+    def _chosen(self, sites: Sites, reach: float) -> Regions:
+        smallest = None
+        for count in COUNTS if self.count is None else (self.count,):
+            found = _regions(sites, count)
+            if found is None:
+                continue
+            if self.count is not None or np.isnan(reach) or reach <= found.radius / 2:
+                return found
+            smallest = found
+        if smallest is None:
+            raise NotSupported(
+                "the places cannot be cut into four regions of like size",
+                "Use spatial-gls or spatial-components.",
+            )
+        unit = f" {sites.unit}" if sites.unit else ""
+        raise NotSupported(
+            f"the dependence reaches {significant(reach, 2)}{unit}, and four regions have a radius of "
+            f"{significant(smallest.radius, 2)}{unit}: they would not be independent",
+            "Use spatial-gls or spatial-components, or a wider map.",
+        )
+
+    def conventions(self) -> tuple[tuple[str, RegionCluster], ...]:
+        return tuple((f"{count} regions, whatever the range", replace(self, count=count)) for count in COUNTS)
+
+
+def _reach(working: ErrorModel | None) -> float:
+    """Practical range along the surface; NaN where no dependence between places was fitted."""
+    if working is None or "spatial.range" not in working.shape:
+        return float("nan")
+    return float(working.shape["spatial.range"][0])
+
+
+def _regions(sites: Sites, count: int) -> Regions | None:
+    """Regions by k-means, the best of 20 starts in which each holds a third of an even share of rows."""
+    return kept(sites, ("regions", count), lambda: _partitioned(sites, count))
+
+
+def _partitioned(sites: Sites, count: int) -> Regions | None:
+    rng = np.random.default_rng(0)
+    points, rows = sites.points, sites.part.sizes.astype(float)
+    some = np.arange(sites.count)
+    if sites.count > SAMPLE:
+        some = np.sort(rng.choice(sites.count, SAMPLE, replace=False))
+    best: tuple[float, npt.NDArray[np.int32]] | None = None
+    for _ in range(STARTS):
+        centres = _settled(points[some], _spread_out(points[some], count, rng))
+        apart = cdist(points, centres)
+        codes = apart.argmin(axis=1).astype(np.int32)
+        held = np.bincount(codes, rows, count)
+        if held.min() < SHARE * rows.sum() / count:
+            continue
+        inertia = float(rows @ apart[np.arange(sites.count), codes] ** 2)
+        if best is None or inertia < best[0]:
+            best = inertia, codes
+    if best is None:
+        return None
+    codes = best[1]
+    return Regions(codes, count, float(sites.along(np.asarray(_radius(points, codes, count)))))
+
+
+def _radius(points: Array, codes: npt.NDArray[np.int32], count: int) -> float:
+    """A disc of radius r has a root mean square distance of r/√2 from its centre."""
+    out = []
+    for g in range(count):
+        own = points[codes == g]
+        out.append(np.sqrt(2 * np.mean(np.sum((own - own.mean(axis=0)) ** 2, axis=1))))
+    return float(np.median(out))
+
+
+def _spread_out(points: Array, count: int, rng: np.random.Generator) -> Array:
+    """Starting centres far from one another (k-means++)."""
+    centres = points[[int(rng.integers(len(points)))]]
+    while len(centres) < count:
+        near = cdist(points, centres).min(axis=1) ** 2
+        centres = np.vstack([centres, points[int(rng.choice(len(points), p=near / near.sum()))]])
+    return centres
+
+
+def _settled(points: Array, centres: Array) -> Array:
+    """Lloyd's rounds: each centre moves to the mean of the sites nearest to it."""
+    for _ in range(ROUNDS):
+        codes = cdist(points, centres).argmin(axis=1)
+        held = np.maximum(np.bincount(codes, minlength=len(centres)), 1)
+        moved = np.column_stack([np.bincount(codes, x, len(centres)) / held for x in points.T])
+        if np.allclose(moved, centres):
+            break
+        centres = moved
+    return centres
