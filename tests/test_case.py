@@ -211,6 +211,14 @@ def test_summary_is_plain() -> None:
         ("clinic/patient", "clinic", 12),
     ]
     assert summary.group[0].sizes == (11, 12, 12)  # the sixth row, of clinic 0, has no reading
+    assert summary.group[0].tree == (12, 12, 11)
+    assert summary.group[0].tree_labels == ("1", "2", "0")
+    assert summary.group[0].effective == pytest.approx(35**2 / (11**2 + 12**2 + 12**2))
+    # Patients stand under their clinic, in the order of the clinics.
+    assert [label.split("/")[0] for label in summary.group[1].tree_labels] == ["1"] * 4 + ["2"] * 4 + [
+        "0"
+    ] * 4
+    assert sum(summary.group[1].tree) == 35
     assert summary.serial is not None
     assert (summary.serial.series, summary.serial.spacing) == ("clinic/patient", "regular with gaps")
 

@@ -26,6 +26,7 @@ from clingstone.run import Settings
 
 MOST_LABELS = 40
 MOST_SITES = 2000
+MOST_TREE = 600
 
 
 @dataclass(frozen=True)
@@ -40,8 +41,11 @@ class GroupSummary:
     cv: float
     singletons: int
     parent: str = ""
-    labels: tuple[str, ...] = ()  # at most 40, for a tree
+    labels: tuple[str, ...] = ()  # at most 40
     sizes: tuple[int, ...] = ()  # of those labels
+    effective: float = float("nan")  # (Σ n_g)²/Σ n_g²: as many groups of equal size
+    tree: tuple[int, ...] = ()  # sizes of all groups, under their parents; () beyond 600 groups
+    tree_labels: tuple[str, ...] = ()  # of those, where there are at most 40
 
 
 @dataclass(frozen=True)
@@ -367,12 +371,19 @@ def _group_summaries(design: Design) -> tuple[GroupSummary, ...]:
         return ()
     levels = design.group.levels
     nested = design.group.arrangement == "nested"
-    return tuple(
-        _group_summary(level, levels[i - 1].key if nested and i else "") for i, level in enumerate(levels)
-    )
+    out, above = [], np.zeros(design.n, dtype=np.int64)
+    for i, level in enumerate(levels):
+        order = np.lexsort((-level.sizes, above[level.first]))
+        rank = np.empty(level.count, dtype=np.int64)
+        rank[order] = np.arange(level.count)
+        if nested:
+            above = rank[level.codes]
+        out.append(_group_summary(level, levels[i - 1].key if nested and i else "", order))
+    return tuple(out)
 
 
-def _group_summary(level: Partition, parent: str) -> GroupSummary:
+def _group_summary(level: Partition, parent: str, order: npt.NDArray[np.int64]) -> GroupSummary:
+    """order : of the groups in a tree, those of one parent next to each other."""
     sizes = level.sizes
     return GroupSummary(
         key=level.key,
@@ -385,6 +396,9 @@ def _group_summary(level: Partition, parent: str) -> GroupSummary:
         parent=parent,
         labels=level.labels[:MOST_LABELS],
         sizes=tuple(int(s) for s in sizes[:MOST_LABELS]),
+        effective=float(sizes.sum() ** 2 / np.sum(sizes.astype(float) ** 2)),
+        tree=tuple(int(s) for s in sizes[order]) if level.count <= MOST_TREE else (),
+        tree_labels=tuple(level.labels[g] for g in order) if level.count <= MOST_LABELS else (),
     )
 
 

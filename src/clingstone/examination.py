@@ -18,7 +18,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.derived import only, onto
 from clingstone.design.design import Contrast
 from clingstone.display import amount, instead
-from clingstone.evidence.finding import Evidence
+from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import Ledger, weigh
 from clingstone.needs import InputError, NotSupported
@@ -184,7 +184,7 @@ def _write(
         clingstone=version(),
         schema=SCHEMA,
         case=case.summary(),
-        evidence=evidence.findings,
+        evidence=tuple(_placed(f, case) for f in evidence.findings),
         ledger=ledger,
         advice=advice,
         refits=refits,
@@ -196,6 +196,11 @@ def _write(
     )
     cited: tuple[Reference, ...] = references_of(bare)
     return replace(bare, methods=methods_text(bare), references=cited)
+
+
+def _placed(f: Finding, case: Case) -> Finding:
+    """A finding whose rows are places in the user's table."""
+    return replace(f, rows=tuple(int(case.kept[r]) for r in f.rows)) if f.rows else f
 
 
 def version() -> str:

@@ -69,6 +69,15 @@ def test_a_constant_fit_has_no_variable_to_follow() -> None:
         Heteroscedasticity().read(made, About("fitted", "the fitted values"))
 
 
+def test_every_row_beyond_the_bound_is_named_furthest_first() -> None:
+    rng = np.random.default_rng(15)
+    y = rng.standard_normal(200)
+    y[[40, 7, 90]] += (16, -24, 10)
+    assert Outliers().read(fits(design(n=200), y), ALL).rows == (7, 40, 90)
+    quiet = Outliers().read(fits(design(n=200), rng.standard_normal(200)), ALL)
+    assert len(quiet.rows) == 1
+
+
 def test_outlier_is_named_by_row_and_equals_leaving_it_out() -> None:
     rng = np.random.default_rng(5)
     x, y = rng.standard_normal(30), rng.standard_normal(30)

@@ -13,6 +13,7 @@ from clingstone.evidence.mean import (
     FunctionalForm,
     Trend,
     TrendSurface,
+    contribution,
     explained,
     extension,
     f_test_given,
@@ -185,6 +186,27 @@ def test_curve_shows_what_is_left_along_the_covariate() -> None:
     np.testing.assert_allclose(repaired, found.y, atol=0.15)
     assert found.y[0] > 0.5
     assert min(found.y) < -0.8
+
+
+def test_partial_residuals_add_what_the_model_has_of_the_variable() -> None:
+    """By ordinary least squares from scratch: residual + b(x − x̄), and the bend on top of it."""
+    rng = np.random.default_rng(18)
+    x, z = rng.uniform(-2, 2, 300), rng.standard_normal(300)
+    y = 3 * x + x**2 + z + 0.2 * rng.standard_normal(300)
+    made = fits(design(x, z), y)
+    X = np.column_stack([np.ones(300), x, z])
+    b = np.linalg.lstsq(X, y, rcond=None)[0]
+    np.testing.assert_allclose(contribution(made.response, "x1"), b[1] * (x - x.mean()), atol=1e-9)
+    found = FunctionalForm().curve(made, About("x1", "a curve in x1"))
+    assert found.y_name == "mean partial residual"
+    edges = np.quantile(x, np.linspace(0, 1, 21)[1:-1])
+    codes = np.searchsorted(edges, x, side="left")
+    partial = y - X @ b + b[1] * (x - x.mean())
+    means = [partial[codes == k].mean() for k in range(20)]
+    np.testing.assert_allclose(found.y, means, atol=1e-9)
+    at, fitted = found.lines["fitted"]
+    np.testing.assert_allclose(np.diff(fitted) / np.diff(at), b[1])
+    np.testing.assert_allclose(found.lines["repaired"][1], found.y, atol=0.15)
 
 
 def test_covariates_that_cannot_bend_are_left_out() -> None:

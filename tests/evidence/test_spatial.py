@@ -169,11 +169,12 @@ def test_few_degrees_of_freedom_are_refused() -> None:
 def test_map_shows_mean_residuals_at_their_places() -> None:
     xy, site = np.array([[0.0, 5.0], [1.0, 7.0], [2.0, 9.0]]), [0, 0, 1, 2]
     made = fits(design(n=4, xy=xy, site=site, neighbours=(knn(xy, 1),)), [1.0, 3.0, 4.0, 8.0])
-    found = residual_map(made)
+    found = residual_map(made, made.design.neighbours[0].key)
     assert found is not None
     assert found.x == (0.0, 1.0, 2.0)
     assert found.y == (5.0, 7.0, 9.0)
     assert found.size == pytest.approx((-2.0, 0.0, 4.0))
+    assert found.links == ((0, 1), (1, 2))  # the nearest of the middle one is either; both joined once
 
 
 # ---- variogram --------------------------------------------------------------------------

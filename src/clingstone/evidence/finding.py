@@ -72,11 +72,15 @@ class Curve:
         "group-means": x rank, y mean residual, low and high its interval, size rows, labels groups.
         "variogram": x distance, y semivariance (1 without dependence), low and high a simultaneous
         envelope, size pairs.
-        "map": x and y are the coordinates of the sites, size the mean residual there (signed).
-        "function": x the covariate, y the mean residual in a bin, low and high its interval, size rows;
-        the line "repaired" is what a flexible curve would add.
+        "map": x and y are the coordinates of the sites, size the mean residual there (signed), links
+        the neighbours.
+        "function": x the covariate, y the mean partial residual in a bin, low and high its interval, size
+        rows; the line "repaired" is what a flexible curve gives, "fitted" what the model has.
+        "traces": the lines are residuals by elapsed time, one for each series shown; x, y, low and high
+        the median and quantiles of all rows by time where not all series are shown.
     x, y, low, high, size : one number per mark; labels per mark.
     lines : further named lines, each a pair of tuples (x, y).
+    links : pairs of places of marks that are joined.
     """
 
     kind: str
@@ -91,13 +95,15 @@ class Curve:
     unit: str = ""
     note: str = ""
     lines: Mapping[str, tuple[tuple[float, ...], tuple[float, ...]]] = field(default_factory=dict)
+    links: tuple[tuple[int, int], ...] = ()
 
 
 @dataclass(frozen=True)
 class Finding:
     """One test on the user's data: effect first, then statistic and p.
 
-    rows : rows of the design that it points at; ``Case.kept`` leads from them to the user's rows.
+    rows : places in the user's table, counted from 0, of the rows that it points at (in the design
+        until an examination has led them back). more : further curves beside the first.
     """
 
     structure: Family
@@ -126,6 +132,12 @@ class Finding:
     primary: bool = False
     curve: Curve | None = None
     rows: tuple[int, ...] = ()
+    more: tuple[Curve, ...] = ()
+
+    @property
+    def curves(self) -> tuple[Curve, ...]:
+        """All that figures of this finding draw."""
+        return (*((self.curve,) if self.curve is not None else ()), *self.more)
 
 
 @dataclass(frozen=True, repr=False)
@@ -171,7 +183,7 @@ class Evidence:
         """One row per finding, without the curves."""
         import pandas as pd
 
-        names = [f.name for f in fields(Finding) if f.name != "curve"]
+        names = [f.name for f in fields(Finding) if f.name not in ("curve", "more")]
         return pd.DataFrame([{k: getattr(f, k) for k in names} for f in self.findings], columns=names)
 
 
@@ -210,6 +222,8 @@ class Test(Protocol):
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading: ...
 
     def curve(self, fits: Fits, about: About) -> Curve | None: ...
+
+    def more(self, fits: Fits, about: About) -> tuple[Curve, ...]: ...
 
     def sentence(self, reading: Reading, about: About) -> str: ...
 

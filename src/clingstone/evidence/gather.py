@@ -154,6 +154,7 @@ def _finding(fits: Fits, item: Item, p: Array, adjusted: Array, code: npt.NDArra
         primary=test.primary and about.primary and not item.given,
         curve=_curve(fits, item),
         rows=shown.rows,
+        more=_more(fits, item),
     )
 
 
@@ -179,6 +180,12 @@ def _reading_order(key: str) -> tuple[int, str]:
 def _label(key: str) -> str:
     family, _, level = key.partition(":")
     return level_name(level) if family == "group" else {"serial": "order in time", "spatial": "place"}[family]
+
+
+def _more(fits: Fits, item: Item) -> tuple[Curve, ...]:
+    if item.reading is None or item.given or fits.response.B != 1:
+        return ()
+    return item.test.more(fits, item.about)
 
 
 def _curve(fits: Fits, item: Item) -> Curve | None:

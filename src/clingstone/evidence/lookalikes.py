@@ -22,6 +22,8 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 FITTED = "fitted"
+ALPHA = 0.05  # of Bonferroni's bound, for the rows that are named
+MOST_NAMED = 20
 
 
 @dataclass(frozen=True)
@@ -161,7 +163,7 @@ class Outliers(Plain):
             estimate=most,
             estimate_name="largest residual in standard deviations",
             n_used=int(usable.sum()),
-            rows=(int(np.flatnonzero(usable)[place[0]]),),
+            rows=_far(np.flatnonzero(usable), r[:, 0], design.m),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
@@ -171,6 +173,15 @@ class Outliers(Plain):
             f"{count(reading.n_used, 'row')}, "
             f"{p_value(column(reading.p))}."
         )
+
+
+def _far(rows: npt.NDArray[np.int64], r: Array, m: int) -> tuple[int, ...]:
+    """Rows beyond Bonferroni's 5 %, furthest first and at most 20; the furthest one where there are none."""
+    size = np.abs(np.nan_to_num(r))
+    with np.errstate(divide="ignore", invalid="ignore"):
+        t = size * np.sqrt((m - 1) / np.maximum(m - size**2, 0.0))
+    far = int(np.sum(2 * len(r) * stats.t.sf(t, m - 1) < ALPHA))
+    return tuple(int(i) for i in rows[np.argsort(-size, kind="stable")[: min(max(far, 1), MOST_NAMED)]])
 
 
 @dataclass(frozen=True)

@@ -10,6 +10,7 @@ from scipy import special, stats
 
 from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.display import freedom, p_value, percent, percent_bounds, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, around, degenerate, floats
@@ -255,8 +256,11 @@ class Trend(FunctionalForm):
         return ("A slow trend and slow dependence are hard to tell apart, so its p is seldom small.",)
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
-        assert fits.design.serial is not None
-        return function_curve(fits, about.key, fits.design.serial.elapsed, self.id)
+        serial = fits.design.serial
+        assert serial is not None
+        if serial.name in fits.design.covariates:
+            return None  # the curve in that covariate shows it
+        return function_curve(fits, about.key, serial.elapsed, self.id)
 
 
 @dataclass(frozen=True)
@@ -286,12 +290,19 @@ class TrendSurface(Trend):
 
 
 def function_curve(fits: Fits, key: str, x: Array, test: str) -> Curve | None:
-    """Mean residual in bins of x with its interval, and what the added columns would change there."""
+    """Mean partial residual in bins of x with its interval; what the model has there, and what the
+    added columns would make of it.
+
+    The partial residual adds to the residual what the terms in this variable alone contribute, taken
+    from its mean, and is the residual itself where the model has no such term.
+    """
     response = fits.response
     if bool(degenerate(response)[0]):
         return None
     wide = onto(response, extension(fits.design, test, key))
     added = response.residual[:, 0] - wide.residual[:, 0]
+    serial = fits.design.serial
+    own = contribution(response, key or (serial.name if serial is not None else ""))
     values, codes = np.unique(x, return_inverse=True)
     if len(values) > CURVE_BINS:
         edges = np.unique(np.quantile(x, np.linspace(0, 1, CURVE_BINS + 1))[1:-1])
@@ -306,7 +317,8 @@ def function_curve(fits: Fits, key: str, x: Array, test: str) -> Curve | None:
     half = special.stdtrit(wide.design.m, 0.5 + fits.run.settings.confidence / 2) * np.sqrt(
         float(wide.s2[0]) / size
     )
-    at, y = mean(x), mean(response.residual[:, 0])
+    at, fitted = mean(x), mean(own)
+    y = mean(response.residual[:, 0]) + fitted
     return Curve(
         kind="function",
         x=floats(at),
@@ -314,8 +326,24 @@ def function_curve(fits: Fits, key: str, x: Array, test: str) -> Curve | None:
         low=floats(y - half),
         high=floats(y + half),
         size=floats(size),
-        x_name=key or (fits.design.serial.name if fits.design.serial is not None else ""),
-        y_name="mean residual",
-        unit=fits.design.serial.unit if test == "trend" and fits.design.serial is not None else "",
-        lines={"repaired": (floats(at), floats(mean(added)))},
+        x_name=key or (serial.name if serial is not None else ""),
+        y_name="mean partial residual" if np.any(own) else "mean residual",
+        unit=serial.unit if test == "trend" and serial is not None else "",
+        lines={
+            "repaired": (floats(at), floats(fitted + mean(added))),
+            "fitted": (floats(at), floats(fitted)),
+        },
     )
+
+
+def contribution(response: Response, key: str) -> Array:
+    """(n,) what the terms made of one variable alone add to the fit, less its mean; else zeros."""
+    design = response.design
+    columns = [j for t in design.terms if t.variables == (key,) for j in t.columns]
+    if not columns:
+        return np.zeros(design.n)
+    b = design.basis.coefficients(response.coef)[:, 0]
+    added = design.Q @ (design.basis.R[:, columns] @ b[columns])
+    if design.root is not None:
+        added = added / design.root
+    return np.asarray(added - added.mean())

@@ -125,10 +125,13 @@ def floats(values: Any) -> tuple[float, ...]:
 
 
 class Plain:
-    """Defaults of a test: nothing fitted first, no curve."""
+    """Defaults of a test: nothing fitted first, no curves."""
 
     def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
         return ()
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
         return None
+
+    def more(self, fits: Fits, about: About) -> tuple[Curve, ...]:
+        return ()

@@ -40,6 +40,7 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 CURVE_SITES = 5000
+CURVE_LINKS = 5000
 DRAWS = 999
 GEARY_EXACT = 2000  # sites up to which the second statistic gets the exact tail too
 
@@ -204,7 +205,7 @@ class Moran(Plain):
         )
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
-        return residual_map(fits) if about.primary else None
+        return residual_map(fits, about.key) if about.primary else None
 
     def sentence(self, reading: Reading, about: About) -> str:
         size = f"{number(column(reading.estimate), 2)}{bounds(column(reading.low), column(reading.high))}"
@@ -320,8 +321,12 @@ class Geary(Plain):
         )
 
 
-def residual_map(fits: Fits) -> Curve | None:
-    """Mean residual at each site, at its coordinates; at most 5,000 sites, evenly by index."""
+def residual_map(fits: Fits, key: str) -> Curve | None:
+    """Mean residual at each site, at its coordinates, and the graph of neighbours.
+
+    At most 5,000 sites, evenly by index; the graph only where all are shown and it has at most 5,000
+    pairs, because more would hide the map.
+    """
     sites = sites_of(fits.design)
     values = fits.response.sums(sites.part)[:, 0] / fits.design.sizes(sites.part)
     rows = np.arange(sites.count)
@@ -337,4 +342,13 @@ def residual_map(fits: Fits) -> Curve | None:
         y_name=sites.names[1],
         unit=sites.unit if sites.kind == "planar" else "degrees",
         note=note,
+        links=_links(neighbours_of(fits.design, key)) if not note else (),
     )
+
+
+def _links(nb: Neighbours) -> tuple[tuple[int, int], ...]:
+    """Pairs of sites that are neighbours, each once."""
+    W = sparse.coo_array(nb.W)
+    i, j = np.minimum(W.row, W.col), np.maximum(W.row, W.col)
+    pairs = np.unique(np.stack([i, j], axis=1)[i < j], axis=0)
+    return tuple((int(a), int(b)) for a, b in pairs) if len(pairs) <= CURVE_LINKS else ()

@@ -10,11 +10,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.display import Cell, Column, Table, number, significant
+from clingstone.display import Cell, Column, Table, count, number, significant
 from clingstone.evidence.finding import Curve, Finding
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
-from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say
+from clingstone.writeup.panels import paint_traces
+from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, many, say, with_unit
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -37,15 +38,24 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
     taken: set[str] = set()
     lonlat = results.case.spatial is not None and results.case.spatial.kind == "lonlat"
     for f in results.evidence:
-        if f.curve is None or f.curve.kind not in PAINTERS or not f.curve.x:
-            continue
-        name = _name(f.curve, f.about, taken)
-        taken.add(name)
-        paint = _painter(f.curve, f.structure, lonlat)
-        quiet = f.structure in ("mean", "lookalike") and f.verdict == "not detected"
-        plate = Plate(name, _caption(f.curve, f), f.sentence, curve_table(f.curve), paint, quiet)
-        out.setdefault(f.structure, []).append(plate)
+        for curve in f.curves:
+            if curve.kind not in PAINTERS or not (curve.x or curve.lines):
+                continue
+            name = _name(curve, f.about, taken)
+            taken.add(name)
+            paint = _painter(curve, f.structure, lonlat)
+            quiet = f.structure in ("mean", "lookalike") and f.verdict == "not detected"
+            alt = _alt(curve, f)
+            plate = Plate(name, _caption(curve, f), alt, curve_table(curve), paint, quiet, curve.note)
+            out.setdefault(f.structure, []).append(plate)
     return out
+
+
+def _alt(curve: Curve, f: Finding) -> str:
+    """What a figure shows, in words: its finding; of residuals by time also what stands in the panels."""
+    if curve.kind != "traces":
+        return f.sentence
+    return f"Residuals by {curve.x_name or 'time'} in {count(len(curve.lines), 'panel')}. {f.sentence}"
 
 
 def _painter(curve: Curve, structure: str, lonlat: bool) -> Callable[[float], Figure]:
@@ -70,6 +80,7 @@ _CAPTIONS = {
     "variogram": "Half the mean squared difference by distance",
     "map": "Residuals on the map",
     "function": "Residuals against a predictor",
+    "traces": "Residuals by time, series by series",
 }
 
 
@@ -78,19 +89,23 @@ def _caption(curve: Curve, f: Finding) -> str:
     if curve.kind == "group-means" and curve.x_name:
         return f"Mean residual of each {curve.x_name}"
     if curve.kind == "function" and (curve.x_name or f.about):
-        return f"Residuals against {curve.x_name or f.about}"
+        start = "Partial residuals" if "partial" in curve.y_name else "Residuals"
+        return f"{start} against {curve.x_name or f.about}"
+    if curve.kind == "traces":
+        return words if len(curve.lines) > 1 else "Residuals by time"
     return words if f.structure != "lookalike" else f"{words}: {f.about_words or f.test}"
 
 
 def curve_table(curve: Curve) -> Table:
     """The marks of a curve, unrounded in a file."""
+    if curve.kind == "traces":
+        return _trace_table(curve)
     fields: list[tuple[str, str, Sequence[float | str]]] = []
     if curve.labels:
         fields.append(("label", curve.x_name or "label", curve.labels))
-    unit = f" ({curve.unit})" if curve.unit else ""
-    x_unit = unit if curve.kind in ("autocorrelation", "variogram", "map", "function") else ""
     if not curve.labels or curve.kind == "map":
-        fields.append(("x", (curve.x_name or "x") + x_unit, curve.x))
+        unit = curve.unit if curve.kind in ("autocorrelation", "variogram", "map", "function") else ""
+        fields.append(("x", with_unit(curve.x_name or "x", unit), curve.x))
     fields.append(("y", curve.y_name or "y", curve.y))
     for key, values in (("low", curve.low), ("high", curve.high)):
         if values:
@@ -105,16 +120,26 @@ def curve_table(curve: Curve) -> Table:
     return Table.of("Numbers behind the figure", columns, rows)
 
 
+def _trace_table(curve: Curve) -> Table:
+    columns = (
+        Column("series", "series"),
+        Column("x", with_unit(curve.x_name or "time", curve.unit), "right"),
+        Column("y", curve.y_name or "residual", "right"),
+    )
+    rows = [
+        [Cell(name, name), Cell(_shown(a), a), Cell(_shown(b), b)]
+        for name, (x, y) in curve.lines.items()
+        for a, b in zip(x, y, strict=True)
+    ]
+    return Table.of("Numbers behind the figure", columns, rows)
+
+
 def _shown(value: float) -> str:
     """Whole numbers as they are (counts, lags, ranks); others to three digits."""
     return number(value, 0) if value == round(value) and abs(value) < 1e7 else significant(value, 3)
 
 
 _SIZES = {"autocorrelation": "pairs", "variogram": "pairs", "group-means": "rows", "map": "mean residual"}
-
-
-def with_unit(name: str, unit: str) -> str:
-    return f"{name} ({unit})" if unit and name else name or unit
 
 
 def _band(panel: Axes, curve: Curve, x: np.ndarray) -> None:
@@ -255,8 +280,8 @@ def paint_map(curve: Curve, structure: str, width: float, lonlat: bool = False) 
     holds the residual."""
     x, y, value = (np.array(v, dtype=float) for v in (curve.x, curve.y, curve.size))
     stretch = 1 / max(0.1, math.cos(math.radians(float(y.mean())))) if lonlat else 1.0
-    across, up = float(np.ptp(x)) or 1.0, float(np.ptp(y)) * stretch or 1.0
-    tall = min(1.2 * width, max(0.35 * width, (width - 24) * up / across))
+    broad, high = float(np.ptp(x)) or 1.0, float(np.ptp(y)) * stretch or 1.0
+    tall = min(1.2 * width, max(0.35 * width, (width - 24) * high / broad))
     figure = blank(width, tall + 64)
     panel = axes(figure, 12, 8, width - 24, tall)
     panel.axis("off")
@@ -276,13 +301,18 @@ def paint_map(curve: Curve, structure: str, width: float, lonlat: bool = False) 
             linewidth=1.1,
             zorder=2 + above,
         )
+    if curve.links:
+        ends = np.array(curve.links)
+        across = np.column_stack([x[ends], np.full(len(ends), np.nan)]).ravel()
+        along = np.column_stack([y[ends], np.full(len(ends), np.nan)]).ravel()
+        panel.plot(across, along, color=LIGHT.faint, linewidth=0.8, zorder=0)
     panel.margins(0.05)
     _scale_bar(figure, panel, tall + 24, curve, lonlat, float(y.mean()))
     say(
         figure,
         0,
         tall + 52,
-        "filled: above the fit; hollow: below; area: size",
+        f"filled: above the fit; hollow: below; area: size{'; lines: neighbours' if curve.links else ''}",
         fontsize=SMALL - 0.5,
         color=LIGHT.muted,
     )
@@ -310,7 +340,7 @@ def _scale_bar(figure: Figure, panel: Axes, y: float, curve: Curve, lonlat: bool
 
     line = [12 / whole[0], (12 + pixels) / whole[0]]
     figure.add_artist(Line2D(line, [1 - y / whole[1]] * 2, color=LIGHT.ink, linewidth=2))
-    say(figure, 18 + pixels, y, f"{significant(length, 1)} {unit}".rstrip(), fontsize=SMALL)
+    say(figure, 18 + pixels, y, f"{significant(length, 1)} {many(unit)}".rstrip(), fontsize=SMALL)
 
 
 def paint_function(curve: Curve, structure: str, width: float) -> Figure:
@@ -342,4 +372,5 @@ PAINTERS: dict[str, Paint] = {
     "variogram": paint_variogram,
     "map": paint_map,
     "function": paint_function,
+    "traces": paint_traces,
 }

@@ -29,7 +29,8 @@ class Plate:
 
     name : stem of its files. caption : one line above it. alt : states its finding in words.
     table : the numbers behind it. paint : draws it at a width in CSS pixels.
-    quiet : nothing was detected in it, and a page may fold it away.
+    quiet : nothing was detected in it, and a page may fold it away. note : what a reader should know
+    of how it was drawn.
     """
 
     name: str
@@ -38,6 +39,7 @@ class Plate:
     table: Table
     paint: Callable[[float], Figure]
     quiet: bool = False
+    note: str = ""
 
     def svg(self, width: float = WIDE) -> str:
         """An SVG whose text is text and whose bytes depend on nothing but the numbers."""
@@ -115,6 +117,20 @@ def clip(text: str, room: float, size: float = TEXT) -> str:
     """A label shortened to about ``room`` pixels; the whole label stands in the table behind."""
     most = max(4, int(room / (0.56 * size)))
     return text if len(text) <= most else text[: most - 1].rstrip() + "…"
+
+
+TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year", "step")
+
+
+def many(unit: str) -> str:
+    """A unit behind a number or on an axis: days, but km."""
+    return f"{unit}s" if unit in TIMES else unit
+
+
+def with_unit(name: str, unit: str) -> str:
+    """The label of an axis; a unit that the name already says is left out."""
+    unit = "" if name.casefold() in (unit.casefold(), many(unit).casefold()) else many(unit)
+    return f"{name} ({unit})" if unit and name else name or unit
 
 
 def few_ticks(panel: Axes, which: str = "x", most: int = 5) -> None:
