@@ -15,7 +15,8 @@ from clingstone.maths.each import Grams, Minima, Places, minimise_each
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 
-BLOCK = 4_000_000  # doubles in the largest array of one evaluation
+BLOCK = 1_000_000  # doubles in the largest array of one evaluation: what a cache holds
+SMALL = 100_000  # entries up to which an indicator is kept as a plain matrix
 
 
 def each(algebra: Chosen, response: Response) -> Each | None:
@@ -124,68 +125,105 @@ class Each:
     # ---- rows, then levels -----------------------------------------------------------------
 
     def _rows(self, theta: Array, columns: Places) -> tuple[Grams, Loads | None]:
-        p, K = self.design.p, len(columns)
-        ss = self.response.ss[columns]
-        QQ, QE, logdet = np.repeat(np.eye(p)[None], K, axis=0), np.zeros((K, p)), np.zeros(K)
-        plain = self.algebra._plain(self.response)
-        load = None
-        if plain is not None:
-            load = Loads.repeat(plain.c, plain.TQ, plain.TE[:, columns])
+        forms = self._forms
         serial = self.algebra.serial
-        if serial is None:
-            return Grams(QQ, QE, ss, logdet), load
-        rho = serial.rho(self.algebra.own(serial, theta))
-        length, count = serial.links.lengths
-        phi, rest = correlations(rho, length)
-        EE = ss.copy()
-        for d, pair in enumerate(serial.links.forms):
-            for which, w in enumerate((phi[d] ** 2 / rest[d], -phi[d] / rest[d])):
-                qe, ee = self.response.gram(pair[which])
-                QQ += w[:, None, None] * self.design.gram(pair[which])
-                QE += w[:, None] * qe.T[columns]
-                EE += w * ee[columns]
-                if load is not None:
-                    c, TQ, TE = self.algebra._form_load(d, which, self.response)
-                    load = load.plus(w, c, TQ, TE[:, columns])
-        return Grams(QQ, QE, EE, count.astype(float) @ np.log(rest)), load
+        w, logdet = np.ones((len(columns), 1)), np.zeros(len(columns))
+        if serial is not None:
+            length, count = serial.links.lengths
+            phi, rest = correlations(serial.rho(self.algebra.own(serial, theta)), length)
+            pairs = np.stack([phi**2 / rest, -phi / rest], axis=1).reshape(-1, len(columns))
+            w = np.concatenate([w, pairs.T], axis=1)
+            logdet = count.astype(float) @ np.log(rest)
+        p = self.design.p
+        gram = Grams(
+            (w @ forms.QQ).reshape(-1, p, p),
+            np.matmul(w[:, None], forms.QE[columns])[:, 0],
+            np.einsum("kf,kf->k", w, forms.EE[columns]),
+            logdet,
+        )
+        if forms.c is None or forms.TQ is None or forms.TE is None:
+            return gram, None
+        cells = forms.c.shape[1]
+        return gram, Loads(
+            w @ forms.c,
+            (w @ forms.TQ).reshape(-1, cells, p),
+            np.matmul(w[:, None], forms.TE[columns])[:, 0],
+        )
+
+    @property
+    def _forms(self) -> Forms:
+        """R⁻¹ as a weighted sum of fixed forms: what each amounts to, the identity first."""
+        parts = self.algebra.chain
+        key = ("each forms", self.algebra.serial is not None, parts[0].part.key if parts else "")
+        return kept(self.response, key, self._stacked)
+
+    def _stacked(self) -> Forms:
+        design, response, algebra = self.design, self.response, self.algebra
+        p, B = design.p, response.B
+        QQ, QE, EE = [np.eye(p).ravel()], [np.zeros((p, B))], [response.ss]
+        plain = algebra._plain(response)
+        loads = [] if plain is None else [(plain.c, plain.TQ, plain.TE)]
+        for d, pair in enumerate(algebra.serial.links.forms if algebra.serial is not None else ()):
+            for which, form in enumerate(pair):
+                qe, ee = response.gram(form)
+                QQ.append(design.gram(form).ravel())
+                QE.append(qe)
+                EE.append(ee)
+                if plain is not None:
+                    loads.append(algebra._form_load(d, which, response))
+        c = TQ = TE = None
+        if loads:
+            c = np.stack([load[0] for load in loads])
+            TQ = np.stack([load[1].ravel() for load in loads])
+            TE = np.ascontiguousarray(np.stack([load[2] for load in loads]).transpose(2, 0, 1))
+        by_column = np.ascontiguousarray(np.stack(QE).transpose(2, 0, 1))
+        return Forms(np.stack(QQ), by_column, np.ascontiguousarray(np.stack(EE).T), c, TQ, TE)
+
+
+@dataclass(frozen=True, eq=False)
+class Forms:
+    """Gram and loads of F forms: QQ (F, pp), QE (B, F, p), EE (B, F); c (F, G), TQ (F, Gp), TE (B, F, G)."""
+
+    QQ: Array
+    QE: Array
+    EE: Array
+    c: Array | None
+    TQ: Array | None
+    TE: Array | None
 
 
 @dataclass(frozen=True, eq=False)
 class Loads:
-    """What the rows of each of G cells amount to, per column: c (G, K), TQ (G, K, p), TE (G, K)."""
+    """What the rows of each of G cells amount to, per column: c (K, G), TQ (K, G, p), TE (K, G)."""
 
     c: Array
     TQ: Array
     TE: Array
 
-    @classmethod
-    def repeat(cls, c: Array, TQ: Array, TE: Array) -> Loads:
-        K = TE.shape[1]
-        return cls(np.repeat(c[:, None], K, axis=1), np.repeat(TQ[:, None], K, axis=1), TE)
-
-    def plus(self, w: Array, c: Array, TQ: Array, TE: Array) -> Loads:
-        return Loads(self.c + w * c[:, None], self.TQ + w[:, None] * TQ[:, None], self.TE + w * TE)
-
     def lower(self, gram: Grams, ratio: Array) -> Grams:
         """The Grams once intercepts of variance ratio λ (K,) are added at these cells."""
-        w = ratio / (1 + ratio * self.c)
-        TQ = self.TQ.transpose(1, 2, 0)  # (K, p, G)
-        WQ = TQ * w.T[:, None]
+        w = ratio[:, None] / (1 + ratio[:, None] * self.c)
+        WQ = (self.TQ * w[..., None]).transpose(0, 2, 1)
         return Grams(
-            gram.QQ - np.matmul(WQ, TQ.transpose(0, 2, 1)),
-            gram.QE - np.matmul(WQ, self.TE.T[..., None])[..., 0],
-            gram.EE - np.einsum("gk,gk,gk->k", self.TE, w, self.TE),
-            gram.logdet + np.log1p(ratio * self.c).sum(axis=0),
+            gram.QQ - np.matmul(WQ, self.TQ),
+            gram.QE - np.matmul(WQ, self.TE[..., None])[..., 0],
+            gram.EE - np.einsum("kg,kg,kg->k", self.TE, w, self.TE),
+            gram.logdet + np.log1p(ratio[:, None] * self.c).sum(axis=1),
         )
 
     def shrunk(self, ratio: Array) -> Loads:
-        k = 1 / (1 + ratio * self.c)
+        k = 1 / (1 + ratio[:, None] * self.c)
         return Loads(self.c * k, self.TQ * k[..., None], self.TE * k)
 
     def lifted(self, up: Partition) -> Loads:
-        G, K, p = self.TQ.shape
-        TQ = up.sums(self.TQ.reshape(G, K * p)).reshape(up.count, K, p)
-        return Loads(up.sums(self.c), TQ, up.sums(self.TE))
+        """Added up to the cells of the next level."""
+        if up.n * up.count <= SMALL:
+            Z = kept(up, ("dense indicator",), lambda: np.asarray(up.indicator.toarray()))
+            return Loads(self.c @ Z.T, np.matmul(Z, self.TQ), self.TE @ Z.T)
+        K, G, p = self.TQ.shape
+        TQ = up.sums(np.ascontiguousarray(self.TQ.transpose(1, 0, 2)).reshape(G, K * p))
+        TQ = TQ.reshape(up.count, K, p).transpose(1, 0, 2)
+        return Loads(up.sums(self.c.T).T, TQ, up.sums(self.TE.T).T)
 
 
 def correlations(rho: Array, length: Array) -> tuple[Array, Array]:
