@@ -1,0 +1,209 @@
+"""Rehearse: y simulated on the user's own design, every remedy read on the same replicates."""
+
+from __future__ import annotations
+
+from collections.abc import Iterable, Mapping, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+from clingstone.advice.entries import Advice, Reason, Scores
+from clingstone.covariance.fits import Fits
+from clingstone.display import listed, number
+from clingstone.ledger.ledger import Ledger
+from clingstone.needs import InputError, NotSupported
+from clingstone.rehearsal import cost
+from clingstone.rehearsal.engine import Engine
+from clingstone.rehearsal.shelf import Shelf
+from clingstone.rehearsal.study import Counts, Job, Study, study, without
+from clingstone.rehearsal.tallies import Left, Rehearsal, pairs, scores, tallies
+from clingstone.rehearsal.truths import truths
+from clingstone.remedies import remedy as remedy_of
+
+LONG = 10_000  # replicates per truth of a long rehearsal, at the most
+FIRST = 1_000  # the first look at the ranking; later looks at twice as many each time
+SURE = 0.0025  # Monte-Carlo error at which a coverage is known well enough whatever it is
+BUILT = ("repaired-mean",)  # advice that is no remedy of its own
+
+Choices = Iterable[tuple[str, str]]
+
+
+@dataclass(frozen=True)
+class Plan:
+    """What is about to be run: a study, the replicates per truth, and who is not in it."""
+
+    study: Study
+    replicates: int
+    left: tuple[tuple[str, str, str], ...]
+
+
+def planned(fits: Fits, ledger: Ledger, choices: Choices, replicates: str | int = "auto") -> Plan:
+    """Truths, contenders and the number of replicates.
+
+    replicates : "auto" gives a short rehearsal, its size from a cost formula; a number is per truth, and
+    no remedy is left out for its cost.
+
+    Raises NotSupported when nothing can be rehearsed.
+    """
+    if not fits.design.known:
+        raise NotSupported(
+            "only residuals were given, so there is no model to rehearse intervals on",
+            "Give the data and the model formula, or a fitted model with its data.",
+        )
+    choices = tuple(choices)
+    wanted = [c for c in choices if c[0] not in BUILT]
+    found, left = study(fits, truths(fits, ledger), wanted)
+    left += [
+        (id, at, "it is built from another remedy on a wider model") for id, at in choices if id in BUILT
+    ]
+    if not found.terms or not found.contenders:
+        raise NotSupported("no remedy has an interval for a term in focus", "Name terms with focus=.")
+    if isinstance(replicates, int):
+        return Plan(found, replicates, tuple(left))
+    kept, dear, count = cost.affordable(found)
+    if not kept:
+        raise NotSupported("these data are too large for a short rehearsal", "Run clingstone rehearse.")
+    return Plan(without(found, kept), count, (*left, *dear))
+
+
+def rehearse(
+    plan: Plan, *, engine: Engine | None = None, folder: Path | None = None, stop_early: bool = False
+) -> Rehearsal:
+    """Run a plan.
+
+    folder : where finished chunks are put, and found again by a later run of the same plan.
+    stop_early : look at the ranking at fixed numbers of replicates and stop once it is settled.
+
+    Raises InputError when the folder holds the chunks of another plan.
+    """
+    found, run = plan.study, plan.study.fits.run
+    jobs = found.jobs(plan.replicates)
+    shelf = Shelf(folder, found, plan.replicates) if folder is not None else None
+    counts: dict[int, Counts] = {t: found.empty() for t in range(len(found.truths))}
+    stopped = f"after the {plan.replicates:,} replicates per truth that were planned"
+    with (engine or Engine()).open(found) as pool, run.progress("rehearsing", len(jobs)) as advance:
+        for stage in stages(jobs, found.chunk, stop_early):
+            held = {job: shelf.get(job) for job in stage} if shelf is not None else {}
+            todo = [job for job in stage if held.get(job) is None]
+            fresh = pool.map(todo)
+            for job in stage:
+                # Counts are added in the order of the jobs, whoever made them and whenever.
+                one = held.get(job)
+                if one is None:
+                    one = next(fresh)
+                    if shelf is not None:
+                        shelf.put(job, one)
+                counts[job.truth] = counts[job.truth].plus(one)
+                advance(1)
+            if stop_early and stage[-1] != jobs[-1] and settled(found, counts):
+                stopped = f"after {counts[0].size:,} replicates per truth, when the ranking was settled"
+                break
+    return told(plan, counts, stopped)
+
+
+def told(plan: Plan, counts: Mapping[int, Counts], stopped: str) -> Rehearsal:
+    """The counts as a plain Rehearsal."""
+    found = plan.study
+    settings = found.fits.run.settings
+    rows = tallies(found, counts)
+    return Rehearsal(
+        truths=found.truths,
+        tallies=rows,
+        pairs=pairs(found, counts),
+        scores=scores(rows, settings.confidence),
+        walks=(),
+        left_out=tuple(Left(*each) for each in plan.left),
+        replicates=counts[0].size,
+        confidence=settings.confidence,
+        seed=settings.seed,
+        stopped=stopped,
+    )
+
+
+# ---- when the ranking is settled -----------------------------------------------------------------
+
+
+def stages(jobs: Sequence[Job], chunk: int, stop_early: bool) -> list[tuple[Job, ...]]:
+    """The jobs cut at the looks: 1,000, 2,000, 4,000 … replicates per truth, by whole chunks."""
+    if not stop_early:
+        return [tuple(jobs)]
+    out, start, look = [], 0, FIRST
+    while start < len(jobs):
+        last = max(1, -(-look // chunk))
+        end = next((i for i, job in enumerate(jobs) if job.chunk >= last), len(jobs))
+        if end > start:
+            out.append(tuple(jobs[start:end]))
+        start, look = end, 2 * look
+    return out
+
+
+def settled(found: Study, counts: Mapping[int, Counts]) -> bool:
+    """Every remedy is clearly adequate or clearly not, so more replicates would not change who is named."""
+    table = scores(tallies(found, counts), found.fits.run.settings.confidence)
+    floor = table.confidence - 0.01
+
+    def clear(coverage: float, mcse: float) -> bool:
+        return mcse <= SURE or coverage - mcse >= floor or coverage + 2 * mcse < floor
+
+    return all(clear(row.coverage, row.mcse) for row in table.rows)
+
+
+# ---- into the advice -----------------------------------------------------------------------------
+
+
+def scores_for(found: Rehearsal, advice: Advice) -> Scores | None:
+    """The scores that may move an advice reached by the rules, or None when they may not.
+
+    Only remedies with the advised one's estimand compete, and only when the advised one was rehearsed
+    itself: an advice is not given up for a remedy that happens to be cheap to simulate.
+    """
+    if found.scores.get(advice.remedy, advice.at) is None:
+        return None
+    estimand = remedy_of(advice.remedy).estimand
+    rows = tuple(r for r in found.scores.rows if remedy_of(r.remedy).estimand == estimand)
+    return replace(found.scores, rows=rows)
+
+
+def reason(found: Rehearsal, advice: Advice, named: str) -> Reason | None:
+    """Why the rehearsal stands behind an advice; None where the advised remedy was not rehearsed or fails."""
+    row = found.scores.get(advice.remedy, advice.at)
+    if row is None or not found.scores.adequate(advice.remedy, advice.at):
+        return None
+    return Reason(
+        f"Rehearsed on this design, the intervals of {named} held the true value in at least "
+        f"{number(100 * row.coverage, 1)} % of replicates under each of {len(found.truths)} error models "
+        f"(Monte-Carlo error {number(100 * row.mcse, 1)} points), and no other remedy that covers the same and "
+        "did as well was narrower by more than 1 %.",
+        "rehearsed",
+        (("smallest coverage", number(row.coverage, 3)), ("replicates per truth", f"{found.replicates:,}")),
+        "",
+        "measured",
+    )
+
+
+def sentence(found: Rehearsal, remedy: str, at: str, named: str) -> str:
+    """For the methods section: what was simulated, how often, and what the reported intervals did."""
+    row = found.scores.get(remedy, at)
+    plain = found.scores.get("ordinary", "")
+    text = (
+        f"The analysis was rehearsed on this design: y was simulated {found.replicates:,} times under each of "
+        f"{len(found.truths)} error models ({listed([t.name for t in found.truths])}; seed {found.seed})"
+    )
+    if row is None:
+        return f"{text}; the reported remedy itself was not part of it."
+    text += (
+        f", and the {number(100 * found.confidence, 0)} % intervals of {named} held the true value in "
+        f"{number(100 * row.coverage, 1)} % of replicates or more (Monte-Carlo error "
+        f"{number(100 * row.mcse, 1)} points)"
+    )
+    if plain is not None and remedy != "ordinary":
+        text += f"; the ordinary intervals did so in {number(100 * plain.coverage, 1)} % or more"
+    return f"{text}. It cannot see a wrong mean or predictors that depend on the errors."
+
+
+def checked(replicates: int) -> int:
+    """A number of replicates that can be asked for. Raises InputError."""
+    if not 1 <= replicates <= 10_000_000:
+        raise InputError(
+            f"{replicates} replicates cannot be rehearsed", "Use a number from 1 to 10,000,000 per truth."
+        )
+    return replicates
