@@ -18,6 +18,7 @@ LONGER = 5e6  # … of a table of more than SMALL rows
 SMALL = 1000
 FEWEST = 100  # replicates per truth below which a contender is not worth starting
 MOST = 1000  # replicates per truth of a short rehearsal; the Monte-Carlo error is 0.7 points
+TOO_DEAR = "a short rehearsal has no time for it; clingstone rehearse makes a long one"
 UNKNOWN = 30_000.0  # a remedy that nobody timed
 # Remedies that resample or search column by column: µs per column, and per column and row.
 SLOW = {
@@ -92,9 +93,7 @@ def affordable(study: Study) -> tuple[list[int], list[tuple[str, str, str]], int
             total += price[i]
         else:
             c = study.contenders[i].remedy
-            left.append(
-                (c.id, c.at, "a short rehearsal has no time for it; clingstone rehearse makes a long one")
-            )
+            left.append((c.id, c.at, TOO_DEAR))
     replicates = int(min(MOST, budget / (T * total)))
     # Whole fifties, so that a small change of the formula seldom changes a result.
     return sorted(kept), left, max(FEWEST, replicates // 50 * 50) if kept else 0

@@ -26,7 +26,10 @@ class Work(Protocol):
 
 @dataclass(frozen=True)
 class Engine:
-    """name : where chunks run. workers : processes of "cores", all cores when left out. scheduler : of Dask."""
+    """Where chunks run.
+
+    workers : processes of "cores"; all cores when left out. scheduler : address of the Dask scheduler.
+    """
 
     name: Name = "here"
     workers: int | None = None

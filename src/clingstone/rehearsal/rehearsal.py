@@ -171,8 +171,8 @@ def reason(found: Rehearsal, advice: Advice, named: str) -> Reason | None:
     return Reason(
         f"Rehearsed on this design, the intervals of {named} held the true value in at least "
         f"{number(100 * row.coverage, 1)} % of replicates under each of {len(found.truths)} error models "
-        f"(Monte-Carlo error {number(100 * row.mcse, 1)} points), and no other remedy that covers the same and "
-        "did as well was narrower by more than 1 %.",
+        f"(Monte-Carlo error {number(100 * row.mcse, 1)} points), and no other remedy that covers the same "
+        "and did as well was narrower by more than 1 %.",
         "rehearsed",
         (("smallest coverage", number(row.coverage, 3)), ("replicates per truth", f"{found.replicates:,}")),
         "",
@@ -185,8 +185,8 @@ def sentence(found: Rehearsal, remedy: str, at: str, named: str) -> str:
     row = found.scores.get(remedy, at)
     plain = found.scores.get("ordinary", "")
     text = (
-        f"The analysis was rehearsed on this design: y was simulated {found.replicates:,} times under each of "
-        f"{len(found.truths)} error models ({listed([t.name for t in found.truths])}; seed {found.seed})"
+        f"The analysis was rehearsed on this design: y was simulated {found.replicates:,} times under each "
+        f"of {len(found.truths)} error models ({listed([t.name for t in found.truths])}; seed {found.seed})"
     )
     if row is None:
         return f"{text}; the reported remedy itself was not part of it."

@@ -27,7 +27,7 @@ class Shelf:
         if path.exists():
             if json.loads(path.read_text(encoding="utf-8")) != label:
                 raise InputError(
-                    f"{folder} holds the chunks of another rehearsal: other data, settings, remedies or truths",
+                    f"{folder} holds another rehearsal: of other data, settings, remedies or truths",
                     "Name another folder, or remove that one to begin again.",
                 )
         else:

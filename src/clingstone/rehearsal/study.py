@@ -44,7 +44,10 @@ class Job(NamedTuple):
 
 @dataclass(frozen=True, eq=False)
 class Contender:
-    """A remedy prepared for the user's design. pick : where each focus row stands among its rows, −1 if not."""
+    """A remedy prepared for the user's design.
+
+    pick : where each focus row stands among the remedy's rows, −1 where it has no interval for it.
+    """
 
     remedy: Remedy
     ready: Ready
@@ -127,7 +130,7 @@ class Study:
         return _counted([read(c, again) for c in self.contenders])
 
     def summed_by(self, truth: Truth) -> str | None:
-        """The partition whose sums and scores are all that any contender asks of y; None when one needs rows."""
+        """The partition whose sums and scores are all that any contender asks of y, if there is one."""
         keys = {key for c in self.contenders if (key := _asks(c)) is not None}
         if "rows" in keys:
             return None
@@ -167,7 +170,7 @@ def study(
 
 
 def _asks(contender: Contender) -> str | None:
-    """The partition through which a contender sees y; "rows" when it sees more; None when only Q'y and y'y."""
+    """The partition through which a contender sees y; "rows" when by more; None when by Q'y and y'y alone."""
     ready = contender.ready
     if type(ready) is OrdinaryReady:
         return None

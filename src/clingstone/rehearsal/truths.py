@@ -1,4 +1,4 @@
-"""What y may have come from: error models that the data do not reject, and one that they were not asked about.
+"""What y may have come from: error models that the data do not reject, and one that nobody fitted.
 
 A rehearsal at the estimate alone misleads: with ten groups the estimate may be far off, and the coverage of
 an interval that ignores the groups moves with it. So y is simulated at the estimate, at the 10 % and 90 %
@@ -144,7 +144,7 @@ def _different(fits: Fits, estimate: Truth) -> Truth | None:
         return None
     if "serial" in estimate.node:
         what: Different = "noisy series"
-        words = f"the series carries row noise ({1 - AR_PART:.0%} of its variance), with ρ between neighbours kept"
+        words = f"{1 - AR_PART:.0%} of the series' variance is row noise, with ρ between neighbours kept"
     elif "spatial" in estimate.node:
         what, words = "smooth field", "the field is smooth (Matérn 3/2) with the same practical range"
     else:
