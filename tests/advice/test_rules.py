@@ -25,6 +25,15 @@ LATE = {
     "coefficient moves",
     "term that moves",
     "some refit covers it",
+    "df of the robust refit",
+    "robust over mixed standard error",
+    "robust over advised standard error",
+    "advised refit has no variance between groups",
+    "advised refit models the order in time",
+    "widest second opinion",
+    "name of the widest second opinion",
+    "term of the widest second opinion",
+    "another order fits better",
 }
 
 
@@ -79,7 +88,13 @@ def known_facts() -> set[str]:
         with one_thread():
             evidence = gather(f)
             names |= set(facts(f, evidence, weigh(f, evidence)))
-    return names
+    rows, columns = np.divmod(np.arange(144), 12)
+    crossed = make.design({"x": x}, groups={"row": rows, "column": columns}, arrangement="crossed")
+    y = rng.standard_normal(12)[rows] + rng.standard_normal(12)[columns] + 0.3 * rng.standard_normal(144)
+    f = make.fits(crossed, y)
+    with one_thread():
+        evidence = gather(f)
+        return names | set(facts(f, evidence, weigh(f, evidence)))
 
 
 def test_every_fact_in_the_table_is_one_that_facts_gives():

@@ -131,7 +131,7 @@ def test_no_tipping_point_is_said_in_words():
     assert arm.value is None
     assert "without any dependence" in arm.sentence
     assert x.value is None
-    assert "up to 0.95" in x.sentence
+    assert "Not even an intraclass correlation of 0.95" in x.sentence
 
 
 def test_weights_scale_the_row_noise_alone():

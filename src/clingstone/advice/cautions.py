@@ -91,7 +91,11 @@ CAVEATS = (
     ),
     Rule(
         "short-series",
-        SERIAL & ~GROUP & (fact("rows in the longest series") < 50) & (fact("series") < 20),
+        SERIAL
+        & ~GROUP
+        & fact("advised refit models the order in time")
+        & (fact("rows in the longest series") < 50)
+        & (fact("series") < 20),
         Then("caveat"),
         "With {rows in the longest series} rows the correlation is estimated too low, and the interval is "
         "corrected only in part.",
@@ -131,13 +135,59 @@ CAVEATS = (
         "strong",
     ),
     Rule(
+        "group-variance-at-zero",
+        GROUP & fact("focus at group level") & fact("advised refit has no variance between groups"),
+        Then("caveat"),
+        "The variance between groups was estimated at zero. With few groups that happens by chance, and "
+        "intervals, robust ones too, are then shorter than they should be: the upper end of its interval "
+        "leaves room for a standard error {largest factor} times the ordinary one.",
+        "self-liang-1987, own",
+        "strong",
+    ),
+    Rule(
         "at-its-bound",
-        fact("advised refit at its bound"),
+        fact("advised refit at its bound") & ~fact("advised refit has no variance between groups"),
         Then("caution"),
         "The advised model estimates one of its variances or correlations at the edge of the possible range; "
         "such an estimate is rough.",
         "self-liang-1987",
         "strong",
+    ),
+    Rule(
+        "few-treated-redrawn",
+        GROUP & fact("focus at group level") & (fact("groups in the smaller arm") < 3),
+        Then("caveat"),
+        "Only {groups in the smaller arm} groups carry {term of the smaller arm}: the interval leans on the "
+        "assignment having been by lot, and on groups of much the same size.",
+        "mackinnon-webb-2018",
+        "strong",
+    ),
+    Rule(
+        "second-opinion-wider",
+        GROUP & (fact("widest second opinion") > 1.3),
+        Then("caution"),
+        "{name of the widest second opinion} gives {term of the widest second opinion} an interval {widest "
+        "second opinion} times as wide as the advised one.",
+        "mackinnon-nielsen-webb-2023",
+        "moderate",
+    ),
+    Rule(
+        "slopes-may-differ",
+        GROUP & ~fact("focus at group level") & (fact("robust over advised standard error") > 1.5),
+        Then("caution"),
+        "The robust standard error is {robust over advised standard error} times the advised one, a sign "
+        "that slopes differ from group to group.",
+        "barr-2013, bell-2019",
+        "moderate",
+    ),
+    Rule(
+        "another-order",
+        SERIAL & fact("another order fits better"),
+        Then("caution"),
+        "Errors along time of another order than the first fit these data better; the refit with ARMA errors "
+        "stands beside the advised one.",
+        "hurvich-tsai-1989",
+        "moderate",
     ),
     Rule(
         "not-converged",
@@ -161,7 +211,7 @@ CAVEATS = (
         GROUP & fact("between differs from within"),
         Then("caution"),
         "Within groups and between groups {term that differs} goes with the response differently: the pooled "
-        "coefficient mixes two effects. Consider reporting both.",
+        "coefficient mixes two effects. Consider reporting both, as a refit within and between groups does.",
         "mundlak-1978, bell-jones-2015, bell-2019",
         "strong",
     ),

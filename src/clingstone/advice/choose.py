@@ -5,12 +5,11 @@ from __future__ import annotations
 from clingstone.advice import headline as say
 from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
 from clingstone.advice.facts import Facts
-from clingstone.advice.named import Fact, named, words, yes
-from clingstone.advice.pick import Reached, covers, pick
+from clingstone.advice.pick import covers, pick, rank, serves
+from clingstone.advice.refitted import advised_facts, compared, same
 from clingstone.advice.rules import CAVEATS, NO_REMEDY, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
-from clingstone.advice.structures import FAMILIES, covered, families, needed, subject
-from clingstone.display import listed
+from clingstone.advice.structures import FAMILIES, covered, families, needed
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.remedy import Refit
 
@@ -47,12 +46,13 @@ def settle(
         chosen = next((r for r in refits if r.remedy == REPAIRED), None)
         rule = shortlist.inner[1] if shortlist.inner is not None else None
     elif not state:
+        facts = here = compared(facts, refits)
         chosen, rule = pick(facts, refits, scores, shortlist.reached, shortlist.twins)
         if chosen is None:
             state_rule = NO_REMEDY
     need = needed(here.ledger)
     known = {} if state == "mean first" else shortlist.reached
-    here = here.plus(_advised_facts(here, refits, chosen, need, known))
+    here = here.plus(advised_facts(here, refits, chosen, need, known))
     beside = _beside(state_rule, here)
     decided = _state(state_rule, beside)
     advised = (
@@ -71,7 +71,7 @@ def settle(
         mean_in_doubt=facts.says("mean in doubt"),
         because=(*_design_reason(facts), *(_reason(r, here) for r in because)),
         cautions=tuple(_reason(r, here) for r in beside),
-        alternatives=() if decided == "not correctable" else _alternatives(shortlist, refits, advised, here),
+        alternatives=() if decided == "not correctable" else _alternatives(shortlist, refits, advised),
         refused=_refused(shortlist, refits, state_rule, here),
         repair=_repair(facts, shortlist),
     )
@@ -101,6 +101,7 @@ def _families(facts: Facts, what: str) -> frozenset[str]:
 
 ORDERED = {"caveat": 0, "caution": 1}
 STRENGTHS = ("strong", "moderate", "weak", "convention")
+ALWAYS = ("mean-as-well", "mean-in-doubt")  # said also where nothing can be corrected
 LAST = "chosen-after-looking"  # true of every choice, so it is read last
 
 
@@ -108,7 +109,7 @@ def _beside(state_rule: Rule | None, facts: Facts) -> list[Rule]:
     """What lowers the state first, then what warns, the better founded before the others."""
     beside = [r for r in CAVEATS if bool(r.when.read(facts))]
     if state_rule is not None and state_rule.then.what != "mean first":
-        beside = [r for r in beside if r.then.kind == "caution" and r.id != LAST]
+        beside = [r for r in beside if (r.then.kind == "caution" or r.id in ALWAYS) and r.id != LAST]
     if state_rule is not None and state_rule.id in MEAN:
         beside = [r for r in beside if r.id != "mean-alone"]
     return sorted(beside, key=lambda r: (r.id == LAST, ORDERED[r.then.kind], STRENGTHS.index(r.strength)))
@@ -137,43 +138,6 @@ def _repair(facts: Facts, shortlist: Shortlist) -> Repair | None:
         after.shares,
         after.parameters,
     )
-
-
-def _advised_facts(
-    facts: Facts, refits: tuple[Refit, ...], chosen: Refit | None, need: frozenset[str], reached: Reached
-) -> dict[str, Fact]:
-    if chosen is None:
-        return {}
-    rows = [row for row in chosen.intervals if row.term in facts.focus]
-    missed = need - covers(chosen, facts, reached)
-    lost = [subject(s) for s in facts.ledger.standing if s.key in missed]
-    out = [
-        yes("plausible structure not covered", bool(lost), f"not covered: {listed(lost) or 'nothing'}"),
-        words("names not covered", listed(lost)),
-        yes(
-            "advised refit at its bound",
-            chosen.boundary,
-            "a parameter of the advised refit lies at its bound",
-        ),
-        yes(
-            "advised refit did not converge",
-            not chosen.converged,
-            "the advised refit's search did not settle",
-        ),
-    ]
-    if rows:
-        out.append(named("lowest df of the advised refit", min(row.df for row in rows)))
-    ordinary = next((r for r in refits if r.remedy == "ordinary"), None)
-    if ordinary is not None:
-        before = {row.term: row for row in ordinary.intervals}
-        moved = [
-            row.term
-            for row in rows
-            if row.term in before and abs(row.estimate - before[row.term].estimate) > row.se
-        ]
-        out.append(yes("coefficient moves", bool(moved), f"moves by more than its error: {listed(moved)}"))
-        out.append(words("term that moves", listed(moved)))
-    return {f.name: f for f in out}
 
 
 # ---- words ---------------------------------------------------------------------------------------
@@ -237,21 +201,29 @@ def _levels(facts: Facts, advised: Refit | None, shortlist: Shortlist) -> tuple[
 
 
 def _alternatives(
-    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None, facts: Facts
+    shortlist: Shortlist, refits: tuple[Refit, ...], advised: Refit | None
 ) -> tuple[Choice, ...]:
-    """Refits that cover what has to be covered; with nothing to cover, every correction by the design."""
+    """Refits that cover what has to be covered; with nothing to cover, every correction by the design.
+
+    The repaired mean first, where a part seems to be missing; then the simpler ones first. Of refits
+    with the same numbers one stands for all.
+    """
+    whole, need = shortlist.facts, needed(shortlist.facts.ledger)
     made = {(r.remedy, r.at): r for r in refits}
-    best = (advised.remedy, advised.at) if advised is not None else None
-    need = needed(shortlist.facts.ledger)
-
-    def serves(choice: Choice) -> bool:
+    kept: list[Refit] = [advised] if advised is not None else []
+    out = []
+    for choice in sorted(shortlist.candidates, key=lambda c: (c.remedy != REPAIRED, rank(c.remedy))):
         fit = made.get((choice.remedy, choice.at))
-        if fit is None or (choice.remedy, choice.at) == best or choice.remedy == "ordinary":
-            return False
-        found = covers(fit, shortlist.facts, shortlist.reached)
-        return choice.remedy == REPAIRED or (bool(need or fit.covers) and need <= found)
-
-    return tuple(c for c in shortlist.candidates if serves(c))
+        if fit is None or fit is advised or choice.remedy == "ordinary":
+            continue
+        enough = bool(need or fit.covers) and need <= covers(fit, whole, shortlist.reached)
+        if choice.remedy != REPAIRED and not (enough and serves(fit, whole, every=False)):
+            continue
+        if any(same(fit, other) for other in kept):
+            continue
+        kept.append(fit)
+        out.append(choice)
+    return tuple(out)
 
 
 def _refused(

@@ -55,7 +55,10 @@ STATES = (
     ),
     Rule(
         "two-treated-groups",
-        GROUP & fact("focus at group level") & (fact("groups in the smaller arm") < 3),
+        GROUP
+        & fact("focus at group level")
+        & (fact("groups in the smaller arm") < 3)
+        & ~fact("assignment can be redrawn"),
         Then(
             "state",
             "not correctable",
@@ -88,9 +91,10 @@ STATES = (
     ),
     Rule(
         "series-too-short",
-        SERIAL & ~fact("serial estimable"),
+        SERIAL & ~fact("serial estimable") & ~fact("series can be clusters"),
         Then("state", "not correctable", needed="one series of 20 times, or 8 series of 5"),
-        "The longest series has {rows in the longest series} rows: too short to size the dependence in time.",
+        "The longest series has {rows in the longest series} rows: too short to size the dependence in time, "
+        "and the series are too few to be clusters.",
         "park-mitchell-1980, krone-2016",
         "strong",
     ),
@@ -132,6 +136,18 @@ NO_REMEDY = Rule(
 
 PREFER = (
     Rule(
+        "few-treated-by-lot",
+        GROUP
+        & fact("focus at group level")
+        & (fact("groups in the smaller arm") < 3)
+        & fact("assignment can be redrawn"),
+        Then("prefer", "randomisation", at="assigned level"),
+        "Only {groups in the smaller arm} of {groups} groups carry {term of the smaller arm}, where every "
+        "standard error fails; it was assigned, and the assignment can be drawn again.",
+        "mackinnon-webb-2018, fisher-1935",
+        "strong",
+    ),
+    Rule(
         "many-short-series",
         GROUP
         & SERIAL
@@ -142,6 +158,15 @@ PREFER = (
         Then("prefer", "cluster-robust", at="group level"),
         "{groups} groups with at most {rows in the longest series} times each: rows of a group may depend on "
         "each other in any way, in time as well, and the robust covariance carries it.",
+        "hansen-2007, kezdi-2003, bertrand-2004",
+        "strong",
+    ),
+    Rule(
+        "short-series-in-groups",
+        GROUP & SERIAL & ~SPATIAL & fact("series within groups") & ~fact("serial estimable"),
+        Then("prefer", "cluster-robust", at="group level"),
+        "Series of at most {rows in the longest series} times are too short for a model of the order in "
+        "time; the robust covariance allows rows of a group to depend on each other in any way.",
         "hansen-2007, kezdi-2003, bertrand-2004",
         "strong",
     ),
@@ -168,12 +193,35 @@ PREFER = (
         "moderate",
     ),
     Rule(
+        "crossed-groups",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & ~fact("focus at group level")
+        & (fact("crossed levels to cover") >= 2)
+        & (fact("groups of the smallest crossed level") >= 25),
+        Then("prefer", "multiway-cluster", at="crossed levels"),
+        "{crossed levels} cross, each with at least {groups of the smallest crossed level} groups: rows that "
+        "share either may depend on each other in any way.",
+        "cameron-gelbach-miller-2011",
+        "weak",
+    ),
+    Rule(
         "few-groups",
         GROUP & ~SERIAL & ~SPATIAL & fact("focus at group level") & (fact("groups") < 40),
         Then("prefer", "mixed-intercept", at="mixed level"),
         "A focus term varies only between groups and {groups} groups are few: restricted likelihood with "
         "small-sample degrees of freedom keeps its level there.",
         "leyrat-2018, kenward-roger-1997, elff-2021",
+        "strong",
+    ),
+    Rule(
+        "few-groups-means",
+        GROUP & ~SERIAL & ~SPATIAL & fact("focus at group level") & (fact("groups") < 40),
+        Then("prefer", "group-means", at="group level"),
+        "A focus term varies only between groups and {groups} groups are few: a regression of their means "
+        "keeps its level there.",
+        "leyrat-2018",
         "strong",
     ),
     Rule(
@@ -200,6 +248,20 @@ PREFER = (
         "strong",
     ),
     Rule(
+        "slopes-differ",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & ~fact("focus at group level")
+        & (fact("df of the robust refit") >= 4)
+        & (fact("robust over mixed standard error") > 1.5),
+        Then("prefer", "cluster-robust", at="group level"),
+        "The robust standard error is {robust over mixed standard error} times that of the random intercept: "
+        "the slopes seem to differ from group to group, which a random intercept leaves out.",
+        "barr-2013, bell-2019",
+        "strong",
+    ),
+    Rule(
         "group-otherwise",
         GROUP & ~SERIAL & ~SPATIAL,
         Then("prefer", "mixed-intercept", at="mixed level"),
@@ -210,11 +272,17 @@ PREFER = (
     ),
     Rule(
         "series-as-clusters",
-        SERIAL & ~GROUP & ~SPATIAL & (fact("series") >= 20) & (fact("rows in the longest series") <= 20),
+        SERIAL
+        & ~GROUP
+        & ~SPATIAL
+        & (
+            ((fact("series") >= 10) & (fact("rows in the longest series") <= 20))
+            | (fact("series can be clusters") & ~fact("serial estimable"))
+        ),
         Then("prefer", "cluster-robust", at="series level"),
-        "{series} series of at most {rows in the longest series} times: each series may depend on itself in "
-        "any way.",
-        "hansen-2007, kezdi-2003, bertrand-2004",
+        "{series} series of at most {rows in the longest series} times: from series so short a correlation "
+        "comes out too low, while as clusters each may depend on itself in any way.",
+        "hansen-2007, kezdi-2003, bertrand-2004, park-mitchell-1980",
         "strong",
     ),
     Rule(

@@ -16,8 +16,10 @@ from clingstone.design.design import Design
 from clingstone.display import listed, percent
 from clingstone.evidence.finding import Evidence
 from clingstone.ledger.ledger import Ledger, focus_rows
+from clingstone.maths.partition import Partition
 from clingstone.needs import Limits
 from clingstone.run import Settings
+from clingstone.structure.serial import Series
 
 
 @dataclass(frozen=True)
@@ -135,6 +137,7 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
     ]
     series = design.serial
     if series is not None:
+        partitions = [*design.partitions.items(), (series.part.key, series.part)]
         longest, number = counts["rows in the longest series"], counts["series"]
         enough = longest >= limits.serial_estimate_rows or (
             counts["series of 5 rows or more"] >= limits.serial_estimate_series
@@ -144,11 +147,15 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             named("series", number),
             yes("serial estimable", enough, "the series are long or many enough for a correlation in time"),
             yes("regular times", series.spacing != "irregular", f"spacing of the times: {series.spacing}"),
-            words("series level", series.part.key),
+            words("series level", next(k for k, v in partitions if v.relation(series.part) == "same")),
         ]
+        around = [g for g in (design.group.levels if design.group is not None else ()) if _holds(g, series)]
         if design.group is not None:
-            inside = any(level.relation(series.part) in ("same", "nests") for level in design.group.levels)
-            out.append(yes("series within groups", inside, "every series lies within one group"))
+            out.append(yes("series within groups", bool(around), "every series lies within one group"))
+        most = max((number, *(g.count for g in around)) if around else (number,))
+        least = limits.groups_estimate if around else limits.serial_estimate_series
+        enough = most >= least
+        out.append(yes("series can be clusters", enough, f"{most} clusters hold whole series"))
     if design.spatial is not None:
         sites = design.spatial.count
         out += [
@@ -156,6 +163,10 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
         ]
     return out
+
+
+def _holds(level: Partition, series: Series) -> bool:
+    return level.relation(series.part) in ("same", "nests")
 
 
 def _spatial_facts(design: Design, ledger: Ledger) -> list[Fact]:
@@ -166,7 +177,14 @@ def _spatial_facts(design: Design, ledger: Ledger) -> list[Fact]:
     if design.spatial is None or not design.spatial.extent > 0 or not np.isfinite(reach.estimate):
         return []
     ratio = reach.estimate / design.spatial.extent
-    return [named("range over extent", ratio, "of the map's width", percent(min(ratio, 9.99)))]
+    return [
+        named(
+            "range over extent",
+            ratio,
+            "of the map's width",
+            percent(ratio) if ratio < 1 else "more than 100 %",
+        )
+    ]
 
 
 def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[float, float]) -> list[Fact]:

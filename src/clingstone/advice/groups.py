@@ -2,6 +2,9 @@
 
 from __future__ import annotations
 
+import itertools
+import math
+
 import numpy as np
 from scipy import stats
 
@@ -18,6 +21,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
 from clingstone.remedies.gls import TOGETHER
 
+WAYS = 40  # assignments from which a two-sided test at 5 % can be made by drawing them again
 DIFFERS = 0.05  # level of the between-against-within comparison
 
 
@@ -32,6 +36,7 @@ def group_facts(design: Design, fits: Fits, ledger: Ledger) -> list[Fact]:
         words("mixed level", mixed_level(design, ledger)),
         named("groups", part.count),
         *_assigned(design),
+        *_crossed(design, ledger),
     ]
     if not design.known:
         return out
@@ -107,6 +112,21 @@ def _assigned(design: Design) -> list[Fact]:
     ]
 
 
+def _crossed(design: Design, ledger: Ledger) -> list[Fact]:
+    """Levels to be covered that cross each other."""
+    wanted = wanted_levels(design, ledger)
+    parts = [design.partitions[key] for key in wanted]
+    crossed = all(a.relation(b) == "crossed" for a, b in itertools.combinations(parts, 2))
+    number = len(parts) if crossed and len(parts) > 1 else 0
+    out = [named("crossed levels to cover", number)]
+    if number:
+        out += [
+            named("groups of the smallest crossed level", min(part.count for part in parts)),
+            words("crossed levels", TOGETHER.join(wanted)),
+        ]
+    return out
+
+
 def columns(design: Design, term: Term) -> Array:
     """(n, q) design columns of a term on the user's scale."""
     return rows_of(design, design.Q @ design.basis.R[:, list(term.columns)])
@@ -163,9 +183,12 @@ def _arms(design: Design, part: Partition, terms: list[Term]) -> list[Fact]:
                 least = (int(sizes.min()), design.names[j])
     if least is None:
         return []
+    ways = math.comb(part.count, least[0])
+    drawn = part.key in design.assignment.assigned.values() and ways >= WAYS
     return [
         named("groups in the smaller arm", least[0], f"for {least[1]}"),
         words("term of the smaller arm", least[1]),
+        yes("assignment can be redrawn", drawn, f"{ways} ways to choose {least[0]} of {part.count} groups"),
     ]
 
 

@@ -9,9 +9,8 @@ from clingstone.advice.structures import covered, subject
 from clingstone.covariance.components import SITE
 from clingstone.display import NBSP, listed, percent, percent_span, significant
 from clingstone.ledger.ledger import Ledger, Parameter, Share, Standing
+from clingstone.ledger.sizes import TIMES
 from clingstone.remedies.remedy import Refit
-
-TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
 
 
 def dependence(ledger: Ledger) -> str:

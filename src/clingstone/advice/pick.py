@@ -22,6 +22,24 @@ ORDER = (
     "hac",
     "spatial-gls",
     "joint",
+    "cluster-jackknife",
+    "wild-cluster-bootstrap",
+    "multiway-cluster",
+    "mixed-slope",
+    "mixed-robust",
+    "unstructured",
+    "car1",
+    "arma",
+    "panel-hac",
+    "spatial-error",
+    "spatial-hac",
+    "spatial-components",
+    "region-cluster",
+    "randomisation",
+    "group-means",
+    "group-t",
+    "within-between",
+    "fixed-effects",
     REPAIRED,
 )
 
@@ -44,9 +62,10 @@ def pick(
 ) -> tuple[Refit | None, Rule | None]:
     """The advised refit and the rule that named it (None when a rehearsal or the fallback did)."""
     need, shown = needed(facts.ledger), needed(facts.ledger, shown=True)
-    usable = [r for r in refits if r.remedy != REPAIRED and _serves(r, facts)]
+    usable = [r for r in refits if r.remedy != REPAIRED and serves(r, facts)]
     if scores is not None:
-        found = _rehearsed([r for r in usable if need <= covers(r, facts, reached)], scores)
+        same_question = [r for r in usable if r.estimand == "pooled"]
+        found = _rehearsed([r for r in same_question if need <= covers(r, facts, reached)], scores)
         if found is not None:
             return found, None
     for rule, what, at in preferred(facts):
@@ -54,6 +73,7 @@ def pick(
         match = [r for r in usable if r.remedy == name and (at in ("", r.at) or name != what)]
         if match:
             return match[0], rule
+    usable = [r for r in usable if r.estimand == "pooled"]  # only a rule may change the question
     usable.sort(key=lambda r: rank(r.remedy))
     for wanted in (need, shown):
         for fit in usable:
@@ -77,13 +97,14 @@ def covers(fit: Refit, facts: Facts, reached: Reached) -> frozenset[str]:
     return frozenset(s.key for s in facts.ledger.standing if s.structure in fit.covers)
 
 
-def _serves(fit: Refit, facts: Facts) -> bool:
-    """Every focus row has a finite interval."""
-    rows = [row for row in fit.intervals if row.term in facts.focus]
-    return all(
-        np.isfinite(row.low) and np.isfinite(row.high) and not row.status.startswith("unusable")
-        for row in rows
-    )
+def serves(fit: Refit, facts: Facts, *, every: bool = True) -> bool:
+    """Every focus row (or at least one) has a finite interval, under its own name."""
+    known = {
+        row.term
+        for row in fit.intervals
+        if np.isfinite(row.low) and np.isfinite(row.high) and not row.status.startswith("unusable")
+    }
+    return all(t in known for t in facts.focus) if every else any(t in known for t in facts.focus)
 
 
 def _rehearsed(fits: list[Refit], scores: Scores) -> Refit | None:

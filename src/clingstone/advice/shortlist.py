@@ -8,6 +8,7 @@ from dataclasses import dataclass, field, replace
 import numpy as np
 
 from clingstone.advice.entries import REPAIRED, Choice
+from clingstone.advice.expressions import Expression, fact
 from clingstone.advice.facts import Facts
 from clingstone.advice.pick import Reached, preferred, rank
 from clingstone.advice.rules import Rule
@@ -22,7 +23,16 @@ from clingstone.remedies.refit import at as set_at
 from clingstone.remedies.refit import refit as run_remedy
 from clingstone.remedies.remedy import Refit, Remedy
 
-LEVELS = 4  # levels at which one remedy is refitted at the most
+LEVELS = 4  # levels at which one of the plain remedies is refitted at the most
+PLAIN = ("ordinary", "heteroscedasticity-robust", "cluster-robust", "mixed-intercept", "ar1", "hac", "joint")
+# Second opinions and other questions are refitted at the level of the correction alone, and where these
+# facts of the design make them worth reading.
+WORTH: dict[str, Expression] = {
+    "group-means": fact("focus at group level"),
+    "group-t": ~fact("focus at group level"),
+    "fixed-effects": ~fact("focus at group level"),
+    "within-between": ~fact("focus at group level"),
+}
 
 
 @dataclass(frozen=True)
@@ -76,9 +86,11 @@ def shortlist_for(facts: Facts, fits: Fits) -> Shortlist:
         if refusal is not None:
             refused.append((one.id, refusal.reason, refusal.hint))
             continue
-        for level in one.abouts(design)[:LEVELS]:
+        if one.id in WORTH and not bool(WORTH[one.id].read(facts)):
+            continue
+        for level in _levels(one, facts, design):
             try:
-                ready = _prepared(one, level, fits)
+                ready = _prepared(one, level, fits, facts)
             except NotSupported as error:
                 refused.append((one.id, str(error), error.hint))
                 continue
@@ -94,10 +106,25 @@ def shortlist_for(facts: Facts, fits: Fits) -> Shortlist:
     return Shortlist(tuple(candidates), tuple(dict.fromkeys(refused)), facts, reached, twins, inner)
 
 
-def _prepared(one: Remedy, level: str, fits: Fits) -> Remedy:
-    """The remedy set to a level, once it is known that these data carry it. Raises NotSupported."""
+def _levels(one: Remedy, facts: Facts, design: Design) -> tuple[str, ...]:
+    """Where a remedy is refitted: the plain ones at every level, the others at one."""
+    abouts = one.abouts(design)
+    if one.id in PLAIN:
+        return abouts[:LEVELS]
+    level = facts.word("group level")
+    return (level,) if level in abouts else abouts[:1]
+
+
+def _prepared(one: Remedy, level: str, fits: Fits, facts: Facts) -> Remedy:
+    """The remedy set to a level, once it is known that these data carry it for some focus row.
+
+    Raises NotSupported(reason, hint).
+    """
     ready = set_at(one, level, fits)
-    ready.prepare(fits.design, ready.working(fits))
+    lost = ready.prepare(fits.design, ready.working(fits)).unusable
+    if facts.focus and set(facts.focus) <= set(lost):
+        refusal = lost[facts.focus[0]]
+        raise NotSupported(refusal.reason, refusal.hint)
     return ready
 
 
@@ -157,9 +184,9 @@ def _inner(facts: Facts) -> tuple[Choice, Rule | None] | None:
         if _carries(remedy(what), level, again, after):
             return Choice(what, level), rule
     for one in sorted(REMEDIES, key=lambda r: rank(r.id)):
-        if one.needs.check(again.design) is not None:
+        if one.needs.check(again.design) is not None or one.estimand != "pooled":
             continue
-        for level in one.abouts(again.design)[:LEVELS]:
+        for level in _levels(one, after, again.design):
             if _carries(one, level, again, after) and need <= reach(set_at(one, level, again), again):
                 return Choice(one.id, level), None
     return Choice("ordinary"), None

@@ -5,7 +5,6 @@ from __future__ import annotations
 from clingstone.covariance.components import SITE
 from clingstone.covariance.fits import Fits
 from clingstone.ledger.ledger import Ledger, Standing
-from clingstone.ledger.standing import LEVEL
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.remedy import Remedy
 
@@ -15,14 +14,12 @@ FAMILIES = ("group", "serial", "spatial")
 def covered(standing: Standing) -> bool:
     """Whether a structure has to be covered: present, plausible and material, or fixed by the design.
 
-    What is only plausible earns protection against intervals that are too short. A structure that no
-    test shows and that could only narrow them is left out on the safe side; one whose own test shows
-    it, though another may explain it, is not.
+    What is only plausible earns protection against intervals that are too short; one that could only
+    narrow them is left out on the safe side.
     """
-    plausible = standing.matters and (standing.widens or standing.p_alone < LEVEL)
     return (
         standing.verdict == "present"
-        or (standing.verdict == "unclear" and plausible)
+        or (standing.verdict == "unclear" and standing.widens)
         or (standing.fixed and standing.verdict != "not applicable")
     )
 

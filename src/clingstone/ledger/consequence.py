@@ -16,6 +16,7 @@ from scipy import stats
 from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
+from clingstone.display import significant
 from clingstone.ledger.entries import Inflation, Tipping
 from clingstone.ledger.region import Region
 from clingstone.maths.once import Array
@@ -185,20 +186,24 @@ def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -
         sigma2 * np.einsum("p,Bpq,q->B", w, mixed, w)
     )
     parameter = "ρ" if key == "serial" else "intraclass correlation"
+    named = f"“{term}”" if ":" in term else term
+    where = f"along {component.label}" if key == "serial" else f"between rows of one {_one(component.label)}"
     if gap[0] <= 0:
-        sentence = f"The ordinary interval of {term} takes in zero without any dependence."
+        sentence = f"The ordinary interval of {named} takes in zero without any dependence."
         return Tipping(term, key, parameter, None, sentence)
+    what = "a correlation from one step to the next" if key == "serial" else "an intraclass correlation"
     crossed = np.flatnonzero(gap <= 0)
     if not crossed.size:
-        sentence = (
-            f"No {parameter} up to 0.95 ({component.label}) would make the interval of {term} take in zero."
-        )
+        sentence = f"Not even {what} of 0.95 {where} would make the interval of {named} take in zero."
         return Tipping(term, key, parameter, None, sentence)
     i = int(crossed[0])
     value = float(s[i - 1] + (s[i] - s[i - 1]) * gap[i - 1] / (gap[i - 1] - gap[i]))
-    article = "a" if key == "serial" else "an"
     sentence = (
-        f"From {article} {parameter} of {value:.2g} on ({component.label}) the interval of {term} "
-        "takes in zero."
+        f"With {what} of {significant(value)} or more {where}, the interval of {named} would take in zero."
     )
     return Tipping(term, key, parameter, value, sentence)
+
+
+def _one(label: str) -> str:
+    """The inner name of a nested level."""
+    return label.split("/")[-1]

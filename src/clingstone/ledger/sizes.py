@@ -5,11 +5,14 @@ from __future__ import annotations
 import numpy as np
 
 from clingstone.covariance.fits import Fits
+from clingstone.display import NBSP, significant
 from clingstone.ledger.entries import Parameter, Share
 from clingstone.ledger.region import Region
 from clingstone.maths.once import Array
 
 LEFT_OUT = "not kept in the model; the upper end is that of the fit with every structure"
+TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
+UNITS = "units of time"  # of a time without a unit of its own
 AT_ZERO = "estimated at zero, the edge of its range"
 
 
@@ -48,7 +51,7 @@ def parameters(fits: Fits, kept: Region, full: Region) -> tuple[Parameter, ...]:
 
 def _deviation(at: Region, key: str, note: str) -> Parameter:
     low, estimate, high = at.interval(np.sqrt(at.model.variances[key]))
-    return Parameter(key, "standard deviation", estimate, low, high, "unit of the response", note)
+    return Parameter(key, "standard deviation", estimate, low, high, "", note)
 
 
 def total(at: Region) -> Array:
@@ -77,11 +80,11 @@ def _serial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
     series = fits.design.serial
     rho = np.asarray(at.model.shape["serial.rho"], dtype=float)
     low, estimate, high = at.interval(rho)
-    step = _step(series.step, series.unit) if series is not None else "step"
+    step = in_units(series.step, series.unit) if series is not None else "step"
     out = [Parameter(key, "ρ", estimate, low, high, f"per {step}", note or _edge(estimate))]
     if estimate > 0 and series is not None:
         ends = [float(_half_life(np.array(v))) * series.step for v in (low, estimate, high)]
-        out.append(Parameter(key, "half-life", ends[1], ends[0], ends[2], series.unit, note))
+        out.append(Parameter(key, "half-life", ends[1], ends[0], ends[2], series.unit or UNITS, note))
     return out
 
 
@@ -91,9 +94,16 @@ def _half_life(rho: Array) -> Array:
         return np.where(rho <= 0, 0.0, np.where(rho >= 1, np.inf, np.log(0.5) / np.log(rho)))
 
 
-def _step(step: float, unit: str) -> str:
-    unit = unit or "unit of time"
-    return unit if step == 1 else f"{step:g} {unit}s"
+def in_units(number: float, unit: str) -> str:
+    """ "day", "14 days", "7 units of time", "3 km" """
+    words = unit or "unit of time"
+    if number == 1:
+        return words
+    if words == "unit of time":
+        words = "units of time"
+    elif words in TIMES:
+        words += "s"
+    return f"{significant(number) if number != round(number) else f'{number:g}'}{NBSP}{words}"
 
 
 def _spatial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:

@@ -1,0 +1,143 @@
+"""Facts that only the refits can tell: how they compare, and what is to be said of the advised one."""
+
+from __future__ import annotations
+
+from clingstone.advice.facts import Facts
+from clingstone.advice.named import Fact, named, words, yes
+from clingstone.advice.pick import Reached, covers
+from clingstone.advice.structures import subject
+from clingstone.display import listed
+from clingstone.remedies.remedy import Interval, Refit
+
+ROBUST = "cluster-robust"
+# A second look at the advised interval by other means, for the same rows; the advised one is no second.
+SECOND = ("cluster-jackknife", "wild-cluster-bootstrap")
+ORDERED = ("ar1", "car1", "arma", "joint")
+SAME = 1e-6  # relative difference below which two refits gave the same numbers
+
+
+def find(refits: tuple[Refit, ...], remedy: str, at: str = "") -> Refit | None:
+    """The refit of a remedy, at a level where one is given."""
+    return next((r for r in refits if r.remedy == remedy and at in ("", r.at)), None)
+
+
+def focus_rows(fit: Refit, facts: Facts) -> list[Interval]:
+    return [row for row in fit.intervals if row.term in facts.focus]
+
+
+def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
+    """The facts, and how the robust refit at the level of correction compares with the mixed one."""
+    level = facts.word("group level")
+    robust = find(refits, ROBUST, level) if level else None
+    if robust is None:
+        return facts
+    out = [named("df of the robust refit", min((row.df for row in focus_rows(robust, facts)), default=0.0))]
+    mixed = find(refits, "mixed-intercept", facts.word("mixed level"))
+    if mixed is not None:
+        out += _ratio("robust over mixed standard error", robust, mixed, facts)
+    return facts.plus({f.name: f for f in out})
+
+
+def _ratio(name: str, robust: Refit, model: Refit, facts: Facts) -> list[Fact]:
+    """The largest ratio of standard errors over the focus rows of both."""
+    known = {row.term: row.se for row in focus_rows(model, facts) if row.se > 0}
+    found = [row.se / known[row.term] for row in focus_rows(robust, facts) if row.term in known]
+    return [named(name, max(found))] if found else []
+
+
+def advised_facts(
+    facts: Facts, refits: tuple[Refit, ...], chosen: Refit | None, need: frozenset[str], reached: Reached
+) -> dict[str, Fact]:
+    """What is to be said of the advised refit; nothing without one."""
+    if chosen is None:
+        return {}
+    missed = need - covers(chosen, facts, reached)
+    lost = listed([subject(s) for s in facts.ledger.standing if s.key in missed])
+    bound, settled = chosen.boundary, chosen.converged
+    zero = bound and _no_variance(facts, chosen, reached)
+    out = [
+        yes("plausible structure not covered", bool(lost), f"not covered: {lost or 'nothing'}"),
+        words("names not covered", lost),
+        yes("advised refit at its bound", bound, "a parameter of the advised refit lies at its bound"),
+        yes("advised refit has no variance between groups", zero, "its variance between groups is zero"),
+        yes(
+            "advised refit models the order in time",
+            chosen.remedy in ORDERED,
+            "the advised refit fits a correlation along time",
+        ),
+        yes("advised refit did not converge", not settled, "the advised refit's search did not settle"),
+        *_moved(facts, refits, chosen),
+        *_second(facts, refits, chosen),
+        *_order(refits, chosen),
+    ]
+    rows = focus_rows(chosen, facts)
+    if rows:
+        out.append(named("lowest df of the advised refit", min(row.df for row in rows)))
+    robust = find(refits, ROBUST, facts.word("group level"))
+    if robust is not None and chosen.remedy in ("mixed-intercept", "joint"):
+        out += _ratio("robust over advised standard error", robust, chosen, facts)
+    return {f.name: f for f in out}
+
+
+def _no_variance(facts: Facts, chosen: Refit, reached: Reached) -> bool:
+    """A group level that the refit covers by its error model has a share of nothing."""
+    keys = covers(chosen, facts, reached)
+    found = (facts.ledger.share(key) for key in keys if key.startswith("group:"))
+    return any(share is not None and share.share <= SAME for share in found)
+
+
+def _moved(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
+    ordinary = find(refits, "ordinary")
+    if ordinary is None:
+        return []
+    before = {row.term: row for row in ordinary.intervals}
+    moved = [
+        row.term
+        for row in focus_rows(chosen, facts)
+        if row.term in before and abs(row.estimate - before[row.term].estimate) > row.se
+    ]
+    return [
+        yes("coefficient moves", bool(moved), f"moves by more than its error: {listed(moved)}"),
+        words("term that moves", listed(moved)),
+    ]
+
+
+def _second(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
+    """The widest jackknife or bootstrap interval at the advised level, over the advised one."""
+    if chosen.remedy != ROBUST:
+        return []
+    base = {row.term: row.high - row.low for row in focus_rows(chosen, facts)}
+    found = [
+        ((row.high - row.low) / base[row.term], fit.name, row.term)
+        for fit in (find(refits, remedy, chosen.at) for remedy in SECOND)
+        if fit is not None
+        for row in focus_rows(fit, facts)
+        if base.get(row.term, 0.0) > 0 and row.high - row.low > 0
+    ]
+    if not found:
+        return []
+    ratio, name, term = max(found)
+    return [
+        named("widest second opinion", ratio),
+        words("name of the widest second opinion", f"The {name}"),
+        words("term of the widest second opinion", term),
+    ]
+
+
+def _order(refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
+    arma = find(refits, "arma")
+    if arma is None or chosen.remedy != "ar1":
+        return []
+    return [yes("another order fits better", not same(arma, chosen), "the ARMA order chosen by AICc")]
+
+
+def same(one: Refit, other: Refit) -> bool:
+    """The same rows with the same numbers."""
+    pairs = {row.term: row for row in other.intervals}
+    return len(pairs) == len(one.intervals) and all(
+        row.term in pairs
+        and abs(row.estimate - pairs[row.term].estimate) <= SAME * row.se
+        and abs(row.se - pairs[row.term].se) <= SAME * row.se
+        and abs(row.df - pairs[row.term].df) <= SAME * row.df
+        for row in one.intervals
+    )
