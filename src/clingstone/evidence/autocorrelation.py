@@ -7,8 +7,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
+from clingstone.design.design import Design
 from clingstone.evidence.finding import Curve
 from clingstone.evidence.read import degenerate, floats, normal_quantile
+from clingstone.maths.forms import lagged
 from clingstone.maths.once import Array
 from clingstone.maths.ratio import Law
 from clingstone.structure.serial import Rows
@@ -42,6 +44,8 @@ def lag_curve(fits: Fits, law: Callable[[int], Law]) -> Curve | None:
     if not rows:
         return None
     x, y, half, pairs_at = np.array(rows).T
+    whole_run = len(rows) == round(float(x[-1] / series.step))  # every lag from 1 on is there
+    lines = {"partial correlation": (floats(x), floats(partial(y)))} if whole_run else {}
     return Curve(
         kind="autocorrelation",
         x=floats(x),
@@ -55,34 +59,62 @@ def lag_curve(fits: Fits, law: Callable[[int], Law]) -> Curve | None:
         note="band: where a single correlation lies in 95 % of data without dependence"
         if fits.run.settings.confidence == 0.95
         else "",
+        lines=lines,
     )
+
+
+def partial(r: Array) -> Array:
+    """Partial correlations of lags 1 … K from correlations (Durbin–Levinson), kept within −1 … 1."""
+    phi, out = np.zeros(0), np.empty(len(r))
+    for k in range(len(r)):
+        rest = 1.0 - phi @ r[:k]
+        out[k] = np.clip((r[k] - phi @ r[:k][::-1]) / rest, -1.0, 1.0) if rest > 1e-8 else 0.0
+        phi = np.append(phi - out[k] * phi[::-1], out[k])
+    return out
 
 
 def elapsed_curve(fits: Fits, earlier: Rows, later: Rows, apart: Array) -> Curve | None:
     """The same for irregular times: near pairs of one series in bins of equal number by time apart.
 
-    e_i e_j has null mean −σ²h_ij (h the hat matrix), which is taken off, and is divided by s². The
-    band is ±z/√pairs, approximate because near pairs share rows.
+    Each bin is a form of its own, with the exact mean and variance that its ratio has without dependence;
+    the line is the semivariance, each squared difference over its expectation: 1 without dependence.
     """
     design, response = fits.design, fits.response
     keep = apart > 0
     if bool(degenerate(response)[0]) or keep.sum() < 3 * CURVE_BINS:
         return None
     earlier, later, apart = earlier[keep], later[keep], apart[keep]
-    e, Q, s2 = response.residual[:, 0], design.Q, float(response.s2[0])
-    product = e[earlier] * e[later] / s2 + np.einsum("ij,ij->i", Q[earlier], Q[later])
     bins = np.array_split(np.argsort(apart, kind="stable"), CURVE_BINS)
-    half = normal_quantile(fits) / np.sqrt([len(b) for b in bins])
+    z, e = normal_quantile(fits), response.residual[:, 0]
+    rows = []
+    for k, b in enumerate(bins):
+        null = Law(lagged(earlier[b], later[b], design.n, f"elapsed bin {k}"), design.basis)
+        slope = (design.m + 2) * null.variance
+        if not slope > 0:
+            return None
+        value = float(response.gram(null.form)[1][0] / response.ss[0])
+        half = z * np.sqrt(null.variance) / slope
+        rows.append((apart[b].mean(), (value - null.mean) / slope, half, len(b)))
+    x, y, half, size = np.array(rows).T
+    gamma = _semivariance(design, e, earlier, later) / float(response.s2[0])
     assert design.serial is not None
     return Curve(
         kind="autocorrelation",
-        x=floats([apart[b].mean() for b in bins]),
-        y=floats(np.clip([product[b].mean() for b in bins], -1.0, 1.0)),
+        x=floats(x),
+        y=floats(np.clip(y, -1.0, 1.0)),
         low=floats(-half),
         high=floats(half),
-        size=floats([len(b) for b in bins]),
+        size=floats(size),
         x_name="time apart",
         y_name="correlation of residuals",
         unit=design.serial.unit,
-        note="pairs in bins of equal number; the band is approximate",
+        note="pairs in bins of equal number; band: where a single bin lies without dependence",
+        lines={"semivariance": (floats(x), floats([np.nanmean(gamma[b]) for b in bins]))},
     )
+
+
+def _semivariance(design: Design, e: Array, earlier: Rows, later: Rows) -> Array:
+    """(pairs,) (e_i − e_j)²/(2 − h_ii − h_jj + 2h_ij), NaN where the model leaves a pair no room."""
+    h, Q = design.basis.leverage, design.Q
+    room = 2 - h[earlier] - h[later] + 2 * np.einsum("ij,ij->i", Q[earlier], Q[later])
+    return np.asarray((e[earlier] - e[later]) ** 2 / np.where(room > 1e-8, room, np.nan))

@@ -12,7 +12,8 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import count, freedom, number, p_value, percent, significant
 from clingstone.evidence.finding import About, Reading, column
-from clingstone.evidence.read import Plain, degenerate, exceedance, ratio, simulated
+from clingstone.evidence.lagged import lagged_response, partial_r2
+from clingstone.evidence.read import Plain, exceedance, ratio, simulated
 from clingstone.evidence.serial import enough, form_of, series_of, step_words
 from clingstone.maths.once import Array
 from clingstone.maths.ratio import covariances, means
@@ -48,7 +49,8 @@ class BreuschGodfrey(Plain):
     """Breusch–Godfrey: do the residuals up to k steps earlier in the series explain the residuals?
 
     R² = v'S⁻¹v/e'e with v = E'e and S = E'ME, E the (n, k) residuals k steps earlier in the same
-    series, 0 where there is none; the statistic is nR², its size R². Needs no strictly exogenous X.
+    series, 0 where there is none; the statistic is nR², its size R². A response of an earlier row may stand
+    among the predictors: p is then that of F, because draws would have to redraw it.
     """
 
     id: str = "breusch-godfrey"
@@ -73,7 +75,8 @@ class BreuschGodfrey(Plain):
             raise NotSupported(f"{design.m} residual degrees of freedom for {count(k, 'lag')}")
         r2, rank = partial_r2(response, k)
         n, df2 = design.n, design.m - rank
-        if fits.depth == "exact" and n <= DRAWN_GODFREY:
+        own = lagged_response(fits)
+        if fits.depth == "exact" and n <= DRAWN_GODFREY and not own:
             drawn = partial_r2(simulated(response, fits, f"breusch-godfrey:{k}", DRAWS), k)[0]
             p, log_p, method = exceedance(r2, drawn), None, f"exact by {DRAWS} draws"
         else:
@@ -90,6 +93,9 @@ class BreuschGodfrey(Plain):
             estimate=r2,
             estimate_name="share of the residual variance explained by earlier residuals",
             n_used=n,
+            caveats=(f"{own} is the response of an earlier row, so p is that of large samples.",)
+            if own
+            else (),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
@@ -101,38 +107,8 @@ class BreuschGodfrey(Plain):
         )
 
 
-def earlier_residuals(response: Response, k: int) -> list[Array]:
-    """k arrays (n, B): the residual 1, …, k steps earlier in the same series, 0 where there is none."""
-    series, out = series_of(response.design), []
-    for lag in range(1, k + 1):
-        earlier, later = series.pairs(lag)
-        block = np.zeros_like(response.residual)
-        block[later] = response.residual[earlier]
-        out.append(block)
-    return out
-
-
-def partial_r2(response: Response, k: int) -> tuple[Array, int]:
-    """R² (B,) of residuals on earlier residuals and the model, and the number of lags used."""
-    E, Q, e = earlier_residuals(response, k), response.design.Q, response.residual
-    v = np.stack([np.einsum("ij,ij->j", block, e) for block in E], axis=1)  # (B, k)
-    QE = [Q.T @ block for block in E]
-    S = np.empty((response.B, k, k))
-    for i in range(k):
-        for j in range(i + 1):
-            cross = np.einsum("ij,ij->j", E[i], E[j]) - np.einsum("ij,ij->j", QE[i], QE[j])
-            S[:, i, j] = S[:, j, i] = cross
-    lost = degenerate(response)
-    S[lost] = np.eye(k)
-    scale = np.sqrt(np.einsum("bii->bi", S))
-    scale = np.where(scale > 0, scale, 1.0)
-    # The pseudo-inverse drops lags that the model already spans; its rank is the same in every column.
-    unit = S / (scale[:, :, None] * scale[:, None, :])
-    rank = int(np.linalg.matrix_rank(unit[0], tol=1e-10, hermitian=True))
-    inverse = np.linalg.pinv(unit, rcond=1e-10, hermitian=True)
-    u = v / scale
-    r2 = np.einsum("bi,bij,bj->b", u, inverse, u) / np.where(lost, np.nan, response.ss)
-    return np.asarray(np.clip(r2, 0.0, 1.0)), max(rank, 1)
+def _own(name: str) -> tuple[str, ...]:
+    return (f"{name} is the response of an earlier row, so p is that of large samples.",) if name else ()
 
 
 @dataclass(frozen=True)
@@ -161,6 +137,11 @@ class LjungBox(Plain):
         design, response, K = fits.design, fits.response, int(about.key)
         enough(series_of(design), fits.run.limits)
         _whole_lags(design, K)
+        if own := lagged_response(fits):
+            raise NotSupported(
+                f"{own} is the response of an earlier row, which this test does not allow for",
+                "Read the test of Breusch and Godfrey, which does.",
+            )
         exact = design.n <= EXACT_MOMENTS and design.m > K + 2
         value = corrected(response, K) if exact else plain(response, K)
         if fits.depth == "exact" and design.n <= DRAWN_LJUNG and exact:

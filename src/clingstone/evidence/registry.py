@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from clingstone.evidence.breaks import Break
 from clingstone.evidence.finding import Test
 from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
 from clingstone.evidence.mean import FunctionalForm, Trend, TrendSurface
 from clingstone.evidence.nested import GroupF, IntraclassCorrelation
+from clingstone.evidence.panel import PanelSerial
 from clingstone.evidence.portmanteau import BreuschGodfrey, LjungBox
+from clingstone.evidence.season import Season
 from clingstone.evidence.serial import DurbinWatson, IrregularSerial, PanelDurbinWatson
+from clingstone.evidence.shocks import CommonShocks
 from clingstone.evidence.spatial import Geary, Moran
 from clingstone.evidence.variogram import Variogram
 
@@ -19,11 +23,15 @@ TESTS: tuple[Test, ...] = (
     IrregularSerial(),
     BreuschGodfrey(),
     LjungBox(),
+    PanelSerial(),
+    CommonShocks(),
     Moran(),
     Geary(),
     Variogram(),
     FunctionalForm(),
     Trend(),
+    Season(),
+    Break(),
     TrendSurface(),
     Heteroscedasticity(),
     Outliers(),

@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy import sparse
+from scipy import sparse, special, stats
 
 from clingstone.design.derived import sweep
 from clingstone.design.design import Design
@@ -16,8 +16,11 @@ from clingstone.evidence.anova import absorbed
 from clingstone.evidence.autocorrelation import elapsed_curve, lag_curve
 from clingstone.evidence.calibrate import curve
 from clingstone.evidence.finding import About, Curve, Reading, column
+from clingstone.evidence.lagged import lagged_response, one_lag
 from clingstone.evidence.nested import level_name
 from clingstone.evidence.read import Plain, arcsine, direction, normal_quantile, ratio, tail_p
+from clingstone.evidence.short import half_life, short_series, told_apart
+from clingstone.evidence.traces import traces
 from clingstone.maths.forms import Form, differences, graph, lagged
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
@@ -160,6 +163,8 @@ def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading
     """Durbin–Watson within runs of consecutive times, over series, its size the lag-one correlation."""
     series = series_of(fits.design)
     enough(series, fits.run.limits)
+    if not given and (own := lagged_response(fits)):
+        return _beside(fits, own)
     response, swept = over_groups(fits, given)
     design = response.design
     pairs = len(series.pairs(1)[0])
@@ -180,11 +185,43 @@ def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading
         log_p=log_p,
         p_method=f"{tails.method}, {direction(alternative)}",
         estimate=rho,
-        estimate_name=f"correlation of errors {step_words(series)}",
+        estimate_name=f"correlation of errors {step_words(series)}{half_life(column(rho), series)}",
         low=low,
         high=high,
         n_used=pairs,
-        caveats=_caveats(fits.design, series),
+        caveats=_caveats(fits.design, series) + (told_apart(fits, given) if given else short_series(fits)),
+    )
+
+
+def _beside(fits: Fits, own: str) -> Reading:
+    """The coefficient of the residual one step earlier, where the model holds an earlier response.
+
+    There the Durbin–Watson ratio leans to no correlation; the regression of Breusch and Godfrey does not.
+    """
+    response, series = fits.response, series_of(fits.design)
+    b, se, df = one_lag(response)
+    half = float(special.stdtrit(df, 0.5 + fits.run.settings.confidence / 2)) * se
+    with np.errstate(divide="ignore", invalid="ignore"):
+        t = b / se
+    alternative = fits.run.settings.alternative
+    log_p = stats.t.logsf({"less": -t, "greater": t}.get(alternative, np.abs(t)), df)
+    log_p = log_p + (np.log(2.0) if alternative == "two-sided" else 0.0)
+    return Reading(
+        statistic=t,
+        statistic_name="Breusch–Godfrey t",
+        df=df,
+        p=np.exp(log_p),
+        log_p=log_p,
+        p_method=f"t, {direction(alternative)}",
+        estimate=np.clip(b, -1.0, 1.0),
+        estimate_name=f"coefficient of the residual {step_words(series)}, beside {own}",
+        low=np.maximum(b - half, -1.0),
+        high=np.minimum(b + half, 1.0),
+        n_used=len(series.pairs(1)[0]),
+        caveats=(
+            f"{own} is the response of an earlier row, which makes Durbin–Watson lean to no correlation; "
+            "the residual one step earlier was put beside it instead.",
+        ),
     )
 
 
@@ -201,6 +238,15 @@ def _caveats(design: Design, series: Series) -> tuple[str, ...]:
 
 def _sentence(reading: Reading, about: About) -> str:
     r = f"{number(column(reading.estimate), 2)}{bounds(column(reading.low), column(reading.high))}"
+    name, _, rest = reading.estimate_name.partition(", half ")
+    if name.startswith("coefficient"):
+        own = name.partition(", beside ")[2]
+        return (
+            f"Beside {own}, the residual {about.words} has a coefficient of {r} over "
+            f"{count(reading.n_used, 'pair')} of rows ({reading.statistic_name} = "
+            f"{significant(column(reading.statistic), 3)}, {p_value(column(reading.p))})."
+        )
+    r += f", half {rest}" if rest else ""
     return (
         f"Errors {about.words} correlate {r}, by residuals over {count(reading.n_used, 'pair')} of rows "
         f"({reading.statistic_name} {significant(column(reading.statistic), 3)}, "
@@ -249,6 +295,10 @@ class DurbinWatson(Plain):
     def curve(self, fits: Fits, about: About) -> Curve | None:
         design = fits.design
         return lag_curve(fits, lambda k: law_of(design, form_of(design, f"lag:{k}")))
+
+    def more(self, fits: Fits, about: About) -> tuple[Curve, ...]:
+        found = traces(fits)
+        return () if found is None else (found,)
 
     def sentence(self, reading: Reading, about: About) -> str:
         return _sentence(reading, about)
