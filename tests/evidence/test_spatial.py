@@ -12,7 +12,10 @@ from scipy.spatial.distance import pdist, squareform
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.evidence.finding import About
-from clingstone.evidence.spatial import Geary, Moran, at_sites, residual_map, site_design
+from clingstone.evidence.read import ratio
+from clingstone.evidence.serial import law_of
+from clingstone.evidence.sites import unequal_spread, weighted_sites
+from clingstone.evidence.spatial import Geary, Moran, at_sites, moran_form, residual_map, site_design
 from clingstone.evidence.variogram import Variogram, pairs_of
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported
@@ -127,16 +130,87 @@ def test_order_of_rows_and_motions_of_the_map_do_not_matter(seed: int, angle: fl
     assert two.p[0] == pytest.approx(one.p[0], rel=1e-5)
 
 
-def test_unequal_variances_are_said() -> None:
-    # Spread that grows a hundredfold over the map makes the plain test speak where the robust does not.
+def test_unequal_spread_is_not_read_as_dependence() -> None:
+    # The trap: spread that grows a hundredfold over the map makes the exact test reject far too often.
     rng = np.random.default_rng(5)
-    xy = rng.uniform(size=(150, 2))
-    made = design(n=150, xy=xy)
-    told = 0
-    for _ in range(60):
-        reading = Moran().read(fits(made, np.exp(4.6 * xy[:, 0]) * rng.standard_normal(150)), NEAR)
-        told += any("unequal variances" in c for c in reading.caveats) and reading.p[0] < 0.05
-    assert told >= 3
+    xy, B = rng.uniform(size=(200, 2)), 2000
+    made = design(n=200, xy=xy)
+    run = Fits(Response.of(made, np.exp(4.6 * xy[:, :1]) * rng.standard_normal((200, B))), Run())
+    law = law_of(site_design(made), moran_form(site_design(made), NEAR.key))
+    exact = law.tails(ratio(at_sites(run.response), law.form), "fast").two_sided
+    assert np.mean(exact < 0.05) > 0.15
+    robust = Moran().read(run, NEAR)
+    assert np.mean(robust.p < 0.05) == pytest.approx(0.05, abs=0.02)
+    assert "unequal spread" in robust.p_method
+    assert any("With equal variances it would be" in c for c in robust.caveats)
+    there = field(xy, 0.2, rng, 300) * np.exp(2.3 * xy[:, :1])
+    assert np.mean(Moran().read(Fits(Response.of(made, there), Run()), NEAR).p < 0.05) > 0.8
+
+
+def test_equal_spread_keeps_the_exact_law_and_its_size() -> None:
+    rng = np.random.default_rng(15)
+    xy, B = rng.uniform(size=(60, 2)), 4000
+    made = design(xy[:, 0], xy=xy)
+    reading = Moran().read(Fits(Response.of(made, rng.standard_normal((60, B))), Run()), NEAR)
+    assert np.mean(reading.p < 0.05) == pytest.approx(0.05, abs=0.012)
+    spread = unequal_spread(at_sites(Response.of(made, rng.standard_normal((60, B)))))
+    assert np.mean(spread < 0.1) == pytest.approx(0.1, abs=0.02)
+
+
+def test_koenker_equals_statsmodels() -> None:
+    # statsmodels.stats.diagnostic.het_breuschpagan (robust=True) on the same columns
+    from statsmodels.stats.diagnostic import het_breuschpagan
+
+    rng = np.random.default_rng(16)
+    xy = rng.uniform(size=(80, 2))
+    made = design(rng.standard_normal(80), xy=xy)
+    response = Response.of(made, (1 + xy[:, 0]) * rng.standard_normal(80))
+    small = at_sites(response)
+    fitted = (small.design.Q @ small.coef)[:, 0]
+    Z = np.column_stack([np.ones(80), xy, fitted])
+    expected = het_breuschpagan(small.residual[:, 0], Z, robust=True)[1]
+    assert unequal_spread(small)[0] == pytest.approx(expected, rel=1e-8)
+
+
+def test_unequal_rows_per_site_are_weighted_and_hold_their_size() -> None:
+    # One site in four has 20 rows, the others one or two; strong independent site effects.
+    rng = np.random.default_rng(17)
+    S, B = 48, 3000
+    xy = rng.uniform(size=(S, 2))
+    N = np.where(np.arange(S) % 4 == 0, 20, 1 + np.arange(S) % 2)
+    site = np.repeat(np.arange(S), N)
+    made = design(xy[site, 0], xy=xy, site=site)
+    for sd in (0.0, 1.0):
+        y = sd * rng.standard_normal((S, B))[site] + rng.standard_normal((len(site), B))
+        reading = Moran().read(Fits(Response.of(made, y), Run()), NEAR)
+        assert np.mean(reading.p < 0.05) == pytest.approx(0.05, abs=3 * np.sqrt(0.05 * 0.95 / B) + 0.005)
+        assert any("weighted by the precision of their means" in c for c in reading.caveats)
+
+
+def test_weighted_form_equals_the_dense_score() -> None:
+    rng = np.random.default_rng(18)
+    S = 30
+    xy = rng.uniform(size=(S, 2))
+    site = np.r_[np.arange(S), rng.integers(0, 10, 40)]
+    made = fits(design(xy[site, 0], xy=xy, site=site), rng.standard_normal(S)[site] + rng.standard_normal(70))
+    found = weighted_sites(made, NEAR.key)
+    assert found is not None
+    response, form = found
+    model = made[{"group:site"}]
+    theta = float(model.variances["group:site"][0] / model.variances["row"][0])
+    part = made.design.spatial.part  # type: ignore[union-attr]
+    D = np.diag(1 / np.sqrt(theta + 1 / made.design.sizes(part)))
+    X = D @ np.column_stack([np.ones(S), xy[:, 0]])
+    means = part.means(made.response.design.Q @ made.response.coef + made.response.residual)
+        made.response.design.Q @ made.response.coef + made.response.residual
+    )  # type: ignore[union-attr]
+    y = D @ means[:, 0]
+    e = y - X @ np.linalg.lstsq(X, y, rcond=None)[0]
+    W = made.design.neighbours[0].W.toarray()
+    expected = e @ D @ W @ D @ e / (e @ e)
+    scale = np.mean(np.diag(D) ** 2)
+    # The ratio of variances is held to a hundredth of ln(1 + ratio).
+    assert ratio(response, form)[0] == pytest.approx(expected / scale, rel=0.02)
 
 
 def test_other_neighbourhoods_are_read_together() -> None:

@@ -15,7 +15,7 @@ from clingstone.design.response import Response
 from clingstone.display import bounds, number, p_value, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, degenerate, exceedance, floats, normal_quantile, simulated
-from clingstone.evidence.spatial import at_sites, site_design, sites_of
+from clingstone.evidence.sites import at_sites, site_design, sites_of
 from clingstone.maths.once import Array, kept
 from clingstone.needs import Family, Needs, NotSupported
 
