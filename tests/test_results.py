@@ -90,7 +90,7 @@ def test_settings_come_back_as_settings() -> None:
 @pytest.mark.parametrize("value", [math.nan, math.inf, -math.inf, -0.0, 5e-324, 0.1 + 0.2, 1e308])
 def test_every_float_survives(value: float) -> None:
     finding = plain.example(Finding, p=value, df=value, curve=plain.example(Curve, x=(value, 1.0)))
-    results = plain.results(evidence=(finding,), rehearsal={"coverage": (value, "NaN")})
+    results = plain.results(evidence=(finding,), settings={"coverage": (value, "NaN")})
     text = to_json(results)
     json.loads(text, parse_constant=lambda word: pytest.fail(f"{word} is not JSON"))
     assert same(from_json(text), results)
@@ -98,16 +98,16 @@ def test_every_float_survives(value: float) -> None:
 
 def test_non_finite_numbers_are_words_and_words_stay_words() -> None:
     finding = plain.example(Finding, p=math.nan, sentence="NaN", high=-math.inf)
-    tree = json.loads(to_json(plain.results(evidence=(finding,), rehearsal={"width": math.inf})))
+    tree = json.loads(to_json(plain.results(evidence=(finding,), settings={"width": math.inf})))
     assert (tree["evidence"][0]["p"], tree["evidence"][0]["high"]) == ("NaN", "-Infinity")
-    assert tree["rehearsal"] == {"width": {"float": "Infinity"}}
+    assert tree["settings"] == {"width": {"float": "Infinity"}}
     assert from_json(to_json(plain.results(evidence=(finding,)))).evidence[0].sentence == "NaN"
 
 
 def test_numpy_scalars_and_sets_become_plain() -> None:
     finding = plain.example(Finding, p=np.float64(0.25), n_used=np.int64(7), primary=np.bool_(True))
     advice = replace(plain.results().advice, structures=frozenset({"spatial", "group"}))
-    results = plain.results(evidence=(finding,), advice=advice, rehearsal={"n": np.arange(2)})
+    results = plain.results(evidence=(finding,), advice=advice, settings={"n": np.arange(2)})
     tree = json.loads(to_json(results))
     assert tree["evidence"][0]["p"] == 0.25
     assert tree["evidence"][0]["n_used"] == 7
@@ -115,7 +115,7 @@ def test_numpy_scalars_and_sets_become_plain() -> None:
     assert tree["advice"]["structures"] == ["group", "spatial"]
     back = from_json(to_json(results))
     assert back.advice.structures == frozenset({"group", "spatial"})
-    assert back.rehearsal == {"n": (0, 1)}
+    assert back.settings == {"n": (0, 1)}
 
 
 @settings(max_examples=20, deadline=None, suppress_health_check=list(HealthCheck))

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from clingstone.needs import InputError as InputError
     from clingstone.needs import Limits as Limits
     from clingstone.needs import NotSupported as NotSupported
+    from clingstone.rehearsing import rehearse as rehearse
     from clingstone.results import Results as Results
     from clingstone.run import Settings as Settings
 
@@ -33,6 +34,7 @@ _HOMES = {
     "Examination": "examination",
     "examine": "examination",
     "refit": "examination",
+    "rehearse": "rehearsing",
     "replay": "examination",
     "InputError": "needs",
     "Limits": "needs",
@@ -51,6 +53,7 @@ __all__ = [
     "__version__",
     "examine",
     "refit",
+    "rehearse",
     "replay",
 ]
 

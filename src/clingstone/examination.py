@@ -22,6 +22,8 @@ from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import Ledger, weigh
 from clingstone.needs import InputError, NotSupported
+from clingstone.rehearsal.tallies import Rehearsal
+from clingstone.rehearsal.verdict import advised as rehearsed_advice
 from clingstone.remedies import explain as explain_at
 from clingstone.remedies import refit as refit_at
 from clingstone.remedies import remedy as remedy_of
@@ -86,7 +88,7 @@ def examine(
     settings = settings_of({k: v for k, v in locals().items() if k not in ("data", "progress")})
     _no_rehearsal(settings)
     with one_thread():
-        return _steps(Case.of(data, settings), Run(settings, report=progress))
+        return examined(Case.of(data, settings), Run(settings, report=progress))
 
 
 def _no_rehearsal(settings: Settings) -> None:
@@ -113,7 +115,8 @@ def settings_of(arguments: Mapping[str, Any]) -> Settings:
     return Settings(**given)
 
 
-def _steps(case: Case, run: Run) -> Examination:
+def examined(case: Case, run: Run) -> Examination:
+    """``examine`` of a case that is made already."""
     settings = run.settings
     with run.progress("examining", 5) as advance:
         fits = Fits(case.response, run)
@@ -126,11 +129,12 @@ def _steps(case: Case, run: Run) -> Examination:
         refits = shortlist.refit(fits)
         advance(1)
         advice = settle(shortlist, facts, refits, None)
+        advice, rehearsed = rehearsed_advice(fits, ledger, facts, shortlist, refits, advice)
         refits = _explained(fits, advice, refits)
         if settings.unadjusted:
             refits = (*refits, *_alone(fits, advice, refits))
         advance(1)
-        results = _write(case, fits, evidence, ledger, advice, refits)
+        results = _write(case, fits, evidence, ledger, advice, refits, rehearsed)
         advance(1)
     return Examination(case, fits, results)
 
@@ -174,12 +178,15 @@ def _alone(fits: Fits, advice: Advice, refits: tuple[Refit, ...]) -> tuple[Refit
 
 
 def _write(
-    case: Case, fits: Fits, evidence: Evidence, ledger: Ledger, advice: Advice, refits: tuple[Refit, ...]
+    case: Case,
+    fits: Fits,
+    evidence: Evidence,
+    ledger: Ledger,
+    advice: Advice,
+    refits: tuple[Refit, ...],
+    rehearsed: Rehearsal | None,
 ) -> Results:
     """The plain bundle, with its methods text and references."""
-    from clingstone.writeup.bibliography import references_of
-    from clingstone.writeup.methods import methods_text
-
     bare = Results(
         clingstone=version(),
         schema=SCHEMA,
@@ -188,12 +195,20 @@ def _write(
         ledger=ledger,
         advice=advice,
         refits=refits,
-        rehearsal=None,
+        rehearsal=rehearsed,
         methods="",
         references=(),
         settings=asdict(fits.run.settings),
         versions=versions(),
     )
+    return _worded(bare)
+
+
+def _worded(bare: Results) -> Results:
+    """The results with the methods text and the references that they call for."""
+    from clingstone.writeup.bibliography import references_of
+    from clingstone.writeup.methods import methods_text
+
     cited: tuple[Reference, ...] = references_of(bare)
     return replace(bare, methods=methods_text(bare), references=cited)
 
@@ -258,8 +273,23 @@ class Examination:
         return pd.DataFrame([asdict(row) for row in self.results.terms], columns=columns)
 
     @property
-    def rehearsal(self) -> Mapping[str, Any] | None:
+    def rehearsal(self) -> Rehearsal | None:
+        """How each remedy did on replicates of this design; None when none was made."""
         return self.results.rehearsal
+
+    def with_rehearsal(self, found: Rehearsal) -> Examination:
+        """A new examination that holds a rehearsal, with an advice that has heard it."""
+        from clingstone.rehearsing import heed
+
+        return heed(self, found)
+
+    def rewritten(self, advice: Advice, found: Rehearsal) -> Examination:
+        """The same evidence and refits under another advice, with the rehearsal behind it."""
+        with one_thread():
+            refits = _explained(self.fits, advice, self.refits)
+        settings = {**self.results.settings, "rehearsal": found.replicates}
+        bare = replace(self.results, advice=advice, refits=refits, rehearsal=found, settings=settings)
+        return replace(self, results=_worded(bare))
 
     @property
     def methods(self) -> str:
@@ -394,7 +424,7 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
                 f"the data have changed since {path} was written: their fingerprints differ",
                 "Give the data as they were, with data=, or examine the new data.",
             )
-        again = _steps(case, Run(settings)).results
+        again = examined(case, Run(settings)).results
     lines = compare(saved, again)
     words = [f"{len(saved.evidence)} findings and {len(saved.intervals)} intervals compared to 1e-8"]
     moved = [

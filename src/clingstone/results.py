@@ -16,6 +16,7 @@ from clingstone.case import CaseSummary
 from clingstone.evidence.finding import Finding
 from clingstone.ledger.ledger import Ledger
 from clingstone.needs import InputError
+from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.remedies.remedy import Interval, JointTest, Refit
 
 if TYPE_CHECKING:
@@ -61,7 +62,7 @@ class Results:
     ledger: Ledger
     advice: Advice
     refits: tuple[Refit, ...]
-    rehearsal: Mapping[str, Any] | None
+    rehearsal: Rehearsal | None
     methods: str
     references: tuple[Reference, ...]
     settings: Mapping[str, Any]
@@ -85,7 +86,7 @@ def to_json(results: Results) -> str:
     """results.json, schema 1.
 
     Numbers keep every digit; those that are not finite stand as the words "NaN", "Infinity",
-    "-Infinity" (in ``settings`` and ``rehearsal``, whose values have no declared type, as
+    "-Infinity" (in ``settings``, whose values have no declared type, as
     ``{"float": "NaN"}``). ``intervals`` and ``terms`` repeat, as two flat tables, what the refits
     hold, so that other programs can read them at once.
     """

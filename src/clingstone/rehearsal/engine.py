@@ -153,7 +153,7 @@ def _client(address: str) -> Iterator[Any]:
             'Install it with: pip install "clingstone[dask]".',
         ) from error
     try:
-        client = Client(address, timeout=PATIENCE, set_as_default=False)
+        client: Any = Client(address, timeout=PATIENCE, set_as_default=False)  # type: ignore[no-untyped-call]
     except (OSError, ValueError) as error:
         raise InputError(
             f"no Dask scheduler answered at {address} within {PATIENCE} seconds",

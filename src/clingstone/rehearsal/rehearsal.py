@@ -18,6 +18,7 @@ from clingstone.rehearsal.study import Counts, Job, Study, study, without
 from clingstone.rehearsal.tallies import Left, Rehearsal, pairs, scores, tallies
 from clingstone.rehearsal.truths import truths
 from clingstone.remedies import remedy as remedy_of
+from clingstone.run import Run
 
 LONG = 10_000  # replicates per truth of a long rehearsal, at the most
 FIRST = 1_000  # the first look at the ranking; later looks at twice as many each time
@@ -52,6 +53,7 @@ def planned(fits: Fits, ledger: Ledger, choices: Choices, replicates: str | int 
     choices = tuple(choices)
     wanted = [c for c in choices if c[0] not in BUILT]
     found, left = study(fits, truths(fits, ledger), wanted)
+    found = replace(found, report=fits.run.report)
     left += [
         (id, at, "it is built from another remedy on a wider model") for id, at in choices if id in BUILT
     ]
@@ -75,7 +77,8 @@ def rehearse(
 
     Raises InputError when the folder holds the chunks of another plan.
     """
-    found, run = plan.study, plan.study.fits.run
+    found = plan.study
+    run = Run(found.fits.run.settings, found.fits.run.limits, found.report)
     jobs = found.jobs(plan.replicates)
     shelf = Shelf(folder, found, plan.replicates) if folder is not None else None
     counts: dict[int, Counts] = {t: found.empty() for t in range(len(found.truths))}

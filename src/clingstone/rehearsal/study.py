@@ -26,7 +26,7 @@ from clingstone.remedies.linear import LinearReady
 from clingstone.remedies.refit import at as set_at
 from clingstone.remedies.remedy import Ready, Remedy, rows
 from clingstone.remedies.sandwich import ClusterReady, OrdinaryReady
-from clingstone.run import Run
+from clingstone.run import Progress, Run
 
 MEMORY = 256e6  # bytes of the columns of one chunk
 COPIES = 8  # arrays of rows × columns that are alive at once
@@ -97,13 +97,18 @@ class Columns(NamedTuple):
 class Study:
     """Truths and contenders over the user's design; all that a worker needs.
 
-    fits : of the user's own y. terms : focus rows, by name.
+    fits : of the user's own y. terms : focus rows, by name. report : who hears of progress, left behind
+    when the study is sent to a worker.
     """
 
     fits: Fits
     truths: tuple[Truth, ...]
     contenders: tuple[Contender, ...]
     terms: tuple[str, ...]
+    report: Progress | None = None
+
+    def __getstate__(self) -> dict[str, object]:
+        return {**self.__dict__, "report": None}
 
     @property
     def chunk(self) -> int:

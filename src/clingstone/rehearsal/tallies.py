@@ -181,7 +181,7 @@ def _tally(study: Study, c: int, k: int, t: int, found: Counts, ordinary: float)
 
 
 def binomial(share: float, count: int) -> float:
-    """√(c(1 − c)/B), two of each kind added so that shares of 0 and 1 keep an error (Agresti & Coull 1998)."""
+    """√(c(1 − c)/B), two of each kind added so that 0 and 1 keep an error (Agresti & Coull 1998)."""
     held = (share * count + 2) / (count + 4)
     return float(np.sqrt(held * (1 - held) / (count + 4)))
 

@@ -34,7 +34,7 @@ MOST_RHO = 0.97  # of the process below that noise
 PER_SD = 2.0  # times that a row's variance grows for each standard deviation of its fitted value
 FURTHEST = 2.0  # standard deviations beyond which it grows no more
 
-Different = Literal["", "noisy series", "smooth field", "unequal spread"]
+Different = Literal["as fitted", "noisy series", "smooth field", "unequal spread"]
 
 
 @dataclass(frozen=True)
@@ -42,7 +42,7 @@ class Truth:
     """One error model from which y is simulated; plain.
 
     name : a word or two. words : a sentence for a reader. node, theta, sigma2 : the error model.
-    different : how it departs from every fitted structure, "" where it does not.
+    different : how it departs from every fitted structure.
     """
 
     name: str
@@ -50,7 +50,7 @@ class Truth:
     node: tuple[str, ...]
     theta: tuple[float, ...]
     sigma2: float
-    different: Different = ""
+    different: Different = "as fitted"
 
 
 # ---- the plausible set -------------------------------------------------------------------------
@@ -172,7 +172,7 @@ def draw(truth: Truth, fits: Fits, rng: np.random.Generator, B: int) -> Response
 def errors(truth: Truth, fits: Fits, rng: np.random.Generator, B: int) -> Array:
     """(n, B) errors on the scale of the basis."""
     algebra, theta = fits.algebra(truth.node), np.array(truth.theta)
-    if not truth.different:
+    if truth.different == "as fitted":
         return algebra.draw(theta, truth.sigma2, rng, B)
     n = fits.design.n
     serial = any(isinstance(piece, SerialPiece) for piece in algebra.pieces)
@@ -228,7 +228,11 @@ def _smooth(piece: SpatialPiece, own: Array, rng: np.random.Generator, B: int) -
 
 def summed(truth: Truth, fits: Fits, key: str) -> bool:
     """Whether y can be drawn as sums and scores over the cells of one partition."""
-    return not truth.different and set(truth.node) <= {f"group:{key}"} and key in fits.design.partitions
+    return (
+        truth.different == "as fitted"
+        and set(truth.node) <= {f"group:{key}"}
+        and key in fits.design.partitions
+    )
 
 
 def draw_summed(truth: Truth, fits: Fits, key: str, rng: np.random.Generator, B: int) -> Drawn:
