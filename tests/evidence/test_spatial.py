@@ -202,8 +202,6 @@ def test_weighted_form_equals_the_dense_score() -> None:
     D = np.diag(1 / np.sqrt(theta + 1 / made.design.sizes(part)))
     X = D @ np.column_stack([np.ones(S), xy[:, 0]])
     means = part.means(made.response.design.Q @ made.response.coef + made.response.residual)
-        made.response.design.Q @ made.response.coef + made.response.residual
-    )  # type: ignore[union-attr]
     y = D @ means[:, 0]
     e = y - X @ np.linalg.lstsq(X, y, rcond=None)[0]
     W = made.design.neighbours[0].W.toarray()
