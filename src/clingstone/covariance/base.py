@@ -50,6 +50,14 @@ class Pieces:
         levels = dict.fromkeys(piece.part.key for piece in self.pieces if isinstance(piece, SlopePiece))
         return tuple(self.bundle(key) for key in levels)
 
+    @property
+    @once
+    def level_keys(self) -> tuple[str, ...]:
+        """Group levels between which something varies."""
+        own = (p.part.key for p in self.pieces if isinstance(p, GroupPiece | SlopePiece))
+        return tuple(dict.fromkeys(own))
+
+    @once
     def bundle(self, level: str) -> Bundle:
         """Everything that varies between the groups of one level."""
         own = tuple(p for p in self.pieces if isinstance(p, GroupPiece | SlopePiece) and p.part.key == level)

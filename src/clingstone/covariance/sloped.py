@@ -7,6 +7,7 @@ from dataclasses import dataclass, field
 from itertools import pairwise
 
 import numpy as np
+import numpy.typing as npt
 
 from clingstone.covariance.base import Pieces
 from clingstone.covariance.bundles import Bundle, SlopePiece
@@ -80,9 +81,11 @@ class Sloped(Pieces):
 
     def gram(self, theta: Array, response: Response) -> Gram:
         theta = np.asarray(theta, dtype=float)
+        return self._gram([bundle.L(self.joined(bundle, theta)) for bundle in self.levels], response)
+
+    def _gram(self, factors: Sequence[Array], response: Response) -> Gram:
         gram, block = reml.independent(self.design.p, response.ss), self._block(response)
-        for step, (bundle, at) in enumerate(zip(self.levels, self._functions[1], strict=True)):
-            L = bundle.L(self.joined(bundle, theta))
+        for step, (L, at) in enumerate(zip(factors, self._functions[1], strict=True)):
             gram = slopes.lower(gram, block, L, at)
             if step < len(self._up):
                 block = block.shrunk(L, at).lifted(self._up[step])
@@ -97,43 +100,93 @@ class Sloped(Pieces):
             U, out = both[:, : U.shape[1]], both[:, U.shape[1] :]
         return out
 
-    # ---- the optimum, by the gradient in L ---------------------------------------------------------
+    # ---- the optimum, in the entries of L -------------------------------------------------------------
 
     def minimum(self, response: Response, m: int, warm: Optimum | None) -> Optimum | None:
-        """One level: quasi-Newton steps in the entries of L, where a zero variance is no wall."""
-        if len(self.levels) != 1:
-            return None
-        bundle = self.levels[0]
-        block, base = self._block(response), reml.independent(self.design.p, response.ss)
-        rows, columns = np.nonzero(bundle.free | np.eye(bundle.q, dtype=bool))
+        """Quasi-Newton steps in the entries of every L, where a zero variance is no wall.
 
-        def full(entries: Array) -> Array:
-            L = np.zeros((bundle.q, bundle.q))
-            L[rows, columns] = entries
-            return L
-
-        def f(entries: Array) -> tuple[float, Array]:
-            value, slope = slopes.criterion(base, block, full(entries), m)
-            return value, slope[rows, columns]
-
-        mean = np.array([block.UU[i, i].mean() for i in range(bundle.q)])
-        unit = 1 / np.sqrt(mean[rows])
+        The gradient is exact for one level, by differences for several.
+        """
+        one = self._exact if len(self.levels) == 1 else self._differenced
+        f = one(response.column(0), m)
+        unit, diagonal = self._units(response)
         # One start is enough where many cells make the criterion all but quadratic.
-        sizes = (1.0,) if bundle.part.count > ONE_START else (1.0, 0.2)
-        starts = [np.where(rows == columns, size * unit, 0.0) for size in sizes]
+        sizes = (1.0,) if self.levels[0].part.count > ONE_START else (1.0, 0.2)
+        starts = [np.where(diagonal, size * unit, 0.0) for size in sizes]
         if warm is not None:
-            starts = [bundle.L(warm.start)[rows, columns]]
+            starts = [self._entries(warm.start)]
         runs = [newton.descend(f, start, unit) for start in starts]
         best = min(runs, key=lambda run: run.value)
         agree = sum(run.value <= best.value + 1e-3 for run in runs)
         note = f"{sum(r.calls for r in runs)} evaluations, {agree} of {len(runs)} starts reached the optimum"
-        reached = bundle.theta(full(best.x))
-        value, theta, bound = self._settle(bundle, reached, response, m)
+        reached = self._theta(best.x)
+        value, theta, bound = self._settle(reached, response, m)
         return Optimum(theta, value, bound, best.converged, (note,), np.eye(len(theta)), reached)
 
-    def _settle(
-        self, bundle: Bundle, theta: Array, response: Response, m: int
-    ) -> tuple[float, Array, newton.Flags]:
+    @property
+    @once
+    def _places(self) -> tuple[tuple[npt.NDArray[np.intp], npt.NDArray[np.intp]], ...]:
+        """Rows and columns of the free entries of each level's L."""
+        found = (np.nonzero(b.free | np.eye(b.q, dtype=bool)) for b in self.levels)
+        return tuple((rows, columns) for rows, columns in found)
+
+    def _factors(self, entries: Array) -> list[Array]:
+        """L of every level from the free entries of all."""
+        out, start = [], 0
+        for bundle, place in zip(self.levels, self._places, strict=True):
+            L = np.zeros((bundle.q, bundle.q))
+            L[place] = entries[start : start + len(place[0])]
+            out.append(L)
+            start += len(place[0])
+        return out
+
+    def _entries(self, theta: Array) -> Array:
+        pairs = zip(self.levels, self._places, strict=True)
+        return np.concatenate([b.L(self.joined(b, theta))[place] for b, place in pairs])
+
+    def _theta(self, entries: Array) -> Array:
+        """Working parameters, in the order of the pieces."""
+        out = np.empty(len(self.parameters))
+        for bundle, L in zip(self.levels, self._factors(entries), strict=True):
+            own, start = bundle.theta(L), 0
+            for piece in bundle.pieces:
+                where = self.slices[piece.key]
+                out[where] = own[start : start + where.stop - where.start]
+                start += where.stop - where.start
+        return out
+
+    def _units(self, response: Response) -> tuple[Array, npt.NDArray[np.bool_]]:
+        """The size of each entry that its mean cell can show, and which entries are on a diagonal."""
+        units, diagonals = [], []
+        UU = self._block(response).UU
+        rows = UU.sum(axis=2)
+        for bundle, at, place in zip(self.levels, self._functions[1], self._places, strict=True):
+            mean = np.array([rows[i, i] for i in at]) / bundle.part.count
+            units.append(1 / np.sqrt(mean[place[0]]))
+            diagonals.append(place[0] == place[1])
+        return np.concatenate(units), np.concatenate(diagonals)
+
+    def _exact(self, column: Response, m: int) -> newton.Function:
+        block, base = self._block(column), reml.independent(self.design.p, column.ss)
+
+        def f(entries: Array) -> tuple[float, Array]:
+            value, slope = slopes.criterion(base, block, self._factors(entries)[0], m)
+            return value, slope[self._places[0]]
+
+        return f
+
+    def _differenced(self, column: Response, m: int) -> newton.Function:
+        def value(entries: Array) -> float:
+            return float(reml.criterion(self._gram(self._factors(entries), column), m)[0])
+
+        unit, _ = self._units(column)
+
+        def f(entries: Array) -> tuple[float, Array]:
+            return value(entries), reml.gradient(lambda z: value(z * unit), entries / unit) / unit
+
+        return f
+
+    def _settle(self, theta: Array, response: Response, m: int) -> tuple[float, Array, newton.Flags]:
         """Components that are as good left out are; correlations at ±1 are at their bound."""
 
         def value(at: Array) -> float:
@@ -141,7 +194,7 @@ class Sloped(Pieces):
 
         here = value(theta)
         bound = np.zeros(len(theta), dtype=bool)
-        for piece in bundle.pieces:
+        for piece in self.pieces:
             place = self.slices[piece.key].start
             first = piece.parameters[0]
             if theta[place] - first.low > 12:
@@ -154,7 +207,7 @@ class Sloped(Pieces):
         for place, parameter in enumerate(self.parameters):
             bound[place] |= theta[place] >= parameter.high - 1e-4
             bound[place] |= not parameter.vanishes and theta[place] <= parameter.low + 1e-4
-        for piece in bundle.pieces:
+        for piece in self.pieces:
             # A correlation with what is not there has no value.
             for j, key in enumerate(piece.earlier if isinstance(piece, SlopePiece) else ()):
                 bound[self.slices[piece.key].start + 1 + j] |= bound[self.slices[key].start]

@@ -10,6 +10,8 @@ from clingstone.remedies.groupt import GroupT
 from clingstone.remedies.jackknife import ClusterJackknife
 from clingstone.remedies.longrun import Hac
 from clingstone.remedies.means import GroupMeans
+from clingstone.remedies.mixed import MixedSlope
+from clingstone.remedies.mixedrobust import MixedRobust
 from clingstone.remedies.multiway import MultiwayCluster
 from clingstone.remedies.periods import PanelHac
 from clingstone.remedies.randomisation import Randomisation
@@ -21,6 +23,7 @@ from clingstone.remedies.sandwich import ClusterRobust, HeteroscedasticityRobust
 from clingstone.remedies.serial import Arma, Car1
 from clingstone.remedies.spatial import SpatialError
 from clingstone.remedies.spatialhac import SpatialHac
+from clingstone.remedies.unstructured import Unstructured
 from clingstone.remedies.within import FixedEffects
 
 REMEDIES: tuple[Remedy, ...] = (
@@ -36,6 +39,9 @@ REMEDIES: tuple[Remedy, ...] = (
     FixedEffects(),
     WithinBetween(),
     Gls("mixed-intercept", df="kenward-roger"),
+    MixedSlope(),
+    MixedRobust(),
+    Unstructured(),
     Gls("ar1"),
     Car1(),
     Arma(),

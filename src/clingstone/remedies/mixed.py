@@ -1,0 +1,313 @@
+"""Mixed models in which slopes vary between groups, by restricted maximum likelihood."""
+
+from __future__ import annotations
+
+from collections.abc import Mapping
+from dataclasses import dataclass, field, replace
+from typing import TYPE_CHECKING, ClassVar, Literal
+
+import numpy as np
+
+from clingstone.covariance.algebras import choose
+from clingstone.covariance.components import declared, on_request, slope_key
+from clingstone.covariance.information import ingredients
+from clingstone.design.design import Design, rows_of
+from clingstone.design.response import Response
+from clingstone.display import MINUS, listed
+from clingstone.maths import curvature, reml
+from clingstone.maths.kenward import Kenward
+from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
+from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.columns import estimates
+from clingstone.remedies.gls import Column
+from clingstone.remedies.linear import positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates
+
+if TYPE_CHECKING:
+    from clingstone.covariance.algebras import Chosen
+    from clingstone.covariance.bundles import Bundle
+    from clingstone.covariance.fits import ErrorModel, Fits
+
+Rule = Literal["kenward-roger", "satterthwaite", "residual", "normal"]
+BY = " by "  # "day by patient": slopes of day that vary between patients
+AND = " and "
+MOST = 3  # slopes fitted together
+_RULES: dict[Rule, str] = {
+    "kenward-roger": "Kenward–Roger",
+    "satterthwaite": "Satterthwaite",
+    "residual": "n − p",
+    "normal": "normal quantile",
+}
+
+
+@dataclass(frozen=True, eq=False)
+class SlopeReady:
+    """A mixed model over one design; the error model comes from ``Fits`` at each reading."""
+
+    remedy: MixedSlope
+    design: Design
+    names: tuple[str, ...]
+    W: Array
+    rule: str
+    unusable: Mapping[str, Refusal] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+
+    def fit(self, fits: Fits) -> Estimates:
+        node = self.remedy.node(fits)
+        model, algebra = fits[node], fits.algebra(node)
+        B = fits.response.B
+        columns = [
+            self._column(algebra, model, fits.response if B == 1 else fits.response.column(b), b)
+            for b in range(B)
+        ]
+        return estimates(
+            self.design,
+            self.W,
+            columns,
+            fits.run.settings.confidence,
+            np.asarray(np.any(model.at_bound, axis=0)),
+            np.asarray(model.converged, dtype=bool),
+            boundary_notes(algebra, model),
+        )
+
+    def _column(self, algebra: Chosen, model: ErrorModel, y: Response, b: int) -> Column:
+        theta, bound = model.theta[:, b], model.at_bound[:, b]
+        here = algebra.gram(theta, y)
+        m = self.design.m
+        coef = y.coef[:, 0] + reml.reduced(here)[0][:, 0]
+        s2 = float(reml.scale(here, m)[0])
+        if self.remedy.df in ("residual", "normal"):
+            df = float(m) if self.remedy.df == "residual" else np.inf
+            return Column(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), lambda w: df, lambda L: (1.0, df))
+        if self.remedy.df == "kenward-roger":
+            found = kenward(algebra, theta, s2)
+            if found is not None:
+                # At a bound the adjustment would treat it as an ordinary estimate: Φ is kept.
+                phi = found.phi if bound.any() else found.adjusted
+                return Column(coef, phi, lambda w: float(np.clip(found.df(w), 1.0, m)), found.joint)
+        free = [int(i) for i in np.flatnonzero(~bound)]
+        bent = curvature.slopes(lambda at: algebra.gram(at, y), theta, free, m)
+        if not bent.sound:
+            note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
+            return Column(coef, bent.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
+        note = "" if self.remedy.df == "satterthwaite" else "Satterthwaite's df: too many groups for others."
+        return Column(coef, bent.phi, bent.df, lambda L: (1.0, bent.joint(L)), (note,) if note else ())
+
+    def account(self, fits: Fits) -> Account:
+        node = self.remedy.node(fits)
+        model, algebra = fits[node], fits.algebra(node)
+        items: list[tuple[str, str]] = []
+        for key in algebra.level_keys:
+            bundle = algebra.bundle(key)
+            items += _spread_items(bundle, algebra.joined(bundle, model.theta[:, 0]), float(model.sigma2[0]))
+        items.append(("standard deviation of row noise", f"{float(np.sqrt(model.sigma2[0])):.6g}"))
+        items.append(("restricted log-likelihood", f"{_printed(self.design, model):.6g}".replace("-", MINUS)))
+        df = {"Kenward–Roger": ", kenward-roger-1997", "Satterthwaite": ", giesbrecht-burns-1985"}
+        return Account(
+            estimator="generalised least squares, error parameters by restricted maximum likelihood: "
+            f"{self.remedy.name}",
+            covariance="σ²(X′V⁻¹X)⁻¹"
+            + (", adjusted for the estimation of the variances" if self.rule == "Kenward–Roger" else ""),
+            factor="σ² = e′V⁻¹e/(n − p)",
+            df_rule=self.rule,
+            reference="normal" if self.remedy.df == "normal" else "t",
+            items=tuple(items),
+            source="laird-ware-1982, harville-1977" + df.get(self.rule, ""),
+        )
+
+
+@dataclass(frozen=True)
+class MixedSlope:
+    """Random slopes with a random intercept, correlated by default, at one group level.
+
+    Laird & Ware (1982); REML by Harville (1977); Kenward & Roger (1997) df and covariance. Every other
+    level that can be estimated keeps its intercept. at : "day by patient", or "day and dose by patient".
+    apart : slopes uncorrelated with the intercept, the line of a group then turning about x = 0.
+    """
+
+    df: Rule = "kenward-roger"
+    apart: bool = False
+    at: str = ""
+    limits: Limits = field(default_factory=Limits)
+    id: ClassVar[str] = "mixed-slope"
+    covers: ClassVar[frozenset[Family]] = frozenset({"group"})
+    estimand: ClassVar[Estimand] = "pooled"
+    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    source: ClassVar[str] = "laird-ware-1982"
+
+    @property
+    def name(self) -> str:
+        if not self.at:
+            return "random slopes"
+        x, _, level = self.at.rpartition(BY)
+        what = "slopes" if AND in x else "slope"
+        return f"random intercept and {what} of {x} by {level}" + (", uncorrelated" if self.apart else "")
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        """Row-level predictors at each level: all in focus together first where they are few, then each."""
+        found: list[str] = []
+        for level in () if design.group is None else reversed(design.group.levels):
+            names = [x for x in candidates(design, level) if _stop(design, level, x, self.limits) is None]
+            if 1 < len(names) <= MOST:
+                found.append(AND.join(names) + BY + level.key)
+            found += [x + BY + level.key for x in names]
+        if found or design.group is None:
+            return tuple(found)
+        # Where none can be estimated the first is kept: the refusal then says why.
+        finest = design.group.finest
+        return tuple(x + BY + finest.key for x in candidates(design, finest)[:1])
+
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return self.covers
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
+
+    def keys(self, design: Design) -> tuple[str, ...]:
+        """Component keys: every level's intercept and the slopes. Raises NotSupported."""
+        level, names = _parsed(design, self.at)
+        found, refused = declared(design, self.limits)
+        own = f"group:{level.key}"
+        if own not in found:
+            no = refused.get(own, Refusal(f"these data have no level named {level.key}"))
+            raise no.error()
+        keys = [slope_key(level.key, x, self.apart) for x in names]
+        for key in keys:
+            on_request(design, key, self.limits)
+        return (*(k for k, c in found.items() if c.family == "group"), *keys)
+
+    def node(self, fits: Fits) -> frozenset[str]:
+        return frozenset(self.keys(fits.design))
+
+    def prepare(self, design: Design, working: ErrorModel | None = None) -> SlopeReady:
+        positive_m(design)
+        found, _ = declared(design, self.limits)
+        together = [found.get(k) or on_request(design, k, self.limits) for k in self.keys(design)]
+        choose(design, together, self.limits)  # refuses what cannot be fitted together
+        names, W = reported(design)
+        return SlopeReady(self, design, names, W, _RULES[self.df])
+
+    def conventions(self) -> tuple[tuple[str, MixedSlope], ...]:
+        return (
+            (
+                "the same fit, Satterthwaite df from the observed information",
+                replace(self, df="satterthwaite"),
+            ),
+            ("slopes uncorrelated with intercepts", replace(self, apart=not self.apart)),
+            ("the same fit, n − p df", replace(self, df="residual")),
+            ("the same fit, normal quantile", replace(self, df="normal")),
+        )
+
+
+def kenward(algebra: Chosen, theta: Array, sigma2: float) -> Kenward | None:
+    """Kenward and Roger's covariance and df of intercepts and slopes, or None where they would be dear."""
+    seen = ingredients(algebra, theta, sigma2)
+    if seen is None:
+        return None
+    try:
+        return Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
+    except np.linalg.LinAlgError:
+        return None
+
+
+def candidates(design: Design, level: Partition) -> tuple[str, ...]:
+    """Numeric predictors in focus that enter the model as they are and vary within the level.
+
+    Slopes of what is adjusted for may vary too, but only that of a predictor in focus, when it does, makes
+    that predictor's interval too narrow by far (Barr 2013).
+    """
+    out = []
+    for term in design.focus():
+        if term.kind != "numeric" or len(term.columns) != 1 or len(term.variables) != 1:
+            continue
+        x = term.variables[0]
+        if x not in design.covariates:
+            continue
+        values = np.asarray(design.covariates[x], dtype=float)
+        column = rows_of(design, design.Q @ design.basis.R[:, term.columns[0]])
+        size = float(np.abs(values).max())
+        if np.all(np.abs(column - values) <= 1e-9 * size) and _varies(values, level):
+            out.append(x)
+    return tuple(dict.fromkeys(out))
+
+
+def _varies(values: Array, level: Partition) -> bool:
+    inside = values - level.means(values)[level.codes]
+    return bool(np.any(np.abs(inside) > 1e-9 * np.abs(values).max()))
+
+
+def _stop(design: Design, level: Partition, x: str, limits: Limits) -> str | None:
+    try:
+        on_request(design, slope_key(level.key, x), limits)
+    except NotSupported as no:
+        return str(no)
+    return None
+
+
+def _parsed(design: Design, at: str) -> tuple[Partition, tuple[str, ...]]:
+    """Level and predictors of "x by level"; names may themselves hold the joining words."""
+    for level in () if design.group is None else design.group.levels:
+        known = candidates(design, level)
+        if at == AND.join(known) + BY + level.key:
+            return level, known
+        for x in known:
+            if at == x + BY + level.key:
+                return level, (x,)
+        if at.endswith(BY + level.key):
+            names = tuple(at.removesuffix(BY + level.key).split(AND))
+            if set(names) <= set(known):
+                return level, names
+    raise NotSupported(
+        f"slopes at {at!r} were asked for, and no numeric predictor of the model varies there",
+        "Write 'predictor by level', a predictor of the model that varies within groups of the level.",
+    )
+
+
+# ---- words ------------------------------------------------------------------------------------------
+
+
+def _spread_items(bundle: Bundle, theta: Array, sigma2: float) -> list[tuple[str, str]]:
+    gamma = bundle.covariance(theta, sigma2)
+    sd = np.sqrt(np.diag(gamma))
+    level = bundle.part.key
+    out = []
+    slopes = [name for name in bundle.names if name]
+    for name, value in zip(bundle.names, sd, strict=True):
+        what = f"slope of {name}" if name else "intercept" + (f" (at {listed(slopes)} = 0)" if slopes else "")
+        out.append((f"standard deviation of the {what} between {level}", f"{value:.6g}"))
+    for i in range(bundle.q):
+        for j in range(i):
+            if sd[i] * sd[j] > 0 and bundle.free[i, j]:
+                pair = f"{bundle.names[j] or 'intercept'} and {bundle.names[i]}"
+                rho = f"{gamma[i, j] / (sd[i] * sd[j]):.3f}".replace("-", MINUS)
+                out.append((f"correlation of {pair} between {level}", rho))
+    return out
+
+
+def _printed(design: Design, model: ErrorModel) -> float:
+    """The restricted log-likelihood as programs print it: with ln|X'V⁻¹X| in place of ln|Q'V⁻¹Q|."""
+    weights = 0.0 if design.root is None else float(np.log(design.root).sum())
+    return float(model.loglik[0]) - float(np.linalg.slogdet(design.basis.R)[1]) + weights
+
+
+def boundary_notes(algebra: Chosen, model: ErrorModel) -> tuple[str, ...]:
+    """A sentence per variance at zero and per correlation at its end, of the first column."""
+    out = []
+    for piece in algebra.pieces:
+        where = algebra.slices[piece.key]
+        own, bound = model.theta[where, 0], model.at_bound[where, 0]
+        slope = getattr(piece, "x", None)
+        level = piece.part.key if hasattr(piece, "part") else piece.key
+        what = f"slope of {slope}" if slope is not None else "intercept"
+        if float(piece.variance(own[:, None])[0]) <= 0:
+            out.append(
+                f"The variance of the {what} between {level} was estimated at zero, so the fit is the one "
+                "without it."
+            )
+        elif bool(bound[1:].any()):
+            out.append(
+                f"The {what} between {level} was estimated as exactly tied to the others (correlation ±1): "
+                "these data cannot tell its own variation from theirs."
+            )
+    return tuple(out)
