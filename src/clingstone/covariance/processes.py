@@ -14,7 +14,7 @@ import numpy as np
 
 from clingstone.covariance.algebras import Layered
 from clingstone.covariance.components import Parameter
-from clingstone.covariance.pieces import SerialPiece, ratio_of, ratio_parameter
+from clingstone.covariance.pieces import RHO_HIGH, SerialPiece, ratio_of, ratio_parameter
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
@@ -27,7 +27,6 @@ from clingstone.maths.search import Optimum, minimise
 from clingstone.needs import NotSupported, memory
 from clingstone.structure.serial import Series
 
-PARTIAL_HIGH = 3.8  # |atanh| of a partial correlation: 0.999
 MISSING = 600  # missing steps that an exact ARMA likelihood takes in
 
 
@@ -132,8 +131,8 @@ class Arma:
         for kind, name, count in ((0, "partial", self.p), (1, "moving", self.q)):
             for i in range(1, count + 1):
                 start = starts.get(i, ((0.0,), (0.0,)))[kind]
-                scan = tuple(np.linspace(-3.0, 3.4, 33))
-                out.append(Parameter(f"serial.{name}_{i}", -PARTIAL_HIGH, PARTIAL_HIGH, start, scan))
+                scan = tuple(np.linspace(-3.6, 5.2, 45))
+                out.append(Parameter(f"serial.{name}_{i}", -RHO_HIGH, RHO_HIGH, start, scan))
         return tuple(out)
 
     @property

@@ -56,7 +56,7 @@ class PanelHac:
 
     def prepare(self, design: Design, working: ErrorModel | None) -> KernelReady:
         positive_m(design)
-        part, grid = _periods(design.serial)
+        part, grid = shared(design.serial)
         names, W = reported(design)
         notes: tuple[str, ...] = (
             "What a series keeps throughout is not covered; give each series its own level, or use "
@@ -95,7 +95,7 @@ class PanelHac:
         )
 
 
-def _periods(serial: Series | None) -> tuple[Partition, Grid]:
+def shared(serial: Series | None, least: int = PERIODS) -> tuple[Partition, Grid]:
     """Rows by period, and the periods on the steps between the first and the last."""
     if serial is None:
         raise NotSupported("no serial structure was declared", "Name the time column with time=.")
@@ -105,9 +105,9 @@ def _periods(serial: Series | None) -> tuple[Partition, Grid]:
             "Use cluster-robust by series, or by a column of periods.",
         )
     ticks, codes = np.unique(serial.tick, return_inverse=True)
-    if len(ticks) < PERIODS:
+    if len(ticks) < least:
         raise NotSupported(
-            f"{len(ticks)} periods; a variance along time that all series share needs {PERIODS}",
+            f"{len(ticks)} periods; a variance along time that all series share needs {least}",
             "With few periods and many series use cluster-robust by series.",
         )
     if int(np.bincount(codes).max()) < 2:
