@@ -33,16 +33,20 @@ def levels_of(values: Array) -> Ints:
     return np.asarray(codes, dtype=np.int64).ravel()
 
 
-def count(codes: Ints, strata: Ints) -> int:
-    """Distinct ways to permute the values within strata."""
-    total = 1
+def count(codes: Ints, strata: Ints) -> float:
+    """Distinct ways to permute the values within strata: exact below 10¹⁵, ∞ where it has no number."""
+    log, exact = 0.0, 1
     for s in np.unique(strata):
         sizes = np.bincount(codes[strata == s])
-        left = int(sizes.sum())
-        for size in sizes:
-            total *= math.comb(left, int(size))
-            left -= int(size)
-    return total
+        log += math.lgamma(sizes.sum() + 1) - sum(math.lgamma(k + 1) for k in sizes)
+        if log < math.log(1e15):
+            left = int(sizes.sum())
+            for size in sizes:
+                exact *= math.comb(left, int(size))
+                left -= int(size)
+    if log < math.log(1e15):
+        return float(exact)
+    return math.exp(log) if log < 700 else math.inf
 
 
 def every(codes: Ints, strata: Ints) -> Ints:
@@ -94,33 +98,53 @@ class Units:
     M: Array
 
 
-def curves(
-    units: Units, w: Array, xi: Array, taken: Ints, e: Array, s: Array, exact: bool, studentised: bool
-) -> Curves:
+@dataclass(frozen=True, eq=False)
+class Rotated:
+    """Units seen from one contrast w (p,): what belongs to x alone, and what to the other columns.
+
+    N (p, p − 1) the other columns' directions, m (G, p − 1) and M (G, (p − 1)²) their unit sums and
+    squares; t (G,) and sigma (G, p − 1) the unit sums of M_Zx = Qw/w'w and its products with them.
+    """
+
+    w: Array
+    sizes: Array
+    N: Array
+    m: Array
+    M: Array
+    t: Array
+    sigma: Array
+
+    @classmethod
+    def of(cls, units: Units, w: Array) -> Rotated:
+        N, size = _complement(w), float(w @ w)
+        M = N.T @ units.M @ N
+        return cls(
+            w,
+            units.sizes,
+            N,
+            units.sums @ N,
+            M.reshape(len(M), -1),
+            units.sums @ w / size,
+            (units.M @ w) @ N / size,
+        )
+
+
+def curves(of: Rotated, xi: Array, taken: Ints, e: Array, s: Array, exact: bool, studentised: bool) -> Curves:
     """Permuted statistics of w'coef as functions of D = θ̂ − θ₀.
 
-    w (p,) the contrast of one column x in the basis, so that M_Zx = Qw/w'w. xi (G,) its values, taken
-    (P, G). e (G, C) and s (G, p, C) unit sums and scores of the residuals. With ``studentised`` false the
-    coefficients themselves are compared.
+    xi (G,) the values of the column, taken (P, G). e (G, C) and s (G, p, C) unit sums and scores of the
+    residuals. With ``studentised`` false the coefficients themselves are compared.
     """
-    size = float(w @ w)
-    N = _complement(w)
     X = xi[taken]
-    m, M = units.sums @ N, np.einsum("pi,gpq,qj->gij", N, units.M, N)
-    a = X @ m
-    d = X**2 @ units.sizes - np.sum(a**2, axis=1)
-    sound = d > 1e-10 * (X**2 @ units.sizes)
+    a = X @ of.m
+    d = X**2 @ of.sizes - np.sum(a**2, axis=1)
+    sound = d > 1e-10 * (X**2 @ of.sizes)
     d = np.where(sound, d, 1.0)
-    q = a.shape[1]
-    k = (
-        X**2 * units.sizes
-        - 2 * X * (a @ m.T)
-        + (a[:, :, None] * a[:, None, :]).reshape(-1, q * q) @ (M.reshape(-1, q * q).T)
-    )
-    t, sigma1 = units.sums @ w / size, np.einsum("pi,gpq,q->gi", N, units.M, w) / size
-    n1 = X @ t
-    u1 = X * t - a @ sigma1.T - (n1 / d)[:, None] * k
-    v = np.sum(np.einsum("gpc,p->gc", s, w) ** 2, axis=0)
+    k = X**2 * of.sizes - 2 * X * (a @ of.m.T)
+    k += (a[:, :, None] * a[:, None, :]).reshape(len(a), -1) @ of.M.T
+    n1 = X @ of.t
+    u1 = X * of.t - a @ of.sigma.T - (n1 / d)[:, None] * k
+    v = np.sum(np.einsum("gpc,p->gc", s, of.w) ** 2, axis=0)
     n0 = X @ e
     if not studentised:
         q0 = np.where(sound, d**2, 0.0)[:, None] * v
@@ -129,7 +153,7 @@ def curves(
     q0, q1, whole = np.empty_like(n0), np.empty_like(n0), np.empty_like(n0)
     for c in range(n0.shape[1]):
         own = X * e[:, c]
-        u0 = own - a @ (s[:, :, c] @ N).T - (n0[:, c] / d)[:, None] * k
+        u0 = own - a @ (s[:, :, c] @ of.N).T - (n0[:, c] / d)[:, None] * k
         q0[:, c], q1[:, c] = np.einsum("pg,pg->p", u0, u0), 2 * np.einsum("pg,pg->p", u0, u1)
         whole[:, c] = np.einsum("pg,pg->p", own, own)
     q2 = np.einsum("pg,pg->p", u1, u1)[:, None]

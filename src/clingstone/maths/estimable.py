@@ -42,13 +42,13 @@ def reduced(X: Array, length: Array, C: Array) -> Reduced:
     told = np.all(C[:, empty] == 0, axis=1)
     kept = live
     if len(live):
-        R = np.linalg.qr(Z, mode="r")
+        R = np.asarray(np.linalg.qr(Z, mode="r"))
         _, values, right = np.linalg.svd(R)
         rank = int(np.sum(values > RANK_TOLERANCE))
         scaled = C[:, live] / norm[live]
         outside = np.linalg.norm(scaled @ right[rank:].T, axis=1)
         told &= outside <= 1e-8 * np.maximum(np.linalg.norm(scaled, axis=1), 1e-300)
-        kept = np.delete(live, list(aliased(Z)))
+        kept = np.delete(live, list(aliased(R)))  # R carries the dependencies of Z
     told &= np.any(C[:, kept] != 0, axis=1)
     basis = Basis.of(X[:, kept]) if len(kept) else Basis(np.zeros((len(X), 0)), np.zeros((0, 0)))
     return Reduced(basis, kept, basis.contrast(C[:, kept]).reshape(len(kept), len(C)), told, empty)

@@ -14,6 +14,7 @@ G, resamples d, columns of y C.
 
 from __future__ import annotations
 
+from collections.abc import Iterable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -42,6 +43,21 @@ class Curves:
     size: Array
     v: Array
     exact: bool
+
+    @classmethod
+    def joined(cls, blocks: Sequence[Curves]) -> Curves:
+        """All resamples of several blocks."""
+        if len(blocks) == 1:
+            return blocks[0]
+        n0, n1, q0, q1, q2, size = (
+            np.concatenate([b._rows(name) for b in blocks]) for name in ("n0", "n1", "q0", "q1", "q2", "size")
+        )
+        return cls(n0, n1, q0, q1, q2, size, blocks[0].v, blocks[0].exact)
+
+    def _rows(self, name: str) -> Array:
+        """A part with one row per resample."""
+        values = getattr(self, name)
+        return np.broadcast_to(values, (len(self.n0), values.shape[1]))
 
     def p(self, D: Array) -> Array:
         """(C,) two-sided p of θ₀ = θ̂ − D: the part of resamples with t*² ≥ t². NaN where v is zero.
@@ -142,33 +158,38 @@ def wild_sums(V: Array, S: Array) -> Array:
     return (V @ S.reshape(G, p * C)).reshape(len(V), p, C)
 
 
-def wild_joint(V: Array, M: Array, s: Array, W: Array, theta: Array, exact: bool) -> tuple[float, float]:
+def wild_joint(
+    weights: Iterable[Array], M: Array, s: Array, W: Array, theta: Array, exact: bool
+) -> tuple[float, float]:
     """Wald statistic and wild bootstrap p of W'coef = 0 for one column of y, all q restrictions imposed.
 
-    s (G, p) unrestricted scores, W (p, q), theta (q,) the estimates. NaN where the covariance of the q
-    contrasts is not of full rank.
+    weights : blocks (d, G). s (G, p) unrestricted scores, W (p, q), theta (q,) the estimates. NaN where
+    the covariance of the q contrasts is not of full rank.
     """
-    moved = W @ np.linalg.solve(W.T @ W, theta)
-    restricted = s + M @ moved
+    restricted = s + M @ (W @ np.linalg.solve(W.T @ W, theta))
     H = M @ W  # (G, p, q)
-    Z = restricted @ W
-    A = V @ restricted
     q = W.shape[1]
-    squares = (V**2 @ (Z[:, :, None] * Z[:, None, :]).reshape(len(Z), q * q)).reshape(-1, q, q)
-    cross = np.empty_like(squares)
-    for i in range(q):
-        for j in range(q):
-            cross[:, i, j] = np.einsum("dp,dp->d", V @ (Z[:, i : i + 1] * H[:, :, j]), A)
-    inner = np.einsum("dp,ijpr,dr->dij", A, np.einsum("gpi,grj->ijpr", H, H), A)
-    spread = squares - cross - np.swapaxes(cross, 1, 2) + inner
+    K = np.einsum("gpi,grj->ijpr", H, H)
     observed = _wald(theta[None], ((s @ W).T @ (s @ W))[None])[0]
-    found = _wald(A @ W, spread)
+    found = np.concatenate([_wald(*_resampled(V, restricted, W, H, K, q)) for V in weights])
     kept = np.isfinite(found)
     if not np.isfinite(observed) or not kept.any():
         return float("nan"), float("nan")
     extra = 0 if exact else 1
     beyond = np.sum(found[kept] >= observed * (1 - TIE))
     return float(observed), float((beyond + extra) / (np.sum(kept) + extra))
+
+
+def _resampled(V: Array, s: Array, W: Array, H: Array, K: Array, q: int) -> tuple[Array, Array]:
+    """(d, q) coefficients and (d, q, q) covariances of resamples of the restricted scores s."""
+    Z, A = s @ W, V @ s
+    squares = (V**2 @ (Z[:, :, None] * Z[:, None, :]).reshape(len(Z), q * q)).reshape(-1, q, q)
+    cross = np.empty_like(squares)
+    for i in range(q):
+        for j in range(q):
+            cross[:, i, j] = np.einsum("dp,dp->d", V @ (Z[:, i : i + 1] * H[:, :, j]), A)
+    inner = np.einsum("dp,ijpr,dr->dij", A, K, A, optimize=True)
+    return A @ W, squares - cross - np.swapaxes(cross, 1, 2) + inner
 
 
 def _wald(theta: Array, V: Array) -> Array:

@@ -17,6 +17,7 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
 
 Power = Literal["CR0", "CR2", "CR3"]
 SINGULAR = 1e-10  # 1 − λ below this: a direction of the coefficients that one cluster alone decides
@@ -35,6 +36,19 @@ class Adjusted:
     b: Array
     lost: Array
     at: npt.NDArray[np.int64]
+
+    def some(self, rows: slice) -> Adjusted:
+        """Some of the contrasts."""
+        return Adjusted(self.a[rows], self.b[rows], self.lost[rows], self.at[rows])
+
+
+def grams(Q: Array, part: Partition) -> Array:
+    """(G, p, p) M_g = Q_g'Q_g, column by column: no array of n × p² products."""
+    p = Q.shape[1]
+    out = np.empty((part.count, p, p))
+    for j in range(p):
+        out[:, j, j:] = out[:, j:, j] = part.sums(Q[:, j : j + 1] * Q[:, j:])
+    return out
 
 
 def adjust(M: Array, W: Array, power: Power) -> Adjusted:

@@ -20,7 +20,7 @@ from clingstone.remedies.means import ordinary, varies
 from clingstone.remedies.remedy import Account, Estimand, Estimates
 from clingstone.remedies.sandwich import CR, ClusterReady
 from clingstone.remedies.split import Split
-from clingstone.remedies.within import GROUPED, WithinReady, inner_design, within_ready
+from clingstone.remedies.within import GROUPED, WithinReady, adjusted, inner_design, within_ready
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -170,15 +170,16 @@ class WithinBetween:
             if not told
         }
         stop_if_none_left(names, unusable)
-        base = within_ready(design, inner, part, names, found.W[:, :k], unusable, self.kind, None, None)
         pick = k + np.flatnonzero(found.told[k:])
-        wide = found.W[:, pick]
-        kind = self.kind if self.kind in ("CR2", "CR3") else "CR0"
+        both = adjusted(inner, part, found.W[:, [*range(k), *pick]], self.kind)
+        W = found.W[:, :k]
+        own = both.some(slice(k))
+        base = within_ready(design, inner, part, names, W, own, unusable, self.kind, None)
         inherited = {f: getattr(base, f) for f in WithinReady.__dataclass_fields__}
         return BetweenReady(
             **inherited,
-            differences=sandwich.adjust(inner.scores(part), wide, kind) if wide.shape[1] else None,
-            apart=wide,
+            differences=both.some(slice(k, None)) if len(pick) else None,
+            apart=found.W[:, pick],
             wholes=split.wholes(design, base.unusable),
             inverse=design.basis.contrast(old),
             coefficients=split.coefficients,

@@ -68,8 +68,8 @@ def arms(design: Design, part: Partition) -> dict[str, int]:
         near = 1e-9 * max(abs(low), abs(high))
         upper = X[:, j] >= high - near
         if high - low > near and np.all(upper | (X[:, j] <= low + near)):
-            held = (len(np.unique(part.codes[upper])), len(np.unique(part.codes[~upper])))
-            out[name] = min(held)
+            held = (np.bincount(part.codes[rows], minlength=part.count) for rows in (upper, ~upper))
+            out[name] = min(int(np.count_nonzero(each)) for each in held)
     return out
 
 

@@ -187,8 +187,10 @@ class GroupT:
         self, names: tuple[str, ...], used: npt.NDArray[np.bool_], unusable: Mapping[str, Refusal]
     ) -> tuple[str, ...]:
         left = {n: int(np.sum(~u)) for n, u in zip(names, used, strict=True) if n not in unusable}
-        some = [f"{count} groups that cannot tell {name}" for name, count in left.items() if count]
-        return (f"Left out: {', '.join(some)}.",) if some else ()
+        some = [f"{count:,} for {name}" for name, count in left.items() if count]
+        if not some:
+            return ()
+        return (f"Groups that cannot tell a row by themselves are left out of it: {', '.join(some)}.",)
 
     def conventions(self) -> tuple[tuple[str, GroupT], ...]:
         return (("sign changes of the group estimates in place of t", replace(self, signs=True)),)

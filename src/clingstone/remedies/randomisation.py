@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -9,9 +10,10 @@ import numpy as np
 
 from clingstone.design.design import Design, Term, rows_of
 from clingstone.maths import assignments
-from clingstone.maths.assignments import Ints, Units
+from clingstone.maths.assignments import Ints, Rotated, Units
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
+from clingstone.maths.resample import Curves
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import clusters, covered
 from clingstone.remedies.linear import Joint, positive_m, reported
@@ -23,7 +25,8 @@ if TYPE_CHECKING:
 
 MANY = 9999
 SIMULATED = 399  # permutations for each of many columns of y
-CELLS = 1e7  # permutations × units at the most
+CELLS = 1e7  # permutations × units, beyond which fewer are drawn, but never fewer than 399
+BLOCK = 1_000_000  # permutations × units at once
 
 
 @dataclass(frozen=True, eq=False)
@@ -34,14 +37,17 @@ class Lot:
     column: int
     xi: Array
     strata: Ints
-    ways: int
+    ways: float
     every: bool
 
-    def taken(self, rng: np.random.Generator, P: int) -> Ints:
-        """(P, G) the unit whose value each unit takes."""
+    def taken(self, rng: np.random.Generator, P: int) -> Iterator[Ints]:
+        """Blocks of (P, G): the unit whose value each unit takes."""
         if self.every:
-            return assignments.every(assignments.levels_of(self.xi), self.strata)
-        return assignments.drawn(rng, self.strata, P)
+            yield assignments.every(assignments.levels_of(self.xi), self.strata)
+            return
+        step = max(1, BLOCK // len(self.xi))
+        for start in range(0, P, step):
+            yield assignments.drawn(rng, self.strata, min(step, P - start))
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -49,7 +55,7 @@ class RandomisationReady(ResampledReady):
     """lots : per assigned column. wholes : per assigned term of several columns, its strata and ways."""
 
     lots: tuple[Lot, ...]
-    terms: tuple[tuple[Term, Ints, int], ...]
+    terms: tuple[tuple[Term, Ints, float], ...]
     draws: int
     studentised: bool
 
@@ -64,10 +70,12 @@ class RandomisationReady(ResampledReady):
         for lot in self.lots:
             j = lot.column
             rng = fits.run.child(f"randomisation:{self.at}:{self.names[j]}")
-            taken = lot.taken(rng, self._draws(fits))
-            found = assignments.curves(
-                self._units, self.W[:, j], lot.xi, taken, e, s, lot.every, self.studentised
-            )
+            seen = Rotated.of(self._units, self.W[:, j])
+            blocks = [
+                assignments.curves(seen, lot.xi, taken, e, s, lot.every, self.studentised)
+                for taken in lot.taken(rng, self._draws(fits))
+            ]
+            found = Curves.joined(blocks)
             below, above = found.ends(alpha)
             theta = plain.estimate[j]
             low[j], high[j], p[j] = theta - below, theta + above, found.p(theta)
@@ -79,7 +87,7 @@ class RandomisationReady(ResampledReady):
         design, part = self.design, self.part
         return Units(design.sizes(part), design.sums(part), design.scores(part))
 
-    def _joint(self, fits: Fits, term: Term, strata: Ints, ways: int) -> Joint:
+    def _joint(self, fits: Fits, term: Term, strata: Ints, ways: float) -> Joint:
         """All columns of a term permuted together: F of the part they explain, p by permutation."""
         response, pick = fits.response, list(term.columns)
         xi = _values(self.design, self.part)[:, pick]
@@ -104,7 +112,7 @@ class RandomisationReady(ResampledReady):
         for lot in self.lots:
             name = self.names[lot.column]
             how = "all of them" if lot.every else f"{self.draws:,} drawn at random"
-            ways = f"{lot.ways:,}" if lot.ways < 1e12 else f"about 10^{len(str(lot.ways)) - 1}"
+            ways = f"{lot.ways:,.0f}" if lot.ways < 1e12 else "more than 10¹²"
             items.append((f"possible assignments of {name}", f"{ways}; used: {how}"))
             strata = len(np.unique(lot.strata))
             if strata > 1:
@@ -166,7 +174,7 @@ class Randomisation:
             )
         part = clusters(design, self.at)
         names, W = reported(design)
-        draws = int(min(self.draws, max(999, CELLS // part.count)))
+        draws = int(min(self.draws, max(SIMULATED, CELLS // part.count)))
         unusable = {
             name: Refusal(
                 "it was not assigned, so there is nothing to permute",
@@ -175,7 +183,7 @@ class Randomisation:
             for name in names
         }
         lots: list[Lot] = []
-        wholes: list[tuple[Term, Ints, int]] = []
+        wholes: list[tuple[Term, Ints, float]] = []
         X = _values(design, part)
         for term in mine:
             refusal = _entangled(design, term)
@@ -243,7 +251,7 @@ def _too_few(lot: Lot, at: str) -> Refusal | None:
     if lot.ways > 20:  # below, not one in twenty assignments is as extreme
         return None
     return Refusal(
-        f"it could have been assigned to the units of {at} in {lot.ways} ways only, too few to tell one "
+        f"it could have been assigned to the units of {at} in {lot.ways:.0f} ways only, too few to tell one "
         "from chance",
         "More units in each arm, or wider strata, would be needed.",
     )

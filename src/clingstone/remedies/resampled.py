@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
+from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -28,7 +28,8 @@ FEW_SIGNS = 8  # clusters below which there are too few patterns for p, and six-
 LEAST = 5  # clusters: with four, even six-point weights say next to nothing
 MANY = 9999
 SIMULATED = 399  # resamples for each of many columns of y
-WORK = 6e9  # multiplications that one column of y may cost, before draws are cut
+WORK = 1e9  # multiplications that one column of y may cost, before draws are cut
+BLOCK = 6_000_000  # weights held at once
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
@@ -73,41 +74,50 @@ class WildReady(ResampledReady):
     every: bool
     draws: int
 
-    def weights(self, fits: Fits) -> tuple[Array, Array | None]:
-        """(d, G) weights, the same for every row and column of y, and their squares if not all one."""
+    def weights(self, fits: Fits) -> Iterator[tuple[Array, Array | None]]:
+        """Blocks of (d, G) weights, and their squares if not all one; the same for every row and column."""
         G = self.part.count
         if self.every:
-            return resample.every_sign(G), None
+            yield resample.every_sign(G), None
+            return
         rng = fits.run.child(f"wild cluster bootstrap:{self.at}")
-        d = self.draws if fits.response.B == 1 else min(self.draws, SIMULATED)
-        if self.kind == "signs":
-            return resample.random_signs(rng, d, G), None
-        V = resample.random_webb(rng, d, G)
-        return V, V**2
+        left = self.draws if fits.response.B == 1 else min(self.draws, SIMULATED)
+        while left > 0:
+            d = min(left, max(1, BLOCK // G))
+            left -= d
+            V = resample.random_signs(rng, d, G) if self.kind == "signs" else resample.random_webb(rng, d, G)
+            yield V, None if self.kind == "signs" else V**2
 
     def fit(self, fits: Fits) -> Estimates:
         plain = super().fit(fits)
         response, alpha = fits.response, 1 - fits.run.settings.confidence
         M, S = self.design.scores(self.part), response.scores(self.part)
-        V, V2 = self.weights(fits)
         low, high, p = (np.full(plain.se.shape, np.nan) for _ in range(3))
         left_out = 0
-        step = max(1, int(2e6 / (len(V) * self.design.p)))  # columns of y at once, to bound the memory
+        d = 2 ** (self.part.count - 1) if self.every else self.draws
+        step = max(1, int(2e6 / (d * self.design.p)))  # columns of y at once, to bound the memory
         for start in range(0, response.B, step):
             some = slice(start, start + step)
-            A0 = resample.wild_sums(V, S[:, :, some])
-            for j, name in enumerate(self.names):
-                if name in self.unusable:
-                    continue
-                w, theta = self.W[:, j], plain.estimate[j, some]
-                curves = resample.wild(V, V2, M, S[:, :, some], w, A0, self.every)
+            for j, curves in self._curves(fits, M, S[:, :, some]).items():
+                theta = plain.estimate[j, some]
                 below, above = curves.ends(alpha)
                 low[j, some], high[j, some], p[j, some] = theta - below, theta + above, curves.p(theta)
                 left_out = max(left_out, curves.left_out)
-        joint = self._joints(fits, V, M, S, plain.estimate) if multi(self.design) else {}
+        joint = self._joints(fits, M, S, plain.estimate) if multi(self.design) else {}
         return replace(plain, low=low, high=high, p=p, joint=joint, notes=self._found(low, high, left_out))
 
-    def _joints(self, fits: Fits, V: Array, M: Array, S: Array, estimate: Array) -> dict[str, Joint]:
+    def _curves(self, fits: Fits, M: Array, S: Array) -> dict[int, resample.Curves]:
+        """Curves of every usable row, all its resamples together."""
+        found: dict[int, list[resample.Curves]] = {
+            j: [] for j, name in enumerate(self.names) if name not in self.unusable
+        }
+        for V, V2 in self.weights(fits):
+            A0 = resample.wild_sums(V, S)
+            for j, blocks in found.items():
+                blocks.append(resample.wild(V, V2, M, S, self.W[:, j], A0, self.every))
+        return {j: resample.Curves.joined(blocks) for j, blocks in found.items()}
+
+    def _joints(self, fits: Fits, M: Array, S: Array, estimate: Array) -> dict[str, Joint]:
         out: dict[str, Joint] = {}
         for term in multi(self.design):
             pick = list(term.columns)
@@ -115,7 +125,14 @@ class WildReady(ResampledReady):
             if unfit or len(pick) >= self.part.count:
                 continue
             found = [
-                resample.wild_joint(V, M, S[:, :, b], self.W[:, pick], estimate[pick, b], self.every)
+                resample.wild_joint(
+                    (V for V, _ in self.weights(fits)),
+                    M,
+                    S[:, :, b],
+                    self.W[:, pick],
+                    estimate[pick, b],
+                    self.every,
+                )
                 for b in range(fits.response.B)
             ]
             wald, p = np.array(found).T
@@ -154,7 +171,8 @@ class WildReady(ResampledReady):
     @property
     def least(self) -> float:
         """The smallest p that these resamples can give."""
-        patterns = 2.0 ** (self.part.count - 1) if self.kind == "signs" else 6.0**self.part.count / 2
+        G = min(self.part.count, 60)  # more than any number of draws
+        patterns = 2.0 ** (G - 1) if self.kind == "signs" else 6.0**G / 2
         return 1 / patterns if self.every else max(1 / (self.draws + 1), 1 / patterns)
 
 
@@ -231,6 +249,6 @@ class WildClusterBootstrap:
 
 
 def _affordable(draws: int, G: int, p: int, k: int) -> int:
-    """Draws that the work allows: never fewer than 999, and (draws + 1)·5 % a whole number."""
+    """Draws that the work allows: never fewer than 399, and (draws + 1)·5 % a whole number."""
     most = WORK / (4.0 * G * p * k)
-    return next((d for d in (9999, 4999, 1999) if d <= draws and d <= most), min(draws, 999))
+    return next((d for d in (draws, 9999, 4999, 1999, 999) if d <= draws and d <= most), min(draws, 399))

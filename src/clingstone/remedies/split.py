@@ -42,7 +42,8 @@ class Split:
         apart = X[:, inside] - held
         held = np.where(np.linalg.norm(held, axis=0) > 1e-9 * length[inside], held, 0.0)
         level, varied = np.flatnonzero(~inside), np.flatnonzero(inside)
-        spanned = aliased(np.hstack([X[:, level], held]))
+        # Both are constant within groups, so one row for each group tells what spans what.
+        spanned = aliased(np.hstack([X[part.first][:, level], held[part.first]]))
         kept = [i for i in range(len(varied)) if len(level) + i not in spanned]
         place = {(int(j), ""): i for i, j in enumerate(level)}
         place |= {(int(j), WITHIN): len(level) + i for i, j in enumerate(varied)}
