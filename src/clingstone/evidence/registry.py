@@ -3,7 +3,10 @@
 from __future__ import annotations
 
 from clingstone.evidence.breaks import Break
+from clingstone.evidence.direction import Correlogram, Direction
 from clingstone.evidence.finding import Test
+from clingstone.evidence.lagrange import Lagrange
+from clingstone.evidence.local import Local
 from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
 from clingstone.evidence.mean import FunctionalForm, Trend, TrendSurface
 from clingstone.evidence.nested import GroupF, IntraclassCorrelation
@@ -28,6 +31,13 @@ TESTS: tuple[Test, ...] = (
     Moran(),
     Geary(),
     Variogram(),
+    Correlogram(),
+    Direction(),
+    Local(),
+    Lagrange("lm-error"),
+    Lagrange("lm-lag"),
+    Lagrange("robust-lm-error"),
+    Lagrange("robust-lm-lag"),
     FunctionalForm(),
     Trend(),
     Season(),

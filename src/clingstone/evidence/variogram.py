@@ -26,6 +26,7 @@ ALL_PAIRS = 3000  # sites up to which every pair is used
 NEAR, RANDOM_PAIRS = 30, 200_000
 BINS, FEWEST_PAIRS = 12, 30
 DRAWS = 199
+Line = tuple[tuple[float, ...], tuple[float, ...]]
 
 
 @dataclass(frozen=True, eq=False)
@@ -34,12 +35,26 @@ class Bins:
 
     distance (K,) mean distance, along the great circle for longitude and latitude. pairs (K,).
     forms : K sparse (S, S) matrices G with e'Ge = mean over the pairs of a bin of
-    (e_i − e_j)²/(2 − h_ii − h_jj + 2h_ij): 1·σ² in every bin without dependence.
+    (e_i − e_j)²/(2 − h_ii − h_jj + 2h_ij): 1·σ² in every bin without dependence. ends : per bin the two
+    sites of each pair and that expectation.
     """
 
     distance: Array
     pairs: npt.NDArray[np.int64]
     forms: tuple[sparse.csr_array, ...]
+    ends: tuple[tuple[npt.NDArray[np.int64], npt.NDArray[np.int64], Array], ...] = ()
+
+    def robust(self, response: Response) -> Array:
+        """(K,) the same from fourth roots (Cressie & Hawkins 1980), for the first column of y.
+
+        ½[mean |d|^½]⁴/(0.457 + 0.494/N), d the difference over the root of half its expectation.
+        """
+        e, s2 = response.residual[:, 0], float(response.s2[0])
+        out = []
+        for i, j, expected in self.ends:
+            root = np.mean(np.sqrt(np.abs(e[i] - e[j]) * np.sqrt(2 / expected)))
+            out.append(0.5 * root**4 / (0.457 + 0.494 / len(i)) / s2)
+        return np.array(out)
 
     def read(self, response: Response) -> Array:
         """(K, B) semivariance over s²."""
@@ -53,32 +68,33 @@ def pairs_of(design: Design, rng: np.random.Generator) -> Bins:
     """Bins of about equal numbers of pairs, up to half the largest distance between sites."""
     small = site_design(design)
     sites = sites_of(small)
-    i, j, apart = _pairs(small, rng)
+    i, j, apart = pairs_between(small, rng)
     keep = (apart <= sites.extent / 2) & (apart > 0)
     i, j, apart = i[keep], j[keep], apart[keep]
     order = np.argsort(apart, kind="stable")
     count = max(1, min(BINS, len(order) // FEWEST_PAIRS))
     h, Q, n = small.basis.leverage, small.Q, small.n
     expected = 2 - h[i] - h[j] + 2 * np.einsum("ij,ij->i", Q[i], Q[j])
-    forms = []
+    forms, used = [], []
     bins = np.array_split(order, count)
     for b in bins:
         usable = b[expected[b] > 1e-8]
+        used.append((i[usable], j[usable], expected[usable]))
         w = 1.0 / (expected[usable] * len(usable))
         half = sparse.coo_array((w, (i[usable], j[usable])), shape=(n, n))
         ends = np.bincount(i[usable], w, n) + np.bincount(j[usable], w, n)
         forms.append(sparse.csr_array(sparse.diags_array(ends) - half - half.T))
     distance = sites.along(np.array([apart[b].mean() for b in bins]))
-    return Bins(distance, np.array([len(b) for b in bins], dtype=np.int64), tuple(forms))
+    return Bins(distance, np.array([len(b) for b in bins], dtype=np.int64), tuple(forms), tuple(used))
 
 
-def _pairs(
-    small: Design, rng: np.random.Generator
+def pairs_between(
+    small: Design, rng: np.random.Generator, most: int = ALL_PAIRS
 ) -> tuple[npt.NDArray[np.int64], npt.NDArray[np.int64], Array]:
-    """Every pair of sites, or near pairs and random ones when there are many sites."""
+    """Every pair of sites, or near pairs and random ones when there are more sites than ``most``."""
     sites = sites_of(small)
     S, points = sites.count, sites.points
-    if S <= ALL_PAIRS:
+    if most >= S:
         i, j = np.triu_indices(S, 1)
         return i.astype(np.int64), j.astype(np.int64), np.asarray(pdist(points))
     _, near = sites.tree.query(points, k=min(NEAR, S - 1) + 1)
@@ -147,6 +163,7 @@ class Variogram(Plain):
             y_name="semivariance (1 without dependence)",
             unit=sites_of(fits.design).unit,
             note=f"envelope: all points at once in {DRAWS} draws of independent residuals",
+            lines=_lines(fits, bins, response),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
@@ -170,6 +187,25 @@ def _prepared(fits: Fits) -> tuple[Bins, Response, Array, Array, Array]:
     null = bins.read(simulated(response, fits, "variogram", DRAWS))
     centre, spread = null.mean(axis=1), null.std(axis=1, ddof=1)
     return bins, response, centre, spread, _departure(null, centre, spread)
+
+
+def _lines(fits: Fits, bins: Bins, response: Response) -> dict[str, Line]:
+    """The robust variogram, and what residuals of the fitted dependence look like on these very pairs.
+
+    Residuals fall short of the errors, so the fitted line is the mean of residual variograms of draws, never
+    the covariance itself, from which the sill would be read too low.
+    """
+    x = floats(bins.distance)
+    lines = {"robust": (x, floats(bins.robust(response)))}
+    node = frozenset({"spatial"})
+    if "spatial" not in fits.components:
+        return lines
+    model, algebra, design = fits[node], fits.algebra(node), fits.design
+    rng = fits.run.child("variogram of the fitted dependence")
+    errors = algebra.draw(model.theta[:, 0], float(model.sigma2[0]), rng, DRAWS)
+    e = design.basis.project(errors)
+    drawn = Response(design, np.zeros((design.p, DRAWS)), e, np.einsum("ij,ij->j", e, e))
+    return lines | {"fitted": (x, floats(bins.read(at_sites(drawn)).mean(axis=1)))}
 
 
 def _departure(values: Array, centre: Array, spread: Array) -> Array:
