@@ -20,7 +20,7 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.maths.once import Array
-from clingstone.maths.resample import TIE, Curves
+from clingstone.maths.resample import TIE, Curves, settled
 
 Ints = npt.NDArray[np.int64]
 
@@ -157,6 +157,7 @@ def curves(of: Rotated, xi: Array, taken: Ints, e: Array, s: Array, exact: bool,
         q0[:, c], q1[:, c] = np.einsum("pg,pg->p", u0, u0), 2 * np.einsum("pg,pg->p", u0, u1)
         whole[:, c] = np.einsum("pg,pg->p", own, own)
     q2 = np.einsum("pg,pg->p", u1, u1)[:, None]
+    q1, q2 = settled(q1, q2, whole, ((X * of.t) ** 2).sum(axis=1)[:, None])
     q0, q1, q2 = (np.where(sound[:, None], x, 0.0) for x in (q0, q1, q2))
     return Curves(n0, n1[:, None], q0, q1, q2, whole, v, exact)
 

@@ -24,6 +24,7 @@ from clingstone.maths.once import Array
 WEBB = np.array([-np.sqrt(1.5), -1.0, -np.sqrt(0.5), np.sqrt(0.5), 1.0, np.sqrt(1.5)])
 TIE = 1e-9  # a resample this near to the observed statistic counts as equal to it
 GONE = 1e-11  # a variance below this part of its terms is no variance
+ROUNDING = 1e-12
 FAR = 1e8  # standard errors beyond which an interval has no end
 
 
@@ -67,10 +68,8 @@ class Curves:
         """
         D = np.asarray(D, dtype=float)
         below = self.q0 + D * (self.q1 + D * self.q2)
-        # Cleared of their common power of D both sides stay finite however far D is.
-        scale = 1 + np.abs(D) / np.sqrt(np.where(self.v > 0, self.v, 1.0))
-        kept = below > GONE * self.size * scale**2
-        above = ((self.n0 + self.n1 * D) / scale) ** 2 * self.v >= (D / scale) ** 2 * below * (1 - TIE)
+        kept = below > GONE * (self.size + np.abs(D * self.q1) + D**2 * np.abs(self.q2))
+        above = (self.n0 + self.n1 * D) ** 2 * self.v >= D**2 * below * (1 - TIE)
         extra = 0 if self.exact else 1
         p = (np.sum(above & kept, axis=0) + extra) / np.maximum(np.sum(kept, axis=0) + extra, 1)
         return np.where((self.v > 0) & kept.any(axis=0), p, np.nan)
@@ -100,6 +99,15 @@ class Curves:
             inside, outside = np.where(stays, middle, inside), np.where(stays, outside, middle)
         end = np.where(outside >= FAR * se, np.inf, (inside + outside) / 2)
         return np.where(np.isfinite(self.p(0 * se)), end, np.nan)
+
+
+def settled(q1: Array, q2: Array, s0: Array, s2: Array) -> tuple[Array, Array]:
+    """q₁ and q₂ without what is left of them by rounding, which D² would blow up.
+
+    s0, s2 : the sums that q₀ and q₂ are differences from; q₁ is one from 2√(s₀s₂) at most.
+    """
+    q1 = np.where(np.abs(q1) <= ROUNDING * np.sqrt(s0 * s2), 0.0, q1)
+    return q1, np.where(np.abs(q2) <= ROUNDING * s2, 0.0, q2)
 
 
 # ---- weights --------------------------------------------------------------------------
@@ -149,6 +157,7 @@ def wild(V: Array, V2: Array | None, M: Array, S: Array, w: Array, A0: Array, ex
     q1 = 2 * s1 + 2 * np.einsum("dpc,dp->dc", KA0 - C0, A1) - 2 * np.einsum("dp,dpc->dc", C1, A0)
     q2 = s2 + np.sum((KA1 - 2 * C1) * A1, axis=1)[:, None]
     n0, n1 = np.einsum("dpc,p->dc", A0, w), (A1 @ w)[:, None]
+    q1, q2 = settled(q1, q2, s0, s2)
     return Curves(n0, n1, q0, q1, q2, np.broadcast_to(s0, q0.shape), np.sum(z0**2, axis=0), exact)
 
 
