@@ -2,12 +2,14 @@
 
 from __future__ import annotations
 
+import copyreg
 import os
 from collections.abc import Iterator, Sequence
 from concurrent.futures import ProcessPoolExecutor
 from concurrent.futures.process import BrokenProcessPool
 from contextlib import contextmanager
 from dataclasses import dataclass
+from types import MappingProxyType
 from typing import Any, Literal, Protocol, get_args
 
 from clingstone.needs import InputError, NotSupported
@@ -16,6 +18,14 @@ from clingstone.run import one_thread
 Name = Literal["here", "cores", "dask"]
 PATIENCE = 10  # seconds in which a Dask scheduler has to answer
 RETRIES = 5  # times that a chunk is given out again when its worker dies
+
+
+def _read_only(held: dict[Any, Any]) -> MappingProxyType[Any, Any]:
+    return MappingProxyType(held)
+
+
+# Designs hold read-only mappings, which the pickle of the standard library does not know.
+copyreg.pickle(MappingProxyType, lambda held: (_read_only, (dict(held),)))
 
 
 class Work(Protocol):

@@ -169,7 +169,7 @@ def _tally(study: Study, c: int, k: int, t: int, found: Counts, ordinary: float)
         coverage_mcse=binomial(coverage, found.size),
         width=float("nan") if none else width,
         width_mcse=float(width_sd / np.sqrt(n)),
-        relative=float("nan") if none else width / ordinary,
+        relative=width / ordinary if not none and ordinary > 0 else float("nan"),
         bias=float(mean / spread) if spread > 0 else 0.0,
         bias_mcse=float(1 / np.sqrt(n)),
         rejection=rejection,
