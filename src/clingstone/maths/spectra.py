@@ -132,7 +132,10 @@ class Modes:
         p = self.rows.shape[1]
         if p == 0:
             return round(inside)
-        S = self.rows.T @ (self.rows / (self.row_values - t)[:, None])
+        gap = self.row_values - t
+        # At an eigenvalue of S itself the count is taken just above it.
+        gap = np.where(gap == 0.0, -1e-12 * max(abs(self.low), abs(self.high)), gap)
+        S = self.rows.T @ (self.rows / gap[:, None])
         return round(inside - int(np.sum(np.linalg.eigvalsh(S) < 0)))
 
 
