@@ -83,7 +83,7 @@ def main() -> None:
             ("naive + CR2 + random intercept together", rate(world(False, GROUPED)), None),
             (
                 "… and HC2, so rows are drawn",
-                rate(world(False, (*GROUPED, ("heteroscedasticity-robust", "")))),
+                rate(rows),
                 None,
             ),
             ("AR(1) REML with Satterthwaite df", rate(world(True, (("ar1", ""),))), 2_000),
