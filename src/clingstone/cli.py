@@ -16,6 +16,7 @@ from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 
+from clingstone import cli_rehearse
 from clingstone.demo import DEMOS, data_folder, find
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import Option, settings_options
@@ -190,6 +191,8 @@ def _printed(examination: Examination, folder: Path | None) -> str:
     text = str(examination).rstrip("\n") + "\n"
     return text if folder is None else f"{text}\nreport.html · methods.md · results.json   in  {folder}/\n"
 
+
+cli_rehearse.register(app)
 
 # ---- what a person sees meanwhile ------------------------------------------------------------
 

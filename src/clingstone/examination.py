@@ -9,8 +9,6 @@ from dataclasses import asdict, dataclass, replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
-import numpy as np
-
 from clingstone.advice.choose import REPAIRED, Advice, settle, shortlist_for
 from clingstone.advice.facts import facts as gather_facts
 from clingstone.case import Case
@@ -28,7 +26,8 @@ from clingstone.remedies import explain as explain_at
 from clingstone.remedies import refit as refit_at
 from clingstone.remedies import remedy as remedy_of
 from clingstone.remedies.remedy import Convention, Interval, Refit
-from clingstone.results import SCHEMA, Reference, Results, compare, from_json
+from clingstone.reopened import reopened, saved
+from clingstone.results import SCHEMA, Reference, Results, compare
 from clingstone.run import Alternative, Missing, Progress, Run, Settings, Ties, Weights, one_thread
 
 if TYPE_CHECKING:
@@ -404,45 +403,18 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
     ------
     InputError : the folder holds no results.json, or the data are not found or have changed.
     """
-    path = Path(folder) / "results.json"
-    if not path.is_file():
-        raise InputError(f"{path} is not there", "Give a folder that clingstone saved.")
-    saved = from_json(path.read_text(encoding="utf-8"))
-    origin = saved.case.origin
-    source = data if data is not None else _where(origin)
-    if source is None:
-        raise InputError(
-            "this examination was made from a table in memory, so there is no file to read again",
-            "Call clingstone.replay(folder, data=table).",
-        )
-    arguments = {k: _tuples(v) for k, v in saved.settings.items()}
-    settings = Settings(**arguments)
+    held = saved(folder)
+    case = reopened(held, data)
     with one_thread():
-        case = Case.of(source, settings)
-        if case.origin.get("fingerprint") != origin.get("fingerprint"):
-            raise InputError(
-                f"the data have changed since {path} was written: their fingerprints differ",
-                "Give the data as they were, with data=, or examine the new data.",
-            )
-        again = examined(case, Run(settings)).results
-    lines = compare(saved, again)
-    words = [f"{len(saved.evidence)} findings and {len(saved.intervals)} intervals compared to 1e-8"]
+        again = examined(case, Run(case.settings)).results
+    lines = compare(held, again)
+    words = [f"{len(held.evidence)} findings and {len(held.intervals)} intervals compared to 1e-8"]
     moved = [
         f"{k}: {v} then, {again.versions.get(k)} now"
-        for k, v in saved.versions.items()
+        for k, v in held.versions.items()
         if again.versions.get(k) != v
     ]
     if moved:
         words.append("versions differ: " + "; ".join(moved))
     words.append("every number agrees" if not lines else f"{len(lines)} differ:")
     return not lines, (*words, *lines)
-
-
-def _where(origin: Mapping[str, str]) -> str | None:
-    """The path as given, else the name alone, whichever leads to a file; None for a table in memory."""
-    known = [origin[key] for key in ("path", "file") if origin.get(key)]
-    return next((p for p in known if Path(p).expanduser().is_file()), known[0] if known else None)
-
-
-def _tuples(value: Any) -> Any:
-    return tuple(_tuples(v) for v in value) if isinstance(value, list | np.ndarray) else value

@@ -33,6 +33,7 @@ def rehearse(
     scheduler: str | None = None,
     folder: str | Path | None = None,
     stop_early: bool = True,
+    whole_path: int = 0,
     progress: Progress | None = None,
 ) -> Rehearsal:
     """Simulate y on a design many times and read every remedy on the same replicates.
@@ -48,6 +49,8 @@ def rehearse(
     folder : where finished chunks are kept; the same call goes on from there after a stop.
     stop_early : look at 1,000, 2,000, 4,000 … replicates and stop once every remedy is clearly adequate or
         clearly not.
+    whole_path : replicates per error model in which the whole examination is repeated (detect, advise,
+        refit): what choosing by test costs. Each takes as long as an examination.
     progress : called with (label, done, total).
 
     Returns
@@ -76,7 +79,13 @@ def rehearse(
         made = planned(fits, examination.ledger, tuple(dict.fromkeys(choices)), checked(replicates))
         made = replace(made, study=replace(made.study, report=run.report))
         where = Path(folder) if folder is not None else None
-        return run_plan(made, engine=Engine(engine, workers, scheduler), folder=where, stop_early=stop_early)
+        return run_plan(
+            made,
+            engine=Engine(engine, workers, scheduler),
+            folder=where,
+            stop_early=stop_early,
+            whole_path=whole_path,
+        )
 
 
 def _examined(subject: Case | Examination, progress: Progress | None) -> Examination:

@@ -262,17 +262,24 @@ def test_only_an_advice_that_was_rehearsed_can_be_given_up():
     assert {r.remedy for r in table.rows} == {"ordinary", "cluster-robust", "mixed-intercept"}
 
 
-def test_words_say_what_was_simulated_and_what_came_of_it():
+def test_the_reason_says_how_well_it_held_and_only_when_it_did():
     found = rehearse(plan(400))
-    table = Scores(
-        (Score("ordinary", "", 0.7, 0.02, 1.0), Score("cluster-robust", "clinic", 0.948, 0.011, 1.6))
+    rows = (
+        Score("ordinary", "", 0.7, 0.02, 1.0),
+        Score("cluster-robust", "clinic", 0.948, 0.011, 1.6),
     )
-    found = replace(found, scores=table)
-    text = room.sentence(found, "cluster-robust", "clinic", "cluster-robust, by clinic")
-    assert "simulated 400 times under each of 2 error models" in text
-    assert "94.8 % of replicates or more (Monte-Carlo error 1.1 points)" in text
-    assert "ordinary intervals did so in 70.0 % or more" in text
-    assert "was not part of it" in room.sentence(found, "joint", "", "joint")
+    found = replace(found, scores=Scores(rows))
+
+    class Advised:
+        remedy, at = "cluster-robust", "clinic"
+
+    why = room.reason(found, Advised(), "cluster-robust, by clinic")
+    assert "at least 94.8 % of replicates under each of 2 error models" in why.sentence
+    assert "Monte-Carlo error 1.1 points" in why.sentence
+    Advised.remedy, Advised.at = "ordinary", ""
+    assert room.reason(found, Advised(), "ordinary") is None  # it did not hold what it promises
+    Advised.remedy = "joint"
+    assert room.reason(found, Advised(), "joint") is None  # it was not rehearsed
 
 
 def test_scores_of_a_table_are_read_by_the_rule():

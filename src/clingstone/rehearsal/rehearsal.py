@@ -8,14 +8,15 @@ from pathlib import Path
 
 from clingstone.advice.entries import Advice, Reason, Scores
 from clingstone.covariance.fits import Fits
-from clingstone.display import listed, number
+from clingstone.display import number
 from clingstone.ledger.ledger import Ledger
 from clingstone.needs import InputError, NotSupported
 from clingstone.rehearsal import cost
 from clingstone.rehearsal.engine import Engine
+from clingstone.rehearsal.path import paths, walks
 from clingstone.rehearsal.shelf import Shelf
 from clingstone.rehearsal.study import Counts, Job, Study, study, without
-from clingstone.rehearsal.tallies import Left, Rehearsal, pairs, scores, tallies
+from clingstone.rehearsal.tallies import Left, Rehearsal, Walk, pairs, scores, tallies
 from clingstone.rehearsal.truths import truths
 from clingstone.remedies import remedy as remedy_of
 from clingstone.run import Run
@@ -68,10 +69,17 @@ def planned(fits: Fits, ledger: Ledger, choices: Choices, replicates: str | int 
 
 
 def rehearse(
-    plan: Plan, *, engine: Engine | None = None, folder: Path | None = None, stop_early: bool = False
+    plan: Plan,
+    *,
+    engine: Engine | None = None,
+    folder: Path | None = None,
+    stop_early: bool = False,
+    whole_path: int = 0,
 ) -> Rehearsal:
     """Run a plan.
 
+    whole_path : replicates per truth in which the user's whole examination is repeated; their chunks are
+        not kept in the folder.
     folder : where finished chunks are put, and found again by a later run of the same plan.
     stop_early : look at the ranking at fixed numbers of replicates and stop once it is settled.
 
@@ -100,7 +108,20 @@ def rehearse(
             if stop_early and stage[-1] != jobs[-1] and settled(found, counts):
                 stopped = f"after {counts[0].size:,} replicates per truth, when the ranking was settled"
                 break
-    return told(plan, counts, stopped)
+    result = told(plan, counts, stopped)
+    return replace(result, walks=walked(plan, engine or Engine(), whole_path)) if whole_path else result
+
+
+def walked(plan: Plan, engine: Engine, replicates: int) -> tuple[Walk, ...]:
+    """The whole path in so many replicates per truth."""
+    work = paths(plan.study)
+    run = Run(work.fits.run.settings, work.fits.run.limits, plan.study.report)
+    jobs, steps = work.jobs(replicates), []
+    with engine.open(work) as pool, run.progress("whole paths", len(jobs)) as advance:
+        for some in pool.map(jobs):
+            steps += some
+            advance(1)
+    return walks(work.terms, steps)
 
 
 def told(plan: Plan, counts: Mapping[int, Counts], stopped: str) -> Rehearsal:
@@ -181,26 +202,6 @@ def reason(found: Rehearsal, advice: Advice, named: str) -> Reason | None:
         "",
         "measured",
     )
-
-
-def sentence(found: Rehearsal, remedy: str, at: str, named: str) -> str:
-    """For the methods section: what was simulated, how often, and what the reported intervals did."""
-    row = found.scores.get(remedy, at)
-    plain = found.scores.get("ordinary", "")
-    text = (
-        f"The analysis was rehearsed on this design: y was simulated {found.replicates:,} times under each "
-        f"of {len(found.truths)} error models ({listed([t.name for t in found.truths])}; seed {found.seed})"
-    )
-    if row is None:
-        return f"{text}; the reported remedy itself was not part of it."
-    text += (
-        f", and the {number(100 * found.confidence, 0)} % intervals of {named} held the true value in "
-        f"{number(100 * row.coverage, 1)} % of replicates or more (Monte-Carlo error "
-        f"{number(100 * row.mcse, 1)} points)"
-    )
-    if plain is not None and remedy != "ordinary":
-        text += f"; the ordinary intervals did so in {number(100 * plain.coverage, 1)} % or more"
-    return f"{text}. It cannot see a wrong mean or predictors that depend on the errors."
 
 
 def checked(replicates: int) -> int:

@@ -1,0 +1,201 @@
+"""The commands ``rehearse`` and ``plan``."""
+
+from __future__ import annotations
+
+import inspect
+from dataclasses import replace
+from pathlib import Path
+from typing import TYPE_CHECKING, Annotated, Any
+
+import typer
+
+from clingstone.needs import InputError
+from clingstone.options import settings_options
+
+if TYPE_CHECKING:
+    from clingstone.examination import Examination
+    from clingstone.run import Progress
+
+Subject = Annotated[
+    Path,
+    typer.Argument(
+        metavar="DIR|DATA", help="A folder that clingstone saved, or a file with options as for examine."
+    ),
+]
+Replicates = Annotated[
+    int, typer.Option("--replicates", metavar="NUMBER", help="Per error model, at the most.")
+]
+Only = Annotated[
+    list[str] | None,
+    typer.Option(
+        "--remedy", metavar="NAME", help="A remedy to rehearse; left out, all. Give it once for each."
+    ),
+]
+EngineName = Annotated[
+    str, typer.Option("--engine", metavar="here|cores|dask", help="Where the replicates are made.")
+]
+Workers = Annotated[
+    int | None,
+    typer.Option("--workers", metavar="NUMBER", help="Processes of --engine cores; else all."),
+]
+Scheduler = Annotated[
+    str | None,
+    typer.Option("--scheduler", metavar="ADDRESS", help="Of a Dask cluster, such as tcp://10.0.0.1:8786."),
+]
+Chunks = Annotated[
+    Path | None,
+    typer.Option(
+        "--chunks",
+        metavar="DIR",
+        help="Folder of finished chunks, from which a stopped rehearsal goes on. [default: OUT-chunks]",
+    ),
+]
+WholePath = Annotated[
+    int,
+    typer.Option(
+        "--whole-path",
+        metavar="NUMBER",
+        help="Also detect, advise and refit inside so many replicates per error model.",
+    ),
+]
+ToTheEnd = Annotated[
+    bool, typer.Option("--to-the-end", help="Make all replicates, also when the ranking is settled.")
+]
+_OWN: dict[str, tuple[Any, Any]] = {
+    "subject": (Subject, inspect.Parameter.empty),
+    "replicates": (Replicates, 10_000),
+    "remedy": (Only, None),
+    "engine": (EngineName, "here"),
+    "workers": (Workers, None),
+    "scheduler": (Scheduler, None),
+    "chunks": (Chunks, None),
+    "whole_path": (WholePath, 0),
+    "to_the_end": (ToTheEnd, False),
+}
+
+
+def register(app: typer.Typer) -> None:
+    """Put the commands of this file on the application."""
+    app.command("rehearse", short_help="Simulate y on a design and see how each remedy would have done.")(
+        _with_options(_rehearse)
+    )
+
+
+def _with_options(command: Any) -> Any:
+    """The command with its own options, then one for every field of Settings, then the shared ones."""
+    from clingstone import cli
+
+    entries = dict(_OWN)
+    for option in settings_options():
+        if option.name != "rehearsal":
+            entries[option.name] = (Annotated[option.kind, cli._typer_option(option)], option.default)
+    entries["out"] = (cli.Out, None)
+    for name, kind in (("json", cli.AsJson), ("overwrite", cli.Overwrite), ("quiet", cli.Quiet)):
+        entries[name] = (kind, False)
+    entries["debug"] = (cli.Debug, False)
+    command.__signature__ = inspect.Signature(
+        [
+            inspect.Parameter(name, inspect.Parameter.KEYWORD_ONLY, annotation=kind, default=default)
+            for name, (kind, default) in entries.items()
+        ]
+    )
+    command.__annotations__ = {name: kind for name, (kind, _) in entries.items()}
+    return command
+
+
+def _rehearse(
+    *,
+    subject: Path,
+    replicates: int,
+    remedy: list[str] | None,
+    engine: Any,
+    workers: int | None,
+    scheduler: str | None,
+    chunks: Path | None,
+    whole_path: int,
+    to_the_end: bool,
+    out: Path | None,
+    json: bool,
+    overwrite: bool,
+    quiet: bool,
+    debug: bool,
+    **given: Any,
+) -> None:
+    """Simulate y on a design many times, under several error models, and see how each remedy would have done.
+
+    With a saved folder, its report and results.json are written again with the rehearsal in them.
+    """
+    from clingstone import cli
+    from clingstone.rehearsing import rehearse
+
+    folder = _folder(subject, out, overwrite)
+    with cli._progress(quiet) as progress:
+        examination = _examination(subject, given, progress)
+        found = rehearse(
+            examination,
+            replicates,
+            remedies=remedy or None,
+            engine=engine,
+            workers=workers,
+            scheduler=scheduler,
+            folder=chunks if chunks is not None else folder.with_name(f"{folder.name}-chunks"),
+            stop_early=not to_the_end,
+            whole_path=whole_path,
+            progress=progress,
+        )
+        heard = examination.with_rehearsal(found)
+        heard.save(folder, overwrite=overwrite or subject.is_dir())
+    if json:
+        from clingstone.results import to_json
+
+        cli._write(to_json(heard.results))
+    elif not quiet:
+        cli._write(_printed(heard, folder))
+
+
+def _folder(subject: Path, out: Path | None, overwrite: bool) -> Path:
+    from clingstone import cli
+
+    if out is None:
+        return subject if subject.is_dir() else cli._unused(f"{subject.stem}-clingstone", overwrite)
+    from clingstone.writeup.save import check
+
+    check(out, overwrite)
+    return out
+
+
+def _examination(subject: Path, given: dict[str, Any], progress: Progress | None) -> Examination:
+    """The saved examination run again, or a new one of a file; without the short rehearsal."""
+    from clingstone.case import Case
+    from clingstone.examination import examined, settings_of
+    from clingstone.reopened import reopened, saved
+    from clingstone.run import Run, one_thread
+
+    if subject.is_dir():
+        from clingstone import cli
+
+        if any(given[o.name] != o.default for o in settings_options() if o.name != "rehearsal"):
+            raise InputError(
+                f"{subject} is a saved examination, which holds its own settings",
+                "Give the data file instead to examine it with other settings.",
+            )
+        case = reopened(saved(subject), cli._data_of(subject))
+    else:
+        options = [o for o in settings_options() if o.name != "rehearsal"]
+        with one_thread():
+            case = Case.of(subject, settings_of({o.name: o.read(given[o.name]) for o in options}))
+    with one_thread():
+        return examined(case, Run(replace(case.settings, rehearsal="none"), report=progress))
+
+
+def _printed(heard: Examination, folder: Path) -> str:
+    from clingstone.writeup import rehearsed
+
+    shown = rehearsed.table(heard.results)
+    lines = [shown.to_text()] if shown is not None else []
+    found = heard.rehearsal
+    if found is not None:
+        lines.append(f"Stopped {found.stopped}.")
+        lines += [f"{t.name}: {t.words}" for t in found.truths]
+    lines.append(f"Advised: {heard.refit().name}." if heard.advice.remedy else heard.advice.headline)
+    return "\n\n".join([lines[0], "\n".join(lines[1:])]) + f"\n\nreport.html · results.json   in  {folder}/\n"

@@ -1,0 +1,146 @@
+"""The whole path inside each replicate: detect, advise, refit, then the advised interval.
+
+Reporting the interval of whatever remedy the tests led to has a price that no single remedy's coverage
+shows. Here every replicate is examined as the user's own y was, by the rules alone, and the interval that it
+would have reported is held against the true value. Inference after selection has no uniform guarantee (Leeb
+& Pötscher 2005); this is a statement about the error models that were simulated.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass
+from typing import NamedTuple
+
+import numpy as np
+
+from clingstone.advice.choose import Advice, settle
+from clingstone.advice.facts import Facts
+from clingstone.advice.facts import facts as gather_facts
+from clingstone.advice.pick import preferred
+from clingstone.advice.shortlist import Shortlist, shortlist_for
+from clingstone.covariance.fits import Fits
+from clingstone.design.response import Response
+from clingstone.evidence.gather import gather
+from clingstone.ledger.ledger import weigh
+from clingstone.maths.once import Array
+from clingstone.needs import NotSupported
+from clingstone.rehearsal.study import Job, Study
+from clingstone.rehearsal.tallies import Chosen, Walk, binomial
+from clingstone.rehearsal.truths import Truth, errors
+from clingstone.remedies import refit, remedy
+from clingstone.remedies.remedy import Refit, rows
+
+CHUNK = 5  # replicates handed out at once: each takes a fraction of a second
+
+
+class Step(NamedTuple):
+    """One replicate: the remedy that was advised ("" for none), and per term: covered, relative width."""
+
+    remedy: str
+    at: str
+    covered: tuple[bool, ...]
+    relative: tuple[float, ...]
+
+
+@dataclass(frozen=True, eq=False)
+class Paths:
+    """Replicates to be examined like the user's y; what a worker needs."""
+
+    fits: Fits
+    truths: tuple[Truth, ...]
+    terms: tuple[str, ...]
+
+    def jobs(self, replicates: int) -> tuple[Job, ...]:
+        whole, rest = divmod(replicates, CHUNK)
+        sizes = [CHUNK] * whole + ([rest] if rest else [])
+        return tuple(Job(t, c, size) for c, size in enumerate(sizes) for t in range(len(self.truths)))
+
+    def run(self, job: Job) -> tuple[Step, ...]:
+        fits, truth = self.fits, self.truths[job.truth]
+        rng = fits.run.child(f"whole path {truth.name}", job.chunk)
+        E = errors(truth, fits, rng, job.size)
+        # The mean of the user's own fit: tests of the mean look along fitted values.
+        Y = fits.design.Q @ fits.response.coef[:, :1] + E
+        return tuple(self._walk(Y[:, b : b + 1]) for b in range(job.size))
+
+    def _walk(self, Y: Array) -> Step:
+        design = self.fits.design
+        e = design.basis.project(Y)
+        fits = Fits(Response(design, design.Q.T @ Y, e, np.einsum("ij,ij->j", e, e)), self.fits.run)
+        evidence = gather(fits)
+        ledger = weigh(fits, evidence)
+        known = gather_facts(fits, evidence, ledger)
+        advice, refits = advised(known, shortlist_for(known, fits), fits)
+        chosen = next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
+        ordinary = next(r for r in refits if r.remedy == "ordinary")
+        truth = self._true
+        if chosen is None:
+            none = float("nan")
+            return Step("", "", (False,) * len(self.terms), (none,) * len(self.terms))
+        covered, relative = [], []
+        have = {row.term: row for row in chosen.intervals}
+        for term in self.terms:
+            row, plain = have.get(term), ordinary.get(term)
+            covered.append(row is not None and row.low <= truth[term] <= row.high)
+            width = float("nan") if row is None else (row.high - row.low) / (plain.high - plain.low)
+            relative.append(width)
+        return Step(chosen.remedy, chosen.at, tuple(covered), tuple(relative))
+
+    @property
+    def _true(self) -> Mapping[str, float]:
+        names, weights = rows(self.fits.design)
+        values = self.fits.design.basis.contrast(weights).T @ self.fits.response.coef[:, 0]
+        return dict(zip(names, values.tolist(), strict=True))
+
+
+def advised(known: Facts, shortlist: Shortlist, fits: Fits) -> tuple[Advice, tuple[Refit, ...]]:
+    """The advice by the rules, refitting no more than what the rules name; else every candidate."""
+    ordinary = refit(remedy("ordinary"), "", fits)
+    levels = {(c.remedy, c.at) for c in shortlist.candidates}
+    for _, what, level in preferred(known):
+        name = shortlist.twins.get(what, what)
+        match = next((at for r, at in levels if r == name and level in ("", at)), None)
+        if match is None:
+            continue
+        try:
+            both = (ordinary, refit(remedy(name), match, fits))
+        except NotSupported:
+            continue
+        advice = settle(shortlist, known, both, None)
+        if advice.remedy == name:
+            return advice, both
+        break
+    refits = shortlist.refit(fits)
+    return settle(shortlist, known, refits, None), refits
+
+
+def paths(study: Study) -> Paths:
+    return Paths(study.fits, study.truths, study.terms)
+
+
+def walks(terms: Sequence[str], steps: Sequence[Step]) -> tuple[Walk, ...]:
+    """Per focus row: coverage and width of what was reported, and how often each remedy was."""
+    out = []
+    names = sorted({(s.remedy, s.at) for s in steps}, key=lambda n: (-_count(steps, n), n))
+    for k, term in enumerate(terms):
+        told = [s for s in steps if s.remedy]
+        coverage = _share(told, k)
+        widths = np.array([s.relative[k] for s in told])
+        chosen = []
+        for name in names:
+            own = [s for s in steps if (s.remedy, s.at) == name]
+            c = _share(own, k)
+            chosen.append(Chosen(*name, len(own) / len(steps), c, binomial(c, len(own))))
+        relative = float(np.nanmean(widths)) if np.isfinite(widths).any() else float("nan")
+        mcse = binomial(coverage, len(told)) if told else float("nan")
+        out.append(Walk(len(steps), term, coverage, mcse, relative, tuple(chosen)))
+    return tuple(out)
+
+
+def _count(steps: Sequence[Step], name: tuple[str, str]) -> int:
+    return sum((s.remedy, s.at) == name for s in steps)
+
+
+def _share(steps: Sequence[Step], k: int) -> float:
+    return float(np.mean([s.covered[k] for s in steps])) if steps else float("nan")
