@@ -97,6 +97,26 @@ def _means() -> list[w.World]:
     ]
 
 
+def _decoys() -> list[w.World]:
+    """One structure is real; another is declared, and its own test sees the first one's shadow."""
+    return [
+        W(
+            "ICC 0.3 alone, order declared too, 15 × 8, x of groups",
+            "",
+            w.panel(15, 8, 0.3, 0.0, "group"),
+            PANEL,
+            G,
+        ),
+        W(
+            "ρ 0.5 alone, groups declared too, 15 × 8, x of groups",
+            "",
+            w.panel(15, 8, 0.0, 0.5, "group"),
+            PANEL,
+            S,
+        ),
+    ]
+
+
 def _wrong_models() -> list[w.World]:
     """Truths that none of the fitted error models holds."""
     return [
@@ -115,5 +135,6 @@ WORLDS: tuple[w.World, ...] = (
     *_times(),
     *_places(),
     *_means(),
+    *_decoys(),
     *_wrong_models(),
 )
