@@ -22,6 +22,14 @@ COVERS = {
     "spatial-gls": ("spatial",),
     "joint": ("group", "serial", "spatial"),
     "repaired-mean": (),
+    "cluster-jackknife": ("group", "serial"),
+    "randomisation": ("group",),
+    "multiway-cluster": ("group",),
+    "mixed-slope": ("group",),
+    "group-means": ("group",),
+    "fixed-effects": ("group", "serial"),
+    "car1": ("serial",),
+    "arma": ("serial",),
 }
 
 
@@ -86,6 +94,7 @@ def facts(book: Ledger, missing: Missing | None = None, **values: Any) -> Facts:
 
 
 def refit(remedy: str, at: str = "", width: float = 4.0, df: float = 20.0, **more: Any) -> Refit:
+    """A refit of one row, ``arm``; its standard error is a quarter of its width."""
     row = Interval(
         "arm", remedy, -3.1, width / 4, 1.0, df, "rule", -3.1 - width / 2, -3.1 + width / 2, 0.01, "ok"
     )
@@ -94,7 +103,7 @@ def refit(remedy: str, at: str = "", width: float = 4.0, df: float = 20.0, **mor
         name=remedy,
         at=at,
         covers=COVERS[remedy],  # type: ignore[arg-type]
-        estimand="pooled",
+        estimand=more.pop("estimand", "pooled"),
         intervals=(row,),
         terms=(),
         account=Account("", "", "", "", "t"),

@@ -34,6 +34,7 @@ LATE = {
     "name of the widest second opinion",
     "term of the widest second opinion",
     "another order fits better",
+    "slope model settled",
 }
 
 
@@ -89,6 +90,11 @@ def known_facts() -> set[str]:
             evidence = gather(f)
             names |= set(facts(f, evidence, weigh(f, evidence)))
     rows, columns = np.divmod(np.arange(144), 12)
+    times = make.design({"x": x}, series=rows, tick=columns)
+    f = make.fits(times, rng.standard_normal(12)[columns] + make.ar1(rng, 12, 12, 0.5))
+    with one_thread():
+        evidence = gather(f)
+        names |= set(facts(f, evidence, weigh(f, evidence)))
     crossed = make.design({"x": x}, groups={"row": rows, "column": columns}, arrangement="crossed")
     y = rng.standard_normal(12)[rows] + rng.standard_normal(12)[columns] + 0.3 * rng.standard_normal(144)
     f = make.fits(crossed, y)

@@ -190,6 +190,15 @@ CAVEATS = (
         "moderate",
     ),
     Rule(
+        "common-shocks",
+        SERIAL & fact("common shocks"),
+        Then("caution"),
+        "Different series move together at one time, and the advised refit takes series as independent of "
+        "each other: effects of the times in the model would carry that.",
+        "driscoll-kraay-1998, hoechle-2007",
+        "moderate",
+    ),
+    Rule(
         "not-converged",
         fact("advised refit did not converge"),
         Then("caveat"),

@@ -5,8 +5,8 @@ from __future__ import annotations
 from clingstone.advice import headline as say
 from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
 from clingstone.advice.facts import Facts
-from clingstone.advice.pick import covers, pick, rank, serves
-from clingstone.advice.refitted import advised_facts, compared, same
+from clingstone.advice.pick import covers, pick, rank, same, serves
+from clingstone.advice.refitted import advised_facts, compared
 from clingstone.advice.rules import CAVEATS, NO_REMEDY, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.advice.structures import FAMILIES, covered, families, needed

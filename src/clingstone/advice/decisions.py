@@ -141,7 +141,7 @@ PREFER = (
         & fact("focus at group level")
         & (fact("groups in the smaller arm") < 3)
         & fact("assignment can be redrawn"),
-        Then("prefer", "randomisation", at="assigned level"),
+        Then("prefer", "randomisation", at="assigned level", firm=True),
         "Only {groups in the smaller arm} of {groups} groups carry {term of the smaller arm}, where every "
         "standard error fails; it was assigned, and the assignment can be drawn again.",
         "mackinnon-webb-2018, fisher-1935",
@@ -239,12 +239,18 @@ PREFER = (
         "strong",
     ),
     Rule(
-        "within-focus",
-        GROUP & ~SERIAL & ~SPATIAL & ~fact("focus at group level") & (fact("effective clusters") >= 10),
-        Then("prefer", "cluster-robust", at="group level"),
-        "The focus terms vary within groups, where their slopes may differ from group to group: the robust "
-        "covariance allows for that, a plain random intercept does not.",
-        "barr-2013, bell-2019, cameron-miller-2015",
+        "random-slopes",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & ~fact("focus at group level")
+        & (fact("effective clusters") < 10)
+        & fact("slope model settled")
+        & (fact("robust over mixed standard error") > 1.5),
+        Then("prefer", "mixed-slope", firm=True),
+        "The robust standard error is {robust over mixed standard error} times that of the random intercept: "
+        "the slopes seem to differ from group to group, and a model in which they do fits.",
+        "barr-2013, bell-2019",
         "strong",
     ),
     Rule(
@@ -255,10 +261,19 @@ PREFER = (
         & ~fact("focus at group level")
         & (fact("df of the robust refit") >= 4)
         & (fact("robust over mixed standard error") > 1.5),
-        Then("prefer", "cluster-robust", at="group level"),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
         "The robust standard error is {robust over mixed standard error} times that of the random intercept: "
         "the slopes seem to differ from group to group, which a random intercept leaves out.",
         "barr-2013, bell-2019",
+        "strong",
+    ),
+    Rule(
+        "within-focus",
+        GROUP & ~SERIAL & ~SPATIAL & ~fact("focus at group level") & (fact("effective clusters") >= 10),
+        Then("prefer", "cluster-robust", at="group level"),
+        "The focus terms vary within groups, where their slopes may differ from group to group: the robust "
+        "covariance allows for that, a plain random intercept does not.",
+        "barr-2013, bell-2019, cameron-miller-2015",
         "strong",
     ),
     Rule(

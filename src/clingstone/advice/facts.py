@@ -137,7 +137,6 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
     ]
     series = design.serial
     if series is not None:
-        partitions = [*design.partitions.items(), (series.part.key, series.part)]
         longest, number = counts["rows in the longest series"], counts["series"]
         enough = longest >= limits.serial_estimate_rows or (
             counts["series of 5 rows or more"] >= limits.serial_estimate_series
@@ -147,7 +146,7 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             named("series", number),
             yes("serial estimable", enough, "the series are long or many enough for a correlation in time"),
             yes("regular times", series.spacing != "irregular", f"spacing of the times: {series.spacing}"),
-            words("series level", next(k for k, v in partitions if v.relation(series.part) == "same")),
+            words("series level", _named(design, series)),
         ]
         around = [g for g in (design.group.levels if design.group is not None else ()) if _holds(g, series)]
         if design.group is not None:
@@ -163,6 +162,14 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
         ]
     return out
+
+
+def _named(design: Design, series: Series) -> str:
+    """The partition whose cells are the series, under the name at which a remedy finds it."""
+    if series.part.count < 2:
+        return series.part.key
+    found = (key for key, part in design.partitions.items() if part.relation(series.part) == "same")
+    return next(found, series.part.key)
 
 
 def _holds(level: Partition, series: Series) -> bool:
@@ -211,7 +218,11 @@ def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[f
 
 
 def _evidence_facts(evidence: Evidence) -> list[Fact]:
-    pairs = {"unequal variances": "heteroscedasticity", "outlying rows": "outliers"}
+    pairs = {
+        "unequal variances": "heteroscedasticity",
+        "outlying rows": "outliers",
+        "common shocks": "common-shocks",
+    }
     out = []
     for name, test in pairs.items():
         finding = evidence.get(test)

@@ -22,7 +22,11 @@ from clingstone.needs import NotSupported
 # the winner over dependence, only shown beside it.
 SMOOTH = {"trend": "serial", "trend-surface": "spatial"}
 CURVE = "functional-form"
-AGAIN = ("heteroscedasticity", "outliers")  # read again, besides the primary tests, with the part in
+AGAIN = (
+    "heteroscedasticity",
+    "outliers",
+    "common-shocks",
+)  # read again, besides the primary tests, with the part in
 
 
 @dataclass(frozen=True)

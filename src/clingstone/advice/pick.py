@@ -10,7 +10,7 @@ from clingstone.advice.entries import REPAIRED, Scores
 from clingstone.advice.facts import Facts
 from clingstone.advice.rules import PREFER, Rule
 from clingstone.advice.structures import families, needed
-from clingstone.remedies.remedy import Refit
+from clingstone.remedies.remedy import Interval, Refit
 
 # Without a rule that names one, and among equals in a rehearsal: the simplest first.
 ORDER = (
@@ -63,16 +63,14 @@ def pick(
     """The advised refit and the rule that named it (None when a rehearsal or the fallback did)."""
     need, shown = needed(facts.ledger), needed(facts.ledger, shown=True)
     usable = [r for r in refits if r.remedy != REPAIRED and serves(r, facts)]
-    if scores is not None:
+    found, rule = _by_rule(facts, usable, twins)
+    if scores is not None and not (rule is not None and rule.then.firm):
         same_question = [r for r in usable if r.estimand == "pooled"]
-        found = _rehearsed([r for r in same_question if need <= covers(r, facts, reached)], scores)
-        if found is not None:
-            return found, None
-    for rule, what, at in preferred(facts):
-        name = twins.get(what, what)
-        match = [r for r in usable if r.remedy == name and (at in ("", r.at) or name != what)]
-        if match:
-            return match[0], rule
+        best = _rehearsed([r for r in same_question if need <= covers(r, facts, reached)], scores)
+        if best is not None:
+            return best, None
+    if found is not None:
+        return found, rule
     usable = [r for r in usable if r.estimand == "pooled"]  # only a rule may change the question
     usable.sort(key=lambda r: rank(r.remedy))
     for wanted in (need, shown):
@@ -82,6 +80,16 @@ def pick(
     for fit in usable:
         if need and families(facts.ledger, need) <= set(fit.covers):
             return fit, None
+    return None, None
+
+
+def _by_rule(facts: Facts, usable: list[Refit], twins: Mapping[str, str]) -> tuple[Refit | None, Rule | None]:
+    """The refit that the first rule names whose remedy could be fitted."""
+    for rule, what, at in preferred(facts):
+        name = twins.get(what, what)
+        match = [r for r in usable if r.remedy == name and (at in ("", r.at) or name != what)]
+        if match:
+            return match[0], rule
     return None, None
 
 
@@ -119,4 +127,22 @@ def _rehearsed(fits: list[Refit], scores: Scores) -> Refit | None:
 
     least = min(map(width, good))
     near = [f for f in good if width(f) <= 1.01 * least]
-    return min(near, key=lambda f: rank(f.remedy))
+    best = min(near, key=lambda f: rank(f.remedy))
+    # Of refits with the same numbers the plainest name stands for all, rehearsed or not.
+    return min((f for f in fits if same(f, best)), key=lambda f: rank(f.remedy))
+
+
+SAME = 1e-6  # relative difference below which two refits gave the same numbers
+
+
+def same(one: Refit, other: Refit) -> bool:
+    """The same rows with the same numbers."""
+    pairs = {row.term: row for row in other.intervals}
+    return len(pairs) == len(one.intervals) and all(_equal(row, pairs.get(row.term)) for row in one.intervals)
+
+
+def _equal(one: Interval, other: Interval | None) -> bool:
+    if other is None:
+        return False
+    pairs = ((one.estimate, other.estimate), (one.low, other.low), (one.high, other.high))
+    return all(a == b or abs(a - b) <= SAME * one.se or (np.isnan(a) and np.isnan(b)) for a, b in pairs)

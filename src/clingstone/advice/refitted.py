@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
-from clingstone.advice.pick import Reached, covers
+from clingstone.advice.pick import SAME, Reached, covers, same
 from clingstone.advice.structures import subject
 from clingstone.display import listed
 from clingstone.remedies.remedy import Interval, Refit
@@ -13,7 +13,6 @@ ROBUST = "cluster-robust"
 # A second look at the advised interval by other means, for the same rows; the advised one is no second.
 SECOND = ("cluster-jackknife", "wild-cluster-bootstrap")
 ORDERED = ("ar1", "car1", "arma", "joint")
-SAME = 1e-6  # relative difference below which two refits gave the same numbers
 
 
 def find(refits: tuple[Refit, ...], remedy: str, at: str = "") -> Refit | None:
@@ -35,6 +34,9 @@ def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     mixed = find(refits, "mixed-intercept", facts.word("mixed level"))
     if mixed is not None:
         out += _ratio("robust over mixed standard error", robust, mixed, facts)
+    slope = find(refits, "mixed-slope")
+    settled = slope is not None and slope.converged and not slope.boundary
+    out.append(yes("slope model settled", settled, "the model with slopes by group has an inner estimate"))
     return facts.plus({f.name: f for f in out})
 
 
@@ -129,15 +131,3 @@ def _order(refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
     if arma is None or chosen.remedy != "ar1":
         return []
     return [yes("another order fits better", not same(arma, chosen), "the ARMA order chosen by AICc")]
-
-
-def same(one: Refit, other: Refit) -> bool:
-    """The same rows with the same numbers."""
-    pairs = {row.term: row for row in other.intervals}
-    return len(pairs) == len(one.intervals) and all(
-        row.term in pairs
-        and abs(row.estimate - pairs[row.term].estimate) <= SAME * row.se
-        and abs(row.se - pairs[row.term].se) <= SAME * row.se
-        and abs(row.df - pairs[row.term].df) <= SAME * row.df
-        for row in one.intervals
-    )

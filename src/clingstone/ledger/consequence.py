@@ -12,6 +12,7 @@ from dataclasses import dataclass
 
 import numpy as np
 from scipy import stats
+from scipy.interpolate import CubicSpline
 
 from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.fits import Fits
@@ -165,9 +166,14 @@ def _scan(fits: Fits, key: str) -> tuple[Array, Array, Array]:
         rho = np.asarray(algebra.shape(theta)["serial.rho"], dtype=float)
         order = np.argsort(rho)
         order = order[(rho[order] > 0) & (rho[order] <= 0.95)]
-        grid = order[np.unique(np.linspace(0, len(order) - 1, 60).astype(int))]
+        # Q'KQ bends slowly along the working parameter: a spline over some of it serves the rest.
+        grid, nodes = (order[np.unique(np.linspace(0, len(order) - 1, k).astype(int))] for k in (60, NODES))
+        known = np.array([algebra.spread(key, theta[:, i]) for i in nodes])
+        between = CubicSpline(theta[0, nodes], known)(theta[0, grid]) if design.p else known[:1]
         s = np.r_[0.0, rho[grid]]
-        spread = np.array([np.eye(design.p), *(algebra.spread(key, theta[:, i]) for i in grid)])
+        spread = np.concatenate(
+            [np.eye(design.p)[None], np.broadcast_to(between, (len(grid), *known.shape[1:]))]
+        )
     else:
         s = np.linspace(0.0, 0.95, 96)
         spread = algebra.spread(key, fits[{key}].theta[:, 0])[None]
