@@ -12,7 +12,7 @@ from hypothesis import strategies as st
 from clingstone.covariance.fits import Fits
 from clingstone.design.derived import absorb, extend, sweep
 from clingstone.design.response import Response
-from clingstone.needs import Limits, NotSupported
+from clingstone.needs import NotSupported
 from clingstone.run import Run, Settings
 from tests.covariance.worlds import fits, printed
 
@@ -82,7 +82,6 @@ SITE = np.random.default_rng(2).uniform(size=(60, 2))
         ("serial", {"time": np.arange(60) % 6, "series": np.arange(60) // 10}, "share their t with another"),
         ("serial", {"time": np.arange(60) % 10, "series": np.arange(60) // 10}, "longest series has 10 rows"),
         ("spatial", {"xy": SITE[np.arange(60) % 12]}, "12 distinct places"),
-        ("spatial", {"xy": SITE, "limits": Limits(dense_sites=50)}, "60 distinct places; the dense"),
     ],
 )
 def test_refusals_say_what_was_found(key: str, case: dict[str, object], reason: str) -> None:

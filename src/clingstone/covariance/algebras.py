@@ -67,6 +67,10 @@ class Layered(Pieces):
         if self.spatial is None:
             return gram
         assert load is not None
+        return self._top(gram, load, theta)
+
+    def _top(self, gram: Gram, load: Load, theta: Array) -> Gram:
+        """The Gram once the sites' effects are added to what lies below them."""
         return matern.top(gram, load, self._between(theta))
 
     def grams(self, thetas: Array, response: Response) -> list[Gram]:
@@ -229,6 +233,8 @@ Chosen = Layered | Sloped | Crossed | Dense
 
 def choose(design: Design, components: Sequence[Component], limits: Limits) -> Chosen:
     """The cheapest exact algebra of a set of components. Raises NotSupported."""
+    if _many_places(design, components, limits):
+        return _nearest(design, components)
     pieces = _pieces(design, components)
     if pieces_of(pieces):
         nested = sloped(design, pieces)
@@ -248,6 +254,31 @@ def choose(design: Design, components: Sequence[Component], limits: Limits) -> C
         f"{limits.dense_rows:,} rows, and this one has {design.n:,}",
         "Fit them one at a time, or declare levels that nest.",
     )
+
+
+def _many_places(design: Design, components: Sequence[Component], limits: Limits) -> bool:
+    spatial = any(component.key == "spatial" for component in components)
+    return spatial and design.spatial is not None and design.spatial.count > limits.dense_sites
+
+
+def _nearest(design: Design, components: Sequence[Component]) -> Layered:
+    """Layers under a nearest-neighbour likelihood of the places. Raises NotSupported."""
+    from clingstone.covariance.vecchia import Nearest, NearestPiece  # it builds on the layers of this file
+
+    assert design.spatial is not None
+    pieces = tuple(
+        NearestPiece(piece.key, design, design.spatial) if isinstance(piece, SpatialPiece) else piece
+        for piece in _pieces(design, components)
+    )
+    found = stack(design, pieces)
+    if found is None or found.above:
+        names = ", ".join(component.label for component in components)
+        raise NotSupported(
+            f"{names} cannot be fitted together with {design.spatial.count:,} places: beyond the dense limit "
+            "only what lies within places, or within time inside them, goes with the map",
+            "Fit them one at a time.",
+        )
+    return Nearest(design, pieces, found.serial, found.chain, found.spatial)
 
 
 def _pieces(design: Design, components: Sequence[Component]) -> tuple[Piece, ...]:

@@ -15,6 +15,7 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, NotSupported, Refusal
 
+MOST_PLACES = 300_000  # beyond, one evaluation of the nearest-neighbour likelihood takes many seconds
 SITE = "group:site"  # key of the unstructured part of places that repeat
 
 
@@ -249,10 +250,9 @@ def _spatial(design: Design, limits: Limits) -> Refusal | None:
             f"{sites.count} distinct places; a spatial covariance needs at least {limits.sites_estimate}",
             "More places would be needed.",
         )
-    if sites.count > limits.dense_sites:
+    if sites.count > MOST_PLACES:
         return Refusal(
-            f"{sites.count:,} distinct places; the dense covariance is made for "
-            f"{limits.dense_sites:,} or fewer",
+            f"{sites.count:,} distinct places; the covariance of places is made for {MOST_PLACES:,} or fewer",
             "Average rows over larger places, or take a sample of places.",
         )
     return None
