@@ -28,6 +28,7 @@ FEW_SIGNS = 8  # clusters below which there are too few patterns for p, and six-
 LEAST = 5  # clusters: with four, even six-point weights say next to nothing
 MANY = 9999
 SIMULATED = 399  # resamples for each of many columns of y
+SOME = 512  # sign patterns that are all counted there too
 WORK = 1e9  # multiplications that one column of y may cost, before draws are cut
 BLOCK = 6_000_000  # weights held at once
 
@@ -74,10 +75,14 @@ class WildReady(ResampledReady):
     every: bool
     draws: int
 
+    def _counted(self, fits: Fits) -> bool:
+        """All patterns are used; of many columns of y only where they are few."""
+        return self.every and (fits.response.B == 1 or 2 ** (self.part.count - 1) <= SOME)
+
     def weights(self, fits: Fits) -> Iterator[tuple[Array, Array | None]]:
         """Blocks of (d, G) weights, and their squares if not all one; the same for every row and column."""
         G = self.part.count
-        if self.every:
+        if self._counted(fits):
             yield resample.every_sign(G), None
             return
         rng = fits.run.child(f"wild cluster bootstrap:{self.at}")
@@ -111,10 +116,11 @@ class WildReady(ResampledReady):
         found: dict[int, list[resample.Curves]] = {
             j: [] for j, name in enumerate(self.names) if name not in self.unusable
         }
+        counted = self._counted(fits)
         for V, V2 in self.weights(fits):
             A0 = resample.wild_sums(V, S)
             for j, blocks in found.items():
-                blocks.append(resample.wild(V, V2, M, S, self.W[:, j], A0, self.every))
+                blocks.append(resample.wild(V, V2, M, S, self.W[:, j], A0, counted))
         return {j: resample.Curves.joined(blocks) for j, blocks in found.items()}
 
     def _joints(self, fits: Fits, M: Array, S: Array, estimate: Array) -> dict[str, Joint]:
@@ -131,7 +137,7 @@ class WildReady(ResampledReady):
                     S[:, :, b],
                     self.W[:, pick],
                     estimate[pick, b],
-                    self.every,
+                    self._counted(fits),
                 )
                 for b in range(fits.response.B)
             ]
