@@ -17,9 +17,9 @@ import pytest
 from clingstone.evidence import by_id
 from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Reading
-from clingstone.evidence.nested import restricted_ratio_draws
 from clingstone.evidence.portmanteau import partial_r2, plain
 from clingstone.evidence.read import holm
+from clingstone.evidence.restricted import null_draws
 from clingstone.maths.partition import Partition
 from clingstone.run import Run
 from clingstone.structure.neighbours import Neighbours
@@ -229,12 +229,12 @@ def test_restricted_ratio_law_equals_rlrsim() -> None:
     # RLRsim, Dyestuff: p = 0.004324 (± 0.0001) at 6.36895531362114, 500,000 draws; ours has 10,000
     df = data("lme4", "Dyestuff")
     made = design(n=30, groups={"Batch": df["Batch"]})
-    drawn = restricted_ratio_draws(made, made.partitions["Batch"], 5, Run())
+    drawn = null_draws(made, made.partitions["Batch"], 5, Run())
     p = float(np.mean(drawn >= 6.36895531362114))
     assert p == pytest.approx(0.004324, abs=3 * np.sqrt(0.004324 / 10_000))
     # METHOD, 20 groups of 6: P(0) = 0.53 and 95 % point 2.39 (RLRsim 0.537, 2.45 of 20,000 draws)
     even = design(n=120, groups={"g": np.repeat(np.arange(20), 6)})
-    drawn = restricted_ratio_draws(even, even.partitions["g"], 19, Run())
+    drawn = null_draws(even, even.partitions["g"], 19, Run())
     assert np.mean(drawn == 0) == pytest.approx(0.535, abs=0.02)
     assert np.quantile(drawn, 0.95) == pytest.approx(2.42, abs=0.15)
 

@@ -53,6 +53,8 @@ def could_matter(fits: Fits, test: Test, about: About, reading: Reading) -> npt.
 
 def _factors(fits: Fits, test: Test, about: About) -> Array | None:
     if test.family == "group":
+        if about.key not in fits.design.partitions:
+            return None  # of a predictor at a level: its size is no likeness of rows
         return np.asarray(group_factors(fits.design, about.key))
     if not test.primary:
         return None  # their sizes are not correlations of one step

@@ -12,44 +12,16 @@ from clingstone.design.design import Design
 from clingstone.display import bounds, freedom, number, p_value, percent, percent_bounds, significant
 from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Curve, Reading, column
+from clingstone.evidence.groups import caveats, level_name, levels, repeats
 from clingstone.evidence.read import Plain, around, degenerate, exceedance, floats
+from clingstone.evidence.restricted import DRAWS, null_draws
 from clingstone.maths.once import Array
-from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
-from clingstone.run import Run
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
-RLRT_DRAWS = 10_000
-RLRT_DENSE = 1500  # groups up to which the spectrum of Z'MZ is taken densely
 CURVE_GROUPS = 200
-
-
-def level_name(key: str) -> str:
-    """What a sentence calls a level: "ward" for "clinic/ward"."""
-    return key.rsplit("/", 1)[-1]
-
-
-def levels(design: Design) -> tuple[About, ...]:
-    """One place for each group level."""
-    if design.group is None:
-        return ()
-    return tuple(About(level.key, f"rows of one {level_name(level.key)}") for level in design.group.levels)
-
-
-def _repeats(design: Design, about: About) -> Partition:
-    assert design.group is not None
-    part = design.group[about.key]
-    name = level_name(about.key)
-    if part.count < 2:
-        raise NotSupported(f"there is only one {name}", "At least 2 are needed, some with several rows.")
-    if part.sizes.max() < 2:
-        raise NotSupported(
-            f"every {name} has a single row, so likeness within a {name} cannot be seen",
-            f"Several rows of at least one {name} would be needed.",
-        )
-    return part
 
 
 @dataclass(frozen=True)
@@ -82,7 +54,7 @@ class GroupF(Plain):
         if given:
             return _ratio_given(fits, f"group:{about.key}", given)
         design, response = fits.design, fits.response
-        part = _repeats(design, about)
+        part = repeats(design, about)
         table = anova(response, part)
         if table.df1 == 0:
             raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
@@ -107,7 +79,7 @@ class GroupF(Plain):
             low=low,
             high=high,
             n_used=design.n,
-            caveats=_group_caveats(design, part),
+            caveats=caveats(design, part),
         )
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
@@ -127,15 +99,6 @@ class GroupF(Plain):
             f"{p_value(column(reading.p))}."
         )
         return f"{words} have an intraclass correlation (likeness beyond the model) of {size}; {tail}"
-
-
-def _group_caveats(design: Design, part: Partition) -> tuple[str, ...]:
-    out = []
-    if part.count < 5:
-        out.append(f"There are only {part.count} groups, so the correlation is known very roughly.")
-    if not design.known:
-        out.append("Only residuals were given, so the degrees of freedom leave out the columns of the model.")
-    return tuple(out)
 
 
 def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:
@@ -171,7 +134,7 @@ def group_means(fits: Fits, about: About) -> Curve | None:
     1'e_g has variance σ²(n_g − ‖Q_g'1‖²); σ² is the mean square within groups.
     """
     design, response = fits.design, fits.response
-    part = _repeats(design, about)
+    part = repeats(design, about)
     table = anova(response, part)
     if table.df2 < 1:
         return None
@@ -204,9 +167,8 @@ def group_means(fits: Fits, about: About) -> Curve | None:
 class IntraclassCorrelation(Plain):
     """REML intraclass correlation, tested by the restricted likelihood ratio with its exact null law.
 
-    The law is that of Crainiceanu & Ruppert (2004), from 10,000 draws in the spectrum of Z'MZ; above
-    1,500 groups the half-and-half mixture, which is then close. The interval is the exact one of the
-    variance ratio, cut at 0 because REML shares are not negative.
+    The law is that of Crainiceanu & Ruppert (2004), from 10,000 draws in the spectrum of Z'MZ. The
+    interval is the exact one of the variance ratio, cut at 0 because REML shares are not negative.
     """
 
     id: str = "intraclass-correlation"
@@ -222,7 +184,7 @@ class IntraclassCorrelation(Plain):
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, key = fits.design, f"group:{about.key}"
-        part = _repeats(design, about)
+        part = repeats(design, about)
         table = anova(fits.response, part)
         if table.df1 == 0 or table.df2 < 1:
             raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
@@ -234,12 +196,8 @@ class IntraclassCorrelation(Plain):
         lost = degenerate(fits.response)
         statistic = np.maximum(2.0 * (model.loglik - fits[frozenset()].loglik), 0.0)
         statistic = np.where(lost, np.nan, statistic)
-        if part.count <= RLRT_DENSE:
-            p = exceedance(statistic, restricted_ratio_draws(design, part, table.df1, fits.run))
-            method = f"exact law of the restricted likelihood ratio, {RLRT_DRAWS:,} draws"
-        else:
-            p = half_mixture(statistic)[0]
-            method = "half-and-half chi-squared mixture"
+        p = exceedance(statistic, null_draws(design, part, table.df1, fits.run))
+        method = f"exact law of the restricted likelihood ratio, {DRAWS:,} draws"
         steps = 46 if fits.depth == "exact" else 26
         ends = icc_interval(fits.response, part, table, fits.run.settings.confidence, steps)
         low, high = (np.maximum(end, 0.0) for end in ends)
@@ -255,7 +213,7 @@ class IntraclassCorrelation(Plain):
             low=low,
             high=high,
             n_used=design.n,
-            caveats=_group_caveats(design, part),
+            caveats=caveats(design, part),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
@@ -267,24 +225,4 @@ class IntraclassCorrelation(Plain):
         )
 
 
-def restricted_ratio_draws(design: Design, part: Partition, rank: int, run: Run) -> Array:
-    """Draws of the restricted likelihood ratio without a group effect (Crainiceanu & Ruppert 2004).
-
-    sup_λ m ln(1 + N/D) − Σ ln(1+λμ), N = Σ λμ/(1+λμ) w², D = Σ w²/(1+λμ) + χ²_{m−r}. Equal and
-    neighbouring μ share one χ² draw: at most 40 bins. The λ grid starts lower with more groups.
-    """
-    t = design.sums(part)
-    spectrum = np.linalg.eigvalsh(np.diag(design.sizes(part)) - t @ t.T)[-rank:]
-    bins = np.array_split(spectrum, min(40, rank))
-    mu = np.array([b.mean() for b in bins])
-    df = np.array([len(b) for b in bins])
-    rng = run.child(f"restricted-lr:{part.key}")
-    w2 = rng.chisquare(df, size=(RLRT_DRAWS, len(df)))
-    rest = rng.chisquare(design.m - rank, size=RLRT_DRAWS)
-    scale = float(np.average(mu, weights=df))
-    grid = np.geomspace(0.02 / (scale * np.sqrt(rank)), 1e3 / scale, 60)
-    shrink = 1.0 / (1.0 + np.outer(mu, grid))  # (bins, grid)
-    D = w2 @ shrink + rest[:, None]
-    N = w2.sum(axis=1)[:, None] - w2 @ shrink
-    values = design.m * np.log1p(N / D) + (df[:, None] * np.log(shrink)).sum(axis=0)
-    return np.asarray(np.maximum(values.max(axis=1), 0.0))
+__all__ = ["GroupF", "IntraclassCorrelation", "group_means", "half_mixture", "level_name", "levels"]

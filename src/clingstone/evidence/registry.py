@@ -4,23 +4,34 @@ from __future__ import annotations
 
 from clingstone.evidence.breaks import Break
 from clingstone.evidence.direction import Correlogram, Direction
+from clingstone.evidence.endogeneity import GroupEndogeneity
 from clingstone.evidence.finding import Test
+from clingstone.evidence.grouplm import GroupLM
+from clingstone.evidence.influence import GroupInfluence
 from clingstone.evidence.lagrange import Lagrange
+from clingstone.evidence.levels import ClusterLevel
 from clingstone.evidence.local import Local
 from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
 from clingstone.evidence.mean import FunctionalForm, Trend, TrendSurface
 from clingstone.evidence.nested import GroupF, IntraclassCorrelation
 from clingstone.evidence.panel import PanelSerial
 from clingstone.evidence.portmanteau import BreuschGodfrey, LjungBox
+from clingstone.evidence.restricted import RestrictedLR
 from clingstone.evidence.season import Season
 from clingstone.evidence.serial import DurbinWatson, IrregularSerial, PanelDurbinWatson
 from clingstone.evidence.shocks import CommonShocks
+from clingstone.evidence.slopes import SlopeVariation
 from clingstone.evidence.spatial import Geary, Moran
 from clingstone.evidence.variogram import Variogram
 
 TESTS: tuple[Test, ...] = (
     GroupF(),
     IntraclassCorrelation(),
+    GroupLM(),
+    RestrictedLR(),
+    ClusterLevel(),
+    GroupEndogeneity(),
+    SlopeVariation(),
     DurbinWatson(),
     PanelDurbinWatson(),
     IrregularSerial(),
@@ -45,6 +56,7 @@ TESTS: tuple[Test, ...] = (
     TrendSurface(),
     Heteroscedasticity(),
     Outliers(),
+    GroupInfluence(),
     Normality(),
     Duplicates(),
 )
