@@ -28,11 +28,13 @@ from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Classes, Load
+from clingstone.maths.irregular import Panels
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits, NotSupported
 
 HEAVY_SITES = 800
+MANY_ROWS = 5000  # irregular rows from which their links are summed up by length
 
 
 @dataclass(frozen=True, eq=False)
@@ -157,6 +159,8 @@ class Layered(Pieces):
         """Rows whitened one by one: irregular times."""
         assert self.serial is not None
         links = self.serial.links
+        if self._cells is None and self.design.n >= MANY_ROWS:
+            return self._by_panel(rho, response), None
         WQ, WE = links.whiten(rho, self.design.Q), links.whiten(rho, response.residual)
         gram = Gram(WQ.T @ WQ, WQ.T @ WE, np.einsum("ij,ij->j", WE, WE), links.logdet(rho))
         cells = self._cells
@@ -164,6 +168,21 @@ class Layered(Pieces):
             return gram, None
         w = links.whiten(rho, self._ones)
         return gram, Load(cells.sums(w * w), cells.sums(w[:, None] * WQ), cells.sums(w[:, None] * WE))
+
+    def _by_panel(self, rho: float, response: Response) -> Gram:
+        """The same from moments on panels of the lengths of links, made once for every ρ."""
+        assert self.serial is not None
+        links, Q, E = self.serial.links, self.design.Q, response.residual
+        panels = kept(self.design, ("link panels",), lambda: Panels.of(links))
+        apart, along, logdet = panels.weights(rho)
+
+        def summed(moments: tuple[Array, Array]) -> Array:
+            return np.asarray(np.tensordot(apart, moments[0], 1) + np.tensordot(along, moments[1], 1))
+
+        QQ = summed(kept(self.design, ("panel moments",), lambda: panels.moments(Q)))
+        QE = summed(kept(response, ("panel moments",), lambda: panels.moments(Q, E)))
+        EE = summed(kept(response, ("panel squares",), lambda: panels.squares(E)))
+        return Gram(np.eye(self.design.p) + QQ, QE, response.ss + EE, logdet)
 
     @property
     @once

@@ -123,6 +123,7 @@ class SerialPiece:
         return Links(self.series.steps)
 
     @property
+    @once
     def whole(self) -> bool:
         """Whole steps between rows, some of them odd: only then can ρ be negative."""
         if self.fading or self.series.tick is None:
