@@ -189,13 +189,24 @@ def _examination(subject: Path, given: dict[str, Any], progress: Progress | None
 
 
 def _printed(heard: Examination, folder: Path) -> str:
+    from clingstone.display import wrapped
     from clingstone.writeup import rehearsed
 
-    shown = rehearsed.table(heard.results)
-    lines = [shown.to_text()] if shown is not None else []
-    found = heard.rehearsal
-    if found is not None:
-        lines.append(f"Stopped {found.stopped}.")
-        lines += [f"{t.name}: {t.words}" for t in found.truths]
-    lines.append(f"Advised: {heard.refit().name}." if heard.advice.remedy else heard.advice.headline)
-    return "\n\n".join([lines[0], "\n".join(lines[1:])]) + f"\n\nreport.html · results.json   in  {folder}/\n"
+    found, shown = heard.rehearsal, rehearsed.table(heard.results)
+    assert found is not None
+    parts = []
+    if shown is not None:
+        short = ("refit", "smallest coverage", "width", "holds")
+        heads = tuple(replace(c, head=head) for c, head in zip(shown.columns, short, strict=True))
+        parts.append(replace(shown, columns=heads).to_text())
+    lines = wrapped(f"Stopped {found.stopped}. Width is over the ordinary interval's. The error models:")
+    for truth in found.truths:
+        lines += wrapped(f"{truth.name}: {truth.words}", indent="  ", hang="    ")
+    for walk in found.walks:
+        lines += wrapped(
+            f"Examined anew in {walk.replicates:,} replicates, the advised interval of {walk.term} held the "
+            f"true value in {100 * walk.coverage:.1f} % (± {200 * walk.mcse:.1f})."
+        )
+    lines += wrapped(f"Advised: {heard.refit().name}." if heard.advice.remedy else heard.advice.headline)
+    parts.append("\n".join(lines))
+    return "\n\n".join(parts) + f"\n\nreport.html · results.json   in  {folder}/\n"

@@ -286,7 +286,8 @@ class Examination:
         """The same evidence and refits under another advice, with the rehearsal behind it."""
         with one_thread():
             refits = _explained(self.fits, advice, self.refits)
-        settings = {**self.results.settings, "rehearsal": found.replicates}
+        # A rehearsal made apart is not examine's own: a replay takes it as it was saved.
+        settings = {**self.results.settings, "rehearsal": "none"}
         bare = replace(self.results, advice=advice, refits=refits, rehearsal=found, settings=settings)
         return replace(self, results=_worded(bare))
 
@@ -406,9 +407,14 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
     held = saved(folder)
     case = reopened(held, data)
     with one_thread():
-        again = examined(case, Run(case.settings)).results
+        repeated = examined(case, Run(case.settings))
+        if held.rehearsal is not None and case.settings.rehearsal == "none":
+            repeated = repeated.with_rehearsal(held.rehearsal)
+        again = repeated.results
     lines = compare(held, again)
     words = [f"{len(held.evidence)} findings and {len(held.intervals)} intervals compared to 1e-8"]
+    if held.rehearsal is not None and case.settings.rehearsal == "none":
+        words.append("the rehearsal, made apart, is taken as saved; clingstone rehearse makes it again")
     moved = [
         f"{k}: {v} then, {again.versions.get(k)} now"
         for k, v in held.versions.items()

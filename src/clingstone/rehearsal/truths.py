@@ -31,7 +31,7 @@ MOST = 2  # parameters that are moved
 BISECTIONS = 12
 AR_PART = 0.8  # of the noisy series' variance; the rest is row noise
 MOST_RHO = 0.97  # of the process below that noise
-PER_SD = 2.0  # times that a row's variance grows for each standard deviation of its fitted value
+PER_SD = 2.0  # times a row's variance per standard deviation of its fitted value: it doubles
 FURTHEST = 2.0  # standard deviations beyond which it grows no more
 
 Different = Literal["as fitted", "noisy series", "smooth field", "unequal spread"]
@@ -149,9 +149,7 @@ def _different(fits: Fits, estimate: Truth) -> Truth | None:
         what, words = "smooth field", "the field is smooth (Matérn 3/2) with the same practical range"
     else:
         what = "unequal spread"
-        words = (
-            f"the variance of a row grows {PER_SD:g}-fold with each standard deviation of its fitted value"
-        )
+        words = "a row's variance doubles with each standard deviation of its fitted value"
     return replace(estimate, name=what, words=f"{words}; otherwise as estimated", different=what)
 
 
