@@ -99,6 +99,7 @@ def refit(
 
 
 SIZES = (71, 60, 52, 44, 38, 33, 29, 26, 21, 17, 12, 9)
+EFFECTIVE = sum(SIZES) ** 2 / sum(s * s for s in SIZES)
 CLINICS = (
     "Alderford",
     "Brook",
@@ -369,7 +370,9 @@ def trial(hostile: str = "") -> Results:
         coefficients=names,
         focus=("arm",) if not hostile else (arm,),
         varies={"constant": "constant", "arm": clinic, "age": "row"},
-        group=(GroupSummary(clinic, 12, 9, 31.0, 71, 0.56, 0, "", CLINICS, SIZES),),
+        group=(
+            GroupSummary(clinic, 12, 9, 31.0, 71, 0.56, 0, "", CLINICS, SIZES, EFFECTIVE, SIZES, CLINICS),
+        ),
         arrangement="one level",
         serial=None,
         spatial=None,

@@ -10,6 +10,7 @@ from itertools import pairwise
 
 import pytest
 
+from clingstone.display import sentence
 from clingstone.writeup.methods import report_this
 from clingstone.writeup.report import CONTENTS, STATES, fragment, report
 from clingstone.writeup.sentences import sections
@@ -137,8 +138,8 @@ def test_nothing_a_reviewer_would_ask_for_is_missing(case):
         assert fit.account.df_rule in text
     for remedy, reason, needed in results.advice.refused:
         assert remedy.replace("-", " ") in text
-        assert reason in text
-        assert needed in text
+        assert sentence(reason) in text
+        assert sentence(needed) in text
     for part in sections(results):
         for s in part.sentences:
             assert " ".join(s.text.split()).replace("\u00a0", " ") in text

@@ -49,4 +49,4 @@ def test_labels_cannot_steer_the_terminal():
 
 
 def test_rows_left_out_are_counted_by_reason():
-    assert "11 rows left out (9 for missing pressure and 2 for missing age)" in case_line(fixture.trial())
+    assert "11 rows left out (pressure missing in 9 and age missing in 2)" in case_line(fixture.trial())

@@ -88,6 +88,8 @@ def _caption(curve: Curve, f: Finding) -> str:
     words = _CAPTIONS[curve.kind]
     if curve.kind == "group-means" and curve.x_name:
         return f"Mean residual of each {curve.x_name}"
+    if curve.kind == "function" and "residual" not in (curve.y_name or "residual"):
+        return f"{curve.y_name} by {curve.x_name or f.about_words}"
     if curve.kind == "function" and (curve.x_name or f.about):
         start = "Partial residuals" if "partial" in curve.y_name else "Residuals"
         return f"{start} against {curve.x_name or f.about}"

@@ -13,7 +13,7 @@ from clingstone.results import Results
 from clingstone.writeup import tables
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.plate import SMALL, TEXT, Plate, axes, blank, clip, few_ticks, say
-from clingstone.writeup.read import advised, decimals, focus_rows, level_percent, ordered, ordinary, row_of
+from clingstone.writeup.read import advised, decimals, distinct, level_percent, ordinary, row_of, served
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -41,7 +41,7 @@ def ladder(results: Results, most: int | None = RUNGS) -> Plate | None:
 
     most : rungs of each row; None draws every refit.
     """
-    names = [n for n in focus_rows(results) if _rungs(results, n)][:PANELS]
+    names = [n for n in served(results) if _rungs(results, n)][:PANELS]
     if not names:
         return None
     drawn = [(name, _rungs(results, name)[:most]) for name in names]
@@ -59,10 +59,9 @@ def _rungs(results: Results, name: str) -> list[Rung]:
     places = decimals(results, name)
     best, base = advised(results), ordinary(results)
     out = []
-    for fit in ordered(results):
+    for fit in distinct(results, name):
         row = row_of(fit, name)
-        if row is None:
-            continue
+        assert row is not None
         kind = "advised" if fit is best else "ordinary" if fit is base else "other"
         figures = f"{number(row.estimate, places)}  ({span(row.low, row.high, places)})"
         label = f"advised: {fit.name}" if kind == "advised" else fit.name
@@ -111,12 +110,12 @@ def _ladder_alt(results: Results, names: Sequence[str]) -> str:
 def _paint_ladder(drawn: Sequence[tuple[str, list[Rung]]], width: float) -> Figure:
     plan = _plan([r for _, rungs in drawn for r in rungs], width)
     head, foot = 34.0, 40.0
-    figure = blank(width, sum(head + plan.rung * len(rungs) + foot for _, rungs in drawn))
+    figure = blank(width, sum(head + sum(_heights(rungs, plan)) + foot for _, rungs in drawn))
     top = 0.0
     for name, rungs in drawn:
         say(figure, 0, top + 14, clip(name, width - 10, 14.5), fontsize=14.5, fontweight="bold")
         _panel(figure, rungs, top + head, plan)
-        top += head + plan.rung * len(rungs) + foot
+        top += head + sum(_heights(rungs, plan)) + foot
     return figure
 
 
@@ -129,7 +128,7 @@ class Plan:
     left: float
     right: float
     rung: float
-    words: int  # lines of words above a rung (phone) or beside it
+    words: int  # lines of words above a rung (phone), or at most beside it
 
 
 LETTER = 0.6 * (SMALL + 1)  # a wide guess of the mean letter, since the page's font is not known here
@@ -140,33 +139,51 @@ def _plan(rungs: Sequence[Rung], width: float) -> Plan:
     label = max(len(r.label) for r in rungs) * LETTER * 1.08
     if width < PHONE:
         one = label + figures < width
-        return Plan(width, True, 4.0, 8.0, 46.0 if one else 64.0, 1 if one else 2)
+        return Plan(width, True, 18.0, 16.0, 46.0 if one else 64.0, 1 if one else 2)
     room = width - figures - 24
     left = min(label + 12, max(0.5 * room, room - 220))
-    return Plan(width, False, left, figures + 12, 29.0 if label + 12 <= left else 40.0, 2)
+    return Plan(width, False, left, figures + 12, 29.0, 3)
+
+
+def _heights(rungs: Sequence[Rung], plan: Plan) -> list[float]:
+    """Pixels of each rung: taller where its label needs more lines."""
+    if plan.phone:
+        return [plan.rung] * len(rungs)
+    return [plan.rung + 13.0 * (len(_label_lines(r, plan.left)) - 1) for r in rungs]
+
+
+def _label_lines(r: Rung, left: float) -> list[str]:
+    """The label of a rung in lines that fit beside it; what three lines cannot hold is cut."""
+    most = max(12, int((left - 8) / (LETTER * (1.08 if r.kind == "advised" else 1))))
+    lines = wrapped(r.label, most)
+    return lines if len(lines) <= 3 else [*lines[:2], f"{lines[2][: most - 1].rstrip()}…"]
 
 
 def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
-    panel = axes(figure, plan.left, top, plan.width - plan.left - plan.right, plan.rung * len(rungs))
+    heights = _heights(rungs, plan)
+    tall = sum(heights)
+    panel = axes(figure, plan.left, top, plan.width - plan.left - plan.right, tall)
     low, high = _reach(rungs)
     panel.set_xlim(low, high)
-    panel.set_ylim(len(rungs), 0)
+    panel.set_ylim(tall, 0)  # in pixels
     panel.set_yticks([])
     few_ticks(panel)
-    lift = 1 - 16 / plan.rung if plan.phone else 0.5
-    for i, r in enumerate(rungs):
+    at = 0.0
+    for r, height in zip(rungs, heights, strict=True):
+        line = at + (height - 16 if plan.phone else height / 2)
         if low <= 0 <= high:
-            reach = (i + lift - 9 / plan.rung, i + lift + 9 / plan.rung) if plan.phone else (i, i + 1)
+            reach = (line - 9, line + 9) if plan.phone else (at, at + height)
             panel.plot([0, 0], reach, color=LIGHT.faint, linewidth=1.2, zorder=0)
-        _draw_rung(panel, r, i + lift, low, high)
-        _rung_words(figure, r, top + plan.rung * i, plan)
+        _draw_rung(panel, r, line, low, high)
+        _rung_words(figure, r, top + at, height, plan)
+        at += height
     if not low <= 0 <= high:
         side, words = (plan.left, "← zero") if low > 0 else (plan.width - plan.right, "zero →")
-        y = top + plan.rung * len(rungs) + 29
+        y = top + tall + 29
         say(figure, side, y, words, ha="left" if low > 0 else "right", fontsize=SMALL, color=LIGHT.muted)
 
 
-def _rung_words(figure: Figure, r: Rung, top: float, plan: Plan) -> None:
+def _rung_words(figure: Figure, r: Rung, top: float, height: float, plan: Plan) -> None:
     chosen = r.kind == "advised"
     style = {"fontsize": SMALL + 1, "fontweight": "bold" if chosen else "normal"}
     style["color"] = LIGHT.accent if chosen else LIGHT.ink
@@ -181,9 +198,8 @@ def _rung_words(figure: Figure, r: Rung, top: float, plan: Plan) -> None:
         x, y = (0.0, top + 27) if plan.words == 2 else (plan.width, top + 9)
         say(figure, x, y, r.figures, ha="left" if plan.words == 2 else "right", **style)
         return
-    most = max(12, int((plan.left - 8) / (LETTER * (1.08 if chosen else 1))))
-    lines = wrapped(r.label, most)[:2]
-    middle = top + plan.rung / 2
+    lines = _label_lines(r, plan.left)
+    middle = top + height / 2
     for k, line in enumerate(lines):
         say(figure, 0, middle + 14 * (k - (len(lines) - 1) / 2), line, **style)
     say(figure, plan.width, middle, r.figures, ha="right", **style)
@@ -219,7 +235,7 @@ def _draw_rung(panel: Axes, r: Rung, line: float, low: float, high: float) -> No
 
 def share_bar(results: Results) -> Plate | None:
     """What is left over, split by structure; each share's interval as a whisker below the bar."""
-    parts = [s for s in results.ledger.shares if math.isfinite(s.share)]
+    parts = [s for s in tables.shares_told(results) if math.isfinite(s.share)]
     if not parts:
         return None
     told = ", ".join(
@@ -229,7 +245,7 @@ def share_bar(results: Results) -> Plate | None:
     )
     return Plate(
         "shares",
-        "What the model leaves over, by structure",
+        tables.shares_caption(results),
         f"Shares of the residual variance: {told}.",
         tables.shares(results),
         lambda width: _paint_shares(parts, width),

@@ -5,21 +5,17 @@ from __future__ import annotations
 import math
 import re
 
-from clingstone.display import clean, listed, number, span
+from clingstone.display import clean, count, listed, number, span
 from clingstone.ledger.ledger import Parameter
+from clingstone.ledger.sizes import AT_ZERO
 from clingstone.results import Results
 from clingstone.writeup.bibliography import references_of
 from clingstone.writeup.items import ITEMS
-from clingstone.writeup.read import (
-    advised,
-    decimals,
-    focus_rows,
-    label_of,
-    level_percent,
-    ordinary,
-    row_of,
-)
-from clingstone.writeup.sentences import estimate_words, sections
+from clingstone.writeup.naming import subject
+from clingstone.writeup.outcome import estimate_words
+from clingstone.writeup.plate import many
+from clingstone.writeup.read import advised, decimals, level_percent, ordinary, row_of, served
+from clingstone.writeup.sentences import sections
 from clingstone.writeup.tables import parameter_decimals
 
 SPOKEN = 3  # focus rows named in the two sentences
@@ -76,54 +72,63 @@ READ_FIRST = ("intraclass correlation", "ρ", "practical range")
 
 
 def _depends(results: Results) -> str:
-    """The known parameter of every structure in the model, with its interval; or what was not detected."""
-    kept = [p for p in results.ledger.parameters if p.name in READ_FIRST and p.key in results.ledger.model]
-    if kept and results.advice.structures:
-        return f"Rows were not independent: {'; '.join(_parameter(results, p) for p in kept)}."
+    """The known parameter of every structure to be covered, with its interval; or what was not detected."""
+    ledger, repair = results.ledger, results.advice.repair
+    mended = repair if results.advice.state == "mean first" else None
+    standing = mended.standing if mended else ledger.standing
+    parameters = mended.parameters if mended else ledger.parameters
+    shown = {s.key for s in standing if s.verdict == "present"}
+    kept = [p for p in parameters if p.name in READ_FIRST and p.key in shown and p.note != AT_ZERO]
+    start = f"With a {mended.what} in the model, rows" if mended else "Rows"
     if results.advice.structures:
-        labels = [s.label for s in results.ledger.standing if s.verdict == "present"]
-        return f"Rows were not independent ({listed(labels)})." if labels else "Rows were not independent."
-    named = [s.label for s in results.ledger.standing]
-    looked = f" between rows ({listed(named)})" if named else " between rows"
-    shown = [d.sentence.rstrip(" .") for d in results.ledger.detectable]
-    if shown:
-        return f"Dependence{looked} was not detected; {'; '.join(s[0].lower() + s[1:] for s in shown)}."
-    return f"Dependence{looked} was not detected."
+        told = [f"{subject(results, p.key)} ({_size(results, p)})" for p in kept]
+        told = told or [subject(results, s.key) for s in standing if s.verdict == "present"]
+        between = f": dependence was found between {listed(told)}" if told else ""
+        return f"{start} were not independent{between}."
+    looked = listed(subject(results, s.key) for s in standing)
+    text = f"Dependence between {looked} was not detected" if looked else "Dependence was not looked for"
+    could = [d.sentence.rstrip(" .") for d in ledger.detectable]
+    return f"{text}; {'; '.join(s[0].lower() + s[1:] for s in could)}." if could else f"{text}."
 
 
-def _parameter(results: Results, p: Parameter) -> str:
+def _size(results: Results, p: Parameter) -> str:
+    """ "intraclass correlation 0.19, 95 % interval 0.08 to 0.42"."""
     places = parameter_decimals(p)
-    unit = f" {p.unit}" if p.unit else ""
-    bounds = (
-        f" ({level_percent(results)} interval {span(p.low, p.high, places)})"
-        if math.isfinite(p.low + p.high)
-        else ""
-    )
-    return f"{label_of(results, p.key)}, {p.name} {number(p.estimate, places)}{unit}{bounds}"
+    unit = f" {p.unit if p.name == 'ρ' else many(p.unit)}".rstrip()
+    text = f"{p.name} {number(p.estimate, places)}{unit}"
+    if not math.isfinite(p.low + p.high):
+        return text
+    return f"{text}, {level_percent(results)} interval {span(p.low, p.high, places)}"
 
 
 def _estimates(results: Results) -> str:
-    best, base = advised(results), ordinary(results)
-    names = focus_rows(results)[:SPOKEN]
+    best = advised(results)
     if best is None:
         return f"No correction is reported: {results.advice.headline}"
-    first = results.advice.state == "mean first"
-    told = [f"{name} {words}" for name in names if (words := estimate_words(results, best, name))]
+    names = served(results)
+    words = [(n, estimate_words(results, best, n)) for n in names[:SPOKEN]]
+    told = [f"{name} is estimated at {said}" for name, said in words if said]
     if not told:
         return f"Estimates come from: {best.name}."
-    start = (
-        "The mean of the model seems incomplete, so these are provisional: estimates"
-        if first
-        else "Estimates"
-    )
-    rule = f"degrees of freedom: {best.account.df_rule}"
-    name = "" if best.name in best.account.estimator else f"{best.name}; "
-    text = f"{start} from {best.account.estimator} ({name}{rule}): {'; '.join(told)}"
-    if base is not None and base is not best:
-        plain = [
-            f"{span(row.low, row.high, decimals(results, name))} for {name}"
-            for name in names
-            if (row := row_of(base, name)) is not None
-        ]
-        text += f"; the ordinary fit, which takes rows as independent, would give {listed(plain)}"
-    return text + "."
+    account = best.account
+    name = "" if best.name == "ordinary" or best.name in account.estimator else f"{best.name}; "
+    text = f"By {account.estimator} ({name}degrees of freedom: {account.df_rule}), {'; '.join(told)}"
+    if len(names) > SPOKEN:
+        text += f"; {count(len(names) - SPOKEN, 'further estimate')} in the table of intervals"
+    text += _beside(results, names[:SPOKEN])
+    if results.advice.state == "mean first":
+        text = f"The mean of the model seems incomplete, so this is provisional: {text[0].lower()}{text[1:]}"
+    return f"{text}."
+
+
+def _beside(results: Results, names: tuple[str, ...]) -> str:
+    """What the ordinary intervals would have been."""
+    best, base = advised(results), ordinary(results)
+    found = [(n, row) for n in names if (row := row_of(base, n)) is not None]
+    if base is best or not found:
+        return ""
+    several = len(found) > 1
+    ends = [
+        span(row.low, row.high, decimals(results, n)) + (f" for {n}" if several else "") for n, row in found
+    ]
+    return f"; an ordinary fit, which takes rows as independent, would give {listed(ends)}"

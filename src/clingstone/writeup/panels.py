@@ -13,6 +13,7 @@ from clingstone.display import Cell, Column, Table, count, number
 from clingstone.evidence.finding import Curve
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
+from clingstone.writeup.naming import noun
 from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say, with_unit
 
 if TYPE_CHECKING:
@@ -93,7 +94,7 @@ def tree(results: Results) -> Plate | None:
         for k, size in enumerate(g.tree)
     ]
     columns = (Column("level", "level"), Column("group", "group"), Column("rows", "rows", "right"))
-    told = [f"{count(g.count, g.key.split('/')[-1])} of {g.smallest} to {g.largest} rows" for g in levels]
+    told = [f"{count(g.count, noun(g))} of {g.smallest} to {g.largest} rows" for g in levels]
     nested = results.case.arrangement == "nested" and len(levels) > 1
     note = " Each stands under the group that it lies in." if nested else ""
     return Plate(
@@ -101,22 +102,25 @@ def tree(results: Results) -> Plate | None:
         "The rows by group" + (", level under level" if nested else ""),
         f"{count(results.case.n, 'row')}: {'; '.join(told)}.{note}",
         Table.of("Groups by level", columns, rows),
-        lambda width: _paint_tree(results.case.n, levels, width),
+        lambda width: _paint_tree(levels, nested, width),
     )
 
 
-def _paint_tree(rows: int, levels: Sequence[GroupSummary], width: float) -> Figure:
-    figure = blank(width, 30 + 52 * len(levels))
-    say(figure, 0, 12, count(rows, "row"), fontsize=SMALL, color=LIGHT.muted)
+def _paint_tree(levels: Sequence[GroupSummary], nested: bool, width: float) -> Figure:
+    figure = blank(width, 6 + 52 * len(levels))
+    above: Sequence[int] = ()
     for k, level in enumerate(levels):
-        top = 26 + 52 * k
-        words = f"{count(level.count, level.key.split('/')[-1])}, widths by their rows"
+        top = 52 * k
+        words = f"{count(level.count, noun(level))}, widths by their rows"
         say(figure, 0, top + 8, clip(words, width, SMALL), fontsize=SMALL, color=LIGHT.muted)
         panel = axes(figure, 0, top + 18, width, 24)
         panel.axis("off")
         panel.set_xlim(0, sum(level.tree))
         panel.set_ylim(0, 1)
         _strip(figure, panel, level, top + 30, width)
+        if above and nested:
+            panel.vlines(np.cumsum(above)[:-1], 0, 1, color=LIGHT.ink, linewidth=1.6)
+        above = level.tree
     return figure
 
 

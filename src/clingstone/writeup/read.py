@@ -31,16 +31,48 @@ def ordered(results: Results) -> tuple[Refit, ...]:
     return (*lead, *(r for r in results.refits if id(r) not in chosen))
 
 
+ALONE = " [alone]"  # marks the row of a term that was fitted alone with the constant
+
+
+def distinct(results: Results, name: str) -> tuple[Refit, ...]:
+    """Refits with numbers for a row, as a reader meets them, each interval once.
+
+    Two remedies can be one and the same fit (everything together, where there is one structure); the
+    first of them stands for both. The ordinary fit always stands for itself.
+    """
+    out: list[tuple[Refit, Interval]] = []
+    for fit in ordered(results):
+        row = row_of(fit, name)
+        if row is None:
+            continue
+        if fit is ordinary(results) or not any(_same(row, other) for _, other in out):
+            out.append((fit, row))
+    return tuple(fit for fit, _ in out)
+
+
+def _same(a: Interval, b: Interval) -> bool:
+    close = 1e-6 * max(a.se, b.se)
+    pairs = ((a.estimate, b.estimate), (a.low, b.low), (a.high, b.high))
+    return all(abs(x - y) <= close for x, y in pairs)
+
+
+def alone(results: Results, name: str) -> tuple[Refit, Interval] | None:
+    """The row of a coefficient whose term was fitted alone with the constant, where that was asked for."""
+    found = ((fit, row_of(fit, name + ALONE)) for fit in results.refits)
+    return next(((fit, row) for fit, row in found if row is not None), None)
+
+
 def term_of(coefficient: str) -> str:
-    """ "dose × arm: treated" belongs to the term "dose × arm"."""
-    return " × ".join(part.split(": ")[0] for part in coefficient.split(" × "))
+    """ "dose × arm: treated" belongs to the term "dose × arm", "bs(x), part 2" to "bs(x)"."""
+    parts = (part.split(": ")[0] for part in coefficient.split(" × "))
+    return " × ".join(part.rpartition(", part ")[0] or part for part in parts)
 
 
 def names_of(results: Results) -> tuple[str, ...]:
     """Every reported row: coefficients, contrasts, means, and parts such as "x [within]"."""
     seen: dict[str, None] = {}
     for fit in results.refits:
-        seen.update(dict.fromkeys(row.term for row in fit.intervals))
+        seen.update(dict.fromkeys(row.term for row in fit.intervals if not row.term.endswith(ALONE)))
     return tuple(seen)
 
 
@@ -53,6 +85,14 @@ def focus_rows(results: Results) -> tuple[str, ...]:
         exact = [n for n in names if n == term or n.startswith(f"{term} [")]
         out.update(dict.fromkeys(exact or [n for n in names if term_of(n) == term]))
     return tuple(out)
+
+
+def served(results: Results) -> tuple[str, ...]:
+    """Focus rows that the advised or the ordinary refit has; parts such as "x [within]" stand in tables."""
+    lead = (advised(results), ordinary(results))
+    names = focus_rows(results)
+    chosen = tuple(n for n in names if any(row_of(fit, n) is not None for fit in lead))
+    return chosen or names
 
 
 def row_of(fit: Refit | None, name: str) -> Interval | None:
@@ -82,16 +122,6 @@ def structure_of(results: Results, key: str) -> str | None:
             return share.structure
     family = key.split(":")[0]
     return family if family in ("group", "serial", "spatial") else None
-
-
-def label_of(results: Results, key: str) -> str:
-    """How a reader knows a component: the label that the ledger gave it."""
-    labels = {s.key: s.label for s in results.ledger.shares} | {
-        s.key: s.label for s in results.ledger.standing
-    }
-    if key in labels:
-        return labels[key]
-    return "row noise" if key == "row" else key.split(":", 1)[-1]
 
 
 def level_percent(results: Results) -> str:

@@ -9,23 +9,26 @@ from functools import cache
 from importlib.resources import files
 from typing import TYPE_CHECKING, Any
 
-from clingstone.display import Table, clean, significant
+from clingstone.display import Table, clean, count, sentence, significant
 from clingstone.evidence.finding import Finding
 from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
-from clingstone.writeup import curves, figures, tables
+from clingstone.writeup import curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import cite, references_of, with_source
 from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
 from clingstone.writeup.methods import checklist, report_this
+from clingstone.writeup.naming import label_of, pointed_at, with_rows
+from clingstone.writeup.outcome import USUAL, alternatives, tipping_words
+from clingstone.writeup.panels import tree
 from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
-from clingstone.writeup.read import advised, focus_rows, label_of, ordered
-from clingstone.writeup.sentences import USUAL, dependence, design, model, sections
+from clingstone.writeup.read import advised, focus_rows, ordered, served
+from clingstone.writeup.sentences import design, model, sections, standing_words
 from clingstone.writeup.terminal import case_line
 
 if TYPE_CHECKING:
     from jinja2 import Environment
 
-LONG = 190  # characters of a headline beyond which it is set smaller
+LONG = 170  # characters of a headline beyond which it is cut, and one sentence is set smaller
 
 STATES = {
     "supported": "These data support a correction.",
@@ -40,6 +43,7 @@ CONTENTS = (
     ("evidence", "What the residuals say"),
     ("ledger", "How strong, and what it does"),
     ("intervals", "Every interval"),
+    ("rehearsal", "Rehearsed on this design"),
     ("advice", "Why this advice"),
     ("explain", "How each interval was reached"),
     ("methods", "Methods text"),
@@ -63,12 +67,16 @@ def report(results: Results) -> str:
         "results": results,
         "css": _raw(_css()),
         "js": _raw(_asset("report.js")),
-        "contents": CONTENTS,
+        "contents": [c for c in CONTENTS if c[0] != "rehearsal" or results.rehearsal is not None],
         "methods": sections(results),
         "references": results.references or references_of(results),
     }
     view |= _answer(results) | _case(results) | _ledger(results) | _intervals(results) | _advice(results)
     view |= {"evidence": _evidence(results), "again": [_table(t) for t in _again(results)]}
+    view |= _rehearsal(results)
+    view["conventions"] = [
+        _table(t) for n in focus_rows(results)[: figures.PANELS] if (t := tables.conventions(results, n))
+    ]
     rows = [(item, asks, where) for item, asks, where in checklist(results)]
     view["checklist"] = _table(_plain("Reporting items", ("item", "asks for", "answered under"), rows))
     return _environment().get_template("report.html.j2").render(view)
@@ -103,8 +111,8 @@ def _environment() -> Environment:
 
 
 def _tied(value: Any) -> Any:
-    """Numbers keep their unit: a plain text never breaks between a figure and its per cent sign."""
-    return re.sub(r"(\d) %", "\\1\u00a0%", value) if type(value) is str else value
+    """Plain text without control characters, and never broken between a figure and its per cent sign."""
+    return re.sub(r"(\d) %", "\\1\u00a0%", clean(value)) if type(value) is str else value
 
 
 def _asset(name: str) -> str:
@@ -139,6 +147,7 @@ def _plate(plate: Plate) -> Mapping[str, Any]:
         "wide": _raw(by_role(plate.svg(WIDE))),
         "narrow": _raw(by_role(plate.svg(NARROW))),
         "table": _table(shown),
+        "note": clean(sentence(plate.note)),
     }
 
 
@@ -148,16 +157,26 @@ def _plain(caption: str, heads: Iterable[str], rows: Iterable[Iterable[str]]) ->
     return Table.of(caption, [Column(h, h) for h in heads], rows)
 
 
+def headline(words: str) -> tuple[str, str]:
+    """A headline of one breath, and what follows it: a long one is cut behind its first sentence."""
+    if len(words) <= LONG:
+        return words, ""
+    cut = next((m.end() for m in re.finditer(r"[.?] (?=[A-Z])", words) if m.start() > 20), len(words))
+    return words[:cut].strip(), words[cut:].strip()
+
+
 def _answer(results: Results) -> dict[str, Any]:
     ladder, shares = figures.ladder(results), figures.share_bar(results)
-    hidden = len(focus_rows(results)) - figures.PANELS
+    parts = headline(results.advice.headline)
+    hidden = len(focus_rows(results)) - len(served(results)[: figures.PANELS])
     return {
         "case_line": clean(case_line(results)),
         "state": STATES[results.advice.state],
-        "long": len(results.advice.headline) > LONG,
+        "headline": parts,
+        "long": len(parts[0]) > LONG,
         "ladder": _plate(ladder) if ladder else None,
         "shares": _plate(shares) if shares else None,
-        "more_focus": f"{hidden} more focus rows stand under “Every interval”." if hidden > 0 else "",
+        "more_focus": f"{count(hidden, 'more row')} in focus under “Every interval”." if hidden > 0 else "",
         "report_this": report_this(results),
         "how_sure": list(how_sure(results)),
     }
@@ -165,12 +184,14 @@ def _answer(results: Results) -> dict[str, Any]:
 
 def how_sure(results: Results) -> Iterable[str]:
     """What supports the advice, and what is not settled."""
+    yield from rehearsed.sure(results)
     if results.rehearsal is None:
         yield (
             "Not rehearsed on this design: the advice rests on published rules, not on a coverage measured "
             "for these data."
         )
-    for name in focus_rows(results)[: figures.PANELS]:
+    mended = results.advice.state == "mean first"  # factors are those of the model as it stands
+    for name in () if mended else served(results)[: figures.PANELS]:
         factor = results.ledger.factor(name)
         if factor is not None and math.isfinite(factor.low + factor.high):
             low, high = sorted((factor.low, factor.high))
@@ -182,15 +203,20 @@ def how_sure(results: Results) -> Iterable[str]:
             )
     if results.advice.mean_in_doubt:
         yield "Whether the mean or the dependence makes the pattern is not settled."
-    yield from (f"Not settled: {reason.sentence}" for reason in results.advice.cautions)
+    for reason in results.advice.cautions:
+        yield f"Not settled: {with_rows(results, reason.sentence, reason.rule)}"
     if not results.advice.structures:
         yield from (d.sentence for d in results.ledger.detectable)
 
 
 def _case(results: Results) -> dict[str, Any]:
     words = [" ".join(s.text for s in part(results) if not s.blank) for part in (design, model)]
-    sizes = tables.groups(results)
-    return {"case_words": words, "case_tables": [_table(sizes)] if sizes else []}
+    sizes, strips = tables.groups(results), tree(results)
+    return {
+        "case_words": words,
+        "case_tables": [_table(sizes)] if sizes else [],
+        "tree": _plate(strips) if strips else None,
+    }
 
 
 def _evidence(results: Results) -> list[dict[str, Any]]:
@@ -208,8 +234,8 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
                 "title": title,
                 "role": m.role if own else "",
                 "glyph": m.glyph if own else "•",
-                "findings": [_finding(f) for f in first],
-                "others": [_finding(f) for f in found if f not in first],
+                "findings": [_finding(results, f) for f in first],
+                "others": [_finding(results, f) for f in found if f not in first],
                 "plates": [_plate(p) for p in plates.get(structure, ()) if not p.quiet],
                 "quiet": [_plate(p) for p in plates.get(structure, ()) if p.quiet],
                 "table": _table(tables.evidence(results, structure)),
@@ -224,12 +250,14 @@ def _leading(found: list[Finding]) -> list[Finding]:
     return sorted((f for f in found if (f.test, f.about) in seen), key=lambda f: not f.primary)
 
 
-def _finding(f: Finding) -> dict[str, Any]:
+def _finding(results: Results, f: Finding) -> dict[str, Any]:
+    where = pointed_at(results, f) if f.verdict in ("present", "unclear") else ""
     return {
         "words": f.sentence,
+        "where": where[:1].upper() + where[1:],
         "verdict": f.verdict,
         "exploratory": not f.primary and f.verdict != "not applicable",
-        "caveats": [f"{c.rstrip(' .')}." for c in f.caveats],
+        "caveats": [sentence(c) for c in f.caveats],
     }
 
 
@@ -240,14 +268,24 @@ def _ledger(results: Results) -> dict[str, Any]:
         shown.append(tables.parameters(results))
     if ledger.inflation:
         shown.append(tables.inflation(results))
-    told = [s.text for s in dependence(results)]
-    count = len(ledger.standing)
-    refused = [f"{label_of(results, key)} was not estimated: {reason}" for key, reason in ledger.refused]
+    told = [standing_words(results, s) for s in ledger.standing]
+    refused = [
+        sentence(f"{label_of(results, key)} was not estimated: {reason}") for key, reason in ledger.refused
+    ]
     return {
-        "standing": told[:count] + refused,
+        "standing": told + refused,
         "ledger_tables": [_table(t) for t in shown],
-        "turning": [t.sentence for t in ledger.tipping] + [d.sentence for d in ledger.detectable],
+        "turning": [*tipping_words(results), *(d.sentence for d in ledger.detectable)],
         "history": list(ledger.history),
+    }
+
+
+def _rehearsal(results: Results) -> dict[str, Any]:
+    found, shown = rehearsed.plate(results), rehearsed.table(results)
+    return {
+        "rehearsal_plate": _plate(found) if found else None,
+        "rehearsal_table": _table(shown) if shown else None,
+        "rehearsal_words": list(rehearsed.methods_words(results)),
     }
 
 
@@ -270,31 +308,22 @@ def _advice(results: Results) -> dict[str, Any]:
     best = advised(results)
     return {
         "because": [with_source(r.sentence, r.source) for r in advice.because],
-        "alternatives": [_alternative(results, c.remedy, c.at, c.because) for c in advice.alternatives],
+        "alternatives": list(alternatives(results)),
         "refused": _table(refused) if refused else None,
         "accounts": [
             {"name": fit.name, "advised": fit is best, "rows": list(_account(fit))}
             for fit in ordered(results)
         ],
-        "cautions": [with_source(r.sentence, r.source) for r in advice.cautions] + list(USUAL),
+        "cautions": [
+            *(with_source(with_rows(results, r.sentence, r.rule), r.source) for r in advice.cautions),
+            *USUAL,
+        ],
     }
-
-
-def _alternative(results: Results, remedy: str, at: str, because: str) -> str:
-    named = next(
-        (f.name for f in results.refits if f.remedy == remedy and f.at == at), remedy.replace("-", " ")
-    )
-    return f"{named}: {because}" if because else named
 
 
 def _account(fit: Refit) -> Iterable[tuple[str, str]]:
     a = fit.account
-    yield "estimator", a.estimator
-    yield "covariance", a.covariance
-    yield "small-sample factor", a.factor
-    yield "degrees of freedom", a.df_rule
-    yield "reference distribution", a.reference
-    yield from a.items
+    yield from a.pairs()
     if fit.boundary:
         yield "boundary", "a variance was estimated at its bound of zero"
     if not fit.converged:

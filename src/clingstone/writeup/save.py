@@ -13,9 +13,10 @@ from pathlib import Path
 from clingstone.needs import InputError
 from clingstone.results import Results, to_json
 from clingstone.run import Progress
-from clingstone.writeup import curves, figures, tables
+from clingstone.writeup import curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import bibtex
 from clingstone.writeup.methods import methods_text
+from clingstone.writeup.panels import tree
 from clingstone.writeup.plate import Plate
 from clingstone.writeup.report import report
 
@@ -57,7 +58,13 @@ def save(
 
 def plates(results: Results) -> tuple[Plate, ...]:
     """Every figure of an examination: the two of the first screen, then those of the evidence."""
-    drawn = (figures.ladder(results), figures.share_bar(results), figures.ladder(results, None))
+    drawn = (
+        figures.ladder(results),
+        figures.share_bar(results),
+        figures.ladder(results, None),
+        rehearsed.plate(results),
+        tree(results),
+    )
     lead = [p for p in drawn if p is not None]
     return (*lead, *curves.plates(results))
 

@@ -1,7 +1,7 @@
-"""The sentences of the methods text, each with the reporting items that it answers.
+"""The methods text: data, model and dependence, each sentence with the reporting items that it answers.
 
 Every number comes from Results. What the data cannot know is left as a visible blank in square
-brackets, never invented. The items stand in ``items.py``.
+brackets, never invented. The items stand in ``items.py``, the rest of the text in ``outcome.py``.
 """
 
 from __future__ import annotations
@@ -11,33 +11,30 @@ from collections.abc import Iterable
 
 from clingstone.case import GroupSummary
 from clingstone.display import (
+    amount,
+    bounds,
     count,
-    degrees,
     listed,
     number,
     p_value,
     percent,
-    percent_span,
-    plural_of,
+    percent_bounds,
+    sentence,
     significant,
     span,
 )
-from clingstone.remedies.remedy import Refit
+from clingstone.ledger.ledger import Parameter, Standing
 from clingstone.results import Results
-from clingstone.writeup.bibliography import with_source
 from clingstone.writeup.items import ITEMS, Section, Sentence
-from clingstone.writeup.read import (
-    advised,
-    as_ratio,
-    decimals,
-    focus_rows,
-    label_of,
-    level_percent,
-    ordered,
-    ordinary,
-    row_of,
-)
-from clingstone.writeup.tables import parameter_decimals, test_words
+from clingstone.writeup.naming import groups_of, label_of, lost, noun, noun_at, subject
+from clingstone.writeup.outcome import cautions, checks, estimates, sensitivity, software
+from clingstone.writeup.plate import many
+from clingstone.writeup.read import level_percent
+from clingstone.writeup.tables import parameter_decimals
+
+TERMS = 8  # terms of a model named one by one
+# What a standing that is plainly present gives as its reason; the p-values beside it say as much.
+PLAIN = ("Its own test shows it.", "It shows by its own test and still when the other structures are fitted.")
 
 
 def sections(results: Results) -> tuple[Section, ...]:
@@ -65,29 +62,22 @@ def sections(results: Results) -> tuple[Section, ...]:
     return tuple(p for p in parts if p.sentences)
 
 
-def noun(g: GroupSummary) -> str:
-    return g.key.split("/")[-1]
+# ---- design and data -------------------------------------------------------------------------
 
 
 def design(results: Results) -> Iterable[Sentence]:
     case = results.case
-    yield Sentence(
-        f"The analysis rests on {_part(case.n, case.rows_read)} read from {case.name}.",
-        ("M2",),
-    )
+    yield Sentence(f"The analysis used {_part(case.n, case.rows_read)} of {case.name}.", ("M2",))
     if case.dropped:
-        reasons = listed(f"{number(n, 0)} for {why}" for why, n in case.dropped.items())
-        yield Sentence(f"Rows left out: {reasons}.", ("M4",))
+        reasons = listed(f"{count(n, 'row')} ({lost(why)})" for why, n in case.dropped.items())
+        yield Sentence(f"Left out were {reasons}.", ("M4",))
     else:
         yield Sentence("No row was left out.", ("M4",))
-    for g in case.group:
-        yield Sentence(_group_words(g), ("M2", "M3"))
+    if case.group:
+        yield Sentence(_groups_words(results), ("M2", "M3"))
+        yield from _effective(results)
     yield from _order_and_place(results)
     yield from _assignment(results)
-
-
-def _units(step: float, unit: str) -> str:
-    return unit if step == 1 or not unit.isalpha() else plural_of(unit)
 
 
 def _part(kept: int, read: int) -> str:
@@ -100,58 +90,85 @@ def _sizes(smallest: int, largest: int) -> str:
     return f"{number(smallest, 0)} to {number(largest, 0)} rows"
 
 
+def _groups_words(results: Results) -> str:
+    """ "The rows belong to 10 flocks of 28 to 67 rows (…) and, within them, to 85 lambs of …"."""
+    join = {"nested": "within them", "crossed": "crossed with them"}.get(results.case.arrangement, "")
+    parts = [_group_words(g) for g in results.case.group]
+    text = f"The rows belong to {parts[0]}"
+    for part in parts[1:]:
+        text += f" and, {join}, to {part}" if join else f" and to {part}"
+    return f"{text}."
+
+
 def _group_words(g: GroupSummary) -> str:
-    inside = f" within {g.parent}" if g.parent else ""
-    text = (
-        f"Rows are grouped by {g.key}{inside}: {count(g.count, noun(g))} of {_sizes(g.smallest, g.largest)} "
-        f"(median {g.median:g}, coefficient of variation of size {number(g.cv, 2)})"
-    )
-    return text + (f", {g.singletons} of them with a single row." if g.singletons else ".")
+    name = groups_of(g) if g.count != 1 else noun(g)
+    text = f"{number(g.count, 0)} {name} of {_sizes(g.smallest, g.largest)}"
+    if g.smallest < g.largest:
+        text += f" (median {amount(g.median)}; coefficient of variation of size {number(g.cv, 2)}"
+        text += f"; {count(g.singletons, 'single row')})" if g.singletons else ")"
+    return text
+
+
+def _effective(results: Results) -> Iterable[Sentence]:
+    told = [g for g in results.case.group if math.isfinite(g.effective) and g.effective < 0.95 * g.count]
+    if told:
+        words = listed(f"the {g.count} {groups_of(g)} count as {significant(g.effective)}" for g in told)
+        yield Sentence(f"Being unequal in size, {words} of equal size.", ("M14",))
+    yield Sentence("[how much the result leans on single groups: to be filled in]", ("M14",), True)
 
 
 def _order_and_place(results: Results) -> Iterable[Sentence]:
-    s, p = results.case.serial, results.case.spatial
+    case = results.case
+    s, p = case.serial, case.spatial
     if s is not None:
-        step = f", one step being {s.step:g} {_units(s.step, s.unit)}".rstrip() if s.step else ""
-        gaps = f"; {count(s.gaps, 'step')} missing inside series" if s.gaps else ""
-        ties = f"; {count(s.ties, 'row')} at a time already taken" if s.ties else ""
-        yield Sentence(
-            f"Order in time is given by {s.time} within {s.series}: {count(s.count, 'series', 'series')} of "
-            f"{_sizes(s.shortest, s.longest)} from {s.first} to {s.last}, spacing {s.spacing}"
-            f"{step}{gaps}{ties}.",
-            ("M3",),
+        keys = {g.key: noun(g) for g in case.group}
+        within = f"Within each {keys[s.series]}, the rows" if s.series in keys else "The rows"
+        found = (
+            f"{within} are ordered by {s.time}: {count(s.count, 'series', 'series')} of "
+            f"{_sizes(s.shortest, s.longest)} from {s.first} to {s.last}, {_spacing(results)}"
         )
+        ties = f"; {count(s.ties, 'row')} share their time with another row" if s.ties else ""
+        yield Sentence(f"{found}{ties}.", ("M3",))
     if p is not None:
-        text = (
-            f"Rows lie at {count(p.sites, 'distinct site')} ({significant(p.rows_per_site)} rows per site on "
-            f"average), at most {significant(p.extent, 3)} {p.unit}".rstrip()
-            + " apart"
-        )
+        far = f"{significant(p.extent, 3)} {many(p.unit)}".rstrip()
+        text = f"The rows lie at {count(p.sites, 'site')}"
+        if p.rows_per_site > 1:
+            text += f", {significant(p.rows_per_site)} rows per site on average,"
+        text += f" at most {far} apart"
         if p.neighbours:
-            text += f"; neighbours: {listed(p.neighbours)}"
+            text += f"; as neighbours of a site were taken: {listed(p.neighbours, last='or')}"
         if p.islands:
-            text += f"; {count(p.islands, 'site')} without a neighbour"
-        yield Sentence(text + ".", ("M3", "M7") if p.neighbours else ("M3",))
+            text += f"; {count(p.islands, 'site')} had no neighbour"
+        yield Sentence(f"{text}.", ("M3", "M7") if p.neighbours else ("M3",))
+
+
+def _spacing(results: Results) -> str:
+    s = results.case.serial
+    assert s is not None
+    if s.spacing == "irregular" or not s.step:
+        return "at irregular times"
+    step = many(s.unit) if s.unit and s.step != 1 else s.unit
+    steps = f"in steps of {amount(s.step)} {step}".rstrip()
+    return f"{steps}, {count(s.gaps, 'step')} missing" if s.gaps else f"{steps} without gaps"
 
 
 def _assignment(results: Results) -> Iterable[Sentence]:
     case = results.case
-    levels = {g.key: noun(g) for g in case.group}
     for term, level in case.assigned.items():
-        unit = levels.get(level, level)
+        unit = noun_at(results, level)
         yield Sentence(
-            f"{term} was assigned by {unit}, so the {unit} is the unit of analysis for {term}.",
+            f"Assignment to {term} was by {unit}, so the {unit} is the unit of analysis for {term}.",
             ("M1", "M2", "M16"),
         )
     if case.sampled:
-        yield Sentence(f"The sample was drawn by {case.sampled}.", ("M1",))
+        yield Sentence(f"The sample was drawn by {noun_at(results, case.sampled)}.", ("M1",))
     if not case.assigned and not case.sampled:
         yield Sentence(
             "[what was sampled and what was assigned, and at which level: to be filled in]",
             ("M1", "M16"),
             True,
         )
-    things = [f"{noun(g)} groups" if noun(g).endswith("s") else count(2, noun(g))[2:] for g in case.group]
+    things = [groups_of(g) for g in case.group]
     things += ["sites"] if case.spatial else []
     things += ["times"] if case.serial else []
     if things:
@@ -159,229 +176,168 @@ def _assignment(results: Results) -> Iterable[Sentence]:
         yield Sentence(f"[to which other {listed(things)} this applies: to be filled in]", ("M18",), True)
 
 
+# ---- model -----------------------------------------------------------------------------------
+
+
 def model(results: Results) -> Iterable[Sentence]:
     case = results.case
-    if case.formula:
+    if not case.formula:
         yield Sentence(
-            f"{case.response} was modelled by linear regression, {case.formula}, with "
-            f"{count(case.p, 'coefficient')}.",
+            f"Only residuals ({case.response}) were given; the model that left them is not known here.",
             ("M5",),
         )
-    else:
-        yield Sentence("Only residuals were given; the model that left them is not known here.", ("M5",))
-    varies = {t: level for t, level in case.varies.items() if level not in ("constant", "all rows")}
-    if varies:
-        words = listed(f"{t} between {_between(level)}" for t, level in varies.items())
-        yield Sentence(f"Where each term varies: {words}.", ("M5",))
+        yield Sentence("[the model that left the residuals: to be filled in]", ("M5",), True)
+        return
+    terms = [t for t in case.terms if t != "constant"]
+    on = listed(terms) if len(terms) <= TERMS else f"{len(terms)} terms"
+    what = f"a linear regression of {case.response} on {on}" if terms else f"the mean of {case.response}"
+    yield Sentence(
+        f"The model is {what} ({case.formula}), with {count(case.p, 'coefficient')}.",
+        ("M5",),
+    )
+    words = _varies(results, terms)
+    if words:
+        yield Sentence(words, ("M5",))
     if case.transformed:
         yield Sentence(
-            f"The response is a {case.transformed}, so shares and correlations below are on that scale.",
+            f"The response is a logarithm ({case.transformed}), so shares and correlations are on that scale "
+            "and effects are given as ratios too.",
             ("M5",),
         )
 
 
-def _between(level: str) -> str:
-    return "rows" if level in ("row", "rows", "") else f"values of {level}"
+def _varies(results: Results, terms: list[str]) -> str:
+    """ "Of its terms, arm varies only between clinics; baseline and age vary from row to row."."""
+    nouns = {g.key: groups_of(g) for g in results.case.group}
+    levels: dict[str, list[str]] = {}
+    for term in terms:
+        levels.setdefault(results.case.varies.get(term, ""), []).append(term)
+    parts = []
+    for level, named in levels.items():
+        if level in ("", "constant", "all rows"):
+            continue
+        verb = "varies" if len(named) == 1 else "vary"
+        who = listed(named) if len(named) <= TERMS else f"{len(named)} terms"
+        where = "from row to row" if level in ("row", "rows") else f"only between {nouns.get(level, level)}"
+        parts.append(f"{who} {verb} {where}")
+    return f"Of its terms, {'; '.join(parts)}." if parts else ""
+
+
+# ---- dependence ------------------------------------------------------------------------------
 
 
 def dependence(results: Results) -> Iterable[Sentence]:
     ledger = results.ledger
     for s in ledger.standing:
-        given = (
-            f"; given {listed(s.given)}, {p_value(s.p_given)}" if s.given and math.isfinite(s.p_given) else ""
-        )
-        alone = f" ({p_value(s.p_alone)} alone{given})" if math.isfinite(s.p_alone) else ""
-        yield Sentence(f"{s.label}, judged {s.verdict}{alone}. {_upper(_no_stop(s.because))}.", ("M6", "M12"))
-    for p in ledger.parameters:
-        places = parameter_decimals(p)
-        unit = f" {p.unit}" if p.unit else ""
-        bounds = (
-            f" ({level_percent(results)} interval {span(p.low, p.high, places)})"
-            if math.isfinite(p.low + p.high)
-            else ""
-        )
-        note = f", {p.note}" if p.note else ""
-        icc = p.name in ("intraclass correlation", "ρ")
-        yield Sentence(
-            f"{label_of(results, p.key)}: {p.name} {number(p.estimate, places)}{unit}{bounds}{note}.",
-            ("M9", "M10") if icc else ("M10",),
-        )
+        yield Sentence(standing_words(results, s), ("M6", "M12"))
+    yield from _error_model(results)
+    for key in dict.fromkeys(p.key for p in ledger.parameters):
+        found = [p for p in ledger.parameters if p.key == key]
+        item = ("M9", "M10") if any(p.name in ("intraclass correlation", "ρ") for p in found) else ("M10",)
+        yield Sentence(_parameters(results, key, found), item)
+    if any("unit of the response" in p.unit for p in ledger.parameters):
+        yield Sentence(f"Standard deviations are in the unit of {results.case.response}.", ("M10",))
     told = [
-        f"{s.label} {percent(s.share)}"
-        + (f" ({percent_span(s.low, s.high)})" if math.isfinite(s.low + s.high) else "")
+        f"{s.label} {percent(s.share)}{percent_bounds(s.low, s.high)}"
         for s in ledger.shares
         if math.isfinite(s.share)
     ]
     if told:
-        yield Sentence(f"Shares of the residual variance: {listed(told)}.", ("M10",))
+        yield Sentence(f"The shares of the residual variance are: {listed(told)}.", ("M10",))
+    yield from _repaired(results)
     for d in ledger.detectable:
         yield Sentence(d.sentence, ("M12",))
-    for step in ledger.history:
-        yield Sentence(f"Choice of the dependence model: {_no_stop(step)}.", ("M11",))
     for key, reason in ledger.refused:
-        yield Sentence(f"Not estimated: {label_of(results, key)}, because {_no_stop(reason)}.", ("M11",))
+        why = reason.rstrip(" .")
+        yield Sentence(f"Not estimated was {label_of(results, key)}, because {why}.", ("M11",))
 
 
-def _no_stop(text: str) -> str:
-    return text.rstrip(" .")
+def standing_words(results: Results, s: Standing) -> str:
+    """How a structure was judged, by which p-values, and why."""
+    known = []
+    if math.isfinite(s.p_alone):
+        known.append(f"{p_value(s.p_alone)} by its own test")
+    if s.given and math.isfinite(s.p_given):
+        known.append(f"{p_value(s.p_given)} with {listed(s.given)} fitted as well")
+    figures = f" ({'; '.join(known)})" if known else ""
+    verdict = {
+        "present": "was judged present",
+        "unclear": "was judged unclear",
+        "not detected": "was not detected",
+        "not applicable": "could not be tested",
+    }[s.verdict]
+    plain = s.verdict == "present" and known and s.because.startswith(PLAIN)
+    because = "" if plain else f" {sentence(s.because)}"
+    return f"Dependence between {subject(results, s.key)} {verdict}{figures}.{because}"
 
 
-def checks(results: Results) -> Iterable[Sentence]:
-    """Findings, primary ones first; how p was reached and adjusted; what was not run."""
-    run = [f for f in results.evidence if f.verdict != "not applicable"]
-    for f in sorted(run, key=lambda f: not f.primary):
-        adjusted = f.p_adjusted
-        how = f" P-value: {f.p_method}." if f.p_method and math.isfinite(f.p) else ""
-        holm = (
-            f" Adjusted over its family of tests (Holm): {p_value(adjusted)}."
-            if adjusted is not None and not math.isnan(adjusted)
-            else ""
-        )
-        caveats = "".join(f" Caveat: {_no_stop(c)}." for c in f.caveats)
-        said = with_source(f.sentence, f.source)
-        label = "" if f.primary else " (exploratory)"
-        yield Sentence(f"{_upper(test_words(results, f))}{label}: {said}{how}{holm}{caveats}", ("M12",))
-    skipped = [f for f in results.evidence if f.verdict == "not applicable"]
-    if skipped:
-        words = "; ".join(f"{test_words(results, f)} ({_no_stop(f.sentence)})" for f in skipped)
-        yield Sentence(f"Not run: {words}.", ("M12",))
-
-
-def _upper(text: str) -> str:
-    return text[:1].upper() + text[1:]
-
-
-def estimates(results: Results) -> Iterable[Sentence]:
-    best = advised(results)
-    if best is None:
-        yield Sentence(f"No refit is advised ({results.advice.state}): {results.advice.headline}", ("M6",))
+def _error_model(results: Results) -> Iterable[Sentence]:
+    ledger = results.ledger
+    if not ledger.shares:
         return
-    account = best.account
-    ingredients = (
-        f"The advised refit is: {best.name}. Estimator: {account.estimator}; covariance: "
-        f"{account.covariance}; small-sample factor: {account.factor}{_items(best)}"
-    )
+    kept = [_component(results, key) for key in ledger.model]
+    holds = f"{listed(kept)} besides the noise of single rows" if kept else "the noise of single rows alone"
     yield Sentence(
-        with_source(ingredients, account.source),
-        ("M6", "M7", "M14") if _has_clusters(best) else ("M6", "M7"),
+        f"The model of the dependence, fitted by restricted maximum likelihood, holds {holds}.", ("M6", "M11")
     )
-    yield Sentence(
-        f"Intervals at {level_percent(results)} and p-values come from the same reference distribution "
-        f"({account.reference}), with degrees of freedom by this rule: {account.df_rule}.",
-        ("M8",),
-    )
-    for name in focus_rows(results):
-        words = estimate_words(results, best, name)
-        if words:
-            yield Sentence(f"{name}: {words}.", ("M8", "M13"))
-    for t in best.terms:
+    refused = {key for key, _ in ledger.refused}
+    known = {s.key for s in ledger.shares}
+    gone = [s for s in ledger.standing if s.key in known - set(ledger.model) - refused]
+    if gone:
+        names = listed(subject(results, s.key) for s in gone)
         yield Sentence(
-            f"{t.term} as a whole: F = {number(t.F, 2)} on {degrees(t.df1)} and {degrees(t.df2)} degrees of "
-            f"freedom, {p_value(t.p)}.",
-            ("M8", "M13"),
+            f"Dependence between {names} was fitted first as well, and left out because it was neither "
+            "detected nor able to matter.",
+            ("M11",),
         )
-    if best.boundary:
-        yield Sentence("A variance was estimated at its bound of zero in this refit.", ("M11",))
-    if not best.converged:
-        yield Sentence("The search for the variances of this refit did not converge.", ("M11",))
-    yield from _choice(results)
 
 
-def _items(fit: Refit) -> str:
-    return "".join(f"; {name}: {value}" for name, value in fit.account.items)
+def _repaired(results: Results) -> Iterable[Sentence]:
+    """What the dependence becomes once a missing part of the mean is in."""
+    repair = results.advice.repair
+    if repair is None:
+        return
+    told = [f"{s.label} {percent(s.share)}{percent_bounds(s.low, s.high)}" for s in repair.shares]
+    words = f" the shares are: {listed(told)}" if told else " no dependence model could be fitted"
+    yield Sentence(f"With a {repair.what} added to the model{words}.", ("M10", "M12"))
 
 
-def _has_clusters(fit: Refit) -> bool:
-    return any("cluster" in name for name, _ in fit.account.items)
+def _component(results: Results, key: str) -> str:
+    family, _, level = key.partition(":")
+    if key == "group:site":
+        return "an intercept of each place"
+    if family == "group":
+        return f"a random intercept of {noun_at(results, level)}"
+    if family == "serial":
+        return "a first-order autoregression in time"
+    if family == "spatial":
+        return "an exponential correlation over the map"
+    return label_of(results, key)
 
 
-def estimate_words(results: Results, fit: Refit, name: str) -> str:
-    """ "−3.1 (95 % interval −6.4 to 0.2; 10.4 degrees of freedom; p = 0.063)"; "" when not given."""
-    row = row_of(fit, name)
-    if row is None:
-        return ""
-    places = decimals(results, name)
-    df = f"; {degrees(row.df)} degrees of freedom" if math.isfinite(row.df) else ""
-    ratio = as_ratio(results, fit, row)
-    factor = f", as a ratio {ratio}" if ratio else ""
-    return (
-        f"{number(row.estimate, places)} ({level_percent(results)} interval "
-        f"{span(row.low, row.high, places)}{df}; {p_value(row.p)}){factor}"
-    )
+def _parameters(results: Results, key: str, found: list[Parameter]) -> str:
+    """All that is known of one component in one sentence, intervals named once."""
+    parts, notes = [], []
+    for k, p in enumerate(found):
+        parts.append(parameter_words(results, p, named=k == 0))
+        notes += [p.note] if p.note and p.note not in notes else []
+    note = f" ({'; '.join(notes)})" if notes else ""
+    who = subject(results, key)
+    if key == "row":
+        return f"Single rows have {listed(parts)}{note}."
+    return f"For {who} the fit gives {listed(parts)}{note}."
 
 
-def _choice(results: Results) -> Iterable[Sentence]:
-    for reason in results.advice.because:
-        yield Sentence(f"Why this refit: {with_source(reason.sentence, reason.source)}", ("M6", "M11"))
-    if results.case.assigned or results.case.sampled:
-        level = listed(
-            dict.fromkeys([*results.case.assigned.values(), *filter(None, [results.case.sampled])])
-        )
-        yield Sentence(
-            f"That rows be clustered at {level} follows from the design, not from a test.", ("M11",)
-        )
-    yield Sentence(
-        "The refit itself was chosen after the data were seen, by rules fixed beforehand; this is a post-hoc "
-        "choice unless the analysis plan named it.",
-        ("M11",),
-    )
-    yield Sentence(
-        "[what the analysis plan had laid down, and where it is registered: to be filled in]", ("M11",), True
-    )
-
-
-def sensitivity(results: Results) -> Iterable[Sentence]:
-    """The other refits for every focus row, and the values of dependence at which a result would turn."""
-    best = advised(results)
-    for name in focus_rows(results):
-        others = [
-            f"{fit.name}{' (taken as if rows were independent)' if fit is ordinary(results) else ''} {words}"
-            for fit in ordered(results)
-            if fit is not best and (words := estimate_words(results, fit, name))
-        ]
-        if others:
-            yield Sentence(f"{name} under the other refits: {'; '.join(others)}.", ("M15",))
-    for t in results.ledger.tipping:
-        yield Sentence(t.sentence, ("M15",))
-    for choice in results.advice.alternatives:
-        if choice.because:
-            at = f" at {choice.at}" if choice.at else ""
-            yield Sentence(
-                f"Alternative: {choice.remedy.replace('-', ' ')}{at}. {_no_stop(choice.because)}.", ("M15",)
-            )
-
-
-def software(results: Results) -> Iterable[Sentence]:
-    others = listed(f"{name} {v}" for name, v in results.versions.items() if name != "clingstone")
-    versions = f" ({others})" if others else ""
-    seed = results.settings.get("seed")
-    with_seed = f" The seed of every random number was {seed}." if seed is not None else ""
-    yield Sentence(
-        f"Computed with clingstone {results.clingstone}{versions}.{with_seed}",
-        ("M17",),
-    )
-
-
-USUAL = (
-    "This text is an aid to, not a substitute for, a statistician's judgement.",
-    "A prespecified analysis plan outranks a choice driven by the data.",
-    "Clinical, safety and regulatory uses follow their own guidance.",
-)
-
-
-def cautions(results: Results) -> Iterable[Sentence]:
-    for reason in results.advice.cautions:
-        item = ("M14",) if "cluster" in reason.rule or "group" in reason.rule else ("M12",)
-        yield Sentence(with_source(reason.sentence, reason.source), item)
-    if results.advice.mean_in_doubt:
-        yield Sentence(
-            "Whether the mean or the dependence between rows makes the pattern is not settled.", ("M12",)
-        )
-    if results.rehearsal is None:
-        yield Sentence(
-            "The coverage of these intervals was not rehearsed on this design; the advice rests on published "
-            "rules.",
-            ("M12",),
-        )
-    for words in USUAL:
-        yield Sentence(words, ())
+def parameter_words(results: Results, p: Parameter, named: bool = True) -> str:
+    """ "an intraclass correlation of 0.19 (95 % interval 0.08 to 0.42)"."""
+    places = parameter_decimals(p)
+    own = "" if p.unit == "unit of the response" else f" {many(p.unit)}".rstrip()
+    article = "an" if p.name[0] in "aeiou" else "a"
+    name = "a correlation ρ" if p.name == "ρ" else f"{article} {p.name}"
+    if not math.isfinite(p.low + p.high):
+        interval = ""
+    elif named:
+        interval = f" ({level_percent(results)} interval {span(p.low, p.high, places)})"
+    else:
+        interval = bounds(p.low, p.high, places)
+    return f"{name} of {number(p.estimate, places)}{own}{interval}"

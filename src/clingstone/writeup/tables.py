@@ -10,28 +10,31 @@ from clingstone.display import (
     Table,
     decimals_for,
     degrees,
-    listed,
     number,
     p_figure,
     percent,
     percent_span,
+    sentence,
     significant,
     span,
 )
 from clingstone.evidence.finding import Finding
-from clingstone.ledger.ledger import Inflation, Parameter
+from clingstone.ledger.ledger import Inflation, Parameter, Share
 from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
+from clingstone.writeup.naming import label_of, pointed_at, remedy_words, words_of_test
+from clingstone.writeup.plate import many
 from clingstone.writeup.read import (
+    ALONE,
     advised,
     as_ratio,
     decimals,
     focus_rows,
-    label_of,
     level_percent,
     names_of,
     ordered,
     ordinary,
+    row_of,
 )
 
 STRUCTURES = {
@@ -50,7 +53,7 @@ def intervals(results: Results, name: str) -> Table:
         _interval_cells(results, fit, row, places)
         for fit in ordered(results)
         for row in fit.intervals
-        if row.term == name
+        if row.term in (name, name + ALONE)
     ]
     columns = (
         Column("remedy", "refit"),
@@ -59,8 +62,8 @@ def intervals(results: Results, name: str) -> Table:
         Column("ratio", "as a ratio", "right"),
         Column("se", "standard error", "decimal"),
         Column("se_ratio", "against ordinary", "decimal"),
-        Column("df", "degrees of freedom", "decimal"),
-        Column("df_rule", "rule"),
+        Column("df", "df", "decimal"),
+        Column("df_rule", "rule for df"),
         Column("p", "p", "right"),
     )
     return Table.of(name, columns, rows, _status_note(results, name)).without_empty()
@@ -92,6 +95,46 @@ def _status_note(results: Results, name: str) -> str:
         if row.term == name and row.status != "ok"
     ]
     return " ".join(notes)
+
+
+def conventions(results: Results, name: str) -> Table | None:
+    """What the advised and the ordinary interval of a row become under other common conventions."""
+    places = decimals(results, name)
+    rows = []
+    for fit in dict.fromkeys(id(f) for f in (advised(results), ordinary(results)) if f is not None):
+        found = next(f for f in results.refits if id(f) == fit)
+        own = row_of(found, name)
+        if own is None or not found.conventions:
+            continue
+        label = f"{found.name} (advised)" if found is advised(results) else found.name
+        rows.append(_convention_cells(label, "as reported", own, places))
+        for c in found.conventions:
+            row = c.get(name)
+            if row is not None and math.isfinite(row.estimate):
+                rows.append(_convention_cells("", c.words, row, places))
+    columns = (
+        Column("remedy", "refit"),
+        Column("convention", "convention"),
+        Column("estimate", "estimate", "decimal"),
+        Column("interval", f"{level_percent(results)} interval", "right"),
+        Column("se", "standard error", "decimal"),
+        Column("df", "df", "decimal"),
+        Column("p", "p", "right"),
+    )
+    caption = f"{name} under other common conventions (df: degrees of freedom)"
+    return Table.of(caption, columns, rows) if rows else None
+
+
+def _convention_cells(label: str, words: str, row: Interval, places: int) -> list[Cell]:
+    return [
+        Cell(label, row.remedy),
+        Cell(words, words),
+        Cell(number(row.estimate, places), row.estimate),
+        Cell(span(row.low, row.high, places)),
+        Cell(number(row.se, places), row.se),
+        Cell(degrees(row.df), row.df),
+        Cell(p_figure(row.p), row.p),
+    ]
 
 
 def intervals_file(results: Results) -> Table:
@@ -137,15 +180,6 @@ def evidence(results: Results, structure: str) -> Table:
     return Table.of(caption, columns, rows).without_empty()
 
 
-def test_words(results: Results, f: Finding) -> str:
-    """The test as a reader names it, at what, and given what."""
-    words = f.test.replace("-", " ")
-    if f.about_words:
-        words += f", {f.about_words}"
-    given = listed(label_of(results, key) for key in f.given)
-    return f"{words}; given {given}" if given else words
-
-
 def statistic_words(f: Finding) -> str:
     """ "F = 7.6 on 11 and 398"; empty when the finding has no statistic."""
     if not math.isfinite(f.statistic):
@@ -160,9 +194,12 @@ def _finding_cells(results: Results, f: Finding) -> list[Cell]:
     places = _effect_decimals(f)
     effect = f"{f.estimate_name}: {number(f.estimate, places)}" if has else ""
     adjusted = f.p_adjusted
+    label = "" if f.primary or f.verdict == "not applicable" else " (exploratory)"
+    where = f" ({pointed_at(results, f)})" if f.verdict == "present" and f.rows else ""
     return [
         Cell(
-            test_words(results, f) + ("" if f.primary or f.verdict == "not applicable" else " (exploratory)"),
+            words_of_test(results, f)
+            + ("" if f.primary or f.verdict == "not applicable" else " (exploratory)"),
             f.test,
         ),
         Cell(effect, f.estimate),
@@ -170,7 +207,7 @@ def _finding_cells(results: Results, f: Finding) -> list[Cell]:
         Cell(statistic_words(f), f.statistic),
         Cell("" if math.isnan(f.p) else p_figure(f.p), f.p),
         Cell("" if adjusted is None or math.isnan(adjusted) else p_figure(adjusted), adjusted),
-        Cell(f.verdict, f.verdict),
+        Cell(f.verdict + where, f.verdict),
     ]
 
 
@@ -181,6 +218,20 @@ def _effect_decimals(f: Finding) -> int:
     return min(4, max(0, decimals_for((f.high - f.low) / 2)))
 
 
+def shares_told(results: Results) -> tuple[Share, ...]:
+    """The shares under the advised model: with the mean mended where that is advised first."""
+    repair = results.advice.repair
+    mended = repair is not None and results.advice.state == "mean first" and repair.shares
+    return repair.shares if repair is not None and mended else results.ledger.shares
+
+
+def shares_caption(results: Results) -> str:
+    repair = results.advice.repair
+    if repair is not None and shares_told(results) is repair.shares:
+        return f"What the model with a {repair.what} leaves over, by structure"
+    return "What the model leaves over, by structure"
+
+
 def shares(results: Results) -> Table:
     rows = [
         [
@@ -188,10 +239,10 @@ def shares(results: Results) -> Table:
             Cell(percent(s.share), s.share),
             Cell(percent_span(s.low, s.high) if math.isfinite(s.low + s.high) else "not given"),
         ]
-        for s in results.ledger.shares
+        for s in shares_told(results)
     ]
     columns = (
-        Column("structure", "what the model leaves over, by structure"),
+        Column("structure", "structure"),
         Column("share", "share", "right"),
         Column("interval", f"{level_percent(results)} interval", "right"),
     )
@@ -225,7 +276,7 @@ def _parameter_cells(results: Results, p: Parameter) -> list[Cell]:
         Cell(p.name, p.name),
         Cell(number(p.estimate, places), p.estimate),
         Cell(span(p.low, p.high, places) if math.isfinite(p.low + p.high) else "not given"),
-        Cell(p.unit, p.unit),
+        Cell(many(p.unit) if p.name != "ρ" else p.unit, p.unit),
         Cell(p.note, p.note),
     ]
 
@@ -237,9 +288,9 @@ def inflation(results: Results) -> Table:
     cells = {(i.term, i.key): i for i in rows}
     columns = (
         Column("term", "coefficient"),
-        *(Column(key, f"part of {label_of(results, key)}", "right") for key in keys),
-        Column("total", "standard-error factor", "right"),
-        Column("range", "weakest to strongest", "right"),
+        *(Column(key, label_of(results, key), "right") for key in keys),
+        Column("total", "factor", "right"),
+        Column("range", "its range", "right"),
     )
     body = []
     for term in dict.fromkeys(i.term for i in rows):
@@ -249,9 +300,9 @@ def inflation(results: Results) -> Table:
         ends = span(low, high, 2) if total is not None else ""
         body.append([Cell(term, term), *parts, _part_cell(total), Cell(ends)])
     note = (
-        "Parts are shares of the variance that the ordinary fit reports, and add up to the square "
-        "of the factor. The factor multiplies the ordinary standard error; its range is that over the "
-        "dependence interval."
+        "Under each structure stands the variance that it gives a coefficient, in units of the variance "
+        "that the ordinary fit reports; these parts add up to the square of the factor. The factor "
+        "multiplies the ordinary standard error; its range is that over the interval of the dependence."
     )
     return Table.of("What each structure does to the ordinary intervals", columns, body, note)
 
@@ -317,7 +368,7 @@ def pairs(caption: str, heads: tuple[str, str], rows: dict[str, str]) -> Table:
 
 def refused(results: Results) -> Table | None:
     rows = [
-        [Cell(id_.replace("-", " "), id_), Cell(why, why), Cell(needed, needed)]
+        [Cell(remedy_words(results, id_), id_), Cell(sentence(why), why), Cell(sentence(needed), needed)]
         for id_, why, needed in results.advice.refused
     ]
     columns = (

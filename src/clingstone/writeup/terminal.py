@@ -19,7 +19,8 @@ from clingstone.display import (
 )
 from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
-from clingstone.writeup.read import advised, decimals, focus_rows, level_percent, ordered, ordinary, row_of
+from clingstone.writeup.naming import lost, noun, with_rows
+from clingstone.writeup.read import advised, decimals, distinct, level_percent, ordinary, row_of, served
 
 ROWS = 6  # focus rows shown
 REFITS = 6  # refits shown for each
@@ -42,7 +43,7 @@ def case_line(results: Results) -> str:
     case = results.case
     parts = [count(case.n, "row")]
     for g in case.group:
-        name = g.key.split("/")[-1]
+        name = noun(g)
         sizes = (
             f" of {g.smallest} to {g.largest} rows" if g.smallest < g.largest else f" of {g.smallest} rows"
         )
@@ -57,7 +58,8 @@ def case_line(results: Results) -> str:
     dropped = sum(case.dropped.values())
     if dropped:
         reasons = listed(
-            f"{n} for {why}" if len(case.dropped) > 1 else why for why, n in case.dropped.items()
+            f"{lost(why)} in {number(n, 0)}" if len(case.dropped) > 1 else lost(why)
+            for why, n in case.dropped.items()
         )
         parts.append(f"{count(dropped, 'row')} left out ({reasons})")
     return f"{case.name} · {', '.join(parts)}"
@@ -65,10 +67,11 @@ def case_line(results: Results) -> str:
 
 def _intervals(results: Results, width: int) -> list[str]:
     """Per focus row, the refits one under the other, advised first after the ordinary fit."""
-    names = focus_rows(results)
+    names = served(results)
     lines: list[str] = []
     for name in names[:ROWS]:
-        shown = [(fit, row) for fit in _order(results) if (row := row_of(fit, name)) is not None][:REFITS]
+        found = [(fit, row_of(fit, name)) for fit in _order(results, name)]
+        shown = [(fit, row) for fit, row in found if row is not None][:REFITS]
         if lines and shown:
             lines.append("")
         lines += _block(results, name, shown, width)
@@ -80,10 +83,10 @@ def _intervals(results: Results, width: int) -> list[str]:
     return lines
 
 
-def _order(results: Results) -> tuple[Refit, ...]:
+def _order(results: Results, name: str) -> tuple[Refit, ...]:
     """The ordinary fit first, so that the eye moves from what was to what is advised."""
     base = ordinary(results)
-    return (*((base,) if base else ()), *(f for f in ordered(results) if f is not base))
+    return (*((base,) if base else ()), *(f for f in distinct(results, name) if f is not base))
 
 
 def _block(results: Results, name: str, shown: list[tuple[Refit, Interval]], width: int) -> list[str]:
@@ -139,7 +142,7 @@ def _words(text: str) -> str:
 
 
 def _unsettled(results: Results, width: int) -> list[str]:
-    cautions = [r.sentence for r in results.advice.cautions]
+    cautions = [with_rows(results, r.sentence, r.rule) for r in results.advice.cautions]
     if results.advice.mean_in_doubt:
         cautions.append("The mean itself is in doubt; see the curve and trend checks in the report.")
     return [line for c in cautions for line in wrapped(f"Not settled: {c}", width, "", "  ")]
