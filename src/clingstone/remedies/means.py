@@ -171,24 +171,14 @@ class GroupMeans:
                 f"{part.count} groups of {self.at} leave no degrees of freedom for {q} coefficients of means",
                 "Fewer predictors that differ between groups, or more groups, would be needed.",
             )
-        unusable = {
-            name: Refusal(
-                f"means by {self.at} do not tell it from other terms",
-                "cluster-robust or mixed-intercept use the rows within groups as well.",
-            )
-            for name, told in zip(names, found.told, strict=True)
-            if not told
-        }
-        T, df = None, np.full(len(names), float(part.count - q))
-        if self.kind == "HC2":
-            T, lost, _ = sandwich.row_weights(found.basis.Q, found.W, 1)
-            df = np.where(lost > 1e-8, np.nan, sandwich.row_df(found.basis.Q, T))
+        untold = Refusal(
+            f"means by {self.at} do not tell it from other terms",
+            "cluster-robust or mixed-intercept use the rows within groups as well.",
+        )
+        unusable = {name: untold for name, told in zip(names, found.told, strict=True) if not told}
+        T, df = self._spread(found, part.count - q)
         unusable = {**few_df(names, df), **unusable}
         stop_if_none_left(names, unusable)
-        joints = {}
-        for t in multi(design):
-            if not any(names[j] in unusable for j in t.columns):
-                joints[t.name + (" [between]" if moved[list(t.columns)].any() else "")] = t.columns
         return MeansReady(
             design,
             part,
@@ -202,8 +192,16 @@ class GroupMeans:
             unusable,
             self._notes(part),
             design.basis.contrast(C),
-            joints,
+            _joints(design, names, unusable, moved),
         )
+
+    def _spread(self, found: Reduced, m: int) -> tuple[Array | None, Array]:
+        """Row weights of HC2, or None for s², and df (k,)."""
+        k = found.W.shape[1]
+        if self.kind != "HC2":
+            return None, np.full(k, float(m))
+        T, lost, _ = sandwich.row_weights(found.basis.Q, found.W, 1)
+        return T, np.where(lost > 1e-8, np.nan, sandwich.row_df(found.basis.Q, T))
 
     def _notes(self, part: Partition) -> tuple[str, ...]:
         if self.kind != "equal" or part.sizes.max() < UNEVEN * part.sizes.min():
@@ -218,6 +216,17 @@ class GroupMeans:
             ("means weighted by the rows of their group", replace(self, kind="weighted")),
             ("HC2 over groups, Satterthwaite df", replace(self, kind="HC2")),
         )
+
+
+def _joints(
+    design: Design, names: tuple[str, ...], unusable: Mapping[str, Refusal], moved: npt.NDArray[np.bool_]
+) -> dict[str, tuple[int, ...]]:
+    """Terms of several columns that can be tested at once, by the name that their rows have here."""
+    return {
+        term.name + (" [between]" if moved[list(term.columns)].any() else ""): term.columns
+        for term in multi(design)
+        if not any(names[j] in unusable for j in term.columns)
+    }
 
 
 def means(design: Design, part: Partition, columns: Array) -> Array:

@@ -182,23 +182,10 @@ class Randomisation:
             )
             for name in names
         }
-        lots: list[Lot] = []
-        wholes: list[tuple[Term, Ints, float]] = []
-        X = _values(design, part)
-        for term in mine:
-            refusal = _entangled(design, term)
-            base = _strata(design, part, term, [o for o in mine if o.name != term.name], X)
-            if refusal is None and len(term.columns) > 1:
-                ways = assignments.count(assignments.levels_of(X[:, list(term.columns)]), base)
-                wholes.append((term, base, ways))
-            for j in term.columns:
-                lot = _lot(X, term, j, base, draws)
-                found = refusal or _too_few(lot, self.at)
-                if found is not None:
-                    unusable[names[j]] = found
-                    continue
-                del unusable[names[j]]
-                lots.append(lot)
+        lots, wholes, refused = _lots(design, part, mine, draws, self.at)
+        unusable.update({names[j]: refusal for j, refusal in refused.items()})
+        for lot in lots:
+            del unusable[names[lot.column]]
         if not lots:
             raise unusable[names[mine[0].columns[0]]].error()
         return RandomisationReady(
@@ -211,8 +198,8 @@ class Randomisation:
             (),
             at=self.at,
             part=part,
-            lots=tuple(lots),
-            terms=tuple(wholes),
+            lots=lots,
+            terms=wholes,
             draws=draws,
             studentised=self.statistic == "t",
         )
@@ -222,6 +209,30 @@ class Randomisation:
             ("permuting the coefficient itself, not its t", replace(self, statistic="coefficient")),
             ("999 permutations", replace(self, draws=999)),
         )
+
+
+def _lots(
+    design: Design, part: Partition, terms: list[Term], draws: int, at: str
+) -> tuple[tuple[Lot, ...], tuple[tuple[Term, Ints, float], ...], dict[int, Refusal]]:
+    """Columns that can be permuted, terms that can as a whole, and columns that cannot with the reason."""
+    X = _values(design, part)
+    lots: list[Lot] = []
+    wholes: list[tuple[Term, Ints, float]] = []
+    refused: dict[int, Refusal] = {}
+    for term in terms:
+        refusal = _entangled(design, term)
+        base = _strata(design, part, term, [o for o in terms if o.name != term.name], X)
+        if refusal is None and len(term.columns) > 1:
+            ways = assignments.count(assignments.levels_of(X[:, list(term.columns)]), base)
+            wholes.append((term, base, ways))
+        for j in term.columns:
+            lot = _lot(X, term, j, base, draws)
+            found = refusal or _too_few(lot, at)
+            if found is None:
+                lots.append(lot)
+            else:
+                refused[j] = found
+    return tuple(lots), tuple(wholes), refused
 
 
 def _values(design: Design, part: Partition) -> Array:
