@@ -26,9 +26,9 @@ What the whole examination says of invented data whose truth is known. Every fig
 measured by `tests/validation/`, with the version named at the end.
 
 In each world y = 3 + 0.5 x + errors, and the table, the declared structures and the formula are handed to
-`clingstone.examine` with its defaults. *Coverage* is the share of replicates whose interval for x holds
-0.5; nominal is {nominal:.0%}. The number after ± is the Monte-Carlo standard error. *Oracle* is generalised
-least squares at the true covariance, which no one has in practice. *Width* is the median width of the
+`clingstone.examine` with its defaults, without a rehearsal. *Coverage* is the share of replicates whose
+interval for x holds 0.5; nominal is {nominal:.0%}. The number after ± is the Monte-Carlo standard error.
+*Oracle* is generalised least squares at the true covariance, which no one has in practice. *Width* is the median width of the
 advised interval over that of the ordinary one (in brackets its 95 % quantile) and over that of the
 oracle. *Nothing found*, *present* (the structures judged present), *advised* and *no advice* (not
 correctable) are per cent of replicates. *SE factor* is the median of the ledger's estimate beside the true
@@ -166,9 +166,7 @@ def page(replicates: Path, null_file: Path, commit: str = "") -> str:
     lines = [json.loads(line) for line in null_file.read_text(encoding="utf-8").splitlines()]
     out = [HEAD.format(nominal=NOMINAL)]
     out.append("## Where the advised interval covers too seldom\n\n")
-    out.append(
-        "More than two Monte-Carlo errors below nominal: of so many worlds one or two stand here by chance.\n\n"
-    )
+    out.append("More than two Monte-Carlo errors below nominal; of so many worlds one or two by chance.\n\n")
     out += [short(list(found.values()), held), "\n## Where it is wide\n\nMore than 1.4 times the oracle.\n\n"]
     out += [wide(list(found.values()))]
     for family, names in families().items():
