@@ -79,9 +79,8 @@ class JackknifeReady(ClusterReady):
 class ClusterJackknife:
     """Ordinary estimates; variance from leaving out one cluster at a time, with its Satterthwaite df.
 
-    Equal to CR3 times (G − 1)/G (Bell & McCaffrey 2002; MacKinnon, Nielsen & Webb 2023): never smaller
-    than CR2 in a comparable design, and safer when clusters are unequal. The df are those of the CR3
-    quadratic form under independent errors of one variance.
+    Equal to CR3 times (G − 1)/G (Bell & McCaffrey 2002; MacKinnon, Nielsen & Webb 2023). The df are those
+    of that quadratic form under independent errors of one variance.
     """
 
     centre: Literal["full", "mean", "CR3"] = "full"
