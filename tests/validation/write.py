@@ -28,10 +28,11 @@ measured by `tests/validation/`, with the version named at the end.
 In each world y = 3 + 0.5 x + errors, and the table, the declared structures and the formula are handed to
 `clingstone.examine` with its defaults, without a rehearsal. *Coverage* is the share of replicates whose
 interval for x holds 0.5; nominal is {nominal:.0%}. The number after ± is the Monte-Carlo standard error.
-*Oracle* is generalised least squares at the true covariance, which no one has in practice. *Width* is the median width of the
-advised interval over that of the ordinary one (in brackets its 95 % quantile) and over that of the
-oracle. *Nothing found*, *present* (the structures judged present), *advised* and *no advice* (not
-correctable) are per cent of replicates. *SE factor* is the median of the ledger's estimate beside the true
+*Oracle* is generalised least squares at the true covariance, which no one has in practice. *Width* is the
+median width of the advised interval over that of the ordinary one (in brackets its 95 % quantile) and over
+that of the oracle. *Nothing found*, *present* (the structures judged present), *advised* and *no advice*
+(not correctable) are per cent of replicates. *SE factor* is the median of the ledger's estimate beside the
+true
 standard deviation of the ordinary coefficient over what the ordinary fit expects.
 
 """
