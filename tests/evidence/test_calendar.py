@@ -8,7 +8,7 @@ from typing import Any
 import numpy as np
 import pytest
 
-from clingstone.evidence.autocorrelation import partial
+from clingstone.evidence.autocorrelation import lag_products, partial
 from clingstone.evidence.breaks import Break, steps
 from clingstone.evidence.season import Season, cycles, fisher_tail, ordinates, with_season
 from clingstone.evidence.serial import DurbinWatson, IrregularSerial
@@ -189,6 +189,23 @@ def test_too_few_times_for_a_step() -> None:
 
 
 # ---- curves ---------------------------------------------------------------------------------------
+
+
+@pytest.mark.parametrize("spread", [1, 40])
+def test_lag_products_equal_their_pairs(spread: int) -> None:
+    """On a grid of steps, and pair by pair where the steps are too spread out for one."""
+    rng = np.random.default_rng(12)
+    who = np.repeat([0, 1, 2], [30, 7, 13])
+    time = np.concatenate([np.cumsum(rng.integers(1, 3, k)) * spread + 5 * k for k in (30, 7, 13)])
+    made = design(rng.normal(size=50), time=time, who=who)
+    response = fits(made, rng.normal(size=(50, 3))).response
+    sums, counts = lag_products(response, 2 * spread)
+    series, e = made.serial, response.residual
+    assert series is not None
+    for k in (spread, 2 * spread):
+        earlier, later = series.pairs(k)
+        assert counts[k - 1] == len(later) > 0
+        assert sums[k - 1] == pytest.approx(np.sum(e[earlier] * e[later], axis=0))
 
 
 def test_partial_correlations_by_hand() -> None:

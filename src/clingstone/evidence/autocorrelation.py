@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.evidence.finding import Curve
 from clingstone.evidence.read import degenerate, floats, normal_quantile
 from clingstone.maths.forms import lagged
@@ -20,6 +21,37 @@ if TYPE_CHECKING:
 
 CURVE_LAGS = 20
 CURVE_BINS = 12
+# Exact moments of an autocorrelation cost O(n p²) each; beyond this many rows they hardly differ from
+# their large-sample values.
+EXACT_MOMENTS = 5000
+GRID_MOST = 4  # times the rows: the longest grid of steps that is laid out
+
+
+def lag_products(response: Response, top: int) -> tuple[Array, Array]:
+    """(top, B) Σ e_t e_{t−k} within series for k = 1 … top, and the numbers of pairs (top,).
+
+    On a grid of steps with room between the series, so that a lag is a shift; where the steps are too spread
+    out for that, pair by pair.
+    """
+    series = response.design.serial
+    assert series is not None
+    assert series.tick is not None
+    first = series.part.first
+    last = np.append(first[1:], series.part.n) - 1
+    lengths = series.tick[last] - series.tick[first] + 1 + top
+    N = int(lengths.sum())
+    if series.ties or GRID_MOST * response.design.n + 1000 < N:
+        pairs = [series.pairs(k) for k in range(1, top + 1)]
+        e = response.residual
+        sums = [np.einsum("ij,ij->j", e[earlier], e[later]) for earlier, later in pairs]
+        return np.stack(sums), np.array([len(later) for _, later in pairs], dtype=float)
+    begin = np.append(0, np.cumsum(lengths)[:-1]) - series.tick[first]
+    place = begin[series.part.codes] + series.tick
+    U, held = np.zeros((response.B, N)), np.zeros(N, dtype=bool)
+    U[:, place], held[place] = response.residual.T, True
+    sums = [np.einsum("bt,bt->b", U[:, :-k], U[:, k:]) for k in range(1, top + 1)]
+    counts = [float(np.count_nonzero(held[:-k] & held[k:])) for k in range(1, top + 1)]
+    return np.stack(sums), np.array(counts)
 
 
 def lag_curve(fits: Fits, law: Callable[[int], Law]) -> Curve | None:
@@ -33,13 +65,21 @@ def lag_curve(fits: Fits, law: Callable[[int], Law]) -> Curve | None:
         return None
     z = normal_quantile(fits)
     rows: list[tuple[float, float, float, float]] = []
-    for k in range(1, min(CURVE_LAGS, int(series.part.sizes.max()) // 2) + 1):
-        pairs = len(series.pairs(k)[0])
+    top = min(CURVE_LAGS, int(series.part.sizes.max()) // 2)
+    if top < 1:
+        return None
+    sums, counts = lag_products(response, top)
+    for k, pairs in enumerate(counts, start=1):
         if pairs < 3:
+            continue
+        if fits.design.n > EXACT_MOMENTS:
+            # n r_k/N_k with the large-sample deviation 1/√N_k: the design hardly moves them any more.
+            value = float(sums[k - 1, 0] / response.ss[0]) * fits.design.n / pairs
+            rows.append((k * series.step, value, z / np.sqrt(pairs), pairs))
             continue
         null = law(k)
         slope = (m + 2) * null.variance
-        value = float(response.gram(null.form)[1][0] / response.ss[0])
+        value = float(sums[k - 1, 0] / response.ss[0])
         rows.append((k * series.step, (value - null.mean) / slope, z * np.sqrt(null.variance) / slope, pairs))
     if not rows:
         return None

@@ -11,9 +11,10 @@ from scipy import special, stats
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import count, freedom, number, p_value, percent, significant
+from clingstone.evidence.autocorrelation import EXACT_MOMENTS, lag_products
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.lagged import lagged_response, partial_r2
-from clingstone.evidence.read import Plain, exceedance, ratio, simulated
+from clingstone.evidence.read import Plain, degenerate, exceedance, simulated
 from clingstone.evidence.serial import enough, form_of, series_of, step_words
 from clingstone.maths.once import Array
 from clingstone.maths.ratio import covariances, means
@@ -27,9 +28,6 @@ DRAWS = 999
 # was measured at 30 rows): up to these many rows p comes from draws of Mz instead.
 DRAWN_GODFREY = 500
 DRAWN_LJUNG = 200
-# Exact moments of K autocorrelations cost O(K n p²); beyond this many rows they hardly differ from
-# their large-sample values.
-EXACT_MOMENTS = 5000
 
 
 def _whole_lags(design: Design, last: int) -> None:
@@ -173,13 +171,12 @@ class LjungBox(Plain):
 
 def correlations(response: Response, K: int) -> Array:
     """(K, B) r_k = Σ e_t e_{t−k} / e'e."""
-    return np.stack([ratio(response, form_of(response.design, f"lag:{k}")) for k in range(1, K + 1)])
+    return np.asarray(lag_products(response, K)[0] / np.where(degenerate(response), np.nan, response.ss))
 
 
 def plain(response: Response, K: int) -> Array:
     """(1 + 2/n) n² Σ r_k²/N_k, (B,)."""
-    n, series = response.design.n, series_of(response.design)
-    pairs = np.array([len(series.pairs(k)[0]) for k in range(1, K + 1)])
+    n, (_, pairs) = response.design.n, lag_products(response, K)
     r = correlations(response, K)
     return np.asarray((1 + 2 / n) * n**2 * np.sum(r**2 / np.maximum(pairs, 1)[:, None], axis=0))
 
@@ -199,9 +196,10 @@ def corrected(response: Response, K: int) -> Array:
 
 def largest(response: Response, K: int) -> Array:
     """(B,) the correlation r_k − E r_k of largest size, on the scale of its number of pairs."""
-    series, n = series_of(response.design), response.design.n
-    pairs = np.array([max(len(series.pairs(k)[0]), 1) for k in range(1, K + 1)])
-    centre = means([form_of(response.design, f"lag:{k}") for k in range(1, K + 1)], response.design.basis)
-    r = (correlations(response, K) - centre[:, None]) * (n / pairs)[:, None]
+    n, (_, pairs) = response.design.n, lag_products(response, K)
+    centre = np.zeros(K)
+    if n <= EXACT_MOMENTS:
+        centre = means([form_of(response.design, f"lag:{k}") for k in range(1, K + 1)], response.design.basis)
+    r = (correlations(response, K) - centre[:, None]) * (n / np.maximum(pairs, 1))[:, None]
     pick = np.argmax(np.abs(np.nan_to_num(r)), axis=0)
     return np.asarray(np.clip(r[pick, np.arange(r.shape[1])], -1.0, 1.0))

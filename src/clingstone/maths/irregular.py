@@ -43,7 +43,7 @@ class Panels:
         sizes = np.bincount(panel)
         filled = np.flatnonzero(sizes)
         starts = np.append(0, np.cumsum(sizes[filled]))
-        made = cls(links.later[order], starts, low + WIDTH * (filled + 0.5))
+        made = cls(links.later[order], starts, np.asarray(low + WIDTH * (filled + 0.5), dtype=float))
         x = x[order]
         made.__dict__["_x"] = x
         return made
