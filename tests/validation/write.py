@@ -32,8 +32,7 @@ interval for x holds 0.5; nominal is {nominal:.0%}. The number after ± is the M
 median width of the advised interval over that of the ordinary one (in brackets its 95 % quantile) and over
 that of the oracle. *Nothing found*, *present* (the structures judged present), *advised* and *no advice*
 (not correctable) are per cent of replicates. *SE factor* is the median of the ledger's estimate beside the
-true
-standard deviation of the ordinary coefficient over what the ordinary fit expects.
+true standard deviation of the ordinary coefficient over what the ordinary fit expects.
 
 """
 
