@@ -191,3 +191,13 @@ def test_correlation_of_neighbours_is_not_lambda() -> None:
     R = V / np.sqrt(np.outer(np.diag(V), np.diag(V)))
     assert exact == pytest.approx(R[links.W.toarray() > 0].mean())
     assert exact < 0.5
+
+
+@pytest.mark.parametrize("symmetric", [True, False])
+def test_solving_by_the_symmetric_sister_is_solving(symmetric: bool) -> None:
+    A = knn(40, 4, 25)
+    links = sar.Links.of(A) if symmetric else sar.Links(sparse.csr_array(A / 4.0))
+    block = np.random.default_rng(26).standard_normal((40, 3))
+    left = np.eye(40) - 0.7 * links.W.toarray()
+    np.testing.assert_allclose(links.solve(0.7, block), np.linalg.solve(left, block), rtol=1e-9)
+    np.testing.assert_allclose(links.solve_across(0.7, block), np.linalg.solve(left.T, block), rtol=1e-9)

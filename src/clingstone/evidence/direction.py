@@ -230,7 +230,8 @@ class Direction(Plain):
         return tuple(About(nb.key, nb.about) for nb in design.neighbours[:1])
 
     def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
-        return (frozenset({"spatial"}),) if "spatial" in fits.components else ()
+        few = sites_of(fits.design).count <= fits.run.limits.dense_sites
+        return (frozenset({"spatial"}),) if few and "spatial" in fits.components else ()
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         unusable(fits.design, about.key)

@@ -196,8 +196,8 @@ class SpatialErrorReady:
         part = design.spatial.part  # type: ignore[union-attr]
         rng = np.random.default_rng(0)
         T = design.Q[self._order] if self._single else design.sums(part)
-        back = sar.solved_across(self.links, found.lam, T)
-        mean = float(np.mean(np.sum(self.links.draw(found.lam, rng, 100) ** 2, axis=1)) / 100)
+        back = self.links.solve_across(found.lam, T)
+        mean = float(np.mean(self.links.draw(found.lam, rng, 50) ** 2))
         size = found.sigma2 * (1.0 if self._single else found.ratio)
         QVQ = size * back.T @ back + (0.0 if self._single else found.sigma2) * np.eye(p)
         total = size * mean + (0.0 if self._single else found.sigma2)

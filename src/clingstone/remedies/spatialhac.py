@@ -30,6 +30,7 @@ DRAWS = 500
 QUANTILES = (0.01, 0.02, 0.05, 0.1, 0.2, 0.35, 0.5)  # of the distances between sites: cutoffs looked at
 MOST_LINKS = 2_000_000
 WORK = 5e7  # links × draws × contrasts per cutoff looked at
+ROWS = 2e7  # rows × draws of y; never fewer than 100 draws
 
 
 @dataclass(frozen=True, eq=False)
@@ -250,12 +251,13 @@ def _law(design: Design, W: Array, a: Array, working: ErrorModel | None) -> tupl
     sites = design.spatial
     assert sites is not None
     small = design.n <= EXACT and sites.count <= EXACT
+    draws = int(np.clip(ROWS / design.n, 100, DRAWS))
     rng = np.random.default_rng(0)  # the draws are part of the method: the same for the same design
     if working is None:
         truth = np.einsum("ik,ik->k", W, W)
         if small:
             return truth, Law.of(sites.part, a, np.eye(design.n) - design.Q @ design.Q.T)
-        e = design.basis.project(rng.standard_normal((design.n, DRAWS)))
+        e = design.basis.project(rng.standard_normal((design.n, draws)))
         return truth, Law.by_draws(sites.part, a, e)
     algebra = algebra_of(design, working, Limits())
     theta, sigma2 = working.theta[:, 0], float(working.sigma2[0])
@@ -266,7 +268,7 @@ def _law(design: Design, W: Array, a: Array, working: ErrorModel | None) -> tupl
         return truth, Law.of(sites.part, a, MV - (MV @ design.Q) @ design.Q.T)
     QVQ = sum(float(variance[0]) * algebra.spread(key, theta) for key, variance in working.variances.items())
     truth = np.einsum("ik,ij,jk->k", W, np.asarray(QVQ), W)
-    e = design.basis.project(algebra.draw(theta, sigma2, rng, DRAWS))
+    e = design.basis.project(algebra.draw(theta, sigma2, rng, draws))
     return truth, Law.by_draws(sites.part, a, e)
 
 
