@@ -152,3 +152,19 @@ def test_weights_scale_the_row_noise_alone():
     M = W - W @ X @ bread @ X.T @ W
     believed = np.trace(M @ V) / 58 * np.diag(bread)
     np.testing.assert_allclose(p.factor()[:, 0], np.sqrt(true / believed), rtol=1e-8)
+
+
+@pytest.mark.parametrize(("series", "length"), [(1, 80), (10, 40), (40, 8)])
+def test_spline_over_the_correlation_is_the_form_worked_out_at_each(series, length, monkeypatch):
+    """Slow twin: Q'KQ at all 60 values instead of 17 and a spline between them."""
+    from clingstone.ledger import consequence
+
+    rng = np.random.default_rng(series)
+    who, t = np.repeat(np.arange(series), length), np.tile(np.arange(length), series)
+    x = np.cumsum(rng.standard_normal(series * length))
+    f = make.fits(make.design({"x": x}, series=who, tick=t), rng.standard_normal(series * length))
+    _, fast, mean = consequence._scan(f, "serial")
+    monkeypatch.setattr(consequence, "NODES", 60)
+    _, slow, exact = consequence._scan(f, "serial")
+    assert np.max(np.abs(fast - slow)) < 2e-3 * np.max(np.abs(slow))
+    assert np.max(np.abs(mean / exact - 1)) < 1e-4

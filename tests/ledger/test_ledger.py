@@ -128,3 +128,36 @@ def test_focus_falls_back_to_all_but_the_constant():
     assert focus_rows(make.fits(make.design({"x": x}, focus=()), x + rng.standard_normal(30))) == ("x",)
     groups = {"g": np.repeat(np.arange(5), 6)}
     assert focus_rows(make.fits(make.design({}, groups=groups), rng.standard_normal(30))) == ("constant",)
+
+
+def test_what_rows_of_one_place_share_has_a_size_and_no_range():
+    """Places that repeat without a group of their own: a component of the place beside the field."""
+    rng = np.random.default_rng(4)
+    place = np.repeat(np.arange(40), 3)
+    xy = rng.uniform(size=(40, 2))
+    D = np.linalg.norm(xy[:, None] - xy, axis=2)
+    field = np.linalg.cholesky(np.exp(-D / 0.1) + 1e-9 * np.eye(40)) @ rng.standard_normal(40)
+    y = field[place] + 0.5 * rng.standard_normal(40)[place] + 0.5 * rng.standard_normal(120)
+    f = make.fits(make.design({"x": rng.standard_normal(120)}, xy=xy, site=place), y)
+    book = weigh(f, gather(f))
+    ranges = [q.key for q in book.parameters if q.name == "practical range"]
+    assert ranges == ["spatial"]
+    assert book.parameter("group:site", "standard deviation") is not None
+    assert sum(s.share for s in book.shares) == pytest.approx(1.0, abs=1e-9)
+
+
+@pytest.mark.parametrize(
+    ("number", "unit", "words"),
+    [
+        (1.0, "day", "day"),
+        (14.0, "day", "14\u00a0days"),
+        (7.0, "", "7\u00a0units of time"),
+        (1.0, "", "unit of time"),
+        (0.0454546, "", "0.045\u00a0units of time"),
+        (3.0, "s", "3\u00a0s"),
+    ],
+)
+def test_numbers_with_their_units(number, unit, words):
+    from clingstone.ledger.sizes import in_units
+
+    assert in_units(number, unit) == words

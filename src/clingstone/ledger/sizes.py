@@ -107,6 +107,8 @@ def in_units(number: float, unit: str) -> str:
 
 
 def _spatial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
+    if key != "spatial":  # what the rows of one place share has no range
+        return []
     sites = fits.design.spatial
     low, estimate, high = at.interval(at.model.shape["spatial.range"])
     unit = sites.unit if sites is not None else ""
