@@ -26,6 +26,7 @@ if TYPE_CHECKING:
 
 SERIES = 10  # fewer have too few sums for a t of their spread; the exact panel test serves there
 ROBUST, WITHIN = "robust", "within means"
+BLIND = "It is blind to a correlation near one, where series wander like random walks."
 Rows = npt.NDArray[np.int64]
 
 
@@ -129,7 +130,7 @@ def _robust(response: Response, confidence: float, alternative: Alternative) -> 
         low=slope - half,
         high=slope + half,
         n_used=N,
-        caveats=("It is blind to a correlation near one, where series wander like random walks.",),
+        caveats=() if column(p) < 0.05 else (BLIND,),
     )
 
 

@@ -51,7 +51,8 @@ class CommonShocks(Plain):
         return (About("", "of different series at the same times", primary=False),)
 
     def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
-        return (frozenset({"serial"}),) if "serial" in fits.components else ()
+        able = "serial" in fits.components and shared_times(fits.design) >= TIMES
+        return (frozenset({"serial"}),) if able else ()
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         series = series_of(fits.design)
@@ -114,14 +115,20 @@ class Table:
         return out
 
 
+def shared_times(design: Design) -> int:
+    """Times at which two series or more have a row."""
+    ticks = series_of(design).tick
+    return int(np.sum(np.unique(ticks, return_counts=True)[1] >= 2))
+
+
 def _table(design: Design, rng: np.random.Generator) -> Table:
     series = series_of(design)
     assert series.tick is not None
-    ticks, time, held = np.unique(series.tick, return_inverse=True, return_counts=True)
-    if int(np.sum(held >= 2)) < TIMES:
+    ticks, time = np.unique(series.tick, return_inverse=True)
+    shared = shared_times(design)
+    if shared < TIMES:
         raise NotSupported(
-            f"{count(int(np.sum(held >= 2)), 'time')} shared by two series or more",
-            f"{TIMES} would be needed.",
+            f"{count(shared, 'time')} shared by two series or more", f"{TIMES} would be needed."
         )
     codes = series.part.codes
     usable = np.flatnonzero(series.part.sizes >= OVERLAP)
