@@ -343,6 +343,38 @@ def test_neighbours_are_joined_on_the_map_and_said_below_it():
     assert not any("neighbours" in t.get_text() for t in bare.texts)
 
 
+def test_an_interval_out_of_all_proportion_runs_out_of_the_panel():
+    base = fixture.trial()
+    wide = replace(
+        base.refits[2], intervals=tuple(replace(r, low=-90.0, high=80.0) for r in base.refits[2].intervals)
+    )
+    figure = figures.ladder(replace(base, refits=(*base.refits[:2], wide))).paint(660)
+    panel = figure.axes[0]
+    low, high = panel.get_xlim()
+    assert -8 < low < -6.4
+    assert 0.2 < high < 2
+    arrows = {line.get_marker(): line.get_xdata()[0] for line in panel.lines if line.get_marker() in "<>"}
+    assert arrows == {"<": low, ">": high}
+    assert any("−90.0 to 80.0" in t.get_text() for t in figure.texts)
+
+
+def test_many_focus_rows_have_three_rungs_each_on_the_first_screen():
+    base = fixture.trial()
+    case = replace(base.case, focus=("constant", "arm", "age"))
+    few = figures.ladder(replace(base, case=case))
+    assert len(few.table.rows) == 12
+    names = [f"x{k}" for k in range(5)]
+    refits = tuple(
+        replace(
+            fit, intervals=tuple(replace(fit.get("age"), term=n) for n in names), coefficients=tuple(names)
+        )
+        for fit in base.refits
+    )
+    many_rows = replace(base, refits=refits, case=replace(base.case, focus=tuple(names)))
+    assert len(figures.ladder(many_rows).table.rows) == 15
+    assert len(figures.ladder(many_rows, None).table.rows) == 20
+
+
 def test_the_label_of_a_rung_is_whole_or_visibly_cut():
     base = fixture.trial()
     long = replace(

@@ -20,8 +20,10 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 PANELS = 6  # focus rows drawn on the first screen; the rest stand in the tables
-RUNGS = 6  # refits drawn for each row on the first screen
+RUNGS = 6  # refits drawn for each row on the first screen, where there are few rows
+FEW = 3
 PHONE = 480.0  # narrower than this, labels go above their rungs
+FAR = 4.0
 
 
 @dataclass(frozen=True)
@@ -44,6 +46,8 @@ def ladder(results: Results, most: int | None = RUNGS) -> Plate | None:
     names = [n for n in served(results) if _rungs(results, n)][:PANELS]
     if not names:
         return None
+    if most is not None and len(names) > FEW:
+        most = 3  # advised, ordinary and one more: the first screen is not the place for all
     drawn = [(name, _rungs(results, name)[:most]) for name in names]
     table = _ladder_table(results, drawn)
     return Plate(
@@ -206,8 +210,16 @@ def _rung_words(figure: Figure, r: Rung, top: float, height: float, plan: Plan) 
 
 
 def _reach(rungs: Sequence[Rung]) -> tuple[float, float]:
-    """Axis ends: every finite end, and zero unless it lies more than twice the data's length away."""
-    ends = [v for r in rungs for v in (r.low, r.high, r.estimate) if math.isfinite(v)]
+    """Axis ends: the ends of the intervals, and zero unless it lies more than twice their length away.
+
+    An interval more than FAR times as long as the advised and the ordinary one runs out of the panel, so
+    that those two can be seen.
+    """
+    lead = max((r.high - r.low for r in rungs if r.kind != "other"), default=0.0)
+    lead = lead if math.isfinite(lead) else 0.0
+    near = [r for r in rungs if r.kind != "other" or not lead or r.high - r.low <= FAR * lead]
+    ends = [v for r in near for v in (r.low, r.high, r.estimate) if math.isfinite(v)]
+    ends += [r.estimate for r in rungs if math.isfinite(r.estimate)]
     low, high = min(ends), max(ends)
     length = high - low or abs(high) or 1.0
     if low > 0 and low <= 2 * length:
@@ -227,6 +239,9 @@ def _draw_rung(panel: Axes, r: Rung, line: float, low: float, high: float) -> No
         "other": {"color": LIGHT.muted, "linewidth": 1.1},
     }[r.kind]
     panel.plot(ends, [line, line], solid_capstyle="butt", **style)  # type: ignore[arg-type]
+    for gone, end, arrow in ((r.low < low, low, "<"), (r.high > high, high, ">")):
+        if gone:  # the interval goes on beyond the panel
+            panel.plot([end], [line], arrow, markersize=5, color=style["color"], clip_on=False)
     face = {"advised": LIGHT.accent, "ordinary": LIGHT.paper, "other": LIGHT.muted}[r.kind]
     edge = {"advised": LIGHT.accent, "ordinary": LIGHT.ink, "other": LIGHT.muted}[r.kind]
     size = {"advised": 8.5, "ordinary": 7.0, "other": 4.5}[r.kind]
@@ -257,7 +272,8 @@ def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
     row = 38.0 if phone else 29.0
     height = 44 + row * len(parts) + 30
     figure = blank(width, height)
-    left, right = (0.41 * width, 10.0) if phone else (0.34 * width, 0.27 * width)
+    longest = max(len(_share_figures(s)) for s in parts) * LETTER + 16
+    left, right = (0.41 * width, 14.0) if phone else (0.34 * width, max(0.27 * width, longest))
     bar = axes(figure, 0 if phone else left, 6, width - (0 if phone else left + right), 26)
     bar.axis("off")
     bar.set_xlim(0, 1)
@@ -283,6 +299,11 @@ def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
     return figure
 
 
+def _share_figures(s: Share) -> str:
+    known = math.isfinite(s.low + s.high)
+    return percent(s.share) + (f"  ({percent_span(s.low, s.high)})" if known else "")
+
+
 def _draw_share(
     figure: Figure,
     panel: Axes,
@@ -304,11 +325,9 @@ def _draw_share(
         markerfacecolor=face,
         markeredgecolor=LIGHT.ink,
         zorder=2,
+        clip_on=False,
     )
-    label = s.label
-    figures = percent(s.share)
-    if math.isfinite(s.low + s.high):
-        figures += f"  ({percent_span(s.low, s.high)})"
+    label, figures = s.label, _share_figures(s)
     if phone:
         say(figure, 0, y - 8, clip(label, left - 6, SMALL), fontsize=SMALL)
         say(figure, 0, y + 8, figures, fontsize=SMALL - 0.5, color=LIGHT.muted)

@@ -104,7 +104,8 @@ def _size(results: Results, p: Parameter) -> str:
 def _estimates(results: Results) -> str:
     best = advised(results)
     if best is None:
-        return f"No correction is reported: {results.advice.headline}"
+        why = " ".join(r.sentence for r in results.advice.because) or results.advice.headline
+        return f"No correction is reported. {why}"
     names = served(results)
     words = [(n, estimate_words(results, best, n)) for n in names[:SPOKEN]]
     told = [f"{name} is estimated at {said}" for name, said in words if said]

@@ -30,6 +30,8 @@ if TYPE_CHECKING:
 
 LONG = 170  # characters of a headline beyond which it is cut, and one sentence is set smaller
 
+QUIET = 8  # figures in which nothing was detected that a page shows; the folder holds all
+
 STATES = {
     "supported": "These data support a correction.",
     "supported with caveat": "These data support a correction, with a caveat.",
@@ -157,6 +159,17 @@ def _plain(caption: str, heads: Iterable[str], rows: Iterable[Iterable[str]]) ->
     return Table.of(caption, [Column(h, h) for h in heads], rows)
 
 
+def _factor(results: Results, name: str) -> str:
+    """How far the standard error of a row should move, and within what range."""
+    factor = results.ledger.factor(name)
+    if factor is None or not math.isfinite(factor.low + factor.high):
+        return ""
+    low, shown, high = (significant(v) for v in sorted((factor.low, factor.estimate, factor.high)))
+    words = "about the ordinary one" if shown == "1.0" else f"{shown} times the ordinary one"
+    more = f"; anything from {low} to {high} is compatible with these data" if low != high else ""
+    return f"The standard error of {name} should be {words}{more}."
+
+
 def headline(words: str) -> tuple[str, str]:
     """A headline of one breath, and what follows it: a long one is cut behind its first sentence."""
     if len(words) <= LONG:
@@ -190,17 +203,9 @@ def how_sure(results: Results) -> Iterable[str]:
             "Not rehearsed on this design: the advice rests on published rules, not on a coverage measured "
             "for these data."
         )
-    mended = results.advice.state == "mean first"  # factors are those of the model as it stands
-    for name in () if mended else served(results)[: figures.PANELS]:
-        factor = results.ledger.factor(name)
-        if factor is not None and math.isfinite(factor.low + factor.high):
-            low, high = sorted((factor.low, factor.high))
-            shown = significant(factor.estimate)
-            words = "about the ordinary one" if shown == "1.0" else f"{shown} times the ordinary one"
-            yield (
-                f"The standard error of {name} should be {words}; anything "
-                f" from {significant(low)} to {significant(high)} is compatible with these data."
-            )
+    if results.advice.state not in ("mean first", "not correctable"):
+        # The factors are those of the model as it stands, with every structure sized.
+        yield from filter(None, (_factor(results, name) for name in served(results)[: figures.PANELS]))
     if results.advice.mean_in_doubt:
         yield "Whether the mean or the dependence makes the pattern is not settled."
     for reason in results.advice.cautions:
@@ -237,7 +242,7 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
                 "findings": [_finding(results, f) for f in first],
                 "others": [_finding(results, f) for f in found if f not in first],
                 "plates": [_plate(p) for p in plates.get(structure, ()) if not p.quiet],
-                "quiet": [_plate(p) for p in plates.get(structure, ()) if p.quiet],
+                "quiet": [_plate(p) for p in [p for p in plates.get(structure, ()) if p.quiet][:QUIET]],
                 "table": _table(tables.evidence(results, structure)),
             }
         )

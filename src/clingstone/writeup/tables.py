@@ -194,7 +194,6 @@ def _finding_cells(results: Results, f: Finding) -> list[Cell]:
     places = _effect_decimals(f)
     effect = f"{f.estimate_name}: {number(f.estimate, places)}" if has else ""
     adjusted = f.p_adjusted
-    label = "" if f.primary or f.verdict == "not applicable" else " (exploratory)"
     where = f" ({pointed_at(results, f)})" if f.verdict == "present" and f.rows else ""
     return [
         Cell(

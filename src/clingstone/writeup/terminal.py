@@ -13,6 +13,7 @@ from clingstone.display import (
     listed,
     number,
     pad,
+    sentence,
     significant,
     span,
     wrapped,
@@ -122,23 +123,14 @@ def _figures(row: Interval, places: int) -> tuple[str, str, str]:
 
 def _why(results: Results, width: int) -> list[str]:
     advice = results.advice
-    sentences = [r.sentence for r in advice.because]
+    said = [r.sentence for r in advice.because]
     if advice.state == "not correctable":
-        sentences += [f"{_words(why)} {_words(needed)}".strip() for _, why, needed in advice.refused[:2]]
-    lines: list[str] = []
-    for sentence in sentences:
-        lines += wrapped(sentence, width)
+        for _, why, needed in advice.refused[:2]:
+            said += [sentence(why), sentence(needed)]
     if not advice.structures:
-        lines += [line for d in results.ledger.detectable for line in wrapped(d.sentence, width)]
-    return lines
-
-
-def _words(text: str) -> str:
-    """A fragment as a sentence of its own."""
-    text = text.strip()
-    if not text:
-        return ""
-    return text[0].upper() + text[1:] + ("" if text[-1] in ".?!" else ".")
+        said += [d.sentence for d in results.ledger.detectable]
+    once = dict.fromkeys(words for words in said if words)
+    return [line for words in once for line in wrapped(words, width)]
 
 
 def _unsettled(results: Results, width: int) -> list[str]:
