@@ -2,12 +2,16 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy import stats
 
+from clingstone.covariance.fits import Fits
 from clingstone.ledger.consequence import inflation, parts, tipping
 from clingstone.ledger.region import region
+from clingstone.structure.serial import Series
 from tests.ledger import factories as make
 
 
@@ -122,6 +126,20 @@ def test_tipping_point_of_a_series_is_where_the_interval_meets_zero():
     scale = float(f.response.ss[0]) / np.trace(M @ V)
     se = np.sqrt(scale * w @ d.Q.T @ V @ d.Q @ w)
     assert abs(w @ f.response.coef[:, 0]) == pytest.approx(stats.t.isf(0.025, d.m) * se, rel=5e-3)
+
+
+def test_tipping_point_at_irregular_times_where_a_rate_is_searched():
+    """The working parameter falls as ρ rises; the same table in whole steps gives nearly the same point."""
+    rng = np.random.default_rng(12)
+    t = np.arange(80)
+    f = make.fits(make.design({"day": t}, tick=t), 0.03 * t + make.ar1(rng, 1, 80, 0.2))
+    (whole,) = tipping(f, ("serial",), ("day",))
+    known = f.design.serial
+    free = Series(known.name, known.part, known.elapsed, known.unit, 1.0, None, "irregular")
+    irregular = replace(f.design, serial=free)
+    g = Fits(replace(f.response, design=irregular), f.run)
+    (found,) = tipping(g, ("serial",), ("day",))
+    assert found.value == pytest.approx(whole.value, abs=0.01)
 
 
 def test_no_tipping_point_is_said_in_words():

@@ -118,6 +118,7 @@ class Table:
 def shared_times(design: Design) -> int:
     """Times at which two series or more have a row."""
     ticks = series_of(design).tick
+    assert ticks is not None
     return int(np.sum(np.unique(ticks, return_counts=True)[1] >= 2))
 
 

@@ -169,6 +169,8 @@ def _scan(fits: Fits, key: str) -> tuple[Array, Array, Array]:
         # Q'KQ bends slowly along the working parameter: a spline over some of it serves the rest.
         grid, nodes = (order[np.unique(np.linspace(0, len(order) - 1, k).astype(int))] for k in (60, NODES))
         known = np.array([algebra.spread(key, theta[:, i]) for i in nodes])
+        if theta[0, nodes[0]] > theta[0, nodes[-1]]:  # a rate falls as the correlation rises
+            nodes, known = nodes[::-1], known[::-1]
         between = CubicSpline(theta[0, nodes], known)(theta[0, grid]) if design.p else known[:1]
         s = np.r_[0.0, rho[grid]]
         spread = np.concatenate(
