@@ -20,6 +20,7 @@ from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import Joint, positive_m, reported
+from clingstone.remedies.places import map_items, map_notes
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Remedy, multi
 from clingstone.remedies.words import bound_notes, gls_account
 
@@ -106,7 +107,9 @@ class GlsReady:
         covariance = W.T @ columns[0].phi @ W if B == 1 else None
         joint = {t.name: _joint(columns, self.W[:, list(t.columns)]) for t in multi(self.design)}
         notes = tuple(dict.fromkeys(note for column in columns for note in column.notes))
-        notes += bound_notes(self.components, model) if B == 1 else ()
+        if B == 1:
+            notes += bound_notes(self.components, model)
+            notes += map_notes(fits, self.remedy.node(fits), columns[0].coef)
         return Estimates(
             estimate,
             se,
@@ -133,7 +136,9 @@ class GlsReady:
         return model, out
 
     def account(self, fits: Fits) -> Account:
-        return gls_account(self.remedy.estimation, self.rule, self.components, fits[self.remedy.node(fits)])
+        node = self.remedy.node(fits)
+        found = gls_account(self.remedy.estimation, self.rule, self.components, fits[node])
+        return replace(found, items=(*found.items, *map_items(fits, node)))
 
     # ---- one column ----------------------------------------------------------------------
 

@@ -3,11 +3,19 @@
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import TYPE_CHECKING
 
 import numpy as np
 
+from clingstone.covariance.smoothness import kernels
 from clingstone.design.design import Design
+from clingstone.display import significant
+from clingstone.maths import reml
 from clingstone.maths.once import Array
+from clingstone.maths.vecchia import NEIGHBOURS
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
 
 MOVED = 2.0  # standard deviations of the difference at which an estimate is said to have moved
 SHIFTED = 0.25  # relative change that counts when the predictor is smooth over the map
@@ -77,6 +85,50 @@ class Spread:
                         "estimate moves with the error model, and these data cannot split the two."
                     )
         return tuple(out)
+
+
+def fitted_spread(fits: Fits, node: frozenset[str]) -> Spread:
+    """The covariance of a fitted node, for the first column of y."""
+    model, algebra = fits[node], fits.algebra(node)
+    theta = model.theta[:, 0]
+    design = fits.design
+    QVQ = np.zeros((design.p, design.p))
+    total = 0.0
+    for key, variance in model.variances.items():
+        QVQ += float(variance[0]) * algebra.spread(key, theta)
+        total += float(variance[0])
+    gram = algebra.gram(theta, fits.response.column(0))
+    return Spread(design, QVQ, gram.QQ / float(reml.scale(gram, design.m)[0]), total)
+
+
+def map_items(fits: Fits, node: frozenset[str]) -> tuple[tuple[str, str], ...]:
+    """What an account of a fit over places adds: other kernels, effective numbers, what is approximate."""
+    sites = fits.design.spatial
+    if "spatial" not in node or sites is None:
+        return ()
+    out = list(fitted_spread(fits, node).items())
+    focus = [j for t in fits.design.focus() for j in t.columns]
+    w = fits.design.basis.contrast(np.eye(fits.design.p))
+    for kernel in kernels(fits, node):
+        name = {0.5: "exponential", 1.5: "Matérn 3/2", 2.5: "Matérn 5/2"}[kernel.smoothness]
+        reach = significant(kernel.reach, 3)
+        words = f"log-likelihood {kernel.drop:.2f} below the best, practical range {reach}"
+        for j in focus[:3]:
+            se = float(np.sqrt(w[:, j] @ kernel.phi @ w[:, j]))
+            words += f", {fits.design.names[j]} {float(w[:, j] @ kernel.coef):.6g} with SE {se:.6g}"
+        out.append((f"{name} correlation", words))
+    if sites.count > fits.run.limits.dense_sites:
+        out.append(
+            ("likelihood", f"each place given {NEIGHBOURS} nearest earlier ones; the constant is approximate")
+        )
+    return tuple(out)
+
+
+def map_notes(fits: Fits, node: frozenset[str], moved: Array) -> tuple[str, ...]:
+    """Coefficients that place and predictor contest, for the first column of y; moved (p,) Q'β̂."""
+    if "spatial" not in node or fits.design.spatial is None:
+        return ()
+    return fitted_spread(fits, node).confounded(fits.response.coef[:, 0], moved)
 
 
 def smoothness(design: Design, j: int) -> float:
