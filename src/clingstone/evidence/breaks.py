@@ -9,9 +9,8 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.design.design import Design
-from clingstone.display import amount, number, p_value, percent, percent_bounds, significant
+from clingstone.display import amount, number, p_value, percent, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.mean import explained
 from clingstone.evidence.read import Plain, degenerate, exceedance, floats
 from clingstone.evidence.serial import series_of
 from clingstone.maths.once import Array, once
@@ -61,7 +60,8 @@ class Break(Plain):
         lost = degenerate(fits.response)
         F = np.where(lost, np.nan, F)
         p = np.array([exceedance(F, drawn)]).ravel()
-        share, low, high = explained(F, 1, fits.design.m - 1, fits.run.settings.confidence)
+        # No interval: the one for a step at a known time would not know that this time was chosen.
+        share = F / (F + fits.design.m - 1)
         scale = float(size[0] / np.sqrt(fits.response.s2[0])) if fits.response.s2[0] > 0 else np.nan
         unit = series_of(fits.design).unit or "time unit"
         when = f"{amount(float(times[at[0]]))} {unit}s after the first time"
@@ -76,8 +76,6 @@ class Break(Plain):
             estimate=share,
             estimate_name="share of the residual variance that a step explains: "
             f"{number(scale, 2)} residual standard deviations, {when}",
-            low=low,
-            high=high,
             n_used=fits.design.n,
             caveats=tuple(caveats),
         )
@@ -98,11 +96,9 @@ class Break(Plain):
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
-        share = percent(column(reading.estimate))
-        share += percent_bounds(column(reading.low), column(reading.high))
         return (
-            f"A step in the level of {reading.estimate_name.partition(': ')[2]}, would explain {share} of "
-            f"what the model leaves over (largest F = {significant(column(reading.statistic), 3)}, "
+            f"A step in the level of {reading.estimate_name.partition(': ')[2]}, would explain "
+            f"{percent(column(reading.estimate))} of what the model leaves over (largest F = {significant(column(reading.statistic), 3)}, "
             f"{p_value(column(reading.p))})."
         )
 
