@@ -29,7 +29,8 @@ class Settings:
     coords : two columns of coordinates.
     lonlat : whether they are longitude and latitude; left out, names and values decide.
     polygons : column of shapes, each stood for by a point inside it.
-    neighbours : "knn" or "band", with a number after a colon ("knn:6", "band:12.5").
+    neighbours : "knn" or "band", with a number after a colon ("knn:6", "band:12.5"), "delaunay", "gabriel",
+        "inverse", "contiguity" or "rook" (shapes that touch), or "pairs:FILE".
     weights, weights_kind : column of weights; whether a weight says how exact a row is or counts rows.
     focus : terms whose intervals matter, by default all but the constant.
     contrasts : named linear combinations of coefficients, {name: {coefficient: weight}}.

@@ -260,8 +260,8 @@ def test_variograms_are_gstats() -> None:
 
 
 def test_matern_three_halves_is_glmmtmbs() -> None:
-    # glmmTMB(CRIME ~ INC + HOVAL + mat(pos + 0 | one), smoothness 1.5, REML): log-likelihood −175.366599800458,
-    # range 1.74894102296538 in h/range; a direct likelihood (scipy) gives the same to 7 digits.
+    # glmmTMB(CRIME ~ INC + HOVAL + mat(pos + 0 | one), smoothness 1.5, REML): log-likelihood
+    # −175.366599800458, range 1.74894102296538 in h/range; a direct likelihood (scipy) gives the same to 7 digits.
     made, y = case("columbus")
     one = run(made, y)
     rough, middle, smooth = kernels(one, frozenset({"spatial"}))
@@ -301,7 +301,7 @@ def test_great_circles_are_geospheres() -> None:
         )
 
 
-def test_lambda_on_the_200_site_scale_of_the_profile() -> None:
+def test_restricted_likelihood_equals_its_dense_twin() -> None:
     # Restricted likelihood has no outside value; at its estimate the dense twin agrees.
     made, y = case("columbus", "queen")
     place = made.spatial.part.first  # type: ignore[union-attr]
