@@ -141,7 +141,7 @@ def test_coverage_with_few_unequal_groups():
     made = case(X, group)
     rng = np.random.default_rng(5)
     hit = {"mixed-slope": 0, "mixed-intercept": 0}
-    reps = 150
+    reps = 100
     for _ in range(reps):
         b0, b1 = rng.normal(size=8), rng.normal(size=8)
         y = b0[group] + b1[group] * X[:, 1] + rng.normal(size=len(group))
@@ -149,9 +149,9 @@ def test_coverage_with_few_unequal_groups():
         for name in hit:
             row = refit(remedy(name), "", f).get("day")
             hit[name] += row.low <= 0 <= row.high
-    # 0.95 − 3 · √(0.95 · 0.05/150); a random intercept alone leaves the slopes out.
-    assert hit["mixed-slope"] / reps > 0.95 - 0.054
-    assert hit["mixed-intercept"] / reps < 0.87
+    # 0.95 − 3 · √(0.95 · 0.05/100); a random intercept alone leaves the slopes out.
+    assert hit["mixed-slope"] / reps > 0.95 - 0.066
+    assert hit["mixed-intercept"] / reps < 0.9
 
 
 # ---- mixed-robust --------------------------------------------------------------------------------------
