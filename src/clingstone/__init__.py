@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from clingstone.needs import InputError as InputError
     from clingstone.needs import Limits as Limits
     from clingstone.needs import NotSupported as NotSupported
+    from clingstone.rehearsing import plan as plan
     from clingstone.rehearsing import rehearse as rehearse
     from clingstone.results import Results as Results
     from clingstone.run import Settings as Settings
@@ -34,6 +35,7 @@ _HOMES = {
     "Examination": "examination",
     "examine": "examination",
     "refit": "examination",
+    "plan": "rehearsing",
     "rehearse": "rehearsing",
     "replay": "examination",
     "InputError": "needs",
@@ -52,6 +54,7 @@ __all__ = [
     "Settings",
     "__version__",
     "examine",
+    "plan",
     "refit",
     "rehearse",
     "replay",

@@ -80,6 +80,92 @@ def register(app: typer.Typer) -> None:
         _with_options(_rehearse)
     )
 
+    app.command("plan", short_help="The interval width to expect with other numbers of groups, rows.")(_plan)
+
+
+# ---- plan ----------------------------------------------------------------------------------------
+
+
+def _plan(
+    folder: Annotated[
+        Path | None,
+        typer.Argument(metavar="[DIR]", help="A folder that clingstone saved; left out, state numbers."),
+    ] = None,
+    term: Annotated[
+        str | None, typer.Option("--term", metavar="NAME", help="Coefficient; else the first in focus.")
+    ] = None,
+    groups: Annotated[
+        str | None, typer.Option("--groups", metavar="LIST", help="Numbers of groups, such as 12,24,36.")
+    ] = None,
+    rows: Annotated[
+        str | None, typer.Option("--rows", metavar="LIST", help="Rows of one group, such as 10,20.")
+    ] = None,
+    icc: Annotated[
+        float | None, typer.Option("--icc", metavar="NUMBER", help="Correlation of two rows of one group.")
+    ] = None,
+    rho: Annotated[
+        float | None, typer.Option("--rho", metavar="NUMBER", help="Correlation of neighbouring visits.")
+    ] = None,
+    reach: Annotated[
+        float | None,
+        typer.Option("--range", metavar="NUMBER", help="Practical range, the map having a side of 1."),
+    ] = None,
+    sd: Annotated[float, typer.Option("--sd", metavar="NUMBER", help="Standard deviation of one row.")] = 1.0,
+    varies: Annotated[
+        str, typer.Option("--varies", metavar="unit|row", help="Between what the two arms differ.")
+    ] = "unit",
+    cost_group: Annotated[
+        float | None, typer.Option("--cost-group", metavar="NUMBER", help="What one more group costs.")
+    ] = None,
+    cost_row: Annotated[
+        float | None, typer.Option("--cost-row", metavar="NUMBER", help="What one more row costs.")
+    ] = None,
+    confidence: Annotated[
+        float | None, typer.Option("--confidence", metavar="NUMBER", help="Level of the intervals.")
+    ] = None,
+    csv: Annotated[bool, typer.Option("--csv", help="Print the table as CSV and nothing else.")] = False,
+    debug: Annotated[bool, typer.Option("--debug", help="On a fault of ours, show the traceback.")] = False,
+) -> None:
+    """The interval width to expect with other numbers of groups (series, places) and rows in each.
+
+    From a saved examination, whose design and error model are enlarged; or from stated numbers, for two
+    arms of equal size.
+    """
+    from clingstone import cli
+    from clingstone.rehearsing import plan
+
+    subject = None if folder is None else _examination(folder, {}, None)
+    made = plan(
+        subject,
+        term=term,
+        groups=_whole(groups, "--groups"),
+        rows=_whole(rows, "--rows"),
+        icc=icc,
+        rho=rho,
+        range=reach,
+        sd=sd,
+        varies=varies,  # type: ignore[arg-type]  # checked by the verb
+        cost_group=cost_group,
+        cost_row=cost_row,
+        confidence=confidence,
+    )
+    cli._write(made.table().to_csv() if csv else f"{made}\n")
+
+
+def _whole(text: str | None, flag: str) -> list[int] | None:
+    if text is None:
+        return None
+    try:
+        found = [int(word) for word in text.replace(" ", "").split(",")]
+    except ValueError:
+        found = []
+    if not found or min(found) < 1:
+        raise InputError(f"{flag} {text!r} is no list of whole numbers", "Write it as 12,24,36.")
+    return found
+
+
+# ---- rehearse ------------------------------------------------------------------------------------
+
 
 def _with_options(command: Any) -> Any:
     """The command with its own options, then one for every field of Settings, then the shared ones."""
@@ -174,12 +260,16 @@ def _examination(subject: Path, given: dict[str, Any], progress: Progress | None
     if subject.is_dir():
         from clingstone import cli
 
-        if any(given[o.name] != o.default for o in settings_options() if o.name != "rehearsal"):
+        if any(given.get(o.name, o.default) != o.default for o in settings_options()):
             raise InputError(
                 f"{subject} is a saved examination, which holds its own settings",
                 "Give the data file instead to examine it with other settings.",
             )
         case = reopened(saved(subject), cli._data_of(subject))
+    elif not given:
+        raise InputError(
+            f"{subject} is no folder that clingstone saved", "Examine the data first, and give that folder."
+        )
     else:
         options = [o for o in settings_options() if o.name != "rehearsal"]
         with one_thread():
