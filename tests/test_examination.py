@@ -10,7 +10,7 @@ import pytest
 
 from clingstone.demo import DEMOS
 from clingstone.examination import Examination, examine, replay
-from clingstone.needs import InputError, NotSupported
+from clingstone.needs import InputError
 from clingstone.results import from_json, to_json
 
 
@@ -95,8 +95,8 @@ def test_an_interval_explains_itself(trial: Examination) -> None:
 
 
 def test_short_forms_stay_short(trial: Examination) -> None:
-    for thing in (trial, trial.case, trial.refit(), trial.evidence):
-        assert len(repr(thing)) < 400, type(thing)
+    for thing in (trial, trial.case, trial.refit(), trial.ledger, trial.evidence):
+        assert len(repr(thing)) < 500, type(thing)
         assert "<table" in thing._repr_html_() or "<svg" in thing._repr_html_(), type(thing)
     assert "advised" in repr(trial) or trial.advice.state in repr(trial)
 
@@ -112,9 +112,18 @@ def test_replay_follows_the_path_as_given(trial: Examination, tmp_path: Path, mo
     assert replay(folder, moved)[0]
 
 
-def test_a_rehearsal_by_number_is_refused_before_the_data_are_read() -> None:
-    with pytest.raises(NotSupported, match="rehearsals are not part"):
-        examine("nowhere.csv", model="y ~ x", rehearsal=100)
+def test_a_rehearsal_has_as_many_replicates_as_were_asked_for() -> None:
+    demo = DEMOS["trial"]
+    found = examine(str(demo.path), **demo.arguments, rehearsal=20).rehearsal
+    assert found is not None
+    assert found.replicates == 20
+    assert {t.replicates for t in found.tallies} == {20}
+    assert examine(str(demo.path), **demo.arguments, rehearsal="none").rehearsal is None
+
+
+def test_a_wrong_number_of_replicates_is_said_before_the_data_are_read() -> None:
+    with pytest.raises(InputError, match="0 replicates cannot be rehearsed"):
+        examine("nowhere.csv", model="y ~ x", rehearsal=0)
 
 
 def test_saving_reports_its_progress(trial: Examination, tmp_path: Path) -> None:

@@ -19,7 +19,8 @@ from clingstone.display import amount, instead
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import Ledger, weigh
-from clingstone.needs import InputError, NotSupported
+from clingstone.needs import InputError
+from clingstone.rehearsal.rehearsal import checked
 from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.rehearsal.verdict import advised as rehearsed_advice
 from clingstone.remedies import explain as explain_at
@@ -85,18 +86,10 @@ def examine(
     NotSupported : these data cannot carry what was asked.
     """
     settings = settings_of({k: v for k, v in locals().items() if k not in ("data", "progress")})
-    _no_rehearsal(settings)
+    if isinstance(settings.rehearsal, int):
+        checked(settings.rehearsal)  # before the data are read
     with one_thread():
         return examined(Case.of(data, settings), Run(settings, report=progress))
-
-
-def _no_rehearsal(settings: Settings) -> None:
-    """Stop before the data are read when what is asked cannot be done."""
-    if isinstance(settings.rehearsal, int):
-        raise NotSupported(
-            "rehearsals are not part of this version",
-            "Leave rehearsal at 'auto'; the advice then rests on its rules.",
-        )
 
 
 def settings_of(arguments: Mapping[str, Any]) -> Settings:

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass
 
+from clingstone.display import Column, Table, percent, percent_bounds
 from clingstone.evidence.finding import Verdict
 from clingstone.needs import Family
 
@@ -92,7 +93,7 @@ class Detectable:
     sentence: str
 
 
-@dataclass(frozen=True)
+@dataclass(frozen=True, repr=False)
 class Ledger:
     """Structures, their sizes, and their consequence."""
 
@@ -106,6 +107,29 @@ class Ledger:
     refused: tuple[tuple[str, str], ...] = ()  # (key, reason) of structures not estimated
     history: tuple[str, ...] = ()
     method: str = ""  # how the intervals of shares, parameters and factors were got
+
+    def __repr__(self) -> str:
+        told = [f"{s.label} {s.verdict}{self._share_words(s.key)}" for s in self.standing]
+        return f"<Ledger: {'; '.join(told) or 'no structure declared'}>"
+
+    def table(self) -> Table:
+        """Each structure with its verdict and its share of what the model leaves over, for a person."""
+        columns = (
+            Column("structure", "structure"),
+            Column("verdict", "verdict"),
+            Column("share", "share of the residual variance", "right"),
+            Column("because", "because"),
+        )
+        shares = {s.key: self._share_words(s.key).removeprefix(", ") for s in self.standing}
+        rows = [(s.label, s.verdict, shares[s.key], s.because) for s in self.standing]
+        return Table.of("Ledger", columns, rows)
+
+    def _repr_html_(self) -> str:
+        return self.table().to_html()
+
+    def _share_words(self, key: str) -> str:
+        found = self.share(key)
+        return "" if found is None else f", {percent(found.share)}{percent_bounds(found.low, found.high)}"
 
     def factor(self, term: str) -> Inflation | None:
         """Standard-error factors of a coefficient: low, estimate, high."""
