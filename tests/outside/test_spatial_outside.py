@@ -261,7 +261,7 @@ def test_variograms_are_gstats() -> None:
 
 def test_matern_three_halves_is_glmmtmbs() -> None:
     # glmmTMB(CRIME ~ INC + HOVAL + mat(pos + 0 | one), smoothness 1.5, REML): log-likelihood
-    # −175.366599800458, range 1.74894102296538 in h/range; a direct likelihood (scipy) gives the same to 7 digits.
+    # −175.366599800458, range 1.74894102296538 in h/range; a direct likelihood (scipy) agrees to 7 digits.
     made, y = case("columbus")
     one = run(made, y)
     rough, middle, smooth = kernels(one, frozenset({"spatial"}))
