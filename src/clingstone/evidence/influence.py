@@ -135,7 +135,7 @@ def _predicted(fits: Fits, part: Partition, tau2: Array, sigma2: Array) -> tuple
     return z, size, np.asarray(2 * special.ndtr(-np.abs(z)))
 
 
-# ---- what the coefficients lean on ------------------------------------------------------------------------
+# ---- what the coefficients lean on ----
 
 
 @dataclass(frozen=True, eq=False)

@@ -176,7 +176,7 @@ def criterion(gram: Gram, block: Block, L: Array, m: int) -> tuple[float, Array]
     return value + m * (float(np.log(2 * np.pi * c / m)) + 1), gradient
 
 
-# ---- covariances and their working parameters ------------------------------------------------------
+# ---- covariances and their working parameters ----
 
 
 def factor(log_variances: Array, z: Array) -> Array:
@@ -220,7 +220,7 @@ def parameters(gamma: Array, free: Array, largest: float) -> tuple[Array, Array]
     return np.log(variance), z
 
 
-# ---- expected information --------------------------------------------------------------------------
+# ---- expected information ----
 
 
 def expected(n: int, C: Array, H: Array, sigma2: float, gamma: Array, E: Array) -> Expected:

@@ -264,7 +264,7 @@ def _parsed(design: Design, at: str) -> tuple[Partition, tuple[str, ...]]:
     )
 
 
-# ---- words ------------------------------------------------------------------------------------------
+# ---- words ----
 
 
 def _spread_items(bundle: Bundle, theta: Array, sigma2: float) -> list[tuple[str, str]]:
