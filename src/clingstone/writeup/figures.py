@@ -175,8 +175,8 @@ def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
     at = 0.0
     for r, height in zip(rungs, heights, strict=True):
         line = at + (height - 16 if plan.phone else height / 2)
-        if low <= 0 <= high:
-            reach = (line - 9, line + 9) if plan.phone else (at, at + height)
+        if low <= 0 <= high and (plan.phone or not at):
+            reach = (line - 9, line + 9) if plan.phone else (0, tall)
             panel.plot([0, 0], reach, color=LIGHT.faint, linewidth=1.2, zorder=0)
         _draw_rung(panel, r, line, low, high)
         _rung_words(figure, r, top + at, height, plan)
