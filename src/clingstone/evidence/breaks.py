@@ -96,10 +96,10 @@ class Break(Plain):
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
+        share, size = percent(column(reading.estimate)), reading.estimate_name.partition(": ")[2]
         return (
-            f"A step in the level of {reading.estimate_name.partition(': ')[2]}, would explain "
-            f"{percent(column(reading.estimate))} of what the model leaves over (largest F = {significant(column(reading.statistic), 3)}, "
-            f"{p_value(column(reading.p))})."
+            f"A step in the level of {size}, would explain {share} of what the model leaves over (largest "
+            f"F = {significant(column(reading.statistic), 3)}, {p_value(column(reading.p))})."
         )
 
 
