@@ -41,7 +41,7 @@ class Settings:
     missing, ties : what to do with a missing id, time or place; what to do with equal times in a series.
     confidence, alternative : level of intervals, from 0.5 up to 1; direction of the primary tests.
     material : band of standard-error factors that do not matter.
-    rehearsal : "auto", "none" or a number of replicates.
+    rehearsal : "auto" (a short one), "none", or the number of replicates under each error model.
     seed : start of every random number.
     """
 

@@ -79,9 +79,18 @@ def _of_gls(ready: GlsReady, study: Study) -> float:
     return rows + 40.0 * d * (2 + 0.001 * cells * (p + 1) ** 2 * (3 if serial else 1))
 
 
+def drawable(study: Study) -> bool:
+    """Whether the fewest replicates can be drawn at all in the time of a short rehearsal."""
+    return of_draw(study) * max(1, len(study.truths)) * FEWEST <= _budget(study)
+
+
+def _budget(study: Study) -> float:
+    return SHORT if study.fits.design.n <= SMALL else LONGER
+
+
 def affordable(study: Study) -> tuple[list[int], list[tuple[str, str, str]], int]:
     """Contenders of a short rehearsal (by place), those left out with the reason, replicates per truth."""
-    budget = SHORT if study.fits.design.n <= SMALL else LONGER
+    budget = _budget(study)
     T = max(1, len(study.truths))
     price = [of(c, study) for c in study.contenders]
     total = of_draw(study)

@@ -24,6 +24,7 @@ from clingstone.run import Run
 LONG = 10_000  # replicates per truth of a long rehearsal, at the most
 FIRST = 1_000  # the first look at the ranking; later looks at twice as many each time
 SURE = 0.0025  # Monte-Carlo error at which a coverage is known well enough whatever it is
+TOO_LARGE = "these data are too large for a short rehearsal"
 BUILT = ("repaired-mean",)  # advice that is no remedy of its own
 
 Choices = Iterable[tuple[str, str]]
@@ -52,8 +53,14 @@ def planned(fits: Fits, ledger: Ledger, choices: Choices, replicates: str | int 
             "Give the data and the model formula, or a fitted model with its data.",
         )
     choices = tuple(choices)
+    short = not isinstance(replicates, int)
+    if not short:
+        checked(int(replicates))
+    seen = truths(fits, ledger)
+    if short and not cost.drawable(Study(fits, seen, (), ())):
+        raise NotSupported(TOO_LARGE, "Run clingstone rehearse.")
     wanted = [c for c in choices if c[0] not in BUILT]
-    found, left = study(fits, truths(fits, ledger), wanted)
+    found, left = study(fits, seen, wanted)
     found = replace(found, report=fits.run.report)
     left += [
         (id, at, "it is built from another remedy on a wider model") for id, at in choices if id in BUILT
@@ -64,7 +71,7 @@ def planned(fits: Fits, ledger: Ledger, choices: Choices, replicates: str | int 
         return Plan(found, replicates, tuple(left))
     kept, dear, count = cost.affordable(found)
     if not kept:
-        raise NotSupported("these data are too large for a short rehearsal", "Run clingstone rehearse.")
+        raise NotSupported(TOO_LARGE, "Run clingstone rehearse.")
     return Plan(without(found, kept), count, (*left, *dear))
 
 
