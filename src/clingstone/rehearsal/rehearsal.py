@@ -199,11 +199,13 @@ def reason(found: Rehearsal, advice: Advice, named: str) -> Reason | None:
     row = found.scores.get(advice.remedy, advice.at)
     if row is None or not found.scores.adequate(advice.remedy, advice.at):
         return None
+    narrower = [r for r in found.scores.rows if r.width < 0.99 * row.width]
+    best = not any(found.scores.adequate(r.remedy, r.at) for r in narrower)
+    alone = ", and no other remedy that did as well was narrower by more than 1 %" if best else ""
     return Reason(
         f"Rehearsed on this design, the intervals of {named} held the true value in at least "
         f"{number(100 * row.coverage, 1)} % of replicates under each of {len(found.truths)} error models "
-        f"(Monte-Carlo error {number(100 * row.mcse, 1)} points), and no other remedy that covers the same "
-        "and did as well was narrower by more than 1 %.",
+        f"(Monte-Carlo error {number(100 * row.mcse, 1)} points){alone}.",
         "rehearsed",
         (("smallest coverage", number(row.coverage, 3)), ("replicates per truth", f"{found.replicates:,}")),
         "",
