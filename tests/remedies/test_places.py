@@ -250,7 +250,7 @@ def test_dependence_over_the_whole_map_is_refused() -> None:
     working = run[{"spatial"}]
     strong = replace(working, variances={"spatial": np.array([9.0]), "row": np.array([0.1])})
     strong = replace(strong, shape={"spatial.range": np.array([5.0])})
-    with pytest.raises(NotSupported, match="this way holds up to 0.15"):
+    with pytest.raises(NotSupported, match=r"this way holds up to 0\.15"):
         SpatialComponents().prepare(made, strong)
 
 
