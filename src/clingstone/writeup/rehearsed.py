@@ -7,7 +7,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 from clingstone.advice.entries import Score
-from clingstone.display import Cell, Column, Table, count, listed, number, percent, sentence
+from clingstone.display import Cell, Column, Table, count, number, percent, sentence
 from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT
@@ -50,7 +50,8 @@ def methods_words(results: Results) -> Iterable[str]:
     found = results.rehearsal
     if found is None:
         return
-    truths = listed(t.words for t in found.truths)
+    truths = "; ".join(f"({k}) {t.words}" for k, t in enumerate(found.truths, start=1))
+    truths = truths if len(found.truths) > 1 else truths.removeprefix("(1) ")
     yield (
         f"The refits were rehearsed on {count(found.replicates, 'simulated response')} of this design under "
         f"each of {count(len(found.truths), 'error model')} ({truths})."
