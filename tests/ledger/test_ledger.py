@@ -161,3 +161,17 @@ def test_numbers_with_their_units(number, unit, words):
     from clingstone.ledger.sizes import in_units
 
     assert in_units(number, unit) == words
+
+
+def test_tipping_points_at_irregular_times():
+    """There the working parameter is a rate, which falls as the correlation rises."""
+    pd = pytest.importorskip("pandas")
+    import clingstone
+
+    rng = np.random.default_rng(1)
+    t = np.sort(rng.choice(400, 60, replace=False)) / 7
+    table = pd.DataFrame({"t": t, "x": t, "y": 0.03 * t + rng.standard_normal(60)})
+    found = clingstone.examine(table, model="y ~ x", time="t", rehearsal="none").ledger.tipping
+    (point,) = [q for q in found if q.term == "x"]
+    assert point.value is not None
+    assert 0 < point.value < 0.95

@@ -234,6 +234,16 @@ CAVEATS = (
         "strong",
     ),
     Rule(
+        "estimate-moves",
+        (GROUP | SERIAL) & ~SPATIAL & fact("coefficient moves"),
+        Then("caution"),
+        "The coefficient of {term that moves} moves by more than its standard error when dependence enters "
+        "the model: what groups or series keep throughout may go with the predictor. Compare its effect "
+        "within them.",
+        "mundlak-1978, bell-jones-2015",
+        "strong",
+    ),
+    Rule(
         "unequal-variances",
         fact("unequal variances"),
         Then("caution"),

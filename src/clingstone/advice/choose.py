@@ -6,7 +6,7 @@ from clingstone.advice import headline as say
 from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
 from clingstone.advice.facts import Facts
 from clingstone.advice.pick import covers, pick, rank, same, serves
-from clingstone.advice.refitted import advised_facts, compared
+from clingstone.advice.refitted import advised_facts, compared, find
 from clingstone.advice.rules import CAVEATS, NO_REMEDY, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.advice.structures import FAMILIES, covered, families, needed
@@ -43,7 +43,7 @@ def settle(
     state = state_rule.then.what if state_rule is not None else ""
     chosen, rule = None, None
     if state == "mean first":
-        chosen = next((r for r in refits if r.remedy == REPAIRED), None)
+        chosen = find(refits, REPAIRED)
         rule = shortlist.inner[1] if shortlist.inner is not None else None
     elif not state:
         facts = here = compared(facts, refits)
@@ -55,11 +55,24 @@ def settle(
     here = here.plus(advised_facts(here, refits, chosen, need, known))
     beside = _beside(state_rule, here)
     decided = _state(state_rule, beside)
-    advised = (
-        next((r for r in refits if r.remedy == "ordinary"), None) if decided == "nothing found" else chosen
-    )
+    advised = find(refits, "ordinary") if decided == "nothing found" else chosen
     because = [r for r in (state_rule, rule) if r is not None and r.id != "nothing-to-cover"]
-    present, covering = _families(here, "present"), families(here.ledger, need)
+    return _written(shortlist, facts, here, refits, decided, state_rule, because, beside, advised)
+
+
+def _written(
+    shortlist: Shortlist,
+    facts: Facts,
+    here: Facts,
+    refits: tuple[Refit, ...],
+    decided: State,
+    state_rule: Rule | None,
+    because: list[Rule],
+    beside: list[Rule],
+    advised: Refit | None,
+) -> Advice:
+    """The advice as plain words; ``here`` are the facts with the mean repaired where it comes first."""
+    present, covering = _families(here, "present"), families(here.ledger, needed(here.ledger))
     return Advice(
         state=decided,
         headline=_headline(decided, state_rule, here, refits, advised),

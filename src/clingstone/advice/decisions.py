@@ -207,6 +207,20 @@ PREFER = (
         "weak",
     ),
     Rule(
+        "variance-at-zero",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & fact("focus at group level")
+        & (fact("groups") < 40)
+        & fact("mixed refit at its bound"),
+        Then("prefer", "mixed-intercept", at="mixed level", firm=True),
+        "The variance between groups was estimated at zero: by the same chance the robust interval is at its "
+        "shortest, while that of the random intercept keeps its degrees of freedom and fails less often.",
+        "kenward-roger-1997, own",
+        "moderate",
+    ),
+    Rule(
         "few-groups",
         GROUP & ~SERIAL & ~SPATIAL & fact("focus at group level") & (fact("groups") < 40),
         Then("prefer", "mixed-intercept", at="mixed level"),

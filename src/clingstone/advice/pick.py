@@ -43,6 +43,9 @@ ORDER = (
     REPAIRED,
 )
 
+# Second opinions stand beside the advised refit; they are advised where no other held in a rehearsal.
+SECOND = ("cluster-jackknife", "wild-cluster-bootstrap", "multiway-cluster")
+
 Reached = Mapping[tuple[str, str], frozenset[str]]  # (remedy, at) → keys of the structures it covers
 
 
@@ -65,8 +68,9 @@ def pick(
     usable = [r for r in refits if r.remedy != REPAIRED and serves(r, facts)]
     found, rule = _by_rule(facts, usable, twins)
     if scores is not None and not (rule is not None and rule.then.firm):
-        same_question = [r for r in usable if r.estimand == "pooled"]
-        best = _rehearsed([r for r in same_question if need <= covers(r, facts, reached)], scores)
+        same_question = [r for r in usable if r.estimand == "pooled" and need <= covers(r, facts, reached)]
+        first = [r for r in same_question if r.remedy not in SECOND]
+        best = _rehearsed(first, scores) or _rehearsed(same_question, scores)
         if best is not None:
             return best, None
     if found is not None:
@@ -132,7 +136,7 @@ def _rehearsed(fits: list[Refit], scores: Scores) -> Refit | None:
     return min((f for f in fits if same(f, best)), key=lambda f: rank(f.remedy))
 
 
-SAME = 1e-6  # relative difference below which two refits gave the same numbers
+SAME = 1e-3  # difference, in standard errors, below which two refits gave the same numbers
 
 
 def same(one: Refit, other: Refit) -> bool:

@@ -4,14 +4,13 @@ from __future__ import annotations
 
 from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
-from clingstone.advice.pick import SAME, Reached, covers, same
+from clingstone.advice.pick import SECOND, Reached, covers, same
 from clingstone.advice.structures import subject
 from clingstone.display import listed
 from clingstone.remedies.remedy import Interval, Refit
 
 ROBUST = "cluster-robust"
-# A second look at the advised interval by other means, for the same rows; the advised one is no second.
-SECOND = ("cluster-jackknife", "wild-cluster-bootstrap")
+NOTHING = 1e-6  # a share that is estimated at zero
 ORDERED = ("ar1", "car1", "arma", "joint")
 
 
@@ -33,6 +32,7 @@ def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     out = [named("df of the robust refit", min((row.df for row in focus_rows(robust, facts)), default=0.0))]
     mixed = find(refits, "mixed-intercept", facts.word("mixed level"))
     if mixed is not None:
+        out.append(yes("mixed refit at its bound", mixed.boundary, "a variance of the mixed refit is zero"))
         out += _ratio("robust over mixed standard error", robust, mixed, facts)
     slope = find(refits, "mixed-slope")
     settled = slope is not None and slope.converged and not slope.boundary
@@ -85,7 +85,7 @@ def _no_variance(facts: Facts, chosen: Refit, reached: Reached) -> bool:
     """A group level that the refit covers by its error model has a share of nothing."""
     keys = covers(chosen, facts, reached)
     found = (facts.ledger.share(key) for key in keys if key.startswith("group:"))
-    return any(share is not None and share.share <= SAME for share in found)
+    return any(share is not None and share.share <= NOTHING for share in found)
 
 
 def _moved(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
