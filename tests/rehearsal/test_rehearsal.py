@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import os
 import signal
+import sys
 import threading
 import time
 from dataclasses import replace
@@ -195,6 +196,13 @@ def test_a_scheduler_that_is_not_there_is_named(monkeypatch):
     monkeypatch.setattr("clingstone.rehearsal.engine.PATIENCE", 1)
     with pytest.raises(InputError, match=r"no Dask scheduler answered at tcp://127\.0\.0\.1:9 "):
         rehearse(plan(10), engine=Engine("dask", scheduler="tcp://127.0.0.1:9"))
+
+
+def test_without_the_package_the_engine_says_how_to_get_it(monkeypatch):
+    monkeypatch.setitem(sys.modules, "distributed", None)
+    with pytest.raises(NotSupported, match="distributed is not installed") as error:
+        rehearse(plan(10), engine=Engine("dask", scheduler="tcp://127.0.0.1:9"))
+    assert "clingstone[dask]" in error.value.hint
 
 
 def test_a_cluster_that_loses_a_worker_gives_the_same_numbers():
