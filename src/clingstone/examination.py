@@ -23,6 +23,7 @@ from clingstone.needs import InputError
 from clingstone.rehearsal.rehearsal import checked
 from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.rehearsal.verdict import advised as rehearsed_advice
+from clingstone.rehearsal.verdict import heeded
 from clingstone.remedies import explain as explain_at
 from clingstone.remedies import refit as refit_at
 from clingstone.remedies import remedy as remedy_of
@@ -271,9 +272,14 @@ class Examination:
 
     def with_rehearsal(self, found: Rehearsal) -> Examination:
         """A new examination that holds a rehearsal, with an advice that has heard it."""
-        from clingstone.rehearsing import heed
-
-        return heed(self, found)
+        fits = self.fits
+        with one_thread():
+            facts = gather_facts(fits, self.evidence, self.ledger)
+            shortlist = shortlist_for(facts, fits)
+            whole = tuple(r for r in self.refits if r.coefficients or not r.intervals)
+            first = settle(shortlist, facts, whole, None)
+            advice = heeded(found, facts, shortlist, whole, first)
+        return self.rewritten(advice, found)
 
     def rewritten(self, advice: Advice, found: Rehearsal) -> Examination:
         """The same evidence and refits under another advice, with the rehearsal behind it."""

@@ -9,8 +9,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.advice.choose import settle, shortlist_for
-from clingstone.advice.facts import facts as gather_facts
+from clingstone.examination import Examination, examined
 from clingstone.ledger.ledger import focus_rows
 from clingstone.needs import InputError
 from clingstone.rehearsal.engine import Engine, Name
@@ -19,14 +18,12 @@ from clingstone.rehearsal.plan import planned as plan_sizes
 from clingstone.rehearsal.rehearsal import LONG, checked, planned
 from clingstone.rehearsal.rehearsal import rehearse as run_plan
 from clingstone.rehearsal.tallies import Rehearsal
-from clingstone.rehearsal.verdict import heeded
 from clingstone.remedies import remedy as remedy_of
 from clingstone.remedies.remedy import rows as all_rows
 from clingstone.run import Progress, Run, Settings, one_thread
 
 if TYPE_CHECKING:
     from clingstone.case import Case
-    from clingstone.examination import Examination
 
 
 def rehearse(
@@ -95,8 +92,6 @@ def rehearse(
 
 
 def _examined(subject: Case | Examination, progress: Progress | None) -> Examination:
-    from clingstone.examination import Examination, examined
-
     if isinstance(subject, Examination):
         return subject
     return examined(subject, Run(replace(subject.settings, rehearsal="none"), report=progress))
@@ -176,15 +171,3 @@ def _from_examination(examination: Examination, term: str | None) -> tuple[Basic
     theta = np.asarray(model.theta[:, 0])
     held = tuple(int(i) for i in np.flatnonzero(model.at_bound[:, 0]))
     return Basics(fits.design, model.node, theta, float(model.sigma2[0]), wanted, said, held), fits.run
-
-
-def heed(examination: Examination, found: Rehearsal) -> Examination:
-    """A new examination whose advice has heard the rehearsal."""
-    fits = examination.fits
-    with one_thread():
-        facts = gather_facts(fits, examination.evidence, examination.ledger)
-        shortlist = shortlist_for(facts, fits)
-        whole = tuple(r for r in examination.refits if r.coefficients or not r.intervals)
-        first = settle(shortlist, facts, whole, None)
-        advice = heeded(found, facts, shortlist, whole, first)
-    return examination.rewritten(advice, found)
