@@ -238,7 +238,8 @@ def test_precision_weights_agree_with_statsmodels() -> None:
         },
         rel=1e-9,
     )
-    assert float(case.response.s2[0]) == pytest.approx(fit.scale, rel=1e-9)
+    # statsmodels' scale is per unit of weight; weights of mean 1 give that of a row of ordinary weight
+    assert float(case.response.s2[0]) == pytest.approx(fit.scale / frame["size"].mean(), rel=1e-9)
     assert Case.from_formula(frame.assign(size=1), "pain ~ dose", weights="size").design.root is None
 
 
@@ -256,6 +257,18 @@ def test_frequency_weights_are_rows_repeated() -> None:
     assert said.startswith(
         "size counts rows (weights_kind='frequency') and is not a whole number in rows 1, 2, 3, 4"
     )
+    assert "precision" in hint
+
+
+@pytest.mark.parametrize("order", [{"time": "week"}, {"coords": ("dose", "week"), "lonlat": False}])
+def test_frequency_weights_do_not_go_with_times_or_places(order) -> None:
+    frame = visits().dropna().assign(times=2)
+    said, hint = message(
+        lambda: Case.from_formula(
+            frame, "pain ~ dose", weights="times", weights_kind="frequency", group="clinic", **order
+        )
+    )
+    assert said.startswith("times counts rows (weights_kind='frequency') and " + next(iter(order)))
     assert "precision" in hint
 
 
@@ -283,8 +296,9 @@ def test_a_weighted_fit_keeps_its_weights() -> None:
     fit = smf.wls("pain ~ dose", frame, weights=frame["size"]).fit()
     case = Case.from_fit(fit, **ALL)
     assert case.design.root is not None
-    assert case.design.root**2 == pytest.approx(frame["size"].iloc[case.kept].to_numpy())
-    assert float(case.response.s2[0]) == pytest.approx(fit.scale, rel=1e-9)
+    size = frame["size"].iloc[case.kept].to_numpy()
+    assert case.design.root**2 == pytest.approx(size / size.mean())
+    assert float(case.response.s2[0]) == pytest.approx(fit.scale / size.mean(), rel=1e-9)
 
 
 def test_arrays_with_ids_from_the_frame() -> None:
@@ -463,3 +477,31 @@ def test_arrays_of_a_case_are_not_to_be_edited() -> None:
         case.design.covariates["dose"][0] = 1.0
     with pytest.raises(ValueError, match="read-only"):
         case.kept[0] = 1
+
+
+def test_copies_that_were_declared_are_not_counted_as_copies() -> None:
+    from clingstone.covariance.fits import Fits
+    from clingstone.evidence import gather
+    from clingstone.run import Run
+
+    frame = visits().dropna().assign(times=2)
+    case = Case.from_formula(frame, "pain ~ dose", weights="times", weights_kind="frequency", group="clinic")
+    found = gather(Fits(case.response, Run(case.settings))).get("duplicates")
+    assert found is not None
+    assert found.verdict == "not applicable"
+    assert "frequency" in found.sentence
+
+
+def test_the_unit_of_precision_weights_changes_no_share() -> None:
+    from clingstone.covariance.fits import Fits
+    from clingstone.evidence import gather
+    from clingstone.ledger.ledger import weigh
+    from clingstone.run import Run
+
+    found = []
+    for scale in (1, 1000):
+        frame = visits().dropna().assign(size=lambda d, s=scale: d["size"] * s)
+        case = Case.from_formula(frame, "pain ~ dose", weights="size", group="clinic")
+        fits = Fits(case.response, Run(case.settings))
+        found.append([s.share for s in weigh(fits, gather(fits)).shares])
+    assert found[0] == pytest.approx(found[1], rel=1e-6, abs=1e-9)

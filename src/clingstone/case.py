@@ -226,7 +226,7 @@ class Case:
         roles: dict[Role, tuple[str, ...]] = {"predictor": fit.columns, **declared.roles}
         got = columns.gather(table, roles, settings.missing, list(roles["place"]))
         found = fit.blocks.ordered(got.kept)
-        root = None if fit.weights is None else np.sqrt(fit.weights[got.kept])
+        root = None if fit.weights is None else _scaled(fit.weights[got.kept])
         dropped = dict(got.dropped)
         if unused := fit.table.rows - len(fit.places):
             dropped = {"not used by the fit": unused} | dropped
@@ -359,11 +359,20 @@ def _residuals(got: Columns, name: str) -> Blocks:
 
 
 def _root(got: Columns, settings: Settings) -> Array | None:
-    """Square roots of precision weights."""
+    """Square roots of precision weights of mean 1."""
     if settings.weights is None or settings.weights_kind == "frequency":
         return None
     weight = got.frame[settings.weights].to_numpy(dtype=float)
-    return None if np.all(weight == 1) else np.sqrt(weight)
+    return None if np.all(weight == 1) else _scaled(weight)
+
+
+def _scaled(weight: Array) -> Array:
+    """Square roots of weights brought to a mean of 1: only their ratios are known to mean anything.
+
+    The variance of single rows, and with it every share, is then that of a row of ordinary weight,
+    whatever unit the weights came in.
+    """
+    return np.asarray(np.sqrt(weight / weight.mean()))
 
 
 def _group_summaries(design: Design) -> tuple[GroupSummary, ...]:

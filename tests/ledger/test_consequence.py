@@ -108,8 +108,16 @@ def test_tipping_point_of_a_group_is_where_the_interval_meets_zero():
     scale = float(y @ M @ y) / np.trace(M @ V)
     se = np.sqrt(scale * (bread @ X.T @ V @ X @ bread)[1, 1])
     beta = float((bread @ X.T @ y)[1])
+    # Satterthwaite's df from the parts of the coefficient between and within clinics, written out:
+    # 12 clinics and two columns of clinics (constant, arm), 240 rows less 12 clinics and x
+    a = X @ bread[:, 1]
+    between = float(np.sum((Z @ np.linalg.pinv(Z) @ a) ** 2) / np.sum(a**2))
+    n0 = np.trace(Z.T @ M @ Z) / 10
+    parts_of_variance = between * (1 + tip.value * (n0 - 1)), (1 - between) * (1 - tip.value)
+    df = sum(parts_of_variance) ** 2 / (parts_of_variance[0] ** 2 / 10 + parts_of_variance[1] ** 2 / 227)
+    assert 9.9 < df < 12
     # linear between values 0.01 apart
-    assert abs(beta) == pytest.approx(stats.t.isf(0.025, d.m) * se, rel=2e-3)
+    assert abs(beta) == pytest.approx(stats.t.isf(0.025, df) * se, rel=2e-3)
     assert f"{tip.value:.2g}" in tip.sentence
 
 

@@ -7,7 +7,7 @@ import pytest
 from scipy import optimize, stats
 
 from clingstone.evidence import TESTS, gather
-from clingstone.ledger.detect import _groups, _series, power, primary_test, smallest
+from clingstone.ledger.detect import _groups, _series, _sites, detectable, power, primary_test, smallest
 from clingstone.ledger.ledger import weigh
 from clingstone.run import one_thread
 from tests.ledger import factories as make
@@ -94,3 +94,33 @@ def test_same_seed_same_number():
     with one_thread():
         first, second = (weigh(f, gather(f)).detectable for f in (silent_groups(), silent_groups()))
     assert first == second
+
+
+def test_power_is_counted_at_the_level_that_a_verdict_needs():
+    """Among three primary tests the smallest p has to be below 0.05/3: the F power at that level."""
+    G, m = 15, 8
+    f = silent_groups(G, m)
+    with one_thread():
+        evidence = gather(f)
+        standing = weigh(f, evidence).standing
+        (one,) = detectable(f, standing, TESTS, primary=1)
+        (three,) = detectable(f, standing, TESTS, primary=3)
+    cut = stats.f.isf(0.05 / 3, G - 1, G * (m - 1))
+
+    def lacking(icc: float) -> float:
+        return float(stats.f.sf(cut / (1 + m * icc / (1 - icc)), G - 1, G * (m - 1))) - 0.8
+
+    assert three.value == pytest.approx(optimize.brentq(lacking, 0.001, 0.9), abs=0.03)
+    assert three.value > one.value
+
+
+def test_a_field_that_is_looked_for_fades_over_a_third_of_the_map():
+    rng = np.random.default_rng(4)
+    xy = rng.uniform(0, 10, (40, 2))
+    f = make.fits(make.design({"x": xy[:, 0]}, xy=xy), rng.standard_normal(40))
+    draw = _sites(f)
+    e = draw(1.0, rng, 4000)
+    far = np.linalg.norm(xy[0] - xy[1:], axis=1)
+    seen = e[1:] @ e[0] / 4000
+    reach = f.design.spatial.extent / 3
+    np.testing.assert_allclose(seen, np.exp(-3 * far / reach), atol=0.07)

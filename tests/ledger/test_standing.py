@@ -15,9 +15,11 @@ from tests.ledger import factories as make
 NAN = float("nan")
 
 
-def seen(key: str, alone: float, given: float, matters: bool = False) -> Seen:
+def seen(key: str, alone: float, given: float, widens: bool = False, matters: bool = False) -> Seen:
     family = "group" if key.startswith("group:") else key
-    return Seen(key, family, key.split(":")[-1], alone, alone, given, (), "", matters, 1.5, "x")
+    return Seen(
+        key, family, key.split(":")[-1], alone, alone, given, (), "", widens or matters, 1.5, "x", widens
+    )
 
 
 def verdicts(*rows: Seen) -> list[tuple[str, str]]:
@@ -36,9 +38,7 @@ def test_a_signal_that_another_explains_is_not_a_second_structure():
 
 
 def test_an_explained_signal_that_could_still_matter_is_unclear():
-    (serial, because), _ = verdicts(
-        seen("serial", 0.001, 0.4, matters=True), seen("group:ward", 0.001, 0.001)
-    )
+    (serial, because), _ = verdicts(seen("serial", 0.001, 0.4, widens=True), seen("group:ward", 0.001, 0.001))
     assert serial == "unclear"
     assert "may be explained by ward" in because
     assert "1.5 times" in because
@@ -59,12 +59,54 @@ def test_a_masked_structure_needs_more(p, verdict):
 def test_alone_without_others_rests_on_its_own_test():
     assert verdicts(seen("group:ward", 0.001, NAN))[0][0] == "present"
     assert verdicts(seen("group:ward", 0.3, NAN))[0][0] == "not detected"
-    assert verdicts(seen("group:ward", 0.3, NAN, matters=True))[0][0] == "unclear"
+    assert verdicts(seen("group:ward", 0.3, NAN, widens=True))[0][0] == "unclear"
+
+
+def test_what_could_only_narrow_an_interval_is_not_called_unclear():
+    """The rule of the tests: only an interval that would be too short is a reason for protection."""
+    assert verdicts(seen("spatial", 0.3, NAN, matters=True))[0][0] == "not detected"
 
 
 def test_a_component_without_a_test_of_its_own_rests_on_the_joint_fit():
     (site, _), _ = verdicts(seen("group:site", NAN, 0.001), seen("spatial", 0.001, 0.001))
     assert site == "present"
+
+
+def repeated(rng, S: int = 25, m: int = 4, share: float = 0.5):
+    """Places that each have an effect of their own, and no likeness of neighbours."""
+    site, xy = np.repeat(np.arange(S), m), rng.uniform(0, 10, (S, 2))
+    y = np.sqrt(share) * rng.standard_normal(S)[site] + np.sqrt(1 - share) * rng.standard_normal(S * m)
+    return make.fits(make.design({"x": rng.standard_normal(S * m)}, xy=xy, site=site), y)
+
+
+def test_rows_of_one_place_have_a_test_of_their_own():
+    """The F of an analysis of variance by place, and Bonferroni's factor for one more structure."""
+    f = repeated(np.random.default_rng(5))
+    with one_thread():
+        evidence = gather(f)
+        found = weigh(f, evidence).of("group:site")
+    d, Z = f.design, np.eye(25)[f.design.spatial.part.codes]
+    y = f.response.residual[:, 0]
+    both = np.column_stack([d.Q, Z])
+    inside = y - both @ np.linalg.lstsq(both, y, rcond=None)[0]
+    F = ((y @ y - inside @ inside) / 24) / (inside @ inside / 74)
+    assert evidence.get("site-f").p == pytest.approx(stats.f.sf(F, 24, 74), rel=1e-9)
+    assert found.p_alone == evidence.get("site-f").p < 1e-4
+    assert found.verdict == "present"
+
+
+def test_rows_of_one_place_without_likeness():
+    f = repeated(np.random.default_rng(6), share=0.0)
+    with one_thread():
+        found = weigh(f, gather(f)).of("group:site")
+    assert found.p_alone > 0.05
+    assert found.verdict != "present"
+
+
+def test_place_and_its_rows_seen_alone_and_neither_given_the_other_are_both_present():
+    (site, because), (spatial, _) = verdicts(seen("group:site", 1e-8, 0.3), seen("spatial", 1e-4, 0.2))
+    assert (site, spatial) == ("present", "present")
+    assert "cannot say which" in because
 
 
 def test_no_sentence_says_that_a_structure_is_absent():

@@ -88,6 +88,14 @@ def declaration(settings: Settings, table: Table) -> Declaration:
     _idle("assigned", settings.assigned, "group", settings.group)
     if settings.weights_kind != "precision":
         _idle("weights_kind", settings.weights_kind, "weights", settings.weights)
+        named = [k for k, v in (("time", settings.time), ("coords", coords)) if v is not None]
+        if settings.weights is not None and named:
+            raise InputError(
+                f"{settings.weights} counts rows (weights_kind='frequency') and {named[0]}= was given: rows "
+                "that were counted together share one time or place, where their copies would look like "
+                "perfect dependence",
+                "Give one line per row, or use weights_kind='precision' if each line is a mean of its rows.",
+            )
     if coords is not None and (len(coords) != 2 or coords[0] == coords[1]):
         raise InputError(f"coords={coords!r} does not name two different columns", "Give coords=('x', 'y').")
     series = None if settings.series is None else _series_path(settings.series, group, table.names)

@@ -36,7 +36,8 @@ def could_matter(fits: Fits, test: Test, about: About, reading: Reading) -> npt.
     counts with its estimate; anything else without an interval is taken not to matter.
     """
     B = fits.response.B
-    top = reading.estimate if reading.high is None and test.family == "group" else reading.high
+    groups = test.family == "group" or test.id == "site-f"
+    top = reading.estimate if reading.high is None and groups else reading.high
     if top is None:
         return np.zeros(B, dtype=bool)
     high = np.broadcast_to(top, B)
@@ -52,7 +53,7 @@ def could_matter(fits: Fits, test: Test, about: About, reading: Reading) -> npt.
 
 
 def _factors(fits: Fits, test: Test, about: About) -> Array | None:
-    if test.family == "group":
+    if test.family == "group" or test.id == "site-f":  # the same analysis of variance
         if about.key not in fits.design.partitions:
             return None  # of a predictor at a level: its size is no likeness of rows
         return np.asarray(group_factors(fits.design, about.key))
@@ -76,7 +77,7 @@ def verdicts(fits: Fits, test: Test, about: About, reading: Reading, p: Array) -
     doubt = could_matter(fits, test, about, reading)
     out = np.where(p < ALPHA, 3, np.where(doubt, 2, 1))
     design, limits = fits.design, fits.run.limits
-    if test.family == "spatial" and design.spatial is not None:
+    if test.family == "spatial" and test.id != "site-f" and design.spatial is not None:
         few = design.spatial.count < limits.sites_verdict
         out = np.full_like(out, 2) if few else out
     return np.where(np.isnan(p), 0, out).astype(np.int8)

@@ -273,6 +273,8 @@ class Duplicates(Plain):
         return (About("", "rows identical in every column used"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        if fits.run.settings.weights_kind == "frequency" and fits.run.settings.weights is not None:
+            raise NotSupported("rows were repeated by their frequency, so copies are what was declared")
         codes = row_codes(fits.design)
         Y = whole(fits.response)
         copies = [copies_of(codes, Y[:, b]) for b in range(fits.response.B)]

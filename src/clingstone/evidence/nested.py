@@ -16,6 +16,7 @@ from clingstone.evidence.groups import caveats, level_name, levels, repeats
 from clingstone.evidence.read import Plain, around, degenerate, exceedance, floats
 from clingstone.evidence.restricted import DRAWS, null_draws
 from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -53,34 +54,7 @@ class GroupF(Plain):
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         if given:
             return _ratio_given(fits, f"group:{about.key}", given)
-        design, response = fits.design, fits.response
-        part = repeats(design, about)
-        table = anova(response, part)
-        if table.df1 == 0:
-            raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
-        if table.df2 < 1:
-            raise NotSupported("the model and the groups together leave no degrees of freedom within groups")
-        lost = degenerate(response)
-        F = np.where(lost, np.nan, table.F)
-        steps = 46 if fits.depth == "exact" else 26
-        icc, low, high = around(
-            table.icc, *icc_interval(response, part, table, fits.run.settings.confidence, steps), lost
-        )
-        return Reading(
-            statistic=F,
-            statistic_name="F",
-            df=float(table.df1),
-            df2=float(table.df2),
-            p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
-            log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
-            p_method="exact F, one-sided",
-            estimate=icc,
-            estimate_name="intraclass correlation",
-            low=low,
-            high=high,
-            n_used=design.n,
-            caveats=caveats(design, part),
-        )
+        return _exact(fits, repeats(fits.design, about), level_name(about.key))
 
     def curve(self, fits: Fits, about: About) -> Curve | None:
         return group_means(fits, about)
@@ -99,6 +73,71 @@ class GroupF(Plain):
             f"{p_value(column(reading.p))}."
         )
         return f"{words} have an intraclass correlation (likeness beyond the model) of {size}; {tail}"
+
+
+def _exact(fits: Fits, part: Partition, name: str) -> Reading:
+    """The analysis of variance of one partition, its F and the interval of its correlation."""
+    design, response = fits.design, fits.response
+    table = anova(response, part)
+    if table.df1 == 0:
+        raise NotSupported(f"the model already has a coefficient for every {name}")
+    if table.df2 < 1:
+        raise NotSupported("the model and the groups together leave no degrees of freedom within groups")
+    lost = degenerate(response)
+    F = np.where(lost, np.nan, table.F)
+    steps = 46 if fits.depth == "exact" else 26
+    icc, low, high = around(
+        table.icc, *icc_interval(response, part, table, fits.run.settings.confidence, steps), lost
+    )
+    return Reading(
+        statistic=F,
+        statistic_name="F",
+        df=float(table.df1),
+        df2=float(table.df2),
+        p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
+        log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
+        p_method="exact F, one-sided",
+        estimate=icc,
+        estimate_name="intraclass correlation",
+        low=low,
+        high=high,
+        n_used=design.n,
+        caveats=caveats(design, part),
+    )
+
+
+@dataclass(frozen=True)
+class SiteF(Plain):
+    """Exact F test of what the rows of one place share, where places repeat.
+
+    The analysis of variance of ``group-f`` with the places as groups. It sees whatever holds a place
+    apart from others, a dependence that fades with distance as well. A second look in the tests of
+    places; the ledger judges by it what rows of one place share.
+    """
+
+    id: str = "site-f"
+    family: Family = "spatial"
+    null: str = "Rows of one place are no more alike than rows of different places."
+    alternative: str = "Rows of one place are more alike than rows of different places."
+    needs: Needs = field(default=Needs(frozenset({"spatial"}), {"sites": 2}))
+    source: str = "harville-fenech-1985"
+    primary: bool = False
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        """Where places repeat and are not a group level that has the test already."""
+        assert design.spatial is not None
+        part = design.spatial.part
+        known = design.group.levels if design.group is not None else ()
+        if part.count == part.n or any(level.relation(part) == "same" for level in known):
+            return ()
+        return (About("site", "rows of one place", primary=False),)
+
+    def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
+        assert fits.design.spatial is not None
+        return _exact(fits, fits.design.spatial.part, "place")
+
+    def sentence(self, reading: Reading, about: About) -> str:
+        return GroupF().sentence(reading, about)
 
 
 def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:

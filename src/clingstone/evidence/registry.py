@@ -13,7 +13,7 @@ from clingstone.evidence.levels import ClusterLevel
 from clingstone.evidence.local import Local
 from clingstone.evidence.lookalikes import Duplicates, Heteroscedasticity, Normality, Outliers
 from clingstone.evidence.mean import FunctionalForm, Trend, TrendSurface
-from clingstone.evidence.nested import GroupF, IntraclassCorrelation
+from clingstone.evidence.nested import GroupF, IntraclassCorrelation, SiteF
 from clingstone.evidence.panel import PanelSerial
 from clingstone.evidence.portmanteau import BreuschGodfrey, LjungBox
 from clingstone.evidence.restricted import RestrictedLR
@@ -41,6 +41,7 @@ TESTS: tuple[Test, ...] = (
     CommonShocks(),
     Moran(),
     Geary(),
+    SiteF(),
     Variogram(),
     Correlogram(),
     Direction(),

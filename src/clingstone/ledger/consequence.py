@@ -15,9 +15,11 @@ from scipy import stats
 from scipy.interpolate import CubicSpline
 
 from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.components import Component
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import significant
+from clingstone.evidence.anova import absorbed
 from clingstone.ledger.entries import Inflation, Tipping
 from clingstone.ledger.region import Region
 from clingstone.maths.once import Array
@@ -148,7 +150,9 @@ def tipping(fits: Fits, keys: tuple[str, ...], focus: tuple[str, ...]) -> tuple[
     """For each focus row and each group level or serial structure: where the interval takes in zero.
 
     The ordinary estimate is held, its variance is that of a single structure whose parameter runs
-    from 0 to 0.95, σ² is scaled to the observed e'e, and the t quantile keeps m degrees of freedom.
+    from 0 to 0.95, and σ² is scaled to the observed e'e. The t quantile has m degrees of freedom along a
+    series; with groups those of Satterthwaite's combination of what varies between and within them, so
+    that a term of groups is judged by the number of groups.
     """
     out: list[Tipping] = []
     for key in keys:
@@ -188,7 +192,7 @@ def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -
     design, component = fits.design, fits.components[key]
     names, weights = rows(design)
     w = design.basis.contrast(weights[names.index(term)])
-    t = float(stats.t.isf((1 - fits.run.settings.confidence) / 2, design.m))
+    t = stats.t.isf((1 - fits.run.settings.confidence) / 2, _freedom(design, component, w, s))
     sigma2 = float(fits.response.ss[0]) / (design.m * mean)
     gap = abs(float(w @ fits.response.coef[:, 0])) - t * np.sqrt(
         sigma2 * np.einsum("p,Bpq,q->B", w, mixed, w)
@@ -210,6 +214,29 @@ def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -
         f"With {what} of {significant(value)} or more {where}, the interval of {named} would take in zero."
     )
     return Tipping(term, key, parameter, value, sentence)
+
+
+def _freedom(design: Design, component: Component, w: Array, s: Array) -> Array:
+    """(P,) degrees of freedom of the variance of w'β̂ at every intraclass correlation.
+
+    Its parts between and within groups are estimated by their own mean squares, with r and n − rank[X, Z]
+    degrees of freedom (Satterthwaite 1946); at s = 0 they are one and have m.
+    """
+    whole = np.full(len(s), float(design.m))
+    part = None if component.key == "serial" else design.partitions.get(component.part)
+    if part is None:
+        return whole
+    inner = absorbed(design, part)
+    df1, df2 = part.count + inner.p - design.p, design.n - part.count - inner.p
+    if df1 < 1 or df2 < 1:
+        return whole
+    sizes = design.sizes(part)
+    between = float(np.sum((design.sums(part) @ w) ** 2 / sizes) / (w @ w))
+    n0 = float(sizes.sum() - np.sum(design.sums(part) ** 2)) / df1
+    a = between * (1 + s * (n0 - 1))
+    b = (1 - between) * (1 - s)
+    df = (a + b) ** 2 / (a**2 / df1 + b**2 / df2)
+    return np.where(s > 0, df, whole)
 
 
 def _one(label: str) -> str:

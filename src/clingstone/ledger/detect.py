@@ -11,6 +11,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.evidence.finding import About, Test
 from clingstone.ledger.entries import Detectable, Standing
+from clingstone.ledger.sizes import in_units
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
@@ -20,7 +21,8 @@ POWER = 0.80
 DRAWS, FEWEST = 200, 40
 ROW_DRAWS = 5e6  # rows × draws in all; fewer draws beyond 25,000 rows
 CHUNK = 4e6  # rows × draws held at a time, 32 MB
-LEVEL = 0.05
+LEVEL = 0.05  # before it is divided among the primary tests
+ACROSS = 1 / 3  # practical range over the map's width of a field whose share is looked for
 ROUNDS = 3
 SMALLEST, FIRST, LARGEST = 0.001, 0.32, 0.95
 NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial share"}
@@ -28,26 +30,38 @@ NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial 
 Drawer = Callable[[float, np.random.Generator, int], Array]
 
 
-def detectable(fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ...]) -> tuple[Detectable, ...]:
-    """For every structure that was not found: its smallest detectable size, where its test is run."""
+def detectable(
+    fits: Fits, standing: tuple[Standing, ...], tests: tuple[Test, ...], primary: int = 1
+) -> tuple[Detectable, ...]:
+    """For every structure that was not found: its smallest detectable size, where its test is run.
+
+    primary : the number of tests that Holm's adjustment was made over; the smallest p of so many has to
+    be below 5 % divided by it, and that is the level held here.
+    """
+    level = LEVEL / max(primary, 1)
     out = []
     for one in standing:
-        if one.verdict in ("present", "not applicable") or one.p_alone < LEVEL:
+        if one.verdict in ("present", "not applicable") or one.p_alone < level:
             continue
         test, about = primary_test(fits, one, tests)
         drawer = _drawer(fits, one)
         if test is None or about is None or drawer is None:
             continue
-        value = smallest(fits, test, about, drawer, one.key)
-        out.append(_entry(one, value))
+        value = smallest(fits, test, about, drawer, one.key, level)
+        out.append(_entry(fits, one, value))
     return tuple(out)
 
 
-def _entry(one: Standing, value: float) -> Detectable:
+def _entry(fits: Fits, one: Standing, value: float) -> Detectable:
     name = NAMES[one.structure]
     article = "an" if name[0] in "aeiou" else "a"
     words = f"{article} {name} of {value:.2g} or more" if np.isfinite(value) else f"no {name} up to {LARGEST}"
-    sentence = f"The test for {one.label} would have found {words} in 80 % of such data."
+    where = ""
+    if one.structure == "spatial" and fits.design.spatial is not None:
+        sites = fits.design.spatial
+        reach = in_units(float(f"{ACROSS * sites.extent:.2g}"), sites.unit or "units of place")
+        where = f", if it fades over {reach} (a third of the map's width),"
+    sentence = f"The test for {one.label} would have found {words}{where} in 80 % of such data."
     return Detectable(one.key, name, value, POWER, sentence)
 
 
@@ -105,14 +119,14 @@ def _series(series: Series) -> Drawer:
 
 
 def _sites(fits: Fits) -> Drawer | None:
-    """Exponential field at the fitted range plus row noise; a tenth of the extent when it has none."""
+    """Exponential field that fades over a third of the map's width, plus row noise.
+
+    The range is held, not fitted: where nothing was found the data hardly know it.
+    """
     sites = fits.design.spatial
     if sites is None or sites.count > fits.run.limits.dense_sites:
         return None
-    length = sites.extent / 10
-    if "spatial" in fits.full_node:
-        fitted = float(fits.full.shape["spatial.range"][0])
-        length = min(max(fitted, sites.extent / 20), sites.extent / 2) / 3
+    length = ACROSS * sites.extent / 3  # a correlation of exp(−3) is the practical range
     distance = np.linalg.norm(sites.points[:, None] - sites.points[None], axis=2)
     root = np.linalg.cholesky(np.exp(-distance / length) + 1e-10 * np.eye(sites.count))
 
@@ -126,8 +140,16 @@ def _sites(fits: Fits) -> Drawer | None:
 # ---- search ----------------------------------------------------------------------------------
 
 
-def power(fits: Fits, test: Test, about: About, drawer: Drawer, value: float, purpose: str) -> float:
-    """Share of draws in which the test finds a dependence of this size at the 5 % level."""
+def power(
+    fits: Fits,
+    test: Test,
+    about: About,
+    drawer: Drawer,
+    value: float,
+    purpose: str,
+    level: float = LEVEL,
+) -> float:
+    """Share of draws in which the test finds a dependence of this size at a level."""
     n = fits.design.n
     draws = int(np.clip(ROW_DRAWS / n, FEWEST, DRAWS))
     size = max(1, int(CHUNK / n))
@@ -138,11 +160,13 @@ def power(fits: Fits, test: Test, about: About, drawer: Drawer, value: float, pu
         rng = fits.run.child(f"detectable {purpose}", chunk)
         again = Fits(Response.of(fits.design, drawer(value, rng, B)), fits.run)
         p = np.broadcast_to(np.asarray(test.read(again, about, frozenset()).p, dtype=float), (B,))
-        found += int(np.sum(p < LEVEL))
+        found += int(np.sum(p < level))
     return found / draws
 
 
-def smallest(fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str) -> float:
+def smallest(
+    fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str, level: float = LEVEL
+) -> float:
     """The size at which power reaches 80 %; NaN when none up to 0.95 does.
 
     Halved from 0.32 until the power falls short, or raised to 0.95; then bisected on the log scale,
@@ -150,7 +174,7 @@ def smallest(fits: Fits, test: Test, about: About, drawer: Drawer, purpose: str)
     """
 
     def at(value: float) -> float:
-        return power(fits, test, about, drawer, value, purpose)
+        return power(fits, test, about, drawer, value, purpose, level)
 
     try:
         high = (FIRST, at(FIRST))

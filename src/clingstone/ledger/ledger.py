@@ -65,7 +65,7 @@ def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None)
     return replace(
         found,
         tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
-        detectable=detectable(fits, found.standing, tests),
+        detectable=detectable(fits, found.standing, tests, judge.adjusted_tests(evidence)),
     )
 
 

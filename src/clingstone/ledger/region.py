@@ -22,6 +22,7 @@ from clingstone.maths.once import Array, kept
 RAYS = {2: 24, 3: 48}  # directions of the first round, by number of parameters; 64 above
 SECOND = 10  # directions from each extreme point in the second round
 BISECTIONS = 9
+CLOSE = 0.01  # of log-likelihood: a point this near the edge is on it
 GRID = 61  # values of a single parameter
 HEAVY = 1.5e7  # multiplications per evaluation above which the second round is left out
 TOO_HEAVY = 3e8  # … above which the region is the ellipsoid of the curvature at the estimate
@@ -126,8 +127,12 @@ class _Walk:
         self.high = np.array([q.high for q in algebra.parameters])
         self.floor = loglik(algebra, best, response)[0] - cut / 2
 
+    def margin(self, theta: Array) -> float:
+        """How far the log-likelihood lies above the edge of the region."""
+        return loglik(self.algebra, theta, self.response)[0] - self.floor
+
     def inside(self, theta: Array) -> bool:
-        return loglik(self.algebra, theta, self.response)[0] >= self.floor
+        return self.margin(theta) >= 0
 
     def edge(self, start: Array, direction: Array) -> Array:
         """The last point inside along a ray that leaves ``start``, stopped by the bounds."""
@@ -138,16 +143,33 @@ class _Walk:
             return start
         if self.inside(self._at(start, direction, reach)):
             return self._at(start, direction, reach)
-        # A first step that doubles finds the nearest way out; bisection over the whole ray may
-        # jump over a second piece of the region.
+        # A first step that doubles finds the nearest way out; a search over the whole ray may jump
+        # over a second piece of the region.
         near, far = 0.0, reach / 64
-        while far < reach and self.inside(self._at(start, direction, far)):
-            near, far = far, 2 * far
-        far = min(far, reach)
+        above, below = self.margin(start), self.margin(self._at(start, direction, far))
+        while far < reach and below >= 0:
+            near, above, far = far, below, min(2 * far, reach)
+            below = self.margin(self._at(start, direction, far))
+        return self._at(start, direction, self._crossing(start, direction, (near, above), (far, below)))
+
+    def _crossing(
+        self, start: Array, direction: Array, near: tuple[float, float], far: tuple[float, float]
+    ) -> float:
+        """The step at which the margin reaches zero, from inside: false position with Illinois' halving."""
+        (low, above), (high, below) = near, far
+        width, pull = high - low, [above, below]  # what draws the line; the end that stays loses half
         for _ in range(BISECTIONS):
-            middle = (near + far) / 2
-            near, far = (middle, far) if self.inside(self._at(start, direction, middle)) else (near, middle)
-        return self._at(start, direction, near)
+            if above <= CLOSE or high - low <= width / 2**BISECTIONS:
+                break
+            fall = pull[0] - pull[1]
+            part = pull[0] / fall if np.isfinite(fall) and fall > 0 else 0.5
+            step = low + (high - low) * float(np.clip(part, 0.05, 0.95))
+            found = self.margin(self._at(start, direction, step))
+            if found >= 0:
+                low, above, pull = step, found, [found, pull[1] / 2]
+            else:
+                high, pull = step, [pull[0] / 2, found]
+        return low
 
     def _at(self, start: Array, direction: Array, step: float) -> Array:
         return np.asarray(np.clip(start + step * direction, self.low, self.high))

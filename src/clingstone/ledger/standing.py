@@ -58,7 +58,7 @@ def own_finding(evidence: Evidence, key: str, family: Family) -> Finding | None:
     """The test by which a component is judged alone: the primary one, at its own level."""
     found = [f for f in evidence.of(family) if not f.given and np.isfinite(f.p)]
     if key == SITE:
-        found = []  # what rows of one place share has no test of its own
+        found = [f for f in found if f.test == "site-f"]
     elif key.startswith("group:"):
         level = key.removeprefix("group:")
         found = [f for f in found if f.about == level and f.test != "group-endogeneity"]
@@ -66,6 +66,11 @@ def own_finding(evidence: Evidence, key: str, family: Family) -> Finding | None:
     else:
         found = [f for f in found if f.primary]
     return found[0] if found else None
+
+
+def adjusted_tests(evidence: Evidence) -> int:
+    """How many primary tests Holm's adjustment was made over."""
+    return sum(f.primary and f.p_adjusted is not None for f in evidence)
 
 
 # ---- given all the others ----------------------------------------------------------------------
@@ -113,8 +118,9 @@ def _bootstrap(fits: Fits, key: str, rest: frozenset[str], statistic: float) -> 
 class Reach:
     """How far the interval of a structure reaches for a focus row.
 
-    matters : outside the band on either side. widens : above it. worst : the furthest factor, of
-    the row ``term``.
+    matters : outside the band on either side. widens : above it, the one rule by which what is not
+    seen is called unclear: an interval that is too short misleads, one that is too long only costs.
+    worst : the furthest factor, of the row ``term``; above the band where one is.
     """
 
     matters: bool = False
@@ -130,17 +136,19 @@ def consequence(
     if key not in found.variance or not focus:
         return Reach()
     due = found.due_to(key)
-    worst, term, widest = 1.0, "", 1.0
+    worst, term, widest, widest_term = 1.0, "", 1.0, ""
     for k, name in enumerate(found.terms):
         if name not in focus:
             continue
         low, _, high = region.interval(due[k])
-        widest = max(widest, high)
+        if high >= widest:
+            widest, widest_term = high, name
         for value in (low, high):
             if abs(np.log(value)) > abs(np.log(worst)):
                 worst, term = value, name
-    widens = bool(widest > material[1])
-    return Reach(widens or bool(worst < material[0]), widens, worst, term)
+    if widest > material[1]:
+        return Reach(True, True, widest, widest_term)
+    return Reach(bool(worst < material[0]), False, worst, term)
 
 
 # ---- reading the table -----------------------------------------------------------------------------
@@ -198,7 +206,7 @@ def _lost(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
     takers = [o.label for o in others if o.held]
     if takers:
         names = _and(takers)
-        verb = "may be" if one.matters else "is"
+        verb = "may be" if one.widens else "is"
         return _quiet(one, f"Its own test shows it, but its signal {verb} explained by {names}")
     rivals = [o.label for o in others if o.alone]
     if rivals:
@@ -211,7 +219,7 @@ def _lost(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
 
 
 def _quiet(one: Seen, reason: str) -> tuple[Verdict, str]:
-    if one.matters:
+    if one.widens:
         return (
             "unclear",
             f"{reason}; its interval reaches a standard error of {one.worst_term} {_times(one.worst)} "
@@ -244,6 +252,8 @@ def examine(
         finding = own_finding(evidence, key, component.family)
         p = finding.p if finding is not None else float("nan")
         adjusted = p if finding is None or finding.p_adjusted is None else finding.p_adjusted
+        if key == SITE:  # one more structure than the primary tests have adjusted for
+            adjusted = min(1.0, p * (1 + adjusted_tests(evidence)))
         others = tuple(k for k in node if k != key)
         p_given, method = restricted_lr(fits, key) if others else (float("nan"), "")
         reach = Reach()
@@ -340,7 +350,7 @@ def adequate(fits: Fits, standing: tuple[Standing, ...]) -> tuple[frozenset[str]
         for s in standing
         if s.key in node
         and not s.fixed
-        and (s.verdict == "not detected" or (s.verdict == "unclear" and not s.matters))
+        and (s.verdict == "not detected" or (s.verdict == "unclear" and not s.widens))
     ]
     idle.sort(key=lambda s: -(s.p_given if np.isfinite(s.p_given) else s.p_alone))
     for s in idle:

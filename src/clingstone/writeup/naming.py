@@ -27,6 +27,7 @@ TESTS = {
     "slope-variation": "slopes that differ between groups",
     "moran": "Moran's I",
     "geary": "Geary's C",
+    "site-f": "F test of places",
     "correlogram": "correlogram",
     "direction": "direction",
     "local": "local likeness",
