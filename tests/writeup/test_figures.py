@@ -2,17 +2,22 @@
 
 from __future__ import annotations
 
+import ast
 import re
 import subprocess
 import sys
 import xml.etree.ElementTree as ET
 from dataclasses import replace
+from itertools import combinations
+from pathlib import Path
 
 import numpy as np
 import pytest
+from matplotlib.backends.backend_agg import FigureCanvasAgg
 
+from clingstone import evidence as evidence_room
 from clingstone.evidence.finding import Curve
-from clingstone.writeup import curves, figures
+from clingstone.writeup import curves, figures, places
 from clingstone.writeup.look import LIGHT
 from clingstone.writeup.plate import NARROW, WIDE
 from clingstone.writeup.save import plates
@@ -184,3 +189,138 @@ def test_few_and_many_groups_are_drawn(count):
     figure = curves.paint_groups(curve, "group", WIDE)
     assert figure.get_size_inches()[1] * 72 < 1200
     assert sum(t.get_text().startswith("g") for t in figure.texts) == (count if count <= curves.LISTED else 0)
+
+
+# ---- every kind of curve ---------------------------------------------------------------------
+
+
+def kinds_in_evidence() -> set[str]:
+    """Every kind that a test of this package can give a curve, read from its source."""
+    found = set()
+    for path in Path(evidence_room.__file__).parent.glob("*.py"):
+        tree = ast.parse(path.read_text(encoding="utf-8"))
+        shared = any(
+            isinstance(node, ast.ImportFrom) and any(a.name == "Curve" for a in node.names)
+            for node in ast.walk(tree)
+        )
+        for node in ast.walk(tree) if shared else ():
+            if isinstance(node, ast.Call) and getattr(node.func, "id", "") == "Curve":
+                (kind,) = [k.value for k in node.keywords if k.arg == "kind"]
+                assert isinstance(kind, ast.Constant), path
+                found.add(kind.value)
+    return found
+
+
+def test_every_kind_that_the_evidence_gives_has_a_painter_and_a_caption():
+    kinds = kinds_in_evidence()
+    assert len(kinds) >= 9
+    assert kinds == curves.KINDS
+    assert set(curves.CAPTIONS) == kinds
+
+
+def _curve(kind: str, n: int = 24) -> Curve:
+    """A curve of each kind with all that it may hold."""
+    rng = np.random.default_rng(6)
+    x = tuple(map(float, range(1, n + 1)))
+    y = tuple(rng.normal(0, 0.3, n).tolist())
+    half = tuple([0.25] * n)
+    base = Curve(kind, x, y, tuple(-h for h in half), half, tuple(map(float, range(50, 50 + n))),
+                 x_name="distance", y_name="correlation of residuals", unit="km")  # fmt: skip
+    words = ("", "above the fit, as its neighbours are", "below the fit among sites above it")
+    made = {
+        "local-map": replace(base, labels=tuple(words[i % 3] for i in range(n)), high=(), x_name="easting"),
+        "map": replace(base, size=y, low=(), high=()),
+        "directions": replace(base, x=(0.0, 45.0, 90.0, 135.0), y=y[:4], low=base.low[:4], high=base.high[:4],
+                              size=base.size[:4], unit="", y_name="Moran's I along the axis"),
+        "left-out": replace(base, low=(), high=(), labels=tuple(f"farm {i}" for i in range(n)), unit="",
+                            x_name="farm", y_name="coefficient of Dose without it",
+                            lines={"all groups": ((1.0, float(n)), (0.1, 0.1))}),
+        "autocorrelation": replace(base, lines={"partial correlation": (x, y), "semivariance": (x, half)}),
+        "traces": replace(base, lines={"buoy 1": (x, y), "buoy 2": (x, y[::-1])}),
+        "variogram": replace(base, y=half, lines={"robust": (x, half), "fitted": (x, half)}),
+        "function": replace(base, lines={"repaired": (x, y), "fitted": (x, half)}),
+        "group-means": replace(base, labels=tuple(f"farm {i}" for i in range(n))),
+    }  # fmt: skip
+    return made.get(kind, base)
+
+
+@pytest.mark.parametrize("kind", sorted(curves.KINDS))
+@pytest.mark.parametrize("width", [WIDE, NARROW])
+def test_each_kind_is_drawn_with_words_that_stay_inside_and_apart(kind, width):
+    """Each text lies on the paper and meets no other text; its table holds every mark."""
+    given = fixture.finding("spatial", "moran", verdict="present", sentence="Near sites are alike.",
+                            curve=_curve(kind))  # fmt: skip
+    (plate,) = curves.plates(replace(fixture.wells(), evidence=(given,)))
+    root = ET.fromstring(plate.svg(width))
+    assert [e.text for e in root.iter(f"{SVG}text")]
+    assert "Near sites are alike." in plate.alt
+    assert len(plate.table.rows) == (48 if kind == "traces" else len(given.curve.y))
+    figure = plate.paint(width)
+    renderer = FigureCanvasAgg(figure).get_renderer()
+    boxes = [(t.get_text(), t.get_window_extent(renderer)) for t in figure.texts if t.get_text()]
+    for text, box in boxes:
+        assert box.x0 >= -1, text
+        assert box.x1 <= width + 1, text
+        assert box.y0 >= -1, text
+    for (a, one), (b, two) in combinations(boxes, 2):
+        assert not one.overlaps(two), (a, b)
+
+
+def test_the_band_and_the_correlations_of_a_correlogram_lie_where_they_should():
+    curve = _curve("correlogram")
+    panel, below = curves.paint_autocorrelation(curve, "spatial", WIDE).axes
+    (dots,) = [line for line in panel.get_lines() if line.get_marker() == "^"]
+    assert tuple(dots.get_xdata()) == curve.x
+    assert tuple(dots.get_ydata()) == curve.y
+    shade = panel.collections[0].get_paths()[0].vertices
+    assert shade[:, 1].max() == 0.25
+    assert shade[:, 1].min() == -0.25
+    assert [b.get_height() for b in below.patches] == list(curve.size)
+
+
+def test_lines_beside_correlations_are_hollow_and_a_semivariance_has_its_own_scale():
+    curve = _curve("autocorrelation")
+    figure = curves.paint_autocorrelation(curve, "serial", WIDE)
+    above, between, _ = figure.axes
+    hollow = [line for line in above.get_lines() if line.get_markerfacecolor() == "none"]
+    assert [tuple(line.get_ydata()) for line in hollow] == [curve.y]
+    assert tuple(between.get_lines()[-1].get_ydata()) == (0.25,) * 24
+    assert any("partial correlation" in t.get_text() for t in figure.texts)
+
+
+def test_places_that_stand_out_differ_in_shape_and_face_and_are_counted():
+    curve = _curve("local-map")
+    figure = places.paint_local(curve, "spatial", WIDE)
+    (panel,) = figure.axes
+    faint, like, unlike = panel.get_lines()
+    assert (faint.get_marker(), like.get_marker(), unlike.get_marker()) == ("o", "^", "D")
+    assert unlike.get_markerfacecolor() == LIGHT.paper  # below the fit
+    assert like.get_markerfacecolor() == LIGHT.spatial  # above it
+    assert len(faint.get_xdata()) == len(like.get_xdata()) == len(unlike.get_xdata()) == 8
+    said = " ".join(t.get_text() for t in figure.texts)
+    assert "above the fit, as its neighbours are: 8 sites" in said
+
+
+def test_axes_of_direction_are_drawn_at_their_angle():
+    curve = _curve("directions")
+    figure = places.paint_directions(curve, "spatial", WIDE)
+    (panel,) = figure.axes
+    angles = []
+    for line in figure.artists:
+        (x0, x1), (y0, y1) = line.get_xdata(), line.get_ydata()
+        wide, tall = figure.get_size_inches()
+        angles.append(float(np.degrees(np.arctan2((y1 - y0) * tall, (x1 - x0) * wide))) % 180)
+    assert angles == pytest.approx([0, 45, 90, 135])
+    assert [(b.get_x(), b.get_width()) for b in panel.patches] == [(-0.25, 0.5)] * 4
+
+
+def test_a_left_out_group_is_drawn_against_the_coefficient_with_all():
+    curve = _curve("left-out")
+    panel = curves.paint_left_out(curve, "lookalike", WIDE).axes[0]
+    whole, marks = panel.get_lines()
+    assert set(whole.get_xdata()) == {0.1}
+    assert tuple(marks.get_xdata()) == curve.y
+    given = fixture.finding("lookalike", "group-influence", verdict="present", sentence="x", curve=curve)
+    (plate,) = curves.plates(replace(fixture.wells(), evidence=(given,)))
+    assert plate.caption == "Coefficient of Dose without each farm in turn"
+    assert "all groups: 0.100" in plate.alt

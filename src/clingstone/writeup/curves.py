@@ -10,18 +10,21 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.display import Cell, Column, Table, count, number, significant
+from clingstone.display import Cell, Column, Table, count, listed, number, sentence, significant
 from clingstone.evidence.finding import Curve, Finding
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.panels import paint_traces
-from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, many, say, with_unit
+from clingstone.writeup.places import paint_directions, paint_local, paint_map, paint_variogram
+from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say, with_unit
+from clingstone.writeup.strokes import band, ends, foot, gap, line_words, lines, room
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
 
 LISTED = 40  # groups with a label each; beyond, ranks without labels
+SECOND_LOOKS = ("correlogram", "directions")  # folded away where they show nothing
 TABLED = 400  # rows of a figure's table on the page; the file of the figure holds them all
 
 Paint = Callable[[Curve, str, float], "Figure"]
@@ -39,12 +42,13 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
     lonlat = results.case.spatial is not None and results.case.spatial.kind == "lonlat"
     for f in results.evidence:
         for curve in f.curves:
-            if curve.kind not in PAINTERS or not (curve.x or curve.lines):
+            if not (curve.x or curve.lines):
                 continue
             name = _name(curve, f.about, taken)
             taken.add(name)
             paint = _painter(curve, f.structure, lonlat)
-            quiet = f.structure in ("mean", "lookalike") and f.verdict == "not detected"
+            aside = f.structure in ("mean", "lookalike") or curve.kind in SECOND_LOOKS
+            quiet = aside and f.verdict == "not detected"
             alt = _alt(curve, f)
             plate = Plate(name, _caption(curve, f), alt, curve_table(curve), paint, quiet, curve.note)
             out.setdefault(f.structure, []).append(plate)
@@ -52,15 +56,28 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
 
 
 def _alt(curve: Curve, f: Finding) -> str:
-    """What a figure shows, in words: its finding; of residuals by time also what stands in the panels."""
-    if curve.kind != "traces":
-        return f.sentence
-    return f"Residuals by {curve.x_name or 'time'} in {count(len(curve.lines), 'panel')}. {f.sentence}"
+    """What a figure shows, in words: its finding, and where that says too little what is drawn."""
+    if curve.kind == "traces":
+        drawn = f"Residuals by {curve.x_name or 'time'} in {count(len(curve.lines), 'panel')}."
+    elif curve.kind == "left-out":
+        ends_at = f"{significant(min(curve.y), 3)} to {significant(max(curve.y), 3)}"
+        whole = "".join(f"; {name}: {significant(y[0], 3)}" for name, (_, y) in curve.lines.items())
+        drawn = f"The {curve.y_name} runs from {ends_at}{whole}."
+    elif curve.kind == "directions":
+        each = (f"{significant(v)} at {number(a, 0)} degrees" for a, v in zip(curve.x, curve.y, strict=True))
+        drawn = f"{curve.y_name}: {listed(each)}."
+    elif curve.kind == "local-map":
+        kinds = (w for w in dict.fromkeys(sorted(curve.labels)) if w)
+        drawn = sentence("; ".join(f"{count(curve.labels.count(w), 'site')} {w}" for w in kinds))
+    else:
+        drawn = ""
+    return f"{drawn} {f.sentence}".strip()
 
 
 def _painter(curve: Curve, structure: str, lonlat: bool) -> Callable[[float], Figure]:
-    if curve.kind == "map":
-        return lambda width: paint_map(curve, structure, width, lonlat)
+    if curve.kind in MAPS:
+        chart = MAPS[curve.kind]
+        return lambda width: chart(curve, structure, width, lonlat)
     paint = PAINTERS[curve.kind]
     return lambda width: paint(curve, structure, width)
 
@@ -74,20 +91,27 @@ def _name(curve: Curve, about: str, taken: set[str]) -> str:
     return name
 
 
-_CAPTIONS = {
+CAPTIONS = {
     "autocorrelation": "Correlation of residuals by time apart",
     "group-means": "Mean residual of each group",
     "variogram": "Half the mean squared difference by distance",
     "map": "Residuals on the map",
     "function": "Residuals against a predictor",
     "traces": "Residuals by time, series by series",
+    "correlogram": "Correlation of residuals by distance",
+    "directions": "Likeness of neighbours by direction",
+    "local-map": "Places that stand out from their neighbours' residuals or with them",
+    "left-out": "A coefficient without each group in turn",
 }
 
 
 def _caption(curve: Curve, f: Finding) -> str:
-    words = _CAPTIONS[curve.kind]
+    words = CAPTIONS[curve.kind]
     if curve.kind == "group-means" and curve.x_name:
         return f"Mean residual of each {curve.x_name}"
+    if curve.kind == "left-out" and curve.y_name:
+        what = curve.y_name.removesuffix(" without it")
+        return f"{what[:1].upper()}{what[1:]} without each {curve.x_name} in turn"
     if curve.kind == "function" and "residual" not in (curve.y_name or "residual"):
         return f"{curve.y_name} by {curve.x_name or f.about_words}"
     if curve.kind == "function" and (curve.x_name or f.about):
@@ -99,21 +123,24 @@ def _caption(curve: Curve, f: Finding) -> str:
 
 
 def curve_table(curve: Curve) -> Table:
-    """The marks of a curve, unrounded in a file."""
+    """The marks of a curve and its lines, unrounded in a file."""
     if curve.kind == "traces":
         return _trace_table(curve)
     fields: list[tuple[str, str, Sequence[float | str]]] = []
+    placed = curve.kind in MAPS
     if curve.labels:
-        fields.append(("label", curve.x_name or "label", curve.labels))
-    if not curve.labels or curve.kind == "map":
-        unit = curve.unit if curve.kind in ("autocorrelation", "variogram", "map", "function") else ""
-        fields.append(("x", with_unit(curve.x_name or "x", unit), curve.x))
+        fields.append(("label", "what stands out" if placed else curve.x_name or "label", curve.labels))
+    if not curve.labels or placed:
+        fields.append(("x", foot(curve, "x"), curve.x))
     fields.append(("y", curve.y_name or "y", curve.y))
+    names = {"low": "adjusted p"} if curve.kind == "local-map" else {}
     for key, values in (("low", curve.low), ("high", curve.high)):
         if values:
-            fields.append((key, key, values))
+            fields.append((key, names.get(key, key), values))
     if curve.size:
         fields.append(("size", _SIZES.get(curve.kind, "rows"), curve.size))
+    # A line is told where it has a value for each mark.
+    fields += [(name, name, y) for name, (x, y) in curve.lines.items() if x == curve.x]
     columns = [Column(key, head, "right" if j else "left") for j, (key, head, _) in enumerate(fields)]
     rows = [
         [v if isinstance(v, str) else Cell(_shown(float(v)), float(v)) for v in row]
@@ -141,67 +168,77 @@ def _shown(value: float) -> str:
     return number(value, 0) if value == round(value) and abs(value) < 1e7 else significant(value, 3)
 
 
-_SIZES = {"autocorrelation": "pairs", "variogram": "pairs", "group-means": "rows", "map": "mean residual"}
+_SIZES = {
+    "autocorrelation": "pairs",
+    "correlogram": "pairs",
+    "directions": "weight of its links",
+    "local-map": "mean residual",
+    "map": "mean residual",
+    "variogram": "pairs",
+}
 
 
-def _band(panel: Axes, curve: Curve, x: np.ndarray) -> None:
-    if curve.low and curve.high:
-        panel.fill_between(
-            x, curve.low, curve.high, facecolor=LIGHT.wash, edgecolor=LIGHT.faint, linewidth=0.8
-        )
-
-
-LINES: tuple[tuple[str, object], ...] = (("line", "-"), ("dashed", (0, (5, 2))), ("dotted", (0, (1, 1.5))))
-
-
-def _lines(figure: Figure, panel: Axes, curve: Curve, color: str) -> None:
-    """Named lines; their names stand above the panel at the right, instead of in a legend."""
-    told = []
-    for k, (name, (x, y)) in enumerate(curve.lines.items()):
-        words, style = LINES[k % len(LINES)]
-        hue = color if k == 0 else LIGHT.ink
-        panel.plot(x, y, color=hue, linewidth=2, linestyle=style)
-        told.append(f"{words}: {name}")
-    width = figure.get_size_inches()[0] * 72
-    say(figure, width, 10, "; ".join(told), ha="right", fontsize=SMALL, color=LIGHT.muted)
+SEMI = "semivariance"  # a line on a scale of its own, so it gets a panel of its own
+STEMS = 180.0
 
 
 def paint_autocorrelation(curve: Curve, structure: str, width: float) -> Figure:
-    """Correlations with their band above, the number of pairs behind each below."""
-    figure = blank(width, 300)
-    hue = getattr(LIGHT, mark(structure).role)
-    x = np.array(curve.x)
-    panel = axes(figure, 44, 24, width - 54, 180)
-    _band(panel, curve, x)
+    """Correlations with their band above, the number of pairs behind each below; further lines as hollow
+    marks, and a semivariance in a panel between."""
+    own, x = mark(structure), np.array(curve.x)
+    hue = getattr(LIGHT, own.role)
+    said = curve.y_name or "correlation"
+    hollow = [name for name in curve.lines if name != SEMI]
+    words = f"hollow: {listed(hollow)}" if hollow else ""
+    up = 24 + room(width, said, words)
+    between = 100.0 if SEMI in curve.lines else 0.0
+    figure = blank(width, up + STEMS + between + 96)
+    panel = axes(figure, 44, up, width - 54, STEMS)
+    band(panel, curve, x)
     panel.axhline(0, color=LIGHT.faint, linewidth=1)
     panel.vlines(x, 0, curve.y, color=hue, linewidth=2)
-    panel.plot(x, curve.y, mark(structure).marker, color=hue, markersize=5)
-    few_ticks(panel, "y")
-    panel.tick_params(axis="x", length=0, labelbottom=False)
-    below = _pairs(figure, curve, x, width)
-    margin = 0.7 * _gap(x)
-    for each in (panel, below):
-        each.set_xlim(min(0.0, float(x.min()) - margin), float(x.max()) + margin)
-    few_ticks(below)
-    foot = with_unit(curve.x_name or "time apart", curve.unit)
-    say(figure, 0, 10, curve.y_name or "correlation", fontsize=SMALL, color=LIGHT.muted)
-    say(figure, width, 290, foot, ha="right", fontsize=SMALL, color=LIGHT.muted)
+    panel.plot(x, curve.y, own.marker, color=hue, markersize=5)
+    for name in hollow:
+        panel.plot(*curve.lines[name], linestyle="none", marker=own.marker, markersize=5,
+                   markerfacecolor="none", markeredgecolor=LIGHT.ink)  # fmt: skip
+    ends(figure, 10, said, words)
+    panels = [panel]
+    if between:
+        panels.append(_semivariance(figure, curve, up + STEMS + 30, width))
+    panels.append(_pairs(figure, curve, up + STEMS + between + 12, width))
+    margin = 0.7 * gap(x)
+    reach = (min(0.0, float(x.min()) - margin), float(x.max()) + margin)
+    for each in panels:
+        each.set_xlim(*reach)
+        each.tick_params(axis="x", length=0, labelbottom=False)
+    for each in panels[:-1]:
+        few_ticks(each, "y", 4)
+    few_ticks(panels[-1])
+    panels[-1].tick_params(axis="x", length=3, labelbottom=True)
+    bottom = up + STEMS + between + 86
+    say(figure, width, bottom, foot(curve, "time apart"), ha="right", fontsize=SMALL, color=LIGHT.muted)
     return figure
 
 
-def _pairs(figure: Figure, curve: Curve, x: np.ndarray, width: float) -> Axes:
-    below = axes(figure, 44, 226, width - 54, 32)
+def _semivariance(figure: Figure, curve: Curve, top: float, width: float) -> Axes:
+    panel = axes(figure, 44, top, width - 54, 66)
+    panel.axhline(1, color=LIGHT.faint, linewidth=1)
+    panel.plot(*curve.lines[SEMI], color=LIGHT.ink, linewidth=1.5, marker="o", markersize=3.5)
+    panel.set_ylim(bottom=0)
+    say(figure, 0, top - 14, "semivariance (1 without dependence)", fontsize=SMALL, color=LIGHT.muted)
+    return panel
+
+
+def _pairs(figure: Figure, curve: Curve, top: float, width: float) -> Axes:
+    below = axes(figure, 44, top + 10, width - 54, 32)
     below.set_yticks([])
     if curve.size:
-        below.bar(x, curve.size, width=0.6 * _gap(x), color=LIGHT.faint)
+        x = np.array(curve.x)
+        broad = max(0.6 * gap(x), 0.004 * float(np.ptp(x)))  # never thinner than can be seen
+        below.bar(x, curve.size, width=broad, color=LIGHT.faint)
         words = f"pairs (at most {number(max(curve.size), 0)})"
-        say(figure, 0, 216, words, fontsize=SMALL, color=LIGHT.muted)
+        say(figure, 0, top, words, fontsize=SMALL, color=LIGHT.muted)
     return below
-
-
-def _gap(x: np.ndarray) -> float:
-    steps = np.diff(np.unique(x))
-    return float(steps.min()) if len(steps) else 1.0
 
 
 def paint_groups(curve: Curve, structure: str, width: float) -> Figure:
@@ -246,133 +283,59 @@ def paint_groups(curve: Curve, structure: str, width: float) -> Figure:
     return figure
 
 
-def paint_variogram(curve: Curve, structure: str, width: float) -> Figure:
-    """Half mean squared differences, the envelope of independence, the fitted curve, pairs by size."""
-    figure = blank(width, 290)
-    panel = axes(figure, 48, 26, width - 60, 206)
-    hue = getattr(LIGHT, mark(structure).role)
-    _band(panel, curve, np.array(curve.x))
-    _lines(figure, panel, curve, hue)
-    size = np.array(curve.size or [1.0] * len(curve.x))
-    area = 14 + 60 * size / size.max()
-    panel.scatter(
-        curve.x, curve.y, s=area, marker=mark(structure).marker, color=hue, edgecolor=LIGHT.paper, zorder=3
-    )
-    panel.set_xlim(0, 1.04 * max(curve.x))
-    panel.set_ylim(bottom=0)
+def paint_left_out(curve: Curve, structure: str, width: float) -> Figure:
+    """One coefficient without each group in turn; the line is the coefficient with all of them."""
+    several = len(curve.y)
+    labelled = len(curve.labels) > 0 and several <= LISTED
+    row = 19.0 if labelled else max(1.2, min(8.0, 420 / several))
+    left = min(150.0, 0.36 * width) if labelled else 8.0
+    note = "; ".join(f"line: {name}" for name in curve.lines)
+    said = curve.y_name or "coefficient without the group"
+    figure = blank(width, 58 + row * several + room(width, note, said))
+    panel = axes(figure, left, 6, width - left - 12, row * several + 6)
+    panel.set_ylim(several - 0.3, -0.7)
+    own = mark("group")
+    hue, size = getattr(LIGHT, own.role), min(6.0, 0.6 * row + 1)
+    for _, y in curve.lines.values():
+        panel.axvline(y[0], color=LIGHT.ink, linewidth=1.2)
+        panel.hlines(range(several), y[0], curve.y, color=LIGHT.faint, linewidth=min(2.0, 0.7 * row))
+    panel.plot(curve.y, range(several), own.marker, color=hue, markersize=size)
+    for place in range(several if labelled else 0):
+        y_at = 6 + (row * several + 6) * (place + 0.7) / (several + 0.4)
+        words = clip(curve.labels[place], left - 10, SMALL)
+        say(figure, left - 8, y_at, words, ha="right", fontsize=SMALL)
+    panel.set_yticks([])
     few_ticks(panel)
-    few_ticks(panel, "y")
-    say(figure, 0, 10, curve.y_name or "half mean squared difference", fontsize=SMALL, color=LIGHT.muted)
-    note = "larger: more pairs; shaded: no dependence" if curve.low else "larger: more pairs"
-    say(figure, 0, 279, note, fontsize=SMALL - 0.5, color=LIGHT.muted)
-    say(
-        figure,
-        width,
-        279,
-        with_unit(curve.x_name or "distance", curve.unit),
-        ha="right",
-        fontsize=SMALL,
-        color=LIGHT.muted,
-    )
+    ends(figure, row * several + 46, note, said)
     return figure
-
-
-def paint_map(curve: Curve, structure: str, width: float, lonlat: bool = False) -> Figure:
-    """Sites with their mean residual: filled above the fit, hollow below, area by size. ``curve.size``
-    holds the residual."""
-    x, y, value = (np.array(v, dtype=float) for v in (curve.x, curve.y, curve.size))
-    stretch = 1 / max(0.1, math.cos(math.radians(float(y.mean())))) if lonlat else 1.0
-    broad, high = float(np.ptp(x)) or 1.0, float(np.ptp(y)) * stretch or 1.0
-    tall = min(1.2 * width, max(0.35 * width, (width - 24) * high / broad))
-    figure = blank(width, tall + 64)
-    panel = axes(figure, 12, 8, width - 24, tall)
-    panel.axis("off")
-    panel.set_aspect(stretch, adjustable="datalim")
-    hue = getattr(LIGHT, mark(structure).role)
-    largest = float(np.abs(value).max()) or 1.0
-    area = 10 + 110 * np.abs(value) / largest
-    for above, face in ((True, hue), (False, LIGHT.paper)):
-        which = (value >= 0) == above
-        panel.scatter(
-            x[which],
-            y[which],
-            s=area[which],
-            marker=mark(structure).marker,
-            facecolor=face,
-            edgecolor=hue,
-            linewidth=1.1,
-            zorder=2 + above,
-        )
-    if curve.links:
-        ends = np.array(curve.links)
-        across = np.column_stack([x[ends], np.full(len(ends), np.nan)]).ravel()
-        along = np.column_stack([y[ends], np.full(len(ends), np.nan)]).ravel()
-        panel.plot(across, along, color=LIGHT.faint, linewidth=0.8, zorder=0)
-    panel.margins(0.05)
-    _scale_bar(figure, panel, tall + 24, curve, lonlat, float(y.mean()))
-    say(
-        figure,
-        0,
-        tall + 52,
-        f"filled: above the fit; hollow: below; area: size{'; lines: neighbours' if curve.links else ''}",
-        fontsize=SMALL - 0.5,
-        color=LIGHT.muted,
-    )
-    if lonlat:
-        say(figure, width, tall + 24, "north ↑", ha="right", fontsize=SMALL, color=LIGHT.muted)
-    return figure
-
-
-def _scale_bar(figure: Figure, panel: Axes, y: float, curve: Curve, lonlat: bool, latitude: float) -> None:
-    """A round length of about a quarter of the map."""
-    figure.draw_without_rendering()  # settles the limits that the equal aspect asks for
-    low, high = panel.get_xlim()
-    box = panel.get_window_extent()
-    per_pixel = (high - low) / box.width
-    unit = curve.unit
-    if lonlat:
-        per_pixel *= 111.195 * math.cos(math.radians(latitude))  # km in one degree of a great circle
-        unit = "km"
-    target = per_pixel * figure.get_size_inches()[0] * 72 / 4
-    power = 10.0 ** math.floor(math.log10(target))
-    length = max(m * power for m in (1, 2, 5) if m * power <= target)
-    whole = figure.get_size_inches() * 72
-    pixels = length / per_pixel * 72 / figure.dpi
-    from matplotlib.lines import Line2D
-
-    line = [12 / whole[0], (12 + pixels) / whole[0]]
-    figure.add_artist(Line2D(line, [1 - y / whole[1]] * 2, color=LIGHT.ink, linewidth=2))
-    say(figure, 18 + pixels, y, f"{significant(length, 1)} {many(unit)}".rstrip(), fontsize=SMALL)
 
 
 def paint_function(curve: Curve, structure: str, width: float) -> Figure:
     """Partial residuals, with the fitted and the repaired curve."""
-    figure = blank(width, 280)
-    panel = axes(figure, 48, 24, width - 58, 200)
+    said = curve.y_name or "partial residual"
+    up = room(width, said, line_words(curve))
+    figure = blank(width, 280 + up)
+    panel = axes(figure, 48, 24 + up, width - 58, 200)
     if curve.low and curve.high:
         panel.vlines(curve.x, curve.low, curve.high, color=LIGHT.faint, linewidth=2)
     panel.plot(curve.x, curve.y, "o", color=LIGHT.muted, markersize=4 if len(curve.x) <= 60 else 2.5)
-    _lines(figure, panel, curve, LIGHT.accent)
+    ends(figure, 10, said, lines(panel, curve, LIGHT.accent))
     few_ticks(panel)
     few_ticks(panel, "y")
-    say(figure, 0, 10, curve.y_name or "partial residual", fontsize=SMALL, color=LIGHT.muted)
-    say(
-        figure,
-        width,
-        268,
-        with_unit(curve.x_name or "predictor", curve.unit),
-        ha="right",
-        fontsize=SMALL,
-        color=LIGHT.muted,
-    )
+    along = foot(curve, "predictor")
+    say(figure, width, 268 + up, along, ha="right", fontsize=SMALL, color=LIGHT.muted)
     return figure
 
 
 PAINTERS: dict[str, Paint] = {
     "autocorrelation": paint_autocorrelation,
-    "group-means": paint_groups,
-    "variogram": paint_variogram,
-    "map": paint_map,
+    "correlogram": paint_autocorrelation,
+    "directions": paint_directions,
     "function": paint_function,
+    "group-means": paint_groups,
+    "left-out": paint_left_out,
     "traces": paint_traces,
+    "variogram": paint_variogram,
 }
+MAPS: dict[str, Callable[[Curve, str, float, bool], Figure]] = {"map": paint_map, "local-map": paint_local}
+KINDS = frozenset((*PAINTERS, *MAPS))

@@ -14,7 +14,8 @@ from clingstone.evidence.finding import Curve
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.naming import noun
-from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say, with_unit
+from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say
+from clingstone.writeup.strokes import ends, foot, room
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
@@ -31,23 +32,24 @@ def paint_traces(curve: Curve, structure: str, width: float) -> Figure:
     down = math.ceil(len(names) / across)
     left, gap = 40.0, 14.0
     each = (width - left - gap * (across - 1)) / across
-    figure = blank(width, 26 + down * (TALL + GAP) + 26)
-    say(figure, 0, 10, curve.y_name or "residual", fontsize=SMALL, color=LIGHT.muted)
-    note = "shaded: from the 10th to the 90th of 100 rows of all series" if curve.low else ""
-    say(figure, width, 10, note, ha="right", fontsize=SMALL - 0.5, color=LIGHT.muted)
-    ends = _ends(curve)
+    note = "shaded: the middle 8 of 10 rows of all series" if curve.low else ""
+    said = curve.y_name or "residual"
+    head = 26 + room(width, said, note)
+    figure = blank(width, head + down * (TALL + GAP) + 26)
+    ends(figure, 10, said, note)
+    limits = _ends(curve)
     for k, name in enumerate(names):
         row, column = divmod(k, across)
-        top = 26 + row * (TALL + GAP)
+        top = head + row * (TALL + GAP)
         panel = axes(figure, left + column * (each + gap), top + 16, each, TALL - 8)
-        _trace(panel, curve, name, structure, ends)
+        _trace(panel, curve, name, structure, limits)
         say(figure, left + column * (each + gap), top + 8, clip(name, each, SMALL), fontsize=SMALL)
         few_ticks(panel, "x", 4)
         few_ticks(panel, "y", 3)
         panel.tick_params(axis="y", length=0, labelleft=column == 0)
         panel.tick_params(axis="x", labelbottom=k + across >= len(names))
-    foot = with_unit(curve.x_name or "time", curve.unit)
-    say(figure, width, 26 + down * (TALL + GAP) + 14, foot, ha="right", fontsize=SMALL, color=LIGHT.muted)
+    along, bottom = foot(curve, "time"), head + down * (TALL + GAP) + 14
+    say(figure, width, bottom, along, ha="right", fontsize=SMALL, color=LIGHT.muted)
     return figure
 
 
