@@ -14,8 +14,9 @@ from clingstone.maths import reference, sandwich
 from clingstone.maths.estimable import reduced
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.clusters import clusters, covered, group_levels
-from clingstone.remedies.linear import Joint, stop_if_none_left
+from clingstone.remedies.clusters import OverGroups, clusters
+from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
+from clingstone.remedies.linear import stop_if_none_left
 from clingstone.remedies.means import ordinary, varies
 from clingstone.remedies.remedy import Account, Estimand, Estimates
 from clingstone.remedies.sandwich import CR, ClusterReady
@@ -83,13 +84,8 @@ class BetweenReady(WithinReady):
         if np.all(np.isnan(wald)):
             return None
         if not self.own_df:
-            df2 = self.part.count - 1.0
-            return wald / q, float(q), df2, reference.f_tail(wald / q, q, df2)
-        eta = self._apart_df
-        if not eta - q + 1 > 0:
-            return None
-        F, df = reference.hotelling(wald, q, eta)
-        return F, float(q), df, reference.f_tail(F, q, df)
+            return wald_joint(wald, q, self.part.count - 1.0)
+        return hotelling_joint(wald, q, self._apart_df)
 
     @property
     @once
@@ -115,7 +111,7 @@ class BetweenReady(WithinReady):
 
 
 @dataclass(frozen=True)
-class WithinBetween:
+class WithinBetween(OverGroups):
     """Each predictor that varies within groups is split into its deviations and its group means.
 
     Mundlak (1978). Rows are "x [within]" and "x [between]"; columns that are constant within groups keep
@@ -136,15 +132,6 @@ class WithinBetween:
     @property
     def name(self) -> str:
         return f"within and between {self.at}" if self.at else "within and between groups"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return group_levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> BetweenReady:
         part = clusters(design, self.at)

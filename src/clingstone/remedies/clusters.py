@@ -2,11 +2,17 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from clingstone.design.design import Design, rows_of
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, NotSupported, Refusal
+from clingstone.remedies.remedy import Plain
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
 
 WITHIN = ("same", "nests")
 FEW_TREATED = 3  # clusters in the smaller arm below which no resampling of clusters can be trusted
@@ -57,6 +63,25 @@ def covered(design: Design, part: Partition) -> frozenset[Family]:
     if design.serial is not None and part.relation(design.serial.part) in WITHIN:
         out.add("serial")
     return frozenset(out)
+
+
+class OverClusters(Plain):
+    """A remedy run over any partition of the rows; it covers what lies wholly within the clusters."""
+
+    at: str
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return levels(design)
+
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return covered(fits.design, clusters(fits.design, self.at))
+
+
+class OverGroups(OverClusters):
+    """The same over group levels only."""
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return group_levels(design)
 
 
 def arms(design: Design, part: Partition) -> dict[str, int]:

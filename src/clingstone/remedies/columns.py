@@ -10,7 +10,7 @@ from clingstone.design.design import Design
 from clingstone.maths import reference
 from clingstone.maths.once import Array
 from clingstone.remedies.gls import Column
-from clingstone.remedies.linear import Joint
+from clingstone.remedies.joint import Joint, f_joint
 from clingstone.remedies.remedy import Estimates, Flags, multi
 
 
@@ -58,4 +58,4 @@ def joint(columns: Sequence[Column], L: Array) -> Joint:
         wald = reference.wald(effect, (L.T @ column.phi @ L)[:, :, None])[0]
         scale, df2[b] = column.joint(L)
         F[b] = scale * wald / q
-    return F, float(q), df2, reference.f_tail(F, q, df2)
+    return f_joint(F, q, df2)

@@ -15,10 +15,10 @@ from clingstone.maths.longrun import RatioLaw
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.scpc import Components
 from clingstone.needs import Family, Limits, Needs, NotSupported
-from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported
+from clingstone.remedies.joint import Joint, hotelling_joint
+from clingstone.remedies.linear import LinearReady, reported
+from clingstone.remedies.places import OnMap, enough_sites
 from clingstone.remedies.remedy import Account, Estimand
-from clingstone.remedies.sandwich import hotelling_joint
-from clingstone.remedies.spatialhac import spatial_node
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -88,7 +88,7 @@ class ComponentsReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class SpatialComponents:
+class SpatialComponents(OnMap):
     """Ordinary estimates; the scores are projected on the q smoothest maps of the places.
 
     The critical value holds for every exponential correlation up to a mean pairwise correlation: 0.03,
@@ -106,25 +106,8 @@ class SpatialComponents:
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "muller-watson-2022"
 
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        node = spatial_node(fits)
-        return None if node is None else fits[node]
-
     def prepare(self, design: Design, working: ErrorModel | None = None) -> ComponentsReady:
-        positive_m(design)
-        sites = design.spatial
-        if sites is None:
-            raise NotSupported("no places were declared", "Name coords=.")
-        if sites.count < FEWEST:
-            raise NotSupported(
-                f"{sites.count} distinct places; smooth maps need {FEWEST}", "More places would be needed."
-            )
+        sites = enough_sites(design, FEWEST, "smooth maps need")
         fitted = 0.0 if working is None else _mean_correlation(design, working)
         strength = max(self.least, fitted)
         if strength > MOST:

@@ -12,7 +12,7 @@ from clingstone.maths import reference
 from clingstone.maths.each import Minima
 from clingstone.maths.eachdf import KenwardEach, slopes_each
 from clingstone.maths.once import Array
-from clingstone.remedies.linear import Joint
+from clingstone.remedies.joint import Joint, f_joint
 from clingstone.remedies.remedy import Estimates, multi
 
 if TYPE_CHECKING:
@@ -74,6 +74,7 @@ def _kenward(ready: GlsReady, many: Each, found: Minima, s2: Array, read: _Colum
     kr = KenwardEach.of(ready.design.n, classes.c, classes.count.astype(float), classes.QQ, s2, ratio * s2)
     read.phi[:] = np.where(bound[:, None, None], kr.phi, kr.adjusted)
     read.df[:] = np.clip(kr.df(ready.W), 1.0, float(ready.design.m)).T
+    read.df[:, bound] = ready.df_at_zero(ready.W)[:, None]
     for term in multi(ready.design):
         scale, df2 = kr.joint(ready.W[:, list(term.columns)])
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2
@@ -121,4 +122,4 @@ def _joint(ready: GlsReady, name: str, columns: tuple[int, ...], coef: Array, re
     covariance = np.moveaxis(np.einsum("pa,bpq,qc->bac", L, read.phi, L, optimize=True), 0, -1)
     scale, df2 = read.joint[name]
     F = scale * reference.wald(L.T @ coef, covariance) / q
-    return F, float(q), df2, reference.f_tail(F, q, df2)
+    return f_joint(F, q, df2)

@@ -15,10 +15,10 @@ from clingstone.maths import reference, resample
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, Refusal
-from clingstone.remedies.clusters import clusters, covered, group_levels
-from clingstone.remedies.linear import Joint, stop_if_none_left
+from clingstone.remedies.clusters import OverGroups, clusters
+from clingstone.remedies.joint import Joint, hotelling_joint
+from clingstone.remedies.linear import stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, multi, rows
-from clingstone.remedies.sandwich import hotelling_joint
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -132,7 +132,7 @@ class GroupTReady:
 
 
 @dataclass(frozen=True)
-class GroupT:
+class GroupT(OverGroups):
     """The model fitted in every group by itself; t of the group estimates (Ibragimov & Müller 2010).
 
     Valid for two-sided levels up to 8.3 % however much the groups differ in spread, as long as their
@@ -152,15 +152,6 @@ class GroupT:
     @property
     def name(self) -> str:
         return f"an estimate in each {self.at}, then t" if self.at else "an estimate in each group, then t"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return group_levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> GroupTReady:
         part = clusters(design, self.at)

@@ -12,7 +12,7 @@ from clingstone.design.response import Response
 from clingstone.maths import sandwich
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs
-from clingstone.remedies.clusters import clusters, covered, levels, rank_note
+from clingstone.remedies.clusters import OverClusters, clusters, rank_note
 from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand
 from clingstone.remedies.sandwich import ClusterReady, decided_by_one
@@ -76,7 +76,7 @@ class JackknifeReady(ClusterReady):
 
 
 @dataclass(frozen=True)
-class ClusterJackknife:
+class ClusterJackknife(OverClusters):
     """Ordinary estimates; variance from leaving out one cluster at a time, with its Satterthwaite df.
 
     Equal to CR3 times (G − 1)/G (Bell & McCaffrey 2002; MacKinnon, Nielsen & Webb 2023). The df are those
@@ -96,15 +96,6 @@ class ClusterJackknife:
     @property
     def name(self) -> str:
         return f"cluster jackknife, by {self.at}" if self.at else "cluster jackknife"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> JackknifeReady:
         positive_m(design)

@@ -16,9 +16,9 @@ from clingstone.maths.fixedb import bartlett_law, wishart
 from clingstone.maths.longrun import Grid, RatioLaw
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
-from clingstone.remedies.linear import Joint, LinearReady
+from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
+from clingstone.remedies.linear import LinearReady
 from clingstone.remedies.remedy import Account
-from clingstone.remedies.sandwich import hotelling_joint
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -160,7 +160,7 @@ class KernelReady(LinearReady):
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         q = len(columns)
         if not self.fixed:
-            return wald / q, float(q), np.inf, reference.f_tail(wald / q, q, np.inf)
+            return wald_joint(wald, q, np.inf)
         scale, nu = wishart(self.law)
         return hotelling_joint(scale * wald, q, nu)
 

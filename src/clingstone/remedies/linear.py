@@ -14,12 +14,11 @@ from clingstone.design.response import Response
 from clingstone.maths import reference
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported, Refusal
+from clingstone.remedies.joint import Joint
 from clingstone.remedies.remedy import Account, Estimates, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
-
-Joint = tuple[Array, float, Array | float, Array]
 
 
 @dataclass(frozen=True, eq=False)

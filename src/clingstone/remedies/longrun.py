@@ -13,10 +13,10 @@ from clingstone.maths import reference
 from clingstone.maths.longrun import Grid, RatioLaw, joint_law
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, memory
+from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.kernel import Bandwidth, KernelReady, sweep
-from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand
-from clingstone.remedies.sandwich import hotelling_joint
+from clingstone.remedies.linear import LinearReady, positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand, Plain
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -93,7 +93,7 @@ class LongRunReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class Hac:
+class Hac(Plain):
     """Ordinary estimates with a covariance that allows dependence along time.
 
     The mean of the first ν squared cosine sums of the scores (Lazarus, Lewis, Stock & Watson 2018). Up to
@@ -116,12 +116,6 @@ class Hac:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "lazarus-2018"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
 
     def working(self, fits: Fits) -> ErrorModel | None:
         """The AR(1) of the residuals, or None where these data cannot carry one."""

@@ -17,10 +17,10 @@ from clingstone.maths.estimable import Reduced, reduced
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.clusters import clusters, covered, group_levels
-from clingstone.remedies.linear import Joint, few_df, stop_if_none_left
+from clingstone.remedies.clusters import OverGroups, clusters
+from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
+from clingstone.remedies.linear import few_df, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, multi, rows
-from clingstone.remedies.sandwich import hotelling_joint
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -104,7 +104,7 @@ class MeansReady:
             return hotelling_joint(
                 wald, q, sandwich.row_joint_df(self.found.basis.Q, self.T[:, list(columns)])
             )
-        return wald / q, float(q), float(self.m), reference.f_tail(wald / q, q, float(self.m))
+        return wald_joint(wald, q, float(self.m))
 
     def account(self, fits: Fits) -> Account:
         weighted = not np.all(self.scale == self.scale[0])
@@ -125,7 +125,7 @@ class MeansReady:
 
 
 @dataclass(frozen=True)
-class GroupMeans:
+class GroupMeans(OverGroups):
     """Ordinary least squares of group means: one row per group, t with G − p df.
 
     Exact for group-level predictors when groups are of one size and their errors normal, whatever the
@@ -144,15 +144,6 @@ class GroupMeans:
     @property
     def name(self) -> str:
         return f"means of each {self.at}" if self.at else "means of groups"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return group_levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> MeansReady:
         part = clusters(design, self.at)

@@ -22,7 +22,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.columns import estimates
 from clingstone.remedies.gls import Column
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -118,7 +118,7 @@ class SlopeReady:
 
 
 @dataclass(frozen=True)
-class MixedSlope:
+class MixedSlope(Plain):
     """Random slopes with a random intercept, correlated by default, at one group level.
 
     Laird & Ware (1982); REML by Harville (1977); Kenward & Roger (1997) df and covariance. Every other
@@ -157,12 +157,6 @@ class MixedSlope:
         # Where none can be estimated the first is kept: the refusal then says why.
         finest = design.group.finest
         return tuple(x + BY + finest.key for x in candidates(design, finest)[:1])
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def keys(self, design: Design) -> tuple[str, ...]:
         """Component keys: every level's intercept and the slopes. Raises NotSupported."""

@@ -15,9 +15,9 @@ from clingstone.maths import reference, reml, sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.linear import Joint, few_df, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, multi
-from clingstone.remedies.sandwich import hotelling_joint
+from clingstone.remedies.joint import Joint, f_joint, hotelling_joint
+from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Plain, multi
 from clingstone.remedies.words import bound_notes
 
 if TYPE_CHECKING:
@@ -142,7 +142,7 @@ class MixedRobustReady:
                 F[b], df2[b] = float(found[0][0]), float(np.ravel(found[2])[0])
         if np.all(np.isnan(F)):
             return None
-        return F, float(q), df2, reference.f_tail(F, q, df2)
+        return f_joint(F, q, df2)
 
     def account(self, fits: Fits) -> Account:
         model = fits[self.remedy.node(fits)]
@@ -170,7 +170,7 @@ class MixedRobustReady:
 
 
 @dataclass(frozen=True)
-class MixedRobust:
+class MixedRobust(Plain):
     """The estimate of a random-intercept model, its covariance from clusters (Liang & Zeger 1986).
 
     The weights come from the mixed model, the uncertainty from how whole clusters scatter: CR2 on the rows
@@ -209,9 +209,6 @@ class MixedRobust:
         if design.serial is not None and part.relation(design.serial.part) in ("same", "nests"):
             out.add("serial")
         return frozenset(out)
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def keys(self, design: Design) -> tuple[str, ...]:
         """Intercepts that lie within the clusters, the clusters' own first. Raises NotSupported."""

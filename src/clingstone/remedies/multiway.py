@@ -10,14 +10,15 @@ import numpy as np
 
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import reference, sandwich
+from clingstone.maths import sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import clusters, covered, few_treated, group_levels
 from clingstone.remedies.gls import TOGETHER
-from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates
+from clingstone.remedies.joint import Joint, wald_joint
+from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -65,8 +66,7 @@ class MultiwayReady(LinearReady):
         q, least = len(columns), min(part.count for part in self.ways)
         if q >= least:
             return None
-        df2 = float(self.df[0, 0])
-        return wald / q, float(q), df2, reference.f_tail(wald / q, q, df2)
+        return wald_joint(wald, q, float(self.df[0, 0]))
 
     def fit(self, fits: Fits) -> Estimates:
         found = super().fit(fits)
@@ -117,7 +117,7 @@ class MultiwayReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class MultiwayCluster:
+class MultiwayCluster(Plain):
     """Ordinary estimates with a covariance that allows dependence within each of several crossed groupings.
 
     Cameron, Gelbach & Miller (2011): the sum of the one-way sandwiches less those of the intersections.
@@ -157,9 +157,6 @@ class MultiwayCluster:
     def covering(self, fits: Fits) -> frozenset[Family]:
         ways = [fits.design.partitions[key] for key in self.at.split(TOGETHER)]
         return frozenset().union(*(covered(fits.design, part) for part in ways))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> MultiwayReady:
         positive_m(design)

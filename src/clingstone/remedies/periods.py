@@ -14,17 +14,17 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.kernel import Bandwidth, KernelReady
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Estimand
+from clingstone.remedies.remedy import Estimand, Plain
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
-    from clingstone.covariance.fits import ErrorModel, Fits
+    from clingstone.covariance.fits import ErrorModel
 
 PERIODS, PERIODS_EASY = 20, 50  # its theory lets the number of periods grow; convention
 
 
 @dataclass(frozen=True)
-class PanelHac:
+class PanelHac(Plain):
     """Ordinary estimates with scores summed over series in each period, then a kernel along time.
 
     Allows any dependence between rows of one period and dependence that fades along time (Driscoll &
@@ -47,12 +47,6 @@ class PanelHac:
     def abouts(self, design: Design) -> tuple[str, ...]:
         several = design.serial is not None and design.serial.part.count > 1
         return ("",) if several else ()
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None) -> KernelReady:
         positive_m(design)

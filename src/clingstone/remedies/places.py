@@ -1,4 +1,4 @@
-"""What dependence between places does to what can be known: effective numbers, and confounding."""
+"""What remedies for places share: what they ask for, effective numbers, and confounding."""
 
 from __future__ import annotations
 
@@ -13,13 +13,49 @@ from clingstone.display import significant
 from clingstone.maths import reml
 from clingstone.maths.once import Array
 from clingstone.maths.vecchia import NEIGHBOURS
+from clingstone.needs import NotSupported
+from clingstone.remedies.linear import positive_m
+from clingstone.remedies.remedy import Plain
+from clingstone.structure.spatial import Sites
 
 if TYPE_CHECKING:
-    from clingstone.covariance.fits import Fits
+    from clingstone.covariance.fits import ErrorModel, Fits
 
 MOVED = 2.0  # standard deviations of the difference at which an estimate is said to have moved
 SHIFTED = 0.25  # relative change that counts when the predictor is smooth over the map
 SMOOTH = 0.5  # share of a predictor that a cubic surface of place explains
+
+
+def spatial_node(fits: Fits) -> frozenset[str] | None:
+    """Components of the map alone: places, and what rows of one place share."""
+    if "spatial" not in fits.components:
+        return None
+    design = fits.design
+    own = [k for k in ("group:site",) if k in fits.components]
+    if not own and design.group is not None and design.spatial is not None:
+        same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
+        own = [f"group:{v.key}" for v in same if f"group:{v.key}" in fits.components]
+    return frozenset([*own[:1], "spatial"])
+
+
+class OnMap(Plain):
+    """A remedy for places that asks for the fitted covariance of the map."""
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        """The fitted spatial covariance, with what rows of one place share where places repeat."""
+        node = spatial_node(fits)
+        return None if node is None else fits[node]
+
+
+def enough_sites(design: Design, least: int, need: str) -> Sites:
+    """The places. Raises NotSupported where there are fewer than ``least``; need : "regions need"."""
+    positive_m(design)
+    sites = design.spatial
+    if sites is None:
+        raise NotSupported("no places were declared", "Name coords=.")
+    if sites.count < least:
+        raise NotSupported(f"{sites.count} distinct places; {need} {least}", "More places would be needed.")
+    return sites
 
 
 @dataclass(frozen=True, eq=False)

@@ -14,8 +14,9 @@ from clingstone.design.response import Response
 from clingstone.maths import reference, reml
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported
-from clingstone.remedies.linear import Joint, LinearReady, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi
+from clingstone.remedies.joint import Joint, wald_joint
+from clingstone.remedies.linear import LinearReady, reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
 from clingstone.remedies.serial import enough_times
 
 if TYPE_CHECKING:
@@ -80,8 +81,7 @@ class TwoStepReady(LinearReady):
         return np.stack([L.T @ phi @ L for phi in each], axis=2)
 
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint:
-        q, df2 = len(columns), float(self.design.m)
-        return wald / q, float(q), df2, reference.f_tail(wald / q, q, df2)
+        return wald_joint(wald, len(columns), float(self.design.m))
 
     def account(self, fits: Fits) -> Account:
         rho, _ = self.rho(fits.response.column(0))
@@ -97,7 +97,7 @@ class TwoStepReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class PraisWinsten:
+class PraisWinsten(Plain):
     """AR(1) with ρ from the residuals, iterated; t with n − p df. A convention of ``ar1``."""
 
     at: str = ""
@@ -108,15 +108,6 @@ class PraisWinsten:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True)
     source: ClassVar[str] = "prais-winsten-1954"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None) -> TwoStepReady:
         series = enough_times(design, self.limits)

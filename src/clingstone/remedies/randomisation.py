@@ -16,8 +16,9 @@ from clingstone.maths.partition import Partition
 from clingstone.maths.resample import Curves
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import clusters, covered
-from clingstone.remedies.linear import Joint, positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates
+from clingstone.remedies.joint import Joint
+from clingstone.remedies.linear import positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 from clingstone.remedies.resampled import ResampledReady
 
 if TYPE_CHECKING:
@@ -131,7 +132,7 @@ class RandomisationReady(ResampledReady):
 
 
 @dataclass(frozen=True)
-class Randomisation:
+class Randomisation(Plain):
     """Ordinary estimates; p and interval from permuting what was assigned, unit by unit.
 
     The tested hypothesis is sharp: the effect is the same for every unit. Under it the permutation
@@ -160,9 +161,6 @@ class Randomisation:
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return covered(fits.design, fits.design.partitions[self.at])
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> RandomisationReady:
         positive_m(design)

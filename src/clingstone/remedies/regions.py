@@ -15,10 +15,10 @@ from clingstone.maths import sandwich
 from clingstone.maths.once import Array, frozen, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported
-from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.linear import few_df, reported, stop_if_none_left
+from clingstone.remedies.places import OnMap, enough_sites
 from clingstone.remedies.remedy import Account, Estimand
 from clingstone.remedies.sandwich import ClusterReady
-from clingstone.remedies.spatialhac import spatial_node
 from clingstone.structure.spatial import Sites
 
 if TYPE_CHECKING:
@@ -59,7 +59,7 @@ class RegionReady(ClusterReady):
 
 
 @dataclass(frozen=True)
-class RegionCluster:
+class RegionCluster(OnMap):
     """Cluster-robust over a few large regions, factor G/(G − 1), t with G − 1 df.
 
     Regions are taken as independent, which holds only where the dependence fades well inside one:
@@ -77,9 +77,6 @@ class RegionCluster:
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True)
     source: ClassVar[str] = "bester-conley-hansen-2011"
 
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
     def covering(self, fits: Fits) -> frozenset[Family]:
         """Also groups and series that lie within one place each."""
         design = fits.design
@@ -94,20 +91,8 @@ class RegionCluster:
                 out.add("serial")
         return frozenset(out)
 
-    def working(self, fits: Fits) -> ErrorModel | None:
-        node = spatial_node(fits)
-        return None if node is None else fits[node]
-
     def prepare(self, design: Design, working: ErrorModel | None = None) -> RegionReady:
-        positive_m(design)
-        sites = design.spatial
-        if sites is None:
-            raise NotSupported("no places were declared", "Name coords=.")
-        if sites.count < self.limits.sites_estimate:
-            raise NotSupported(
-                f"{sites.count} distinct places; regions need {self.limits.sites_estimate}",
-                "More places would be needed.",
-            )
+        sites = enough_sites(design, self.limits.sites_estimate, "regions need")
         reach = _reach(working)
         regions = self._chosen(sites, reach)
         names, W = reported(design)

@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING, Literal, Protocol
+from typing import TYPE_CHECKING, ClassVar, Literal, Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -155,6 +155,21 @@ class Remedy(Protocol):
     def conventions(self) -> tuple[tuple[str, Remedy], ...]:
         """The same remedy under the other common settings, each with words for them."""
         ...
+
+
+class Plain:
+    """Defaults of a remedy: of the whole table, for the families it names, with nothing fitted first."""
+
+    covers: ClassVar[frozenset[Family]]
+
+    def abouts(self, design: Design) -> tuple[str, ...]:
+        return ("",)
+
+    def covering(self, fits: Fits) -> frozenset[Family]:
+        return self.covers
+
+    def working(self, fits: Fits) -> ErrorModel | None:
+        return None
 
 
 @dataclass(frozen=True)

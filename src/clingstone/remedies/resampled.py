@@ -14,8 +14,9 @@ from clingstone.maths import resample, sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.clusters import clusters, covered, few_treated, levels, rank_note
-from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported, stop_if_none_left
+from clingstone.remedies.clusters import OverClusters, clusters, few_treated, rank_note
+from clingstone.remedies.joint import Joint
+from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, multi
 from clingstone.remedies.sandwich import decided_by_one
 
@@ -183,7 +184,7 @@ class WildReady(ResampledReady):
 
 
 @dataclass(frozen=True)
-class WildClusterBootstrap:
+class WildClusterBootstrap(OverClusters):
     """Ordinary estimates; p and interval by the restricted wild cluster bootstrap of the t statistic.
 
     Cameron, Gelbach & Miller (2008): the tested value is imposed, the scores of each cluster are multiplied
@@ -205,15 +206,6 @@ class WildClusterBootstrap:
     @property
     def name(self) -> str:
         return f"wild cluster bootstrap, by {self.at}" if self.at else "wild cluster bootstrap"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> WildReady:
         positive_m(design)

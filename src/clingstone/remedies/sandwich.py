@@ -10,13 +10,14 @@ import numpy as np
 
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import reference, sandwich
+from clingstone.maths import sandwich
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, Refusal
-from clingstone.remedies.clusters import clusters, covered, levels
-from clingstone.remedies.linear import Joint, LinearReady, few_df, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.clusters import OverClusters, clusters
+from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
+from clingstone.remedies.linear import LinearReady, few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.remedy import Account, Estimand, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -37,9 +38,7 @@ class OrdinaryReady(LinearReady):
         return (w.T @ w)[:, :, None] * response.s2
 
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
-        q, df2 = len(columns), float(self.df[0, 0])
-        F = wald / q
-        return F, float(q), df2, reference.f_tail(F, q, df2)
+        return wald_joint(wald, len(columns), float(self.df[0, 0]))
 
     def account(self, fits: Fits) -> Account:
         return Account(
@@ -54,7 +53,7 @@ class OrdinaryReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class Ordinary:
+class Ordinary(Plain):
     """Ordinary least squares with independent errors of one variance: what every refit is compared with."""
 
     normal: bool = False
@@ -66,15 +65,6 @@ class Ordinary:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = KNOWN
     source: ClassVar[str] = ""
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> OrdinaryReady:
         positive_m(design)
@@ -122,8 +112,7 @@ class RowRobustReady(LinearReady):
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         q = len(columns)
         if not self.own_df:
-            F, df2 = wald / q, float(self.df[0, 0])
-            return F, float(q), df2, reference.f_tail(F, q, df2)
+            return wald_joint(wald, q, float(self.df[0, 0]))
         return hotelling_joint(wald, q, self._eta(columns))
 
     @once
@@ -143,7 +132,7 @@ class RowRobustReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class HeteroscedasticityRobust:
+class HeteroscedasticityRobust(Plain):
     """Ordinary estimates with a covariance that allows every row its own variance (HC2 by default).
 
     MacKinnon & White (1985); Satterthwaite df under equal variances, Bell & McCaffrey (2002) with every
@@ -163,15 +152,6 @@ class HeteroscedasticityRobust:
     @property
     def name(self) -> str:
         return f"robust to unequal spread ({self.kind})"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> RowRobustReady:
         positive_m(design)
@@ -242,8 +222,7 @@ class ClusterReady(LinearReady):
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         q = len(columns)
         if not self.own_df:
-            F, df2 = wald / q, float(self.df[0, 0])
-            return F, float(q), df2, reference.f_tail(F, q, df2)
+            return wald_joint(wald, q, float(self.df[0, 0]))
         return hotelling_joint(wald, q, self._eta(columns))
 
     @once
@@ -275,7 +254,7 @@ class ClusterReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class ClusterRobust:
+class ClusterRobust(OverClusters):
     """Ordinary estimates with a covariance that allows any dependence within clusters.
 
     CR2 with an independent working model and Satterthwaite df per coefficient (Bell & McCaffrey 2002);
@@ -296,16 +275,6 @@ class ClusterRobust:
     @property
     def name(self) -> str:
         return f"cluster-robust, by {self.at}" if self.at else "cluster-robust"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return levels(design)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        """Clusters cover what lies wholly within them."""
-        return covered(fits.design, clusters(fits.design, self.at))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> ClusterReady:
         positive_m(design)
@@ -363,11 +332,3 @@ def decided_by_one(
         for j, name in enumerate(names)
         if weights.lost[j] > 1e-8
     }
-
-
-def hotelling_joint(wald: Array, q: int, eta: float) -> Joint | None:
-    """F and p of an approximate T² with η df, or None where η leaves no denominator."""
-    if not eta - q + 1 > 0:
-        return None
-    F, df2 = reference.hotelling(wald, q, eta)
-    return F, float(q), df2, reference.f_tail(F, q, df2)

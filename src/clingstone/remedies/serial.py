@@ -18,8 +18,9 @@ from clingstone.maths import curvature, reference, reml
 from clingstone.maths.once import Array
 from clingstone.maths.search import Optimum
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.linear import Joint, positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi
+from clingstone.remedies.joint import Joint, f_joint
+from clingstone.remedies.linear import positive_m, reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -148,7 +149,7 @@ def _joint(columns: list[tuple[Array, curvature.Slopes]], L: Array) -> Joint:
         F[b] = reference.wald((L.T @ coef)[:, None], (L.T @ slopes.phi @ L)[:, :, None])[0] / q
         if slopes.sound:
             df2[b] = slopes.joint(L)
-    return F, float(q), df2, reference.f_tail(F, q, df2)
+    return f_joint(F, q, df2)
 
 
 def half_life(rho: float, series: Series) -> str:
@@ -240,7 +241,7 @@ class FadingReady(ProcessReady):
 
 
 @dataclass(frozen=True)
-class Car1:
+class Car1(Plain):
     """A correlation that fades geometrically with elapsed time, and row noise where the data ask for it.
 
     Exact at any spacing, linear in the rows (Jones 1980). With ``ties="replicate"`` rows of one time are
@@ -256,15 +257,6 @@ class Car1:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True)
     source: ClassVar[str] = "jones-1980"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None) -> FadingReady:
         series = enough_times(design, self.limits)
@@ -321,7 +313,7 @@ def _order(order: tuple[int, int]) -> str:
 
 
 @dataclass(frozen=True)
-class Arma:
+class Arma(Plain):
     """ARMA errors within series, the order by AICc from AR(1), AR(2), AR(3), MA(1) and ARMA(1,1).
 
     AR(1) stays unless another order is better by more than 4. The likelihood is exact, missing steps
@@ -337,15 +329,6 @@ class Arma:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "ansley-1979"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None) -> ArmaReady:
         series = enough_times(design, self.limits)

@@ -19,9 +19,10 @@ from clingstone.maths.groups import Load
 from clingstone.maths.once import Array, kept
 from clingstone.maths.search import minimise
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.linear import Joint, positive_m, reported
+from clingstone.remedies.joint import Joint, f_joint
+from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import Spread
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
 from clingstone.structure.neighbours import Neighbours
 
 if TYPE_CHECKING:
@@ -292,7 +293,7 @@ def _joint(columns: list[Found], L: Array) -> Joint:
         effect = (L.T @ column.coef)[:, None]
         F[b] = reference.wald(effect, (L.T @ column.slopes.phi @ L)[:, :, None])[0] / q
         df2[b] = column.joint_df(L)
-    return F, float(q), df2, reference.f_tail(F, q, df2)
+    return f_joint(F, q, df2)
 
 
 def links_of(design: Design, near: Neighbours) -> sar.Links:
@@ -301,7 +302,7 @@ def links_of(design: Design, near: Neighbours) -> sar.Links:
 
 
 @dataclass(frozen=True)
-class SpatialError:
+class SpatialError(Plain):
     """Generalised least squares under u = λWu + ε over the primary neighbourhood (Ord 1975).
 
     The neighbourhood is made symmetric first, because a likelihood needs it. λ by REML with
@@ -319,15 +320,6 @@ class SpatialError:
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "ord-1975"
-
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> SpatialErrorReady:
         positive_m(design)

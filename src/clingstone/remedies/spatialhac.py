@@ -13,13 +13,14 @@ from clingstone.covariance.components import declared
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import significant
-from clingstone.maths import reference, spatialhac
+from clingstone.maths import spatialhac
 from clingstone.maths.once import Array, kept
 from clingstone.maths.spatialhac import Kernel, Law
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.linear import Joint, LinearReady, positive_m, reported, stop_if_none_left
+from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
+from clingstone.remedies.linear import LinearReady, reported, stop_if_none_left
+from clingstone.remedies.places import OnMap, enough_sites
 from clingstone.remedies.remedy import Account, Estimand
-from clingstone.remedies.sandwich import hotelling_joint
 from clingstone.structure.spatial import Sites
 
 if TYPE_CHECKING:
@@ -80,7 +81,7 @@ class SpatialHacReady(LinearReady):
     def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
         q = len(columns)
         if not self.corrected:
-            return wald / q, float(q), np.inf, reference.f_tail(wald / q, q, np.inf)
+            return wald_joint(wald, q, np.inf)
         return hotelling_joint(wald, q, float(self.cutoff.df[list(columns)].min()))
 
     def account(self, fits: Fits) -> Account:
@@ -112,7 +113,7 @@ class SpatialHacReady(LinearReady):
 
 
 @dataclass(frozen=True)
-class SpatialHac:
+class SpatialHac(OnMap):
     """Ordinary estimates with a covariance that allows dependence between near places.
 
     A plain interval of this kind is far too short when the predictor is smooth over the map. Its
@@ -133,27 +134,8 @@ class SpatialHac:
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True)
     source: ClassVar[str] = "conley-1999"
 
-    def abouts(self, design: Design) -> tuple[str, ...]:
-        return ("",)
-
-    def covering(self, fits: Fits) -> frozenset[Family]:
-        return self.covers
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        """The fitted spatial covariance, with what rows of one place share where places repeat."""
-        node = spatial_node(fits)
-        return None if node is None else fits[node]
-
     def prepare(self, design: Design, working: ErrorModel | None = None) -> SpatialHacReady:
-        positive_m(design)
-        sites = design.spatial
-        if sites is None:
-            raise NotSupported("no places were declared", "Name coords=.")
-        if sites.count < self.limits.sites_estimate:
-            raise NotSupported(
-                f"{sites.count} distinct places; this covariance needs {self.limits.sites_estimate}",
-                "More places would be needed.",
-            )
+        enough_sites(design, self.limits.sites_estimate, "this covariance needs")
         if working is None and self.law == "working":
             raise NotSupported(
                 "no spatial covariance could be fitted to say what the kernel misses",
@@ -216,18 +198,6 @@ class SpatialHac:
             ),
             ("uniform kernel uncorrected, normal quantile", replace(self, kernel="uniform", law="normal")),
         )
-
-
-def spatial_node(fits: Fits) -> frozenset[str] | None:
-    """Components of the map alone: places, and what rows of one place share."""
-    if "spatial" not in fits.components:
-        return None
-    design = fits.design
-    own = [k for k in ("group:site",) if k in fits.components]
-    if not own and design.group is not None and design.spatial is not None:
-        same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
-        own = [f"group:{v.key}" for v in same if f"group:{v.key}" in fits.components]
-    return frozenset([*own[:1], "spatial"])
 
 
 def _key(working: ErrorModel | None) -> tuple[float, ...]:

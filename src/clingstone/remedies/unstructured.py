@@ -20,7 +20,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.columns import estimates
 from clingstone.remedies.gls import Column
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -126,7 +126,7 @@ class VisitsReady:
 
 
 @dataclass(frozen=True)
-class Unstructured:
+class Unstructured(Plain):
     """A free covariance between the visits of a subject (Jennrich & Schluchter 1986), REML.
 
     No shape is imposed on how alike two visits are. Kenward & Roger (1997) covariance and df with the
@@ -161,9 +161,6 @@ class Unstructured:
         assert design.serial is not None
         inside = design.partitions[self.at].relation(design.serial.part) in ("same", "nests")
         return self.covers if inside else frozenset({"group"})
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> VisitsReady:
         positive_m(design)

@@ -22,7 +22,7 @@ from clingstone.remedies.clusters import clusters, covered, group_levels
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.linear import few_df, stop_if_none_left
 from clingstone.remedies.means import means
-from clingstone.remedies.remedy import Account, Estimand, Estimates, rows
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, rows
 from clingstone.remedies.sandwich import CR, ClusterReady, decided_by_one
 
 if TYPE_CHECKING:
@@ -85,7 +85,7 @@ class WithinReady(ClusterReady):
 
 
 @dataclass(frozen=True)
-class FixedEffects:
+class FixedEffects(Plain):
     """Every group has a level of its own (one or two groupings), swept out before the fit.
 
     Only what varies within groups is estimated, free of whatever is constant there. CR2 by the absorbed
@@ -122,9 +122,6 @@ class FixedEffects:
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return covered(fits.design, clusters(fits.design, self.at.split(TOGETHER)[0]))
-
-    def working(self, fits: Fits) -> ErrorModel | None:
-        return None
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> WithinReady:
         part, *more = (clusters(design, key) for key in self.at.split(TOGETHER))
