@@ -54,6 +54,8 @@ class Limits:
     # Degrees of freedom below which a t interval is not to be trusted: 4 is convention
     # (Tipton 2015; Pustejovsky & Tipton 2018).
     df_floor: float = 4.0
+    # Below 2 the variance of a t interval's own length does not exist: no interval is advised there.
+    df_least: float = 2.0
     # Serial: rows in one series, or many short ones (Krone et al. 2016; Park & Mitchell 1980).
     serial_test_rows: int = 8
     serial_test_series: int = 8

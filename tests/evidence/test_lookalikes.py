@@ -141,3 +141,30 @@ def test_rows_of_other_times_or_groups_are_no_copies() -> None:
     made = design(x, groups={"g": [0, 1, 0, 0, 1, 1]}, time=[0, 1, 2, 2, 3, 4])
     reading = Duplicates().read(fits(made, y), ALL)
     assert reading.rows == (3,)
+
+
+def test_spread_that_grows_to_both_ends_is_seen_with_the_square() -> None:
+    """nR² of the regression of squares on x and x², written out; the straight line alone is silent."""
+    rng = np.random.default_rng(21)
+    x = rng.uniform(-2, 2, 300)
+    y = x + (0.4 + np.abs(x)) * rng.standard_normal(300)
+    made = fits(design(x), y)
+    reading = Heteroscedasticity().read(made, About("x1²", "x1"))
+    e2 = made.response.residual[:, 0] ** 2
+    Z = np.column_stack([np.ones(300), x, x**2])
+    left = e2 - Z @ np.linalg.lstsq(Z, e2, rcond=None)[0]
+    r2 = 1 - left @ left / np.sum((e2 - e2.mean()) ** 2)
+    assert reading.statistic[0] == pytest.approx(300 * r2)
+    assert reading.p[0] == pytest.approx(stats.chi2.sf(300 * r2, 2))
+    assert reading.p[0] < 1e-6
+    assert reading.estimate[0] > 2
+    assert Heteroscedasticity().read(made, About("x1", "x1")).p[0] > 0.05
+    assert "Far from the middle of x1" in Heteroscedasticity().sentence(reading, About("x1²", "x1"))
+
+
+def test_size_of_the_square() -> None:
+    rng = np.random.default_rng(22)
+    y = rng.standard_normal((200, 1500))
+    made = Fits(Response.of(design(rng.standard_normal(200)), y), Run())
+    reading = Heteroscedasticity().read(made, About("x1²", "x1"))
+    assert np.mean(reading.p < 0.05) == pytest.approx(0.05, abs=0.02)

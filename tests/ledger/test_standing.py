@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
-from clingstone.evidence import gather
+from clingstone.evidence import TESTS, gather
 from clingstone.ledger.ledger import weigh
 from clingstone.ledger.standing import Seen, judge, restricted_lr
 from clingstone.run import one_thread
@@ -220,3 +220,29 @@ def test_a_level_that_the_design_fixes_is_never_left_out():
         ledger = weigh(f, gather(f))
     assert ledger.of("group:clinic").fixed
     assert ledger.model == ("group:clinic",)
+
+
+def test_a_series_that_hangs_together_only_a_season_apart_is_present():
+    rng = np.random.default_rng(37)
+    e = rng.standard_normal(132)
+    for t in range(12, 132):
+        e[t] = 0.8 * e[t - 12] + 0.6 * e[t]
+    f = make.fits(make.design({"x": rng.standard_normal(132)}, tick=np.arange(132)), e)
+    with one_thread():
+        evidence = gather(f)
+        found = weigh(f, evidence).of("serial")
+    assert evidence.get("durbin-watson").p > 0.05
+    assert found.verdict == "present"
+    assert "several steps apart" in found.because
+    assert "steps apart its residuals are correlated" in found.because
+
+
+def test_an_independent_series_is_not_present_more_often_than_its_level():
+    rng = np.random.default_rng(32)
+    d, hits = make.design({"x": rng.standard_normal(60)}, tick=np.arange(60)), 0
+    tests = tuple(t for t in TESTS if t.id in ("durbin-watson", "ljung-box"))
+    with one_thread():
+        for _ in range(60):
+            f = make.fits(d, rng.standard_normal(60))
+            hits += weigh(f, gather(f, tests), tests).of("serial").verdict == "present"
+    assert hits <= 11  # 5 % and at most 2.5 % more, with a binomial tail of one in a thousand

@@ -22,6 +22,8 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 FITTED = "fitted"
+SQUARE = "²"  # of a variable that is read together with its square
+CURVED = 4  # covariates that are read so as well
 ALPHA = 0.05  # of Bonferroni's bound, for the rows that are named
 MOST_NAMED = 20
 
@@ -30,8 +32,9 @@ MOST_NAMED = 20
 class Heteroscedasticity(Plain):
     """Koenker's studentised Breusch–Pagan statistic on fitted values or on one covariate.
 
-    n R² of e² on the variable. The size is the ratio of residual standard deviations between the
-    upper and the lower fifth of the rows by that variable; its interval uses
+    n R² of e² on the variable; also on the variable and its square, which sees a spread that is larger
+    at both ends than in the middle (White 1980, with few df). The size is the ratio of residual standard
+    deviations between the upper and the lower fifth of the rows by that variable; its interval uses
     Var ln s² ≈ (kurtosis − 1)/rows. Dependence can disturb it: a screen, not a verdict.
     """
 
@@ -45,29 +48,38 @@ class Heteroscedasticity(Plain):
 
     def abouts(self, design: Design) -> tuple[About, ...]:
         numeric = [k for k, x in design.covariates.items() if np.ptp(x) > 0]
+        several = [k for k in numeric if len(np.unique(design.covariates[k][:1000])) > 2]
         return (
             About(FITTED, "the fitted values", primary=False),
             *(About(k, k, primary=False) for k in numeric[:8]),
+            About(FITTED + SQUARE, "the fitted values", primary=False),
+            *(About(k + SQUARE, k, primary=False) for k in several[:CURVED]),
         )
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, response = fits.design, fits.response
-        z = _variable(response, about.key)
+        squared = about.key.endswith(SQUARE)
+        z = _variable(response, about.key.removesuffix(SQUARE))
         e2 = response.residual**2
         lost = degenerate(response) | (np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0))
         if lost.all():
             raise NotSupported(f"{about.words} do not vary beyond rounding, or nothing is left over")
-        r2 = _r2(np.where(lost, np.nan, e2), z)
+        e2 = np.where(lost, np.nan, e2)
+        r2, df = _r2(e2, z), 2.0 if squared else 1.0
+        if squared:
+            r2 = r2 + _r2(e2, _bent(z))
+            z = np.abs(z - np.median(z, axis=0))
         low, estimate, high = _spread_ratio(response.residual, z, normal_quantile(fits))
         return Reading(
             statistic=design.n * r2,
             statistic_name="nR²",
-            df=1.0,
-            p=np.asarray(special.chdtrc(1, design.n * r2)),
-            log_p=np.asarray(stats.chi2.logsf(design.n * r2, 1)),
+            df=df,
+            p=np.asarray(special.chdtrc(df, design.n * r2)),
+            log_p=np.asarray(stats.chi2.logsf(design.n * r2, df)),
             p_method="chi-squared, large samples",
             estimate=np.where(lost, np.nan, estimate),
-            estimate_name="ratio of residual standard deviations, upper to lower end",
+            estimate_name="ratio of residual standard deviations, "
+            + ("far from the middle to near it" if squared else "upper to lower end"),
             low=np.where(lost, np.nan, low),
             high=np.where(lost, np.nan, high),
             n_used=design.n,
@@ -76,11 +88,13 @@ class Heteroscedasticity(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         low, high = column(reading.low), column(reading.high)
         places = max(1, decimals_for((high - low) / 2, 1))
+        squared = about.key.endswith(SQUARE)
+        ends = ("At the upper end", "at the lower end")
+        there, here = ("Far from the middle", "near it") if squared else ends
         return (
-            f"At the upper end of {about.words} the residuals spread "
-            f"{number(column(reading.estimate), places)} times{bounds(low, high, places)} as far as at the "
-            "lower end "
-            f"(Koenker's nR² = {significant(column(reading.statistic))}, "
+            f"{there} of {about.words} the residuals spread "
+            f"{number(column(reading.estimate), places)} times{bounds(low, high, places)} as far as {here} "
+            f"({'White' if squared else 'Koenker'}'s nR² = {significant(column(reading.statistic))}, "
             f"{p_value(column(reading.p))})."
         )
 
@@ -92,6 +106,14 @@ def _variable(response: Response, key: str) -> Array:
         return np.asarray(design.covariates[key], dtype=float)[:, None]
     fitted = design.Q @ response.coef
     return np.asarray(fitted if design.root is None else fitted / design.root[:, None])
+
+
+def _bent(z: Array) -> Array:
+    """The square of a variable without its linear part, column by column."""
+    a = z - z.mean(axis=0)
+    square = a**2 - np.mean(a**2, axis=0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        return np.asarray(square - a * (np.sum(a * square, axis=0) / np.sum(a * a, axis=0)))
 
 
 def _r2(e2: Array, z: Array) -> Array:

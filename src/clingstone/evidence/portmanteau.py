@@ -26,6 +26,7 @@ if TYPE_CHECKING:
 DRAWS = 999
 # Chi-squared and F references are liberal with trending regressors in short series (a size of 0.15
 # was measured at 30 rows): up to these many rows p comes from draws of Mz instead.
+LATER = 30  # lags of the second look: a month of days, two years of months, a day of hours
 DRAWN_GODFREY = 500
 DRAWN_LJUNG = 200
 
@@ -129,7 +130,11 @@ class LjungBox(Plain):
     def abouts(self, design: Design) -> tuple[About, ...]:
         longest = int(series_of(design).part.sizes.max())
         K = max(1, min(10, longest // 5))
-        return (About(str(K), f"up to {count(K, 'step')} apart"),)
+        later = min(LATER, longest // 4)
+        out = [About(str(K), f"up to {count(K, 'step')} apart")]
+        if later > K:  # what repeats with a season is seen only a season apart
+            out.append(About(str(later), f"up to {count(later, 'step')} apart", primary=False))
+        return tuple(out)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, response, K = fits.design, fits.response, int(about.key)

@@ -20,6 +20,7 @@ MASKED = 0.01  # a structure seen only when the others are fitted needs more tha
 UNITS = 30  # independent units from which a boundary mixture of χ² is used
 DRAWS = 199  # of the parametric bootstrap
 GRIDDED = 2  # working parameters up to which many columns are fitted on one shared grid, and so fast
+LATER_LAGS = "hang together several steps apart, not from one step to the next"
 SMALL = 1.0  # a statistic below this has p > 0.15 under every reference here; the mixture says enough
 
 
@@ -39,6 +40,7 @@ class Seen:
     worst: float
     worst_term: str
     widens: bool = False
+    later: str = ""  # lags at which alone its rows hang together, in words
 
     @property
     def alone(self) -> bool | None:
@@ -71,6 +73,13 @@ def own_finding(evidence: Evidence, key: str, family: Family) -> Finding | None:
 def adjusted_tests(evidence: Evidence) -> int:
     """How many primary tests Holm's adjustment was made over."""
     return sum(f.primary and f.p_adjusted is not None for f in evidence)
+
+
+def later_lags(evidence: Evidence) -> Finding | None:
+    """Ljung and Box's second look, where it shows what is several steps apart; None where it does not."""
+    found = [f for f in evidence.of("serial") if f.test == "ljung-box" and np.isfinite(f.p)]
+    seen = [f for f in found if not f.primary and f.p * (1 + adjusted_tests(evidence)) < LEVEL]
+    return min(seen, key=lambda f: f.p) if seen else None
 
 
 # ---- given all the others ----------------------------------------------------------------------
@@ -180,6 +189,8 @@ def _judge(one: Seen, others: tuple[Seen, ...]) -> Standing:
 
 def _read(one: Seen, others: tuple[Seen, ...]) -> tuple[Verdict, str]:
     alone, held = one.alone, one.held
+    if one.later:
+        return "present", f"Rows {LATER_LAGS}: over lags {one.later} its residuals are correlated."
     if alone is None and held is None:
         return _quiet(one, "No test of its own was made")
     if alone is None:
@@ -254,6 +265,9 @@ def examine(
         adjusted = p if finding is None or finding.p_adjusted is None else finding.p_adjusted
         if key == SITE:  # one more structure than the primary tests have adjusted for
             adjusted = min(1.0, p * (1 + adjusted_tests(evidence)))
+        later = later_lags(evidence) if key == "serial" and not adjusted < LEVEL else None
+        if later is not None:
+            p, adjusted = later.p, min(1.0, later.p * (1 + adjusted_tests(evidence)))
         others = tuple(k for k in node if k != key)
         p_given, method = restricted_lr(fits, key) if others else (float("nan"), "")
         reach = Reach()
@@ -276,6 +290,7 @@ def examine(
                 reach.worst,
                 reach.term,
                 reach.widens,
+                later.about_words if later is not None else "",
             )
         )
     levels = {f"group:{level}" for level in fits.design.assignment.levels}

@@ -11,6 +11,7 @@ from scipy import optimize
 
 from clingstone.covariance.components import SITE, Component, declared
 from clingstone.covariance.each import each
+from clingstone.design.derived import absorb
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import curvature, groups, reference, reml
@@ -192,7 +193,24 @@ class GlsReady:
         top = float(self.design.m)
         # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
         phi = kr.adjusted if tau2 > 0 else kr.phi
-        return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, top)), kr.joint)
+        if tau2 > 0:
+            return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, top)), kr.joint)
+        return Column(coef, phi, lambda w: float(self.df_at_zero(w[:, None])[0]), kr.joint)
+
+    def df_at_zero(self, W: Array) -> Array:
+        """(k,) df where the variance between groups is zero: of the parts of each row W (p, k) between and
+        within groups, each with the df of its own mean square (Satterthwaite 1946).
+
+        The curvature at a bound says little; a coefficient of groups keeps the df of groups.
+        """
+        part = self.design.partitions[self.components[0].part]
+        inner = absorb(self.design, part)[0].p
+        df1, df2 = part.count + inner - self.design.p, self.design.n - part.count - inner
+        if df1 < 1 or df2 < 1:
+            return np.full(W.shape[1], float(self.design.m))
+        share = np.sum((self.design.sums(part) @ W) ** 2 / self.design.sizes(part)[:, None], axis=0)
+        share = np.clip(share / np.sum(W**2, axis=0), 0.0, 1.0)
+        return np.asarray(1.0 / (share**2 / df1 + (1 - share) ** 2 / df2))
 
     def _expected(
         self,

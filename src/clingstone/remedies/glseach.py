@@ -74,6 +74,7 @@ def _kenward(ready: GlsReady, many: Each, found: Minima, s2: Array, read: _Colum
     kr = KenwardEach.of(ready.design.n, classes.c, classes.count.astype(float), classes.QQ, s2, ratio * s2)
     read.phi[:] = np.where(bound[:, None, None], kr.phi, kr.adjusted)
     read.df[:] = np.clip(kr.df(ready.W), 1.0, float(ready.design.m)).T
+    read.df[:, bound] = ready.df_at_zero(ready.W)[:, None]
     for term in multi(ready.design):
         scale, df2 = kr.joint(ready.W[:, list(term.columns)])
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2

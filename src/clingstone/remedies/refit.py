@@ -140,6 +140,9 @@ def _intervals(remedy: Remedy, ready: Ready, found: Estimates, fits: Fits) -> tu
 def _status(name: str, df: float, ready: Ready, found: Estimates, remedy: Remedy) -> str:
     if name in ready.unusable:
         return f"unusable: {ready.unusable[name].reason}"
+    if df < remedy.limits.df_least:
+        few = f"{df:.1f} degrees of freedom, below {remedy.limits.df_least:g}"
+        return f"unusable: with {few}, the data cannot tell how long its interval should be"
     if found.boundary is not None and bool(found.boundary[0]):
         return "boundary: a dependence parameter was estimated at the end of its range"
     if df < remedy.limits.df_floor:
