@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import math
+import re
 
 MINUS = "−"
 NBSP = "\u00a0"
@@ -58,6 +59,27 @@ def amount(value: float) -> str:
         return number(value, 0)
     text = significant(value, max(4, 1 + math.floor(math.log10(abs(value)))) if abs(value) < 1e7 else 4)
     return text if "×" in text or "." not in text else text.rstrip("0").rstrip(".")
+
+
+_LONG = re.compile(r"(?<![\w.,])[-−]?(?:\d+\.\d+(?:e[+-]?\d+)?|\d+e[+-]?\d+)(?!\w|[.,]\d)")
+SHOWN = 4  # digits of a measured amount in running text
+
+
+def shortened(text: str) -> str:
+    """Words in which every decimal figure of more than four digits is cut to four, with a true minus.
+
+    What was saved keeps all its digits; this is for reading.
+    """
+
+    def short(match: re.Match[str]) -> str:
+        raw = match.group()
+        digits = re.sub(r"\D", "", raw.partition("e")[0]).lstrip("0")
+        if len(digits) <= SHOWN and "e" not in raw:
+            return raw.replace("-", MINUS)
+        value = float(raw.replace(MINUS, "-"))
+        return significant(value, min(SHOWN, max(1, len(digits)))) if "e" in raw else amount(value)
+
+    return _LONG.sub(short, text)
 
 
 def _scientific(value: float, digits: int) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 from typing import TYPE_CHECKING
 
 from clingstone.covariance.components import Component
+from clingstone.display import number, significant
 from clingstone.remedies.remedy import Account
 
 if TYPE_CHECKING:
@@ -32,11 +33,11 @@ def gls_account(estimation: str, rule: str, components: tuple[Component, ...], m
     shown = {c.label: variances[c.key] for c in components if c.key != "serial"}
     shown[noise] = variances["row"] + variances.get("serial", 0.0)
     total = sum(shown.values())
-    items = [(f"variance of {label}", f"{value:.6g}") for label, value in shown.items()]
+    items = [(f"variance of {label}", significant(value, 4)) for label, value in shown.items()]
     levels = [c.label for c in components if c.family == "group"]
-    items += [(f"intraclass correlation of {name}", f"{shown[name] / total:.3f}") for name in levels]
+    items += [(f"intraclass correlation of {name}", number(shown[name] / total, 3)) for name in levels]
     known = [key for key in _SHAPES if key in model.shape]
-    items += [(_SHAPES[key], f"{float(model.shape[key][0]):.6g}") for key in known]
+    items += [(_SHAPES[key], significant(float(model.shape[key][0]), 4)) for key in known]
     if bool(model.at_bound.any()):
         named = [n for n, at in zip(model.names, model.at_bound[:, 0], strict=True) if at]
         items.append(("at the end of its range", ", ".join(named)))
@@ -93,7 +94,7 @@ def bound_notes(components: tuple[Component, ...], model: ErrorModel) -> tuple[s
 def _serial_note(rho: float) -> str:
     if abs(rho) > 0.99:
         return (
-            f"The correlation along time was estimated at {rho:.4f}, which cannot be told from a random "
-            "walk; consider a model of the changes from one step to the next."
+            f"The correlation along time was estimated at {number(rho, 4)}, which cannot be told from a "
+            "random walk; consider a model of the changes from one step to the next."
         )
-    return f"The correlation along time was estimated at the end of its range ({rho:.3f} per step)."
+    return f"The correlation along time was estimated at the end of its range ({number(rho, 3)} per step)."

@@ -13,6 +13,7 @@ import numpy as np
 from clingstone.display import Cell, Column, Table, count, listed, number, sentence, significant
 from clingstone.evidence.finding import Curve, Finding
 from clingstone.results import Results
+from clingstone.writeup.leading import leading
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.panels import paint_traces
 from clingstone.writeup.places import paint_directions, paint_local, paint_map, paint_variogram
@@ -24,7 +25,7 @@ if TYPE_CHECKING:
     from matplotlib.figure import Figure
 
 LISTED = 40  # groups with a label each; beyond, ranks without labels
-SECOND_LOOKS = ("correlogram", "directions")  # folded away where they show nothing
+SECOND_LOOKS = ("correlogram", "directions", "local-map")  # folded away where their test does not lead
 TABLED = 400  # rows of a figure's table on the page; the file of the figure holds them all
 
 Paint = Callable[[Curve, str, float], "Figure"]
@@ -41,6 +42,8 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
     taken: set[str] = set()
     lonlat = results.case.spatial is not None and results.case.spatial.kind == "lonlat"
     for f in results.evidence:
+        first = leading([g for g in results.evidence if g.structure == f.structure])
+        stands = any((g.test, g.about) == (f.test, f.about) for g in first)
         for curve in f.curves:
             if not (curve.x or curve.lines):
                 continue
@@ -48,9 +51,15 @@ def plates_by_structure(results: Results) -> dict[str, list[Plate]]:
             taken.add(name)
             paint = _painter(curve, f.structure, lonlat)
             aside = f.structure in ("mean", "lookalike") or curve.kind in SECOND_LOOKS
-            quiet = aside and f.verdict == "not detected"
-            alt = _alt(curve, f)
-            plate = Plate(name, _caption(curve, f), alt, curve_table(curve), paint, quiet, curve.note)
+            plate = Plate(
+                name,
+                _caption(curve, f),
+                _alt(curve, f),
+                curve_table(curve),
+                paint,
+                aside and not stands,
+                curve.note,
+            )
             out.setdefault(f.structure, []).append(plate)
     return out
 

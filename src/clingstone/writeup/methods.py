@@ -14,7 +14,7 @@ from clingstone.writeup.items import ITEMS
 from clingstone.writeup.naming import subject
 from clingstone.writeup.outcome import estimate_words
 from clingstone.writeup.plate import many
-from clingstone.writeup.read import advised, decimals, level_percent, ordinary, row_of, served
+from clingstone.writeup.read import advised, decimals, has_freedom, level_percent, ordinary, row_of, served
 from clingstone.writeup.sentences import sections
 from clingstone.writeup.tables import parameter_decimals
 
@@ -113,7 +113,8 @@ def _estimates(results: Results) -> str:
         return f"Estimates come from: {best.name}."
     account = best.account
     name = "" if best.name == "ordinary" or best.name in account.estimator else f"{best.name}; "
-    text = f"By {account.estimator} ({name}degrees of freedom: {account.df_rule}), {'; '.join(told)}"
+    by = f"{'degrees of freedom' if has_freedom(best) else 'intervals'}: {account.df_rule}"
+    text = f"By {account.estimator} ({name}{by}), {'; '.join(told)}"
     if len(names) > SPOKEN:
         text += f"; {count(len(names) - SPOKEN, 'further estimate')} in the table of intervals"
     text += _beside(results, names[:SPOKEN])

@@ -5,12 +5,13 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 
-from clingstone.display import degrees, freedom, listed, number, p_value, sentence, span
+from clingstone.display import degrees, freedom, listed, number, p_value, sentence, shortened, span
 from clingstone.evidence.finding import Finding
 from clingstone.remedies.remedy import Convention, Refit
 from clingstone.results import Results
 from clingstone.writeup.bibliography import cite, with_source
 from clingstone.writeup.items import Sentence
+from clingstone.writeup.leading import STRUCTURES, with_most_given
 from clingstone.writeup.naming import (
     label_of,
     name_of_test,
@@ -28,6 +29,7 @@ from clingstone.writeup.read import (
     decimals,
     distinct,
     focus_rows,
+    has_freedom,
     level_percent,
     ordinary,
     row_of,
@@ -36,7 +38,6 @@ from clingstone.writeup.read import (
 from clingstone.writeup.rehearsed import methods_words
 
 SPOKEN = 6  # focus rows told in sentences; every row stands in intervals.csv
-STRUCTURES = ("group", "serial", "spatial")
 
 
 # ---- checks ----------------------------------------------------------------------------------
@@ -54,12 +55,12 @@ def checks(results: Results) -> Iterable[Sentence]:
     for f in given:
         yield Sentence(with_source(f.sentence, f.source), ("M12",))
     rest = [f for f in run if not f.primary and f not in given]
-    seen = [f for f in _last(rest) if f.verdict in ("present", "unclear")]
+    seen = [f for f in with_most_given(rest) if f.verdict in ("present", "unclear")]
     if seen:
         yield Sentence("Further checks, exploratory and not adjusted, saw the following.", ("M12",))
     for f in seen:
         yield Sentence(_told(results, f), ("M12",))
-    quiet = [f for f in _last(rest) if f.verdict == "not detected"]
+    quiet = [f for f in with_most_given(rest) if f.verdict == "not detected"]
     if quiet:
         words = "; ".join(f"{words_of_test(results, f)}{_bracketed_p(f)}" for f in quiet)
         yield Sentence(f"Exploratory checks in which nothing was detected: {words}.", ("M12",))
@@ -69,16 +70,6 @@ def checks(results: Results) -> Iterable[Sentence]:
         yield Sentence(f"Not run: {words}.", ("M12",))
     if run:
         yield Sentence("Every test with its statistic stands in evidence.csv.", ())
-
-
-def _last(found: list[Finding]) -> list[Finding]:
-    """Of the readings of one test at one place the one with most fitted first: it allows for most."""
-    most: dict[tuple[str, str], Finding] = {}
-    for f in found:
-        held = most.get((f.test, f.about))
-        if held is None or len(f.given) >= len(held.given):
-            most[f.test, f.about] = f
-    return list(most.values())
 
 
 def _told(results: Results, f: Finding) -> str:
@@ -153,15 +144,23 @@ def _fit_words(best: Refit, results: Results) -> Iterable[Sentence]:
         ("M6", "M7"),
     )
     parts = [f"covariance: {account.covariance}", f"small-sample factor: {account.factor}"]
-    parts += [f"{name}: {value}" for name, value in account.items]
+    parts += [f"{name}: {shortened(value)}" for name, value in account.items]
     clusters = any("cluster" in name for name, _ in account.items)
     yield Sentence(sentence("; ".join(parts)), ("M7", "M14") if clusters else ("M7",))
-    law = "the t distribution" if account.reference == "t" else f"this reference: {account.reference}"
-    yield Sentence(
-        f"Intervals at {level_percent(results)} and p-values come from {law}, with degrees of freedom by "
-        f"this rule: {account.df_rule}.",
-        ("M8",),
-    )
+    law = f"Intervals at {level_percent(results)} and p-values come from {law_words(account.reference)}"
+    rule = f"with degrees of freedom by this rule: {account.df_rule}"
+    yield Sentence(f"{law}, {rule if has_freedom(best) else 'without degrees of freedom'}.", ("M8",))
+
+
+LAWS = {"t": "the t distribution", "normal": "the normal distribution"}
+
+
+def law_words(reference: str) -> str:
+    """A reference distribution as a sentence names it."""
+    if reference in LAWS:
+        return LAWS[reference]
+    law = reference.partition(" ")[0] in ("exact", "fixed-b")
+    return f"the {reference}" if law else reference
 
 
 def estimator_words(fit: Refit) -> str:

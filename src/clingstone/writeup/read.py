@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 
-from clingstone.display import decimals_for, number
+from clingstone.display import decimals_for, number, shortened
 from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
 
@@ -100,6 +100,19 @@ def row_of(fit: Refit | None, name: str) -> Interval | None:
     if fit is None:
         return None
     return next((r for r in fit.intervals if r.term == name and math.isfinite(r.estimate)), None)
+
+
+def has_freedom(fit: Refit) -> bool:
+    """Whether degrees of freedom enter its intervals: not where resampling takes the place of a t law."""
+    return any(math.isfinite(row.df) for row in fit.intervals)
+
+
+def account_pairs(fit: Refit) -> tuple[tuple[str, str], ...]:
+    """How a refit explains itself, its figures at reading length; a rule that gives no degrees of freedom
+    is not called one."""
+    named = "degrees of freedom"
+    rule = named if has_freedom(fit) or not fit.intervals else "intervals and p-values"
+    return tuple((rule if name == named else name, shortened(value)) for name, value in fit.account.pairs())
 
 
 def decimals(results: Results, name: str) -> int:

@@ -15,13 +15,14 @@ from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
 from clingstone.writeup import curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import cite, references_of, with_source
+from clingstone.writeup.leading import STRUCTURES, leading, with_most_given
 from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
 from clingstone.writeup.methods import checklist, report_this
 from clingstone.writeup.naming import label_of, pointed_at, with_rows
 from clingstone.writeup.outcome import USUAL, alternatives, tipping_words
 from clingstone.writeup.panels import tree
 from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
-from clingstone.writeup.read import advised, focus_rows, ordered, served
+from clingstone.writeup.read import account_pairs, advised, focus_rows, ordered, served
 from clingstone.writeup.sentences import design, model, sections, standing_words
 from clingstone.writeup.terminal import case_line
 
@@ -231,28 +232,38 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
         found = [f for f in results.evidence if f.structure == structure]
         if not found:
             continue
-        first = _leading(found)
+        first = leading(found)
+        rest = [f for f in found if f not in first]
+        drawn = plates.get(structure, ())
+        quiet = [p for p in drawn if p.quiet]
         m = mark(structure)
-        own = structure in ("group", "serial", "spatial")
+        own = structure in STRUCTURES
         parts.append(
             {
                 "title": title,
                 "role": m.role if own else "",
                 "glyph": m.glyph if own else "•",
                 "findings": [_finding(results, f) for f in first],
-                "others": [_finding(results, f) for f in found if f not in first],
-                "plates": [_plate(p) for p in plates.get(structure, ()) if not p.quiet],
-                "quiet": [_plate(p) for p in [p for p in plates.get(structure, ()) if p.quiet][:QUIET]],
+                "silent": "" if first else _silent(found),
+                "others": [_finding(results, f) for f in rest],
+                "looked": count(len(found), "finding"),
+                "plates": [_plate(p) for p in drawn if not p.quiet],
+                "quiet": [_plate(p) for p in quiet[:QUIET]],
+                "more": count(max(0, len(quiet) - QUIET), "more figure"),
+                "unshown": len(quiet) > QUIET,
                 "table": _table(tables.evidence(results, structure)),
             }
         )
     return parts
 
 
-def _leading(found: list[Finding]) -> list[Finding]:
-    """Primary findings, and every reading of a test that saw or may have seen something."""
-    seen = {(f.test, f.about) for f in found if f.primary or f.verdict in ("present", "unclear")}
-    return sorted((f for f in found if (f.test, f.about) in seen), key=lambda f: not f.primary)
+def _silent(found: list[Finding]) -> str:
+    """What is said where no finding leads."""
+    asked = [f for f in with_most_given(found) if f.verdict != "not applicable"]
+    if not asked:
+        return "None of these checks could be run on these data."
+    given = any(f.given for f in asked)
+    return "Nothing was detected here" + (" once the dependence is fitted." if given else ".")
 
 
 def _finding(results: Results, f: Finding) -> dict[str, Any]:
@@ -328,7 +339,7 @@ def _advice(results: Results) -> dict[str, Any]:
 
 def _account(fit: Refit) -> Iterable[tuple[str, str]]:
     a = fit.account
-    yield from a.pairs()
+    yield from account_pairs(fit)
     if fit.boundary:
         yield "boundary", "a variance was estimated at its bound of zero"
     if not fit.converged:
