@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+import math
+
 from clingstone.advice import headline as say
 from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
 from clingstone.advice.facts import Facts
@@ -189,7 +191,11 @@ def _headline(
         what = facts.text("missing part of the mean")
         left = facts.text("dependence left")
         return f"A {what} seems to be missing from the model: with it, {left}. {moved}".strip()
-    about = say.dependence(ledger)
+    rows, over = (
+        float(facts[name].value) if name in facts else default
+        for name, default in (("rows in the longest series", math.inf), ("range over extent", 0.0))
+    )
+    about = say.dependence(ledger, rows, over)
     if state == "not correctable" and rule is not None:
         return f"{about} These data cannot carry a correction: {_lower(say.filled(rule.because, facts))}"
     return f"{about} {moved}".strip()

@@ -13,11 +13,15 @@ from clingstone.ledger.sizes import TIMES
 from clingstone.remedies.remedy import Refit
 
 
-def dependence(ledger: Ledger) -> str:
-    """One sentence per structure to be covered: those present first, then by share."""
+def dependence(ledger: Ledger, rows: float = np.inf, over: float = 0.0) -> str:
+    """One sentence per structure to be covered: those present first, then by share.
+
+    rows : of the longest series; a correlation not halved within them is said to hardly fade.
+    over : practical range over the width of the map.
+    """
     chosen = [s for s in ledger.standing if covered(s)]
     chosen.sort(key=lambda s: (s.verdict != "present", -_share(ledger, s)))
-    return " ".join(_sentence(ledger, s) for s in chosen)
+    return " ".join(_sentence(ledger, s, rows, over) for s in chosen)
 
 
 def _share(ledger: Ledger, standing: Standing) -> float:
@@ -25,11 +29,11 @@ def _share(ledger: Ledger, standing: Standing) -> float:
     return share.share if share is not None else -1.0
 
 
-def _sentence(ledger: Ledger, s: Standing) -> str:
+def _sentence(ledger: Ledger, s: Standing, rows: float, over: float) -> str:
     if s.key == "serial":
-        return _serial(ledger, s)
+        return _serial(ledger, s, rows)
     if s.key == "spatial":
-        return _spatial(ledger, s)
+        return _spatial(ledger, s, over)
     named = subject(s)
     start = f"The {named}" if s.key != SITE else "Rows of one place"
     share = ledger.share(s.key)
@@ -38,20 +42,24 @@ def _sentence(ledger: Ledger, s: Standing) -> str:
     return f"{start} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
 
 
-def _serial(ledger: Ledger, s: Standing) -> str:
+def _serial(ledger: Ledger, s: Standing, rows: float) -> str:
     rho = ledger.parameter(s.key, "ρ")
     if rho is None:
         return f"Rows that follow each other in time {_verb(s)}; how strongly cannot be sized."
     half = ledger.parameter(s.key, "half-life")
     reach = f", half of it gone after {_with_unit(half)}" if half is not None and half.estimate > 0 else ""
+    if rho.estimate > 0.5 ** (1 / rows):
+        reach = ", hardly fading within these data"
     return f"Rows that follow each other in time {_verb(s)}: correlation {_figure(rho)} {rho.unit}{reach}."
 
 
-def _spatial(ledger: Ledger, s: Standing) -> str:
+def _spatial(ledger: Ledger, s: Standing, over: float) -> str:
     share, reach = ledger.share(s.key), ledger.parameter(s.key, "practical range")
     if share is None:
         return f"Near places {_verb(s)}; how strongly cannot be sized."
     out = "" if reach is None or not np.isfinite(reach.estimate) else f", out to about {_with_unit(reach)}"
+    if over > 1:
+        out = ", hardly fading within the map"
     return f"Near places {_verb(s)}: they share {_amount(share)} of what the model leaves over{out}."
 
 
@@ -64,7 +72,12 @@ def _verb(s: Standing) -> str:
 
 
 def _figure(q: Parameter) -> str:
-    return f"{significant(q.estimate)} ({significant(q.low)} to {significant(q.high)})"
+    return f"{_near_one(q.estimate)} ({_near_one(q.low)} to {_near_one(q.high)})"
+
+
+def _near_one(rho: float) -> str:
+    """Two digits, and "more than 0.99" where they would read 1.0."""
+    return "more than 0.99" if rho > 0.995 else significant(rho)
 
 
 def _with_unit(q: Parameter) -> str:

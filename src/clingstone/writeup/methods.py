@@ -2,13 +2,13 @@
 
 from __future__ import annotations
 
-import math
 import re
 
-from clingstone.display import clean, count, listed, number, span
+from clingstone.display import clean, count, listed, span
 from clingstone.ledger.ledger import Parameter
 from clingstone.ledger.sizes import AT_ZERO
 from clingstone.results import Results
+from clingstone.writeup import strength
 from clingstone.writeup.bibliography import references_of
 from clingstone.writeup.items import ITEMS
 from clingstone.writeup.naming import subject
@@ -16,7 +16,6 @@ from clingstone.writeup.outcome import estimate_words
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import advised, decimals, has_freedom, level_percent, ordinary, row_of, served
 from clingstone.writeup.sentences import sections
-from clingstone.writeup.tables import parameter_decimals
 
 SPOKEN = 3  # focus rows named in the two sentences
 
@@ -93,12 +92,10 @@ def _depends(results: Results) -> str:
 
 def _size(results: Results, p: Parameter) -> str:
     """ "intraclass correlation 0.19, 95 % interval 0.08 to 0.42"."""
-    places = parameter_decimals(p)
     unit = f" {p.unit if p.name == 'ρ' else many(p.unit)}".rstrip()
-    text = f"{p.name} {number(p.estimate, places)}{unit}"
-    if not math.isfinite(p.low + p.high):
-        return text
-    return f"{text}, {level_percent(results)} interval {span(p.low, p.high, places)}"
+    text = f"{p.name} {strength.figure(results, p, p.estimate)}{unit}"
+    ends = strength.interval(results, p)
+    return f"{text}, {level_percent(results)} interval {ends}" if ends else text
 
 
 def _estimates(results: Results) -> str:

@@ -6,7 +6,7 @@ import math
 from collections.abc import Iterable
 
 from clingstone.display import degrees, freedom, listed, number, p_value, sentence, shortened, span
-from clingstone.evidence.finding import Finding
+from clingstone.evidence.finding import Curve, Finding
 from clingstone.remedies.remedy import Convention, Refit
 from clingstone.results import Results
 from clingstone.writeup.bibliography import cite, with_source
@@ -31,6 +31,7 @@ from clingstone.writeup.read import (
     focus_rows,
     has_freedom,
     level_percent,
+    ordered,
     ordinary,
     row_of,
     served,
@@ -204,6 +205,39 @@ def _choice(results: Results) -> Iterable[Sentence]:
     yield Sentence(
         "[what the analysis plan had laid down, and where it is registered: to be filled in]", ("M11",), True
     )
+
+
+# What refits say of single clusters, by the name under which their account says it.
+HEALTH = ("largest part one cluster has in a variance", "largest move when one cluster is left out")
+
+
+def leaning(results: Results) -> Iterable[str]:
+    """How much the result leans on single groups: what leaving each out does, and what clusters carry."""
+    for f in results.evidence:
+        for curve in f.curves:
+            if curve.kind == "left-out" and curve.y:
+                yield _without_each(results, curve)
+    for asked in HEALTH:
+        told = [(fit, v) for fit in ordered(results) for name, v in fit.account.items if name == asked]
+        if told:
+            fit, value = told[0]
+            yield f"{sentence(asked).rstrip('.')} ({fit.name}): {shortened(value)}."
+
+
+def _without_each(results: Results, curve: Curve) -> str:
+    """ "Left out one at a time, clinics move the ordinary coefficient of arm to between −3.6 and −2.2 …"."""
+    term = curve.y_name.removeprefix("coefficient of ").removesuffix(" without it")
+    digits = decimals(results, term)
+    low, high = (number(v, digits) for v in (min(curve.y), max(curve.y)))
+    text = (
+        f"With one {noun_at(results, curve.x_name)} at a time left out, the ordinary coefficient of {term} "
+    )
+    text += f"lies between {low} and {high}"
+    whole = next((y[0] for _, y in curve.lines.values()), None)
+    if whole is None:
+        return f"{text}."
+    furthest = max(range(len(curve.y)), key=lambda k: abs(curve.y[k] - whole))
+    return f"{text} (with all {number(whole, digits)}; {curve.labels[furthest]} moves it furthest)."
 
 
 # ---- sensitivity -----------------------------------------------------------------------------

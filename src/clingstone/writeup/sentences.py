@@ -12,7 +12,6 @@ from collections.abc import Iterable
 from clingstone.case import GroupSummary
 from clingstone.display import (
     amount,
-    bounds,
     count,
     listed,
     number,
@@ -21,16 +20,15 @@ from clingstone.display import (
     percent_bounds,
     sentence,
     significant,
-    span,
 )
 from clingstone.ledger.ledger import Parameter, Standing
 from clingstone.results import Results
+from clingstone.writeup import strength
 from clingstone.writeup.items import ITEMS, Section, Sentence
 from clingstone.writeup.naming import groups_of, label_of, lost, noun, noun_at, subject
-from clingstone.writeup.outcome import cautions, checks, estimates, sensitivity, software
+from clingstone.writeup.outcome import cautions, checks, estimates, leaning, sensitivity, software
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import level_percent
-from clingstone.writeup.tables import parameter_decimals
 
 TERMS = 8  # terms of a model named one by one
 # What a standing that is plainly present gives as its reason; the p-values beside it say as much.
@@ -76,6 +74,10 @@ def design(results: Results) -> Iterable[Sentence]:
     if case.group:
         yield Sentence(_groups_words(results), ("M2", "M3"))
         yield from _effective(results)
+        leans = [Sentence(words, ("M14",)) for words in leaning(results)]
+        yield from leans
+        if not leans:
+            yield Sentence("[how much the result leans on single groups: to be filled in]", ("M14",), True)
     yield from _order_and_place(results)
     yield from _assignment(results)
 
@@ -114,7 +116,6 @@ def _effective(results: Results) -> Iterable[Sentence]:
     if told:
         words = listed(f"the {g.count} {groups_of(g)} count as {significant(g.effective)}" for g in told)
         yield Sentence(f"Being unequal in size, {words} of equal size.", ("M14",))
-    yield Sentence("[how much the result leans on single groups: to be filled in]", ("M14",), True)
 
 
 def _order_and_place(results: Results) -> Iterable[Sentence]:
@@ -330,14 +331,9 @@ def _parameters(results: Results, key: str, found: list[Parameter]) -> str:
 
 def parameter_words(results: Results, p: Parameter, named: bool = True) -> str:
     """ "an intraclass correlation of 0.19 (95 % interval 0.08 to 0.42)"."""
-    places = parameter_decimals(p)
     own = "" if p.unit == "unit of the response" else f" {many(p.unit)}".rstrip()
     article = "an" if p.name[0] in "aeiou" else "a"
     name = "a correlation ρ" if p.name == "ρ" else f"{article} {p.name}"
-    if not math.isfinite(p.low + p.high):
-        interval = ""
-    elif named:
-        interval = f" ({level_percent(results)} interval {span(p.low, p.high, places)})"
-    else:
-        interval = bounds(p.low, p.high, places)
-    return f"{name} of {number(p.estimate, places)}{own}{interval}"
+    ends = strength.interval(results, p)
+    told = f" ({level_percent(results)} interval {ends})" if named else f" ({ends})"
+    return f"{name} of {strength.figure(results, p, p.estimate)}{own}{told if ends else ''}"

@@ -22,6 +22,7 @@ from clingstone.evidence.finding import Finding
 from clingstone.ledger.ledger import Inflation, Parameter, Share
 from clingstone.remedies.remedy import Interval, Refit
 from clingstone.results import Results
+from clingstone.writeup import strength
 from clingstone.writeup.naming import label_of, pointed_at, remedy_words, words_of_test
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import (
@@ -261,20 +262,12 @@ def parameters(results: Results) -> Table:
     return Table.of("How strong the dependence is", columns, rows).without_empty()
 
 
-def parameter_decimals(p: Parameter) -> int:
-    """Figures that follow the interval: two digits of half its length. Correlations have two decimals."""
-    if p.name in ("intraclass correlation", "ρ"):
-        return 2
-    return min(4, max(0, decimals_for((p.high - p.low) / 2)))
-
-
 def _parameter_cells(results: Results, p: Parameter) -> list[Cell]:
-    places = parameter_decimals(p)
     return [
         Cell(label_of(results, p.key), p.key),
         Cell(p.name, p.name),
-        Cell(number(p.estimate, places), p.estimate),
-        Cell(span(p.low, p.high, places) if math.isfinite(p.low + p.high) else "not given"),
+        Cell(strength.figure(results, p, p.estimate), p.estimate),
+        Cell(strength.interval(results, p) or "not given"),
         Cell(many(p.unit) if p.name != "ρ" else p.unit, p.unit),
         Cell(p.note, p.note),
     ]
