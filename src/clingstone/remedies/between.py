@@ -37,42 +37,17 @@ class BetweenReady(WithinReady):
     inverse: Array  # (p, k) the rows in the pooled fit, for comparison
     coefficients: int
 
-    def fit(self, fits: Fits) -> Estimates:
-        inner = self.carry(fits)
-        response = inner.response
-        estimate = self.W.T @ response.coef
-        se = np.sqrt(self.variance(response))
-        gone = np.array([name in self.unusable for name in self.names])
-        se[gone] = np.nan
-        low, high, p = self.refer(estimate, se, fits.run.settings.confidence)
-        covariance = None
-        if response.B == 1:
-            covariance = self.block(response, tuple(range(self.coefficients)))[:, :, 0]
-            off = gone[: self.coefficients]
-            covariance[off, :] = covariance[:, off] = np.nan
-        estimate = np.where(np.array(self.told)[:, None], estimate, np.nan)
-        return Estimates(
-            estimate,
-            se,
-            np.where(np.isnan(se), np.nan, self.df),
-            low,
-            high,
-            p,
-            covariance,
-            self._joints(response, estimate),
-            names=self.names,
-            ordinary=ordinary(fits.response, self.inverse),
-        )
+    @property
+    def own(self) -> tuple[int, ...]:
+        return tuple(range(self.coefficients))
 
-    def _joints(self, response: Response, estimate: Array) -> dict[str, Joint]:
-        out: dict[str, Joint] = {}
-        for name, columns in self.wholes.items():
-            wald = reference.wald(estimate[list(columns)], self.block(response, columns))
-            made = None if np.all(np.isnan(wald)) else self.joint(wald, columns)
-            if made is not None:
-                out[name] = made
-        test = self.hausman(response)
-        return out if test is None else {**out, "within against between": test}
+    def fit(self, fits: Fits) -> Estimates:
+        return replace(super().fit(fits), names=self.names, ordinary=ordinary(fits.response, self.inverse))
+
+    def joints(self, response: Response, estimate: Array) -> dict[str, Joint]:
+        found = {name: self.joint_of(rows, response, estimate) for name, rows in self.wholes.items()}
+        found["within against between"] = self.hausman(response)
+        return {name: made for name, made in found.items() if made is not None}
 
     def hausman(self, response: Response) -> Joint | None:
         """Joint test that every within coefficient equals its between coefficient, cluster-robust."""

@@ -14,16 +14,17 @@ from clingstone.covariance.each import each
 from clingstone.design.derived import absorb
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import curvature, groups, reference, reml
+from clingstone.maths import curvature, groups, reml
 from clingstone.maths.basis import Gram
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
 from clingstone.remedies.glseach import read_each
-from clingstone.remedies.joint import Joint, f_joint
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import map_items, map_notes
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Remedy, multi
+from clingstone.remedies.praiswinsten import PraisWinsten
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Remedy
 from clingstone.remedies.words import bound_notes, gls_account
 
 if TYPE_CHECKING:
@@ -31,7 +32,6 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
 
 Kind = Literal["mixed-intercept", "ar1", "spatial-gls", "joint"]
-Rule = Literal["kenward-roger", "satterthwaite", "residual", "normal"]
 DRAWS = 400  # simulated columns behind an expected information, when the observed one has no inverse
 TOGETHER = " + "  # joins the levels of a nesting that are fitted together
 
@@ -53,27 +53,6 @@ _SOURCES: dict[Kind, str] = {
     "spatial-gls": "harville-1977",
     "joint": "harville-1977",
 }
-_RULES: dict[Rule, str] = {
-    "kenward-roger": "Kenward–Roger",
-    "satterthwaite": "Satterthwaite",
-    "residual": "n − p",
-    "normal": "normal quantile",
-}
-
-
-@dataclass(frozen=True, eq=False)
-class Column:
-    """One column of y under its fitted model: β̂ and Φ in the basis, and where its df come from.
-
-    phi : (p, p), adjusted where the rule adjusts it. df : contrast (p,) → df. joint : contrasts
-    (p, q) → (scale of the F statistic, denominator df).
-    """
-
-    coef: Array
-    phi: Array
-    df: Callable[[Array], float]
-    joint: Callable[[Array], tuple[float, float]]
-    notes: tuple[str, ...] = ()
 
 
 @dataclass(frozen=True, eq=False)
@@ -96,34 +75,20 @@ class GlsReady:
         if fits.response.B > 1 and self.remedy.estimation == "REML":
             many = each(fits.algebra(self.remedy.node(fits)), fits.response)
             if many is not None:
-                return read_each(self, fits, many)
+                return read_each(self, self.remedy.df, fits, many)
         model, columns = self.columns(fits)
-        k, B = len(self.names), len(columns)
-        estimate, se, df = np.empty((k, B)), np.empty((k, B)), np.empty((k, B))
-        for b, column in enumerate(columns):
-            estimate[:, b] = self.W.T @ column.coef
-            se[:, b] = np.sqrt(np.einsum("ik,ij,jk->k", self.W, column.phi, self.W))
-            df[:, b] = [column.df(w) for w in self.W.T]
-        low, high, p = reference.t_rows(estimate, se, df, fits.run.settings.confidence)
-        W = self.W[:, : self.design.p]
-        covariance = W.T @ columns[0].phi @ W if B == 1 else None
-        joint = {t.name: _joint(columns, self.W[:, list(t.columns)]) for t in multi(self.design)}
-        notes = tuple(dict.fromkeys(note for column in columns for note in column.notes))
-        if B == 1:
+        notes: tuple[str, ...] = ()
+        if len(columns) == 1:
             notes += bound_notes(self.components, model)
             notes += map_notes(fits, self.remedy.node(fits), columns[0].coef)
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            p,
-            covariance,
-            joint,
-            boundary=np.asarray(np.any(model.at_bound, axis=0)),
-            converged=np.asarray(model.converged, dtype=bool),
-            notes=notes,
+        return estimates(
+            self.design,
+            self.W,
+            columns,
+            fits.run.settings.confidence,
+            np.asarray(np.any(model.at_bound, axis=0)),
+            np.asarray(model.converged, dtype=bool),
+            notes,
         )
 
     def columns(self, fits: Fits) -> tuple[ErrorModel, list[Column]]:
@@ -161,10 +126,8 @@ class GlsReady:
         delta, _, _ = reml.reduced(here)
         coef = y.coef[:, 0] + delta[:, 0]
         s2 = float(reml.scale(here, m)[0])
-        if self.remedy.df in ("residual", "normal"):
-            df = float(self.design.m) if self.remedy.df == "residual" else np.inf
-            phi = np.asarray(s2 * np.linalg.inv(here.QQ))
-            return Column(coef, phi, lambda w: df, lambda L: (1.0, df))
+        if (df := plain_df(self.remedy.df, self.design.m)) is not None:
+            return Column.even(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), df)
         if self.kenward:
             found = algebra.variances(theta[:, None], np.array([s2]))[self.components[0].key]
             return self._kenward_column(coef, s2, 0.0 if bound.any() else float(found[0]))
@@ -173,10 +136,7 @@ class GlsReady:
         notes: tuple[str, ...] = ()
         if not bent.sound:
             bent, notes = self._expected(fits, algebra, theta, free, s2, m, restricted, gram)
-        if not bent.sound:
-            note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
-            return Column(coef, bent.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
-        return Column(coef, bent.phi, bent.df, lambda L: (1.0, bent.joint(L)), notes)
+        return Column.bent(coef, bent, notes if bent.sound else (FLAT,))
 
     @property
     def kenward(self) -> bool:
@@ -190,11 +150,10 @@ class GlsReady:
             self.design.n, self.design.sizes(level), self.design.sums(level), s2, tau2
         )
         kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
-        top = float(self.design.m)
         # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
         phi = kr.adjusted if tau2 > 0 else kr.phi
         if tau2 > 0:
-            return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, top)), kr.joint)
+            return Column.kenward(coef, phi, kr, self.design.m)
         return Column(coef, phi, lambda w: float(self.df_at_zero(w[:, None])[0]), kr.joint)
 
     def df_at_zero(self, W: Array) -> Array:
@@ -328,7 +287,7 @@ class Gls:
         names, W = reported(design)
         kenward = len(components) == 1 and components[0].family == "group" and self.estimation == "REML"
         rule = "satterthwaite" if self.df == "kenward-roger" and not kenward else self.df
-        return GlsReady(self, design, names, W, _RULES[rule], components)
+        return GlsReady(self, design, names, W, RULES[rule], components)
 
     def conventions(self) -> tuple[tuple[str, Remedy], ...]:
         out: list[tuple[str, Remedy]] = []
@@ -348,8 +307,6 @@ class Gls:
             ),
         ]
         if self.id == "ar1":
-            from clingstone.remedies.praiswinsten import PraisWinsten
-
             words = "Prais–Winsten: ρ from the residuals in two steps, n − p df"
             out.append((words, PraisWinsten(self.at, self.limits)))
         return tuple(out)
@@ -371,17 +328,6 @@ def _too_few(found: Mapping[str, Component], refused: Mapping[str, Refusal]) -> 
         f"a joint model needs two structures that can be estimated; here: {have}",
         "; ".join(f"{key}: {no.reason}" for key, no in refused.items()),
     )
-
-
-def _joint(columns: list[Column], L: Array) -> Joint:
-    q = L.shape[1]
-    F, df2 = np.empty(len(columns)), np.empty(len(columns))
-    for b, column in enumerate(columns):
-        effect = (L.T @ column.coef)[:, None]
-        wald = reference.wald(effect, (L.T @ column.phi @ L)[:, :, None])[0]
-        scale, df2[b] = column.joint(L)
-        F[b] = scale * wald / q
-    return f_joint(F, q, df2)
 
 
 def _most_likely(gram: Callable[[Array], Gram], theta: Array, bound: Flags, algebra: Chosen, n: int) -> Array:

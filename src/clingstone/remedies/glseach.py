@@ -2,22 +2,45 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from dataclasses import dataclass, replace
+from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
 from clingstone.covariance.each import Each
+from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.maths import reference
 from clingstone.maths.each import Minima
 from clingstone.maths.eachdf import KenwardEach, slopes_each
 from clingstone.maths.once import Array
+from clingstone.remedies.columns import Column, Rule, plain_df
 from clingstone.remedies.joint import Joint, f_joint
-from clingstone.remedies.remedy import Estimates, multi
+from clingstone.remedies.remedy import Estimates, Flags, multi
 
 if TYPE_CHECKING:
+    from clingstone.covariance.algebras import Chosen
     from clingstone.covariance.fits import Fits
-    from clingstone.remedies.gls import GlsReady
+
+
+class Reading(Protocol):
+    """What is asked of the fit whose columns are read."""
+
+    @property
+    def design(self) -> Design: ...
+
+    @property
+    def names(self) -> tuple[str, ...]: ...
+
+    @property
+    def W(self) -> Array: ...
+
+    @property
+    def kenward(self) -> bool: ...
+
+    def df_at_zero(self, W: Array) -> Array: ...
+
+    def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column: ...
 
 
 @dataclass(eq=False)
@@ -29,13 +52,13 @@ class _Columns:
     joint: dict[str, tuple[Array, Array]]
 
     @classmethod
-    def empty(cls, ready: GlsReady, B: int) -> _Columns:
+    def empty(cls, ready: Reading, B: int) -> _Columns:
         p, k = ready.design.p, len(ready.names)
         terms = {t.name: (np.ones(B), np.full(B, np.nan)) for t in multi(ready.design)}
         return cls(np.empty((B, p, p)), np.empty((k, B)), terms)
 
 
-def read_each(ready: GlsReady, fits: Fits, many: Each) -> Estimates:
+def read_each(ready: Reading, rule: Rule, fits: Fits, many: Each) -> Estimates:
     """``GlsReady.fit`` for REML and B > 1."""
     found = many.minima()
     B, m = fits.response.B, ready.design.m
@@ -45,8 +68,7 @@ def read_each(ready: GlsReady, fits: Fits, many: Each) -> Estimates:
     coef = fits.response.coef + delta.T
     s2 = c / m
     read = _Columns.empty(ready, B)
-    if ready.remedy.df in ("residual", "normal"):
-        df = float(m) if ready.remedy.df == "residual" else np.inf
+    if (df := plain_df(rule, m)) is not None:
         read.phi[:] = s2[:, None, None] * np.linalg.inv(here.QQ)
         read.df[:] = df
         for _, df2 in read.joint.values():
@@ -58,15 +80,13 @@ def read_each(ready: GlsReady, fits: Fits, many: Each) -> Estimates:
     estimate = ready.W.T @ coef
     half = np.einsum("ik,bij->bkj", ready.W, read.phi, optimize=True)
     se = np.sqrt(np.einsum("bkj,jk->kb", half, ready.W))
-    low, high, p = reference.t_rows(estimate, se, read.df, fits.run.settings.confidence)
     joint = {t.name: _joint(ready, t.name, t.columns, coef, read) for t in multi(ready.design)}
     boundary = np.any(found.at_bound, axis=0)
-    return Estimates(
-        estimate, se, read.df, low, high, p, None, joint, boundary=boundary, converged=found.converged
-    )
+    made = Estimates.by_t(estimate, se, read.df, fits.run.settings.confidence)
+    return replace(made, joint=joint, boundary=boundary, converged=found.converged)
 
 
-def _kenward(ready: GlsReady, many: Each, found: Minima, s2: Array, read: _Columns) -> None:
+def _kenward(ready: Reading, many: Each, found: Minima, s2: Array, read: _Columns) -> None:
     piece = many.algebra.chain[0]
     classes = many.algebra._classes(piece.part, many.response)
     bound = found.at_bound[0]
@@ -80,7 +100,7 @@ def _kenward(ready: GlsReady, many: Each, found: Minima, s2: Array, read: _Colum
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2
 
 
-def _satterthwaite(ready: GlsReady, fits: Fits, many: Each, found: Minima, read: _Columns) -> None:
+def _satterthwaite(ready: Reading, fits: Fits, many: Each, found: Minima, read: _Columns) -> None:
     patterns, which = np.unique(found.at_bound, axis=1, return_inverse=True)
     for j in range(patterns.shape[1]):
         columns = np.flatnonzero(which.ravel() == j)
@@ -101,14 +121,14 @@ def _satterthwaite(ready: GlsReady, fits: Fits, many: Each, found: Minima, read:
             scale, df2 = kept.joint(ready.W[:, list(term.columns)])
             read.joint[term.name][0][good], read.joint[term.name][1][good] = scale, df2
         for b in columns[~sound].tolist():
-            _alone(ready, fits, found, b, read)
+            _alone(ready, fits, many, found, b, read)
 
 
-def _alone(ready: GlsReady, fits: Fits, found: Minima, b: int, read: _Columns) -> None:
+def _alone(ready: Reading, fits: Fits, many: Each, found: Minima, b: int, read: _Columns) -> None:
     """A column whose observed information has no inverse takes the slow way of one column."""
-    node = ready.remedy.node(fits)
-    algebra = fits.algebra(node)
-    column = ready.column_at(fits, algebra, fits.response.column(b), found.theta[:, b], found.at_bound[:, b])
+    column = ready.column_at(
+        fits, many.algebra, fits.response.column(b), found.theta[:, b], found.at_bound[:, b]
+    )
     read.phi[b] = column.phi
     read.df[:, b] = [column.df(w) for w in ready.W.T]
     for term in multi(ready.design):
@@ -116,7 +136,7 @@ def _alone(ready: GlsReady, fits: Fits, found: Minima, b: int, read: _Columns) -
         read.joint[term.name][0][b], read.joint[term.name][1][b] = scale, df2
 
 
-def _joint(ready: GlsReady, name: str, columns: tuple[int, ...], coef: Array, read: _Columns) -> Joint:
+def _joint(ready: Reading, name: str, columns: tuple[int, ...], coef: Array, read: _Columns) -> Joint:
     L = ready.W[:, list(columns)]
     q = L.shape[1]
     covariance = np.moveaxis(np.einsum("pa,bpq,qc->bac", L, read.phi, L, optimize=True), 0, -1)

@@ -71,16 +71,7 @@ class GroupTReady:
                 pick = slice(j, j + 1)
                 low[pick], high[pick], p[pick] = reference.t_rows(estimate[pick], se[pick], df[pick], level)
         joint = {} if self.signs else self._joints(response)
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            p,
-            None,
-            joint,
-        )
+        return Estimates(estimate, se, df, low, high, p, joint=joint)
 
     def _signed(self, fits: Fits, each: Array, mean: Array, se: Array, name: str) -> resample.Curves:
         """Sign changes of θ_g − θ₀; t is a monotone function of their sum, which is used."""

@@ -9,13 +9,13 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.design.design import Design, Term
+from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported, Refusal
 from clingstone.remedies.joint import Joint
-from clingstone.remedies.remedy import Account, Estimates, multi, rows
+from clingstone.remedies.remedy import Account, Estimates, Flags, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -59,30 +59,43 @@ class LinearReady(ABC):
         """low, high, p: Student's t unless a subclass knows better."""
         return reference.t_rows(estimate, se, self.df, confidence)
 
+    @property
+    def gone(self) -> Flags:
+        """(k,) rows that cannot be served."""
+        return np.array([name in self.unusable for name in self.names], dtype=bool)
+
+    @property
+    def own(self) -> tuple[int, ...]:
+        """Rows that are coefficients."""
+        return tuple(range(self.design.p))
+
     def fit(self, fits: Fits) -> Estimates:
-        response = fits.response
+        response, gone = fits.response, self.gone
         estimate = self.W.T @ response.coef
         se = np.sqrt(self.variance(response))
-        se[[name in self.unusable for name in self.names]] = np.nan
+        se[gone] = np.nan
         low, high, p = self.refer(estimate, se, fits.run.settings.confidence)
-        covariance = None
-        if response.B == 1:
-            covariance = self.block(response, tuple(range(self.design.p)))[:, :, 0]
-            gone = [name in self.unusable for name in self.design.names]
-            covariance[gone, :] = covariance[:, gone] = np.nan
-        found = ((t, self._joint_of(t, response, estimate)) for t in multi(self.design))
-        joint = {t.name: j for t, j in found if j is not None}
+        one = response.B == 1
+        covariance = blanked(self.block(response, self.own)[:, :, 0], gone[: len(self.own)]) if one else None
         df = np.where(np.isnan(se), np.nan, self.df) if self.unusable else self.df
-        return Estimates(estimate, se, df, low, high, p, covariance, joint)
+        return Estimates(estimate, se, df, low, high, p, covariance, self.joints(response, estimate))
 
-    def _joint_of(self, term: Term, response: Response, estimate: Array) -> Joint | None:
-        if any(self.design.names[j] in self.unusable for j in term.columns):
+    def joints(self, response: Response, estimate: Array) -> dict[str, Joint]:
+        """Terms of several coefficients, where all of them can be served."""
+        found = {t.name: self.joint_of(t.columns, response, estimate) for t in multi(self.design)}
+        return {name: made for name, made in found.items() if made is not None}
+
+    def joint_of(self, columns: tuple[int, ...], response: Response, estimate: Array) -> Joint | None:
+        if self.gone[list(columns)].any():
             return None
-        columns = list(term.columns)
-        statistic = reference.wald(estimate[columns], self.block(response, term.columns))
-        if np.all(np.isnan(statistic)):
-            return None
-        return self.joint(statistic, term.columns)
+        wald = reference.wald(estimate[list(columns)], self.block(response, columns))
+        return None if np.all(np.isnan(wald)) else self.joint(wald, columns)
+
+
+def blanked(covariance: Array, gone: Flags) -> Array:
+    """(k, k) without what is of rows that cannot be served."""
+    covariance[gone, :] = covariance[:, gone] = np.nan
+    return covariance
 
 
 def reported(design: Design) -> tuple[tuple[str, ...], Array]:

@@ -19,7 +19,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
-from clingstone.remedies.linear import few_df, stop_if_none_left
+from clingstone.remedies.linear import blanked, few_df, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, multi, rows
 
 if TYPE_CHECKING:
@@ -62,30 +62,23 @@ class MeansReady:
         s2 = np.sum(e**2, axis=0) / self.m
         estimate = W.T @ coef
         variance = np.sum(W**2, axis=0)[:, None] * s2 if self.T is None else (self.T**2).T @ e**2
-        gone = [name in self.unusable for name in self.names]
+        gone = np.array([name in self.unusable for name in self.names], dtype=bool)
         estimate[gone] = variance[gone] = np.nan
         se = np.sqrt(variance)
-        low, high, p = reference.t_rows(estimate, se, self.df, fits.run.settings.confidence)
         covariance = None
         if response.B == 1:
-            every = tuple(range(self.design.p))
-            covariance = self._block(e, s2, every)[:, :, 0]
-            covariance[gone[: self.design.p], :] = covariance[:, gone[: self.design.p]] = np.nan
+            p = self.design.p
+            covariance = blanked(self._block(e, s2, tuple(range(p)))[:, :, 0], gone[:p])
         joint = {
             name: made
             for name, columns in self.joints.items()
             if (made := self._joint(estimate[list(columns)], e, s2, columns)) is not None
         }
         df = np.where(np.isnan(se), np.nan, self.df)
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            p,
-            covariance,
-            joint,
+        return replace(
+            Estimates.by_t(estimate, se, df, fits.run.settings.confidence),
+            covariance=covariance,
+            joint=joint,
             names=self.names,
             ordinary=ordinary(response, self.inverse),
         )

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING, ClassVar, Literal
+from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
 
@@ -19,8 +19,7 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import estimates
-from clingstone.remedies.gls import Column
+from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
@@ -29,16 +28,9 @@ if TYPE_CHECKING:
     from clingstone.covariance.bundles import Bundle
     from clingstone.covariance.fits import ErrorModel, Fits
 
-Rule = Literal["kenward-roger", "satterthwaite", "residual", "normal"]
 BY = " by "  # "day by patient": slopes of day that vary between patients
 AND = " and "
 MOST = 3  # slopes fitted together
-_RULES: dict[Rule, str] = {
-    "kenward-roger": "Kenward–Roger",
-    "satterthwaite": "Satterthwaite",
-    "residual": "n − p",
-    "normal": "normal quantile",
-}
 
 
 @dataclass(frozen=True, eq=False)
@@ -77,22 +69,20 @@ class SlopeReady:
         m = self.design.m
         coef = y.coef[:, 0] + reml.reduced(here)[0][:, 0]
         s2 = float(reml.scale(here, m)[0])
-        if self.remedy.df in ("residual", "normal"):
-            df = float(m) if self.remedy.df == "residual" else np.inf
-            return Column(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), lambda w: df, lambda L: (1.0, df))
+        if (df := plain_df(self.remedy.df, m)) is not None:
+            return Column.even(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), df)
         if self.remedy.df == "kenward-roger":
             found = kenward(algebra, theta, s2)
             if found is not None:
                 # At a bound the adjustment would treat it as an ordinary estimate: Φ is kept.
                 phi = found.phi if bound.any() else found.adjusted
-                return Column(coef, phi, lambda w: float(np.clip(found.df(w), 1.0, m)), found.joint)
+                return Column.kenward(coef, phi, found, m)
         free = [int(i) for i in np.flatnonzero(~bound)]
         bent = curvature.slopes(lambda at: algebra.gram(at, y), theta, free, m)
         if not bent.sound:
-            note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
-            return Column(coef, bent.phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
+            return Column.bent(coef, bent, (FLAT,))
         note = "" if self.remedy.df == "satterthwaite" else "Satterthwaite's df: too many groups for others."
-        return Column(coef, bent.phi, bent.df, lambda L: (1.0, bent.joint(L)), (note,) if note else ())
+        return Column.bent(coef, bent, (note,) if note else ())
 
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
@@ -180,7 +170,7 @@ class MixedSlope(Plain):
         together = [found.get(k) or on_request(design, k, self.limits) for k in self.keys(design)]
         choose(design, together, self.limits)  # refuses what cannot be fitted together
         names, W = reported(design)
-        return SlopeReady(self, design, names, W, _RULES[self.df])
+        return SlopeReady(self, design, names, W, RULES[self.df])
 
     def conventions(self) -> tuple[tuple[str, MixedSlope], ...]:
         return (

@@ -16,8 +16,9 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.joint import Joint, f_joint, hotelling_joint
-from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.linear import blanked, few_df, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Plain, multi
+from clingstone.remedies.sandwich import decided_by_one
 from clingstone.remedies.words import bound_notes
 
 if TYPE_CHECKING:
@@ -75,17 +76,11 @@ class MixedRobustReady:
         se = np.sqrt(np.stack([self._variance(one) for one in seen], axis=1))
         df = np.stack([self._df(one) for one in seen], axis=1)
         se[gone], df[gone] = np.nan, np.nan
-        low, high, p = reference.t_rows(estimate, se, df, fits.run.settings.confidence)
         joint = {t.name: self._joint(seen, t.columns) for t in multi(self.design)}
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            p,
-            self._covariance(seen[0], gone) if B == 1 else None,
-            {name: j for name, j in joint.items() if j is not None},
+        return replace(
+            Estimates.by_t(estimate, se, df, fits.run.settings.confidence),
+            covariance=self._covariance(seen[0], gone) if B == 1 else None,
+            joint={name: j for name, j in joint.items() if j is not None},
             boundary=np.asarray(np.any(model.at_bound, axis=0)),
             converged=np.asarray(model.converged, dtype=bool),
             notes=bound_notes(tuple(fits.component(k) for k in model.node), model) if B == 1 else (),
@@ -104,8 +99,7 @@ class MixedRobustReady:
         """(p, p) of the coefficients."""
         p = self.design.p
         block = self._scale * sandwich.cluster_covariance(one.weights.a[:p], one.scores[:, :, None])[:, :, 0]
-        block[gone[:p], :] = block[:, gone[:p]] = np.nan
-        return np.asarray(block)
+        return blanked(np.asarray(block), gone[:p])
 
     def whitened(self, algebra: Chosen, model: ErrorModel, y: Response, b: int) -> Whitened:
         """Rows multiplied by V̂^{−½}, their QR, and the scores of the GLS residual."""
@@ -233,15 +227,7 @@ class MixedRobust(Plain):
         part = design.group[self.at]
         names, W = reported(design)
         weights = sandwich.adjust(design.scores(part), W, "CR2")
-        unusable: Mapping[str, Refusal] = {
-            name: Refusal(
-                f"{self.at} {part.labels[weights.at[j]]} alone decides it, so how it would differ between "
-                "clusters cannot be seen",
-                f"A second {self.at} of that kind would be needed.",
-            )
-            for j, name in enumerate(names)
-            if weights.lost[j] > 1e-8
-        }
+        unusable: Mapping[str, Refusal] = decided_by_one(weights, part, names, self.at)
         if self.df == "satterthwaite":
             unusable = {**few_df(names, sandwich.cluster_df(weights.a, weights.b)), **unusable}
         stop_if_none_left(names, unusable)

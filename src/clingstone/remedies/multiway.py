@@ -19,6 +19,7 @@ from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.joint import Joint, wald_joint
 from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.sandwich import decided_by_one
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -231,17 +232,7 @@ def _few(
     notes: tuple[str, ...] = ()
     for part in ways:
         found = sandwich.adjust(design.scores(part), W, "CR0")
-        for j, name in enumerate(names):
-            if found.lost[j] > 1e-8:
-                unusable.setdefault(
-                    name,
-                    Refusal(
-                        f"{part.key} {part.labels[found.at[j]]} alone decides it, so how it would differ "
-                        "between clusters cannot be seen",
-                        f"A second {part.key} of that kind would be needed.",
-                    ),
-                )
         refused, some = few_treated(design, part, part.key)
-        unusable = {**refused, **unusable}
+        unusable = {**refused, **decided_by_one(found, part, names, part.key), **unusable}
         notes += some
     return unusable, notes

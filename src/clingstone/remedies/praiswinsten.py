@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, ClassVar
 
@@ -11,12 +12,12 @@ from clingstone.covariance.algebras import Layered
 from clingstone.covariance.pieces import SerialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import reference, reml
+from clingstone.maths import reml
 from clingstone.maths.once import Array
-from clingstone.needs import Family, Limits, Needs, NotSupported
-from clingstone.remedies.joint import Joint, wald_joint
-from clingstone.remedies.linear import LinearReady, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
+from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.columns import Column, estimates
+from clingstone.remedies.linear import reported
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 from clingstone.remedies.serial import enough_times
 
 if TYPE_CHECKING:
@@ -26,9 +27,15 @@ STEPS, SETTLED = 100, 1e-10
 RHO_MOST = 0.9999  # beyond, the transformed first row would carry no weight that rounding leaves
 
 
-@dataclass(frozen=True, eq=False, kw_only=True)
-class TwoStepReady(LinearReady):
+@dataclass(frozen=True, eq=False)
+class TwoStepReady:
+    design: Design
+    names: tuple[str, ...]
+    W: Array
     algebra: Layered
+    rule: str = "n − p"
+    unusable: Mapping[str, Refusal] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
 
     def rho(self, response: Response) -> tuple[float, bool]:
         """ρ = Σe_t e_{t−1}/Σe²_{t−1} of the current residuals, repeated until it settles."""
@@ -45,43 +52,25 @@ class TwoStepReady(LinearReady):
                 return rho, True
         return rho, False
 
-    def solved(self, response: Response) -> tuple[Array, Array, bool]:
-        """β̂ in the basis (p,), its covariance (p, p), and whether ρ settled; one column of y."""
+    def solved(self, response: Response) -> tuple[Column, bool]:
+        """One column of y, and whether ρ settled."""
         rho, settled = self.rho(response)
         gram = self.algebra.gram(np.array([np.arctanh(rho)]), response)
         delta, _, _ = reml.reduced(gram)
-        s2 = float(reml.scale(gram, self.design.m)[0])
-        return response.coef[:, 0] + delta[:, 0], np.asarray(s2 * np.linalg.inv(gram.QQ)), settled
+        m = self.design.m
+        phi = np.asarray(float(reml.scale(gram, m)[0]) * np.linalg.inv(gram.QQ))
+        return Column.even(response.coef[:, 0] + delta[:, 0], phi, float(m)), settled
 
     def fit(self, fits: Fits) -> Estimates:
-        response = fits.response
-        found = [self.solved(response.column(b)) for b in range(response.B)]
-        estimate = np.stack([self.W.T @ coef for coef, *_ in found], axis=1)
-        se = np.stack([np.sqrt(np.einsum("ik,ij,jk->k", self.W, phi, self.W)) for _, phi, _ in found], axis=1)
-        low, high, p = reference.t_rows(estimate, se, self.df, fits.run.settings.confidence)
-        joint = {}
-        for term in multi(self.design):
-            L = self.W[:, list(term.columns)]
-            wald = [
-                reference.wald((L.T @ coef)[:, None], (L.T @ phi @ L)[:, :, None])[0]
-                for coef, phi, _ in found
-            ]
-            joint[term.name] = self.joint(np.array(wald), term.columns)
-        W = self.W[:, : self.design.p]
-        covariance = W.T @ found[0][1] @ W if response.B == 1 else None
-        settled = np.array([ok for *_, ok in found])
-        return Estimates(estimate, se, self.df, low, high, p, covariance, joint, converged=settled)
-
-    def variance(self, response: Response) -> Array:
-        return np.stack([self.block(response, (j,))[0, 0] for j in range(len(self.names))])
-
-    def block(self, response: Response, columns: tuple[int, ...]) -> Array:
-        L = self.W[:, list(columns)]
-        each = [self.solved(response.column(b))[1] for b in range(response.B)]
-        return np.stack([L.T @ phi @ L for phi in each], axis=2)
-
-    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint:
-        return wald_joint(wald, len(columns), float(self.design.m))
+        found = [self.solved(fits.response.column(b)) for b in range(fits.response.B)]
+        return estimates(
+            self.design,
+            self.W,
+            [column for column, _ in found],
+            fits.run.settings.confidence,
+            None,
+            np.array([settled for _, settled in found]),
+        )
 
     def account(self, fits: Fits) -> Account:
         rho, _ = self.rho(fits.response.column(0))
@@ -115,8 +104,7 @@ class PraisWinsten(Plain):
         if series.ties or not piece.whole or len(series.pairs(1)[0]) < 3:
             raise NotSupported("the two steps need rows one step apart, one at a time", "Use car1.")
         names, W = reported(design)
-        df = np.full((len(names), 1), float(design.m))
-        return TwoStepReady(design, names, W, df, "n − p", algebra=Layered(design, (piece,), piece))
+        return TwoStepReady(design, names, W, Layered(design, (piece,), piece))
 
     def conventions(self) -> tuple[tuple[str, PraisWinsten], ...]:
         return ()

@@ -25,6 +25,7 @@ from clingstone.display import (
     p_value,
     span,
 )
+from clingstone.maths import reference
 from clingstone.maths.once import Array
 from clingstone.needs import Family, InputError, Limits, Needs, Refusal
 
@@ -58,6 +59,11 @@ class Estimates:
     notes: tuple[str, ...] = ()  # what only y could tell, one sentence each
     names: tuple[str, ...] = ()  # of the k rows, where they are not those of the design
     ordinary: Array | None = None  # (k, B) ordinary standard errors beside such rows
+
+    @classmethod
+    def by_t(cls, estimate: Array, se: Array, df: Array, confidence: float) -> Estimates:
+        """With Student's t for interval and p."""
+        return cls(estimate, se, df, *reference.t_rows(estimate, se, df, confidence))
 
 
 @dataclass(frozen=True)

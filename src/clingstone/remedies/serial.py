@@ -14,13 +14,13 @@ from clingstone.covariance.processes import Fading, Noisy, Process, search
 from clingstone.covariance.unbiased import Unbiased, unbiased
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import curvature, reference, reml
+from clingstone.maths import curvature, reml
 from clingstone.maths.once import Array
 from clingstone.maths.search import Optimum
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.joint import Joint, f_joint
+from clingstone.remedies.columns import Column, estimates
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -69,41 +69,24 @@ class ProcessReady(ABC):
     def fit(self, fits: Fits) -> Estimates:
         response = fits.response
         first = self.choose(_column(response, 0))
-        columns = [(first.found, *self._column(first.process, first.found, _column(response, 0)))]
-        for b in range(1, response.B):
-            one = response.column(b)
-            found = search(first.process, one, first.found)
-            columns.append((found, *self._column(first.process, found, one)))
-        estimate = np.stack([self.W.T @ coef for _, coef, _ in columns], axis=1)
-        phi = [slopes.phi for *_, slopes in columns]
-        se = np.stack([np.sqrt(np.einsum("ik,ij,jk->k", self.W, each, self.W)) for each in phi], axis=1)
-        df = np.stack([[_df(slopes, w) for w in self.W.T] for *_, slopes in columns], axis=1)
-        low, high, p = reference.t_rows(estimate, se, df, fits.run.settings.confidence)
-        W = self.W[:, : self.design.p]
-        joint = {
-            t.name: _joint([(c, s) for _, c, s in columns], self.W[:, list(t.columns)])
-            for t in multi(self.design)
-        }
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            p,
-            W.T @ phi[0] @ W if response.B == 1 else None,
-            joint,
-            boundary=np.array([bool(found.at_bound.any()) for found, *_ in columns]),
-            converged=np.array([found.converged for found, *_ in columns]),
-            notes=first.notes if response.B == 1 else (),
+        found = [first.found]
+        found += [search(first.process, response.column(b), first.found) for b in range(1, response.B)]
+        return estimates(
+            self.design,
+            self.W,
+            [self._fitted(first.process, one, _column(response, b)) for b, one in enumerate(found)],
+            fits.run.settings.confidence,
+            np.array([bool(one.at_bound.any()) for one in found]),
+            np.array([one.converged for one in found]),
+            first.notes,
         )
 
-    def _column(self, process: Process, found: Optimum, y: Response) -> tuple[Array, curvature.Slopes]:
+    def _fitted(self, process: Process, found: Optimum, y: Response) -> Column:
         here = process.gram(found.theta, y)
         delta, _, _ = reml.reduced(here)
         free = [int(i) for i in np.flatnonzero(~found.at_bound)]
         slopes = curvature.slopes(lambda theta: process.gram(theta, y), found.theta, free, self.design.m)
-        return y.coef[:, 0] + delta[:, 0], slopes
+        return Column.bent(y.coef[:, 0] + delta[:, 0], slopes)
 
     def account(self, fits: Fits) -> Account:
         response = _column(fits.response, 0)
@@ -135,21 +118,6 @@ class ProcessReady(ABC):
 
 def _column(response: Response, b: int) -> Response:
     return response if response.B == 1 else response.column(b)
-
-
-def _df(slopes: curvature.Slopes, w: Array) -> float:
-    """Satterthwaite's df; one where the likelihood is flat in its parameters."""
-    return slopes.df(w) if slopes.sound else 1.0
-
-
-def _joint(columns: list[tuple[Array, curvature.Slopes]], L: Array) -> Joint:
-    q = L.shape[1]
-    F, df2 = np.empty(len(columns)), np.ones(len(columns))
-    for b, (coef, slopes) in enumerate(columns):
-        F[b] = reference.wald((L.T @ coef)[:, None], (L.T @ slopes.phi @ L)[:, :, None])[0] / q
-        if slopes.sound:
-            df2[b] = slopes.joint(L)
-    return f_joint(F, q, df2)
 
 
 def half_life(rho: float, series: Series) -> str:

@@ -13,16 +13,16 @@ from scipy import stats
 from clingstone.covariance.components import Parameter
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import curvature, reference, reml, sar
+from clingstone.maths import curvature, reml, sar
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
 from clingstone.maths.once import Array, kept
 from clingstone.maths.search import minimise
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.joint import Joint, f_joint
+from clingstone.remedies.columns import Column, estimates, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import Spread
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, multi
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 from clingstone.structure.neighbours import Neighbours
 
 if TYPE_CHECKING:
@@ -38,7 +38,7 @@ class Found:
     """One column of y under its fitted autoregression, in the basis.
 
     lam, ratio : λ̂ and the variance of the place effects over that of the rows (0: none apart).
-    phi (p, p) : covariance of Q'β̂. df : contrast → df.
+    fixed_df : the df of every row where the rule gives one.
     """
 
     lam: float
@@ -49,11 +49,11 @@ class Found:
     edge: bool
     fixed_df: float | None = None
 
-    def df(self, w: Array) -> float:
-        return self.slopes.df(w) if self.fixed_df is None else self.fixed_df
-
-    def joint_df(self, L: Array) -> float:
-        return self.slopes.joint(L) if self.fixed_df is None else self.fixed_df
+    @property
+    def column(self) -> Column:
+        if self.fixed_df is None:
+            return Column.bent(self.coef, self.slopes)
+        return Column.even(self.coef, self.slopes.phi, self.fixed_df)
 
 
 @dataclass(frozen=True, eq=False)
@@ -71,25 +71,15 @@ class SpatialErrorReady:
     notes: tuple[str, ...] = ()
 
     def fit(self, fits: Fits) -> Estimates:
-        columns = self._columns(fits.response)
-        W, p = self.W, self.design.p
-        estimate = np.stack([W.T @ c.coef for c in columns], axis=1)
-        se = np.stack([np.sqrt(np.einsum("ik,ij,jk->k", W, c.slopes.phi, W)) for c in columns], axis=1)
-        df = np.stack([np.array([c.df(w) for w in W.T]) for c in columns], axis=1)
-        low, high, value = reference.t_rows(estimate, se, df, fits.run.settings.confidence)
-        one = len(columns) == 1
-        return Estimates(
-            estimate,
-            se,
-            df,
-            low,
-            high,
-            value,
-            W[:, :p].T @ columns[0].slopes.phi @ W[:, :p] if one else None,
-            {t.name: _joint(columns, W[:, list(t.columns)]) for t in multi(self.design)},
-            boundary=np.array([c.edge for c in columns]),
-            converged=np.ones(len(columns), dtype=bool),
-            notes=self._found_notes(fits.response, columns[0]) if one else (),
+        found = self._columns(fits.response)
+        return estimates(
+            self.design,
+            self.W,
+            [one.column for one in found],
+            fits.run.settings.confidence,
+            np.array([one.edge for one in found]),
+            np.ones(len(found), dtype=bool),
+            self._found_notes(fits.response, found[0]) if len(found) == 1 else (),
         )
 
     def _found_notes(self, response: Response, found: Found) -> tuple[str, ...]:
@@ -157,9 +147,7 @@ class SpatialErrorReady:
         self, here: Gram, coef: Array, slopes: curvature.Slopes, lam: float, ratio: float, edge: bool, m: int
     ) -> Found:
         delta, _, _ = reml.reduced(here)
-        fixed: float | None = {"residual": float(self.design.m), "normal": np.inf}.get(self.remedy.df)
-        if fixed is None and not slopes.sound:
-            fixed = 1.0
+        fixed = plain_df(self.remedy.df, self.design.m)
         return Found(lam, ratio, float(reml.scale(here, m)[0]), coef + delta[:, 0], slopes, edge, fixed)
 
     def _repeated(self, response: Response) -> Found:
@@ -283,17 +271,6 @@ def _axes(rows: float) -> tuple[Parameter, Parameter]:
         True,
     )
     return lam, ratio
-
-
-def _joint(columns: list[Found], L: Array) -> Joint:
-    q = L.shape[1]
-    F = np.empty(len(columns))
-    df2 = np.empty(len(columns))
-    for b, column in enumerate(columns):
-        effect = (L.T @ column.coef)[:, None]
-        F[b] = reference.wald(effect, (L.T @ column.slopes.phi @ L)[:, :, None])[0] / q
-        df2[b] = column.joint_df(L)
-    return f_joint(F, q, df2)
 
 
 def links_of(design: Design, near: Neighbours) -> sar.Links:

@@ -17,8 +17,7 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import estimates
-from clingstone.remedies.gls import Column
+from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
@@ -27,13 +26,6 @@ if TYPE_CHECKING:
 
 MOST_VISITS = 10  # 55 variances and covariances
 PAIRS = 3  # subjects beyond the number of visits that must be seen at each pair of them
-Rule = Literal["kenward-roger", "satterthwaite", "residual", "normal"]
-_RULES: dict[Rule, str] = {
-    "kenward-roger": "Kenward–Roger",
-    "satterthwaite": "Satterthwaite",
-    "residual": "n − p",
-    "normal": "normal quantile",
-}
 
 
 @dataclass(frozen=True, eq=False)
@@ -84,19 +76,17 @@ class VisitsReady:
 
     def _column(self, table: visits.Visits, found: visits.Found, y: Response) -> Column:
         A, _ = table.sums(found.sigma)
-        p, m = self.design.p, float(self.design.m)
+        p, m = self.design.p, self.design.m
         coef = y.coef[:, 0] + np.linalg.solve(A[:p, :p], A[:p, p])
         *_, seen = table.scores(found.sigma, self.remedy.estimation == "REML")
-        if self.remedy.df in ("residual", "normal"):
-            df = m if self.remedy.df == "residual" else np.inf
-            return Column(coef, seen.Phi, lambda w: df, lambda L: (1.0, df))
+        if (df := plain_df(self.remedy.df, m)) is not None:
+            return Column.even(coef, seen.Phi, df)
         try:
             kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
         except np.linalg.LinAlgError:
-            note = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
-            return Column(coef, seen.Phi, lambda w: 1.0, lambda L: (1.0, 1.0), (note,))
+            return Column.even(coef, seen.Phi, 1.0, (FLAT,))
         phi = kr.adjusted if self.remedy.df == "kenward-roger" else kr.phi
-        return Column(coef, phi, lambda w: float(np.clip(kr.df(w), 1.0, m)), kr.joint)
+        return Column.kenward(coef, phi, kr, m)
 
     def account(self, fits: Fits) -> Account:
         response = fits.response if fits.response.B == 1 else fits.response.column(0)
@@ -170,7 +160,7 @@ class Unstructured(Plain):
         visit, labels = _visits(design)
         _enough(part, visit, labels, design)
         names, W = reported(design)
-        return VisitsReady(self, design, part, visit, labels, names, W, _RULES[self.df])
+        return VisitsReady(self, design, part, visit, labels, names, W, RULES[self.df])
 
     def conventions(self) -> tuple[tuple[str, Unstructured], ...]:
         return (
