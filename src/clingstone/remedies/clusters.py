@@ -84,6 +84,14 @@ class OverGroups(OverClusters):
         return group_levels(design)
 
 
+def sizes_of(part: Partition) -> tuple[tuple[str, str], ...]:
+    """What every account of clusters says of them."""
+    return (
+        ("clusters", f"{part.count}"),
+        ("rows per cluster", f"{part.sizes.min()} to {part.sizes.max()}"),
+    )
+
+
 def arms(design: Design, part: Partition) -> dict[str, int]:
     """For each two-valued column: clusters that hold the rarer of its values."""
     X = rows_of(design, design.Q @ design.basis.R)

@@ -13,9 +13,9 @@ from clingstone.maths import sandwich
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs
 from clingstone.remedies.clusters import OverClusters, clusters, rank_note
-from clingstone.remedies.linear import few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand
-from clingstone.remedies.sandwich import ClusterReady, decided_by_one
+from clingstone.remedies.sandwich import CLUSTER_RULES, ClusterReady, judged
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -102,24 +102,20 @@ class ClusterJackknife(OverClusters):
         part = clusters(design, self.at)
         names, W = reported(design)
         weights = sandwich.adjust(design.scores(part), W, "CR3")
-        unusable = decided_by_one(weights, part, names, self.at)
-        own = self.df == "satterthwaite"
-        df = sandwich.cluster_df(weights.a, weights.b) if own else np.full(len(names), part.count - 1.0)
-        unusable = {**few_df(names, df), **unusable}
-        stop_if_none_left(names, unusable)
+        df, unusable = judged(weights, part, names, self.at, self.df)
         return JackknifeReady(
             design,
             names,
             W,
-            df[:, None],
-            "Satterthwaite" if own else "clusters − 1",
+            df,
+            CLUSTER_RULES[self.df],
             unusable,
             rank_note(part, design.p),
             kind="CR3",
             at=self.at,
             part=part,
             weights=weights,
-            own_df=own,
+            own_df=self.df == "satterthwaite",
             centre=self.centre,
         )
 

@@ -15,10 +15,11 @@ from clingstone.maths import reference, reml, sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
+from clingstone.remedies.clusters import sizes_of
 from clingstone.remedies.joint import Joint, f_joint, hotelling_joint
-from clingstone.remedies.linear import blanked, few_df, positive_m, reported, stop_if_none_left
+from clingstone.remedies.linear import blanked, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Plain, multi
-from clingstone.remedies.sandwich import decided_by_one
+from clingstone.remedies.sandwich import CLUSTER_RULES, ClusterDf, judged
 from clingstone.remedies.words import bound_notes
 
 if TYPE_CHECKING:
@@ -146,8 +147,7 @@ class MixedRobustReady:
         ]
         items += [
             ("variance of row noise", f"{float(model.variances['row'][0]):.6g}"),
-            ("clusters", f"{self.part.count}"),
-            ("rows per cluster", f"{self.part.sizes.min()} to {self.part.sizes.max()}"),
+            *sizes_of(self.part),
             ("working model", "the fitted random intercepts"),
         ]
         return Account(
@@ -175,7 +175,7 @@ class MixedRobust(Plain):
     """
 
     kind: Kind = "CR2"
-    df: Literal["satterthwaite", "clusters", "normal"] = "satterthwaite"
+    df: ClusterDf = "satterthwaite"
     at: str = ""
     limits: Limits = field(default_factory=Limits)
     id: ClassVar[str] = "mixed-robust"
@@ -227,18 +227,14 @@ class MixedRobust(Plain):
         part = design.group[self.at]
         names, W = reported(design)
         weights = sandwich.adjust(design.scores(part), W, "CR2")
-        unusable: Mapping[str, Refusal] = decided_by_one(weights, part, names, self.at)
-        if self.df == "satterthwaite":
-            unusable = {**few_df(names, sandwich.cluster_df(weights.a, weights.b)), **unusable}
-        stop_if_none_left(names, unusable)
+        _, unusable = judged(weights, part, names, self.at, self.df)
         if part.count <= design.p:
             raise NotSupported(
                 f"{part.count} clusters of {self.at} and {design.p} coefficients: the scatter of so few "
                 "clusters leaves some combination of coefficients with no spread at all",
                 "Use the random intercept with its own covariance, or a smaller model.",
             )
-        rule = {"satterthwaite": "Satterthwaite", "clusters": "clusters − 1", "normal": "normal quantile"}
-        return MixedRobustReady(self, design, part, names, W, rule[self.df], unusable)
+        return MixedRobustReady(self, design, part, names, W, CLUSTER_RULES[self.df], unusable)
 
     def conventions(self) -> tuple[tuple[str, MixedRobust], ...]:
         return (

@@ -58,6 +58,11 @@ def enough_sites(design: Design, least: int, need: str) -> Sites:
     return sites
 
 
+def length(value: float, unit: str, digits: int = 3) -> str:
+    """A length on the map, in the unit of the places: "2.4 km"."""
+    return f"{significant(value, digits)}{f' {unit}' if unit else ''}"
+
+
 @dataclass(frozen=True, eq=False)
 class Spread:
     """The fitted covariance V of the rows as the basis sees it.

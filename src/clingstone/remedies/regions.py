@@ -10,13 +10,12 @@ import numpy.typing as npt
 from scipy.spatial.distance import cdist
 
 from clingstone.design.design import Design
-from clingstone.display import significant
 from clingstone.maths import sandwich
 from clingstone.maths.once import Array, frozen, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.linear import few_df, reported, stop_if_none_left
-from clingstone.remedies.places import OnMap, enough_sites
+from clingstone.remedies.places import OnMap, enough_sites, length
 from clingstone.remedies.remedy import Account, Estimand
 from clingstone.remedies.sandwich import ClusterReady
 from clingstone.structure.spatial import Sites
@@ -49,11 +48,10 @@ class RegionReady(ClusterReady):
 
     def account(self, fits: Fits) -> Account:
         found = super().account(fits)
-        unit = f" {self.unit}" if self.unit else ""
         own = (
             ("regions", f"{self.regions.count}, compact and of like size"),
-            ("radius of a region", f"{significant(self.regions.radius, 3)}{unit}"),
-            ("practical range of the fitted dependence", f"{significant(self.reach, 3)}{unit}"),
+            ("radius of a region", length(self.regions.radius, self.unit)),
+            ("practical range of the fitted dependence", length(self.reach, self.unit)),
         )
         return replace(found, items=(*own, *found.items[1:]), source="bester-conley-hansen-2011")
 
@@ -138,10 +136,9 @@ class RegionCluster(OnMap):
                 "the places cannot be cut into four regions of like size",
                 "Use spatial-gls or spatial-components.",
             )
-        unit = f" {sites.unit}" if sites.unit else ""
         raise NotSupported(
-            f"the dependence reaches {significant(reach, 2)}{unit}, and four regions have a radius of "
-            f"{significant(smallest.radius, 2)}{unit}: they would not be independent",
+            f"the dependence reaches {length(reach, sites.unit, 2)}, and four regions have a radius of "
+            f"{length(smallest.radius, sites.unit, 2)}: they would not be independent",
             "Use spatial-gls or spatial-components, or a wider map.",
         )
 

@@ -14,7 +14,7 @@ from clingstone.maths import sandwich
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, Refusal
-from clingstone.remedies.clusters import OverClusters, clusters
+from clingstone.remedies.clusters import OverClusters, clusters, sizes_of
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, few_df, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import Account, Estimand, Plain
@@ -189,6 +189,12 @@ class HeteroscedasticityRobust(Plain):
 # ---- cluster-robust -----------------------------------------------------------------------
 
 CR = Literal["CR0", "CR1", "CR1S", "CR2", "CR3"]
+ClusterDf = Literal["satterthwaite", "clusters", "normal"]
+CLUSTER_RULES: dict[ClusterDf, str] = {
+    "satterthwaite": "Satterthwaite",
+    "clusters": "clusters − 1",
+    "normal": "normal quantile",
+}
 _CR_FACTOR = {
     "CR0": "none",
     "CR1": "G/(G − 1)",
@@ -244,8 +250,7 @@ class ClusterReady(LinearReady):
             df_rule=self.rule,
             reference="t" if np.isfinite(self.df).all() else "normal",
             items=(
-                ("clusters", f"{part.count}"),
-                ("rows per cluster", f"{part.sizes.min()} to {part.sizes.max()}"),
+                *sizes_of(part),
                 ("working model", "independent errors of one variance"),
                 ("largest part one cluster has in a variance", f"{share[j, g]:.0%} ({part.labels[g]})"),
             ),
@@ -263,7 +268,7 @@ class ClusterRobust(OverClusters):
     """
 
     kind: CR = "CR2"
-    df: Literal["satterthwaite", "clusters", "normal"] = "satterthwaite"
+    df: ClusterDf = "satterthwaite"
     at: str = ""
     limits: Limits = field(default_factory=Limits)
     id: ClassVar[str] = "cluster-robust"
@@ -282,27 +287,19 @@ class ClusterRobust(OverClusters):
         names, W = reported(design)
         power = self.kind if self.kind in ("CR2", "CR3") else "CR0"
         weights = sandwich.adjust(design.scores(part), W, power)
-        unusable: Mapping[str, Refusal] = decided_by_one(weights, part, names, self.at)
-        own = self.df == "satterthwaite"
-        if own:
-            df = sandwich.cluster_df(weights.a, weights.b)
-            unusable = {**few_df(names, df), **unusable}
-        else:
-            df = np.full(len(names), part.count - 1.0 if self.df == "clusters" else np.inf)
-        stop_if_none_left(names, unusable)
-        rule = {"satterthwaite": "Satterthwaite", "clusters": "clusters − 1", "normal": "normal quantile"}
+        df, unusable = judged(weights, part, names, self.at, self.df)
         return ClusterReady(
             design,
             names,
             W,
-            df[:, None],
-            rule[self.df],
+            df,
+            CLUSTER_RULES[self.df],
             unusable,
             kind=self.kind,
             at=self.at,
             part=part,
             weights=weights,
-            own_df=own,
+            own_df=self.df == "satterthwaite",
         )
 
     def conventions(self) -> tuple[tuple[str, ClusterRobust], ...]:
@@ -317,6 +314,27 @@ class ClusterRobust(OverClusters):
             ("CR2 with G − 1 df", replace(self, kind="CR2", df="clusters")),
             ("CR3 with G − 1 df", replace(self, kind="CR3", df="clusters")),
         )
+
+
+def judged(
+    weights: sandwich.Adjusted,
+    part: Partition,
+    names: tuple[str, ...],
+    at: str,
+    rule: ClusterDf,
+    refused: Mapping[str, Refusal] | None = None,
+) -> tuple[Array, dict[str, Refusal]]:
+    """df (k, 1) of rows whose contrasts are adjusted per cluster, and which of them cannot be served.
+
+    refused : rows that are known not to be. Raises NotSupported when not one is left.
+    """
+    if rule == "satterthwaite":
+        df = sandwich.cluster_df(weights.a, weights.b)
+    else:
+        df = np.full(len(names), part.count - 1.0 if rule == "clusters" else np.inf)
+    unusable = {**few_df(names, df), **decided_by_one(weights, part, names, at), **(refused or {})}
+    stop_if_none_left(names, unusable)
+    return df[:, None], unusable
 
 
 def decided_by_one(

@@ -12,14 +12,13 @@ from clingstone.covariance.algebras import Chosen, choose
 from clingstone.covariance.components import declared
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.display import significant
 from clingstone.maths import spatialhac
 from clingstone.maths.once import Array, kept
 from clingstone.maths.spatialhac import Kernel, Law
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, reported, stop_if_none_left
-from clingstone.remedies.places import OnMap, enough_sites
+from clingstone.remedies.places import OnMap, enough_sites, length
 from clingstone.remedies.remedy import Account, Estimand
 from clingstone.structure.spatial import Sites
 
@@ -87,8 +86,7 @@ class SpatialHacReady(LinearReady):
     def account(self, fits: Fits) -> Account:
         sites = self.design.spatial
         assert sites is not None
-        unit = f" {sites.unit}" if sites.unit else ""
-        items = [("kernel", self.kernel), ("cutoff", f"{significant(self.cutoff.along, 3)}{unit}")]
+        items = [("kernel", self.kernel), ("cutoff", length(self.cutoff.along, sites.unit))]
         if self.corrected:
             low, high = float(self.cutoff.factor.min()), float(self.cutoff.factor.max())
             items.append(("factor for what the kernel misses", f"{low:.2f} to {high:.2f}"))
@@ -96,7 +94,7 @@ class SpatialHacReady(LinearReady):
         for cutoff in self.others:
             se = np.sqrt(self._variance(fits.response, cutoff)[:, 0])
             for j in focus[:3]:
-                at = f"{significant(cutoff.along, 3)}{unit}"
+                at = length(cutoff.along, sites.unit)
                 words = f"{se[j]:.6g} with {cutoff.df[j]:.1f} df" if self.corrected else f"{se[j]:.6g}"
                 items.append((f"standard error of {self.names[j]} at {at}", words))
         return Account(

@@ -20,10 +20,10 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal, memory
 from clingstone.remedies.clusters import clusters, covered, group_levels
 from clingstone.remedies.gls import TOGETHER
-from clingstone.remedies.linear import few_df, stop_if_none_left
+from clingstone.remedies.linear import stop_if_none_left
 from clingstone.remedies.means import means
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, rows
-from clingstone.remedies.sandwich import CR, ClusterReady, decided_by_one
+from clingstone.remedies.sandwich import CLUSTER_RULES, CR, ClusterDf, ClusterReady, judged
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel
@@ -237,15 +237,14 @@ def within_ready(
 ) -> WithinReady:
     told = tuple(name not in unusable for name in names)
     own = kind in ("CR2", "CR3")
-    df = sandwich.cluster_df(weights.a, weights.b) if own else np.full(len(names), part.count - 1.0)
-    unusable = {**few_df(names, df), **decided_by_one(weights, part, names, part.key), **unusable}
-    stop_if_none_left(names, unusable)
+    rule: ClusterDf = "satterthwaite" if own else "clusters"
+    df, unusable = judged(weights, part, names, part.key, rule, unusable)
     return WithinReady(
         design,
         names,
         W,
-        df[:, None],
-        "Satterthwaite" if own else "clusters − 1",
+        df,
+        CLUSTER_RULES[rule],
         unusable,
         kind=kind,
         at=part.key,
