@@ -122,8 +122,9 @@ def joint_df(D: Array, K: Array, G: Array) -> float:
     if values[0] <= 1e-10 * values[-1]:
         return float("nan")
     T = (vectors / np.sqrt(values)) @ vectors.T
-    D, K = (np.einsum("su,uvg,tv->stg", T, x, T) for x in (D, K))
-    G = np.einsum("su,uvij,tv->stij", T, G, T)
+    # Pairs of operands at a time: all three at once would cost q⁴ for q contrasts.
+    D, K = (np.einsum("su,uvg,tv->stg", T, x, T, optimize=True) for x in (D, K))
+    G = np.einsum("su,uvij,tv->stij", T, G, T, optimize=True)
     q = len(T)
     Ds, Ks = np.einsum("ssg->sg", D), np.einsum("ssg->sg", K)
     first = Ds @ Ds.T - Ds @ Ks.T - Ks @ Ds.T + np.einsum("stij,stij->st", G, G)
@@ -137,7 +138,7 @@ def cluster_joint_df(a: Array, b: Array) -> float:
     return joint_df(
         np.einsum("sgp,tgp->stg", a, b),
         np.einsum("sgp,tgp->stg", b, b),
-        np.einsum("sgi,tgj->stij", b, b),
+        np.einsum("sgi,tgj->stij", b, b, optimize=True),
     )
 
 
