@@ -110,3 +110,21 @@ def test_a_ledger_hands_out_its_parts():
     assert book.of("nothing") is None
     assert book.share("row").share == 0.6
     assert book.parameter("serial", "ρ").estimate == 0.6
+
+
+def test_a_correlation_that_hardly_fades_within_the_data_has_no_half_life_told():
+    """ρ = 0.9999995: half of it is gone after 1.4 million steps; 0.98: after 34."""
+    book = ledger(serial="present")
+    rho = replace(book.parameter("serial", "ρ"), estimate=0.9999995, low=0.97, high=0.9999999)
+    others = tuple(p for p in book.parameters if p.name != "ρ")
+    text = say.dependence(replace(book, parameters=(*others, rho)), rows=100)
+    assert "correlation more than 0.99 (0.97 to more than 0.99) per day, hardly fading within" in text
+    slow = replace(book, parameters=(*others, replace(rho, estimate=0.98)))
+    assert "hardly fading" in say.dependence(slow, rows=30)
+    assert "half of it gone after" in say.dependence(slow, rows=40)
+    assert "half of it gone after" in say.dependence(slow)
+
+
+def test_a_range_beyond_the_map_is_not_given_in_figures():
+    assert "hardly fading within the map." in say.dependence(ledger(spatial="present"), over=1.2)
+    assert "out to about" in say.dependence(ledger(spatial="present"), over=0.8)

@@ -90,7 +90,7 @@ def test_two_sentences_for_the_paper():
     words = report_this(fixture.trial()).replace("\u00a0", " ")
     assert words.count(". ") == 1
     assert "rows of one clinic (intraclass correlation 0.18, 95 % interval 0.06 to 0.41)" in words
-    assert "arm: treated is estimated at −3.1 (95 % interval −6.4 to 0.2;" in words
+    assert "“arm: treated” is estimated at −3.1 (95 % interval −6.4 to 0.2;" in words
     assert words.endswith("would give −4.5 to −1.7.")
 
 

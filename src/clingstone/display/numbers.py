@@ -66,7 +66,8 @@ SHOWN = 4  # digits of a measured amount in running text
 
 
 def shortened(text: str) -> str:
-    """Words in which every decimal figure of more than four digits is cut to four, with a true minus.
+    """Words in which every decimal figure of more than four digits is cut to four, with a true minus, and
+    a per cent sign stands apart.
 
     What was saved keeps all its digits; this is for reading.
     """
@@ -79,7 +80,7 @@ def shortened(text: str) -> str:
         value = float(raw.replace(MINUS, "-"))
         return significant(value, min(SHOWN, max(1, len(digits)))) if "e" in raw else amount(value)
 
-    return _LONG.sub(short, text)
+    return re.sub(r"(?<=\d) ?%", f"{NBSP}%", _LONG.sub(short, text))
 
 
 def _scientific(value: float, digits: int) -> str:

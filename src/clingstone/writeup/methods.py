@@ -11,7 +11,7 @@ from clingstone.results import Results
 from clingstone.writeup import strength
 from clingstone.writeup.bibliography import references_of
 from clingstone.writeup.items import ITEMS
-from clingstone.writeup.naming import subject
+from clingstone.writeup.naming import named, subject
 from clingstone.writeup.outcome import estimate_words
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import advised, decimals, has_freedom, level_percent, ordinary, row_of, served
@@ -105,7 +105,7 @@ def _estimates(results: Results) -> str:
         return f"No correction is reported. {why}"
     names = served(results)
     words = [(n, estimate_words(results, best, n)) for n in names[:SPOKEN]]
-    told = [f"{name} is estimated at {said}" for name, said in words if said]
+    told = [f"{named(name)} is estimated at {said}" for name, said in words if said]
     if not told:
         return f"Estimates come from: {best.name}."
     account = best.account
@@ -128,6 +128,7 @@ def _beside(results: Results, names: tuple[str, ...]) -> str:
         return ""
     several = len(found) > 1
     ends = [
-        span(row.low, row.high, decimals(results, n)) + (f" for {n}" if several else "") for n, row in found
+        span(row.low, row.high, decimals(results, n)) + (f" for {named(n)}" if several else "")
+        for n, row in found
     ]
     return f"; an ordinary fit, which takes rows as independent, would give {listed(ends)}"

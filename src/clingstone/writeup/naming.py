@@ -49,6 +49,11 @@ WHOLE = ("all rows", "rows identical in every column used")
 _ROLE = re.compile(r" \((response|predictor|weight|group|series|time|place)\)$")
 
 
+def named(row: str) -> str:
+    """A row of the intervals inside a sentence: a level of a factor holds a colon of its own."""
+    return f"“{row}”" if ":" in row else row
+
+
 def noun(g: GroupSummary) -> str:
     """What one group of a level is called: "lamb" for "flock/lamb" within "flock"."""
     inside = f"{g.parent}/"

@@ -15,6 +15,7 @@ from clingstone.writeup.leading import STRUCTURES, with_most_given
 from clingstone.writeup.naming import (
     label_of,
     name_of_test,
+    named,
     noun_at,
     pointed_at,
     remedy_words,
@@ -119,9 +120,9 @@ def estimates(results: Results) -> Iterable[Sentence]:
     yield from _fit_words(best, results)
     told = [(n, words) for n in focus_rows(results) if (words := estimate_words(results, best, n))]
     if len(told) == 1:
-        yield Sentence(f"The estimate of {told[0][0]} is {told[0][1]}.", ("M8", "M13"))
+        yield Sentence(f"The estimate of {named(told[0][0])} is {told[0][1]}.", ("M8", "M13"))
     elif told:
-        listing = "; ".join(f"{name} {words}" for name, words in told[:SPOKEN])
+        listing = "; ".join(f"{named(name)} {words}" for name, words in told[:SPOKEN])
         more = f"; the other {len(told) - SPOKEN} stand in intervals.csv" if len(told) > SPOKEN else ""
         yield Sentence(f"The estimates are: {listing}{more}.", ("M8", "M13"))
     for t in best.terms:
@@ -217,7 +218,8 @@ def leaning(results: Results) -> Iterable[str]:
         for curve in f.curves:
             if curve.kind == "left-out" and curve.y:
                 yield _without_each(results, curve)
-    for asked in HEALTH:
+    drawn = any(curve.kind == "left-out" for f in results.evidence for curve in f.curves)
+    for asked in HEALTH[:1] if drawn else HEALTH:
         told = [(fit, v) for fit in ordered(results) for name, v in fit.account.items if name == asked]
         if told:
             fit, value = told[0]
@@ -225,19 +227,18 @@ def leaning(results: Results) -> Iterable[str]:
 
 
 def _without_each(results: Results, curve: Curve) -> str:
-    """ "Left out one at a time, clinics move the ordinary coefficient of arm to between −3.6 and −2.2 …"."""
+    """ "With one clinic at a time left out, the ordinary coefficient of arm lies between −3.6 and −2.2 …"."""
     term = curve.y_name.removeprefix("coefficient of ").removesuffix(" without it")
-    digits = decimals(results, term)
+    digits, group = decimals(results, term), noun_at(results, curve.x_name)
     low, high = (number(v, digits) for v in (min(curve.y), max(curve.y)))
-    text = (
-        f"With one {noun_at(results, curve.x_name)} at a time left out, the ordinary coefficient of {term} "
-    )
+    text = f"With one {group} at a time left out, the ordinary coefficient of {named(term)} "
     text += f"lies between {low} and {high}"
     whole = next((y[0] for _, y in curve.lines.values()), None)
     if whole is None:
         return f"{text}."
     furthest = max(range(len(curve.y)), key=lambda k: abs(curve.y[k] - whole))
-    return f"{text} (with all {number(whole, digits)}; {curve.labels[furthest]} moves it furthest)."
+    who = f"{group} {curve.labels[furthest]}"
+    return f"{text} (with all {number(whole, digits)}; furthest from that without {who})."
 
 
 # ---- sensitivity -----------------------------------------------------------------------------

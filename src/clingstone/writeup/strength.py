@@ -26,11 +26,13 @@ def most(results: Results, p: Parameter) -> float:
 
 
 def places(results: Results, p: Parameter) -> int:
-    """Figures that follow the interval: two digits of half its length. Correlations have two decimals."""
+    """Figures that follow the interval: two digits of half its length, and one of the distance to its lower
+    end, which is far nearer where a length has a long tail. Correlations have two decimals."""
     if p.name in ("intraclass correlation", "ρ"):
         return 2
     top = min(p.high, most(results, p))
-    return min(4, max(0, decimals_for((top - p.low) / 2)))
+    near = decimals_for(p.estimate - p.low, 1) if p.estimate > p.low else 0
+    return min(4, max(0, near, decimals_for((top - p.low) / 2)))
 
 
 def figure(results: Results, p: Parameter, value: float) -> str:
