@@ -119,7 +119,7 @@ def test_a_range_far_beyond_the_map_is_told_as_more_than_it_holds():
     reach = Parameter("spatial", "practical range", 0.8, 0.5, 1e9, "km", "")
     assert strength.most(results, reach) == 10 * wide
     assert strength.interval(results, reach).endswith(strength.figure(results, reach, 1e9))
-    assert strength.interval(results, reach).startswith("0.5 to more than ")
+    assert strength.interval(results, reach).startswith("0.50 to more than ")
     gone = replace(reach, estimate=2e9, low=1e9, high=3e9)
     assert strength.interval(results, gone) == strength.figure(results, gone, 2e9)
 

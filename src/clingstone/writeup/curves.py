@@ -71,7 +71,8 @@ def _alt(curve: Curve, f: Finding) -> str:
     elif curve.kind == "left-out":
         ends_at = f"{significant(min(curve.y), 3)} to {significant(max(curve.y), 3)}"
         whole = "".join(f"; {name}: {significant(y[0], 3)}" for name, (_, y) in curve.lines.items())
-        drawn = f"The {curve.y_name} runs from {ends_at}{whole}."
+        what = curve.y_name.removesuffix(" without it")
+        drawn = f"Without each {curve.x_name} in turn the {what} runs from {ends_at}{whole}."
     elif curve.kind == "directions":
         each = (f"{significant(v)} at {number(a, 0)} degrees" for a, v in zip(curve.x, curve.y, strict=True))
         drawn = f"{curve.y_name}: {listed(each)}."
@@ -109,7 +110,7 @@ CAPTIONS = {
     "traces": "Residuals by time, series by series",
     "correlogram": "Correlation of residuals by distance",
     "directions": "Likeness of neighbours by direction",
-    "local-map": "Places that stand out from their neighbours' residuals or with them",
+    "local-map": "Places that stand out from what independent data would give",
     "left-out": "A coefficient without each group in turn",
 }
 

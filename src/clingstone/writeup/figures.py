@@ -290,7 +290,8 @@ def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
     panel.set_xlim(0, 1)
     panel.set_ylim(len(parts), 0)
     panel.set_yticks([])
-    panel.set_xticks([0, 0.5, 1], ["0 %", "50 %", "100 %"])
+    middle = width - left - right > 110
+    panel.set_xticks([0, 0.5, 1], ["0 %", "50 %" if middle else "", "100 %"])
     sides: tuple[Literal["left", "center", "right"], ...] = ("left", "center", "right")
     for label, side in zip(panel.get_xticklabels(), sides, strict=True):
         label.set_horizontalalignment(side)
@@ -301,7 +302,8 @@ def _paint_shares(parts: Sequence[Share], width: float) -> Figure:
 
 def _share_figures(s: Share) -> str:
     known = math.isfinite(s.low + s.high)
-    return percent(s.share) + (f"  ({percent_span(s.low, s.high)})" if known else "")
+    text = percent(s.share) + (f"  ({percent_span(s.low, s.high)})" if known else "")
+    return text.replace("more than ", "> ")  # beside a bar there is little room
 
 
 def _draw_share(

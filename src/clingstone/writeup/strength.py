@@ -8,11 +8,13 @@ from __future__ import annotations
 
 import math
 
-from clingstone.display import decimals_for, number, significant, span
+from clingstone.display import decimals_for, number, significant
 from clingstone.ledger.ledger import Parameter
 from clingstone.results import Results
 
 BEYOND = 10.0  # times the length of the data, or the width of the map
+LENGTHS = ("half-life", "practical range")
+LONG_TAIL = 3.0
 
 
 def most(results: Results, p: Parameter) -> float:
@@ -26,28 +28,30 @@ def most(results: Results, p: Parameter) -> float:
 
 
 def places(results: Results, p: Parameter) -> int:
-    """Figures that follow the interval: two digits of half its length, and one of the distance to its lower
-    end, which is far nearer where a length has a long tail. Correlations have two decimals."""
+    """Figures that follow the interval: two digits of half its length. Correlations have two decimals."""
     if p.name in ("intraclass correlation", "ρ"):
         return 2
-    top = min(p.high, most(results, p))
-    near = decimals_for(p.estimate - p.low, 1) if p.estimate > p.low else 0
-    return min(4, max(0, near, decimals_for((top - p.low) / 2)))
+    return min(4, max(0, decimals_for((min(p.high, most(results, p)) - p.low) / 2)))
 
 
 def figure(results: Results, p: Parameter, value: float) -> str:
-    """One value: "2.9", "more than 690"."""
+    """One value: "2.9", "more than 690".
+
+    A length whose interval has a long tail has two digits of its own at each end: "2.0 (0.94 to 22)".
+    """
     top = most(results, p)
-    return f"more than {significant(top)}" if value > top else number(value, places(results, p))
+    if value > top:
+        return f"more than {significant(top)}"
+    skew = p.name in LENGTHS and p.low > 0 and p.high > LONG_TAIL * p.low
+    return significant(value) if skew else number(value, places(results, p))
 
 
 def interval(results: Results, p: Parameter) -> str:
     """ "1.4 to 5.2", "3.1 to more than 690"; "" where an end is not known."""
     if math.isnan(p.low + p.high):
         return ""
-    top = most(results, p)
-    if p.low > top:
+    if p.low > most(results, p):
         return figure(results, p, p.low)
-    if p.high > top:
-        return f"{figure(results, p, p.low)} to {figure(results, p, p.high)}"
-    return span(p.low, p.high, places(results, p)) if math.isfinite(p.low + p.high) else ""
+    if not math.isfinite(min(p.high, most(results, p))):
+        return ""
+    return f"{figure(results, p, p.low)} to {figure(results, p, p.high)}"
