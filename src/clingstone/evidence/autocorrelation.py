@@ -24,6 +24,7 @@ CURVE_BINS = 12
 # Exact moments of an autocorrelation cost O(n p²) each; beyond this many rows they hardly differ from
 # their large-sample values.
 EXACT_MOMENTS = 5000
+Lines = dict[str, tuple[tuple[float, ...], tuple[float, ...]]]
 GRID_MOST = 4  # times the rows: the longest grid of steps that is laid out
 
 
@@ -86,21 +87,10 @@ def lag_curve(fits: Fits, law: Callable[[int], Law]) -> Curve | None:
     x, y, half, pairs_at = np.array(rows).T
     whole_run = len(rows) == round(float(x[-1] / series.step))  # every lag from 1 on is there
     lines = {"partial correlation": (floats(x), floats(partial(y)))} if whole_run else {}
-    return Curve(
-        kind="autocorrelation",
-        x=floats(x),
-        y=floats(np.clip(y, -1.0, 1.0)),
-        low=floats(-half),
-        high=floats(half),
-        size=floats(pairs_at),
-        x_name="time apart",
-        y_name="correlation of residuals",
-        unit=series.unit,
-        note="band: where a single correlation lies in 95 % of data without dependence"
-        if fits.run.settings.confidence == 0.95
-        else "",
-        lines=lines,
-    )
+    note = ""
+    if fits.run.settings.confidence == 0.95:
+        note = "band: where a single correlation lies in 95 % of data without dependence"
+    return _curve(x, y, half, pairs_at, series.unit, note, lines)
 
 
 def partial(r: Array) -> Array:
@@ -138,6 +128,12 @@ def elapsed_curve(fits: Fits, earlier: Rows, later: Rows, apart: Array) -> Curve
     x, y, half, size = np.array(rows).T
     gamma = _semivariance(design, e, earlier, later) / float(response.s2[0])
     assert design.serial is not None
+    note = "pairs in bins of equal number; band: where a single bin lies without dependence"
+    line = {"semivariance": (floats(x), floats([np.nanmean(gamma[b]) for b in bins]))}
+    return _curve(x, y, half, size, design.serial.unit, note, line)
+
+
+def _curve(x: Array, y: Array, half: Array, size: Array, unit: str, note: str, lines: Lines) -> Curve:
     return Curve(
         kind="autocorrelation",
         x=floats(x),
@@ -147,9 +143,9 @@ def elapsed_curve(fits: Fits, earlier: Rows, later: Rows, apart: Array) -> Curve
         size=floats(size),
         x_name="time apart",
         y_name="correlation of residuals",
-        unit=design.serial.unit,
-        note="pairs in bins of equal number; band: where a single bin lies without dependence",
-        lines={"semivariance": (floats(x), floats([np.nanmean(gamma[b]) for b in bins]))},
+        unit=unit,
+        note=note,
+        lines=lines,
     )
 
 

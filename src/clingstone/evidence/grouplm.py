@@ -12,8 +12,8 @@ from clingstone.design.response import Response
 from clingstone.display import p_value, significant
 from clingstone.evidence.anova import anova
 from clingstone.evidence.finding import About, Reading, column
-from clingstone.evidence.groups import caveats, level_name, levels, repeats
-from clingstone.evidence.read import Plain, ratio
+from clingstone.evidence.groups import AtLevels, caveats, level_name, repeats
+from clingstone.evidence.read import ratio
 from clingstone.maths.forms import Form, cells
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
@@ -25,7 +25,7 @@ if TYPE_CHECKING:
 
 
 @dataclass(frozen=True)
-class GroupLM(Plain):
+class GroupLM(AtLevels):
     """Score of the variance between groups, T = Σ_g (sum of e)²/e'e: locally best invariant.
 
     The p is exact for any unbalance and any covariates. The statistic is shown in its standardised form
@@ -42,9 +42,6 @@ class GroupLM(Plain):
     needs: Needs = field(default=Needs(frozenset({"group"}), {"groups": 2}))
     source: str = "breusch-pagan-1980"
     primary: bool = False
-
-    def abouts(self, design: Design) -> tuple[About, ...]:
-        return levels(design)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, response = fits.design, fits.response

@@ -2,13 +2,19 @@
 
 from __future__ import annotations
 
+from typing import TYPE_CHECKING
+
 import numpy as np
 
 from clingstone.design.design import Design, Term, rows_of
 from clingstone.evidence.finding import About
+from clingstone.evidence.read import Plain
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
+
+if TYPE_CHECKING:
+    from clingstone.covariance.fits import Fits
 
 BY = " by "  # "day by patient": a predictor at a level
 
@@ -47,6 +53,21 @@ def caveats(design: Design, part: Partition) -> tuple[str, ...]:
     if not design.known:
         out.append("Only residuals were given, so the degrees of freedom leave out the columns of the model.")
     return tuple(out)
+
+
+class AtLevels(Plain):
+    """A test at each group level."""
+
+    def abouts(self, design: Design) -> tuple[About, ...]:
+        return levels(design)
+
+
+class BesideOthers(AtLevels):
+    """A test at each group level, also given all else that the data can carry at once."""
+
+    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
+        key, full = f"group:{about.key}", fits.full_node
+        return (full - {key},) if key in full and len(full) > 1 else ()
 
 
 # ---- predictors at a level -----------------------------------------------------------------------------

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -13,7 +13,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import freedom, p_value, percent, percent_bounds, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.read import Plain, around, degenerate, floats
+from clingstone.evidence.read import Plain, around, by_f, degenerate, floats
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Needs, NotSupported
 from clingstone.structure.spatial import Sites
@@ -163,6 +163,22 @@ def _noncentrality(F: Array, q: int, df2: int, level: float) -> Array:
     return np.asarray((low + high) / 2)
 
 
+def added(fits: Fits, wide: Design, given: frozenset[str], caveats: tuple[str, ...]) -> Reading:
+    """F of the columns that a wider design adds, its size the share that they explain."""
+    F, q, df2 = f_test_given(fits, wide, given) if given else f_test(fits, wide)
+    estimate, low, high = explained(F, q, df2, fits.run.settings.confidence)
+    method = "F, dependence fitted without the added columns and held" if given else "exact F"
+    return replace(
+        by_f(F, q, df2, method),
+        estimate=estimate,
+        estimate_name="share of the residual variance that the added columns explain",
+        low=low,
+        high=high,
+        n_used=fits.design.n,
+        caveats=caveats,
+    )
+
+
 @dataclass(frozen=True)
 class FunctionalForm(Plain):
     """A natural cubic spline in one numeric covariate, added to the model: ordinary F, and F given V̂."""
@@ -188,23 +204,7 @@ class FunctionalForm(Plain):
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         wide = extension(fits.design, self.id, about.key)
-        F, q, df2 = f_test_given(fits, wide, given) if given else f_test(fits, wide)
-        estimate, low, high = explained(F, q, df2, fits.run.settings.confidence)
-        return Reading(
-            statistic=F,
-            statistic_name="F",
-            df=float(q),
-            df2=float(df2),
-            p=np.asarray(special.fdtrc(q, df2, F)),
-            log_p=np.asarray(stats.f.logsf(F, q, df2)),
-            p_method="F, dependence fitted without the added columns and held" if given else "exact F",
-            estimate=estimate,
-            estimate_name="share of the residual variance that the added columns explain",
-            low=low,
-            high=high,
-            n_used=fits.design.n,
-            caveats=self.caveats(bool(given), fits),
-        )
+        return added(fits, wide, given, self.caveats(bool(given), fits))
 
     def caveats(self, given: bool, fits: Fits) -> tuple[str, ...]:
         if given:

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
@@ -12,9 +12,9 @@ from clingstone.design.design import Design
 from clingstone.display import bounds, freedom, number, p_value, percent, percent_bounds, significant
 from clingstone.evidence.anova import anova, icc_interval
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.groups import caveats, level_name, levels, repeats
-from clingstone.evidence.read import Plain, around, degenerate, exceedance, floats
-from clingstone.evidence.restricted import DRAWS, null_draws
+from clingstone.evidence.groups import AtLevels, BesideOthers, caveats, level_name, levels, repeats
+from clingstone.evidence.read import Plain, around, by_f, degenerate, exceedance, floats
+from clingstone.evidence.restricted import DRAWS, null_draws, ratio, shared, spread
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
@@ -26,7 +26,7 @@ CURVE_GROUPS = 200
 
 
 @dataclass(frozen=True)
-class GroupF(Plain):
+class GroupF(BesideOthers):
     """Exact F test of group effects, its size the signed analysis-of-variance correlation.
 
     F = (SSB/r)/(SSW/(n − rank[X, Z])) with r = rank Z'MZ is F distributed under normal errors for any
@@ -43,14 +43,6 @@ class GroupF(Plain):
     source: str = "harville-fenech-1985"
     primary: bool = True
 
-    def abouts(self, design: Design) -> tuple[About, ...]:
-        return levels(design)
-
-    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
-        """All other components that the data can carry at once."""
-        key, full = f"group:{about.key}", fits.full_node
-        return (full - {key},) if key in full and len(full) > 1 else ()
-
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         if given:
             return _ratio_given(fits, f"group:{about.key}", given)
@@ -63,11 +55,7 @@ class GroupF(Plain):
         icc, words = column(reading.estimate), about.words[:1].upper() + about.words[1:]
         size = f"{number(icc, 2)}{bounds(column(reading.low), column(reading.high))}"
         if reading.statistic_name != "F":
-            return (
-                f"{words} share {percent(icc)} of what the model leaves over (restricted likelihood "
-                f"ratio {significant(column(reading.statistic))}, "
-                f"{p_value(column(reading.p))})."
-            )
+            return shared(reading, about)
         tail = (
             f"F = {significant(column(reading.statistic))} on {freedom(reading.df, reading.df2)}, "
             f"{p_value(column(reading.p))}."
@@ -89,14 +77,8 @@ def _exact(fits: Fits, part: Partition, name: str) -> Reading:
     icc, low, high = around(
         table.icc, *icc_interval(response, part, table, fits.run.settings.confidence, steps), lost
     )
-    return Reading(
-        statistic=F,
-        statistic_name="F",
-        df=float(table.df1),
-        df2=float(table.df2),
-        p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
-        log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
-        p_method="exact F, one-sided",
+    return replace(
+        by_f(F, table.df1, table.df2, "exact F, one-sided"),
         estimate=icc,
         estimate_name="intraclass correlation",
         low=low,
@@ -142,9 +124,7 @@ class SiteF(Plain):
 
 def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:
     """Restricted likelihood ratio for one variance, other components fitted in both models."""
-    wide, narrow = fits[given | {key}], fits[given]
-    statistic = np.maximum(2.0 * (wide.loglik - narrow.loglik), 0.0)
-    statistic = np.where(degenerate(fits.response), np.nan, statistic)
+    statistic, share = ratio(fits, key, given)
     p, log_p = half_mixture(statistic)
     return Reading(
         statistic=statistic,
@@ -153,7 +133,7 @@ def _ratio_given(fits: Fits, key: str, given: frozenset[str]) -> Reading:
         p=p,
         log_p=log_p,
         p_method="half-and-half chi-squared mixture (approximate)",
-        estimate=np.asarray(wide.shares()[key]),
+        estimate=share,
         estimate_name="share of the residual variance",
         n_used=fits.design.n,
         caveats=("With few groups this reference makes p too large rather than too small.",),
@@ -203,7 +183,7 @@ def group_means(fits: Fits, about: About) -> Curve | None:
 
 
 @dataclass(frozen=True)
-class IntraclassCorrelation(Plain):
+class IntraclassCorrelation(AtLevels):
     """REML intraclass correlation, tested by the restricted likelihood ratio with its exact null law.
 
     The law is that of Crainiceanu & Ruppert (2004), from 10,000 draws in the spectrum of Z'MZ. The
@@ -218,29 +198,20 @@ class IntraclassCorrelation(Plain):
     source: str = "crainiceanu-ruppert-2004"
     primary: bool = False
 
-    def abouts(self, design: Design) -> tuple[About, ...]:
-        return levels(design)
-
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, key = fits.design, f"group:{about.key}"
-        part = repeats(design, about)
-        table = anova(fits.response, part)
-        if table.df1 == 0 or table.df2 < 1:
-            raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
+        part, table = spread(fits.response, about)
         if key not in fits.components:
             refusal = fits.refused.get(key)
             reason, hint = (refusal.reason, refusal.hint) if refusal else ("no such component", "")
             raise NotSupported(reason, hint)
-        model = fits[{key}]
-        lost = degenerate(fits.response)
-        statistic = np.maximum(2.0 * (model.loglik - fits[frozenset()].loglik), 0.0)
-        statistic = np.where(lost, np.nan, statistic)
+        statistic, fitted = ratio(fits, key)
         p = exceedance(statistic, null_draws(design, part, table.df1, fits.run))
         method = f"exact law of the restricted likelihood ratio, {DRAWS:,} draws"
         steps = 46 if fits.depth == "exact" else 26
         ends = icc_interval(fits.response, part, table, fits.run.settings.confidence, steps)
         low, high = (np.maximum(end, 0.0) for end in ends)
-        share, low, high = around(np.asarray(model.shares()[key]), low, high, lost)
+        share, low, high = around(fitted, low, high, degenerate(fits.response))
         return Reading(
             statistic=statistic,
             statistic_name="restricted likelihood ratio",

@@ -6,10 +6,10 @@ from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
-from scipy import special
+from scipy import special, stats
 
 from clingstone.design.response import Response
-from clingstone.evidence.finding import About, Curve
+from clingstone.evidence.finding import About, Curve, Reading
 from clingstone.maths.forms import Form
 from clingstone.maths.once import Array
 from clingstone.maths.ratio import Tails
@@ -117,6 +117,19 @@ def holm(p: Array) -> Array:
     out = np.empty_like(table)
     np.put_along_axis(out, order, stepped, axis=0)
     return np.where(np.isnan(table), np.nan, out).reshape(p.shape)
+
+
+def by_f(F: Array, df1: float, df2: float, method: str) -> Reading:
+    """A reading by F, without its size."""
+    return Reading(
+        statistic=F,
+        statistic_name="F",
+        df=float(df1),
+        df2=float(df2),
+        p=np.asarray(special.fdtrc(df1, df2, F)),
+        log_p=np.asarray(stats.f.logsf(F, df1, df2)),
+        p_method=method,
+    )
 
 
 def floats(values: Any) -> tuple[float, ...]:

@@ -8,11 +8,12 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.display import p_value, percent, significant
-from clingstone.evidence.anova import anova
+from clingstone.evidence.anova import Anova, anova
 from clingstone.evidence.finding import About, Reading, column
-from clingstone.evidence.groups import caveats, level_name, levels, repeats
-from clingstone.evidence.read import Plain, degenerate, exceedance
+from clingstone.evidence.groups import BesideOthers, caveats, level_name, repeats
+from clingstone.evidence.read import degenerate, exceedance
 from clingstone.maths import restricted
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
@@ -26,7 +27,7 @@ DRAWS = 10_000
 
 
 @dataclass(frozen=True)
-class RestrictedLR(Plain):
+class RestrictedLR(BesideOthers):
     """Restricted likelihood ratio of the variance between the groups of one level.
 
     Alone its null law is exact by draws in the spectrum of Z'MZ (Crainiceanu & Ruppert 2004). Given other
@@ -42,23 +43,10 @@ class RestrictedLR(Plain):
     source: str = "greven-2008"
     primary: bool = False
 
-    def abouts(self, design: Design) -> tuple[About, ...]:
-        return levels(design)
-
-    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
-        """All other components that the data can carry at once."""
-        key, full = f"group:{about.key}", fits.full_node
-        return (full - {key},) if key in full and len(full) > 1 else ()
-
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, key = fits.design, f"group:{about.key}"
-        part = repeats(design, about)
-        table = anova(fits.response, part)
-        if table.df1 == 0 or table.df2 < 1:
-            raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
-        wide, narrow = fits[given | {key}], fits[given]
-        statistic = np.maximum(2.0 * (wide.loglik - narrow.loglik), 0.0)
-        statistic = np.where(degenerate(fits.response), np.nan, statistic)
+        part, table = spread(fits.response, about)
+        statistic, share = ratio(fits, key, given)
         law = null_draws(design, part, table.df1, fits.run)
         words = "exact law" if not given else "law as if the other structures were known"
         return Reading(
@@ -67,18 +55,39 @@ class RestrictedLR(Plain):
             df=1.0,
             p=exceedance(statistic, law),
             p_method=f"{words}, {len(law):,} draws",
-            estimate=np.asarray(wide.shares()[key]),
+            estimate=share,
             estimate_name="share of the residual variance",
             n_used=design.n,
             caveats=caveats(design, part),
         )
 
     def sentence(self, reading: Reading, about: About) -> str:
-        return (
-            f"{about.words[:1].upper()}{about.words[1:]} share {percent(column(reading.estimate))} of what "
-            f"the model leaves over (restricted likelihood ratio {significant(column(reading.statistic))}, "
-            f"{p_value(column(reading.p))})."
-        )
+        return shared(reading, about)
+
+
+def spread(response: Response, about: About) -> tuple[Partition, Anova]:
+    """A level and its analysis of variance. Raises NotSupported where the model leaves it no room."""
+    part = repeats(response.design, about)
+    table = anova(response, part)
+    if table.df1 == 0 or table.df2 < 1:
+        raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
+    return part, table
+
+
+def ratio(fits: Fits, key: str, given: frozenset[str] = frozenset()) -> tuple[Array, Array]:
+    """Restricted likelihood ratio (B,) of one variance beside those given, and its share."""
+    wide, narrow = fits[given | {key}], fits[given]
+    statistic = np.maximum(2.0 * (wide.loglik - narrow.loglik), 0.0)
+    return np.where(degenerate(fits.response), np.nan, statistic), np.asarray(wide.shares()[key])
+
+
+def shared(reading: Reading, about: About) -> str:
+    """What rows of one group share, with the restricted likelihood ratio that tests it."""
+    return (
+        f"{about.words[:1].upper()}{about.words[1:]} share {percent(column(reading.estimate))} of what "
+        f"the model leaves over (restricted likelihood ratio {significant(column(reading.statistic))}, "
+        f"{p_value(column(reading.p))})."
+    )
 
 
 def null_draws(design: Design, part: Partition, rank: int, run: Run, N: int = DRAWS) -> Array:

@@ -6,7 +6,7 @@ from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy import special, stats
+from scipy import special
 
 from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
@@ -23,7 +23,7 @@ from clingstone.display import (
     significant,
 )
 from clingstone.evidence.finding import About, Curve, Reading, column
-from clingstone.evidence.mean import explained, f_test, f_test_given
+from clingstone.evidence.mean import added
 from clingstone.evidence.read import (
     Plain,
     arcsine,
@@ -155,25 +155,8 @@ class Season(Plain):
 
 
 def _fixed(fits: Fits, name: str, given: frozenset[str]) -> Reading:
-    wide = with_season(fits.design, name)
-    F, q, df2 = f_test_given(fits, wide, given) if given else f_test(fits, wide)
-    estimate, low, high = explained(F, q, df2, fits.run.settings.confidence)
     caveat = "It takes the rows as independent, so dependence alone can make it reject."
-    return Reading(
-        statistic=F,
-        statistic_name="F",
-        df=float(q),
-        df2=float(df2),
-        p=np.asarray(special.fdtrc(q, df2, F)),
-        log_p=np.asarray(stats.f.logsf(F, q, df2)),
-        p_method="F, dependence fitted without the added columns and held" if given else "exact F",
-        estimate=estimate,
-        estimate_name="share of the residual variance that the added columns explain",
-        low=low,
-        high=high,
-        n_used=fits.design.n,
-        caveats=() if given else (caveat,),
-    )
+    return added(fits, with_season(fits.design, name), given, () if given else (caveat,))
 
 
 def _moving(fits: Fits, name: str) -> Reading:

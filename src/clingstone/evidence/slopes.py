@@ -2,11 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING
 
 import numpy as np
-from scipy import special, stats
+from scipy import special
 
 from clingstone.design.derived import sweep
 from clingstone.design.design import Design
@@ -15,7 +15,7 @@ from clingstone.display import bounds, decimals_for, freedom, number, p_value, s
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import BY, covariate, found, level_name, row_level
-from clingstone.evidence.read import Plain, degenerate
+from clingstone.evidence.read import Plain, by_f, degenerate
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
@@ -65,14 +65,8 @@ class SlopeVariation(Plain):
         if fits.response.B == 1:
             low, high = table.interval(fits.run.settings.confidence)
             low, high = np.minimum(low, sd), np.maximum(high, sd)
-        return Reading(
-            statistic=F,
-            statistic_name="F",
-            df=float(table.df1),
-            df2=float(table.df2),
-            p=np.asarray(special.fdtrc(table.df1, table.df2, F)),
-            log_p=np.asarray(stats.f.logsf(F, table.df1, table.df2)),
-            p_method="exact F, one-sided, group intercepts swept out",
+        return replace(
+            by_f(F, table.df1, table.df2, "exact F, one-sided, group intercepts swept out"),
             estimate=sd,
             estimate_name="standard deviation of slopes between groups",
             low=low,

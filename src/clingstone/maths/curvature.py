@@ -18,7 +18,6 @@ from clingstone.maths.once import Array
 from clingstone.maths.reference import fai_cornelius, satterthwaite
 
 STEP = 1e-3  # on working scales of order one (logarithms, atanh): differences good to about six digits
-_CORNERS = ((1, 1), (-1, -1), (1, -1), (-1, 1))
 
 
 @dataclass(frozen=True, eq=False)

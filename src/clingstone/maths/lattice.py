@@ -25,7 +25,6 @@ Places = npt.NDArray[np.int64]
 
 WIDTH = 5  # nodes of a patch along each axis
 FINER = 4  # fine nodes per coarse step
-THIN = 13  # coarse nodes an axis when there are three axes
 # A component whose absence costs less than this in −2ℓ_R is put at zero: ten times what the
 # interpolation can be wrong by.
 ABSENT = 1e-4
