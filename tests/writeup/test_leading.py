@@ -8,10 +8,12 @@ from dataclasses import replace
 
 import pytest
 
+from clingstone.demo import DEMOS
 from clingstone.display import MINUS, NBSP, shortened
 from clingstone.evidence.finding import Curve
+from clingstone.examination import examine
 from clingstone.ledger.ledger import Parameter
-from clingstone.writeup import strength
+from clingstone.writeup import bandwidths, strength
 from clingstone.writeup.leading import leading, with_most_given
 from clingstone.writeup.methods import methods_text, report_this
 from clingstone.writeup.outcome import law_words, leaning
@@ -206,3 +208,46 @@ def test_without_any_such_finding_the_item_stays_a_blank_unless_a_refit_tells_it
     (said,) = leaning(results)
     assert said == f"Largest part one cluster has in a variance ({fit.name}): 34{NBSP}% (Brook)."
     assert not any(s.blank and s.items == ("M14",) for part in sections(results) for s in part.sentences)
+
+
+# ---- bandwidths ------------------------------------------------------------------------------
+
+
+def test_standard_errors_by_lags_are_drawn_as_the_account_tells_them():
+    base = fixture.trial()
+    items = (("lags", "4"), ("standard error of arm: treated by lags", "0.71 at 0; 0.9 at 1; 8.5e-01 at 2"))
+    fit = replace(base.refits[2], account=replace(base.refits[2].account, items=items))
+    results = replace(base, refits=(*base.refits[:2], fit))
+    (plate,) = bandwidths.plates(results)
+    assert plate.caption == f"Standard error of “arm: treated” by lags: {fit.name}"
+    assert "from 0.710 at 0 to 0.900 at 1; the ordinary one is 0.710" in plate.alt
+    panel = plate.paint(660.0).axes[0]
+    told, dashed = panel.get_lines()
+    assert list(told.get_ydata()) == [0.71, 0.9, 0.85]
+    assert set(dashed.get_ydata()) == {0.71}
+    assert [t.get_text() for t in panel.get_xticklabels()] == ["0", "1", "2"]
+    assert plate.caption in report(results)
+
+
+def test_a_cutoff_keeps_its_unit_and_words_that_are_no_sweep_draw_nothing():
+    fit = fixture.wells().refits[0]
+    term = fit.intervals[-1].term
+    items = [(f"standard error of {term} at {at} km", f"{se} with 8.1 df") for at, se in ((2, 0.1), (4, 0.2))]
+    found = bandwidths.sweep(replace(fit, account=replace(fit.account, items=tuple(items))), term, 0.05)
+    assert (found.what, found.at, found.se) == ("cutoff (km)", ("2", "4"), (0.1, 0.2))
+    assert (
+        bandwidths.sweep(replace(fit, account=replace(fit.account, items=tuple(items[:1]))), term, 1) is None
+    )
+    odd = ((f"standard error of {term} by lags", "not known"),)
+    assert bandwidths.sweep(replace(fit, account=replace(fit.account, items=odd)), term, 1) is None
+
+
+def test_the_account_of_a_kernel_is_read_as_it_is_written():
+    """The words come from another room: a refit of the demonstration stream must still be read."""
+    demo = DEMOS["stream"]
+    arguments = {**demo.arguments, "rehearsal": "none"}
+    results = examine(str(demo.path), **arguments).results
+    (plate,) = bandwidths.plates(results)
+    assert plate.name == "bandwidths-hac"
+    assert len(plate.table.rows) >= 6
+    assert [r[0].text for r in plate.table.rows[:3]] == ["0", "1", "2"]

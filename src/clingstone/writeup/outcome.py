@@ -245,7 +245,11 @@ def _without_each(results: Results, curve: Curve) -> str:
 
 
 def sensitivity(results: Results) -> Iterable[Sentence]:
-    """The other refits for every focus row, other conventions, and where a result would turn."""
+    """Single groups, the other refits for every focus row, other conventions, where a result would turn."""
+    if results.case.group:
+        leans = [Sentence(words, ("M14",)) for words in leaning(results)]
+        blank = Sentence("[how much the result leans on single groups: to be filled in]", ("M14",), True)
+        yield from leans or [blank]
     best, level = advised(results), level_percent(results)
     names = served(results)
     for name in names[:SPOKEN]:

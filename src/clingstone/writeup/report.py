@@ -13,7 +13,7 @@ from clingstone.display import Table, clean, count, sentence, significant
 from clingstone.evidence.finding import Finding
 from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
-from clingstone.writeup import curves, figures, rehearsed, tables
+from clingstone.writeup import bandwidths, curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import cite, references_of, with_source
 from clingstone.writeup.leading import STRUCTURES, leading, with_most_given
 from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
@@ -80,6 +80,7 @@ def report(results: Results) -> str:
     view["conventions"] = [
         _table(t) for n in focus_rows(results)[: figures.PANELS] if (t := tables.conventions(results, n))
     ]
+    view["bandwidths"] = [_plate(p) for p in bandwidths.plates(results)]
     rows = [(item, asks, where) for item, asks, where in checklist(results)]
     view["checklist"] = _table(_plain("Reporting items", ("item", "asks for", "answered under"), rows))
     return _environment().get_template("report.html.j2").render(view)

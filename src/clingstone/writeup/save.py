@@ -13,7 +13,7 @@ from pathlib import Path
 from clingstone.needs import InputError
 from clingstone.results import Results, to_json
 from clingstone.run import Progress
-from clingstone.writeup import curves, figures, rehearsed, tables
+from clingstone.writeup import bandwidths, curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import bibtex
 from clingstone.writeup.methods import methods_text
 from clingstone.writeup.panels import tree
@@ -66,7 +66,7 @@ def plates(results: Results) -> tuple[Plate, ...]:
         tree(results),
     )
     lead = [p for p in drawn if p is not None]
-    return (*lead, *curves.plates(results))
+    return (*lead, *bandwidths.plates(results), *curves.plates(results))
 
 
 def _steps(results: Results) -> list[tuple[str, Callable[[Path], None]]]:

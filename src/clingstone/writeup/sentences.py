@@ -26,7 +26,7 @@ from clingstone.results import Results
 from clingstone.writeup import strength
 from clingstone.writeup.items import ITEMS, Section, Sentence
 from clingstone.writeup.naming import groups_of, label_of, lost, noun, noun_at, subject
-from clingstone.writeup.outcome import cautions, checks, estimates, leaning, sensitivity, software
+from clingstone.writeup.outcome import cautions, checks, estimates, sensitivity, software
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import level_percent
 
@@ -74,10 +74,6 @@ def design(results: Results) -> Iterable[Sentence]:
     if case.group:
         yield Sentence(_groups_words(results), ("M2", "M3"))
         yield from _effective(results)
-        leans = [Sentence(words, ("M14",)) for words in leaning(results)]
-        yield from leans
-        if not leans:
-            yield Sentence("[how much the result leans on single groups: to be filled in]", ("M14",), True)
     yield from _order_and_place(results)
     yield from _assignment(results)
 
