@@ -59,7 +59,7 @@ def test_few_groups_and_a_group_level_focus():
         ({"groups": 60, "effective_clusters": 45.0}, "cluster-robust"),
         ({"groups": 60, "effective_clusters": 6.0}, "mixed-intercept"),
         ({"focus_at_group_level": False}, "cluster-robust"),
-        ({"focus_at_group_level": False, "effective_clusters": 4.0}, "mixed-intercept"),
+        ({"focus_at_group_level": False, "effective_clusters": 4.0}, "cluster-robust"),
     ],
 )
 def test_which_group_remedy(values, remedy):
@@ -75,8 +75,27 @@ def test_which_group_remedy(values, remedy):
             "ar1",
             "supported with caveat",
         ),
-        ({"rows_in_the_longest_series": 400, "series": 1, "regular_times": True}, "hac", "supported"),
-        ({"rows_in_the_longest_series": 400, "series": 1, "regular_times": False}, "ar1", "supported"),
+        ({"rows_in_the_longest_series": 400, "series": 1, "regular_times": True}, "ar1", "supported"),
+        (
+            {
+                "rows_in_the_longest_series": 400,
+                "series": 1,
+                "regular_times": True,
+                "focus_smooth_in_time": True,
+            },
+            "hac",
+            "supported",
+        ),
+        (
+            {
+                "rows_in_the_longest_series": 70,
+                "series": 1,
+                "regular_times": True,
+                "first_order_does_not_fit": True,
+            },
+            "hac",
+            "supported",
+        ),
     ],
 )
 def test_one_series(values, remedy, state):

@@ -34,6 +34,7 @@ LATE = {
     "name of the widest second opinion",
     "term of the widest second opinion",
     "another order fits better",
+    "randomisation stands beside",
     "slope model settled",
     "mixed refit at its bound",
 }

@@ -1,4 +1,4 @@
-"""The second half of the rule table: what lowers the state, and what only warns."""
+"""The last part of the rule table: what lowers the state, and what only warns."""
 
 from __future__ import annotations
 
@@ -37,10 +37,10 @@ CAVEATS = (
         "strong",
     ),
     Rule(
-        "mean-alone",
-        fact("curve under dependence") & ~SHOWN,
+        "curve-perhaps",
+        fact("curve under dependence") & ~SHOWN & (fact("p of the missing part") >= 0.01),
         Then("caution"),
-        "A {missing part of the mean} seems to be missing from the model: look at it before the intervals.",
+        "A {missing part of the mean} may be missing from the model: look at it before the intervals.",
         "ramsey-1969, stone-koo-1985",
         "strong",
     ),
@@ -164,7 +164,7 @@ CAVEATS = (
     ),
     Rule(
         "second-opinion-wider",
-        GROUP & (fact("widest second opinion") > 1.3),
+        GROUP & (fact("widest second opinion") > 1.25),
         Then("caution"),
         "{name of the widest second opinion} gives {term of the widest second opinion} an interval {widest "
         "second opinion} times as wide as the advised one.",
@@ -182,12 +182,63 @@ CAVEATS = (
     ),
     Rule(
         "another-order",
-        SERIAL & fact("another order fits better"),
-        Then("caution"),
-        "Errors along time of another order than the first fit these data better; the refit with ARMA errors "
-        "stands beside the advised one.",
-        "hurvich-tsai-1989",
+        SERIAL
+        & fact("advised refit models the order in time")
+        & (fact("another order fits better") | fact("first order does not fit")),
+        Then("caveat"),
+        "Errors along time do not fade geometrically: what a first-order correlation leaves over is "
+        "correlated still ({sign against the first order}), or another order fits better. Compare the refit "
+        "with ARMA errors or the long-run variance.",
+        "ansley-1979, hurvich-tsai-1989",
         "moderate",
+    ),
+    Rule(
+        "may-be-a-random-walk",
+        SERIAL & fact("may be a random walk"),
+        Then("caution"),
+        "The interval of the correlation along time takes in a random walk: consider changes from step to "
+        "step.",
+        "andrews-1993",
+        "moderate",
+    ),
+    Rule(
+        "earlier-response",
+        SERIAL & fact("earlier response in the model"),
+        Then("caveat"),
+        "{name of the earlier response} is the response of an earlier row: with errors that are correlated "
+        "along time its coefficient is biased. Add further lags until none is left.",
+        "godfrey-1978",
+        "strong",
+    ),
+    Rule(
+        "break-in-time",
+        SERIAL & fact("break in time"),
+        Then("caution"),
+        "The level of the residuals seems to change at one time, also with the order in time taken into "
+        "account.",
+        "andrews-1993",
+        "moderate",
+    ),
+    Rule(
+        "crossed-few-groups",
+        GROUP & (fact("crossed levels to cover") >= 2) & (fact("groups of the smallest crossed level") < 25),
+        Then("caveat"),
+        "{crossed levels} cross, and the smallest has {groups of the smallest crossed level} groups: an "
+        "interval that covers both ways at once is rough.",
+        "cameron-gelbach-miller-2011",
+        "convention",
+    ),
+    Rule(
+        "randomisation-beside",
+        GROUP
+        & fact("assigned or sampled by group")
+        & ((fact("groups") < 12) | (fact("groups in the smaller arm") <= 5))
+        & fact("randomisation stands beside"),
+        Then("caution"),
+        "The level was assigned and its groups are few: the randomisation test, which stands beside, rests "
+        "on the assignment alone.",
+        "rosenbaum-2002, mackinnon-webb-2018",
+        "strong",
     ),
     Rule(
         "common-shocks",
@@ -218,9 +269,9 @@ CAVEATS = (
     Rule(
         "between-differs",
         GROUP & fact("between differs from within"),
-        Then("caution"),
+        Then("caveat"),
         "Within groups and between groups {term that differs} goes with the response differently: the pooled "
-        "coefficient mixes two effects. Consider reporting both, as a refit within and between groups does.",
+        "coefficient mixes two effects. The refit within and between groups reports both.",
         "mundlak-1978, bell-jones-2015, bell-2019",
         "strong",
     ),

@@ -9,7 +9,7 @@ from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, 
 from clingstone.advice.facts import Facts
 from clingstone.advice.pick import covers, pick, rank, same, serves
 from clingstone.advice.refitted import advised_facts, compared, find
-from clingstone.advice.rules import CAVEATS, NO_REMEDY, STATES, Rule
+from clingstone.advice.rules import CAVEATS, NO_REMEDY, NOTHING, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.advice.structures import FAMILIES, covered, families, needed
 from clingstone.remedies.gls import TOGETHER
@@ -29,7 +29,8 @@ __all__ = [
     "shortlist_for",
 ]
 
-MEAN = ("mean-first", "mean-then-dependence")
+APART = ("within-between", "fixed-effects")  # tell an effect within groups from one between them
+MEAN = ("mean-first", "mean-then-dependence", "mean-alone")
 
 
 def settle(
@@ -51,7 +52,7 @@ def settle(
         facts = here = compared(facts, refits)
         chosen, rule = pick(facts, refits, scores, shortlist.reached, shortlist.twins)
         if chosen is None:
-            state_rule = NO_REMEDY
+            state_rule = NO_REMEDY if needed(facts.ledger) else NOTHING
     need = needed(here.ledger)
     known = {} if state == "mean first" else shortlist.reached
     here = here.plus(advised_facts(here, refits, chosen, need, known))
@@ -125,8 +126,6 @@ def _beside(state_rule: Rule | None, facts: Facts) -> list[Rule]:
     beside = [r for r in CAVEATS if bool(r.when.read(facts))]
     if state_rule is not None and state_rule.then.what != "mean first":
         beside = [r for r in beside if (r.then.kind == "caution" or r.id in ALWAYS) and r.id != LAST]
-    if state_rule is not None and state_rule.id in MEAN:
-        beside = [r for r in beside if r.id != "mean-alone"]
     return sorted(beside, key=lambda r: (r.id == LAST, ORDERED[r.then.kind], STRENGTHS.index(r.strength)))
 
 
@@ -195,10 +194,11 @@ def _headline(
         float(facts[name].value) if name in facts else default
         for name, default in (("rows in the longest series", math.inf), ("range over extent", 0.0))
     )
-    about = say.dependence(ledger, rows, over)
+    about = say.dependence(ledger, rows, over) or say.unequal(facts)
     if state == "not correctable" and rule is not None:
-        return f"{about} These data cannot carry a correction: {_lower(say.filled(rule.because, facts))}"
-    return f"{about} {moved}".strip()
+        why = f"These data cannot carry a correction: {_lower(say.filled(rule.because, facts))}"
+        return " ".join(part for part in (about, why, *say.doubts(facts)) if part)
+    return " ".join(part for part in (about, moved, *say.doubts(facts)) if part)
 
 
 def _lower(text: str) -> str:
@@ -224,19 +224,26 @@ def _alternatives(
 ) -> tuple[Choice, ...]:
     """Refits that cover what has to be covered; with nothing to cover, every correction by the design.
 
-    The repaired mean first, where a part seems to be missing; then the simpler ones first. Of refits
-    with the same numbers one stands for all.
+    The repaired mean first, where a part seems to be missing; then, where groups differ otherwise than
+    their rows do, the refits that tell the two apart; then the simpler ones first. Of refits with the
+    same numbers one stands for all.
     """
     whole, need = shortlist.facts, needed(shortlist.facts.ledger)
     made = {(r.remedy, r.at): r for r in refits}
     kept: list[Refit] = [advised] if advised is not None else []
     out = []
-    for choice in sorted(shortlist.candidates, key=lambda c: (c.remedy != REPAIRED, rank(c.remedy))):
+    apart = APART if whole.says("between differs from within") else ()
+    order = (REPAIRED, *apart)
+    ranked = sorted(
+        shortlist.candidates,
+        key=lambda c: (order.index(c.remedy) if c.remedy in order else len(order), rank(c.remedy)),
+    )
+    for choice in ranked:
         fit = made.get((choice.remedy, choice.at))
         if fit is None or fit is advised or choice.remedy == "ordinary":
             continue
         enough = bool(need or fit.covers) and need <= covers(fit, whole, shortlist.reached)
-        if choice.remedy != REPAIRED and not (enough and serves(fit, whole, every=False)):
+        if choice.remedy not in order and not (enough and serves(fit, whole, every=False)):
             continue
         if any(same(fit, other) for other in kept):
             continue
@@ -253,6 +260,12 @@ def _refused(
         (c.remedy, "it could not be fitted to these data", "")
         for c in shortlist.candidates
         if c.remedy not in made
+    ]
+    lost += [
+        (f.remedy, f"{row.term}: {row.status.removeprefix('unusable: ')}", "")
+        for f in refits
+        for row in f.intervals
+        if row.term in facts.focus and row.status.startswith("unusable")
     ]
     first = []
     if rule is not None and rule.then.needed:

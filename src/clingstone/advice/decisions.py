@@ -1,140 +1,43 @@
-"""The first half of the rule table: states that come before any remedy, and which remedy is preferred."""
+"""Which remedy is preferred: the second part of the rule table, the first that holds and could be fitted."""
 
 from __future__ import annotations
 
 from clingstone.advice.expressions import fact
-from clingstone.advice.rule import ANY, GROUP, KNOWN, SERIAL, SHOWN, SPATIAL, Rule, Then
-
-# ---- states that come before any remedy --------------------------------------------------------
-
-STATES = (
-    Rule(
-        "nothing-left",
-        fact("nothing left over"),
-        Then("state", "not correctable", needed="a model that leaves something over"),
-        "The model fits every row exactly: look for the response, or a copy of it, among the predictors.",
-        "own",
-        "strong",
-    ),
-    Rule(
-        "residuals-alone",
-        ~KNOWN & SHOWN,
-        Then("state", "not correctable", needed="the data and the model formula, not residuals alone"),
-        "Something hangs together, but from residuals alone no interval can be recomputed.",
-        "own",
-        "strong",
-    ),
-    Rule(
-        "mean-first",
-        fact("curve under dependence")
-        & fact("dependence goes with the mean")
-        & ~fact("dependence stays with the mean")
-        & ~fact("dependence appears with the mean"),
-        Then("state", "mean first"),
-        "A {missing part of the mean} explains what looked like dependence ({sign of the missing part}).",
-        "mizon-1995, mcmillen-2003, florax-de-graaff-2004",
-        "strong",
-    ),
-    Rule(
-        "mean-then-dependence",
-        fact("curve under dependence")
-        & (fact("dependence goes with the mean") | fact("dependence appears with the mean")),
-        Then("state", "mean first"),
-        "A {missing part of the mean} changes what the dependence looks like ({sign of the missing part}): "
-        "mend the mean first, then correct for what stays.",
-        "mizon-1995, mcmillen-2003, yue-2002",
-        "strong",
-    ),
-    Rule(
-        "nothing-to-cover",
-        ~ANY | (~KNOWN & ~SHOWN),
-        Then("state", "nothing found"),
-        "No structure was found, and none whose interval still leaves room to move a focus interval.",
-        "own",
-        "strong",
-    ),
-    Rule(
-        "two-treated-groups",
-        GROUP
-        & fact("focus at group level")
-        & (fact("groups in the smaller arm") < 3)
-        & ~fact("assignment can be redrawn"),
-        Then(
-            "state",
-            "not correctable",
-            needed="at least 3 and better 6 groups in each arm, or a randomisation test of the assignment",
-        ),
-        "Only {groups in the smaller arm} of {groups} groups carry {term of the smaller arm}: no standard "
-        "error can be trusted for it.",
-        "mackinnon-webb-2017, mackinnon-webb-2018",
-        "strong",
-    ),
-    Rule(
-        "too-few-groups",
-        GROUP & fact("focus at group level") & (fact("groups") < 5),
-        Then("state", "not correctable", needed="at least 5 groups, better 10 or more"),
-        "{groups} groups are too few to size the variation between groups, and a focus term varies only "
-        "between them.",
-        "leyrat-2018, mcneish-stapleton-2016",
-        "strong",
-    ),
-    Rule(
-        "groups-as-factor",
-        GROUP & ~fact("focus at group level") & (fact("groups") < 5),
-        Then(
-            "state", "not correctable", needed="the groups as a factor in the model, which then carries them"
-        ),
-        "{groups} groups are too few for any correction between them; as a factor in the model they need "
-        "none.",
-        "gomes-2022, oberpriller-2021",
-        "moderate",
-    ),
-    Rule(
-        "series-too-short",
-        SERIAL & ~fact("serial estimable") & ~fact("series can be clusters"),
-        Then("state", "not correctable", needed="one series of 20 times, or 8 series of 5"),
-        "The longest series has {rows in the longest series} rows: too short to size the dependence in time, "
-        "and the series are too few to be clusters.",
-        "park-mitchell-1980, krone-2016",
-        "strong",
-    ),
-    Rule(
-        "sites-too-few",
-        SPATIAL & ~fact("spatial estimable"),
-        Then("state", "not correctable", needed="20 distinct sites, better 50"),
-        "{sites} distinct sites are too few to size a dependence that fades with distance.",
-        "webster-oliver-2007",
-        "moderate",
-    ),
-    Rule(
-        "range-too-long",
-        SPATIAL & fact("spatial present") & (fact("range over extent") >= 0.5),
-        Then(
-            "state",
-            "not correctable",
-            needed="sites over an area at least twice as wide as the range, or a predictor that varies "
-            "at shorter distances",
-        ),
-        "The dependence reaches {range over extent} of the map's width: the map holds hardly more than one "
-        "independent place.",
-        "muller-watson-2022, bester-conley-hansen-2011",
-        "strong",
-    ),
-)
-
-# Speaks when no refit covers what has to be covered; settle() names it, no fact does.
-NO_REMEDY = Rule(
-    "no-remedy-covers",
-    ANY & ~fact("some refit covers it"),
-    Then("state", "not correctable", needed="more groups, longer series or more sites, as the refusals say"),
-    "No correction that these data can carry covers {names to cover}.",
-    "own",
-    "strong",
-)
-
-# ---- which remedy, the first that holds and could be fitted ----------------------------------------
+from clingstone.advice.rule import ANY, GROUP, SERIAL, SLOPES, SPATIAL, SPREAD, Rule, Then
 
 PREFER = (
+    Rule(
+        "slopes-alone",
+        ~ANY & SLOPES & (fact("df of the robust refit") >= 4),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
+        "Slopes of {name of the slope} differ between groups, which makes the rows of a group go together "
+        "where the slope is in question: the robust covariance allows for it.",
+        "barr-2013, bell-2019",
+        "strong",
+    ),
+    Rule(
+        "spread-alone",
+        ~ANY & SPREAD,
+        Then("prefer", "heteroscedasticity-robust", firm=True),
+        "The residuals spread unequally with {what the spread goes with}, and nothing else has to be "
+        "covered: a covariance that gives every row its own variance is enough.",
+        "white-1980, mackinnon-white-1985",
+        "strong",
+    ),
+    Rule(
+        "spread-in-groups",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & SPREAD
+        & ~fact("focus at group level")
+        & (fact("df of the robust refit") >= 4),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
+        "The residuals spread unequally with {what the spread goes with}; the robust covariance allows for "
+        "that and for rows of a group that go together.",
+        "white-1980, cameron-miller-2015",
+        "strong",
+    ),
     Rule(
         "few-treated-by-lot",
         GROUP
@@ -159,6 +62,20 @@ PREFER = (
         "{groups} groups with at most {rows in the longest series} times each: rows of a group may depend on "
         "each other in any way, in time as well, and the robust covariance carries it.",
         "hansen-2007, kezdi-2003, bertrand-2004",
+        "strong",
+    ),
+    Rule(
+        "few-groups-in-time",
+        GROUP
+        & SERIAL
+        & ~SPATIAL
+        & fact("series within groups")
+        & fact("focus at group level")
+        & (fact("groups") < 20),
+        Then("prefer", "group-means", at="group level"),
+        "A focus term varies only between {groups} groups: a regression of their means needs to know nothing "
+        "of the order in time within them.",
+        "leyrat-2018, bertrand-2004",
         "strong",
     ),
     Rule(
@@ -283,7 +200,11 @@ PREFER = (
     ),
     Rule(
         "within-focus",
-        GROUP & ~SERIAL & ~SPATIAL & ~fact("focus at group level") & (fact("effective clusters") >= 10),
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & ~fact("focus at group level")
+        & ((fact("effective clusters") >= 10) | (fact("df of the robust refit") >= 4)),
         Then("prefer", "cluster-robust", at="group level"),
         "The focus terms vary within groups, where their slopes may differ from group to group: the robust "
         "covariance allows for that, a plain random intercept does not.",
@@ -315,20 +236,69 @@ PREFER = (
         "strong",
     ),
     Rule(
-        "long-regular-series",
-        SERIAL & ~GROUP & ~SPATIAL & (fact("rows in the longest series") >= 200) & fact("regular times"),
-        Then("prefer", "hac"),
-        "{rows in the longest series} equally spaced rows: the long-run variance can be estimated without a "
-        "model of the dependence.",
+        "common-shocks-in-time",
+        SERIAL
+        & ~GROUP
+        & ~SPATIAL
+        & fact("common shocks in time")
+        & (fact("periods") >= 20)
+        & fact("focus varies over time"),
+        Then("prefer", "panel-hac"),
+        "Different series move together at one time, over {periods} times: only the sums over all series at "
+        "a time are taken as a series of their own.",
+        "driscoll-kraay-1998, vogelsang-2012",
+        "moderate",
+    ),
+    Rule(
+        "irregular-times",
+        SERIAL & ~GROUP & ~SPATIAL & (~fact("regular times") | fact("times shared")),
+        Then("prefer", "car1"),
+        "The times are spaced unequally or shared by rows: a correlation that fades with elapsed time takes "
+        "them as they are.",
+        "jones-1980",
+        "strong",
+    ),
+    Rule(
+        "another-order-in-time",
+        SERIAL
+        & ~GROUP
+        & ~SPATIAL
+        & (fact("rows in the longest series") >= 60)
+        & (fact("first order does not fit") | fact("another order fits better") | SPREAD),
+        Then("prefer", "hac", firm=True),
+        "A correlation that fades geometrically does not fit these errors, or their spread changes: the "
+        "long-run variance is estimated without a model of the dependence.",
         "lazarus-2018, kiefer-vogelsang-2005",
         "strong",
+    ),
+    Rule(
+        "smooth-focus-in-time",
+        SERIAL
+        & ~GROUP
+        & ~SPATIAL
+        & (fact("rows in the longest series") >= 100)
+        & fact("regular times")
+        & fact("focus smooth in time"),
+        Then("prefer", "hac"),
+        "The focus terms run smoothly along time, where a model of the errors gains nothing and misleads if "
+        "it is wrong; {rows in the longest series} rows give the long-run variance without one.",
+        "lazarus-2018, kiefer-vogelsang-2005",
+        "moderate",
+    ),
+    Rule(
+        "another-short-order",
+        SERIAL & ~GROUP & ~SPATIAL & fact("another order fits better"),
+        Then("prefer", "arma"),
+        "Errors along time of another order than the first fit these data better.",
+        "ansley-1979, hurvich-tsai-1989",
+        "moderate",
     ),
     Rule(
         "serial-model",
         SERIAL & ~GROUP & ~SPATIAL,
         Then("prefer", "ar1"),
-        "{rows in the longest series} rows in the longest series: with so few, a model of the dependence "
-        "does better than a long-run variance.",
+        "A correlation that fades geometrically fits the {rows in the longest series} rows of the longest "
+        "series, and a model that fits gives the shorter interval.",
         "park-mitchell-1980, lazarus-2018",
         "moderate",
     ),

@@ -7,15 +7,19 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from clingstone.advice.groups import group_facts
+from clingstone.advice.groups import columns, group_facts
 from clingstone.advice.mean import Missing, missing_part
 from clingstone.advice.named import Fact, named, words, yes
+from clingstone.advice.order import order_facts
+from clingstone.advice.smooth import along_time
 from clingstone.advice.structures import FAMILIES, covered
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, percent
-from clingstone.evidence.finding import Evidence
-from clingstone.ledger.ledger import Ledger, focus_rows
+from clingstone.evidence.finding import Evidence, Finding
+from clingstone.evidence.groups import BY
+from clingstone.ledger.ledger import Ledger, focus_rows, focus_terms
+from clingstone.ledger.standing import LEVEL
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits
 from clingstone.run import Settings
@@ -92,6 +96,7 @@ def _facts(
         *structure_facts(ledger),
         *_design_facts(design, ledger, fits.run.limits),
         *group_facts(design, fits, ledger),
+        *order_facts(fits),
         *_spatial_facts(design, ledger),
         *_consequence_facts(ledger, focus, settings.material),
         *_evidence_facts(evidence),
@@ -145,6 +150,8 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             named("rows in the longest series", longest),
             named("series", number),
             yes("serial estimable", enough, "the series are long or many enough for a correlation in time"),
+            yes("times shared", bool(series.ties), "rows of one series share a time"),
+            *_periods(design, series),
             yes("regular times", series.spacing != "irregular", f"spacing of the times: {series.spacing}"),
             words("series level", _named(design, series)),
         ]
@@ -162,6 +169,24 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
         ]
     return out
+
+
+def _periods(design: Design, series: Series) -> list[Fact]:
+    """How many times there are, and how the focus terms run along them."""
+    if not design.known:
+        return []
+    times, at = np.unique(series.elapsed, return_inverse=True)
+    X = np.column_stack([columns(design, t) for t in focus_terms(design)])
+    X = X[:, np.ptp(X, axis=0) > 0]
+    first = np.full(len(times), -1)
+    first[at[::-1]] = np.arange(design.n)[::-1]
+    moves = bool(np.any(np.ptp(X[first], axis=0) > 0)) if X.size else False
+    smooth = bool(X.size) and all(along_time(series, x) for x in X.T)
+    return [
+        named("periods", len(times)),
+        yes("focus varies over time", moves, "a focus term varies from time to time"),
+        yes("focus smooth in time", smooth, "every focus term runs smoothly along time"),
+    ]
 
 
 def _named(design: Design, series: Series) -> str:
@@ -218,16 +243,53 @@ def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[f
 
 
 def _evidence_facts(evidence: Evidence) -> list[Fact]:
-    pairs = {
-        "unequal variances": "heteroscedasticity",
-        "outlying rows": "outliers",
-        "common shocks": "common-shocks",
-    }
-    out = []
+    pairs = {"outlying rows": "outliers", "common shocks": "common-shocks"}
+    out = [*_spread_facts(evidence), *_slope_facts(evidence), *_clock_facts(evidence)]
     for name, test in pairs.items():
         finding = evidence.get(test)
         if finding is not None and finding.verdict != "not applicable":
             out.append(yes(name, finding.verdict == "present", finding.sentence))
+    return out
+
+
+def _told(evidence: Evidence, test: str) -> tuple[list[Finding], Finding | None]:
+    """The readings of a test with a p, and the clearest where its p times their number is below 0.05."""
+    found = [f for f in evidence if f.test == test and np.isfinite(f.p)]
+    best = min(found, key=lambda f: f.p, default=None)
+    return found, best if best is not None and best.p * len(found) < LEVEL else None
+
+
+def _spread_facts(evidence: Evidence) -> list[Fact]:
+    found, best = _told(evidence, "heteroscedasticity")
+    if not found:
+        return []
+    said = best.sentence if best is not None else found[0].sentence
+    where = best.about_words if best is not None else ""
+    return [yes("unequal variances", best is not None, said), words("what the spread goes with", where)]
+
+
+def _slope_facts(evidence: Evidence) -> list[Fact]:
+    found, best = _told(evidence, "slope-variation")
+    if not found:
+        return []
+    name, _, level = best.about.rpartition(BY) if best is not None else ("", "", "")
+    said = best.sentence if best is not None else "no slope is seen to differ between groups"
+    return [
+        yes("slopes differ", best is not None, said),
+        words("name of the slope", name),
+        words("level of the slopes", level),
+    ]
+
+
+def _clock_facts(evidence: Evidence) -> list[Fact]:
+    """What tests of time say once the order in time is fitted, and a correlation that may be one."""
+    out = []
+    for name, test in (("common shocks in time", "common-shocks"), ("break in time", "break")):
+        found = [f for f in evidence if f.test == test and f.given and np.isfinite(f.p)]
+        if found:
+            out.append(yes(name, found[0].p < LEVEL, found[0].sentence))
+    walks = any("takes in a random walk" in c for f in evidence.of("serial") for c in f.caveats)
+    out.append(yes("may be a random walk", walks, "the interval of the correlation takes in a random walk"))
     return out
 
 
@@ -246,6 +308,7 @@ def mean_facts(missing: Missing | None) -> list[Fact]:
             for verb, names in moves.items()
         ),
         yes("mean in doubt", missing.doubt, missing.left),
+        named("p of the missing part", missing.p),
         words("missing part of the mean", missing.what),
         words("sign of the missing part", missing.sign),
         words("dependence left", missing.left),

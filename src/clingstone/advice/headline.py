@@ -24,6 +24,28 @@ def dependence(ledger: Ledger, rows: float = np.inf, over: float = 0.0) -> str:
     return " ".join(_sentence(ledger, s, rows, over) for s in chosen)
 
 
+def unequal(facts: Facts) -> str:
+    """What has to be allowed for where no dependence has: slopes that differ, or unequal spread."""
+    if facts.says("slopes differ"):
+        what = f"slopes of {facts.text('name of the slope')} differ between groups"
+    elif facts.says("unequal variances"):
+        what = f"the residuals spread unequally with {facts.text('what the spread goes with')}"
+    else:
+        return ""
+    return f"No dependence between rows was detected that could widen a focus interval, but {what}."
+
+
+def doubts(facts: Facts) -> list[str]:
+    """What a reader of the headline alone should know before the interval is used."""
+    out = []
+    if facts.says("group to cover") and facts.says("between differs from within"):
+        out.append(f"The pooled coefficient of {_named(facts.text('term that differs'))} mixes two effects, ")
+        out[-1] += "one within groups and one between them."
+    if facts.says("mean in doubt"):
+        out.append(f"A {facts.text('missing part of the mean')} could explain the same pattern.")
+    return out
+
+
 def _share(ledger: Ledger, standing: Standing) -> float:
     share = ledger.share(standing.key)
     return share.share if share is not None else -1.0

@@ -6,6 +6,7 @@ from dataclasses import dataclass, field, replace
 
 import numpy as np
 
+from clingstone.advice.smooth import smooth_in
 from clingstone.advice.structures import subject
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
@@ -14,13 +15,14 @@ from clingstone.evidence import TESTS
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.evidence.mean import extension
+from clingstone.evidence.season import cycles, with_season
 from clingstone.ledger.ledger import Ledger, Standing, focus_rows, focus_terms, judged
 from clingstone.ledger.standing import LEVEL
-from clingstone.needs import NotSupported
+from clingstone.needs import Family, NotSupported
 
 # A smooth mean over time or place and a smooth error are one picture: such a part is never declared
-# the winner over dependence, only shown beside it.
-SMOOTH = {"trend": "serial", "trend-surface": "spatial"}
+# the winner over dependence, only shown beside it; nor is a curve in a covariate that runs as smoothly.
+SMOOTH: dict[str, Family] = {"trend": "serial", "trend-surface": "spatial", "season": "serial"}
 CURVE = "functional-form"
 AGAIN = (
     "heteroscedasticity",
@@ -37,7 +39,8 @@ class Missing:
     goes : structures that were present and are no longer seen, half of their share or more gone.
     stays : the other ones that were present. appears : those seen only with the part in.
     doubt : these data cannot tell the mean from dependence, or what is no longer seen could still
-    widen a focus interval. sign, left : how clearly the part shows, and what is left of the
+    widen a focus interval. p : of the test that saw it, adjusted where it is. sign, left : how clearly
+    the part shows, and what is left of the
     dependence, as half sentences. after : the ledger of the model with the part in; evidence and
     again : what it was judged by, live.
     """
@@ -50,6 +53,7 @@ class Missing:
     stays: tuple[str, ...] = ()
     appears: tuple[str, ...] = ()
     doubt: bool = False
+    p: float = float("nan")
     sign: str = ""
     left: str = ""
     after: Ledger | None = field(default=None, compare=False, repr=False)
@@ -64,12 +68,12 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     next to no power there, is looked at when it shows in the ordinary fit and its structure is
     present; it counts only when it takes at least half of that structure away.
     """
-    curve = _curve(evidence)
+    curve = _curve(evidence, fits.design)
     if curve is not None:
         found = _try(fits, curve, ledger)
         if found is not None:
             return found
-    for finding in _smooth(evidence, ledger):
+    for finding in _smooth(evidence, ledger, fits.design):
         found = _try(fits, finding, ledger)
         if found is not None and found.doubt:
             return found
@@ -80,9 +84,10 @@ def _adjusted(finding: Finding) -> float:
     return finding.p if finding.p_adjusted is None else finding.p_adjusted
 
 
-def _curve(evidence: Evidence) -> Finding | None:
+def _curve(evidence: Evidence, design: Design) -> Finding | None:
     """The clearest curve: given the dependence where it was so tested, Holm over covariates."""
     found = [f for f in evidence.of("mean") if f.test == CURVE and np.isfinite(f.p)]
+    found = [f for f in found if smooth_in(design, f.about) is None]
     given = [f for f in found if f.given]
     found = given or found
     if not found:
@@ -92,14 +97,34 @@ def _curve(evidence: Evidence) -> Finding | None:
     return best if p < LEVEL else None
 
 
-def _smooth(evidence: Evidence, ledger: Ledger) -> list[Finding]:
+def _family(finding: Finding, design: Design) -> Family | None:
+    """The structure that a part of the mean can be mistaken for."""
+    return smooth_in(design, finding.about) if finding.test == CURVE else SMOOTH.get(finding.test)
+
+
+def _smooth(evidence: Evidence, ledger: Ledger, design: Design) -> list[Finding]:
     families = {s.structure for s in ledger.standing if s.verdict == "present"}
     found = [
         f
         for f in evidence.of("mean")
-        if SMOOTH.get(f.test) in families and not f.given and np.isfinite(f.p) and f.p < LEVEL
+        if np.isfinite(f.p)
+        and f.p < LEVEL
+        and (_fixed_season(f, design) if f.test == "season" else not f.given)
+        and _family(f, design) in families
     ]
     return sorted(found, key=lambda f: f.p)
+
+
+def _fixed_season(finding: Finding, design: Design) -> bool:
+    """A fixed pattern that shows given the dependence; one of unknown period is not put into a model."""
+    assert design.serial is not None
+    return bool(finding.given) and finding.about in dict(cycles(design.serial))
+
+
+def _extension(design: Design, finding: Finding) -> Design:
+    if finding.test == "season":
+        return with_season(design, finding.about)
+    return extension(design, finding.test, finding.about)
 
 
 # ---- with the part in the model ------------------------------------------------------------------
@@ -108,7 +133,7 @@ def _smooth(evidence: Evidence, ledger: Ledger) -> list[Finding]:
 def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
     """Add the part and judge every structure again; None when the model cannot carry it."""
     try:
-        again = fits.onto(_focused(extension(fits.design, finding.test, finding.about), fits.design))
+        again = fits.onto(_focused(_extension(fits.design, finding), fits.design))
         tests = tuple(t for t in TESTS if t.primary or t.id in AGAIN)
         evidence = gather(again, tests)
         after = judged(again, evidence, focus_rows(fits))
@@ -119,10 +144,11 @@ def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
     goes = [now for s, now in shown if now.verdict != "present" and _halved(ledger, after, s.key)]
     stays = [now for _, now in shown if now not in goes]
     appears = [now for s, now in pairs if s.verdict != "present" and now.verdict == "present"]
-    is_curve = finding.test == CURVE
+    family = _family(finding, fits.design)
+    is_curve = finding.test == CURVE and family is None
     # That it is no longer seen does not show that it is not there: what remains at its upper end counts.
     open_end = [now for now in goes if now.widens]
-    mine = [s for s, _ in shown if s.structure == SMOOTH.get(finding.test)]
+    mine = [s for s, _ in shown if s.structure == family]
     doubt = bool(open_end) if is_curve else any(_halved(ledger, after, s.key) for s in mine)
     return Missing(
         what=_words(fits, finding),
@@ -133,6 +159,7 @@ def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
         stays=tuple(now.label for now in stays),
         appears=tuple(now.label for now in appears),
         doubt=doubt,
+        p=_adjusted(finding),
         sign=_sign(finding),
         left=_left(ledger, after, goes, stays, appears, open_end),
         after=after,
@@ -160,6 +187,8 @@ def _halved(before: Ledger, after: Ledger, key: str) -> bool:
 def _words(fits: Fits, finding: Finding) -> str:
     if finding.test == CURVE:
         return f"curve in {finding.about}"
+    if finding.test == "season":
+        return f"season of the {finding.about}"
     if finding.test == "trend":
         series = fits.design.serial
         return f"slow trend in {series.name}" if series is not None else "slow trend"
@@ -190,7 +219,7 @@ def _left(
         parts.append(f"{subject(now)} {verb} hang together ({_share(after, now.key)})")
     parts += [f"{subject(now)} turn out to hang together ({_share(after, now.key)})" for now in appears]
     if not parts:
-        return "no dependence was found that it could explain"
+        return "rows still show no dependence"
     worst = max((now.worst for now in open_end), key=lambda f: abs(np.log(f)), default=1.0)
     if open_end:
         parts.append(f"what is left could make a focus standard error {significant(worst)} times as large")

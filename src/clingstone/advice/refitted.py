@@ -26,6 +26,7 @@ def focus_rows(fit: Refit, facts: Facts) -> list[Interval]:
 def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     """The facts, and how the robust refit at the level of correction compares with the mixed one."""
     level = facts.word("group level")
+    facts = facts.plus({f.name: f for f in _order(refits)})
     robust = find(refits, ROBUST, level) if level else None
     if robust is None:
         return facts
@@ -70,7 +71,11 @@ def advised_facts(
         yes("advised refit did not converge", not settled, "the advised refit's search did not settle"),
         *_moved(facts, refits, chosen),
         *_second(facts, refits, chosen),
-        *_order(refits, chosen),
+        yes(
+            "randomisation stands beside",
+            any(r.remedy == "randomisation" and r is not chosen for r in refits),
+            "a randomisation test was made",
+        ),
     ]
     rows = focus_rows(chosen, facts)
     if rows:
@@ -126,8 +131,8 @@ def _second(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact
     ]
 
 
-def _order(refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
-    arma = find(refits, "arma")
-    if arma is None or chosen.remedy != "ar1":
+def _order(refits: tuple[Refit, ...]) -> list[Fact]:
+    arma, first = find(refits, "arma"), find(refits, "ar1")
+    if arma is None or first is None:
         return []
-    return [yes("another order fits better", not same(arma, chosen), "the ARMA order chosen by AICc")]
+    return [yes("another order fits better", not same(arma, first), "the ARMA order chosen by AICc")]

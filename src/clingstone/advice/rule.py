@@ -63,4 +63,5 @@ class Rule:
 GROUP, SERIAL, SPATIAL = fact("group to cover"), fact("serial to cover"), fact("spatial to cover")
 ANY = GROUP | SERIAL | SPATIAL
 SHOWN = fact("group present") | fact("serial present") | fact("spatial present")
+SPREAD, SLOPES = fact("unequal variances"), fact("slopes differ")
 KNOWN = fact("columns of the model known")

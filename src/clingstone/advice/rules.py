@@ -3,10 +3,11 @@
 from __future__ import annotations
 
 from clingstone.advice.cautions import CAVEATS
-from clingstone.advice.decisions import NO_REMEDY, PREFER, STATES
+from clingstone.advice.decisions import PREFER
 from clingstone.advice.rule import Rule, Then
+from clingstone.advice.states import NO_REMEDY, NOTHING, STATES
 
-__all__ = ["CAVEATS", "NO_REMEDY", "PREFER", "RULES", "STATES", "Rule", "Then", "rule_table"]
+__all__ = ["CAVEATS", "NOTHING", "NO_REMEDY", "PREFER", "RULES", "STATES", "Rule", "Then", "rule_table"]
 
 RULES: tuple[Rule, ...] = (*STATES, NO_REMEDY, *PREFER, *CAVEATS)
 

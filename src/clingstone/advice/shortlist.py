@@ -178,11 +178,11 @@ def _inner(facts: Facts) -> tuple[Choice, Rule | None] | None:
     if missing is None or missing.again is None or after is None:
         return None
     again, need = missing.again, needed(after.ledger)
-    if not need:
-        return Choice("ordinary"), None
     for rule, what, level in preferred(after):
         if _carries(remedy(what), level, again, after):
             return Choice(what, level), rule
+    if not need:
+        return Choice("ordinary"), None
     for one in sorted(REMEDIES, key=lambda r: rank(r.id)):
         if one.needs.check(again.design) is not None or one.estimand != "pooled":
             continue

@@ -154,14 +154,19 @@ class GlsReady:
         phi = kr.adjusted if tau2 > 0 else kr.phi
         if tau2 > 0:
             return Column.kenward(coef, phi, kr, self.design.m)
-        return Column(coef, phi, lambda w: float(self.df_at_zero(w[:, None])[0]), kr.joint)
+        return Column(coef, phi, lambda w: float(self.at_zero(np.array([kr.df(w)]), w[:, None])[0]), kr.joint)
 
-    def df_at_zero(self, W: Array) -> Array:
-        """(k,) df where the variance between groups is zero: of the parts of each row W (p, k) between and
-        within groups, each with the df of its own mean square (Satterthwaite 1946).
+    def at_zero(self, found: Array, W: Array) -> Array:
+        """(k,) or (B, k) df where the variance between groups is zero, from those of Kenward and Roger.
 
-        The curvature at a bound says little; a coefficient of groups keeps the df of groups.
+        At a bound they lean on a curvature that says little, and can fall to one: they are kept between
+        4 and the df of groups, those of the parts of each row W (p, k) between and within groups, each with
+        the df of its own mean square (Satterthwaite 1946).
         """
+        most = self._of_groups(W)
+        return np.asarray(np.clip(found, np.minimum(self.remedy.limits.df_floor, most), most))
+
+    def _of_groups(self, W: Array) -> Array:
         part = self.design.partitions[self.components[0].part]
         inner = absorb(self.design, part)[0].p
         df1, df2 = part.count + inner - self.design.p, self.design.n - part.count - inner

@@ -38,7 +38,7 @@ class Reading(Protocol):
     @property
     def kenward(self) -> bool: ...
 
-    def df_at_zero(self, W: Array) -> Array: ...
+    def at_zero(self, found: Array, W: Array) -> Array: ...
 
     def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column: ...
 
@@ -94,7 +94,7 @@ def _kenward(ready: Reading, many: Each, found: Minima, s2: Array, read: _Column
     kr = KenwardEach.of(ready.design.n, classes.c, classes.count.astype(float), classes.QQ, s2, ratio * s2)
     read.phi[:] = np.where(bound[:, None, None], kr.phi, kr.adjusted)
     read.df[:] = np.clip(kr.df(ready.W), 1.0, float(ready.design.m)).T
-    read.df[:, bound] = ready.df_at_zero(ready.W)[:, None]
+    read.df[:, bound] = ready.at_zero(kr.df(ready.W)[bound], ready.W).T
     for term in multi(ready.design):
         scale, df2 = kr.joint(ready.W[:, list(term.columns)])
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2
