@@ -75,7 +75,8 @@ def test_no_figure_needs_a_window_system():
         "import sys; from tests.writeup import fixture; from clingstone.writeup import figures\n"
         "figures.ladder(fixture.trial()).svg(); assert 'matplotlib.pyplot' not in sys.modules"
     )
-    subprocess.run([sys.executable, "-c", code], check=True)
+    # From the checkout, so that no other library's top-level "tests" is found first.
+    subprocess.run([sys.executable, "-c", code], check=True, cwd=Path(__file__).parents[2])
 
 
 def test_the_ladder_draws_every_interval_where_it_lies():
