@@ -18,10 +18,10 @@ from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import stop_if_none_left
 from clingstone.remedies.means import ordinary, varies
-from clingstone.remedies.remedy import Account, Estimand, Estimates
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates
 from clingstone.remedies.sandwich import CR, ClusterReady
 from clingstone.remedies.split import Split
-from clingstone.remedies.within import GROUPED, WithinReady, adjusted, inner_design, within_ready
+from clingstone.remedies.within import WithinReady, adjusted, inner_design, within_ready
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits

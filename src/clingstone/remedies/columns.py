@@ -9,6 +9,7 @@ from typing import Literal
 import numpy as np
 
 from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.maths import curvature, reference
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
@@ -60,6 +61,11 @@ class Column:
     def kenward(cls, coef: Array, phi: Array, found: Kenward, m: int) -> Column:
         """Kenward and Roger's df, from one to m; phi : their covariance, or Φ where it is kept."""
         return cls(coef, phi, lambda w: float(np.clip(found.df(w), 1.0, m)), found.joint)
+
+
+def apart(response: Response) -> list[Response]:
+    """Every column of y by itself."""
+    return [response] if response.B == 1 else [response.column(b) for b in range(response.B)]
 
 
 def estimates(

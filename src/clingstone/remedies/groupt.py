@@ -18,7 +18,7 @@ from clingstone.needs import Family, Limits, Needs, Refusal
 from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.linear import stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi, rows
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -137,7 +137,7 @@ class GroupT(OverGroups):
     id: ClassVar[str] = "group-t"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "within"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "ibragimov-muller-2010"
 
     @property

@@ -14,7 +14,7 @@ from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs
 from clingstone.remedies.clusters import OverClusters, clusters, rank_note
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.remedy import KNOWN, Account, Estimand
 from clingstone.remedies.sandwich import CLUSTER_RULES, ClusterReady, judged
 
 if TYPE_CHECKING:
@@ -90,7 +90,7 @@ class ClusterJackknife(OverClusters):
     id: ClassVar[str] = "cluster-jackknife"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(known_design=True)
+    needs: ClassVar[Needs] = KNOWN
     source: ClassVar[str] = "mackinnon-nielsen-webb-2023"
 
     @property

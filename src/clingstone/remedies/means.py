@@ -20,7 +20,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import blanked, few_df, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi, rows
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -131,7 +131,7 @@ class GroupMeans(OverGroups):
     id: ClassVar[str] = "group-means"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "between"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "leyrat-2018"
 
     @property

@@ -19,9 +19,9 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
+from clingstone.remedies.columns import FLAT, RULES, Column, Rule, apart, estimates, plain_df
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -48,11 +48,7 @@ class SlopeReady:
     def fit(self, fits: Fits) -> Estimates:
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
-        B = fits.response.B
-        columns = [
-            self._column(algebra, model, fits.response if B == 1 else fits.response.column(b), b)
-            for b in range(B)
-        ]
+        columns = [self._column(algebra, model, one, b) for b, one in enumerate(apart(fits.response))]
         return estimates(
             self.design,
             self.W,
@@ -123,7 +119,7 @@ class MixedSlope(Plain):
     id: ClassVar[str] = "mixed-slope"
     covers: ClassVar[frozenset[Family]] = frozenset({"group"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "laird-ware-1982"
 
     @property

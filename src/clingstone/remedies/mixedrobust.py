@@ -15,10 +15,11 @@ from clingstone.maths import reference, reml, sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.clusters import sizes_of
+from clingstone.remedies.clusters import covered, sizes_of
+from clingstone.remedies.columns import apart
 from clingstone.remedies.joint import Joint, f_joint, hotelling_joint
 from clingstone.remedies.linear import blanked, positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Plain, multi
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Flags, Plain, multi
 from clingstone.remedies.sandwich import CLUSTER_RULES, ClusterDf, judged
 from clingstone.remedies.words import bound_notes
 
@@ -68,10 +69,7 @@ class MixedRobustReady:
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
         B = fits.response.B
-        seen = [
-            self.whitened(algebra, model, fits.response if B == 1 else fits.response.column(b), b)
-            for b in range(B)
-        ]
+        seen = [self.whitened(algebra, model, one, b) for b, one in enumerate(apart(fits.response))]
         gone = np.array([name in self.unusable for name in self.names])
         estimate = np.stack([self.W.T @ one.coef for one in seen], axis=1)
         se = np.sqrt(np.stack([self._variance(one) for one in seen], axis=1))
@@ -181,7 +179,7 @@ class MixedRobust(Plain):
     id: ClassVar[str] = "mixed-robust"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "liang-zeger-1986"
 
     @property
@@ -197,12 +195,7 @@ class MixedRobust(Plain):
         return tuple(k for k in keys if f"group:{k}" in found) or keys[:1]
 
     def covering(self, fits: Fits) -> frozenset[Family]:
-        """Clusters cover what lies wholly within them."""
-        design, part = fits.design, fits.design.partitions[self.at]
-        out: set[Family] = {"group"}
-        if design.serial is not None and part.relation(design.serial.part) in ("same", "nests"):
-            out.add("serial")
-        return frozenset(out)
+        return covered(fits.design, fits.design.partitions[self.at])
 
     def keys(self, design: Design) -> tuple[str, ...]:
         """Intercepts that lie within the clusters, the clusters' own first. Raises NotSupported."""

@@ -18,7 +18,7 @@ from clingstone.remedies.clusters import clusters, covered, few_treated, group_l
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.joint import Joint, wald_joint
 from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
 from clingstone.remedies.sandwich import decided_by_one
 
 if TYPE_CHECKING:
@@ -135,7 +135,7 @@ class MultiwayCluster(Plain):
     id: ClassVar[str] = "multiway-cluster"
     covers: ClassVar[frozenset[Family]] = frozenset({"group"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "cameron-gelbach-miller-2011"
 
     @property

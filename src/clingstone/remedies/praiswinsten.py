@@ -15,9 +15,9 @@ from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import Column, estimates
+from clingstone.remedies.columns import Column, apart, estimates
 from clingstone.remedies.linear import reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain
 from clingstone.remedies.serial import enough_times
 
 if TYPE_CHECKING:
@@ -62,7 +62,7 @@ class TwoStepReady:
         return Column.even(response.coef[:, 0] + delta[:, 0], phi, float(m)), settled
 
     def fit(self, fits: Fits) -> Estimates:
-        found = [self.solved(fits.response.column(b)) for b in range(fits.response.B)]
+        found = [self.solved(one) for one in apart(fits.response)]
         return estimates(
             self.design,
             self.W,
@@ -95,7 +95,7 @@ class PraisWinsten(Plain):
     name: ClassVar[str] = "autoregressive errors along time, in two steps"
     covers: ClassVar[frozenset[Family]] = frozenset({"serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True)
+    needs: ClassVar[Needs] = DATED
     source: ClassVar[str] = "prais-winsten-1954"
 
     def prepare(self, design: Design, working: ErrorModel | None) -> TwoStepReady:

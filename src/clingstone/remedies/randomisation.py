@@ -18,7 +18,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import clusters, covered
 from clingstone.remedies.joint import Joint
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
 from clingstone.remedies.resampled import ResampledReady
 
 if TYPE_CHECKING:
@@ -148,7 +148,7 @@ class Randomisation(Plain):
     id: ClassVar[str] = "randomisation"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"group"}), known_design=True)
+    needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "fisher-1935"
 
     @property

@@ -16,7 +16,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.linear import few_df, reported, stop_if_none_left
 from clingstone.remedies.places import OnMap, enough_sites, length
-from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.remedy import PLACED, Account, Estimand
 from clingstone.remedies.sandwich import ClusterReady
 from clingstone.structure.spatial import Sites
 
@@ -72,7 +72,7 @@ class RegionCluster(OnMap):
     name: ClassVar[str] = "cluster-robust, by region of the map"
     covers: ClassVar[frozenset[Family]] = frozenset({"spatial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True)
+    needs: ClassVar[Needs] = PLACED
     source: ClassVar[str] = "bester-conley-hansen-2011"
 
     def covering(self, fits: Fits) -> frozenset[Family]:

@@ -163,6 +163,12 @@ class Remedy(Protocol):
         ...
 
 
+KNOWN = Needs(known_design=True)
+GROUPED = Needs(parts=frozenset({"group"}), known_design=True)
+DATED = Needs(parts=frozenset({"serial"}), known_design=True)
+PLACED = Needs(parts=frozenset({"spatial"}), known_design=True)
+
+
 class Plain:
     """Defaults of a remedy: of the whole table, for the families it names, with nothing fitted first."""
 

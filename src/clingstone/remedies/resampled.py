@@ -17,7 +17,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import OverClusters, clusters, few_treated, rank_note
 from clingstone.remedies.joint import Joint
 from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Estimates, multi
+from clingstone.remedies.remedy import KNOWN, Account, Estimand, Estimates, multi
 from clingstone.remedies.sandwich import decided_by_one
 
 if TYPE_CHECKING:
@@ -200,7 +200,7 @@ class WildClusterBootstrap(OverClusters):
     id: ClassVar[str] = "wild-cluster-bootstrap"
     covers: ClassVar[frozenset[Family]] = frozenset({"group", "serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(known_design=True)
+    needs: ClassVar[Needs] = KNOWN
     source: ClassVar[str] = "cameron-gelbach-miller-2008"
 
     @property

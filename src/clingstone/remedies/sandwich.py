@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from abc import abstractmethod
 from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
@@ -17,12 +18,10 @@ from clingstone.needs import Family, Limits, Needs, Refusal
 from clingstone.remedies.clusters import OverClusters, clusters, sizes_of
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, few_df, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import Account, Estimand, Plain
+from clingstone.remedies.remedy import KNOWN, Account, Estimand, Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
-
-KNOWN = Needs(known_design=True)
 
 
 # ---- ordinary -------------------------------------------------------------------------
@@ -89,12 +88,28 @@ _HC_FACTOR = {
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
-class RowRobustReady(LinearReady):
-    """T : (n, k) adjusted contrast weights. own_df : Satterthwaite df, and T² for joint tests."""
+class SandwichReady(LinearReady):
+    """own_df : Satterthwaite df, and T² for joint tests; else F with the df of every row."""
+
+    own_df: bool
+
+    @abstractmethod
+    def _eta(self, columns: tuple[int, ...]) -> float:
+        """η of T² for some coefficients."""
+
+    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
+        q = len(columns)
+        if not self.own_df:
+            return wald_joint(wald, q, float(self.df[0, 0]))
+        return hotelling_joint(wald, q, self._eta(columns))
+
+
+@dataclass(frozen=True, eq=False, kw_only=True)
+class RowRobustReady(SandwichReady):
+    """T : (n, k) adjusted contrast weights."""
 
     kind: HC
     T: Array
-    own_df: bool
 
     @property
     def _scale(self) -> float:
@@ -108,12 +123,6 @@ class RowRobustReady(LinearReady):
         q = T.shape[1]
         products = (T[:, :, None] * T[:, None, :]).reshape(len(T), q * q)
         return self._scale * (products.T @ response.residual**2).reshape(q, q, -1)
-
-    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
-        q = len(columns)
-        if not self.own_df:
-            return wald_joint(wald, q, float(self.df[0, 0]))
-        return hotelling_joint(wald, q, self._eta(columns))
 
     @once
     def _eta(self, columns: tuple[int, ...]) -> float:
@@ -205,14 +214,13 @@ _CR_FACTOR = {
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
-class ClusterReady(LinearReady):
-    """at, part : the clusters. weights : contrasts adjusted per cluster. own_df : as above."""
+class ClusterReady(SandwichReady):
+    """at, part : the clusters. weights : contrasts adjusted per cluster."""
 
     kind: CR
     at: str
     part: Partition
     weights: sandwich.Adjusted
-    own_df: bool
 
     @property
     def _scale(self) -> float:
@@ -224,12 +232,6 @@ class ClusterReady(LinearReady):
     def block(self, response: Response, columns: tuple[int, ...]) -> Array:
         a = self.weights.a[list(columns)]
         return self._scale * sandwich.cluster_covariance(a, response.scores(self.part))
-
-    def joint(self, wald: Array, columns: tuple[int, ...]) -> Joint | None:
-        q = len(columns)
-        if not self.own_df:
-            return wald_joint(wald, q, float(self.df[0, 0]))
-        return hotelling_joint(wald, q, self._eta(columns))
 
     @once
     def _eta(self, columns: tuple[int, ...]) -> float:

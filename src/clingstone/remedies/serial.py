@@ -18,9 +18,9 @@ from clingstone.maths import curvature, reml
 from clingstone.maths.once import Array
 from clingstone.maths.search import Optimum
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import Column, estimates
+from clingstone.remedies.columns import Column, apart, estimates
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -67,14 +67,14 @@ class ProcessReady(ABC):
     def sources(self) -> str: ...
 
     def fit(self, fits: Fits) -> Estimates:
-        response = fits.response
-        first = self.choose(_column(response, 0))
+        columns = apart(fits.response)
+        first = self.choose(columns[0])
         found = [first.found]
-        found += [search(first.process, response.column(b), first.found) for b in range(1, response.B)]
+        found += [search(first.process, one, first.found) for one in columns[1:]]
         return estimates(
             self.design,
             self.W,
-            [self._fitted(first.process, one, _column(response, b)) for b, one in enumerate(found)],
+            [self._fitted(first.process, at, one) for at, one in zip(found, columns, strict=True)],
             fits.run.settings.confidence,
             np.array([bool(one.at_bound.any()) for one in found]),
             np.array([one.converged for one in found]),
@@ -89,7 +89,7 @@ class ProcessReady(ABC):
         return Column.bent(y.coef[:, 0] + delta[:, 0], slopes)
 
     def account(self, fits: Fits) -> Account:
-        response = _column(fits.response, 0)
+        response = apart(fits.response)[0]
         choice = self.choose(response)
         gram = choice.process.gram(choice.found.theta, response)
         shape = choice.process.shape(choice.found.theta)
@@ -114,10 +114,6 @@ class ProcessReady(ABC):
             items=(*items, *_unbiased_items(unbiased(response, fits.run.settings.confidence))),
             source=self.sources,
         )
-
-
-def _column(response: Response, b: int) -> Response:
-    return response if response.B == 1 else response.column(b)
 
 
 def half_life(rho: float, series: Series) -> str:
@@ -223,7 +219,7 @@ class Car1(Plain):
     name: ClassVar[str] = "errors that fade with elapsed time"
     covers: ClassVar[frozenset[Family]] = frozenset({"serial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True)
+    needs: ClassVar[Needs] = DATED
     source: ClassVar[str] = "jones-1980"
 
     def prepare(self, design: Design, working: ErrorModel | None) -> FadingReady:

@@ -19,7 +19,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, reported, stop_if_none_left
 from clingstone.remedies.places import OnMap, enough_sites, length
-from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.remedy import PLACED, Account, Estimand
 from clingstone.structure.spatial import Sites
 
 if TYPE_CHECKING:
@@ -129,7 +129,7 @@ class SpatialHac(OnMap):
     name: ClassVar[str] = "robust to dependence between near places"
     covers: ClassVar[frozenset[Family]] = frozenset({"spatial"})
     estimand: ClassVar[Estimand] = "pooled"
-    needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True)
+    needs: ClassVar[Needs] = PLACED
     source: ClassVar[str] = "conley-1999"
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> SpatialHacReady:

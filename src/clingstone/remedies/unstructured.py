@@ -17,7 +17,7 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
+from clingstone.remedies.columns import FLAT, RULES, Column, Rule, apart, estimates, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
@@ -46,8 +46,7 @@ class VisitsReady:
     def fit(self, fits: Fits) -> Estimates:
         response = fits.response
         columns, settled, start = [], [], None
-        for b in range(response.B):
-            one = response if response.B == 1 else response.column(b)
+        for one in apart(response):
             table, found = self._fitted(one, start)
             columns.append(self._column(table, found, one))
             settled.append(found.converged)
@@ -89,8 +88,7 @@ class VisitsReady:
         return Column.kenward(coef, phi, kr, m)
 
     def account(self, fits: Fits) -> Account:
-        response = fits.response if fits.response.B == 1 else fits.response.column(0)
-        table, found = self._fitted(response, None)
+        table, found = self._fitted(apart(fits.response)[0], None)
         sd = np.sqrt(np.diag(found.sigma))
         items = [
             (f"standard deviation at {label}", f"{value:.6g}")

@@ -22,7 +22,7 @@ from clingstone.remedies.clusters import clusters, covered, group_levels
 from clingstone.remedies.gls import TOGETHER
 from clingstone.remedies.linear import stop_if_none_left
 from clingstone.remedies.means import means
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, rows
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain, rows
 from clingstone.remedies.sandwich import CLUSTER_RULES, CR, ClusterDf, ClusterReady, judged
 
 if TYPE_CHECKING:
@@ -30,7 +30,6 @@ if TYPE_CHECKING:
 
 DENSE = 3000  # cells of a second grouping, whose normal equations are that large
 WORK = 5e8  # clusters × columns³ up to which matrices per cluster are decomposed
-GROUPED = Needs(parts=frozenset({"group"}), known_design=True)
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
