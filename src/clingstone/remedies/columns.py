@@ -2,8 +2,8 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Sequence
-from dataclasses import dataclass, replace
+from collections.abc import Callable, Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import Literal
 
 import numpy as np
@@ -13,6 +13,7 @@ from clingstone.design.response import Response
 from clingstone.maths import curvature, reference
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
+from clingstone.needs import Refusal
 from clingstone.remedies.joint import Joint, f_joint
 from clingstone.remedies.remedy import Estimates, Flags, multi
 
@@ -68,33 +69,47 @@ def apart(response: Response) -> list[Response]:
     return [response] if response.B == 1 else [response.column(b) for b in range(response.B)]
 
 
-def estimates(
-    design: Design,
-    W: Array,
-    columns: Sequence[Column],
-    confidence: float,
-    boundary: Flags | None,
-    converged: Flags,
-    notes: tuple[str, ...] = (),
-) -> Estimates:
-    """Rows W (p, k) of every column, t intervals, joint tests of the terms of several coefficients.
+@dataclass(frozen=True, eq=False)
+class FittedReady:
+    """A remedy whose every column of y has a fit of its own; subclasses make the columns.
 
-    boundary, converged : (B,). notes : of the first column, kept when there is no other.
+    names (k,), W (p, k) : reported rows as contrasts in the basis.
     """
-    estimate = np.stack([W.T @ column.coef for column in columns], axis=1)
-    variance = [np.einsum("ik,ij,jk->k", W, column.phi, W) for column in columns]
-    se = np.sqrt(np.stack(variance, axis=1))
-    df = np.stack([[column.df(w) for w in W.T] for column in columns], axis=1)
-    own = W[:, : design.p]
-    one = len(columns) == 1
-    return replace(
-        Estimates.by_t(estimate, se, df, confidence),
-        covariance=own.T @ columns[0].phi @ own if one else None,
-        joint={t.name: joint(columns, W[:, list(t.columns)]) for t in multi(design)},
-        boundary=boundary,
-        converged=converged,
-        notes=tuple(dict.fromkeys((*columns[0].notes, *notes))) if one else (),
-    )
+
+    design: Design
+    names: tuple[str, ...]
+    W: Array
+    rule: str
+    unusable: Mapping[str, Refusal] = field(default_factory=dict)
+    notes: tuple[str, ...] = ()
+
+    def estimates(
+        self,
+        columns: Sequence[Column],
+        confidence: float,
+        boundary: Flags | None,
+        converged: Flags,
+        notes: tuple[str, ...] = (),
+    ) -> Estimates:
+        """Reported rows of every column, t intervals, joint tests of the terms of several coefficients.
+
+        boundary, converged : (B,). notes : of the first column, kept when there is no other.
+        """
+        W = self.W
+        estimate = np.stack([W.T @ column.coef for column in columns], axis=1)
+        variance = [np.einsum("ik,ij,jk->k", W, column.phi, W) for column in columns]
+        se = np.sqrt(np.stack(variance, axis=1))
+        df = np.stack([[column.df(w) for w in W.T] for column in columns], axis=1)
+        own = W[:, : self.design.p]
+        one = len(columns) == 1
+        return replace(
+            Estimates.by_t(estimate, se, df, confidence),
+            covariance=own.T @ columns[0].phi @ own if one else None,
+            joint={t.name: joint(columns, W[:, list(t.columns)]) for t in multi(self.design)},
+            boundary=boundary,
+            converged=converged,
+            notes=tuple(dict.fromkeys((*columns[0].notes, *notes))) if one else (),
+        )
 
 
 def joint(columns: Sequence[Column], L: Array) -> Joint:

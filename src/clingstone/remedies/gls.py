@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 from scipy import optimize
 
-from clingstone.covariance.components import SITE, Component, declared
+from clingstone.covariance.components import Component, declared
 from clingstone.covariance.each import each
 from clingstone.design.derived import absorb
 from clingstone.design.design import Design
@@ -19,12 +19,22 @@ from clingstone.maths.basis import Gram
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, Rule, estimates, plain_df
+from clingstone.remedies.columns import FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.places import map_items, map_notes
+from clingstone.remedies.places import map_items, map_notes, site_keys
 from clingstone.remedies.praiswinsten import PraisWinsten
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Flags, Remedy
+from clingstone.remedies.remedy import (
+    DATED,
+    GROUPED,
+    KNOWN,
+    PLACED,
+    Account,
+    Estimand,
+    Estimates,
+    Flags,
+    Remedy,
+)
 from clingstone.remedies.words import bound_notes, gls_account
 
 if TYPE_CHECKING:
@@ -36,10 +46,10 @@ DRAWS = 400  # simulated columns behind an expected information, when the observ
 TOGETHER = " + "  # joins the levels of a nesting that are fitted together
 
 _NEEDS: dict[Kind, Needs] = {
-    "mixed-intercept": Needs(parts=frozenset({"group"}), known_design=True),
-    "ar1": Needs(parts=frozenset({"serial"}), known_design=True),
-    "spatial-gls": Needs(parts=frozenset({"spatial"}), known_design=True),
-    "joint": Needs(known_design=True),
+    "mixed-intercept": GROUPED,
+    "ar1": DATED,
+    "spatial-gls": PLACED,
+    "joint": KNOWN,
 }
 _COVERS: dict[Kind, frozenset[Family]] = {
     "mixed-intercept": frozenset({"group"}),
@@ -55,21 +65,12 @@ _SOURCES: dict[Kind, str] = {
 }
 
 
-@dataclass(frozen=True, eq=False)
-class GlsReady:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class GlsReady(FittedReady):
     """A GLS remedy over one design; the error model comes from ``Fits`` at each reading."""
 
     remedy: Gls
-    design: Design
-    names: tuple[str, ...]
-    W: Array
-    rule: str
     components: tuple[Component, ...]
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-
-    @property
-    def notes(self) -> tuple[str, ...]:
-        return ()
 
     def fit(self, fits: Fits) -> Estimates:
         if fits.response.B > 1 and self.remedy.estimation == "REML":
@@ -81,9 +82,7 @@ class GlsReady:
         if len(columns) == 1:
             notes += bound_notes(self.components, model)
             notes += map_notes(fits, self.remedy.node(fits), columns[0].coef)
-        return estimates(
-            self.design,
-            self.W,
+        return self.estimates(
             columns,
             fits.run.settings.confidence,
             np.asarray(np.any(model.at_bound, axis=0)),
@@ -95,12 +94,8 @@ class GlsReady:
         """The fitted error model and every column of y under it."""
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
-        response = fits.response
-        out = []
-        for b in range(response.B):
-            one = response if response.B == 1 else response.column(b)
-            out.append(self._column(fits, model, algebra, one, b))
-        return model, out
+        ys = enumerate(apart(fits.response))
+        return model, [self._column(fits, model, algebra, y, b) for b, y in ys]
 
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
@@ -270,7 +265,7 @@ class Gls:
         elif self.id == "ar1":
             wanted = ["serial"]
         else:
-            wanted = [*_site_level(design, found), "spatial"]
+            wanted = [*site_keys(design, found), "spatial"]
         for key in wanted:
             if key not in found:
                 unknown = Refusal(f"these data have no structure named {key}")
@@ -292,7 +287,7 @@ class Gls:
         names, W = reported(design)
         kenward = len(components) == 1 and components[0].family == "group" and self.estimation == "REML"
         rule = "satterthwaite" if self.df == "kenward-roger" and not kenward else self.df
-        return GlsReady(self, design, names, W, RULES[rule], components)
+        return GlsReady(design, names, W, RULES[rule], remedy=self, components=components)
 
     def conventions(self) -> tuple[tuple[str, Remedy], ...]:
         out: list[tuple[str, Remedy]] = []
@@ -315,16 +310,6 @@ class Gls:
             words = "Prais–Winsten: ρ from the residuals in two steps, n − p df"
             out.append((words, PraisWinsten(self.at, self.limits)))
         return tuple(out)
-
-
-def _site_level(design: Design, found: Mapping[str, Component]) -> list[str]:
-    """The component of what rows of one place share, where places repeat."""
-    if SITE in found:
-        return [SITE]
-    if design.spatial is None or design.group is None:
-        return []
-    same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
-    return [f"group:{v.key}" for v in same if f"group:{v.key}" in found]
 
 
 def _too_few(found: Mapping[str, Component], refused: Mapping[str, Refusal]) -> NotSupported:

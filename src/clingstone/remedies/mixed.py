@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar
 
@@ -19,7 +18,7 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, Rule, apart, estimates, plain_df
+from clingstone.remedies.columns import FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
 
@@ -33,25 +32,17 @@ AND = " and "
 MOST = 3  # slopes fitted together
 
 
-@dataclass(frozen=True, eq=False)
-class SlopeReady:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class SlopeReady(FittedReady):
     """A mixed model over one design; the error model comes from ``Fits`` at each reading."""
 
     remedy: MixedSlope
-    design: Design
-    names: tuple[str, ...]
-    W: Array
-    rule: str
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     def fit(self, fits: Fits) -> Estimates:
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
         columns = [self._column(algebra, model, one, b) for b, one in enumerate(apart(fits.response))]
-        return estimates(
-            self.design,
-            self.W,
+        return self.estimates(
             columns,
             fits.run.settings.confidence,
             np.asarray(np.any(model.at_bound, axis=0)),
@@ -166,7 +157,7 @@ class MixedSlope(Plain):
         together = [found.get(k) or on_request(design, k, self.limits) for k in self.keys(design)]
         choose(design, together, self.limits)  # refuses what cannot be fitted together
         names, W = reported(design)
-        return SlopeReady(self, design, names, W, RULES[self.df])
+        return SlopeReady(design, names, W, RULES[self.df], remedy=self)
 
     def conventions(self) -> tuple[tuple[str, MixedSlope], ...]:
         return (

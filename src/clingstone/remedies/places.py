@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Container
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
 import numpy as np
 
+from clingstone.covariance.components import SITE
 from clingstone.covariance.smoothness import kernels
 from clingstone.design.design import Design
 from clingstone.display import significant
@@ -26,16 +28,21 @@ SHIFTED = 0.25  # relative change that counts when the predictor is smooth over 
 SMOOTH = 0.5  # share of a predictor that a cubic surface of place explains
 
 
+def site_keys(design: Design, found: Container[str]) -> list[str]:
+    """Of the components found, what rows of one place share, where places repeat."""
+    if SITE in found:
+        return [SITE]
+    if design.spatial is None or design.group is None:
+        return []
+    same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
+    return [f"group:{v.key}" for v in same if f"group:{v.key}" in found]
+
+
 def spatial_node(fits: Fits) -> frozenset[str] | None:
     """Components of the map alone: places, and what rows of one place share."""
     if "spatial" not in fits.components:
         return None
-    design = fits.design
-    own = [k for k in ("group:site",) if k in fits.components]
-    if not own and design.group is not None and design.spatial is not None:
-        same = (v for v in design.group.levels if v.relation(design.spatial.part) == "same")
-        own = [f"group:{v.key}" for v in same if f"group:{v.key}" in fits.components]
-    return frozenset([*own[:1], "spatial"])
+    return frozenset([*site_keys(fits.design, fits.components)[:1], "spatial"])
 
 
 class OnMap(Plain):

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, ClassVar
 
@@ -13,9 +12,8 @@ from clingstone.covariance.pieces import SerialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.once import Array
-from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import Column, apart, estimates
+from clingstone.needs import Family, Limits, Needs, NotSupported
+from clingstone.remedies.columns import Column, FittedReady, apart
 from clingstone.remedies.linear import reported
 from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain
 from clingstone.remedies.serial import enough_times
@@ -27,15 +25,9 @@ STEPS, SETTLED = 100, 1e-10
 RHO_MOST = 0.9999  # beyond, the transformed first row would carry no weight that rounding leaves
 
 
-@dataclass(frozen=True, eq=False)
-class TwoStepReady:
-    design: Design
-    names: tuple[str, ...]
-    W: Array
+@dataclass(frozen=True, eq=False, kw_only=True)
+class TwoStepReady(FittedReady):
     algebra: Layered
-    rule: str = "n − p"
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     def rho(self, response: Response) -> tuple[float, bool]:
         """ρ = Σe_t e_{t−1}/Σe²_{t−1} of the current residuals, repeated until it settles."""
@@ -63,9 +55,7 @@ class TwoStepReady:
 
     def fit(self, fits: Fits) -> Estimates:
         found = [self.solved(one) for one in apart(fits.response)]
-        return estimates(
-            self.design,
-            self.W,
+        return self.estimates(
             [column for column, _ in found],
             fits.run.settings.confidence,
             None,
@@ -104,7 +94,7 @@ class PraisWinsten(Plain):
         if series.ties or not piece.whole or len(series.pairs(1)[0]) < 3:
             raise NotSupported("the two steps need rows one step apart, one at a time", "Use car1.")
         names, W = reported(design)
-        return TwoStepReady(design, names, W, Layered(design, (piece,), piece))
+        return TwoStepReady(design, names, W, "n − p", algebra=Layered(design, (piece,), piece))
 
     def conventions(self) -> tuple[tuple[str, PraisWinsten], ...]:
         return ()

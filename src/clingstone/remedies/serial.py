@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -15,10 +14,9 @@ from clingstone.covariance.unbiased import Unbiased, unbiased
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import curvature, reml
-from clingstone.maths.once import Array
 from clingstone.maths.search import Optimum
-from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import Column, apart, estimates
+from clingstone.needs import Family, Limits, Needs, NotSupported
+from clingstone.remedies.columns import Column, FittedReady, apart
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain
 from clingstone.structure.serial import Series
@@ -43,16 +41,9 @@ class Choice:
     notes: tuple[str, ...] = ()
 
 
-@dataclass(frozen=True, eq=False)
-class ProcessReady(ABC):
+@dataclass(frozen=True, eq=False, kw_only=True)
+class ProcessReady(FittedReady, ABC):
     """GLS under a process that is chosen on the first column of y and fitted to each."""
-
-    design: Design
-    names: tuple[str, ...]
-    W: Array
-    rule: str = "Satterthwaite"
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     @abstractmethod
     def choose(self, response: Response) -> Choice:
@@ -71,9 +62,7 @@ class ProcessReady(ABC):
         first = self.choose(columns[0])
         found = [first.found]
         found += [search(first.process, one, first.found) for one in columns[1:]]
-        return estimates(
-            self.design,
-            self.W,
+        return self.estimates(
             [self._fitted(first.process, at, one) for at, one in zip(found, columns, strict=True)],
             fits.run.settings.confidence,
             np.array([bool(one.at_bound.any()) for one in found]),
@@ -227,7 +216,7 @@ class Car1(Plain):
         if series.ties and self.noise == "no":
             raise NotSupported("rows that share a time need row noise to differ by", "Leave noise at auto.")
         names, W = reported(design)
-        return FadingReady(design, names, W, noise=self.noise)
+        return FadingReady(design, names, W, "Satterthwaite", noise=self.noise)
 
     def conventions(self) -> tuple[tuple[str, Car1], ...]:
         return (
@@ -308,7 +297,7 @@ class Arma(Plain):
         longest = int(series.part.sizes.max())
         orders = tuple(o for o in self.orders if max(o) <= max(1, longest // 10) or o == (1, 0))
         names, W = reported(design)
-        return ArmaReady(design, names, W, orders=orders or ((1, 0),))
+        return ArmaReady(design, names, W, "Satterthwaite", orders=orders or ((1, 0),))
 
     def conventions(self) -> tuple[tuple[str, Arma], ...]:
         return tuple(

@@ -2,7 +2,7 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable, Mapping
+from collections.abc import Callable
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -18,8 +18,8 @@ from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
 from clingstone.maths.once import Array, kept
 from clingstone.maths.search import minimise
-from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import Column, estimates, plain_df
+from clingstone.needs import Family, Limits, Needs, NotSupported
+from clingstone.remedies.columns import Column, FittedReady, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import Spread
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
@@ -56,25 +56,17 @@ class Found:
         return Column.even(self.coef, self.slopes.phi, self.fixed_df)
 
 
-@dataclass(frozen=True, eq=False)
-class SpatialErrorReady:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class SpatialErrorReady(FittedReady):
     """Autoregressive errors over one design; λ is fitted at each reading."""
 
     remedy: SpatialError
-    design: Design
-    names: tuple[str, ...]
-    W: Array
-    rule: str
     near: Neighbours
     links: sar.Links
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     def fit(self, fits: Fits) -> Estimates:
         found = self._columns(fits.response)
-        return estimates(
-            self.design,
-            self.W,
+        return self.estimates(
             [one.column for one in found],
             fits.run.settings.confidence,
             np.array([one.edge for one in found]),
@@ -327,7 +319,7 @@ class SpatialError(Plain):
         links = links_of(design, near)
         if chosen.estimation != "moments":
             links.logdet(np.zeros(1))  # the factorizations belong to the design, not to y
-        return SpatialErrorReady(chosen, design, names, W, rule, near, links)
+        return SpatialErrorReady(design, names, W, rule, remedy=chosen, near=near, links=links)
 
     def conventions(self) -> tuple[tuple[str, SpatialError], ...]:
         return (

@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -16,8 +15,8 @@ from clingstone.maths import visits
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
-from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, Rule, apart, estimates, plain_df
+from clingstone.needs import Family, Limits, Needs, NotSupported
+from clingstone.remedies.columns import FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
 
@@ -28,20 +27,14 @@ MOST_VISITS = 10  # 55 variances and covariances
 PAIRS = 3  # subjects beyond the number of visits that must be seen at each pair of them
 
 
-@dataclass(frozen=True, eq=False)
-class VisitsReady:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class VisitsReady(FittedReady):
     """Subjects and visits of one design; Σ is fitted to every column of y."""
 
     remedy: Unstructured
-    design: Design
     part: Partition
     visit: npt.NDArray[np.int64]
     labels: tuple[str, ...]
-    names: tuple[str, ...]
-    W: Array
-    rule: str
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     def fit(self, fits: Fits) -> Estimates:
         response = fits.response
@@ -53,7 +46,7 @@ class VisitsReady:
             start = found.sigma if start is None else start
         confidence = fits.run.settings.confidence
         none = np.zeros(response.B, dtype=bool)
-        return estimates(self.design, self.W, columns, confidence, none, np.array(settled))
+        return self.estimates(columns, confidence, none, np.array(settled))
 
     def _fitted(self, response: Response, start: Array | None) -> tuple[visits.Visits, visits.Found]:
         restricted = self.remedy.estimation == "REML"
@@ -158,7 +151,9 @@ class Unstructured(Plain):
         visit, labels = _visits(design)
         _enough(part, visit, labels, design)
         names, W = reported(design)
-        return VisitsReady(self, design, part, visit, labels, names, W, RULES[self.df])
+        return VisitsReady(
+            design, names, W, RULES[self.df], remedy=self, part=part, visit=visit, labels=labels
+        )
 
     def conventions(self) -> tuple[tuple[str, Unstructured], ...]:
         return (
