@@ -325,3 +325,15 @@ def test_a_left_out_group_is_drawn_against_the_coefficient_with_all():
     (plate,) = curves.plates(replace(fixture.wells(), evidence=(given,)))
     assert plate.caption == "Coefficient of Dose without each farm in turn"
     assert "all groups: 0.100" in plate.alt
+
+
+def test_of_many_groups_left_out_the_two_ends_are_named():
+    n = curves.LISTED + 60
+    y = tuple(np.linspace(-1, 1, n).tolist())
+    curve = Curve("left-out", tuple(map(float, range(n))), y, labels=tuple(f"herd {i}" for i in range(n)),
+                  x_name="herd", y_name="coefficient of x without it",
+                  lines={"all groups": ((0.0, 1.0), (0.1, 0.1))})  # fmt: skip
+    figure = curves.paint_left_out(curve, "lookalike", WIDE)
+    (words,) = [t.get_text() for t in figure.texts if "herd" in t.get_text()]
+    assert words == f"line: all groups; top: herd 0; bottom: herd {n - 1}"
+    assert figure.get_size_inches()[1] * 72 < 600

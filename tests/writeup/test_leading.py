@@ -40,8 +40,8 @@ def test_second_looks_that_agree_are_folded_and_another_question_leads():
         told("group-lm", "present"),
         told("group-f", "present", primary=True),
         told("restricted-lr", "present"),
-        told("slope-variation", "unclear"),
-        told("group-endogeneity", "not detected"),
+        told("slope-variation", "present"),
+        told("group-endogeneity", "unclear"),
     ]
     assert [f.test for f in leading(found)] == ["group-f", "slope-variation"]
 
@@ -77,6 +77,28 @@ def test_of_the_mean_the_reading_with_most_fitted_decides():
     assert with_most_given([alone, beside]) == [beside]
 
 
+def test_two_readings_in_the_same_words_lead_once():
+    found = [
+        told("group-f", "present", primary=True),
+        told("group-f", "not detected", ("serial",)),
+        told("restricted-lr", "not detected", ("serial",)),
+    ]
+    found[2] = replace(found[2], sentence=found[1].sentence)
+    assert leading(found) == found[:2]
+
+
+def test_checks_that_could_not_tell_are_counted_where_nothing_leads():
+    found = (
+        told("outliers", "unclear", structure="lookalike"),
+        told("normality", "not detected", structure="lookalike"),
+        told("functional-form", "not applicable", structure="mean"),
+    )
+    page = Page(report(replace(fixture.trial(), evidence=found)))
+    assert "Nothing was detected here; 1 check could not tell." in page.text
+    assert "2 findings, 1 of them unclear, with statistics" in page.text
+    assert "None of these checks could be run on these data." in page.text
+
+
 def test_the_page_keeps_every_finding_and_folds_what_does_not_lead():
     found = (
         told("group-f", "present", primary=True),
@@ -91,7 +113,7 @@ def test_the_page_keeps_every_finding_and_folds_what_does_not_lead():
     assert len(folds) == 2
     assert "group-lm says present" in folds[0]
     assert "group-f says present" not in folds[0].split("<table")[0]
-    assert "Everything that was looked at: 2 findings" in page.text
+    assert "Everything that was looked at: 2 findings, with statistics" in page.text
     assert "Nothing was detected here." in page.text
 
 

@@ -300,6 +300,8 @@ def paint_left_out(curve: Curve, structure: str, width: float) -> Figure:
     row = 19.0 if labelled else max(1.2, min(8.0, 420 / several))
     left = min(150.0, 0.36 * width) if labelled else 8.0
     note = "; ".join(f"line: {name}" for name in curve.lines)
+    if curve.labels and not labelled:
+        note += f"; top: {clip(curve.labels[0], 110, SMALL)}; bottom: {clip(curve.labels[-1], 110, SMALL)}"
     said = curve.y_name or "coefficient without the group"
     figure = blank(width, 58 + row * several + room(width, note, said))
     panel = axes(figure, left, 6, width - left - 12, row * several + 6)

@@ -7,7 +7,6 @@ from collections.abc import Iterable, Sequence
 from clingstone.evidence.finding import Finding
 
 STRUCTURES = ("group", "serial", "spatial")
-SEEN = ("present", "unclear")
 # Tests that ask another question than whether there is dependence: their answer changes the reading.
 ANOTHER_QUESTION = (
     "break",
@@ -24,16 +23,17 @@ def leading(found: Sequence[Finding]) -> list[Finding]:
     """Of the findings of one structure those that come first, the primary ones before the others.
 
     For a structure: its primary test, alone and with other structures fitted; any reading that tells
-    otherwise than the primary one; answers to another question. For the mean and for look-alikes: what
-    is still seen by the reading that has most fitted first.
+    otherwise than the primary one; what is present of another question. For the mean and for look-alikes:
+    what is still present by the reading that has most fitted first. Two readings in the same words lead once.
     """
     last = {id(f) for f in with_most_given(found)}
     first = [f for f in found if f.primary or _changes(f, found, id(f) in last)]
-    return sorted(first, key=lambda f: not f.primary)
+    once = {f.sentence: f for f in reversed(first)}
+    return sorted((f for f in first if once[f.sentence] is f), key=lambda f: not f.primary)
 
 
 def _changes(f: Finding, found: Sequence[Finding], last: bool) -> bool:
-    seen = f.verdict in SEEN
+    seen = f.verdict == "present"
     if f.structure not in STRUCTURES or f.test in ANOTHER_QUESTION:
         return seen and last
     own = [p for p in found if p.primary]
@@ -44,7 +44,7 @@ def _changes(f: Finding, found: Sequence[Finding], last: bool) -> bool:
     verdicts = {p.verdict for p in own}
     if f.given:
         return f.verdict not in verdicts and f.verdict != "not applicable"
-    return f.verdict == "present" and "present" not in verdicts
+    return seen and "present" not in verdicts
 
 
 def with_most_given(found: Iterable[Finding]) -> list[Finding]:

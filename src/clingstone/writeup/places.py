@@ -100,7 +100,7 @@ def paint_map(curve: Curve, structure: str, width: float, lonlat: bool = False) 
 
 
 def paint_local(curve: Curve, structure: str, width: float, lonlat: bool = False) -> Figure:
-    """Sites that stand out as large marks, the others as faint dots.
+    """Sites that stand out as large marks, the others as dots.
 
     Filled lies above the fit, hollow below. The mark of places: like its neighbours; a diamond: unlike them.
     """
@@ -109,7 +109,7 @@ def paint_local(curve: Curve, structure: str, width: float, lonlat: bool = False
     figure, panel, tall = _ground(curve, width, lonlat, 12 + 20.0 * (len(kinds) + 1))
     label = np.array(curve.labels)
     plain = label == ""
-    panel.plot(x[plain], y[plain], "o", color=LIGHT.faint, markersize=3, zorder=1)
+    panel.plot(x[plain], y[plain], "o", color=LIGHT.muted, markersize=2.5, zorder=1)
     line = tall + 52
     for words in kinds:
         chosen = label == words
@@ -118,7 +118,7 @@ def paint_local(curve: Curve, structure: str, width: float, lonlat: bool = False
         _key(figure, line, f"{words}: {count(int(chosen.sum()), 'site')}", style)
         line += 20
     if plain.any():
-        dot = {"marker": "o", "color": LIGHT.faint, "markersize": 3}
+        dot = {"marker": "o", "color": LIGHT.muted, "markersize": 2.5}
         _key(figure, line, f"not told from independent data: {count(int(plain.sum()), 'site')}", dot)
     _settle(figure, panel, curve, tall, lonlat)
     return figure

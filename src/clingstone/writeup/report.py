@@ -247,7 +247,7 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
                 "findings": [_finding(results, f) for f in first],
                 "silent": "" if first else _silent(found),
                 "others": [_finding(results, f) for f in rest],
-                "looked": count(len(found), "finding"),
+                "looked": _looked(found),
                 "plates": [_plate(p) for p in drawn if not p.quiet],
                 "quiet": [_plate(p) for p in quiet[:QUIET]],
                 "more": count(max(0, len(quiet) - QUIET), "more figure"),
@@ -264,7 +264,17 @@ def _silent(found: list[Finding]) -> str:
     if not asked:
         return "None of these checks could be run on these data."
     given = any(f.given for f in asked)
-    return "Nothing was detected here" + (" once the dependence is fitted." if given else ".")
+    unclear = sum(f.verdict == "unclear" for f in asked)
+    text = "Nothing was detected here" + (" once the dependence is fitted" if given else "")
+    if unclear:
+        text += f"; {count(unclear, 'check')} could not tell"
+    return f"{text}."
+
+
+def _looked(found: list[Finding]) -> str:
+    """ "21 findings, 3 of them unclear"."""
+    unclear = sum(f.verdict == "unclear" for f in found)
+    return count(len(found), "finding") + (f", {unclear} of them unclear" if unclear else "")
 
 
 def _finding(results: Results, f: Finding) -> dict[str, Any]:
