@@ -5,7 +5,7 @@ from __future__ import annotations
 from clingstone.evidence.finding import About, Curve, Evidence, Finding, Reading, Test
 from clingstone.evidence.gather import Columns, Item, gather, read_column, read_columns
 from clingstone.evidence.judge import VERDICTS
-from clingstone.evidence.registry import TESTS
+from clingstone.evidence.registry import TESTS, by_id
 
 __all__ = [
     "TESTS",
@@ -18,6 +18,7 @@ __all__ = [
     "Item",
     "Reading",
     "Test",
+    "by_id",
     "gather",
     "read_column",
     "read_columns",

@@ -61,3 +61,11 @@ TESTS: tuple[Test, ...] = (
     Normality(),
     Duplicates(),
 )
+
+
+def by_id(test: str) -> Test:
+    """The registered test of an id. Raises KeyError."""
+    for found in TESTS:
+        if found.id == test:
+            return found
+    raise KeyError(test)
