@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-from collections.abc import Mapping
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -16,7 +15,7 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import covered, sizes_of
-from clingstone.remedies.columns import apart
+from clingstone.remedies.columns import FittedReady, apart
 from clingstone.remedies.joint import Joint, f_joint, hotelling_joint
 from clingstone.remedies.linear import blanked, positive_m, reported
 from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Flags, Plain, multi
@@ -48,18 +47,12 @@ class Whitened:
     scores: Array
 
 
-@dataclass(frozen=True, eq=False)
-class MixedRobustReady:
+@dataclass(frozen=True, eq=False, kw_only=True)
+class MixedRobustReady(FittedReady):
     """GLS under random intercepts, its covariance from clusters that hold them whole."""
 
     remedy: MixedRobust
-    design: Design
     part: Partition
-    names: tuple[str, ...]
-    W: Array
-    rule: str
-    unusable: Mapping[str, Refusal] = field(default_factory=dict)
-    notes: tuple[str, ...] = ()
 
     @property
     def _scale(self) -> float:
@@ -227,7 +220,7 @@ class MixedRobust(Plain):
                 "clusters leaves some combination of coefficients with no spread at all",
                 "Use the random intercept with its own covariance, or a smaller model.",
             )
-        return MixedRobustReady(self, design, part, names, W, CLUSTER_RULES[self.df], unusable)
+        return MixedRobustReady(design, names, W, CLUSTER_RULES[self.df], unusable, remedy=self, part=part)
 
     def conventions(self) -> tuple[tuple[str, MixedRobust], ...]:
         return (
