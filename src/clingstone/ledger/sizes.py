@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
+from scipy import stats
 
 from clingstone.covariance.fits import Fits
 from clingstone.display import NBSP, significant
@@ -44,14 +45,39 @@ def parameters(fits: Fits, kept: Region, full: Region) -> tuple[Parameter, ...]:
         read = {"group": _group, "serial": _serial, "spatial": _spatial}.get(component.family)
         if read is not None:
             out += read(fits, at, key, note)
-        out.append(_deviation(at, key, note))
-    out.append(_deviation(kept, "row", ""))
+        out.append(_deviation(fits, at, key, note))
+    out.append(_deviation(fits, kept, "row", ""))
     return tuple(out)
 
 
-def _deviation(at: Region, key: str, note: str) -> Parameter:
-    low, estimate, high = at.interval(np.sqrt(at.model.variances[key]))
-    return Parameter(key, "standard deviation", estimate, low, high, "", note)
+def _deviation(fits: Fits, at: Region, key: str, note: str) -> Parameter:
+    low, estimate, high = np.sqrt(variance(at, key, fits.design.m))
+    return Parameter(key, "standard deviation", float(estimate), float(low), float(high), "", note)
+
+
+def variance(at: Region, key: str, m: int) -> tuple[float, float, float]:
+    """low, estimate, high of a variance σ²rₖ(θ), with what σ² itself could be.
+
+    The region holds σ² at its best value for each θ. Given θ, the weighted residual sum of squares over
+    σ² is χ² with the m residual degrees of freedom; its limits at θ̂ and those over the region move ln σ²rₖ
+    by two distances that, for a quadratic log-likelihood, join to the profile limit as the root of their
+    sum of squares. Never narrower than what single points of the region allow with the part of the
+    likelihood ratio that they leave over. Without θ it is the exact χ² interval.
+    """
+    values = np.asarray(at.model.variances[key], dtype=float)
+    low, estimate, high = at.interval(values)
+    if not np.isfinite(estimate):
+        return low, estimate, high
+    left = np.maximum(stats.chi2.isf(1 - at.confidence, 1) - 2 * (at.model.loglik[0] - at.model.loglik), 0.0)
+    tail = stats.chi2.sf(left, 1) / 2
+    down, up = m / stats.chi2.isf(tail, m), m / stats.chi2.ppf(tail, m)
+    ends = values * np.minimum(down, 1.0), values * np.maximum(up, 1.0)
+    least, most = float(np.nanmin(ends[0])), float(np.nanmax(ends[1]))
+    if low > 0:
+        least = min(least, estimate * float(np.exp(-np.hypot(np.log(estimate / low), np.log(down[0])))))
+    if estimate > 0:
+        most = max(most, estimate * float(np.exp(np.hypot(np.log(high / estimate), np.log(up[0])))))
+    return least, estimate, most
 
 
 def total(at: Region) -> Array:

@@ -92,6 +92,8 @@ def restricted_lr(fits: Fits, key: str) -> tuple[float, str]:
     1994), exact in the limit of many units and conservative with few; below 30 units a parametric
     bootstrap where the models are small. For a spatial variance, whose range does not exist under the
     null (Davies 1987), ½χ²₀ + ½χ²₂: no limit law, but conservative in simulations (about 3 % at 5 %).
+    A bootstrap of 199 draws cannot say less than 0.005: where the mixture does, its p stands, an upper
+    bound that the draws would only repeat.
     """
     rest = fits.full_node - {key}
     try:
@@ -106,7 +108,8 @@ def restricted_lr(fits: Fits, key: str) -> tuple[float, str]:
         return (0.5 * two if statistic > 0 else 1.0), "½χ²₀ + ½χ²₂, conservative"
     part = fits.design.partitions.get(fits.components[key].part)
     many = part is not None and part.count >= UNITS
-    if not many and statistic >= SMALL and len(fits.full.names) <= GRIDDED:
+    drawn = statistic >= SMALL and 0.5 * one >= 1 / (1 + DRAWS)
+    if not many and drawn and len(fits.full.names) <= GRIDDED:
         return _bootstrap(fits, key, rest, statistic)
     return (0.5 * one if statistic > 0 else 1.0), "½χ²₀ + ½χ²₁" + ("" if many else ", conservative")
 
@@ -316,29 +319,58 @@ def _unfitted(fits: Fits, evidence: Evidence, done: set[str]) -> tuple[Standing,
         label = fits.components[key].label if key in fits.components else label
         refusal = fits.refused.get(key) or fits.left_out.get(key)
         reason = f" Its size is not estimated: {refusal.reason}." if refusal is not None else ""
-        if finding is None:
-            verdict: Verdict = "not applicable"
-            because = f"No test could be made.{reason}"
-        else:
-            p = finding.p if finding.p_adjusted is None else finding.p_adjusted
-            verdict = finding.verdict
-            because = ("Its own test shows it." if p < LEVEL else "Its own test does not show it.") + reason
-        out.append(
-            Standing(
-                family,
-                key,
-                label,
-                verdict,
-                finding.p if finding is not None else float("nan"),
-                float("nan"),
-                (),
-                because,
-                matters=_unsized_matters(finding),
-                fixed=key in fixed,
-                widens=_unsized_matters(finding),
-            )
-        )
+        out.append(_unsized(key, family, label, finding, _beside(evidence, finding), reason, key in fixed))
     return tuple(out)
+
+
+def _unsized(
+    key: str,
+    family: Family,
+    label: str,
+    finding: Finding | None,
+    beside: Finding | None,
+    reason: str,
+    fixed: bool,
+) -> Standing:
+    """A structure without a fitted component. beside : its own test with groups taken into account."""
+    verdict: Verdict = "not applicable"
+    because, matters, widens = "No test could be made.", False, False
+    if finding is not None:
+        p = finding.p if finding.p_adjusted is None else finding.p_adjusted
+        verdict, matters = finding.verdict, _unsized_matters(finding)
+        widens = matters
+        because = "Its own test shows it." if p < LEVEL else "Its own test does not show it."
+        if beside is not None and p < LEVEL:
+            names = _and([name.removeprefix("group:") for name in beside.given])
+            if beside.p < LEVEL:
+                because = f"Its own test shows it, and still with {names} taken into account."
+            else:
+                verdict = beside.verdict
+                matters = widens = verdict == "unclear"
+                verb = "may be" if widens else "is"
+                because = f"Its own test shows it, but its signal {verb} explained by {names}."
+    return Standing(
+        family,
+        key,
+        label,
+        verdict,
+        finding.p if finding is not None else float("nan"),
+        beside.p if beside is not None else float("nan"),
+        () if beside is None else tuple(name.removeprefix("group:") for name in beside.given),
+        because + reason,
+        "" if beside is None else beside.p_method,
+        matters=matters,
+        fixed=fixed,
+        widens=widens,
+    )
+
+
+def _beside(evidence: Evidence, finding: Finding | None) -> Finding | None:
+    """The same test read with other structures taken into account; None where it was not."""
+    if finding is None:
+        return None
+    same = [f for f in evidence if f.test == finding.test and f.about == finding.about and f.given]
+    return next((f for f in same if np.isfinite(f.p)), None)
 
 
 def _unsized_matters(finding: Finding | None) -> bool:
