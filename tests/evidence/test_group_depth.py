@@ -13,7 +13,7 @@ from clingstone.evidence.finding import About
 from clingstone.evidence.gather import gather
 from clingstone.evidence.grouplm import GroupLM, scores
 from clingstone.evidence.influence import GroupInfluence, influence
-from clingstone.evidence.levels import ClusterLevel, sums
+from clingstone.evidence.levels import ClusterLevel, _reach, sums
 from clingstone.evidence.restricted import RestrictedLR
 from clingstone.evidence.slopes import SlopeVariation, spread
 from clingstone.needs import NotSupported
@@ -156,6 +156,46 @@ def test_with_few_coarse_clusters_fine_ones_are_resampled():
         assert reading.p_method.startswith("wild bootstrap")
         rejected += bool(reading.p[0] < 0.05)
     assert rejected <= 3 + 3 * np.sqrt(60 * 0.05 * 0.95)
+
+
+def test_interval_of_the_level_comparison_is_that_of_two_variances_with_few_df():
+    """Balanced groups and a mean of groups: G − 1 df above (the constant takes one), m below."""
+    G, n = 12, 10
+    rng = np.random.default_rng(3)
+    g = np.repeat(np.arange(G), n)
+    x = np.repeat(np.tile([-1.0, 1.0], G // 2), n)
+    made = make.design(x, groups={"g": g})
+    fits = make.fits(made, rng.normal(size=G)[g] + rng.normal(size=G * n))
+    reading = ClusterLevel().read(fits, About("g over row: x1", ""))
+    size = float(reading.estimate[0])
+    # Satterthwaite df of the working model: (tr N)²/tr N², N the covariance of cluster scores after the fit.
+    w = made.basis.contrast(np.eye(made.p)[1])
+    M = np.eye(made.n) - made.Q @ made.Q.T
+    Z = np.eye(G)[g]
+    A = (Z * (made.Q @ w)[:, None]).T @ M  # scores of clusters, adjusted by one factor here
+    N = A @ A.T
+    df = np.trace(N) ** 2 / np.trace(N @ N)
+    assert df == pytest.approx(G - 2)
+    assert float(reading.low[0]) == pytest.approx(size / np.sqrt(stats.f.isf(0.025, df, made.m)), rel=1e-6)
+    assert float(reading.high[0]) == pytest.approx(size / np.sqrt(stats.f.ppf(0.025, df, made.m)), rel=1e-6)
+
+
+def test_interval_of_the_level_comparison_holds_the_truth():
+    """Balanced groups: the variance of a mean grows by 1 + (n − 1)ρ; 300 draws at 95 %."""
+    G, n = 12, 8
+    rng = np.random.default_rng(4)
+    g = np.repeat(np.arange(G), n)
+    made = make.design(np.repeat(np.tile([-1.0, 1.0], G // 2), n), groups={"g": g})
+    held = 0
+    for _ in range(300):
+        fits = make.fits(made, rng.normal(size=G)[g] + rng.normal(size=G * n))
+        coarse, w = made.group["g"], made.basis.contrast(np.eye(made.p)[1])
+        s = (made.Q @ w)[:, None] * fits.response.residual
+        theta, _, fine = sums(s, coarse.codes, G)
+        lower, upper = _reach(fits, coarse, None, made.focus()[0], w)
+        size = float(np.sqrt(1 + theta / fine)[0])
+        held += size * lower <= np.sqrt(1 + (n - 1) * 0.5) <= size * upper
+    assert held / 300 > 0.88
 
 
 def test_bootstrap_scores_equal_refits_row_by_row():

@@ -12,8 +12,9 @@ from clingstone.design.design import Design, Term
 from clingstone.display import bounds, number, p_value
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import level_name
-from clingstone.evidence.read import Plain, degenerate, exceedance, normal_quantile
-from clingstone.maths.once import Array
+from clingstone.evidence.read import Plain, degenerate, exceedance
+from clingstone.maths import sandwich
+from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
 
@@ -35,7 +36,8 @@ class ClusterLevel(Plain):
     With s_h = w'Q_h'e_h the score of fine cluster h, θ = Σ_g [(Σ_h s_h)² − Σ_h s_h²] has mean zero when fine
     clusters are independent, and variance 2Σ_g [(Σ_h s_h²)² − Σ_h s_h⁴]; one-sided (MacKinnon, Nielsen &
     Webb 2023). With fewer than 20 coarse clusters the p comes from a wild bootstrap at the fine level. The
-    variance is the plug-in; the published refinements for small samples are not in it.
+    variance is the plug-in; the published refinements for small samples are not in it. The interval of
+    the ratio of standard errors is that of a ratio of two variances with their Satterthwaite df.
     """
 
     id: str = "cluster-level"
@@ -71,10 +73,8 @@ class ClusterLevel(Plain):
         lost = degenerate(fits.response)
         with np.errstate(divide="ignore", invalid="ignore"):
             z = np.where(lost | ~(variance > 0), np.nan, theta / np.sqrt(variance))
-            half = normal_quantile(fits) * np.sqrt(variance)
-            size, low, high = (
-                np.sqrt(np.maximum(1 + part / fine_sum, 0.0)) for part in (theta, theta - half, theta + half)
-            )
+            size = np.where(lost, np.nan, np.sqrt(np.maximum(1 + theta / fine_sum, 0.0)))
+        lower, upper = _reach(fits, coarse, fine, term, w)
         few = coarse.count < FEW and fits.response.B == 1
         p = _bootstrap(fits, fine, up, coarse.count, w, z) if few else special.ndtr(-z)
         return Reading(
@@ -83,10 +83,10 @@ class ClusterLevel(Plain):
             p=np.asarray(p),
             log_p=None if few else np.asarray(stats.norm.logsf(z)),
             p_method=f"wild bootstrap of fine clusters, {DRAWS} draws" if few else "normal limit, one-sided",
-            estimate=np.where(lost, np.nan, size),
+            estimate=size,
             estimate_name="standard error by coarse clusters over that by fine ones",
-            low=low,
-            high=high,
+            low=size * lower,
+            high=size * upper,
             n_used=design.n,
             caveats=(f"There are only {coarse.count} coarse clusters.",) if coarse.count < 10 else (),
         )
@@ -152,6 +152,32 @@ def _bootstrap(fits: Fits, fine: Partition | None, up: Array, G: int, w: Array, 
         theta, variance, _ = sums(again, up, G)
         drawn.append(theta / np.sqrt(np.maximum(variance, 1e-300)))
     return exceedance(z, np.concatenate(drawn))
+
+
+def _reach(
+    fits: Fits, coarse: Partition, fine: Partition | None, term: Term, w: Array
+) -> tuple[float, float]:
+    """What both ends of the interval of a ratio of standard errors are to the ratio; NaN under one df.
+
+    Each variance is a sum of squares of cluster scores, about χ² over its Satterthwaite df under the
+    working model of like rows (Bell & McCaffrey 2002): their ratio is read by F.
+    """
+    design = fits.design
+    top = _df(design, coarse, term.name, w)
+    bottom = float(design.m) if fine is None else _df(design, fine, term.name, w)
+    if not (top >= 1 and bottom >= 1):
+        return float("nan"), float("nan")
+    tail = (1 - fits.run.settings.confidence) / 2
+    ends = stats.f.isf(tail, top, bottom), stats.f.ppf(tail, top, bottom)
+    return float(1 / np.sqrt(ends[0])), float(1 / np.sqrt(ends[1]))
+
+
+def _df(design: Design, part: Partition, name: str, w: Array) -> float:
+    def make() -> float:
+        found = sandwich.adjust(design.scores(part), w[:, None], "CR2")
+        return float(sandwich.cluster_df(found.a, found.b)[0])
+
+    return kept(design, ("score variance df", part.key, name), make)
 
 
 def _up(coarse: Partition, fine: Partition | None) -> Array:
