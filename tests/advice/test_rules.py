@@ -35,6 +35,7 @@ LATE = {
     "term of the widest second opinion",
     "another order fits better",
     "randomisation stands beside",
+    "advised refit allows unequal spread",
     "slope model settled",
     "mixed refit at its bound",
 }

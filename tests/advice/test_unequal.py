@@ -117,9 +117,12 @@ def test_covariates_that_bend_like_time_place_or_groups():
     t, g = np.arange(60), np.repeat(np.arange(10), 6)
     xy = rng.uniform(0, 10, (60, 2))
     rough = rng.standard_normal(60)
-    along = make.design({"slow": np.sin(t / 12), "rough": rough}, tick=t)
+    month = rng.standard_normal(12)[t % 12] + 0.3 * rough
+    along = make.design({"slow": np.sin(t / 12), "month": month, "rough": rough}, tick=t)
     over = make.design({"east": xy[:, 0], "rough": rough}, xy=xy)
     of = make.design({"z": rng.standard_normal(10)[g], "rough": rough}, groups={"g": g})
-    found = [smooth.smooth_in(d, k) for d, k in ((along, "slow"), (over, "east"), (of, "z"))]
-    assert found == ["serial", "spatial", "group"]
+    found = [
+        smooth.smooth_in(d, k) for d, k in ((along, "slow"), (along, "month"), (over, "east"), (of, "z"))
+    ]
+    assert found == ["serial", "serial", "spatial", "group"]
     assert [smooth.smooth_in(d, "rough") for d in (along, over, of)] == [None, None, None]

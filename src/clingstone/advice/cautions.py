@@ -296,7 +296,7 @@ CAVEATS = (
     ),
     Rule(
         "unequal-variances",
-        fact("unequal variances"),
+        fact("unequal variances") & ~fact("advised refit allows unequal spread"),
         Then("caution"),
         "The residuals spread unequally; intervals that assume equal spread may be off.",
         "white-1980, mackinnon-white-1985",

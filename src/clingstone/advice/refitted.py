@@ -11,6 +11,20 @@ from clingstone.remedies.remedy import Interval, Refit
 
 ROBUST = "cluster-robust"
 NOTHING = 1e-6  # a share that is estimated at zero
+ANY_SPREAD = (  # let every row, group or time have its own variance
+    "heteroscedasticity-robust",
+    "cluster-robust",
+    "cluster-jackknife",
+    "wild-cluster-bootstrap",
+    "multiway-cluster",
+    "mixed-robust",
+    "group-means",
+    "group-t",
+    "hac",
+    "panel-hac",
+    "spatial-hac",
+    "region-cluster",
+)
 ORDERED = ("ar1", "car1", "arma", "joint")
 
 
@@ -71,6 +85,11 @@ def advised_facts(
         yes("advised refit did not converge", not settled, "the advised refit's search did not settle"),
         *_moved(facts, refits, chosen),
         *_second(facts, refits, chosen),
+        yes(
+            "advised refit allows unequal spread",
+            chosen.remedy in ANY_SPREAD,
+            "the advised refit does not assume equal spread",
+        ),
         yes(
             "randomisation stands beside",
             any(r.remedy == "randomisation" and r is not chosen for r in refits),

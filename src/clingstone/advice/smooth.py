@@ -10,6 +10,8 @@ from clingstone.needs import Family
 from clingstone.structure.serial import Series
 
 SMOOTH = 0.8  # correlation with the next time, or with the mean of the neighbours
+RETURN, AGAIN = 5, 0.5  # steps from which a covariate is said to come back, and its correlation then
+LONGEST = 60  # steps within which it has to
 FITTED = 0.9  # share of a quadratic of time or place
 FEW_TIMES = 8  # mean rows of a series below which smoothness along it is not looked for
 FEW_GROUPS = 20  # of a level whose own differences a curve in a covariate of groups can pass for
@@ -32,7 +34,7 @@ def smooth_in(design: Design, name: str) -> Family | None:
 
 
 def along_time(series: Series, x: Array) -> bool:
-    """Whether x hardly moves from one row of its series to the next, or is nearly a quadratic of time."""
+    """Whether x hardly moves from one row of its series to the next, comes back, or is nearly a quadratic."""
     part = series.part
     if part.n / part.count < FEW_TIMES:
         return False
@@ -43,7 +45,19 @@ def along_time(series: Series, x: Array) -> bool:
     next_one = part.codes[1:] == part.codes[:-1]
     near = float(np.sum((centred[1:] * centred[:-1])[next_one])) / total
     t = series.elapsed
-    return near > SMOOTH or _explained(np.column_stack([t, t * t]), x) > FITTED
+    return near > SMOOTH or _returns(series, centred) or _explained(np.column_stack([t, t * t]), x) > FITTED
+
+
+def _returns(series: Series, centred: Array) -> bool:
+    """Whether a covariate comes back several steps later: then its curve bends like a cycle of the errors."""
+    if series.tick is None or series.ties:
+        return False
+    mean = float(np.mean(centred**2))
+    for lag in range(RETURN, min(LONGEST, int(series.part.sizes.max()) // 4) + 1):
+        later, earlier = series.pairs(lag)
+        if len(later) >= FEW_TIMES and float(np.mean(centred[later] * centred[earlier])) > AGAIN * mean:
+            return True
+    return False
 
 
 def over_map(design: Design, x: Array) -> bool:

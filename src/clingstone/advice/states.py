@@ -107,12 +107,7 @@ STATES = (
     ),
     Rule(
         "season-in-errors",
-        SERIAL
-        & ~GROUP
-        & ~SPATIAL
-        & fact("correlation that returns")
-        & fact("first order does not fit")
-        & ~fact("mean in doubt"),
+        SERIAL & ~GROUP & ~SPATIAL & fact("correlation that returns") & fact("first order does not fit"),
         Then(
             "state",
             "not correctable",
