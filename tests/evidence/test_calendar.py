@@ -117,9 +117,22 @@ def test_hidden_cycle_and_its_size() -> None:
     where = about(SEASON, made, "unknown")
     found = SEASON.read(fits(made, np.cos(2 * np.pi * np.arange(100) / 10) + rng.normal(size=100)), where)
     assert found.p[0] == pytest.approx(0.001)
-    assert "of 10 steps" in SEASON.sentence(found, where)
+    assert "of 10 rows, holds" in SEASON.sentence(found, where)
     p = [SEASON.read(fits(made, rng.normal(size=100)), where).p[0] for _ in range(300)]
     assert float(np.mean(np.array(p) < 0.05)) == pytest.approx(0.05, abs=0.035)
+
+
+@pytest.mark.parametrize(
+    ("unit", "step", "words"),
+    [("", 1 / 12, "of 12 rows (1 in "), ("year", 1.0, "of 12 years"), ("", 1.0, "of 12 rows,")],
+)
+def test_a_hidden_cycle_is_told_in_the_unit_of_the_times(unit: str, step: float, words: str) -> None:
+    made = dated(96, unit, step=step)
+    noise = 0.1 * np.random.default_rng(9).normal(size=96)
+    found = SEASON.read(
+        fits(made, np.cos(2 * np.pi * np.arange(96) / 12) + noise), about(SEASON, made, "unknown")
+    )
+    assert words in SEASON.sentence(found, about(SEASON, made, "unknown"))
 
 
 def test_curve_of_the_pattern() -> None:

@@ -8,6 +8,7 @@ import numpy as np
 import pytest
 from scipy import stats
 
+from clingstone.design.design import Term
 from clingstone.evidence.endogeneity import GroupEndogeneity
 from clingstone.evidence.finding import About
 from clingstone.evidence.gather import gather
@@ -240,6 +241,37 @@ def test_endogeneity_size_under_dependence_and_power():
     assert np.mean(GroupEndogeneity().read(make.fits(made, y), About("x1 by g", "")).p < 0.05) > 0.7
 
 
+def several(between, B, G=40, n=5, seed=8):
+    """Two predictors whose group means both move y by the same small extra."""
+    rng = np.random.default_rng(seed)
+    g = np.repeat(np.arange(G), n)
+    mean = rng.normal(size=(2, G))
+    X = mean[:, g] + rng.normal(size=(2, G * n))
+    made = make.design(X[0], X[1], groups={"g": g})
+    extra = between * (mean[0] + mean[1])[g][:, None]
+    Y = extra + 0.7 * rng.normal(size=(G, B))[g] + rng.normal(size=(G * n, B))
+    return made, Y, g, X
+
+
+def test_all_group_means_are_tested_at_once():
+    made, Y, *_ = several(0.0, 400)
+    about = next(a for a in GroupEndogeneity().abouts(made) if a.key == "all predictors by g")
+    p = GroupEndogeneity().read(make.fits(made, Y), about).p
+    assert np.mean(p < 0.05) == pytest.approx(0.05, abs=3 * np.sqrt(0.05 * 0.95 / 400))
+    made, Y, *_ = several(0.4, 100)
+    fits = make.fits(made, Y)
+    together = GroupEndogeneity().read(fits, about)
+    alone = GroupEndogeneity().read(fits, About("x1 by g", ""))
+    assert together.df == 2
+    assert np.mean(together.p < 0.05) > np.mean(alone.p < 0.05) > 0.3
+    assert "any predictor" in GroupEndogeneity().sentence(together, about)
+
+
+def test_one_moving_predictor_has_no_joint_test():
+    made, *_ = world()
+    assert [a.key for a in GroupEndogeneity().abouts(made)] == ["x1 by g"]
+
+
 def test_equal_means_cannot_be_asked():
     g = np.repeat(np.arange(8), 4)
     x = np.tile(np.arange(4.0), 8)
@@ -307,6 +339,23 @@ def test_two_rows_in_every_group_leave_slopes_unknown():
             make.fits(make.design(rng.normal(size=20), groups={"g": g}), rng.normal(size=20)),
             About("x1 by g", ""),
         )
+
+
+def test_slopes_are_compared_where_only_the_interaction_is_in_focus():
+    rng = np.random.default_rng(12)
+    g, day = np.repeat(np.arange(20), 6), np.tile(np.arange(6.0), 20)
+    arm = (g % 2).astype(float)
+    made = make.design(day, arm, day * arm, groups={"g": g})
+    x, a, _ = (t for t in made.terms if t.kind != "constant")
+    both = Term("x1 × x2", (3,), "interaction", ("x1", "x2"), True)
+    terms = (made.terms[0], replace(x, focus=False), replace(a, focus=False), both)
+    narrow = replace(made, terms=terms)
+    assert [b.key for b in SlopeVariation().abouts(narrow)] == ["x1 by g"]
+    y = rng.normal(size=20)[g] * day + rng.normal(size=120)
+    reading = SlopeVariation().read(make.fits(narrow, y), About("x1 by g", ""))
+    wide = SlopeVariation().read(make.fits(made, y), About("x1 by g", ""))
+    assert reading.statistic[0] == pytest.approx(wide.statistic[0])
+    assert reading.p[0] < 1e-6
 
 
 # ---- group-influence ----

@@ -23,6 +23,9 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 
+TOGETHER = "all predictors"
+
+
 @dataclass(frozen=True)
 class GroupEndogeneity(Plain):
     """Group means of row-level predictors added to the model; does one of them matter?
@@ -30,7 +33,8 @@ class GroupEndogeneity(Plain):
     Mundlak's (1978) form of the Hausman test: the coefficient of a group mean is the between effect less the
     within effect. Cluster-robust (CR2, Satterthwaite df; for several columns the approximate Hotelling T² of
     Pustejovsky & Tipton 2018), so it holds under any dependence within groups. Means of all predictors in
-    focus are in the model together while groups allow it.
+    focus are in the model together while groups allow it; where there are several, all are tested at once
+    too, as none may stand out where together they do.
     """
 
     id: str = "group-endogeneity"
@@ -42,23 +46,35 @@ class GroupEndogeneity(Plain):
     primary: bool = False
 
     def abouts(self, design: Design) -> tuple[About, ...]:
-        return tuple(
+        each = row_level(design)
+        out = [
             About(
                 f"{term.name}{BY}{level.key}", f"{term.name}, between against within {level_name(level.key)}"
             )
-            for level, term in row_level(design)
-        )
+            for level, term in each
+        ]
+        for level in dict.fromkeys(level for level, _ in each):
+            if sum(v is level for v, _ in each) > 1:
+                words = f"{TOGETHER}, between against within {level_name(level.key)}"
+                out.append(About(f"{TOGETHER}{BY}{level.key}", words))
+        return tuple(out)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
-        part, term = found(fits.design, about)
-        wider, columns = _widened(fits.design, part, term)
+        if about.key.startswith(TOGETHER + BY):
+            part = next(v for v, _ in row_level(fits.design) if about.key == f"{TOGETHER}{BY}{v.key}")
+            wider, columns = _all_widened(fits.design, part)
+            name = "several predictors"
+        else:
+            part, term = found(fits.design, about)
+            wider, columns = _widened(fits.design, part, term)
+            name = term.name
         response = onto(fits.response, wider)
         q = len(columns)
         W = wider.basis.contrast(np.eye(wider.p)[columns])
         weights = kept(wider, ("between", part.key, *columns), lambda: _weights(wider, part, W))
         if float(weights.lost.max()) > 1e-8:
             raise NotSupported(
-                f"one {level_name(part.key)} alone decides how {term.name} differs between groups",
+                f"one {level_name(part.key)} alone decides how {name} would differ between groups",
                 "More groups would be needed.",
             )
         S = response.scores(part)
@@ -70,7 +86,7 @@ class GroupEndogeneity(Plain):
         eta = sandwich.cluster_joint_df(weights.a, weights.b)
         if not eta - q + 1 > 0:
             raise NotSupported(
-                f"{part.count} groups of {part.key} are too few to compare {q} columns of {term.name}",
+                f"{part.count} groups of {part.key} are too few to compare {q} columns of {name}",
                 "More groups would be needed.",
             )
         F, df2 = reference.hotelling(reference.wald(effect, block), q, eta)
@@ -89,6 +105,12 @@ class GroupEndogeneity(Plain):
     def sentence(self, reading: Reading, about: About) -> str:
         name, _, level = about.key.rpartition(BY)
         p = p_value(column(reading.p))
+        if name == TOGETHER:
+            return (
+                f"Whether any predictor has another effect between groups of {level_name(level)} than within "
+                f"them: F = {significant(column(reading.statistic))} on "
+                f"{freedom(reading.df, reading.df2)}, {p}."
+            )
         if reading.estimate is None:
             return (
                 f"Whether {name} has another effect between groups of {level_name(level)} than within them: "
@@ -163,6 +185,32 @@ def _widened(design: Design, part: Partition, term: Term) -> tuple[Design, list[
         return wider, columns
 
     return kept(design, ("between", part.key, term.name), make)
+
+
+def _all_widened(design: Design, part: Partition) -> tuple[Design, list[int]]:
+    """The design with the group means of every moving term in focus that it can take; their places."""
+
+    def make() -> tuple[Design, list[int]]:
+        wider = design
+        for level, term in row_level(design):
+            if level is not part:
+                continue
+            more = _means(design, part, term)
+            if wider.p + more.shape[1] > part.count // 2:
+                continue
+            try:
+                wider = extend(wider, f"{term.name} between", more)
+            except NotSupported:
+                continue  # the model spans those means already
+        columns = list(range(design.p, wider.p))
+        if len(columns) < 2:
+            raise NotSupported(
+                f"fewer than two group means can be added beside the model at {level_name(part.key)}",
+                "More groups, or predictors whose means differ between them, would be needed.",
+            )
+        return wider, columns
+
+    return kept(design, ("all between", part.key), make)
 
 
 def _means(design: Design, part: Partition, term: Term) -> Array:

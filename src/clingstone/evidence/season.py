@@ -229,7 +229,7 @@ def _hidden(fits: Fits) -> Reading:
     else:
         p = np.array([np.nan if np.isnan(v) else fisher_tail(float(v), q) for v in g])
         method = "Fisher's law of white noise"
-    length = f"{amount(n / best * series.step)} {series.unit or 'step'}s"
+    length = _length(series, n / best)
     return Reading(
         statistic=g,
         statistic_name="g",
@@ -240,6 +240,15 @@ def _hidden(fits: Fits) -> Reading:
         n_used=n,
         caveats=("Slow dependence shows as a long cycle.",) if best <= 2 else (),
     )
+
+
+def _length(series: Series, steps: float) -> str:
+    """ "11 years", "12 rows (1 in decimal_year)": a cycle in the unit of its times, where they have one."""
+    span = steps * series.step
+    if series.unit:
+        return f"{amount(span)} {series.unit}{'' if amount(span) == '1' else 's'}"
+    rows = f"{amount(steps)} rows"
+    return rows if abs(series.step - 1) < 1e-9 else f"{rows} ({amount(span)} in {series.name})"
 
 
 def _pattern(fits: Fits, name: str) -> Curve | None:

@@ -9,12 +9,12 @@ import numpy as np
 from scipy import special
 
 from clingstone.design.derived import sweep
-from clingstone.design.design import Design
+from clingstone.design.design import Design, Term
 from clingstone.design.response import Response
 from clingstone.display import bounds, decimals_for, freedom, number, p_value, significant
 from clingstone.evidence.anova import absorbed
 from clingstone.evidence.finding import About, Reading, column
-from clingstone.evidence.groups import BY, covariate, found, level_name, row_level
+from clingstone.evidence.groups import BY, covariate, level_name, moving, row_level
 from clingstone.evidence.read import Plain, by_f, degenerate
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
@@ -48,13 +48,12 @@ class SlopeVariation(Plain):
     def abouts(self, design: Design) -> tuple[About, ...]:
         return tuple(
             About(f"{term.name}{BY}{level.key}", f"slopes of {term.name} between {level_name(level.key)}")
-            for level, term in row_level(design)
-            if covariate(design, term) is not None
+            for level, term in sloping(design)
         )
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design = fits.design
-        part, term = found(design, about)
+        part, term = next((v, t) for v, t in sloping(design) if f"{t.name}{BY}{v.key}" == about.key)
         x = covariate(design, term)
         assert x is not None
         table = spread(fits.response, part, term.name, x)
@@ -93,6 +92,21 @@ class SlopeVariation(Plain):
             f"Slopes of {name} differ between groups of {level_name(level)} with a standard deviation of "
             f"{size}; {tail}"
         )
+
+
+def sloping(design: Design) -> tuple[tuple[Partition, Term], ...]:
+    """Numeric terms that vary within a level, in focus or a part of an interaction in focus."""
+    if design.group is None:
+        return ()
+    inside = {x for t in design.focus() if t.kind == "interaction" for x in t.variables}
+    out = [(v, t) for v, t in row_level(design) if covariate(design, t) is not None]
+    for level in reversed(design.group.levels):
+        for term in design.terms:
+            if term.focus or level.count < 2 or not inside.intersection(term.variables):
+                continue
+            if covariate(design, term) is not None and moving(design, level, term):
+                out.append((level, term))
+    return tuple(out)
 
 
 def _beside(design: Design, j: int, response: Response) -> tuple[str, ...]:
