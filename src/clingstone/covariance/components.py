@@ -94,7 +94,7 @@ def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict
         key = f"group:{level.key}"
         no = _group(design, level, levels, limits)
         if no is None:
-            found[key] = Component(key, "group", level.key, level.key)
+            found[key] = Component(key, "group", level.key, design.group.title(level.key))
             levels.append(level)
         else:
             refused[key] = no

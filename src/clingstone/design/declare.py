@@ -176,7 +176,7 @@ def _series(declared: Declaration, frame: pd.DataFrame, groups: Groups | None) -
         return None
     if not declared.series:
         return Partition(ordering.WHOLE, frozen(np.zeros(len(frame), dtype=np.int32)), (ordering.WHOLE,))
-    key = "/".join(declared.series)
+    key = "/".join(grouping.key_of(name) for name in declared.series)
     if groups is not None and key in groups:
         return groups[key]
     part: Partition | None = None

@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import difflib
+import re
 import textwrap
 import unicodedata
 from collections.abc import Iterable, Sequence
@@ -15,13 +16,35 @@ from clingstone.display.numbers import number
 COLUMNS = 80
 
 
+# Nouns of fewer letters than a column's name needs to be taken for a word.
+SHORT = frozenset(("row", "id", "day", "arm", "fit", "set", "use", "way", "map", "cow", "eye", "ewe", "pen"))
+WORD = re.compile(r"[A-Za-z]?[a-z]+(?:[ -][a-z]+)*")
+
+
 def count(n: int, noun: str, plural: str = "") -> str:
-    """ "1 clinic", "12 clinics", "1 series" """
-    return f"{number(n, 0)} {noun if n == 1 else plural or plural_of(noun)}"
+    """ "1 clinic", "12 clinics", "1 series", "6 groups of g", "18 units of Variety within Block" """
+    return f"{number(n, 0)} {(one_of(noun) if n == 1 else plural or plural_of(noun))}"
+
+
+def one_of(noun: str) -> str:
+    """ "clinic", "group of g", "unit of Variety within Block" """
+    if " within " in noun:
+        return f"unit of {noun}"
+    return noun if is_word(noun) else f"group of {noun}"
+
+
+def is_word(noun: str) -> bool:
+    """Whether a noun can take a plural: small letters, four or more or a known short word, a vowel."""
+    plain = WORD.fullmatch(noun) is not None and re.search("[aeiouy]", noun.lower()) is not None
+    return plain and (len(noun) >= 4 or noun.lower() in SHORT)
 
 
 def plural_of(noun: str) -> str:
-    """The plural of a plain English noun; column names in other tongues merely get an s."""
+    """The plural of a plain English noun; "groups of g" for what is no word."""
+    if " within " in noun:
+        return f"units of {noun}"
+    if not is_word(noun):
+        return f"groups of {noun}"
     if noun.endswith("series"):
         return noun
     if noun.endswith(("s", "x", "ch", "sh")):

@@ -169,7 +169,7 @@ def _sentence(fits: Fits, item: Item, nothing: bool) -> str:
     said = item.test.sentence(item.reading, item.about)
     if not item.given:
         return said
-    names = listed(_label(key) for key in sorted(item.given, key=_reading_order))
+    names = listed(_label(fits, key) for key in sorted(item.given, key=_reading_order))
     return f"With {names} taken into account, {said[:1].lower()}{said[1:]}"
 
 
@@ -177,9 +177,12 @@ def _reading_order(key: str) -> tuple[int, str]:
     return ("group", "serial", "spatial").index(key.partition(":")[0]), key
 
 
-def _label(key: str) -> str:
+def _label(fits: Fits, key: str) -> str:
     family, _, level = key.partition(":")
-    return level_name(level) if family == "group" else {"serial": "order in time", "spatial": "place"}[family]
+    if family == "group":
+        groups = fits.design.group
+        return level_name(level) if groups is None else groups.title(level)
+    return {"serial": "order in time", "spatial": "place"}[family]
 
 
 def _more(fits: Fits, item: Item) -> tuple[Curve, ...]:

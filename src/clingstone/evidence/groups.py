@@ -12,6 +12,7 @@ from clingstone.evidence.read import Plain
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
+from clingstone.structure.group import title_of
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -20,22 +21,23 @@ BY = " by "  # "day by patient": a predictor at a level
 
 
 def level_name(key: str) -> str:
-    """What a sentence calls a level: "ward" for "clinic/ward"."""
-    return key.rsplit("/", 1)[-1]
+    """What a sentence calls a level: "ward within clinic" for "clinic/ward"."""
+    return title_of(key)
 
 
 def levels(design: Design) -> tuple[About, ...]:
     """One place for each group level."""
     if design.group is None:
         return ()
-    return tuple(About(level.key, f"rows of one {level_name(level.key)}") for level in design.group.levels)
+    groups = design.group
+    return tuple(About(level.key, f"rows of one {groups.title(level.key)}") for level in groups.levels)
 
 
 def repeats(design: Design, about: About) -> Partition:
     """The level of a place. Raises NotSupported where its groups hold no repeats."""
     assert design.group is not None
     part = design.group[about.key]
-    name = level_name(about.key)
+    name = design.group.title(about.key)
     if part.count < 2:
         raise NotSupported(f"there is only one {name}", "At least 2 are needed, some with several rows.")
     if part.sizes.max() < 2:

@@ -17,6 +17,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import InputError
 
 Arrangement = Literal["one level", "nested", "crossed"]
+SLASH = "\N{DIVISION SLASH}"  # stands for a slash in a column's own name, where keys part levels by one
 APART = " (group)"  # ends the name of a level that would else share it with the series or the sites
 
 
@@ -51,8 +52,25 @@ class Groups:
         """The level of that key, or the only level whose last column has that name."""
         if name in self:
             return self[name]
-        found = [v for v in self.levels if v.key.removesuffix(APART).rsplit("/", 1)[-1] == name]
+        own = key_of(name)
+        if own in self:
+            return self[own]
+        found = [v for v in self.levels if v.key.removesuffix(APART).rsplit("/", 1)[-1] == own]
         return found[0] if len(found) == 1 else None
+
+    def title(self, key: str) -> str:
+        """What a sentence calls a level: "lamb", or "Variety within Block" where its labels recur."""
+        level = self.named(key)
+        outer = [v for v in self.levels if key.startswith(f"{v.key}/")]
+        if level is not None and outer:
+            around = max(outer, key=lambda v: len(v.key))
+            inner = {
+                label[len(around.labels[parent]) + 1 :]
+                for label, parent in zip(level.labels, level.parent(around), strict=True)
+            }
+            if len(inner) == level.count:
+                return key.rsplit("/", 1)[-1]
+        return title_of(key)
 
     def apart_from(self, other: Partition) -> Groups:
         """The same levels, one of them renamed where it bears the key of another partition of other cells.
@@ -90,6 +108,16 @@ def paths(group: str | Sequence[str], known: Sequence[str]) -> tuple[tuple[str, 
             "Name each column once.",
         )
     return found
+
+
+def key_of(name: str) -> str:
+    """The key of a column as a level: its name, a slash of its own told from one that parts levels."""
+    return name.replace("/", SLASH)
+
+
+def title_of(key: str) -> str:
+    """ "ward within clinic" for "clinic/ward"; other keys as they are."""
+    return " within ".join(reversed(key.split("/")))
 
 
 def cells(key: str, values: Any) -> Partition:
@@ -173,7 +201,7 @@ def _chain(path: Sequence[str], columns: Mapping[str, Any], notes: list[str]) ->
     """The levels of one nesting, outermost first."""
     levels: list[Partition] = []
     for name in path:
-        own = cells(name, columns[name])
+        own = cells(key_of(name), columns[name])
         notes.extend(_lookalikes(own))
         if levels:
             notes.extend(_recycled(levels[-1], own))
