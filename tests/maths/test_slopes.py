@@ -42,7 +42,7 @@ def base(response=E):
     return reml.independent(3, np.sum(response**2, axis=0))
 
 
-def agrees(gram: Gram, V, response=E):
+def check_agrees(gram: Gram, V, response=E):
     inverse = np.linalg.inv(V)
     np.testing.assert_allclose(gram.QQ, Q.T @ inverse @ Q, atol=1e-12)
     np.testing.assert_allclose(gram.QE, Q.T @ inverse @ response, atol=1e-12)
@@ -53,7 +53,7 @@ def agrees(gram: Gram, V, response=E):
 @pytest.mark.parametrize(("L", "q"), [(L2, 2), (L3, 3), (np.array([[1.3]]), 1), (np.zeros((2, 2)), 2)])
 def test_one_level_equals_the_dense_covariance(L, q):
     V = np.eye(N) + dense(PART, U[:, :q], L)
-    agrees(slopes.lower(base(), block(U[:, :q]), L, range(q)), V)
+    check_agrees(slopes.lower(base(), block(U[:, :q]), L, range(q)), V)
 
 
 def test_levels_stack():
@@ -63,7 +63,7 @@ def test_levels_stack():
     gram = slopes.lower(base(), first, L2, (0, 1))
     up = Partition("up", PART.parent(OUTER), OUTER.labels)
     gram = slopes.lower(gram, first.shrunk(L2, (0, 1)).lifted(up), outer, (0, 2))
-    agrees(gram, np.eye(N) + dense(PART, U[:, :2], L2) + dense(OUTER, U[:, [0, 2]], outer))
+    check_agrees(gram, np.eye(N) + dense(PART, U[:, :2], L2) + dense(OUTER, U[:, [0, 2]], outer))
 
 
 @pytest.mark.parametrize(("L", "q"), [(L2, 2), (L3, 3)])

@@ -70,7 +70,7 @@ def words(examination):
     return advice.state, advice.remedy, advice.at, advice.structures, advice.protected
 
 
-def check(kind, frame, y_unit=1.0, x_unit=1.0, skip=()):
+def check_same(kind, frame, y_unit=1.0, x_unit=1.0, skip=()):
     _, arguments, first = known(kind)
     again = examine(frame, **arguments)
     ours, theirs = numbers(first), numbers(again, y_unit, x_unit)
@@ -85,31 +85,31 @@ def check(kind, frame, y_unit=1.0, x_unit=1.0, skip=()):
 def test_row_order_and_columns_that_no_one_asked_for(kind):
     frame, _, _ = known(kind)
     mixed = frame.assign(spare=frame["x"], word="a").sample(frac=1, random_state=1)
-    check(kind, mixed)
+    check_same(kind, mixed)
 
 
 @pytest.mark.parametrize("kind", KINDS)
 def test_units_of_response_and_predictor(kind):
     frame, _, _ = known(kind)
-    check(kind, frame.assign(y=frame["y"] * 1e-6, x=frame["x"] * 1e4), y_unit=1e-6, x_unit=1e4)
+    check_same(kind, frame.assign(y=frame["y"] * 1e-6, x=frame["x"] * 1e4), y_unit=1e-6, x_unit=1e4)
 
 
 @pytest.mark.parametrize("kind", ["group", "time", "nested"])
 def test_shift_of_the_response_moves_the_constant_alone(kind):
     frame, _, _ = known(kind)
-    check(kind, frame.assign(y=frame["y"] + 1e4), skip=("constant",))
+    check_same(kind, frame.assign(y=frame["y"] + 1e4), skip=("constant",))
 
 
 @pytest.mark.parametrize("kind", ["time", "panel"])
 def test_unit_and_origin_of_time(kind):
     frame, _, _ = known(kind)
-    check(kind, frame.assign(t=frame["t"] * 7 + 1900))
-    check(kind, frame.assign(t=pd.Timestamp("2020-01-01") + pd.to_timedelta(frame["t"], unit="h")))
+    check_same(kind, frame.assign(t=frame["t"] * 7 + 1900))
+    check_same(kind, frame.assign(t=pd.Timestamp("2020-01-01") + pd.to_timedelta(frame["t"], unit="h")))
 
 
 def test_unit_and_origin_of_coordinates():
     frame, _, _ = known("place")
-    check("place", frame.assign(east=frame["east"] * 1000 + 5e5, north=frame["north"] * 1000 + 4e6))
+    check_same("place", frame.assign(east=frame["east"] * 1000 + 5e5, north=frame["north"] * 1000 + 4e6))
 
 
 @pytest.mark.parametrize("kind", ["group", "nested"])
@@ -121,10 +121,10 @@ def test_labels_of_groups(kind):
         levels = list(dict.fromkeys(frame[name]))
         fresh = np.random.default_rng(2).permutation(len(levels))
         renamed[name] = frame[name].map({old: f"Z{k:03d}" for old, k in zip(levels, fresh, strict=True)})
-    check(kind, renamed)
+    check_same(kind, renamed)
     if kind == "group":
-        check(kind, frame.assign(g=pd.Categorical(frame["g"])))
-        check(kind, frame.assign(g=pd.factorize(frame["g"])[0]))
+        check_same(kind, frame.assign(g=pd.Categorical(frame["g"])))
+        check_same(kind, frame.assign(g=pd.factorize(frame["g"])[0]))
 
 
 @pytest.mark.parametrize("kind", ["panel", "place"])
