@@ -90,13 +90,14 @@ def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict
     found: dict[str, Component] = {}
     refused: dict[str, Refusal] = {}
     levels: list[Partition] = []
-    for level in design.group.levels if design.group is not None else ():
+    groups = design.group
+    for level in groups.levels if groups is not None else ():
         key = f"group:{level.key}"
         no = _group(design, level, levels, limits)
-        if no is None:
-            found[key] = Component(key, "group", level.key, design.group.title(level.key))
+        if no is None and groups is not None:
+            found[key] = Component(key, "group", level.key, groups.title(level.key))
             levels.append(level)
-        else:
+        elif no is not None:
             refused[key] = no
     if design.spatial is not None:
         part = design.spatial.part

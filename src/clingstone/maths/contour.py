@@ -133,15 +133,22 @@ def _bend(curve: float, third: float, c: float) -> float:
 def integrate(log_det: LogDet, at: Saddle, tolerance: float = 1e-12, first: float = 0.5) -> Integral:
     """The tail on the side of c by the trapezoid rule, halving the step until two answers agree.
 
-    The error squares with each halving, so agreement to √tolerance is agreement to the tolerance.
+    The error squares with each halving, so agreement to √tolerance is agreement to the tolerance. Where the
+    path leaves what numbers can hold, the integral is not known (accuracy 1); the bound still is.
     """
     sine, cosine = np.sin(at.bend), np.cos(at.bend)
     base = float((-0.5 * log_det(np.array([at.c + 0j]))).real[0])
 
+    outside: list[bool] = []
+
     def terms(u: Array) -> tuple[Array, Array]:
         z = at.c + at.width * (sine * (np.cosh(u) - 1.0) + 1j * cosine * np.sinh(u))
         along = at.width * (sine * np.sinh(u) + 1j * cosine * np.cosh(u))
-        value = np.exp(-0.5 * log_det(z) - base) * along / (z if at.c > 0 else -z)
+        with np.errstate(over="ignore", invalid="ignore"):
+            value = np.exp(-0.5 * log_det(z) - base) * along / (z if at.c > 0 else -z)
+        held = np.isfinite(value)
+        outside.append(not held.all())
+        value = np.where(held, value, 0.0)
         return value.imag, np.abs(value)
 
     total, size, top, nodes = _first_pass(terms, first, tolerance)
@@ -159,7 +166,7 @@ def integrate(log_det: LogDet, at: Saddle, tolerance: float = 1e-12, first: floa
         accuracy = max(min(change, change**2 * 10.0) if change < 1e-2 else change, rounding)
         if accuracy <= tolerance or change <= 10.0 * rounding:
             break
-    if estimate <= 0.0:
+    if estimate <= 0.0 or any(outside):
         return Integral(-np.inf, base, 1.0, nodes)
     return Integral(base + float(np.log(estimate / np.pi)), base, accuracy, nodes)
 
