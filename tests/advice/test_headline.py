@@ -128,3 +128,22 @@ def test_a_correlation_that_hardly_fades_within_the_data_has_no_half_life_told()
 def test_a_range_beyond_the_map_is_not_given_in_figures():
     assert "hardly fading within the map." in say.dependence(ledger(spatial="present"), over=1.2)
     assert "out to about" in say.dependence(ledger(spatial="present"), over=0.8)
+
+
+def test_what_could_not_be_tested_is_not_called_undetected():
+    book = replace(
+        ledger(group="not applicable"),
+        detectable=(),
+        refused=(("group:clinic", "clinic: 1 groups; a variance between groups needs 5 or more"),),
+    )
+    assert say.nothing(book) == (
+        "Dependence between rows could not be tested (clinic: 1 group; a variance between groups needs 5 or "
+        "more): none is ruled out."
+    )
+
+
+def test_what_was_tested_and_what_was_not_are_told_apart():
+    book = replace(ledger(group="not applicable", serial="not detected"), detectable=(), refused=())
+    text = say.nothing(book)
+    assert text.startswith("No dependence was detected")
+    assert text.endswith("What could not be tested is not ruled out: clinic.")

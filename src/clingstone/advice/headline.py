@@ -168,12 +168,27 @@ def nothing(ledger: Ledger) -> str:
     could = [d for d in ledger.detectable if np.isfinite(d.value)]
     if not ledger.standing:
         return "No structure was declared, so no dependence between rows could be looked for."
+    untested = _untested(ledger)
+    if len(untested) == len(ledger.standing):
+        return f"Dependence between rows could not be tested ({'; '.join(untested)}): none is ruled out."
     words = [
         f"{_article(d.parameter)} {d.parameter} of {significant(d.value)} or more ({_label(ledger, d.key)})"
         for d in could
     ]
     end = f"; these data could have shown {listed(words, 'or')}" if words else ""
-    return f"No dependence was detected that could widen a focus interval{end}."
+    rest = f" What could not be tested is not ruled out: {'; '.join(untested)}." if untested else ""
+    return f"No dependence was detected that could widen a focus interval{end}.{rest}"
+
+
+def _untested(ledger: Ledger) -> list[str]:
+    """Each structure that no test could look at, with why."""
+    why = dict(ledger.refused)
+    out = []
+    for s in (s for s in ledger.standing if s.verdict == "not applicable"):
+        reason = why.get(s.key, "").removeprefix(f"{s.key.removeprefix('group:')}: ").rstrip(".")
+        reason = reason.replace("1 groups", "1 group") if reason.startswith("1 groups") else reason
+        out.append(f"{s.label}: {reason}" if reason else s.label)
+    return out
 
 
 def _article(name: str) -> str:
