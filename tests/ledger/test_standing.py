@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy import stats
@@ -299,3 +301,9 @@ def test_what_has_no_size_and_still_shows_beside_groups_is_present():
     assert serial.p_given < 0.05
     assert serial.verdict == "present"
     assert "still with subject" in serial.because
+
+
+def test_a_factor_without_bound_is_told_as_more_than_so_many():
+    near = replace(seen("serial", 0.3, NAN, widens=True), worst=1.4e7)
+    (found,) = judge((near,))
+    assert "more than 20 times that without it" in found.because

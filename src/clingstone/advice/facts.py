@@ -19,7 +19,7 @@ from clingstone.display import listed, percent
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.groups import BY
 from clingstone.ledger.ledger import Ledger, focus_rows, focus_terms
-from clingstone.ledger.standing import LEVEL
+from clingstone.ledger.standing import LEVEL, MOST
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits
 from clingstone.run import Settings
@@ -238,7 +238,8 @@ def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[f
         if largest is None or abs(np.log(total.high)) > abs(np.log(largest.high)):
             largest = total
     if largest is not None:
-        out.append(named("largest factor", largest.high, "times the ordinary standard error"))
+        told = "" if largest.high <= MOST else f"more than {MOST:g}"
+        out.append(named("largest factor", largest.high, "times the ordinary standard error", told))
     return out
 
 

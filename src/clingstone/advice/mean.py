@@ -17,7 +17,7 @@ from clingstone.evidence.gather import gather
 from clingstone.evidence.mean import extension
 from clingstone.evidence.season import cycles, with_season
 from clingstone.ledger.ledger import Ledger, Standing, focus_rows, focus_terms, judged
-from clingstone.ledger.standing import LEVEL
+from clingstone.ledger.standing import LEVEL, MOST
 from clingstone.needs import Family, NotSupported
 
 # A smooth mean over time or place and a smooth error are one picture: such a part is never declared
@@ -222,7 +222,8 @@ def _left(
         return "rows still show no dependence"
     worst = max((now.worst for now in open_end), key=lambda f: abs(np.log(f)), default=1.0)
     if open_end:
-        parts.append(f"what is left could make a focus standard error {significant(worst)} times as large")
+        times = significant(worst) if worst <= MOST else f"more than {MOST:g}"
+        parts.append(f"what is left could make a focus standard error {times} times as large")
     elif goes and not stays and not appears:
         parts.append("what is left could not widen a focus interval")
     return listed(parts)

@@ -18,6 +18,7 @@ from clingstone.needs import Family, NotSupported
 LEVEL = 0.05  # of the tests, alone and given
 MASKED = 0.01  # a structure seen only when the others are fitted needs more than LEVEL
 UNITS = 30  # independent units from which a boundary mixture of χ² is used
+MOST = 20.0  # a standard-error factor beyond this is told as more than that
 DRAWS = 199  # of the parametric bootstrap
 GRIDDED = 2  # working parameters up to which many columns are fitted on one shared grid, and so fast
 LATER_LAGS = "hang together several steps apart, not from one step to the next"
@@ -243,7 +244,9 @@ def _quiet(one: Seen, reason: str) -> tuple[Verdict, str]:
 
 
 def _times(factor: float) -> str:
-    return f"{factor:.2g} times" if np.isfinite(factor) else "many times"
+    if not factor <= MOST:  # near a random walk the factor says no more than that it is large
+        return f"more than {MOST:g} times"
+    return f"{factor:.2g} times"
 
 
 def _and(names: list[str]) -> str:
