@@ -138,7 +138,11 @@ def test_places():
     assert (decide(good).remedy, decide(good).state) == ("spatial-gls", "supported")
     few = facts(ledger(spatial="present"), sites=30, range_over_extent=0.2)
     assert decide(few).state == "supported with caveat"
-    far = facts(ledger(spatial="present"), sites=80, range_over_extent=0.6)
+    wide = decide(facts(ledger(spatial="present"), sites=80, range_over_extent=0.62))
+    assert (wide.remedy, wide.state) == ("spatial-gls", "supported with caveat")
+    assert any("only a handful of places" in c.sentence for c in wide.cautions)
+    assert "hardly more than one" not in " ".join([wide.headline, *(c.sentence for c in wide.cautions)])
+    far = facts(ledger(spatial="present"), sites=80, range_over_extent=1.2)
     advice = decide(far)
     assert (advice.state, advice.remedy, advice.alternatives) == ("not correctable", "", ())
     assert advice.refused[0][2].startswith("Needed: sites over an area")

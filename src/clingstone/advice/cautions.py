@@ -119,6 +119,15 @@ CAVEATS = (
         "moderate",
     ),
     Rule(
+        "wide-range-rough",
+        SPATIAL & (fact("range over extent") >= 0.5) & (fact("range over extent") < 1),
+        Then("caveat"),
+        "The dependence reaches over {range over extent} of the map's width: the map holds only a handful of "
+        "places that are nearly independent, and the interval is rough.",
+        "muller-watson-2022, bester-conley-hansen-2011",
+        "moderate",
+    ),
+    Rule(
         "not-covered",
         fact("plausible structure not covered"),
         Then("caveat"),

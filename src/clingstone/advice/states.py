@@ -128,15 +128,15 @@ STATES = (
     ),
     Rule(
         "range-too-long",
-        SPATIAL & fact("spatial present") & (fact("range over extent") >= 0.5) & ~fact("mean in doubt"),
+        SPATIAL & fact("spatial present") & (fact("range over extent") >= 1) & ~fact("mean in doubt"),
         Then(
             "state",
             "not correctable",
             needed="sites over an area at least twice as wide as the range, or a predictor that varies "
             "at shorter distances",
         ),
-        "The dependence reaches {range over extent} of the map's width: the map holds hardly more than one "
-        "independent place.",
+        "The dependence reaches {range over extent} of the map's width: the map holds hardly more than "
+        "one independent place.",
         "muller-watson-2022, bester-conley-hansen-2011",
         "strong",
     ),
