@@ -24,7 +24,7 @@ from clingstone import cli
 from clingstone.case import CaseSummary
 from clingstone.demo import DEMOS
 from clingstone.needs import InputError, NotSupported
-from clingstone.options import field_help, settings_options
+from clingstone.options import field_help, in_shell, settings_options
 from clingstone.results import from_json, to_json
 from clingstone.run import Settings
 
@@ -320,6 +320,40 @@ def test_what_the_user_can_mend_is_one_message_and_a_hint(
     assert status == 2
     assert err == "clingstone: column 'cline' is not in a.csv\n  Did you mean 'clinic'?\n"
     assert verbs.saved == []
+
+
+def test_messages_speak_options_and_keep_to_eighty_columns(verbs: Verbs, run: Run) -> None:
+    verbs.error = InputError(
+        "missing: clinic in 3 rows (rows 4, 9 and 12); a row without its group cannot be set beside others",
+        "Fill them in, or leave these rows out with missing='drop'. Give coords=('x', 'y') or time=.",
+    )
+    _, _, err = run("examine trial.csv --model 'y ~ x'")
+    assert max(map(len, err.splitlines())) <= 80
+    said = " ".join(err.split())
+    assert "--missing drop. Give --coords x y or --time." in said
+    assert "missing=" not in said
+
+
+@pytest.mark.parametrize(
+    ("python", "shell"),
+    [
+        ("assigned={'arm': 'clinic'}", "--assigned arm=clinic"),
+        ("weights_kind='frequency'", "--weights-kind frequency"),
+        ("group='a/b', or group=['a', 'b c']", '--group a/b, or --group a --group "b c"'),
+        ("lonlat=False", "--no-lonlat"),
+        ("the column time and a mean of=3", "the column time and a mean of=3"),
+    ],
+)
+def test_python_words_become_options(python: str, shell: str) -> None:
+    assert in_shell(python) == shell
+
+
+def test_a_folder_inside_a_file_is_refused_before_the_work(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    (tmp_path / "afile").write_text("x")
+    status, _, err = run("examine trial.csv --model 'y ~ x' --out afile/sub")
+    assert status == 2
+    assert "afile is a file, so sub cannot be a folder in it" in " ".join(err.split())
+    assert not verbs.calls
 
 
 def test_a_fault_of_ours_is_status_1_and_names_the_way_to_the_traceback(verbs: Verbs, run: Run) -> None:

@@ -19,7 +19,7 @@ import typer
 from clingstone import cli_rehearse
 from clingstone.demo import DEMOS, data_folder, find
 from clingstone.needs import InputError, NotSupported
-from clingstone.options import Option, settings_options
+from clingstone.options import Option, in_shell, settings_options
 
 if TYPE_CHECKING:
     from clingstone.examination import Examination
@@ -163,6 +163,7 @@ def _run(
     """Examine, save, print. With --json a folder is written only when --out names one."""
     folder = out if out is not None else None if json else _unused(f"{data.stem}-clingstone", overwrite)
     if folder is not None:
+        _can_be_made(folder)
         from clingstone.writeup.save import check
 
         check(folder, overwrite)  # before the work, not after it
@@ -178,6 +179,16 @@ def _run(
         _write(to_json(examination.results))
     elif not quiet:
         _write(_printed(examination, folder))
+
+
+def _can_be_made(folder: Path) -> None:
+    """Raises InputError where a part of the path is a file."""
+    for part in folder.expanduser().absolute().parents:
+        if part.is_file():
+            raise InputError(
+                f"{part} is a file, so {folder.name} cannot be a folder in it",
+                "Name another folder with --out.",
+            )
 
 
 def _unused(name: str, overwrite: bool) -> Path:
@@ -231,6 +242,20 @@ def _wrapped(text: str) -> str:
     return textwrap.fill(text, 78)
 
 
+def _lines(text: str, indent: str = "") -> str:
+    """At most 80 signs in a line; a path or an option is never broken."""
+    import textwrap
+
+    return textwrap.fill(
+        text,
+        80,
+        initial_indent=indent,
+        subsequent_indent=indent or "  ",
+        break_long_words=False,
+        break_on_hyphens=False,
+    )
+
+
 def _write(text: str) -> None:
     """To standard output; a sign that its encoding lacks becomes "?" rather than a fault."""
     encoding = sys.stdout.encoding or "utf-8"
@@ -247,9 +272,9 @@ def main(arguments: Sequence[str] | None = None) -> NoReturn:
     try:
         typer.main.get_command(app)(args=words, prog_name="clingstone")
     except (InputError, NotSupported) as error:
-        _tell(f"clingstone: {error}")
+        _tell(_lines(f"clingstone: {in_shell(str(error))}"))
         if error.hint:
-            _tell(f"  {error.hint}")
+            _tell(_lines(in_shell(error.hint), "  "))
         sys.exit(2)
     except Exception as fault:
         if "--debug" in words:

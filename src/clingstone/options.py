@@ -162,6 +162,43 @@ def _assigned(values: Sequence[str] | None) -> dict[str, Any] | None:
     return out
 
 
+# ---- from Python's words to the shell's ------------------------------------------------------
+
+
+def in_shell(text: str) -> str:
+    """A message as the shell would write it: missing='drop' is --missing drop, group= is --group."""
+    known = {option.name: option for option in settings_options()}
+    value = r"'[^']*'|\"[^\"]*\"|\([^()]*\)|\[[^\[\]]*\]|\{[^{}]*\}|True|False"
+    return re.sub(
+        rf"(?<![\w-])({'|'.join(known)})=({value})?(?!=)",
+        lambda found: _shell_word(known[found[1]], found[2] or ""),
+        text,
+    )
+
+
+def _shell_word(option: Option, value: str) -> str:
+    if value in ("True", "False"):
+        return option.flag if value == "True" else f"--no-{option.flag[2:]}"
+    if not value:
+        return option.flag
+    inside = re.findall(r"'([^']*)'|\"([^\"]*)\"", value)
+    words = [a or b for a, b in inside]
+    if value.startswith("{"):
+        pairs = [f"{a}={b}" for a, b in zip(words[::2], words[1::2], strict=False)]
+        return " ".join(f"{option.flag} {_quoted(pair)}" for pair in pairs) or option.flag
+    if get_origin(_bare(option.kind)) is tuple:
+        return " ".join([option.flag, *map(_quoted, words)])
+    return " ".join(f"{option.flag} {_quoted(word)}" for word in words) or option.flag
+
+
+def _bare(kind: Any) -> Any:
+    return next((part for part in _members(kind) if part is not type(None)), kind)
+
+
+def _quoted(word: str) -> str:
+    return word if re.fullmatch(r"[\w./:%+=-]+", word) else f'"{word}"'
+
+
 _METAVARS = {str: "TEXT", int: "NUMBER", float: "NUMBER"}
 _MAPPINGS: Mapping[str, tuple[str, Callable[[Sequence[str] | None], Any]]] = {
     "contrasts": ('"NAME: COEFFICIENT=WEIGHT, …"', _contrasts),

@@ -47,6 +47,14 @@ def test_losses_are_counted_once_by_the_first_reason() -> None:
     assert got.frame["flock"].tolist() == ["a", "b", "c", "c"]
 
 
+def test_what_is_counted_under_another_column_is_told() -> None:
+    """Ozone in rows 1 to 3, solar in rows 3 to 5: five rows are lost, three of them by ozone."""
+    frame = pd.DataFrame({"ozone": [np.nan] * 3 + [1.0, 2, 3], "solar": [1.0, 2] + [np.nan] * 3 + [3.0]})
+    got = gather(table(frame), {"response": ["ozone"], "predictor": ["solar"]})
+    assert dict(got.dropped) == {"missing ozone (response)": 3, "missing solar (predictor)": 2}
+    assert got.notes == ("solar is missing in 3 rows in all; 1 of them is counted under another column.",)
+
+
 def test_a_missing_id_stops_with_counts() -> None:
     frame = flocks(flock=["a", None, None, "b", None, "c"], day=[1, 2, 1, np.nan, 1, 2])
     said, hint = message(lambda: read(frame))

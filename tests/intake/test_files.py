@@ -226,3 +226,8 @@ def test_unreadable(tmp_path: Path, name: str, content: bytes, said: str) -> Non
 def test_repeated_names_in_excel(tmp_path: Path) -> None:
     pd.DataFrame([["y", "y"], [1, 2]]).to_excel(tmp_path / "w.xlsx", index=False, header=False)
     assert message(tmp_path / "w.xlsx")[0] == "column names occur more than once: ‘y’ (columns 1 and 2)"
+
+
+def test_a_folder_is_called_a_folder(tmp_path: Path) -> None:
+    with pytest.raises(InputError, match="is a folder"):
+        files.read(tmp_path)

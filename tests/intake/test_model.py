@@ -133,7 +133,29 @@ def test_a_transformed_response_is_recognised(left: str, word: str) -> None:
 def test_a_response_of_two_values_is_noted() -> None:
     frame = trial().assign(y=lambda d: (d["y"] > 5).astype(int))
     assert "takes two values only (0 and 1)" in made("y ~ dose", frame).notes[0]
-    assert made("y ~ dose").notes == ()
+    assert "not what this is made for" in made("y ~ dose", frame).notes[0]
+    assert not any("two values" in note for note in made("y ~ dose").notes)
+
+
+def test_whole_numbers_that_may_be_codes_are_pointed_out() -> None:
+    wanted = "dose holds the whole numbers 1 to 4 and is used as a number; C(dose) makes it a factor."
+    assert wanted in made("y ~ dose").notes
+    assert not made("y ~ C(dose)").notes
+    assert not made("y ~ dose", trial().assign(dose=lambda d: d["dose"] * 10)).notes
+
+
+def test_a_response_of_counts_is_noted() -> None:
+    frame = trial().assign(y=lambda d: np.arange(len(d)) % 5)
+    assert "whole numbers 0 to 4 only, as counts" in made("y ~ C(dose)", frame).notes[0]
+    assert not made("y ~ C(dose)", frame.assign(y=frame["y"] + 0.5)).notes
+    assert not made("y ~ C(dose)", frame.assign(y=frame["y"] - 1)).notes
+
+
+def test_a_response_that_differs_by_rounding_only_is_not_called_equal() -> None:
+    frame = trial().assign(y=lambda d: 1e15 + np.arange(len(d)) % 2)
+    frame["y"] = 1e16 + 2.0 * (np.arange(len(frame)) % 2)
+    with pytest.raises(InputError, match=r"lies near 1e\+16 in all 24 rows and differs by 2 at the most"):
+        checked(made("y ~ dose", frame))
 
 
 # ---- what is refused ----------------------------------------------------------------------------

@@ -217,3 +217,8 @@ def test_a_slash_in_a_column_does_not_part_its_name():
         assert found.title(level.key) == level.key
         assert "/" not in level.key
         assert level_name(level.key).replace("\N{DIVISION SLASH}", "/") == column
+
+
+def test_a_group_that_is_no_name_is_refused():
+    with pytest.raises(InputError, match="holds None where the name of a column is needed"):
+        paths(["g", None], ("g",))  # type: ignore[list-item]

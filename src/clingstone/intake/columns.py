@@ -93,12 +93,13 @@ def gather(
     if not keep.any():
         why = listed(f"{reason}: {n:,}" for reason, n in dropped.items())
         raise InputError(f"no row is left of {len(frame):,} ({why})", "Check these columns.")
+    more = _counted_elsewhere(roles, gone, dropped)
     kept = np.flatnonzero(keep).astype(np.int64)
     held = frame.iloc[kept].reset_index(drop=True)
     for name in used:
         if pd.api.types.is_bool_dtype(held[name].infer_objects().dtype):
             held[name] = held[name].astype(bool)
-    notes = (*table.notes, *_remarks(held, table.places[kept]))
+    notes = (*table.notes, *more, *_remarks(held, table.places[kept]))
     return Columns(held, kept, len(frame), dropped, notes, mark)
 
 
@@ -264,6 +265,22 @@ def _finite(frame: pd.DataFrame, names: Sequence[str], places: Places) -> None:
                 f"{name} is infinite in {rows(places[infinite])}, and no sum can be formed with that",
                 "Mend these values, or leave them empty if they are missing.",
             )
+
+
+def _counted_elsewhere(
+    roles: Mapping[Role, Sequence[str]], gone: Mapping[str, Any], dropped: Mapping[str, int]
+) -> list[str]:
+    """A note for each column whose missing values are counted under another column in part."""
+    notes = []
+    for role in MEASURED:
+        for name in dict.fromkeys(roles.get(role, ())):  # type: ignore[call-overload]
+            whole, own = int(gone[name].sum()), dropped.get(f"missing {name} ({role})", 0)
+            if whole > own:
+                notes.append(
+                    f"{name} is missing in {count(whole, 'row')} in all; {whole - own:,} of them "
+                    f"{'is' if whole - own == 1 else 'are'} counted under another column."
+                )
+    return notes
 
 
 def _settled(role: Role, missing: str) -> bool:

@@ -36,6 +36,8 @@ def read(path: str | Path, columns: Collection[str] | None = None) -> Read:
     InputError : not found, not readable, unknown suffix, empty, repeated column names.
     """
     path = Path(path)
+    if path.is_dir():
+        raise InputError(f"{path} is a folder", "Name one file in it.")
     suffix = _suffix(path)
     content = _bytes(path)
     if not content:

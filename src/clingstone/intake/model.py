@@ -20,6 +20,8 @@ from clingstone.needs import InputError, memory
 if TYPE_CHECKING:
     import pandas as pd
 
+MOST_COUNTS = 12  # distinct whole numbers of a response up to which they are taken for counts or ratings
+MOST_CODES = 5  # distinct whole numbers of a predictor up to which they may be the codes of a factor
 Kind = Literal["constant", "numeric", "factor", "interaction"]
 
 
@@ -104,7 +106,7 @@ def blocks(parsed: Parsed, frame: pd.DataFrame, kept: npt.NDArray[np.int64]) -> 
         covariates=_covariates(parsed, data),
         levels=_levels(parsed, data),
         remake=lambda cell: np.asarray(spec.get_model_matrix(_set(data, cell), context={}), dtype=float),
-        notes=_remarks(y, parsed.response),
+        notes=(*_remarks(y, parsed.response), *_codes(parsed, terms, data)),
     )
 
 
@@ -138,16 +140,28 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
             "Use fewer terms or more rows. Many groups belong in group=, not in the formula.",
         )
     if np.ptp(found.y) <= 1e-13 * np.abs(found.y).max():
-        raise InputError(
-            f"the response {found.response} is {found.y[0]:g} in all {n:,} rows, so there is "
-            "nothing to explain",
-            "Check the column and the rows that were kept.",
-        )
+        raise _constant_error(found)
     X = found.X if root is None else found.X * root[:, None]
     lost = aliased(X)
     if lost:
         raise _aliased_error(found, X, lost)
     return found
+
+
+def _constant_error(found: Blocks) -> InputError:
+    """The same value in all rows, or values that differ by no more than rounding of their size."""
+    n, spread = len(found.y), float(np.ptp(found.y))
+    if spread == 0:
+        return InputError(
+            f"the response {found.response} is {found.y[0]:.10g} in all {n:,} rows, so there is "
+            "nothing to explain",
+            "Check the column and the rows that were kept.",
+        )
+    return InputError(
+        f"the response {found.response} lies near {found.y[0]:.6g} in all {n:,} rows and differs by "
+        f"{spread:.2g} at the most, no more than the rounding of numbers of that size",
+        "Take a constant near all values off the column, before it is stored.",
+    )
 
 
 def _aliased_error(found: Blocks, X: Array, lost: tuple[int, ...]) -> InputError:
@@ -344,11 +358,42 @@ def _levels(parsed: Parsed, data: pd.DataFrame) -> dict[str, tuple[Any, ...]]:
 
 def _remarks(y: Array, response: str) -> tuple[str, ...]:
     distinct = np.unique(y[:10_000])
-    if len(distinct) == 2 and len(np.unique(y)) == 2:
+    if len(distinct) > MOST_COUNTS or len(distinct := np.unique(y)) > MOST_COUNTS:
+        return ()
+    if len(distinct) == 2:
         a, b = (f"{v:g}" for v in distinct)
         return (
-            f"{response} takes two values only ({a} and {b}): the model is for a mean that changes "
-            "in a straight "
-            "line, and what looks like dependence may be a misfit.",
+            f"{response} takes two values only ({a} and {b}): a straight line for the chance of one of them "
+            "is fitted here. That is not what this is made for: rows then differ in variance, and what "
+            "looks like dependence may be a misfit. Compare with a logistic model.",
+        )
+    if len(distinct) > 2 and distinct[0] >= 0 and len(y) > MOST_COUNTS and _whole(distinct):
+        return (
+            f"{response} holds the whole numbers {distinct[0]:g} to {distinct[-1]:g} only, as counts and "
+            "ratings do: the model is for a continuous response, and variances that grow with the mean are "
+            "looked at but not modelled.",
         )
     return ()
+
+
+def _whole(values: Array) -> bool:
+    return bool(np.all(values == np.round(values)))
+
+
+def _codes(parsed: Parsed, terms: tuple[TermBlock, ...], data: pd.DataFrame) -> tuple[str, ...]:
+    """Numeric predictors that look like codes: three to five whole numbers in a row, from 0 or 1."""
+    import pandas as pd
+
+    notes = []
+    for name in (t.name for t in terms if t.kind == "numeric"):
+        if name not in data or name in parsed.declared or not pd.api.types.is_numeric_dtype(data[name].dtype):
+            continue
+        distinct = np.unique(data[name].to_numpy(dtype=float))
+        low, high = distinct[0], distinct[-1]
+        row = 3 <= len(distinct) <= MOST_CODES and low in (0, 1) and high - low == len(distinct) - 1
+        if row and _whole(distinct) and len(data) >= 4 * len(distinct):
+            notes.append(
+                f"{name} holds the whole numbers {low:g} to {high:g} and is used as a number; "
+                f"C({name}) makes it a factor."
+            )
+    return tuple(notes)

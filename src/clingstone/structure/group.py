@@ -97,6 +97,12 @@ def paths(group: str | Sequence[str], known: Sequence[str]) -> tuple[tuple[str, 
     the levels of a nesting.
     """
     specs = (group,) if isinstance(group, str) else tuple(group)
+    odd = [s for s in specs if not isinstance(s, str)]
+    if odd:
+        raise InputError(
+            f"group={group!r} holds {odd[0]!r} where the name of a column is needed",
+            "Write group='a', group='a/b' or group=['a', 'b'].",
+        )
     found = tuple((s,) if s in known else tuple(part.strip() for part in s.split("/")) for s in specs)
     flat = [name for path in found for name in path]
     if not flat or any(not name for name in flat):
