@@ -12,7 +12,10 @@ from clingstone.advice.facts import facts
 from clingstone.evidence import gather
 from clingstone.ledger.ledger import weigh
 from clingstone.run import one_thread
+from tests.advice import synthetic
 from tests.ledger import factories as make
+
+PLAIN = (("ordinary", ""), ("cluster-robust", "clinic"), ("mixed-intercept", "clinic"))
 
 
 def advise(fits):
@@ -126,3 +129,18 @@ def test_covariates_that_bend_like_time_place_or_groups():
     ]
     assert found == ["serial", "serial", "spatial", "group"]
     assert [smooth.smooth_in(d, "rough") for d in (along, over, of)] == [None, None, None]
+
+
+def test_the_robust_pooled_interval_is_not_led_to_where_it_mixes_two_effects():
+    """A random intercept leans on what differs within groups; pooled rows lean on both."""
+    values = {"groups": 20, "effective_clusters": 8.0, "focus_at_group_level": False}
+    refits = tuple(synthetic.refit(k, a, 9.0) for k, a in PLAIN)
+    for differs, remedy in ((False, "cluster-robust"), (True, "mixed-intercept")):
+        found = synthetic.facts(
+            synthetic.ledger(group="present"),
+            group_level="clinic",
+            mixed_level="clinic",
+            between_differs_from_within=differs,
+            **values,
+        )
+        assert settle(synthetic.shortlist(found, refits), found, refits).remedy == remedy

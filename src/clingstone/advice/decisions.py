@@ -204,7 +204,10 @@ PREFER = (
         & ~SERIAL
         & ~SPATIAL
         & ~fact("focus at group level")
-        & ((fact("effective clusters") >= 10) | (fact("df of the robust refit") >= 4)),
+        & (
+            (fact("effective clusters") >= 10)
+            | ((fact("df of the robust refit") >= 4) & ~fact("between differs from within"))
+        ),
         Then("prefer", "cluster-robust", at="group level"),
         "The focus terms vary within groups, where their slopes may differ from group to group: the robust "
         "covariance allows for that, a plain random intercept does not.",
