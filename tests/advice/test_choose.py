@@ -328,3 +328,45 @@ def test_equal_widths_go_to_the_simpler():
 def test_when_none_is_adequate_the_rules_decide():
     scores = scored(cluster_robust=(0.80, 2.0), mixed_intercept=(0.80, 2.01))
     assert decide(trial(), scores=scores).remedy == "mixed-intercept"
+
+
+def test_a_rehearsal_that_falls_short_lowers_the_state():
+    found = trial(assignment_can_be_redrawn=False)
+    short = decide(found, scores=scored(mixed_intercept=(0.88, 2.0), cluster_robust=(0.86, 2.4)))
+    assert (short.remedy, short.state) == ("mixed-intercept", "supported with caveat")
+    told = [c.sentence for c in short.cautions if c.rule == "none-held"]
+    assert len(told) == 1
+    assert "in 88\u00a0% of replicates" in told[0]
+    assert "below the 95\u00a0% it promises" in told[0]
+    held = decide(found, scores=scored(mixed_intercept=(0.95, 2.0), cluster_robust=(0.86, 2.4)))
+    assert held.state == "supported"
+    assert not [c for c in held.cautions if c.rule in ("none-held", "rehearsal-fell-short")]
+
+
+def test_a_firm_rule_that_a_rehearsal_speaks_against_says_so():
+    found = facts(
+        ledger(group="present"),
+        groups=30,
+        effective_clusters=25.0,
+        focus_at_group_level=False,
+        unequal_variances=True,
+        df_of_the_robust_refit=12.0,
+    )
+    advice = decide(found, scores=scored(cluster_robust=(0.90, 1.4), mixed_intercept=(0.95, 1.0)))
+    assert (advice.remedy, advice.state) == ("cluster-robust", "supported with caveat")
+    assert [c.rule for c in advice.cautions if c.rule.startswith("rehearsal")] == ["rehearsal-fell-short"]
+
+
+def test_a_rehearsal_at_the_edge_of_its_error_only_warns():
+    scores = Scores((Score("mixed-intercept", "clinic", 0.88, 0.0335, 1.0),))
+    advice = decide(trial(), scores=scores)
+    assert advice.state == "supported"
+    assert any(c.rule == "perhaps-short" and "88\u00a0%" in c.sentence for c in advice.cautions)
+
+
+def test_few_groups_of_an_outer_level_are_told():
+    more = {"fewest_groups_to_cover": 6, "level_with_the_fewest_groups": "Block"}
+    advice = decide(trial(groups=18, effective_clusters=17.0, **more))
+    assert advice.state == "supported with caveat"
+    told = "Of Block there are only 6 groups: what varies between them is known roughly."
+    assert told in [c.sentence for c in advice.cautions]

@@ -38,6 +38,13 @@ LATE = {
     "advised refit allows unequal spread",
     "slope model settled",
     "mixed refit at its bound",
+    "rehearsal fell short",
+    "rehearsal leaves a doubt",
+    "no rehearsed remedy held",
+    "rehearsed coverage",
+    "best rehearsed coverage",
+    "promised coverage",
+    "name of the advised refit",
 }
 
 

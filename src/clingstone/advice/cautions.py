@@ -82,6 +82,44 @@ CAVEATS = (
         "convention",
     ),
     Rule(
+        "rehearsal-fell-short",
+        fact("rehearsal fell short") & ~fact("no rehearsed remedy held"),
+        Then("caveat"),
+        "Rehearsed on this design, {name of the advised refit} held the true value in {rehearsed coverage} "
+        "of replicates under one of the error models tried, below the {promised coverage} it promises.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "none-held",
+        fact("rehearsal fell short") & fact("no rehearsed remedy held"),
+        Then("caveat"),
+        "Rehearsed on this design, {name of the advised refit} held the true value in {rehearsed coverage} "
+        "of replicates under one of the error models tried, below the {promised coverage} it promises; of "
+        "what was rehearsed the best held it in {best rehearsed coverage}.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "perhaps-short",
+        fact("rehearsal leaves a doubt"),
+        Then("caution"),
+        "Rehearsed on this design, {name of the advised refit} held the true value in {rehearsed coverage} "
+        "of replicates under one of the error models tried; {promised coverage} is promised. A rehearsal "
+        "with more replicates tells whether it falls short.",
+        "own",
+        "strong",
+    ),
+    Rule(
+        "few-outer-groups",
+        GROUP & (fact("groups") >= 10) & (fact("fewest groups to cover") < 10),
+        Then("caveat"),
+        "Of {level with the fewest groups} there are only {fewest groups to cover} groups: what varies "
+        "between them is known roughly.",
+        "cameron-miller-2015",
+        "convention",
+    ),
+    Rule(
         "one-group-dominates",
         GROUP & (fact("largest share of one group") >= 0.25) & (fact("groups") >= 8),
         Then("caution"),

@@ -8,7 +8,7 @@ from clingstone.advice import headline as say
 from clingstone.advice.entries import REPAIRED, Advice, Choice, Reason, Repair, Score, Scores, State
 from clingstone.advice.facts import Facts
 from clingstone.advice.pick import covers, pick, rank, same, serves
-from clingstone.advice.refitted import advised_facts, compared, find
+from clingstone.advice.refitted import advised_facts, compared, find, rehearsed_facts
 from clingstone.advice.rules import CAVEATS, NO_REMEDY, NOTHING, STATES, Rule
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.advice.structures import FAMILIES, covered, families, needed
@@ -56,6 +56,7 @@ def settle(
     need = needed(here.ledger)
     known = {} if state == "mean first" else shortlist.reached
     here = here.plus(advised_facts(here, refits, chosen, need, known))
+    here = here.plus(rehearsed_facts(scores, chosen))
     beside = _beside(state_rule, here)
     decided = _state(state_rule, beside)
     advised = find(refits, "ordinary") if decided == "nothing found" else chosen

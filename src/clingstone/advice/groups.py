@@ -113,12 +113,15 @@ def _assigned(design: Design) -> list[Fact]:
 
 
 def _crossed(design: Design, ledger: Ledger) -> list[Fact]:
-    """Levels to be covered that cross each other."""
+    """Levels to be covered: that with the fewest groups, and those that cross each other."""
     wanted = wanted_levels(design, ledger)
     parts = [design.partitions[key] for key in wanted]
+    few = min(parts, key=lambda part: part.count, default=None)
     crossed = all(a.relation(b) == "crossed" for a, b in itertools.combinations(parts, 2))
     number = len(parts) if crossed and len(parts) > 1 else 0
     out = [named("crossed levels to cover", number)]
+    if few is not None:
+        out += [named("fewest groups to cover", few.count), words("level with the fewest groups", few.key)]
     if number:
         out += [
             named("groups of the smallest crossed level", min(part.count for part in parts)),

@@ -2,11 +2,12 @@
 
 from __future__ import annotations
 
+from clingstone.advice.entries import Scores
 from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
 from clingstone.advice.pick import SECOND, Reached, covers, same
 from clingstone.advice.structures import subject
-from clingstone.display import listed
+from clingstone.display import listed, percent
 from clingstone.remedies.remedy import Interval, Refit
 
 ROBUST = "cluster-robust"
@@ -102,6 +103,27 @@ def advised_facts(
     robust = find(refits, ROBUST, facts.word("group level"))
     if robust is not None and chosen.remedy in ("mixed-intercept", "joint"):
         out += _ratio("robust over advised standard error", robust, chosen, facts)
+    return {f.name: f for f in out}
+
+
+def rehearsed_facts(scores: Scores | None, chosen: Refit | None) -> dict[str, Fact]:
+    """What a rehearsal found of the advised refit, and of the best; nothing where it was not rehearsed."""
+    row = scores.get(chosen.remedy, chosen.at) if scores is not None and chosen is not None else None
+    if scores is None or chosen is None or row is None:
+        return {}
+    held = scores.adequate(row.remedy, row.at)
+    some = any(scores.adequate(r.remedy, r.at) for r in scores.rows)
+    best = max(r.coverage for r in scores.rows)
+    doubt = bool(held) and row.coverage < scores.confidence - 2 * row.mcse
+    out = [
+        yes("rehearsal leaves a doubt", doubt, f"rehearsed coverage {percent(row.coverage)}"),
+        yes("rehearsal fell short", not held, f"rehearsed coverage {percent(row.coverage)}"),
+        yes("no rehearsed remedy held", not some, f"the best held the true value in {percent(best)}"),
+        named("rehearsed coverage", row.coverage, text=percent(row.coverage)),
+        named("best rehearsed coverage", best, text=percent(best)),
+        named("promised coverage", scores.confidence, text=percent(scores.confidence)),
+        words("name of the advised refit", chosen.name),
+    ]
     return {f.name: f for f in out}
 
 
