@@ -370,3 +370,20 @@ def test_few_groups_of_an_outer_level_are_told():
     assert advice.state == "supported with caveat"
     told = "Of Block there are only 6 groups: what varies between them is known roughly."
     assert told in [c.sentence for c in advice.cautions]
+
+
+def test_many_copies_are_a_caveat():
+    advice = decide(trial(share_of_copied_rows=0.5))
+    assert advice.state == "supported with caveat"
+    assert any(c.rule == "many-copies" for c in advice.cautions)
+    assert not any(c.rule == "many-copies" for c in decide(trial(share_of_copied_rows=0.02)).cautions)
+
+
+def test_a_robust_error_far_above_the_model_in_time_is_a_caveat():
+    found = facts(ledger(serial="present"), series=50, rows_in_the_longest_series=60, regular_times=True)
+    wide = (refit("ordinary"), refit("ar1", "", 4.0), refit("cluster-robust", "clinic", 9.0))
+    advice = decide(found, wide)
+    assert (advice.remedy, advice.state) == ("ar1", "supported with caveat")
+    assert any(c.rule == "robust-in-time" and "2.2 times" in c.sentence for c in advice.cautions)
+    near = (*wide[:2], refit("cluster-robust", "clinic", 5.0))
+    assert decide(found, near).state == "supported"

@@ -166,6 +166,19 @@ CAVEATS = (
         "moderate",
     ),
     Rule(
+        "robust-in-time",
+        SERIAL
+        & fact("advised refit models the order in time")
+        & (GROUP | (fact("series") >= 10))
+        & (fact("robust over advised standard error") > 1.5),
+        Then("caveat"),
+        "The standard error robust to any dependence inside a group or series is {robust over advised "
+        "standard error} times the advised one: slopes that differ, or another order in time, may be left "
+        "out.",
+        "mackinnon-nielsen-webb-2023, barr-2013",
+        "moderate",
+    ),
+    Rule(
         "not-covered",
         fact("plausible structure not covered"),
         Then("caveat"),
@@ -220,7 +233,10 @@ CAVEATS = (
     ),
     Rule(
         "slopes-may-differ",
-        GROUP & ~fact("focus at group level") & (fact("robust over advised standard error") > 1.5),
+        GROUP
+        & ~fact("focus at group level")
+        & ~fact("advised refit models the order in time")
+        & (fact("robust over advised standard error") > 1.5),
         Then("caution"),
         "The robust standard error is {robust over advised standard error} times the advised one, a sign "
         "that slopes differ from group to group.",
@@ -355,6 +371,15 @@ CAVEATS = (
         Then("caution"),
         "Single rows lie far from the rest and may carry the result.",
         "cook-weisberg-1982",
+        "strong",
+    ),
+    Rule(
+        "many-copies",
+        fact("share of copied rows") >= 0.1,
+        Then("caveat"),
+        "{share of copied rows} of the rows copy an earlier row in every column used: if they were entered "
+        "twice, they add nothing, pass for dependence, and should be dropped before anything is read.",
+        "own",
         "strong",
     ),
     Rule(

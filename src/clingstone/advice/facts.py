@@ -250,6 +250,10 @@ def _evidence_facts(evidence: Evidence) -> list[Fact]:
         finding = evidence.get(test)
         if finding is not None and finding.verdict != "not applicable":
             out.append(yes(name, finding.verdict == "present", finding.sentence))
+    copies = evidence.get("duplicates")
+    if copies is not None and np.isfinite(copies.estimate):
+        share = float(copies.estimate)
+        out.append(named("share of copied rows", share, "of the rows", percent(share)))
     return out
 
 

@@ -100,8 +100,9 @@ def advised_facts(
     rows = focus_rows(chosen, facts)
     if rows:
         out.append(named("lowest df of the advised refit", min(row.df for row in rows)))
-    robust = find(refits, ROBUST, facts.word("group level"))
-    if robust is not None and chosen.remedy in ("mixed-intercept", "joint"):
+    level = facts.word("group level") or facts.word("series level")
+    robust = find(refits, ROBUST, level) if level else None
+    if robust is not None and chosen.remedy in ("mixed-intercept", *ORDERED):
         out += _ratio("robust over advised standard error", robust, chosen, facts)
     return {f.name: f for f in out}
 
