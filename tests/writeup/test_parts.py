@@ -45,6 +45,8 @@ def level(key: str, parent: str = "") -> GroupSummary:
 
 def test_a_level_is_called_by_what_is_left_of_its_key_under_its_parent():
     assert noun(level("flock/lamb", "flock")) == "lamb"
+    recurring = replace(level("Block/Variety", "Block"), labels=("I/Victory", "II/Victory", "II/Marvel"))
+    assert noun(recurring) == "Variety within Block"
     assert noun(level("km/h")) == "km/h"  # a column whose name holds a slash is no nesting
 
 

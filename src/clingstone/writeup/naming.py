@@ -8,6 +8,7 @@ from clingstone.case import GroupSummary
 from clingstone.display import clean, listed, plural_of, rows
 from clingstone.evidence.finding import Finding
 from clingstone.results import Results
+from clingstone.structure.group import title_of
 
 TESTS = {
     "durbin-watson": "Durbin–Watson",
@@ -55,9 +56,11 @@ def named(row: str) -> str:
 
 
 def noun(g: GroupSummary) -> str:
-    """What one group of a level is called: "lamb" for "flock/lamb" within "flock"."""
-    inside = f"{g.parent}/"
-    return g.key.removeprefix(inside) if g.parent else g.key
+    """ "lamb" for one group of "flock/lamb", "Variety within Block" where the labels of a level recur."""
+    if not g.parent:
+        return g.key
+    inner = [label.rsplit("/", 1)[-1] for label in g.labels]
+    return title_of(g.key) if len(set(inner)) < len(inner) else g.key.removeprefix(f"{g.parent}/")
 
 
 def noun_at(results: Results, key: str) -> str:
