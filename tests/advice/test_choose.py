@@ -387,3 +387,13 @@ def test_a_robust_error_far_above_the_model_in_time_is_a_caveat():
     assert any(c.rule == "robust-in-time" and "2.2 times" in c.sentence for c in advice.cautions)
     near = (*wide[:2], refit("cluster-robust", "clinic", 5.0))
     assert decide(found, near).state == "supported"
+
+
+def test_shocks_that_series_share_given_the_order_in_time_are_a_caveat():
+    values = {"series": 8, "rows_in_the_longest_series": 60, "regular_times": True, "common_shocks": True}
+    advice = decide(facts(ledger(serial="present"), common_shocks_in_time=True, **values))
+    assert (advice.remedy, advice.state) == ("ar1", "supported with caveat")
+    assert "common-shocks-stay" in {c.rule for c in advice.cautions}
+    less = decide(facts(ledger(serial="present"), common_shocks_in_time=False, **values))
+    assert less.state == "supported"
+    assert "common-shocks" in {c.rule for c in less.cautions}

@@ -38,6 +38,7 @@ LATE = {
     "advised refit allows unequal spread",
     "slope model settled",
     "mixed refit at its bound",
+    "advised refit sums over each time",
     "rehearsal fell short",
     "rehearsal leaves a doubt",
     "no rehearsed remedy held",

@@ -304,8 +304,21 @@ CAVEATS = (
         "strong",
     ),
     Rule(
+        "common-shocks-stay",
+        SERIAL & fact("common shocks in time") & ~fact("advised refit sums over each time"),
+        Then("caveat"),
+        "Different series move together at one time, also with the order in time taken into account, and the "
+        "advised refit takes series as independent of each other: effects of the times in the model would "
+        "carry that.",
+        "driscoll-kraay-1998, hoechle-2007",
+        "moderate",
+    ),
+    Rule(
         "common-shocks",
-        SERIAL & fact("common shocks"),
+        SERIAL
+        & fact("common shocks")
+        & ~fact("common shocks in time")
+        & ~fact("advised refit sums over each time"),
         Then("caution"),
         "Different series move together at one time, and the advised refit takes series as independent of "
         "each other: effects of the times in the model would carry that.",

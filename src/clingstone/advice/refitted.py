@@ -83,6 +83,11 @@ def advised_facts(
             chosen.remedy in ORDERED,
             "the advised refit fits a correlation along time",
         ),
+        yes(
+            "advised refit sums over each time",
+            chosen.remedy == "panel-hac",
+            "the advised refit lets series move together at one time",
+        ),
         yes("advised refit did not converge", not settled, "the advised refit's search did not settle"),
         *_moved(facts, refits, chosen),
         *_second(facts, refits, chosen),
