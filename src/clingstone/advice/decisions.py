@@ -16,6 +16,15 @@ PREFER = (
         "strong",
     ),
     Rule(
+        "slopes-in-time",
+        SERIAL & ~SPATIAL & SLOPES & fact("series within groups") & (fact("df of the robust refit") >= 4),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
+        "Slopes of {name of the slope} differ between groups, which no rehearsal here draws, and rows follow "
+        "each other in time: the robust covariance allows for both.",
+        "barr-2013, bell-2019, hansen-2007",
+        "strong",
+    ),
+    Rule(
         "spread-alone",
         ~ANY & SPREAD,
         Then("prefer", "heteroscedasticity-robust", firm=True),
