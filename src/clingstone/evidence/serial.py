@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING
 
@@ -355,7 +356,7 @@ class IrregularSerial(DurbinWatson):
         tails = law.tails(value, fits.depth)
         p, log_p = tail_p(tails, alternative, "upper")
         rho, sd = one_step(response, form, law, doubled=False)
-        rho, sd = rho / np.e, sd / np.e
+        rho, sd = rho / math.e, sd / math.e
         low, high = arcsine(rho, sd, normal_quantile(fits))
         return Reading(
             statistic=value,
