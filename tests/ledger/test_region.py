@@ -8,7 +8,7 @@ from scipy import optimize, stats
 
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
-from clingstone.ledger.region import loglik, region
+from clingstone.ledger.region import loglik, region, regions
 from clingstone.ledger.sizes import icc, variance
 from clingstone.run import Run, one_thread
 from tests.ledger import factories as make
@@ -150,8 +150,9 @@ def test_the_ellipsoid_of_large_problems_is_near_the_region():
         make.design({"x": rng.standard_normal(G * n)}, groups={"s": subject}, series=subject, tick=day), y
     )
     full = region(f, f.full_node, 0.95)
-    walk = module._Walk(f.algebra(f.full_node), f.response, f.full.theta[:, 0], 2 * CUT)
-    rough = module.Region(module._columns(f, f.full_node, walk.ellipsoid()), 0.95, "")
+    walk = module._Walk(f.algebra(f.full_node), f.response, f.full.theta, 2 * CUT)
+    (model,) = module._models(f, f.full_node, walk.ellipsoids())
+    rough = module.Region(model, 0.95, "")
     for key in ("group:s", "serial"):
         exact, near = full.interval(full.model.shares()[key]), rough.interval(rough.model.shares()[key])
         width = exact[2] - exact[0]
@@ -204,3 +205,22 @@ def test_limits_of_the_row_variance_hold_the_truth_as_often_as_they_say():
         low, _, high = variance(region(f, f.full_node, 0.95), "row", f.design.m)
         held += low <= 1.0 <= high
     assert 182 <= held <= 197
+
+
+@pytest.mark.parametrize("serial", [False, True])
+def test_the_regions_of_many_columns_are_those_of_each_alone(serial):
+    rng = np.random.default_rng(31)
+    G, n, B = 20, 6, 4
+    subject, day = np.repeat(np.arange(G), n), np.tile(np.arange(n), G)
+    where = {"series": subject, "tick": day} if serial else {}
+    design = make.design({"x": rng.standard_normal(G * n)}, groups={"s": subject}, **where)
+    Y = np.stack([0.5 * k * rng.standard_normal(G)[subject] for k in range(B)], axis=1)
+    Y += rng.standard_normal(Y.shape)
+    run = make.fits(design, Y[:, 0]).run
+    many = Fits(Response.of(design, Y), run, depth="exact")
+    for b, found in enumerate(regions(many, many.full_node, 0.95)):
+        alone = region(make.fits(design, Y[:, b]), many.full_node, 0.95)
+        assert region(many.column(b), many.full_node, 0.95) is found
+        for key, value in found.model.shares().items():
+            told = found.interval(value)
+            assert told == pytest.approx(alone.interval(alone.model.shares()[key]), abs=2e-4)

@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 import itertools
-from collections.abc import Iterable, Mapping
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
+from typing import Literal
 
 import numpy as np
 
 from clingstone.covariance.algebras import Chosen, choose
 from clingstone.covariance.components import Component, declared, on_request
+from clingstone.covariance.each import each
 from clingstone.covariance.thin import thin
 from clingstone.design.derived import onto
 from clingstone.design.design import Design
@@ -22,6 +24,7 @@ from clingstone.needs import NotSupported, Refusal, memory
 from clingstone.run import Run
 
 Node = frozenset[str]
+Depth = Literal["exact", "fast"]
 
 FACED = 2  # the most working parameters that a shared grid serves
 START_SITES = 400  # places that give a large spatial search its start
@@ -50,6 +53,20 @@ class ErrorModel:
     shape: Mapping[str, Array]
     history: tuple[str, ...] = ()
 
+    def column(self, b: int) -> ErrorModel:
+        """The model of one column of y."""
+        pick = slice(b, b + 1)
+        return replace(
+            self,
+            theta=self.theta[:, pick],
+            sigma2=self.sigma2[pick],
+            loglik=self.loglik[pick],
+            at_bound=self.at_bound[:, pick],
+            converged=self.converged[pick],
+            variances={key: v[pick] for key, v in self.variances.items()},
+            shape={key: v[pick] for key, v in self.shape.items()},
+        )
+
     def shares(self) -> Mapping[str, Array]:
         """(B,) share of the residual variance that each structure holds, and "row"; they add to 1.
 
@@ -69,7 +86,8 @@ class Fits:
     components : supported components by key, in building order.
     refused : declared structures that the data cannot carry, with the reason.
     left_out : supported components that the joint model of ``full_node`` does without, with the reason.
-    depth : "exact" for one column of y, "fast" (shared grid, interpolated) for many.
+    depth : "exact", or "fast" (shared grid, interpolated), the default for many columns of y.
+    whole : the fits of many columns of which this is one, and which; its models are theirs.
 
     Notes
     -----
@@ -86,8 +104,16 @@ class Fits:
     components: Mapping[str, Component]
     refused: Mapping[str, Refusal]
 
-    def __init__(self, response: Response, run: Run) -> None:
-        self.response, self.run = response, run
+    def __init__(
+        self,
+        response: Response,
+        run: Run,
+        *,
+        depth: Depth | None = None,
+        whole: tuple[Fits, int] | None = None,
+    ) -> None:
+        self.response, self.run, self.whole = response, run, whole
+        self.depth: Depth = depth or ("exact" if response.B == 1 else "fast")
         self.components, self.refused = kept(
             self.design, ("declared", run.limits), lambda: declared(response.design, run.limits)
         )
@@ -97,9 +123,9 @@ class Fits:
     def design(self) -> Design:
         return self.response.design
 
-    @property
-    def depth(self) -> str:
-        return "exact" if self.response.B == 1 else "fast"
+    def column(self, b: int) -> Fits:
+        """Those of one column of y, each model fitted with all the others'."""
+        return Fits(self.response.column(b), self.run, whole=(self, b))
 
     def __getitem__(self, node: Iterable[str]) -> ErrorModel:
         """The REML fit of a set of components (the empty set is independence). Raises NotSupported."""
@@ -192,10 +218,15 @@ class Fits:
         algebra = self.algebra(node)
         self._check()
         d = len(algebra.parameters)
+        if self.whole is not None:
+            whole, b = self.whole
+            return whole[node].column(b)
         if d == 0:
             return self._independent()
         if self.response.B == 1:
             return self._exact(node, algebra)
+        if self.depth == "exact":
+            return self._each(node, algebra)
         return self._fast(node, algebra) if d <= FACED else self._one_by_one(node, algebra)
 
     def _check(self) -> None:
@@ -303,6 +334,16 @@ class Fits:
             (note,),
         )
 
+    def _each(self, node: Node, algebra: Chosen) -> ErrorModel:
+        """Every column searched as if it were alone."""
+        many = each(algebra, self.response)
+        if many is None:
+            return _joined([Fits(self.response.column(b), self.run)[node] for b in range(self.response.B)])
+        found = many.minima()
+        _, c, _ = many.grams(found.theta, np.arange(self.response.B)).reduced()
+        scale = c / self.design.m
+        return self._model(node, found.theta, scale, found.value, found.at_bound, found.converged, ())
+
     def _one_by_one(self, node: Node, algebra: Chosen) -> ErrorModel:
         warm: Optimum | None = None
         found = []
@@ -325,6 +366,24 @@ class Fits:
             np.array([best.converged for best, _ in found]),
             (f"{self.response.B:,} columns of y, each searched from the first one's optimum",),
         )
+
+
+def _joined(models: Sequence[ErrorModel]) -> ErrorModel:
+    """The models of single columns as one of many."""
+
+    def along(parts: Sequence[Mapping[str, Array]]) -> dict[str, Array]:
+        return {key: np.concatenate([np.ravel(part[key]) for part in parts]) for key in parts[0]}
+
+    return replace(
+        models[0],
+        theta=np.hstack([m.theta for m in models]),
+        sigma2=np.concatenate([m.sigma2 for m in models]),
+        loglik=np.concatenate([m.loglik for m in models]),
+        at_bound=np.hstack([m.at_bound for m in models]),
+        converged=np.concatenate([m.converged for m in models]),
+        variances=along([m.variances for m in models]),
+        shape=along([m.shape for m in models]),
+    )
 
 
 def _response(design: Design, Y: Array) -> Response:

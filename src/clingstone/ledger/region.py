@@ -9,15 +9,19 @@ honest, where a parametric bootstrap from the estimate itself would draw too sma
 from __future__ import annotations
 
 from dataclasses import dataclass
+from typing import NamedTuple
 
 import numpy as np
 from scipy import stats
 
 from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.each import each
 from clingstone.covariance.fits import ErrorModel, Fits
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.once import Array, kept
+from clingstone.maths.each import Places
+from clingstone.maths.once import Array, kept, once
+from clingstone.maths.search import Flags
 
 RAYS = {2: 24, 3: 48}  # directions of the first round, by number of parameters; 64 above
 SECOND = 10  # directions from each extreme point in the second round
@@ -50,43 +54,72 @@ class Region:
 
 def loglik(algebra: Chosen, theta: Array, response: Response) -> tuple[float, float]:
     """Restricted log-likelihood and the profiled σ² of the first column at one θ (d,)."""
+    value, sigma2 = _alone(algebra, theta, response)
+    return float(value[0]), float(sigma2[0])
+
+
+def logliks(algebra: Chosen, theta: Array, response: Response, owner: Places) -> tuple[Array, Array]:
+    """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y."""
+    many = each(algebra, response) if len(theta) else None
+    if many is not None:
+        try:
+            grams = many.grams(theta, owner)
+            _, c, _ = grams.reduced()
+            value = -0.5 * grams.criterion(response.design.m)
+            return np.where(np.isfinite(value), value, -np.inf), c / response.design.m
+        except np.linalg.LinAlgError:
+            pass  # one of them; each by itself then
+    out = np.empty((2, theta.shape[1]))
+    for b in np.unique(owner):
+        column = response if response.B == 1 else response.column(int(b))
+        for k in np.flatnonzero(owner == b):
+            out[:, k] = np.ravel(_alone(algebra, theta[:, k], column))
+    return out[0], out[1]
+
+
+def _alone(algebra: Chosen, theta: Array, response: Response) -> tuple[Array, Array]:
+    """The same (B,) of every column at one θ (d,)."""
     m = response.design.m
     try:
         gram = algebra.gram(theta, response)
-        value = -0.5 * float(reml.criterion(gram, m)[0])
-        return (value if np.isfinite(value) else -np.inf), float(reml.scale(gram, m)[0])
-    except np.linalg.LinAlgError:
-        return -np.inf, float("nan")  # V is not numerically positive definite this far out
+        value = -0.5 * reml.criterion(gram, m)
+        return np.where(np.isfinite(value), value, -np.inf), reml.scale(gram, m)
+    except np.linalg.LinAlgError:  # V is not numerically positive definite this far out
+        return np.full(response.B, -np.inf), np.full(response.B, np.nan)
 
 
 def region(fits: Fits, node: frozenset[str], confidence: float) -> Region:
     """The likelihood region of a node of the first column of y, sampled once. Raises NotSupported."""
-    place = ("likelihood region", node, confidence, fits.run.limits, fits.run.settings.seed)
+    if fits.whole is not None:
+        whole, b = fits.whole
+        return regions(whole, node, confidence)[b]
+    return regions(fits if fits.response.B == 1 else fits.column(0), node, confidence)[0]
+
+
+def regions(fits: Fits, node: frozenset[str], confidence: float) -> tuple[Region, ...]:
+    """The likelihood region of a node for every column of y, sampled once. Raises NotSupported."""
+    place = ("likelihood regions", node, confidence, fits.run.limits, fits.run.settings.seed)
     return kept(fits.response, place, lambda: _sampled(fits, node, confidence))
 
 
-def _sampled(fits: Fits, node: frozenset[str], confidence: float) -> Region:
-    fit = fits[node]
-    algebra = fits.algebra(node)
-    best = np.asarray(fit.theta[:, 0], dtype=float)
-    walk = _Walk(algebra, fits.response, best, float(stats.chi2.isf(1 - confidence, 1)))
-    d = len(best)
+def _sampled(fits: Fits, node: frozenset[str], confidence: float) -> tuple[Region, ...]:
+    fit, algebra, B = fits[node], fits.algebra(node), fits.response.B
+    walk = _Walk(algebra, fits.response, fit.theta, float(stats.chi2.isf(1 - confidence, 1)))
+    d = len(fit.theta)
     work = _work(fits, node)
     if d == 0:
-        points, method = [best], "nothing to estimate"
+        points, method = Points(fit.theta, np.arange(B)), "nothing to estimate"
     elif work > TOO_HEAVY and d > 1:
-        points, method = walk.ellipsoid(), "curvature of the restricted likelihood (large problem)"
+        points, method = walk.ellipsoids(), "curvature of the restricted likelihood (large problem)"
     elif d == 1:
-        points, method = walk.line(GRID if work <= HEAVY else GRID // 2), "profile likelihood"
+        points, method = walk.lines(GRID if work <= HEAVY else GRID // 2), "profile likelihood"
     else:
-        rng = fits.run.child("likelihood region " + "+".join(sorted(node)))
-        rays = RAYS.get(d, 64)
-        points = walk.rays(best, rays, rng)
+        aims = Aims(d, fits.run.child("likelihood region " + "+".join(sorted(node))))
+        points = walk.rays(walk.centres, aims.of(0, RAYS.get(d, 64)))
         if work <= HEAVY:
-            for centre in walk.extremes(points):
-                points += walk.rays(centre, SECOND, rng)
+            points = walk.outwards(points, aims)
         method = "profile likelihood, region sampled along rays"
-    return Region(_columns(fits, node, points), confidence, method)
+    return tuple(Region(model, confidence, method) for model in _models(fits, node, points))
 
 
 def _work(fits: Fits, node: frozenset[str]) -> float:
@@ -98,160 +131,269 @@ def _work(fits: Fits, node: frozenset[str]) -> float:
     return work
 
 
-def _columns(fits: Fits, node: frozenset[str], points: list[Array]) -> ErrorModel:
+def _models(fits: Fits, node: frozenset[str], points: Points) -> list[ErrorModel]:
+    """Per column of y its points as an error model, the estimate first."""
     fit, algebra = fits[node], fits.algebra(node)
-    theta = np.array(points).T.reshape(len(points[0]), len(points))
-    pairs = [loglik(algebra, point, fits.response) for point in points]
-    sigma2 = np.array([pair[1] for pair in pairs])
-    sigma2[0] = fit.sigma2[0]
-    B = len(points)
-    return ErrorModel(
-        node=fit.node,
-        names=fit.names,
-        theta=theta,
-        sigma2=sigma2,
-        loglik=np.array([pair[0] for pair in pairs]),
-        at_bound=np.repeat(np.asarray(fit.at_bound)[:, :1], B, axis=1),
-        converged=np.ones(B, dtype=bool),
-        variances=algebra.variances(theta, sigma2),
-        shape=algebra.shape(theta),
-    )
+    value, sigma2 = logliks(algebra, points.theta, fits.response, points.owner)
+    out = []
+    for b in range(fits.response.B):
+        mine = points.of(b)
+        theta, scale = points.theta[:, mine], sigma2[mine]
+        scale[0] = fit.sigma2[b]
+        out.append(
+            ErrorModel(
+                node=fit.node,
+                names=fit.names,
+                theta=theta,
+                sigma2=scale,
+                loglik=value[mine],
+                at_bound=np.repeat(np.asarray(fit.at_bound)[:, b : b + 1], len(mine), axis=1),
+                converged=np.ones(len(mine), dtype=bool),
+                variances=algebra.variances(theta, scale),
+                shape=algebra.shape(theta),
+            )
+        )
+    return out
+
+
+class Points(NamedTuple):
+    """Parameters theta (d, N), each of a column of y, owner (N,)."""
+
+    theta: Array
+    owner: Places
+
+    def of(self, b: int) -> Places:
+        """Where the points of one column stand."""
+        return np.flatnonzero(self.owner == b)
+
+    def only(self, which: Places | Flags) -> Points:
+        return Points(self.theta[:, which], self.owner[which])
+
+    def plus(self, other: Points) -> Points:
+        return Points(np.hstack([self.theta, other.theta]), np.concatenate([self.owner, other.owner]))
+
+
+class Aims:
+    """Directions of the rays, the same for every column of y: the k-th centre of each has the k-th set."""
+
+    def __init__(self, d: int, rng: np.random.Generator) -> None:
+        self.d, self.rng = d, rng
+        self.held: list[Array] = []
+
+    def of(self, k: int, count: int) -> Array:
+        """(d, count + 2d) directions from the k-th centre."""
+        while len(self.held) <= k:
+            self.held.append(self._drawn(count))
+        return self.held[k]
+
+    def _drawn(self, count: int) -> Array:
+        if self.d == 2:
+            angle = 2 * np.pi * (np.arange(count) + self.rng.uniform()) / count
+            aims = np.stack([np.cos(angle), np.sin(angle)], axis=1)
+        else:
+            aims = self.rng.standard_normal((count, self.d))
+        return np.vstack([np.eye(self.d), -np.eye(self.d), aims]).T
 
 
 class _Walk:
-    """Looks for the edge of the region from points inside it."""
+    """Looks for the edge of the region of every column of y, from points inside, all rays in step.
+
+    best (d, B) : the estimates.
+    """
 
     def __init__(self, algebra: Chosen, response: Response, best: Array, cut: float) -> None:
-        self.algebra, self.response, self.best = algebra, response, best
-        self.low = np.array([q.low for q in algebra.parameters])
-        self.high = np.array([q.high for q in algebra.parameters])
-        self.floor = loglik(algebra, best, response)[0] - cut / 2
+        self.algebra, self.response, self.best = algebra, response, np.asarray(best, dtype=float)
+        self.low = np.array([q.low for q in algebra.parameters])[:, None]
+        self.high = np.array([q.high for q in algebra.parameters])[:, None]
+        every = np.arange(self.best.shape[1])
+        self.floor = logliks(algebra, self.best, response, every)[0] - cut / 2
+        self.centres = Points(self.best, every)
 
-    def margin(self, theta: Array) -> float:
-        """How far the log-likelihood lies above the edge of the region."""
-        return loglik(self.algebra, theta, self.response)[0] - self.floor
+    def margin(self, theta: Array, owner: Places) -> Array:
+        """(K,) how far the log-likelihoods lie above the edge of the region."""
+        return logliks(self.algebra, theta, self.response, owner)[0] - self.floor[owner]
 
-    def inside(self, theta: Array) -> bool:
-        return self.margin(theta) >= 0
+    def inside(self, points: Points) -> Points:
+        """Those of the points that lie inside."""
+        return points.only(self.margin(*points) >= 0)
 
-    def edge(self, start: Array, direction: Array) -> Array:
-        """The last point inside along a ray that leaves ``start``, stopped by the bounds."""
+    def edge(self, start: Points, direction: Array) -> Array:
+        """(d, K) the last point inside along each ray that leaves ``start``, stopped by the bounds."""
+        theta, owner = start
         with np.errstate(divide="ignore", invalid="ignore"):
-            steps = np.where(direction > 0, (self.high - start) / direction, (self.low - start) / direction)
-        reach = float(np.nanmin(np.where(direction == 0, np.inf, steps)))
-        if not reach > 0:
-            return start
-        if self.inside(self._at(start, direction, reach)):
-            return self._at(start, direction, reach)
-        # A first step that doubles finds the nearest way out; a search over the whole ray may jump
-        # over a second piece of the region.
-        near, far = 0.0, reach / 64
-        above, below = self.margin(start), self.margin(self._at(start, direction, far))
-        while far < reach and below >= 0:
-            near, above, far = far, below, min(2 * far, reach)
-            below = self.margin(self._at(start, direction, far))
-        return self._at(start, direction, self._crossing(start, direction, (near, above), (far, below)))
+            room = np.where(direction > 0, self.high - theta, self.low - theta)
+            reach = np.nanmin(np.where(direction == 0, np.inf, room / direction), axis=0)
+        end = theta.copy()
+        live = np.flatnonzero(reach > 0)
+        if not len(live):
+            return end
+        whole = self._at(theta[:, live], direction[:, live], reach[live])
+        out = self.margin(whole, owner[live]) < 0
+        end[:, live[~out]] = whole[:, ~out]
+        live = live[out]
+        if len(live):
+            ray = _Rays(self, theta[:, live], direction[:, live], owner[live])
+            end[:, live] = self._at(ray.start, ray.direction, ray.crossing(reach[live]))
+        return end
 
-    def _crossing(
-        self, start: Array, direction: Array, near: tuple[float, float], far: tuple[float, float]
-    ) -> float:
-        """The step at which the margin reaches zero, from inside: false position with Illinois' halving."""
-        (low, above), (high, below) = near, far
-        width, pull = high - low, [above, below]  # what draws the line; the end that stays loses half
-        for _ in range(BISECTIONS):
-            if above <= CLOSE or high - low <= width / 2**BISECTIONS:
-                break
-            fall = pull[0] - pull[1]
-            part = pull[0] / fall if np.isfinite(fall) and fall > 0 else 0.5
-            step = low + (high - low) * float(np.clip(part, 0.05, 0.95))
-            found = self.margin(self._at(start, direction, step))
-            if found >= 0:
-                low, above, pull = step, found, [found, pull[1] / 2]
-            else:
-                high, pull = step, [pull[0] / 2, found]
-        return low
-
-    def _at(self, start: Array, direction: Array, step: float) -> Array:
+    def _at(self, start: Array, direction: Array, step: Array) -> Array:
         return np.asarray(np.clip(start + step * direction, self.low, self.high))
 
-    def line(self, count: int) -> list[Array]:
+    def lines(self, count: int) -> Points:
         """One parameter: the outermost crossings on a grid, refined, and what lies between."""
-        grid = np.linspace(self.low[0], self.high[0], count)
-        held = [g for g in grid if self.inside(np.array([g]))]
+        B = len(self.floor)
+        grid = np.linspace(self.low[0, 0], self.high[0, 0], count)
+        value = np.stack([_alone(self.algebra, np.array([g]), self.response)[0] for g in grid])  # (count, B)
+        held = value >= self.floor
+        found = self.centres
         ends = []
         for side in (-1.0, 1.0):
-            outer = [g for g in held if side * (g - self.best[0]) > 0]
-            start = np.array([max(outer, key=lambda g: side * g)]) if outer else self.best
-            ends.append(self.edge(start, np.array([side])))
-        between = np.linspace(ends[0][0], ends[1][0], count // 2)
-        return [self.best, *ends, *(np.array([g]) for g in between if self.inside(np.array([g])))]
+            outer = held & (side * (grid[:, None] - self.best) > 0)
+            furthest = np.where(outer, side * grid[:, None], -np.inf).max(axis=0)
+            start = np.where(np.isfinite(furthest), side * furthest, self.best[0])
+            ends.append(self.edge(Points(start[None], np.arange(B)), np.full((1, B), side)))
+            found = found.plus(Points(ends[-1], np.arange(B)))
+        between = np.linspace(ends[0][0], ends[1][0], count // 2)  # (count // 2, B)
+        inner = Points(between.reshape(1, -1), np.tile(np.arange(B), count // 2))
+        return found.plus(self.inside(inner))
 
-    def widths(self) -> tuple[Array, Array]:
-        """Distance to the edge down and up each axis."""
-        d = len(self.best)
-        down, up = np.empty(d), np.empty(d)
-        for j, axis in enumerate(np.eye(d)):
-            down[j] = self.best[j] - self.edge(self.best, -axis)[j]
-            up[j] = self.edge(self.best, axis)[j] - self.best[j]
-        return down, up
+    def rays(self, centres: Points, aims: Array) -> Points:
+        """Edge points in many directions, in units of the region's own width along each axis.
 
-    def rays(self, start: Array, count: int, rng: np.random.Generator) -> list[Array]:
-        """Edge points in many directions, in units of the region's own width along each axis."""
-        d = len(start)
-        down, up = self._scale()
-        if d == 2:
-            angle = 2 * np.pi * (np.arange(count) + rng.uniform()) / count
-            aims = np.stack([np.cos(angle), np.sin(angle)], axis=1)
-        else:
-            aims = rng.standard_normal((count, d))
-        aims = np.vstack([np.eye(d), -np.eye(d), aims])
-        found = [start]
-        for aim in aims:
-            outward = ((start <= self.low) & (aim < 0)) | ((start >= self.high) & (aim > 0))
-            aim = np.where(outward, -aim, aim)
-            direction = np.where(aim < 0, aim * down, aim * up)
-            end = self.edge(start, direction)
-            found += [end, start + (end - start) / 2]
-        return [point for point in found if self.inside(point)]
+        aims (d, A) for every centre, or (d, A, K) with directions of its own for each.
+        """
+        d, K = centres.theta.shape
+        A = aims.shape[1]
+        aims = np.repeat(aims[:, :, None], K, axis=2) if aims.ndim == 2 else aims
+        start = np.repeat(centres.theta[:, None], A, axis=1)  # (d, A, K)
+        low, high = self.low[:, :, None], self.high[:, :, None]
+        outward = ((start <= low) & (aims < 0)) | ((start >= high) & (aims > 0))
+        aims = np.where(outward, -aims, aims)
+        down, up = (width[:, centres.owner][:, None] for width in self._scale)
+        direction = np.where(aims < 0, aims * down, aims * up).reshape(d, -1)
+        rays = Points(start.reshape(d, -1), np.tile(centres.owner, A))
+        end = self.edge(rays, direction)
+        half = rays.theta + (end - rays.theta) / 2
+        return self.inside(centres.plus(Points(end, rays.owner)).plus(Points(half, rays.owner)))
 
+    @property
+    @once
     def _scale(self) -> tuple[Array, Array]:
-        if not hasattr(self, "_held"):
-            down, up = self.widths()
-            least = 1e-3 * (self.high - self.low)
-            self._held = np.maximum(down, least), np.maximum(up, least)
-        return self._held
+        """Distance to the edge down and up each axis, (d, B) each."""
+        d, B = self.best.shape
+        aims = np.repeat(np.hstack([-np.eye(d), np.eye(d)]), B, axis=1)  # (d, 2d·B)
+        start = Points(np.tile(self.best, 2 * d), np.tile(np.arange(B), 2 * d))
+        apart = np.abs(self.edge(start, aims) - start.theta).reshape(d, 2, d, B)
+        down, up = (np.einsum("iib->ib", apart[:, side]) for side in (0, 1))
+        least = 1e-3 * (self.high - self.low)
+        return np.maximum(down, least), np.maximum(up, least)
 
-    def extremes(self, points: list[Array]) -> list[Array]:
-        """Points that are furthest out in some direction of interest, drawn a little inwards."""
-        theta = np.array(points)
-        chosen = {int(i) for i in np.r_[theta.argmin(axis=0), theta.argmax(axis=0)]}
-        P = theta.T
-        variances = self.algebra.variances(P, np.ones(P.shape[1]))
-        total = sum(variances.values(), start=np.zeros(P.shape[1]))
-        for value in variances.values():
-            chosen |= {int(np.argmin(value / total)), int(np.argmax(value / total))}
-        drawn = [theta[i] + 0.1 * (self.best - theta[i]) for i in sorted(chosen)]
-        return [point for point in drawn if self.inside(point)]
+    def outwards(self, points: Points, aims: Aims) -> Points:
+        """The second round: rays from the points that are furthest out, drawn a little inwards."""
+        centres = self.inside(self._extremes(points))
+        if not len(centres.owner):
+            return points
+        order = np.zeros(len(centres.owner), dtype=np.int64)  # which centre of its column each one is
+        for b in np.unique(centres.owner):
+            mine = centres.of(int(b))
+            order[mine] = np.arange(len(mine))
+        chosen = np.stack([aims.of(1 + k, SECOND) for k in range(int(order.max()) + 1)], axis=2)
+        return points.plus(self.rays(centres, chosen[:, :, order]))
 
-    def ellipsoid(self) -> list[Array]:
-        """Where the quadratic approximation at the estimate puts the edge, along its axes."""
-        d = len(self.best)
-        h = 1e-3 * (self.high - self.low)
-        base = loglik(self.algebra, self.best, self.response)[0]
+    def _extremes(self, points: Points) -> Points:
+        """Per column the points furthest out in some direction of interest, a tenth of the way back."""
+        variances = self.algebra.variances(points.theta, np.ones(len(points.owner)))
+        total = sum(variances.values(), start=np.zeros(len(points.owner)))
+        scales = [*points.theta, *(value / total for value in variances.values())]
+        drawn, owner = [], []
+        for b in range(len(self.floor)):
+            mine = points.of(b)
+            seen = [scale[mine] for scale in scales]
+            chosen = sorted({int(v.argmin()) for v in seen} | {int(v.argmax()) for v in seen})
+            theta = points.theta[:, mine[chosen]]
+            drawn.append(theta + 0.1 * (self.best[:, b : b + 1] - theta))
+            owner += [b] * len(chosen)
+        return Points(np.hstack(drawn), np.array(owner, dtype=np.int64))
 
-        def rise(step: Array) -> float:
-            at = np.clip(self.best + step, self.low, self.high)
-            return base - loglik(self.algebra, at, self.response)[0]
+    def ellipsoids(self) -> Points:
+        """Where the quadratic approximation at each estimate puts the edge, along its axes."""
+        found = self.centres
+        for b in range(len(self.floor)):
+            ends = self._ellipsoid(b)
+            found = found.plus(Points(ends, np.full(ends.shape[1], b)))
+        return found
 
+    def _ellipsoid(self, b: int) -> Array:
+        best = self.best[:, b : b + 1]
+        d = len(best)
+        h = 1e-3 * (self.high - self.low)[:, 0]
+        pairs = [(i, j) for i in range(d) for j in range(i + 1)]
         E = np.diag(h)
+        moves = [E[i] * one + E[j] * two for i, j in pairs for one, two in _SIGNS]
+        theta = np.clip(best + np.array([np.zeros(d), *moves]).T, self.low, self.high)
+        owner = np.full(theta.shape[1], b)
+        value = logliks(self.algebra, theta, self.response, owner)[0]
+        rise = (value[0] - value[1:]).reshape(-1, 4)
         H = np.empty((d, d))
-        for i in range(d):
-            for j in range(i + 1):
-                H[i, j] = H[j, i] = (
-                    rise(E[i] + E[j]) - rise(E[i] - E[j]) - rise(E[j] - E[i]) + rise(-E[i] - E[j])
-                ) / (4 * h[i] * h[j])
+        for (i, j), four in zip(pairs, rise, strict=True):
+            H[i, j] = H[j, i] = (four[0] - four[1] - four[2] + four[3]) / (4 * h[i] * h[j])
         values, vectors = np.linalg.eigh(H)
-        reach = np.sqrt(2 * (base - self.floor) / np.maximum(values, 1e-12))
+        reach = np.sqrt(2 * (value[0] - self.floor[b]) / np.maximum(values, 1e-12))
         reach = np.minimum(reach, float(np.max(self.high - self.low)))
-        ends = [self.best + side * r * v for r, v in zip(reach, vectors.T, strict=True) for side in (-1, 1)]
-        return [self.best, *(np.clip(end, self.low, self.high) for end in ends)]
+        ends = [side * r * v for r, v in zip(reach, vectors.T, strict=True) for side in (-1, 1)]
+        return np.asarray(np.clip(best + np.array(ends).T, self.low, self.high))
+
+
+_SIGNS = ((1, 1), (1, -1), (-1, 1), (-1, -1))
+
+
+@dataclass(frozen=True, eq=False)
+class _Rays:
+    """Rays whose far end lies outside: start and direction (d, K), owner (K,)."""
+
+    walk: _Walk
+    start: Array
+    direction: Array
+    owner: Places
+
+    def margin(self, which: Places, step: Array) -> Array:
+        at = self.walk._at(self.start[:, which], self.direction[:, which], step)
+        return self.walk.margin(at, self.owner[which])
+
+    def crossing(self, reach: Array) -> Array:
+        """(K,) the step at which each margin reaches zero, from inside.
+
+        A first step that doubles finds the nearest way out; a search over the whole ray may jump over
+        a second piece of the region.
+        """
+        every = np.arange(len(reach))
+        near, far = np.zeros(len(reach)), reach / 64
+        above, below = self.margin(every, near), self.margin(every, far)
+        while True:
+            live = np.flatnonzero((far < reach) & (below >= 0))
+            if not len(live):
+                return self._between(near, above, far, below)
+            near[live], above[live] = far[live], below[live]
+            far[live] = np.minimum(2 * far[live], reach[live])
+            below[live] = self.margin(live, far[live])
+
+    def _between(self, low: Array, above: Array, high: Array, below: Array) -> Array:
+        """False position with Illinois' halving: the end that stays loses half of its pull."""
+        width, up, down = high - low, above.copy(), below.copy()
+        for _ in range(BISECTIONS):
+            live = np.flatnonzero((above > CLOSE) & (high - low > width / 2**BISECTIONS))
+            if not len(live):
+                break
+            fall = up[live] - down[live]
+            sound = np.isfinite(fall) & (fall > 0)
+            part = np.full(len(live), 0.5)
+            part[sound] = np.clip(up[live][sound] / fall[sound], 0.05, 0.95)
+            step = low[live] + (high[live] - low[live]) * part
+            found = self.margin(live, step)
+            ahead = found >= 0
+            i, o = live[ahead], live[~ahead]
+            low[i], above[i], up[i] = step[ahead], found[ahead], found[ahead]
+            down[i] /= 2
+            high[o], down[o] = step[~ahead], found[~ahead]
+            up[o] /= 2
+        return low
