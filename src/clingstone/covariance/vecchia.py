@@ -13,7 +13,7 @@ from clingstone.maths import groups, matern, vecchia
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
 from clingstone.maths.once import Array, once
-from clingstone.maths.vecchia import NEIGHBOURS, Order
+from clingstone.maths.vecchia import KEPT, NEIGHBOURS, Order
 from clingstone.needs import NotSupported, memory
 
 TINY = 1e-6  # of a site's variance, added where a field stands without noise
@@ -35,7 +35,8 @@ class NearestPiece(SpatialPiece):
     def order(self) -> Order:
         """The same for the same sites: its random choices are part of the method."""
         S = self.sites.count
-        memory(8.0 * S * (4 * NEIGHBOURS + 40), f"a nearest-neighbour likelihood of {S:,} places")
+        distances = NEIGHBOURS * (NEIGHBOURS + 1) / 2 if S <= KEPT else 0
+        memory(8.0 * S * (4 * NEIGHBOURS + 40 + distances), f"a nearest-neighbour likelihood of {S:,} places")
         return Order.of(self.sites.points, NEIGHBOURS, np.random.default_rng(0))
 
     def correlation(self, theta: Array) -> vecchia.Correlation:

@@ -19,10 +19,12 @@ from scipy.spatial import cKDTree
 
 from clingstone.maths.basis import Gram
 from clingstone.maths.groups import Load
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, frozen, once
 
 NEIGHBOURS = 20
 CHUNK = 1024
+KEPT = 200_000  # places up to which the distances of the small problems are kept (340 MB at 20 neighbours)
+ABSENT = 1e100  # distance to a neighbour that is not there
 LEVELS = 24
 Places = npt.NDArray[np.int64]
 Correlation = Callable[[Array], Array]
@@ -110,8 +112,8 @@ class Order:
     def rows(self, correlation: Correlation, ratio: float, noise: Array) -> tuple[Array, Array]:
         """Rows of U for V = ratio·R + diag(noise): weights (m + 1, S), the place last; parts (S,) of ln|V|.
 
-        noise (S,) in the order of the places. Chunks of places with the chunk last, so that every step of the
-        small Cholesky factors runs over contiguous memory.
+        noise (S,) in the order of the places. correlation must vanish at ``ABSENT``. Chunks of places with
+        the chunk last, so that every step of the small Cholesky factors runs over contiguous memory.
         """
         S, m = self.near.shape
         weights, logdet = np.empty((m + 1, S)), np.empty(S)
@@ -124,23 +126,47 @@ class Order:
         return weights, logdet
 
     def _small(self, here: slice, correlation: Correlation, ratio: float, noise: Array) -> Array:
-        """(m + 1, m + 1, chunk) covariance of the neighbours and the place; lower triangle only."""
-        near, own = self.near[here].T, np.arange(here.start, here.stop)
-        m = len(near)
-        who = np.vstack([near, own])
-        there = who >= 0
-        x = self.points[who].transpose(0, 2, 1)  # (m + 1, ·, chunk); −1 reads the last place, masked below
-        C = np.empty((m + 1, m + 1, len(own)))
-        for i in range(m + 1):
-            apart = x[: i + 1] - x[i]
-            distance = np.sqrt(np.einsum("jdc,jdc->jc", apart, apart))
-            row = ratio * correlation(distance)
-            row[i] += noise[who[i]]
-            if not there.all():
-                row = np.where(there[: i + 1] & there[i], row, 0.0)
-                row[i] = np.where(there[i], row[i], 1.0)
-            C[i, : i + 1] = row
+        """(m + 1, m + 1, chunk) covariance of the neighbours and the place; lower triangle only.
+
+        A neighbour that is not there is a place infinitely far away, whose weight comes out as zero.
+        """
+        covariance = correlation(self.apart[:, here] if self.count <= KEPT else self._apart(here))
+        covariance *= ratio
+        own = ratio + noise[self._who(here)]  # −1 reads the last place's: any positive number serves
+        k = len(own)
+        C = np.empty((k, k, own.shape[1]))
+        for i in range(k):
+            C[i, :i] = covariance[i * (i - 1) // 2 : i * (i + 1) // 2]
+            C[i, i] = own[i]
         return C
+
+    @property
+    @once
+    def apart(self) -> Array:
+        """(m(m + 1)/2, S) distances within each small problem, the lower triangle row by row.
+
+        They do not depend on what is fitted, and cost more than all the rest of one likelihood.
+        """
+        out = np.empty((self.near.shape[1] * (self.near.shape[1] + 1) // 2, self.count))
+        for start in range(0, self.count, CHUNK):
+            here = slice(start, min(start + CHUNK, self.count))
+            out[:, here] = self._apart(here)
+        return frozen(out)
+
+    def _apart(self, here: slice) -> Array:
+        who = self._who(here)
+        there = who >= 0
+        x = self.points[who].transpose(0, 2, 1)  # (m + 1, ·, chunk)
+        out = np.empty((len(who) * (len(who) - 1) // 2, who.shape[1]))
+        for i in range(1, len(who)):
+            step = x[:i] - x[i]
+            distance = np.sqrt(np.einsum("jdc,jdc->jc", step, step))
+            out[i * (i - 1) // 2 : i * (i + 1) // 2] = np.where(there[:i] & there[i], distance, ABSENT)
+        return out
+
+    def _who(self, here: slice) -> Places:
+        """(m + 1, chunk) the neighbours of some places, and themselves last."""
+        return np.vstack([self.near[here].T, np.arange(here.start, here.stop)])
 
     def whiten(self, weights: Array, block: Array) -> Array:
         """U block for (S, k) rows in the places' own numbers; the result in the order of the places."""
