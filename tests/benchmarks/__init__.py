@@ -1,0 +1,6 @@
+"""This package beside general-purpose libraries: ``python -m tests.benchmarks`` (``pairs`` says what a row is)."""
+
+import os
+
+for _threads in ("OPENBLAS_NUM_THREADS", "OMP_NUM_THREADS", "MKL_NUM_THREADS", "NUMBA_NUM_THREADS"):
+    os.environ.setdefault(_threads, "1")  # before numpy is imported; R inherits it
