@@ -1,4 +1,4 @@
-"""This package beside general-purpose libraries: ``python -m tests.benchmarks`` (``pairs`` says what a row is)."""
+"""This package beside general-purpose libraries: ``python -m tests.benchmarks``. A row: see ``pairs``."""
 
 import os
 
