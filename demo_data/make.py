@@ -1,4 +1,4 @@
-"""Makes the four data sets of Halvendale, an invented valley. Run: python demo_data/make.py [FOLDER]
+"""Makes the eight data sets of Halvendale, an invented valley. Run: python demo_data/make.py [FOLDER]
 
 The random numbers come from numpy's RandomState, whose streams are frozen for good, so that every
 version of numpy gives the same bytes. Effects of the few units at the top of a hierarchy are scaled
@@ -48,6 +48,39 @@ TRUTH = {
         "range km": 4.0,
         "site sd": 0.5,
         "noise sd": 0.6,
+    },
+    "transects": {
+        "grazed": -0.35,
+        "wind": -0.08,
+        "best elevation": 420.0,
+        "half width": 286.0,
+        "transect sd": 0.2,
+        "noise sd": 0.35,
+    },
+    "visits": {
+        "start": 0.5,
+        "week": -0.06,
+        "week with new care": -0.05,
+        "patient sd": 0.7,
+        "process sd": 1.0,
+        "process weeks": 6.0,
+        "noise sd": 0.5,
+    },
+    "plots": {
+        "brim": 0.1,
+        "cote": 0.25,
+        "dale": 0.0,
+        "esk": -0.15,
+        "field sd": 0.45,
+        "range m": 9.0,
+        "noise sd": 0.25,
+    },
+    "survey": {
+        "spending": 0.12,
+        "school": 0.05,
+        "age": 0.004,
+        "land sd": 0.45,
+        "residual sd": 1.2,
     },
 }
 
@@ -198,6 +231,120 @@ def wells() -> pd.DataFrame:
     return pd.concat(frames).sort_values(["well", "round"], ignore_index=True)
 
 
+def transects() -> pd.DataFrame:
+    """Birds on 38 transects walked three to nine times each; most birds live half-way up the fell."""
+    rng, true = np.random.RandomState(3807), TRUTH["transects"]
+    total = 38
+    walks = rng.randint(3, 10, total)
+    elevation = np.round(rng.uniform(120, 760, total), -1)
+    grazed = rng.random_sample(total) < 0.5
+    own = true["transect sd"] * _scaled(rng.normal(size=total))
+    of = np.repeat(np.arange(total), walks)
+    wind = rng.randint(0, 6, len(of))
+    hump = -(((elevation - true["best elevation"]) / true["half width"]) ** 2)
+    log_birds = (
+        2.6
+        + hump[of]
+        + true["grazed"] * grazed[of]
+        + true["wind"] * wind
+        + own[of]
+        + true["noise sd"] * rng.normal(size=len(of))
+    )
+    return pd.DataFrame(
+        {
+            "transect": [f"T{k + 1:02d}" for k in of],
+            "walk": np.concatenate([np.arange(1, w + 1) for w in walks]),
+            "elevation": elevation[of].astype(int),
+            "grazed": np.where(grazed[of], "yes", "no"),
+            "wind": wind,
+            "log_birds": _written(log_birds, 2),
+        }
+    )
+
+
+def visits() -> pd.DataFrame:
+    """Pain of 60 patients at weeks of their own; some stop coming; a level and a slow process each."""
+    rng, true = np.random.RandomState(1203), TRUTH["visits"]
+    rows = []
+    for k, new in enumerate(rng.permutation(np.repeat([0, 1], 30))):
+        stay = int(np.clip(rng.geometric(0.11) + 2, 3, 12))
+        week = np.unique(np.concatenate([[0.0], np.cumsum(rng.gamma(2.2, 1.3, stay - 1))]).round(1))
+        start, own = np.round(rng.normal(6, 1.2), 1), true["patient sd"] * rng.normal()
+        process = rng.normal()
+        for w, gap in zip(week, np.diff(week, prepend=0.0), strict=True):
+            keeps = np.exp(-gap / true["process weeks"])
+            process = keeps * process + np.sqrt(1 - keeps**2) * rng.normal()
+            pain = (
+                5.8
+                + true["start"] * (start - 6)
+                + (true["week"] + true["week with new care"] * new) * w
+                + own
+                + true["process sd"] * process
+                + true["noise sd"] * rng.normal()
+            )
+            rows.append((f"H{k + 1:02d}", "new" if new else "as before", start, w, pain))
+    frame = pd.DataFrame(rows, columns=["patient", "care", "start", "week", "pain"])
+    return frame.assign(pain=_written(frame["pain"].to_numpy(), 1))
+
+
+def plots() -> pd.DataFrame:
+    """Barley on a field of 12 by 20 plots in four blocks; soil differs smoothly over the field."""
+    rng, true = np.random.RandomState(1220), TRUTH["plots"]
+    row, column = np.divmod(np.arange(240), 20)
+    east, north, block = 3 * column, 6 * row, column // 5
+    variety = np.empty(240, dtype=int)
+    for b in range(4):
+        variety[block == b] = rng.permutation(np.tile(np.arange(5), 12))
+    apart = np.hypot(east[:, None] - east, north[:, None] - north)
+    root = np.linalg.cholesky(np.exp(-apart / true["range m"]) + 1e-10 * np.eye(240))
+    gain = np.array([0.0, true["brim"], true["cote"], true["dale"], true["esk"]])
+    tonnes = (
+        5.2
+        + gain[variety]
+        + true["field sd"] * (root @ rng.normal(size=240))
+        + true["noise sd"] * rng.normal(size=240)
+    )
+    return pd.DataFrame(
+        {
+            "plot": np.arange(1, 241),
+            "block": np.array(["I", "II", "III", "IV"])[block],
+            "east_m": east,
+            "north_m": north,
+            "variety": np.array(["Amber", "Brim", "Cote", "Dale", "Esk"])[variety],
+            "tonnes": _written(tonnes, 2),
+        }
+    )
+
+
+def survey() -> pd.DataFrame:
+    """Trust of people in 24 lands around the valley; what a land spends is one number for all of them."""
+    rng, true = np.random.RandomState(2440), TRUTH["survey"]
+    lands = 24
+    size = rng.randint(25, 90, lands)
+    spending = np.round(rng.gamma(6, 0.9, lands), 1)
+    own = true["land sd"] * _scaled(rng.normal(size=lands))
+    of = np.repeat(np.arange(lands), size)
+    age = rng.randint(18, 86, len(of))
+    school = np.clip(np.round(rng.normal(11 + 0.2 * spending[of], 2.5)), 6, 20).astype(int)
+    trust = (
+        3.2
+        + true["spending"] * spending[of]
+        + true["school"] * (school - 11)
+        + true["age"] * (age - 50)
+        + own[of]
+        + true["residual sd"] * rng.normal(size=len(of))
+    )
+    return pd.DataFrame(
+        {
+            "land": [f"Land {chr(ord('A') + k)}" for k in of],
+            "spending": spending[of],
+            "age": age,
+            "school": school,
+            "trust": _written(trust, 1),
+        }
+    )
+
+
 def _scaled(draws: np.ndarray, halves: np.ndarray | None = None) -> np.ndarray:
     """Draws with mean 0 (in each half) and standard deviation exactly 1."""
     out = draws.copy()
@@ -211,7 +358,16 @@ def _written(values: np.ndarray, digits: int) -> list[str]:
     return ["" if np.isnan(v) else f"{v:.{digits}f}" for v in values]
 
 
-MAKERS = {"trial": trial, "lambs": lambs, "stream": stream, "wells": wells}
+MAKERS = {
+    "trial": trial,
+    "lambs": lambs,
+    "stream": stream,
+    "wells": wells,
+    "transects": transects,
+    "visits": visits,
+    "plots": plots,
+    "survey": survey,
+}
 
 
 def main(folder: Path) -> None:

@@ -45,9 +45,8 @@ def test_arguments_name_columns_of_the_file(name: str) -> None:
     arguments = Settings(**DEMOS[name].arguments)
     columns = set(pd.read_csv(DEMOS[name].path, nrows=1).columns)
     assert arguments.model is not None
-    named = (
-        set(re.findall(r"\w+", arguments.model)) | set(arguments.focus or ()) | set(arguments.coords or ())
-    )
+    terms = ":".join(arguments.focus or ()).split(":")
+    named = set(re.findall(r"\w+", arguments.model)) | set(terms) | set(arguments.coords or ())
     named |= set(str(arguments.group).split("/")) - {"None"}
     assert named <= columns
     assert {"group", "time", "coords"} & set(DEMOS[name].arguments)
@@ -56,7 +55,7 @@ def test_arguments_name_columns_of_the_file(name: str) -> None:
 def test_unknown_demo_offers_the_near_name() -> None:
     with pytest.raises(InputError, match="'stream'") as caught:
         find("streem")
-    assert "trial, lambs, stream, wells" in caught.value.hint
+    assert "trial, lambs, stream, wells, transects" in caught.value.hint
 
 
 # ---- do the files show what the README says they show? ------------------------------------------
@@ -116,3 +115,48 @@ def test_wells_near_each_other_are_alike() -> None:
     semivariance = (0.5 * (sites[:, None, 2] - sites[None, :, 2]) ** 2)[upper]
     near, far = semivariance[apart[upper] < 1.5].mean(), semivariance[apart[upper] > 9].mean()
     assert near < 0.7 * far
+
+
+def test_transects_have_most_birds_half_way_up() -> None:
+    frame = pd.read_csv(FOLDER / "transects.csv")
+    walks = frame.groupby("transect").size()
+    assert (len(walks), walks.min(), walks.max()) == (38, 3, 9)
+    assert (frame.groupby("transect")[["elevation", "grazed"]].nunique() == 1).all().all()
+    e = frame.assign(grazed=frame["grazed"] == "yes", square=frame["elevation"] ** 2)
+    straight = _residuals(e, "log_birds", ["elevation", "grazed", "wind"])
+    curved = _residuals(e, "log_birds", ["elevation", "square", "grazed", "wind"])
+    assert np.sum(curved**2) < 0.85 * np.sum(straight**2)
+
+
+def test_visits_are_at_weeks_of_their_own_and_near_ones_are_alike() -> None:
+    frame = pd.read_csv(FOLDER / "visits.csv")
+    assert not frame.duplicated(["patient", "week"]).any()
+    assert frame.groupby("patient")["care"].nunique().max() == 1
+    assert frame.drop_duplicates("patient")["care"].value_counts().tolist() == [30, 30]
+    new = (frame["care"] == "new").astype(float)
+    e = _residuals(frame.assign(new=new, fall=new * frame["week"]), "pain", ["start", "week", "new", "fall"])
+    pairs = frame.assign(e=e).merge(frame.assign(e=e), on="patient", suffixes=("", "_"))
+    gap = pairs["week_"] - pairs["week"]
+    near = pairs[(gap > 0) & (gap < 2)][["e", "e_"]].corr().iloc[0, 1]
+    far = pairs[gap > 12][["e", "e_"]].corr().iloc[0, 1]
+    assert far + 0.1 < near < 0.85
+
+
+def test_plots_hold_every_variety_in_every_block_and_near_ones_are_alike() -> None:
+    frame = pd.read_csv(FOLDER / "plots.csv")
+    assert (frame.groupby(["block", "variety"]).size() == 12).all()
+    e = pd.Series(frame["tonnes"] - frame.groupby(["variety"])["tonnes"].transform("mean"))
+    grid = np.full((12, 20), np.nan)
+    grid[frame["north_m"] // 6, frame["east_m"] // 3] = e
+    beside = np.corrcoef(grid[:, 1:].ravel(), grid[:, :-1].ravel())[0, 1]
+    apart = np.corrcoef(grid[:, 8:].ravel(), grid[:, :-8].ravel())[0, 1]
+    assert apart + 0.2 < beside < 0.75
+
+
+def test_survey_has_one_spending_a_land_and_lands_that_differ() -> None:
+    frame = pd.read_csv(FOLDER / "survey.csv")
+    assert frame["land"].nunique() == 24
+    assert (frame.groupby("land")["spending"].nunique() == 1).all()
+    e = _residuals(frame, "trust", ["spending", "school", "age"])
+    means = pd.Series(e).groupby(frame["land"].to_numpy()).mean()
+    assert 0.3 < means.std() < 0.6

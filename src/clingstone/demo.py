@@ -1,4 +1,4 @@
-"""The demonstrations: four data sets of an invented valley, and the question that each one asks."""
+"""The demonstrations: eight data sets of an invented valley, and the question that each one asks."""
 
 from __future__ import annotations
 
@@ -93,6 +93,63 @@ DEMOS: Mapping[str, Demo] = {
         (
             *("--model", "chloride ~ road_km + depth_m + wet", "--group", "well"),
             *("--coords", "east_km", "north_km", "--focus", "road_km"),
+        ),
+    ),
+    "transects": Demo(
+        "transects",
+        "Birds were counted on thirty-eight transects, each walked three to nine times. Are there fewer "
+        "where sheep graze?",
+        {
+            "model": "log_birds ~ elevation + grazed + wind",
+            "group": "transect",
+            "focus": ("grazed",),
+        },
+        (
+            *("--model", "log_birds ~ elevation + grazed + wind", "--group", "transect"),
+            *("--focus", "grazed"),
+        ),
+    ),
+    "visits": Demo(
+        "visits",
+        "Sixty patients came in weeks of their own choosing, and some stopped coming. Does pain fall faster "
+        "under the new care?",
+        {
+            "model": "pain ~ start + week * care",
+            "group": "patient",
+            "time": "week",
+            "focus": ("week:care",),
+        },
+        (
+            *("--model", "pain ~ start + week * care", "--group", "patient"),
+            *("--time", "week", "--focus", "week:care"),
+        ),
+    ),
+    "plots": Demo(
+        "plots",
+        "Five varieties of barley were sown by lot in four blocks of one field. Which of them yields more "
+        "than Amber?",
+        {
+            "model": "tonnes ~ variety + block",
+            "coords": ("east_m", "north_m"),
+            "focus": ("variety",),
+        },
+        (
+            *("--model", "tonnes ~ variety + block"),
+            *("--coords", "east_m", "north_m", "--focus", "variety"),
+        ),
+    ),
+    "survey": Demo(
+        "survey",
+        "People of twenty-four lands were asked how far they trust strangers. Is trust higher where a land "
+        "spends more?",
+        {
+            "model": "trust ~ spending + school + age",
+            "group": "land",
+            "focus": ("spending",),
+        },
+        (
+            *("--model", "trust ~ spending + school + age", "--group", "land"),
+            *("--focus", "spending"),
         ),
     ),
 }
