@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from clingstone.covariance.each import correlations, each
+from clingstone.covariance.each import each
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.maths.curvature import slopes
@@ -107,11 +107,11 @@ def test_places_and_crossed_levels_are_left_to_the_search_column_by_column():
 
 def test_correlations_of_every_column_are_those_of_one():
     rho, length = np.array([-0.7, 0.0, 1e-9, 0.4, 0.999999]), np.array([1.0, 2.0, 3.0])
-    phi, rest = correlations(rho, length)
+    phi, rest = correlation(rho, length)
     for k, r in enumerate(rho):
         one = correlation(float(r), length)
-        assert phi[:, k] == pytest.approx(one[0], rel=1e-12)
-        assert rest[:, k] == pytest.approx(one[1], rel=1e-12)
+        assert phi[k] == pytest.approx(one[0], rel=1e-12)
+        assert rest[k] == pytest.approx(one[1], rel=1e-12)
 
 
 def test_slopes_are_those_of_one_column():

@@ -37,12 +37,38 @@ def test_two_groups_of_two_by_hand() -> None:
 def test_classes_equal_cells(ratio: float) -> None:
     _, _, e, load = case()
     base = reml.independent(2, np.einsum("ij,ij->j", e, e))
-    one, other = groups.lower(base, load, ratio), Classes.of(load).lower(base, ratio)
-    assert len(Classes.of(load).c) < len(load.c)
+    classes = Classes.of([load])
+    assert classes is not None
+    one, other = groups.lower(base, load, ratio), classes.lower(base, ratio, np.ones(1))
+    assert len(classes.c) < len(load.c)
     assert np.allclose(one.QQ, other.QQ, atol=1e-12)
     assert np.allclose(one.QE, other.QE, atol=1e-12)
     assert np.allclose(one.EE, other.EE, atol=1e-12)
     assert one.logdet == pytest.approx(other.logdet)
+
+
+def test_classes_of_several_forms_equal_cells() -> None:
+    # Loads of three forms on 40 cells of three kinds, weighed: cell by cell, and by class.
+    rng = np.random.default_rng(3)
+    kind = rng.integers(0, 3, 40)
+    c = np.array([[1.0, 2.0, -1.0], [1.0, 0.0, 0.5], [2.0, 2.0, -1.0]])[kind]
+    loads = [Load(c[:, f], rng.standard_normal((40, 2)), rng.standard_normal((40, 3))) for f in range(3)]
+    w = np.array([1.0, 0.4, -0.3])
+    total = Load(
+        c @ w,
+        sum(a * x.TQ for a, x in zip(w, loads, strict=True)),
+        sum(a * x.TE for a, x in zip(w, loads, strict=True)),
+    )
+    base = reml.independent(2, np.full(3, 1000.0))
+    classes = Classes.of(loads)
+    assert classes is not None
+    assert sorted(classes.count.tolist()) == sorted(np.bincount(kind).tolist())
+    one, other = groups.lower(base, total, 0.7), classes.lower(base, 0.7, w)
+    assert np.allclose(one.QQ, other.QQ, atol=1e-12)
+    assert np.allclose(one.QE, other.QE, atol=1e-12)
+    assert np.allclose(one.EE, other.EE, atol=1e-10)
+    assert one.logdet == pytest.approx(other.logdet)
+    assert Classes.of(loads, most=17) is None
 
 
 def test_whitening_by_hand() -> None:

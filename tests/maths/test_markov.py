@@ -28,15 +28,18 @@ def full(steps: np.ndarray, rho: float) -> np.ndarray:
     return R
 
 
+def weighed(links: Links, rho: float) -> tuple[np.ndarray, float]:
+    """R⁻¹ and ln|R| from the fixed forms, at two ρ at once."""
+    weights, logdet = links.weights(np.array([0.1, rho]))
+    eye = np.eye(links.n)
+    forms = [eye, *(form.apply(eye) for pair in links.forms for form in pair)]
+    return sum(w * S for w, S in zip(weights[1], forms, strict=True)), logdet[1]
+
+
 def test_three_rows_by_hand() -> None:
     # Equal steps, ρ = ½: R⁻¹ = (4/3)[[1, −½, 0], [−½, 5/4, −½], [0, −½, 1]], |R| = (3/4)².
     links = Links(np.array([NAN, 1.0, 1.0]))
-    weights, logdet = links.weights(0.5)
-    inverse = np.eye(3) + sum(
-        w * form.apply(np.eye(3))
-        for pair, ws in zip(links.forms, weights, strict=True)
-        for form, w in zip(pair, ws, strict=True)
-    )
+    inverse, logdet = weighed(links, 0.5)
     assert inverse == pytest.approx(4 / 3 * np.array([[1, -0.5, 0], [-0.5, 1.25, -0.5], [0, -0.5, 1]]))
     assert logdet == pytest.approx(2 * np.log(0.75))
 
@@ -47,12 +50,7 @@ def test_every_route_equals_the_full_matrix(steps: np.ndarray, rho: float) -> No
     n = len(steps)
     eye = np.eye(n)
     assert links.few
-    weights, logdet = links.weights(rho)
-    inverse = eye + sum(
-        w * form.apply(eye)
-        for pair, ws in zip(links.forms, weights, strict=True)
-        for form, w in zip(pair, ws, strict=True)
-    )
+    inverse, logdet = weighed(links, rho)
     # Entries of R⁻¹ grow as 1/(1 − ρ²), and rounding with them.
     size = np.abs(inverse).max()
     assert inverse @ R == pytest.approx(eye, abs=1e-13 * size)

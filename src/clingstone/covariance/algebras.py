@@ -23,6 +23,7 @@ from clingstone.covariance.components import Component, slope_of
 from clingstone.covariance.crossed import Crossed, crossed
 from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
 from clingstone.covariance.sloped import Sloped, sloped
+from clingstone.covariance.stacked import Forms
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
@@ -56,15 +57,17 @@ class Layered(Pieces):
 
     def gram(self, theta: Array, response: Response) -> Gram:
         theta = np.asarray(theta, dtype=float)
+        if (classes := self.classes(response)) is not None:
+            piece = self.chain[0]
+            w, logdet = self.weights(theta[:, None])
+            gram = self.forms(response).gram(w[0], float(logdet[0]))
+            return classes.lower(gram, float(piece.variance(self.own(piece, theta)[:, None])[0]), w[0])
         gram, load = self._rows(theta, response)
         for step, piece in enumerate(self.chain):
             ratio = float(piece.variance(self.own(piece, theta)[:, None])[0])
-            last = step + 1 == len(self.chain) and self.spatial is None
-            if step == 0 and last and self.serial is None:
-                return self._classes(piece.part, response).lower(gram, ratio)
             assert load is not None
             gram = groups.lower(gram, load, ratio)
-            if not last:
+            if step + 1 < len(self.chain) or self.spatial is not None:
                 load = load.shrunk(ratio).lifted(self._up[step])
         if self.spatial is None:
             return gram
@@ -79,7 +82,7 @@ class Layered(Pieces):
         """As ``gram`` at each column of θ (d, K); places alone share one eigendecomposition per range."""
         if self.spatial is None or self.serial is not None or self.chain or self.above or response.B == 1:
             return super().grams(thetas, response)
-        load = self._plain(response)
+        load = self.forms(response).load(np.ones(1))
         assert load is not None
         base = reml.independent(self.design.p, response.ss)
         out: list[Gram] = [base] * thetas.shape[1]
@@ -99,61 +102,37 @@ class Layered(Pieces):
             return self.chain[0].part
         return None if self.spatial is None else self.spatial.sites.part
 
-    def _rows(self, theta: Array, response: Response) -> tuple[Gram, Load | None]:
+    @property
+    def few(self) -> bool:
+        """Whether R⁻¹ is a weighted sum of few fixed forms."""
+        return self.serial is None or self.serial.links.few
+
+    def weights(self, theta: Array) -> tuple[Array, Array]:
+        """Weights of those forms (K, F) and ln|R| (K,), at θ (d, K)."""
         if self.serial is None:
-            return reml.independent(self.design.p, response.ss), self._plain(response)
-        rho = float(self.serial.rho(self.own(self.serial, theta)))
-        if not self.serial.links.few:
-            return self._by_row(rho, response)
-        return self._by_form(rho, response)
+            return np.ones((theta.shape[1], 1)), np.zeros(theta.shape[1])
+        return self.serial.links.weights(self.serial.rho(self.own(self.serial, theta)))
 
-    def _plain(self, response: Response) -> Load | None:
-        cells = self._cells
-        if cells is None:
+    def forms(self, response: Response) -> Forms:
+        """What those forms amount to."""
+        cells, links = self._cells, None if self.serial is None else self.serial.links
+        key = ("forms", links is not None, "" if cells is None else cells.key)
+        return kept(response, key, lambda: Forms.of(response, links, cells))
+
+    def classes(self, response: Response) -> Classes | None:
+        """Cells of equal loads together, where one level of intercepts is all that stands above the rows."""
+        if len(self.chain) != 1 or self.spatial is not None or not self.few:
             return None
-        return Load(self.design.sizes(cells), self.design.sums(cells), response.sums(cells))
+        key = ("classes", self.serial is not None, self.chain[0].part.key)
+        return kept(response, key, lambda: self.forms(response).classes())
 
-    def _classes(self, part: Partition, response: Response) -> Classes:
-        def make() -> Classes:
-            return Classes.of(Load(self.design.sizes(part), self.design.sums(part), response.sums(part)))
-
-        return kept(response, ("classes", part.key), make)
-
-    def _by_form(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
-        """R⁻¹ as a weighted sum of fixed forms."""
-        assert self.serial is not None
-        links = self.serial.links
-        weights, logdet = links.weights(rho)
-        QQ, QE, EE = np.eye(self.design.p), np.zeros((self.design.p, response.B)), response.ss.copy()
-        load = self._plain(response)
-        for length, pair in enumerate(links.forms):
-            for which, form in enumerate(pair):
-                w = weights[length][which]
-                QQ += w * self.design.gram(form)
-                qe, ee = response.gram(form)
-                QE += w * qe
-                EE += w * ee
-                if load is not None:
-                    c, TQ, TE = self._form_load(length, which, response)
-                    load = Load(load.c + w * c, load.TQ + w * TQ, load.TE + w * TE)
-        return Gram(QQ, QE, EE, logdet), load
-
-    def _form_load(self, length: int, which: int, response: Response) -> tuple[Array, Array, Array]:
-        """Z'Sz, Z'SQ and Z'SE of one form over the first cells, Z carrying √weights."""
-        assert self.serial is not None
-        assert self._cells is not None
-        part, form = self._cells, self.serial.links.forms[length][which]
-        z, key = self._ones, ("form load", part.key, form.key)
-
-        def of_design() -> tuple[Array, Array]:
-            Sz = form.apply(z)
-            return part.sums(z * Sz), part.sums(Sz[:, None] * self.design.Q)
-
-        def of_response() -> Array:
-            return part.sums(form.apply(z)[:, None] * response.residual)
-
-        c, TQ = kept(self.design, key, of_design)
-        return c, TQ, kept(response, key, of_response)
+    def _rows(self, theta: Array, response: Response) -> tuple[Gram, Load | None]:
+        if not self.few:
+            assert self.serial is not None
+            return self._by_row(float(self.serial.rho(self.own(self.serial, theta))), response)
+        w, logdet = self.weights(theta[:, None])
+        forms = self.forms(response)
+        return forms.gram(w[0], float(logdet[0])), forms.load(w[0])
 
     def _by_row(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
         """Rows whitened one by one: irregular times."""

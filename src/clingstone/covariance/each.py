@@ -8,10 +8,12 @@ import numpy as np
 
 from clingstone.covariance.algebras import Chosen, Layered
 from clingstone.covariance.pieces import SerialPiece
+from clingstone.covariance.stacked import Forms
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.each import Grams, Minima, Places, minimise_each
+from clingstone.maths.groups import Classes
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 
@@ -75,20 +77,24 @@ class Each:
     def _doubles(self) -> int:
         """Doubles that one column takes."""
         p = self.design.p
+        classes = self.algebra.classes(self.response)
         cells = self.algebra.chain[0].part.count if self.algebra.chain else 0
-        if self._classed:
-            cells = len(self.algebra._classes(self.algebra.chain[0].part, self.response).c)
+        if classes is not None:
+            cells = classes.QQ.shape[0] * classes.QQ.shape[1]
         return max(1, (cells + p + 1) * (p + 2))
 
-    @property
-    def _classed(self) -> bool:
-        """One level over independent rows: cells of equal size go together."""
-        return self.algebra.serial is None and len(self.algebra.chain) == 1
-
     def _grams(self, theta: Array, columns: Places) -> Grams:
-        if self._classed:
-            return self._one_level(theta, columns)
-        gram, load = self._rows(theta, columns)
+        w, logdet = self.algebra.weights(theta)
+        forms, p = self.algebra.forms(self.response), self.design.p
+        gram = Grams(
+            (w @ forms.QQ).reshape(-1, p, p),
+            np.matmul(w[:, None], forms.QE[columns])[:, 0],
+            np.einsum("kf,kf->k", w, forms.EE[columns]),
+            logdet,
+        )
+        if (classes := self.algebra.classes(self.response)) is not None:
+            return self._one_level(classes, theta, w, gram, columns)
+        load = Loads.of(forms, w, columns) if self.algebra.chain else None
         for step, piece in enumerate(self.algebra.chain):
             ratio = piece.variance(self.algebra.own(piece, theta))
             assert load is not None
@@ -97,99 +103,26 @@ class Each:
                 load = load.shrunk(ratio).lifted(self.algebra._up[step])
         return gram
 
-    # ---- one level: classes of cells -------------------------------------------------------
-
-    def _one_level(self, theta: Array, columns: Places) -> Grams:
+    def _one_level(self, classes: Classes, theta: Array, w: Array, gram: Grams, columns: Places) -> Grams:
         piece = self.algebra.chain[0]
         p, B = self.design.p, self.response.B
-        classes = self.algebra._classes(piece.part, self.response)
+
+        def by_column() -> tuple[Array, Array]:
+            QE, EE = classes.QE.reshape(-1, p, B), classes.EE.reshape(-1, B)
+            return np.ascontiguousarray(QE.transpose(2, 0, 1)), np.ascontiguousarray(EE.T)
+
         # Column first, so that the values of one column lie together.
-        QE, EE = kept(
-            self.response,
-            ("each classes", piece.part.key),
-            lambda: (np.ascontiguousarray(classes.QE.transpose(2, 0, 1)), np.ascontiguousarray(classes.EE.T)),
-        )
-        ratio = piece.variance(self.algebra.own(piece, theta))[:, None]
-        w = ratio / (1 + ratio * classes.c)  # (K, D)
-        QQ = np.eye(p) - (w @ classes.QQ.reshape(-1, p * p)).reshape(-1, p, p)
+        key = ("each classes", self.algebra.serial is not None, piece.part.key)
+        QE, EE = kept(self.response, key, by_column)
+        products, logdet = classes.shrinkage(piece.variance(self.algebra.own(piece, theta)), w)
         whole = len(columns) == B and bool(np.array_equal(columns, np.arange(B)))
         QE, EE = (QE, EE) if whole else (QE[columns], EE[columns])
-        ss = self.response.ss[columns]
         return Grams(
-            QQ,
-            -np.matmul(w[:, None, :], QE)[:, 0],
-            ss - np.einsum("kd,kd->k", w, EE),
-            np.log1p(ratio * classes.c) @ classes.count.astype(float),
+            gram.QQ - (products @ classes.QQ.reshape(-1, p * p)).reshape(-1, p, p),
+            gram.QE - np.matmul(products[:, None, :], QE)[:, 0],
+            gram.EE - np.einsum("kd,kd->k", products, EE),
+            gram.logdet + logdet,
         )
-
-    # ---- rows, then levels -----------------------------------------------------------------
-
-    def _rows(self, theta: Array, columns: Places) -> tuple[Grams, Loads | None]:
-        forms = self._forms
-        serial = self.algebra.serial
-        w, logdet = np.ones((len(columns), 1)), np.zeros(len(columns))
-        if serial is not None:
-            length, count = serial.links.lengths
-            phi, rest = correlations(serial.rho(self.algebra.own(serial, theta)), length)
-            pairs = np.stack([phi**2 / rest, -phi / rest], axis=1).reshape(-1, len(columns))
-            w = np.concatenate([w, pairs.T], axis=1)
-            logdet = count.astype(float) @ np.log(rest)
-        p = self.design.p
-        gram = Grams(
-            (w @ forms.QQ).reshape(-1, p, p),
-            np.matmul(w[:, None], forms.QE[columns])[:, 0],
-            np.einsum("kf,kf->k", w, forms.EE[columns]),
-            logdet,
-        )
-        if forms.c is None or forms.TQ is None or forms.TE is None:
-            return gram, None
-        cells = forms.c.shape[1]
-        return gram, Loads(
-            w @ forms.c,
-            (w @ forms.TQ).reshape(-1, cells, p),
-            np.matmul(w[:, None], forms.TE[columns])[:, 0],
-        )
-
-    @property
-    def _forms(self) -> Forms:
-        """R⁻¹ as a weighted sum of fixed forms: what each amounts to, the identity first."""
-        parts = self.algebra.chain
-        key = ("each forms", self.algebra.serial is not None, parts[0].part.key if parts else "")
-        return kept(self.response, key, self._stacked)
-
-    def _stacked(self) -> Forms:
-        design, response, algebra = self.design, self.response, self.algebra
-        p, B = design.p, response.B
-        QQ, QE, EE = [np.eye(p).ravel()], [np.zeros((p, B))], [response.ss]
-        plain = algebra._plain(response)
-        loads = [] if plain is None else [(plain.c, plain.TQ, plain.TE)]
-        for d, pair in enumerate(algebra.serial.links.forms if algebra.serial is not None else ()):
-            for which, form in enumerate(pair):
-                qe, ee = response.gram(form)
-                QQ.append(design.gram(form).ravel())
-                QE.append(qe)
-                EE.append(ee)
-                if plain is not None:
-                    loads.append(algebra._form_load(d, which, response))
-        c = TQ = TE = None
-        if loads:
-            c = np.stack([load[0] for load in loads])
-            TQ = np.stack([load[1].ravel() for load in loads])
-            TE = np.ascontiguousarray(np.stack([load[2] for load in loads]).transpose(2, 0, 1))
-        by_column = np.ascontiguousarray(np.stack(QE).transpose(2, 0, 1))
-        return Forms(np.stack(QQ), by_column, np.ascontiguousarray(np.stack(EE).T), c, TQ, TE)
-
-
-@dataclass(frozen=True, eq=False)
-class Forms:
-    """Gram and loads of F forms: QQ (F, pp), QE (B, F, p), EE (B, F); c (F, G), TQ (F, Gp), TE (B, F, G)."""
-
-    QQ: Array
-    QE: Array
-    EE: Array
-    c: Array | None
-    TQ: Array | None
-    TE: Array | None
 
 
 @dataclass(frozen=True, eq=False)
@@ -199,6 +132,14 @@ class Loads:
     c: Array
     TQ: Array
     TE: Array
+
+    @classmethod
+    def of(cls, forms: Forms, w: Array, columns: Places) -> Loads | None:
+        """From the loads of each form, at weights (K, F)."""
+        if forms.c is None or forms.TQ is None or forms.TE is None:
+            return None
+        TQ = (w @ forms.TQ).reshape(len(w), forms.c.shape[1], -1)
+        return cls(w @ forms.c, TQ, np.matmul(w[:, None], forms.TE[columns])[:, 0])
 
     def lower(self, gram: Grams, ratio: Array) -> Grams:
         """The Grams once intercepts of variance ratio λ (K,) are added at these cells."""
@@ -224,13 +165,3 @@ class Loads:
         TQ = up.sums(np.ascontiguousarray(self.TQ.transpose(1, 0, 2)).reshape(G, K * p))
         TQ = TQ.reshape(up.count, K, p).transpose(1, 0, 2)
         return Loads(up.sums(self.c.T).T, TQ, up.sums(self.TE.T).T)
-
-
-def correlations(rho: Array, length: Array) -> tuple[Array, Array]:
-    """φ = ρ^Δ and 1 − φ², (D, K), without cancellation when φ is near one."""
-    with np.errstate(divide="ignore"):
-        log = np.log(np.abs(rho))[None] * length[:, None]
-    phi = np.exp(log)
-    odd = (np.round(length).astype(np.int64) % 2 == 1)[:, None]
-    phi = np.where(odd & (rho < 0)[None], -phi, phi)
-    return phi, np.where(np.isfinite(log), -np.expm1(2 * np.maximum(log, -700.0)), 1.0)

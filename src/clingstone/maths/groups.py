@@ -12,6 +12,7 @@ Exact, O(cells · p²) at each λ.
 
 from __future__ import annotations
 
+from collections.abc import Callable, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -54,9 +55,12 @@ def lower(gram: Gram, load: Load, ratio: float) -> Gram:
 
 @dataclass(frozen=True, eq=False)
 class Classes:
-    """Cells of equal c put together: one level costs O(distinct sizes) at each λ, whatever G.
+    """Cells of equal loads put together: one level costs O(classes) at each θ, whatever G.
 
-    c (D,), count (D,), QQ (D, p, p), QE (D, p, B), EE (D, B): Σ t_g t_g' over each class.
+    V₀⁻¹ is a weighted sum of F fixed forms (of one, the identity, for independent rows), and so are the
+    loads; what they add up to is quadratic in the weights, P = F(F + 1)/2 products of two forms.
+
+    c (D, F), count (D,); QQ (D, P, p, p), QE (D, P, p, B), EE (D, P, B): Σ t_g t_g' over each class.
     """
 
     c: Array
@@ -66,29 +70,66 @@ class Classes:
     EE: Array
 
     @classmethod
-    def of(cls, load: Load) -> Classes:
-        c, code, count = np.unique(load.c, return_inverse=True, return_counts=True)
+    def of(cls, loads: Sequence[Load], most: float = np.inf) -> Classes | None:
+        """From the loads under each form; None where D·P exceeds ``most``, and nothing would be saved."""
+        c, code, count = _alike(np.stack([load.c for load in loads], axis=1))
+        pairs = _pairs(len(loads))
+        if len(c) * len(pairs) > most:
+            return None
         order = np.argsort(code, kind="stable")
         ends = np.cumsum(count)
-        TQ, TE = load.TQ[order], load.TE[order]
-        spans = [slice(end - k, end) for end, k in zip(ends, count, strict=True)]
+        spans = [order[end - k : end] for end, k in zip(ends, count, strict=True)]
+        Q, E = [load.TQ for load in loads], [load.TE for load in loads]
+
+        def summed(of: Callable[[Array, Array], Array], left: list[Array], right: list[Array]) -> Array:
+            """Σ over each class for every product of two forms, both orders when they differ."""
+            made = []
+            for rows in spans:
+                a, b = [x[rows] for x in left], [x[rows] for x in right]
+                made.append([of(a[i], b[j]) + (of(a[j], b[i]) if i != j else 0.0) for i, j in pairs])
+            return np.array(made)
+
         return cls(
             c,
             count,
-            np.stack([TQ[s].T @ TQ[s] for s in spans]),
-            np.stack([TQ[s].T @ TE[s] for s in spans]),
-            np.stack([np.einsum("gb,gb->b", TE[s], TE[s]) for s in spans]),
+            summed(lambda a, b: a.T @ b, Q, Q),
+            summed(lambda a, b: a.T @ b, Q, E),
+            summed(lambda a, b: np.einsum("gb,gb->b", a, b), E, E),
         )
 
-    def lower(self, gram: Gram, ratio: float) -> Gram:
-        """As :func:`lower`."""
-        w = ratio / (1 + ratio * self.c)
+    def shrinkage(self, ratio: Array, w: Array) -> tuple[Array, Array]:
+        """Weights (K, D·P) of the products above, and Σ ln(1 + λc) (K,), at λ (K,) and weights (K, F)."""
+        i, j = np.array(_pairs(w.shape[1])).T
+        c = w @ self.c.T
+        by_class = ratio[:, None] / (1 + ratio[:, None] * c)
+        products = by_class[:, :, None] * (w[:, i] * w[:, j])[:, None, :]
+        return products.reshape(len(w), -1), np.log1p(ratio[:, None] * c) @ self.count.astype(float)
+
+    def lower(self, gram: Gram, ratio: float, w: Array) -> Gram:
+        """As :func:`lower`, at weights (F,) of the forms."""
+        products, logdet = self.shrinkage(np.array([ratio]), w[None])
+        p, B = self.QE.shape[2:]
         return Gram(
-            gram.QQ - np.tensordot(w, self.QQ, axes=1),
-            gram.QE - np.tensordot(w, self.QE, axes=1),
-            gram.EE - w @ self.EE,
-            gram.logdet + float(self.count @ np.log1p(ratio * self.c)),
+            gram.QQ - (products @ self.QQ.reshape(-1, p * p)).reshape(p, p),
+            gram.QE - (products @ self.QE.reshape(-1, p * B)).reshape(p, B),
+            gram.EE - products[0] @ self.EE.reshape(-1, B),
+            gram.logdet + float(logdet[0]),
         )
+
+
+def _pairs(F: int) -> list[tuple[int, int]]:
+    return [(i, j) for i in range(F) for j in range(i, F)]
+
+
+def _alike(c: Array) -> tuple[Array, npt.NDArray[np.int64], npt.NDArray[np.int64]]:
+    """Distinct rows of c (G, F), which of them each row is (G,), and how often each occurs."""
+    code = np.zeros(len(c), dtype=np.int64)
+    for column in c.T:
+        values, own = np.unique(column, return_inverse=True)
+        _, code = np.unique(code * len(values) + own.ravel(), return_inverse=True)
+        code = code.ravel()
+    _, first, count = np.unique(code, return_index=True, return_counts=True)
+    return c[first], code, count
 
 
 def whiten(part: Partition, u: Array, block: Array, ratio: float) -> tuple[Array, Array]:

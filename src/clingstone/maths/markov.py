@@ -71,12 +71,12 @@ class Links:
             )
         return tuple(out)
 
-    def weights(self, rho: float) -> tuple[list[tuple[float, float]], float]:
-        """Weights of (D_Δ, A_Δ) in R⁻¹ − I, and ln|R|."""
+    def weights(self, rho: Array) -> tuple[Array, Array]:
+        """Weights of I and of D_Δ, A_Δ length by length in R⁻¹, (K, 1 + 2D), and ln|R| (K,), at ρ (K,)."""
         length, count = self.lengths
         phi, rest = correlation(rho, length)
-        pairs = [(float(f * f / v), float(-f / v)) for f, v in zip(phi, rest, strict=True)]
-        return pairs, float(count @ np.log(rest))
+        pairs = np.stack([phi**2 / rest, -phi / rest], axis=2).reshape(len(phi), -1)
+        return np.hstack([np.ones((len(phi), 1)), pairs]), np.asarray(np.log(rest) @ count)
 
     def whiten(self, rho: float, block: Array) -> Array:
         """L⁻¹ block with LL' = R; block (n,) or (n, k)."""
@@ -122,12 +122,12 @@ class Links:
         return self.apply(rho, np.eye(self.n))
 
 
-def correlation(rho: float, steps: Array) -> tuple[Array, Array]:
-    """φ = ρ^Δ and 1 − φ², the latter without cancellation when φ is near one."""
-    if rho == 0.0:
-        return np.zeros_like(steps), np.ones_like(steps)
-    log = np.log(abs(rho)) * steps
+def correlation(rho: float | Array, steps: Array) -> tuple[Array, Array]:
+    """φ = ρ^Δ and 1 − φ², the latter without cancellation when φ is near one; (K, L) for ρ (K,), Δ (L,)."""
+    with np.errstate(divide="ignore"):
+        log = np.multiply.outer(np.log(np.abs(rho)), steps)
     phi = np.exp(log)
-    if rho < 0:
-        phi = np.where(np.round(steps).astype(np.int64) % 2 == 1, -phi, phi)
+    if np.any(rho < 0):
+        odd = np.round(steps).astype(np.int64) % 2 == 1
+        phi = np.where(np.logical_and.outer(rho < 0, odd), -phi, phi)
     return phi, -np.expm1(2 * log)

@@ -9,6 +9,7 @@ from __future__ import annotations
 import itertools
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field
+from itertools import pairwise
 from typing import Any, Protocol
 
 import numpy as np
@@ -69,7 +70,8 @@ def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None)
     """The smallest value of f over the box of the axes.
 
     warm : the optimum of a similar criterion; the search then starts from there alone, with its
-    curvature. Without it the best three of the product of the axes' starts are followed.
+    curvature. Without it the best three of the product of the axes' starts are followed, those left out
+    that lie in the valley of an optimum already found.
     """
     if not axes:
         return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
@@ -113,7 +115,10 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None) -> Optimu
         runs = [descend(counted, warm.start, free, box)]
     else:
         descend = _descend
-        runs = [_descend(counted, start, free, box) for start in _starts(counted, axes)]
+        runs = []
+        for start in _starts(counted, axes):
+            known = next((run for run in runs if _valley(counted, start, *run)), None)
+            runs.append(known or _descend(counted, start, free, box))
     theta, value = min(runs, key=lambda run: float(run[1]))
     if warm is None:
         theta, value = _look_around(counted, axes, theta, value, box)
@@ -144,6 +149,15 @@ def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
     grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
     order = np.argsort([f(s) for s in grid], kind="stable")
     return [grid[i] for i in order[:keep]]
+
+
+def _valley(f: Criterion, start: Array, theta: Array, value: float) -> bool:
+    """Whether the criterion falls all the way from a start to an optimum that is known, in a straight line.
+
+    Following such a start down would lead to the same place.
+    """
+    walk = [f(start + share * (theta - start)) for share in (0.0, 0.2, 0.4, 0.6, 0.8)]
+    return all(after < before for before, after in pairwise([*walk, value]))
 
 
 def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
