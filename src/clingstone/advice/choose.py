@@ -30,7 +30,7 @@ __all__ = [
 ]
 
 APART = ("within-between", "fixed-effects")  # tell an effect within groups from one between them
-MEAN = ("mean-first", "mean-then-dependence", "mean-alone")
+MEAN = ("mean-first", "mean-then-dependence", "season-first", "mean-alone")
 
 
 def settle(
@@ -118,14 +118,17 @@ def _families(facts: Facts, what: str) -> frozenset[str]:
 
 ORDERED = {"caveat": 0, "caution": 1}
 STRENGTHS = ("strong", "moderate", "weak", "convention")
-ALWAYS = ("mean-as-well", "mean-in-doubt")  # said also where nothing can be corrected
+AS_WELL = "mean-as-well"  # what "mean first" says already
+ALWAYS = (AS_WELL, "mean-in-doubt")  # said also where nothing can be corrected
 LAST = "chosen-after-looking"  # true of every choice, so it is read last
 
 
 def _beside(state_rule: Rule | None, facts: Facts) -> list[Rule]:
     """What lowers the state first, then what warns, the better founded before the others."""
     beside = [r for r in CAVEATS if bool(r.when.read(facts))]
-    if state_rule is not None and state_rule.then.what != "mean first":
+    if state_rule is not None and state_rule.then.what == "mean first":
+        beside = [r for r in beside if r.id != AS_WELL]
+    elif state_rule is not None:
         beside = [r for r in beside if (r.then.kind == "caution" or r.id in ALWAYS) and r.id != LAST]
     return sorted(beside, key=lambda r: (r.id == LAST, ORDERED[r.then.kind], STRENGTHS.index(r.strength)))
 

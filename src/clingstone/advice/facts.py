@@ -302,12 +302,16 @@ def mean_facts(missing: Missing | None) -> list[Fact]:
     """What is known of a part of the mean that seems to be missing."""
     if missing is None:
         return [
-            yes("curve under dependence", False, "no missing part of the mean shows under the dependence"),
+            yes("part under dependence", False, "no missing part of the mean shows under the dependence"),
+            yes("step of unknown time", False, "no step seems to be missing"),
+            yes("clear season", False, "no season seems to be missing"),
             yes("mean in doubt", False, "the mean and the dependence do not compete"),
         ]
     moves = {"goes": missing.goes, "stays": missing.stays, "appears": missing.appears}
     return [
-        yes("curve under dependence", missing.shows, f"{missing.what} shows under the fitted dependence"),
+        yes("part under dependence", missing.shows, f"{missing.what} shows under the fitted dependence"),
+        yes("step of unknown time", missing.test == "break", "the time of the step was chosen"),
+        yes("clear season", missing.pattern, f"{missing.what} is a season of the calendar"),
         *(
             yes(f"dependence {verb} with the mean", bool(names), f"{verb}: {listed(names) or 'nothing'}")
             for verb, names in moves.items()

@@ -12,6 +12,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, p_value, percent, significant
 from clingstone.evidence import TESTS
+from clingstone.evidence.breaks import with_step
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.evidence.mean import extension
@@ -24,6 +25,10 @@ from clingstone.needs import Family, NotSupported
 # the winner over dependence, only shown beside it; nor is a curve in a covariate that runs as smoothly.
 SMOOTH: dict[str, Family] = {"trend": "serial", "trend-surface": "spatial", "season": "serial"}
 CURVE = "functional-form"
+# Patterns that no fading dependence draws: the calendar's own season, and a step that stands out of the
+# fitted order in time. Their bars are higher, because a season or a step seen by chance changes the advice.
+PATTERNS = ("season", "break")
+CLEAR, HOLDS = 0.01, 0.10  # p, and share of what the model leaves over
 AGAIN = (
     "heteroscedasticity",
     "outliers",
@@ -36,6 +41,8 @@ class Missing:
     """A part of the mean that seems to be missing, and the structures with it in the model.
 
     what : words, such as "curve in dose". shows : it shows under the fitted dependence.
+    pattern : a season that does: it comes first also where dependence stays. A step comes first only
+    where the dependence goes with it, because a slow process under noise steps as well.
     goes : structures that were present and are no longer seen, half of their share or more gone.
     stays : the other ones that were present. appears : those seen only with the part in.
     doubt : these data cannot tell the mean from dependence, or what is no longer seen could still
@@ -49,6 +56,7 @@ class Missing:
     test: str
     about: str
     shows: bool
+    pattern: bool = False
     goes: tuple[str, ...] = ()
     stays: tuple[str, ...] = ()
     appears: tuple[str, ...] = ()
@@ -64,17 +72,18 @@ class Missing:
 def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | None:
     """The most telling missing part of the mean, or None.
 
-    A curve in a covariate must show under the fitted dependence. A trend or a surface, which has
-    next to no power there, is looked at when it shows in the ordinary fit and its structure is
-    present; it counts only when it takes at least half of that structure away.
+    A curve in a covariate, a season of the calendar or a step must show under the fitted dependence;
+    the clearest counts. A trend or a surface, which has next to no power there, is looked at when it
+    shows in the ordinary fit and its structure is present; it counts only when it takes at least half
+    of that structure away.
     """
-    curve = _curve(evidence, fits.design)
-    if curve is not None:
-        found = _try(fits, curve, ledger)
+    shown = [f for f in (_curve(evidence, fits.design), *_patterns(evidence, fits.design)) if f is not None]
+    for finding in sorted(shown, key=_adjusted):
+        found = _try(fits, finding, ledger, shows=True)
         if found is not None:
             return found
     for finding in _smooth(evidence, ledger, fits.design):
-        found = _try(fits, finding, ledger)
+        found = _try(fits, finding, ledger, shows=False)
         if found is not None and found.doubt:
             return found
     return None
@@ -95,6 +104,13 @@ def _curve(evidence: Evidence, design: Design) -> Finding | None:
     best = min(found, key=lambda f: f.p)
     p = _adjusted(best) if best.p_adjusted is not None else min(1.0, best.p * len(found))
     return best if p < LEVEL else None
+
+
+def _patterns(evidence: Evidence, design: Design) -> list[Finding]:
+    """Seasons and steps that are clear given the dependence and hold a good share of what is left over."""
+    found = [f for f in evidence.of("mean") if f.test in PATTERNS and f.given and np.isfinite(f.p)]
+    found = [f for f in found if f.test != "season" or _fixed_season(f, design)]
+    return [f for f in found if f.p * len(found) < CLEAR and f.estimate >= HOLDS]
 
 
 def _family(finding: Finding, design: Design) -> Family | None:
@@ -121,19 +137,21 @@ def _fixed_season(finding: Finding, design: Design) -> bool:
     return bool(finding.given) and finding.about in dict(cycles(design.serial))
 
 
-def _extension(design: Design, finding: Finding) -> Design:
+def _extension(fits: Fits, finding: Finding) -> Design:
     if finding.test == "season":
-        return with_season(design, finding.about)
-    return extension(design, finding.test, finding.about)
+        return with_season(fits.design, finding.about)
+    if finding.test == "break":
+        return with_step(fits, frozenset(finding.given))
+    return extension(fits.design, finding.test, finding.about)
 
 
 # ---- with the part in the model ------------------------------------------------------------------
 
 
-def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
+def _try(fits: Fits, finding: Finding, ledger: Ledger, *, shows: bool) -> Missing | None:
     """Add the part and judge every structure again; None when the model cannot carry it."""
     try:
-        again = fits.onto(_focused(_extension(fits.design, finding), fits.design))
+        again = fits.onto(_focused(_extension(fits, finding), fits.design))
         tests = tuple(t for t in TESTS if t.primary or t.id in AGAIN)
         evidence = gather(again, tests)
         after = judged(again, evidence, focus_rows(fits))
@@ -145,16 +163,16 @@ def _try(fits: Fits, finding: Finding, ledger: Ledger) -> Missing | None:
     stays = [now for _, now in shown if now not in goes]
     appears = [now for s, now in pairs if s.verdict != "present" and now.verdict == "present"]
     family = _family(finding, fits.design)
-    is_curve = finding.test == CURVE and family is None
     # That it is no longer seen does not show that it is not there: what remains at its upper end counts.
     open_end = [now for now in goes if now.widens]
     mine = [s for s, _ in shown if s.structure == family]
-    doubt = bool(open_end) if is_curve else any(_halved(ledger, after, s.key) for s in mine)
+    doubt = bool(open_end) if shows else any(_halved(ledger, after, s.key) for s in mine)
     return Missing(
         what=_words(fits, finding),
         test=finding.test,
         about=finding.about,
-        shows=is_curve,
+        shows=shows,
+        pattern=shows and finding.test == "season",
         goes=tuple(now.label for now in goes),
         stays=tuple(now.label for now in stays),
         appears=tuple(now.label for now in appears),
@@ -189,6 +207,8 @@ def _words(fits: Fits, finding: Finding) -> str:
         return f"curve in {finding.about}"
     if finding.test == "season":
         return f"season of the {finding.about}"
+    if finding.test == "break":
+        return f"step in the level, {finding.estimate_name.rpartition(', ')[2]},"
     if finding.test == "trend":
         series = fits.design.serial
         return f"slow trend in {series.name}" if series is not None else "slow trend"

@@ -24,7 +24,7 @@ STATES = (
     ),
     Rule(
         "mean-first",
-        fact("curve under dependence")
+        fact("part under dependence")
         & fact("dependence goes with the mean")
         & ~fact("dependence stays with the mean")
         & ~fact("dependence appears with the mean"),
@@ -35,7 +35,7 @@ STATES = (
     ),
     Rule(
         "mean-then-dependence",
-        fact("curve under dependence")
+        fact("part under dependence")
         & (fact("dependence goes with the mean") | fact("dependence appears with the mean")),
         Then("state", "mean first"),
         "A {missing part of the mean} changes what the dependence looks like ({sign of the missing part}): "
@@ -44,8 +44,17 @@ STATES = (
         "strong",
     ),
     Rule(
+        "season-first",
+        fact("part under dependence") & fact("clear season"),
+        Then("state", "mean first"),
+        "A {missing part of the mean} shows beyond any dependence that fades with time ({sign of the missing "
+        "part}): put it into the model, then correct for what stays.",
+        "mizon-1995, yue-2002, hamed-2009",
+        "strong",
+    ),
+    Rule(
         "mean-alone",
-        fact("curve under dependence") & ~SHOWN & (fact("p of the missing part") < 0.01),
+        fact("part under dependence") & ~SHOWN & (fact("p of the missing part") < 0.01),
         Then("state", "mean first"),
         "A {missing part of the mean} seems to be missing from the model ({sign of the missing part}): put "
         "it in before the intervals are read.",

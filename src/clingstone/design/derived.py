@@ -44,6 +44,15 @@ def extend(design: Design, name: str, columns: Array) -> Design:
     )
 
 
+def balanced(design: Design, columns: Array) -> Array:
+    """Columns (n, k) less their means where the model holds a constant, which then keeps its meaning."""
+    columns = columns[:, None] if columns.ndim == 1 else columns
+    one = np.ones((design.n, 1)) if design.root is None else design.root[:, None]
+    rest = design.basis.project(one)
+    held = np.linalg.norm(rest) <= 1e-9 * np.linalg.norm(one)
+    return np.asarray(columns - columns.mean(axis=0) if held else columns)
+
+
 def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
     """Cell means swept out of every column; the names of coefficients that this removes come back too."""
     root = np.ones(design.n) if design.root is None else design.root

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.design.derived import balanced, extend
 from clingstone.design.design import Design
 from clingstone.display import amount, number, p_value, percent, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
@@ -122,6 +123,18 @@ def steps(design: Design) -> tuple[Array, Array]:
     if not kept.any():
         raise NotSupported("the model already holds a level for every time")
     return D[:, kept], inner[kept]
+
+
+def with_step(fits: Fits, given: frozenset[str] = frozenset()) -> Design:
+    """The design with a step at the time that fits the first column of y best, given a dependence or not."""
+    D, times = steps(fits.design)
+    Q, E = fits.design.Q, fits.response.residual
+    if given:
+        Q, D, E = _freed(fits, given, D)
+    at = times[int(np.argmax(np.nan_to_num(_statistics(Q, D, E)[0][:, 0])))]
+    series = series_of(fits.design)
+    step = balanced(fits.design, (series.elapsed >= at).astype(float))
+    return extend(fits.design, f"step in {series.name}", step)
 
 
 def _freed(fits: Fits, given: frozenset[str], D: Array) -> tuple[Array, Array, Array]:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import special
 
-from clingstone.design.derived import extend, onto
+from clingstone.design.derived import balanced, extend, onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import (
@@ -80,10 +80,12 @@ def with_season(design: Design, name: str) -> Design:
     title = f"season of the {name}"
     if abs(period - round(period)) < 1e-9 and period <= EACH_STEP:
         at = series.tick % round(period)
-        return extend(design, title, (at[:, None] == np.arange(1, round(period))).astype(float))
+        levels = (at[:, None] == np.arange(1, round(period))).astype(float)
+        return extend(design, title, balanced(design, levels))
     angle = 2 * np.pi * series.tick / period
     waves = range(1, min(WAVES, int((period - 1e-9) // 2)) + 1)
-    return extend(design, title, np.column_stack([f(j * angle) for j in waves for f in (np.cos, np.sin)]))
+    columns = np.column_stack([f(j * angle) for j in waves for f in (np.cos, np.sin)])
+    return extend(design, title, balanced(design, columns))
 
 
 @dataclass(frozen=True)
