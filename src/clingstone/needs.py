@@ -70,7 +70,7 @@ class Limits:
     sites_easy: int = 50
     ranges_across: float = 2.0
     # Largest dense problem, in rows or sites, that is factored without asking.
-    dense_sites: int = 3000
+    dense_sites: int = 1500
     dense_rows: int = 1000
 
 

@@ -29,6 +29,7 @@ BANDS, FEWEST_PAIRS = 8, 100
 DRAWS, WORK = 999, 4e8  # draws of independent data, fewer where draws × pairs would exceed this
 SECTORS = ("0", "45", "90", "135")
 FITTED_DRAWS = 400
+DRAWN_SITES = 3000  # sites up to which the fitted dependence is drawn for a reference
 
 
 @dataclass(frozen=True, eq=False)
@@ -230,7 +231,7 @@ class Direction(Plain):
         return tuple(About(nb.key, nb.about) for nb in design.neighbours[:1])
 
     def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
-        few = sites_of(fits.design).count <= fits.run.limits.dense_sites
+        few = sites_of(fits.design).count <= DRAWN_SITES
         return (frozenset({"spatial"}),) if few and "spatial" in fits.components else ()
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:

@@ -198,7 +198,7 @@ def _lines(fits: Fits, bins: Bins, response: Response) -> dict[str, Line]:
     x = floats(bins.distance)
     lines = {"robust": (x, floats(bins.robust(response)))}
     node = frozenset({"spatial"})
-    if "spatial" not in fits.components or bins.forms[0].shape[0] > fits.run.limits.dense_sites:
+    if "spatial" not in fits.components or bins.forms[0].shape[0] > ALL_PAIRS:
         return lines
     model, algebra, design = fits[node], fits.algebra(node), fits.design
     rng = fits.run.child("variogram of the fitted dependence")

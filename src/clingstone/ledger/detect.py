@@ -25,6 +25,7 @@ LEVEL = 0.05  # before it is divided among the primary tests
 ACROSS = 1 / 3  # practical range over the map's width of a field whose share is looked for
 ROUNDS = 3
 SMALLEST, FIRST, LARGEST = 0.001, 0.32, 0.95
+DENSE = 3000  # sites of which a field is drawn by a table of all their distances
 NAMES = {"group": "intraclass correlation", "serial": "ρ", "spatial": "spatial share"}
 
 Drawer = Callable[[float, np.random.Generator, int], Array]
@@ -124,7 +125,7 @@ def _sites(fits: Fits) -> Drawer | None:
     The range is held, not fitted: where nothing was found the data hardly know it.
     """
     sites = fits.design.spatial
-    if sites is None or sites.count > fits.run.limits.dense_sites:
+    if sites is None or sites.count > DENSE:
         return None
     length = ACROSS * sites.extent / 3  # a correlation of exp(−3) is the practical range
     distance = np.linalg.norm(sites.points[:, None] - sites.points[None], axis=2)

@@ -2,7 +2,7 @@
 
 Each place is conditioned on m earlier ones near to it, so that V⁻¹ ≈ U'U with m + 1 entries per row of U
 (Vecchia 1988; Datta et al. 2016). With places in an order that spreads them out first (Guinness 2018) 20
-neighbours give the log-likelihood of 3,000 places to about 2 units and slopes to a twentieth of a standard
+neighbours give the log-likelihood of 3,000 places to about 1 unit and slopes to a twentieth of a standard
 error. Exact at m = S − 1.
 """
 
