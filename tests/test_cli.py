@@ -111,7 +111,8 @@ def test_left_alone_the_options_are_the_defaults_of_settings(verbs: Verbs, run: 
 
 def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
     status, _, err = run(
-        "examine a.csv --model 'y ~ x' --residual e --group judge --group wine --time t --series s "
+        "examine a.csv --model 'y ~ x' --residual e --sheet readings --wide bp --group judge "
+        "--group wine --time t --series s "
         "--coords lon lat --lonlat --polygons shape --neighbours knn:6 --weights w --weights-kind frequency "
         "--focus x --focus z --contrasts 'late − early: visit[late]=1, visit[early]=-1' "
         "--contrasts 'half: x=0.5' --means visit --unadjusted "
@@ -126,6 +127,8 @@ def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
     assert Settings(**arguments) == Settings(
         model="y ~ x",
         residual="e",
+        sheet="readings",
+        wide="bp",
         group=("judge", "wine"),
         time="t",
         series="s",

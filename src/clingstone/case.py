@@ -15,7 +15,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import Column, count, instead, listed
 from clingstone.display import Table as Shown
-from clingstone.intake import columns, files, fitted, formula, frames, model
+from clingstone.intake import columns, files, fitted, formula, frames, model, wide
 from clingstone.intake.columns import Columns, Role
 from clingstone.intake.frames import Table
 from clingstone.intake.model import Blocks
@@ -148,10 +148,13 @@ class Case:
         if fitted.is_fit(data):
             return cls._of_fit(fitted.recover(data), settings, "data")
         if isinstance(data, (str, Path)):
-            frame, origin, notes = files.read(data)
-            origin = {**origin, "path": str(data)}
-            table = frames.table(frame)
-            return cls._of_table(replace(table, notes=(*notes, *table.notes)), settings, origin)
+            source = files.source(data, settings.sheet)
+            return cls._of_table(frames.of_source(source), settings, {**source.origin, "path": str(data)})
+        if settings.sheet is not None:
+            raise InputError(
+                f"sheet={settings.sheet!r} was given without a file, so it would do nothing",
+                "Leave sheet= out.",
+            )
         return cls._of_table(frames.table(data), settings, {})
 
     @classmethod
@@ -193,6 +196,9 @@ class Case:
                 "both model= and residual= were given" if both else "neither model= nor residual= was given",
                 "Give a model such as 'y ~ x', or the name of a column of residuals with residual=.",
             )
+        if settings.wide is not None and settings.wide != wide.NO:
+            stems = (settings.wide,) if isinstance(settings.wide, str) else settings.wide
+            table = wide.lengthened(table, stems)
         declared = declare.declaration(settings, table)
         parsed = None if settings.model is None else formula.parse(settings.model, table.names)
         roles: dict[Role, tuple[str, ...]] = {
@@ -202,14 +208,19 @@ class Case:
             **declared.roles,
         }
         numeric = [*roles["weight"], *roles["place"], *(() if parsed else roles["response"])]
+        used = [n for names in roles.values() for n in names]
+        beside: tuple[str, ...] = ()
+        if settings.wide is None:
+            alone = not (roles["group"] or roles["time"])
+            beside = wide.noticed(table.names, used, roles["response"], alone)
+        table = table.holding(used)
         got = columns.gather(table, roles, settings.missing, numeric)
         if settings.weights is not None and settings.weights_kind == "frequency":
             got = columns.repeated(got, settings.weights)
         found = (
             model.blocks(parsed, got.frame, got.kept) if parsed else _residuals(got, str(settings.residual))
         )
-        used = [n for names in roles.values() for n in names]
-        notes = (*got.notes, *frames.wide_note(table.names, used, roles["response"]))
+        notes = (*got.notes, *beside)
         return cls._made(
             table, declared, settings, replace(got, notes=notes), found, _root(got, settings), origin
         )

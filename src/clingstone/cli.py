@@ -73,7 +73,7 @@ def _examine(
 
 def _with_settings(command: Callable[..., None]) -> Callable[..., None]:
     """The command with an option for every field of Settings, in their order."""
-    Data = Annotated[Path, typer.Argument(metavar="DATA", help="A file: CSV, Parquet, Excel or Stata.")]
+    Data = Annotated[Path, typer.Argument(metavar="DATA", help="A file: CSV, Parquet, Excel, SPSS, Stata …")]
     shared = {"out": Out, "json": AsJson, "overwrite": Overwrite, "quiet": Quiet, "debug": Debug}
     kinds: dict[str, Any] = {"data": Data}
     defaults: dict[str, Any] = {}

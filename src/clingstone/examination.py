@@ -41,6 +41,8 @@ def examine(
     *,
     model: str | None = None,
     residual: str | None = None,
+    sheet: str | None = None,
+    wide: str | tuple[str, ...] | list[str] | None = None,
     group: str | tuple[str, ...] | list[str] | None = None,
     time: str | None = None,
     series: str | None = None,
@@ -69,8 +71,8 @@ def examine(
 
     Parameters
     ----------
-    data : path of a file (CSV, Parquet, Excel, Stata), any dataframe that narwhals reads, or a
-        fitted statsmodels OLS or WLS result of a formula.
+    data : path of a file (CSV, Parquet, Feather, Excel, SPSS, SAS, Stata, GeoPackage and others), any
+        dataframe that narwhals reads, or a fitted statsmodels OLS or WLS result of a formula.
     model : formula such as ``"weight ~ day + birth"``.
     progress : called with (label, done, total) while heavy work runs.
 
@@ -102,7 +104,7 @@ def settings_of(arguments: Mapping[str, Any]) -> Settings:
     given = dict(arguments)
     for name in ("focus", "means"):
         given[name] = many(given.get(name))
-    for name in ("group", "coords", "material"):
+    for name in ("wide", "group", "coords", "material"):
         if isinstance(given.get(name), list):
             given[name] = tuple(given[name])
     return Settings(**given)

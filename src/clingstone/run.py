@@ -24,6 +24,9 @@ class Settings:
 
     model : formula such as ``"y ~ x + arm"``.
     residual : column of residuals, when no model is given.
+    sheet : sheet of an Excel file or layer of a GeoPackage, the first by default.
+    wide : stem of columns that hold one measure at several times ("bp" for bp_1, bp_2 and so on), to be put
+        under each other, with columns row and occasion; "none" where numbered columns are no such thing.
     group : column of groups, or nested columns "a/b" from coarse to fine, or several crossed columns.
     time, series : column of time; column that says which rows form one ordered series.
     coords : two columns of coordinates.
@@ -47,6 +50,8 @@ class Settings:
 
     model: str | None = None
     residual: str | None = None
+    sheet: str | None = None
+    wide: str | tuple[str, ...] | None = None
     group: str | tuple[str, ...] | None = None
     time: str | None = None
     series: str | None = None

@@ -14,7 +14,7 @@ import pyarrow as pa
 import pytest
 
 from clingstone.intake.columns import Columns, fingerprint, gather
-from clingstone.intake.frames import table, wide_note
+from clingstone.intake.frames import table
 from clingstone.needs import InputError
 
 
@@ -216,10 +216,3 @@ def test_copies_of_rows_are_counted_and_kept() -> None:
 def test_codes_for_missing_that_stand_apart(values: list[float], told: bool) -> None:
     notes = read(flocks(age=values, weight=[1.0, 2, 3, 4, 5, 6])).notes
     assert any("often a code for missing" in n for n in notes) is told
-
-
-def test_wide_form_is_pointed_out() -> None:
-    names = ("id", "bp_1", "bp_2", "bp_3", "age")
-    assert "bp_1, bp_2 and bp_3 look like one measure" in wide_note(names, ("bp_1", "age"), ("bp_1",))[0]
-    assert wide_note(names, ("bp_1", "bp_2"), ("bp_1",)) == ()
-    assert wide_note(("y1", "y2", "x"), ("y1",), ("y1",)) == ()

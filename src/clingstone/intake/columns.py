@@ -67,6 +67,7 @@ def gather(
     used = {name: role for role in ROLES for name in reversed(roles.get(role, ()))}
     frame = pd.DataFrame({name: plain(table.column(name, role)) for name, role in used.items()})
     mark = fingerprint(frame)
+    told = _by_codes(frame, [*roles.get("response", ()), *numeric], table.codes)
     for name in numeric:
         frame[name] = numbers(frame[name], table.places)
     _finite(frame, [n for role in ROLES if role not in IDS for n in roles.get(role, ())], table.places)
@@ -99,7 +100,7 @@ def gather(
     for name in used:
         if pd.api.types.is_bool_dtype(held[name].infer_objects().dtype):
             held[name] = held[name].astype(bool)
-    notes = (*table.notes, *more, *_remarks(held, table.places[kept]))
+    notes = (*table.notes, *told, *more, *_remarks(held, table.places[kept]))
     return Columns(held, kept, len(frame), dropped, notes, mark)
 
 
@@ -153,6 +154,23 @@ def plain(column: pd.Series) -> pd.Series:
         ):
             return pd.to_numeric(column.astype("float64"))
     return column
+
+
+def _by_codes(
+    frame: pd.DataFrame, names: Sequence[str], codes: Mapping[str, Mapping[str, float]]
+) -> list[str]:
+    """Where numbers are needed, a column with value labels is used by its codes; in place, with notes."""
+    import pandas as pd
+
+    notes = []
+    for name in dict.fromkeys(names):
+        column = frame[name]
+        if name not in codes or not isinstance(column.dtype, pd.CategoricalDtype):
+            continue
+        shown = listed((f"{codes[name][w]:g} ‘{w}’" for w in column.cat.categories), most=6)
+        frame[name] = column.astype(object).map(codes[name]).astype(float)
+        notes.append(f"{name} has value labels and is used by its codes here ({shown}).")
+    return notes
 
 
 def numbers(column: pd.Series, places: Places) -> pd.Series:

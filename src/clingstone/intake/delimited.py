@@ -6,9 +6,14 @@ import codecs
 import csv
 import io
 import re
-from collections.abc import Collection, Sequence
+import warnings
+from collections.abc import Callable, Collection, Iterator, Sequence
 from dataclasses import dataclass
-from typing import TYPE_CHECKING
+from pathlib import Path
+from typing import TYPE_CHECKING, Any, BinaryIO
+
+import numpy as np
+import numpy.typing as npt
 
 from clingstone.display import count, listed, quoted, rows
 from clingstone.needs import InputError
@@ -19,7 +24,12 @@ if TYPE_CHECKING:
 SEPARATORS = {",": "comma", ";": "semicolon", "\t": "tab", "|": "bar"}
 MISSING = ("", "NA", "N/A", "NaN", "nan", "null", "NULL", "None", "<NA>", "#N/A", ".")
 USUAL_MISSING = ("", "NA")
-_BOMS = ((codecs.BOM_UTF8, "utf-8-sig"), (codecs.BOM_UTF16_LE, "utf-16"), (codecs.BOM_UTF16_BE, "utf-16"))
+SAMPLE = 1000  # rows from which the decimal mark and the likely columns of numbers are taken
+EXACT = 2**53  # whole numbers from here on are not all held by a 64-bit decimal
+_BLOCK = 1 << 23  # bytes looked over at a time
+_HEAD = 1 << 18
+
+Source = Path | bytes  # UTF-8, with or without a mark
 
 
 @dataclass(frozen=True)
@@ -39,66 +49,185 @@ class Dialect:
         }
 
 
-def read(
-    content: bytes, name: str, columns: Collection[str] | None
-) -> tuple[pd.DataFrame, Dialect, list[str]]:
-    """A table from the bytes of a file; ``columns`` are those to keep where present.
+@dataclass(frozen=True, eq=False)
+class Text:
+    """A text that was looked over once, its columns not yet read.
 
-    A column becomes numbers only if every value that is not missing is one; leading zeros keep it
-    text. Raises InputError for bytes that are no text, rows of unequal length, repeated names.
+    numeric : columns that hold numbers in the first rows.
     """
+
+    source: Source
+    names: tuple[str, ...]
+    rows: int
+    dialect: Dialect
+    numeric: frozenset[str]
+    notes: tuple[str, ...]
+
+    def read(self, columns: Collection[str]) -> tuple[pd.DataFrame, list[str]]:
+        """The columns named, in one pass, and notes.
+
+        A column becomes numbers only if every value that is not missing is one; leading zeros keep
+        it text. Columns that look like numbers are read as such at once; where that might hide a
+        leading zero, a code or a word, they are read again as text, which decides.
+        """
+        import pandas as pd
+
+        wanted = [n for n in self.names if n in columns]
+        number = [n for n in wanted if n in self.numeric]
+        notes: list[str] = []
+        with warnings.catch_warnings():
+            warnings.simplefilter("ignore", pd.errors.DtypeWarning)  # such columns are read again
+            raw = self._parse(
+                usecols=wanted,
+                dtype={n: str for n in wanted if n not in self.numeric},
+                na_values={n: list(MISSING) for n in number},
+                keep_default_na=False,
+                **_exact(),
+                decimal=self.dialect.decimal,
+            )
+        doubtful = self._doubtful(raw[number])
+        if doubtful:
+            again = self._words(doubtful)
+            raw = raw.assign(**{n: again[n] for n in doubtful})
+        done = set(number) - set(doubtful)
+        made = {n: raw[n] if n in done else typed(raw[n], self.dialect.decimal, notes) for n in wanted}
+        return pd.DataFrame(made, index=raw.index, copy=False), notes
+
+    def _doubtful(self, numbers: pd.DataFrame) -> list[str]:
+        """Columns whose numbers may stand for something that the text alone shows."""
+        kinds = {str(n): _kind(numbers[n]) for n in numbers}
+        whole = [n for n, kind in kinds.items() if "whole" in kind]
+        gaps = [n for n, kind in kinds.items() if "gaps" in kind]
+        found = {n for n, kind in kinds.items() if "words" in kind or "long" in kind}
+        if whole and self._any(_needless_zero):
+            found.update(whole)
+        if gaps and self._any(_unusual_code):
+            found.update(gaps)
+        return [n for n in kinds if n in found]
+
+    def _any(self, holds: Callable[[bytes, str], bool]) -> bool:
+        return any(holds(block, self.dialect.separator) for block in _blocks(self.source))
+
+    def _words(self, columns: Collection[str] | None = None, most: int | None = None) -> pd.DataFrame:
+        return self._parse(usecols=columns, dtype=str, na_filter=False, nrows=most)
+
+    def _parse(self, **options: Any) -> pd.DataFrame:
+        import pandas as pd
+
+        with opened(self.source) as stream:
+            frame: pd.DataFrame = pd.read_csv(
+                stream,
+                sep=self.dialect.separator,
+                header=0,
+                names=list(self.names),
+                index_col=False,
+                skip_blank_lines=len(self.names) > 1,
+                encoding="utf-8-sig",
+                **options,
+            )
+        return frame
+
+
+def _exact() -> dict[str, str]:
+    """What makes a written number be read back to its last bit; from pandas 3.1 on it always is."""
     import pandas as pd
 
-    text, encoding, notes = _decode(content, name)
-    if not text.strip():
+    major, minor = (int(part) for part in pd.__version__.split(".")[:2])
+    return {} if (major, minor) >= (3, 1) else {"float_precision": "round_trip"}
+
+
+def look(source: Source, name: str) -> Text:
+    """Encoding, separator, decimal mark, column names and number of rows of a text.
+
+    Raises InputError for bytes that are no text, rows of unequal length, repeated names.
+    """
+    source, encoding, notes = _utf8(source, name)
+    head = _head(source)
+    if not head.strip():
         raise InputError(f"{name} is empty", "Give a file with a header line and at least one row.")
-    separator = _separator(text)
-    header = next(csv.reader(io.StringIO(text, newline=""), delimiter=separator))
+    separator = _separator(head)
+    try:
+        header = next(csv.reader(io.StringIO(head.lstrip("\r\n"), newline=""), delimiter=separator))
+    except csv.Error as error:
+        raise InputError(f"the first line of {name} cannot be read: {error}", "Mend it.") from error
     names, remarks = tidy_header(header)
-    notes += remarks
-    _equal_lengths(text, separator, len(names), name)
-    raw = pd.read_csv(
-        io.StringIO(text),
-        sep=separator,
-        header=0,
-        names=names,
-        usecols=[n for n in names if columns is None or n in columns],
-        dtype=str,
-        keep_default_na=False,
-        na_filter=False,
-        index_col=False,
-        skip_blank_lines=len(names) > 1,
+    number = _scan(source, separator, len(names), name)
+    if len(names) == 1:
+        number = -1  # blank lines are rows then: counted when they are read
+    bare = Text(source, tuple(names), number, Dialect(encoding, separator, "."), frozenset(), ())
+    sample = bare._words(most=SAMPLE)
+    decimal = _decimal(sample, separator)
+    if number < 0:
+        number = len(bare._words())
+    return Text(
+        source,
+        tuple(names),
+        number,
+        Dialect(encoding, separator, decimal),
+        frozenset(n for n in names if _numeric(sample[n], decimal)),
+        (*notes, *remarks),
     )
-    decimal = _decimal(raw, separator)
-    frame = pd.DataFrame({c: typed(raw[c], decimal, notes) for c in raw.columns}, index=raw.index)
-    return frame, Dialect(encoding, separator, decimal), notes
 
 
-def _decode(content: bytes, name: str) -> tuple[str, str, list[str]]:
-    for mark, encoding in _BOMS:
-        if content.startswith(mark):
-            try:
-                return content.decode(encoding), "utf-8 with a mark" if "8" in encoding else "utf-16", []
-            except UnicodeDecodeError as error:
-                raise InputError(f"{name} starts like {encoding} text and is not: {error.reason}") from error
-    if b"\x00" in content[:4096]:
+def opened(source: Source) -> BinaryIO:
+    return io.BytesIO(source) if isinstance(source, bytes) else source.open("rb")
+
+
+def _blocks(source: Source) -> Iterator[bytes]:
+    """The bytes in blocks that end with a line."""
+    with opened(source) as stream:
+        while block := stream.read(_BLOCK):
+            yield block if block.endswith(b"\n") else block + stream.readline()
+
+
+def _head(source: Source) -> str:
+    with opened(source) as stream:
+        return stream.read(_HEAD).decode("utf-8-sig", errors="ignore")
+
+
+def _utf8(source: Source, name: str) -> tuple[Source, str, list[str]]:
+    """The same text in UTF-8 with ordinary line ends, and how it was written."""
+    with opened(source) as stream:
+        start = stream.read(4096)
+    if start.startswith((codecs.BOM_UTF16_LE, codecs.BOM_UTF16_BE)):
+        try:
+            return _whole(source).decode("utf-16").encode(), "utf-16", []
+        except UnicodeDecodeError as error:
+            raise InputError(f"{name} starts like utf-16 text and is not: {error.reason}") from error
+    if b"\x00" in start:
         raise InputError(
             f"{name} is not a text file (it holds zero bytes)", "Save it as CSV, or give it its right suffix."
         )
-    try:
-        return content.decode("utf-8"), "utf-8", []
-    except UnicodeDecodeError as error:
-        line = content[: error.start].count(b"\n") + 1
-        note = f"{name} is not UTF-8 (line {line}); it was read as Windows-1252. Check accented letters."
-        return content.decode("cp1252", errors="replace"), "windows-1252", [note]
+    if b"\r" in start and b"\n" not in start:
+        source = _whole(source).replace(b"\r", b"\n")
+    line = 1
+    for block in _blocks(source):
+        try:
+            block.decode("utf-8")
+        except UnicodeDecodeError as error:
+            if start.startswith(codecs.BOM_UTF8):
+                raise InputError(f"{name} starts like utf-8 text and is not: {error.reason}") from error
+            line += block[: error.start].count(b"\n")
+            note = f"{name} is not UTF-8 (line {line}); it was read as Windows-1252. Check accented letters."
+            text = _whole(source).decode("cp1252", errors="replace")
+            return text.encode(), "windows-1252", [note]
+        line += block.count(b"\n")
+    return source, "utf-8 with a mark" if start.startswith(codecs.BOM_UTF8) else "utf-8", []
 
 
-def _separator(text: str) -> str:
+def _whole(source: Source) -> bytes:
+    return source if isinstance(source, bytes) else source.read_bytes()
+
+
+def _separator(head: str) -> str:
     """The separator that gives the first lines the same number of fields, and the most of them."""
-    sample = "\n".join(text.splitlines()[:200])
+    sample = "\n".join(head.splitlines()[:200])
     best, score = ",", (0.0, 0)
     for mark in SEPARATORS:
-        lengths = [len(r) for r in csv.reader(io.StringIO(sample), delimiter=mark) if r]
+        try:
+            lengths = [len(r) for r in csv.reader(io.StringIO(sample), delimiter=mark) if r]
+        except csv.Error:
+            continue
         width = lengths[0]
         same = sum(n == width for n in lengths) / len(lengths)
         if width > 1 and (same, width) > score:
@@ -130,18 +259,112 @@ def unique_names(names: Sequence[str]) -> None:
         raise InputError(f"column names occur more than once: {shown}", "Give every column its own name.")
 
 
-def _equal_lengths(text: str, separator: str, width: int, name: str) -> None:
-    """Rows with more or fewer fields than the header are an error: a reader would shift or pad them."""
+# ---- every line looked at once ---------------------------------------------------------------
+
+
+def _scan(source: Source, separator: str, width: int, name: str) -> int:
+    """How many rows stand below the header.
+
+    Rows with more or fewer fields than the header are an error: a reader would shift or pad them.
+    """
+    lines = 0
+    for block in _blocks(source):
+        found = _equal_lines(block.removeprefix(codecs.BOM_UTF8), ord(separator), width)
+        if found is None:
+            lines = _by_reader(source, separator, width, name)
+            break
+        lines += found
+    if lines == 1:
+        raise InputError(f"{name} has a header line and no rows", "Give a file with at least one row.")
+    return lines - 1
+
+
+def _kind(column: pd.Series) -> frozenset[str]:
+    """What has to be asked of a column that was read as numbers: words, gaps, whole, long (beyond 2⁵³)."""
+    if column.dtype.kind not in "if":
+        return frozenset({"words"})
+    if column.dtype.kind == "i":
+        return frozenset({"whole"})
+    value = column.to_numpy()
+    there = value[~np.isnan(value)]
+    gaps, whole = len(there) < len(value), bool(np.all(there == np.round(there)))
+    long = whole and float(np.abs(there).max(initial=0.0)) >= EXACT
+    return frozenset(w for w, is_so in (("gaps", gaps), ("whole", whole), ("long", long)) if is_so)
+
+
+def _around(separator: str) -> npt.NDArray[np.bool_]:
+    """(256,) which bytes may stand before or behind a field."""
+    table = np.zeros(256, dtype=bool)
+    table[list(b' \t\r\n"' + separator.encode())] = True
+    return table
+
+
+def _needless_zero(block: bytes, separator: str) -> bool:
+    """Whether some field starts with a 0 and another digit behind it, with or without a sign."""
+    sign: npt.NDArray[np.uint8] = np.frombuffer(block, dtype=np.uint8)
+    place = np.flatnonzero(sign[:-1] == ord("0"))
+    place = place[(sign[place + 1] - ord("0") < 10) & (place > 0)]  # unsigned: below "0" wraps round
+    before = sign[place - 1]
+    around = _around(separator)
+    if around[before].any():
+        return True
+    signed = place[((before == ord("+")) | (before == ord("-"))) & (place > 1)]
+    return bool(around[sign[signed - 2]].any())
+
+
+def _unusual_code(block: bytes, separator: str) -> bool:
+    """Whether some field may be a code for missing other than nothing and NA."""
+    around = _around(separator)
+    sign: npt.NDArray[np.uint8] = np.frombuffer(block, dtype=np.uint8)
+    dot = np.flatnonzero(sign[1:-1] == ord(".")) + 1
+    if np.any(around[sign[dot - 1]] & around[sign[dot + 1]]):
+        return True
+    return any(m.encode() in block for m in MISSING if m not in (*USUAL_MISSING, "."))
+
+
+def _equal_lines(block: bytes, separator: int, width: int) -> int | None:
+    """Lines of a block that have ``width`` fields each, or None where some may not.
+
+    A separator or line end counts where an even number of quotes stands before it. That holds if every
+    quote that opens stands at the start of a field.
+    """
+    sign: npt.NDArray[np.uint8] = np.frombuffer(block, dtype=np.uint8)
+    marks, ends = sign == separator, sign == ord("\n")
+    quote = sign == ord('"')
+    if quote.any():
+        outside = np.bitwise_and(np.cumsum(quote, dtype=np.int32), 1) == 0
+        opening = np.flatnonzero(quote & ~outside)
+        before = sign[np.maximum(opening, 1) - 1]
+        starts = (before == separator) | (before == ord("\n")) | (before == ord('"')) | (opening == 0)
+        if not outside[-1] or not starts.all():
+            return None
+        marks &= outside
+        ends &= outside
+    last = np.flatnonzero(ends)
+    if not ends[-1]:
+        last = np.append(last, len(sign))
+    fields = np.diff(np.searchsorted(np.flatnonzero(marks), last), prepend=0) + 1
+    length = np.diff(last, prepend=-1) - 1
+    blank = (length == 0) | ((length == 1) & (sign[last - 1] == ord("\r")))
+    return int(np.sum(~blank)) if np.all((fields == width) | blank) else None
+
+
+def _by_reader(source: Source, separator: str, width: int, name: str) -> int:
+    """The same by the standard library, line by line, which has the last word."""
     wrong: list[tuple[int, int]] = []
     total = 0
-    for row in csv.reader(io.StringIO(text, newline=""), delimiter=separator):
-        if not row:
-            continue
-        if len(row) != width:
-            wrong.append((total, len(row)))
-        total += 1
-    if total == 1:
-        raise InputError(f"{name} has a header line and no rows", "Give a file with at least one row.")
+    with io.TextIOWrapper(opened(source), encoding="utf-8-sig", newline="") as lines:
+        try:
+            for row in csv.reader(lines, delimiter=separator):
+                if not row:
+                    continue
+                if len(row) != width:
+                    wrong.append((total, len(row)))
+                total += 1
+        except csv.Error as error:
+            raise InputError(
+                f"{name} cannot be read after {count(total, 'line')}: {error}", "Look for a stray quote."
+            ) from error
     if wrong:
         place, found = wrong[0]
         raise InputError(
@@ -151,7 +374,10 @@ def _equal_lengths(text: str, separator: str, width: int, name: str) -> None:
             f"The separator was taken to be a {SEPARATORS[separator]}. Quote fields that contain "
             "it, or mend the rows.",
         )
+    return total
 
+
+# ---- what a column is ------------------------------------------------------------------------
 
 _COMMA = re.compile(r"\s*[+-]?\d+,\d+(?:[eE][+-]?\d+)?\s*")
 _POINT = re.compile(r"\s*[+-]?\d*\.\d+(?:[eE][+-]?\d+)?\s*")
@@ -166,7 +392,7 @@ def _decimal(raw: pd.DataFrame, separator: str) -> str:
         return "."
     comma = point = 0
     for c in raw.columns:
-        values = [v for v in raw[c].head(500) if v.strip() not in MISSING]
+        values = [v for v in raw[c] if v.strip() not in MISSING]
         comma += (
             bool(values) and any(_COMMA.fullmatch(v) for v in values) and not any("." in v for v in values)
         )
@@ -174,43 +400,73 @@ def _decimal(raw: pd.DataFrame, separator: str) -> str:
     return "," if comma > 0 and comma >= point else "."
 
 
+def _numeric(words: pd.Series, decimal: str) -> bool:
+    """Whether every word that is not missing is a number."""
+    pattern = re.compile(f"(?:{_NUMBER})|(?:{_SPECIAL})", re.IGNORECASE)
+    return all(
+        pattern.fullmatch(v.replace(",", ".") if decimal == "," else v)
+        for v in words
+        if v.strip() not in MISSING
+    )
+
+
 def typed(column: pd.Series, decimal: str, notes: list[str]) -> pd.Series:
-    """Numbers or true/false where every value is one, else the text as it stands."""
+    """Numbers or true/false where every value is one, else the text as it stands.
+
+    Each distinct word is looked at once.
+    """
     import pandas as pd
 
-    plain = column.str.strip()
+    codes, distinct = pd.factorize(column)
+    plain = pd.Series(distinct, dtype=object).str.strip()
+    times = np.bincount(codes, minlength=len(plain))
     gone = plain.isin(MISSING)
     name = str(column.name)
     values = plain[~gone]
     if values.empty:
         return pd.Series(float("nan"), index=column.index, name=name)
+
+    def spread(found: npt.NDArray[Any]) -> pd.Series:
+        return pd.Series(found[codes], index=column.index, name=name)
+
     if values.isin(("True", "False", "TRUE", "FALSE", "true", "false")).all() and not gone.any():
-        return plain.str.casefold() == "true"
+        return spread((plain.str.casefold() == "true").to_numpy(dtype=bool))
     number = values.str.replace(",", ".", regex=False) if decimal == "," else values
     if number.str.fullmatch(f"(?:{_NUMBER})|(?:{_SPECIAL})", case=False).all():
-        zeros = number.str.fullmatch(_LEADING_ZERO)
-        if zeros.any():
-            notes.append(
-                f"{name} has leading zeros ({quoted(values[zeros].unique(), 2)}), so it is kept as text."
-            )
-            return column.where(~gone)
-        _tell_missing(name, plain[gone], notes)
-        return _numbers(number, gone, name)
+        why = _kept_as_text(name, values, number, bool(gone.any()))
+        if why:
+            notes.append(why)
+            return column.where(~gone.to_numpy()[codes])
+        _tell_missing(name, plain[gone], times, notes)
+        if not gone.any() and number.str.fullmatch(r"[+-]?\d+").all():
+            return spread(number.astype("int64").to_numpy())
+        return spread(number.astype(float).reindex(plain.index).to_numpy())  # rounds correctly
     # These two may be words of the user's own in a column of text: no treatment, a placeholder.
     word = plain.isin(("None", "."))
     notes.extend(f"‘{v}’ in {name} is kept as a value of its own." for v in sorted(set(plain[word])))
-    _tell_missing(name, plain[gone & ~word], notes)
-    return column.where(~(gone & ~word))
+    _tell_missing(name, plain[gone & ~word], times, notes)
+    lost = (gone & ~word).to_numpy()
+    return column.where(~lost[codes]) if lost.any() else column
 
 
-def _numbers(number: pd.Series, gone: pd.Series, name: str) -> pd.Series:
-    if not gone.any() and number.str.fullmatch(r"[+-]?\d{1,18}").all():
-        return number.astype("int64").rename(name)
-    values = number.astype(float)  # rounds correctly, so a written number is read back to its last bit
-    return values.reindex(gone.index).rename(name)
+def _kept_as_text(name: str, values: pd.Series, number: pd.Series, gaps: bool) -> str:
+    """Why digits are no number here: leading zeros, or more of them than a number holds exactly."""
+    zeros = number.str.fullmatch(_LEADING_ZERO)
+    if zeros.any():
+        return f"{name} has leading zeros ({quoted(values[zeros].unique(), 2)}), so it is kept as text."
+    if not number.str.fullmatch(r"[+-]?\d+").all():
+        return ""
+    long = np.array([abs(int(v)) >= (EXACT if gaps else 2**63) for v in number])
+    if not long.any():
+        return ""
+    return (
+        f"{name} has whole numbers too long to be held exactly ({quoted(values[long].unique(), 1)}), "
+        "so it is kept as text."
+    )
 
 
-def _tell_missing(name: str, codes: pd.Series, notes: list[str]) -> None:
+def _tell_missing(name: str, codes: pd.Series, times: npt.NDArray[np.int64], notes: list[str]) -> None:
     unusual = codes[~codes.isin(USUAL_MISSING)]
-    for code, times in unusual.value_counts().items():
-        notes.append(f"‘{code}’ in {name} is read as missing ({count(int(times), 'row')}).")
+    for code, places in unusual.groupby(unusual).groups.items():
+        n = int(times[np.asarray(places)].sum())
+        notes.append(f"‘{code}’ in {name} is read as missing ({count(n, 'row')}).")

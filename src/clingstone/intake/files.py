@@ -1,63 +1,138 @@
-"""Files: delimited text, Parquet, Excel, Stata. What the reader chose is told."""
+"""Files: what each holds and how it was read; its columns are read when they are asked for."""
 
 from __future__ import annotations
 
 import gzip
+import json
 import zlib
-from collections.abc import Collection
+from collections.abc import Callable, Collection, Mapping
+from dataclasses import dataclass, field
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from clingstone.display import listed, quoted
+from clingstone.display import count, instead, listed, quoted
 from clingstone.intake import delimited
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
     import pandas as pd
 
-Read = tuple["pd.DataFrame", dict[str, str], tuple[str, ...]]
-
 TEXT = (".csv", ".tsv", ".txt", ".csv.gz", ".tsv.gz", ".txt.gz")
+ARROW = (".parquet", ".feather", ".arrow")
 EXCEL = (".xlsx", ".xlsm", ".xls")
-SUFFIXES = (*TEXT, ".parquet", *EXCEL, ".dta")
-_EXTRA = "Install what reads it with: pip install 'clingstone[files]'."
+LABELLED = (".sav", ".zsav", ".por", ".dta", ".sas7bdat", ".xpt")
+MAPS = (".gpkg", ".geojson", ".shp")
+SUFFIXES = (*TEXT, *ARROW, *EXCEL, *LABELLED, *MAPS)
+_FORMATS = {
+    **dict.fromkeys(TEXT, "delimited text"),
+    **dict.fromkeys(EXCEL, "Excel"),
+    ".parquet": "Parquet",
+    ".feather": "Feather",
+    ".arrow": "Feather",
+    ".sav": "SPSS",
+    ".zsav": "SPSS",
+    ".por": "SPSS",
+    ".dta": "Stata",
+    ".sas7bdat": "SAS",
+    ".xpt": "SAS",
+    ".gpkg": "GeoPackage",
+    ".geojson": "GeoJSON",
+    ".shp": "shapefile",
+}
+
+Read = Callable[[Collection[str]], "tuple[pd.DataFrame, list[str]]"]
 
 
-def read(path: str | Path, columns: Collection[str] | None = None) -> Read:
-    """A table, where it came from and how it was read, and notes.
+@dataclass(frozen=True, eq=False)
+class Source:
+    """A file that was opened: its columns and rows are known, and none but those asked for is read.
+
+    read : names → a frame of those columns, and notes. origin : file, format, how it was read.
+    geometry : of a geographic file, a frame with its shapes alone. codes : column → label → the number
+    that the label stands for.
+    """
+
+    names: tuple[str, ...]
+    rows: int
+    read: Read = field(repr=False)
+    origin: Mapping[str, str]
+    notes: tuple[str, ...] = ()
+    geometry: pd.DataFrame | None = field(default=None, repr=False)
+    codes: Mapping[str, Mapping[str, float]] = field(default_factory=dict, repr=False)
+
+
+def source(path: str | Path, sheet: str | None = None) -> Source:
+    """A file opened.
 
     Parameters
     ----------
     path : file whose suffix is one of ``SUFFIXES``.
-    columns : names to keep; names that the file lacks are not an error here. Default: all.
+    sheet : of a file that holds several tables (Excel, GeoPackage), which one; by default the first.
 
     Raises
     ------
-    InputError : not found, not readable, unknown suffix, empty, repeated column names.
+    InputError : not found, not readable, unknown suffix, what reads it is not installed, empty,
+        repeated column names, no such sheet.
     """
     path = Path(path)
     if path.is_dir():
         raise InputError(f"{path} is a folder", "Name one file in it.")
     suffix = _suffix(path)
-    content = _bytes(path)
-    if not content:
-        raise InputError(f"{path.name} is empty", "Give a file with a header line and at least one row.")
-    origin = {"file": path.name, "format": _format(suffix)}
-    if suffix in TEXT:
-        if suffix.endswith(".gz"):
-            content = _unzip(content, path.name)
-        frame, dialect, notes = delimited.read(content, path.name, columns)
-        return frame, origin | dialect.origin, tuple(notes)
-    if suffix in EXCEL:
-        frame, sheet, notes = _excel(path, columns)
-        origin["sheet"] = sheet
-    else:
-        frame, notes = _parquet(path) if suffix == ".parquet" else _stata(path)
-    delimited.unique_names([str(c) for c in frame.columns])
-    if not len(frame):
+    _there(path)
+    if sheet is not None and suffix not in (*EXCEL, ".gpkg"):
+        raise InputError(
+            f"sheet={sheet!r} was given, and {path.name} holds one table only", "Leave sheet= out."
+        )
+    found = _opened(path, suffix, sheet)
+    delimited.unique_names(list(found.names))
+    if not found.rows:
         raise InputError(f"{path.name} has column names and no rows", "Give a file with at least one row.")
-    kept = [c for c in frame.columns if columns is None or str(c) in columns]
-    return frame[kept], origin, tuple(notes)
+    return found
+
+
+def _opened(path: Path, suffix: str, sheet: str | None) -> Source:
+    """Each reader is imported when such a file comes."""
+    origin = {"file": path.name, "format": _FORMATS[suffix]}
+    if suffix in TEXT:
+        text = delimited.look(_unzipped(path) if suffix.endswith(".gz") else path, path.name)
+        return Source(text.names, text.rows, text.read, origin | text.dialect.origin, text.notes)
+    if suffix in EXCEL:
+        return _excel(path, sheet, origin)
+    if suffix in ARROW:
+        return _arrow(path, origin)
+    if suffix in LABELLED:
+        from clingstone.intake import labelled
+
+        return labelled.opened(path, suffix, origin)
+    from clingstone.intake import maps
+
+    return maps.opened(path, sheet, origin)
+
+
+def missing_reader(path: Path, package: str, extra: str) -> InputError:
+    """What to install for a file of this kind."""
+    return InputError(
+        f"{path.name} needs {package} to be read, which is not installed",
+        f"Install it with: pip install 'clingstone[{extra}]'.",
+    )
+
+
+def unreadable(path: Path, kind: str, error: Exception) -> InputError:
+    said = " ".join(str(error).split())
+    return InputError(f"{path.name} is not a readable {kind} file: {said}", "Save it again.")
+
+
+def chosen(sheet: str | None, sheets: list[str], path: Path, what: str) -> tuple[str, list[str]]:
+    """The sheet or layer to read, and a note where there are others."""
+    if sheet is not None and sheet not in sheets:
+        raise InputError(f"{path.name} has no {what} ‘{sheet}’", instead(sheet, sheets))
+    if sheet is not None or len(sheets) == 1:
+        return sheet or sheets[0], []
+    others = quoted(sheets[1:], most=6)
+    return sheets[0], [
+        f"{path.name} has {len(sheets)} {what}s; ‘{sheets[0]}’, the first, is read ({others} "
+        f"{'is' if len(sheets) == 2 else 'are'} not). Another is named with sheet=."
+    ]
 
 
 def _suffix(path: Path) -> str:
@@ -67,21 +142,19 @@ def _suffix(path: Path) -> str:
         raise InputError(
             f"{path.name} has {'the suffix ' + path.suffix if path.suffix else 'no suffix'}, which "
             "is not read here",
-            f"Files that are read: {listed(SUFFIXES, most=20)}.",
+            f"Files that are read: {listed(SUFFIXES, most=30)}.",
         )
     return max(found, key=len)
 
 
-def _format(suffix: str) -> str:
-    if suffix in TEXT:
-        return "delimited text"
-    return {".parquet": "Parquet", ".dta": "Stata"}.get(suffix, "Excel")
-
-
-def _bytes(path: Path) -> bytes:
-    """The content, or a message that says why there is none."""
+def _there(path: Path) -> None:
+    """Raises InputError that says why there is no content."""
     try:
-        return path.read_bytes()
+        with path.open("rb") as stream:
+            if not stream.read(1):
+                raise InputError(
+                    f"{path.name} is empty", "Give a file with a header line and at least one row."
+                )
     except FileNotFoundError:
         parent = path.parent
         if not parent.is_dir():
@@ -91,92 +164,114 @@ def _bytes(path: Path) -> bytes:
         close = near(path.name, [p.name for p in parent.iterdir() if p.is_file()])
         hint = f"In that folder there is {quoted(close)}." if close else "Check the path of the file."
         raise InputError(f"there is no file {path.name} in {parent.resolve()}", hint) from None
-    except IsADirectoryError:
-        raise InputError(f"{path} is a folder", "Name one file in it.") from None
     except OSError as error:
         raise InputError(
             f"{path.name} cannot be read: {error.strerror or error}", "Check the permissions of the file."
         ) from error
 
 
-def _unzip(content: bytes, name: str) -> bytes:
+def _unzipped(path: Path) -> bytes:
     try:
-        return gzip.decompress(content)
+        return gzip.decompress(path.read_bytes())
     except (OSError, EOFError, zlib.error) as error:
-        raise InputError(f"{name} is not a whole gzip file: {error}", "Get the file again.") from error
+        raise InputError(f"{path.name} is not a whole gzip file: {error}", "Get the file again.") from error
 
 
-def _parquet(path: Path) -> tuple[pd.DataFrame, list[str]]:
+# ---- Parquet, Feather ------------------------------------------------------------------------
+
+
+def _arrow(path: Path, origin: dict[str, str]) -> Source:
+    """Columns by name, among them what was the index of a pandas frame; a nameless index is left out."""
+    kind = origin["format"]
     try:
         import pyarrow
+        import pyarrow.feather
         import pyarrow.parquet
     except ImportError as error:
-        raise InputError(f"{path.name} needs pyarrow to be read", _EXTRA) from error
+        raise missing_reader(path, "pyarrow", "files") from error
     try:
-        frame = pyarrow.parquet.ParquetFile(path).read().to_pandas()
+        if kind == "Parquet":
+            parquet = pyarrow.parquet.ParquetFile(path)
+            schema, rows = parquet.schema_arrow, parquet.metadata.num_rows
+        else:
+            with pyarrow.memory_map(str(path)) as mapped:
+                table = pyarrow.ipc.open_file(mapped)
+                schema = table.schema
+                rows = sum(table.get_batch(i).num_rows for i in range(table.num_record_batches))
     except (pyarrow.ArrowException, OSError, ValueError) as error:
-        raise InputError(
-            f"{path.name} is not a readable Parquet file: {error}", "Write the file again."
-        ) from error
-    return _index_to_columns(frame), []
+        raise unreadable(path, kind, error) from error
+    names = tuple(n for n in schema.names if not n.startswith("__index_level_"))
+
+    def read(columns: Collection[str]) -> tuple[pd.DataFrame, list[str]]:
+        wanted = [n for n in names if n in columns]
+        if kind == "Parquet":
+            held = pyarrow.parquet.ParquetFile(path).read(columns=wanted)
+        else:
+            held = pyarrow.feather.read_table(path, columns=wanted)
+        return held.to_pandas(ignore_metadata=True), []
+
+    found = Source(names, rows, read, origin)
+    shapes = (schema.metadata or {}).get(b"geo")
+    if shapes is None:
+        return found
+    from clingstone.intake import maps
+
+    return maps.of_parquet(path, found, json.loads(shapes)["primary_column"])
 
 
-def _index_to_columns(frame: pd.DataFrame) -> pd.DataFrame:
-    named = [n for n in frame.index.names if n is not None and n not in frame.columns]
-    return frame.reset_index(level=named).reset_index(drop=True) if named else frame
+# ---- Excel -----------------------------------------------------------------------------------
 
 
-def _stata(path: Path) -> tuple[pd.DataFrame, list[str]]:
-    """Value labels are kept as the levels of a factor."""
-    import struct
-
-    import pandas as pd
-
-    failures = (ValueError, struct.error, EOFError, OSError, UnicodeDecodeError, KeyError)
-    try:
-        return pd.read_stata(path), []
-    except ValueError as error:
-        if "Value labels" not in str(error) and "value label" not in str(error).casefold():
-            raise InputError(
-                f"{path.name} is not a readable Stata file: {error}", "Save it again."
-            ) from error
-        try:
-            frame = pd.read_stata(path, convert_categoricals=False)
-        except failures as second:
-            raise InputError(
-                f"{path.name} is not a readable Stata file: {second}", "Save it again."
-            ) from second
-        return frame, ["Some value labels occur twice for one column, so codes are kept instead of labels."]
-    except failures as error:
-        raise InputError(f"{path.name} is not a readable Stata file: {error}", "Save it again.") from error
-
-
-def _excel(path: Path, columns: Collection[str] | None) -> tuple[pd.DataFrame, str, list[str]]:
-    """The first sheet; its first row that is not empty holds the names."""
+def _excel(path: Path, sheet: str | None, origin: dict[str, str]) -> Source:
+    """One sheet; its first row that is not empty holds the names."""
     import zipfile
 
     import pandas as pd
 
     try:
         with pd.ExcelFile(path) as book:
-            sheets = [str(s) for s in book.sheet_names]
-            raw = pd.read_excel(book, sheet_name=sheets[0], header=None, dtype=object)
+            name, notes = chosen(sheet, [str(s) for s in book.sheet_names], path, "sheet")
+            raw = pd.read_excel(book, sheet_name=name, header=None, dtype=object)
     except ImportError as error:
-        raise InputError(f"{path.name} needs a reader of Excel files", _EXTRA) from error
+        if path.suffix.casefold() == ".xls":
+            raise InputError(
+                f"{path.name} is of an old kind that needs xlrd to be read, which is not installed",
+                "Save it as .xlsx, or install xlrd.",
+            ) from error
+        raise missing_reader(path, "openpyxl", "files") from error
     except (ValueError, KeyError, OSError, zipfile.BadZipFile) as error:
-        raise InputError(f"{path.name} is not a readable Excel file: {error}", "Save it again.") from error
-    notes = []
-    if len(sheets) > 1:
-        notes.append(f"{path.name} has {len(sheets)} sheets; ‘{sheets[0]}’, the first, is read.")
+        if isinstance(error, InputError):
+            raise
+        raise unreadable(path, origin["format"], error) from error
     filled = raw.dropna(how="all").dropna(how="all", axis=1)
     if filled.empty:
-        raise InputError(
-            f"the sheet ‘{sheets[0]}’ of {path.name} is empty", "Put the table on the first sheet."
-        )
+        raise InputError(f"the sheet ‘{name}’ of {path.name} is empty", "Name another with sheet=.")
+    _one_heading(filled, name, path)
     names, remarks = delimited.tidy_header(list(filled.iloc[0]))
     body = filled.iloc[1:].reset_index(drop=True)
     body.columns = pd.Index(names)
-    return pd.DataFrame({c: _cells(body[c], notes) for c in names}), sheets[0], notes + remarks
+
+    def read(columns: Collection[str]) -> tuple[pd.DataFrame, list[str]]:
+        told: list[str] = []
+        return pd.DataFrame({c: _cells(body[c], told) for c in names if c in columns}), told
+
+    return Source(tuple(names), len(body), read, origin | {"sheet": name}, (*notes, *remarks))
+
+
+def _one_heading(filled: pd.DataFrame, sheet: str, path: Path) -> None:
+    """Stop at a title or merged cells above the names: several columns would have no name of their own."""
+    top = filled.iloc[0]
+    nameless = int(top.isna().sum())
+    if nameless < 2 or len(filled) < 2:
+        return
+    below = filled.iloc[1]
+    if all(isinstance(v, str) for v in below[top.isna()]):
+        raise InputError(
+            f"the first row of the sheet ‘{sheet}’ of {path.name} leaves {count(nameless, 'column')} of "
+            f"{filled.shape[1]} without a name, and the row below holds text there: a title or merged cells "
+            "above the names",
+            "Keep one row of names, one name for each column, at the top of the sheet.",
+        )
 
 
 def _cells(column: pd.Series, notes: list[str]) -> pd.Series:

@@ -2,16 +2,16 @@
 
 from __future__ import annotations
 
-import re
-from collections.abc import Callable, Mapping, Sequence
+from collections.abc import Callable, Collection, Mapping, Sequence
 from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.display import count, instead, listed, rows
+from clingstone.display import count, instead, rows, significant
 from clingstone.intake.delimited import unique_names
+from clingstone.intake.files import Source
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -26,7 +26,9 @@ class Table:
 
     index : row labels, where the frame has some that can identify rows. lonlat, unit : what the
     coordinate reference system of a geographic frame says of ``place``. picked : positions of the
-    rows in the user's table, where only some are held. shapes : of a geographic frame.
+    rows in the user's table, where only some are held. shapes : of a geographic frame. codes : column
+    → value label → the number that it stands for. hold : names → the same table after those columns
+    were read from their file in one go; None where all are in memory.
     """
 
     names: tuple[str, ...]
@@ -39,6 +41,12 @@ class Table:
     notes: tuple[str, ...] = ()
     picked: npt.NDArray[np.int64] | None = None
     shapes: pd.Series[Any] | None = field(default=None, repr=False)
+    codes: Mapping[str, Mapping[str, float]] = field(default_factory=dict, repr=False)
+    hold: Callable[[Collection[str]], Table] | None = field(default=None, repr=False)
+
+    def holding(self, names: Collection[str]) -> Table:
+        """The same table with these columns read; what the reading tells stands in its notes."""
+        return self if self.hold is None else self.hold(names)
 
     def __contains__(self, name: str) -> bool:
         return name in self.names
@@ -50,7 +58,7 @@ class Table:
 
     def take(self, places: npt.NDArray[np.int64]) -> Table:
         """The same columns on some rows, counted anew from 0."""
-        fetch = self.fetch
+        fetch, hold = self.fetch, self.hold
         return replace(
             self,
             rows=len(places),
@@ -58,6 +66,7 @@ class Table:
             index=None if self.index is None else self.index[places],
             picked=self.places[places],
             shapes=None if self.shapes is None else self.shapes.iloc[places].reset_index(drop=True),
+            hold=None if hold is None else lambda names: hold(names).take(places),
         )
 
     def column(self, name: str, used: str) -> pd.Series:
@@ -90,6 +99,43 @@ def table(data: Any) -> Table:
     if not found.rows:
         raise InputError("the table has no rows", "Give a table with at least one row.")
     return found
+
+
+def of_source(source: Source) -> Table:
+    """The columns of a file that was opened; those that nobody asks for are never read."""
+    base = None if source.geometry is None else _pandas(source.geometry)
+    own = () if base is None else tuple(n for n in base.names if n not in source.names)
+
+    def held(names: Collection[str]) -> Table:
+        frame, told = source.read([n for n in source.names if n in names])
+
+        def fetch(name: str) -> pd.Series:
+            if name in frame.columns:
+                return frame[name]
+            if base is not None and name in own:
+                return base.fetch(name)
+            return source.read([name])[0][name]  # asked for by another file, such as one of pairs
+
+        return replace(opened, fetch=fetch, notes=(*opened.notes, *told))
+
+    opened = Table(
+        names=(*source.names, *own),
+        rows=source.rows,
+        fetch=lambda name: held([name]).fetch(name),
+        notes=source.notes,
+        codes=source.codes,
+        hold=held,
+    )
+    if base is not None:
+        opened = replace(
+            opened,
+            place=base.place,
+            lonlat=base.lonlat,
+            unit=base.unit,
+            shapes=base.shapes,
+            notes=(*source.notes, *base.notes),
+        )
+    return opened
 
 
 def _pandas(frame: pd.DataFrame) -> Table:
@@ -188,7 +234,7 @@ def _geometry(frame: pd.DataFrame) -> _Place:
     points = shapes
     if not (shapes[there].geom_type == "Point").all():
         points = shapes.representative_point()
-        notes.append("Shapes are stood for by a point inside each of them.")
+        notes.append(_areas(shapes[there]))
     blank = pd.Series(float("nan"), index=range(len(frame)))
     x, y = blank.copy(), blank.copy()
     x[there.to_numpy()], y[there.to_numpy()] = points[there].x.to_numpy(), points[there].y.to_numpy()
@@ -198,27 +244,24 @@ def _geometry(frame: pd.DataFrame) -> _Place:
     return _Place({PLACE_X: x, PLACE_Y: y}, (PLACE_X, PLACE_Y), lonlat, unit, tuple(notes), whole)
 
 
+def _areas(shapes: Any) -> str:
+    """How many shapes and how large, by an equal-area map where the reference system is known."""
+    flat = shapes if shapes.crs is None else shapes.to_crs("EPSG:6933")
+    area, unit = np.sort(flat.area.to_numpy()), " square units"
+    if shapes.crs is not None:
+        area, unit = (area / 1e6, " km²") if area[-1] >= 1e5 else (area, " m²")
+    size = significant(float(np.median(area)), 3) + unit
+    return (
+        f"{count(len(shapes), 'shape')} of a median area of {size} (from {significant(float(area[0]), 3)} to "
+        f"{significant(float(area[-1]), 3)}) are stood for by a point inside each of them."
+    )
+
+
 def _axis_unit(crs: Any) -> str:
     named: Sequence[str] = [axis.unit_name for axis in crs.axis_info]
     return {"metre": "m", "kilometre": "km", "foot": "ft", "US survey foot": "ft"}.get(
         named[0] if named else "", ""
     )
-
-
-def wide_note(names: Sequence[str], used: Sequence[str], response: Sequence[str]) -> tuple[str, ...]:
-    """A note where the response has sisters that differ by a number only: one measure in wide form."""
-    for name in response:
-        stem = re.fullmatch(r"(.*?[^\d\s])[_. ]?\d+", name)
-        if stem is None:
-            continue
-        alike = [n for n in names if re.fullmatch(re.escape(stem.group(1)) + r"[_. ]?\d+", n)]
-        if len(alike) > 2 and not any(n in used for n in alike if n != name):
-            return (
-                f"{listed(alike, most=6)} look like one measure at several times, side by side. To use "
-                "them all, put them "
-                "under each other: one row per time, with columns for the subject and the time.",
-            )
-    return ()
 
 
 def with_residual(residual: Any, data: Any) -> tuple[Table, str]:
