@@ -722,3 +722,14 @@ def wells() -> Results:
         ),
     )
     return replace(base, case=case, evidence=evidence, ledger=ledger, advice=advice, refits=base.refits[:1])
+
+
+HOSTILE = (
+    "</td><script>alert('x')</script>\"' onload=\"alert(1)\n"
+    "\u05d2\u05d9\u05dc 7 \U0001f411\u202e|*_$\\\\{}#%&~^"
+)
+
+
+def hostile() -> Results:
+    """The trial with a group and a coefficient whose names try everything that a name can."""
+    return trial(HOSTILE)

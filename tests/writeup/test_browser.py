@@ -13,34 +13,6 @@ import pytest
 from clingstone.writeup.report import report
 from tests.writeup import fixture
 
-CHROMIUM, DRIVER = Path("/usr/bin/chromium"), Path("/usr/bin/chromedriver")
-FLAGS = (
-    "--headless=new", "--no-sandbox", "--disable-gpu", "--no-first-run", "--disable-background-networking",
-    "--disable-component-update", "--disable-sync",
-)  # fmt: skip
-
-pytestmark = pytest.mark.skipif(
-    not (CHROMIUM.exists() and DRIVER.exists()),
-    reason="chromium and chromedriver are not installed in /usr/bin",
-)
-selenium = pytest.importorskip("selenium")
-
-
-@pytest.fixture(scope="module")
-def browser(tmp_path_factory):
-    from selenium import webdriver
-    from selenium.webdriver.chrome.options import Options
-    from selenium.webdriver.chrome.service import Service
-
-    options = Options()
-    options.binary_location = str(CHROMIUM)
-    for flag in (*FLAGS, f"--user-data-dir={tmp_path_factory.mktemp('profile')}"):
-        options.add_argument(flag)
-    options.set_capability("goog:loggingPrefs", {"browser": "ALL", "performance": "ALL"})
-    driver = webdriver.Chrome(options=options, service=Service(str(DRIVER)))
-    yield driver
-    driver.quit()
-
 
 @pytest.fixture(scope="module", params=["trial", "stream", "wells"])
 def page(request, tmp_path_factory):
@@ -49,7 +21,7 @@ def page(request, tmp_path_factory):
     return path
 
 
-def _open(browser, page: Path, width: int, *, dark: bool = False, script: bool = True) -> None:
+def open_page(browser, page: Path, width: int, *, dark: bool = False, script: bool = True) -> None:
     scheme = {"name": "prefers-color-scheme", "value": "dark" if dark else "light"}
     browser.execute_cdp_cmd("Emulation.setEmulatedMedia", {"features": [scheme]})
     browser.execute_cdp_cmd("Emulation.setScriptExecutionDisabled", {"value": not script})
@@ -62,7 +34,7 @@ def _open(browser, page: Path, width: int, *, dark: bool = False, script: bool =
 
 @pytest.mark.parametrize("width", [1180, 360])
 def test_console_is_quiet_and_no_request_leaves_the_file(browser, page, width):
-    _open(browser, page, width)
+    open_page(browser, page, width)
     assert browser.get_log("browser") == []
     events = [json.loads(e["message"])["message"] for e in browser.get_log("performance")]
     urls = [e["params"]["request"]["url"] for e in events if e["method"] == "Network.requestWillBeSent"]
@@ -72,14 +44,14 @@ def test_console_is_quiet_and_no_request_leaves_the_file(browser, page, width):
 
 @pytest.mark.parametrize("width", [360, 320, 768, 1180])
 def test_the_page_never_scrolls_sideways(browser, page, width):
-    _open(browser, page, width)
+    open_page(browser, page, width)
     browser.execute_script("document.querySelectorAll('details').forEach(d => d.open = true)")
     seen = browser.execute_script("return document.documentElement.scrollWidth")
     assert seen <= width
 
 
 def test_a_phone_gets_figures_drawn_for_it(browser, page):
-    _open(browser, page, 360)
+    open_page(browser, page, 360)
     shown = browser.execute_script(
         "return Array.from(document.querySelectorAll('figure svg'))"
         ".filter(s => s.getClientRects().length).map(s => s.viewBox.baseVal.width)"
@@ -98,7 +70,7 @@ def test_light_and_dark_differ_and_neither_is_blank(browser, page):
 
     pictures = {}
     for dark in (False, True):
-        _open(browser, page, 1000, dark=dark)
+        open_page(browser, page, 1000, dark=dark)
         png = base64.b64decode(browser.execute_cdp_cmd("Page.captureScreenshot", {"format": "png"})["data"])
         pictures[dark] = Image.open(io.BytesIO(png)).convert("RGB")
     light, dark = pictures[False], pictures[True]
@@ -111,7 +83,7 @@ def test_light_and_dark_differ_and_neither_is_blank(browser, page):
 def test_the_button_copies_the_two_sentences(browser, page):
     from selenium.webdriver.common.keys import Keys
 
-    _open(browser, page, 1000)
+    open_page(browser, page, 1000)
     browser.execute_script(
         "Object.defineProperty(navigator, 'clipboard', {value: {writeText: t => {window.copied = t;"
         "return Promise.resolve()}}}); Object.defineProperty(window, 'isSecureContext', {value: true});"
@@ -124,15 +96,15 @@ def test_the_button_copies_the_two_sentences(browser, page):
 
 
 def test_without_scripts_all_is_there_and_no_dead_button(browser, page):
-    _open(browser, page, 1000, script=False)
+    open_page(browser, page, 1000, script=False)
     assert all(not b.is_displayed() for b in browser.find_elements("css selector", "button"))
     assert browser.find_element("id", "methods-text").is_displayed()
     assert len(browser.find_elements("css selector", "details summary")) > 5
-    _open(browser, page, 1000)
+    open_page(browser, page, 1000)
 
 
 def test_print_unfolds_what_is_folded(browser, page):
-    _open(browser, page, 1000)
+    open_page(browser, page, 1000)
     pdf = base64.b64decode(browser.execute_cdp_cmd("Page.printToPDF", {})["data"])
     assert pdf[:5] == b"%PDF-"
     before = browser.execute_script("return document.querySelectorAll('details[open]').length")
@@ -148,7 +120,7 @@ def test_print_unfolds_what_is_folded(browser, page):
 def test_the_keyboard_reaches_the_answer_first(browser, page):
     from selenium.webdriver.common.keys import Keys
 
-    _open(browser, page, 1000)
+    open_page(browser, page, 1000)
     browser.find_element("tag name", "body").send_keys(Keys.TAB)
     focused = browser.switch_to.active_element
     assert re.search(r"answer", focused.get_attribute("href") or "")

@@ -82,7 +82,7 @@ def test_no_figure_needs_a_window_system():
 def test_the_ladder_draws_every_interval_where_it_lies():
     """The drawn ends are read back from the figure and compared with the rows."""
     results = fixture.trial()
-    figure = figures.ladder(results, None).paint(WIDE)
+    figure = figures.ladder(results).paint(WIDE)
     (panel,) = figure.axes
     lines = [
         line for line in panel.get_lines() if line.get_linestyle() != "None" and len(line.get_xdata()) == 2

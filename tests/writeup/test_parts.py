@@ -374,14 +374,18 @@ def test_many_focus_rows_have_three_rungs_each_on_the_first_screen():
     )
     many_rows = replace(base, refits=refits, case=replace(base.case, focus=tuple(names)))
     assert len(figures.ladder(many_rows).table.rows) == 15
-    assert len(figures.ladder(many_rows, None).table.rows) == 20
+    full = figures.ladders(many_rows)
+    assert [p.name for p in full] == [f"intervals-all-{k}" for k in range(1, 6)]
+    assert [len(p.table.rows) for p in full] == [4] * 5
+    assert figures.ladders(base) == ()  # the first screen holds them all
 
 
 def test_the_label_of_a_rung_is_whole_or_visibly_cut():
     base = fixture.trial()
     long = replace(
         base.refits[1],
-        name="random intercept of flock and flock/lamb, with curve in day and many more words behind it",
+        name="random intercept of flock and flock/lamb, with curve in day and so many more words behind it "
+        "that no four lines hold them",
     )
     results = replace(base, refits=(base.refits[0], long, *base.refits[2:]))
     figure = figures.ladder(results).paint(660)
@@ -389,6 +393,6 @@ def test_the_label_of_a_rung_is_whole_or_visibly_cut():
     start = next(i for i, w in enumerate(words) if w.startswith("advised:"))
     end = next(i for i, w in enumerate(words) if w.startswith("−3.1"))
     lines = words[start:end]
-    assert len(lines) == 3
+    assert len(lines) == 4
     assert lines[-1].endswith("…")
     assert " ".join(lines)[:-1] in f"advised: {long.name}"

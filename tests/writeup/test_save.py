@@ -33,7 +33,7 @@ def _nothing_beside(folder: Path) -> None:
 def test_everything_is_there(results, saved):
     assert {p.name for p in saved.iterdir()} == {*FILES, "figures"}
     stems = {p.stem for p in (saved / "figures").iterdir()}
-    assert {"intervals", "intervals-all", "shares", "levels", "group-means-clinic"} == stems
+    assert {"intervals", "shares", "levels", "group-means-clinic"} == stems
     for stem in stems:
         assert (saved / "figures" / f"{stem}.png").read_bytes()[:4] == b"\x89PNG"
         assert (saved / "figures" / f"{stem}.svg").read_text(encoding="utf-8").startswith("<svg")

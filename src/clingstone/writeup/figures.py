@@ -38,23 +38,39 @@ class Rung:
     kind: str  # "advised", "ordinary", "other"
 
 
-def ladder(results: Results, most: int | None = RUNGS) -> Plate | None:
-    """Per focus row, one rung per refit on one shared axis; None when nothing was fitted.
-
-    most : rungs of each row; None draws every refit.
-    """
+def ladder(results: Results) -> Plate | None:
+    """Per focus row, one rung per leading refit on one shared axis; None when nothing was fitted."""
     names = [n for n in served(results) if _rungs(results, n)][:PANELS]
     if not names:
         return None
-    if most is not None and len(names) > FEW:
-        most = 3  # advised, ordinary and one more: the first screen is not the place for all
+    most = RUNGS if len(names) <= FEW else 3  # advised, ordinary and one more
     drawn = [(name, _rungs(results, name)[:most]) for name in names]
-    table = _ladder_table(results, drawn)
+    return _ladder(results, "intervals", f"{level_percent(results)} intervals under each refit", drawn)
+
+
+def ladders(results: Results) -> tuple[Plate, ...]:
+    """For each focus row a ladder of every refit, each short enough for a page of paper.
+
+    Empty when the ladder of the first screen has room for them all.
+    """
+    drawn = [(n, rungs) for n in served(results)[:PANELS] if (rungs := _rungs(results, n))]
+    first = ladder(results)
+    if first is None or sum(len(rungs) for _, rungs in drawn) <= len(first.table.rows):
+        return ()
+    level = level_percent(results)
+    return tuple(
+        _ladder(results, f"intervals-all-{k}", f"{level} intervals for {name} under every refit", [one])
+        for k, one in enumerate(drawn, 1)
+        for name in one[:1]
+    )
+
+
+def _ladder(results: Results, stem: str, caption: str, drawn: Sequence[tuple[str, list[Rung]]]) -> Plate:
     return Plate(
-        "intervals" if most else "intervals-all",
-        f"{level_percent(results)} intervals under each refit",
-        _ladder_alt(results, names),
-        table,
+        stem,
+        caption,
+        _ladder_alt(results, [name for name, _ in drawn]),
+        _ladder_table(results, drawn),
         lambda width: _paint_ladder(drawn, width),
     )
 
@@ -157,10 +173,10 @@ def _heights(rungs: Sequence[Rung], plan: Plan) -> list[float]:
 
 
 def _label_lines(r: Rung, left: float) -> list[str]:
-    """The label of a rung in lines that fit beside it; what three lines cannot hold is cut."""
+    """The label of a rung in lines that fit beside it; what four lines cannot hold is cut."""
     most = max(12, int((left - 8) / (LETTER * (1.08 if r.kind == "advised" else 1))))
     lines = wrapped(r.label, most)
-    return lines if len(lines) <= 3 else [*lines[:2], f"{lines[2][: most - 1].rstrip()}…"]
+    return lines if len(lines) <= 4 else [*lines[:3], f"{lines[3][: most - 1].rstrip()}…"]
 
 
 def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:

@@ -318,11 +318,8 @@ def _rehearsal(results: Results) -> dict[str, Any]:
 
 def _intervals(results: Results) -> dict[str, Any]:
     joint = tables.joint(results)
-    full = figures.ladder(results, None)
-    short = figures.ladder(results)
-    whole = full is not None and short is not None and len(full.table.rows) > len(short.table.rows)
     return {
-        "full_ladder": _plate(full) if full is not None and whole else None,
+        "ladders": [_plate(p) for p in figures.ladders(results)],
         "interval_tables": [_table(tables.intervals(results, n)) for n in focus_rows(results)],
         "other_tables": [_table(tables.intervals(results, n)) for n in tables.other_rows(results)],
         "joint": _table(joint) if joint else None,

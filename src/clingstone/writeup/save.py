@@ -61,7 +61,7 @@ def plates(results: Results) -> tuple[Plate, ...]:
     drawn = (
         figures.ladder(results),
         figures.share_bar(results),
-        figures.ladder(results, None),
+        *figures.ladders(results),
         rehearsed.plate(results),
         tree(results),
     )
