@@ -21,6 +21,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.evidence.finding import About
 from clingstone.evidence.lagrange import Lagrange
+from clingstone.evidence.local import Pairs, contributions, log_tails, pairs
 from clingstone.evidence.sites import at_sites
 from clingstone.evidence.variogram import Bins
 from clingstone.maths import reml, sar
@@ -317,3 +318,59 @@ def test_restricted_likelihood_equals_its_dense_twin() -> None:
     c = float(r @ Vi @ r)
     twin = np.linalg.slogdet(V)[1] + np.linalg.slogdet(G)[1] + reml.profiled(np.array([c]), 46)[0]
     assert profile.criterion(lam, 46, True)[0] == pytest.approx(twin, rel=1e-10)
+
+
+# spdep: localmoran.exact(lm(CRIME ~ INC + HOVAL), nb = queen, style = "W"): n·contribution, exact two-sided p,
+# expectation and variance under independence, of places 1, 2, 3, 21, 34 and 49
+LOCAL = {
+    1: (-0.0126787461838462, 0.9484156409026965, -0.00792109050553204, 0.435650559232062),
+    2: (0.2500902412035614, 0.4442507421344125, -0.01252598606165255, 0.313520385171467),
+    3: (0.1818370600346382, 0.4922534278084262, -0.01214586977987153, 0.235318410337804),
+    21: (-0.3725894970191609, 0.3647849834802870, -0.02576296811905721, 0.325474321381162),
+    34: (0.9068891007167126, 0.0560433668205662, -0.03386207412583546, 0.223074808606134),
+    49: (0.5355452179480452, 0.2127439604176105, -0.02914693430888889, 0.320347517866838),
+}
+
+
+def local_of(name: str, kind: str) -> tuple[Array, Array, Pairs, Design]:
+    """n·contribution and two-sided p of every place in the order of the rows, with their law."""
+    made, y = case(name, kind)
+    one = at_sites(Response.of(made, y))
+    law, t = pairs(one.design, kind), contributions(one, kind)
+    lower, upper = log_tails(law.low[:, None], law.high[:, None], one.design.m, t)
+    place = made.spatial.part.codes  # type: ignore[union-attr]
+    p = 2 * np.exp(np.minimum(lower, upper))
+    return made.n * t[place, 0], p[place, 0], Pairs(law.low[place], law.high[place]), one.design
+
+
+def test_local_contributions_have_the_exact_law_of_spdep() -> None:
+    value, p, law, made = local_of("columbus", "queen")
+    n, m = made.n, made.m
+    # T = z'Sz/z'z with two eigenvalues a, b: E T = (a + b)/m, E T² = (3a² + 3b² + 2ab)/(m(m + 2))
+    mean = (law.low + law.high) / m
+    square = (2 * (law.low**2 + law.high**2) + (law.low + law.high) ** 2) / (m * (m + 2))
+    for place, (I, tail, expected, variance) in LOCAL.items():
+        assert value[place - 1] == pytest.approx(I, rel=1e-10)
+        assert p[place - 1] == pytest.approx(tail, rel=1e-8)
+        assert n * mean[place - 1] == pytest.approx(expected, rel=1e-10)
+        assert n**2 * (square - mean**2)[place - 1] == pytest.approx(variance, rel=1e-10)
+
+
+def test_local_contributions_are_esdas_but_their_law_is_not() -> None:
+    """esda.Moran_Local(residuals) and spdep::localmoran(residuals) know nothing of the fitted mean.
+
+    Their statistic is ours; their moments are those of exchangeable values (for spdep, E and variance of
+    place 34: −0.0285719804632, 0.318303839814), where least squares leaves other ones.
+    """
+    esda = pytest.importorskip("esda")
+    from libpysal import weights as lib
+
+    g, (_, y, x, _) = frame("columbus"), DATA["columbus"]
+    X = np.column_stack([np.ones(49), g[list(x)].to_numpy(float)])
+    e = g[y].to_numpy() - X @ np.linalg.lstsq(X, g[y].to_numpy(), rcond=None)[0]
+    w = lib.Queen.from_dataframe(g, use_index=False)
+    theirs = esda.Moran_Local(e, w, transformation="r", permutations=0)
+    value, _, law, made = local_of("columbus", "queen")
+    np.testing.assert_allclose(value * 48 / 49, theirs.Is, rtol=1e-9)  # esda divides by n − 1
+    ours = 49 * (law.low + law.high) / made.m
+    assert abs(ours[33] + 0.0285719804632) > 0.005
