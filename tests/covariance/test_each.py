@@ -10,6 +10,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.maths.curvature import slopes
 from clingstone.maths.eachdf import KenwardEach, SlopesEach, fai_cornelius_each, slopes_each
+from clingstone.maths.expected import intercepts
 from clingstone.maths.groups import expected_information
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.markov import correlation
@@ -146,7 +147,7 @@ def test_kenward_and_roger_of_every_column_is_that_of_one():
     size, code, count = np.unique(c, return_inverse=True, return_counts=True)
     products = np.stack([sums[code == d].T @ sums[code == d] for d in range(len(size))])
     s2, tau2 = np.array([1.0, 2.0, 0.7]), np.array([0.0, 0.3, 4.0])
-    got = KenwardEach.of(26, size, count.astype(float), products, s2, tau2)
+    got = KenwardEach.of(intercepts(26, size, count.astype(float), products, s2, tau2))
     L = np.eye(3)[:, :2]
     for b in range(3):
         seen = expected_information(26, c, sums, float(s2[b]), float(tau2[b]))

@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from clingstone.maths import reml, slopes
+from clingstone.maths import expected, reml, slopes
 from clingstone.maths.basis import Gram
 from clingstone.maths.partition import Partition
 
@@ -86,7 +86,7 @@ def test_expected_information_equals_dense_traces():
     C = np.moveaxis(sums(PART, U[:, :2], U[:, :2]), -1, 0)
     H = np.moveaxis(sums(PART, U[:, :2], Q), -1, 0)
     directions = np.array([[[1, 0], [0, 0]], [[0, 0], [0, 1]], [[0, 1], [1, 0]]], float)
-    found = slopes.expected(N, C, H, sigma2, gamma, directions)
+    found = expected.block(N, C, H, sigma2, gamma, directions)
     V = sigma2 * (np.eye(N) + dense(PART, U[:, :2], L2))
     same = PART.codes[:, None] == PART.codes
     D = [np.eye(N), *(same * (U[:, :2] @ d @ U[:, :2].T) for d in directions)]

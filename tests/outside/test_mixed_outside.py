@@ -13,11 +13,10 @@ import pytest
 
 from clingstone.case import Case
 from clingstone.covariance.fits import Fits
-from clingstone.covariance.information import ingredients
 from clingstone.evidence.finding import About
 from clingstone.evidence.grouplm import scores
 from clingstone.evidence.restricted import RestrictedLR, null_draws
-from clingstone.maths.kenward import Kenward
+from clingstone.remedies import remedy
 from clingstone.remedies.mixed import MixedSlope
 from clingstone.remedies.mixedrobust import MixedRobust
 from clingstone.remedies.refit import refit
@@ -127,6 +126,14 @@ def test_kenward_roger_and_satterthwaite_equal_pbkrtest_and_lmertest(name):
 
 # ---- nested and crossed: Kenward–Roger of several levels ----
 
+
+def some(name, step, out):
+    """lme4's data with a covariate, every row whose number leaves this rest left out."""
+    d = data("lme4", name)
+    i = np.arange(1, len(d) + 1)
+    return d.assign(x=(37 * i) % 11)[i % step != out]
+
+
 SEVERAL = {
     # lmer(strength ~ 1 + (1 | batch) + (1 | sample))
     "Pastes": (
@@ -146,35 +153,35 @@ SEVERAL = {
         (2.48583033913675, 2.17697541703576, 2.17697541703575),
         (8.52169779677504, 9.9999999999992, 9.99999999999917),
     ),
+    # Rows left out, and x = (37 i) mod 11 for the i-th row: lmer(strength ~ x + (1 | batch) + (1 | sample))
+    "Pastes, unbalanced": (
+        lambda: fits(some("Pastes", 7, 3), "strength ~ x", group="batch/cask"),
+        (0.7328626704740593, 0.0414672296055243),
+        (10.6498448211585, 20.7989411091678),
+    ),
+    # lmer(diameter ~ x + (1 | plate) + (1 | sample))
+    "Penicillin, unbalanced": (
+        lambda: fits(some("Penicillin", 5, 2), "diameter ~ x", group=["plate", "sample"]),
+        (0.8215519366120168, 0.0159111875925907),
+        (5.61307620698072, 86.3186645426055),
+    ),
 }
 
 
 @pytest.mark.parametrize("name", SEVERAL)
 def test_kenward_roger_of_levels_fitted_together_equals_pbkrtest(name):
     make, se, df = SEVERAL[name]
-    f = make()
-    node = f.full_node
-    model = f[node]
-    seen = ingredients(f.algebra(node), model.theta[:, 0], float(model.sigma2[0]))
-    assert seen is not None
-    kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
-    W = f.design.basis.contrast(np.eye(f.design.p))
-    np.testing.assert_allclose(np.sqrt(np.diag(W.T @ kr.adjusted @ W)), se, rtol=1e-5)
-    np.testing.assert_allclose([kr.df(w) for w in W.T], df, rtol=1e-4)
+    found = refit(remedy("mixed-intercept"), "", make())
+    assert {row.df_rule for row in found.intervals} == {"Kenward–Roger"}
+    np.testing.assert_allclose([row.se for row in found.intervals], se, rtol=1e-5)
+    np.testing.assert_allclose([row.df for row in found.intervals], df, rtol=1e-4)
 
 
 def test_joint_test_of_machines_equals_pbkrtest():
     # KRmodcomp: F 20.5760840748637 on 2 and 9.99999999999948.
-    f = SEVERAL["Machines"][0]()
-    model = f[f.full_node]
-    seen = ingredients(f.algebra(f.full_node), model.theta[:, 0], float(model.sigma2[0]))
-    kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
-    L = f.design.basis.contrast(np.eye(3))[:, 1:]
-    effect = L.T @ f.response.coef[:, 0]  # balanced: generalised equals ordinary least squares
-    scale, df2 = kr.joint(L)
-    F = scale * float(effect @ np.linalg.solve(L.T @ kr.adjusted @ L, effect)) / 2
-    assert pytest.approx(20.5760840748637, rel=1e-4) == F
-    assert df2 == pytest.approx(9.99999999999948, rel=1e-4)
+    (found,) = refit(remedy("mixed-intercept"), "", SEVERAL["Machines"][0]()).terms
+    assert pytest.approx(20.5760840748637, rel=1e-4) == found.F
+    assert found.df2 == pytest.approx(9.99999999999948, rel=1e-4)
 
 
 # ---- restricted likelihood ratio: exactRLRT(m, mA, m0, nsim = 500000) ----

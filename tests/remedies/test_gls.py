@@ -7,6 +7,7 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from clingstone.covariance import information
 from clingstone.design.design import Contrast, Term
 from clingstone.needs import NotSupported
 from clingstone.remedies import explain, refit, remedy
@@ -142,12 +143,76 @@ def test_nested_levels_are_fitted_together_by_default():
     run = fits(of, y)
     result = refit(MIXED, "", run)
     assert result.name == "random intercept of district and district/ward"
-    assert result.get("x1").df_rule == "Satterthwaite"
+    assert result.get("x1").df_rule == "Kenward–Roger"
+    plain = refit(replace(MIXED, df="satterthwaite"), "", run)
     node = {"group:district", "group:district/ward"}
     beta, covariance = gls_twin(X, y, run.algebra(node).dense(run[node].theta[:, 0]))
-    assert [r.se for r in result.intervals] == pytest.approx(np.sqrt(np.diag(covariance)), rel=1e-7)
+    assert [r.se for r in plain.intervals] == pytest.approx(np.sqrt(np.diag(covariance)), rel=1e-7)
     assert result.estimate == pytest.approx(beta)
     assert refit(MIXED, "district", run).get("x1").df_rule == "Kenward–Roger"
+
+
+def several(seed=8):
+    """Unequal wards in unequal districts, a covariate by ward and one by row."""
+    rng = np.random.default_rng(seed)
+    ward = np.repeat(np.arange(13), rng.integers(2, 6, 13))
+    district = np.repeat(np.arange(5), [1, 2, 4, 3, 3])[ward]
+    X = np.column_stack([np.ones(len(ward)), rng.normal(size=len(ward)), rng.normal(size=13)[ward]])
+    return X, ward, district, rng
+
+
+def test_kenward_roger_of_nested_levels_follows_the_paper_with_dense_arrays():
+    X, ward, district, rng = several()
+    y = rng.normal(size=5)[district] + rng.normal(size=13)[ward] + rng.normal(size=len(ward))
+    run = fits(design(X, group=ward, outer=district), y)
+    found = refit(MIXED, "", run)
+    model = run[("group:district", "group:district/ward")]
+    parts = [np.eye(len(y)), *((g[:, None] == g).astype(float) for g in (district, ward))]
+    sizes = [model.variances[k][0] for k in ("row", "group:district", "group:district/ward")]
+    Vi = np.linalg.inv(sum(v * D for v, D in zip(sizes, parts, strict=True)))
+    phi = np.linalg.inv(X.T @ Vi @ X)
+    M = Vi - Vi @ X @ phi @ X.T @ Vi
+    W = np.linalg.inv([[np.trace(M @ a @ M @ b) / 2 for b in parts] for a in parts])
+    P = [-X.T @ Vi @ a @ Vi @ X for a in parts]
+    inner = sum(
+        W[i, j] * (X.T @ Vi @ a @ Vi @ b @ Vi @ X - P[i] @ phi @ P[j])
+        for i, a in enumerate(parts)
+        for j, b in enumerate(parts)
+    )
+    adjusted = phi + 2 * phi @ inner @ phi
+    assert found.covariance == pytest.approx(adjusted, rel=1e-6)
+    for k, row in enumerate(found.intervals):
+        g = np.array([(phi @ p @ phi)[k, k] for p in P]) / phi[k, k]
+        assert row.df == pytest.approx(2 / (g @ W @ g), rel=1e-6)
+
+
+def test_many_columns_of_nested_levels_are_read_as_one_by_one():
+    X, ward, district, rng = several(9)
+    n, share = len(ward), np.linspace(0, 1, 6)
+    Y = rng.normal(size=(n, 6)) + share * rng.normal(size=(13, 6))[ward]
+    Y += share[::-1] * rng.normal(size=(5, 6))[district]
+    terms = (Term("constant", (0,), "constant"), Term("pair", (1, 2), "factor"))
+    of = design(X, group=ward, outer=district, terms=terms)
+    chosen = replace(MIXED, at=f"district{TOGETHER}district/ward")
+    found = chosen.prepare(of, None).fit(fits(of, Y))
+    assert 0 < np.count_nonzero(found.boundary) < 6
+    for b in range(6):
+        one = refit(MIXED, "", fits(of, Y[:, b]))
+        assert bool(found.boundary[b]) == one.boundary
+        for j, row in enumerate(one.intervals):
+            got = [found.estimate[j, b], found.se[j, b], found.df[j, b]]
+            assert got == pytest.approx([row.estimate, row.se, row.df], rel=1e-4, abs=1e-6)
+        F, _, df2, _ = found.joint["pair"]
+        assert (F[b], df2[b]) == pytest.approx((one.terms[0].F, one.terms[0].df2), rel=1e-4)
+
+
+def test_too_many_cells_in_one_block_take_satterthwaite_and_say_so(monkeypatch):
+    monkeypatch.setattr(information, "WORK", 100)
+    X, ward, district, rng = several()
+    run = fits(design(X, group=ward, outer=district), X[:, 1] + rng.normal(size=len(ward)))
+    found = refit(MIXED, "", run)
+    assert {row.df_rule for row in found.intervals} == {"Satterthwaite"}
+    assert "too many groups together" in found.notes[0]
 
 
 def test_sites_with_repeats_take_their_own_intercept_along():

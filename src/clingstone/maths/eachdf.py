@@ -1,7 +1,7 @@
 """Small-sample inference for many columns of y at once, each at its own covariance parameters.
 
 The same formulas as ``curvature`` (Satterthwaite, observed information by differences) and ``kenward``
-(Kenward & Roger 1997, expected information, one level of intercepts), a column per leading index K.
+(Kenward & Roger 1997, expected information), a column per leading index K.
 """
 
 from __future__ import annotations
@@ -14,6 +14,7 @@ import numpy.typing as npt
 
 from clingstone.maths.curvature import STEP
 from clingstone.maths.each import Grams
+from clingstone.maths.groups import Expected
 from clingstone.maths.once import Array
 
 Flags = npt.NDArray[np.bool_]
@@ -104,10 +105,7 @@ def slopes_each(grams: Callable[[Array], Grams], theta: Array, free: Sequence[in
 
 @dataclass(frozen=True, eq=False)
 class KenwardEach:
-    """As ``kenward.Kenward`` for one level of intercepts.
-
-    phi, adjusted (K, p, p) · P (2, K, p, p) · W (K, 2, 2).
-    """
+    """As ``kenward.Kenward``, with K columns: phi, adjusted (K, p, p) · P (d, K, p, p) · W (K, d, d)."""
 
     phi: Array
     adjusted: Array
@@ -115,41 +113,17 @@ class KenwardEach:
     W: Array
 
     @classmethod
-    def of(cls, n: int, c: Array, count: Array, products: Array, sigma2: Array, tau2: Array) -> KenwardEach:
-        """From cells put together by size: c (D,) sizes, count (D,), products (D, p, p) Σ t_g t_g'.
-
-        V = σ²I + τ²ZZ' with σ², τ² (K,); see ``groups.expected_information``.
-        """
-        p = products.shape[1]
-        u = sigma2[:, None] + tau2[:, None] * c  # (K, D)
-        flat = products.reshape(len(c), p * p)
-
-        def S(w: Array) -> Array:
-            return np.asarray((w @ flat).reshape(*w.shape[:-1], p, p))
-
-        within = np.eye(p) - S(1 / c)
-        s = sigma2[:, None, None]
-        phi: Array = np.asarray(np.linalg.inv(within / s + S(1 / (c * u))), dtype=float)
-        P = np.stack([-(within / s**2 + S(1 / (c * u**2))), -S(u**-2.0)])
-        Q = {(0, 0): within / s**3 + S(1 / (c * u**3)), (0, 1): S(u**-3.0), (1, 1): S(c / u**3)}
-        cross = (u**-1.0 * c / u) @ count
-        t = {
-            (0, 0): (n - count.sum()) / sigma2**2 + u**-2.0 @ count,
-            (0, 1): cross,
-            (1, 1): (c**2 / u**2) @ count,
-        }
+    def of(cls, seen: Expected) -> KenwardEach:
+        """From the ingredients of K columns. Raises LinAlgError when an information has no inverse."""
+        phi, P, Q = seen.Phi, seen.P, seen.Q
+        W = np.linalg.inv(seen.information)
         PPhi = P @ phi
-        info = np.empty((len(sigma2), 2, 2))
-        for (i, j), trace in t.items():
-            first = np.einsum("kab,kba->k", phi, Q[i, j])
-            second = np.einsum("kab,kba->k", PPhi[i], PPhi[j])
-            info[:, i, j] = info[:, j, i] = (trace - 2 * first + second) / 2
-        W = np.linalg.inv(info)
         inner = np.zeros_like(phi)
-        for i, j in ((0, 0), (0, 1), (1, 1)):
-            part = Q[i, j] - PPhi[i] @ P[j]
-            part = part if i == j else part + part.transpose(0, 2, 1)
-            inner += W[:, i, j, None, None] * part
+        for i in range(len(P)):
+            for j in range(i + 1):
+                part = Q[i, j] - PPhi[i] @ P[j]
+                part = part if i == j else part + part.transpose(0, 2, 1)
+                inner += W[:, i, j, None, None] * part
         adjusted = phi + 2 * phi @ inner @ phi
         return cls(phi, (adjusted + adjusted.transpose(0, 2, 1)) / 2, P, np.asarray(W, dtype=float))
 
@@ -157,7 +131,7 @@ class KenwardEach:
         """(K, k) df of contrasts w, (p, k) shared or (K, p, k) each its own."""
         w = np.broadcast_to(w, (len(self.phi), *w.shape[-2:]))
         u = self.phi @ w
-        g = np.stack([np.einsum("kpc,kpc->kc", u, P @ u) for P in self.P], axis=1)  # (K, 2, k)
+        g = np.stack([np.einsum("kpc,kpc->kc", u, P @ u) for P in self.P], axis=1)  # (K, d, k)
         g /= np.einsum("kpc,kpc->kc", w, u)[:, None]
         return np.asarray(2.0 / np.einsum("kic,kij,kjc->kc", g, self.W, g, optimize=True))
 
@@ -166,7 +140,7 @@ class KenwardEach:
         q = L.shape[1]
         inside = np.einsum("pa,kpq,qb->kab", L, self.phi, L, optimize=True)
         theta = L @ np.linalg.solve(inside, np.broadcast_to(L.T, (len(inside), *L.T.shape)))
-        T = np.stack([theta @ self.phi @ P @ self.phi for P in self.P], axis=1)  # (K, 2, p, p)
+        T = np.stack([theta @ self.phi @ P @ self.phi for P in self.P], axis=1)  # (K, d, p, p)
         trace = np.einsum("kiaa->ki", T)
         A1 = np.einsum("ki,kij,kj->k", trace, self.W, trace)
         A2 = np.einsum("kij,kiab,kjba->k", self.W, T, T, optimize=True)

@@ -19,7 +19,6 @@ from dataclasses import dataclass
 import numpy as np
 
 from clingstone.maths.basis import Gram
-from clingstone.maths.groups import Expected
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.maths.reml import forward
@@ -218,58 +217,6 @@ def parameters(gamma: Array, free: Array, largest: float) -> tuple[Array, Array]
             left = max(left - rows[i, j] ** 2, 0.0)
         rows[i, i] = np.sqrt(left)
     return np.log(variance), z
-
-
-# ---- expected information ----
-
-
-def expected(n: int, C: Array, H: Array, sigma2: float, gamma: Array, E: Array) -> Expected:
-    """Expected REML information and Kenward & Roger's ingredients of V = σ²I + Σ_g Z_gΓZ_g'.
-
-    Parameters are (σ², γ₁ … γ_d) with Γ = Σ γ_kE_k, so V is linear in them. C (G, q, q) = Z_g'Z_g,
-    H (G, q, p) = Z_g'Q, gamma (q, q) on the scale of y, E (d, q, q). A whole table is one cell (G = 1)
-    when Z holds all its intercepts. With R_g = (σ²I + ΓC_g)⁻¹, V⁻¹Z_g = Z_gR_g, and everything follows
-    from C, H and R; O(G q²p²), no array over the rows.
-    """
-    _, q, p = H.shape
-    d = len(E)
-    eye = np.eye(q)
-    R = np.linalg.inv(sigma2 * eye + gamma @ C)
-    F = R @ gamma
-    Rt = np.swapaxes(R, 1, 2)
-    B, B2 = Rt @ H, Rt @ (Rt @ H)  # Z'V⁻¹Q, Z'V⁻²Q
-    A, A2 = C @ R, Rt @ C @ R  # Z'V⁻¹Z, Z'V⁻²Z
-
-    def over(left: Array, middle: Array, right: Array) -> Array:
-        return np.asarray(np.einsum("gqa,gqb->ab", left, middle @ right))
-
-    one = (np.eye(p) - over(H, F, H)) / sigma2
-    two = (one - over(H, F, B)) / sigma2
-    three = (two - over(H, F, B2)) / sigma2
-    Phi = np.asarray(np.linalg.inv(one), dtype=float)
-    EB, EA = [e @ B for e in E], [e @ A for e in E]
-    P = np.stack([-two, *(-np.einsum("gqa,gqb->ab", B, eb) for eb in EB)])
-    Q = np.empty((1 + d, 1 + d, p, p))
-    t = np.empty((1 + d, 1 + d))
-    Q[0, 0] = three
-    FC = F @ C
-    t[0, 0] = (n - 2 * _trace(FC) + float(np.einsum("gij,gji->", FC, FC))) / sigma2**2
-    for i in range(d):
-        Q[0, i + 1] = np.einsum("gqa,gqb->ab", B2, EB[i])
-        Q[i + 1, 0] = Q[0, i + 1].T
-        t[0, i + 1] = t[i + 1, 0] = float(np.einsum("gij,ji->", A2, E[i]))
-        for j in range(d):
-            Q[i + 1, j + 1] = np.einsum("gqa,gqb->ab", EB[i], A @ EB[j])
-            t[i + 1, j + 1] = float(np.einsum("gij,gji->", EA[i], EA[j]))
-    info = np.empty((1 + d, 1 + d))
-    for i in range(1 + d):
-        for j in range(1 + d):
-            info[i, j] = (t[i, j] - 2 * np.trace(Phi @ Q[i, j]) + np.trace(Phi @ P[i] @ Phi @ P[j])) / 2
-    return Expected(info, Phi, P, Q)
-
-
-def _trace(M: Array) -> float:
-    return float(np.einsum("gii->", M))
 
 
 def whiten(part: Partition, W: Array, block: Array) -> Array:

@@ -26,6 +26,8 @@ RULES: dict[Rule, str] = {
 }
 FLAT = "The likelihood is flat in its parameters, so every interval has one degree of freedom."
 
+DEAR = "Satterthwaite's df: too many groups together for Kenward and Roger's."
+
 
 def plain_df(rule: Rule, m: int) -> float | None:
     """The df of the rules that give every row the same, else None."""

@@ -9,17 +9,21 @@ from typing import TYPE_CHECKING, Literal
 import numpy as np
 from scipy import optimize
 
+from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import Component, declared
 from clingstone.covariance.each import each
+from clingstone.covariance.information import affordable, ingredients
 from clingstone.design.derived import absorb
 from clingstone.design.design import Design
 from clingstone.design.response import Response
-from clingstone.maths import curvature, groups, reml
+from clingstone.maths import curvature, reml
 from clingstone.maths.basis import Gram
+from clingstone.maths.groups import Expected
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
+from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
+from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import map_items, map_notes, site_keys
@@ -67,10 +71,14 @@ _SOURCES: dict[Kind, str] = {
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class GlsReady(FittedReady):
-    """A GLS remedy over one design; the error model comes from ``Fits`` at each reading."""
+    """A GLS remedy over one design; the error model comes from ``Fits`` at each reading.
+
+    kenward : whether the df are Kenward and Roger's.
+    """
 
     remedy: Gls
     components: tuple[Component, ...]
+    kenward: bool
 
     def fit(self, fits: Fits) -> Estimates:
         if fits.response.B > 1 and self.remedy.estimation == "REML":
@@ -123,9 +131,8 @@ class GlsReady(FittedReady):
         s2 = float(reml.scale(here, m)[0])
         if (df := plain_df(self.remedy.df, self.design.m)) is not None:
             return Column.even(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), df)
-        if self.kenward:
-            found = algebra.variances(theta[:, None], np.array([s2]))[self.components[0].key]
-            return self._kenward_column(coef, s2, 0.0 if bound.any() else float(found[0]))
+        if self.kenward and (seen := ingredients(algebra, theta, s2)) is not None:
+            return self._kenward_column(coef, seen, bound)
         free = [int(i) for i in np.flatnonzero(~bound)]
         bent = curvature.slopes(gram, theta, free, m, restricted)
         notes: tuple[str, ...] = ()
@@ -133,36 +140,29 @@ class GlsReady(FittedReady):
             bent, notes = self._expected(fits, algebra, theta, free, s2, m, restricted, gram)
         return Column.bent(coef, bent, notes if bent.sound else (FLAT,))
 
-    @property
-    def kenward(self) -> bool:
-        """Whether the df are Kenward and Roger's: one group level by REML."""
-        one = len(self.components) == 1 and self.components[0].family == "group"
-        return self.remedy.df == "kenward-roger" and one and self.remedy.estimation == "REML"
-
-    def _kenward_column(self, coef: Array, s2: float, tau2: float) -> Column:
-        level = self.design.partitions[self.components[0].part]
-        seen = groups.expected_information(
-            self.design.n, self.design.sizes(level), self.design.sums(level), s2, tau2
-        )
+    def _kenward_column(self, coef: Array, seen: Expected, bound: Flags) -> Column:
         kr = Kenward.of(seen.Phi, seen.P, seen.Q, seen.information)
-        # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
-        phi = kr.adjusted if tau2 > 0 else kr.phi
-        if tau2 > 0:
-            return Column.kenward(coef, phi, kr, self.design.m)
-        return Column(coef, phi, lambda w: float(self.at_zero(np.array([kr.df(w)]), w[:, None])[0]), kr.joint)
+        if not bound.any():
+            return Column.kenward(coef, kr.adjusted, kr, self.design.m)
 
-    def at_zero(self, found: Array, W: Array) -> Array:
-        """(k,) or (B, k) df where the variance between groups is zero, from those of Kenward and Roger.
+        # At a variance of zero the adjustment would treat the bound as an ordinary estimate: Φ is kept.
+        def df(w: Array) -> float:
+            return float(self.at_zero(np.array([kr.df(w)]), w[:, None], bound)[0])
+
+        return Column(coef, kr.phi, df, kr.joint)
+
+    def at_zero(self, found: Array, W: Array, bound: Flags) -> Array:
+        """(k,) or (B, k) df where variances between groups are zero, from those of Kenward and Roger.
 
         At a bound they lean on a curvature that says little, and can fall to one: they are kept between
         4 and the df of groups, those of the parts of each row W (p, k) between and within groups, each with
-        the df of its own mean square (Satterthwaite 1946).
+        the df of its own mean square (Satterthwaite 1946). bound (d,) : which levels; the fewest df count.
         """
-        most = self._of_groups(W)
+        held = [one for one, out in zip(self.components, bound, strict=True) if out]
+        most = np.min([self._of_groups(self.design.partitions[one.part], W) for one in held], axis=0)
         return np.asarray(np.clip(found, np.minimum(self.remedy.limits.df_floor, most), most))
 
-    def _of_groups(self, W: Array) -> Array:
-        part = self.design.partitions[self.components[0].part]
+    def _of_groups(self, part: Partition, W: Array) -> Array:
         inner = absorb(self.design, part)[0].p
         df1, df2 = part.count + inner - self.design.p, self.design.n - part.count - inner
         if df1 < 1 or df2 < 1:
@@ -197,8 +197,8 @@ class GlsReady(FittedReady):
 class Gls:
     """Generalised least squares with REML error parameters, one remedy for every error model.
 
-    kind : which structures are fitted. df : Kenward-Roger holds for one group level; every other model
-    takes Satterthwaite's df. estimation : REML, or ML to show what it would give.
+    kind : which structures are fitted. df : Kenward-Roger holds for group levels, one or several; every
+    other model takes Satterthwaite's df. estimation : REML, or ML to show what it would give.
     """
 
     id: Kind = "mixed-intercept"
@@ -285,9 +285,18 @@ class Gls:
         found, _ = declared(design, self.limits)
         components = tuple(found[key] for key in self.keys(design))
         names, W = reported(design)
-        kenward = len(components) == 1 and components[0].family == "group" and self.estimation == "REML"
+        asked = self.df == "kenward-roger" and self.estimation == "REML"
+        kenward = asked and self._affordable(design, components)
         rule = "satterthwaite" if self.df == "kenward-roger" and not kenward else self.df
-        return GlsReady(design, names, W, RULES[rule], remedy=self, components=components)
+        notes = (DEAR,) if asked and not kenward else ()
+        return GlsReady(
+            design, names, W, RULES[rule], notes=notes, remedy=self, components=components, kenward=kenward
+        )
+
+    def _affordable(self, design: Design, components: tuple[Component, ...]) -> bool:
+        return all(c.family == "group" for c in components) and affordable(
+            choose(design, components, self.limits)
+        )
 
     def conventions(self) -> tuple[tuple[str, Remedy], ...]:
         out: list[tuple[str, Remedy]] = []

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING, Protocol
 import numpy as np
 
 from clingstone.covariance.each import Each
+from clingstone.covariance.information import ingredients_each
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
@@ -38,7 +39,7 @@ class Reading(Protocol):
     @property
     def kenward(self) -> bool: ...
 
-    def at_zero(self, found: Array, W: Array) -> Array: ...
+    def at_zero(self, found: Array, W: Array, bound: Flags) -> Array: ...
 
     def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column: ...
 
@@ -87,14 +88,16 @@ def read_each(ready: Reading, rule: Rule, fits: Fits, many: Each) -> Estimates:
 
 
 def _kenward(ready: Reading, many: Each, found: Minima, s2: Array, read: _Columns) -> None:
-    piece = many.algebra.chain[0]
-    classes = many.algebra._classes(piece.part, many.response)
-    bound = found.at_bound[0]
-    ratio = np.where(bound, 0.0, piece.variance(many.algebra.own(piece, found.theta)))
-    kr = KenwardEach.of(ready.design.n, classes.c, classes.count.astype(float), classes.QQ, s2, ratio * s2)
+    seen = ingredients_each(many.algebra, found.theta, s2)
+    assert seen is not None
+    kr = KenwardEach.of(seen)
+    bound = np.logical_or.reduce(found.at_bound, axis=0)
     read.phi[:] = np.where(bound[:, None, None], kr.phi, kr.adjusted)
-    read.df[:] = np.clip(kr.df(ready.W), 1.0, float(ready.design.m)).T
-    read.df[:, bound] = ready.at_zero(kr.df(ready.W)[bound], ready.W).T
+    df = kr.df(ready.W)
+    read.df[:] = np.clip(df, 1.0, float(ready.design.m)).T
+    for pattern in np.unique(found.at_bound[:, bound], axis=1).T:
+        here = np.all(found.at_bound == pattern[:, None], axis=0)
+        read.df[:, here] = ready.at_zero(df[here], ready.W, pattern).T
     for term in multi(ready.design):
         scale, df2 = kr.joint(ready.W[:, list(term.columns)])
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2

@@ -9,7 +9,7 @@ import numpy as np
 
 from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import declared, on_request, slope_key
-from clingstone.covariance.information import ingredients
+from clingstone.covariance.information import affordable, ingredients
 from clingstone.design.design import Design, rows_of
 from clingstone.design.response import Response
 from clingstone.display import MINUS, listed
@@ -18,7 +18,7 @@ from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.columns import FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
+from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
 
@@ -68,8 +68,7 @@ class SlopeReady(FittedReady):
         bent = curvature.slopes(lambda at: algebra.gram(at, y), theta, free, m)
         if not bent.sound:
             return Column.bent(coef, bent, (FLAT,))
-        note = "" if self.remedy.df == "satterthwaite" else "Satterthwaite's df: too many groups for others."
-        return Column.bent(coef, bent, (note,) if note else ())
+        return Column.bent(coef, bent)
 
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
@@ -155,9 +154,11 @@ class MixedSlope(Plain):
         positive_m(design)
         found, _ = declared(design, self.limits)
         together = [found.get(k) or on_request(design, k, self.limits) for k in self.keys(design)]
-        choose(design, together, self.limits)  # refuses what cannot be fitted together
+        algebra = choose(design, together, self.limits)  # refuses what cannot be fitted together
         names, W = reported(design)
-        return SlopeReady(design, names, W, RULES[self.df], remedy=self)
+        dear = self.df == "kenward-roger" and not affordable(algebra)
+        rule = RULES["satterthwaite" if dear else self.df]
+        return SlopeReady(design, names, W, rule, notes=(DEAR,) if dear else (), remedy=self)
 
     def conventions(self) -> tuple[tuple[str, MixedSlope], ...]:
         return (
