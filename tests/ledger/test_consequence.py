@@ -45,7 +45,9 @@ def test_factors_equal_the_dense_sandwich(case):
     true = np.diag(bread @ X.T @ V @ X @ bread)
     M = np.eye(d.n) - d.Q @ d.Q.T
     believed = np.trace(M @ V) / d.m * np.diag(bread)
-    np.testing.assert_allclose(p.factor()[:, 0], np.sqrt(true / believed), rtol=1e-8)
+    # A series is read off a spline through the grid of its parameter.
+    near = 1e-6 if "serial" in f.full_node else 1e-8
+    np.testing.assert_allclose(p.factor()[:, 0], np.sqrt(true / believed), rtol=near)
 
 
 @pytest.mark.parametrize("case", [panel, wells])

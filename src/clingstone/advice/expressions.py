@@ -9,7 +9,7 @@ from typing import Any
 import numpy as np
 import numpy.typing as npt
 
-Booleans = npt.NDArray[np.bool_]
+Booleans = np.bool_ | npt.NDArray[np.bool_]
 
 
 class Expression:
@@ -47,7 +47,7 @@ class Compared(Expression):
 
     def read(self, facts: Mapping[str, Any]) -> Booleans:
         value = _value(facts, self.name)
-        return np.asarray(False if value is None else _SIGNS[self.sign](value, self.number))
+        return np.bool_(False) if value is None else _SIGNS[self.sign](value, self.number)
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -65,7 +65,7 @@ class Fact(Expression):
 
     def read(self, facts: Mapping[str, Any]) -> Booleans:
         value = _value(facts, self.name)
-        return np.asarray(False if value is None else np.asarray(value) == 1)
+        return np.bool_(False) if value is None else np.equal(value, 1)
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -94,8 +94,11 @@ class Joined(Expression):
     word: str
 
     def read(self, facts: Mapping[str, Any]) -> Booleans:
-        a, b = self.left.read(facts), self.right.read(facts)
-        return np.asarray(a & b if self.word == "and" else a | b)
+        a = self.left.read(facts)
+        if bool(np.all(a if self.word == "or" else ~a)):
+            return a  # the other side cannot change it, and may be dear to know
+        b = self.right.read(facts)
+        return a & b if self.word == "and" else a | b
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -114,7 +117,7 @@ class Negated(Expression):
     inner: Expression
 
     def read(self, facts: Mapping[str, Any]) -> Booleans:
-        return np.asarray(~self.inner.read(facts))
+        return ~self.inner.read(facts)
 
     @property
     def names(self) -> tuple[str, ...]:
@@ -137,11 +140,11 @@ _SIGNS: dict[str, Callable[[Any, float], Any]] = {
 }
 
 
-def _value(facts: Mapping[str, Any], name: str) -> npt.NDArray[np.float64] | None:
+def _value(facts: Mapping[str, Any], name: str) -> float | npt.NDArray[np.float64] | None:
     """The value as numbers, or None where the fact is not known; words cannot be compared."""
     if name not in facts:
         return None
     value = facts[name].value
     if isinstance(value, str):
         raise TypeError(f"the fact {name!r} is a word ({value!r}) and cannot be compared")
-    return np.asarray(value, dtype=float)
+    return value if isinstance(value, float | int) else np.asarray(value, dtype=float)

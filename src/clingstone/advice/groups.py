@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import itertools
 import math
+from functools import partial
 
 import numpy as np
 from scipy import stats
@@ -16,7 +17,7 @@ from clingstone.design.design import Design, Term, rows_of
 from clingstone.display import percent
 from clingstone.evidence.mean import f_test_given
 from clingstone.ledger.ledger import Ledger, focus_terms
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
 from clingstone.remedies.gls import TOGETHER
@@ -136,8 +137,11 @@ def columns(design: Design, term: Term) -> Array:
 
 
 def _constant(design: Design, term: Term, part: Partition) -> bool:
-    X = columns(design, term)
-    return bool(np.all(np.abs(X - X[part.first][part.codes]) <= 1e-9 * (np.abs(X).max() + 1e-300)))
+    def found() -> bool:
+        X = columns(design, term)
+        return bool(np.all(np.abs(X - X[part.first][part.codes]) <= 1e-9 * (np.abs(X).max() + 1e-300)))
+
+    return kept(design, ("constant", term.name, part.key), found)
 
 
 def effective_clusters(design: Design, part: Partition, weights: Array, icc: float) -> float:
@@ -145,9 +149,7 @@ def effective_clusters(design: Design, part: Partition, weights: Array, icc: flo
 
     Γ is the squared coefficient of variation over groups of γ_g = (1−ρ)w'Q_g'Q_gw + ρ(w'Q_g'1)².
     """
-    w = design.basis.contrast(weights)
-    inside = np.einsum("p,gpq,q->g", w, design.scores(part), w)
-    between = (design.sums(part) @ w) ** 2
+    inside, between = _information(design, part, weights)
     gamma = (1 - icc) * inside + icc * between
     mean = gamma.mean()
     if not mean > 0:
@@ -155,14 +157,24 @@ def effective_clusters(design: Design, part: Partition, weights: Array, icc: flo
     return float(part.count / (1 + np.mean((gamma - mean) ** 2) / mean**2))
 
 
+def _information(design: Design, part: Partition, weights: Array) -> tuple[Array, Array]:
+    """w'Q_g'Q_gw and (w'Q_g'1)² of every group, (G,) each."""
+
+    def found() -> tuple[Array, Array]:
+        w = design.basis.contrast(weights)
+        inside = np.einsum("p,gpq,q->g", w, design.scores(part), w)
+        return inside, (design.sums(part) @ w) ** 2
+
+    return kept(design, ("information", part.key, weights.tobytes()), found)
+
+
 def _effective(design: Design, part: Partition, focus: tuple[Term, ...], icc: float) -> list[Fact]:
     eye = np.eye(design.p)
     found: list[tuple[float, str]] = []
     heavy: list[tuple[float, str]] = []
     for j in (j for t in focus for j in t.columns):
-        w = design.basis.contrast(eye[j])
         found.append((effective_clusters(design, part, eye[j], icc), design.names[j]))
-        inside = np.einsum("p,gpq,q->g", w, design.scores(part), w)
+        inside, _ = _information(design, part, eye[j])
         heavy.append((float(inside.max() / inside.sum()), design.names[j]))
     if not found:
         return []
@@ -203,23 +215,29 @@ def _between(fits: Fits, part: Partition, focus: tuple[Term, ...], key: str) -> 
     """
     if key not in fits.components or fits.design.p >= part.count - 2:
         return []
-    design = fits.design
     least: tuple[float, str] | None = None
+    whole, b = fits.whole or (fits, 0)
     for term in focus:
-        if term.kind != "numeric" or len(term.columns) != 1 or _constant(design, term, part):
+        if term.kind != "numeric" or len(term.columns) != 1 or _constant(fits.design, term, part):
             continue
-        x = columns(design, term)[:, 0]
-        try:
-            wider = extend(design, f"{term.name} between", part.means(x)[part.codes])
-            F, q, _ = f_test_given(fits, wider, frozenset({key}))
-        except NotSupported:
-            continue
-        p = float(stats.f.sf(F[0], q, part.count - wider.p))
-        if least is None or p < least[0]:
-            least = (p, term.name)
+        place = ("group means", part.key, term.name, fits.run.limits)
+        p = kept(whole.response, place, partial(_means, whole, part, term, key))
+        if p is not None and (least is None or p[b] < least[0]):
+            least = (float(p[b]), term.name)
     if least is None:
         return []
     return [
         yes("between differs from within", least[0] < DIFFERS, f"{least[1]}: p = {least[0]:.2g}"),
         words("term that differs", least[1]),
     ]
+
+
+def _means(fits: Fits, part: Partition, term: Term, key: str) -> Array | None:
+    """(B,) p of the group means of one term; None where the model cannot carry them."""
+    x = columns(fits.design, term)[:, 0]
+    try:
+        wider = extend(fits.design, f"{term.name} between", part.means(x)[part.codes])
+        F, q, _ = f_test_given(fits, wider, frozenset({key}))
+    except NotSupported:
+        return None
+    return np.asarray(stats.f.sf(F, q, part.count - wider.p))

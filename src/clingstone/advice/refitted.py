@@ -11,6 +11,16 @@ from clingstone.display import listed, percent
 from clingstone.remedies.remedy import Interval, Refit
 
 ROBUST = "cluster-robust"
+# The refits that a comparison is made from.
+COMPARES = {
+    "df of the robust refit": (ROBUST,),
+    "mixed refit at its bound": (ROBUST, "mixed-intercept"),
+    "robust over mixed standard error": (ROBUST, "mixed-intercept"),
+    "slope model settled": (ROBUST, "mixed-slope"),
+    "another order fits better": ("arma", "ar1"),
+    "robust over ordered standard error": (ROBUST, "joint", "ar1", "car1"),
+    "df of the robust refit over whole series": (ROBUST, "joint", "ar1", "car1"),
+}
 NOTHING = 1e-6  # a share that is estimated at zero
 ANY_SPREAD = (  # let every row, group or time have its own variance
     "heteroscedasticity-robust",
@@ -41,7 +51,7 @@ def focus_rows(fit: Refit, facts: Facts) -> list[Interval]:
 def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     """The facts, and how the robust refit at the level of correction compares with the mixed one."""
     level = facts.word("group level")
-    facts = facts.plus({f.name: f for f in _order(refits)})
+    facts = facts.plus({f.name: f for f in (*_order(refits), *_against_order(facts, refits))})
     robust = find(refits, ROBUST, level) if level else None
     if robust is None:
         return facts
@@ -54,6 +64,20 @@ def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     settled = slope is not None and slope.converged and not slope.boundary
     out.append(yes("slope model settled", settled, "the model with slopes by group has an inner estimate"))
     return facts.plus({f.name: f for f in out})
+
+
+def _against_order(facts: Facts, refits: tuple[Refit, ...]) -> list[Fact]:
+    """The robust refit over groups, or over series without them, against a model of the order in time."""
+    level = facts.word("group level") or facts.word("series level")
+    robust = find(refits, ROBUST, level) if level else None
+    model = next((r for name in ("joint", "ar1", "car1") if (r := find(refits, name)) is not None), None)
+    if robust is None or model is None:
+        return []
+    least = min((row.df for row in focus_rows(robust, facts)), default=0.0)
+    return [
+        *_ratio("robust over ordered standard error", robust, model, facts),
+        named("df of the robust refit over whole series", least),
+    ]
 
 
 def _ratio(name: str, robust: Refit, model: Refit, facts: Facts) -> list[Fact]:
@@ -114,16 +138,22 @@ def advised_facts(
 
 def rehearsed_facts(scores: Scores | None, chosen: Refit | None) -> dict[str, Fact]:
     """What a rehearsal found of the advised refit, and of the best; nothing where it was not rehearsed."""
-    row = scores.get(chosen.remedy, chosen.at) if scores is not None and chosen is not None else None
-    if scores is None or chosen is None or row is None:
+    if chosen is None:
         return {}
+    row = scores.get(chosen.remedy, chosen.at) if scores is not None else None
+    if scores is None or row is None:
+        untried = yes("advised refit not rehearsed", chosen.remedy != "ordinary", "no rehearsal tried it")
+        return {f.name: f for f in (untried, words("name of the advised refit", chosen.name))}
     held = scores.adequate(row.remedy, row.at)
     some = any(scores.adequate(r.remedy, r.at) for r in scores.rows)
     best = max(r.coverage for r in scores.rows)
+    as_fitted = row.fitted >= scores.confidence - 2 * row.mcse - 0.01
     doubt = bool(held) and row.coverage < scores.confidence - 2 * row.mcse
     out = [
         yes("rehearsal leaves a doubt", doubt, f"rehearsed coverage {percent(row.coverage)}"),
         yes("rehearsal fell short", not held, f"rehearsed coverage {percent(row.coverage)}"),
+        yes("held as fitted", as_fitted, f"under the error models fitted: {percent(row.fitted)}"),
+        words("truth of the rehearsed coverage", row.truth),
         yes("no rehearsed remedy held", not some, f"the best held the true value in {percent(best)}"),
         named("rehearsed coverage", row.coverage, text=percent(row.coverage)),
         named("best rehearsed coverage", best, text=percent(best)),

@@ -210,7 +210,7 @@ class Fits:
 
     def onto(self, derived: Design) -> Fits:
         """Fits of the same y over an extended design."""
-        return Fits(onto(self.response, derived), self.run)
+        return Fits(onto(self.response, derived), self.run, depth=self.depth)
 
     # ---- one node -----------------------------------------------------------------------
 

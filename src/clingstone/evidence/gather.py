@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -58,9 +58,30 @@ def gather(fits: Fits, tests: Sequence[Test] = TESTS) -> Evidence:
     primary tests over the structures, and the curve tests under dependence over the covariates; the
     others are exploratory and not adjusted. A refusal becomes a Finding ``not applicable``.
     """
-    columns = read_columns(fits, tests)
-    known = zip(columns.items, columns.p, columns.adjusted, columns.verdict, strict=True)
-    return Evidence(tuple(_finding(fits, item, p, adjusted, code) for item, p, adjusted, code in known))
+    return told(read_columns(fits, tests), fits)
+
+
+def told(columns: Columns, fits: Fits, b: int | None = None) -> Evidence:
+    """What tests read on many columns say of one of them, as Findings.
+
+    fits : of the one column. b : which it is, where the tests were read on others too; no sentences and
+    no figures are made then, and a test that reads only one column at a time is read now.
+    """
+    if b is None:
+        known = zip(columns.items, columns.p, columns.adjusted, columns.verdict, strict=True)
+        return Evidence(tuple(_finding(fits, item, p, adjusted, code) for item, p, adjusted, code in known))
+    out = []
+    for i, item in enumerate(columns.items):
+        p, adjusted = columns.p[i, b : b + 1], columns.adjusted[i, b : b + 1]
+        code = columns.verdict[i, b : b + 1]
+        if item.reading is None and item.test.needs.check(fits.design) is None:
+            item = read_column(fits, item.test, item.about, item.given)
+            p = adjusted = _p(item, 1)
+            code = _codes(fits, item, p)
+        elif item.reading is not None:
+            item = replace(item, reading=item.reading.column(b))
+        out.append(_finding(fits, item, p, adjusted, code, words=False))
+    return Evidence(tuple(out))
 
 
 def read_columns(fits: Fits, tests: Sequence[Test] = TESTS, given: bool | None = None) -> Columns:
@@ -121,7 +142,15 @@ def _codes(fits: Fits, item: Item, p: Array) -> npt.NDArray[np.int8]:
     return verdicts(fits, item.test, item.about, item.reading, p)
 
 
-def _finding(fits: Fits, item: Item, p: Array, adjusted: Array, code: npt.NDArray[np.int8]) -> Finding:
+def _finding(
+    fits: Fits,
+    item: Item,
+    p: Array,
+    adjusted: Array,
+    code: npt.NDArray[np.int8],
+    *,
+    words: bool = True,
+) -> Finding:
     test, about, reading = item.test, item.about, item.reading
     verdict = VERDICTS[int(code[0])]
     held = item.decides or (test.id == "functional-form" and bool(item.given))
@@ -147,14 +176,14 @@ def _finding(fits: Fits, item: Item, p: Array, adjusted: Array, code: npt.NDArra
         n_used=shown.n_used,
         verdict=verdict,
         caveats=shown.caveats,
-        sentence=_sentence(fits, item, nothing),
+        sentence=_sentence(fits, item, nothing) if words else "",
         source=test.source,
         null=test.null,
         given=tuple(sorted(item.given)),
         primary=test.primary and about.primary and not item.given,
-        curve=_curve(fits, item),
+        curve=_curve(fits, item) if words else None,
         rows=shown.rows,
-        more=_more(fits, item),
+        more=_more(fits, item) if words else (),
     )
 
 

@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import special, stats
 
+from clingstone.covariance.each import each
 from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
@@ -117,16 +118,28 @@ def f_test_given(fits: Fits, wide: Design, node: frozenset[str]) -> tuple[Array,
     model, wide_fits = fits[node], fits.onto(wide)
     algebra, response = wide_fits.algebra(node), wide_fits.response
     F = np.full(response.B, np.nan)
-    for b in np.flatnonzero(~degenerate(fits.response)):
+    lost = degenerate(fits.response)
+    many = each(algebra, response) if response.B > 1 and len(model.theta) else None
+    if many is not None:
+        here = np.flatnonzero(~lost)
+        grams = many.grams(model.theta[:, here], here)
+        F[here] = _added_f(grams.QQ, grams.QE, grams.EE, response.coef[:, here].T, q, df2)
+        return F, q, df2
+    for b in np.flatnonzero(~lost):
         one = response.column(int(b)) if response.B > 1 else response
         gram = algebra.gram(model.theta[:, b], one)
-        QE = gram.QE[:, 0]
-        inverse = np.linalg.inv(gram.QQ)
-        coefficients = (one.coef[:, 0] + inverse @ QE)[-q:]
-        scale = (float(gram.EE[0]) - QE @ inverse @ QE) / df2
-        block = np.linalg.solve(inverse[-q:, -q:], coefficients)
-        F[b] = float(coefficients @ block) / q / scale
+        F[b] = _added_f(gram.QQ[None], gram.QE.T, gram.EE, one.coef.T, q, df2)[0]
     return F, q, df2
+
+
+def _added_f(QQ: Array, QE: Array, EE: Array, coef: Array, q: int, df2: int) -> Array:
+    """(K,) F of the last q of p columns; QQ (K, p, p), QE, coef (K, p), EE (K,)."""
+    inverse = np.linalg.inv(QQ)
+    move = np.einsum("kij,kj->ki", inverse, QE)
+    gamma = (coef + move)[:, -q:]
+    scale = (EE - np.einsum("kp,kp->k", QE, move)) / df2
+    block = np.linalg.solve(inverse[:, -q:, -q:], gamma[..., None])[..., 0]
+    return np.asarray(np.einsum("kq,kq->k", gamma, block) / q / scale)
 
 
 def explained(F: Array, q: int, df2: int, confidence: float) -> tuple[Array, Array, Array]:

@@ -9,6 +9,7 @@ from __future__ import annotations
 
 from collections.abc import Mapping
 from dataclasses import dataclass
+from functools import partial
 
 import numpy as np
 from scipy import stats
@@ -22,9 +23,10 @@ from clingstone.display import significant
 from clingstone.evidence.anova import absorbed
 from clingstone.ledger.entries import Inflation, Tipping
 from clingstone.ledger.region import Region
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 from clingstone.remedies.remedy import rows
 
+ALONG = 256  # steps of the grid of a series' parameter at which Q'KQ is worked out where it is needed
 NODES = 17  # values of a shape parameter at which Q'KQ is worked out; linear between them
 
 
@@ -83,9 +85,10 @@ def parts(fits: Fits, region: Region) -> Parts:
 def trace_of(design: Design, key: str) -> float:
     """tr K of one component of unit variance on the basis scale: n, or the total precision weight.
 
-    Weights scale the row noise alone; a serial process is the row noise itself.
+    Weights scale the row noise alone; a serial process is the row noise itself, but for rows that repeat.
     """
-    if key in ("row", "serial") or design.root is None:
+    repeats = design.serial is not None and design.serial.repeats
+    if key == "row" or (key == "serial" and not repeats) or design.root is None:
         return float(design.n)
     return float(np.sum(design.root**2))
 
@@ -101,6 +104,8 @@ def _spreads(design: Design, algebra: Chosen, region: Region, key: str) -> tuple
     shape = _moving(model.shape, key)
     if shape is None:
         return algebra.spread(key, model.theta[:, 0])[None], trace
+    if key == "serial" and len(model.theta[algebra.slices[key]]) == 1:
+        return _along(design, algebra, model.theta, np.abs(shape)), trace
     at = np.log(shape) if key == "spatial" else shape
     if not np.any(np.isfinite(at)):
         return np.eye(p)[None], trace  # of no variance anywhere: K is never used
@@ -111,6 +116,31 @@ def _spreads(design: Design, algebra: Chosen, region: Region, key: str) -> tuple
     for j in range(p * p):
         out[:, j] = np.interp(at, at[chosen], known[:, j])
     return out.reshape(-1, p, p), trace
+
+
+def _along(design: Design, algebra: Chosen, theta: Array, size: Array) -> Array:
+    """(P, p, p) Q'KQ of a series at θ (d, P), by splines through a grid that belongs to the design.
+
+    size (P,) : |ρ|. |ρ|(K − I) is smooth where K itself jumps, between ρ below and above zero.
+    """
+    where = algebra.slices["serial"].start
+    axis = algebra.parameters[where]
+    step = (axis.high - axis.low) / ALONG
+    at = theta[where]
+    first = int(np.clip(np.floor((at.min() - axis.low) / step) - 2, 0, ALONG - 4))
+    last = int(np.clip(np.ceil((at.max() - axis.low) / step) + 2, first + 4, ALONG))
+    eye = np.eye(design.p)
+
+    def node(k: int) -> Array:
+        here = theta[:, 0].copy()
+        here[where] = axis.low + k * step
+        rho = float(np.abs(algebra.shape(here[:, None])["serial.rho"][0]))
+        return np.asarray(rho * (algebra.spread("serial", here) - eye))
+
+    chosen = range(first, last + 1)
+    known = np.array([kept(design, ("spread", axis.name, k), partial(node, k)) for k in chosen])
+    smooth = CubicSpline(axis.low + step * np.arange(first, last + 1), known)(at)
+    return np.asarray(eye + smooth / np.maximum(size, 1e-8)[:, None, None])
 
 
 def _moving(shape: Mapping[str, Array], key: str) -> Array | None:
@@ -164,7 +194,7 @@ def tipping(fits: Fits, keys: tuple[str, ...], focus: tuple[str, ...]) -> tuple[
 def _scan(fits: Fits, key: str) -> tuple[Array, Array, Array]:
     """s (P,), Q'((1−s)I + sK)Q (P, p, p), and tr(M·)/m of each; for a series s is ρ and K = K(ρ)."""
     design, algebra = fits.design, fits.algebra(frozenset({key}))
-    if key == "serial":
+    if key == "serial" and not fits.components[key].repeats:
         bound = algebra.parameters[0]
         theta = np.linspace(bound.low, bound.high, 401)[None]
         rho = np.asarray(algebra.shape(theta)["serial.rho"], dtype=float)
@@ -197,13 +227,15 @@ def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -
     gap = abs(float(w @ fits.response.coef[:, 0])) - t * np.sqrt(
         sigma2 * np.einsum("p,Bpq,q->B", w, mixed, w)
     )
-    parameter = "ρ" if key == "serial" else "intraclass correlation"
+    along = key == "serial" and not component.repeats
+    parameter = "ρ" if along else "intraclass correlation"
     named = f"“{term}”" if ":" in term else term
-    where = f"along {component.label}" if key == "serial" else f"between rows of one {_one(component.label)}"
+    unit = "time" if component.repeats else _one(component.label)
+    where = f"along {component.label}" if along else f"between rows of one {unit}"
     if gap[0] <= 0:
         sentence = f"The ordinary interval of {named} takes in zero without any dependence."
         return Tipping(term, key, parameter, None, sentence)
-    what = "a correlation from one step to the next" if key == "serial" else "an intraclass correlation"
+    what = "a correlation from one step to the next" if along else "an intraclass correlation"
     crossed = np.flatnonzero(gap <= 0)
     if not crossed.size:
         sentence = f"Not even {what} of 0.95 {where} would make the interval of {named} take in zero."

@@ -19,7 +19,7 @@ from clingstone.covariance.each import each
 from clingstone.covariance.fits import ErrorModel, Fits
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.each import Places
+from clingstone.maths.each import Grams, Places
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.search import Flags
 
@@ -62,19 +62,32 @@ def logliks(algebra: Chosen, theta: Array, response: Response, owner: Places) ->
     """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y."""
     many = each(algebra, response) if len(theta) else None
     if many is not None:
+        grams = many.grams(theta, owner)
         try:
-            grams = many.grams(theta, owner)
-            _, c, _ = grams.reduced()
-            value = -0.5 * grams.criterion(response.design.m)
-            return np.where(np.isfinite(value), value, -np.inf), c / response.design.m
+            value, sigma2 = _profiled(grams, response.design.m)
         except np.linalg.LinAlgError:
-            pass  # one of them; each by itself then
+            sound = _positive(grams.QQ)
+            value, sigma2 = np.full(len(owner), -np.inf), np.full(len(owner), np.nan)
+            value[sound], sigma2[sound] = _profiled(grams.only(sound), response.design.m)
+        return np.where(np.isfinite(value), value, -np.inf), sigma2
     out = np.empty((2, theta.shape[1]))
     for b in np.unique(owner):
         column = response if response.B == 1 else response.column(int(b))
         for k in np.flatnonzero(owner == b):
             out[:, k] = np.ravel(_alone(algebra, theta[:, k], column))
     return out[0], out[1]
+
+
+def _profiled(grams: Grams, m: int) -> tuple[Array, Array]:
+    _, c, logdet = grams.reduced()
+    return -0.5 * (grams.logdet + logdet + reml.profiled(c, m)), c / m
+
+
+def _positive(QQ: Array) -> Flags:
+    """(K,) which Q'V⁻¹Q are positive definite: far out V is not, in the numbers at hand."""
+    sound = np.all(np.isfinite(QQ), axis=(1, 2))
+    size = np.linalg.eigvalsh(np.where(sound[:, None, None], QQ, 0.0))
+    return np.asarray(sound & (size[:, 0] > 1e-13 * size[:, -1]))
 
 
 def _alone(algebra: Chosen, theta: Array, response: Response) -> tuple[Array, Array]:

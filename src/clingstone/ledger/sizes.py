@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import numpy as np
-from scipy import stats
+from scipy import special
 
 from clingstone.covariance.fits import Fits
 from clingstone.display import NBSP, significant
@@ -68,9 +68,10 @@ def variance(at: Region, key: str, m: int) -> tuple[float, float, float]:
     low, estimate, high = at.interval(values)
     if not np.isfinite(estimate):
         return low, estimate, high
-    left = np.maximum(stats.chi2.isf(1 - at.confidence, 1) - 2 * (at.model.loglik[0] - at.model.loglik), 0.0)
-    tail = stats.chi2.sf(left, 1) / 2
-    down, up = m / stats.chi2.isf(tail, m), m / stats.chi2.ppf(tail, m)
+    cut = special.chdtri(1, 1 - at.confidence)
+    left = np.maximum(cut - 2 * (at.model.loglik[0] - at.model.loglik), 0.0)
+    tail = special.chdtrc(1, left) / 2
+    down, up = m / special.chdtri(m, tail), m / (2 * special.gammaincinv(m / 2, tail))
     ends = values * np.minimum(down, 1.0), values * np.maximum(up, 1.0)
     least, most = float(np.nanmin(ends[0])), float(np.nanmax(ends[1]))
     if low > 0:

@@ -48,6 +48,10 @@ class Grams:
         logdet = 2 * np.log(np.einsum("kpp->kp", L)).sum(axis=1)
         return delta, c, np.asarray(logdet)
 
+    def only(self, which: Places | Flags) -> Grams:
+        """Those of some columns."""
+        return Grams(self.QQ[which], self.QE[which], self.EE[which], self.logdet[which])
+
     def criterion(self, m: int) -> Array:
         """(K,) −2ℓ_R with σ² profiled out."""
         _, c, logdet = self.reduced()

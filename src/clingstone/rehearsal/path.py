@@ -14,24 +14,16 @@ from typing import NamedTuple
 
 import numpy as np
 
-from clingstone.advice.choose import Advice, settle
-from clingstone.advice.facts import Facts
-from clingstone.advice.facts import facts as gather_facts
-from clingstone.advice.pick import preferred
-from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
-from clingstone.evidence.gather import gather
-from clingstone.ledger.ledger import weigh
-from clingstone.maths.once import Array
-from clingstone.needs import NotSupported
+from clingstone.maths.once import once
+from clingstone.rehearsal.many import Many
 from clingstone.rehearsal.study import Job, Study
 from clingstone.rehearsal.tallies import Chosen, Walk, binomial
 from clingstone.rehearsal.truths import Truth, errors
-from clingstone.remedies import refit, remedy
 from clingstone.remedies.remedy import Refit, rows
 
-CHUNK = 5  # replicates handed out at once: each takes a fraction of a second
+CHUNK = 50  # replicates handed out at once
 
 
 class Step(NamedTuple):
@@ -62,57 +54,31 @@ class Paths:
         E = errors(truth, fits, rng, job.size)
         # The mean of the user's own fit: tests of the mean look along fitted values.
         Y = fits.design.Q @ fits.response.coef[:, :1] + E
-        return tuple(self._walk(Y[:, b : b + 1]) for b in range(job.size))
+        e = fits.design.basis.project(Y)
+        response = Response(fits.design, fits.design.Q.T @ Y, e, np.einsum("ij,ij->j", e, e))
+        many = Many(Fits(response, fits.run, depth="exact"))
+        return tuple(self._step(*many.advised(b)) for b in range(job.size))
 
-    def _walk(self, Y: Array) -> Step:
-        design = self.fits.design
-        e = design.basis.project(Y)
-        fits = Fits(Response(design, design.Q.T @ Y, e, np.einsum("ij,ij->j", e, e)), self.fits.run)
-        evidence = gather(fits)
-        ledger = weigh(fits, evidence)
-        known = gather_facts(fits, evidence, ledger)
-        advice, refits = advised(known, shortlist_for(known, fits), fits)
-        chosen = next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
-        ordinary = next(r for r in refits if r.remedy == "ordinary")
-        truth = self._true
+    def _step(self, chosen: Refit | None, ordinary: Refit) -> Step:
         if chosen is None:
             none = float("nan")
             return Step("", "", (False,) * len(self.terms), (none,) * len(self.terms))
         covered, relative = [], []
         have = {row.term: row for row in chosen.intervals}
+        plain = {row.term: row for row in ordinary.intervals}
         for term in self.terms:
-            row, plain = have.get(term), ordinary.get(term)
-            covered.append(row is not None and row.low <= truth[term] <= row.high)
-            width = float("nan") if row is None else (row.high - row.low) / (plain.high - plain.low)
+            row, base = have.get(term), plain[term]
+            covered.append(row is not None and row.low <= self._true[term] <= row.high)
+            width = float("nan") if row is None else (row.high - row.low) / (base.high - base.low)
             relative.append(width)
         return Step(chosen.remedy, chosen.at, tuple(covered), tuple(relative))
 
     @property
+    @once
     def _true(self) -> Mapping[str, float]:
         names, weights = rows(self.fits.design)
         values = self.fits.design.basis.contrast(weights).T @ self.fits.response.coef[:, 0]
         return dict(zip(names, values.tolist(), strict=True))
-
-
-def advised(known: Facts, shortlist: Shortlist, fits: Fits) -> tuple[Advice, tuple[Refit, ...]]:
-    """The advice by the rules, refitting no more than what the rules name; else every candidate."""
-    ordinary = refit(remedy("ordinary"), "", fits)
-    levels = {(c.remedy, c.at) for c in shortlist.candidates}
-    for _, what, level in preferred(known):
-        name = shortlist.twins.get(what, what)
-        match = next((at for r, at in levels if r == name and level in ("", at)), None)
-        if match is None:
-            continue
-        try:
-            both = (ordinary, refit(remedy(name), match, fits))
-        except NotSupported:
-            continue
-        advice = settle(shortlist, known, both, None)
-        if advice.remedy == name:
-            return advice, both
-        break
-    refits = shortlist.refit(fits)
-    return settle(shortlist, known, refits, None), refits
 
 
 def paths(study: Study) -> Paths:

@@ -11,6 +11,7 @@ from clingstone.design.design import Design
 from clingstone.maths.once import Array
 from clingstone.needs import NotSupported
 from clingstone.remedies.remedy import (
+    Account,
     Convention,
     Estimates,
     Interval,
@@ -79,6 +80,25 @@ def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
         notes=notes + _unjoined(ready, found, design),
         boundary=boundary,
         converged=converged,
+    )
+
+
+def read(remedy: Remedy, ready: Ready, found: Estimates, fits: Fits) -> Refit:
+    """A Refit of one column with nothing but its rows: no account, no joint tests, no notes.
+
+    remedy : set to its level. found : estimates of that column alone.
+    """
+    return Refit(
+        remedy=remedy.id,
+        name=remedy.name,
+        at=remedy.at,
+        covers=tuple(sorted(remedy.covering(fits))),
+        estimand=remedy.estimand,
+        intervals=_intervals(remedy, ready, found, fits),
+        terms=(),
+        account=Account("", "", "", "", ""),
+        boundary=bool(found.boundary[0]) if found.boundary is not None else False,
+        converged=bool(found.converged[0]) if found.converged is not None else True,
     )
 
 

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 import math
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal, Protocol
 
 import numpy as np
@@ -59,6 +59,28 @@ class Estimates:
     notes: tuple[str, ...] = ()  # what only y could tell, one sentence each
     names: tuple[str, ...] = ()  # of the k rows, where they are not those of the design
     ordinary: Array | None = None  # (k, B) ordinary standard errors beside such rows
+
+    def column(self, b: int) -> Estimates:
+        """Those of one column of y, without covariance and joint tests."""
+        pick = slice(b, b + 1)
+
+        def flags(values: Flags | None) -> Flags | None:
+            return None if values is None else values[pick]
+
+        return replace(
+            self,
+            estimate=self.estimate[:, pick],
+            se=self.se[:, pick],
+            df=np.broadcast_to(self.df, self.se.shape)[:, pick],
+            low=self.low[:, pick],
+            high=self.high[:, pick],
+            p=self.p[:, pick],
+            covariance=None,
+            joint={},
+            boundary=flags(self.boundary),
+            converged=flags(self.converged),
+            ordinary=None if self.ordinary is None else self.ordinary[:, pick],
+        )
 
     @classmethod
     def by_t(cls, estimate: Array, se: Array, df: Array, confidence: float) -> Estimates:

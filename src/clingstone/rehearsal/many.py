@@ -1,0 +1,167 @@
+"""Many columns of y examined as the user's own: what is read of all at once, and what is decided of each.
+
+Tests, error models and likelihood regions are read for the whole batch; a column takes its slice, is judged
+and described by the very code that judges the user's data, and asks for refits only where a rule asks for
+them. A refit is made for every column when the first asks. Columns in which the mean comes first, or that
+no rule names a remedy for, go the whole way alone.
+"""
+
+from __future__ import annotations
+
+from collections.abc import Callable, Iterator, Mapping
+from dataclasses import dataclass, field, replace
+
+from clingstone.advice.choose import settle
+from clingstone.advice.facts import Facts
+from clingstone.advice.facts import facts as gather_facts
+from clingstone.advice.named import Fact
+from clingstone.advice.pick import preferred, serves
+from clingstone.advice.refitted import COMPARES, compared
+from clingstone.advice.rules import STATES
+from clingstone.advice.shortlist import Shortlist, shortlist_for
+from clingstone.covariance.each import each
+from clingstone.covariance.fits import Fits
+from clingstone.evidence.gather import Columns, read_columns, told
+from clingstone.ledger.ledger import focus_rows, judged
+from clingstone.maths.once import once
+from clingstone.needs import NotSupported
+from clingstone.remedies import refit, remedy
+from clingstone.remedies.gls import GlsReady
+from clingstone.remedies.linear import LinearReady
+from clingstone.remedies.refit import at as set_at
+from clingstone.remedies.refit import read
+from clingstone.remedies.remedy import Estimates, Ready, Refit, Remedy
+
+Named = tuple[str, str]  # a remedy and its level
+ORDINARY: Named = ("ordinary", "")
+
+
+@dataclass(eq=False)
+class Many:
+    """B columns of y on one design, each examined by the rules alone.
+
+    fits : of all of them, at depth "exact", so that each is fitted as if it were alone.
+    """
+
+    fits: Fits
+    _made: dict[Named, Batch | None] = field(default_factory=dict)
+    _listed: dict[tuple[str, ...], Shortlist] = field(default_factory=dict)
+
+    @property
+    @once
+    def columns(self) -> Columns:
+        return read_columns(self.fits, given=True)
+
+    def advised(self, b: int) -> tuple[Refit | None, Refit]:
+        """The refit that is advised for one column (None for none), and the ordinary one."""
+        fits = self.fits.column(b)
+        evidence = told(self.columns, fits, b)
+        known = gather_facts(fits, evidence, judged(fits, evidence, focus_rows(fits)))
+        state = next((r.then.what for r in STATES if bool(r.when.read(known))), "")
+        ordinary = self.refit(ORDINARY, b, fits)
+        assert ordinary is not None
+        if state == "nothing found":
+            return ordinary, ordinary
+        if state == "not correctable":
+            return None, ordinary
+        found = None if state else self._ruled(known, b, fits)
+        return (alone(known, fits) if found is None else found), ordinary
+
+    def _ruled(self, known: Facts, b: int, fits: Fits) -> Refit | None:
+        """The refit of the first rule that holds whose remedy serves every focus row."""
+        listed = self._shortlist(known, fits)
+        names = [(c.remedy, c.at) for c in listed.candidates]
+
+        def made(what: str, level: str) -> Iterator[Refit]:
+            """Refits of a remedy: at a level, or at every one that is a candidate."""
+            name = listed.twins.get(what, what)
+            for one in names:
+                if one[0] == name and (level in ("", one[1]) or name != what):
+                    found = self.refit(one, b, fits)
+                    if found is not None:
+                        yield found
+
+        asked = replace(known, known=Asked(known, made))
+        for _, what, level in preferred(asked):
+            for found in made(what, level):
+                if serves(found, known):
+                    return found
+        return None
+
+    def _shortlist(self, known: Facts, fits: Fits) -> Shortlist:
+        """The candidates, which hang on y only by the levels at which the rules would correct."""
+        key = tuple(known.word(name) for name in ("group level", "mixed level", "series level"))
+        if key not in self._listed:
+            self._listed[key] = shortlist_for(replace(known, missing=None, after=None), fits)
+        return self._listed[key]
+
+    def refit(self, name: Named, b: int, fits: Fits) -> Refit | None:
+        """One remedy on one column, read for all where it can be; None where it cannot be fitted."""
+        if name not in self._made:
+            self._made[name] = Batch.of(name, self.fits)
+        batch = self._made[name]
+        if batch is not None:
+            return read(batch.remedy, batch.ready, batch.found.column(b), fits)
+        try:
+            return refit(remedy(name[0]), name[1], fits)
+        except NotSupported:
+            return None
+
+
+@dataclass(frozen=True, eq=False)
+class Batch:
+    """A remedy read on every column at once."""
+
+    remedy: Remedy
+    ready: Ready
+    found: Estimates
+
+    @classmethod
+    def of(cls, name: Named, fits: Fits) -> Batch | None:
+        """None where it prepares by the y of each column, or searches column by column."""
+        try:
+            one = set_at(remedy(name[0]), name[1], fits)
+            if one.working(fits) is not None:
+                return None
+            ready = one.prepare(fits.design, None)
+            return cls(one, ready, ready.fit(fits)) if together(ready, fits) else None
+        except NotSupported:
+            return None
+
+
+def together(ready: Ready, fits: Fits) -> bool:
+    """Whether all columns cost little more than one."""
+    if isinstance(ready, GlsReady):
+        return each(fits.algebra(ready.remedy.node(fits)), fits.response) is not None
+    return isinstance(ready, LinearReady) and type(ready).fit is LinearReady.fit
+
+
+class Asked(Mapping[str, Fact]):
+    """Facts of one column, and those that only refits can tell, made when a rule reads them."""
+
+    def __init__(self, known: Facts, made: Callable[[str, str], Iterator[Refit]]) -> None:
+        self.facts, self.made = known, made
+        self.known: dict[str, Fact] = dict(known.known)
+        self.done: set[tuple[str, ...]] = set()
+
+    def __getitem__(self, name: str) -> Fact:
+        needs = COMPARES.get(name)
+        if name not in self.known and needs is not None and needs not in self.done:
+            self.done.add(needs)
+            refits = tuple(found for what in needs for found in self.made(what, ""))
+            self.known |= compared(self.facts, refits).known
+        return self.known[name]
+
+    def __iter__(self) -> Iterator[str]:
+        return iter(self.known)
+
+    def __len__(self) -> int:
+        return len(self.known)
+
+
+def alone(known: Facts, fits: Fits) -> Refit | None:
+    """The advised refit of one column, from every candidate's."""
+    shortlist = shortlist_for(known, fits)
+    refits = shortlist.refit(fits)
+    advice = settle(shortlist, known, refits, None)
+    return next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
