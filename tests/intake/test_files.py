@@ -15,7 +15,7 @@ import shapely
 from hypothesis import given
 from hypothesis import strategies as st
 
-from clingstone.intake import delimited, files
+from clingstone.intake import delimited, files, words
 from clingstone.intake.columns import fingerprint
 from clingstone.intake.frames import of_source
 from clingstone.needs import InputError
@@ -189,14 +189,14 @@ WORDS = (
 
 
 @given(st.lists(st.sampled_from(WORDS), min_size=1, max_size=6), st.integers(0, 3))
-def test_columns_read_as_numbers_at_once_are_those_of_their_text(words: list[str], ahead: int) -> None:
+def test_columns_read_as_numbers_at_once_are_those_of_their_text(given: list[str], ahead: int) -> None:
     """The quick way against the plain one: every word looked at, whatever the first rows promised."""
-    column = ["5"] * (delimited.SAMPLE * min(ahead, 1) + ahead) + words
+    column = ["5"] * (delimited.SAMPLE * min(ahead, 1) + ahead) + given
     content = "v,w\n" + "".join(f"{v},1\n" for v in column)
     text = delimited.look(content.encode(), "t.csv")
     frame, notes = text.read(["v"])
     told: list[str] = []
-    plain = delimited.typed(pd.Series(column, name="v"), ".", told)
+    plain = words.typed(pd.Series(column, name="v"), ".", told)
     assert text.rows == len(column)
     assert sorted(notes) == sorted(told)
     pd.testing.assert_series_equal(frame["v"], plain, check_dtype=False)

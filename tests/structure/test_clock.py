@@ -168,3 +168,13 @@ def test_what_cannot_be_read(values: list[Any], said: str) -> None:
         clock(pd.Series(values, dtype=object) if any(not isinstance(v, str) for v in values[1:]) else values)
     assert str(caught.value).startswith(said)
     assert caught.value.hint
+
+
+def test_day_counts_of_a_spreadsheet_are_dates_where_the_column_says_date() -> None:
+    # 43831 is 2020-01-01 in every spreadsheet that counts from 1900.
+    days = pd.Series([43831, 43862, 43891])
+    clock = read("sample_date", days, np.arange(3))
+    assert [clock.show(i) for i in range(3)] == ["2020-01-01", "2020-02-01", "2020-03-01"]
+    assert clock.units == (("month", 1.0),)
+    assert clock.notes[0] == "sample_date holds day counts of a spreadsheet: 43831 is 2020-01-01."
+    assert read("depth", days, np.arange(3)).counts.tolist() == [43831, 43862, 43891]

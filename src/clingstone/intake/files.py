@@ -11,7 +11,7 @@ from pathlib import Path
 from typing import TYPE_CHECKING
 
 from clingstone.display import count, instead, listed, quoted
-from clingstone.intake import delimited
+from clingstone.intake import delimited, words
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -280,5 +280,5 @@ def _cells(column: pd.Series, notes: list[str]) -> pd.Series:
     if len(kept) and all(isinstance(v, str) for v in kept):
         text = column.where(column.notna(), "").astype(str)
         text.name = column.name
-        return delimited.typed(text, ".", notes)
+        return words.typed(text, ".", notes)
     return column.infer_objects()

@@ -247,7 +247,10 @@ def _geometry(frame: pd.DataFrame) -> _Place:
 def _areas(shapes: Any) -> str:
     """How many shapes and how large, by an equal-area map where the reference system is known."""
     flat = shapes if shapes.crs is None else shapes.to_crs("EPSG:6933")
-    area, unit = np.sort(flat.area.to_numpy()), " square units"
+    with np.errstate(invalid="ignore"):
+        area, unit = np.sort(flat.area.to_numpy()), " square units"
+    if not np.isfinite(area).all():  # places off the map, which are told where they are read
+        return "Shapes are stood for by a point inside each of them."
     if shapes.crs is not None:
         area, unit = (area / 1e6, " km²") if area[-1] >= 1e5 else (area, " m²")
     size = significant(float(np.median(area)), 3) + unit

@@ -55,7 +55,7 @@ def lengthened(table: Table, stems: Sequence[str]) -> Table:
                 f"{listed(numbers)}",
                 "Measures that were taken at one set of occasions can be put under each other together.",
             )
-    inside = {name for columns in found.values() for name in columns.values()}
+    inside = [name for columns in found.values() for name in columns.values()]
     rest = tuple(n for n in table.names if n not in inside)
     taken = [n for n in (*stems, ROW, OCCASION) if n in rest]
     if taken:

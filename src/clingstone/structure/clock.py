@@ -26,6 +26,8 @@ PERIODS = (
     ("Q", "quarter"), ("Y", "year"), ("A", "year"), ("W", "week"), ("D", "day"), ("H", "hour"),
     ("MIN", "minute"), ("T", "minute"), ("S", "second"), ("M", "month"),
 )  # fmt: skip
+SERIAL = (15_000, 80_000)  # spreadsheet day counts of the years 1941 to 2119
+UNIX_SERIAL = 25_569  # that of 1970-01-01
 ORDINAL_WORDS = {"visit", "wave", "round", "session", "timepoint", "occasion"}
 MONTHS = ("jan", "feb", "mar", "apr", "may", "jun", "jul", "aug", "sep", "oct", "nov", "dec")
 
@@ -105,6 +107,11 @@ def _numbers(name: str, values: pd.Series) -> Clock:
                 clock.show,
                 (f"{name} holds dates written as YYYYMMDD.", *clock.notes),
             )
+    if whole and "date" in name.casefold() and number.min() >= SERIAL[0] and number.max() <= SERIAL[1]:
+        micro = (number.astype(np.int64) - UNIX_SERIAL) * MICRO["day"]
+        clock = _datetimes(pd.DatetimeIndex(micro.astype("datetime64[us]")), values)
+        note = f"{name} holds day counts of a spreadsheet: {number[0]:.0f} is {clock.show(0)}."
+        return Clock(clock.counts, clock.units, clock.show, (note, *clock.notes))
     word = name.casefold()
     unit = UNIT_WORDS.get(word, "")
     notes = (f"{name} is counted in {unit}s, after its name.",) if unit else ()
