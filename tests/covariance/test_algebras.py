@@ -93,6 +93,28 @@ def group_and_irregular(weights: bool = False) -> Fits:
     )
 
 
+def repeats(weights: bool = False, whole: bool = True) -> Fits:
+    """Rows that share a time with others of their series."""
+    rng, y, x = table(100, 10)
+    series = np.repeat(np.arange(10), 10)
+    time = np.tile([0, 0, 0, 1, 3, 3, 4, 7, 7, 7], 10) * (1.0 if whole else 0.37)
+    w = rng.uniform(0.5, 3, 100) if weights else None
+    groups = {"a": series // 2, "a/b": series}
+    return fits(y, x, groups=groups, time=time, series=series, whole=whole, weights=w, limits=WIDE)
+
+
+def uneven_repeats(weights: bool = False) -> Fits:
+    return repeats(weights, whole=False)
+
+
+def repeats_at_places(weights: bool = False) -> Fits:
+    rng, y, x = table(100, 11)
+    site = np.repeat(np.arange(20), 5)
+    w = rng.uniform(0.5, 3, 100) if weights else None
+    xy = rng.uniform(size=(20, 2))[site]
+    return fits(y, x, xy=xy, time=np.tile([0, 0, 1, 2, 2], 20), series=site, weights=w, limits=WIDE)
+
+
 def places(weights: bool = False) -> Fits:
     rng, y, x = table(40, 7)
     w = rng.uniform(0.5, 3, 40) if weights else None
@@ -135,6 +157,10 @@ WORLDS: dict[str, tuple[Callable[..., Fits], set[str]]] = {
     "irregular times": (irregular, {"serial"}),
     "levels and order": (group_and_order, {"group:a", "group:a/b", "serial"}),
     "level and irregular times": (group_and_irregular, {"group:g", "serial"}),
+    "repeats": (repeats, {"serial"}),
+    "repeats at uneven times": (uneven_repeats, {"serial"}),
+    "levels and repeats": (repeats, {"group:a", "group:a/b", "serial"}),
+    "repeats, site and place": (repeats_at_places, {"group:site", "serial", "spatial"}),
     "places": (places, {"spatial"}),
     "places that repeat": (repeated_places, {"group:site", "spatial"}),
     "places within regions": (repeated_places, {"group:region", "group:site", "spatial"}),
@@ -240,6 +266,16 @@ def test_shares_are_correlations_of_comparable_rows() -> None:
     assert d is not None
     away = np.linalg.norm(d.xy[d.part.codes[0]] - d.xy[d.part.codes[5]])
     assert V[0, 5] / V[0, 0] == pytest.approx(share["spatial"] * np.exp(-away / 0.2))
+
+
+def test_repeats_share_what_the_process_has() -> None:
+    _, algebra, dense = built("repeats")
+    # A rate of ln 2 per step and λ = 3: rows of one time share ¾, rows one step apart ⅜.
+    theta = np.array([np.log(np.log(2)), np.log(3)])
+    V, share = dense.dense(theta), algebra.variances(theta[:, None], np.ones(1))["serial"][0] / 4
+    assert share == pytest.approx(0.75)
+    assert V[0, 1] / V[0, 0] == pytest.approx(share)
+    assert V[0, 3] / V[0, 0] == pytest.approx(share / 2)
 
 
 def test_a_ratio_at_its_lower_bound_is_zero() -> None:

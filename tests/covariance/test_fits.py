@@ -79,8 +79,12 @@ SITE = np.random.default_rng(2).uniform(size=(60, 2))
             {"groups": {"g": TENS, "h": 9 - TENS}},
             "divide the rows alike",
         ),
-        ("serial", {"time": np.arange(60) % 6, "series": np.arange(60) // 10}, "share their t with another"),
-        ("serial", {"time": np.arange(60) % 10, "series": np.arange(60) // 10}, "longest series has 10 rows"),
+        (
+            "serial",
+            {"time": np.arange(60) % 10, "series": np.arange(60) // 10},
+            "longest series has 10 times",
+        ),
+        ("serial", {"time": np.arange(60) // 6}, "longest series has 10 times; series of 5 times or more: 1"),
         ("spatial", {"xy": SITE[np.arange(60) % 12]}, "12 distinct places"),
     ],
 )

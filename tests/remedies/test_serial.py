@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 
 from clingstone.covariance.processes import Arma as ArmaErrors
-from clingstone.covariance.processes import Noisy, search
+from clingstone.covariance.processes import Fading, search
 from clingstone.covariance.unbiased import unbiased
 from clingstone.design.design import Term
 from clingstone.maths import reml
@@ -72,9 +72,9 @@ def test_replicates_of_a_visit_are_carried_and_equal_a_dense_fit():
     run = fits(design(X, tick=visit), y)
     object.__setattr__(run.design.serial, "ties", int(np.sum(np.diff(visit) == 0)))
     found = refit(remedy("car1"), "", run)
-    process = Noisy(run.design)
+    process = Fading(run.design, noise=True)
     best = search(process, run.response)
-    rho, ratio = process._rho(best.theta), process._ratio(best.theta)
+    rho, ratio = process._piece.at(best.theta)
     apart = np.abs(visit[:, None] - visit)
 
     def at(r, lam):

@@ -2,7 +2,7 @@
 
 Layers, from the rows upwards (each exact, none larger than the number of cells or sites):
 
-    row noise     I, or the AR(1) correlation within series
+    row noise     I, or the AR(1) correlation within series, or I and a process of visits within series
     intercepts    levels that nest one another, finest first, each holding whole series
     places        the spatial covariance between sites, with coarser levels that hold whole sites
 
@@ -24,6 +24,7 @@ from clingstone.covariance.crossed import Crossed, crossed
 from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece, SpatialPiece
 from clingstone.covariance.sloped import Sloped, sloped
 from clingstone.covariance.stacked import Forms
+from clingstone.covariance.visits import VisitPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
@@ -42,11 +43,12 @@ MANY_ROWS = 5000  # irregular rows from which their links are summed up by lengt
 class Layered(Pieces):
     """Row noise, nested intercepts, places: see the head of the file.
 
-    serial : the AR(1) row noise, or None. chain : intercepts below the sites, finest first.
+    serial : the AR(1) row noise, a process of visits beside row noise, or None.
+    chain : intercepts below the sites, finest first.
     spatial : between the sites, or None. above : levels that hold whole sites.
     """
 
-    serial: SerialPiece | None = None
+    serial: SerialPiece | VisitPiece | None = None
     chain: tuple[GroupPiece, ...] = ()
     spatial: SpatialPiece | None = None
     above: tuple[GroupPiece, ...] = ()
@@ -105,17 +107,17 @@ class Layered(Pieces):
     @property
     def few(self) -> bool:
         """Whether R⁻¹ is a weighted sum of few fixed forms."""
-        return self.serial is None or self.serial.links.few
+        return self.serial is None or (isinstance(self.serial, SerialPiece) and self.serial.links.few)
 
     def weights(self, theta: Array) -> tuple[Array, Array]:
         """Weights of those forms (K, F) and ln|R| (K,), at θ (d, K)."""
-        if self.serial is None:
+        if not isinstance(self.serial, SerialPiece):
             return np.ones((theta.shape[1], 1)), np.zeros(theta.shape[1])
         return self.serial.links.weights(self.serial.rho(self.own(self.serial, theta)))
 
     def forms(self, response: Response) -> Forms:
         """What those forms amount to."""
-        cells, links = self._cells, None if self.serial is None else self.serial.links
+        cells, links = self._cells, self.serial.links if isinstance(self.serial, SerialPiece) else None
         key = ("forms", links is not None, "" if cells is None else cells.key)
         return kept(response, key, lambda: Forms.of(response, links, cells))
 
@@ -127,6 +129,8 @@ class Layered(Pieces):
         return kept(response, key, lambda: self.forms(response).classes())
 
     def _rows(self, theta: Array, response: Response) -> tuple[Gram, Load | None]:
+        if isinstance(self.serial, VisitPiece):
+            return self._by_visit(self.serial, theta, response)
         if not self.few:
             assert self.serial is not None
             return self._by_row(float(self.serial.rho(self.own(self.serial, theta))), response)
@@ -136,7 +140,7 @@ class Layered(Pieces):
 
     def _by_row(self, rho: float, response: Response) -> tuple[Gram, Load | None]:
         """Rows whitened one by one: irregular times."""
-        assert self.serial is not None
+        assert isinstance(self.serial, SerialPiece)
         links = self.serial.links
         if self._cells is None and self.design.n >= MANY_ROWS:
             return self._by_panel(rho, response), None
@@ -148,9 +152,21 @@ class Layered(Pieces):
         w = links.whiten(rho, self._ones)
         return gram, Load(cells.sums(w * w), cells.sums(w[:, None] * WQ), cells.sums(w[:, None] * WE))
 
+    def _by_visit(self, piece: VisitPiece, theta: Array, response: Response) -> tuple[Gram, Load | None]:
+        """Visits solved in one banded system."""
+        visits, cells, forms = piece.visits, self._cells, self.forms(response)
+        up = None
+        if cells is not None:
+            up = Partition(f"visit>{cells.key}", cells.codes[visits.part.first], cells.labels)
+        sums = kept(
+            response, ("visit sums",), lambda: visits.sums(np.hstack([self.design.Q, response.residual]))
+        )
+        plain = forms.gram(np.ones(1), 0.0), forms.load(np.ones(1))
+        return visits.lower(*piece.at(self.own(piece, theta)), sums, *plain, up)
+
     def _by_panel(self, rho: float, response: Response) -> Gram:
         """The same from moments on panels of the lengths of links, made once for every ρ."""
-        assert self.serial is not None
+        assert isinstance(self.serial, SerialPiece)
         links, Q, E = self.serial.links, self.design.Q, response.residual
         panels = kept(self.design, ("link panels",), lambda: Panels.of(links))
         apart, along, logdet = panels.weights(rho)
@@ -192,12 +208,20 @@ class Layered(Pieces):
             K += piece.variance(self.own(piece, theta)[:, None])[0] * (up[:, None] == up)
         return K
 
+    def white_rows(self, theta: Array, block: Array) -> tuple[Array, Array]:
+        """The indicator of any cell, and (n, k) rows, once the noise of rows is whitened."""
+        u, out = self._ones, np.array(block, dtype=float)
+        if isinstance(self.serial, SerialPiece):
+            rho = float(self.serial.rho(self.own(self.serial, theta)))
+            return self.serial.links.whiten(rho, u), self.serial.links.whiten(rho, out)
+        if isinstance(self.serial, VisitPiece):
+            white, at = self.serial.visits.whiten, self.serial.at(self.own(self.serial, theta))
+            return white(*at, u), white(*at, out)
+        return u, out
+
     def whiten(self, theta: Array, block: Array) -> Array:
         """A square root of V⁻¹ applied to (n, k) rows on the scale of the basis, layer by layer."""
-        u, out = self._ones, np.array(block, dtype=float)
-        if self.serial is not None:
-            rho = float(self.serial.rho(self.own(self.serial, theta)))
-            u, out = self.serial.links.whiten(rho, u), self.serial.links.whiten(rho, out)
+        u, out = self.white_rows(theta, block)
         for piece in self.chain:
             ratio = float(piece.variance(self.own(piece, theta)[:, None])[0])
             u, out = groups.whiten(piece.part, u, out, ratio)
@@ -302,7 +326,8 @@ def _pieces(design: Design, components: Sequence[Component]) -> tuple[Piece, ...
 def _piece(design: Design, component: Component) -> Piece:
     if component.key == "serial":
         assert design.serial is not None
-        return SerialPiece(component.key, design, design.serial)
+        piece = VisitPiece if component.repeats else SerialPiece
+        return piece(component.key, design, design.serial)
     if component.key == "spatial":
         assert design.spatial is not None
         return SpatialPiece(component.key, design, design.spatial)
@@ -313,7 +338,7 @@ def stack(design: Design, pieces: Sequence[Piece]) -> Layered | None:
     """The pieces in layers, or None when they do not stack."""
     if pieces_of(tuple(pieces)):
         return None
-    serial = next((p for p in pieces if isinstance(p, SerialPiece)), None)
+    serial = next((p for p in pieces if isinstance(p, SerialPiece | VisitPiece)), None)
     spatial = next((p for p in pieces if isinstance(p, SpatialPiece)), None)
     levels = [p for p in pieces if isinstance(p, GroupPiece)]
     above: list[GroupPiece] = []

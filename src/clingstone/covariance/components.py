@@ -25,12 +25,15 @@ class Component:
 
     key : "group:<level>", "serial" or "spatial". part : key of its partition in the design.
     label : how a sentence names it ("clinic", "time within patient", "place").
+    repeats : rows of one series and time are repeats of a visit, so that the process along time stands
+        beside row noise; without them it is the noise of the rows itself.
     """
 
     key: str
     family: Family
     part: str
     label: str
+    repeats: bool = False
 
 
 @dataclass(frozen=True)
@@ -108,7 +111,8 @@ def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict
         no = _serial(design, limits)
         within = "" if design.serial.part.count == 1 else f" within {design.serial.part.key}"
         if no is None:
-            found["serial"] = Component("serial", "serial", "series", f"{design.serial.name}{within}")
+            label = f"{design.serial.name}{within}"
+            found["serial"] = Component("serial", "serial", "series", label, design.serial.repeats)
         else:
             refused["serial"] = no
     if design.spatial is not None:
@@ -221,19 +225,14 @@ def _serial(design: Design, limits: Limits) -> Refusal | None:
             "group means were swept out of this model; its rows no longer follow an AR(1) process",
             "Fit error models to the model itself.",
         )
-    if bool(np.any(series.steps[~np.isnan(series.steps)] <= 0)):
-        return Refusal(
-            f"rows share their {series.name} with another row of the same series",
-            'Average them with ties="mean", or name a finer series=.',
-        )
-    sizes = series.part.sizes
+    sizes = series.part.sums((~(series.steps == 0)).astype(float))  # rows of one time count once
     longest, enough = int(sizes.max()), int(np.sum(sizes >= limits.serial_estimate_short))
     if longest < limits.serial_estimate_rows and enough < limits.serial_estimate_series:
         return Refusal(
-            f"the longest series has {longest} rows, and {enough} series have "
-            f"{limits.serial_estimate_short} rows or more",
-            f"One series of {limits.serial_estimate_rows} rows, or {limits.serial_estimate_series} series of "
-            f"{limits.serial_estimate_short}, would be needed.",
+            f"the longest series has {longest} times; "
+            f"series of {limits.serial_estimate_short} times or more: {enough}",
+            f"One series of {limits.serial_estimate_rows} times, or {limits.serial_estimate_series} series "
+            f"of {limits.serial_estimate_short}, would be needed.",
         )
     return None
 

@@ -7,21 +7,21 @@ likelihood as the nodes of the lattice are.
 from __future__ import annotations
 
 from collections.abc import Mapping
-from dataclasses import dataclass, field
+from dataclasses import dataclass
 from typing import Protocol
 
 import numpy as np
 
 from clingstone.covariance.algebras import Layered
 from clingstone.covariance.components import Parameter
-from clingstone.covariance.pieces import RHO_HIGH, SerialPiece, ratio_of, ratio_parameter
+from clingstone.covariance.pieces import RHO_HIGH, SerialPiece
+from clingstone.covariance.visits import VisitPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.arma import Steps, autocovariances, from_partial
 from clingstone.maths.basis import Gram
 from clingstone.maths.longrun import Grid
-from clingstone.maths.nugget import Visits
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.search import Optimum, minimise
 from clingstone.needs import NotSupported, memory
@@ -51,16 +51,30 @@ class Process(Protocol):
 
 @dataclass(frozen=True, eq=False)
 class Fading:
-    """ρ^|t − s| by elapsed time within series, ρ ≥ 0 (continuous-time AR(1))."""
+    """ρ^|t − s| by elapsed time within series, ρ ≥ 0 (continuous-time AR(1)).
+
+    noise : of variance λσ² beside row noise σ²; rows at one time are then repeats of a visit.
+    """
 
     design: Design
-    key: str = field(default="fading", init=False)
+    noise: bool = False
+
+    @property
+    def key(self) -> str:
+        return "fading with row noise" if self.noise else "fading"
+
+    @property
+    @once
+    def _piece(self) -> SerialPiece | VisitPiece:
+        series = _series(self.design)
+        if self.noise:
+            return VisitPiece("serial", self.design, series)
+        return SerialPiece("serial", self.design, series, fading=True)
 
     @property
     @once
     def algebra(self) -> Layered:
-        piece = SerialPiece("serial", self.design, _series(self.design), fading=True)
-        return Layered(self.design, (piece,), piece)
+        return Layered(self.design, (self._piece,), self._piece)
 
     @property
     def parameters(self) -> tuple[Parameter, ...]:
@@ -70,46 +84,11 @@ class Fading:
         return self.algebra.gram(theta, response)
 
     def shape(self, theta: Array) -> Mapping[str, float]:
-        return {"rho": float(np.exp(-np.exp(theta[0])))}
-
-
-@dataclass(frozen=True, eq=False)
-class Noisy:
-    """The same process of variance λσ² plus row noise σ²; rows at one time are replicates of a visit."""
-
-    design: Design
-    key: str = field(default="fading with row noise", init=False)
-
-    @property
-    @once
-    def visits(self) -> Visits:
-        return Visits.of(_series(self.design).steps, self.design.root)
-
-    @property
-    @once
-    def parameters(self) -> tuple[Parameter, ...]:
-        series = _series(self.design)
-        at = np.flatnonzero(~(series.steps == 0))
-        apart = SerialPiece("serial", self.design, series.take(at), fading=True)
-        return (*apart.parameters, ratio_parameter("serial.log_ratio", self.visits.weight, self.design.n))
-
-    def gram(self, theta: Array, response: Response) -> Gram:
-        sums = kept(response, ("visit sums",), lambda: self._sums(response))
-        plain = reml.independent(self.design.p, response.ss)
-        return self.visits.gram(self._rho(theta), self._ratio(theta), sums, plain)
-
-    def _sums(self, response: Response) -> Array:
-        return self.visits.sums(np.hstack([self.design.Q, response.residual]))
-
-    def _rho(self, theta: Array) -> float:
-        return float(np.exp(-np.exp(theta[0])))
-
-    def _ratio(self, theta: Array) -> float:
-        return float(ratio_of(theta[1:2], self.parameters[1])[0])
-
-    def shape(self, theta: Array) -> Mapping[str, float]:
-        ratio = self._ratio(theta) * float(np.mean(self.visits.weight) * self.visits.part.count)
-        return {"rho": self._rho(theta), "noise": 1 / (1 + ratio / self.design.n)}
+        out = {"rho": float(self._piece.rho(theta))}
+        if isinstance(self._piece, VisitPiece):
+            total = float(self._piece.variance(theta[:, None])[0] * self._piece.visits.weight.sum())
+            out["noise"] = 1 / (1 + total / self.design.n)
+        return out
 
 
 @dataclass(frozen=True, eq=False)

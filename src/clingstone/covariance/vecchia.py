@@ -85,10 +85,7 @@ class Nearest(Layered):
     def whiten(self, theta: Array, block: Array) -> Array:
         """As ``Layered.whiten``; the square root of the sites' part is U of their means."""
         theta = np.asarray(theta, dtype=float)
-        u, out = self._ones, np.array(block, dtype=float)
-        if self.serial is not None:
-            rho = float(self.serial.rho(self.own(self.serial, theta)))
-            u, out = self.serial.links.whiten(rho, u), self.serial.links.whiten(rho, out)
+        u, out = self.white_rows(theta, block)
         for level in self.chain:
             u, out = groups.whiten(
                 level.part, u, out, float(level.variance(self.own(level, theta)[:, None])[0])

@@ -16,6 +16,7 @@ import numpy as np
 from scipy import linalg
 
 from clingstone.maths.basis import Gram
+from clingstone.maths.groups import Load
 from clingstone.maths.markov import Links, correlation
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
@@ -66,18 +67,57 @@ class Visits:
         logdet = float(np.log(rest).sum() + 2 * np.log(factor[1]).sum())
         return np.asarray(factor), logdet
 
-    def gram(self, rho: float, ratio: float, sums: Array, cross: Gram) -> Gram:
-        """[Q, e]'V⁻¹[Q, e].
+    def lower(
+        self,
+        rho: float,
+        ratio: float,
+        sums: Array,
+        gram: Gram,
+        load: Load | None = None,
+        up: Partition | None = None,
+    ) -> tuple[Gram, Load | None]:
+        """The Gram, and what cells of whole series amount to, once the process is in V.
 
-        sums : (T, p + B) Z'[Q, e]. cross : the same Gram at V = I.
+        sums : (T, p + B) Z'[Q, e]. gram, load : the same at V = I. up : visits → cells of ``load``.
         """
         factor, logdet = self._factor(rho, ratio)
-        p = cross.QQ.shape[0]
-        solved = linalg.cho_solve_banded((factor, False), sums, check_finite=False)
-        QQ = cross.QQ - ratio * (sums[:, :p].T @ solved[:, :p])
-        QE = cross.QE - ratio * (sums[:, :p].T @ solved[:, p:])
-        EE = cross.EE - ratio * np.einsum("ij,ij->j", sums[:, p:], solved[:, p:])
-        return Gram((QQ + QQ.T) / 2, QE, EE, logdet)
+        p = gram.QQ.shape[0]
+        wide = sums if up is None else np.column_stack([sums, self.weight])
+        solved = linalg.cho_solve_banded((factor, False), wide, check_finite=False)
+        QQ = gram.QQ - ratio * (sums[:, :p].T @ solved[:, :p])
+        QE = gram.QE - ratio * (sums[:, :p].T @ solved[:, p : sums.shape[1]])
+        EE = gram.EE - ratio * np.einsum("ij,ij->j", sums[:, p:], solved[:, p : sums.shape[1]])
+        made = Gram((QQ + QQ.T) / 2, QE, EE, gram.logdet + logdet)
+        if load is None or up is None:
+            return made, None
+        gone = ratio * up.sums(self.weight[:, None] * solved)
+        return made, Load(load.c - gone[:, -1], load.TQ - gone[:, :p], load.TE - gone[:, p:-1])
+
+    def whiten(self, rho: float, ratio: float, block: Array) -> Array:
+        """A square root of V⁻¹ applied to (n,) or (n, k).
+
+        V is I on what sums to zero within visits. On their means, of weights W, it is I + λW^½KW^½; with
+        K = LL' and CC' = L⁻¹W⁻¹L⁻ᵀ + λI, tridiagonal, its inverse has the square root C⁻¹L⁻¹W^−½.
+        """
+        wide = block[:, None] if block.ndim == 1 else block
+        size = np.sqrt(self.weight)[:, None]
+        mean = self.sums(wide) / size
+        links, later = self.links, self.links.later
+        phi, rest = correlation(rho, links.steps[later])
+        # L⁻¹ has 1/√rest on its diagonal and −φ/√rest below it, 1 and 0 at the start of a series.
+        diagonal, below = np.ones(self.part.count), np.zeros(self.part.count)
+        diagonal[later], below[later] = 1 / np.sqrt(rest), -phi / np.sqrt(rest)
+        inverse = 1 / self.weight
+        band = np.zeros((2, self.part.count))
+        band[0] = ratio + diagonal**2 * inverse
+        band[0, later] += below[later] ** 2 * inverse[later - 1]
+        band[1, later - 1] = below[later] * inverse[later - 1] * diagonal[later - 1]
+        C = linalg.cholesky_banded(band, lower=True, check_finite=False)
+        C[1, -1] = 0.0
+        white = linalg.solve_banded((1, 0), C, links.whiten(rho, mean / size), check_finite=False)
+        change = ((white - mean) / size)[self.part.codes]
+        out = wide + (change if self.root is None else change * self.root[:, None])
+        return np.asarray(out[:, 0] if block.ndim == 1 else out)
 
     def dense(self, rho: float, ratio: float) -> Array:
         """(n, n) V; for small n."""
@@ -85,9 +125,7 @@ class Visits:
         Z[np.arange(self.part.n), self.part.codes] = 1.0 if self.root is None else self.root
         return np.asarray(np.eye(self.part.n) + ratio * Z @ self.links.dense(rho) @ Z.T)
 
-    def draw(self, rho: float, ratio: float, rng: np.random.Generator, B: int) -> Array:
-        """(n, B) draws of N(0, V)."""
-        process = self.links.colour(rho, rng.standard_normal((self.part.count, B)))[self.part.codes]
-        if self.root is not None:
-            process = process * self.root[:, None]
-        return np.asarray(np.sqrt(ratio) * process + rng.standard_normal((self.part.n, B)))
+    def process(self, rho: float, ratio: float, rng: np.random.Generator, B: int) -> Array:
+        """(n, B) draws of N(0, λZKZ')."""
+        drawn = self.links.colour(rho, rng.standard_normal((self.part.count, B)))[self.part.codes]
+        return np.asarray(np.sqrt(ratio) * (drawn if self.root is None else drawn * self.root[:, None]))

@@ -35,6 +35,7 @@ PER_SD = 2.0  # times a row's variance per standard deviation of its fitted valu
 FURTHEST = 2.0  # standard deviations beyond which it grows no more
 
 Different = Literal["as fitted", "noisy series", "smooth field", "unequal spread"]
+DIFFERENT: tuple[str, ...] = ("noisy series", "smooth field", "unequal spread")  # truths nobody fitted
 
 
 @dataclass(frozen=True)
@@ -97,7 +98,8 @@ def _influential(fits: Fits, inside: Region) -> list[tuple[str, Array]]:
         component = fits.components[key]
         if key == "serial":
             found.append((f"ρ of {component.label}", np.asarray(inside.model.shape["serial.rho"])))
-            continue
+            if not component.repeats:
+                continue
         found.append((f"share of {component.label}", np.asarray(shares[key])))
         if key == "spatial":
             found.append(("range of place", np.asarray(inside.model.shape["spatial.range"])))
@@ -129,7 +131,8 @@ def _truth(fits: Fits, node: frozenset[str], theta: Array, name: str) -> Truth:
         label = fits.components[key].label
         if key == "serial":
             said.append(f"ρ of {label} {number(shape['serial.rho'], 2)}")
-            continue
+            if not fits.components[key].repeats:
+                continue
         said.append(f"share of {label} {number(float(variances[key][0]) / total, 2)}")
         if key == "spatial" and np.isfinite(shape["spatial.range"]):
             said.append(f"practical range {significant(shape['spatial.range'])}")
@@ -142,7 +145,7 @@ def _different(fits: Fits, estimate: Truth) -> Truth | None:
     algebra = fits.algebra(estimate.node)
     if not hasattr(algebra, "pieces"):
         return None
-    if "serial" in estimate.node:
+    if "serial" in estimate.node and not fits.components["serial"].repeats:
         what: Different = "noisy series"
         words = f"{1 - AR_PART:.0%} of the series' variance is row noise, with ρ between neighbours kept"
     elif "spatial" in estimate.node:

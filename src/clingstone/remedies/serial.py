@@ -8,8 +8,9 @@ from typing import TYPE_CHECKING, ClassVar, Literal
 
 import numpy as np
 
+from clingstone.covariance.components import declared
 from clingstone.covariance.processes import Arma as ArmaErrors
-from clingstone.covariance.processes import Fading, Noisy, Process, search
+from clingstone.covariance.processes import Fading, Process, search
 from clingstone.covariance.unbiased import Unbiased, unbiased
 from clingstone.design.design import Design
 from clingstone.design.response import Response
@@ -136,20 +137,9 @@ def enough_times(design: Design, limits: Limits) -> Series:
     series = design.serial
     if series is None:
         raise NotSupported("no serial structure was declared", "Name the time column with time=.")
-    if design.swept:
-        raise NotSupported(
-            "group means were swept out of this model; its rows no longer follow one process",
-            "Fit error models to the model itself.",
-        )
-    visits = series.part.sums((~(series.steps == 0)).astype(float))
-    longest, enough = int(visits.max()), int(np.sum(visits >= limits.serial_estimate_short))
-    if longest < limits.serial_estimate_rows and enough < limits.serial_estimate_series:
-        raise NotSupported(
-            f"the longest series has {longest} times, and {enough} series have "
-            f"{limits.serial_estimate_short} or more",
-            f"One series of {limits.serial_estimate_rows} times, or {limits.serial_estimate_series} series "
-            f"of {limits.serial_estimate_short}, would be needed.",
-        )
+    no = declared(design, limits)[1].get("serial")
+    if no is not None:
+        raise no.error()
     return series
 
 
@@ -165,7 +155,7 @@ class FadingReady(ProcessReady):
     def choose(self, response: Response) -> Choice:
         series = _series(self.design)
         if series.ties or self.noise == "yes":
-            process: Process = Noisy(self.design)
+            process: Process = Fading(self.design, noise=True)
             return Choice(process, search(process, response))
         plain: Process = Fading(self.design)
         found = search(plain, response)
@@ -174,7 +164,7 @@ class FadingReady(ProcessReady):
         if self.design.n > NOISE_ROWS:
             note = f"Row noise was not looked for: the table has more than {NOISE_ROWS:,} rows."
             return Choice(plain, found, notes=(note,))
-        noisy: Process = Noisy(self.design)
+        noisy: Process = Fading(self.design, noise=True)
         with_noise = search(noisy, response)
         gain = found.value - with_noise.value
         items = (

@@ -29,9 +29,11 @@ def gls_account(estimation: str, rule: str, components: tuple[Component, ...], m
     parts = " and ".join(_part(c) for c in components)
     variances = {key: float(v[0]) for key, v in model.variances.items()}
     # An AR(1) process is the row noise itself: what it shares with its neighbours and the rest are one.
-    noise = "row noise" if "serial" not in variances else "the autoregressive errors"
-    shown = {c.label: variances[c.key] for c in components if c.key != "serial"}
-    shown[noise] = variances["row"] + variances.get("serial", 0.0)
+    # Where rows of one time are repeats, it stands beside the row noise.
+    itself = {c.key for c in components if c.key == "serial" and not c.repeats}
+    noise = "the autoregressive errors" if itself else "row noise"
+    shown = {c.label: variances[c.key] for c in components if c.key not in itself}
+    shown[noise] = variances["row"] + sum(variances[key] for key in itself)
     total = sum(shown.values())
     items = [(f"variance of {label}", significant(value, 4)) for label, value in shown.items()]
     levels = [c.label for c in components if c.family == "group"]
@@ -59,6 +61,8 @@ def gls_account(estimation: str, rule: str, components: tuple[Component, ...], m
 def _part(component: Component) -> str:
     if component.family == "group":
         return f"a random intercept of {component.label}"
+    if component.key == "serial" and component.repeats:
+        return f"errors that fade over {component.label} beside row noise, rows of one time being repeats"
     if component.key == "serial":
         return f"AR(1) over {component.label}"
     if component.key == "spatial":

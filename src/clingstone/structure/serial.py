@@ -64,6 +64,12 @@ class Series:
             out[1:][same] = (np.diff(self.elapsed) / self.step)[same]
         return out
 
+    @property
+    @once
+    def repeats(self) -> bool:
+        """Whether rows share their series and time: they are repeats of one visit."""
+        return bool(np.any(self.steps == 0))
+
     @once
     def pairs(self, lag: int) -> tuple[Rows, Rows]:
         """Rows (earlier, later) of one series exactly ``lag`` base steps apart. Needs ``tick``.
