@@ -1,15 +1,22 @@
 """Writes the generated parts of the docs: python docs/make.py [--check]
 
-A part stands between ``<!-- made: NAME -->`` and ``<!-- end -->``. With --check nothing is written;
-the exit status is 1 when a part is out of date, or when docs/methods.md does not describe exactly the
-tests and remedies that are registered.
+A part stands between ``<!-- made: NAME -->`` and ``<!-- end -->``. The part ``printed`` is what the
+example above it prints; the examples of a page are run in reading order. With --check nothing is
+written or run; the exit status is 1 when a part is out of date, or when docs/methods.md does not
+describe exactly the tests and remedies that are registered. (What is printed is checked by the tests,
+which run the examples anyway.)
 """
 
 from __future__ import annotations
 
+import contextlib
+import io
+import os
 import re
+import shutil
 import sys
-from collections.abc import Callable, Iterable
+import tempfile
+from collections.abc import Callable, Iterable, Iterator
 from dataclasses import fields
 from pathlib import Path
 
@@ -20,7 +27,10 @@ from clingstone.options import settings_options
 from clingstone.remedies import REMEDIES
 
 HERE = Path(__file__).parent
-MARK = re.compile(r"(<!-- made: ([\w-]+) -->\n).*?(<!-- end -->)", re.S)
+MARK = re.compile(r"(<!-- made: (?!printed)([\w-]+) -->\n).*?(<!-- end -->)", re.S)
+EXAMPLE = re.compile(
+    r"^```python\n(.*?)^```\n(?:\n<!-- made: printed -->\n(.*?)<!-- end -->\n)?", re.M | re.S
+)
 
 
 def rules() -> str:
@@ -65,6 +75,33 @@ def made(text: str) -> str:
     return MARK.sub(lambda found: f"{found[1]}\n{PARTS[found[2]]()}\n{found[3]}", text)
 
 
+def examples(text: str) -> Iterator[tuple[re.Match[str], str]]:
+    """The Python examples of a page, run in reading order in the working folder, and what each prints."""
+    names: dict[str, object] = {}
+    for number, found in enumerate(EXAMPLE.finditer(text), start=1):
+        with contextlib.redirect_stdout(io.StringIO()) as out:
+            exec(compile(found[1], f"example {number}", "exec"), names)
+        yield found, out.getvalue()
+
+
+def printed(text: str) -> str:
+    """A page in which every part ``printed`` holds what its example prints now."""
+    if "<!-- made: printed -->" not in text:
+        return text
+    out, end, home = [], 0, Path.cwd()
+    with tempfile.TemporaryDirectory() as folder:
+        shutil.copytree(HERE.parent / "demo_data", Path(folder, "demo_data"))
+        os.chdir(folder)
+        try:
+            for found, said in examples(text):
+                if found[2] is not None:
+                    out += [text[end : found.start(2)], f"\n```text\n{said.strip()}\n```\n\n"]
+                    end = found.end(2)
+        finally:
+            os.chdir(home)
+    return "".join(out) + text[end:]
+
+
 def undescribed() -> list[str]:
     """Registered tests and remedies without a heading in methods.md, and headings without a method."""
     text = (HERE / "methods.md").read_text(encoding="utf-8")
@@ -79,9 +116,9 @@ def undescribed() -> list[str]:
 
 def main(check: bool) -> int:
     faults = undescribed()
-    for page in sorted(HERE.glob("*.md")):
+    for page in sorted(HERE.rglob("*.md")):
         text = page.read_text(encoding="utf-8")
-        new = made(text)
+        new = made(text) if check else printed(made(text))
         if new == text:
             continue
         if check:
