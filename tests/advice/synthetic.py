@@ -30,6 +30,9 @@ COVERS = {
     "fixed-effects": ("group", "serial"),
     "car1": ("serial",),
     "arma": ("serial",),
+    "group-t": ("group", "serial"),
+    "spatial-error": ("spatial",),
+    "spatial-components": ("spatial",),
 }
 
 

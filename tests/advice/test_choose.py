@@ -146,7 +146,8 @@ def test_places():
     advice = decide(far)
     assert (advice.state, advice.remedy, advice.alternatives) == ("not correctable", "", ())
     assert advice.refused[0][2].startswith("Needed: sites over an area")
-    assert advice.headline.endswith("the map holds hardly more than one independent place.")
+    assert advice.headline.endswith("These data cannot carry a correction.")
+    assert advice.because[0].sentence.endswith("the map holds hardly more than one independent place.")
 
 
 def test_nothing_found_says_what_could_have_been_seen():
@@ -185,7 +186,7 @@ def test_plausible_earns_protection():
         facts(ledger(group="unclear"), groups=12, effective_clusters=11.0, focus_at_group_level=True)
     )
     assert (advice.remedy, advice.protected, advice.structures) == ("mixed-intercept", {"group"}, frozenset())
-    assert "may hang together" in advice.headline
+    assert "is not settled: " in advice.headline
 
 
 def curve(**more) -> Missing:

@@ -15,7 +15,9 @@ BAND = (0.95, 1.10)
 
 def test_what_is_present_comes_before_what_may_be():
     text = say.dependence(ledger(group="unclear", serial="present"))
-    assert text.index("follow each other in time hang together") < text.index("one clinic may hang together")
+    assert text.index("follow each other in time hang together") < text.index(
+        "one clinic hang together is not settled"
+    )
 
 
 def test_what_was_not_detected_is_not_in_the_headline():
@@ -147,3 +149,17 @@ def test_what_was_tested_and_what_was_not_are_told_apart():
     text = say.nothing(book)
     assert text.startswith("No dependence was detected")
     assert text.endswith("What could not be tested is not ruled out: clinic.")
+
+
+def test_what_was_not_seen_is_told_as_room_not_as_a_find():
+    """Never "may hang together: they share 0 % (0 to 45 %)"."""
+    book = ledger(group="unclear")
+    none = replace(book, shares=(replace(book.shares[0], share=0.0, low=0.0, high=0.45), *book.shares[1:]))
+    assert say.dependence(none) == (
+        "Whether the rows of one clinic hang together is not settled: none of what the model leaves over is "
+        "estimated to be theirs, but up to 45\u00a0% could be."
+    )
+    assert say.dependence(book).endswith("is estimated at 18\u00a0% and could be up to 41\u00a0%.")
+    assert "is estimated at 0.60 per day and could be up to 0.75" in say.dependence(ledger(serial="unclear"))
+    fixed = replace(book, standing=(replace(book.standing[0], fixed=True, widens=False),))
+    assert "but the design fixes that level" in say.dependence(fixed)

@@ -91,7 +91,7 @@ def with_at(fits: Fits, at: float):
 
 
 def test_a_pattern_leaves_the_constant_what_it_was():
-    """The added columns sum to zero, so that the constant is still the mean at x = 0, not that of one month."""
+    """The added columns sum to zero: the constant is still the mean at x = 0, not that of one month."""
     fits = monthly(5, 0.0, season=2.0, step=1.0)
     design = fits.design
     for wide in (with_season(design, "year"), with_step(fits)):

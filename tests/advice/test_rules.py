@@ -46,6 +46,11 @@ LATE = {
     "best rehearsed coverage",
     "promised coverage",
     "name of the advised refit",
+    "advised refit not rehearsed",
+    "held as fitted",
+    "truth of the rehearsed coverage",
+    "robust over ordered standard error",
+    "df of the robust refit over whole series",
 }
 
 
@@ -90,12 +95,12 @@ def known_facts() -> set[str]:
     site = np.repeat(np.arange(24), 6)
     tick = np.tile(np.arange(6), 24)
     xy = rng.uniform(size=(24, 2))
-    x = rng.standard_normal(144)
+    x, z = rng.standard_normal((2, 144))
     y = 2 * x**2 + rng.standard_normal(24)[site] + rng.standard_normal(144)
     names: set[str] = set()
     arm = (site % 2).astype(float)
     for more in ({"xy": xy, "site": site}, {"series": site, "tick": tick}):
-        design = make.design({"arm": arm, "x": x}, groups={"well": site}, **more)
+        design = make.design({"arm": arm, "x": x, "z": z}, groups={"well": site}, **more)
         f = make.fits(design, y)
         with one_thread():
             evidence = gather(f)
@@ -116,7 +121,15 @@ def known_facts() -> set[str]:
 
 def test_every_fact_in_the_table_is_one_that_facts_gives():
     """A misspelt fact would make its rule silent for ever."""
-    given = known_facts() | LATE | {"range over extent"}
+    given = (
+        known_facts()
+        | LATE
+        | {
+            "range over extent",
+            "range at its bound",
+            "likeness along one axis",  # more sites than these designs have
+        }
+    )
     for rule in RULES:
         inside = {part.split("}")[0] for part in rule.because.split("{")[1:]}
         assert set(rule.when.names) | inside | ({rule.then.at} - {""}) <= given, rule.id

@@ -15,6 +15,26 @@ DATA = (
         "strong",
     ),
     Rule(
+        "two-valued-response",
+        fact("response of two values"),
+        Then("caution"),
+        "The response takes two values: coefficients are differences of a probability, rows spread as that "
+        "probability does, and shares and correlations are on its own bounded scale. Intervals hold in large "
+        "samples where unequal spread is allowed for; nothing is claimed about odds.",
+        "white-1980, mackinnon-white-1985",
+        "strong",
+    ),
+    Rule(
+        "count-response",
+        fact("response of counts"),
+        Then("caution"),
+        "The response looks like counts: coefficients are differences of a mean count, and rows of a larger "
+        "mean spread more. Intervals hold in large samples where unequal spread is allowed for; nothing is "
+        "claimed about rates or ratios.",
+        "white-1980, mackinnon-white-1985",
+        "strong",
+    ),
+    Rule(
         "outlying-rows",
         fact("outlying rows"),
         Then("caution"),

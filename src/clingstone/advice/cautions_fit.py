@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from clingstone.advice.expressions import fact
-from clingstone.advice.rule import GROUP, SERIAL, Rule, Then
+from clingstone.advice.rule import GROUP, SERIAL, SPATIAL, Rule, Then
 
 FIT = (
     Rule(
@@ -108,6 +108,15 @@ FIT = (
         "Different series move together at one time, and the advised refit takes series as independent of "
         "each other: effects of the times in the model would carry that.",
         "driscoll-kraay-1998, hoechle-2007",
+        "moderate",
+    ),
+    Rule(
+        "one-axis",
+        SPATIAL & fact("likeness along one axis"),
+        Then("caution"),
+        "Places are more alike along one axis of the map than across it; a dependence that fades with "
+        "distance alone is then only roughly right.",
+        "cliff-ord-1981",
         "moderate",
     ),
     Rule(

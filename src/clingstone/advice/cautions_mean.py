@@ -81,6 +81,26 @@ MEAN = (
         "strong",
     ),
     Rule(
+        "predictors-differ-together",
+        GROUP & fact("predictors differ together") & ~fact("between differs from within"),
+        Then("caution"),
+        "Tested at once, the predictors go with the response otherwise between groups of {level of the "
+        "predictors together} than within them ({p of the predictors together}), though none stands out: "
+        "pooled coefficients may mix two effects. The refit within and between groups reports both.",
+        "mundlak-1978, bell-jones-2015",
+        "strong",
+    ),
+    Rule(
+        "neighbours-outcomes",
+        SPATIAL & fact("outcomes of neighbours"),
+        Then("caution"),
+        "Outcomes of neighbouring places seem to have a part in the mean, beside what errors do ({p of the "
+        "outcomes of neighbours}). A model that holds them asks another question, of effects that spill "
+        "over, and no refit here answers it.",
+        "anselin-1996, anselin-florax-1995",
+        "moderate",
+    ),
+    Rule(
         "spatial-confounding",
         SPATIAL & fact("coefficient moves"),
         Then("caution"),

@@ -7,8 +7,27 @@ from clingstone.advice.rule import Rule, Then
 
 REHEARSED = (
     Rule(
+        "not-rehearsed",
+        fact("advised refit not rehearsed"),
+        Then("caution"),
+        "No rehearsal tried {name of the advised refit} on this design: how often its interval holds the "
+        "true value here is not known.",
+        "own",
+        "convention",
+    ),
+    Rule(
+        "fragile",
+        fact("rehearsal fell short") & fact("held as fitted"),
+        Then("caveat"),
+        "Rehearsed on this design, {name of the advised refit} kept its promise under every error model that "
+        "was fitted, but held the true value in only {rehearsed coverage} of replicates under one that was "
+        "not ({truth of the rehearsed coverage}): it leans on its model.",
+        "own",
+        "strong",
+    ),
+    Rule(
         "rehearsal-fell-short",
-        fact("rehearsal fell short") & ~fact("no rehearsed remedy held"),
+        fact("rehearsal fell short") & ~fact("no rehearsed remedy held") & ~fact("held as fitted"),
         Then("caveat"),
         "Rehearsed on this design, {name of the advised refit} held the true value in {rehearsed coverage} "
         "of replicates under one of the error models tried, below the {promised coverage} it promises.",

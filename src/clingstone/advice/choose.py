@@ -200,13 +200,9 @@ def _headline(
     )
     about = say.dependence(ledger, rows, over) or say.unequal(facts)
     if state == "not correctable" and rule is not None:
-        why = f"These data cannot carry a correction: {_lower(say.filled(rule.because, facts))}"
+        why = "These data cannot carry a correction."  # the reason stands first among those below
         return " ".join(part for part in (about, why, *say.doubts(facts)) if part)
     return " ".join(part for part in (about, moved, *say.doubts(facts)) if part)
-
-
-def _lower(text: str) -> str:
-    return text[0].lower() + text[1:]
 
 
 def _levels(facts: Facts, advised: Refit | None, shortlist: Shortlist) -> tuple[str, ...]:
@@ -236,7 +232,8 @@ def _alternatives(
     made = {(r.remedy, r.at): r for r in refits}
     kept: list[Refit] = [advised] if advised is not None else []
     out = []
-    apart = APART if whole.says("between differs from within") else ()
+    mixed = whole.says("between differs from within") or whole.says("predictors differ together")
+    apart = APART if mixed else ()
     order = (REPAIRED, *apart)
     ranked = sorted(
         shortlist.candidates,

@@ -111,6 +111,50 @@ PREFER = (
         "strong",
     ),
     Rule(
+        "robust-over-groups",
+        GROUP
+        & SERIAL
+        & ~SPATIAL
+        & fact("series within groups")
+        & (fact("groups") >= 20)
+        & (fact("df of the robust refit over whole series") >= 4)
+        & (fact("robust over ordered standard error") > 1.5),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
+        "Over {groups} groups the standard error that is robust to any dependence inside them is {robust "
+        "over ordered standard error} times that of a model of the order in time: it leaves something out.",
+        "hansen-2007, kezdi-2003, barr-2013",
+        "moderate",
+    ),
+    Rule(
+        "robust-over-series",
+        SERIAL
+        & ~GROUP
+        & ~SPATIAL
+        & (fact("series") >= 20)
+        & (fact("df of the robust refit over whole series") >= 4)
+        & (fact("robust over ordered standard error") > 1.5),
+        Then("prefer", "cluster-robust", at="series level", firm=True),
+        "Over {series} series the standard error that is robust to any dependence inside them is {robust "
+        "over ordered standard error} times that of a model of the order in time: it leaves something out.",
+        "hansen-2007, kezdi-2003",
+        "moderate",
+    ),
+    Rule(
+        "own-estimates",
+        GROUP
+        & ~SPATIAL
+        & ~fact("focus at group level")
+        & (fact("df of the robust refit") < 4)
+        & (SLOPES | (fact("robust over mixed standard error") > 1.5))
+        & ~fact("slope model settled"),
+        Then("prefer", "group-t", at="group level"),
+        "Slopes seem to differ between groups, and the robust covariance has only {df of the robust refit} "
+        "degrees of freedom: an estimate from each group and a t over them rests on neither a model of the "
+        "groups nor one of their order in time.",
+        "ibragimov-muller-2010",
+        "moderate",
+    ),
+    Rule(
         "several-structures",
         (GROUP & SERIAL) | (GROUP & SPATIAL) | (SERIAL & SPATIAL),
         Then("prefer", "joint"),
@@ -312,6 +356,24 @@ PREFER = (
         "A correlation that fades geometrically fits the {rows in the longest series} rows of the longest "
         "series, and a model that fits gives the shorter interval.",
         "park-mitchell-1980, lazarus-2018",
+        "moderate",
+    ),
+    Rule(
+        "places-that-touch",
+        SPATIAL & ~GROUP & ~SERIAL & fact("neighbours by borders or pairs"),
+        Then("prefer", "spatial-error"),
+        "Neighbours were given as borders or pairs: an error that passes along them asks for no distance "
+        "between places.",
+        "dormann-2007, ord-1975",
+        "moderate",
+    ),
+    Rule(
+        "range-not-found",
+        SPATIAL & ~GROUP & ~SERIAL & fact("range at its bound"),
+        Then("prefer", "spatial-components"),
+        "The range of the dependence was estimated at the end of what is tried, and a fitted covariance "
+        "leans on it: spatial components hold their level over every dependence up to a stated strength.",
+        "muller-watson-2022",
         "moderate",
     ),
     Rule(

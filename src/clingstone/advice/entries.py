@@ -74,13 +74,19 @@ class Advice:
 @dataclass(frozen=True)
 class Score:
     """What a rehearsal found of one remedy: smallest coverage over the plausible set, its Monte-Carlo
-    standard error, and the mean width relative to the ordinary interval, over the focus terms."""
+    standard error, and the mean width relative to the ordinary interval, over the focus terms.
+
+    fitted : smallest coverage over the truths that were fitted, without the different one. truth : the
+    name of the truth with the smallest.
+    """
 
     remedy: str
     at: str
     coverage: float
     mcse: float
     width: float
+    fitted: float = float("nan")
+    truth: str = ""
 
 
 @dataclass(frozen=True)

@@ -11,15 +11,19 @@ from clingstone.advice.groups import columns, group_facts
 from clingstone.advice.mean import Missing, missing_part
 from clingstone.advice.named import Fact, named, words, yes
 from clingstone.advice.order import order_facts
+from clingstone.advice.places import place_facts
+from clingstone.advice.response import response_facts
 from clingstone.advice.smooth import along_time
 from clingstone.advice.structures import FAMILIES, covered
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
-from clingstone.display import listed, percent
+from clingstone.display import listed, p_value, percent
+from clingstone.evidence.endogeneity import TOGETHER
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.groups import BY
 from clingstone.ledger.ledger import Ledger, focus_rows, focus_terms
 from clingstone.ledger.standing import LEVEL, MOST
+from clingstone.maths.once import kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits
 from clingstone.run import Settings
@@ -97,7 +101,8 @@ def _facts(
         *_design_facts(design, ledger, fits.run.limits),
         *group_facts(design, fits, ledger),
         *order_facts(fits),
-        *_spatial_facts(design, ledger),
+        *place_facts(fits, evidence, ledger, fits.run.limits),
+        *response_facts(fits),
         *_consequence_facts(ledger, focus, settings.material),
         *_evidence_facts(evidence),
         *mean_facts(missing),
@@ -151,7 +156,7 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
             named("series", number),
             yes("serial estimable", enough, "the series are long or many enough for a correlation in time"),
             yes("times shared", bool(series.ties), "rows of one series share a time"),
-            *_periods(design, series),
+            *kept(design, ("periods",), lambda: _periods(design, series)),
             yes("regular times", series.spacing != "irregular", f"spacing of the times: {series.spacing}"),
             words("series level", _named(design, series)),
         ]
@@ -162,12 +167,6 @@ def _design_facts(design: Design, ledger: Ledger, limits: Limits) -> list[Fact]:
         least = limits.groups_estimate if around else limits.serial_estimate_series
         enough = most >= least
         out.append(yes("series can be clusters", enough, f"{most} clusters hold whole series"))
-    if design.spatial is not None:
-        sites = design.spatial.count
-        out += [
-            named("sites", sites),
-            yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
-        ]
     return out
 
 
@@ -201,24 +200,6 @@ def _holds(level: Partition, series: Series) -> bool:
     return level.relation(series.part) in ("same", "nests")
 
 
-def _spatial_facts(design: Design, ledger: Ledger) -> list[Fact]:
-    reach = ledger.parameter("spatial", "practical range")
-    standing = ledger.of("spatial")
-    if reach is None or standing is None or not covered(standing):
-        return []
-    if design.spatial is None or not design.spatial.extent > 0 or not np.isfinite(reach.estimate):
-        return []
-    ratio = reach.estimate / design.spatial.extent
-    return [
-        named(
-            "range over extent",
-            ratio,
-            "of the map's width",
-            percent(ratio) if ratio < 1 else "more than 100 %",
-        )
-    ]
-
-
 def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[float, float]) -> list[Fact]:
     out = []
     largest = None
@@ -245,7 +226,7 @@ def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[f
 
 def _evidence_facts(evidence: Evidence) -> list[Fact]:
     pairs = {"outlying rows": "outliers", "common shocks": "common-shocks"}
-    out = [*_spread_facts(evidence), *_slope_facts(evidence), *_clock_facts(evidence)]
+    out = [*_spread_facts(evidence), *_slope_facts(evidence), *_clock_facts(evidence), *_together(evidence)]
     for name, test in pairs.items():
         finding = evidence.get(test)
         if finding is not None and finding.verdict != "not applicable":
@@ -283,6 +264,23 @@ def _slope_facts(evidence: Evidence) -> list[Fact]:
         yes("slopes differ", best is not None, said),
         words("name of the slope", name),
         words("level of the slopes", level),
+    ]
+
+
+def _together(evidence: Evidence) -> list[Fact]:
+    """Whether the predictors, tested at once, mean another thing between groups than within them."""
+    found = [
+        f
+        for f in evidence
+        if f.test == "group-endogeneity" and f.about.startswith(TOGETHER + BY) and np.isfinite(f.p)
+    ]
+    best = min(found, key=lambda f: f.p, default=None)
+    if best is None:
+        return []
+    return [
+        yes("predictors differ together", best.p * len(found) < LEVEL, best.sentence),
+        named("p of the predictors together", best.p, text=p_value(best.p)),
+        words("level of the predictors together", best.about.rpartition(BY)[2]),
     ]
 
 

@@ -60,37 +60,73 @@ def _sentence(ledger: Ledger, s: Standing, rows: float, over: float) -> str:
     start = f"The {named}" if s.key != SITE else "Rows of one place"
     share = ledger.share(s.key)
     if share is None:
-        return f"{start} {_verb(s)}; how strongly cannot be sized."
-    return f"{start} {_verb(s)}: they share {_amount(share)} of what the model leaves over."
+        return _unsized(start, s)
+    if s.verdict != "present":
+        return _unsettled(start, s, *_room(share))
+    return f"{start} hang together: they share {_amount(share)} of what the model leaves over."
 
 
 def _serial(ledger: Ledger, s: Standing, rows: float) -> str:
     rho = ledger.parameter(s.key, "ρ")
+    start = "Rows that follow each other in time"
     if rho is None:
-        return f"Rows that follow each other in time {_verb(s)}; how strongly cannot be sized."
+        return _unsized(start, s)
+    if s.verdict != "present":
+        first = f"their correlation is estimated at {_near_one(rho.estimate)} {rho.unit}"
+        return _unsettled(start, s, first, f" and could be up to {_near_one(rho.high)}")
     half = ledger.parameter(s.key, "half-life")
     reach = f", half of it gone after {_with_unit(half)}" if half is not None and half.estimate > 0 else ""
     if rho.estimate > 0.5 ** (1 / rows):
         reach = ", hardly fading within these data"
-    return f"Rows that follow each other in time {_verb(s)}: correlation {_figure(rho)} {rho.unit}{reach}."
+    return f"{start} hang together: correlation {_figure(rho)} {rho.unit}{reach}."
 
 
 def _spatial(ledger: Ledger, s: Standing, over: float) -> str:
     share, reach = ledger.share(s.key), ledger.parameter(s.key, "practical range")
     if share is None:
-        return f"Near places {_verb(s)}; how strongly cannot be sized."
+        return _unsized("Near places", s)
+    if s.verdict != "present":
+        return _unsettled("Near places", s, *_room(share))
     out = "" if reach is None or not np.isfinite(reach.estimate) else f", out to about {_with_unit(reach)}"
     if over > 1:
         out = ", hardly fading within the map"
-    return f"Near places {_verb(s)}: they share {_amount(share)} of what the model leaves over{out}."
+    return f"Near places hang together: they share {_amount(share)} of what the model leaves over{out}."
 
 
 def _amount(share: Share) -> str:
     return f"{percent(share.share)} ({percent_span(share.low, share.high)})"
 
 
-def _verb(s: Standing) -> str:
-    return "hang together" if s.verdict == "present" else "may hang together"
+def _room(share: Share) -> tuple[str, str]:
+    """How large a share that was not seen is estimated, and how large it could be."""
+    if share.share < 0.005:
+        none = "none of what the model leaves over is estimated to be theirs"
+        return none, f", but {_up_to(share)} could be"
+    return (
+        f"their share of what the model leaves over is estimated at {percent(share.share)}",
+        f" and could be {_up_to(share)}",
+    )
+
+
+def _up_to(share: Share) -> str:
+    return f"up to {percent(share.high)}"
+
+
+def _unsettled(start: str, s: Standing, estimate: str, room: str) -> str:
+    """A structure that is covered although it was not seen: because it could matter, or by design."""
+    if s.fixed and not s.widens:
+        return f"{start} were not seen to hang together, but the design fixes that level: {estimate}{room}."
+    return f"Whether {_lower(start)} hang together is not settled: {estimate}{room}."
+
+
+def _unsized(start: str, s: Standing) -> str:
+    if s.verdict == "present":
+        return f"{start} hang together; how strongly cannot be sized."
+    return f"Whether {_lower(start)} hang together is not settled, and how strongly cannot be sized."
+
+
+def _lower(text: str) -> str:
+    return text[0].lower() + text[1:]
 
 
 def _figure(q: Parameter) -> str:

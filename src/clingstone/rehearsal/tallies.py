@@ -10,7 +10,7 @@ import numpy as np
 
 from clingstone.advice.entries import Score, Scores
 from clingstone.rehearsal.study import FIELDS, Counts, Study
-from clingstone.rehearsal.truths import Truth
+from clingstone.rehearsal.truths import DIFFERENT, Truth
 
 
 @dataclass(frozen=True)
@@ -213,5 +213,7 @@ def scores(rows: tuple[Tally, ...], confidence: float) -> Scores:
         own = [t for t in rows if (t.remedy, t.at) == (remedy, at)]
         worst = min(own, key=lambda t: t.coverage)
         widths = [t.relative for t in own]
-        out.append(Score(remedy, at, worst.coverage, worst.coverage_mcse, float(np.mean(widths))))
+        fitted = min((t.coverage for t in own if t.truth not in DIFFERENT), default=float("nan"))
+        width = float(np.mean(widths))
+        out.append(Score(remedy, at, worst.coverage, worst.coverage_mcse, width, fitted, worst.truth))
     return Scores(tuple(out), confidence)
