@@ -7,7 +7,9 @@ import pytest
 from scipy.spatial.distance import pdist, squareform
 
 from clingstone.covariance.vecchia import Nearest
+from clingstone.maths import reml
 from clingstone.maths.once import Array
+from clingstone.maths.search import minimise
 from clingstone.needs import Limits, NotSupported
 
 from .worlds import coefficients, fits
@@ -89,3 +91,21 @@ def test_regions_above_places_are_refused_with_the_reason() -> None:
         near.algebra({"group:region", "spatial"})
     assert near.full_node in ({"group:region"}, {"spatial"})
     assert near.left_out
+
+
+@pytest.mark.parametrize(("seed", "reach", "share"), [(0, 0.02, 0.6), (6, 0.02, 0.6), (16, 0.15, 0.1)])
+def test_what_a_part_of_the_places_does_not_show_is_found(seed: int, reach: float, share: float) -> None:
+    """A third of the places gives the search its start; a range shorter than their distances hides there."""
+    rng = np.random.default_rng(seed)
+    P = rng.uniform(size=(360, 2))
+    x = rng.standard_normal(360)
+    V = share * np.exp(-squareform(pdist(P)) / reach) + (1 - share) * np.eye(360)
+    one = fits(np.linalg.cholesky(V) @ rng.standard_normal(360), P[:, 0], x, xy=P)
+    algebra, m = one.algebra({"spatial"}), one.design.m
+    assert algebra.heavy
+
+    def value(theta: Array) -> float:
+        return float(reml.criterion(algebra.gram(theta, one.response), m)[0])
+
+    everywhere = minimise(value, algebra.parameters)
+    assert -2 * one[{"spatial"}].loglik[0] == pytest.approx(everywhere.value, abs=1e-5)

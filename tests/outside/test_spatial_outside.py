@@ -320,8 +320,8 @@ def test_restricted_likelihood_equals_its_dense_twin() -> None:
     assert profile.criterion(lam, 46, True)[0] == pytest.approx(twin, rel=1e-10)
 
 
-# spdep: localmoran.exact(lm(CRIME ~ INC + HOVAL), nb = queen, style = "W"): n·contribution, exact two-sided p,
-# expectation and variance under independence, of places 1, 2, 3, 21, 34 and 49
+# spdep: localmoran.exact(lm(CRIME ~ INC + HOVAL), nb = queen, style = "W"): n·contribution, exact
+# two-sided p, expectation and variance under independence, of places 1, 2, 3, 21, 34 and 49
 LOCAL = {
     1: (-0.0126787461838462, 0.9484156409026965, -0.00792109050553204, 0.435650559232062),
     2: (0.2500902412035614, 0.4442507421344125, -0.01252598606165255, 0.313520385171467),
@@ -349,8 +349,8 @@ def test_local_contributions_have_the_exact_law_of_spdep() -> None:
     # T = z'Sz/z'z with two eigenvalues a, b: E T = (a + b)/m, E T² = (3a² + 3b² + 2ab)/(m(m + 2))
     mean = (law.low + law.high) / m
     square = (2 * (law.low**2 + law.high**2) + (law.low + law.high) ** 2) / (m * (m + 2))
-    for place, (I, tail, expected, variance) in LOCAL.items():
-        assert value[place - 1] == pytest.approx(I, rel=1e-10)
+    for place, (found, tail, expected, variance) in LOCAL.items():
+        assert value[place - 1] == pytest.approx(found, rel=1e-10)
         assert p[place - 1] == pytest.approx(tail, rel=1e-8)
         assert n * mean[place - 1] == pytest.approx(expected, rel=1e-10)
         assert n**2 * (square - mean**2)[place - 1] == pytest.approx(variance, rel=1e-10)

@@ -35,7 +35,7 @@ from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Limits, NotSupported
 
-HEAVY_SITES = 800
+HEAVY_SITES = 300
 MANY_ROWS = 5000  # irregular rows from which their links are summed up by length
 
 

@@ -282,26 +282,31 @@ class Fits:
 
     def _exact(self, node: Node, algebra: Chosen) -> ErrorModel:
         with self.run.progress("fitting " + ", ".join(sorted(node)), 1) as advance:
-            best = self._search(algebra, self._head_start(node) if algebra.heavy else None)
+            best = self._search(algebra, self._head_start(node) if algebra.heavy else None, thinned=True)
             advance(1)
         sigma2 = reml.scale(algebra.gram(best.theta, self.response), self.design.m)
         theta, bound = best.theta[:, None], best.at_bound[:, None]
         done = np.array([best.converged])
         return self._model(node, theta, sigma2, np.array([best.value]), bound, done, best.history)
 
-    def _search(self, algebra: Chosen, warm: Optimum | None = None) -> Optimum:
-        """The optimum for the first column of y."""
+    def _search(self, algebra: Chosen, warm: Optimum | None = None, thinned: bool = False) -> Optimum:
+        """The optimum for the first column of y; warm, thinned : see ``minimise``."""
         column, m = self.response.column(0), self.design.m
 
         def value(theta: Array) -> float:
             return float(reml.criterion(algebra.gram(theta, column), m)[0])
 
         found = algebra.minimum(column, m, warm)
-        return found if found is not None else minimise(value, algebra.parameters, warm=warm)
+        if found is not None:
+            return found
+        return minimise(value, algebra.parameters, warm=warm, thinned=thinned)
 
     def _head_start(self, node: Node) -> Optimum | None:
         """The optimum for some of the places, its curvature scaled up to all rows; None if too few."""
-        small = Fits(thin(self.response, START_SITES, self.run.child("places to start from")), self.run)
+        sites = self.design.spatial
+        assert sites is not None  # no other algebra is heavy
+        places = min(START_SITES, sites.count // 3)
+        small = Fits(thin(self.response, places, self.run.child("places to start from")), self.run)
         try:
             found = small._search(small.algebra(node))
         except NotSupported:

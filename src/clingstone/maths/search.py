@@ -8,7 +8,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field
+from dataclasses import dataclass, field, replace
 from itertools import pairwise
 from typing import Any, Protocol
 
@@ -66,18 +66,22 @@ def slack(value: float) -> float:
     return 1e-7 + 1e-11 * abs(value)
 
 
-def minimise(f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None) -> Optimum:
+def minimise(
+    f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None, thinned: bool = False
+) -> Optimum:
     """The smallest value of f over the box of the axes.
 
     warm : the optimum of a similar criterion; the search then starts from there alone, with its
     curvature. Without it the best three of the product of the axes' starts are followed, those left out
     that lie in the valley of an optimum already found.
+    thinned : ``warm`` comes from a part of the data, which may not show what all of them show (a range
+    shorter than the part's distances): the starts are tried beside it, and other valleys looked for.
     """
     if not axes:
         return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
     if len(axes) == 1:
         return _line(f, axes[0])
-    return _several(f, axes, warm)
+    return _several(f, axes, warm, thinned)
 
 
 def _line(f: Criterion, axis: Axis) -> Optimum:
@@ -106,11 +110,12 @@ def _line(f: Criterion, axis: Axis) -> Optimum:
     return Optimum(np.array([at]), float(best), np.array([bound]), True, (f"{counted.calls} evaluations",))
 
 
-def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None) -> Optimum:
+def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, thinned: bool) -> Optimum:
     box = np.array([[a.low, a.high] for a in axes])
     counted = _Counted(f, box)
     free = np.ones(len(axes), dtype=bool)
     if warm is not None:
+        warm = _best_start(counted, axes, warm) if thinned else warm
         descend: Descent = _Quasi(warm.curvature)
         runs = [descend(counted, warm.start, free, box)]
     else:
@@ -120,7 +125,7 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None) -> Optimu
             known = next((run for run in runs if _valley(counted, start, *run)), None)
             runs.append(known or _descend(counted, start, free, box))
     theta, value = min(runs, key=lambda run: float(run[1]))
-    if warm is None:
+    if warm is None or thinned:
         theta, value = _look_around(counted, axes, theta, value, box)
     theta, value, pinned = _pin(counted, axes, theta, value, box, descend)
     edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
@@ -158,6 +163,16 @@ def _valley(f: Criterion, start: Array, theta: Array, value: float) -> bool:
     """
     walk = [f(start + share * (theta - start)) for share in (0.0, 0.2, 0.4, 0.6, 0.8)]
     return all(after < before for before, after in pairwise([*walk, value]))
+
+
+def _best_start(f: Criterion, axes: Sequence[Axis], warm: Optimum) -> Optimum:
+    """``warm``, or the best of the axes' starts where that is better, with the curvature found there."""
+    (start,) = _starts(f, axes, 1)
+    if f(start) >= f(warm.start):
+        return warm
+    H = hessian(f, start, 0.05)
+    bent = bool(np.linalg.eigvalsh(H)[0] > 0)
+    return replace(warm, start=start, curvature=H if bent else np.diag(np.maximum(np.abs(np.diag(H)), 1.0)))
 
 
 def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
