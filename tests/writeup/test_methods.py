@@ -8,8 +8,9 @@ from dataclasses import replace
 import pytest
 
 from clingstone.display import number
+from clingstone.writeup.draft import draft
 from clingstone.writeup.items import ITEMS
-from clingstone.writeup.methods import checklist, methods_items, methods_text, report_this
+from clingstone.writeup.methods import methods_text, report_this
 from clingstone.writeup.read import term_of
 from clingstone.writeup.sentences import sections
 from tests.writeup import fixture
@@ -20,7 +21,7 @@ MAKERS = [fixture.trial, fixture.stream, fixture.wells]
 @pytest.mark.parametrize("make", MAKERS)
 def test_every_item_is_answered_or_left_as_a_visible_blank(make):
     results = make()
-    answered = {item for _, items in methods_items(results) for item in items}
+    answered = {item for part in sections(results) for s in part.sentences for item in s.items}
     assert answered | ({"M14"} if not results.case.group else set()) == set(ITEMS)
     text = methods_text(results)
     for part in sections(results):
@@ -29,7 +30,10 @@ def test_every_item_is_answered_or_left_as_a_visible_blank(make):
                 assert s.text.startswith("[")
                 assert s.text.endswith(": to be filled in]")
                 assert s.text in text
-    assert [item for item, _, _ in checklist(results)] == list(ITEMS)
+    paper = draft(results)
+    assert [row[0].text for row in paper.items.rows] == list(ITEMS)
+    named = {f"{part.title} {k}" for part in sections(results) for k in range(1, len(part.sentences) + 1)}
+    assert {row[0].text for row in paper.answers.rows} == named
 
 
 @pytest.mark.parametrize("make", MAKERS)
@@ -115,8 +119,9 @@ def test_what_cannot_be_corrected_gives_no_estimate():
 def test_markdown_cannot_be_broken_by_labels():
     text = methods_text(fixture.trial("|*`<img src=x>`*"))
     assert "<img" not in re.sub(r"\\<", "", text)
-    rows = [line for line in text.splitlines() if line.startswith("| M")]
-    assert all(len(re.findall(r"(?<!\\)\|", row)) == 4 for row in rows)
+    rows = [line for line in text.splitlines() if re.match(r"\| M\d", line)]
+    assert len(rows) == len(ITEMS)
+    assert all(len(re.findall(r"(?<!\\)\|", row)) == 5 for row in rows)
 
 
 def test_digits_follow_the_advised_error():

@@ -102,7 +102,7 @@ STATES = (
         ),
         "{groups} groups are too few for any correction between them; as a factor in the model they need "
         "none.",
-        "gomes-2022, oberpriller-2021",
+        "gomes-2022, oberpriller-2022",
         "moderate",
     ),
     Rule(

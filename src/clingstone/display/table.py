@@ -70,6 +70,10 @@ class Table:
         columns = tuple(self.columns[j] for j in kept)
         return Table(self.caption, columns, tuple(tuple(r[j] for j in kept) for r in self.rows), self.note)
 
+    @property
+    def heads(self) -> list[str]:
+        return [clean(c.head) for c in self.columns]
+
     def shown(self) -> list[list[str]]:
         """Cell texts, decimals aligned, column by column turned back into rows."""
         texts = [[clean(c.text) for c in row] for row in self.rows]
@@ -82,7 +86,7 @@ class Table:
     def to_text(self, width: int = COLUMNS, indent: str = "  ") -> str:
         """Plain text within ``width`` columns: long words wrap, and what cannot fit is stacked."""
         body = self.shown()
-        heads = [c.head for c in self.columns]
+        heads = self.heads
         widths = [max(columns_of(r[j]) for r in [heads, *body]) for j in range(len(heads))]
         fitted = _shrink(widths, [c.align == "left" for c in self.columns], width - len(indent))
         if fitted is None:
@@ -112,7 +116,7 @@ class Table:
         """A table element with a caption and scoped heads; every text is escaped."""
         kinds = ["" if c.align == "left" else ' class="figure"' for c in self.columns]
         heads = "".join(
-            f'<th scope="col"{k}>{escape(c.head)}</th>' for c, k in zip(self.columns, kinds, strict=True)
+            f'<th scope="col"{k}>{escape(head)}</th>' for head, k in zip(self.heads, kinds, strict=True)
         )
         lines = [f"<table><caption>{escape(clean(self.caption))}</caption>"]
         lines.append(f"<thead><tr>{heads}</tr></thead><tbody>")
@@ -129,7 +133,7 @@ class Table:
         """A tabular with head rules only (booktabs); every text is escaped."""
         spec = "".join("l" if c.align == "left" else "r" for c in self.columns)
         lines = [f"% {clean(self.caption)}", f"\\begin{{tabular}}{{{spec}}}", "\\toprule"]
-        lines += [" & ".join(latex(c.head) for c in self.columns) + r" \\", "\\midrule"]
+        lines += [" & ".join(map(latex, self.heads)) + r" \\", "\\midrule"]
         lines += [" & ".join(latex(t) for t in row) + r" \\" for row in self.shown()]
         return "\n".join([*lines, "\\bottomrule", "\\end{tabular}"])
 
@@ -185,6 +189,17 @@ _LATEX = {
     FIGURE: r"\phantom{0}", POINT: r"\phantom{.}", "ρ": r"$\rho$", "—": "---",
     "⁻": r"\textsuperscript{$-$}",
     **{s: rf"\textsuperscript{{{d}}}" for d, s in enumerate("⁰¹²³⁴⁵⁶⁷⁸⁹")},
+    **{s: rf"\textsubscript{{{d}}}" for d, s in enumerate("₀₁₂₃₄₅₆₇₈₉")},
+    **{s: rf"$\{name}$" for s, name in zip("αβγδεηθκλμνπστφχψωΓΔΘΛΣΦΨΩ", (
+        "alpha", "beta", "gamma", "delta", "varepsilon", "eta", "theta", "kappa", "lambda", "mu", "nu", "pi",
+        "sigma", "tau", "varphi", "chi", "psi", "omega", "Gamma", "Delta", "Theta", "Lambda", "Sigma", "Phi",
+        "Psi", "Omega"), strict=True)},
+    **{s: rf"$\{name}$" for s, name in zip("±·√≥≤→↔‖⌈⌉⌊⌋", (
+        "pm", "cdot", "surd", "ge", "le", "to", "leftrightarrow", "Vert", "lceil", "rceil", "lfloor",
+        "rfloor"), strict=True)},
+    "′": "$'$", "…": r"\ldots{}", "–": "--", "½": r"$\frac12$", "⅔": r"$\frac23$", "°": r"$^\circ$",
+    "⁺": r"\textsuperscript{+}", "ᵢ": r"\textsubscript{i}",
+    "₍": r"\textsubscript{(}", "₎": r"\textsubscript{)}",
 }  # fmt: skip
 
 

@@ -6,6 +6,7 @@ confirmed in an outside text.
 
 from __future__ import annotations
 
+import json
 import re
 from collections.abc import Iterable, Mapping
 from dataclasses import dataclass
@@ -14,6 +15,7 @@ from importlib.resources import files
 
 from clingstone.display import listed
 from clingstone.results import Reference, Results
+from clingstone.writeup.items import GUIDELINES
 
 OWN = "own"  # the source of a rule that rests on this package's own reasoning; no reference
 
@@ -72,11 +74,12 @@ def keys_in(text: str) -> tuple[str, ...]:
 
 
 def used(results: Results) -> tuple[str, ...]:
-    """Keys of every finding with numbers, refit and reason, each once, in order of first use."""
+    """Keys of every finding with numbers, refit, reason and reporting guideline, each once, by first use."""
     fields: Iterable[str] = (
         *(f.source for f in results.evidence if f.verdict != "not applicable"),
         *(fit.account.source for fit in results.refits),
         *(reason.source for reason in (*results.advice.because, *results.advice.cautions)),
+        *GUIDELINES.values(),
     )
     return tuple(dict.fromkeys(key for text in fields for key in keys_in(text)))
 
@@ -100,20 +103,59 @@ def _as_given(words: str) -> Reference:
 
 
 def bibtex(results: Results) -> str:
-    """references.bib: the sources of an examination, and the software itself."""
-    entries = [r.bibtex for r in references_of(results)]
-    return "\n\n".join([*entries, software(results)]) + "\n"
+    """references.bib: the sources of an examination, and the software with versions."""
+    return "\n\n".join([*(r.bibtex for r in references_of(results)), *software(results)]) + "\n"
 
 
-def software(results: Results) -> str:
-    """The entry that cites this software at its version."""
-    lines = (
-        "@software{clingstone,",
-        "  title = {clingstone: which rows of a regression hang together, and what to report},",
-        f"  version = {{{results.clingstone}}},",
-        "}",
+TITLE = "clingstone: which rows of a regression hang together, and what to report"
+
+
+def versions(results: Results) -> dict[str, str]:
+    """Title → version of this software and of those that its numbers rest on."""
+    others = {name: v for name, v in results.versions.items() if name != "clingstone"}
+    return {TITLE: results.clingstone, **others}
+
+
+def software(results: Results) -> tuple[str, ...]:
+    """The entries that cite this software and the libraries below it, each at its version."""
+    return tuple(
+        f"@software{{{_software_key(title)},\n  title = {{{title}}},\n  version = {{{v}}},\n}}"
+        for title, v in versions(results).items()
     )
-    return "\n".join(lines)
+
+
+def _software_key(title: str) -> str:
+    return title.partition(":")[0].lower()
+
+
+CSL_KIND = {"article": "article-journal", "book": "book", "incollection": "chapter"}
+CSL_FIELD = {
+    "title": "title", "journal": "container-title", "booktitle": "container-title", "volume": "volume",
+    "number": "issue", "pages": "page", "publisher": "publisher", "doi": "DOI",
+}  # fmt: skip
+
+
+def csl_json(results: Results) -> str:
+    """references.json: the same entries as CSL-JSON, which reference managers and pandoc read."""
+    items = [_csl(source(key)) if key in sources() else {"id": key, "type": "document", "title": key}
+             for key in sorted(used(results))]  # fmt: skip
+    items += [
+        {"id": _software_key(title), "type": "software", "title": title, "version": v}
+        for title, v in versions(results).items()
+    ]
+    return json.dumps(items, ensure_ascii=False, indent=1) + "\n"
+
+
+def _csl(entry: Source) -> dict[str, object]:
+    get = {k: v.replace(r"\&", "&").replace("--", "–") for k, v in entry.fields.items()}
+    names = get["author"].split(" and ")
+    people = [n.partition(", ") for n in names if n != "others"]
+    out: dict[str, object] = {"id": entry.key, "type": CSL_KIND[entry.kind]}
+    out["author"] = [{"family": f, "given": g} if g else {"literal": f} for f, _, g in people]
+    if "others" in names:
+        out["author"] = [*out["author"], {"literal": "others"}]  # type: ignore[misc]
+    out["issued"] = {"date-parts": [[int(get["year"])]]}
+    return out | {CSL_FIELD[k]: v for k, v in get.items() if k in CSL_FIELD}
 
 
 def cite(text: str) -> str:

@@ -26,6 +26,34 @@ ITEMS: Mapping[str, str] = {
     "M18": "to which groups, places and times the result is meant to apply",
 }
 
+# Where published guidelines ask for the same, by their own numbers. Sources: GUIDELINES.
+NUMBERED: Mapping[str, str] = {
+    "M1": "CONSORT for cluster trials 2a, 3a; LEVEL 2, 4",
+    "M2": "ARRIVE 1b, 2a, 3c",
+    "M3": "CONSORT for cluster trials 13a; LEVEL 5a, 5b",
+    "M4": "STROBE 12c, 13; ARRIVE 3b; LEVEL 5c",
+    "M5": "LEVEL 3, 6a, 6b",
+    "M6": "CONSORT for cluster trials 12a; STROBE 12d",
+    "M7": "LEVEL 8",
+    "M8": "",
+    "M9": "CONSORT for cluster trials 7a, 17a; LEVEL 7",
+    "M10": "",
+    "M11": "LEVEL 8",
+    "M12": "ARRIVE 7b",
+    "M13": "STROBE 16a; CONSORT for cluster trials 17a",
+    "M14": "",
+    "M15": "STROBE 12e, 17",
+    "M16": "CONSORT for cluster trials 12a",
+    "M17": "ARRIVE 7a",
+    "M18": "CONSORT for cluster trials 21",
+}
+GUIDELINES: Mapping[str, str] = {
+    "CONSORT for cluster trials": "campbell-2012",
+    "LEVEL": "monsalves-2020",
+    "ARRIVE": "percie-du-sert-2020",
+    "STROBE": "von-elm-2007",
+}
+
 
 @dataclass(frozen=True)
 class Sentence:

@@ -1,60 +1,41 @@
-"""The methods text as Markdown, its checklist, and the two sentences for the paper."""
+"""The methods text as Markdown, and the two sentences for the paper."""
 
 from __future__ import annotations
 
 import re
 
-from clingstone.display import clean, count, listed, span
+from clingstone.display import Table, clean, count, listed, span
 from clingstone.ledger.ledger import Parameter
 from clingstone.ledger.sizes import AT_ZERO
 from clingstone.results import Results
 from clingstone.writeup import strength
-from clingstone.writeup.bibliography import references_of
-from clingstone.writeup.items import ITEMS
+from clingstone.writeup.draft import draft
 from clingstone.writeup.naming import named, subject
 from clingstone.writeup.outcome import estimate_words
 from clingstone.writeup.plate import many
 from clingstone.writeup.read import advised, decimals, has_freedom, level_percent, ordinary, row_of, served
-from clingstone.writeup.sentences import sections
 
 SPOKEN = 3  # focus rows named in the two sentences
 
 
-def methods_items(results: Results) -> tuple[tuple[str, tuple[str, ...]], ...]:
-    """Every sentence of the methods text with the keys of the reporting items that it answers."""
-    return tuple((s.text, s.items) for part in sections(results) for s in part.sentences)
-
-
-def checklist(results: Results) -> tuple[tuple[str, str, str], ...]:
-    """Item, what it asks, and where the text answers it: section titles, or what is left to fill in."""
-    rows = []
-    parts = sections(results)
-    for item, words in ITEMS.items():
-        places = [
-            f"{part.title}{' (blank left)' if s.blank else ''}"
-            for part in parts
-            for s in part.sentences
-            if item in s.items
-        ]
-        rows.append((item, words, "; ".join(dict.fromkeys(places))))
-    return tuple(rows)
-
-
 def methods_text(results: Results) -> str:
-    """The whole methods section as Markdown: text, checklist, references."""
-    lines = [f"# Methods: {escaped(results.case.formula or results.case.name)}", ""]
-    lines += [
-        "Draft written from the results. Square brackets mark what only you can know; nothing was guessed.",
-        "",
-    ]
-    for part in sections(results):
-        lines += [f"## {part.title}", ""]
-        lines += [" ".join(escaped(s.text) for s in part.sentences), ""]
-    lines += ["## Reporting items", "", "| item | asks for | answered under |", "|---|---|---|"]
-    lines += [f"| {item} | {asks} | {escaped(where)} |" for item, asks, where in checklist(results)]
-    lines += ["", "## References", ""]
-    lines += [f"- {escaped(r.text)}" for r in references_of(results)]
+    """The whole methods section as Markdown: text, what answers which reporting item, references."""
+    paper = draft(results)
+    lines = [f"# {escaped(paper.title)}", "", paper.note, ""]
+    for part in paper.parts:
+        lines += [f"## {part.title}", "", " ".join(escaped(s.text) for s in part.sentences), ""]
+    for table in (paper.items, paper.answers):
+        lines += [f"## {table.caption}", "", *piped(table), ""]
+        lines += [table.note, ""] if table.note else []
+    lines += ["## References", "", *(f"- {escaped(r.text)}" for r in paper.references)]
     return "\n".join(lines).rstrip() + "\n"
+
+
+def piped(table: Table) -> list[str]:
+    """A table as lines of Markdown."""
+    rows = [table.heads, *table.shown()]
+    lines = ["| " + " | ".join(escaped(text) for text in row) + " |" for row in rows]
+    return [lines[0], "|" + "---|" * len(table.columns), *lines[1:]]
 
 
 def escaped(text: str) -> str:

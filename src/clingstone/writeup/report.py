@@ -15,9 +15,10 @@ from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
 from clingstone.writeup import bandwidths, curves, figures, rehearsed, tables
 from clingstone.writeup.bibliography import cite, references_of, with_source
+from clingstone.writeup.draft import answers, items
 from clingstone.writeup.leading import STRUCTURES, leading, with_most_given
 from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
-from clingstone.writeup.methods import checklist, report_this
+from clingstone.writeup.methods import report_this
 from clingstone.writeup.naming import label_of, pointed_at, with_rows
 from clingstone.writeup.outcome import USUAL, alternatives, tipping_words
 from clingstone.writeup.panels import tree
@@ -81,8 +82,7 @@ def report(results: Results) -> str:
         _table(t) for n in focus_rows(results)[: figures.PANELS] if (t := tables.conventions(results, n))
     ]
     view["bandwidths"] = [_plate(p) for p in bandwidths.plates(results)]
-    rows = [(item, asks, where) for item, asks, where in checklist(results)]
-    view["checklist"] = _table(_plain("Reporting items", ("item", "asks for", "answered under"), rows))
+    view["checklist"] = [_table(items(view["methods"])), _table(answers(view["methods"]))]
     return _environment().get_template("report.html.j2").render(view)
 
 
@@ -153,12 +153,6 @@ def _plate(plate: Plate) -> Mapping[str, Any]:
         "table": _table(shown),
         "note": clean(sentence(plate.note)),
     }
-
-
-def _plain(caption: str, heads: Iterable[str], rows: Iterable[Iterable[str]]) -> Table:
-    from clingstone.display import Column
-
-    return Table.of(caption, [Column(h, h) for h in heads], rows)
 
 
 def _factor(results: Results, name: str) -> str:
