@@ -2,14 +2,18 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 from scipy import stats
 
+from clingstone.covariance.fits import Fits
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import weigh
 from clingstone.ledger.region import loglik
 from clingstone.maths import matern
+from clingstone.needs import Limits
 from clingstone.rehearsal.truths import INNER, draw, errors, truths
 from rehearsal.worlds import stream, trial, truth_of, wells
 
@@ -75,6 +79,19 @@ def test_the_smooth_field_keeps_variance_and_practical_range():
     assert np.abs(got - want).max() < 0.15
     far = matern.kernel(np.array([[0.2 * matern.PRACTICAL[0.5]]]), reach, 1.5)
     assert far[0, 0] == pytest.approx(0.05, abs=1e-3)
+
+
+def test_the_smooth_field_is_drawn_beyond_the_dense_limit_too():
+    f = wells(S=60)
+    few = Fits(f.response, replace(f.run, limits=Limits(dense_sites=50)))
+    truth = truth_of(few, ["spatial"], "smooth field", theta=[np.log(0.2), np.log(2.0)])
+    Y = errors(truth, few, np.random.default_rng(1), 30_000) / np.sqrt(truth.sigma2)
+    reach = 0.2 * matern.PRACTICAL[0.5] / matern.PRACTICAL[1.5]
+    dense = f.algebra(["spatial"]).pieces[0]
+    place = dense.sites.part.codes
+    want = np.eye(60) + 2.0 * matern.kernel(dense.distance, reach, 1.5)[np.ix_(place, place)]
+    # Monte Carlo leaves 3·√(2/30,000) ≈ 0.02 of a variance; 20 earlier places of up to 59 add to it.
+    assert np.abs(np.cov(Y) - want).max() < 0.2
 
 
 def test_spread_follows_the_fitted_values():

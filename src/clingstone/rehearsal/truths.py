@@ -16,6 +16,7 @@ from scipy import stats
 
 from clingstone.covariance.fits import Fits
 from clingstone.covariance.pieces import SerialPiece, SpatialPiece
+from clingstone.covariance.vecchia import NearestPiece
 from clingstone.design.response import Response
 from clingstone.display import number, significant
 from clingstone.ledger.consequence import parts
@@ -216,6 +217,10 @@ def _smooth(piece: SpatialPiece, own: Array, rng: np.random.Generator, B: int) -
     """A Matérn 3/2 field with the variance and the practical range of the piece."""
     size = float(np.sqrt(piece.variance(own[:, None])[0]))
     reach = float(np.exp(own[0])) * matern.PRACTICAL[piece.smoothness] / matern.PRACTICAL[1.5]
+
+    if isinstance(piece, NearestPiece):  # beyond the dense limit: each place given earlier ones near to it
+        smooth = kept(piece.design, ("smooth field", reach), lambda: replace(piece, smoothness=1.5))
+        return smooth.draw(np.array([np.log(reach), own[1]]), rng, B)
 
     def make() -> Array:
         R = matern.kernel(piece.distance, reach, 1.5)
