@@ -63,6 +63,9 @@ class Limits:
     serial_estimate_series: int = 8
     serial_estimate_short: int = 5
     serial_easy_rows: int = 50
+    # Periods that all series share, as the theory lets their number grow; convention.
+    periods_estimate: int = 20
+    periods_easy: int = 50
     # Spatial: distinct sites (Webster & Oliver; common practice for variograms).
     sites_test: int = 8
     sites_verdict: int = 20

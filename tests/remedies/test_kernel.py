@@ -43,7 +43,9 @@ def test_period_remedy_says_what_it_did():
     assert found.account.reference == "fixed-b law of t"
     assert all(row.df_rule == "fixed-b" and 2 < row.df < 20 for row in found.intervals)
     assert any("keeps throughout" in note for note in found.notes)
-    assert "standard error of x1 by lags" in items
+    assert [one.term for one in found.account.bandwidths] == ["x1", "x2"]
+    assert found.account.bandwidths[0].at == (0, 1, 2, 4, 8)
+    assert "standard error of x1 by lags" in dict(found.account.pairs())
 
 
 @pytest.mark.parametrize(

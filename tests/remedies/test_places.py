@@ -216,8 +216,10 @@ def test_positive_kernels_stay_positive_and_others_are_clipped() -> None:
     for kernel in ("spherical", "uniform"):
         found = refit(SpatialHac(kernel=kernel, law="normal", cutoff=0.8), "", run)  # type: ignore[arg-type]
         assert np.linalg.eigvalsh(np.array(found.covariance))[0] >= -1e-12
-    items = dict(refit(SpatialHac(law="independent"), "", run).account.items)
-    assert sum(k.startswith("standard error of x1 at") for k in items) >= 4
+    told = refit(SpatialHac(law="independent"), "", run).account.bandwidths
+    (x1,) = (one for one in told if one.term == "x1")
+    assert x1.what == "cutoff"
+    assert len(x1.at) == len(x1.se) == len(x1.df) >= 4
 
 
 # ---- spatial-components --------------------------------------------------------------------

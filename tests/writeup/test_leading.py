@@ -13,6 +13,7 @@ from clingstone.display import MINUS, NBSP, shortened
 from clingstone.evidence.finding import Curve
 from clingstone.examination import examine
 from clingstone.ledger.ledger import Parameter
+from clingstone.remedies.remedy import ByBandwidth
 from clingstone.writeup import bandwidths, strength
 from clingstone.writeup.leading import leading, with_most_given
 from clingstone.writeup.methods import methods_text, report_this
@@ -237,8 +238,8 @@ def test_without_any_such_finding_the_item_stays_a_blank_unless_a_refit_tells_it
 
 def test_standard_errors_by_lags_are_drawn_as_the_account_tells_them():
     base = fixture.trial()
-    items = (("lags", "4"), ("standard error of arm: treated by lags", "0.71 at 0; 0.9 at 1; 8.5e-01 at 2"))
-    fit = replace(base.refits[2], account=replace(base.refits[2].account, items=items))
+    told = ByBandwidth("arm: treated", "lags", "", (0.0, 1.0, 2.0), (0.71, 0.9, 0.85))
+    fit = replace(base.refits[2], account=replace(base.refits[2].account, bandwidths=(told,)))
     results = replace(base, refits=(*base.refits[:2], fit))
     (plate,) = bandwidths.plates(results)
     assert plate.caption == f"Standard error of “arm: treated” by lags: {fit.name}"
@@ -251,17 +252,17 @@ def test_standard_errors_by_lags_are_drawn_as_the_account_tells_them():
     assert plate.caption in report(results)
 
 
-def test_a_cutoff_keeps_its_unit_and_words_that_are_no_sweep_draw_nothing():
+def test_a_cutoff_keeps_its_unit_and_a_single_bandwidth_draws_nothing():
     fit = fixture.wells().refits[0]
     term = fit.intervals[-1].term
-    items = [(f"standard error of {term} at {at} km", f"{se} with 8.1 df") for at, se in ((2, 0.1), (4, 0.2))]
-    found = bandwidths.sweep(replace(fit, account=replace(fit.account, items=tuple(items))), term, 0.05)
+    told = ByBandwidth(term, "cutoff", "km", (2.0, 4.0), (0.1, 0.2), (8.1, 7.2))
+    found = bandwidths.sweep(replace(fit, account=replace(fit.account, bandwidths=(told,))), term, 0.05)
     assert (found.what, found.at, found.se) == ("cutoff (km)", ("2", "4"), (0.1, 0.2))
-    assert (
-        bandwidths.sweep(replace(fit, account=replace(fit.account, items=tuple(items[:1]))), term, 1) is None
-    )
-    odd = ((f"standard error of {term} by lags", "not known"),)
-    assert bandwidths.sweep(replace(fit, account=replace(fit.account, items=odd)), term, 1) is None
+    assert told.pair()[1] == "0.1 at 2 km (8.1 df); 0.2 at 4 km (7.2 df)"
+    alone = replace(told, at=(2.0,), se=(0.1,), df=(8.1,))
+    for one in (alone, replace(told, term="another")):
+        changed = replace(fit, account=replace(fit.account, bandwidths=(one,)))
+        assert bandwidths.sweep(changed, term, 1) is None
 
 
 def test_the_account_of_a_kernel_is_read_as_it_is_written():

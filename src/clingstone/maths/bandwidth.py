@@ -60,12 +60,11 @@ def andrews(grid: Grid, scores: Array, kernel: Kernel = "bartlett") -> float:
 
 def autocovariance(grid: Grid, score: Array, top: int) -> Array:
     """γ₀ … γ_top, sums over pairs of one series divided by the number of steps."""
-    u = grid.spread(score[:, None])[:, 0]
     out = np.zeros(top + 1)
-    for start, N in zip(grid.starts, grid.lengths, strict=True):
-        part = u[start : start + N]
+    for _, U in grid.batches(score[:, None]):
+        u, N = U[:, :, 0], U.shape[1]
         for j in range(min(top, N - 1) + 1):
-            out[j] += part[: N - j] @ part[j:]
+            out[j] += np.einsum("st,st->", u[:, : N - j], u[:, j:])
     return out / grid.N
 
 

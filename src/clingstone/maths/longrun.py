@@ -21,6 +21,7 @@ _theta, _weight = np.polynomial.legendre.leggauss(NODES)
 ANGLE = (_theta + 1) * np.pi / 4  # Gauss-Legendre on (0, π/2)
 WEIGHT = _weight * np.pi / 4
 Places = npt.NDArray[np.int64]
+AT_ONCE = 1_000_000  # numbers of the series that are taken together
 
 
 @dataclass(frozen=True, eq=False)
@@ -62,15 +63,26 @@ class Grid:
         nu = np.floor(0.4 * self.lengths ** (2 / 3)).astype(np.int64)
         return np.asarray(np.where(self.lengths > 1, np.maximum(nu, 1), 0))
 
+    def batches(self, block: Array) -> Iterator[tuple[Places, Array]]:
+        """Series of one length together, some at a time: which they are (s,), and their ticks (s, N, k)."""
+        U = self.spread(block)
+        for N in np.unique(self.lengths):
+            alike = np.flatnonzero(self.lengths == N)
+            size = max(1, int(AT_ONCE // (N * U.shape[1])))
+            for i in range(0, len(alike), size):
+                some = alike[i : i + size]
+                yield some, U[self.starts[some][:, None] + np.arange(N)]
+
     def cosine_sums(self, block: Array) -> Array:
         """(Σν, k) √(N/ν)·Λ_j, Λ_j = √(2/N) Σ_t cos(πj(t−½)/N) u_t, so that Ŝ = Λ'Λ. O(N k log N)."""
-        U = self.spread(block)
-        out = []
-        for start, N, nu in zip(self.starts, self.lengths, self.counts, strict=True):
-            if nu:
-                turned = fft.dct(U[start : start + N], type=2, axis=0)[1 : nu + 1]
-                out.append(turned / np.sqrt(2 * nu))  # scipy's transform carries a factor 2
-        return np.vstack(out)
+        out = np.empty((int(self.counts.sum()), block.shape[1]))
+        offset = np.cumsum(self.counts) - self.counts
+        for some, U in self.batches(block):
+            if nu := int(self.counts[some[0]]):
+                turned = fft.dct(U, type=2, axis=1)[:, 1 : nu + 1]
+                # scipy's transform carries a factor 2
+                out[offset[some][:, None] + np.arange(nu)] = turned / np.sqrt(2 * nu)
+        return out
 
     def cosines(self) -> Array:
         """(n, Σν) the same as a matrix C: Λ = C'u. For n small by contract."""
@@ -87,13 +99,11 @@ class Grid:
         """ΩH for Ω_ts = ρ^|t−s| within series, H (n, k): one filter each way on the ticks."""
         if rho == 0.0:
             return block
-        U = self.spread(block)
-        out = np.empty_like(U)
-        for start, N in zip(self.starts, self.lengths, strict=True):
-            u = U[start : start + N]
-            ahead = signal.lfilter([1.0], [1.0, -rho], u, axis=0)
-            back = signal.lfilter([1.0], [1.0, -rho], u[::-1], axis=0)[::-1]
-            out[start : start + N] = ahead + back - u
+        out = np.empty((self.N, block.shape[1]))
+        for some, U in self.batches(block):
+            ahead = signal.lfilter([1.0], [1.0, -rho], U, axis=1)
+            back = signal.lfilter([1.0], [1.0, -rho], U[:, ::-1], axis=1)[:, ::-1]
+            out[self.starts[some][:, None] + np.arange(U.shape[1])] = ahead + back - U
         return np.asarray(out[self.place])
 
     def bartlett(self, block: Array, lags: int) -> Array:
@@ -111,12 +121,19 @@ class Grid:
         return out
 
     def _moving(self, block: Array, L: int) -> Iterator[Array]:
-        """Moving sums of L ticks over each zero-padded series: a Bartlett sum is their mean square."""
-        U = self.spread(block)
-        for start, N in zip(self.starts, self.lengths, strict=True):
-            total = np.vstack([np.zeros(U.shape[1]), np.cumsum(U[start : start + N], axis=0)])
-            index = np.arange(N + L - 1)
-            yield total[np.minimum(index + 1, N)] - total[np.maximum(index + 1 - L, 0)]
+        """Moving sums of L ticks over each zero-padded series: a Bartlett sum is their mean square.
+
+        Windows longer than a series hold all of it L − N + 1 times; one weighted row stands for L − N.
+        """
+        for _, U in self.batches(block):
+            s, N, k = U.shape
+            total = np.zeros((s, N + 1, k))
+            np.cumsum(U, axis=1, out=total[:, 1:])
+            M = min(L, N)
+            index = np.arange(N + M - 1)
+            yield (total[:, np.minimum(index + 1, N)] - total[:, np.maximum(index + 1 - M, 0)]).reshape(-1, k)
+            if L > N:
+                yield np.sqrt(L - N) * total[:, N]
 
 
 @dataclass(frozen=True, eq=False)

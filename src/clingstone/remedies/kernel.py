@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
@@ -18,7 +18,7 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady
-from clingstone.remedies.remedy import Account
+from clingstone.remedies.remedy import Account, ByBandwidth
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -172,7 +172,6 @@ class KernelReady(LinearReady):
         if missing := grid.N - (self.design.n if self.part is None else self.part.count):
             items.append(("missing steps, entered as zero scores", f"{missing}"))
         items += [("lags", f"{lags}"), ("rule for the lags", RULES[self.lags])]
-        items += sweep(self, fits.response)
         return Account(
             estimator="ordinary least squares",
             covariance=self.what,
@@ -181,25 +180,26 @@ class KernelReady(LinearReady):
             reference="fixed-b law of t" if self.fixed else "normal",
             items=tuple(items),
             source=self.sources,
+            bandwidths=by_lags(self, fits.response),
         )
 
 
-def sweep(ready: KernelReady, response: Response) -> list[tuple[str, str]]:
+def by_lags(ready: KernelReady, response: Response) -> tuple[ByBandwidth, ...]:
     """Standard errors by number of lags, for the first few coefficients other than the constant."""
     design = ready.design
     constant = {design.names[j] for t in design.terms if t.kind == "constant" for j in t.columns}
     focus = [design.names[j] for t in design.terms if t.focus for j in t.columns]
     names = (focus or [n for n in ready.names if n not in constant])[:SHOWN]
-    top = max(ready.grid.N // 3, 2)
-    lags = [0, *(2**k for k in range(9) if 2**k < top)]
+    top = max(int(ready.grid.lengths.max()) // 3, 2)  # of the longest series
+    lags = (0, *(2**k for k in range(9) if 2**k < top))
     one = response if response.B == 1 else response.column(0)
-    table = {L: np.sqrt(ready.variance_at(one, L)[:, 0]) for L in lags}
-    out = []
-    for name in names:
-        j = ready.names.index(name)
-        words = "; ".join(f"{table[L][j]:.4g} at {L}" for L in lags)
-        out.append((f"standard error of {name} by lags", words))
-    return out
+    at = [ready.names.index(name) for name in names]
+    some = replace(ready, names=tuple(names), W=ready.W[:, at], df=ready.df[at])
+    se = np.stack([np.sqrt(some.variance_at(one, L)[:, 0]) for L in lags])
+    return tuple(
+        ByBandwidth(name, "lags", "", tuple(map(float, lags)), tuple(own.tolist()))
+        for name, own in zip(names, se.T, strict=True)
+    )
 
 
 def _lags(rule: Bandwidth, N: int) -> int:

@@ -14,7 +14,7 @@ from clingstone.maths.longrun import Grid, RatioLaw, joint_law
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, memory
 from clingstone.remedies.joint import Joint, hotelling_joint
-from clingstone.remedies.kernel import Bandwidth, KernelReady, sweep
+from clingstone.remedies.kernel import Bandwidth, KernelReady, by_lags
 from clingstone.remedies.linear import LinearReady, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Plain
 from clingstone.structure.serial import Series
@@ -80,7 +80,6 @@ class LongRunReady(LinearReady):
         items.append(("cosines ν = ⌊0.4 N^⅔⌋", f"{int(self.grid.counts.sum())}"))
         if self.laws:
             items.append(("ρ of the working AR(1) in the law of t", f"{self.rho:.3f}"))
-        items += sweep(_kernel(self.design, self.grid, self.names, self.W), fits.response)
         return Account(
             estimator="ordinary least squares",
             covariance="long-run variance of the scores, equal-weighted cosines",
@@ -89,6 +88,7 @@ class LongRunReady(LinearReady):
             reference="exact law of t under the working AR(1)" if self.laws else "t",
             items=tuple(items),
             source="lazarus-2018" + (", bakirov-szekely-2006" if self.laws else ""),
+            bandwidths=by_lags(_kernel(self.design, self.grid, self.names, self.W), fits.response),
         )
 
 

@@ -20,8 +20,6 @@ from clingstone.structure.serial import Series
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel
 
-PERIODS, PERIODS_EASY = 20, 50  # its theory lets the number of periods grow; convention
-
 
 @dataclass(frozen=True)
 class PanelHac(Plain):
@@ -50,13 +48,13 @@ class PanelHac(Plain):
 
     def prepare(self, design: Design, working: ErrorModel | None) -> KernelReady:
         positive_m(design)
-        part, grid = shared(design.serial)
+        part, grid = shared(design.serial, self.limits.periods_estimate)
         names, W = reported(design)
         notes: tuple[str, ...] = (
             "What a series keeps throughout is not covered; give each series its own level, or use "
             "cluster-robust by series.",
         )
-        if part.count < PERIODS_EASY:
+        if part.count < self.limits.periods_easy:
             notes += (f"{part.count} periods are few for a variance along time.",)
         return KernelReady.made(
             design,
@@ -89,7 +87,7 @@ class PanelHac(Plain):
         )
 
 
-def shared(serial: Series | None, least: int = PERIODS) -> tuple[Partition, Grid]:
+def shared(serial: Series | None, least: int) -> tuple[Partition, Grid]:
     """Rows by period, and the periods on the steps between the first and the last."""
     if serial is None:
         raise NotSupported("no serial structure was declared", "Name the time column with time=.")

@@ -15,6 +15,7 @@ from clingstone.display import (
     Cell,
     Column,
     Table,
+    amount,
     bounds,
     decimals_for,
     degrees,
@@ -89,6 +90,30 @@ class Estimates:
 
 
 @dataclass(frozen=True)
+class ByBandwidth:
+    """Standard errors of one row at several bandwidths of one kernel.
+
+    what : "lags", or "cutoff", in ``unit``. at (k,), se (k,) : bandwidth and standard error; df (k,), or
+    empty where they do not change with the bandwidth.
+    """
+
+    term: str
+    what: str
+    unit: str
+    at: tuple[float, ...]
+    se: tuple[float, ...]
+    df: tuple[float, ...] = ()
+
+    def pair(self) -> tuple[str, str]:
+        """As an ingredient in words."""
+        unit = f" {self.unit}" if self.unit else ""
+        words = [f"{se:.4g} at {amount(at)}{unit}" for at, se in zip(self.at, self.se, strict=True)]
+        if self.df:
+            words = [f"{w} ({df:.1f} df)" for w, df in zip(words, self.df, strict=True)]
+        return f"standard error of {self.term} by {self.what}", "; ".join(words)
+
+
+@dataclass(frozen=True)
 class Account:
     """How an interval was reached, each ingredient with its value, in reading order."""
 
@@ -99,6 +124,7 @@ class Account:
     reference: str  # "t", "exact", …
     items: tuple[tuple[str, str], ...] = ()  # further (name, value): kernel, bandwidth, λ, …
     source: str = ""  # keys of references, comma separated
+    bandwidths: tuple[ByBandwidth, ...] = ()
 
     def pairs(self) -> tuple[tuple[str, str], ...]:
         """Every ingredient as (name, value), in reading order."""
@@ -109,6 +135,7 @@ class Account:
             ("degrees of freedom", self.df_rule),
             ("reference distribution", self.reference),
             *self.items,
+            *(one.pair() for one in self.bandwidths),
         )
 
 

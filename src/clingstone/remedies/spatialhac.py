@@ -19,7 +19,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, reported, stop_if_none_left
 from clingstone.remedies.places import OnMap, enough_sites, length
-from clingstone.remedies.remedy import PLACED, Account, Estimand
+from clingstone.remedies.remedy import PLACED, Account, ByBandwidth, Estimand
 from clingstone.structure.spatial import Sites
 
 if TYPE_CHECKING:
@@ -91,12 +91,20 @@ class SpatialHacReady(LinearReady):
             low, high = float(self.cutoff.factor.min()), float(self.cutoff.factor.max())
             items.append(("factor for what the kernel misses", f"{low:.2f} to {high:.2f}"))
         focus = [j for t in self.design.focus() for j in t.columns] or list(range(self.design.p))
-        for cutoff in self.others:
-            se = np.sqrt(self._variance(fits.response, cutoff)[:, 0])
-            for j in focus[:3]:
-                at = length(cutoff.along, sites.unit)
-                words = f"{se[j]:.6g} with {cutoff.df[j]:.1f} df" if self.corrected else f"{se[j]:.6g}"
-                items.append((f"standard error of {self.names[j]} at {at}", words))
+        others = self.others
+        se = [np.sqrt(self._variance(fits.response, cutoff)[:, 0]) for cutoff in others]
+        at = tuple(float(cutoff.along) for cutoff in others)
+        shown = tuple(
+            ByBandwidth(
+                self.names[j],
+                "cutoff",
+                sites.unit,
+                at,
+                tuple(float(one[j]) for one in se),
+                tuple(float(cutoff.df[j]) for cutoff in others) if self.corrected else (),
+            )
+            for j in focus[:3]
+        )
         return Account(
             estimator="ordinary least squares",
             covariance="sandwich over places, near places weighted by distance",
@@ -107,6 +115,7 @@ class SpatialHacReady(LinearReady):
             reference="t" if self.corrected else "normal",
             items=tuple(items),
             source="conley-1999, kelejian-prucha-2007, bell-mccaffrey-2002, pustejovsky-tipton-2018",
+            bandwidths=shown,
         )
 
 

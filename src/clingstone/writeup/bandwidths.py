@@ -2,11 +2,10 @@
 
 from __future__ import annotations
 
-import re
 from dataclasses import dataclass
 from typing import TYPE_CHECKING
 
-from clingstone.display import Cell, Column, Table, significant
+from clingstone.display import Cell, Column, Table, amount, significant
 from clingstone.remedies.remedy import Refit
 from clingstone.results import Results
 from clingstone.writeup.look import LIGHT
@@ -17,10 +16,6 @@ from clingstone.writeup.strokes import ends, room
 
 if TYPE_CHECKING:
     from matplotlib.figure import Figure
-
-_AT = re.compile(r"([\d.]+(?:e[+-]?\d+)?) at (\d+)")
-_REACH = re.compile(r"([\d.,]+)(?: (\S+))?")
-_SE = re.compile(r"([\d.]+(?:e[+-]?\d+)?)(?: with .*)?")
 
 
 @dataclass(frozen=True)
@@ -51,26 +46,12 @@ def plates(results: Results) -> tuple[Plate, ...]:
 
 def sweep(fit: Refit, term: str, plain: float) -> Sweep | None:
     """What the account of a refit says of the standard error of a row by lags or by cutoff, or None."""
-    by_lags, by_reach = f"standard error of {term} by lags", f"standard error of {term} at "
-    for key, value in fit.account.items:
-        if key == by_lags:
-            pairs = _AT.findall(value)
-            at, se = tuple(lag for _, lag in pairs), tuple(float(v) for v, _ in pairs)
-            return Sweep(fit.name, fit.remedy, term, "lags", at, se, plain) if len(pairs) > 1 else None
-    found = [
-        (reach, error)
-        for key, value in fit.account.items
-        if key.startswith(by_reach)
-        and (reach := _REACH.fullmatch(key.removeprefix(by_reach)))
-        and (error := _SE.fullmatch(value))
-    ]
-    if len(found) < 2:
+    told = next((b for b in fit.account.bandwidths if b.term == term and len(b.at) > 1), None)
+    if told is None:
         return None
-    unit = found[0][0].group(2)
-    what = f"cutoff ({unit})" if unit else "cutoff"
-    at = tuple(reach.group(1) for reach, _ in found)
-    se = tuple(float(error.group(1)) for _, error in found)
-    return Sweep(fit.name, fit.remedy, term, what, at, se, plain)
+    what = f"{told.what} ({told.unit})" if told.unit else told.what
+    at = tuple(amount(x) for x in told.at)
+    return Sweep(fit.name, fit.remedy, term, what, at, told.se, plain)
 
 
 def _plate(s: Sweep) -> Plate:
