@@ -217,6 +217,49 @@ def test_a_wrong_call_is_status_2_on_standard_error(verbs: Verbs, run: Run, line
     assert verbs.calls == []
 
 
+# ---- a job file ----------------------------------------------------------------------------------
+
+
+def test_a_job_file_gives_data_and_options_and_the_line_wins(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    (tmp_path / "jobs").mkdir()
+    (tmp_path / "jobs" / "study.toml").write_text(
+        'data = "../clinics.csv"\nmodel = "y ~ x"\ngroup = ["judge", "wine"]\nseed = 7\nlonlat = true\n'
+        "[contrasts.late]\nx = 1\n"
+    )
+    status, out, err = run("examine jobs/study.toml --group clinic --no-lonlat --time t")
+    assert (status, err) == (0, "")
+    data, arguments = verbs.calls[0]
+    arguments.pop("progress")
+    assert data == tmp_path / "clinics.csv" or data == Path("clinics.csv")
+    assert arguments == {
+        "model": "y ~ x",
+        "group": "clinic",
+        "seed": 7,
+        "lonlat": False,
+        "time": "t",
+        "contrasts": {"late": {"x": 1.0}},
+    }
+    assert "in  clinics-clingstone/" in out
+    run("examine jobs/study.toml --seed 0")  # given on the line, be it as the default
+    assert verbs.calls[1][1]["seed"] == 0
+
+
+def test_a_job_file_may_name_the_folder(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    (tmp_path / "study.toml").write_text('data = "a.csv"\nout = "report"\n')
+    run("examine study.toml")
+    run("examine study.toml --out other")
+    assert [folder.name for folder, _ in verbs.saved] == ["report", "other"]
+
+
+def test_a_slip_in_a_job_file_stops_before_the_work(verbs: Verbs, run: Run, tmp_path: Path) -> None:
+    (tmp_path / "study.toml").write_text('data = "a.csv"\ngruop = "clinic"\n')
+    status, _, err = run("examine study.toml")
+    assert status == 2
+    assert "has the key ‘gruop’, which is no option" in err
+    assert "Did you mean ‘group’" in err
+    assert verbs.calls == []
+
+
 # ---- streams and folders -----------------------------------------------------------------------
 
 

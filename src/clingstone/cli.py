@@ -8,8 +8,9 @@ from __future__ import annotations
 
 import inspect
 import sys
-from collections.abc import Callable, Iterator, Sequence
+from collections.abc import Callable, Iterator, Mapping, Sequence
 from contextlib import contextmanager
+from dataclasses import replace
 from itertools import count
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any, NoReturn
@@ -23,6 +24,7 @@ from clingstone.options import Option, in_shell, settings_options
 
 if TYPE_CHECKING:
     from clingstone.examination import Examination
+    from clingstone.intake.job import Job
     from clingstone.run import Progress
 
 app = typer.Typer(
@@ -64,18 +66,54 @@ def _root(
 
 
 def _examine(
-    data: Path, *, out: Path | None, json: bool, overwrite: bool, quiet: bool, debug: bool, **given: Any
+    context: typer.Context,
+    data: Path,
+    *,
+    out: Path | None,
+    json: bool,
+    overwrite: bool,
+    quiet: bool,
+    debug: bool,
+    **given: Any,
 ) -> None:
-    """Examine a file: which rows hang together, what it does to each interval, what to report."""
-    arguments = {option.name: option.read(given[option.name]) for option in settings_options()}
-    _run(data, arguments, out, json=json, overwrite=overwrite, quiet=quiet)
+    """Examine a file: which rows hang together, what it does to each interval, what to report.
+
+    A job file (study.toml, as every saved folder holds one) names the data and the options; options on the
+    line win.
+    """
+    job = asked(context, data, given)
+    folder = out if out is not None else job.out
+    _run(job.data, dict(job.arguments), folder, json=json, overwrite=overwrite, quiet=quiet)
+
+
+def asked(context: typer.Context, data: Path, given: Mapping[str, Any]) -> Job:
+    """The data and options of a call, by name; those of a job file lie under those of the line."""
+    from clingstone.intake import job
+
+    options = [option for option in settings_options() if option.name in given]
+    if data.suffix.casefold() != job.SUFFIX:
+        return job.Job(data, {option.name: option.read(given[option.name]) for option in options})
+    told = job.read(data)
+    line = {o.name: o.read(given[o.name]) for o in options if _on_the_line(context, o.name)}
+    return replace(told, arguments={**told.arguments, **line})
+
+
+def _on_the_line(context: typer.Context, name: str) -> bool:
+    """Whether an option was given, be it as its default."""
+    source = context.get_parameter_source(name)
+    return source is not None and source.name == "COMMANDLINE"
 
 
 def _with_settings(command: Callable[..., None]) -> Callable[..., None]:
     """The command with an option for every field of Settings, in their order."""
-    Data = Annotated[Path, typer.Argument(metavar="DATA", help="A file: CSV, Parquet, Excel, SPSS, Stata …")]
+    Data = Annotated[
+        Path,
+        typer.Argument(
+            metavar="DATA", help="A file: CSV, Parquet, Excel, SPSS, Stata …, or a job file (.toml)."
+        ),
+    ]
     shared = {"out": Out, "json": AsJson, "overwrite": Overwrite, "quiet": Quiet, "debug": Debug}
-    kinds: dict[str, Any] = {"data": Data}
+    kinds: dict[str, Any] = {"context": typer.Context, "data": Data}
     defaults: dict[str, Any] = {}
     for option in settings_options():
         kinds[option.name] = Annotated[option.kind, _typer_option(option)]

@@ -62,6 +62,7 @@ ToTheEnd = Annotated[
     bool, typer.Option("--to-the-end", help="Make all replicates, also when the ranking is settled.")
 ]
 _OWN: dict[str, tuple[Any, Any]] = {
+    "context": (typer.Context, inspect.Parameter.empty),
     "subject": (Subject, inspect.Parameter.empty),
     "replicates": (Replicates, 10_000),
     "remedy": (Only, None),
@@ -191,6 +192,7 @@ def _with_options(command: Any) -> Any:
 
 def _rehearse(
     *,
+    context: typer.Context,
     subject: Path,
     replicates: int,
     remedy: list[str] | None,
@@ -216,7 +218,7 @@ def _rehearse(
 
     folder = _folder(subject, out, overwrite)
     with cli._progress(quiet) as progress:
-        examination = _examination(subject, given, progress)
+        examination = _examination(subject, given, progress, context)
         found = rehearse(
             examination,
             replicates,
@@ -250,7 +252,9 @@ def _folder(subject: Path, out: Path | None, overwrite: bool) -> Path:
     return out
 
 
-def _examination(subject: Path, given: dict[str, Any], progress: Progress | None) -> Examination:
+def _examination(
+    subject: Path, given: dict[str, Any], progress: Progress | None, context: typer.Context | None = None
+) -> Examination:
     """The saved examination run again, or a new one of a file; without the short rehearsal."""
     from clingstone.case import Case
     from clingstone.examination import examined, settings_of
@@ -266,14 +270,16 @@ def _examination(subject: Path, given: dict[str, Any], progress: Progress | None
                 "Give the data file instead to examine it with other settings.",
             )
         case = reopened(saved(subject), cli._data_of(subject))
-    elif not given:
+    elif not given or context is None:
         raise InputError(
             f"{subject} is no folder that clingstone saved", "Examine the data first, and give that folder."
         )
     else:
-        options = [o for o in settings_options() if o.name != "rehearsal"]
+        from clingstone import cli
+
+        job = cli.asked(context, subject, given)
         with one_thread():
-            case = Case.of(subject, settings_of({o.name: o.read(given[o.name]) for o in options}))
+            case = Case.of(job.data, settings_of({**job.arguments, "rehearsal": "none"}))
     with one_thread():
         return examined(case, Run(replace(case.settings, rehearsal="none"), report=progress))
 

@@ -340,6 +340,31 @@ class Examination:
         with one_thread():
             return refit_at(remedy_of(found.remedy), found.at, Fits(derived, self.fits.run)).get(name)
 
+    def agrees_with(self, folder: str | Path) -> tuple[bool, tuple[str, ...]]:
+        """Whether every number agrees, to 1e-8, with an examination that was saved, and what was compared.
+
+        Raises InputError when the folder holds none.
+        """
+        return self.agreeing(saved(folder))
+
+    def agreeing(self, held: Results) -> tuple[bool, tuple[str, ...]]:
+        """``agrees_with`` for results that were read already."""
+        apart = held.rehearsal is not None and self.case.settings.rehearsal == "none"
+        again = (self.with_rehearsal(held.rehearsal) if apart and held.rehearsal else self).results
+        lines = compare(held, again)
+        words = [f"{len(held.evidence)} findings and {len(held.intervals)} intervals compared to 1e-8"]
+        if apart:
+            words.append("the rehearsal, made apart, is taken as saved; clingstone rehearse makes it again")
+        moved = [
+            f"{k}: {v} then, {again.versions.get(k)} now"
+            for k, v in held.versions.items()
+            if again.versions.get(k) != v
+        ]
+        if moved:
+            words.append("versions differ: " + "; ".join(moved))
+        words.append("every number agrees" if not lines else f"{len(lines)} differ:")
+        return not lines, (*words, *lines)
+
     def save(self, folder: str | Path, *, overwrite: bool = False, progress: Progress | None = None) -> Path:
         """Write report.html, methods.md, tables, figures and results.json into a folder.
 
@@ -408,20 +433,5 @@ def replay(folder: str | Path, data: Any = None) -> tuple[bool, tuple[str, ...]]
     held = saved(folder)
     case = reopened(held, data)
     with one_thread():
-        repeated = examined(case, Run(case.settings))
-        if held.rehearsal is not None and case.settings.rehearsal == "none":
-            repeated = repeated.with_rehearsal(held.rehearsal)
-        again = repeated.results
-    lines = compare(held, again)
-    words = [f"{len(held.evidence)} findings and {len(held.intervals)} intervals compared to 1e-8"]
-    if held.rehearsal is not None and case.settings.rehearsal == "none":
-        words.append("the rehearsal, made apart, is taken as saved; clingstone rehearse makes it again")
-    moved = [
-        f"{k}: {v} then, {again.versions.get(k)} now"
-        for k, v in held.versions.items()
-        if again.versions.get(k) != v
-    ]
-    if moved:
-        words.append("versions differ: " + "; ".join(moved))
-    words.append("every number agrees" if not lines else f"{len(lines)} differ:")
-    return not lines, (*words, *lines)
+        again = examined(case, Run(case.settings))
+    return again.agreeing(held)

@@ -13,7 +13,7 @@ from pathlib import Path
 from clingstone.needs import InputError
 from clingstone.results import Results, to_json
 from clingstone.run import Progress
-from clingstone.writeup import bandwidths, curves, figures, rehearsed, tables
+from clingstone.writeup import bandwidths, curves, figures, rehearsed, script, tables
 from clingstone.writeup.bibliography import bibtex
 from clingstone.writeup.methods import methods_text
 from clingstone.writeup.panels import tree
@@ -22,7 +22,10 @@ from clingstone.writeup.report import report
 
 RESULTS = "results.json"
 FIGURES = "figures"
-FILES = ("report.html", "methods.md", "references.bib", "evidence.csv", "intervals.csv", RESULTS)
+FILES = (
+    *("report.html", "methods.md", "references.bib", "evidence.csv", "intervals.csv", RESULTS),
+    *script.FILES,
+)
 FIGURE_SUFFIXES = (".svg", ".png", ".csv")
 
 
@@ -38,7 +41,7 @@ def save(
     Raises InputError when the folder holds anything else, is a file, or cannot be written.
     """
     target = check(folder, overwrite)
-    steps = _steps(results)
+    steps = _steps(results, target)
     try:
         with _beside(target) as fresh:
             for done, (label, write) in enumerate(steps):
@@ -69,7 +72,7 @@ def plates(results: Results) -> tuple[Plate, ...]:
     return (*lead, *bandwidths.plates(results), *curves.plates(results))
 
 
-def _steps(results: Results) -> list[tuple[str, Callable[[Path], None]]]:
+def _steps(results: Results, target: Path) -> list[tuple[str, Callable[[Path], None]]]:
     """Labels and writers, in order; each writer is given the folder to write into."""
     texts: dict[str, Callable[[], str]] = {
         "report.html": lambda: report(results),
@@ -78,6 +81,7 @@ def _steps(results: Results) -> list[tuple[str, Callable[[Path], None]]]:
         "evidence.csv": lambda: tables.evidence_file(results).to_csv(),
         "intervals.csv": lambda: tables.intervals_file(results).to_csv(),
         RESULTS: lambda: to_json(results),
+        **script.files(results, target),
     }
     steps = [(name, partial(_write_text, name, make)) for name, make in texts.items()]
     return [*steps, *((f"figure {plate.name}", partial(_write_plate, plate)) for plate in plates(results))]
