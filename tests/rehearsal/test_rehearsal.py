@@ -17,6 +17,7 @@ from clingstone.needs import InputError, NotSupported
 from clingstone.rehearsal import cost
 from clingstone.rehearsal import rehearsal as room
 from clingstone.rehearsal.engine import Engine
+from clingstone.rehearsal.path import Paths
 from clingstone.rehearsal.rehearsal import Plan, rehearse, settled, stages
 from clingstone.rehearsal.study import FIELDS, Counts, Job
 from clingstone.rehearsal.tallies import binomial, pairs, scores, tallies
@@ -162,9 +163,35 @@ def test_a_stopped_rehearsal_goes_on_where_it_was(tmp_path, monkeypatch):
     assert rehearse(plan(1500), folder=tmp_path) == whole
     assert len(runs) == len(set(runs)) == 6
     # A damaged chunk is made again; more replicates only add chunks.
-    next(tmp_path.glob("0-1-500.npz")).write_bytes(b"not a chunk")
+    next(tmp_path.glob("chunks-0-1-500.npz")).write_bytes(b"not a chunk")
     assert rehearse(plan(1500), folder=tmp_path) == whole
     assert len(runs) == 7
+
+
+def test_whole_paths_go_on_where_they_were_whoever_walks_them(tmp_path, monkeypatch):
+    monkeypatch.setattr("clingstone.rehearsal.path.CHUNK", 3)
+    small = plan(20, wanted=PLAIN[:1])
+    whole = rehearse(small, whole_path=5)
+    assert {walk.replicates for walk in whole.walks} == {10}
+    plain, runs = Paths.run, []
+
+    def stops(self, job):
+        if len(runs) == 3:
+            raise KeyboardInterrupt
+        runs.append(job)
+        return plain(self, job)
+
+    monkeypatch.setattr(Paths, "run", stops)
+    with pytest.raises(KeyboardInterrupt):
+        rehearse(small, whole_path=5, folder=tmp_path)
+    monkeypatch.setattr(Paths, "run", lambda self, job: runs.append(job) or plain(self, job))
+    assert rehearse(small, whole_path=5, folder=tmp_path) == whole
+    assert len(runs) == len(set(runs)) == 4
+    (tmp_path / "paths-0-0-3.npz").write_bytes(b"not a chunk")
+    assert rehearse(small, whole_path=5, folder=tmp_path) == whole
+    assert len(runs) == 5
+    monkeypatch.setattr(Paths, "run", plain)
+    assert rehearse(small, whole_path=5, engine=Engine("cores", workers=2)) == whole
 
 
 def test_a_folder_of_another_rehearsal_is_refused(tmp_path):

@@ -95,7 +95,7 @@ class Joined(Expression):
 
     def read(self, facts: Mapping[str, Any]) -> Booleans:
         a = self.left.read(facts)
-        if bool(np.all(a if self.word == "or" else ~a)):
+        if bool((a if self.word == "or" else ~a).all()):
             return a  # the other side cannot change it, and may be dear to know
         b = self.right.read(facts)
         return a & b if self.word == "and" else a | b
@@ -142,9 +142,10 @@ _SIGNS: dict[str, Callable[[Any, float], Any]] = {
 
 def _value(facts: Mapping[str, Any], name: str) -> float | npt.NDArray[np.float64] | None:
     """The value as numbers, or None where the fact is not known; words cannot be compared."""
-    if name not in facts:
+    try:
+        value = facts[name].value
+    except KeyError:
         return None
-    value = facts[name].value
     if isinstance(value, str):
         raise TypeError(f"the fact {name!r} is a word ({value!r}) and cannot be compared")
     return value if isinstance(value, float | int) else np.asarray(value, dtype=float)

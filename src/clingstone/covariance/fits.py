@@ -123,6 +123,11 @@ class Fits:
     def design(self) -> Design:
         return self.response.design
 
+    @property
+    def tails(self) -> str:
+        """How the tails of a statistic are read (``Ratio.tails``): of many exact columns between exact ones."""
+        return "between" if self.depth == "exact" and self.response.B > 1 else self.depth
+
     def column(self, b: int) -> Fits:
         """Those of one column of y, each model fitted with all the others'."""
         return Fits(self.response.column(b), self.run, whole=(self, b))

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
-from dataclasses import dataclass, field, fields, replace
-from typing import TYPE_CHECKING, Any, Literal, Protocol, get_args
+from dataclasses import dataclass, field, fields
+from typing import TYPE_CHECKING, Literal, Protocol, get_args
 
 import numpy as np
 import numpy.typing as npt
@@ -60,15 +60,6 @@ class Reading:
     log_p: Array | None = None
     flag: npt.NDArray[np.bool_] | None = None
     rows: tuple[int, ...] = ()
-
-    def column(self, b: int) -> Reading:
-        """The reading of one column."""
-
-        def one(values: Any) -> Any:
-            return values if np.ndim(values) == 0 or len(values) == 1 else values[b : b + 1]
-
-        names = ("statistic", "p", "estimate", "low", "high", "log_p", "flag")
-        return replace(self, **{name: one(getattr(self, name)) for name in names})
 
 
 @dataclass(frozen=True)
@@ -242,4 +233,4 @@ def column(value: Array | float | None, b: int = 0) -> float:
     if value is None:
         return float("nan")
     array = np.asarray(value, dtype=float)
-    return float(array if array.ndim == 0 else array[b])
+    return float(array if array.ndim == 0 else array[b if len(array) > 1 else 0])

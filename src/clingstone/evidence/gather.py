@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass, replace
+from dataclasses import dataclass
 
 import numpy as np
 import numpy.typing as npt
@@ -72,15 +72,12 @@ def told(columns: Columns, fits: Fits, b: int | None = None) -> Evidence:
         return Evidence(tuple(_finding(fits, item, p, adjusted, code) for item, p, adjusted, code in known))
     out = []
     for i, item in enumerate(columns.items):
-        p, adjusted = columns.p[i, b : b + 1], columns.adjusted[i, b : b + 1]
-        code = columns.verdict[i, b : b + 1]
+        p, adjusted, code, at = columns.p[i], columns.adjusted[i], columns.verdict[i], b
         if item.reading is None and item.test.needs.check(fits.design) is None:
             item = read_column(fits, item.test, item.about, item.given)
             p = adjusted = _p(item, 1)
-            code = _codes(fits, item, p)
-        elif item.reading is not None:
-            item = replace(item, reading=item.reading.column(b))
-        out.append(_finding(fits, item, p, adjusted, code, words=False))
+            code, at = _codes(fits, item, p), 0
+        out.append(_finding(fits, item, p, adjusted, code, at, words=False))
     return Evidence(tuple(out))
 
 
@@ -148,31 +145,32 @@ def _finding(
     p: Array,
     adjusted: Array,
     code: npt.NDArray[np.int8],
+    b: int = 0,
     *,
     words: bool = True,
 ) -> Finding:
     test, about, reading = item.test, item.about, item.reading
-    verdict = VERDICTS[int(code[0])]
+    verdict = VERDICTS[int(code[b])]
     held = item.decides or (test.id == "functional-form" and bool(item.given))
-    nothing = reading is not None and reading.flag is None and bool(np.isnan(p[0]))
+    nothing = reading is not None and reading.flag is None and bool(np.isnan(p[b]))
     shown = reading or Reading(statistic=np.array([np.nan]), p=np.array([np.nan]))
     return Finding(
         structure=test.family,
         test=test.id,
         about=about.key,
         about_words=about.words,
-        statistic=column(shown.statistic),
+        statistic=column(shown.statistic, b),
         statistic_name=shown.statistic_name,
         df=shown.df,
         df2=shown.df2,
         alternative=test.alternative,
-        p=column(shown.p),
+        p=column(shown.p, b),
         p_method=shown.p_method,
-        p_adjusted=float(adjusted[0]) if held and not np.isnan(p[0]) else None,
-        estimate=column(shown.estimate),
+        p_adjusted=float(adjusted[b]) if held and not np.isnan(p[b]) else None,
+        estimate=column(shown.estimate, b),
         estimate_name=shown.estimate_name,
-        low=column(shown.low),
-        high=column(shown.high),
+        low=column(shown.low, b),
+        high=column(shown.high, b),
         n_used=shown.n_used,
         verdict=verdict,
         caveats=shown.caveats,

@@ -50,7 +50,7 @@ class GroupLM(AtLevels):
         if law.constant:
             raise NotSupported(f"the model already has a coefficient for every {level_name(about.key)}")
         T = ratio(response, law.form)
-        tails = law.tails(T, fits.depth)
+        tails = law.tails(T, fits.tails)
         found = scores(response, part)
         table = anova(response, part)
         warn = list(caveats(design, part))

@@ -173,7 +173,7 @@ def _moving(fits: Fits, name: str) -> Reading:
     law = law_of(wide, form)
     value = ratio(response, form)
     alternative = fits.run.settings.alternative
-    tails = law.tails(value, fits.depth)
+    tails = law.tails(value, fits.tails)
     p, log_p = tail_p(tails, alternative, "upper")
     rho, sd = one_step(response, form, law)
     low, high = arcsine(rho, sd, normal_quantile(fits))

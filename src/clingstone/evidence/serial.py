@@ -176,7 +176,7 @@ def _read(fits: Fits, about: About, given: frozenset[str], name: str) -> Reading
     form, lag = form_of(fits.design, "differences"), form_of(fits.design, "lag:1")
     d = ratio(response, form)
     alternative = fits.run.settings.alternative
-    tails = law_of(design, form, swept).tails(d, fits.depth)
+    tails = law_of(design, form, swept).tails(d, fits.tails)
     p, log_p = tail_p(tails, alternative, "lower")
     rho, low, high = correlation_of_errors(fits, response, lag, law_of(design, lag, swept))
     return Reading(
@@ -353,7 +353,7 @@ class IrregularSerial(DurbinWatson):
         law = law_of(response.design, form, swept)
         value = ratio(response, form)
         alternative = fits.run.settings.alternative
-        tails = law.tails(value, fits.depth)
+        tails = law.tails(value, fits.tails)
         p, log_p = tail_p(tails, alternative, "upper")
         rho, sd = one_step(response, form, law, doubled=False)
         rho, sd = rho / math.e, sd / math.e

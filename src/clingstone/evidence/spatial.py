@@ -146,7 +146,7 @@ class Moran(Plain):
         law = law_of(design, form, swept)
         T = ratio(response, form)
         alternative = fits.run.settings.alternative
-        tails = law.tails(T, fits.depth)
+        tails = law.tails(T, fits.tails)
         p, log_p = tail_p(tails, alternative, "upper")
         p, log_p, method, unequal = _allowing(response, law, alternative, p, log_p, tails)
         reach = law.range[1] - law.mean
@@ -270,7 +270,7 @@ class Geary(Plain):
         law = law_of(design, form)
         T = ratio(response, form)
         alternative = fits.run.settings.alternative
-        tails = law.tails(T, fits.depth if design.n <= GEARY_EXACT else "fast")
+        tails = law.tails(T, fits.tails if design.n <= GEARY_EXACT else "fast")
         p, log_p = tail_p(tails, alternative, "lower")
         z = normal_quantile(fits) * np.sqrt(law.variance) / law.mean
         size = 1.0 - T / law.mean

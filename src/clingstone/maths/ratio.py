@@ -113,14 +113,16 @@ class Law:
     def tails(self, values: npt.ArrayLike, depth: str = "exact") -> Tails:
         """Both tails at (B,) values.
 
-        depth : "exact" integrates at each value; "fast" interpolates many values between exact ones,
-            and for sparse forms beyond the reach of eigenvalues uses the first four moments.
+        depth : "exact" integrates at each value; "between" interpolates many values between exact ones
+            where the spectrum is known; "fast" does so always, and for sparse forms beyond the reach of
+            eigenvalues uses the first four moments.
         """
         t = np.atleast_1d(np.asarray(values, dtype=float))
         way = routes.name(self.form, self.swept)
-        fast = depth != "exact"
+        fast = depth == "fast"
         method = routes.WORDS["traces"] if fast and way == "factored" else self.method
-        if not fast or len(t) <= FEW or self.constant:
+        each = depth == "exact" or (not fast and way in ("factored", "traces"))
+        if each or len(t) <= FEW or self.constant:
             return collect([self._both(float(v), fast) for v in t], method)
         if way not in ("factored", "traces"):
             method = routes.WORDS["interpolated"]

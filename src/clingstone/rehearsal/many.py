@@ -8,19 +8,20 @@ no rule names a remedy for, go the whole way alone.
 
 from __future__ import annotations
 
-from collections.abc import Callable, Iterator, Mapping
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
 
 from clingstone.advice.choose import settle
 from clingstone.advice.facts import Facts
 from clingstone.advice.facts import facts as gather_facts
 from clingstone.advice.named import Fact
-from clingstone.advice.pick import preferred, serves
+from clingstone.advice.pick import serves
 from clingstone.advice.refitted import COMPARES, compared
-from clingstone.advice.rules import STATES
+from clingstone.advice.rules import PREFER, STATES
 from clingstone.advice.shortlist import Shortlist, shortlist_for
 from clingstone.covariance.each import each
 from clingstone.covariance.fits import Fits
+from clingstone.evidence import TESTS
 from clingstone.evidence.gather import Columns, read_columns, told
 from clingstone.ledger.ledger import focus_rows, judged
 from clingstone.maths.once import once
@@ -33,6 +34,8 @@ from clingstone.remedies.refit import read
 from clingstone.remedies.remedy import Estimates, Ready, Refit, Remedy
 
 Named = tuple[str, str]  # a remedy and its level
+# Tests that speak only in cautions: no state and no remedy hangs on them.
+ASIDE = ("cluster-level", "group-influence", "outliers", "normality", "duplicates")
 ORDINARY: Named = ("ordinary", "")
 
 
@@ -50,14 +53,14 @@ class Many:
     @property
     @once
     def columns(self) -> Columns:
-        return read_columns(self.fits, given=True)
+        return read_columns(self.fits, tuple(t for t in TESTS if t.id not in ASIDE), given=True)
 
     def advised(self, b: int) -> tuple[Refit | None, Refit]:
         """The refit that is advised for one column (None for none), and the ordinary one."""
         fits = self.fits.column(b)
         evidence = told(self.columns, fits, b)
         known = gather_facts(fits, evidence, judged(fits, evidence, focus_rows(fits)))
-        state = next((r.then.what for r in STATES if bool(r.when.read(known))), "")
+        state = next((r.then.what for r in STATES if bool(r.when.read(known.known))), "")
         ordinary = self.refit(ORDINARY, b, fits)
         assert ordinary is not None
         if state == "nothing found":
@@ -71,21 +74,26 @@ class Many:
         """The refit of the first rule that holds whose remedy serves every focus row."""
         listed = self._shortlist(known, fits)
         names = [(c.remedy, c.at) for c in listed.candidates]
+        held: dict[Named, Refit | None] = {}
 
         def made(what: str, level: str) -> Iterator[Refit]:
             """Refits of a remedy: at a level, or at every one that is a candidate."""
             name = listed.twins.get(what, what)
             for one in names:
                 if one[0] == name and (level in ("", one[1]) or name != what):
-                    found = self.refit(one, b, fits)
+                    if one not in held:
+                        held[one] = self.refit(one, b, fits)
+                    found = held[one]
                     if found is not None:
                         yield found
 
-        asked = replace(known, known=Asked(known, made))
-        for _, what, level in preferred(asked):
-            for found in made(what, level):
-                if serves(found, known):
-                    return found
+        asked = Asked(known, made)
+        for rule in PREFER:
+            if bool(rule.when.read(asked)):
+                level = known.word(rule.then.at) if rule.then.at else ""
+                for found in made(rule.then.what, level):
+                    if serves(found, known):
+                        return found
         return None
 
     def _shortlist(self, known: Facts, fits: Fits) -> Shortlist:
@@ -136,27 +144,22 @@ def together(ready: Ready, fits: Fits) -> bool:
     return isinstance(ready, LinearReady) and type(ready).fit is LinearReady.fit
 
 
-class Asked(Mapping[str, Fact]):
+class Asked(dict[str, Fact]):
     """Facts of one column, and those that only refits can tell, made when a rule reads them."""
 
     def __init__(self, known: Facts, made: Callable[[str, str], Iterator[Refit]]) -> None:
+        super().__init__(known.known)
         self.facts, self.made = known, made
-        self.known: dict[str, Fact] = dict(known.known)
         self.done: set[tuple[str, ...]] = set()
 
-    def __getitem__(self, name: str) -> Fact:
+    def __missing__(self, name: str) -> Fact:
         needs = COMPARES.get(name)
-        if name not in self.known and needs is not None and needs not in self.done:
-            self.done.add(needs)
-            refits = tuple(found for what in needs for found in self.made(what, ""))
-            self.known |= compared(self.facts, refits).known
-        return self.known[name]
-
-    def __iter__(self) -> Iterator[str]:
-        return iter(self.known)
-
-    def __len__(self) -> int:
-        return len(self.known)
+        if needs is None or needs in self.done:
+            raise KeyError(name)
+        self.done.add(needs)
+        refits = tuple(found for what in needs for found in self.made(what, ""))
+        self.update(compared(self.facts, refits).known)
+        return self[name]
 
 
 def alone(known: Facts, fits: Fits) -> Refit | None:

@@ -10,20 +10,24 @@ from __future__ import annotations
 
 from collections.abc import Mapping, Sequence
 from dataclasses import dataclass
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
+import numpy.typing as npt
 
+from clingstone.covariance.each import each
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
 from clingstone.maths.once import once
 from clingstone.rehearsal.many import Many
-from clingstone.rehearsal.study import Job, Study
+from clingstone.rehearsal.study import MEMORY, Job, Study, drawn_from
 from clingstone.rehearsal.tallies import Chosen, Walk, binomial
 from clingstone.rehearsal.truths import Truth, errors
 from clingstone.remedies.remedy import Refit, rows
 
-CHUNK = 50  # replicates handed out at once
+CHUNK = 100  # replicates examined together at the most
+ALONE = 5  # … where every one is fitted by itself
+ALIVE = 40  # arrays of rows × replicates that are alive at once
 
 
 class Step(NamedTuple):
@@ -43,9 +47,18 @@ class Paths:
     truths: tuple[Truth, ...]
     terms: tuple[str, ...]
 
+    @property
+    def chunk(self) -> int:
+        """Replicates of a chunk, from the design alone; few where each is fitted by itself."""
+        fits = self.fits
+        algebra = fits.algebra(fits.full_node)
+        if len(algebra.parameters) and each(algebra, fits.response) is None:
+            return ALONE
+        return int(np.clip(MEMORY // (8 * ALIVE * fits.design.n), 1, CHUNK))
+
     def jobs(self, replicates: int) -> tuple[Job, ...]:
-        whole, rest = divmod(replicates, CHUNK)
-        sizes = [CHUNK] * whole + ([rest] if rest else [])
+        whole, rest = divmod(replicates, self.chunk)
+        sizes = [self.chunk] * whole + ([rest] if rest else [])
         return tuple(Job(t, c, size) for c, size in enumerate(sizes) for t in range(len(self.truths)))
 
     def run(self, job: Job) -> tuple[Step, ...]:
@@ -58,6 +71,31 @@ class Paths:
         response = Response(fits.design, fits.design.Q.T @ Y, e, np.einsum("ij,ij->j", e, e))
         many = Many(Fits(response, fits.run, depth="exact"))
         return tuple(self._step(*many.advised(b)) for b in range(job.size))
+
+    # ---- on a shelf ----
+
+    kind = "paths"
+
+    @property
+    def identity(self) -> tuple[object, ...]:
+        """All that the steps depend on."""
+        return (*drawn_from(self.fits, self.truths, self.terms), self.fits.run.settings.material, self.chunk)
+
+    def pack(self, result: tuple[Step, ...]) -> dict[str, npt.NDArray[Any]]:
+        return {
+            "remedy": np.array([step.remedy for step in result]),
+            "at": np.array([step.at for step in result]),
+            "covered": np.array([step.covered for step in result]),
+            "relative": np.array([step.relative for step in result]),
+        }
+
+    def unpack(self, job: Job, held: Mapping[str, npt.NDArray[Any]]) -> tuple[Step, ...] | None:
+        parts = (held[name].tolist() for name in ("remedy", "at", "covered", "relative"))
+        found = tuple(
+            Step(remedy, at, tuple(covered), tuple(relative))
+            for remedy, at, covered, relative in zip(*parts, strict=True)
+        )
+        return found if len(found) == job.size else None
 
     def _step(self, chosen: Refit | None, ordinary: Refit) -> Step:
         if chosen is None:

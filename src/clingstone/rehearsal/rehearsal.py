@@ -13,8 +13,8 @@ from clingstone.ledger.ledger import Ledger
 from clingstone.needs import InputError, NotSupported
 from clingstone.rehearsal import cost
 from clingstone.rehearsal.engine import Engine
-from clingstone.rehearsal.path import paths, walks
-from clingstone.rehearsal.shelf import Shelf
+from clingstone.rehearsal.path import Step, paths, walks
+from clingstone.rehearsal.shelf import Shelf, results
 from clingstone.rehearsal.study import Counts, Job, Study, study, without
 from clingstone.rehearsal.tallies import Left, Rehearsal, Walk, pairs, scores, tallies
 from clingstone.rehearsal.truths import truths
@@ -85,9 +85,8 @@ def rehearse(
 ) -> Rehearsal:
     """Run a plan.
 
-    whole_path : replicates per truth in which the user's whole examination is repeated; their chunks are
-        not kept in the folder.
-    folder : where finished chunks are put, and found again by a later run of the same plan.
+    whole_path : replicates per truth in which the user's whole examination is repeated.
+    folder : where finished chunks of both are put, and found again by a later run of the same plan.
     stop_early : look at the ranking at fixed numbers of replicates and stop once it is settled.
 
     Raises InputError when the folder holds the chunks of another plan.
@@ -95,37 +94,33 @@ def rehearse(
     found = plan.study
     run = Run(found.fits.run.settings, found.fits.run.limits, found.report)
     jobs = found.jobs(plan.replicates)
-    shelf = Shelf(folder, found, plan.replicates) if folder is not None else None
     counts: dict[int, Counts] = {t: found.empty() for t in range(len(found.truths))}
     stopped = f"after the {plan.replicates:,} replicates per truth that were planned"
+    shelf = Shelf(folder, found) if folder is not None else None
     with (engine or Engine()).open(found) as pool, run.progress("rehearsing", len(jobs)) as advance:
         for stage in stages(jobs, found.chunk, stop_early):
-            held = {job: shelf.get(job) for job in stage} if shelf is not None else {}
-            todo = [job for job in stage if held.get(job) is None]
-            fresh = pool.map(todo)
-            for job in stage:
-                # Counts are added in the order of the jobs, whoever made them and whenever.
-                one = held.get(job)
-                if one is None:
-                    one = next(fresh)
-                    if shelf is not None:
-                        shelf.put(job, one)
+            # Counts are added in the order of the jobs, whoever made them and whenever.
+            for job, one in results(pool, stage, shelf):
                 counts[job.truth] = counts[job.truth].plus(one)
                 advance(1)
             if stop_early and stage[-1] != jobs[-1] and settled(found, counts):
                 stopped = f"after {counts[0].size:,} replicates per truth, when the ranking was settled"
                 break
     result = told(plan, counts, stopped)
-    return replace(result, walks=walked(plan, engine or Engine(), whole_path)) if whole_path else result
+    if not whole_path:
+        return result
+    return replace(result, walks=walked(plan, engine or Engine(), whole_path, folder))
 
 
-def walked(plan: Plan, engine: Engine, replicates: int) -> tuple[Walk, ...]:
+def walked(plan: Plan, engine: Engine, replicates: int, folder: Path | None = None) -> tuple[Walk, ...]:
     """The whole path in so many replicates per truth."""
     work = paths(plan.study)
     run = Run(work.fits.run.settings, work.fits.run.limits, plan.study.report)
-    jobs, steps = work.jobs(replicates), []
+    jobs: Sequence[Job] = work.jobs(replicates)
+    steps: list[Step] = []
+    shelf = Shelf(folder, work) if folder is not None else None
     with engine.open(work) as pool, run.progress("whole paths", len(jobs)) as advance:
-        for some in pool.map(jobs):
+        for _, some in results(pool, jobs, shelf):
             steps += some
             advance(1)
     return walks(work.terms, steps)

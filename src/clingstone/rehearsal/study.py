@@ -6,9 +6,9 @@ added in the order of the chunks. So the totals are the same bytes however many 
 
 from __future__ import annotations
 
-from collections.abc import Iterable, Sequence
+from collections.abc import Iterable, Mapping, Sequence
 from dataclasses import dataclass, replace
-from typing import NamedTuple
+from typing import Any, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
@@ -144,9 +144,42 @@ class Study:
         key = next(iter(keys), None)
         return key if key is not None and len(keys) == 1 and summed(truth, self.fits, key) else None
 
+    # ---- on a shelf ----
+
+    kind = "chunks"
+
+    @property
+    def identity(self) -> tuple[object, ...]:
+        """All that the counts depend on."""
+        contenders = [(c.remedy.id, c.remedy.at, c.pick) for c in self.contenders]
+        return (*drawn_from(self.fits, self.truths, self.terms), contenders, self.chunk)
+
+    def pack(self, result: Counts) -> dict[str, npt.NDArray[Any]]:
+        return {"size": np.array(result.size), "sums": result.sums, "apart": result.apart}
+
+    def unpack(self, job: Job, held: Mapping[str, npt.NDArray[Any]]) -> Counts | None:
+        found = Counts(int(held["size"]), held["sums"], held["apart"])
+        return found if found.size == job.size and found.sums.shape == self.empty().sums.shape else None
+
     def empty(self) -> Counts:
         C, K = len(self.contenders), len(self.terms)
         return Counts(0, np.zeros((C, K, len(FIELDS))), np.zeros((C, C, K)))
+
+
+def drawn_from(fits: Fits, truths: Sequence[Truth], terms: Sequence[str]) -> tuple[object, ...]:
+    """What replicates are made of: the design and y's own fit, the truths, the rows read, the seed."""
+    settings, response = fits.run.settings, fits.response
+    parts = [(key, part.codes.tobytes()) for key, part in sorted(response.design.partitions.items())]
+    return (
+        response.design.Q,
+        response.coef,
+        response.ss,
+        parts,
+        settings.seed,
+        settings.confidence,
+        tuple(terms),
+        [(t.name, t.node, t.theta, t.sigma2, t.different) for t in truths],
+    )
 
 
 def study(
