@@ -125,7 +125,7 @@ class Fits:
 
     @property
     def tails(self) -> str:
-        """How the tails of a statistic are read (``Ratio.tails``): of many exact columns between exact ones."""
+        """How tails of a statistic are read (``Ratio.tails``): of many exact columns between exact ones."""
         return "between" if self.depth == "exact" and self.response.B > 1 else self.depth
 
     def column(self, b: int) -> Fits:
