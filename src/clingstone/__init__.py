@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from clingstone.needs import InputError as InputError
     from clingstone.needs import Limits as Limits
     from clingstone.needs import NotSupported as NotSupported
+    from clingstone.parts.verb import examine_parts as examine_parts
     from clingstone.rehearsing import plan as plan
     from clingstone.rehearsing import rehearse as rehearse
     from clingstone.results import Results as Results
@@ -34,6 +35,7 @@ _HOMES = {
     "Case": "case",
     "Examination": "examination",
     "examine": "examination",
+    "examine_parts": "parts.verb",
     "refit": "examination",
     "plan": "rehearsing",
     "rehearse": "rehearsing",
@@ -54,6 +56,7 @@ __all__ = [
     "Settings",
     "__version__",
     "examine",
+    "examine_parts",
     "plan",
     "refit",
     "rehearse",

@@ -18,6 +18,7 @@ from clingstone.design.design import Contrast
 from clingstone.display import amount, instead
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
+from clingstone.intake import partitions
 from clingstone.ledger.ledger import Ledger, weigh
 from clingstone.needs import InputError
 from clingstone.rehearsal.rehearsal import checked
@@ -72,7 +73,8 @@ def examine(
     Parameters
     ----------
     data : path of a file (CSV, Parquet, Feather, Excel, SPSS, SAS, Stata, GeoPackage and others), any
-        dataframe that narwhals reads, or a fitted statsmodels OLS or WLS result of a formula.
+        dataframe that narwhals reads, or a fitted statsmodels OLS or WLS result of a formula. A folder of
+        Parquet files and a Dask data frame are brought into memory; :func:`examine_parts` leaves them apart.
     model : formula such as ``"weight ~ day + birth"``.
     progress : called with (label, done, total) while heavy work runs.
 
@@ -91,6 +93,8 @@ def examine(
     settings = settings_of({k: v for k, v in locals().items() if k not in ("data", "progress")})
     if isinstance(settings.rehearsal, int):
         checked(settings.rehearsal)  # before the data are read
+    if partitions.is_parted(data):
+        data = partitions.gathered(data)
     with one_thread():
         return examined(Case.of(data, settings), Run(settings, report=progress))
 

@@ -7,6 +7,7 @@ from dataclasses import replace
 import numpy as np
 
 from clingstone.design.design import Contrast, Design, Term
+from clingstone.design.parted import PartedDesign, PartedResponse
 from clingstone.design.response import Response
 from clingstone.maths.basis import Basis, aliased
 from clingstone.maths.once import Array, frozen
@@ -55,6 +56,9 @@ def balanced(design: Design, columns: Array) -> Array:
 
 def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
     """Cell means swept out of every column; the names of coefficients that this removes come back too."""
+    if isinstance(design, PartedDesign):
+        inner, _, removed = design.absorbed(part)
+        return inner, removed
     root = np.ones(design.n) if design.root is None else design.root
     X = design.Q @ design.basis.R
     X = X - root[:, None] * (part.sums(X * root[:, None]) / part.sums(root**2)[:, None])[part.codes]
@@ -150,6 +154,8 @@ def onto(response: Response, derived: Design) -> Response:
 
 def sweep(response: Response, derived: Design, part: Partition) -> Response:
     """The same y over a design from which the cells of ``part`` were absorbed."""
+    if isinstance(response, PartedResponse):
+        return response.swept(part)
     Y = whole(response)
     root = np.ones(derived.n) if derived.root is None else derived.root
     Y = Y - root[:, None] * (part.sums(Y * root[:, None]) / part.sums(root**2)[:, None])[part.codes]

@@ -82,10 +82,11 @@ class Basis:
         return Basis(frozen(np.hstack([self.Q, new.Q])), frozen(R))
 
 
-def aliased(X: Array) -> tuple[int, ...]:
+def aliased(X: Array, tolerance: float = RANK_TOLERANCE) -> tuple[int, ...]:
     """Columns that are linear combinations of others, by pivoted QR on unit-length columns.
 
-    The rule: a pivot below 1e-10 of the largest. Earlier columns are kept where there is a choice.
+    The rule: a pivot below ``tolerance``, 1e-10 of the largest. Earlier columns are kept where there is a
+    choice.
     """
     scale = np.linalg.norm(X, axis=0)
     zero = tuple(int(j) for j in np.flatnonzero(scale == 0))
@@ -103,7 +104,7 @@ def aliased(X: Array) -> tuple[int, ...]:
         rest = R[:, j] - Q @ (Q.T @ R[:, j])
         rest -= Q @ (Q.T @ rest)
         size = float(np.linalg.norm(rest))
-        if size < RANK_TOLERANCE:
+        if size < tolerance:
             lost.append(j)
         else:
             kept.append(j)

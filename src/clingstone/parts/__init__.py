@@ -1,0 +1,1 @@
+"""Examination of a table that is never in memory as a whole."""
