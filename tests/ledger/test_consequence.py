@@ -2,16 +2,11 @@
 
 from __future__ import annotations
 
-from dataclasses import replace
-
 import numpy as np
 import pytest
-from scipy import stats
 
-from clingstone.covariance.fits import Fits
-from clingstone.ledger.consequence import inflation, parts, tipping
+from clingstone.ledger.consequence import inflation, parts
 from clingstone.ledger.region import region
-from clingstone.structure.serial import Series
 from tests.ledger import factories as make
 
 
@@ -96,72 +91,6 @@ def test_due_to_a_structure_is_the_factor_over_the_factor_without_it():
     np.testing.assert_allclose(p.due_to("group:clinic"), p.factor(), rtol=1e-12)
 
 
-def test_tipping_point_of_a_group_is_where_the_interval_meets_zero():
-    rng = np.random.default_rng(9)
-    f = make.trial(rng, G=12, n=20, icc=0.05, effect=1.2)
-    (tip,) = tipping(f, ("group:clinic",), ("arm",))
-    assert tip.value is not None
-    d = f.design
-    X, Z = d.Q @ d.basis.R, np.eye(12)[d.group.levels[0].codes]
-    y = f.response.residual[:, 0] + d.Q @ f.response.coef[:, 0]
-    V = (1 - tip.value) * np.eye(d.n) + tip.value * Z @ Z.T
-    bread = np.linalg.inv(X.T @ X)
-    M = np.eye(d.n) - d.Q @ d.Q.T
-    scale = float(y @ M @ y) / np.trace(M @ V)
-    se = np.sqrt(scale * (bread @ X.T @ V @ X @ bread)[1, 1])
-    beta = float((bread @ X.T @ y)[1])
-    # Satterthwaite's df from the parts of the coefficient between and within clinics, written out:
-    # 12 clinics and two columns of clinics (constant, arm), 240 rows less 12 clinics and x
-    a = X @ bread[:, 1]
-    between = float(np.sum((Z @ np.linalg.pinv(Z) @ a) ** 2) / np.sum(a**2))
-    n0 = np.trace(Z.T @ M @ Z) / 10
-    parts_of_variance = between * (1 + tip.value * (n0 - 1)), (1 - between) * (1 - tip.value)
-    df = sum(parts_of_variance) ** 2 / (parts_of_variance[0] ** 2 / 10 + parts_of_variance[1] ** 2 / 227)
-    assert 9.9 < df < 12
-    # linear between values 0.01 apart
-    assert abs(beta) == pytest.approx(stats.t.isf(0.025, df) * se, rel=2e-3)
-    assert f"{tip.value:.2g}" in tip.sentence
-
-
-def test_tipping_point_of_a_series_is_where_the_interval_meets_zero():
-    rng = np.random.default_rng(12)
-    t = np.arange(80)
-    f = make.fits(make.design({"day": t}, tick=t), 0.03 * t + make.ar1(rng, 1, 80, 0.2))
-    (tip,) = tipping(f, ("serial",), ("day",))
-    assert tip.value is not None
-    d = f.design
-    V = tip.value ** np.abs(t[:, None] - t)
-    w = d.basis.contrast(np.array([0.0, 1.0]))
-    M = np.eye(80) - d.Q @ d.Q.T
-    scale = float(f.response.ss[0]) / np.trace(M @ V)
-    se = np.sqrt(scale * w @ d.Q.T @ V @ d.Q @ w)
-    assert abs(w @ f.response.coef[:, 0]) == pytest.approx(stats.t.isf(0.025, d.m) * se, rel=5e-3)
-
-
-def test_tipping_point_at_irregular_times_where_a_rate_is_searched():
-    """The working parameter falls as ρ rises; the same table in whole steps gives nearly the same point."""
-    rng = np.random.default_rng(12)
-    t = np.arange(80)
-    f = make.fits(make.design({"day": t}, tick=t), 0.03 * t + make.ar1(rng, 1, 80, 0.2))
-    (whole,) = tipping(f, ("serial",), ("day",))
-    known = f.design.serial
-    free = Series(known.name, known.part, known.elapsed, known.unit, 1.0, None, "irregular")
-    irregular = replace(f.design, serial=free)
-    g = Fits(replace(f.response, design=irregular), f.run)
-    (found,) = tipping(g, ("serial",), ("day",))
-    assert found.value == pytest.approx(whole.value, abs=0.01)
-
-
-def test_no_tipping_point_is_said_in_words():
-    rng = np.random.default_rng(3)
-    f = make.trial(rng, effect=0.0)
-    arm, x = tipping(f, ("group:clinic",), ("arm", "x"))
-    assert arm.value is None
-    assert "without any dependence" in arm.sentence
-    assert x.value is None
-    assert "Not even an intraclass correlation of 0.95" in x.sentence
-
-
 def test_weights_scale_the_row_noise_alone():
     """Weighted parts against V = σ²ₖZZ' + σ²Ω⁻¹ written out on the user's scale."""
     rng = np.random.default_rng(7)
@@ -180,19 +109,3 @@ def test_weights_scale_the_row_noise_alone():
     M = W - W @ X @ bread @ X.T @ W
     believed = np.trace(M @ V) / 58 * np.diag(bread)
     np.testing.assert_allclose(p.factor()[:, 0], np.sqrt(true / believed), rtol=1e-8)
-
-
-@pytest.mark.parametrize(("series", "length"), [(1, 80), (10, 40), (40, 8)])
-def test_spline_over_the_correlation_is_the_form_worked_out_at_each(series, length, monkeypatch):
-    """Slow twin: Q'KQ at all 60 values instead of 17 and a spline between them."""
-    from clingstone.ledger import consequence
-
-    rng = np.random.default_rng(series)
-    who, t = np.repeat(np.arange(series), length), np.tile(np.arange(length), series)
-    x = np.cumsum(rng.standard_normal(series * length))
-    f = make.fits(make.design({"x": x}, series=who, tick=t), rng.standard_normal(series * length))
-    _, fast, mean = consequence._scan(f, "serial")
-    monkeypatch.setattr(consequence, "NODES", 60)
-    _, slow, exact = consequence._scan(f, "serial")
-    assert np.max(np.abs(fast - slow)) < 2e-3 * np.max(np.abs(slow))
-    assert np.max(np.abs(mean / exact - 1)) < 1e-4

@@ -1,4 +1,4 @@
-"""What dependence does to the ordinary fit: parts of each variance, total factors, tipping points.
+"""What dependence does to the ordinary fit: parts of each variance, and total factors.
 
 Var(c'β̂) of ordinary least squares under V = Σ σ²ₖKₖ is Σ σ²ₖ w'Q'KₖQw with w = R⁻ᵀc, and what the
 ordinary fit believes it to be is E s²·‖w‖² with E s² = tr(MV)/m. Both are linear in V, so the parts
@@ -12,16 +12,12 @@ from dataclasses import dataclass
 from functools import partial
 
 import numpy as np
-from scipy import stats
 from scipy.interpolate import CubicSpline
 
 from clingstone.covariance.algebras import Chosen
-from clingstone.covariance.components import Component
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
-from clingstone.display import significant
-from clingstone.evidence.anova import absorbed
-from clingstone.ledger.entries import Inflation, Tipping
+from clingstone.ledger.entries import Inflation
 from clingstone.ledger.region import Region
 from clingstone.maths.once import Array, kept
 from clingstone.remedies.remedy import rows
@@ -171,106 +167,3 @@ def inflation(found: Parts, region: Region) -> tuple[Inflation, ...]:
         low, estimate, high = region.interval(factor[k])
         out.append(Inflation(term, "total", low, estimate, high))
     return tuple(out)
-
-
-# ---- tipping points ------------------------------------------------------------------------
-
-
-def tipping(fits: Fits, keys: tuple[str, ...], focus: tuple[str, ...]) -> tuple[Tipping, ...]:
-    """For each focus row and each group level or serial structure: where the interval takes in zero.
-
-    The ordinary estimate is held, its variance is that of a single structure whose parameter runs
-    from 0 to 0.95, and σ² is scaled to the observed e'e. The t quantile has m degrees of freedom along a
-    series; with groups those of Satterthwaite's combination of what varies between and within them, so
-    that a term of groups is judged by the number of groups.
-    """
-    out: list[Tipping] = []
-    for key in keys:
-        s, mixed, mean = _scan(fits, key)
-        out += [_tip(fits, key, term, s, mixed, mean) for term in focus]
-    return tuple(out)
-
-
-def _scan(fits: Fits, key: str) -> tuple[Array, Array, Array]:
-    """s (P,), Q'((1−s)I + sK)Q (P, p, p), and tr(M·)/m of each; for a series s is ρ and K = K(ρ)."""
-    design, algebra = fits.design, fits.algebra(frozenset({key}))
-    if key == "serial" and not fits.components[key].repeats:
-        bound = algebra.parameters[0]
-        theta = np.linspace(bound.low, bound.high, 401)[None]
-        rho = np.asarray(algebra.shape(theta)["serial.rho"], dtype=float)
-        order = np.argsort(rho)
-        order = order[(rho[order] > 0) & (rho[order] <= 0.95)]
-        # Q'KQ bends slowly along the working parameter: a spline over some of it serves the rest.
-        grid, nodes = (order[np.unique(np.linspace(0, len(order) - 1, k).astype(int))] for k in (60, NODES))
-        known = np.array([algebra.spread(key, theta[:, i]) for i in nodes])
-        if theta[0, nodes[0]] > theta[0, nodes[-1]]:  # a rate falls as the correlation rises
-            nodes, known = nodes[::-1], known[::-1]
-        between = CubicSpline(theta[0, nodes], known)(theta[0, grid]) if design.p else known[:1]
-        s = np.r_[0.0, rho[grid]]
-        spread = np.concatenate(
-            [np.eye(design.p)[None], np.broadcast_to(between, (len(grid), *known.shape[1:]))]
-        )
-    else:
-        s = np.linspace(0.0, 0.95, 96)
-        spread = algebra.spread(key, fits[{key}].theta[:, 0])[None]
-    mixed = (1 - s)[:, None, None] * np.eye(design.p) + s[:, None, None] * spread
-    trace = (1 - s) * design.n + s * trace_of(design, key)
-    return s, mixed, (trace - np.einsum("Bpp->B", mixed)) / design.m
-
-
-def _tip(fits: Fits, key: str, term: str, s: Array, mixed: Array, mean: Array) -> Tipping:
-    design, component = fits.design, fits.components[key]
-    names, weights = rows(design)
-    w = design.basis.contrast(weights[names.index(term)])
-    t = stats.t.isf((1 - fits.run.settings.confidence) / 2, _freedom(design, component, w, s))
-    sigma2 = float(fits.response.ss[0]) / (design.m * mean)
-    gap = abs(float(w @ fits.response.coef[:, 0])) - t * np.sqrt(
-        sigma2 * np.einsum("p,Bpq,q->B", w, mixed, w)
-    )
-    along = key == "serial" and not component.repeats
-    parameter = "ρ" if along else "intraclass correlation"
-    named = f"“{term}”" if ":" in term else term
-    unit = "time" if component.repeats else _one(component.label)
-    where = f"along {component.label}" if along else f"between rows of one {unit}"
-    if gap[0] <= 0:
-        sentence = f"The ordinary interval of {named} takes in zero without any dependence."
-        return Tipping(term, key, parameter, None, sentence)
-    what = "a correlation from one step to the next" if along else "an intraclass correlation"
-    crossed = np.flatnonzero(gap <= 0)
-    if not crossed.size:
-        sentence = f"Not even {what} of 0.95 {where} would make the interval of {named} take in zero."
-        return Tipping(term, key, parameter, None, sentence)
-    i = int(crossed[0])
-    value = float(s[i - 1] + (s[i] - s[i - 1]) * gap[i - 1] / (gap[i - 1] - gap[i]))
-    sentence = (
-        f"With {what} of {significant(value)} or more {where}, the interval of {named} would take in zero."
-    )
-    return Tipping(term, key, parameter, value, sentence)
-
-
-def _freedom(design: Design, component: Component, w: Array, s: Array) -> Array:
-    """(P,) degrees of freedom of the variance of w'β̂ at every intraclass correlation.
-
-    Its parts between and within groups are estimated by their own mean squares, with r and n − rank[X, Z]
-    degrees of freedom (Satterthwaite 1946); at s = 0 they are one and have m.
-    """
-    whole = np.full(len(s), float(design.m))
-    part = None if component.key == "serial" else design.partitions.get(component.part)
-    if part is None:
-        return whole
-    inner = absorbed(design, part)
-    df1, df2 = part.count + inner.p - design.p, design.n - part.count - inner.p
-    if df1 < 1 or df2 < 1:
-        return whole
-    sizes = design.sizes(part)
-    between = float(np.sum((design.sums(part) @ w) ** 2 / sizes) / (w @ w))
-    n0 = float(sizes.sum() - np.sum(design.sums(part) ** 2)) / df1
-    a = between * (1 + s * (n0 - 1))
-    b = (1 - between) * (1 - s)
-    df = (a + b) ** 2 / (a**2 / df1 + b**2 / df2)
-    return np.where(s > 0, df, whole)
-
-
-def _one(label: str) -> str:
-    """The inner name of a nested level."""
-    return label.split("/")[-1]

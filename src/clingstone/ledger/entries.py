@@ -73,13 +73,18 @@ class Inflation:
 
 @dataclass(frozen=True)
 class Tipping:
-    """The parameter value at which a focus interval would take in zero, or None."""
+    """The parameter value at which a focus interval would take in zero, or None.
+
+    Of two structures together ``key`` and ``parameter`` name both, ``value`` is that of the second with the
+    first at its estimate, and ``border`` holds the pairs at which the interval meets zero.
+    """
 
     term: str
     key: str
     parameter: str
     value: float | None
     sentence: str
+    border: tuple[tuple[float, float], ...] = ()
 
 
 @dataclass(frozen=True)

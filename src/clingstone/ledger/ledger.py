@@ -8,7 +8,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design, Term
 from clingstone.evidence.finding import Evidence, Test
 from clingstone.ledger import standing as judge
-from clingstone.ledger.consequence import inflation, parts, tipping
+from clingstone.ledger.consequence import inflation, parts
 from clingstone.ledger.detect import detectable
 from clingstone.ledger.entries import (
     Detectable,
@@ -21,6 +21,7 @@ from clingstone.ledger.entries import (
 )
 from clingstone.ledger.region import region
 from clingstone.ledger.sizes import parameters, shares
+from clingstone.ledger.tipping import tipping
 from clingstone.needs import NotSupported
 from clingstone.remedies.remedy import rows
 
@@ -64,7 +65,7 @@ def weigh(fits: Fits, evidence: Evidence, tests: tuple[Test, ...] | None = None)
         return found
     return replace(
         found,
-        tipping=tipping(fits, _simple(fits), focus) if fits.design.known else (),
+        tipping=tipping(fits, found, focus) if fits.design.known else (),
         detectable=detectable(fits, found.standing, tests, judge.adjusted_tests(evidence)),
     )
 
@@ -126,10 +127,3 @@ def focus_rows(fits: Fits) -> tuple[str, ...]:
 def focus_terms(design: Design) -> tuple[Term, ...]:
     """Terms in focus; all but the constant when none is named; the constant when it is all there is."""
     return design.focus() or tuple(t for t in design.terms if t.kind != "constant") or design.terms
-
-
-def _simple(fits: Fits) -> tuple[str, ...]:
-    """Components that have a tipping point in one parameter."""
-    return tuple(
-        k for k in fits.components if k in fits.full_node and (k == "serial" or k.startswith("group:"))
-    )
