@@ -20,16 +20,6 @@ FEWEST = 100  # replicates per truth below which a contender is not worth starti
 MOST = 1000  # replicates per truth of a short rehearsal; the Monte-Carlo error is 0.7 points
 TOO_DEAR = "a short rehearsal has no time for it; clingstone rehearse makes a long one"
 UNKNOWN = 30_000.0  # a remedy that nobody timed
-# Remedies that resample or search column by column: µs per column, and per column and row.
-SLOW = {
-    "wild-cluster-bootstrap": (1500.0, 10.0),
-    "randomisation": (300.0, 2.0),
-    "spatial-components": (800.0, 2.0),
-    "car1": (2000.0, 20.0),
-    "arma": (10_000.0, 150.0),
-    "spatial-error": (20_000.0, 600.0),
-}
-QUICK = ("group-means", "group-t")  # a few numbers per group
 
 
 def of_draw(study: Study) -> float:
@@ -47,9 +37,8 @@ def of(contender: Contender, study: Study) -> float:
     """One contender on one column of y."""
     design, ready = study.fits.design, contender.ready
     n, p, k = design.n, design.p, design.p + len(design.contrasts)
-    if contender.remedy.id in SLOW:
-        fixed, per_row = SLOW[contender.remedy.id]
-        return fixed + per_row * n
+    if (price := contender.remedy.price) is not None:
+        return price.fixed + price.row * n
     if isinstance(ready, OrdinaryReady):
         return 2.0
     if isinstance(ready, ClusterReady):
@@ -59,7 +48,7 @@ def of(contender: Contender, study: Study) -> float:
     if isinstance(ready, GlsReady):
         return _of_gls(ready, study)
     plain = isinstance(ready, LinearReady) and type(ready).refer is LinearReady.refer
-    return 10.0 + 0.01 * n * k if plain or contender.remedy.id in QUICK else UNKNOWN
+    return 10.0 + 0.01 * n * k if plain else UNKNOWN
 
 
 def _of_gls(ready: GlsReady, study: Study) -> float:

@@ -18,7 +18,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.linear import LinearReady, reported
 from clingstone.remedies.places import OnMap, enough_sites
-from clingstone.remedies.remedy import Account, Estimand
+from clingstone.remedies.remedy import Account, Estimand, Price
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -105,6 +105,7 @@ class SpatialComponents(OnMap):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "muller-watson-2022"
+    price: ClassVar[Price | None] = Price(800.0, 2.0)
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> ComponentsReady:
         sites = enough_sites(design, FEWEST, "smooth maps need")

@@ -37,6 +37,7 @@ from clingstone.remedies.remedy import (
     Estimand,
     Estimates,
     Flags,
+    Price,
     Remedy,
 )
 from clingstone.remedies.words import bound_notes, gls_account
@@ -249,6 +250,10 @@ class Gls:
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return frozenset(fits.components[key].family for key in self.node(fits))
+
+    @property
+    def price(self) -> Price | None:
+        return None
 
     def working(self, fits: Fits) -> ErrorModel | None:
         return None

@@ -18,7 +18,7 @@ from clingstone.needs import Family, Limits, Needs, Refusal
 from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.linear import stop_if_none_left
-from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, multi, rows
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Price, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -139,6 +139,7 @@ class GroupT(OverGroups):
     estimand: ClassVar[Estimand] = "within"
     needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "ibragimov-muller-2010"
+    price: ClassVar[Price | None] = Price(10.0, 0.02)
 
     @property
     def name(self) -> str:

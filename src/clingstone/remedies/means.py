@@ -20,7 +20,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import OverGroups, clusters
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import blanked, few_df, stop_if_none_left
-from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, multi, rows
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Price, multi, rows
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
@@ -133,6 +133,7 @@ class GroupMeans(OverGroups):
     estimand: ClassVar[Estimand] = "between"
     needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "leyrat-2018"
+    price: ClassVar[Price | None] = Price(10.0, 0.02)
 
     @property
     def name(self) -> str:

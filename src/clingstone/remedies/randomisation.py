@@ -18,7 +18,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import clusters, covered
 from clingstone.remedies.joint import Joint
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain, Price
 from clingstone.remedies.resampled import ResampledReady
 
 if TYPE_CHECKING:
@@ -150,6 +150,7 @@ class Randomisation(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "fisher-1935"
+    price: ClassVar[Price | None] = Price(300.0, 2.0)
 
     @property
     def name(self) -> str:

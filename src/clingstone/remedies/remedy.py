@@ -5,7 +5,7 @@ from __future__ import annotations
 import math
 from collections.abc import Iterator, Mapping
 from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING, ClassVar, Literal, Protocol
+from typing import TYPE_CHECKING, ClassVar, Literal, NamedTuple, Protocol
 
 import numpy as np
 import numpy.typing as npt
@@ -191,6 +191,11 @@ class Remedy(Protocol):
     @property
     def limits(self) -> Limits: ...
 
+    @property
+    def price(self) -> Price | None:
+        """Of one column among many, where what is prepared does not tell it: a search, a resampling."""
+        ...
+
     def abouts(self, design: Design) -> tuple[str, ...]:
         """The levels at which it can be run, the default first; ("",) when there is no choice."""
         ...
@@ -218,10 +223,18 @@ DATED = Needs(parts=frozenset({"serial"}), known_design=True)
 PLACED = Needs(parts=frozenset({"spatial"}), known_design=True)
 
 
+class Price(NamedTuple):
+    """Microseconds of one column of y on an ordinary core: ``fixed``, and ``row`` for each of its rows."""
+
+    fixed: float
+    row: float
+
+
 class Plain:
     """Defaults of a remedy: of the whole table, for the families it names, with nothing fitted first."""
 
     covers: ClassVar[frozenset[Family]]
+    price: ClassVar[Price | None] = None
 
     def abouts(self, design: Design) -> tuple[str, ...]:
         return ("",)

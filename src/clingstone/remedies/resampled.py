@@ -17,7 +17,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.clusters import OverClusters, clusters, few_treated, rank_note
 from clingstone.remedies.joint import Joint
 from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
-from clingstone.remedies.remedy import KNOWN, Account, Estimand, Estimates, multi
+from clingstone.remedies.remedy import KNOWN, Account, Estimand, Estimates, Price, multi
 from clingstone.remedies.sandwich import decided_by_one
 
 if TYPE_CHECKING:
@@ -202,6 +202,7 @@ class WildClusterBootstrap(OverClusters):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = KNOWN
     source: ClassVar[str] = "cameron-gelbach-miller-2008"
+    price: ClassVar[Price | None] = Price(1500.0, 10.0)
 
     @property
     def name(self) -> str:

@@ -19,7 +19,7 @@ from clingstone.maths.search import Optimum
 from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.columns import Column, FittedReady, apart
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import DATED, Account, Estimand, Estimates, Plain, Price
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -200,6 +200,7 @@ class Car1(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = DATED
     source: ClassVar[str] = "jones-1980"
+    price: ClassVar[Price | None] = Price(2000.0, 20.0)
 
     def prepare(self, design: Design, working: ErrorModel | None) -> FadingReady:
         series = enough_times(design, self.limits)
@@ -272,6 +273,7 @@ class Arma(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "ansley-1979"
+    price: ClassVar[Price | None] = Price(10000.0, 150.0)
 
     def prepare(self, design: Design, working: ErrorModel | None) -> ArmaReady:
         series = enough_times(design, self.limits)

@@ -22,7 +22,7 @@ from clingstone.needs import Family, Limits, Needs, NotSupported
 from clingstone.remedies.columns import Column, FittedReady, plain_df
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.places import Spread
-from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import Account, Estimand, Estimates, Plain, Price
 from clingstone.structure.neighbours import Neighbours
 
 if TYPE_CHECKING:
@@ -289,6 +289,7 @@ class SpatialError(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"spatial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "ord-1975"
+    price: ClassVar[Price | None] = Price(20000.0, 600.0)
 
     def prepare(self, design: Design, working: ErrorModel | None = None) -> SpatialErrorReady:
         positive_m(design)
