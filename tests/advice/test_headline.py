@@ -148,7 +148,8 @@ def test_what_was_tested_and_what_was_not_are_told_apart():
     book = replace(ledger(group="not applicable", serial="not detected"), detectable=(), refused=())
     text = say.nothing(book)
     assert text.startswith("No dependence was detected")
-    assert text.endswith("What could not be tested is not ruled out: clinic.")
+    assert "What could not be tested is not ruled out: clinic." in text
+    assert text.endswith("is not known for day.")
 
 
 def test_what_was_not_seen_is_told_as_room_not_as_a_find():
@@ -163,3 +164,12 @@ def test_what_was_not_seen_is_told_as_room_not_as_a_find():
     assert "is estimated at 0.60 per day and could be up to 0.75" in say.dependence(ledger(serial="unclear"))
     fixed = replace(book, standing=(replace(book.standing[0], fixed=True, widens=False),))
     assert "but the design fixes that level" in say.dependence(fixed)
+
+
+def test_every_structure_that_was_not_found_has_its_size_or_a_word():
+    book = ledger(group="not detected", serial="not detected", spatial="unclear")
+    blind = replace(book.detectable[0], key="serial", parameter="ρ", value=float("nan"))
+    text = say.nothing(replace(book, detectable=(*book.detectable, blind)))
+    assert "an intraclass correlation of 0.09" in text
+    assert "For day not even the strongest would have shown in most such data." in text
+    assert "How weak a one could have shown is not known for place." in text
