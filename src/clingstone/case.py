@@ -164,10 +164,10 @@ class Case:
 
     @classmethod
     def from_fit(cls, result: Any, data: Any = None, **options: Any) -> Case:
-        """A case from a statsmodels OLS or WLS result.
+        """A case from an OLS or WLS result of statsmodels, or a PooledOLS result of linearmodels.
 
         ``data`` is the frame with ids, times and places; the frame of a formula is used where none
-        is given. Rows are matched by their labels.
+        is given (of linearmodels, its columns with entity and time). Rows are matched by their labels.
         """
         if not fitted.is_fit(result):
             raise InputError(

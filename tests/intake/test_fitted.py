@@ -10,7 +10,10 @@ import pandas as pd
 import pytest
 import statsmodels.api as sm
 import statsmodels.formula.api as smf
+from linearmodels.iv import IV2SLS
+from linearmodels.panel import BetweenOLS, PanelOLS, PooledOLS, RandomEffects
 
+from clingstone.case import Case
 from clingstone.intake.fitted import is_fit, recover
 from clingstone.needs import InputError
 
@@ -149,3 +152,106 @@ def test_dependent_columns_of_a_fit_are_named() -> None:
     frame = herd().assign(twice=lambda d: 2 * d["age"])
     fit = smf.ols("milk ~ age + twice", frame).fit()  # statsmodels fits this by a pseudo-inverse
     assert "twice follows exactly from age" in message(lambda: recover(fit))[0]
+
+
+# ---- linearmodels ----------------------------------------------------------------------------------
+
+
+def firms() -> pd.DataFrame:
+    rng = np.random.default_rng(3)
+    frame = pd.DataFrame(
+        {
+            "firm": np.repeat([f"f{i}" for i in range(8)], 5),
+            "year": np.tile(np.arange(2001, 2006), 8),
+            "sales": rng.normal(5, 1, 40),
+            "size": rng.normal(0, 1, 40),
+            "sector": np.tile(["wool", "milk"], 20),
+            "w": rng.uniform(1, 2, 40),
+        }
+    )
+    frame.loc[[3, 11], "sales"] = np.nan
+    return frame
+
+
+@pytest.mark.parametrize("given", ["nothing", "indexed", "columns", "shuffled"])
+def test_a_pooled_panel_regression_is_its_ordinary_fit(given: str) -> None:
+    """statsmodels fits the same rows."""
+    frame = firms()
+    panel = frame.set_index(["firm", "year"])
+    fit = PooledOLS.from_formula("sales ~ 1 + size + sector", panel).fit()
+    assert is_fit(fit)
+    data = {
+        "nothing": None,
+        "indexed": panel,
+        "columns": frame,
+        "shuffled": frame.sample(frac=1, random_state=5),
+    }[given]
+    case = Case.from_fit(fit, data, group="firm", time="year")
+    ours = Case.from_formula(frame, "sales ~ size + sector", group="firm", time="year")
+    assert case.response.ss == pytest.approx(ours.response.ss, rel=1e-10)
+    assert case.design.n == 38
+    assert set(case.design.names) == {"constant", "size", "sector: wool"}
+    assert case.summary().serial == ours.summary().serial
+    if given in ("indexed", "columns"):
+        assert case.kept.tolist() == ours.kept.tolist()
+        assert [t.kind for t in case.design.terms] == ["constant", "numeric", "factor"]
+        assert dict(case.dropped) == {"not used by the fit": 2}
+
+
+def test_weights_and_arrays_of_a_panel_regression() -> None:
+    panel = firms().set_index(["firm", "year"]).dropna()
+    X = panel[["size"]].assign(const=1.0)
+    fit = PooledOLS(panel["sales"], X, weights=panel["w"]).fit()
+    got = recover(fit)
+    assert got.blocks.names == ("size", "constant")
+    assert got.weights is not None
+    assert got.weights / got.weights[0] == pytest.approx((panel["w"] / panel["w"].iloc[0]).to_numpy())
+    theirs = sm.WLS(panel["sales"], X, weights=panel["w"]).fit()
+    assert np.asarray(fit.params) == pytest.approx(theirs.params.to_numpy(), rel=1e-9)
+
+
+def test_a_panel_regression_without_a_constant_has_none() -> None:
+    panel = firms().set_index(["firm", "year"])
+    got = recover(PooledOLS.from_formula("sales ~ size", panel).fit(), panel)
+    assert got.blocks.names == ("size",)
+    assert got.blocks.remake is not None
+
+
+def test_an_instrumental_regression_without_instruments() -> None:
+    frame = firms()
+    got = recover(IV2SLS.from_formula("sales ~ 1 + size", frame).fit(), frame)
+    assert got.blocks.names == ("constant", "size")
+    assert got.places.tolist() == [i for i in range(40) if i not in (3, 11)]
+
+
+@pytest.mark.parametrize(
+    ("make", "stops", "hint"),
+    [
+        (
+            lambda p: PanelOLS.from_formula("sales ~ size + EntityEffects", p),
+            "a PanelOLS with effects was given",
+            "refit ‘fixed-effects’",
+        ),
+        (
+            lambda p: RandomEffects.from_formula("sales ~ 1 + size", p),
+            "a fitted RandomEffects was given",
+            "PooledOLS",
+        ),
+        (
+            lambda p: BetweenOLS.from_formula("sales ~ 1 + size", p),
+            "a fitted BetweenOLS was given",
+            "PooledOLS",
+        ),
+        (
+            lambda p: IV2SLS.from_formula("sales ~ 1 + [size ~ w]", p.reset_index()),
+            "a fitted IV2SLS was given",
+            "the data and the formula",
+        ),
+    ],
+)
+def test_other_estimators_of_linearmodels_are_refused(make: Any, stops: str, hint: str) -> None:
+    fit = make(firms().set_index(["firm", "year"]).dropna()).fit()
+    assert is_fit(fit)
+    said, told = message(lambda: recover(fit))
+    assert said.startswith(stops)
+    assert hint in told
