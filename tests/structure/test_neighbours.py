@@ -37,7 +37,7 @@ def test_five_sites_by_hand() -> None:
     assert (band.islands, band.components) == (1, 2)
     assert band.W.toarray()[2].tolist() == pytest.approx([1 / 3, 1 / 3, 0, 1 / 3, 0])
     assert band.W.toarray()[4].tolist() == [0] * 5
-    assert band.about == "sites within 3.00"
+    assert band.about == "sites within 3.00 map units"
 
 
 def test_the_default_is_six_nearest_then_a_band_from_the_data() -> None:

@@ -66,7 +66,7 @@ def test_what_may_be_either_stops_with_both_readings() -> None:
         built([7, 8], [46, 47], ("x", "y"))
     # One degree each way: 1.41 in the plane; on the globe the haversine gives the kilometres.
     along = haversine(np.array([7.0, 46.0]), np.array([8.0, 47.0]))
-    assert "as a plane: the sites span 1.41 units" in str(caught.value).lower()
+    assert "as a plane: the sites span 1.41 map units" in str(caught.value).lower()
     assert f"As degrees: the sites span {along:.0f} km along the great circle." in str(caught.value)
     assert caught.value.hint == "Say which with lonlat=False or lonlat=True."
 
@@ -186,7 +186,7 @@ def test_the_plane_carries_the_unit_of_its_names() -> None:
     assert (
         built([0, 3], [0, 4], ("easting_m", "northing_m")).notes[-1] == "The sites span 5.00 m in the plane."
     )
-    assert built([0, 3], [0, 4], ("x", "y"), lonlat=False).unit == ""
+    assert built([0, 3], [0, 4], ("x", "y"), lonlat=False).unit == "map units"
     assert built([0, 3], [0, 4], ("x", "y"), lonlat=False, unit="ft").unit == "ft"
 
 

@@ -117,7 +117,7 @@ class Correlogram(Plain):
             p=exceedance(largest, drawn),
             p_method=f"by {len(drawn)} draws of independent residuals, all bands at once",
             estimate=np.clip(first, -1.0, 1.0),
-            estimate_name=f"correlation of sites about {distance}{' ' + unit if unit else ''} apart",
+            estimate_name=f"correlation of sites about {distance} {unit} apart",
             low=np.clip(first - half, -1.0, 1.0),
             high=np.clip(first + half, -1.0, 1.0),
             n_used=response.design.n,

@@ -140,7 +140,7 @@ class Variogram(Plain):
             p=exceedance(_departure(value, centre, spread), drawn),
             p_method=f"by {DRAWS} draws of independent residuals",
             estimate=np.clip(first, -1.0, 1.0),
-            estimate_name=f"correlation of sites {significant(distance)}{' ' + unit if unit else ''} apart",
+            estimate_name=f"correlation of sites {significant(distance)} {unit} apart",
             low=np.clip(first - half, -1.0, 1.0),
             high=np.clip(first + half, -1.0, 1.0),
             n_used=int(bins.pairs.sum()),

@@ -67,7 +67,7 @@ def enough_sites(design: Design, least: int, need: str) -> Sites:
 
 def length(value: float, unit: str, digits: int = 3) -> str:
     """A length on the map, in the unit of the places: "2.4 km"."""
-    return f"{significant(value, digits)}{f' {unit}' if unit else ''}"
+    return f"{significant(value, digits)} {unit}"
 
 
 @dataclass(frozen=True, eq=False)
@@ -159,7 +159,7 @@ def map_items(fits: Fits, node: frozenset[str]) -> tuple[tuple[str, str], ...]:
     w = fits.design.basis.contrast(np.eye(fits.design.p))
     for kernel in kernels(fits, node):
         name = {0.5: "exponential", 1.5: "Matérn 3/2", 2.5: "Matérn 5/2"}[kernel.smoothness]
-        reach = significant(kernel.reach, 3)
+        reach = length(kernel.reach, sites.unit)
         words = f"log-likelihood {kernel.drop:.2f} below the best, practical range {reach}"
         for j in focus[:3]:
             se = float(np.sqrt(w[:, j] @ kernel.phi @ w[:, j]))

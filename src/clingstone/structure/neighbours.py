@@ -191,14 +191,14 @@ def _band(sites: Sites, along: float) -> Neighbours:
     edges = _pairs(sites, _straight(sites, along))
     if not len(edges[0]):
         raise InputError(
-            f"no two sites lie within {along:g} {sites.unit}".rstrip(),
+            f"no two sites lie within {along:g} {sites.unit}",
             "Use a longer band; the default is chosen from the data.",
         )
     return _graph(f"band:{along:.6g}", _within(along, sites.unit), edges, sites.count)
 
 
 def _within(along: float, unit: str) -> str:
-    return f"sites within {significant(along, 3)}{' ' + unit if unit else ''}"
+    return f"sites within {significant(along, 3)} {unit}"
 
 
 def _chosen_band(sites: Sites) -> Neighbours | None:

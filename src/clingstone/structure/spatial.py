@@ -16,6 +16,7 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import InputError
 
 EARTH_RADIUS_KM = 6371.0088  # mean radius, IUGG
+MAP_UNITS = "map units"  # of coordinates whose unit nobody said
 
 
 @dataclass(frozen=True, eq=False)
@@ -25,13 +26,13 @@ class Sites:
     part : rows → site (key "site").
     xy : (S, 2) coordinates as given: planar, or longitude and latitude in degrees.
     kind : "planar" or "lonlat".
-    unit : "km" for lonlat; otherwise the unit of the coordinates ("" when not known).
+    unit : "km" for lonlat; otherwise the unit of the coordinates, "map units" when not known.
     """
 
     part: Partition
     xy: Array
     kind: Literal["planar", "lonlat"]
-    unit: str = ""
+    unit: str = MAP_UNITS
     names: tuple[str, str] = ("x", "y")
     notes: tuple[str, ...] = ()
 
@@ -162,9 +163,8 @@ def build(
 def span(sites: Sites) -> str:
     """The extent in a sentence, with its unit."""
     across = float(sites.along(np.asarray(sites.extent)))
-    unit = sites.unit or "units of the coordinates"
     how = "along the great circle" if sites.kind == "lonlat" else "in the plane"
-    return f"The sites span {significant(across, 3)} {unit} {how}."
+    return f"The sites span {significant(across, 3)} {sites.unit} {how}."
 
 
 def _decide(
@@ -214,7 +214,7 @@ def _out_of_range(x: Array, y: Array, names: tuple[str, str], places: npt.NDArra
 
 def _ambiguous(x: Array, y: Array, names: tuple[str, str]) -> InputError:
     part, xy = _collapse(x, y, "planar")
-    plane = span(Sites(part, xy, "planar", "", names))
+    plane = span(Sites(part, xy, "planar", MAP_UNITS, names))
     globe = span(Sites(part, xy, "lonlat", "km", names))
     return InputError(
         f"{names[0]} and {names[1]} may be coordinates in a plane or longitude and latitude. "
@@ -237,6 +237,6 @@ def _collapse(x: Array, y: Array, kind: str) -> tuple[Partition, Array]:
 
 
 def _unit(names: tuple[str, str]) -> str:
-    """A unit that both column names end with: "x_km", "y_km"."""
+    """A unit that both column names end with ("x_km", "y_km"), else map units."""
     ends = {re.split(r"[^A-Za-z]", name)[-1].casefold() for name in names}
-    return _UNITS.get(ends.pop(), "") if len(ends) == 1 else ""
+    return _UNITS.get(ends.pop(), MAP_UNITS) if len(ends) == 1 else MAP_UNITS
