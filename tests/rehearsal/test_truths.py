@@ -5,9 +5,11 @@ from __future__ import annotations
 from dataclasses import replace
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy import stats
 
+from clingstone.case import Case
 from clingstone.covariance.fits import Fits
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import weigh
@@ -15,6 +17,7 @@ from clingstone.ledger.region import loglik
 from clingstone.maths import matern
 from clingstone.needs import Limits
 from clingstone.rehearsal.truths import INNER, draw, errors, truths
+from clingstone.run import Run, Settings
 from rehearsal.worlds import stream, trial, truth_of, wells
 
 
@@ -47,6 +50,37 @@ def test_serial_and_spatial_truths_have_their_own_rival():
     have = found(wells())
     assert have[-1].different == "smooth field"
     assert len(have) == 6
+
+
+def sloped(sd: float, seed: int = 6) -> Fits:
+    """Clinics whose slopes of a covariate by row differ by so much."""
+    rng = np.random.default_rng(seed)
+    clinic = np.repeat(np.arange(20), 12)
+    x = rng.normal(size=240)
+    y = rng.normal(size=240) + 0.5 * rng.normal(size=20)[clinic] + sd * rng.normal(size=20)[clinic] * x
+    table = pd.DataFrame({"y": y, "x": x, "clinic": [f"c{v:02d}" for v in clinic]})
+    settings = Settings(model="y ~ x", group="clinic", focus="x")
+    return Fits(Case.of(table, settings).response, Run(settings))
+
+
+def test_slopes_that_differ_are_simulated_where_they_are_seen():
+    """Drawn slopes have the fitted spread: by ordinary lines per clinic, less what row noise gives them."""
+    f = sloped(0.6)
+    truth = next(t for t in found(f) if t.name == "differing slopes")
+    assert "slopes of x differ between clinic with a standard deviation of" in truth.words
+    said = float(truth.words.rsplit(" ", 1)[1])
+    assert said == pytest.approx(0.6, abs=0.25)
+    E = errors(truth, f, np.random.default_rng(1), 400)
+    codes = f.design.partitions["clinic"].codes
+    x = f.design.covariates["x"]
+    seen, noise = [], []
+    for c in range(20):
+        own = x[codes == c] - x[codes == c].mean()
+        seen.append(own @ E[codes == c] / (own @ own))
+        noise.append(truth.sigma2 / (own @ own))
+    spread = np.mean(np.square(seen)) - np.mean(noise)
+    assert np.sqrt(spread) == pytest.approx(said, rel=0.05)
+    assert not any(t.name == "differing slopes" for t in found(sloped(0.0)))
 
 
 def test_an_estimate_at_zero_has_an_upper_end_only():

@@ -14,21 +14,26 @@ from typing import Literal
 import numpy as np
 from scipy import stats
 
+from clingstone.covariance.components import slope_key
 from clingstone.covariance.fits import Fits
 from clingstone.covariance.pieces import SerialPiece, SpatialPiece
+from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.vecchia import NearestPiece
 from clingstone.design.response import Response
 from clingstone.display import number, significant
+from clingstone.evidence.slopes import SlopeVariation, sloping
 from clingstone.ledger.consequence import parts
 from clingstone.ledger.ledger import Ledger, focus_rows
 from clingstone.ledger.region import Region, loglik, region
 from clingstone.maths import matern
 from clingstone.maths.once import Array, kept
+from clingstone.needs import NotSupported
 from clingstone.rehearsal.drawn import Drawn
 from clingstone.rehearsal.drawn import draw as draw_sums
 
 INNER = 0.80  # the 10 % and 90 % points are the ends of the 80 % interval
 MOST = 2  # parameters that are moved
+SEEN = 0.05  # level, over the slopes looked at, from which slopes that differ are simulated
 BISECTIONS = 12
 AR_PART = 0.8  # of the noisy series' variance; the rest is row noise
 MOST_RHO = 0.97  # of the process below that noise
@@ -73,8 +78,8 @@ def truths(fits: Fits, ledger: Ledger) -> tuple[Truth, ...]:
             if abs(values[column] - values[0]) > 1e-3 * max(abs(values[0]), 0.01):
                 theta = _inwards(fits, node, best, inside.model.theta[:, column])
                 at.append(_truth(fits, node, theta, f"{words} {end}"))
-    other = _different(fits, at[0])
-    return tuple(dict.fromkeys(at)) + ((other,) if other is not None else ())
+    more = (_slopes(fits, node), _different(fits, at[0]))
+    return (*dict.fromkeys(at), *(truth for truth in more if truth is not None))
 
 
 def _inwards(fits: Fits, node: frozenset[str], best: Array, outer: Array) -> Array:
@@ -139,6 +144,36 @@ def _truth(fits: Fits, node: frozenset[str], theta: Array, name: str) -> Truth:
             said.append(f"practical range {significant(shape['spatial.range'])}")
     words = "; ".join(said) if said else "independent rows"
     return Truth(name, words, keys, tuple(float(v) for v in theta), sigma2)
+
+
+def _slopes(fits: Fits, node: frozenset[str]) -> Truth | None:
+    """Groups whose slopes differ as fitted, where the clearest test of them speaks; None where none does.
+
+    An order in time and places are left out of it: groups with lines of their own are another account of
+    what hangs together there.
+    """
+    test, found = SlopeVariation(), []
+    design, looked = fits.design, sloping(fits.design)
+    for (part, term), about in zip(looked, test.abouts(design), strict=True):
+        if term.variables and term.variables[0] in design.covariates:
+            found.append((float(test.read(fits, about).p[0]), part.key, term.variables[0]))
+    p, level, x = min(found, default=(1.0, "", ""))
+    if not p * len(found) < SEEN:
+        return None
+    key = slope_key(level, x)
+    wider = {k for k in node if k.startswith("group:")} | {f"group:{level}", key}
+    try:
+        algebra, model = fits.algebra(wider), fits[wider]
+    except NotSupported:
+        return None
+    if not isinstance(algebra, Sloped) or bool(model.at_bound[algebra.slices[key].start, 0]):
+        return None
+    theta, sigma2 = model.theta[:, 0], float(model.sigma2[0])
+    bundle = algebra.bundle(level)
+    where = [piece.key for piece in bundle.pieces].index(key)
+    sd = float(np.sqrt(bundle.covariance(algebra.joined(bundle, theta), sigma2)[where, where]))
+    words = f"slopes of {x} differ between {level} with a standard deviation of {significant(sd)}"
+    return Truth("differing slopes", words, model.node, tuple(float(v) for v in theta), sigma2)
 
 
 def _different(fits: Fits, estimate: Truth) -> Truth | None:
