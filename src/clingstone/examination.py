@@ -7,7 +7,7 @@ import platform
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any
+from typing import TYPE_CHECKING, Any, Literal, overload
 
 from clingstone.advice.choose import REPAIRED, Advice, settle, shortlist_for
 from clingstone.advice.facts import facts as gather_facts
@@ -35,6 +35,8 @@ from clingstone.run import Alternative, Missing, Progress, Run, Settings, Ties, 
 
 if TYPE_CHECKING:
     import pandas as pd
+    from matplotlib.axes import Axes
+    from matplotlib.figure import Figure
 
 
 def examine(
@@ -296,9 +298,31 @@ class Examination:
         bare = replace(self.results, advice=advice, refits=refits, rehearsal=found, settings=settings)
         return replace(self, results=_worded(bare))
 
-    @property
-    def methods(self) -> str:
-        """The text for a methods section, in Markdown."""
+    @overload
+    def methods(self, format: Literal["markdown", "latex"] = "markdown") -> str: ...
+
+    @overload
+    def methods(self, format: Literal["word"]) -> bytes: ...
+
+    def methods(self, format: str = "markdown") -> str | bytes:
+        """The text for a methods section, with what answers which reporting item.
+
+        format : "markdown"; "latex", a document that compiles alone; or "word", the bytes of a .docx
+            file (extra ``word``).
+
+        Raises InputError for another format, NotSupported for "word" without python-docx.
+        """
+        from clingstone.writeup.latex import latex_text
+        from clingstone.writeup.word import word_bytes
+
+        if format == "word":
+            return word_bytes(self.results)
+        if format == "latex":
+            return latex_text(self.results)
+        if format != "markdown":
+            raise InputError(
+                f"there is no methods text as ‘{format}’", instead(format, ("markdown", "latex", "word"))
+            )
         return self.results.methods
 
     @property
@@ -370,7 +394,7 @@ class Examination:
         return not lines, (*words, *lines)
 
     def save(self, folder: str | Path, *, overwrite: bool = False, progress: Progress | None = None) -> Path:
-        """Write report.html, methods.md, tables, figures and results.json into a folder.
+        """Write report.html, methods (.md, .tex, .docx), references, tables, figures and results.json.
 
         progress : called with (label, done, total); the one given to ``examine`` unless another is.
         Raises InputError when the folder is taken or cannot be written.
@@ -378,6 +402,40 @@ class Examination:
         from clingstone.writeup.save import save
 
         return save(self.results, folder, overwrite=overwrite, progress=progress or self.fits.run.report)
+
+    @property
+    def figures(self) -> dict[str, str]:
+        """Name → caption of every figure of the report."""
+        from clingstone.writeup.gallery import names
+
+        return names(self.results)
+
+    def figure(self, name: str = "intervals", width: float = 660.0) -> Figure:
+        """A figure of the report as a matplotlib figure, ``width`` / 72 inches wide; restyle its ``.axes``.
+
+        Raises InputError when there is none of that name (see ``figures``).
+        """
+        from clingstone.writeup.gallery import figure
+
+        return figure(self.results, name, width)
+
+    def draw_intervals(self, ax: Axes, term: str | None = None) -> Axes:
+        """One row's interval under every refit, advised first, drawn into axes of your own.
+
+        term : the row, by default the first in focus. Raises InputError when it has no interval.
+        """
+        from clingstone.writeup.gallery import draw_intervals
+
+        return draw_intervals(self.results, ax, term)
+
+    def draw_shares(self, ax: Axes) -> Axes:
+        """What the model leaves over, by structure, drawn into axes of your own.
+
+        Raises InputError when no share was estimated.
+        """
+        from clingstone.writeup.gallery import draw_shares
+
+        return draw_shares(self.results, ax)
 
     def report(self) -> str:
         """The report as one HTML page."""

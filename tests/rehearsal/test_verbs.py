@@ -42,10 +42,10 @@ def test_examine_rehearses_unless_told_not_to(examined, table):
     assert {t.term for t in found.tallies} == {"arm: usual"}
     assert found.scores.get("mixed-intercept", "clinic") is not None
     assert found.replicates >= 100
-    assert "rehearsed" in examined.methods
+    assert "rehearsed" in examined.methods()
     quiet = clingstone.examine(table, **ARGUMENTS, rehearsal="none")
     assert quiet.rehearsal is None
-    assert "not rehearsed" in quiet.methods
+    assert "not rehearsed" in quiet.methods()
 
 
 def test_the_advice_says_that_it_was_rehearsed(examined):

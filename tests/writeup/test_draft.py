@@ -113,11 +113,15 @@ def test_what_the_fonts_of_pdftex_lack_is_declared():
     assert {c for c in body if ord(c) > 126} <= KNOWN | {chr(c) for c in declared}
 
 
+def _found(name: str) -> bool:
+    return subprocess.run(["kpsewhich", name], capture_output=True, check=False).returncode == 0
+
+
 @pytest.mark.parametrize("engine", ["pdflatex", "lualatex", "xelatex", "tectonic"])
 @pytest.mark.parametrize("make", MAKERS)
 def test_latex_compiles(make, engine, tmp_path):
-    if shutil.which(engine) is None:
-        pytest.skip(f"{engine} is not installed")
+    if shutil.which(engine) is None or (engine == "lualatex" and not _found("luaotfload-main.lua")):
+        pytest.skip(f"{engine} is not installed, or not whole")
     (tmp_path / "methods.tex").write_text(latex_text(make()), encoding="utf-8")
     flags = [] if engine == "tectonic" else ["-interaction=nonstopmode", "-halt-on-error"]
     done = subprocess.run([engine, *flags, "methods.tex"], cwd=tmp_path, capture_output=True, check=False)

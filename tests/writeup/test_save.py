@@ -13,6 +13,7 @@ from clingstone.needs import InputError
 from clingstone.results import from_json
 from clingstone.writeup import save as module
 from clingstone.writeup import script
+from clingstone.writeup.draft import shown
 from clingstone.writeup.save import FILES, save
 from tests.writeup import fixture
 
@@ -32,7 +33,13 @@ def _nothing_beside(folder: Path) -> None:
 
 
 def test_everything_is_there(results, saved):
-    assert {p.name for p in saved.iterdir()} == {*FILES, "figures"} - {*script.FILES}  # no file is named
+    again = set(script.files(results, saved))
+    assert {p.name for p in saved.iterdir()} == ({*FILES, "figures", "tables"} - set(script.FILES)) | again
+    assert {p.stem for p in (saved / "tables").iterdir()} == set(shown(results))
+    for stem, table in shown(results).items():
+        assert (saved / "tables" / f"{stem}.csv").read_text(encoding="utf-8") == table.to_csv()
+        assert (saved / "tables" / f"{stem}.tex").read_text(encoding="utf-8") == table.to_latex() + "\n"
+    assert (saved / "methods.docx").read_bytes()[:2] == b"PK"
     stems = {p.stem for p in (saved / "figures").iterdir()}
     assert {"intervals", "shares", "levels", "group-means-clinic"} == stems
     for stem in stems:

@@ -198,7 +198,7 @@ _LATEX = {
         "pm", "cdot", "surd", "ge", "le", "to", "leftrightarrow", "Vert", "lceil", "rceil", "lfloor",
         "rfloor"), strict=True)},
     "′": "$'$", "…": r"\ldots{}", "–": "--", "½": r"$\frac12$", "⅔": r"$\frac23$", "°": r"$^\circ$",
-    "⁺": r"\textsuperscript{+}", "ᵢ": r"\textsubscript{i}",
+    "\ufffd": r"\fbox{?}", "⁺": r"\textsuperscript{+}", "ᵢ": r"\textsubscript{i}",
     "₍": r"\textsubscript{(}", "₎": r"\textsubscript{)}",
 }  # fmt: skip
 

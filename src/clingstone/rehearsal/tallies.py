@@ -9,6 +9,7 @@ from typing import Any
 import numpy as np
 
 from clingstone.advice.entries import Score, Scores
+from clingstone.display import Cell, Column, Table, count, number
 from clingstone.rehearsal.study import FIELDS, Counts, Study
 from clingstone.rehearsal.truths import DIFFERENT, Truth
 
@@ -117,6 +118,30 @@ class Rehearsal:
     def of(self, remedy: str, at: str = "") -> tuple[Tally, ...]:
         """All tallies of one remedy."""
         return tuple(t for t in self.tallies if (t.remedy, t.at) == (remedy, at))
+
+    def table(self) -> Table:
+        """Smallest coverage and mean width of every remedy, for a person."""
+        columns = (
+            Column("remedy", "remedy"),
+            Column("at", "at"),
+            Column("coverage", "smallest coverage (± 2 Monte-Carlo errors)", "right"),
+            Column("width", "width over the ordinary", "decimal"),
+        )
+        rows = [
+            [
+                Cell(s.remedy, s.remedy),
+                Cell(s.at, s.at),
+                Cell(f"{number(100 * s.coverage, 1)} % (± {number(200 * s.mcse, 1)})", s.coverage),
+                Cell(number(s.width, 2), s.width),
+            ]
+            for s in self.scores.rows
+        ]
+        words = f"Rehearsed with {count(self.replicates, 'replicate')} under each of "
+        words += f"{count(len(self.truths), 'error model')}; {100 * self.confidence:g} % is promised"
+        return Table.of(words, columns, rows, self.stopped).without_empty()
+
+    def _repr_html_(self) -> str:
+        return self.table().to_html()
 
     def to_frame(self) -> Any:
         """A pandas table of the tallies."""

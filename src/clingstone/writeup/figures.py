@@ -40,11 +40,11 @@ class Rung:
 
 def ladder(results: Results) -> Plate | None:
     """Per focus row, one rung per leading refit on one shared axis; None when nothing was fitted."""
-    names = [n for n in served(results) if _rungs(results, n)][:PANELS]
+    names = [n for n in served(results) if rungs_of(results, n)][:PANELS]
     if not names:
         return None
     most = RUNGS if len(names) <= FEW else 3  # advised, ordinary and one more
-    drawn = [(name, _rungs(results, name)[:most]) for name in names]
+    drawn = [(name, rungs_of(results, name)[:most]) for name in names]
     return _ladder(results, "intervals", f"{level_percent(results)} intervals under each refit", drawn)
 
 
@@ -53,7 +53,7 @@ def ladders(results: Results) -> tuple[Plate, ...]:
 
     Empty when the ladder of the first screen has room for them all.
     """
-    drawn = [(n, rungs) for n in served(results)[:PANELS] if (rungs := _rungs(results, n))]
+    drawn = [(n, rungs) for n in served(results)[:PANELS] if (rungs := rungs_of(results, n))]
     first = ladder(results)
     if first is None or sum(len(rungs) for _, rungs in drawn) <= len(first.table.rows):
         return ()
@@ -75,7 +75,8 @@ def _ladder(results: Results, stem: str, caption: str, drawn: Sequence[tuple[str
     )
 
 
-def _rungs(results: Results, name: str) -> list[Rung]:
+def rungs_of(results: Results, name: str) -> list[Rung]:
+    """The intervals of one row, one for each distinct refit, advised first."""
     places = decimals(results, name)
     best, base = advised(results), ordinary(results)
     out = []
@@ -183,7 +184,7 @@ def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
     heights = _heights(rungs, plan)
     tall = sum(heights)
     panel = axes(figure, plan.left, top, plan.width - plan.left - plan.right, tall)
-    low, high = _reach(rungs)
+    low, high = reach(rungs)
     panel.set_xlim(low, high)
     panel.set_ylim(tall, 0)  # in pixels
     panel.set_yticks([])
@@ -192,9 +193,9 @@ def _panel(figure: Figure, rungs: list[Rung], top: float, plan: Plan) -> None:
     for r, height in zip(rungs, heights, strict=True):
         line = at + (height - 16 if plan.phone else height / 2)
         if low <= 0 <= high and (plan.phone or not at):
-            reach = (line - 9, line + 9) if plan.phone else (0, tall)
-            panel.plot([0, 0], reach, color=LIGHT.faint, linewidth=1.2, zorder=0)
-        _draw_rung(panel, r, line, low, high)
+            tick = (line - 9, line + 9) if plan.phone else (0, tall)
+            panel.plot([0, 0], tick, color=LIGHT.faint, linewidth=1.2, zorder=0)
+        draw_rung(panel, r, line, low, high)
         _rung_words(figure, r, top + at, height, plan)
         at += height
     if not low <= 0 <= high:
@@ -225,7 +226,7 @@ def _rung_words(figure: Figure, r: Rung, top: float, height: float, plan: Plan) 
     say(figure, plan.width, middle, r.figures, ha="right", **style)
 
 
-def _reach(rungs: Sequence[Rung]) -> tuple[float, float]:
+def reach(rungs: Sequence[Rung]) -> tuple[float, float]:
     """Axis ends: the ends of the intervals, and zero unless it lies more than twice their length away.
 
     An interval more than FAR times as long as the advised and the ordinary one runs out of the panel, so
@@ -246,7 +247,7 @@ def _reach(rungs: Sequence[Rung]) -> tuple[float, float]:
     return low - margin, high + margin
 
 
-def _draw_rung(panel: Axes, r: Rung, line: float, low: float, high: float) -> None:
+def draw_rung(panel: Axes, r: Rung, line: float, low: float, high: float) -> None:
     """Ordinary hollow and dashed, advised solid and heavy, the others thin: told apart without colour."""
     ends = [max(r.low, low), min(r.high, high)]
     style = {
@@ -331,20 +332,7 @@ def _draw_share(
     room: tuple[float, float, float, bool],
 ) -> None:
     left, _, width, phone = room
-    m = mark(s.structure)
-    face = getattr(LIGHT, m.role)
-    if math.isfinite(s.low + s.high):
-        panel.plot([s.low, s.high], [i + 0.5] * 2, color=LIGHT.ink, linewidth=1.2, zorder=1)
-    panel.plot(
-        [s.share],
-        [i + 0.5],
-        m.marker,
-        markersize=9,
-        markerfacecolor=face,
-        markeredgecolor=LIGHT.ink,
-        zorder=2,
-        clip_on=False,
-    )
+    draw_whisker(panel, s, i + 0.5)
     label, figures = s.label, _share_figures(s)
     if phone:
         say(figure, 0, y - 8, clip(label, left - 6, SMALL), fontsize=SMALL)
@@ -352,3 +340,12 @@ def _draw_share(
     else:
         say(figure, 0, y, clip(label, left - 10, TEXT - 0.5), fontsize=TEXT - 0.5)
         say(figure, width, y, figures, ha="right", fontsize=TEXT - 0.5)
+
+
+def draw_whisker(panel: Axes, s: Share, line: float) -> None:
+    """One share by the mark of its structure, with its interval."""
+    m = mark(s.structure)
+    if math.isfinite(s.low + s.high):
+        panel.plot([s.low, s.high], [line] * 2, color=LIGHT.ink, linewidth=1.2, zorder=1)
+    style = {"markersize": 9, "markerfacecolor": getattr(LIGHT, m.role), "markeredgecolor": LIGHT.ink}
+    panel.plot([s.share], [line], m.marker, zorder=2, clip_on=False, **style)

@@ -4,7 +4,8 @@ from __future__ import annotations
 
 import io
 import re
-from collections.abc import Callable
+from collections.abc import Callable, Iterator
+from contextlib import contextmanager
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 from xml.sax.saxutils import escape
@@ -51,17 +52,34 @@ class Plate:
             "path.simplify": False,
         }
         out = io.StringIO()
-        with matplotlib.rc_context(settings | _LOOK):  # type: ignore[arg-type]
+        with matplotlib.rc_context(settings | _LOOK), _any_letter():  # type: ignore[arg-type]
             self.paint(width).savefig(out, format="svg", metadata={"Date": None, "Creator": None})
         return _tidy(out.getvalue(), f"{self.name}-{width:g}", self.caption, self.alt)
+
+    def drawn(self, width: float = WIDE) -> Figure:
+        """The figure itself, to be restyled."""
+        import matplotlib
+
+        with matplotlib.rc_context(_LOOK):  # type: ignore[arg-type]
+            return self.paint(width)
 
     def png(self, width: float = WIDE, scale: float = 2.0) -> bytes:
         import matplotlib
 
         out = io.BytesIO()
-        with matplotlib.rc_context(_LOOK):  # type: ignore[arg-type]
+        with matplotlib.rc_context(_LOOK), _any_letter():  # type: ignore[arg-type]
             self.paint(width).savefig(out, format="png", dpi=72 * scale, metadata={"Software": None})
         return out.getvalue()
+
+
+@contextmanager
+def _any_letter() -> Iterator[None]:
+    """A label may hold letters that the font measured with lacks: SVG keeps them as text all the same."""
+    import warnings
+
+    with warnings.catch_warnings():
+        warnings.filterwarnings("ignore", "Glyph .* missing from font")
+        yield
 
 
 _LOOK: dict[str, Any] = {

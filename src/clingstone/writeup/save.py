@@ -10,11 +10,14 @@ from contextlib import contextmanager
 from functools import partial
 from pathlib import Path
 
+from clingstone.display import Table
 from clingstone.needs import InputError
 from clingstone.results import Results, to_json
 from clingstone.run import Progress
-from clingstone.writeup import bandwidths, curves, figures, rehearsed, script, tables
-from clingstone.writeup.bibliography import bibtex
+from clingstone.writeup import bandwidths, curves, figures, rehearsed, script, tables, word
+from clingstone.writeup.bibliography import bibtex, csl_json
+from clingstone.writeup.draft import shown
+from clingstone.writeup.latex import latex_text
 from clingstone.writeup.methods import methods_text
 from clingstone.writeup.panels import tree
 from clingstone.writeup.plate import Plate
@@ -22,17 +25,21 @@ from clingstone.writeup.report import report
 
 RESULTS = "results.json"
 FIGURES = "figures"
+TABLES = "tables"
+WORD = "methods.docx"  # written where python-docx is installed
 FILES = (
-    *("report.html", "methods.md", "references.bib", "evidence.csv", "intervals.csv", RESULTS),
+    *("report.html", "methods.md", "methods.tex", WORD, "references.bib", "references.json"),
+    *("evidence.csv", "intervals.csv", RESULTS),
     *script.FILES,
 )
-FIGURE_SUFFIXES = (".svg", ".png", ".csv")
+SUFFIXES = {FIGURES: (".svg", ".png", ".csv"), TABLES: (".csv", ".tex")}
 
 
 def save(
     results: Results, folder: str | Path, *, overwrite: bool = False, progress: Progress | None = None
 ) -> Path:
-    """Write report, methods text, references, tables, figures and results.json; return the folder.
+    """Write report, methods text (Markdown, LaTeX, Word), references (BibTeX, CSL-JSON), tables, figures and
+    results.json; return the folder.
 
     The files are written beside the folder first and moved into place at once, so that a failure
     leaves nothing half-written. An existing folder is used when it is empty, or when it holds only
@@ -77,18 +84,33 @@ def _steps(results: Results, target: Path) -> list[tuple[str, Callable[[Path], N
     texts: dict[str, Callable[[], str]] = {
         "report.html": lambda: report(results),
         "methods.md": lambda: results.methods or methods_text(results),
+        "methods.tex": lambda: latex_text(results),
         "references.bib": lambda: bibtex(results),
+        "references.json": lambda: csl_json(results),
         "evidence.csv": lambda: tables.evidence_file(results).to_csv(),
         "intervals.csv": lambda: tables.intervals_file(results).to_csv(),
         RESULTS: lambda: to_json(results),
         **script.files(results, target),
     }
     steps = [(name, partial(_write_text, name, make)) for name, make in texts.items()]
+    steps += [(WORD, partial(_write_word, results))] if word.available() else []
+    steps += [(f"table {stem}", partial(_write_table, stem, t)) for stem, t in shown(results).items()]
     return [*steps, *((f"figure {plate.name}", partial(_write_plate, plate)) for plate in plates(results))]
 
 
 def _write_text(name: str, make: Callable[[], str], folder: Path) -> None:
     (folder / name).write_text(make(), encoding="utf-8", newline="\n")
+
+
+def _write_word(results: Results, folder: Path) -> None:
+    (folder / WORD).write_bytes(word.word_bytes(results))
+
+
+def _write_table(stem: str, table: Table, folder: Path) -> None:
+    inside = folder / TABLES
+    inside.mkdir(exist_ok=True)
+    _write_text(f"{stem}.csv", table.to_csv, inside)
+    _write_text(f"{stem}.tex", lambda: table.to_latex() + "\n", inside)
 
 
 def _write_plate(plate: Plate, folder: Path) -> None:
@@ -135,7 +157,7 @@ def _strangers(folder: Path) -> list[str]:
 def _written_here(path: Path) -> bool:
     if len(path.parts) == 1:
         return path.name in FILES
-    return len(path.parts) == 2 and path.parts[0] == FIGURES and path.suffix in FIGURE_SUFFIXES
+    return len(path.parts) == 2 and path.suffix in SUFFIXES.get(path.parts[0], ())
 
 
 @contextmanager
