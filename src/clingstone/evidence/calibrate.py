@@ -63,7 +63,7 @@ def curve(design: Design, law: Law, rng: np.random.Generator) -> Curve | None:
     if lay is None:
         return None
     u = None if swept is None else 1.0 / np.sqrt(swept.sizes.astype(float))[swept.codes]
-    means = np.array([_mean(design, form, swept, u, lay, float(rho)) for rho in GRID])
+    means = _means(design, form, swept, u, lay)
     size = lay.shape[0] * lay.shape[1]
     if size * FEWEST_DRAWS <= DRAWN:
         z = rng.standard_normal((*lay.shape, int(np.clip(DRAWN // size, FEWEST_DRAWS, MOST_DRAWS))))
@@ -87,27 +87,36 @@ def _drawn(design: Design, form: Form, swept: Partition | None, lay: _Layout, z:
     return np.asarray(np.einsum("ij,ij->j", e, form.apply(e)) / np.einsum("ij,ij->j", e, e))
 
 
-def _mean(
-    design: Design, form: Form, swept: Partition | None, u: Array | None, lay: _Layout, rho: float
-) -> float:
-    """E(ρ) from traces: M = I − QQ' − UU', U the unit vectors of the swept cells, u their sum.
+def _means(design: Design, form: Form, swept: Partition | None, u: Array | None, lay: _Layout) -> Array:
+    """E(ρ) on GRID, from traces: M = I − QQ' − UU', U the unit vectors of the swept cells, u their sum.
 
     S and V link rows of one series only, and series lie within cells, so U'SU and U'VU are diagonal
     and one vector u stands for all of U.
     """
     Q = design.Q
-    SQ, VQ = form.apply(Q), lay.apply(Q, rho)
-    whole = float(design.n) - float(np.sum(Q * VQ))
-    pairs = float(form.S.sum())  # tr SV: every linked pair is one step apart
-    cross = rho * pairs - 2 * float(np.sum(SQ * VQ)) + float(np.sum((Q.T @ SQ) * (Q.T @ VQ)))
+    SQ = form.apply(Q)
+    QSQ, pairs = Q.T @ SQ, float(form.S.sum())
+    q, sq = lay.spread(Q), lay.spread(SQ)
+    wide = q.reshape(len(q), -1), sq.reshape(len(sq), -1)
     if u is not None:
         assert swept is not None
-        Su, Vu = form.apply(u), lay.apply(u[:, None], rho)[:, 0]
-        s, v = swept.sums(u * Su), swept.sums(u * Vu)
-        whole -= float(v.sum())
-        cross += -2 * float(Su @ Vu) + float(s @ v)
-        cross += 2 * float(np.sum(swept.sums(Q * Su[:, None]) * swept.sums(Q * Vu[:, None])))
-    return cross / whole - 2 * rho / design.m
+        Su, along = form.apply(u), lay.spread(u[:, None])
+        s, QSu = swept.sums(u * Su), swept.sums(Q * Su[:, None])
+    out = np.empty(len(GRID))
+    for i, rho in enumerate(GRID):
+        Vq = lay.apply(q, rho).reshape(len(q), -1)
+        QVQ, SQVQ = wide[0] @ Vq.T, wide[1] @ Vq.T
+        whole = float(design.n) - float(np.trace(QVQ))
+        # tr SV: every linked pair is one step apart.
+        cross = rho * pairs - 2 * float(np.trace(SQVQ)) + float(np.sum(QSQ * QVQ))
+        if u is not None and swept is not None:
+            Vu = lay.rows(lay.apply(along, rho))[:, 0]
+            v = swept.sums(u * Vu)
+            whole -= float(v.sum())
+            cross += -2 * float(Su @ Vu) + float(s @ v)
+            cross += 2 * float(np.sum(QSu * swept.sums(Q * Vu[:, None])))
+        out[i] = cross / whole - 2 * rho / design.m
+    return out
 
 
 @dataclass(frozen=True, eq=False)
@@ -132,10 +141,18 @@ class _Layout:
             return None
         return cls(part.codes, step, shape)
 
-    def apply(self, block: Array, rho: float) -> Array:
-        """V(ρ) @ block, V_ij = ρ^|t_i − t_j| within series."""
-        grid = np.zeros((*self.shape, block.shape[1]))
-        grid[self.series, self.step] = block
-        ahead = lfilter([1.0], [1.0, -rho], grid, axis=1)
-        back = lfilter([1.0], [1.0, -rho], grid[:, ::-1], axis=1)[:, ::-1]
-        return np.asarray((ahead + back - grid)[self.series, self.step])
+    def spread(self, block: Array) -> Array:
+        """Rows (n, k) → (k, series, steps), zeros where a step has no row."""
+        grid = np.zeros((block.shape[1], *self.shape))
+        grid[:, self.series, self.step] = block.T
+        return grid
+
+    def rows(self, grid: Array) -> Array:
+        """(k, series, steps) → (n, k)."""
+        return np.asarray(grid[:, self.series, self.step].T)
+
+    def apply(self, grid: Array, rho: float) -> Array:
+        """V(ρ) of what is laid out, V_ij = ρ^|t_i − t_j| within series."""
+        ahead = lfilter([1.0], [1.0, -rho], grid, axis=2)
+        back = lfilter([1.0], [1.0, -rho], grid[:, :, ::-1], axis=2)[:, :, ::-1]
+        return np.asarray(ahead + back - grid)

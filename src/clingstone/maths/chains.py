@@ -14,6 +14,7 @@ from clingstone.maths.once import Array, once
 
 Kind = Literal["differences", "lagged"]
 Rows = npt.NDArray[np.int64]
+STRETCH = 8192  # rows of a product that stay in a cache
 Complex = npt.NDArray[np.complex128]
 
 
@@ -138,7 +139,7 @@ class Chains:
 def _path_moment(q: Array, j: int, kind: Kind) -> Array:
     if j == 0:
         return np.asarray(q.T @ q)
-    L = q[:-j].T @ q[j:]
+    L = _lagged(q, j)
     if kind == "differences":
         head, tail = q[:j], q[len(q) - j :]
         ends = head.T @ head[::-1] + tail.T @ tail[::-1]
@@ -146,6 +147,12 @@ def _path_moment(q: Array, j: int, kind: Kind) -> Array:
     head, tail = q[: j - 1], q[len(q) - j + 1 :]
     ends = head.T @ head[::-1] + tail.T @ tail[::-1]
     return np.asarray(0.5 * (L + L.T - ends))
+
+
+def _lagged(q: Array, j: int) -> Array:
+    """Σ_t q_t q_{t+j}', in stretches that a cache holds."""
+    ends = range(0, len(q) - j, STRETCH)
+    return np.asarray(sum(q[a : min(a + STRETCH, len(q) - j)].T @ q[a + j : a + j + STRETCH] for a in ends))
 
 
 def chains_of(earlier: Rows, later: Rows, n: int, kind: Kind) -> Chains | None:
