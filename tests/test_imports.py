@@ -34,6 +34,12 @@ def test_nothing_heavy_is_loaded(code: str) -> None:
     assert [name for name in HEAVY if name in loaded] == []
 
 
+def test_the_help_of_the_command_line_loads_no_numpy() -> None:
+    code = "import sys, clingstone.cli as c\ntry:\n c.main(['--help'])\nexcept SystemExit:\n pass\n"
+    code += "print('LOADED', *sys.modules)"
+    assert "numpy" not in _in_fresh_python(code).split("LOADED")[1].split()
+
+
 def test_import_alone_does_not_even_load_numpy() -> None:
     loaded = _in_fresh_python("import sys, clingstone; print(*sys.modules)").split()
     assert "numpy" not in loaded

@@ -6,11 +6,12 @@ import zlib
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field
-from typing import Any, Literal, Protocol, get_args
-
-import numpy as np
+from typing import TYPE_CHECKING, Any, Literal, Protocol, get_args
 
 from clingstone.needs import InputError, Limits, NotSupported
+
+if TYPE_CHECKING:
+    import numpy as np
 
 Missing = Literal["stop", "drop", "own-group"]
 Ties = Literal["stop", "replicate", "mean"]
@@ -127,6 +128,8 @@ class Run:
 
         Numbers drawn for one purpose do not move when another test, order or worker is added.
         """
+        import numpy as np  # the command line reads this file for its options alone
+
         return np.random.default_rng([self.settings.seed, zlib.crc32(purpose.encode()), index])
 
     @contextmanager
@@ -147,7 +150,11 @@ class Run:
 
 @contextmanager
 def one_thread() -> Iterator[None]:
-    """One BLAS thread inside: the factorizations here are small, and two threads make them slower."""
+    """One BLAS thread inside, then as many as the caller had: the default of every public verb.
+
+    The factorizations here are small, and two threads make them slower; cores are used by the workers of a
+    rehearsal, one thread each. Numbers do not depend on it: sums are added up in the same order.
+    """
     from threadpoolctl import threadpool_limits
 
     with threadpool_limits(limits=1, user_api="blas"):
