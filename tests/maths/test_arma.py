@@ -43,6 +43,17 @@ def blocks(n: int, seed: int = 0):
     return Q, E - Q @ (Q.T @ E)
 
 
+def test_missing_steps_of_different_series_share_columns():
+    # Two, three and no missing steps: three columns, the first holding the first hole of both series.
+    made = steps()
+    assert made.holes.tolist() == [2, 3, 0]
+    assert made.depth == 3
+    D = made.filled(np.zeros((24, 0)))
+    assert np.flatnonzero(D[:, 0]).tolist() == [6, 16]
+    assert np.flatnonzero(D[:, 1]).tolist() == [7, 17]
+    assert np.flatnonzero(D[:, 2]).tolist() == [18]
+
+
 def test_autocovariances_by_hand():
     # AR(1): φᵏ/(1 − φ²). MA(1): 1 + θ², θ, 0. ARMA(1,1): γ₀ = (1 + 2φθ + θ²)/(1 − φ²), γ₁ = φγ₀ + θ.
     assert autocovariances(np.array([0.5]), np.zeros(0), 3) == pytest.approx([4 / 3, 2 / 3, 1 / 3])

@@ -27,7 +27,7 @@ from clingstone.maths.search import Optimum, minimise
 from clingstone.needs import NotSupported, memory
 from clingstone.structure.serial import Series
 
-MISSING = 600  # missing steps that an exact ARMA likelihood takes in
+MISSING = 600  # missing steps of one series that an exact ARMA likelihood takes in
 
 
 class Process(Protocol):
@@ -116,7 +116,7 @@ class Arma:
 
     @property
     def steps(self) -> Steps:
-        return kept(self.design, ("arma steps",), lambda: Steps(_grid(self.design)))
+        return kept(self.design, ("arma steps",), lambda: _steps(self.design))
 
     def coefficients(self, theta: Array) -> tuple[Array, Array]:
         """φ (p,) and θ (q,), z_t = Σφ_i z_{t−i} + a_t + Σθ_j a_{t−j}."""
@@ -129,8 +129,8 @@ class Arma:
         return self.steps.gram(phi, moving, wide, self.design.p)
 
     def _wide(self, response: Response) -> Array:
-        N, k = self.steps.grid.N, self.design.p + response.B + len(self.steps.missing)
-        memory(4 * 8.0 * N * k, f"{N:,} steps with {len(self.steps.missing)} missing ones")
+        N, k = self.steps.grid.N, self.design.p + response.B + self.steps.depth
+        memory(4 * 8.0 * N * k, f"{N:,} steps with up to {self.steps.depth} missing ones in a series")
         return self.steps.filled(np.hstack([self.design.Q, response.residual]))
 
     def shape(self, theta: Array) -> Mapping[str, float]:
@@ -158,14 +158,14 @@ def _series(design: Design) -> Series:
     return design.serial
 
 
-def _grid(design: Design) -> Grid:
+def _steps(design: Design) -> Steps:
     series = _series(design)
     assert series.tick is not None
-    grid = Grid.of(series.part.codes, series.tick)
-    missing = grid.N - design.n
-    if missing > MISSING:
+    steps = Steps(Grid.of(series.part.codes, series.tick))
+    if steps.depth > MISSING:
         raise NotSupported(
-            f"{missing:,} steps inside series are missing; an exact ARMA likelihood takes in {MISSING}",
+            f"{steps.depth:,} steps inside one series are missing; "
+            f"an exact ARMA likelihood takes in {MISSING}",
             "Use car1, which works by elapsed time.",
         )
-    return grid
+    return steps

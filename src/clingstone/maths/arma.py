@@ -7,6 +7,9 @@ indicators and G = D'V⁻¹D,
 
     V_oo⁻¹ = V⁻¹ − V⁻¹D G⁻¹ D'V⁻¹ on the rows,     ln|V_oo| = ln|V| + ln|G|.
 
+G has a block for each series, so that the first missing steps of all series share a column of D, the
+second ones another, and so on.
+
 V is on the scale of the innovations: Var(z_t) = γ₀ > 1.
 """
 
@@ -17,6 +20,7 @@ from dataclasses import dataclass
 import numpy as np
 import numpy.typing as npt
 from scipy import linalg
+from scipy.linalg import lapack
 
 from clingstone.maths.basis import Gram
 from clingstone.maths.longrun import Grid, Places
@@ -72,38 +76,52 @@ class Steps:
         empty[self.grid.place] = False
         return np.flatnonzero(empty)
 
+    @property
+    @once
+    def holes(self) -> Places:
+        """(S,) missing steps of each series."""
+        series = np.repeat(np.arange(len(self.grid.lengths)), self.grid.lengths)
+        return np.bincount(series[self.missing], minlength=len(self.grid.lengths))
+
+    @property
+    def depth(self) -> int:
+        """The most missing steps of one series: columns of D."""
+        return int(self.holes.max(initial=0))
+
     def filled(self, block: Array) -> Array:
-        """(N, k + missing) a block on the steps, and the indicators of the missing ones behind it."""
-        holes = np.zeros((self.grid.N, len(self.missing)))
-        holes[self.missing, np.arange(len(self.missing))] = 1.0
-        return np.hstack([self.grid.spread(block), holes])
+        """(N, k + depth) a block on the steps, and D behind it."""
+        D = np.zeros((self.grid.N, self.depth))
+        before = np.cumsum(self.holes) - self.holes
+        D[self.missing, np.arange(len(self.missing)) - np.repeat(before, self.holes)] = 1.0
+        return np.hstack([self.grid.spread(block), D])
+
+    @once
+    def _apart(self, d: int) -> tuple[Places, Places]:
+        """The later row of each pair d steps apart in one series, and its steps since the start."""
+        later = np.flatnonzero(self.place >= d)
+        return later, self.place[later]
 
     def whiten(self, phi: Array, theta: Array, wide: Array) -> tuple[Array, float]:
         """L⁻¹ of columns on the steps (N, k), LL' = V, and ln|V|."""
         m = max(len(phi), len(theta))
-        place, N = self.place, self.grid.N
-        w = np.array(wide)
-        inside = place >= m
+        w = np.array(wide, order="F")
+        rows, _ = self._apart(m)
         for i, value in enumerate(phi, start=1):
-            rows = np.flatnonzero(inside)
             w[rows] -= value * wide[rows - i]
-        band = self._bands(phi, theta, m)
         if m == 0:
             return w, 0.0
+        band = self._bands(phi, theta, m)
         factor = linalg.cholesky_banded(band, lower=True, overwrite_ab=True, check_finite=False)
-        solved = linalg.solve_banded((len(factor) - 1, 0), factor, w, overwrite_b=True, check_finite=False)
-        assert len(solved) == N
+        solved, _ = lapack.dtbtrs(factor, w, uplo="L", overwrite_b=1)
         return np.asarray(solved), float(2 * np.log(factor[0]).sum())
 
     def _bands(self, phi: Array, theta: Array, m: int) -> Array:
         """(m + 1, N) lower bands of Cov(w)."""
-        place, N = self.place, self.grid.N
         gamma = autocovariances(phi, theta, 2 * m + 1)
         full = np.r_[1.0, theta]
-        out = np.zeros((m + 1, N))
+        out = np.zeros((m + 1, self.grid.N))
         for d in range(m + 1):
-            later = np.flatnonzero(place >= d)  # the later row of each pair d steps apart in one series
-            at = place[later]
+            later, at = self._apart(d)
             moving = float(full[: len(full) - d] @ full[d:]) if d < len(full) else 0.0
             edge = gamma[d] - sum(f * gamma[abs(r - d)] for r, f in enumerate(phi, start=1))
             value = np.where(at < m, gamma[d], np.where(at - d < m, edge, moving))
@@ -113,18 +131,17 @@ class Steps:
     def gram(self, phi: Array, theta: Array, wide: Array, p: int) -> Gram:
         """[Q, e]'V_oo⁻¹[Q, e] and ln|V_oo|; wide = filled([Q, e]), p the columns of Q."""
         white, logdet = self.whiten(phi, theta, wide)
-        k = len(self.missing)
-        z, holes = white[:, : white.shape[1] - k], white[:, white.shape[1] - k :]
-        if k:
-            L = np.linalg.cholesky(holes.T @ holes)
-            half = linalg.solve_triangular(L, holes.T @ z, lower=True, check_finite=False)
-            logdet += float(2 * np.log(np.diag(L)).sum())
-        else:
-            half = np.zeros((0, z.shape[1]))
-        Q, E, hq, he = z[:, :p], z[:, p:], half[:, :p], half[:, p:]
-        return Gram(
-            Q.T @ Q - hq.T @ hq,
-            Q.T @ E - hq.T @ he,
-            np.einsum("ij,ij->j", E, E) - np.einsum("ij,ij->j", he, he),
-            logdet,
-        )
+        h = self.depth
+        z = white[:, : white.shape[1] - h]
+        QQ, QE = z[:, :p].T @ z[:, :p], z[:, :p].T @ z[:, p:]
+        EE = np.einsum("ij,ij->j", z[:, p:], z[:, p:])
+        for some, U in self.grid.batches(white) if h else ():
+            D, rest = U[:, :, -h:].transpose(0, 2, 1), U[:, :, :-h]
+            # A series with fewer missing steps has columns of zeros, whose block is the identity.
+            idle = np.arange(h) >= self.holes[some][:, None]
+            L = np.linalg.cholesky(D @ D.transpose(0, 2, 1) + idle[:, :, None] * np.eye(h))
+            half = np.linalg.solve(L, D @ rest).reshape(-1, rest.shape[2])
+            logdet += float(2 * np.log(np.einsum("shh->sh", L)).sum())
+            hq, he = half[:, :p], half[:, p:]
+            QQ, QE, EE = QQ - hq.T @ hq, QE - hq.T @ he, EE - np.einsum("ij,ij->j", he, he)
+        return Gram(QQ, QE, EE, logdet)

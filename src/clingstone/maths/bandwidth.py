@@ -61,7 +61,7 @@ def andrews(grid: Grid, scores: Array, kernel: Kernel = "bartlett") -> float:
 def autocovariance(grid: Grid, score: Array, top: int) -> Array:
     """γ₀ … γ_top, sums over pairs of one series divided by the number of steps."""
     out = np.zeros(top + 1)
-    for _, U in grid.batches(score[:, None]):
+    for _, U in grid.batches(grid.spread(score[:, None])):
         u, N = U[:, :, 0], U.shape[1]
         for j in range(min(top, N - 1) + 1):
             out[j] += np.einsum("st,st->", u[:, : N - j], u[:, j:])

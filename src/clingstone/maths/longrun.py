@@ -63,9 +63,11 @@ class Grid:
         nu = np.floor(0.4 * self.lengths ** (2 / 3)).astype(np.int64)
         return np.asarray(np.where(self.lengths > 1, np.maximum(nu, 1), 0))
 
-    def batches(self, block: Array) -> Iterator[tuple[Places, Array]]:
-        """Series of one length together, some at a time: which they are (s,), and their ticks (s, N, k)."""
-        U = self.spread(block)
+    def batches(self, U: Array) -> Iterator[tuple[Places, Array]]:
+        """Series of one length together, some at a time: which they are (s,), and their ticks (s, N, k).
+
+        U : (N, k) on the ticks.
+        """
         for N in np.unique(self.lengths):
             alike = np.flatnonzero(self.lengths == N)
             size = max(1, int(AT_ONCE // (N * U.shape[1])))
@@ -77,7 +79,7 @@ class Grid:
         """(Σν, k) √(N/ν)·Λ_j, Λ_j = √(2/N) Σ_t cos(πj(t−½)/N) u_t, so that Ŝ = Λ'Λ. O(N k log N)."""
         out = np.empty((int(self.counts.sum()), block.shape[1]))
         offset = np.cumsum(self.counts) - self.counts
-        for some, U in self.batches(block):
+        for some, U in self.batches(self.spread(block)):
             if nu := int(self.counts[some[0]]):
                 turned = fft.dct(U, type=2, axis=1)[:, 1 : nu + 1]
                 # scipy's transform carries a factor 2
@@ -100,7 +102,7 @@ class Grid:
         if rho == 0.0:
             return block
         out = np.empty((self.N, block.shape[1]))
-        for some, U in self.batches(block):
+        for some, U in self.batches(self.spread(block)):
             ahead = signal.lfilter([1.0], [1.0, -rho], U, axis=1)
             back = signal.lfilter([1.0], [1.0, -rho], U[:, ::-1], axis=1)[:, ::-1]
             out[self.starts[some][:, None] + np.arange(U.shape[1])] = ahead + back - U
@@ -125,7 +127,7 @@ class Grid:
 
         Windows longer than a series hold all of it L − N + 1 times; one weighted row stands for L − N.
         """
-        for _, U in self.batches(block):
+        for _, U in self.batches(self.spread(block)):
             s, N, k = U.shape
             total = np.zeros((s, N + 1, k))
             np.cumsum(U, axis=1, out=total[:, 1:])

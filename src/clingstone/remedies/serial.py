@@ -261,7 +261,8 @@ class Arma(Plain):
     """ARMA errors within series, the order by AICc from AR(1), AR(2), AR(3), MA(1) and ARMA(1,1).
 
     AR(1) stays unless another order is better by more than 4. The likelihood is exact, missing steps
-    included. The order is chosen on the data, and the intervals do not know that it was.
+    included. The order is chosen on the data, and the intervals do not know that it was: of many columns
+    of y (a rehearsal) the first chooses the order for all, and each has its own parameters.
     """
 
     orders: tuple[tuple[int, int], ...] = ORDERS
