@@ -7,13 +7,17 @@ from collections.abc import Callable
 from decimal import Decimal
 from typing import Any
 
+import duckdb
+import geopandas as gpd
 import numpy as np
 import pandas as pd
 import polars as pl
 import pyarrow as pa
 import pytest
+from hypothesis import given
+from hypothesis import strategies as st
 
-from clingstone.intake.columns import Columns, fingerprint, gather
+from clingstone.intake.columns import Columns, _copies, fingerprint, gather
 from clingstone.intake.frames import table
 from clingstone.needs import InputError
 
@@ -151,7 +155,10 @@ def test_index_levels_are_columns() -> None:
     assert got.frame["day"].tolist() == [1, 2, 1, 2]
 
 
-@pytest.mark.parametrize("kind", ["polars", "lazy", "arrow", "mapping", "object", "nullable", "categorical"])
+KINDS = ("polars", "lazy", "arrow", "duckdb", "map", "mapping", "object", "nullable", "categorical")
+
+
+@pytest.mark.parametrize("kind", KINDS)
 def test_every_kind_of_frame_gives_the_same_columns(kind: str) -> None:
     frame = flocks()
     made: Any = {
@@ -160,6 +167,8 @@ def test_every_kind_of_frame_gives_the_same_columns(kind: str) -> None:
         ),
         "lazy": lambda: pl.LazyFrame(frame.to_dict("list")).with_columns(pl.col(pl.Float64).fill_nan(None)),
         "arrow": lambda: pa.Table.from_pandas(frame),
+        "duckdb": lambda: duckdb.from_arrow(pa.Table.from_pandas(frame)).filter("day < 9"),
+        "map": lambda: gpd.GeoDataFrame(frame, geometry=gpd.points_from_xy(range(6), range(6)), crs=3035),
         "mapping": lambda: frame.to_dict("list"),
         "object": lambda: frame.astype(object),
         "nullable": lambda: frame.convert_dtypes(),
@@ -201,6 +210,17 @@ def test_copies_of_rows_are_counted_and_kept() -> None:
     got = read(frame)
     assert len(got.kept) == 6
     assert got.notes[0].startswith("2 rows equal another row in every column used (rows 7 and 8)")
+
+
+@given(
+    st.lists(
+        st.tuples(st.sampled_from([1.0, 2.0, np.nan]), st.sampled_from(["a", "b", None]), st.integers(0, 1)),
+        max_size=8,
+    )
+)
+def test_copies_found_column_by_column_are_those_of_whole_rows(rows: list[tuple[Any, ...]]) -> None:
+    frame = pd.DataFrame(rows, columns=["y", "g", "t"])
+    assert _copies(frame).tolist() == frame.duplicated(keep="first").tolist()
 
 
 @pytest.mark.parametrize(

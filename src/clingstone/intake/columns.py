@@ -22,6 +22,7 @@ ROLES: tuple[Role, ...] = ("response", "predictor", "weight", "group", "time", "
 Places = npt.NDArray[np.int64]
 MEASURED = ("response", "predictor", "weight")
 IDS = ("group", "series")
+_BLOCK = 1 << 16  # rows of a fingerprint at a time
 SENTINELS = (-9, -99, -999, -9999, -99999, -1e30, 999, 9999, 99999, 999999, 1e30)
 
 
@@ -239,18 +240,22 @@ def fingerprint(frame: pd.DataFrame) -> str:
     for name in sorted(frame.columns):
         column = frame[name]
         digest.update(f"\x1f{name}\x1f".encode())
-        if isinstance(column.dtype, pd.CategoricalDtype):
+        if isinstance(column.dtype, pd.CategoricalDtype) and not pd.api.types.is_string_dtype(
+            column.cat.categories.dtype
+        ):
             column = plain(column.astype(column.cat.categories.dtype))
         if pd.api.types.is_datetime64_any_dtype(column.dtype):
             stamps = pd.DatetimeIndex(column)
             stamps = stamps.tz_convert("UTC").tz_localize(None) if stamps.tz is not None else stamps
             digest.update(stamps.to_numpy().astype("datetime64[us]").astype("<i8").tobytes())
         elif pd.api.types.is_numeric_dtype(column.dtype):
-            value = column.to_numpy(dtype="<f8", na_value=np.nan) + 0.0
-            value[np.isnan(value)] = np.nan
-            digest.update(value.tobytes())
+            value = column.to_numpy(dtype="<f8", na_value=np.nan)
+            for start in range(0, len(value), _BLOCK):
+                part = value[start : start + _BLOCK] + 0.0  # −0 and 0 are one number
+                part[np.isnan(part)] = np.nan
+                digest.update(part.tobytes())
         else:
-            codes, distinct = pd.factorize(column.astype(object))
+            codes, distinct = pd.factorize(column)
             for v in distinct:
                 word = str(v).encode()
                 digest.update(f"{len(word)}:".encode() + word)
@@ -349,7 +354,7 @@ def _remarks(frame: pd.DataFrame, places: Places) -> list[str]:
     import pandas as pd
 
     notes = []
-    twice = frame.duplicated(keep="first").to_numpy()
+    twice = _copies(frame)
     if twice.any():
         some = rows(places[twice], 3)
         notes.append(
@@ -362,6 +367,19 @@ def _remarks(frame: pd.DataFrame, places: Places) -> list[str]:
         ):
             notes.extend(_sentinels(str(name), frame[name].to_numpy(dtype=float)))
     return notes
+
+
+def _copies(frame: pd.DataFrame) -> npt.NDArray[np.bool_]:
+    """Rows that equal an earlier one in every column.
+
+    Such rows are alike in each column alone, so that after the response few are left to be compared.
+    """
+    left = np.arange(len(frame))
+    for name in frame:
+        left = left[frame[name].iloc[left].duplicated(keep=False).to_numpy()]
+    found = np.zeros(len(frame), dtype=bool)
+    found[left] = frame.iloc[left].duplicated(keep="first").to_numpy()
+    return found
 
 
 def _sentinels(name: str, values: npt.NDArray[Any]) -> list[str]:
