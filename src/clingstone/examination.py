@@ -7,7 +7,7 @@ import platform
 from collections.abc import Mapping
 from dataclasses import asdict, dataclass, replace
 from pathlib import Path
-from typing import TYPE_CHECKING, Any, Literal, overload
+from typing import TYPE_CHECKING, Any
 
 from clingstone.advice.choose import REPAIRED, Advice, settle, shortlist_for
 from clingstone.advice.facts import facts as gather_facts
@@ -32,11 +32,10 @@ from clingstone.remedies.remedy import Convention, Interval, Refit
 from clingstone.reopened import reopened, saved
 from clingstone.results import SCHEMA, Reference, Results, compare
 from clingstone.run import Alternative, Missing, Progress, Run, Settings, Ties, Weights, one_thread
+from clingstone.writeup.shown import Shown
 
 if TYPE_CHECKING:
     import pandas as pd
-    from matplotlib.axes import Axes
-    from matplotlib.figure import Figure
 
 
 def examine(
@@ -234,7 +233,7 @@ def versions() -> dict[str, str]:
 
 
 @dataclass(frozen=True, eq=False, repr=False)
-class Examination:
+class Examination(Shown):
     """What was found: plain results, and the live case and fits they came from."""
 
     case: Case
@@ -297,33 +296,6 @@ class Examination:
         settings = {**self.results.settings, "rehearsal": "none"}
         bare = replace(self.results, advice=advice, refits=refits, rehearsal=found, settings=settings)
         return replace(self, results=_worded(bare))
-
-    @overload
-    def methods(self, format: Literal["markdown", "latex"] = "markdown") -> str: ...
-
-    @overload
-    def methods(self, format: Literal["word"]) -> bytes: ...
-
-    def methods(self, format: str = "markdown") -> str | bytes:
-        """The text for a methods section, with what answers which reporting item.
-
-        format : "markdown"; "latex", a document that compiles alone; or "word", the bytes of a .docx
-            file (extra ``word``).
-
-        Raises InputError for another format, NotSupported for "word" without python-docx.
-        """
-        from clingstone.writeup.latex import latex_text
-        from clingstone.writeup.word import word_bytes
-
-        if format == "word":
-            return word_bytes(self.results)
-        if format == "latex":
-            return latex_text(self.results)
-        if format != "markdown":
-            raise InputError(
-                f"there is no methods text as ‘{format}’", instead(format, ("markdown", "latex", "word"))
-            )
-        return self.results.methods
 
     @property
     def references(self) -> tuple[Reference, ...]:
@@ -402,60 +374,6 @@ class Examination:
         from clingstone.writeup.save import save
 
         return save(self.results, folder, overwrite=overwrite, progress=progress or self.fits.run.report)
-
-    @property
-    def figures(self) -> dict[str, str]:
-        """Name → caption of every figure of the report."""
-        from clingstone.writeup.gallery import names
-
-        return names(self.results)
-
-    def figure(self, name: str = "intervals", width: float = 660.0) -> Figure:
-        """A figure of the report as a matplotlib figure, ``width`` / 72 inches wide; restyle its ``.axes``.
-
-        Raises InputError when there is none of that name (see ``figures``).
-        """
-        from clingstone.writeup.gallery import figure
-
-        return figure(self.results, name, width)
-
-    def draw_intervals(self, ax: Axes, term: str | None = None) -> Axes:
-        """One row's interval under every refit, advised first, drawn into axes of your own.
-
-        term : the row, by default the first in focus. Raises InputError when it has no interval.
-        """
-        from clingstone.writeup.gallery import draw_intervals
-
-        return draw_intervals(self.results, ax, term)
-
-    def draw_shares(self, ax: Axes) -> Axes:
-        """What the model leaves over, by structure, drawn into axes of your own.
-
-        Raises InputError when no share was estimated.
-        """
-        from clingstone.writeup.gallery import draw_shares
-
-        return draw_shares(self.results, ax)
-
-    def report(self) -> str:
-        """The report as one HTML page."""
-        from clingstone.writeup.report import report
-
-        return report(self.results)
-
-    def __str__(self) -> str:
-        from clingstone.writeup.terminal import terminal
-
-        return terminal(self.results)
-
-    def __repr__(self) -> str:
-        advice = self.results.advice
-        return f"<Examination of {self.results.case.name}: {advice.state}; {advice.headline}>"
-
-    def _repr_html_(self) -> str:
-        from clingstone.writeup.report import fragment
-
-        return fragment(self.results)
 
 
 def _weights(names: tuple[str, ...], wanted: Mapping[str, float]) -> tuple[float, ...]:

@@ -10,6 +10,7 @@ from matplotlib.figure import Figure
 from clingstone.needs import InputError
 from clingstone.writeup import gallery
 from clingstone.writeup.save import plates
+from clingstone.writeup.shown import Shown
 from tests.writeup import fixture
 
 
@@ -69,3 +70,24 @@ def test_what_was_not_fitted_is_not_drawn():
         gallery.draw_intervals(base, _axes(), "ages")
     with pytest.raises(InputError, match="no share"):
         gallery.draw_shares(replace(base, ledger=replace(base.ledger, shares=())), _axes())
+
+
+def test_an_examination_shows_itself_in_every_way_from_its_results_alone():
+    class Held(Shown):
+        results = fixture.trial()
+
+    held = Held()
+    assert held.methods() == held.results.methods
+    assert held.methods("latex").startswith(r"\documentclass")
+    assert held.methods("word")[:2] == b"PK"
+    with pytest.raises(InputError, match="no methods text as ‘words’") as caught:
+        held.methods("words")
+    assert "‘word’" in caught.value.hint
+    assert held.figures == gallery.names(held.results)
+    assert held.figure().axes
+    assert held.draw_intervals(_axes()).get_lines()
+    assert held.draw_shares(_axes()).get_lines()
+    assert "<svg" in held._repr_html_()
+    assert held.report().startswith("<!doctype html>")
+    assert str(held)
+    assert "trial" in repr(held) or held.results.case.name in repr(held)
