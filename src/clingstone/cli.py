@@ -17,7 +17,7 @@ from typing import TYPE_CHECKING, Annotated, Any, NoReturn
 
 import typer
 
-from clingstone import cli_rehearse
+from clingstone import cli_plan, cli_rehearse
 from clingstone.demo import DEMOS, data_folder, find
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import Option, in_shell, settings_options
@@ -242,6 +242,7 @@ def _printed(examination: Examination, folder: Path | None) -> str:
 
 
 cli_rehearse.register(app)
+cli_plan.register(app)
 
 # ---- what a person sees meanwhile ------------------------------------------------------------
 

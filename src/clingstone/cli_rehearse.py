@@ -1,4 +1,4 @@
-"""The commands ``rehearse`` and ``plan``."""
+"""The command ``rehearse``."""
 
 from __future__ import annotations
 
@@ -61,7 +61,8 @@ WholePath = Annotated[
 ToTheEnd = Annotated[
     bool, typer.Option("--to-the-end", help="Make all replicates, also when the ranking is settled.")
 ]
-_OWN: dict[str, tuple[Any, Any]] = {
+Entries = dict[str, tuple[Any, Any]]  # option → annotation and default
+_OWN: Entries = {
     "context": (typer.Context, inspect.Parameter.empty),
     "subject": (Subject, inspect.Parameter.empty),
     "replicates": (Replicates, 10_000),
@@ -77,109 +78,30 @@ _OWN: dict[str, tuple[Any, Any]] = {
 
 def register(app: typer.Typer) -> None:
     """Put the commands of this file on the application."""
-    app.command("rehearse", short_help="Simulate y on a design and see how each remedy would have done.")(
-        _with_options(_rehearse)
-    )
-
-    app.command("plan", short_help="The interval width to expect with other numbers of groups, rows.")(_plan)
-
-
-# ---- plan ----------------------------------------------------------------------------------------
-
-
-def _plan(
-    folder: Annotated[
-        Path | None,
-        typer.Argument(metavar="[DIR]", help="A folder that clingstone saved; left out, state numbers."),
-    ] = None,
-    term: Annotated[
-        str | None, typer.Option("--term", metavar="NAME", help="Coefficient; else the first in focus.")
-    ] = None,
-    groups: Annotated[
-        str | None, typer.Option("--groups", metavar="LIST", help="Numbers of groups, such as 12,24,36.")
-    ] = None,
-    rows: Annotated[
-        str | None, typer.Option("--rows", metavar="LIST", help="Rows of one group, such as 10,20.")
-    ] = None,
-    icc: Annotated[
-        float | None, typer.Option("--icc", metavar="NUMBER", help="Correlation of two rows of one group.")
-    ] = None,
-    rho: Annotated[
-        float | None, typer.Option("--rho", metavar="NUMBER", help="Correlation of neighbouring visits.")
-    ] = None,
-    reach: Annotated[
-        float | None,
-        typer.Option("--range", metavar="NUMBER", help="Practical range, the map having a side of 1."),
-    ] = None,
-    sd: Annotated[float, typer.Option("--sd", metavar="NUMBER", help="Standard deviation of one row.")] = 1.0,
-    varies: Annotated[
-        str, typer.Option("--varies", metavar="unit|row", help="Between what the two arms differ.")
-    ] = "unit",
-    cost_group: Annotated[
-        float | None, typer.Option("--cost-group", metavar="NUMBER", help="What one more group costs.")
-    ] = None,
-    cost_row: Annotated[
-        float | None, typer.Option("--cost-row", metavar="NUMBER", help="What one more row costs.")
-    ] = None,
-    confidence: Annotated[
-        float | None, typer.Option("--confidence", metavar="NUMBER", help="Level of the intervals.")
-    ] = None,
-    csv: Annotated[bool, typer.Option("--csv", help="Print the table as CSV and nothing else.")] = False,
-    debug: Annotated[bool, typer.Option("--debug", help="On a fault of ours, show the traceback.")] = False,
-) -> None:
-    """The interval width to expect with other numbers of groups (series, places) and rows in each.
-
-    From a saved examination, whose design and error model are enlarged; or from stated numbers, for two
-    arms of equal size.
-    """
     from clingstone import cli
-    from clingstone.rehearsing import plan
 
-    subject = None if folder is None else _examination(folder, {}, None)
-    made = plan(
-        subject,
-        term=term,
-        groups=_whole(groups, "--groups"),
-        rows=_whole(rows, "--rows"),
-        icc=icc,
-        rho=rho,
-        range=reach,
-        sd=sd,
-        varies=varies,  # type: ignore[arg-type]  # checked by the verb
-        cost_group=cost_group,
-        cost_row=cost_row,
-        confidence=confidence,
+    shared = {"out": (cli.Out, None), "json": (cli.AsJson, False), "overwrite": (cli.Overwrite, False)}
+    shared |= {"quiet": (cli.Quiet, False), "debug": (cli.Debug, False)}
+    app.command("rehearse", short_help="Simulate y on a design and see how each remedy would have done.")(
+        with_options(_rehearse, _OWN, shared)
     )
-    cli._write(made.table().to_csv() if csv else f"{made}\n")
-
-
-def _whole(text: str | None, flag: str) -> list[int] | None:
-    if text is None:
-        return None
-    try:
-        found = [int(word) for word in text.replace(" ", "").split(",")]
-    except ValueError:
-        found = []
-    if not found or min(found) < 1:
-        raise InputError(f"{flag} {text!r} is no list of whole numbers", "Write it as 12,24,36.")
-    return found
 
 
 # ---- rehearse ------------------------------------------------------------------------------------
 
 
-def _with_options(command: Any) -> Any:
-    """The command with its own options, then one for every field of Settings, then the shared ones."""
+def with_options(command: Any, own: Entries, shared: Entries) -> Any:
+    """The command with its own options, then one for every field of Settings, then the shared ones.
+
+    Both : name → (annotation, default). Settings that the command has an option of its own for are left out.
+    """
     from clingstone import cli
 
-    entries = dict(_OWN)
+    entries = dict(own)
     for option in settings_options():
-        if option.name != "rehearsal":
+        if option.name != "rehearsal" and option.name not in own:
             entries[option.name] = (Annotated[option.kind, cli._typer_option(option)], option.default)
-    entries["out"] = (cli.Out, None)
-    for name, kind in (("json", cli.AsJson), ("overwrite", cli.Overwrite), ("quiet", cli.Quiet)):
-        entries[name] = (kind, False)
-    entries["debug"] = (cli.Debug, False)
+    entries |= shared
     command.__signature__ = inspect.Signature(
         [
             inspect.Parameter(name, inspect.Parameter.KEYWORD_ONLY, annotation=kind, default=default)
@@ -218,7 +140,7 @@ def _rehearse(
 
     folder = _folder(subject, out, overwrite)
     with cli._progress(quiet) as progress:
-        examination = _examination(subject, given, progress, context)
+        examination = examination_of(subject, given, progress, context)
         found = rehearse(
             examination,
             replicates,
@@ -252,8 +174,8 @@ def _folder(subject: Path, out: Path | None, overwrite: bool) -> Path:
     return out
 
 
-def _examination(
-    subject: Path, given: dict[str, Any], progress: Progress | None, context: typer.Context | None = None
+def examination_of(
+    subject: Path, given: dict[str, Any], progress: Progress | None, context: typer.Context
 ) -> Examination:
     """The saved examination run again, or a new one of a file; without the short rehearsal."""
     from clingstone.case import Case
@@ -270,10 +192,6 @@ def _examination(
                 "Give the data file instead to examine it with other settings.",
             )
         case = reopened(saved(subject), cli._data_of(subject))
-    elif not given or context is None:
-        raise InputError(
-            f"{subject} is no folder that clingstone saved", "Examine the data first, and give that folder."
-        )
     else:
         from clingstone import cli
 

@@ -2,16 +2,20 @@
 
 from __future__ import annotations
 
+import io
+
 import numpy as np
 import pandas as pd
 import pytest
 from scipy import stats
 
 import clingstone
+from clingstone.display import significant
 from clingstone.needs import InputError, NotSupported
 from clingstone.rehearsal.enlarge import enlarged, units
 from clingstone.rehearsal.plan import Basics, planned, stated, width_of
 from clingstone.run import Run
+from clingstone.writeup.planned import plate
 from rehearsal.test_verbs import call
 from rehearsal.worlds import stream, trial, wells
 
@@ -180,5 +184,38 @@ def test_the_command_prints_a_plan(capsys):
     assert capsys.readouterr().out.startswith("units,rows,df,width,relative")
     assert call("plan", "--icc", "0.05", "--groups", "20,x", "--rows", "10") == 2
     assert "no list of whole numbers" in capsys.readouterr().err
-    assert call("plan", "nowhere") == 2
-    assert "no folder that clingstone saved" in capsys.readouterr().err
+    assert call("plan", "nowhere.csv", "--model", "y ~ x") == 2
+    assert "nowhere.csv" in capsys.readouterr().err
+    assert call("plan", "--model", "y ~ x", "--groups", "20", "--rows", "10", "--icc", "0.1") == 2
+    assert "but no data" in capsys.readouterr().err
+    assert call("plan", "--icc", "0.05", "--groups", "20", "--rows", "10", "--figure", "plan.pdf") == 2
+    assert "Name it with .svg or .png" in capsys.readouterr().err
+
+
+def test_the_command_plans_from_a_file_and_draws(tmp_path, monkeypatch, capsys):
+    """The same widths as from an examination of the file; the figure is drawn and says them in words."""
+    monkeypatch.chdir(tmp_path)
+    rng = np.random.default_rng(1)
+    g = np.repeat(range(10), 6)
+    table = pd.DataFrame(
+        {"y": rng.normal(size=60) + rng.normal(size=10)[g], "x": rng.normal(size=60), "g": g}
+    )
+    table.to_csv("rows.csv", index=False)
+    words = ["plan", "rows.csv", "--model", "y ~ x", "--group", "g", "--groups", "20", "--rows", "6,12"]
+    assert call(*words, "--csv", "--figure", "plan.svg", "--quiet") == 0
+    shown = pd.read_csv(io.StringIO(capsys.readouterr().out))
+    found = clingstone.examine("rows.csv", model="y ~ x", group="g", rehearsal="none")
+    want = clingstone.plan(found, groups=[20], rows=[6, 12]).to_frame()
+    np.testing.assert_allclose(shown["width"], want["width"])
+    svg = (tmp_path / "plan.svg").read_text()
+    assert "12 rows</text>" in svg
+    assert f"is expected to be {significant(want['width'][0], 3)} wide" in svg
+    assert "saved" not in [p.name for p in tmp_path.iterdir()]
+
+
+def test_the_figure_of_one_series_runs_along_its_rows():
+    f = stream()
+    made = planned(basics(f, ["serial"], "rain"), f.run, None, None, None, None)
+    (line,) = plate(made).paint(660.0).axes[0].lines[:1]
+    assert line.get_xdata().tolist() == sorted(s.rows for s in made.scenarios)
+    assert "series of 60 rows" in plate(made).alt

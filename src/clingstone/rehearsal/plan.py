@@ -12,7 +12,7 @@ from clingstone.covariance.algebras import Chosen, choose
 from clingstone.covariance.components import declared
 from clingstone.design.design import Design, Term
 from clingstone.design.response import Response
-from clingstone.display import Cell, Column, Table, number, plural_of, significant, wrapped
+from clingstone.display import Cell, Column, Table, amount, number, plural_of, significant, wrapped
 from clingstone.maths import curvature, groups, reference
 from clingstone.maths.basis import Basis, Gram
 from clingstone.maths.kenward import Kenward
@@ -50,6 +50,11 @@ class Scenario:
     cost: float = float("nan")
 
 
+def rows_of_each(s: Scenario) -> str:
+    """Whole numbers as they are, averages to three digits."""
+    return amount(s.rows) if s.rows == round(s.rows) else significant(s.rows, 3)
+
+
 @dataclass(frozen=True)
 class Plan:
     """Interval widths to expect; plain.
@@ -80,7 +85,7 @@ class Plan:
         for s in self.scenarios:
             cells = [
                 Cell(f"{s.units:,}", s.units),
-                Cell(significant(s.rows, 3), s.rows),
+                Cell(rows_of_each(s), s.rows),
                 Cell(number(s.df, 1), s.df),
                 Cell(significant(s.width, 3), s.width),
                 Cell(number(s.relative, 2), s.relative),
@@ -253,7 +258,7 @@ def better(basics: Basics, run: Run, out: Sequence[Scenario], name: str, single:
     if priced:
         best = min(priced, key=lambda s: s.cost * s.width**2)
         text += (
-            f" For the money, {best.units:,} {name} of {significant(best.rows, 3)} rows give the most "
+            f" For the money, {best.units:,} {name} of {rows_of_each(best)} rows give the most "
             "precision among these."
         )
     return text.strip()
@@ -298,7 +303,7 @@ def stated(
     terms = (Term("constant", (0,), "constant"), Term("arm", (1,), "factor", ("arm",), True))
     design = Design(Basis.of(X), ("constant", "arm"), terms)
     how = "differs between units" if varies == "unit" else "alternates between the rows of one unit"
-    said = f"Two arms of equal size, which {how}; a row has a standard deviation of {significant(sd)}."
+    said = f"Two arms of equal size; the arm {how}. A row has a standard deviation of {amount(sd)}."
     if icc is not None:
         _within("icc", icc, 0.0, 1.0)
         theta = np.array([np.log(max(icc, 1e-12) / (1 - icc))])
