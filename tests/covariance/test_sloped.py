@@ -7,10 +7,12 @@ from dataclasses import replace
 import numpy as np
 import pytest
 
+from clingstone.covariance import slopedeach
 from clingstone.covariance.algebras import Dense
 from clingstone.covariance.components import slope_key
 from clingstone.covariance.fits import Fits
 from clingstone.covariance.sloped import Sloped
+from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.response import Response
 from clingstone.ledger.region import loglik, region
 from clingstone.needs import Limits, NotSupported
@@ -87,6 +89,45 @@ def test_the_optimum_is_one(node):
             theta = model.theta[:, 0].copy()
             theta[i] += step
             assert loglik(algebra, theta, f.response)[0] < best + 1e-9
+
+
+@pytest.mark.parametrize("node", NODES, ids=lambda n: "+".join(sorted(n)))
+def test_a_gram_of_a_column_is_that_of_its_algebra(node):
+    f = fitted(groups=nested())
+    algebra = f.algebra(node)
+    rng = np.random.default_rng(6)
+    Y = rng.normal(size=(f.design.n, 3))
+    many = SlopedEach(algebra, Response.of(f.design, Y))
+    theta = np.stack([[rng.uniform(p.scan[0], p.scan[-1]) for p in algebra.parameters] for _ in range(3)], 1)
+    found = many.grams(theta, np.arange(3))
+    for b in range(3):
+        one = algebra.gram(theta[:, b], many.response.column(b))
+        assert found.QQ[b] == pytest.approx(one.QQ, rel=1e-9, abs=1e-10)
+        assert found.QE[b] == pytest.approx(one.QE[:, 0], rel=1e-9, abs=1e-8)
+        assert (found.EE[b], found.logdet[b]) == pytest.approx((one.EE[0], one.logdet), rel=1e-10)
+
+
+def test_every_column_has_the_estimate_of_its_own_search(monkeypatch):
+    f = fitted()
+    algebra = f.algebra(NODE)
+    part = f.design.group.finest
+    rng, B = np.random.default_rng(7), 12
+    between = np.linspace(0, 1.5, B) * rng.normal(size=(G, B))[part.codes]
+    apart = np.linspace(1.2, 0, B) * rng.normal(size=(G, B))[part.codes] * table()[1][:, None]
+    Y = rng.normal(size=(f.design.n, B)) + between + apart
+    many = Fits(Response.of(f.design, Y), Run())
+    found = SlopedEach(algebra, many.response).minima()
+    inner = 0
+    for b in range(B):
+        one = Fits(many.response.column(b), Run())[NODE]
+        assert found.value[b] <= -2 * one.loglik[0] + 1e-6
+        if not (found.at_bound[:, b].any() or one.at_bound.any()):
+            assert found.theta[:, b] == pytest.approx(one.theta[:, 0], abs=1e-6)
+            inner += 1
+    assert inner >= 6
+    monkeypatch.setattr(slopedeach, "BLOCK", 100)  # a column or two at a time
+    again = SlopedEach(algebra, many.response).minima()
+    assert again.theta == pytest.approx(found.theta, rel=1e-10, abs=1e-10)
 
 
 def test_draws_have_the_model_covariance():

@@ -324,3 +324,23 @@ def test_free_covariance_keeps_its_size():
     F, _, _, p = read.joint["arm × visit"]
     assert np.mean(p < 0.05) == pytest.approx(0.05, abs=3 * np.sqrt(0.05 * 0.95 / 200))
     assert np.all(F > 0)
+
+
+# ---- many columns of y with random slopes --------------------------------------------------------------
+
+
+@pytest.mark.parametrize("df", ["kenward-roger", "satterthwaite"])
+def test_many_columns_with_slopes_are_read_as_one_by_one(df):
+    X, group, _, Y = panel(seed=12, G=20, slope=0.9, drop=0.2, B=8)
+    of = case(X, group)
+    chosen = replace(MixedSlope(df=df), at="day by clinic")
+    found = chosen.prepare(of).fit(fits(of, Y))
+    assert found.converged.all()
+    for b in range(8):
+        one = refit(MixedSlope(df=df), "", fits(of, Y[:, b]))
+        assert bool(found.boundary[b]) == one.boundary
+        got = np.stack([found.estimate[:, b], found.se[:, b], found.df[:, b]])
+        want = [[getattr(row, what) for row in one.intervals] for what in ("estimate", "se", "df")]
+        # Differences of the likelihood for the observed information leave about 1e-6.
+        tolerance = 1e-8 if df == "kenward-roger" and not one.boundary else 1e-5
+        np.testing.assert_allclose(got, want, rtol=tolerance, atol=tolerance)

@@ -132,12 +132,17 @@ class Bundle:
 
     def L(self, theta: Array) -> Array:
         """(q, q) factor of Γ over σ²; a component of zero variance has a row of zeros."""
-        log, z, start = np.empty(self.q), np.zeros((self.q, self.q)), 0
+        return self.factors(np.asarray(theta, dtype=float)[:, None])[0]
+
+    def factors(self, theta: Array) -> Array:
+        """(K, q, q) the same at K values of θ (d, K)."""
+        K, start = theta.shape[1], 0
+        log, z = np.empty((K, self.q)), np.zeros((K, self.q, self.q))
         for i, piece in enumerate(self.pieces):
             own = theta[start : start + len(piece.parameters)]
             with np.errstate(divide="ignore"):
-                log[i] = np.log(piece.variance(own[:, None])[0])
-            z[i, self.free[i]] = own[1:]
+                log[:, i] = np.log(piece.variance(own))
+            z[:, i, self.free[i]] = own[1:].T
             start += len(own)
         return slopes.factor(log, z)
 
@@ -150,8 +155,10 @@ class Bundle:
             out += [np.clip(log[i : i + 1], first.low, first.high), z[i, self.free[i]]]
         return np.concatenate(out)
 
-    def covariance(self, theta: Array, sigma2: float) -> Array:
-        """(q, q) of intercept and slopes in the user's units, the intercept at x = 0."""
+    @property
+    @once
+    def turned(self) -> Array:
+        """(q, q) T, so that TΓT' is in the user's units with the intercept at x = 0."""
         T = np.eye(self.q)
         for j, piece in enumerate(self.pieces):
             if isinstance(piece, SlopePiece):
@@ -159,7 +166,11 @@ class Bundle:
                 T[j, j] = 1 / spread
                 for i, name in enumerate(self.names):
                     T[i, j] += -centre / spread if name == "" else 0.0
-        L = T @ self.L(theta)
+        return T
+
+    def covariance(self, theta: Array, sigma2: float) -> Array:
+        """(q, q) of intercept and slopes in the user's units, the intercept at x = 0."""
+        L = self.turned @ self.L(theta)
         return np.asarray(sigma2 * L @ L.T)
 
     @property

@@ -75,9 +75,9 @@ def ingredients_each(algebra: Pieces, theta: Array, sigma2: Array) -> Expected |
             whole = np.zeros((q, q))
             whole[start:end, start:end] = np.kron(one, eye)
             E.append(whole)
-        for k in range(K):
-            L = bundle.L(algebra.joined(bundle, theta[:, k]))
-            gamma[k, start:end, start:end] = np.kron(sigma2[k] * L @ L.T, eye)
+        L = bundle.factors(algebra.joined(bundle, theta))
+        between = sigma2[:, None, None] * L @ np.swapaxes(L, 1, 2)
+        gamma[:, start:end, start:end] = np.kron(between, eye)
         start = end
     return expected.blocks(design.n, C, H, sigma2, gamma, np.stack(E))
 

@@ -174,13 +174,7 @@ class Design:
     @once
     def scores(self, part: Partition) -> Array:
         """(G, p, p) Q_g'Q_g, one small matrix per cell."""
-        p = self.p
-        rows, columns = np.triu_indices(p)
-        flat = part.sums(self.Q[:, rows] * self.Q[:, columns])
-        out = np.empty((part.count, p, p))
-        out[:, rows, columns] = flat
-        out[:, columns, rows] = flat
-        return out
+        return np.stack([part.products(column, self.Q) for column in self.Q.T], axis=1)
 
     @once
     def gram(self, form: Form) -> Array:

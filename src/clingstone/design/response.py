@@ -55,7 +55,7 @@ class Response:
         Q = self.design.Q
         out = np.empty((part.count, self.design.p, self.B))
         for j in range(self.design.p):
-            out[:, j, :] = part.sums(Q[:, j : j + 1] * self.residual)
+            out[:, j, :] = part.products(Q[:, j], self.residual)
         return out
 
     @once

@@ -66,7 +66,7 @@ def _rest(f: _Counted, x: Array, floor: Array) -> tuple[Array, float, Array, boo
         step[free] = -(U @ ((U.T @ slope[free]) / flat))
         decrement = -float(step @ slope)
         if decrement < SMALL:
-            return x, value, H, True
+            return (*_settled(f, x, floor, free, (U, flat), slope), H, True)
         for shrink in (1.0, 0.3, 0.1, 0.01):
             trial = np.maximum(x + shrink * step, floor)
             new, after = f(trial)
@@ -78,6 +78,19 @@ def _rest(f: _Counted, x: Array, floor: Array) -> tuple[Array, float, Array, boo
         if decrement > 1e-3:
             H = _curvature(f, x, slope)
     return x, value, H, False
+
+
+def _settled(
+    f: _Counted, x: Array, floor: Array, free: Flags, curvature: tuple[Array, Array], slope: Array
+) -> tuple[Array, float]:
+    """The last two steps, which lead to where rounding ends: values no longer tell better from worse."""
+    U, flat = curvature
+    for _ in range(2):
+        step = np.zeros_like(x)
+        step[free] = -(U @ ((U.T @ slope[free]) / flat))
+        x = np.maximum(x + step, floor)
+        value, slope = f(x)
+    return x, value
 
 
 def _curvature(f: _Counted, x: Array, slope: Array) -> Array:

@@ -77,6 +77,11 @@ class Partition:
             return np.bincount(self.codes, weights=values, minlength=self.count).astype(float)
         return np.asarray(self.indicator @ values)
 
+    def products(self, left: Array, right: Array) -> Array:
+        """Z'(left ∘ right): (n,) and (n, k) → (G, k), without a copy of the rows."""
+        places = (left, self.codes, np.arange(self.n + 1, dtype=np.int32))
+        return np.asarray(sparse.csc_array(places, shape=(self.count, self.n)) @ right)
+
     def means(self, values: Array) -> Array:
         """Cell means, (G,) or (G, k)."""
         sizes = self.sizes if values.ndim == 1 else self.sizes[:, None]

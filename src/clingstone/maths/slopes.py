@@ -179,21 +179,21 @@ def criterion(gram: Gram, block: Block, L: Array, m: int) -> tuple[float, Array]
 
 
 def factor(log_variances: Array, z: Array) -> Array:
-    """L (q, q) of Γ from ln of its diagonal (q,) and z (q, q), atanh of the partial correlations.
+    """L (…, q, q) of Γ from ln of its diagonal (…, q) and z (…, q, q), atanh of the partial correlations.
 
-    z[i, j], j < i, belongs to the correlation of i and j given the functions before j, so that every
+    z[…, i, j], j < i, belongs to the correlation of i and j given the functions before j, so that every
     value gives a covariance (Joe 2006; Lewandowski, Kurowicka & Joe 2009).
     """
-    q = len(log_variances)
-    out = np.zeros((q, q))
+    q = log_variances.shape[-1]
+    out = np.zeros(z.shape)
     for i in range(q):
-        left = 1.0
+        left = np.ones(z.shape[:-2])
         for j in range(i):
-            partial = np.tanh(z[i, j])
-            out[i, j] = partial * np.sqrt(left)
-            left *= 1 - partial**2
-        out[i, i] = np.sqrt(left)
-    return np.asarray(np.exp(log_variances / 2)[:, None] * out)
+            partial = np.tanh(z[..., i, j])
+            out[..., i, j] = partial * np.sqrt(left)
+            left = left * (1 - partial**2)
+        out[..., i, i] = np.sqrt(left)
+    return np.asarray(np.exp(log_variances / 2)[..., None] * out)
 
 
 def parameters(gamma: Array, free: Array, largest: float) -> tuple[Array, Array]:

@@ -7,12 +7,11 @@ from typing import TYPE_CHECKING, Protocol
 
 import numpy as np
 
-from clingstone.covariance.each import Each
 from clingstone.covariance.information import ingredients_each
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
-from clingstone.maths.each import Minima
+from clingstone.maths.each import Grams, Minima, Places
 from clingstone.maths.eachdf import KenwardEach, slopes_each
 from clingstone.maths.once import Array
 from clingstone.remedies.columns import Column, Rule, plain_df
@@ -44,6 +43,17 @@ class Reading(Protocol):
     def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column: ...
 
 
+class Many(Protocol):
+    """An algebra over the columns of one response: their estimates, and Grams each at its own θ."""
+
+    @property
+    def algebra(self) -> Chosen: ...
+
+    def minima(self) -> Minima: ...
+
+    def grams(self, theta: Array, columns: Places) -> Grams: ...
+
+
 @dataclass(eq=False)
 class _Columns:
     """What is read of every column: Φ (B, p, p), df (k, B), and per multi-df term scale and df2 (B,)."""
@@ -59,8 +69,8 @@ class _Columns:
         return cls(np.empty((B, p, p)), np.empty((k, B)), terms)
 
 
-def read_each(ready: Reading, rule: Rule, fits: Fits, many: Each) -> Estimates:
-    """``GlsReady.fit`` for REML and B > 1."""
+def read_each(ready: Reading, rule: Rule, fits: Fits, many: Many) -> Estimates:
+    """The fit of a GLS remedy by REML for B > 1."""
     found = many.minima()
     B, m = fits.response.B, ready.design.m
     every = np.arange(B)
@@ -87,7 +97,7 @@ def read_each(ready: Reading, rule: Rule, fits: Fits, many: Each) -> Estimates:
     return replace(made, joint=joint, boundary=boundary, converged=found.converged)
 
 
-def _kenward(ready: Reading, many: Each, found: Minima, s2: Array, read: _Columns) -> None:
+def _kenward(ready: Reading, many: Many, found: Minima, s2: Array, read: _Columns) -> None:
     seen = ingredients_each(many.algebra, found.theta, s2)
     assert seen is not None
     kr = KenwardEach.of(seen)
@@ -103,7 +113,7 @@ def _kenward(ready: Reading, many: Each, found: Minima, s2: Array, read: _Column
         read.joint[term.name][0][:], read.joint[term.name][1][:] = scale, df2
 
 
-def _satterthwaite(ready: Reading, fits: Fits, many: Each, found: Minima, read: _Columns) -> None:
+def _satterthwaite(ready: Reading, fits: Fits, many: Many, found: Minima, read: _Columns) -> None:
     patterns, which = np.unique(found.at_bound, axis=1, return_inverse=True)
     for j in range(patterns.shape[1]):
         columns = np.flatnonzero(which.ravel() == j)
@@ -127,7 +137,7 @@ def _satterthwaite(ready: Reading, fits: Fits, many: Each, found: Minima, read: 
             _alone(ready, fits, many, found, b, read)
 
 
-def _alone(ready: Reading, fits: Fits, many: Each, found: Minima, b: int, read: _Columns) -> None:
+def _alone(ready: Reading, fits: Fits, many: Many, found: Minima, b: int, read: _Columns) -> None:
     """A column whose observed information has no inverse takes the slow way of one column."""
     column = ready.column_at(
         fits, many.algebra, fits.response.column(b), found.theta[:, b], found.at_bound[:, b]

@@ -10,6 +10,8 @@ import numpy as np
 from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import declared, on_request, slope_key
 from clingstone.covariance.information import affordable, ingredients
+from clingstone.covariance.sloped import Sloped
+from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.design import Design, rows_of
 from clingstone.design.response import Response
 from clingstone.display import MINUS, listed
@@ -19,8 +21,9 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
+from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import positive_m, reported
-from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Plain
+from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Flags, Plain, Price
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -38,10 +41,16 @@ class SlopeReady(FittedReady):
 
     remedy: MixedSlope
 
+    kenward: bool
+
     def fit(self, fits: Fits) -> Estimates:
         node = self.remedy.node(fits)
-        model, algebra = fits[node], fits.algebra(node)
-        columns = [self._column(algebra, model, one, b) for b, one in enumerate(apart(fits.response))]
+        algebra = fits.algebra(node)
+        if fits.response.B > 1 and isinstance(algebra, Sloped) and len(algebra.levels) == 1:
+            return read_each(self, self.remedy.df, fits, SlopedEach(algebra, fits.response))
+        model = fits[node]
+        ys = enumerate(apart(fits.response))
+        columns = [self.column_at(fits, algebra, y, model.theta[:, b], model.at_bound[:, b]) for b, y in ys]
         return self.estimates(
             columns,
             fits.run.settings.confidence,
@@ -50,25 +59,24 @@ class SlopeReady(FittedReady):
             boundary_notes(algebra, model),
         )
 
-    def _column(self, algebra: Chosen, model: ErrorModel, y: Response, b: int) -> Column:
-        theta, bound = model.theta[:, b], model.at_bound[:, b]
+    def column_at(self, fits: Fits, algebra: Chosen, y: Response, theta: Array, bound: Flags) -> Column:
+        """One column of y at its REML estimate θ (d,), with the coordinates that are at a bound."""
         here = algebra.gram(theta, y)
         m = self.design.m
         coef = y.coef[:, 0] + reml.reduced(here)[0][:, 0]
         s2 = float(reml.scale(here, m)[0])
         if (df := plain_df(self.remedy.df, m)) is not None:
             return Column.even(coef, np.asarray(s2 * np.linalg.inv(here.QQ)), df)
-        if self.remedy.df == "kenward-roger":
-            found = kenward(algebra, theta, s2)
-            if found is not None:
-                # At a bound the adjustment would treat it as an ordinary estimate: Φ is kept.
-                phi = found.phi if bound.any() else found.adjusted
-                return Column.kenward(coef, phi, found, m)
+        if self.kenward and (found := kenward(algebra, theta, s2)) is not None:
+            # At a bound the adjustment would treat it as an ordinary estimate: Φ is kept.
+            return Column.kenward(coef, found.phi if bound.any() else found.adjusted, found, m)
         free = [int(i) for i in np.flatnonzero(~bound)]
         bent = curvature.slopes(lambda at: algebra.gram(at, y), theta, free, m)
-        if not bent.sound:
-            return Column.bent(coef, bent, (FLAT,))
-        return Column.bent(coef, bent)
+        return Column.bent(coef, bent, () if bent.sound else (FLAT,))
+
+    def at_zero(self, found: Array, W: Array, bound: Flags) -> Array:
+        """df at a bound are those of Kenward and Roger, as anywhere."""
+        return np.clip(found, 1.0, float(self.design.m))
 
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
@@ -111,6 +119,7 @@ class MixedSlope(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "laird-ware-1982"
+    price: ClassVar[Price | None] = Price(2000.0, 4.0)
 
     @property
     def name(self) -> str:
@@ -156,9 +165,11 @@ class MixedSlope(Plain):
         together = [found.get(k) or on_request(design, k, self.limits) for k in self.keys(design)]
         algebra = choose(design, together, self.limits)  # refuses what cannot be fitted together
         names, W = reported(design)
-        dear = self.df == "kenward-roger" and not affordable(algebra)
+        asked = self.df == "kenward-roger"
+        kenward = asked and affordable(algebra)
+        dear = asked and not kenward
         rule = RULES["satterthwaite" if dear else self.df]
-        return SlopeReady(design, names, W, rule, notes=(DEAR,) if dear else (), remedy=self)
+        return SlopeReady(design, names, W, rule, notes=(DEAR,) if dear else (), remedy=self, kenward=kenward)
 
     def conventions(self) -> tuple[tuple[str, MixedSlope], ...]:
         return (
