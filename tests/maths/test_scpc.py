@@ -89,3 +89,12 @@ def test_units_do_not_matter() -> None:
     two = Components.of(1000 * P + 7, 0.03, np.random.default_rng(0))
     np.testing.assert_allclose(one.rates, two.rates, rtol=1e-8)
     np.testing.assert_allclose(np.abs(one.R), np.abs(two.R), atol=1e-6)
+
+
+def test_clusters_that_are_tiny_on_their_map_still_have_a_strongest_decay() -> None:
+    rng = np.random.default_rng(9)
+    P = rng.uniform(size=(40, 2))
+    P[:3] += 1e6
+    made = Components.of(P, 0.03, np.random.default_rng(0))
+    apart = pdist(P) / made.scale
+    assert np.mean(np.exp(-made.rates[0] * apart)) == pytest.approx(0.03, rel=1e-6)

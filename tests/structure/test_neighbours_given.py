@@ -172,3 +172,32 @@ def test_an_id_at_two_places_stands_for_none(tmp_path: Path, wells: tuple[Sites,
 def test_what_is_no_neighbourhood(spec: str) -> None:
     with pytest.raises(InputError, match="is no neighbourhood"):
         neighbours.build(sites(np.random.default_rng(4).uniform(size=(9, 2))), spec)
+
+
+def test_shapes_touch_across_the_antimeridian_and_at_a_pole() -> None:
+    import geopandas as gpd
+    from shapely.geometry import Polygon, box
+
+    turned = [(lon + 180) % 360 - 180 for lon in (179.0, 179.5, 180.0, 180.5)]
+    shapes = gpd.GeoSeries([box(lon, j, lon + 0.5, j + 1) for lon in turned for j in range(3)])
+    centre = shapes.centroid
+    made = spatial.build(centre.x.to_numpy(), centre.y.to_numpy(), ("lon", "lat"))
+    found = neighbours.build(made, "rook", shapes)[0]
+    assert found.components == 1
+    assert sorted(links(found).sum(axis=1).tolist()) == [2] * 4 + [3] * 6 + [4] * 2
+    caps = gpd.GeoSeries([Polygon([(a, 80), (a + 60, 80), (a + 30, 90)]) for a in range(-180, 180, 60)])
+    inside = caps.representative_point()
+    polar = spatial.build(inside.x.to_numpy(), inside.y.to_numpy(), ("lon", "lat"))
+    assert links(neighbours.build(polar, "contiguity", caps)[0]).sum() == 6 * 5  # all meet at the pole
+
+
+def test_an_island_has_no_link_at_all() -> None:
+    import geopandas as gpd
+    from shapely.geometry import box
+
+    shapes = gpd.GeoSeries([box(i, 0, i + 1, 1) for i in (0, 1, 2, 9)])
+    centre = shapes.centroid
+    made = spatial.build(centre.x.to_numpy(), centre.y.to_numpy(), ("x", "y"), False)
+    found = neighbours.build(made, "contiguity", shapes)[0]
+    assert found.islands == 1
+    assert np.diff(found.W.indptr).tolist() == [1, 2, 1, 0]

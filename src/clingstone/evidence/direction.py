@@ -206,6 +206,12 @@ def axes_of(design: Design, key: str) -> Axes:
     quarter = np.floor(((angle % np.pi) + np.pi / 8) / (np.pi / 4)).astype(int) % 4
     sectors = tuple(form((quarter == q).astype(float), SECTORS[q]) for q in range(4))
     centre, spread = means(waves, small.basis), covariances(waves, small.basis)
+    size = np.linalg.eigvalsh(spread)
+    if size[0] <= 1e-8 * size[1]:
+        raise NotSupported(
+            "all neighbours lie along one axis, so none is left to compare it with",
+            "Places off that line would be needed.",
+        )
     return Axes(waves, sectors, centre, spread, float(S.data.sum()))
 
 

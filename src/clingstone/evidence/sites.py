@@ -100,6 +100,9 @@ def stand_by(fits: Fits, nb: Neighbours, weighed: bool = False) -> tuple[str, ..
         out.append(f"{words}.")
     if nb.islands:
         out.append(f"{nb.islands} of {sites.count} sites have no neighbour.")
+    parts = nb.components - nb.islands
+    if parts > 1:
+        out.append(f"The neighbours ({nb.about}) fall into {parts} parts without a link between them.")
     if not design.known:
         out.append("Only residuals were given, so the moments leave out the columns of the model.")
     return tuple(out)

@@ -51,7 +51,10 @@ class Components:
         def gap(log_c: float) -> float:
             return float(np.log(max(np.mean(np.exp(-np.exp(log_c) * apart)), 1e-300) / mean_correlation))
 
-        first = float(np.exp(optimize.brentq(gap, -8.0, 14.0, xtol=1e-10)))
+        faint = 14.0
+        while gap(faint) > 0 and faint < 40.0:  # most places in clusters that are tiny on this map
+            faint += 4.0
+        first = float(np.exp(optimize.brentq(gap, -8.0, faint, xtol=1e-10)))
         rates = [first]
         while np.mean(np.exp(-rates[-1] * apart)) > FAINT and len(rates) < 60:
             rates.append(rates[-1] * STEP)

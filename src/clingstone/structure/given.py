@@ -34,11 +34,28 @@ def touching(sites: Sites, shapes: pd.Series[Any] | None, rook: bool) -> Edges:
     from libpysal.graph import Graph
 
     own = gpd.GeoSeries(shapes.to_numpy()[sites.part.first], index=np.arange(sites.count))
+    if sites.kind == "lonlat":
+        own = own.transform(_once_round)
     graph: Any = Graph.build_contiguity(own, rook=rook)
     found = graph.sparse.tocoo()
     focal, neighbour = found.row.astype(np.int64), found.col.astype(np.int64)
     apart = focal != neighbour
+    if not apart.any():
+        raise InputError(
+            f"none of the {sites.count:,} shapes shares {'an edge' if rook else 'a point'} with another",
+            "Shapes that overlap, or leave slivers between them, share no corner: mend their borders, or use "
+            "neighbours='knn:6'.",
+        )
     return focal[apart], neighbour[apart]
+
+
+def _once_round(corners: Array) -> Array:
+    """Corners (k, 2) in degrees with one pair of numbers for each point of the globe.
+
+    Shapes touch by the corners they share: those on both sides of the antimeridian, and all at a pole.
+    """
+    lon, lat = corners.T
+    return np.column_stack([np.where(np.abs(lat) >= 90.0, 0.0, lon % 360.0), lat])
 
 
 def pairs(

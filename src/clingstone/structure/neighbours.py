@@ -260,6 +260,7 @@ def _graph(key: str, about: str, edges: Edges, size: int, weight: Array | None =
     )
     graph: Any = Graph.from_sparse(links).transform("r")
     W = sparse.csr_array(graph.sparse)
+    W.eliminate_zeros()  # an island comes with a link of weight zero to itself
     parts = int(sparse.csgraph.connected_components(links, directed=True, connection="weak")[0])
     raw = None if weight is None else links
     return Neighbours(key, about, W, len(graph.isolates), parts, raw)

@@ -90,6 +90,8 @@ _PLANE = re.compile(
     r"(?:.*[^a-z])?(easting|northing|utm|utmx|utmy|row|col|column|plot|km|m|metres?|meters?|feet|ft)(?:[^a-z].*)?",
     re.IGNORECASE,
 )
+_METRES = re.compile(r"(?:.*[^a-z])?(easting|utm|utmx|m|metres?|meters?)(?:[^a-z].*)?", re.IGNORECASE)
+FAR_OUT = 10_000.0  # of a coordinate beside ones that could be degrees: no map in one unit
 _UNITS = {
     "km": "km",
     "m": "m",
@@ -188,8 +190,12 @@ def _decide(
         warn = [f"{nx} and {ny} look like degrees, but are used as a plane, as declared."] if named else []
         return "planar", warn
     if _PLANE.fullmatch(nx) or _PLANE.fullmatch(ny):
-        return "planar", [f"{nx} and {ny} are coordinates in a plane, by their names."]
+        said = f"{nx} and {ny} are coordinates in a plane, by their names."
+        if fits and _METRES.fullmatch(nx) and np.any(x % 1 != 0):
+            said += " All of them could be degrees: if they are longitude and latitude, say lonlat=True."
+        return "planar", [said]
     if not fits:
+        _mixed(x, y, names, places)
         return "planar", [f"{nx} and {ny} are coordinates in a plane: as degrees they would be out of range."]
     raise _ambiguous(x, y, names)
 
@@ -210,6 +216,22 @@ def _out_of_range(x: Array, y: Array, names: tuple[str, str], places: npt.NDArra
         f"({count(len(bad), 'row')} out of range)",
         "Mend these rows, or use lonlat=False if these are coordinates in a plane.",
     )
+
+
+def _mixed(x: Array, y: Array, names: tuple[str, str], places: npt.NDArray[np.int64]) -> None:
+    """Raises InputError where some rows could be degrees and the others lie too far out for one map."""
+    degrees = (np.abs(x) <= 360) & (np.abs(y) <= 90)
+    far = (np.abs(x) >= FAR_OUT) & (np.abs(y) >= FAR_OUT)
+    if degrees.any() and far.any() and bool(np.all(degrees | far)):
+        fewer = degrees if degrees.sum() < far.sum() else far
+        i = int(np.flatnonzero(fewer)[0])
+        nx, ny = names
+        raise InputError(
+            f"{nx} and {ny} mix two kinds of coordinates: {count(int(degrees.sum()), 'row')} could be "
+            f"degrees, {count(int(far.sum()), 'row')} could not ({nx} = {x[i]:g}, {ny} = {y[i]:g} in row "
+            f"{int(places[i]) + 1})",
+            "Bring all rows to one reference system, or use lonlat=False if this is one plane.",
+        )
 
 
 def _ambiguous(x: Array, y: Array, names: tuple[str, str]) -> InputError:
