@@ -150,3 +150,16 @@ def test_coefficients_of_a_logarithm_are_also_ratios():
 )
 def test_a_coefficient_knows_its_term(coefficient, term):
     assert term_of(coefficient) == term
+
+
+def test_the_error_model_is_written_out_as_an_equation():
+    text = methods_text(fixture.trial()).replace("\u00a0", " ")
+    assert (
+        "As an equation: pressure = b0 + b1 (arm: treated) + b2 (age) + u[clinic] + e, where u[clinic] is one "
+        "normal draw for each clinic; e is independent normal noise of single rows."
+    ) in text
+    assert "+ s[time] + e" in methods_text(fixture.stream())
+    assert "+ f[place] + e" in methods_text(fixture.wells())
+    base = fixture.trial()
+    sloped = replace(base, ledger=replace(base.ledger, model=("slope:clinic:age",)))
+    assert "As an equation" not in methods_text(sloped)  # not written where a part has no letter

@@ -193,3 +193,10 @@ def test_the_notebook_shows_the_answer_alone():
     assert html.count("<svg") == 2
     for svg in re.findall(r"<svg.*?</svg>", html, re.S):
         ET.fromstring(svg)
+
+
+def test_a_label_from_right_to_left_is_set_apart_from_the_figures_after_it():
+    page = report(fixture.hostile())
+    assert "\u2068\u05d2\u05d9\u05dc\u2069 7" in page
+    assert "\u202e" not in page  # what would turn the rest of a line round is taken out of a label
+    assert page.count("\u2068") == page.count("\u2069")

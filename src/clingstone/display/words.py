@@ -101,10 +101,17 @@ def sentence(text: str) -> str:
     return text[0].upper() + text[1:] + ("" if text[-1] in ".?!" else ".")
 
 
+JOINERS = "\u200c\u200d"  # part of the spelling in Persian, Hindi and of joined emoji
+
+
 def clean(text: str) -> str:
     """One printable line: control characters of a label never reach a terminal or a page."""
     spaced = "".join(" " if c in "\t\r\n\v\f" else c for c in text)
-    return "".join("\ufffd" if unicodedata.category(c) in ("Cc", "Cf", "Cs") else c for c in spaced)
+    return "".join("\ufffd" if _unseen(c) else c for c in spaced)
+
+
+def _unseen(c: str) -> bool:
+    return c not in JOINERS and unicodedata.category(c) in ("Cc", "Cf", "Cs")
 
 
 def columns_of(text: str) -> int:

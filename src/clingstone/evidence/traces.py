@@ -39,6 +39,9 @@ def traces(fits: Fits) -> Curve | None:
     if part.count > len(chosen):
         note = f"{len(chosen)} of {count(part.count, 'series')}, evenly by rank of their mean residual"
         band = _band(series.elapsed, e)
+    longest = int(max((part.codes == g).sum() for g in chosen))
+    if longest > POINTS:
+        note += f"{'; ' if note else ''}of longer series {POINTS} rows each, evenly in time"
     at, middle, low, high = band
     return Curve(
         kind="traces",

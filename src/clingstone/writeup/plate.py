@@ -10,7 +10,7 @@ from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
 from xml.sax.saxutils import escape
 
-from clingstone.display import Table
+from clingstone.display import Table, clean
 from clingstone.writeup.look import LIGHT
 
 if TYPE_CHECKING:
@@ -128,7 +128,7 @@ def say(figure: Figure, x: float, y: float, text: str, **style: object) -> None:
         "color": LIGHT.ink,
         **style,
     }
-    figure.text(x / whole[0], 1 - y / whole[1], text, **kept)  # type: ignore[arg-type]
+    figure.text(x / whole[0], 1 - y / whole[1], clean(text), **kept)  # type: ignore[arg-type]
 
 
 def clip(text: str, room: float, size: float = TEXT) -> str:
@@ -187,8 +187,7 @@ def _tidy(svg: str, prefix: str, caption: str, alt: str) -> str:
         f'role="img" aria-labelledby="{prefix}-title {prefix}-desc" '
         f'style="max-width: 100%; font-family: {PAGE_FONT}; stroke-linejoin: round"'
     )
-    words = (
-        f'<title id="{prefix}-title">{escape(caption)}</title><desc id="{prefix}-desc">{escape(alt)}</desc>'
-    )
+    told = {"title": caption, "desc": alt}
+    words = "".join(f'<{tag} id="{prefix}-{tag}">{escape(clean(text))}</{tag}>' for tag, text in told.items())
     svg = svg.replace("<svg ", f"<svg {head} ", 1)
     return svg.replace(">", f">\n{words}", 1).strip() + "\n"

@@ -114,9 +114,21 @@ def _environment() -> Environment:
     )
 
 
+# Letters that are written from right to left: Hebrew, Arabic and their like, with spaces inside.
+_RIGHT = re.compile(
+    r"[\u0590-\u08ff\ufb1d-\ufdff\ufe70-\ufefc]+(?:[ \d]*[\u0590-\u08ff\ufb1d-\ufdff\ufe70-\ufefc]+)*"
+)
+
+
 def _tied(value: Any) -> Any:
-    """Plain text without control characters, and never broken between a figure and its per cent sign."""
-    return re.sub(r"(\d) %", "\\1\u00a0%", clean(value)) if type(value) is str else value
+    """Plain text without control characters, and never broken between a figure and its per cent sign.
+
+    A label from right to left is set apart, so that the figures after it keep their place in the line.
+    """
+    if type(value) is not str:
+        return value
+    apart = _RIGHT.sub(lambda m: f"\u2068{m.group()}\u2069", clean(value))
+    return re.sub(r"(\d) %", "\\1\u00a0%", apart)
 
 
 def _asset(name: str) -> str:

@@ -277,6 +277,9 @@ def _error_model(results: Results) -> Iterable[Sentence]:
     yield Sentence(
         f"The model of the dependence, fitted by restricted maximum likelihood, holds {holds}.", ("M6", "M11")
     )
+    equation = _equation(results)
+    if equation:
+        yield Sentence(equation, ("M5",))
     refused = {key for key, _ in ledger.refused}
     known = {s.key for s in ledger.shares}
     gone = [s for s in ledger.standing if s.key in known - set(ledger.model) - refused]
@@ -287,6 +290,32 @@ def _error_model(results: Results) -> Iterable[Sentence]:
             "detected nor able to matter.",
             ("M11",),
         )
+
+
+# Family of a component → its letter in the equation, and what that letter is.
+DRAWN = {
+    "group": ("u[{}]", "one normal draw for each {}"),
+    "serial": ("s[{}]", "a stationary normal series whose correlation falls by a factor ρ a step of time"),
+    "spatial": ("f[{}]", "a normal field over the map whose correlation falls exponentially with distance"),
+}
+
+
+def _equation(results: Results) -> str:
+    """ "As an equation: pressure = b0 + b1 (arm: visits) + u[clinic] + e, where u[clinic] is …"."""
+    names = results.case.coefficients
+    if not names or len(names) > TERMS or any(k.split(":")[0] not in DRAWN for k in results.ledger.model):
+        return ""
+    mean = [f"b{k}" if name == "constant" else f"b{k} ({name})" for k, name in enumerate(names)]
+    random, words = [], []
+    for key in results.ledger.model:
+        family, _, level = key.partition(":")
+        what = noun_at(results, level) if family == "group" else {"serial": "time"}.get(family, "place")
+        letter, meaning = (part.format(what) for part in DRAWN[family])
+        random.append(letter)
+        words.append(f"{letter} is {meaning}")
+    words.append("e is independent normal noise of single rows")
+    right = " + ".join([*mean, *random, "e"])
+    return f"As an equation: {results.case.response} = {right}, where {'; '.join(words)}."
 
 
 def _repaired(results: Results) -> Iterable[Sentence]:
