@@ -197,18 +197,16 @@ def _utf8(source: Source, name: str) -> tuple[Source, str, list[str]]:
         )
     if b"\r" in start and b"\n" not in start:
         source = _whole(source).replace(b"\r", b"\n")
-    line = 1
-    for block in _blocks(source):
-        try:
+    try:
+        for block in _blocks(source):
             block.decode("utf-8")
-        except UnicodeDecodeError as error:
-            if start.startswith(codecs.BOM_UTF8):
-                raise InputError(f"{name} starts like utf-8 text and is not: {error.reason}") from error
-            line += block[: error.start].count(b"\n")
-            note = f"{name} is not UTF-8 (line {line}); it was read as Windows-1252. Check accented letters."
-            text = _whole(source).decode("cp1252", errors="replace")
-            return text.encode(), "windows-1252", [note]
-        line += block.count(b"\n")
+    except UnicodeDecodeError as error:
+        if start.startswith(codecs.BOM_UTF8):
+            raise InputError(f"{name} starts like utf-8 text and is not: {error.reason}") from error
+        whole = _whole(source)
+        line = whole.count(b"\n", 0, whole.index(error.object) + error.start) + 1
+        note = f"{name} is not UTF-8 (line {line}); it was read as Windows-1252. Check accented letters."
+        return whole.decode("cp1252", errors="replace").encode(), "windows-1252", [note]
     return source, "utf-8 with a mark" if start.startswith(codecs.BOM_UTF8) else "utf-8", []
 
 
@@ -299,10 +297,10 @@ def _around(separator: str) -> npt.NDArray[np.bool_]:
 def _needless_zero(block: bytes, separator: str) -> bool:
     """Whether some field starts with a 0 and another digit behind it, with or without a sign."""
     sign: npt.NDArray[np.uint8] = np.frombuffer(block, dtype=np.uint8)
-    place = np.flatnonzero(sign[:-1] == ord("0"))
-    place = place[(sign[place + 1] - ord("0") < 10) & (place > 0)]  # unsigned: below "0" wraps round
-    before = sign[place - 1]
-    around = _around(separator)
+    digit = (sign - ord("0")) < 10  # unsigned: what is below "0" wraps round
+    found = (sign[1:-1] == ord("0")) & digit[2:] & ~digit[:-2] & (sign[:-2] != ord("."))
+    place = np.flatnonzero(found) + 1
+    before, around = sign[place - 1], _around(separator)
     if around[before].any():
         return True
     signed = place[((before == ord("+")) | (before == ord("-"))) & (place > 1)]
@@ -327,8 +325,14 @@ def _equal_lines(block: bytes, separator: int, width: int) -> int | None:
     """
     sign: npt.NDArray[np.uint8] = np.frombuffer(block, dtype=np.uint8)
     marks, ends = sign == separator, sign == ord("\n")
-    quote = sign == ord('"')
-    if quote.any():
+    if b'"' not in block:
+        kind = ends[np.flatnonzero(marks | ends)]
+        if ends[-1] and width > 1 and len(kind) % width == 0:
+            line = kind.reshape(-1, width)
+            if line[:, -1].all() and not line[:, :-1].any():
+                return len(line)  # the usual case, at once
+    else:
+        quote = sign == ord('"')
         outside = np.bitwise_and(np.cumsum(quote, dtype=np.int32), 1) == 0
         opening = np.flatnonzero(quote & ~outside)
         before = sign[np.maximum(opening, 1) - 1]
