@@ -8,6 +8,8 @@ import pytest
 from clingstone.covariance.fits import Fits
 from clingstone.evidence import gather
 from clingstone.ledger.ledger import Ledger, focus_rows, weigh
+from clingstone.ledger.region import region
+from clingstone.ledger.sizes import parameters
 from clingstone.run import one_thread
 from tests.ledger import factories as make
 
@@ -175,3 +177,29 @@ def test_tipping_points_at_irregular_times():
     (point,) = [q for q in found if q.term == "x"]
     assert point.value is not None
     assert 0 < point.value < 0.95
+
+
+def test_a_range_at_the_end_of_what_is_tried_has_no_upper_limit():
+    # A slope over the map that is missing from the mean: the likelihood rises with the range for good.
+    rng = np.random.default_rng(8)
+    xy = rng.uniform(size=(60, 2))
+    f = make.fits(make.design({"x": rng.standard_normal(60)}, xy=xy), 6 * xy[:, 0] + 0.3 * rng.standard_normal(60))
+    reach = ledger_of(f).parameter("spatial", "practical range")
+    assert bool(f[{"spatial"}].at_bound[0, 0])
+    assert np.isfinite(reach.low)
+    assert reach.low > 0
+    assert reach.high == np.inf
+    assert reach.note == "at the end of what is tried: at least so long"
+
+
+def test_a_range_that_the_places_cannot_show_has_no_lower_limit():
+    rng = np.random.default_rng(9)
+    xy = rng.uniform(size=(80, 2))
+    distance = np.linalg.norm(xy[:, None] - xy, axis=2)
+    y = np.linalg.cholesky(np.exp(-distance / 0.03) + 0.2 * np.eye(80)) @ rng.standard_normal(80)
+    f = make.fits(make.design({"x": rng.standard_normal(80)}, xy=xy), y)
+    inside = region(f, frozenset({"spatial"}), 0.95)
+    (reach,) = [p for p in parameters(f, inside, inside) if p.name == "practical range"]
+    shown = inside.model.theta[0]
+    assert (reach.low == 0.0) == bool(shown.min() <= f.algebra({"spatial"}).parameters[0].low + 1e-4)
+    assert reach.low == 0.0

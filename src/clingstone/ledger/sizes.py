@@ -14,6 +14,7 @@ from clingstone.maths.once import Array
 LEFT_OUT = "not kept in the model; the upper end is that of the fit with every structure"
 TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
 UNITS = "units of time"  # of a time without a unit of its own
+AT_LONGEST = "at the end of what is tried: at least so long"
 AT_ZERO = "estimated at zero, the edge of its range"
 
 
@@ -138,6 +139,14 @@ def _spatial(fits: Fits, at: Region, key: str, note: str) -> list[Parameter]:
         return []
     sites = fits.design.spatial
     low, estimate, high = at.interval(at.model.shape["spatial.range"])
+    # What reaches an end of what is tried has no limit there that the data know of.
+    where = at.model.names.index("spatial.log_range")
+    tried = fits.algebra(at.model.node).parameters[where]
+    reach = at.model.theta[where, np.isfinite(at.model.shape["spatial.range"])]
+    if reach.size and reach.max() >= tried.high - 1e-4:
+        high, note = np.inf, note or (AT_LONGEST if at.model.theta[where, 0] >= tried.high - 1e-4 else "")
+    if reach.size and reach.min() <= tried.low + 1e-4:
+        low = 0.0
     unit = sites.unit if sites is not None else ""
     return [Parameter(key, "practical range", estimate, low, high, unit, note)]
 
