@@ -183,7 +183,8 @@ def test_a_range_at_the_end_of_what_is_tried_has_no_upper_limit():
     # A slope over the map that is missing from the mean: the likelihood rises with the range for good.
     rng = np.random.default_rng(8)
     xy = rng.uniform(size=(60, 2))
-    f = make.fits(make.design({"x": rng.standard_normal(60)}, xy=xy), 6 * xy[:, 0] + 0.3 * rng.standard_normal(60))
+    y = 6 * xy[:, 0] + 0.3 * rng.standard_normal(60)
+    f = make.fits(make.design({"x": rng.standard_normal(60)}, xy=xy), y)
     reach = ledger_of(f).parameter("spatial", "practical range")
     assert bool(f[{"spatial"}].at_bound[0, 0])
     assert np.isfinite(reach.low)
