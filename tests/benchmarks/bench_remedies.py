@@ -1,19 +1,14 @@
-"""Cost of refits in units of one statsmodels fit of the same data: python tests/benchmarks/bench_remedies.py
+"""Cost of refits beside general-purpose fits of the same rows: python -m tests.benchmarks bench_remedies
 
-Each pair is timed next to each other, best of three, with one BLAS thread.
+The decomposition of X is counted on both sides.
 """
 
 from __future__ import annotations
 
-import os
-
-os.environ["OPENBLAS_NUM_THREADS"] = "1"
-
-import time
 from collections.abc import Callable
+from functools import partial
 
 import numpy as np
-import statsmodels.api as sm
 
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design, Term
@@ -21,18 +16,11 @@ from clingstone.design.response import Response
 from clingstone.maths.basis import Basis
 from clingstone.maths.partition import Partition
 from clingstone.remedies import refit, remedy
+from clingstone.remedies.sandwich import ClusterRobust
 from clingstone.run import Run
 from clingstone.structure.group import Groups
 from clingstone.structure.serial import Series
-
-
-def best(work: Callable[[], object], times: int = 3) -> float:
-    out = []
-    for _ in range(times):
-        start = time.perf_counter()
-        work()
-        out.append(time.perf_counter() - start)
-    return min(out)
+from tests.benchmarks.pairs import ONE_FIT, OURS, Row, Way, in_r
 
 
 def data(n: int, G: int, p: int) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
@@ -49,47 +37,123 @@ def fits(X: np.ndarray, y: np.ndarray, part: Partition, serial: Series | None = 
     return Fits(Response.of(design, y), Run())
 
 
-def grouped(n: int, G: int, p: int) -> None:
+def errors(found: object) -> np.ndarray:
+    return np.array([row.se for row in found.intervals])  # type: ignore[attr-defined]
+
+
+def clusters(n: int, G: int, p: int) -> list[Way]:
+    import pandas as pd
+    import pyfixest
+    import statsmodels.api as sm
+    from linearmodels.iv import IV2SLS
+
     X, group, y = data(n, G, p)
     part = Partition.of("g", group)
-    clustered = best(lambda: sm.OLS(y, X).fit(cov_type="cluster", cov_kwds={"groups": group}).bse)
-    plain = best(lambda: sm.OLS(y, X).fit().bse)
-    print(f"n = {n:,}, {part.count:,} clusters, p = {p}")
-    print(f"  statsmodels: OLS {plain:.3f} s, with clusters {clustered:.3f} s")
-    for id in ("ordinary", "cluster-robust", "heteroscedasticity-robust", "mixed-intercept"):
-        whole = best(lambda id=id: refit(remedy(id), "", fits(X, y, part)))
-        made = fits(X, y, part)
-        shared = best(lambda id=id, made=made: refit(remedy(id), "", _bare(made)))
-        print(
-            f"  {id}: {whole:.3f} s ({whole / clustered:.2f} × clusters, {whole / plain:.2f} × OLS), "
-            f"of which {shared:.3f} s after the decomposition of X"
-        )
+    count, table = part.count, pd.DataFrame(X[:, 1:], columns=[f"x{j}" for j in range(1, p)])
+    table["y"], table["g"] = y, group
+    formula = "y ~ " + " + ".join(f"x{j}" for j in range(1, p))
+
+    def cr1() -> np.ndarray:
+        return errors(refit(ClusterRobust(kind="CR1S", df="clusters"), "g", fits(X, y, part)))
+
+    def by_linearmodels() -> np.ndarray:
+        found = IV2SLS(y, X, None, None).fit(cov_type="clustered", clusters=group, debiased=True)
+        return np.asarray(found.std_errors) * np.sqrt(count / (count - 1) * (n - 1) / n)
+
+    def by_pyfixest() -> np.ndarray:
+        return np.asarray(pyfixest.feols(formula, table, vcov={"CRV1": "g"}).se())
+
+    def by_statsmodels() -> np.ndarray:
+        return np.asarray(sm.OLS(y, X).fit(cov_type="cluster", cov_kwds={"groups": group}).bse)
+
+    return [
+        Way(OURS + ", CR1 with both factors", cr1),
+        Way("statsmodels OLS(…).fit(cov_type='cluster')", by_statsmodels),
+        Way("linearmodels IV2SLS(…, cov_type='clustered'), scaled", by_linearmodels, same=False),
+        Way("pyfixest feols(…, vcov={'CRV1': …})", by_pyfixest),
+        Way(ONE_FIT, lambda: sm.OLS(y, X).fit().bse, same=False, floor=True),
+    ]
 
 
-def _bare(run: Fits) -> Fits:
-    """The same basis and response without anything kept."""
-    d, r = run.design, run.response
-    design = Design(d.basis, d.names, d.terms, group=d.group, serial=d.serial)
-    return Fits(Response(design, r.coef, r.residual, r.ss), run.run)
+def bias_reduced(n: int, G: int, p: int) -> list[Way]:
+    import statsmodels.api as sm
+
+    X, group, y = data(n, G, p)
+    part = Partition.of("g", group)
+    return [
+        Way(OURS + ", CR2 with df", lambda: errors(refit(remedy("cluster-robust"), "g", fits(X, y, part)))),
+        Way(ONE_FIT, lambda: sm.OLS(y, X).fit().bse, same=False, floor=True),
+        *in_r(
+            "clubSandwich vcovCR(type = 'CR2'), without df",
+            "sqrt(diag(as.matrix(vcovCR(lm(y ~ X - 1), g, 'CR2'))))",
+            libraries=("clubSandwich",),
+            rounds=2,
+            X=X,
+            y=y,
+            g=part.codes,
+        ),
+    ]
 
 
-def ordered(n: int, p: int) -> None:
+def intercept(n: int, G: int, p: int) -> list[Way]:
+    import statsmodels.api as sm
+
+    X, group, y = data(n, G, p)
+    part = Partition.of("g", group)
+
+    def variances() -> np.ndarray:
+        held = fits(X, y, part)[{"group:g"}]
+        return np.array([held.variances["group:g"][0], held.variances["row"][0]])
+
+    def by_statsmodels() -> np.ndarray:
+        found = sm.MixedLM(y, X, groups=group).fit(reml=True)
+        return np.array([float(np.ravel(found.cov_re)[0]), float(found.scale)])
+
+    return [
+        Way(OURS + ", random intercept by REML", variances),
+        Way("statsmodels MixedLM(…).fit(reml=True)", by_statsmodels, rounds=2),
+        *in_r(
+            "lme4 lmer",
+            "v <- as.data.frame(VarCorr(lmer(y ~ X - 1 + (1 | g))))$vcov",
+            libraries=("lme4",),
+            X=X,
+            y=y,
+            g=part.codes,
+        ),
+    ]
+
+
+def long_run(n: int, p: int) -> list[Way]:
+    import statsmodels.api as sm
+
     X, _, y = data(n, 10, p)
     tick = np.arange(n)
-    serial = Series(
-        "day", Partition.of("series", np.zeros(n, int)), tick.astype(float), "day", 1.0, tick, "regular"
-    )
-    part = Partition.of("g", tick // 20)
-    lags = int(4 * (n / 100) ** (2 / 9))
-    other = best(lambda: sm.OLS(y, X).fit(cov_type="HAC", cov_kwds={"maxlags": lags}).bse)
-    for id in ("hac", "ar1"):
-        mine = best(lambda id=id: refit(remedy(id), "", fits(X, y, part, serial)))
-        print(f"n = {n:,}, p = {p}: {id} {mine:.3f} s; statsmodels HAC, {lags} lags: {other:.4f} s")
+    series = Partition.of("series", np.zeros(n, int))
+    serial = Series("day", series, tick.astype(float), "day", 1.0, tick, "regular")
+    part, lags = Partition.of("g", tick // 20), int(4 * (n / 100) ** (2 / 9))
+
+    def ours() -> np.ndarray:
+        return errors(refit(remedy("hac"), "", fits(X, y, part, serial)))
+
+    def library() -> np.ndarray:
+        return np.asarray(sm.OLS(y, X).fit(cov_type="HAC", cov_kwds={"maxlags": lags}).bse)
+
+    return [
+        Way(OURS + ", equal-weighted cosines with exact p", ours, rounds=3),
+        Way(f"statsmodels OLS(…).fit(cov_type='HAC'), {lags} lags", library, same=False),
+    ]
 
 
-if __name__ == "__main__":
-    grouped(20_000, 1000, 8)
-    grouped(1_000_000, 50_000, 5)
-    ordered(1000, 5)
-    ordered(10_000, 5)
-    ordered(100_000, 5)
+def row(id: str, piece: str, size: str, make: Callable[..., list[Way]], *at: int) -> Row:
+    return Row(id, piece, size, partial(make, *at))
+
+
+SMALL, LARGE = "2e4 rows, 1,000 groups, p = 8", "1e6 rows, 50,000 groups, p = 5"
+ROWS = (
+    row("cr1-small", "Cluster-robust, CR1", SMALL, clusters, 20_000, 1000, 8),
+    row("cr1-large", "Cluster-robust, CR1", LARGE, clusters, 1_000_000, 50_000, 5),
+    row("cr2-small", "Cluster-robust, CR2", SMALL, bias_reduced, 20_000, 1000, 8),
+    row("intercept-small", "Random intercept, REML", SMALL, intercept, 20_000, 1000, 8),
+    row("hac-1e3", "Long-run variance", "one series of 1,000, p = 5", long_run, 1000, 5),
+    row("hac-1e5", "Long-run variance", "one series of 1e5, p = 5", long_run, 100_000, 5),
+)
