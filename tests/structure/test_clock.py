@@ -107,7 +107,13 @@ def test_units_and_occasions_after_the_name() -> None:
     assert clock([1, 2, 3], "Days").units[0][0] == "day"
     assert clock([1, 2, 3], "year").notes == ("year is counted in years, after its name.",)
     assert "taken as equally far apart" in clock([1, 2, 3], "visit").notes[0]
-    assert clock([1, 2, 3], "x").notes == ()
+    assert "taken as equally far apart" in clock([1, 2, 3], "wave_nr").notes[0]
+    asked = clock([3, 1, 2], "x").notes[0]
+    assert asked.startswith("x runs from 1 to 3 without a unit: its steps are taken as equally far apart")
+    assert "give time= a column of the times themselves" in asked
+    # Times that already lie unevenly, two of them, many of them, or with a unit, leave nothing to ask.
+    for values, name in (([0, 3, 12], "x"), ([1, 2], "x"), (range(20), "x"), ([1, 2, 3], "week")):
+        assert not any("equally far apart" in note for note in clock(values, name).notes)
 
 
 def test_ordered_categories_are_steps() -> None:

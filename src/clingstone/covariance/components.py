@@ -10,6 +10,7 @@ import numpy as np
 
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import count
 from clingstone.maths.basis import Gram
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
@@ -229,7 +230,7 @@ def _serial(design: Design, limits: Limits) -> Refusal | None:
     longest, enough = int(sizes.max()), int(np.sum(sizes >= limits.serial_estimate_short))
     if longest < limits.serial_estimate_rows and enough < limits.serial_estimate_series:
         return Refusal(
-            f"the longest series has {longest} times; "
+            f"the longest series has {count(longest, 'time')}; "
             f"series of {limits.serial_estimate_short} times or more: {enough}",
             f"One series of {limits.serial_estimate_rows} times, or {limits.serial_estimate_series} series "
             f"of {limits.serial_estimate_short}, would be needed.",

@@ -29,6 +29,11 @@ PERIODS = (
 SERIAL = (15_000, 80_000)  # spreadsheet day counts of the years 1941 to 2119
 UNIX_SERIAL = 25_569  # that of 1970-01-01
 ORDINAL_WORDS = {"visit", "wave", "round", "session", "timepoint", "occasion"}
+FEW_OCCASIONS = 8  # times 1, 2, 3 … up to which they are asked about
+EVEN = (
+    "taken as equally far apart. If they were not (as 1, 2, 3 for 0, 3 and 12 months), give time= a column "
+    "of the times themselves."
+)
 MONTHS = ("jan", "feb", "mar", "apr", "may", "jun", "jul", "aug", "sep", "oct", "nov", "dec")
 
 
@@ -115,14 +120,21 @@ def _numbers(name: str, values: pd.Series) -> Clock:
     word = name.casefold()
     unit = UNIT_WORDS.get(word, "")
     notes = (f"{name} is counted in {unit}s, after its name.",) if unit else ()
-    if word in ORDINAL_WORDS:
+    if ORDINAL_WORDS & set(re.split(r"[\W_\d]+", word)):
+        notes = (f"{name} counts occasions: they are {EVEN}",)
+    elif whole and not unit and _few_in_a_row(number):
         notes = (
-            f"{name} counts occasions: they are taken as equally far apart. If they were not, give "
-            "a time column.",
+            f"{name} runs from {number.min():.0f} to {number.max():.0f} without a unit: its steps are {EVEN}",
         )
     if whole:
         return Clock(number.astype(np.int64), ((unit, 1.0),), lambda i: f"{number[i]:.0f}", notes)
     return Clock(number, ((unit, 1.0),), lambda i: f"{number[i]:g}", notes)
+
+
+def _few_in_a_row(number: npt.NDArray[np.float64]) -> bool:
+    """A few whole numbers without a hole: they may only count what lies unevenly in time."""
+    distinct = np.unique(number)
+    return 3 <= len(distinct) <= FEW_OCCASIONS and bool(np.all(np.diff(distinct) == 1))
 
 
 def _periods(name: str, periods: pd.PeriodIndex, values: pd.Series) -> Clock:

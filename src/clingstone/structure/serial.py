@@ -202,6 +202,11 @@ def _default(
 def _tie_error(
     name: str, clock: Clock, part: Partition, tied: Rows, places: Rows, groups: Groups | None
 ) -> InputError:
+    if bool(np.all(clock.counts == clock.counts[0])):
+        return InputError(
+            f"{name} is {clock.show(0)} in every row, so it puts no two of them in order",
+            "Name the column in which time runs, or leave time= out.",
+        )
     row = int(tied[0])
     twins = np.flatnonzero((part.codes == part.codes[row]) & (clock.counts == clock.counts[row]))
     where = "in the whole table" if part.key == WHOLE else f"within {part.key}"
