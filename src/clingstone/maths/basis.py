@@ -69,8 +69,10 @@ class Basis:
     def project(self, Y: Array) -> Array:
         """MY: what the design leaves over."""
         # Twice is enough: a second pass removes what rounding leaves of large means.
-        first = Y - self.Q @ (self.Q.T @ Y)
-        return np.asarray(first - self.Q @ (self.Q.T @ first))
+        rest = np.asarray(self.Q @ (self.Q.T @ Y))
+        np.subtract(Y, rest, out=rest)
+        rest -= self.Q @ (self.Q.T @ rest)
+        return rest
 
     def extend(self, columns: Array) -> Basis:
         """Basis of [X, columns], the old columns first and unchanged. Columns (n, k)."""
