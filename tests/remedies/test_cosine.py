@@ -188,3 +188,53 @@ def test_conventions_show_bartlett_with_a_normal_quantile():
     V = 80 / 77 * inverse @ (u.T @ weight @ u) @ inverse
     assert [r.se for r in rows] == pytest.approx(np.sqrt(np.diag(V)), rel=1e-9)
     assert all(r.df == np.inf for r in rows)
+
+
+def slow_under_noise(n: int, seed: int) -> np.ndarray:
+    """Half of the variance a first-order process of 0.9, half row noise."""
+    rng = np.random.default_rng([77, seed])
+    return np.sqrt(0.5) * ar1(n, 0.9, 1, rng)[:, 0] + np.sqrt(0.5) * rng.standard_normal(n)
+
+
+def test_the_law_under_row_noise_is_that_of_the_whole_matrix():
+    """E of the law's two forms, a'Ωa and tr F'ΩF, with Ω = (1 − v)ρ^|t−s| + vI written out."""
+    from clingstone.maths.longrun import Grid
+    from clingstone.remedies.longrun import _correlate
+
+    n, rho, noise = 40, 0.8, 0.3
+    t = np.arange(n)
+    omega = (1 - noise) * rho ** np.abs(t[:, None] - t) + noise * np.eye(n)
+    block = np.random.default_rng(3).standard_normal((n, 4))
+    grid = Grid.of(np.zeros(n, dtype=np.intp), t)
+    np.testing.assert_allclose(_correlate(grid, block, rho, noise), omega @ block, rtol=1e-10, atol=1e-10)
+    np.testing.assert_allclose(
+        _correlate(grid, block, rho, 0.0), grid.correlate(block, rho), rtol=1e-12, atol=1e-12
+    )
+
+
+def test_row_noise_enters_the_law_where_the_errors_ask_for_it():
+    """The ρ of the slow part, not one between it and the noise; the interval is the wider for it."""
+    from clingstone.remedies.serial import under_noise
+
+    X, tick, _ = trend(n=300)
+    f = fits(design(X, tick=tick), X[:, 1] + slow_under_noise(300, 1))
+    found = under_noise(f)
+    assert found is not None
+    assert 0.75 < found["rho"] < 0.99
+    assert 0.2 < found["noise"] < 0.8
+    items = dict(refit(HAC, "", f).account.items)
+    assert items["share of row noise over it"] == f"{found['noise']:.3f}"
+    plain = HAC.prepare(f.design, f[{"serial"}])
+    noisy = HAC.prepare(f.design, HAC.working(f))
+    assert noisy.laws[1].quantile(0.05) > 1.1 * plain.laws[1].quantile(0.05)
+
+
+def test_a_first_order_process_is_seldom_taken_for_one_under_noise():
+    """5 % by the law of the likelihood ratio at the boundary; four or more of 24 have a chance of 3 %."""
+    from clingstone.remedies.serial import under_noise
+
+    X, tick, _ = trend(n=120)
+    rng = np.random.default_rng(5)
+    made = design(X, tick=tick)
+    asked = [under_noise(fits(made, ar1(120, 0.5, 1, rng)[:, 0])) is not None for _ in range(24)]
+    assert sum(asked) <= 3

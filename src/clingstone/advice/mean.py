@@ -23,7 +23,12 @@ from clingstone.needs import Family, NotSupported
 
 # A smooth mean over time or place and a smooth error are one picture: such a part is never declared
 # the winner over dependence, only shown beside it; nor is a curve in a covariate that runs as smoothly.
-SMOOTH: dict[str, Family] = {"trend": "serial", "trend-surface": "spatial", "season": "serial"}
+SMOOTH: dict[str, Family] = {
+    "trend": "serial",
+    "trend-surface": "spatial",
+    "season": "serial",
+    "break": "serial",
+}
 CURVE = "functional-form"
 # Patterns that no fading dependence draws: the calendar's own season, and a step that stands out of the
 # fitted order in time. Their bars are higher, because a season or a step seen by chance changes the advice.
@@ -80,7 +85,7 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     shown = [f for f in (_curve(evidence, fits.design), *_patterns(evidence, fits.design)) if f is not None]
     for finding in sorted(shown, key=_adjusted):
         found = _try(fits, finding, ledger, shows=True)
-        if found is not None:
+        if found is not None and (found.shows or found.doubt):
             return found
     for finding in _smooth(evidence, ledger, fits.design):
         found = _try(fits, finding, ledger, shows=False)
@@ -125,6 +130,7 @@ def _smooth(evidence: Evidence, ledger: Ledger, design: Design) -> list[Finding]
         for f in evidence.of("mean")
         if np.isfinite(f.p)
         and f.p < LEVEL
+        and f.test != "break"  # a step counts given the dependence alone
         and (_fixed_season(f, design) if f.test == "season" else not f.given)
         and _family(f, design) in families
     ]
@@ -166,6 +172,8 @@ def _try(fits: Fits, finding: Finding, ledger: Ledger, *, shows: bool) -> Missin
     # That it is no longer seen does not show that it is not there: what remains at its upper end counts.
     open_end = [now for now in goes if now.widens]
     mine = [s for s, _ in shown if s.structure == family]
+    if finding.test == "break" and open_end:
+        shows = False  # a step and a slow process are one picture: it counts only where nothing is left
     doubt = bool(open_end) if shows else any(_halved(ledger, after, s.key) for s in mine)
     return Missing(
         what=_words(fits, finding),

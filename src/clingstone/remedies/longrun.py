@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
-from typing import TYPE_CHECKING, ClassVar, Literal
+from typing import TYPE_CHECKING, ClassVar, Literal, TypeGuard
 
 import numpy as np
 
@@ -17,6 +17,7 @@ from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.kernel import Bandwidth, KernelReady, by_lags
 from clingstone.remedies.linear import LinearReady, positive_m, reported
 from clingstone.remedies.remedy import Account, Estimand, Plain
+from clingstone.remedies.serial import under_noise
 from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
@@ -30,12 +31,14 @@ RHO_LIMIT = 0.999  # a working ρ nearer to one has no stationary law to refer t
 class LongRunReady(LinearReady):
     """nu : df of the cosines, all series together.
 
-    laws : per reported row, the exact law of t under AR(1) with ``rho``; empty when t is used.
+    laws : per reported row, the exact law of t under AR(1) with ``rho``, a share ``noise`` of the variance
+    being row noise; empty when t is used.
     """
 
     grid: Grid
     nu: float
     rho: float
+    noise: float
     laws: tuple[RatioLaw, ...]
 
     def block(self, response: Response, columns: tuple[int, ...]) -> Array:
@@ -70,8 +73,8 @@ class LongRunReady(LinearReady):
         memory(8.0 * self.design.n * q * r * 3, f"the joint law of {q} coefficients with {r} cosines")
         F = (a[:, :, None] * self.grid.cosines()[:, None, :]).reshape(self.design.n, q * r)
         F -= self.design.Q @ (self.design.Q.T @ F)
-        G = (F.T @ self.grid.correlate(F, self.rho)).reshape(q, r, q, r)
-        return joint_law(G.transpose(0, 2, 1, 3), a.T @ self.grid.correlate(a, self.rho))
+        G = (F.T @ _correlate(self.grid, F, self.rho, self.noise)).reshape(q, r, q, r)
+        return joint_law(G.transpose(0, 2, 1, 3), a.T @ _correlate(self.grid, a, self.rho, self.noise))
 
     def account(self, fits: Fits) -> Account:
         items: list[tuple[str, str]] = [("series", f"{len(self.grid.lengths)}"), ("steps", f"{self.grid.N}")]
@@ -80,6 +83,8 @@ class LongRunReady(LinearReady):
         items.append(("cosines ν = ⌊0.4 N^⅔⌋", f"{int(self.grid.counts.sum())}"))
         if self.laws:
             items.append(("ρ of the working AR(1) in the law of t", f"{self.rho:.3f}"))
+            if self.noise > 0:
+                items.append(("share of row noise over it", f"{self.noise:.3f}"))
         return Account(
             estimator="ordinary least squares",
             covariance="long-run variance of the scores, equal-weighted cosines",
@@ -118,10 +123,15 @@ class Hac(Plain):
     source: ClassVar[str] = "lazarus-2018"
 
     def working(self, fits: Fits) -> ErrorModel | None:
-        """The AR(1) of the residuals, or None where these data cannot carry one."""
+        """The AR(1) of the residuals, under row noise where they ask for it; None where none can be had."""
         if "serial" not in fits.components or self.kernel == "bartlett":
             return None
-        return fits[{"serial"}]
+        model = fits[{"serial"}]
+        noisy = under_noise(fits) if self.law == "exact" and fits.design.n <= EXACT_ROWS else None
+        if noisy is None:
+            return model
+        rho, noise = (np.array([noisy[name]]) for name in ("rho", "noise"))
+        return replace(model, shape={**model.shape, "serial.rho": rho, "serial.noise": noise})
 
     def prepare(self, design: Design, working: ErrorModel | None) -> LongRunReady | KernelReady:
         positive_m(design)
@@ -137,9 +147,10 @@ class Hac(Plain):
             fixed = self.law == "fixed-b"
             return _kernel(design, grid, names, W, self.bandwidth, fixed, self.corrected, notes)
         rho, said = _working_rho(working)
+        noise = float(working.shape["serial.noise"][0]) if _noisy(working) else 0.0
         laws: tuple[RatioLaw, ...] = ()
         if self.law == "exact" and design.n <= EXACT_ROWS:
-            laws = _exact_laws(design, grid, W, rho)
+            laws = _exact_laws(design, grid, W, rho, noise)
             df, rule = np.array([law.df for law in laws]), "exact cosine law"
         else:
             df, rule = np.full(len(names), _block_df(grid)), "ν cosines"
@@ -153,6 +164,7 @@ class Hac(Plain):
             grid=grid,
             nu=_block_df(grid),
             rho=rho,
+            noise=noise,
             laws=laws,
         )
 
@@ -239,8 +251,19 @@ def _working_rho(working: ErrorModel | None) -> tuple[float, tuple[str, ...]]:
     return held, (f"The fitted correlation of {rho:.4f} is held at {held} in the law of t.",)
 
 
-def _exact_laws(design: Design, grid: Grid, W: Array, rho: float) -> tuple[RatioLaw, ...]:
-    """Per reported row, the law of (a'ε)²/‖F'ε‖², a = Qw, F = MD_aC, under Ω = AR(1) with ρ."""
+def _noisy(working: ErrorModel | None) -> TypeGuard[ErrorModel]:
+    return working is not None and "serial.noise" in working.shape
+
+
+def _correlate(grid: Grid, block: Array, rho: float, noise: float) -> Array:
+    """ΩH of a first-order process that holds 1 − noise of the variance, the rest row noise."""
+    return (
+        (1 - noise) * grid.correlate(block, rho) + noise * block if noise > 0 else grid.correlate(block, rho)
+    )
+
+
+def _exact_laws(design: Design, grid: Grid, W: Array, rho: float, noise: float = 0.0) -> tuple[RatioLaw, ...]:
+    """Per reported row, the law of (a'ε)²/‖F'ε‖², a = Qw, F = MD_aC, under Ω = AR(1) with ρ and row noise."""
     q = int(grid.counts.sum())
     memory(8.0 * design.n * q * 4, f"the exact law with {q} cosines")
     C = grid.cosines()
@@ -250,6 +273,6 @@ def _exact_laws(design: Design, grid: Grid, W: Array, rho: float) -> tuple[Ratio
         F = a[:, None] * C
         F -= design.Q @ (design.Q.T @ F)
         H = np.column_stack([a, F])
-        G = H.T @ grid.correlate(H, rho)
+        G = H.T @ _correlate(grid, H, rho, noise)
         laws.append(RatioLaw.of((G + G.T) / 2))
     return tuple(laws)

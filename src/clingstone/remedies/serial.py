@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
+from collections.abc import Mapping
 from dataclasses import dataclass, field
 from typing import TYPE_CHECKING, ClassVar, Literal
 
@@ -181,6 +182,22 @@ class FadingReady(ProcessReady):
     @property
     def sources(self) -> str:
         return "jones-1980, patterson-thompson-1971, satterthwaite-1946"
+
+
+def under_noise(fits: Fits) -> Mapping[str, float] | None:
+    """ρ and share of row noise of a fading process under row noise, where column 0 asks for it; else None.
+
+    A slow process under noise is no first-order process: fitted as one its ρ falls between the two, and
+    says too little of how far it reaches.
+    """
+    design = fits.design
+    if design.n > NOISE_ROWS or _series(design).ties:
+        return None
+    response = fits.response if fits.response.B == 1 else fits.response.column(0)
+    noisy: Process = Fading(design, noise=True)
+    plain, found = search(Fading(design), response), search(noisy, response)
+    asked = plain.value - found.value > NOISE_ASKED and not found.at_bound[1]
+    return noisy.shape(found.theta) if asked else None
 
 
 @dataclass(frozen=True)
