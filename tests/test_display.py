@@ -255,6 +255,6 @@ def test_empty_columns_go_and_others_stay():
 def test_joiners_that_belong_to_the_spelling_stay_and_turners_of_the_line_go():
     from clingstone.display import clean
 
-    joined = "\u0645\u06cc\u200c\u0634\u0648\u062f \U0001f469\u200d\U0001f33e"  # Persian "it becomes"; a farmer
+    joined = "\u0645\u06cc\u200c\u0634\u0648\u062f \U0001f469\u200d\U0001f33e"  # a Persian verb; a farmer
     assert clean(joined) == joined
     assert clean("a\u202eb\u2066c") == "a\ufffdb\ufffdc"

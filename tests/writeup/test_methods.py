@@ -155,8 +155,8 @@ def test_a_coefficient_knows_its_term(coefficient, term):
 def test_the_error_model_is_written_out_as_an_equation():
     text = methods_text(fixture.trial()).replace("\u00a0", " ")
     assert (
-        "As an equation: pressure = b0 + b1 (arm: treated) + b2 (age) + u[clinic] + e, where u[clinic] is one "
-        "normal draw for each clinic; e is independent normal noise of single rows."
+        "As an equation: pressure = b0 + b1 (arm: treated) + b2 (age) + u[clinic] + e, where u[clinic] is "
+        "one normal draw for each clinic; e is independent normal noise of single rows."
     ) in text
     assert "+ s[time] + e" in methods_text(fixture.stream())
     assert "+ f[place] + e" in methods_text(fixture.wells())

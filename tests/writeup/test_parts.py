@@ -17,7 +17,7 @@ from clingstone.ledger.ledger import Share
 from clingstone.rehearsal.tallies import Left, Rehearsal
 from clingstone.rehearsal.truths import Truth
 from clingstone.remedies.remedy import Convention
-from clingstone.writeup import curves, figures, rehearsed, tables
+from clingstone.writeup import curves, figures, panels, places, rehearsed, tables
 from clingstone.writeup.methods import methods_text, report_this
 from clingstone.writeup.naming import lost, noun, subject, with_rows, words_of_test
 from clingstone.writeup.outcome import tipping_words
@@ -396,3 +396,54 @@ def test_the_label_of_a_rung_is_whole_or_visibly_cut():
     assert len(lines) == 4
     assert lines[-1].endswith("…")
     assert " ".join(lines)[:-1] in f"advised: {long.name}"
+
+
+# ---- what was read, drawn --------------------------------------------------------------------
+
+
+def test_the_time_line_has_a_stroke_for_each_row_where_it_was_taken():
+    base = fixture.stream()
+    curve = replace(
+        traces(2, False), lines={"a": ((0.0, 1.0, 4.0), (1.0, 2.0, 3.0)), "b": ((2.0, 3.0), (0.0, 0.0))}
+    )
+    results = replace(base, evidence=(replace(base.evidence[0], more=(curve,)), *base.evidence[1:]))
+    plate = panels.timeline(results)
+    (panel,) = plate.paint(660).axes
+    strokes = [[float(s[0][0]) for s in c.get_segments()] for c in panel.collections]
+    assert strokes == [[0.0, 1.0, 4.0], [2.0, 3.0]]
+    assert [[c.raw for c in row] for row in plate.table.rows] == [["a", 3, 0.0, 4.0], ["b", 2, 2.0, 3.0]]
+    assert plate.caption.endswith("2021-03-01 to 2023-03-01")
+    assert "31 steps missing" in plate.alt
+    assert panels.timeline(fixture.trial()) is None
+
+
+def test_the_places_are_drawn_where_they_lie_and_it_is_said_when_not_all_are():
+    base = fixture.wells()
+    plate = places.sites(base)
+    dots = plate.paint(660).axes[0].get_lines()[0]
+    assert tuple(map(float, dots.get_xdata())) == base.case.spatial.x
+    assert tuple(map(float, dots.get_ydata())) == base.case.spatial.y
+    assert len(plate.table.rows) == 60
+    assert plate.note == ""
+    many = replace(base, case=replace(base.case, spatial=replace(base.case.spatial, sites=2500)))
+    assert places.sites(many).note == "60 of 2,500 sites are drawn"
+    assert places.sites(fixture.trial()) is None
+
+
+def test_many_rows_make_no_large_page():
+    """Figures draw a bounded number of marks: ten times the rows leave the page about as large."""
+    import pandas as pd
+
+    from clingstone.examination import examine
+
+    sizes = []
+    for groups in (50, 500):
+        rng = np.random.default_rng(3)
+        g = np.repeat(np.arange(groups), 20)
+        frame = pd.DataFrame({"g": [f"g{k}" for k in g], "t": np.tile(np.arange(20), groups)})
+        frame["x"] = rng.normal(size=len(g))
+        frame["y"] = frame["x"] + rng.normal(size=groups)[g] + rng.normal(size=len(g))
+        found = examine(frame, model="y ~ x", group="g", time="t", rehearsal="none")
+        sizes.append(len(report(found.results).encode()))
+    assert sizes[1] < 1.6 * sizes[0]
+    assert sizes[1] < 3_000_000

@@ -1,4 +1,5 @@
-"""Figures of many small parts: residuals of each series by time, and the levels of the groups as strips."""
+"""Figures of many small parts: residuals of each series by time, when its rows were taken, and the levels of
+the groups as strips."""
 
 from __future__ import annotations
 
@@ -79,6 +80,52 @@ def _trace(
     panel.plot(x, y, color=hue, linewidth=1.3 if few else 0.9, marker=m.marker if few else "", markersize=3)
     panel.set_xlim(ends[0], ends[1])
     panel.set_ylim(ends[2], ends[3])
+
+
+def timeline(results: Results) -> Plate | None:
+    """When the rows of each series were taken: a stroke for each. None where no time is known."""
+    s = results.case.serial
+    curves = (c for f in results.evidence for c in f.curves if c.kind == "traces")
+    curve = next(curves, None)
+    if s is None or curve is None:
+        return None
+    along = foot(curve, "time")
+    columns = (
+        Column("series", "series"),
+        Column("rows", "rows drawn", "right"),
+        Column("first", f"first {along}", "right"),
+        Column("last", f"last {along}", "right"),
+    )
+    rows = [
+        [Cell(name, name), Cell(number(len(x), 0), len(x)), *(Cell(f"{v:g}", v) for v in (min(x), max(x)))]
+        for name, (x, _) in curve.lines.items()
+    ]
+    missing = f"; {count(s.gaps, 'step')} missing" if s.gaps else ""
+    return Plate(
+        "timeline",
+        f"When the rows were taken: {s.first} to {s.last}",
+        f"{count(s.count, 'series')} of {s.shortest} to {s.longest} rows, {s.spacing}{missing}.",
+        Table.of("Series as drawn", columns, rows),
+        lambda width: _paint_timeline(curve, along, width),
+        note=curve.note,
+    )
+
+
+def _paint_timeline(curve: Curve, along: str, width: float) -> Figure:
+    row, left = 20.0, 0.3 * width if len(curve.lines) > 1 else 8.0
+    figure = blank(width, 6 + row * len(curve.lines) + 44)
+    panel = axes(figure, left, 6, width - left - 8, row * len(curve.lines))
+    panel.set_ylim(len(curve.lines) - 0.5, -0.5)
+    panel.set_yticks([])
+    for k, (name, (x, _)) in enumerate(curve.lines.items()):
+        panel.plot([min(x), max(x)], [k, k], color=LIGHT.faint, linewidth=1, zorder=0)
+        panel.vlines(x, k - 0.3, k + 0.3, color=LIGHT.serial, linewidth=1.4 if len(x) <= 60 else 0.7)
+        if len(curve.lines) > 1:
+            say(figure, 0, 6 + row * (k + 0.5), clip(name, left - 8, SMALL), fontsize=SMALL)
+    few_ticks(panel)
+    bottom = 6 + row * len(curve.lines) + 32
+    say(figure, width, bottom, along, ha="right", fontsize=SMALL, color=LIGHT.muted)
+    return figure
 
 
 def tree(results: Results) -> Plate | None:

@@ -7,11 +7,12 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.display import count, number, significant
+from clingstone.display import Cell, Column, Table, count, number, significant
 from clingstone.evidence.finding import Curve
 from clingstone.maths.once import Array
+from clingstone.results import Results
 from clingstone.writeup.look import LIGHT, mark
-from clingstone.writeup.plate import SMALL, axes, blank, few_ticks, many, say
+from clingstone.writeup.plate import SMALL, Plate, axes, blank, few_ticks, many, say
 from clingstone.writeup.strokes import band, ends, foot, line_words, lines, room
 
 if TYPE_CHECKING:
@@ -66,6 +67,35 @@ def _settle(figure: Figure, panel: Axes, curve: Curve, tall: float, lonlat: bool
     if lonlat:
         width = float(figure.get_size_inches()[0]) * 72
         say(figure, width, tall + 24, "north ↑", ha="right", fontsize=SMALL, color=LIGHT.muted)
+
+
+def sites(results: Results) -> Plate | None:
+    """Where the places lie, with nothing but that; None where no places are known."""
+    p = results.case.spatial
+    if p is None or not p.x:
+        return None
+    across, along = p.names
+    curve = Curve("map", p.x, p.y, x_name=across, y_name=along, unit=p.unit)
+    rows = [[Cell(f"{u:g}", u), Cell(f"{v:g}", v)] for u, v in zip(p.x, p.y, strict=True)]
+    columns = (Column(across, across, "right"), Column(along, along, "right"))
+    far = f"{significant(p.extent, 3)} {many(p.unit)}".rstrip()
+    drawn = len(p.x)
+    return Plate(
+        "sites",
+        "Where the places lie",
+        f"{count(p.sites, 'site')}, at most {far} apart.",
+        Table.of("Places as drawn", columns, rows),
+        lambda width: _paint_sites(curve, width, p.kind == "lonlat"),
+        note=f"{number(drawn, 0)} of {number(p.sites, 0)} sites are drawn" if drawn < p.sites else "",
+    )
+
+
+def _paint_sites(curve: Curve, width: float, lonlat: bool) -> Figure:
+    figure, panel, tall = _ground(curve, width, lonlat, 0)
+    small = 5.0 if len(curve.x) <= 200 else 2.5
+    panel.plot(curve.x, curve.y, mark("spatial").marker, color=LIGHT.spatial, markersize=small)
+    _settle(figure, panel, curve, tall, lonlat)
+    return figure
 
 
 def paint_map(curve: Curve, structure: str, width: float, lonlat: bool = False) -> Figure:

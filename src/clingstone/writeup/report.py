@@ -21,7 +21,8 @@ from clingstone.writeup.look import DARK, LIGHT, by_role, mark, variables
 from clingstone.writeup.methods import report_this
 from clingstone.writeup.naming import label_of, pointed_at, with_rows
 from clingstone.writeup.outcome import USUAL, alternatives, tipping_words
-from clingstone.writeup.panels import tree
+from clingstone.writeup.panels import timeline, tree
+from clingstone.writeup.places import sites
 from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
 from clingstone.writeup.read import account_pairs, advised, focus_rows, ordered, served
 from clingstone.writeup.sentences import design, model, sections, standing_words
@@ -224,11 +225,12 @@ def how_sure(results: Results) -> Iterable[str]:
 
 def _case(results: Results) -> dict[str, Any]:
     words = [" ".join(s.text for s in part(results) if not s.blank) for part in (design, model)]
-    sizes, strips = tables.groups(results), tree(results)
+    sizes = tables.groups(results)
+    drawn = (tree(results), timeline(results), sites(results))
     return {
         "case_words": words,
         "case_tables": [_table(sizes)] if sizes else [],
-        "tree": _plate(strips) if strips else None,
+        "drawn": [_plate(p) for p in drawn if p is not None],
     }
 
 

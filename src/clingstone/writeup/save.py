@@ -19,7 +19,8 @@ from clingstone.writeup.bibliography import bibtex, csl_json
 from clingstone.writeup.draft import shown
 from clingstone.writeup.latex import latex_text
 from clingstone.writeup.methods import methods_text
-from clingstone.writeup.panels import tree
+from clingstone.writeup.panels import timeline, tree
+from clingstone.writeup.places import sites
 from clingstone.writeup.plate import Plate
 from clingstone.writeup.report import report
 
@@ -74,6 +75,8 @@ def plates(results: Results) -> tuple[Plate, ...]:
         *figures.ladders(results),
         rehearsed.plate(results),
         tree(results),
+        timeline(results),
+        sites(results),
     )
     lead = [p for p in drawn if p is not None]
     return (*lead, *bandwidths.plates(results), *curves.plates(results))
