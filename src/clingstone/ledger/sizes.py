@@ -9,7 +9,7 @@ from clingstone.covariance.fits import Fits
 from clingstone.display import NBSP, significant
 from clingstone.ledger.entries import Parameter, Share
 from clingstone.ledger.region import Region
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, kept
 
 LEFT_OUT = "not kept in the model; the upper end is that of the fit with every structure"
 TIMES = ("second", "minute", "hour", "day", "week", "month", "quarter", "year")
@@ -69,10 +69,7 @@ def variance(at: Region, key: str, m: int) -> tuple[float, float, float]:
     low, estimate, high = at.interval(values)
     if not np.isfinite(estimate):
         return low, estimate, high
-    cut = special.chdtri(1, 1 - at.confidence)
-    left = np.maximum(cut - 2 * (at.model.loglik[0] - at.model.loglik), 0.0)
-    tail = special.chdtrc(1, left) / 2
-    down, up = m / special.chdtri(m, tail), m / (2 * special.gammaincinv(m / 2, tail))
+    down, up = kept(at, ("limits of the scale", m), lambda: _scale_limits(at, m))
     ends = values * np.minimum(down, 1.0), values * np.maximum(up, 1.0)
     least, most = float(np.nanmin(ends[0])), float(np.nanmax(ends[1]))
     if low > 0:
@@ -80,6 +77,14 @@ def variance(at: Region, key: str, m: int) -> tuple[float, float, float]:
     if estimate > 0:
         most = max(most, estimate * float(np.exp(np.hypot(np.log(high / estimate), np.log(up[0])))))
     return least, estimate, most
+
+
+def _scale_limits(at: Region, m: int) -> tuple[Array, Array]:
+    """(P,) each: limits of σ² over its value at each point, with what the point leaves of the ratio."""
+    cut = special.chdtri(1, 1 - at.confidence)
+    left = np.maximum(cut - 2 * (at.model.loglik[0] - at.model.loglik), 0.0)
+    tail = special.chdtrc(1, left) / 2
+    return m / special.chdtri(m, tail), m / (2 * special.gammaincinv(m / 2, tail))
 
 
 def total(at: Region) -> Array:
