@@ -10,8 +10,8 @@ REHEARSED = (
         "not-rehearsed",
         fact("advised refit not rehearsed"),
         Then("caution"),
-        "No rehearsal tried {name of the advised refit} on this design: how often its interval holds the "
-        "true value here is not known.",
+        "No rehearsal tried the advised refit ({name of the advised refit}) on this design: how often its "
+        "interval holds the true value here is not known.",
         "own",
         "convention",
     ),
