@@ -1,18 +1,8 @@
-"""Cost of order in time, as ratios within one run: python tests/benchmarks/bench_serial.py
-
-Each pair is timed next to each other, best of three, with one BLAS thread. "fit" is one statsmodels OLS fit
-of the same table.
-"""
+"""Cost of order in time: python -m tests.benchmarks bench_serial"""
 
 from __future__ import annotations
 
-import os
-
-os.environ["OPENBLAS_NUM_THREADS"] = "1"
-
-import sys
-import time
-from collections.abc import Callable
+from functools import partial
 
 import numpy as np
 import statsmodels.api as sm
@@ -21,22 +11,16 @@ from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design, Term
 from clingstone.design.response import Response
 from clingstone.evidence.portmanteau import correlations
-from clingstone.evidence.serial import DurbinWatson, form_of
+from clingstone.evidence.serial import DurbinWatson
 from clingstone.maths.basis import Basis
 from clingstone.maths.partition import Partition
-from clingstone.remedies.serial import Arma, Car1
+from clingstone.remedies.longrun import Hac
+from clingstone.remedies.refit import refit
+from clingstone.remedies.serial import Arma
 from clingstone.run import Run
 from clingstone.structure.group import Groups
 from clingstone.structure.serial import Series
-
-
-def best(work: Callable[[], object], times: int = 3) -> float:
-    out = []
-    for _ in range(times):
-        start = time.perf_counter()
-        work()
-        out.append(time.perf_counter() - start)
-    return min(out)
+from tests.benchmarks.pairs import ONE_FIT, OURS, Row, Way, in_r
 
 
 def table(n: int, series: int, p: int, gaps: bool = False, irregular: bool = False):
@@ -84,88 +68,104 @@ def bare(run: Fits, serial: Series) -> Fits:
     return Fits(Response(made, r.coef, r.residual, r.ss), Run())
 
 
-def durbin_watson() -> None:
-    test = DurbinWatson()
-    for n in (1000, 1_000_000):
-        X, y, serial = table(n, 1, 5)
-        run = fits(X, y, serial)
-        form = form_of(bare(run, serial).design, "differences")
-        e = run.response.residual[:, 0]
-        d = float(e @ form.apply(e) / run.response.ss[0])
-
-        def exact(run: Fits = run, serial: Series = serial, d: float = d) -> object:
-            from clingstone.maths.ratio import Law
-
-            made = bare(run, serial).design
-            return Law(form_of(made, "differences"), made.basis).tails(d)
-
-        mine, plain = best(exact), best(lambda X=X, y=y: sm.OLS(y, X).fit().bse)
-        print(f"Durbin–Watson, exact p, n = {n:,}: {mine * 1000:.1f} ms = {mine / plain:.2f} fit")
-        if n == 1000:
-            dense = best(lambda run=run, form=form: _dense(run, form))
-            print(f"  dense eigenvalues {dense * 1000:.0f} ms: {dense / mine:.0f} times as long")
-        whole = best(
-            lambda run=run, serial=serial: test.read(bare(run, serial), test.abouts(run.design)[0]), 1
-        )
-        print(f"  the whole reading, with its interval: {whole:.2f} s")
+MILLION = "1,000,000 rows in 50,000 series, p = 5"
 
 
-def _dense(run: Fits, form: object) -> np.ndarray:
-    Q = run.design.Q
-    M = np.eye(len(Q)) - Q @ Q.T
-    return np.linalg.eigvalsh(M @ form.S.toarray() @ M)
+def fit(X: np.ndarray, y: np.ndarray) -> Way:
+    return Way(ONE_FIT, lambda: sm.OLS(y, X).fit().bse, same=False, floor=True)
 
 
-def processes() -> None:
-    for gaps, irregular, name in (
-        (False, False, "AR(1)"),
-        (True, False, "AR(1) with gaps"),
-        (False, True, "continuous-time AR(1)"),
-    ):
-        X, y, serial = table(1_000_000, 50_000, 5, gaps, irregular)
-        run = fits(X, y, serial)
-        plain = best(lambda X=X, y=y: sm.OLS(y, X).fit().bse)
-        mine = best(lambda run=run, serial=serial: bare(run, serial)[{"serial"}], 2)
-        rho = bare(run, serial)[{"serial"}].shape["serial.rho"][0]
-        print(f"{name}, 1,000,000 rows in 50,000 series: {mine:.2f} s = {mine / plain:.1f} fit (ρ {rho:.3f})")
+def whole_reading() -> list[Way]:
+    X, y, serial = table(1_000_000, 1, 5)
+    run, test = fits(X, y, serial), DurbinWatson()
+    about = test.abouts(run.design)[0]
+    return [Way(OURS, lambda f: test.read(f, about).p, fresh=lambda: bare(run, serial)), fit(X, y)]
 
 
-def intercept() -> None:
+def process(gaps: bool, irregular: bool) -> list[Way]:
+    X, y, serial = table(1_000_000, 50_000, 5, gaps, irregular)
+    run = fits(X, y, serial)
+    ours = Way(OURS, lambda f: f[{"serial"}].shape["serial.rho"], fresh=lambda: bare(run, serial))
+    return [ours, fit(X, y)]
+
+
+def intercept() -> list[Way]:
     X, y, serial = table(20_000, 1000, 5)
     y = y + np.repeat(np.random.default_rng(1).normal(size=1000), 20)
     run = fits(X, y, serial, grouped=True)
-    mine = best(lambda: bare(run, serial)[{"group:unit", "serial"}])
-    other = best(lambda: sm.MixedLM(y, X, groups=serial.part.codes).fit(), 1)
-    print(f"intercept + AR(1), 20,000 rows in 1,000 series: {mine * 1000:.0f} ms")
-    print(f"  statsmodels MixedLM, the intercept alone: {other:.2f} s, {other / mine:.0f} times as long")
+    codes = serial.part.codes
+    return [
+        Way(
+            OURS,
+            lambda f: f[{"group:unit", "serial"}].shape["serial.rho"],
+            fresh=lambda: bare(run, serial),
+        ),
+        Way(
+            "statsmodels MixedLM, the intercept alone",
+            lambda: sm.MixedLM(y, X, groups=codes).fit().params,
+            same=False,
+        ),
+        *in_r(
+            "nlme lme, corAR1",
+            "as.numeric(coef(lme(y ~ X - 1, random = ~1 | g, correlation = corAR1(form = ~ t | g), data = d)"
+            "$modelStruct$corStruct, unconstrained = FALSE))",
+            libraries=("nlme",),
+            prepare="d <- data.frame(y = y, g = factor(g), t = as.integer(t)); d$X <- X",
+            X=X,
+            y=y,
+            g=codes.astype(float),
+            t=serial.elapsed,
+        ),
+    ]
 
 
-def autocorrelations() -> None:
+def autocorrelations() -> list[Way]:
     X, y, serial = table(1_000_000, 100, 5, gaps=True)
     run = fits(X, y, serial)
-    plain = best(lambda: sm.OLS(y, X).fit().bse)
 
-    def to_lag_40() -> object:
-        return correlations(bare(run, serial).response, 40)
+    def to_lag_40(f: Fits) -> None:
+        correlations(f.response, 40)
 
-    mine = best(to_lag_40, 2)
-    print(f"autocorrelation to lag 40 with gaps, 1,000,000 rows: {mine:.2f} s = {mine / plain:.1f} fit")
+    return [Way(OURS, to_lag_40, fresh=lambda: bare(run, serial)), fit(X, y)]
 
 
-def searches() -> None:
-    for n in (1000, 10_000):
-        X, y, serial = table(n, 1, 5)
-        for name, one in (("car1, noise looked for", Car1()), ("arma, five orders", Arma())):
-            run = fits(X, y, serial)
-            took = best(
-                lambda one=one, run=run, serial=serial: one.prepare(run.design, None).fit(bare(run, serial)),
-                1,
-            )
-            print(f"{name}, n = {n:,}: {took:.2f} s")
+def long_run() -> list[Way]:
+    X, y, serial = table(1_000_000, 50_000, 5)
+    run = fits(X, y, serial)
+    ours = Way(
+        OURS,
+        lambda f: [row.se for row in refit(Hac(), "", f).intervals],
+        fresh=lambda: bare(run, serial),
+    )
+    return [ours, fit(X, y)]
 
 
-if __name__ == "__main__":
-    chosen = sys.argv[1:]
-    for part in (durbin_watson, processes, intercept, autocorrelations, searches):
-        if not chosen or part.__name__ in chosen:
-            part()
+def search_orders(n: int, series: int, gaps: bool) -> list[Way]:
+    X, y, serial = table(n, series, 5, gaps)
+    run = fits(X, y, serial)
+    ours = Way(
+        OURS, lambda f: Arma().prepare(f.design, None).fit(f).se[:, 0], fresh=lambda: bare(run, serial)
+    )
+    return [ours, fit(X, y)]
+
+
+ROWS = (
+    Row(
+        "dw-reading", "Durbin–Watson with its interval", "1,000,000 rows in one series, p = 5", whole_reading
+    ),
+    Row("ar1", "AR(1) by REML", MILLION, partial(process, False, False)),
+    Row("ar1-gaps", "AR(1) by REML, a tenth of the steps missing", MILLION, partial(process, True, False)),
+    Row("car1", "Continuous-time AR(1) by REML", MILLION, partial(process, False, True)),
+    Row("intercept-ar1", "Random intercept and AR(1)", "20,000 rows in 1,000 series, p = 5", intercept),
+    Row("acf", "Autocorrelation to lag 40 with gaps", "1,000,000 rows in 100 series", autocorrelations),
+    Row("hac", "Long-run variance, and by bandwidth", MILLION, long_run),
+    Row(
+        "arma",
+        "ARMA, five orders by AICc",
+        "1,000 rows in 10 series",
+        partial(search_orders, 1000, 10, False),
+    ),
+    Row(
+        "arma-gaps", "ARMA, missing steps", "1,000 rows in 10 series", partial(search_orders, 1000, 10, True)
+    ),
+)
