@@ -176,7 +176,7 @@ def build(
 
 def _tied(clock: Clock, part: Partition) -> Rows:
     """Rows whose series and time an earlier row of the table has already."""
-    order = np.lexsort((np.arange(part.n), clock.counts, part.codes))
+    order = np.lexsort((clock.counts, part.codes))  # stable: equal times stay in the table's order
     again = (np.diff(part.codes[order]) == 0) & (np.diff(clock.counts[order]) == 0)
     return np.sort(order[1:][again])
 
