@@ -327,3 +327,37 @@ def test_intercept_and_process_equal_lme(name: str) -> None:
     assert model.shape["serial.rho"][0] == pytest.approx(wanted["phi"], abs=3e-4)
     sd = np.sqrt(model.variances["group:clinic"][0])
     assert sd == pytest.approx(wanted["sd_random"], rel=1e-3)
+
+
+# lm() of R 4.2.2: coefficients and standard errors of the ordinary fits that the tests above stand on.
+ORDINARY = {
+    "longley": (
+        [
+            -3482.25863459581,
+            0.0150618722713728,
+            -0.035819179292591,
+            -0.0202022980381682,
+            -0.0103322686717359,
+            -0.0511041056535792,
+            1.82915146461355,
+        ],
+        [
+            890.420383607376,
+            0.0849149257747674,
+            0.0334910077722434,
+            0.00488399681651703,
+            0.00214274163161676,
+            0.226073200069373,
+            0.455478499142213,
+        ],
+    ),
+    "lakehuron": ([580.177835497836, -0.0242011106223183], [0.22661586768772, 0.00403610790322283]),
+}
+
+
+@pytest.mark.parametrize("name", ORDINARY)
+def test_ordinary_fits_equal_lm(name: str) -> None:
+    # Longley's columns are all but dependent: an orthogonal factor keeps eight digits of them.
+    found = refit(remedy("ordinary"), "", case(name)).intervals
+    assert [row.estimate for row in found] == pytest.approx(ORDINARY[name][0], rel=1e-8)
+    assert [row.se for row in found] == pytest.approx(ORDINARY[name][1], rel=1e-8)
