@@ -374,3 +374,47 @@ def test_local_contributions_are_esdas_but_their_law_is_not() -> None:
     np.testing.assert_allclose(value * 48 / 49, theirs.Is, rtol=1e-9)  # esda divides by n − 1
     ours = 49 * (law.low + law.high) / made.m
     assert abs(ours[33] + 0.0285719804632) > 0.005
+
+
+# The 116 neighbours of Anselin (1988, Spatial Econometrics, ch. 12), by the areas' numbers NEIG: 1 borders on
+# 2, 5 and 6, and so on; each pair once.
+ANSELIN = """
+    1:2,5,6 2:3,6,7 3:4,7,37,38,39 4:37,39,40 5:6 6:7 7:8,9,18,36,38 8:18 9:18,20,32,36,38
+    10:11,17,18,19 11:12,17 12:13,17 13:14,16,17 14:15,16 15:16 16:17,23 17:18,19,21,22,23 18:19,20
+    19:20,21,31 20:31,32 21:22,31 22:23,31 23:24,25,29,31 24:25,29,30,31,33 25:26,27,29 26:27,28
+    27:28,29 28:29,30 29:30 30:31,33,34 31:32,33 32:33,34,35,36 33:34,35 34:35,43 35:36,41,42,43
+    36:37,38,40,42 37:38,39,40,42 39:40 40:41,42 41:42 43:44 44:45,46,49 45:46 46:47,48,49 47:48
+"""
+
+
+def anselin() -> tuple[Design, Array]:
+    """Columbus with the neighbours of the book, which differ from those of the polygons."""
+    made, y = case("columbus")
+    row = {int(number): i for i, number in enumerate(frame("columbus")["NEIG"])}
+    table = np.zeros((49, 49))
+    for word in ANSELIN.split():
+        one, others = word.split(":")
+        for other in others.split(","):
+            table[row[int(one)], row[int(other)]] = table[row[int(other)], row[int(one)]] = 1.0
+    assert table.sum() == 232
+    place = made.spatial.part.first  # type: ignore[union-attr]
+    W = sparse.csr_array((table / table.sum(axis=1, keepdims=True))[place][:, place])
+    return replace(made, neighbours=(Neighbours("book", "the book's", W),)), y
+
+
+def test_published_values_of_columbus() -> None:
+    # Anselin (1988) prints 5.72 and 9.36 for the two scores and 0.562 for λ; the further digits are those of
+    # spdep lm.LMtests and spatialreg errorsarlm on his neighbours.
+    one = run(*anselin())
+    expected = (5.72313094604128, 9.36368356560473, 0.0794949291325358, 3.72004754869598)
+    for kind, value in zip(("lm-error", "lm-lag", "robust-lm-error", "robust-lm-lag"), expected, strict=True):
+        found = Lagrange(kind).read(one, About("book", "book"))  # type: ignore[arg-type]
+        assert found.statistic[0] == pytest.approx(value, rel=1e-9)
+    fit = refit(SpatialError("ML", "normal"), "", one)
+    assert float(dict(fit.account.items)["λ"]) == pytest.approx(0.5617902567195, abs=1e-6)
+    np.testing.assert_allclose(
+        fit.estimate, [59.8932193875026, -0.941311974099548, -0.302250212369492], rtol=1e-6
+    )
+    np.testing.assert_allclose(
+        [r.se for r in fit.intervals], [5.36616248647578, 0.33056856667406, 0.0904760507369312], rtol=1e-6
+    )
