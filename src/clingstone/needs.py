@@ -56,6 +56,10 @@ class Limits:
     df_floor: float = 4.0
     # Below 2 the variance of a t interval's own length does not exist: no interval is advised there.
     df_least: float = 2.0
+    # Clusters in the smaller arm: below the first no resampling of clusters can be trusted, below the second
+    # it leans on equal variances in both arms (MacKinnon & Webb 2017, 2018).
+    treated_least: int = 3
+    treated_easy: int = 6
     # Serial: rows in one series, or many short ones (Krone et al. 2016; Park & Mitchell 1980).
     serial_test_rows: int = 8
     serial_test_series: int = 8

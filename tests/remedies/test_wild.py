@@ -182,6 +182,18 @@ def test_few_treated_clusters_lose_their_coefficient_or_are_told():
     assert any("Only 4 of 14 clusters" in note for note in result.notes)
 
 
+def test_thresholds_of_treated_clusters_are_limits_and_levels_are_named_with_the_one_around_them():
+    # Wards 0, 1, 2 in every district: their labels recur, so a sentence says in what.
+    X, group, y = clustered(G=12)
+    X[:, 2] = group < 4
+    run = fits(design(X, group=group % 3, outer=group // 3), y)
+    result = refit(WILD, "district/ward", run)
+    assert any("Only 4 of 12 clusters of ward within district hold" in note for note in result.notes)
+    strict = replace(WILD, at="district/ward", limits=replace(WILD.limits, treated_least=5))
+    status = str(strict.prepare(run.design, None).unusable["x2"].reason)
+    assert "only 4 of 12 clusters of ward within district" in status
+
+
 def test_an_interval_without_end_says_so():
     # Five clusters have 16 sign patterns, so p is never below 1/16 and no value can be rejected at 5 %.
     X, group, y = clustered(G=5)

@@ -132,7 +132,7 @@ class Bundle:
 
     def L(self, theta: Array) -> Array:
         """(q, q) factor of Γ over σ²; a component of zero variance has a row of zeros."""
-        return self.factors(np.asarray(theta, dtype=float)[:, None])[0]
+        return np.asarray(self.factors(np.asarray(theta, dtype=float)[:, None])[0])
 
     def factors(self, theta: Array) -> Array:
         """(K, q, q) the same at K values of θ (d, K)."""

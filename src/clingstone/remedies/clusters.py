@@ -8,15 +8,19 @@ import numpy as np
 
 from clingstone.design.design import Design, rows_of
 from clingstone.maths.partition import Partition
-from clingstone.needs import Family, NotSupported, Refusal
+from clingstone.needs import Family, Limits, NotSupported, Refusal
 from clingstone.remedies.remedy import Plain
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 WITHIN = ("same", "nests")
-FEW_TREATED = 3  # clusters in the smaller arm below which no resampling of clusters can be trusted
-SOME_TREATED = 6  # and below which it leans on equal variances (MacKinnon & Webb 2017, 2018)
+
+
+def called(design: Design, at: str) -> str:
+    """What a sentence calls the clusters: the level's own name, with the one around it where labels recur."""
+    groups = design.group
+    return groups.title(at) if groups is not None and at in groups else at
 
 
 def clusters(design: Design, at: str) -> Partition:
@@ -27,12 +31,13 @@ def clusters(design: Design, at: str) -> Partition:
         raise NotSupported(f"the design has no partition named {at!r}", f"Known: {known}.")
     if part.count < 2:
         raise NotSupported(
-            f"there is one {at}; clusters are compared with each other, so at least two are needed",
+            f"there is one {called(design, at)}; clusters are compared with each other, so at least two "
+            "are needed",
             "Use a remedy for dependence inside one series or one map, or a finer level.",
         )
     if part.count == design.n:
         raise NotSupported(
-            f"every row is a {at} of its own, so clusters hold no repeated rows",
+            f"every row is a {called(design, at)} of its own, so clusters hold no repeated rows",
             "Use heteroscedasticity-robust, which is the same thing here.",
         )
     return part
@@ -106,21 +111,23 @@ def arms(design: Design, part: Partition) -> dict[str, int]:
     return out
 
 
-def few_treated(design: Design, part: Partition, at: str) -> tuple[dict[str, Refusal], tuple[str, ...]]:
+def few_treated(
+    design: Design, part: Partition, at: str, limits: Limits
+) -> tuple[dict[str, Refusal], tuple[str, ...]]:
     """Coefficients that too few clusters carry, and sentences on those that few do."""
-    refused, notes = {}, []
+    refused, notes, level = {}, [], called(design, at)
     for name, held in arms(design, part).items():
-        if held < FEW_TREATED:
+        if held < limits.treated_least:
             refused[name] = Refusal(
-                f"only {held} of {part.count} clusters of {at} hold the rarer value of it, and resampling "
+                f"only {held} of {part.count} clusters of {level} hold the rarer value of it, and resampling "
                 "clusters says nothing about so few",
                 "Permuting what was assigned (randomisation, with assigned=), or means of each group, are "
                 "still possible.",
             )
-        elif held < min(SOME_TREATED, part.count / 2):
+        elif held < min(limits.treated_easy, part.count / 2):
             notes.append(
-                f"Only {held} of {part.count} clusters of {at} hold the rarer value of {name}: its interval "
-                "leans on equal variances in both kinds of cluster."
+                f"Only {held} of {part.count} clusters of {level} hold the rarer value of {name}: its "
+                "interval leans on equal variances in both kinds of cluster."
             )
     return refused, tuple(notes)
 

