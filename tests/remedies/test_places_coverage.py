@@ -17,7 +17,7 @@ from clingstone.evidence.finding import About
 from clingstone.evidence.lagrange import Lagrange
 from clingstone.evidence.spatial import Moran
 from clingstone.maths.once import Array
-from clingstone.remedies import remedy
+from clingstone.remedies import refit, remedy
 from tests.remedies.cases import fits
 from tests.remedies.test_places import field, mapped, y_slope
 
@@ -102,3 +102,17 @@ def test_tests_keep_their_size_on_every_map(layout: Layout) -> None:
         # χ² with 1 df is a large-sample law: at 80 places it may be off by a point and a half.
         size = np.mean(Lagrange(kind).read(one, about).p <= 0.05)  # type: ignore[arg-type]
         assert size == pytest.approx(0.05, abs=0.015 + 3.3 * np.sqrt(0.05 * 0.95 / B))
+
+
+@pytest.mark.parametrize("id", REMEDIES)
+def test_turning_the_map_its_unit_and_the_order_of_rows_change_nothing(id: str) -> None:
+    xy, X, made = world("random")
+    y = field(xy, FAR, 1, np.random.default_rng(7))[:, 0]
+    turn = np.radians(33.0)
+    moved = 1000 * xy @ np.array([[np.cos(turn), -np.sin(turn)], [np.sin(turn), np.cos(turn)]]) + 5e4
+    order = np.random.default_rng(8).permutation(len(y))
+    plain = refit(remedy(id), "", fits(made, y))
+    other = refit(remedy(id), "", fits(mapped(X[order], moved[order]), y[order]))
+    for one, two in zip(plain.intervals, other.intervals, strict=True):
+        assert (two.estimate, two.se) == pytest.approx((one.estimate, one.se), rel=1e-3)
+        assert two.df == pytest.approx(one.df, rel=1e-2)
