@@ -282,6 +282,16 @@ def test_what_costs_more_is_rehearsed_less(monkeypatch):
     assert cost.FEWEST <= fewer < cost.MOST
 
 
+def test_a_resampling_must_leave_the_others_enough_replicates(monkeypatch):
+    found = plan(wanted=(*PLAIN, ("wild-cluster-bootstrap", "clinic"))).study
+    each = cost.of_draw(found) + sum(cost.of(c, found) for c in found.contenders)
+    for room_for, kept in ((cost.GOOD - 5, [0, 1, 2]), (cost.GOOD + 5, [0, 1, 2, 3])):
+        monkeypatch.setattr(cost, "SHORT", each * len(found.truths) * room_for)
+        chosen, _, count = cost.affordable(found)
+        assert chosen == kept
+        assert count >= cost.GOOD // 50 * 50
+
+
 # ---- advice ------------------------------------------------------------------------------------
 
 

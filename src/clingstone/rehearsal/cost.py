@@ -17,6 +17,7 @@ SHORT = 2e6  # µs that a short rehearsal of a small table may take
 LONGER = 5e6  # … of a table of more than SMALL rows
 SMALL = 1000
 FEWEST = 100  # replicates per truth below which a contender is not worth starting
+GOOD = 250  # … that a search or a resampling must leave to the others, or it is not worth their precision
 MOST = 1000  # replicates per truth of a short rehearsal; the Monte-Carlo error is 0.7 points
 TOO_DEAR = "a short rehearsal has no time for it; clingstone rehearse makes a long one"
 UNKNOWN = 30_000.0  # a remedy that nobody timed
@@ -86,7 +87,8 @@ def affordable(study: Study) -> tuple[list[int], list[tuple[str, str, str]], int
     kept: list[int] = []
     left: list[tuple[str, str, str]] = []
     for i in sorted(range(len(price)), key=lambda i: (price[i], i)):
-        if (total + price[i]) * T * FEWEST <= budget:
+        own = study.contenders[i].remedy.price
+        if (total + price[i]) * T * (FEWEST if own is None else GOOD) <= budget:
             kept.append(i)
             total += price[i]
         else:
