@@ -14,7 +14,7 @@ from clingstone.covariance.components import Parameter
 from clingstone.design.design import Design
 from clingstone.maths import matern
 from clingstone.maths.markov import Links
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import memory
 from clingstone.structure.serial import Series
@@ -118,9 +118,9 @@ class SerialPiece:
     fading: bool = False
 
     @property
-    @once
     def links(self) -> Links:
-        return Links(self.series.steps)
+        """One for all designs and error models over the same series: its forms are as large as the table."""
+        return kept(self.series, ("links",), lambda: Links(self.series.steps))
 
     @property
     @once
