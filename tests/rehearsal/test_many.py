@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from clingstone.advice.choose import settle
+from clingstone.advice.choose import Advice, settle
 from clingstone.advice.facts import facts
 from clingstone.advice.shortlist import shortlist_for
 from clingstone.covariance.fits import Fits
@@ -19,14 +19,14 @@ from rehearsal.worlds import stream, trial
 from remedies.cases import ar1, design, fits
 
 
-def long_way(alone: Fits) -> Refit | None:
+def long_way(alone: Fits) -> tuple[Advice, Refit | None]:
     """What an examination without a rehearsal advises: every test, every candidate, the rules."""
     evidence = gather(alone)
     known = facts(alone, evidence, weigh(alone, evidence))
     listed = shortlist_for(known, alone)
     refits = listed.refit(alone)
     advice = settle(listed, known, refits, None)
-    return next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
+    return advice, next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
 
 
 def panel(seed: int = 4) -> Fits:
@@ -79,8 +79,12 @@ def test_a_batch_is_advised_as_its_columns_alone(kind):
     seen = set()
     with one_thread():
         for b in range(B):
+            told = many.seen(b)
             found, ordinary = many.advised(b)
-            wanted = long_way(Fits(Response.of(f.design, Y[:, b]), f.run))
+            advice, wanted = long_way(Fits(Response.of(f.design, Y[:, b]), f.run))
+            assert told.state == advice.state.removesuffix(" with caveat")
+            assert (told.structures, told.protected) == (advice.structures, advice.protected)
+            assert told.mean_in_doubt == advice.mean_in_doubt
             assert (found is None) == (wanted is None)
             assert ordinary.remedy == "ordinary"
             if found is None or wanted is None:

@@ -10,6 +10,7 @@ from __future__ import annotations
 
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, field, replace
+from typing import NamedTuple
 
 from clingstone.advice.choose import settle
 from clingstone.advice.facts import Facts
@@ -19,11 +20,12 @@ from clingstone.advice.pick import serves
 from clingstone.advice.refitted import COMPARES, compared
 from clingstone.advice.rules import PREFER, STATES
 from clingstone.advice.shortlist import Shortlist, shortlist_for
+from clingstone.advice.structures import families, needed
 from clingstone.covariance.each import each
 from clingstone.covariance.fits import Fits
 from clingstone.evidence import TESTS
 from clingstone.evidence.gather import Columns, read_columns, told
-from clingstone.ledger.ledger import focus_rows, judged
+from clingstone.ledger.ledger import Ledger, focus_rows, judged
 from clingstone.maths.once import once
 from clingstone.needs import NotSupported
 from clingstone.remedies import refit, remedy
@@ -37,6 +39,23 @@ Named = tuple[str, str]  # a remedy and its level
 # Tests that speak only in cautions: no state and no remedy hangs on them.
 ASIDE = ("cluster-level", "group-influence", "outliers", "normality", "duplicates")
 ORDINARY: Named = ("ordinary", "")
+SUPPORTED = "supported"
+
+
+class Seen(NamedTuple):
+    """What an examination says of one column.
+
+    state : as in ``Advice``, but "supported" with or without a caveat. refit : the advised one, or None.
+    ledger : with the model as it was declared. structures, protected : families, as in ``Advice``.
+    """
+
+    state: str
+    refit: Refit | None
+    ordinary: Refit
+    ledger: Ledger
+    structures: frozenset[str]
+    protected: frozenset[str]
+    mean_in_doubt: bool
 
 
 @dataclass(eq=False)
@@ -57,6 +76,11 @@ class Many:
 
     def advised(self, b: int) -> tuple[Refit | None, Refit]:
         """The refit that is advised for one column (None for none), and the ordinary one."""
+        seen = self.seen(b)
+        return seen.refit, seen.ordinary
+
+    def seen(self, b: int) -> Seen:
+        """What is read of one column, and what is advised."""
         fits = self.fits.column(b)
         evidence = told(self.columns, fits, b)
         known = gather_facts(fits, evidence, judged(fits, evidence, focus_rows(fits)))
@@ -64,11 +88,18 @@ class Many:
         ordinary = self.refit(ORDINARY, b, fits)
         assert ordinary is not None
         if state == "nothing found":
-            return ordinary, ordinary
-        if state == "not correctable":
-            return None, ordinary
-        found = None if state else self._ruled(known, b, fits)
-        return (alone(known, fits) if found is None else found), ordinary
+            found: Refit | None = ordinary
+        elif state == "not correctable":
+            found = None
+        else:
+            found = None if state else self._ruled(known, b, fits)
+            if found is None:
+                return alone(known, fits, ordinary)
+            state = SUPPORTED
+        ledger, covers = known.ledger, families(known.ledger, needed(known.ledger))
+        present = families(ledger, needed(ledger, shown=True))
+        protected = covers - present if found is not None else frozenset()
+        return Seen(state, found, ordinary, ledger, present, protected, known.says("mean in doubt"))
 
     def _ruled(self, known: Facts, b: int, fits: Fits) -> Refit | None:
         """The refit of the first rule that holds whose remedy serves every focus row."""
@@ -162,9 +193,12 @@ class Asked(dict[str, Fact]):
         return self[name]
 
 
-def alone(known: Facts, fits: Fits) -> Refit | None:
-    """The advised refit of one column, from every candidate's."""
+def alone(known: Facts, fits: Fits, ordinary: Refit) -> Seen:
+    """What is advised for one column from every candidate's refit."""
     shortlist = shortlist_for(known, fits)
     refits = shortlist.refit(fits)
     advice = settle(shortlist, known, refits, None)
-    return next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
+    found = next((r for r in refits if (r.remedy, r.at) == (advice.remedy, advice.at)), None)
+    state = SUPPORTED if advice.state.startswith(SUPPORTED) else advice.state
+    told_of = advice.structures, advice.protected, advice.mean_in_doubt
+    return Seen(state, found, ordinary, known.ledger, *told_of)
