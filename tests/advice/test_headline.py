@@ -144,6 +144,25 @@ def test_what_could_not_be_tested_is_not_called_undetected():
     )
 
 
+def test_unequal_spread_beside_what_could_not_be_tested_claims_no_test():
+    """Sixty groups of one row, or one group of sixty: nothing was looked for, so nothing is undetected."""
+    spread = {"unequal_variances": True, "what_the_spread_goes_with": "x"}
+    none = replace(ledger(group="not applicable"), detectable=(), refused=())
+    assert say.unequal(facts(none, **spread)) == (
+        "Dependence between rows could not be tested (clinic): none is ruled out. "
+        "But the residuals spread unequally with x."
+    )
+    some = replace(ledger(group="not applicable", serial="not detected"), detectable=(), refused=())
+    assert say.unequal(facts(some, **spread)) == (
+        "No dependence between rows was detected that could widen a focus interval, but the residuals "
+        "spread unequally with x. What could not be tested is not ruled out: clinic."
+    )
+    assert say.unequal(facts(replace(none, standing=()), **spread)) == (
+        "No structure was declared, so no dependence between rows could be looked for. "
+        "But the residuals spread unequally with x."
+    )
+
+
 def test_what_was_tested_and_what_was_not_are_told_apart():
     book = replace(ledger(group="not applicable", serial="not detected"), detectable=(), refused=())
     text = say.nothing(book)

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 from dataclasses import replace
 
 import pytest
@@ -33,6 +34,34 @@ def test_the_answer_leads_and_the_numbers_follow_the_advised_error():
 def test_what_cannot_be_corrected_says_why_and_what_would_be_needed():
     text = " ".join(terminal(fixture.wells()).split())
     assert "The range is half as long as the map. Sites over a wider area would be needed." in text
+
+
+def test_what_stops_every_correction_is_not_followed_by_single_refits():
+    base = fixture.wells()
+    whole = ("every correction", "the model fits every row exactly", "Needed: something left over.")
+    advice = replace(base.advice, refused=(whole, ("ordinary", "it could not be fitted to these data", "")))
+    text = " ".join(terminal(replace(base, advice=advice)).split())
+    assert "The model fits every row exactly. Needed: something left over." in text
+    assert "could not be fitted" not in text
+
+
+def test_a_row_that_a_refit_cannot_serve_shows_no_empty_interval():
+    base = fixture.trial()
+    last = base.refits[-1]
+    none = tuple(
+        replace(row, se=math.nan, df=math.nan, low=math.nan, high=math.nan, status="unusable: too few")
+        for row in last.intervals
+    )
+    text = terminal(replace(base, refits=(*base.refits[:-1], replace(last, intervals=none))))
+    assert "(no interval)" in text
+    assert "(— to —)" not in text
+
+
+def test_groups_of_a_single_row_are_counted_in_the_singular():
+    base = fixture.trial()
+    level = replace(base.case.group[0], count=60, smallest=1, largest=1)
+    text = case_line(replace(base, case=replace(base.case, group=(level,))))
+    assert "60 clinics of 1 row" in text
 
 
 def test_silent_data_say_what_they_could_have_shown():

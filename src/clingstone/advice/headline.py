@@ -32,7 +32,11 @@ def unequal(facts: Facts) -> str:
         what = f"the residuals spread unequally with {facts.text('what the spread goes with')}"
     else:
         return ""
-    return f"No dependence between rows was detected that could widen a focus interval, but {what}."
+    ledger = facts.ledger
+    if not any(_tested(s) for s in ledger.standing):
+        return f"{nothing(ledger)} But {what}."
+    rest = _not_ruled_out(ledger)
+    return f"No dependence between rows was detected that could widen a focus interval, but {what}.{rest}"
 
 
 def doubts(facts: Facts) -> list[str]:
@@ -204,17 +208,25 @@ def nothing(ledger: Ledger) -> str:
     could = [d for d in ledger.detectable if np.isfinite(d.value)]
     if not ledger.standing:
         return "No structure was declared, so no dependence between rows could be looked for."
-    untested = _untested(ledger)
-    if len(untested) == len(ledger.standing):
+    if not any(_tested(s) for s in ledger.standing):
+        untested = _untested(ledger)
         return f"Dependence between rows could not be tested ({'; '.join(untested)}): none is ruled out."
     words = [
         f"{_article(d.parameter)} {d.parameter} of {significant(d.value)} or more ({_label(ledger, d.key)})"
         for d in could
     ]
     end = f"; these data could have shown {listed(words, 'or')}" if words else ""
-    rest = f" What could not be tested is not ruled out: {'; '.join(untested)}." if untested else ""
-    rest += _without_a_size(ledger)
+    rest = _not_ruled_out(ledger) + _without_a_size(ledger)
     return f"No dependence was detected that could widen a focus interval{end}.{rest}"
+
+
+def _tested(s: Standing) -> bool:
+    return s.verdict != "not applicable"
+
+
+def _not_ruled_out(ledger: Ledger) -> str:
+    untested = _untested(ledger)
+    return f" What could not be tested is not ruled out: {'; '.join(untested)}." if untested else ""
 
 
 def _without_a_size(ledger: Ledger) -> str:
@@ -231,7 +243,7 @@ def _untested(ledger: Ledger) -> list[str]:
     """Each structure that no test could look at, with why."""
     why = dict(ledger.refused)
     out = []
-    for s in (s for s in ledger.standing if s.verdict == "not applicable"):
+    for s in (s for s in ledger.standing if not _tested(s)):
         reason = why.get(s.key, "").removeprefix(f"{s.key.removeprefix('group:')}: ").rstrip(".")
         reason = reason.replace("1 groups", "1 group") if reason.startswith("1 groups") else reason
         out.append(f"{s.label}: {reason}" if reason else s.label)

@@ -46,7 +46,9 @@ def case_line(results: Results) -> str:
     for g in case.group:
         name = noun(g)
         sizes = (
-            f" of {g.smallest} to {g.largest} rows" if g.smallest < g.largest else f" of {g.smallest} rows"
+            f" of {g.smallest} to {g.largest} rows"
+            if g.smallest < g.largest
+            else f" of {count(g.smallest, 'row')}"
         )
         parts.append(count(g.count, name) + sizes)
     if case.serial is not None:
@@ -117,6 +119,8 @@ def _block(results: Results, name: str, shown: list[tuple[Refit, Interval]], wid
 
 
 def _figures(row: Interval, places: int) -> tuple[str, str, str]:
+    if not math.isfinite(row.low) and not math.isfinite(row.high):
+        return number(row.estimate, places), "(no interval)", ""  # the reason is in the report
     df = f"{degrees(row.df)} df" if math.isfinite(row.df) else ""
     return number(row.estimate, places), f"({span(row.low, row.high, places)})", df
 
@@ -125,7 +129,8 @@ def _why(results: Results, width: int) -> list[str]:
     advice = results.advice
     said = [r.sentence for r in advice.because]
     if advice.state == "not correctable":
-        for _, why, needed in advice.refused[:2]:
+        whole = [entry for entry in advice.refused if entry[0] == "every correction"]
+        for _, why, needed in whole or advice.refused[:2]:  # single refits stand in the report
             said += [sentence(why), sentence(needed)]
     if not advice.structures:
         said += [d.sentence for d in results.ledger.detectable]
