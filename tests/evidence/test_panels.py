@@ -6,6 +6,7 @@ from typing import Any
 
 import numpy as np
 import pytest
+from scipy import stats
 
 from clingstone.evidence import gather
 from clingstone.evidence.lagged import lagged_response, one_lag
@@ -68,6 +69,20 @@ def test_size_without_dependence(key: str, size: float) -> None:
     levels = np.repeat(rng.normal(size=(60, 1000)), 6, axis=0)
     found = SERIAL.read(fits(made, levels + spread * rng.normal(size=(360, 1000))), about(SERIAL, made, key))
     assert float(np.mean(found.p < 0.05)) == pytest.approx(0.05, abs=0.02 if size == 0.05 else 0.03)
+
+
+def test_sums_of_the_series_are_read_by_the_t_of_one_sample() -> None:
+    """Outside: scipy's ttest_1samp of the sums; with 10 series the size is then that of the level."""
+    rng = np.random.default_rng(7)
+    made = panel(10, 12, rng)
+    run = fits(made, rng.normal(size=(120, 4000)))
+    found = SERIAL.read(run, about(SERIAL, made, ROBUST))
+    forward, backward, rows = windows(within_series(run.response))
+    sums = np.stack([(forward * backward)[rows // 12 == s].sum(axis=0) for s in range(10)])
+    outside = stats.ttest_1samp(sums, 0.0)
+    assert found.statistic == pytest.approx(outside.statistic)
+    assert found.p == pytest.approx(outside.pvalue)
+    assert float(np.mean(found.p <= 0.05)) == pytest.approx(0.05, abs=4 * np.sqrt(0.05 * 0.95 / 4000))
 
 
 def test_power_and_the_blindness_it_owns_up_to() -> None:

@@ -112,7 +112,8 @@ def _robust(response: Response, confidence: float, alternative: Alternative) -> 
         )
     lost = degenerate(response)
     with np.errstate(divide="ignore", invalid="ignore"):
-        t = product.sum(axis=1) / np.sqrt(np.sum(product**2, axis=1))
+        # One-sample t: about their mean, for about zero a large sum would hold down its own t (t² ≤ N).
+        t = product.sum(axis=1) / np.sqrt(N * product[:, used].var(axis=1, ddof=1))
         slope = product.sum(axis=1) / square.sum(axis=1)
         rest = product - slope[:, None] * square
         se = np.sqrt(np.sum(rest**2, axis=1)) / square.sum(axis=1)
