@@ -10,6 +10,7 @@ from clingstone.advice import order, smooth
 from clingstone.advice.choose import settle, shortlist_for
 from clingstone.advice.facts import facts
 from clingstone.evidence import gather
+from clingstone.evidence.whitened import whitened
 from clingstone.ledger.ledger import weigh
 from clingstone.run import one_thread
 from tests.advice import synthetic
@@ -86,7 +87,7 @@ def test_whitened_residuals_are_those_of_the_process_written_out():
     fits = make.fits(
         make.design({"x": rng.standard_normal(60)}, tick=np.arange(60)), make.ar1(rng, 1, 60, 0.6)
     )
-    white = order.whitened(fits).residual[:, 0]
+    white = whitened(fits, frozenset({"serial"})).residual[:, 0]
     rho = float(fits[{"serial"}].shape["serial.rho"][0])
     V = rho ** np.abs(np.subtract.outer(np.arange(60), np.arange(60)))
     Q, y = fits.design.Q, fits.design.Q @ fits.response.coef[:, 0] + fits.response.residual[:, 0]
@@ -99,6 +100,32 @@ def test_a_first_order_that_does_not_fit_gives_way_to_the_long_run_variance():
     rng = np.random.default_rng(9)
     e = noisy(rng, 300, 1)[:, 0]
     advice = advise(make.fits(make.design({"x": make.ar1(rng, 1, 300, 0.5)}, tick=np.arange(300)), e))
+    assert advice.remedy == "hac"
+    assert advice.because[-1].rule == "another-order-in-time"
+
+
+def test_a_spread_that_dependence_feigns_steers_nothing():
+    """Squares of AR(1) errors move as slowly as the predictor: seen alone, gone given the order in time."""
+    rng = np.random.default_rng(0)
+    n, x = 400, np.cos(2 * np.pi * np.arange(400) / 400)
+    feigned = 0
+    for _ in range(12):
+        fits = make.fits(make.design({"x": x}, tick=np.arange(n)), make.ar1(rng, 1, n, 0.7))
+        with one_thread():
+            evidence = gather(fits)
+            found = facts(fits, evidence, weigh(fits, evidence))
+        alone = [f for f in evidence if f.test == "heteroscedasticity" and not f.given]
+        if min(f.p for f in alone) * len(alone) < 0.05:
+            feigned += 1
+            assert not found.says("unequal variances")
+    assert feigned >= 2
+
+
+def test_a_spread_that_is_there_shows_given_the_dependence_too():
+    rng = np.random.default_rng(5)
+    n, x = 400, np.cos(2 * np.pi * np.arange(400) / 400)
+    y = np.exp(0.4 * x) * make.ar1(rng, 1, n, 0.7)
+    advice = advise(make.fits(make.design({"x": x}, tick=np.arange(n)), y))
     assert advice.remedy == "hac"
     assert advice.because[-1].rule == "another-order-in-time"
 

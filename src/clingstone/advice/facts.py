@@ -225,10 +225,9 @@ def _consequence_facts(ledger: Ledger, focus: tuple[str, ...], material: tuple[f
 
 
 def _evidence_facts(evidence: Evidence) -> list[Fact]:
-    pairs = {"outlying rows": "outliers", "common shocks": "common-shocks"}
     out = [*_spread_facts(evidence), *_slope_facts(evidence), *_clock_facts(evidence), *_together(evidence)]
-    for name, test in pairs.items():
-        finding = evidence.get(test)
+    far, shocks = _told(evidence, "outliers")[0], evidence.get("common-shocks")
+    for name, finding in (("outlying rows", far[0] if far else None), ("common shocks", shocks)):
         if finding is not None and finding.verdict != "not applicable":
             out.append(yes(name, finding.verdict == "present", finding.sentence))
     copies = evidence.get("duplicates")
@@ -239,8 +238,12 @@ def _evidence_facts(evidence: Evidence) -> list[Fact]:
 
 
 def _told(evidence: Evidence, test: str) -> tuple[list[Finding], Finding | None]:
-    """The readings of a test with a p, and the clearest where its p times their number is below 0.05."""
+    """The readings of a test with a p, and the clearest where its p times their number is below 0.05.
+
+    Those given the dependence stand for those alone, which dependence can disturb.
+    """
     found = [f for f in evidence if f.test == test and np.isfinite(f.p)]
+    found = [f for f in found if f.given] or found
     best = min(found, key=lambda f: f.p, default=None)
     return found, best if best is not None and best.p * len(found) < LEVEL else None
 

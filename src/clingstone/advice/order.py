@@ -13,7 +13,7 @@ from clingstone.display import number, p_value
 from clingstone.evidence.autocorrelation import lag_products
 from clingstone.evidence.lagged import lagged_response
 from clingstone.evidence.portmanteau import LATER
-from clingstone.maths import reml
+from clingstone.evidence.whitened import whitened
 from clingstone.maths.once import Array
 
 LEVEL = 0.05
@@ -41,22 +41,12 @@ def order_facts(fits: Fits) -> list[Fact]:
     return out
 
 
-def whitened(fits: Fits) -> Response:
-    """Residuals of the AR(1) fit, freed of it."""
-    node = frozenset({"serial"})
-    design, theta = fits.design, fits[node].theta[:, 0]
-    delta = reml.reduced(fits.algebra(node).gram(theta, fits.response))[0][:, 0]
-    e = fits.response.residual[:, 0] - design.Q @ delta
-    white = fits.algebra(node).whiten(theta, e[:, None])
-    return Response(design, np.zeros((design.p, 1)), white, np.sum(white**2, axis=0))
-
-
 def left_over(fits: Fits) -> float:
     """p of Ljung and Box's statistic of the whitened residuals: few lags and many, the smaller times two.
 
     χ² with one df less than lags, for the correlation that was fitted (Box & Pierce 1970).
     """
-    response = whitened(fits)
+    response = whitened(fits, frozenset({"serial"}))
     longest = int(_sizes(response.design).max())
     looks = sorted({k for k in (min(FEW, longest // 4), min(LATER, longest // 4)) if k > 1})
     if not looks:

@@ -15,6 +15,7 @@ from clingstone.design.response import Response
 from clingstone.display import bounds, count, decimals_for, number, p_value, significant
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.read import Plain, degenerate, normal_quantile
+from clingstone.evidence.whitened import whitened
 from clingstone.maths.once import Array, once
 from clingstone.needs import Family, Needs, NotSupported
 
@@ -28,14 +29,32 @@ ALPHA = 0.05  # of Bonferroni's bound, for the rows that are named
 MOST_NAMED = 20
 
 
+class GivenAll(Plain):
+    """A test that takes the rows as independent; read again on what the joint error model leaves of them.
+
+    Squares of dependent residuals go together as the residuals do, so along anything that moves as slowly
+    a spread seems to change; and a skewness of few independent pieces of information is seldom small.
+    """
+
+    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
+        node = fits.full_node
+        return (node,) if node and fits.design.known else ()
+
+
+def _seen(fits: Fits, given: frozenset[str]) -> Response:
+    """The residuals that a test reads: as they are, or freed of the dependence that is given."""
+    return whitened(fits, given) if given and not degenerate(fits.response).all() else fits.response
+
+
 @dataclass(frozen=True)
-class Heteroscedasticity(Plain):
+class Heteroscedasticity(GivenAll):
     """Koenker's studentised Breusch–Pagan statistic on fitted values or on one covariate.
 
     n R² of e² on the variable; also on the variable and its square, which sees a spread that is larger
     at both ends than in the middle (White 1980, with few df). The size is the ratio of residual standard
     deviations between the upper and the lower fifth of the rows by that variable; its interval uses
-    Var ln s² ≈ (kurtosis − 1)/rows. Dependence can disturb it: a screen, not a verdict.
+    Var ln s² ≈ (kurtosis − 1)/rows. Given the dependence it is read on whitened residuals, whose squares are
+    independent; alone, dependence can disturb it: a screen, not a verdict.
     """
 
     id: str = "heteroscedasticity"
@@ -57,11 +76,11 @@ class Heteroscedasticity(Plain):
         )
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
-        design, response = fits.design, fits.response
+        design, response = fits.design, _seen(fits, given)
         squared = about.key.endswith(SQUARE)
         z = _variable(response, about.key.removesuffix(SQUARE))
         e2 = response.residual**2
-        lost = degenerate(response) | (np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0))
+        lost = degenerate(fits.response) | (np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0))
         if lost.all():
             raise NotSupported(f"{about.words} do not vary beyond rounding, or nothing is left over")
         e2 = np.where(lost, np.nan, e2)
@@ -145,11 +164,12 @@ def _spread_ratio(e: Array, z: Array, quantile: float) -> tuple[Array, Array, Ar
 
 
 @dataclass(frozen=True)
-class Outliers(Plain):
+class Outliers(GivenAll):
     """The largest externally studentised residual, with Bonferroni's p.
 
     t_i = r_i √((m − 1)/(m − r_i²)), r_i = e_i/(s √(1 − h_i)); t with m − 1 degrees of freedom. The
-    size is r_i, the residual in residual standard deviations.
+    size is r_i, the residual in residual standard deviations. Given the dependence: of whitened residuals,
+    each row against what the others say of it, with the h_i of the ordinary fit.
     """
 
     id: str = "outliers"
@@ -164,11 +184,11 @@ class Outliers(Plain):
         return (About("", "all rows"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
-        design, response = fits.design, fits.response
+        design, response = fits.design, _seen(fits, given)
         free = 1.0 - design.basis.leverage
         usable = free > 1e-8  # a row with leverage 1 has no residual of its own
         e = response.residual[usable] / np.sqrt(free[usable])[:, None]
-        lost = degenerate(response)
+        lost = degenerate(fits.response)
         r = e / np.sqrt(np.where(lost, np.nan, response.s2))
         place = np.argmax(np.abs(np.nan_to_num(r)), axis=0)
         most = r[place, np.arange(response.B)]
@@ -208,7 +228,7 @@ def _far(rows: npt.NDArray[np.int64], r: Array, m: int) -> tuple[int, ...]:
 
 
 @dataclass(frozen=True)
-class Normality(Plain):
+class Normality(GivenAll):
     """Skewness and kurtosis of the residuals at once (D'Agostino & Pearson 1973); only a screen.
 
     Residuals are nearer to normal than errors, and the tests for dependence hold for heavy tails that
@@ -227,8 +247,8 @@ class Normality(Plain):
         return (About("", "all rows"),)
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
-        response = fits.response
-        lost = degenerate(response)
+        response = _seen(fits, given)
+        lost = degenerate(fits.response)
         e = np.where(lost, np.nan, response.residual)
         with np.errstate(divide="ignore", invalid="ignore"):
             skew = np.asarray(stats.skew(e, axis=0))

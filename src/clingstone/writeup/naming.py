@@ -135,5 +135,6 @@ def with_rows(results: Results, words: str, rule: str) -> str:
     """A caution with the rows that it is about, where findings name them."""
     if rule != "outlying-rows":
         return words
-    found = next((f for f in results.evidence if f.test == "outliers" and f.rows), None)
+    named = (f for f in results.evidence if f.test == "outliers" and f.rows)
+    found = max(named, key=lambda f: len(f.given), default=None)  # given the dependence, where it was fitted
     return words if found is None else f"{words.rstrip(' .')} ({pointed_at(results, found)})."
