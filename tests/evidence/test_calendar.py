@@ -8,6 +8,7 @@ from typing import Any
 import numpy as np
 import pytest
 
+from clingstone.evidence import breaks
 from clingstone.evidence.autocorrelation import lag_products, partial
 from clingstone.evidence.breaks import Break, steps
 from clingstone.evidence.season import Season, cycles, fisher_tail, ordinates, with_season
@@ -161,7 +162,7 @@ def test_largest_f_equals_a_loop_over_times() -> None:
         big = np.column_stack([small, np.arange(50) >= tau])
         rest = float(np.linalg.lstsq(big, y, rcond=None)[1][0])
         F.append((rss - rest) / (rest / 47))
-    assert steps(made)[1] == pytest.approx(np.arange(8, 43))
+    assert steps(made).times == pytest.approx(np.arange(8, 43))
     assert found.statistic[0] == pytest.approx(max(F))
 
 
@@ -193,6 +194,36 @@ def test_a_step_is_found_where_it_is() -> None:
     same = STEP.read(fits(made, 4 - 3 * y), STEP.abouts(made)[0])
     assert same.statistic == pytest.approx(found.statistic)
     assert same.p == pytest.approx(found.p)
+
+
+def test_steps_given_the_order_are_least_squares_of_freed_rows(monkeypatch: pytest.MonkeyPatch) -> None:
+    """Against dense V̂⁻¹ with the column of each step written out; block by block as at once."""
+    rng = np.random.default_rng(17)
+    who, time = np.repeat(np.arange(6), 20), np.tile(np.arange(20), 6)
+    made = design(rng.normal(size=120), time=time, who=who)
+    run = fits(made, ar1(0.5, (120,), rng))
+    where, given = STEP.abouts(made)[0], frozenset({"serial"})
+    found = STEP.read(run, where, given)
+    V = run.algebra(given).dense(run[given].theta[:, 0])
+    assert made.serial is not None
+    y = run.response.residual[:, 0]
+
+    def left(X: np.ndarray) -> float:
+        W = np.linalg.inv(V)
+        r = y - X @ np.linalg.solve(X.T @ W @ X, X.T @ W @ y)
+        return float(r @ W @ r)
+
+    rss = left(made.Q)
+    rest = [
+        left(np.column_stack([made.Q, made.serial.elapsed >= tau]))
+        for tau in range(3, 18)  # 15 % on either side
+    ]
+    assert steps(made).times == pytest.approx(np.arange(3, 18))
+    assert found.statistic[0] == pytest.approx(max((rss - r) / (r / 117) for r in rest), rel=1e-9)
+    monkeypatch.setattr(breaks, "BLOCK", 160)
+    again = STEP.read(run, where, given)
+    assert again.statistic == pytest.approx(found.statistic, rel=1e-10)
+    assert again.p == found.p
 
 
 def test_too_few_times_for_a_step() -> None:

@@ -3,18 +3,23 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, NamedTuple
 
 import numpy as np
 import numpy.typing as npt
 
+from clingstone.covariance.algebras import Layered
+from clingstone.covariance.pieces import SerialPiece
 from clingstone.design.derived import balanced, extend
 from clingstone.design.design import Design
+from clingstone.design.response import Response
 from clingstone.display import amount, number, p_value, percent, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, degenerate, exceedance, floats
 from clingstone.evidence.serial import series_of
-from clingstone.maths.once import Array, once
+from clingstone.maths.markov import Links
+from clingstone.maths.once import Array, frozen, once
+from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -25,6 +30,8 @@ Places = npt.NDArray[np.intp]
 TRIM = 0.15  # share of the rows kept on either side of a step (Andrews 1993, Econometrica 61:821)
 TIMES = 60  # times looked at, at even numbers of rows
 DRAWS = 999
+HELD = 1e-6  # part of a step's length below which the model holds its level already
+BLOCK = 2_000_000  # numbers of a block of rows
 
 
 @dataclass(frozen=True)
@@ -51,13 +58,8 @@ class Break(Plain):
         return (frozenset({"serial"}),) if "serial" in fits.components else ()
 
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
-        D, times = steps(fits.design)
-        Q, E = fits.design.Q, fits.response.residual
-        if given:
-            if fits.response.B > 1:
-                raise NotSupported("each column of y has dependence of its own")
-            Q, D, E = _freed(fits, given, D)
-        F, size, at, drawn = _largest(fits, Q, D, E, "given" if given else "alone")
+        times = steps(fits.design).times
+        F, size, at, drawn = _largest(fits, _moments(fits, given), "given" if given else "alone")
         lost = degenerate(fits.response)
         F = np.where(lost, np.nan, F)
         p = np.array([exceedance(F, drawn)]).ravel()
@@ -84,8 +86,8 @@ class Break(Plain):
     def curve(self, fits: Fits, about: About) -> Curve | None:
         if bool(degenerate(fits.response)[0]):
             return None
-        D, times = steps(fits.design)
-        F = _statistics(fits.design.Q, D, fits.response.residual)[0][:, 0]
+        times = steps(fits.design).times
+        F = _f(_moments(fits))[0][:, 0]
         series = series_of(fits.design)
         return Curve(
             kind="function",
@@ -104,73 +106,143 @@ class Break(Plain):
         )
 
 
+@dataclass(frozen=True, eq=False)
+class Steps:
+    """Columns √ω 1(t ≥ τ_k), k = 1 … K, that are never all written out.
+
+    times (K,) : τ. passed (n,) : how many of the τ a row has reached. cross (p, K) : Q'D.
+    """
+
+    design: Design
+    times: Array
+    passed: npt.NDArray[np.int16]
+    cross: Array
+
+    @property
+    def count(self) -> int:
+        return len(self.times)
+
+    def sums(self, values: Array) -> Array:
+        """D'values : (n,) → (K,), (n, k) → (K, k)."""
+        return _reached(self.design, self.passed, self.count, values)
+
+    def rest(self, rows: slice) -> Array:
+        """Some rows of MD."""
+        D = (self.passed[rows, None] > np.arange(self.count)).astype(float)
+        if self.design.root is not None:
+            D *= self.design.root[rows, None]
+        D -= self.design.Q[rows] @ self.cross
+        return D
+
+
+def _reached(design: Design, passed: npt.NDArray[np.int16], K: int, values: Array) -> Array:
+    """D'values: sums over the rows that have reached each time."""
+    part = Partition("times passed", passed.astype(np.int32), tuple(str(k) for k in range(K + 1)))
+    root = 1.0 if design.root is None else design.root
+    scaled = values * (root if values.ndim == 1 else np.reshape(root, (-1, 1)))
+    return np.asarray(np.cumsum(part.sums(scaled)[:0:-1], axis=0)[::-1])
+
+
 @once
-def steps(design: Design) -> tuple[Array, Array]:
-    """(n, K) columns 1(t ≥ τ) on the scale of the basis, less those the model spans, and τ (K,)."""
+def steps(design: Design) -> Steps:
+    """The times at which a step is looked for, those left out whose level the model holds already."""
     time = series_of(design).elapsed
-    distinct = np.unique(time)
-    share = np.searchsorted(np.sort(time), distinct) / design.n
+    distinct, rows = np.unique(time, return_counts=True)
+    share = (np.cumsum(rows) - rows) / design.n
     inner = distinct[(share >= TRIM) & (share <= 1 - TRIM)]
     if len(inner) < 3:
         raise NotSupported("too few times on which a step could have come", "5 or more would be needed.")
     if len(inner) > TIMES:
         inner = inner[np.unique(np.linspace(0, len(inner) - 1, TIMES).round().astype(int))]
-    D = (time[:, None] >= inner).astype(float)
-    if design.root is not None:
-        D = D * design.root[:, None]
-    rest = design.basis.project(D)
-    kept = np.linalg.norm(rest, axis=0) > 1e-6 * np.linalg.norm(D, axis=0)
+    passed = np.searchsorted(inner, time, side="right").astype(np.int16)
+    size = _reached(design, passed, len(inner), np.ones(design.n) if design.root is None else design.root)
+    cross = _reached(design, passed, len(inner), design.Q).T
+    kept = np.sqrt(np.maximum(size - np.sum(cross**2, axis=0), 0.0)) > HELD * np.sqrt(size)
     if not kept.any():
         raise NotSupported("the model already holds a level for every time")
-    return D[:, kept], inner[kept]
+    passed = np.append(0, np.cumsum(kept)).astype(np.int16)[passed]
+    return Steps(design, inner[kept], frozen(passed), cross[:, kept])
 
 
 def with_step(fits: Fits, given: frozenset[str] = frozenset()) -> Design:
     """The design with a step at the time that fits the first column of y best, given a dependence or not."""
-    D, times = steps(fits.design)
-    Q, E = fits.design.Q, fits.response.residual
-    if given:
-        Q, D, E = _freed(fits, given, D)
-    at = times[int(np.argmax(np.nan_to_num(_statistics(Q, D, E)[0][:, 0])))]
+    F = _f(_moments(fits, given))[0][:, 0]
+    at = steps(fits.design).times[int(np.argmax(np.nan_to_num(F)))]
     series = series_of(fits.design)
     step = balanced(fits.design, (series.elapsed >= at).astype(float))
     return extend(fits.design, f"step in {series.name}", step)
 
 
-def _freed(fits: Fits, given: frozenset[str], D: Array) -> tuple[Array, Array, Array]:
-    """Q (orthonormal again), D and e after a square root of V̂⁻¹."""
-    algebra, theta = fits.algebra(given), fits[given].theta[:, 0]
-    p = fits.design.p
-    white = algebra.whiten(theta, np.hstack([fits.design.Q, D, fits.response.residual]))
-    Q: Array = np.linalg.qr(white[:, :p])[0]
-    E = white[:, p + D.shape[1] :]
-    return Q, white[:, p : p + D.shape[1]], E - Q @ (Q.T @ E)
+class _Moments(NamedTuple):
+    """C'C (K, K), C'E (K, B) and e'e (B,) of what the model leaves of the steps and of y; m its dimension."""
+
+    CC: Array
+    CE: Array
+    EE: Array
+    m: int
 
 
-def _statistics(Q: Array, D: Array, E: Array) -> tuple[Array, Array, Array]:
-    """F (K, B), the step (K, B), and C'C of the projected columns C (K, K)."""
-    C = D - Q @ (Q.T @ D)
-    return _f(C.T @ E, np.einsum("ij,ij->j", E, E), C.T @ C, len(Q) - Q.shape[1])
+def _moments(fits: Fits, given: frozenset[str] = frozenset()) -> _Moments:
+    """As the rows are, or after a square root of V̂⁻¹."""
+    return _freed(fits, given) if given else _plain(fits.response)
 
 
-def _f(u: Array, ss: Array, CC: Array, m: int) -> tuple[Array, Array, Array]:
-    size = np.diag(CC)[:, None]
+@once
+def _plain(response: Response) -> _Moments:
+    design, D = response.design, steps(response.design)
+    # A row that has reached the later of two times has reached both.
+    size = D.sums(np.ones(design.n) if design.root is None else design.root)
+    later = np.maximum.outer(np.arange(D.count), np.arange(D.count))
+    return _Moments(
+        size[later] - D.cross.T @ D.cross, D.sums(response.residual), response.ss, design.n - design.p
+    )
+
+
+def _freed(fits: Fits, given: frozenset[str]) -> _Moments:
+    """From [Q, MD, e]'V̂⁻¹[Q, MD, e], by blocks of rows where a row is freed of the row before it alone."""
+    if fits.response.B > 1:
+        raise NotSupported("each column of y has dependence of its own")
+    design, algebra, theta = fits.design, fits.algebra(given), fits[given].theta[:, 0]
+    D, p, n = steps(design), design.p, design.n
+
+    def block(rows: slice) -> Array:
+        return np.hstack([design.Q[rows], D.rest(rows), fits.response.residual[rows]])
+
+    G = np.zeros((p + D.count + 1,) * 2)
+    piece = algebra.serial if isinstance(algebra, Layered) else None
+    if isinstance(piece, SerialPiece) and given == {"serial"}:
+        rho, size = float(piece.rho(theta)), max(1, BLOCK // len(G))
+        for start in range(0, n, size):
+            halo = int(start > 0)  # the row before comes along; what is made of it is left out again
+            links = Links(piece.links.steps[start - halo : start + size])
+            white = links.whiten(rho, block(slice(start - halo, start + size)))[halo:]
+            G += white.T @ white
+    else:
+        white = algebra.whiten(theta, block(slice(None)))
+        G += white.T @ white
+    G = G[p:, p:] - G[p:, :p] @ np.linalg.solve(G[:p, :p], G[:p, p:])
+    return _Moments(G[:-1, :-1], G[:-1, -1:], G[-1, -1:], n - p)
+
+
+def _f(moments: _Moments) -> tuple[Array, Array]:
+    """F of a step at each time (K, B), and the step (K, B)."""
+    size = np.diag(moments.CC)[:, None]
     with np.errstate(divide="ignore", invalid="ignore"):
-        gain = u**2 / size
-        return np.asarray(gain / ((ss - gain) / (m - 1))), u / size, CC
+        gain = moments.CE**2 / size
+        return np.asarray(gain / ((moments.EE - gain) / (moments.m - 1))), moments.CE / size
 
 
-def _largest(fits: Fits, Q: Array, D: Array, E: Array, purpose: str) -> tuple[Array, Array, Places, Array]:
+def _largest(fits: Fits, found: _Moments, purpose: str) -> tuple[Array, Array, Places, Array]:
     """Largest F (B,), the step there (B,), which time it is (B,), and the largest F of draws."""
-    F, step, CC = _statistics(Q, D, E)
+    F, step = _f(found)
     at, columns = np.argmax(np.nan_to_num(F), axis=0), np.arange(F.shape[1])
-    values, vectors = np.linalg.eigh(CC)
+    values, vectors = np.linalg.eigh(found.CC)
     ok = values > 1e-10 * values[-1]
     rng = fits.run.child(f"break:{purpose}")
-    m = len(Q) - Q.shape[1]
+    m = found.m
     z = rng.standard_normal((int(ok.sum()), DRAWS))
     # C'z has covariance C'C; what else of z'Mz there is, is an independent χ² of the other dimensions.
     u = (vectors[:, ok] * np.sqrt(values[ok])) @ z
     other = rng.chisquare(m - int(ok.sum()), DRAWS) if m > ok.sum() else np.zeros(DRAWS)
-    drawn = _f(u, np.sum(z**2, axis=0) + other, CC, m)[0].max(axis=0)
+    drawn = _f(_Moments(found.CC, u, np.sum(z**2, axis=0) + other, m))[0].max(axis=0)
     return F[at, columns], step[at, columns], at, drawn

@@ -15,7 +15,7 @@ from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import BY, found, level_name, moving, row_level
 from clingstone.evidence.read import Plain, degenerate
 from clingstone.maths import reference, sandwich
-from clingstone.maths.once import Array, kept
+from clingstone.maths.once import Array, kept, lately
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
 
@@ -62,7 +62,7 @@ class GroupEndogeneity(Plain):
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         if about.key.startswith(TOGETHER + BY):
             part = next(v for v, _ in row_level(fits.design) if about.key == f"{TOGETHER}{BY}{v.key}")
-            wider, columns = _all_widened(fits.design, part)
+            wider, columns = _widened(fits.design, part, None)
             name = "several predictors"
         else:
             part, term = found(fits.design, about)
@@ -165,52 +165,35 @@ def _weights(wider: Design, part: Partition, W: Array) -> sandwich.Adjusted:
     return sandwich.adjust(wider.scores(part), W, "CR2")
 
 
-def _widened(design: Design, part: Partition, term: Term) -> tuple[Design, list[int]]:
-    """The design with group means of the term, and of the others in focus; places of the term's own."""
+@lately
+def _widened(design: Design, part: Partition, term: Term | None) -> tuple[Design, list[int]]:
+    """The design with group means of the moving terms in focus that it can take; places of the tested ones.
 
-    def make() -> tuple[Design, list[int]]:
-        own = _means(design, part, term)
-        wider = extend(design, f"{term.name} between", own)
+    term : the one that is tested, whose means come first; None where all are tested at once.
+    """
+    wider, columns = design, []
+    if term is not None:
+        wider = extend(design, f"{term.name} between", _means(design, part, term))
         columns = list(range(design.p, wider.p))
-        for level, other in row_level(design):
-            if level is not part or other is term:
-                continue
-            more = _means(design, part, other)
-            if wider.p + more.shape[1] > part.count // 3:
-                continue
-            try:
-                wider = extend(wider, f"{other.name} between", more)
-            except NotSupported:
-                continue  # the model spans those means already
-        return wider, columns
-
-    return kept(design, ("between", part.key, term.name), make)
-
-
-def _all_widened(design: Design, part: Partition) -> tuple[Design, list[int]]:
-    """The design with the group means of every moving term in focus that it can take; their places."""
-
-    def make() -> tuple[Design, list[int]]:
-        wider = design
-        for level, term in row_level(design):
-            if level is not part:
-                continue
-            more = _means(design, part, term)
-            if wider.p + more.shape[1] > part.count // 2:
-                continue
-            try:
-                wider = extend(wider, f"{term.name} between", more)
-            except NotSupported:
-                continue  # the model spans those means already
+    most = part.count // (2 if term is None else 3)
+    for level, other in row_level(design):
+        if level is not part or other is term:
+            continue
+        more = _means(design, part, other)
+        if wider.p + more.shape[1] > most:
+            continue
+        try:
+            wider = extend(wider, f"{other.name} between", more)
+        except NotSupported:
+            continue  # the model spans those means already
+    if term is None:
         columns = list(range(design.p, wider.p))
         if len(columns) < 2:
             raise NotSupported(
                 f"fewer than two group means can be added beside the model at {level_name(part.key)}",
                 "More groups, or predictors whose means differ between them, would be needed.",
             )
-        return wider, columns
-
-    return kept(design, ("all between", part.key), make)
+    return wider, columns
 
 
 def _means(design: Design, part: Partition, term: Term) -> Array:

@@ -15,7 +15,7 @@ from clingstone.design.response import Response
 from clingstone.display import freedom, p_value, percent, percent_bounds, significant
 from clingstone.evidence.finding import About, Curve, Reading, column
 from clingstone.evidence.read import Plain, around, by_f, degenerate, floats
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, lately
 from clingstone.needs import Family, Needs, NotSupported
 from clingstone.structure.spatial import Sites
 
@@ -70,7 +70,7 @@ def plane(sites: Sites) -> Array:
     return np.asarray(flat / max(float(np.abs(flat).max()), 1e-300))
 
 
-@once
+@lately
 def extension(design: Design, test: str, about: str) -> Design:
     """The design with the columns at which a mean test looks: the one that a repaired mean refits.
 

@@ -14,6 +14,8 @@ Codes = npt.NDArray[np.int32]
 F = TypeVar("F", bound=Callable[..., Any])
 T = TypeVar("T")
 
+FEW_ROWS = 50_000  # up to so many rows a value of their length is kept for every argument
+
 
 def once(method: F) -> F:
     """Keep the value of a pure method under (method, keys of its arguments).
@@ -27,16 +29,41 @@ def once(method: F) -> F:
     @wraps(method)
     def looked_up(self: Any, *args: Any, **kwargs: Any) -> Any:
         store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
-        key = (
-            name,
-            *(getattr(a, "key", a) for a in args),
-            *((k, getattr(v, "key", v)) for k, v in sorted(kwargs.items())),
-        )
+        key = (name, *_keys(args, kwargs))
         if key not in store:
             store[key] = method(self, *args, **kwargs)
         return store[key]
 
     return cast(F, looked_up)
+
+
+def lately(method: F) -> F:
+    """As :func:`once`, for a value as long as the table (its first argument has ``n`` rows).
+
+    Beyond ``FEW_ROWS`` only the latest value is kept: of a table of a million rows one such value is held
+    at a time, and not one for every argument. The latest is let go before the next is made.
+    """
+    name, always = method.__qualname__, once(method)
+
+    @wraps(method)
+    def looked_up(self: Any, *args: Any, **kwargs: Any) -> Any:
+        if self.n <= FEW_ROWS:
+            return always(self, *args, **kwargs)
+        store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
+        place, key = ("latest", name), _keys(args, kwargs)
+        if store.get(place, (None,))[0] != key:
+            store.pop(place, None)
+            store[place] = key, method(self, *args, **kwargs)
+        return store[place][1]
+
+    return cast(F, looked_up)
+
+
+def _keys(args: tuple[Any, ...], kwargs: dict[str, Any]) -> tuple[Any, ...]:
+    return (
+        *(getattr(a, "key", a) for a in args),
+        *((k, getattr(v, "key", v)) for k, v in sorted(kwargs.items())),
+    )
 
 
 def kept(owner: Any, key: tuple[Hashable, ...], make: Callable[[], T]) -> T:
