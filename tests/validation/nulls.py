@@ -35,13 +35,13 @@ PRIMARY = tuple(test for test in TESTS if test.primary)
 NEST: Mapping[str, Any] = {"model": "y ~ x", "group": "a/b"}
 
 DESIGNS: tuple[w.World, ...] = (
-    w.World("12 groups of 5, x of groups", "", w.groups(12, 5, 0.0, "group"), GROUP),
-    w.World("6 unequal groups, x in rows", "", w.groups(6, 8, 0.0, "row", equal=False), GROUP),
-    w.World("40 times, x a trend", "", w.series(40, 0.0, "trend"), TIME),
-    w.World("100 times, x autoregressive", "", w.series(100, 0.0, "ar"), TIME),
-    w.World("12 series of 6 in groups, x in rows", "", w.panel(12, 6, 0.0, 0.0, "row"), PANEL),
-    w.World("60 places, x smooth", "", w.places(60, 20, 0.0, "smooth"), PLACE),
-    w.World("6 × 3 × 4 nested, x in rows", "", w.nested(6, 3, 4, 0.0, 0.0, "row"), NEST),
+    w.World("12 groups of 5, x of groups", w.groups(12, 5, 0.0, "group"), GROUP),
+    w.World("6 unequal groups, x in rows", w.groups(6, 8, 0.0, "row", equal=False), GROUP),
+    w.World("40 times, x a trend", w.series(40, 0.0, "trend"), TIME),
+    w.World("100 times, x autoregressive", w.series(100, 0.0, "ar"), TIME),
+    w.World("12 series of 6 in groups, x in rows", w.panel(12, 6, 0.0, 0.0, "row"), PANEL),
+    w.World("60 places, x smooth", w.places(60, 20, 0.0, "smooth"), PLACE),
+    w.World("6 × 3 × 4 nested, x in rows", w.nested(6, 3, 4, 0.0, 0.0, "row"), NEST),
 )
 
 

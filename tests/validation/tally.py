@@ -1,29 +1,33 @@
-"""From replicates to frequencies, coverages and widths, with their Monte-Carlo errors."""
+"""From columns of y to frequencies, coverages and widths, with their Monte-Carlo errors."""
 
 from __future__ import annotations
 
-import json
 from collections import Counter
-from collections.abc import Iterable, Mapping
+from collections.abc import Callable, Iterable, Mapping
 from dataclasses import dataclass
-from pathlib import Path
 from typing import Any
 
 import numpy as np
 
-from tests.validation.worlds import SLOPE
+from tests.validation.worlds import SLOPE, World
 
-NOMINAL = 0.95
 Z = 1.959963984540054  # the oracle knows its variance: normal quantile
 Line = Mapping[str, Any]
 
 
 @dataclass(frozen=True)
 class Share:
-    """k of n."""
+    """k of n, from designs of their own: of each, how many and of how many."""
 
-    k: int
-    n: int
+    parts: tuple[tuple[int, int], ...]
+
+    @property
+    def k(self) -> int:
+        return sum(k for k, _ in self.parts)
+
+    @property
+    def n(self) -> int:
+        return sum(n for _, n in self.parts)
 
     @property
     def value(self) -> float:
@@ -31,99 +35,142 @@ class Share:
 
     @property
     def error(self) -> float:
-        """Monte-Carlo standard error; at 0 and at n that of half a count more or less."""
+        """Monte-Carlo standard error: that of independent draws (at 0 and at n of half a count more or
+        less), or that of the designs as clusters where it is larger."""
         if not self.n:
             return float("nan")
         p = (self.k + 0.5) / (self.n + 1)
-        return float(np.sqrt(p * (1 - p) / self.n))
+        return max(float(np.sqrt(p * (1 - p) / self.n)), self._between)
 
-    def below(self, nominal: float, errors: float = 2.0) -> bool:
-        """Clearly below: by more than ``errors`` Monte-Carlo errors at the nominal value."""
-        return bool(self.n and self.value < nominal - errors * np.sqrt(nominal * (1 - nominal) / self.n))
+    @property
+    def _between(self) -> float:
+        """The standard error of a share over clusters: designs differ in what their columns share."""
+        D = len(self.parts)
+        if D < 2:
+            return 0.0
+        apart = sum((k - self.value * n) ** 2 for k, n in self.parts)
+        return float(np.sqrt(D / (D - 1) * apart) / self.n)
+
+    def below(self, wanted: float, errors: float = 2.0) -> bool:
+        """Clearly below: by more than ``errors`` Monte-Carlo errors."""
+        return bool(self.n) and self.value < wanted - errors * self.error
 
 
 @dataclass(frozen=True)
 class Tally:
-    """What a study found in one world. Coverages and widths are those of the interval of x."""
+    """What a study found in one world. Coverages and widths are those of the interval of x.
 
-    world: str
+    exact, false, missed : of the families judged present against those that are there. power : of the
+    oracle's tests of all of them. doubted : a missing part of the mean is named or in doubt. refused : no
+    interval is advised. agreed : columns on which the batch and the front door say the same.
+    """
+
+    world: World
     n: int
-    errors: tuple[str, ...]
+    designs: int
+    faults: tuple[str, ...]
     states: Mapping[str, int]
     remedies: Mapping[str, int]
     structures: Mapping[str, int]
-    cautions: Mapping[str, int]
+    exact: Share
+    false: Share
+    missed: Share
+    power: Share
+    doubted: Share
+    refused: Share
     advised: Share
     ordinary: Share
     oracle: Share
     width: float  # median of advised over ordinary
     widest: float  # its 95 % quantile
     against_oracle: float  # median of advised over oracle
-    by_remedy: Mapping[str, tuple[Share, float]]  # coverage and median width over ordinary
+    by_remedy: Mapping[str, Share]  # coverage where it was the one advised
     factor: float  # median of the ledger's estimate
     true_factor: float
     factor_held: Share  # true factor inside the ledger's interval
+    agreed: Share
+    seconds: float  # of a column
 
 
-def read(path: Path) -> dict[str, list[Line]]:
-    """Replicates by world, in the order of the file."""
-    out: dict[str, list[Line]] = {}
-    for line in path.read_text(encoding="utf-8").splitlines():
-        one = json.loads(line)
-        out.setdefault(one["world"], []).append(one)
-    return out
-
-
-def holds(row: Iterable[Any]) -> bool:
-    _, _, _, _, _, low, high, _ = row
-    return bool(low <= SLOPE <= high)
-
-
-def tally(world: str, lines: list[Line]) -> Tally:
+def tally(world: World, lines: Iterable[Line]) -> Tally:
+    """The designs of one world."""
+    lines = list(lines)
     good = [line for line in lines if "error" not in line]
-    advised, width, against = [], [], []
-    rows: dict[str, list[tuple[bool, float]]] = {}
-    ordinary, oracle, held = [], [], []
-    for line in good:
-        by = {(row[0], row[1]): row for row in line["rows"]}
-        base = by["ordinary", ""]
-        wide = base[6] - base[5]
-        truth = line["oracle"]
-        ordinary.append(holds(base))
-        oracle.append(abs(truth["estimate"] - SLOPE) <= Z * truth["se"])
-        for (remedy, at), row in by.items():
-            rows.setdefault(f"{remedy} {at}".strip(), []).append((holds(row), (row[6] - row[5]) / wide))
-        if line["factor"] is not None:
-            low, _, high = line["factor"]
-            held.append(low - 1e-9 <= truth["factor"] <= high + 1e-9)
-        row = by.get((line["remedy"], line["at"]))
-        if row is not None:
-            advised.append(holds(row))
-            width.append((row[6] - row[5]) / wide)
-            against.append((row[6] - row[5]) / (2 * Z * truth["se"]))
-    factors = [line["factor"][1] for line in good if line["factor"] is not None]
+    columns = [one for line in good for one in line["columns"]]
+    corrected = [(line, one) for line in good for one in line["columns"] if one["advised"] is not None]
+
+    def share(of: Callable[[Line], bool | None]) -> Share:
+        return _share([[of(one) for one in line["columns"]] for line in good])
+
+    width = [length(one["advised"]) / length(one["ordinary"]) for _, one in corrected]
+    against = [length(one["advised"]) / (2 * Z * line["oracle"]["se"]) for line, one in corrected]
+    held = [
+        [
+            None if one["factor"] is None else inside(one["factor"], line["oracle"]["factor"])
+            for one in line["columns"]
+        ]
+        for line in good
+    ]
+    names = {named(one) for _, one in corrected}
+    checked = [[line["agreed"]] for line in good if line["agreed"] is not None]
     return Tally(
         world=world,
-        n=len(lines),
-        errors=tuple(line["error"] for line in lines if "error" in line),
-        states=Counter(line["state"] for line in good),
-        remedies=Counter(line["remedy"] or "none" for line in good),
-        structures=Counter("+".join(line["structures"]) or "none" for line in good),
-        cautions=Counter(rule for line in good for rule in line["cautions"]),
-        advised=Share(sum(advised), len(advised)),
-        ordinary=Share(sum(ordinary), len(ordinary)),
-        oracle=Share(sum(oracle), len(oracle)),
+        n=len(columns),
+        designs=len(lines),
+        faults=tuple(line["error"] for line in lines if "error" in line),
+        states=Counter(one["state"] for one in columns),
+        remedies=Counter(one["remedy"] or "none" for one in columns),
+        structures=Counter("+".join(one["structures"]) or "none" for one in columns),
+        exact=share(lambda one: set(one["structures"]) == world.holds),
+        false=share(lambda one: not set(one["structures"]) <= world.holds),
+        missed=share(lambda one: not set(one["structures"]) >= world.holds),
+        power=_share([line["oracle"]["found"] or [] for line in good]),
+        doubted=share(lambda one: one["doubt"] or one["state"] == "mean first"),
+        refused=share(lambda one: one["state"] == "not correctable"),
+        advised=share(lambda one: holds(one["advised"])),
+        ordinary=share(lambda one: holds(one["ordinary"])),
+        oracle=_share(
+            [
+                [abs(b - SLOPE) <= Z * line["oracle"]["se"] for b in line["oracle"]["estimates"]]
+                for line in good
+            ]
+        ),
         width=_quantile(width, 0.5),
         widest=_quantile(width, 0.95),
         against_oracle=_quantile(against, 0.5),
         by_remedy={
-            k: (Share(sum(h for h, _ in v), len(v)), _quantile([w for _, w in v], 0.5))
-            for k, v in rows.items()
+            name: share(lambda one, name=name: holds(one["advised"]) if named(one) == name else None)
+            for name in sorted(names)
         },
-        factor=_quantile(factors, 0.5),
+        factor=_quantile([one["factor"][1] for one in columns if one["factor"] is not None], 0.5),
         true_factor=_quantile([line["oracle"]["factor"] for line in good], 0.5),
-        factor_held=Share(sum(held), len(held)),
+        factor_held=_share(held),
+        agreed=_share(checked),
+        seconds=sum(line["seconds"] for line in good) / max(len(columns), 1),
     )
+
+
+def named(one: Line) -> str:
+    return f"{one['remedy']} {one['at']}".strip()
+
+
+def length(interval: tuple[float, float]) -> float:
+    return interval[1] - interval[0]
+
+
+def holds(interval: tuple[float, float] | None) -> bool | None:
+    """Whether an interval holds the true coefficient; None where there is no interval."""
+    return None if interval is None else bool(interval[0] <= SLOPE <= interval[1])
+
+
+def inside(factor: tuple[float, float, float], true: float) -> bool:
+    return bool(factor[0] - 1e-9 <= true <= factor[2] + 1e-9)
+
+
+def _share(designs: Iterable[Iterable[bool | None]]) -> Share:
+    """Of the answers that are not None, how many are yes; designs without one are left out."""
+    told = ([one for one in answers if one is not None] for answers in designs)
+    return Share(tuple((sum(one), len(one)) for one in told if one))
 
 
 def _quantile(values: list[float], q: float) -> float:

@@ -28,7 +28,7 @@ def examine(frame, **arguments):
 def known(kind):
     if kind not in _KNOWN:
         draw, arguments = KINDS[kind]
-        frame, _ = w.World(kind, "", draw, arguments).table(np.random.default_rng(3))
+        frame, _ = w.World(kind, draw, arguments).table(np.random.default_rng(3))
         _KNOWN[kind] = frame, arguments, examine(frame, **arguments)
     return _KNOWN[kind]
 

@@ -4,6 +4,8 @@ In every world the coefficient of ``x`` is 0.5, so an interval for ``x`` either 
 ``V`` is the true covariance of the rows, used for the oracle (generalised least squares at V) and for
 the true standard-error factor of the ordinary fit. ``misses`` names a part of the mean that the
 declared model leaves out.
+
+A world is drawn in two steps: a design (x, sizes, places, times) and on it any number of columns of y.
 """
 
 from __future__ import annotations
@@ -21,35 +23,55 @@ Array = np.ndarray
 
 @dataclass(frozen=True)
 class Truth:
-    """One draw of a world. mean : what V does not hold, an offset beside x and the constant."""
+    """One design of a world.
+
+    mean : what V does not hold, an offset beside x and the constant. noise : draws the errors (n, B)
+    where they are not normal with covariance V. without : V with one structure left out, by family,
+    where that is not the covariance of independent rows.
+    """
 
     x: Array
     V: Array
     columns: Mapping[str, Any]
     mean: Array | float = 0.0
-    noise: Array | None = None  # errors drawn by the world itself; None to draw them from V
+    noise: Callable[[np.random.Generator, int], Array] | None = None
+    without: Mapping[str, Array] | None = None
+
+    def y(self, rng: np.random.Generator, B: int) -> Array:
+        """(n, B) columns of y."""
+        n = len(self.x)
+        if self.noise is not None:
+            e = self.noise(rng, B)
+        else:
+            e = np.linalg.cholesky(self.V + 1e-10 * np.eye(n)) @ rng.standard_normal((n, B))
+        return np.asarray((3.0 + SLOPE * self.x + self.mean)[:, None] + e)
+
+    def table(self, y: Array) -> pd.DataFrame:
+        """The user's table with one column of y."""
+        return pd.DataFrame({"y": y, "x": self.x, **self.columns})
 
 
 @dataclass(frozen=True)
 class World:
-    """A scenario. ``holds`` : families of dependence that are really there and move x."""
+    """A scenario.
+
+    holds : families of dependence that are really there. covered : whether 0.5 is what the declared
+    model estimates. wrong : whether a part of the mean is missing from it. batch : columns of y on one
+    design, fewer where each column is searched by itself.
+    """
 
     name: str
-    words: str
     draw: Callable[[np.random.Generator], Truth]
     arguments: Mapping[str, Any]
     holds: frozenset[str] = frozenset()
-    covered: bool = True  # whether 0.5 is what the declared model estimates
+    covered: bool = True
+    wrong: bool = False
+    batch: int = 50
 
     def table(self, rng: np.random.Generator) -> tuple[pd.DataFrame, Truth]:
-        """The user's table and the truth behind it."""
+        """One table of a user, and the truth behind it."""
         truth = self.draw(rng)
-        n = len(truth.x)
-        e = truth.noise
-        if e is None:
-            e = np.linalg.cholesky(truth.V + 1e-10 * np.eye(n)) @ rng.standard_normal(n)
-        y = 3.0 + SLOPE * truth.x + truth.mean + e
-        return pd.DataFrame({"y": y, "x": truth.x, **truth.columns}), truth
+        return truth.table(truth.y(rng, 1)[:, 0]), truth
 
 
 # ---- predictors and covariances ---------------------------------------------------------------
@@ -134,7 +156,11 @@ def panel(G: int, T: int, icc: float, rho: float, level: str) -> Callable[..., T
             "ar": lambda: np.concatenate([ar(rng, T, 0.7) for _ in range(G)]),
         }[level]()
         inside = np.kron(np.eye(G), toeplitz(T, rho))
-        return Truth(x, icc * same(g) + (1 - icc) * inside, {"g": [f"g{k}" for k in g], "t": t})
+        V = icc * same(g) + (1 - icc) * inside
+        without = None
+        if icc and rho:
+            without = {"group": inside, "serial": icc * same(g) + (1 - icc) * np.eye(G * T)}
+        return Truth(x, V, {"g": [f"g{k}" for k in g], "t": t}, without=without)
 
     return draw
 
@@ -186,9 +212,14 @@ def outlier(G: int, m: int) -> Callable[..., Truth]:
 
     def draw(rng: np.random.Generator) -> Truth:
         g = np.repeat(np.arange(G), m)
-        e = rng.standard_normal(len(g))
-        e[rng.integers(len(g))] += 6.0
-        return Truth(rng.standard_normal(len(g)), np.eye(len(g)), {"g": [f"g{k}" for k in g]}, noise=e)
+        n = G * m
+
+        def noise(rng: np.random.Generator, B: int) -> Array:
+            e = rng.standard_normal((n, B))
+            e[rng.integers(n, size=B), np.arange(B)] += 6.0
+            return e
+
+        return Truth(rng.standard_normal(n), np.eye(n), {"g": [f"g{k}" for k in g]}, noise=noise)
 
     return draw
 
