@@ -14,7 +14,7 @@ from clingstone.evidence.finding import About
 from clingstone.evidence.gather import gather
 from clingstone.evidence.grouplm import GroupLM, scores
 from clingstone.evidence.influence import GroupInfluence, influence
-from clingstone.evidence.levels import ClusterLevel, _reach, sums
+from clingstone.evidence.levels import ClusterLevel, _alike, _reach, sums
 from clingstone.evidence.restricted import RestrictedLR
 from clingstone.evidence.slopes import SlopeVariation, spread
 from clingstone.needs import NotSupported
@@ -157,6 +157,16 @@ def test_with_few_coarse_clusters_fine_ones_are_resampled():
         assert reading.p_method.startswith("wild bootstrap")
         rejected += bool(reading.p[0] < 0.05)
     assert rejected <= 3 + 3 * np.sqrt(60 * 0.05 * 0.95)
+
+
+def test_one_large_cluster_among_many_is_as_few():
+    """n²/Σn_g² of one cluster of 60 rows and 40 of 2 is 140²/(60² + 40·2²) = 5.2, below 20."""
+    g = np.repeat(np.arange(41), [60] + 40 * [2])
+    rng = np.random.default_rng(9)
+    made = make.design(rng.normal(size=140), groups={"g": g})
+    one = ClusterLevel().read(make.fits(made, rng.normal(size=140)), About("g over row: x1", ""))
+    assert _alike(made.group.finest) == pytest.approx(140**2 / (60**2 + 40 * 4))
+    assert one.p_method.startswith("wild bootstrap")
 
 
 def test_interval_of_the_level_comparison_is_that_of_two_variances_with_few_df():

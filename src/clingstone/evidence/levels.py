@@ -21,7 +21,7 @@ from clingstone.needs import Family, Needs, NotSupported
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
-FEW = 20  # coarse clusters below which the normal limit is replaced by a bootstrap
+FEW = 20  # coarse clusters, as many of one size, below which the normal limit is replaced by a bootstrap
 DRAWS = 399
 CHUNK = 4_000_000  # doubles of one batch of draws
 MOST_TERMS = 3
@@ -35,9 +35,10 @@ class ClusterLevel(Plain):
 
     With s_h = w'Q_h'e_h the score of fine cluster h, θ = Σ_g [(Σ_h s_h)² − Σ_h s_h²] has mean zero when fine
     clusters are independent, and variance 2Σ_g [(Σ_h s_h²)² − Σ_h s_h⁴]; one-sided (MacKinnon, Nielsen &
-    Webb 2023). With fewer than 20 coarse clusters the p comes from a wild bootstrap at the fine level. The
-    variance is the plug-in; the published refinements for small samples are not in it. The interval of
-    the ratio of standard errors is that of a ratio of two variances with their Satterthwaite df.
+    Webb 2023). With fewer than 20 coarse clusters, or as few by n²/Σn_g², the p comes from a wild bootstrap
+    at the fine level: one large cluster makes the normal limit reject too seldom. The variance is the
+    plug-in; the published refinements for small samples are not in it. The interval of the ratio of standard
+    errors is that of a ratio of two variances with their Satterthwaite df.
     """
 
     id: str = "cluster-level"
@@ -75,7 +76,7 @@ class ClusterLevel(Plain):
             z = np.where(lost | ~(variance > 0), np.nan, theta / np.sqrt(variance))
             size = np.where(lost, np.nan, np.sqrt(np.maximum(1 + theta / fine_sum, 0.0)))
         lower, upper = _reach(fits, coarse, fine, term, w)
-        few = coarse.count < FEW and fits.response.B == 1
+        few = _alike(coarse) < FEW and fits.response.B == 1
         p = _bootstrap(fits, fine, up, coarse.count, w, z) if few else special.ndtr(-z)
         return Reading(
             statistic=z,
@@ -127,6 +128,12 @@ def sums(scores: Array, up: Array, G: int) -> tuple[Array, Array, Array]:
     theta = np.sum(add(scores) ** 2 - within, axis=0)
     variance = 2 * np.sum(within**2 - add(squares**2), axis=0)
     return theta, variance, np.sum(squares, axis=0)
+
+
+def _alike(part: Partition) -> float:
+    """n²/Σn_g²: how many cells of one size are as uneven as these (Carter, Schnepel & Steigerwald 2017)."""
+    sizes = part.sizes.astype(float)
+    return float(sizes.sum() ** 2 / np.sum(sizes**2))
 
 
 def _scores(direction: Array, residual: Array, fine: Partition | None) -> Array:
