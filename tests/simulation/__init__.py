@@ -1,0 +1,1 @@
+"""Sizes and coverages by simulation, and the page that shows them."""
