@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 import pytest
 
-from clingstone.maths.markov import Links, correlation
+from clingstone.maths import markov
+from clingstone.maths.markov import Links, at_rho, correlation
 
 NAN = float("nan")
 GAPS = np.array([NAN, 1.0, 2.0, 1.0, NAN, 3.0, 1.0, NAN])
@@ -74,3 +75,21 @@ def test_many_lengths_are_told() -> None:
     steps = np.random.default_rng(0).uniform(0.5, 2, 60)
     steps[0] = NAN
     assert not Links(steps).few
+
+
+def test_lag_sums_equal_the_full_matrix_at_every_correlation(monkeypatch: pytest.MonkeyPatch) -> None:
+    rng = np.random.default_rng(3)
+    left, right = rng.normal(size=(len(GAPS), 3)), rng.normal(size=(len(GAPS), 2))
+    for block in (markov.BLOCK, 10):  # all series at once; one after the other
+        monkeypatch.setattr(markov, "BLOCK", block)
+        sums = Links(GAPS).lag_sums(left, right)
+        assert sums is not None
+        for rho in (-0.7, 0.0, 0.6, 0.9999):
+            assert at_rho(sums, rho) == pytest.approx(left.T @ full(GAPS, rho) @ right, abs=1e-12)
+
+
+def test_lags_are_not_summed_one_by_one_where_series_are_long_or_times_uneven() -> None:
+    long = np.ones(markov.SHORT + 1)
+    long[0] = NAN
+    for steps in (UNEVEN, long, np.array([NAN, 0.0, 1.0])):
+        assert Links(steps).lag_sums(np.ones((len(steps), 1)), np.ones((len(steps), 1))) is None

@@ -135,6 +135,20 @@ def test_cr2_is_unbiased_under_the_working_model():
     assert np.allclose(D - K, W.T @ W, rtol=1e-10)
 
 
+@pytest.mark.parametrize("power", ["CR0", "CR2", "CR3"])
+def test_a_series_stands_in_for_eigenvectors_where_no_cluster_holds_much(power, monkeypatch):
+    rng = np.random.default_rng(4)
+    M = sandwich.grams(np.linalg.qr(rng.normal(size=(2000, 4)))[0], Partition.of("g", np.arange(2000) % 100))
+    W = rng.normal(size=(4, 3))
+    assert 0.01 < np.einsum("gii->g", M).max() < sandwich.SLIGHT
+    short = sandwich.adjust(M, W, power)
+    monkeypatch.setattr(sandwich, "SLIGHT", 0.0)
+    long = sandwich.adjust(M, W, power)
+    assert short.a == pytest.approx(long.a, abs=1e-13)
+    assert short.b == pytest.approx(long.b, abs=1e-14)
+    assert short.lost == pytest.approx(long.lost)
+
+
 def test_factors():
     assert sandwich.cluster_factor("CR1", 5, 40, 3) == pytest.approx(5 / 4)
     assert sandwich.cluster_factor("CR1S", 5, 40, 3) == pytest.approx(5 / 4 * 39 / 37)

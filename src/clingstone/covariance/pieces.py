@@ -13,7 +13,7 @@ from scipy.spatial.distance import pdist, squareform
 from clingstone.covariance.components import Parameter
 from clingstone.design.design import Design
 from clingstone.maths import matern
-from clingstone.maths.markov import Links
+from clingstone.maths.markov import Links, at_rho
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import memory
@@ -167,7 +167,9 @@ class SerialPiece:
         rho = float(self.rho(theta))
         # At ρ = 0 the limit of (R − I)/|ρ| + I is taken just beside zero, where it is finite.
         rho = rho if abs(rho) > 1e-8 else 1e-8
-        R = self.design.Q.T @ self.links.apply(rho, self.design.Q)
+        Q = self.design.Q
+        sums = kept(self.design, ("lag sums", self.series.part.key), lambda: self.links.lag_sums(Q, Q))
+        R = Q.T @ self.links.apply(rho, Q) if sums is None else at_rho(sums, rho)
         eye = np.eye(self.design.p)
         return np.asarray((R - (1 - abs(rho)) * eye) / abs(rho))
 

@@ -18,6 +18,7 @@ from scipy.signal import lfilter
 
 from clingstone.design.design import Design
 from clingstone.maths.forms import Form
+from clingstone.maths.markov import Links, at_rho
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.maths.ratio import Law
@@ -96,27 +97,36 @@ def _means(design: Design, form: Form, swept: Partition | None, u: Array | None,
     Q = design.Q
     SQ = form.apply(Q)
     QSQ, pairs = Q.T @ SQ, float(form.S.sum())
-    q, sq = lay.spread(Q), lay.spread(SQ)
-    wide = q.reshape(len(q), -1), sq.reshape(len(sq), -1)
+    inside = _products(design, lay, np.hstack([Q, SQ]), Q)
     if u is not None:
         assert swept is not None
-        Su, along = form.apply(u), lay.spread(u[:, None])
+        Su = form.apply(u)
         s, QSu = swept.sums(u * Su), swept.sums(Q * Su[:, None])
+        # Every sum over cells of what V(ρ)u is multiplied by is a product with a vector that knows no ρ.
+        by = np.column_stack([u, Su, u * s[swept.codes], np.einsum("ij,ij->i", Q, QSu[swept.codes])])
+        along = _products(design, lay, by, u[:, None])
     out = np.empty(len(GRID))
-    for i, rho in enumerate(GRID):
-        Vq = lay.apply(q, rho).reshape(len(q), -1)
-        QVQ, SQVQ = wide[0] @ Vq.T, wide[1] @ Vq.T
+    for i in range(len(GRID)):
+        QVQ, SQVQ = inside[i, : design.p], inside[i, design.p :]
         whole = float(design.n) - float(np.trace(QVQ))
         # tr SV: every linked pair is one step apart.
-        cross = rho * pairs - 2 * float(np.trace(SQVQ)) + float(np.sum(QSQ * QVQ))
-        if u is not None and swept is not None:
-            Vu = lay.rows(lay.apply(along, rho))[:, 0]
-            v = swept.sums(u * Vu)
-            whole -= float(v.sum())
-            cross += -2 * float(Su @ Vu) + float(s @ v)
-            cross += 2 * float(np.sum(QSu * swept.sums(Q * Vu[:, None])))
-        out[i] = cross / whole - 2 * rho / design.m
+        cross = GRID[i] * pairs - 2 * float(np.trace(SQVQ)) + float(np.sum(QSQ * QVQ))
+        if u is not None:
+            uVu, SuVu, suVu, QSuQVu = along[i, :, 0]
+            whole -= uVu
+            cross += suVu - 2 * SuVu + 2 * QSuQVu
+        out[i] = cross / whole - 2 * GRID[i] / design.m
     return out
+
+
+def _products(design: Design, lay: _Layout, left: Array, right: Array) -> Array:
+    """(len(GRID), l, r) left'V(ρ)right."""
+    assert design.serial is not None
+    sums = Links(design.serial.steps).lag_sums(left, right)
+    if sums is not None:
+        return at_rho(sums, GRID)
+    flat, wide = lay.spread(left).reshape(left.shape[1], -1), lay.spread(right)
+    return np.stack([flat @ lay.apply(wide, float(rho)).reshape(len(wide), -1).T for rho in GRID])
 
 
 @dataclass(frozen=True, eq=False)
@@ -146,10 +156,6 @@ class _Layout:
         grid = np.zeros((block.shape[1], *self.shape))
         grid[:, self.series, self.step] = block.T
         return grid
-
-    def rows(self, grid: Array) -> Array:
-        """(k, series, steps) → (n, k)."""
-        return np.asarray(grid[:, self.series, self.step].T)
 
     def apply(self, grid: Array, rho: float) -> Array:
         """V(ρ) of what is laid out, V_ij = ρ^|t_i − t_j| within series."""

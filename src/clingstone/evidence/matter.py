@@ -9,6 +9,7 @@ from scipy.sparse.linalg import splu
 from clingstone.design.design import Design
 from clingstone.evidence.serial import series_of
 from clingstone.evidence.spatial import moran_form, neighbours_of, site_design
+from clingstone.maths.markov import Links, at_rho
 from clingstone.maths.once import Array, once
 
 # A correlation is scanned on this grid and the factor interpolated: it is smooth and monotone.
@@ -53,6 +54,9 @@ def group_factors(design: Design, key: str) -> Array:
 def serial_factors(design: Design) -> Array:
     """(len(GRID),) largest factor at each correlation ρ per base step, a first-order process in time."""
     series, a = series_of(design), focus_directions(design)
+    sums = Links(series.steps).lag_sums(a, a)
+    if sums is not None:
+        return _largest(np.einsum("kii->ki", at_rho(sums, GRID)))
     out = np.ones((len(GRID), a.shape[1]))
     codes = series.part.codes
     place = series.elapsed / series.step

@@ -22,6 +22,9 @@ from clingstone.maths.forms import Form
 from clingstone.maths.once import Array, once
 
 FEW_LENGTHS = 24
+SHORT = 64  # steps from the first row of a series to its last, up to which lags are summed up one by one
+SPREAD = 4  # times n: the largest grid of series × steps that is laid out
+BLOCK = 1_000_000  # numbers laid out at once
 
 
 @dataclass(frozen=True, eq=False)
@@ -117,6 +120,50 @@ class Links:
         back = linalg.solve_banded((0, 1), upper, block, check_finite=False)
         return np.asarray(linalg.solve_banded((1, 0), band, variance * back, check_finite=False))
 
+    @property
+    @once
+    def _places(self) -> npt.NDArray[np.int64] | None:
+        """(n,) whole steps since the first row of the series; None where rows share a step or lie between."""
+        length = np.where(np.isnan(self.steps), 0.0, self.steps)
+        if np.any(length != np.round(length)) or np.any(length[self.later] < 1):
+            return None
+        along = np.cumsum(length).astype(np.int64)
+        first = along[self.starts][np.cumsum(np.isnan(self.steps)) - 1]
+        return np.asarray(along - first, dtype=np.int64)
+
+    @property
+    def starts(self) -> npt.NDArray[np.int64]:
+        """First rows of the series."""
+        return np.flatnonzero(np.isnan(self.steps))
+
+    def lag_sums(self, left: Array, right: Array) -> Array | None:
+        """(K, p, q) C_k with left'R(ρ)right = Σ_k ρ^k C_k for every ρ; None where series are long.
+
+        C_k adds left_i'right_j over the rows i, j of one series that are k steps apart. Series are laid out
+        on series × steps, some at a time, and one product per block holds every lag.
+        """
+        place = self._places
+        if place is None:
+            return None
+        T, starts = int(place.max()) + 1, self.starts
+        if T > SHORT or T * len(starts) > SPREAD * self.n + 1000:
+            return None
+        p, q = left.shape[1], right.shape[1]
+        series = np.cumsum(np.isnan(self.steps)) - 1
+        ends, size = np.append(starts, self.n), max(1, BLOCK // (T * (p + q)))
+        W = np.zeros((T * p, T * q))
+        for first in range(0, len(starts), size):
+            last = min(first + size, len(starts))
+            rows = slice(ends[first], ends[last])
+            at = series[rows] - first, place[rows]
+            grid = np.zeros((last - first, T, p + q))
+            grid[at[0], at[1], :p], grid[at[0], at[1], p:] = left[rows], right[rows]
+            W += grid[:, :, :p].reshape(last - first, -1).T @ grid[:, :, p:].reshape(last - first, -1)
+        apart = np.abs(np.subtract.outer(np.arange(T), np.arange(T)))
+        out = np.zeros((T, p, q))
+        np.add.at(out, apart, W.reshape(T, p, T, q).transpose(0, 2, 1, 3))
+        return out
+
     def dense(self, rho: float) -> Array:
         """(n, n) R; for small n."""
         return self.apply(rho, np.eye(self.n))
@@ -131,3 +178,8 @@ def correlation(rho: float | Array, steps: Array) -> tuple[Array, Array]:
         odd = np.round(steps).astype(np.int64) % 2 == 1
         phi = np.where(np.logical_and.outer(rho < 0, odd), -phi, phi)
     return phi, -np.expm1(2 * log)
+
+
+def at_rho(sums: Array, rho: float | Array) -> Array:
+    """Σ_k ρ^k C_k of ``Links.lag_sums``, (p, q), or (len(ρ), p, q)."""
+    return np.asarray(np.tensordot(np.power.outer(rho, np.arange(len(sums))), sums, 1))

@@ -21,6 +21,8 @@ from clingstone.maths.partition import Partition
 
 Power = Literal["CR0", "CR2", "CR3"]
 SINGULAR = 1e-10  # 1 − λ below this: a direction of the coefficients that one cluster alone decides
+SLIGHT = 0.1  # trace of M_g below which (I − M_g)^power is summed up as a series,
+SERIES = 1e-17  # until its terms are below this
 _POWERS = {"CR0": 0.0, "CR2": -0.5, "CR3": -1.0}
 
 
@@ -66,6 +68,10 @@ def adjust(M: Array, W: Array, power: Power) -> Adjusted:
     size = np.where(size > 0, size, 1.0)
     for start in range(0, G, 4096):  # chunks keep the eigenvectors of many clusters from piling up
         part = slice(start, start + 4096)
+        most = float(np.einsum("gii->g", M[part]).max())  # no eigenvalue of M_g is above its trace
+        if most < SLIGHT:
+            a[:, part], b[:, part] = _slight(M[part], W, _POWERS[power], most)
+            continue
         values, vectors = np.linalg.eigh(M[part])
         rest = 1.0 - values
         alone = rest < SINGULAR
@@ -79,6 +85,21 @@ def adjust(M: Array, W: Array, power: Power) -> Adjusted:
         at[here > lost] = start + top[here > lost]
         lost = np.maximum(lost, here)
     return Adjusted(a, b, lost, at)
+
+
+def _slight(M: Array, W: Array, power: float, most: float) -> tuple[Array, Array]:
+    """F_g w and M_gF_g w by the binomial series of (1 − λ)^power, λ ≤ most; (k, G, p) both.
+
+    With many clusters each holds little of the basis, and a few products do for the eigenvectors.
+    """
+    term = np.broadcast_to(W, (len(M), *W.shape))
+    total, size, k = term.copy(), 1.0, 0
+    while power and size > SERIES:
+        k += 1
+        size *= most
+        term = (k - 1 - power) / k * (M @ term)
+        total += term
+    return np.moveaxis(total, 2, 0), np.moveaxis(M @ total, 2, 0)
 
 
 def cluster_variance(a: Array, S: Array) -> Array:
