@@ -387,6 +387,12 @@ def test_messages_speak_options_and_keep_to_eighty_columns(verbs: Verbs, run: Ru
         ("weights_kind='frequency'", "--weights-kind frequency"),
         ("group='a/b', or group=['a', 'b c']", '--group a/b, or --group a --group "b c"'),
         ("lonlat=False", "--no-lonlat"),
+        (
+            "confidence=95.0 is no level: confidence=0.95.",
+            "--confidence 95.0 is no level: --confidence 0.95.",
+        ),
+        ("seed=-1 is negative", "--seed -1 is negative"),
+        ("material=(0.95, 1.1) must", "--material 0.95 1.1 must"),
         ("the column time and a mean of=3", "the column time and a mean of=3"),
     ],
 )

@@ -168,7 +168,7 @@ def _assigned(values: Sequence[str] | None) -> dict[str, Any] | None:
 def in_shell(text: str) -> str:
     """A message as the shell would write it: missing='drop' is --missing drop, group= is --group."""
     known = {option.name: option for option in settings_options()}
-    value = r"'[^']*'|\"[^\"]*\"|\([^()]*\)|\[[^\[\]]*\]|\{[^{}]*\}|True|False"
+    value = r"'[^']*'|\"[^\"]*\"|\([^()]*\)|\[[^\[\]]*\]|\{[^{}]*\}|True|False|-?\d+(?:\.\d+)?"
     return re.sub(
         rf"(?<![\w-])({'|'.join(known)})=({value})?(?!=)",
         lambda found: _shell_word(known[found[1]], found[2] or ""),
@@ -181,6 +181,10 @@ def _shell_word(option: Option, value: str) -> str:
         return option.flag if value == "True" else f"--no-{option.flag[2:]}"
     if not value:
         return option.flag
+    if value[0] in "-0123456789":
+        return f"{option.flag} {value}"
+    if value[0] == "(" and not re.search("['\"]", value):
+        return " ".join([option.flag, *re.findall(r"[^(), ]+", value)])
     inside = re.findall(r"'([^']*)'|\"([^\"]*)\"", value)
     words = [a or b for a, b in inside]
     if value.startswith("{"):

@@ -31,6 +31,8 @@ def cautions(advice) -> list[str]:
         (lambda rng: rng.poisson(2.0, 60).astype(float), False, True),
         (lambda rng: 40.0 + rng.poisson(20.0, 60), False, False),  # ages
         (lambda rng: rng.standard_normal(60), False, False),
+        (lambda rng: 1e12 + rng.standard_normal(60), False, False),  # far from zero, and yet continuous
+        (lambda rng: 1e6 + (rng.random(60) < 0.3), True, False),
     ],
 )
 def test_two_values_and_counts_are_told_from_other_numbers(make_y, two, counts):

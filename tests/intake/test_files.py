@@ -305,6 +305,20 @@ def fields() -> gpd.GeoDataFrame:
     return gpd.GeoDataFrame({"y": [1.0, 2.0, 3.0], "owner": list("abc")}, geometry=shapes, crs=3035)
 
 
+def test_a_geopackage_without_a_reference_system_is_a_plane(tmp_path: Path) -> None:
+    """GDAL stores the absence as "Undefined Cartesian SRS", which cannot be turned to an equal-area map."""
+    undefined = (
+        'LOCAL_CS["Undefined Cartesian SRS",UNIT["Meter",1],AXIS["Easting",EAST],AXIS["Northing",NORTH]]'
+    )
+    fields().set_crs(undefined, allow_override=True).to_file(tmp_path / "f.gpkg")
+    assert gpd.read_file(tmp_path / "f.gpkg").crs.is_engineering
+    found = of_source(files.source(tmp_path / "f.gpkg")).holding(["owner"])
+    assert found.lonlat is False
+    assert found.unit == ""
+    assert any("reference system of the shapes is undefined" in note for note in found.notes)
+    assert any("square units" in note for note in found.notes)
+
+
 @pytest.mark.parametrize("suffix", ["gpkg", "geojson", "shp", "parquet"])
 def test_shapes_are_places_and_their_columns_are_read_when_asked_for(tmp_path: Path, suffix: str) -> None:
     path = tmp_path / f"f.{suffix}"

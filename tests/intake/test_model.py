@@ -158,6 +158,14 @@ def test_a_response_that_differs_by_rounding_only_is_not_called_equal() -> None:
         checked(made("y ~ dose", frame))
 
 
+@pytest.mark.parametrize("scale", [1e-200, 1e200])
+def test_a_response_whose_squares_leave_the_range_of_numbers_is_refused(scale: float) -> None:
+    frame = trial().assign(y=lambda d: d.y * scale)
+    with pytest.raises(InputError, match="squares of numbers of that size") as refused:
+        made("y ~ dose", frame)
+    assert refused.value.hint == "Give y in another unit."
+
+
 # ---- what is refused ----------------------------------------------------------------------------
 
 

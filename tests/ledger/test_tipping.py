@@ -98,6 +98,23 @@ def test_spline_over_the_correlation_is_the_form_worked_out_at_each(series, leng
     assert np.max(np.abs(fast.trace / slow.trace - 1)) < 1e-4
 
 
+def test_spline_over_the_correlation_holds_where_steps_are_unequal():
+    """Eleven weighings 7 days apart and one after a day: K(ρ) = ρ^(Δ/7) written out, at every ρ."""
+    day = np.array([1, 8, 15, 22, 29, 36, 43, 44, 50, 57, 64])
+    who, t = np.repeat(np.arange(8), 11), np.tile(day, 8)
+    rng = np.random.default_rng(44)
+    f = make.fits(make.design({"day": t}, series=who, tick=t), rng.standard_normal(88))
+    known = f.design.serial
+    free = Series(known.name, known.part, known.elapsed, known.unit, 7.0, None, "irregular")
+    f = Fits(replace(f.response, design=replace(f.design, serial=free)), f.run)
+    scan, Q = module._series(f, f.components["serial"]), f.design.Q
+    apart = np.where(who[:, None] == who, np.abs(t[:, None] - t), np.inf)
+    for k in range(1, len(scan.s)):
+        K = scan.s[k] ** (apart / 7.0)
+        assert scan.mixed[k] == pytest.approx(Q.T @ K @ Q, rel=1e-2, abs=1e-2)
+        assert scan.trace[k] == pytest.approx(88 - np.trace(Q.T @ K @ Q), abs=2e-2)
+
+
 # ---- places --------------------------------------------------------------------------------------
 
 

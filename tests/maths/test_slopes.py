@@ -117,6 +117,17 @@ def test_working_parameters_and_factors_are_inverse():
     assert np.tanh(z[1, 0]) == pytest.approx(L[0, 0] * L[1, 0] / np.sqrt((L @ L.T)[0, 0] * (L @ L.T)[1, 1]))
 
 
+def test_a_variance_that_is_nearly_nothing_starts_at_a_number():
+    """Squares of 1e-300 round to zero: the search once started at NaN there."""
+    free = np.tril(np.ones((2, 2)), -1) > 0
+    log, z = slopes.parameters(np.zeros((2, 2)), free, 7.6)
+    assert np.isfinite(log).all()
+    assert z[1, 0] == 0
+    log, z = slopes.parameters(np.array([[1e-310, 0.0], [0.0, 1.0]]), free, 7.6)
+    assert np.isfinite(log).all()
+    assert z[1, 0] == 0
+
+
 def test_a_tie_between_two_functions_is_a_correlation_at_its_end():
     free = np.tril(np.ones((2, 2)), -1) > 0
     gamma = np.array([[4.0, -2.0], [-2.0, 1.0]])  # correlation −1

@@ -29,10 +29,10 @@ def response_facts(fits: Fits) -> list[Fact]:
 
 
 def _levels(y: Array) -> Array:
-    """The distinct values, up to three of them, to the precision that a fit keeps."""
-    size = float(np.max(np.abs(y))) or 1.0
+    """The distinct values, up to three of them, to the precision that a fit keeps: 1e-9 of their spread."""
     low, high = float(y.min()), float(y.max())
-    near = np.minimum(np.abs(y - low), np.abs(y - high)) <= 1e-9 * size
+    lost = max(1e-9 * (high - low), 64 * np.finfo(float).eps * float(np.max(np.abs(y))))
+    near = np.minimum(np.abs(y - low), np.abs(y - high)) <= lost
     return np.array([low, high]) if near.all() and high > low else np.array([low, (low + high) / 2, high])
 
 

@@ -218,7 +218,7 @@ def _repaired(facts: Facts, inner: Choice, fits: Fits) -> Refit:
     return replace(
         found,
         remedy=REPAIRED,
-        name=f"{found.name}, with {missing.what}",
+        name=f"{found.name}, with {missing.what.rstrip(',')}",
         at=missing.about,
         estimand="mean-repaired",
         intervals=rows,

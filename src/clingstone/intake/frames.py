@@ -221,6 +221,12 @@ def _geometry(frame: pd.DataFrame) -> _Place:
     shapes: Any = frame[name]
     notes = []
     crs: Any = shapes.crs
+    plane = crs is not None and not (crs.is_geographic or crs.is_projected)
+    if plane:  # a GeoPackage without a reference system says "Undefined Cartesian SRS"
+        crs, shapes = None, shapes.set_crs(None, allow_override=True)
+        notes.append(
+            "The reference system of the shapes is undefined: their coordinates are used as a plane."
+        )
     if crs is not None and crs.to_epsg() == 3857:
         shapes, crs = shapes.to_crs(4326), shapes.to_crs(4326).crs
         notes.append("Web Mercator stretches distances, so the places are turned to longitude and latitude.")
@@ -238,7 +244,7 @@ def _geometry(frame: pd.DataFrame) -> _Place:
     blank = pd.Series(float("nan"), index=range(len(frame)))
     x, y = blank.copy(), blank.copy()
     x[there.to_numpy()], y[there.to_numpy()] = points[there].x.to_numpy(), points[there].y.to_numpy()
-    lonlat = None if crs is None else bool(crs.is_geographic)
+    lonlat = (False if plane else None) if crs is None else bool(crs.is_geographic)
     unit = "" if crs is None or lonlat else _axis_unit(crs)
     whole = shapes.reset_index(drop=True)
     return _Place({PLACE_X: x, PLACE_Y: y}, (PLACE_X, PLACE_Y), lonlat, unit, tuple(notes), whole)

@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 MOST_COUNTS = 12  # distinct whole numbers of a response up to which they are taken for counts or ratings
+LEAST_SPREAD = 1e-60  # of a response, and its inverse the most: fourth powers of it are summed
 MOST_CODES = 5  # distinct whole numbers of a predictor up to which they may be the codes of a factor
 Kind = Literal["constant", "numeric", "factor", "interaction"]
 
@@ -141,6 +142,13 @@ def checked(found: Blocks, root: Array | None = None) -> Blocks:
         )
     if np.ptp(found.y) <= 1e-13 * np.abs(found.y).max():
         raise _constant_error(found)
+    spread = float(np.ptp(found.y))
+    if not LEAST_SPREAD < spread < 1 / LEAST_SPREAD:
+        raise InputError(
+            f"the response {found.response} spreads over {spread:.3g}, and squares of numbers of that size "
+            f"are beyond what a computer holds",
+            f"Give {found.response} in another unit.",
+        )
     X = found.X if root is None else found.X * root[:, None]
     lost = aliased(X)
     if lost:

@@ -127,15 +127,18 @@ def _series(fits: Fits, component: Component) -> Scan:
     rho = np.asarray(algebra.shape(theta)["serial.rho"], dtype=float)
     order = np.argsort(rho)
     order = order[(rho[order] > 0) & (rho[order] <= MOST)]
-    # Q'KQ bends slowly along the working parameter: a spline over some of it serves the rest.
     grid, nodes = (order[np.unique(np.linspace(0, len(order) - 1, k).astype(int))] for k in (60, NODES))
-    known = np.array([algebra.spread("serial", theta[:, i]) for i in nodes])
+    spread = np.array([algebra.spread("serial", theta[:, i]) for i in nodes])
+    known, left = _mixture(design, rho[nodes], spread, trace_of(design, "serial"))  # K = (1 − ρ)I + ρ·spread
+    # Q'KQ, unlike the spread alone, is bounded for unequal steps too and bends slowly along the working
+    # parameter: a spline over some of it serves the rest.
     if theta[0, nodes[0]] > theta[0, nodes[-1]]:  # a rate falls as the correlation rises
-        nodes, known = nodes[::-1], known[::-1]
-    between = CubicSpline(theta[0, nodes], known)(theta[0, grid]) if design.p else known[:1]
+        nodes, known, left = nodes[::-1], known[::-1], left[::-1]
+    at, p = theta[0, nodes], design.p
+    between = CubicSpline(at, np.column_stack([known.reshape(len(at), -1), left]))(theta[0, grid])
     s = np.r_[0.0, rho[grid]]
-    spread = np.concatenate([np.eye(design.p)[None], np.broadcast_to(between, (len(grid), *known.shape[1:]))])
-    mixed, trace = _mixture(design, s, spread, trace_of(design, "serial"))  # K(ρ) = (1 − ρ)I + ρ·spread
+    mixed = np.concatenate([np.eye(p)[None], between[:, :-1].reshape(-1, p, p)])
+    trace = np.r_[float(design.n - p), between[:, -1]]
     whole = np.full(len(s), float(design.m))
     return Scan(
         "serial",

@@ -203,7 +203,8 @@ def parameters(gamma: Array, free: Array, largest: float) -> tuple[Array, Array]
     """
     q = len(gamma)
     variance = np.maximum(np.diag(gamma), 1e-300)
-    R = gamma / np.sqrt(np.outer(variance, variance))
+    sd = np.sqrt(variance)
+    R = gamma / sd[:, None] / sd  # never the product of two variances, which may round to zero
     z, rows = np.zeros((q, q)), np.zeros((q, q))
     for i in range(q):
         left = 1.0
