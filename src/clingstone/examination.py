@@ -15,7 +15,7 @@ from clingstone.case import Case
 from clingstone.covariance.fits import Fits
 from clingstone.design.derived import only, onto
 from clingstone.design.design import Contrast
-from clingstone.display import amount, instead
+from clingstone.display import amount, instead, listed
 from clingstone.evidence.finding import Evidence, Finding
 from clingstone.evidence.gather import gather
 from clingstone.intake import partitions
@@ -25,6 +25,7 @@ from clingstone.rehearsal.rehearsal import checked
 from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.rehearsal.verdict import advised as rehearsed_advice
 from clingstone.rehearsal.verdict import heeded
+from clingstone.remedies import REMEDIES
 from clingstone.remedies import explain as explain_at
 from clingstone.remedies import refit as refit_at
 from clingstone.remedies import remedy as remedy_of
@@ -310,9 +311,24 @@ class Examination(Shown):
             remedy, at = self.advice.remedy, self.advice.at
         found = next((r for r in self.refits if r.remedy == remedy and at in (None, r.at)), None)
         if found is None:
-            have = ", ".join(dict.fromkeys(r.remedy for r in self.refits)) or "none: nothing was refitted"
-            raise InputError(f"there is no refit {remedy!r} here", f"Choose one of {have}.")
+            raise self._unfitted(remedy, at)
         return found
+
+    def _unfitted(self, remedy: str, at: str | None) -> InputError:
+        """Why there is no such refit: refused, at other levels only, not among the candidates, or unknown."""
+        levels = [r.at for r in self.refits if r.remedy == remedy]
+        if levels:
+            return InputError(f"there is no refit {remedy!r} at {at!r} here", f"It is at {listed(levels)}.")
+        why = next(((reason, hint) for name, reason, hint in self.advice.refused if name == remedy), None)
+        if why is not None:
+            return InputError(f"{remedy} was refused for these data: {why[0]}", why[1])
+        have = ", ".join(dict.fromkeys(r.remedy for r in self.refits)) or "none: nothing was refitted"
+        if any(one.id == remedy for one in REMEDIES):
+            return InputError(
+                f"{remedy!r} is not among the refits made here: {have}",
+                f"Run it alone with clingstone.refit(examination.case, {remedy!r}).",
+            )
+        return InputError(f"there is no refit {remedy!r} here", f"Choose one of {have}.")
 
     def explain(self, remedy: str | None = None, at: str | None = None) -> tuple[Convention, ...]:
         """What the numbers of one remedy (the advised one) become under the other common conventions."""

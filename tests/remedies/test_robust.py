@@ -110,7 +110,7 @@ def test_precision_weights_are_the_usual_scaling():
 def test_one_group_is_refused():
     X, _, y = clustered(p=2)
     run = fits(design(X, group=np.zeros(len(y), dtype=int)), y)
-    with pytest.raises(NotSupported, match="no level"):
+    with pytest.raises(NotSupported, match="there is one clinic"):
         refit(remedy("cluster-robust"), "", run)
     with pytest.raises(NotSupported, match="there is one clinic") as stop:
         _prepare(run, "clinic")

@@ -29,6 +29,8 @@ __all__ = [
     "shortlist_for",
 ]
 
+SHOWN = 3  # rows of one refit that are named among what is refused; the rest are counted
+MORE = "More groups, or more rows, in which it differs would be needed."
 APART = ("within-between", "fixed-effects")  # tell an effect within groups from one between them
 MEAN = ("mean-first", "mean-then-dependence", "season-first", "mean-alone")
 
@@ -262,13 +264,21 @@ def _refused(
         for c in shortlist.candidates
         if c.remedy not in made
     ]
-    lost += [
-        (f.remedy, f"{row.term}: {row.status.removeprefix('unusable: ')}", "")
-        for f in refits
-        for row in f.intervals
-        if row.term in facts.focus and row.status.startswith("unusable")
-    ]
+    lost += [(f.remedy, reason, MORE) for f in refits for reason in _unusable(f, facts.focus)]
     first = []
     if rule is not None and rule.then.needed:
         first = [("every correction", say.filled(rule.because, facts), f"Needed: {rule.then.needed}.")]
     return tuple(dict.fromkeys((*first, *shortlist.refused, *lost)))
+
+
+def _unusable(fit: Refit, focus: tuple[str, ...]) -> list[str]:
+    """Rows in focus that a refit cannot serve, each with the reason, a long list cut short."""
+    found = [
+        f"{row.term}: {row.status.removeprefix('unusable: ')}"
+        for row in fit.intervals
+        if row.term in focus and row.status.startswith("unusable")
+    ]
+    rest = len(found) - SHOWN
+    if rest > 1:
+        found = [*found[: SHOWN - 1], f"{found[SHOWN - 1]}; {rest} more rows likewise"]
+    return found

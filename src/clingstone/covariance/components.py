@@ -194,7 +194,8 @@ def _group(design: Design, level: Partition, kept: list[Partition], limits: Limi
         )
     if level.count < limits.groups_estimate:
         return Refusal(
-            f"{name}: {level.count} groups; a variance between groups needs {limits.groups_estimate} or more",
+            f"{name}: {count(level.count, 'group')}; "
+            f"a variance between groups needs {limits.groups_estimate} or more",
             "With few groups, give each its own level in the model (a factor) instead.",
         )
     if level.count == level.n:

@@ -26,6 +26,11 @@ def called(design: Design, at: str) -> str:
 def clusters(design: Design, at: str) -> Partition:
     """The partition named ``at``. Raises NotSupported when its cells cannot serve as clusters."""
     part = design.partitions.get(at)
+    if not design.partitions:
+        raise NotSupported(
+            "no groups, series or sites were declared, so there are no clusters",
+            "Name the grouping column with group=.",
+        )
     if part is None:
         known = ", ".join(design.partitions) or "none"
         raise NotSupported(f"the design has no partition named {at!r}", f"Known: {known}.")
@@ -38,7 +43,7 @@ def clusters(design: Design, at: str) -> Partition:
     if part.count == design.n:
         raise NotSupported(
             f"every row is a {called(design, at)} of its own, so clusters hold no repeated rows",
-            "Use heteroscedasticity-robust, which is the same thing here.",
+            "Repeated rows would be needed; for single rows there is heteroscedasticity-robust.",
         )
     return part
 
@@ -77,6 +82,14 @@ class OverClusters(Plain):
 
     def abouts(self, design: Design) -> tuple[str, ...]:
         return levels(design)
+
+    def lacking(self, design: Design) -> Refusal:
+        """No level can serve as clusters: what stops the first of them, or that there is none."""
+        try:
+            clusters(design, next(iter(design.partitions), ""))
+        except NotSupported as stop:
+            return Refusal(str(stop), stop.hint)
+        return super().lacking(design)
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return covered(fits.design, clusters(fits.design, self.at))

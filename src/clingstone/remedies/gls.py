@@ -39,6 +39,7 @@ from clingstone.remedies.remedy import (
     Flags,
     Price,
     Remedy,
+    no_level,
 )
 from clingstone.remedies.words import bound_notes, gls_account
 
@@ -247,6 +248,9 @@ class Gls:
         # Where no level can be estimated, all are kept: the refusal then says why.
         keys = tuple(k for k in declared_keys if f"group:{k}" in found) or declared_keys
         return keys if len(keys) == 1 else (TOGETHER.join(keys), *keys)
+
+    def lacking(self, design: Design) -> Refusal:
+        return no_level(self.id)
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return frozenset(fits.components[key].family for key in self.node(fits))

@@ -105,9 +105,11 @@ def reported(design: Design) -> tuple[tuple[str, ...], Array]:
 
 
 def stop_if_none_left(names: tuple[str, ...], unusable: Mapping[str, Refusal]) -> None:
-    """Raise the first refusal when not one row can be served."""
+    """Raise the refusal of the first row, the constant last, when not one row can be served."""
     if names and all(name in unusable for name in names):
-        raise next(iter(unusable.values())).error()
+        first = min(names, key=lambda name: name == "constant")
+        why = unusable[first]
+        raise NotSupported(f"{first}: {why.reason}", why.hint)
 
 
 def few_df(names: tuple[str, ...], df: Array) -> dict[str, Refusal]:

@@ -10,6 +10,7 @@ import numpy as np
 
 from clingstone.design.design import Design
 from clingstone.design.response import Response
+from clingstone.display import listed
 from clingstone.maths import sandwich
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
@@ -154,6 +155,14 @@ class MultiwayCluster(Plain):
             if all(parts[a].relation(parts[b]) == "crossed" for a, b in itertools.combinations(some, 2))
         ]
         return tuple(TOGETHER.join(some) for some in sets)
+
+    def lacking(self, design: Design) -> Refusal:
+        keys = group_levels(design)
+        found = f"of {listed(keys)} no two do" if keys else "no group level can serve"
+        return Refusal(
+            f"two groupings that cross each other are needed; {found}",
+            "Use cluster-robust, or declare crossed groups side by side with group=.",
+        )
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         ways = [fits.design.partitions[key] for key in self.at.split(TOGETHER)]

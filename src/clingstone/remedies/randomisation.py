@@ -160,6 +160,12 @@ class Randomisation(Plain):
         """Levels at which something was assigned."""
         return tuple(dict.fromkeys(design.assignment.assigned.values()))
 
+    def lacking(self, design: Design) -> Refusal:
+        return Refusal(
+            "nothing is known to have been assigned, so there is nothing to permute",
+            "Name what was assigned, and at which level, with assigned=.",
+        )
+
     def covering(self, fits: Fits) -> frozenset[Family]:
         return covered(fits.design, fits.design.partitions[self.at])
 

@@ -36,10 +36,7 @@ def at(remedy: Remedy, level: str, fits: Fits) -> Remedy:
     """
     choices = remedy.abouts(fits.design)
     if not choices:
-        raise NotSupported(
-            f"{remedy.id} has no level to work at in these data",
-            "It needs a partition of the rows in which some cell has two rows or more.",
-        )
+        raise remedy.lacking(fits.design).error()
     chosen = level or choices[0]
     known = {*choices, *fits.design.partitions, ""}
     if chosen not in known:

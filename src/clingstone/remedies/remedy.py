@@ -200,6 +200,10 @@ class Remedy(Protocol):
         """The levels at which it can be run, the default first; ("",) when there is no choice."""
         ...
 
+    def lacking(self, design: Design) -> Refusal:
+        """Why it has no level to be run at, where ``abouts`` is empty."""
+        ...
+
     def covering(self, fits: Fits) -> frozenset[Family]:
         """The families that it covers in these data: ``covers``, or fewer."""
         ...
@@ -230,14 +234,26 @@ class Price(NamedTuple):
     row: float
 
 
+def no_level(remedy: str) -> Refusal:
+    """A remedy that needs a level finds none, and no more can be said."""
+    return Refusal(
+        f"{remedy} has no level to work at in these data",
+        "It needs a partition of the rows in which some cell has two rows or more.",
+    )
+
+
 class Plain:
     """Defaults of a remedy: of the whole table, for the families it names, with nothing fitted first."""
 
+    id: ClassVar[str]
     covers: ClassVar[frozenset[Family]]
     price: ClassVar[Price | None] = None
 
     def abouts(self, design: Design) -> tuple[str, ...]:
         return ("",)
+
+    def lacking(self, design: Design) -> Refusal:
+        return no_level(self.id)
 
     def covering(self, fits: Fits) -> frozenset[Family]:
         return self.covers

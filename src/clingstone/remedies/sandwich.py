@@ -15,7 +15,7 @@ from clingstone.maths import sandwich
 from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, Refusal
-from clingstone.remedies.clusters import OverClusters, clusters, sizes_of
+from clingstone.remedies.clusters import OverClusters, clusters, rank_note, sizes_of
 from clingstone.remedies.joint import Joint, hotelling_joint, wald_joint
 from clingstone.remedies.linear import LinearReady, few_df, positive_m, reported, stop_if_none_left
 from clingstone.remedies.remedy import KNOWN, Account, Estimand, Plain
@@ -297,6 +297,7 @@ class ClusterRobust(OverClusters):
             df,
             CLUSTER_RULES[self.df],
             unusable,
+            rank_note(part, design.p),
             kind=self.kind,
             at=self.at,
             part=part,

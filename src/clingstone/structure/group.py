@@ -210,7 +210,7 @@ def _chain(path: Sequence[str], columns: Mapping[str, Any], notes: list[str]) ->
         own = cells(key_of(name), columns[name])
         notes.extend(_lookalikes(own))
         if levels:
-            notes.extend(_recycled(levels[-1], own))
+            notes.extend(_turned(levels[-1], own) or _recycled(levels[-1], own))
             own = own.within(levels[-1])
         levels.append(own)
     return _informative(levels, notes) if len(levels) > 1 else levels
@@ -255,11 +255,40 @@ def _arrange(levels: tuple[Partition, ...], notes: list[str]) -> tuple[tuple[Par
         chain = " / ".join(level.key for level in ordered)
         notes.append(f"Declared side by side, but the labels are nested: {chain}. They are read as nested.")
         return tuple(ordered), "nested"
+    notes.extend(_counters(levels))
     return levels, "crossed"
 
 
 def _word(level: Partition) -> str:
     return level.key.rsplit("/", 1)[-1]
+
+
+def _turned(outer: Partition, inner: Partition) -> list[str]:
+    """A note when groups of the inner column are made of whole groups of the outer one."""
+    if not 1 < inner.count < outer.count or inner.relation(outer) != "nests":
+        return []
+    return [
+        f"Every group of {inner.key} is made of whole groups of {outer.key}, so the nesting "
+        f"{outer.key}/{inner.key} seems turned round: as declared, {inner.key} is not a level. Declare "
+        f"{inner.key}/{outer.key} to have both."
+    ]
+
+
+def _counters(levels: tuple[Partition, ...]) -> list[str]:
+    """A note when the labels of a crossed grouping are bare counters, which may start anew in every group."""
+    for inner in sorted(levels, key=lambda level: level.count):
+        first = inner.labels[0] in ("0", "1") and all(label.isdecimal() for label in inner.labels)
+        if not first or int(inner.labels[-1]) - int(inner.labels[0]) != inner.count - 1:
+            continue
+        outer = max(levels, key=lambda level: level.count)
+        if outer is inner or outer.count < inner.count:
+            continue
+        return [
+            f"Labels of {inner.key} are counters ({inner.labels[0]} to {inner.labels[-1]}): declared side by "
+            f"side with {outer.key}, ‘{inner.labels[0]}’ is one and the same {inner.key} wherever it occurs. "
+            f"If it is another one in each {outer.key}, declare {outer.key}/{inner.key}."
+        ]
+    return []
 
 
 def _recycled(outer: Partition, inner: Partition) -> list[str]:
@@ -302,6 +331,22 @@ def _remarks(level: Partition) -> list[str]:
         ]
     if level.count == level.n:
         return [f"Every row has its own {level.key}: no rows share one, so it holds no grouping information."]
+    return _single(level) + _giant(level)
+
+
+def _giant(level: Partition) -> list[str]:
+    """A note when one group of several holds most of the rows."""
+    most = int(level.sizes.argmax())
+    if level.count == 2 or 2 * level.sizes[most] <= level.n:
+        return []
+    return [
+        f"One group of {level.key}, ‘{level.labels[most]}’, holds {level.sizes[most]:,} of {level.n:,} rows: "
+        f"what the other {level.count - 1:,} tell of likeness within {level.key} rests on few rows."
+    ]
+
+
+def _single(level: Partition) -> list[str]:
+    """A note on groups of one row."""
     single = int(np.sum(level.sizes == 1))
     if single:
         return [
