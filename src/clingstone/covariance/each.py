@@ -1,4 +1,4 @@
-"""Grams of many columns of y, each at its own θ: intercepts that nest, and AR(1) at few link lengths."""
+"""Grams of many columns of y, each at its own θ: intercepts that nest, AR(1) at few link lengths, places."""
 
 from __future__ import annotations
 
@@ -8,6 +8,7 @@ import numpy as np
 
 from clingstone.covariance.algebras import Chosen, Layered
 from clingstone.covariance.pieces import SerialPiece
+from clingstone.covariance.ranges import Ranges, ranges
 from clingstone.covariance.stacked import Forms
 from clingstone.design.design import Design
 from clingstone.design.response import Response
@@ -21,10 +22,10 @@ BLOCK = 1_000_000  # doubles in the largest array of one evaluation: what a cach
 SMALL = 100_000  # entries up to which an indicator is kept as a plain matrix
 
 
-def each(algebra: Chosen, response: Response) -> Each | None:
+def each(algebra: Chosen, response: Response) -> Each | Ranges | None:
     """What evaluates these components column by column, or None where only one θ for all is at hand."""
     if not isinstance(algebra, Layered) or algebra.spatial is not None or algebra.above:
-        return None
+        return ranges(algebra, response)
     serial = algebra.serial
     if serial is not None and (
         type(serial) is not SerialPiece or not serial.links.few or len(serial.parameters) != 1

@@ -21,6 +21,7 @@ from clingstone.covariance.bundles import Bundle
 from clingstone.covariance.each import Each, each
 from clingstone.covariance.fits import ErrorModel
 from clingstone.covariance.sloped import Sloped
+from clingstone.covariance.ranges import Ranges
 from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.response import Response
 from clingstone.maths import reml
@@ -137,7 +138,7 @@ class _Surface:
 
     @property
     @once
-    def _many(self) -> SlopedEach | Each | None:
+    def _many(self) -> SlopedEach | Each | Ranges | None:
         if isinstance(self.algebra, Sloped):
             return SlopedEach(self.algebra, self.response)
         return each(self.algebra, self.response)

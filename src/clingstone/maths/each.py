@@ -78,7 +78,12 @@ def minimise_each(
     """
     if len(axes) == 1:
         return _line(f, shared, axes[0], B)
-    return _Several(f, shared, axes, B, near).minima()
+    return minimise_from(f, axes, _starts(shared, axes, near))
+
+
+def minimise_from(f: Criteria, axes: Sequence[Axis], start: Array) -> Minima:
+    """The minimum of every column's criterion near a start of its own, (d, B), over two or more axes."""
+    return _Several(f, axes).minima(start)
 
 
 # ---- one coordinate --------------------------------------------------------------------------
@@ -150,19 +155,31 @@ def _slack(value: Array) -> Array:
 # ---- several coordinates ------------------------------------------------------------------------
 
 
-class _Several:
-    """Damped Newton steps from the best start of each column, every vanishing component tried at zero."""
+def _starts(shared: Shared, axes: Sequence[Axis], near: Array | None) -> Array:
+    """(d, B) the best of the product of the axes' starts and the place given."""
+    mesh = np.meshgrid(*[np.array(a.starts) for a in axes], indexing="ij")
+    grid = np.stack([g.ravel() for g in mesh])[:, :81]
+    if near is not None:
+        # A component that can vanish starts where it can be seen, or it would never come back.
+        least = np.array([a.scan[0] if a.vanishes else a.low for a in axes])
+        high = np.array([a.high for a in axes])
+        grid = np.column_stack([np.clip(near, least, high), grid])
+    values = np.stack([shared(theta) for theta in grid.T])
+    return np.asarray(grid[:, values.argmin(axis=0)])
 
-    def __init__(self, f: Criteria, shared: Shared, axes: Sequence[Axis], B: int, near: Array | None) -> None:
-        self.f, self.shared, self.axes, self.B, self.near = f, shared, axes, B, near
+
+class _Several:
+    """Damped Newton steps from the start of each column, every vanishing component tried at zero."""
+
+    def __init__(self, f: Criteria, axes: Sequence[Axis]) -> None:
+        self.f, self.axes = f, axes
         self.low = np.array([a.low for a in axes])[:, None]
         self.high = np.array([a.high for a in axes])[:, None]
 
-    def minima(self) -> Minima:
-        theta = self._starts()
-        every = np.arange(self.B)
-        free = np.ones((len(self.axes), self.B), dtype=bool)
-        theta, value, settled = self._descend(theta, every, free)
+    def minima(self, start: Array) -> Minima:
+        every = np.arange(start.shape[1])
+        free = np.ones(start.shape, dtype=bool)
+        theta, value, settled = self._descend(start, every, free)
         pinned = np.zeros_like(free)
         for i, axis in enumerate(self.axes):
             if not axis.vanishes:
@@ -181,17 +198,6 @@ class _Several:
             pinned[i, c] = True
         bound = pinned | (theta <= self.low + 1e-6) | (theta >= self.high - 1e-4)
         return Minima(theta, value, np.asarray(bound), settled)
-
-    def _starts(self) -> Array:
-        """(d, B) the best of the product of the axes' starts and the place given."""
-        mesh = np.meshgrid(*[np.array(a.starts) for a in self.axes], indexing="ij")
-        grid = np.stack([g.ravel() for g in mesh])[:, :81]
-        if self.near is not None:
-            # A component that can vanish starts where it can be seen, or it would never come back.
-            least = np.array([a.scan[0] if a.vanishes else a.low for a in self.axes])
-            grid = np.column_stack([np.clip(self.near, least, self.high[:, 0]), grid])
-        values = np.stack([self.shared(theta) for theta in grid.T])
-        return np.asarray(grid[:, values.argmin(axis=0)])
 
     def _descend(self, theta: Array, columns: Places, free: Flags) -> tuple[Array, Array, Flags]:
         """Levenberg's damped Newton over the free coordinates of each column; free (d, K)."""

@@ -7,6 +7,7 @@ runs, because its size must be the same on every machine.
 from __future__ import annotations
 
 from clingstone.covariance.each import each
+from clingstone.covariance.ranges import Ranges
 from clingstone.rehearsal.study import Contender, Study
 from clingstone.remedies.gls import GlsReady
 from clingstone.remedies.linear import LinearReady
@@ -14,7 +15,7 @@ from clingstone.remedies.longrun import LongRunReady
 from clingstone.remedies.sandwich import ClusterReady, OrdinaryReady
 
 SHORT = 2e6  # µs that a short rehearsal of a small table may take
-LONGER = 5e6  # … of a table of more than SMALL rows
+LONGER = 5e6  # … of a table of more than SMALL rows, or of places alone, whose own correction is a search
 SMALL = 1000
 FEWEST = 100  # replicates per truth below which a contender is not worth starting
 GOOD = 250  # … that a search or a resampling must leave to the others, or it is not worth their precision
@@ -58,6 +59,11 @@ def _of_gls(ready: GlsReady, study: Study) -> float:
     algebra = fits.algebra(ready.remedy.node(fits))
     d = len(algebra.parameters)
     many = each(algebra, fits.response)
+    if isinstance(many, Ranges):
+        S, k = many.piece.sites.count, design.p * (design.p + 1) / 2
+        # The shared ranges are made once; their part is that of a column among the fewest.
+        made = len(many.nodes) * (30 + 0.0006 * S**3) / (FEWEST * max(1, len(study.truths)))
+        return made + 150 + S * (4 + 0.1 * k)
     if many is None:
         S = design.spatial.count if design.spatial is not None else n
         return 40.0 * d * (150 + 0.02 * S**2 + 0.0003 * S**3 + 0.01 * n)
@@ -75,7 +81,9 @@ def drawable(study: Study) -> bool:
 
 
 def _budget(study: Study) -> float:
-    return SHORT if study.fits.design.n <= SMALL else LONGER
+    fits = study.fits
+    searched = isinstance(each(fits.algebra(fits.full_node), fits.response), Ranges)
+    return LONGER if searched or fits.design.n > SMALL else SHORT
 
 
 def affordable(study: Study) -> tuple[list[int], list[tuple[str, str, str]], int]:
