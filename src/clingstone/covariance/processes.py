@@ -14,13 +14,16 @@ import numpy as np
 
 from clingstone.covariance.algebras import Layered
 from clingstone.covariance.components import Parameter
+from clingstone.covariance.fits import Fits
 from clingstone.covariance.pieces import RHO_HIGH, SerialPiece
 from clingstone.covariance.visits import VisitPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.arma import Steps, autocovariances, from_partial
+from clingstone.maths.armaeach import ArmaEach
 from clingstone.maths.basis import Gram
+from clingstone.maths.each import Minima
 from clingstone.maths.longrun import Grid
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.search import Optimum, minimise
@@ -151,6 +154,31 @@ def search(process: Process, response: Response, warm: Optimum | None = None) ->
 
     key = ("process", process.key)
     return kept(response, key, lambda: minimise(value, process.parameters, warm=warm))
+
+
+def search_together(process: Arma, fits: Fits) -> None:
+    """The optimum for the one column of ``fits``, found with all that it is one of and kept for ``search``.
+
+    Nothing where the column stands alone, the process is not searched for many at once, or the search of
+    this column did not settle (as on the edge of what is stationary).
+    """
+    if fits.whole is None:
+        return
+    (whole, b), key = fits.whole, ("process", process.key)
+    found = kept(whole.response, ("each", *key), lambda: _minima(process, whole.response))
+    if found is not None:
+        one = Optimum(
+            found.theta[:, b], float(found.value[b]), found.at_bound[:, b], bool(found.converged[b])
+        )
+        kept(fits.response, key, lambda: one)
+
+
+def _minima(process: Arma, response: Response) -> Minima | None:
+    grid = process.steps.grid
+    if not ArmaEach.carries(grid, process.p, process.q):
+        return None
+    Q, E = grid.spread(response.design.Q), grid.spread(response.residual)
+    return ArmaEach(grid, Q, E, process.p, process.q).minima(process.parameters, response.design.m)
 
 
 def _series(design: Design) -> Series:

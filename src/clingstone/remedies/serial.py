@@ -11,7 +11,7 @@ import numpy as np
 
 from clingstone.covariance.components import declared
 from clingstone.covariance.processes import Arma as ArmaErrors
-from clingstone.covariance.processes import Fading, Process, search
+from clingstone.covariance.processes import Fading, Process, search, search_together
 from clingstone.covariance.unbiased import Unbiased, unbiased
 from clingstone.design.design import Design
 from clingstone.design.response import Response
@@ -239,6 +239,11 @@ class Car1(Plain):
 @dataclass(frozen=True, eq=False, kw_only=True)
 class ArmaReady(ProcessReady):
     orders: tuple[tuple[int, int], ...]
+
+    def fit(self, fits: Fits) -> Estimates:
+        for p, q in self.orders:
+            search_together(ArmaErrors(self.design, p, q), fits)
+        return super().fit(fits)
 
     def choose(self, response: Response) -> Choice:
         m = self.design.m
