@@ -2,17 +2,21 @@
 
 from __future__ import annotations
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
 from clingstone.advice.choose import Advice, settle
 from clingstone.advice.facts import facts
+from clingstone.advice.rules import PREFER, STATES
 from clingstone.advice.shortlist import shortlist_for
 from clingstone.covariance.fits import Fits
 from clingstone.design.response import Response
+from clingstone.evidence.finding import Evidence
 from clingstone.evidence.gather import gather
 from clingstone.ledger.ledger import weigh
-from clingstone.rehearsal.many import Many
+from clingstone.rehearsal.many import ASIDE, Many
 from clingstone.remedies.remedy import Refit
 from clingstone.run import one_thread
 from rehearsal.worlds import stream, trial
@@ -64,6 +68,25 @@ def columns(f: Fits, kind: str, B: int) -> np.ndarray:
     if kind == "stream":
         noise = np.hstack([ar1(n, rho, 1, rng) for rho in size])
     return noise
+
+
+def said(alone: Fits, shouting: tuple[str, ...]) -> dict[str, object]:
+    """The facts that states and remedies are decided by, with some tests as clear as they can be."""
+    clear = {"p": 1e-12, "p_adjusted": 1e-12, "verdict": "present", "estimate": 0.9}
+    found = gather(alone)
+    told = Evidence(tuple(replace(f, **clear) if f.test in shouting else f for f in found))
+    known = facts(alone, told, weigh(alone, told)).known
+    read = {name for rule in (*STATES, *PREFER) for name in (*rule.when.names, rule.then.at)}
+    return {name: known[name].value for name in sorted(read & set(known))}
+
+
+@pytest.mark.parametrize("make", [trial, panel, stream])
+def test_tests_set_aside_decide_nothing(make):
+    f = make()
+    with one_thread():
+        plain = said(f, ())
+        assert said(f, ASIDE) == plain
+        assert said(f, ("heteroscedasticity",)) != plain
 
 
 @pytest.mark.parametrize("kind", ["trial", "panel", "stream", "curved"])
