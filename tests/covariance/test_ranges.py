@@ -117,6 +117,16 @@ def test_the_refit_of_a_batch_is_that_of_its_columns():
     assert inner >= 5
 
 
+def test_a_first_column_without_a_field_hides_it_from_no_other():
+    f = world("repeats", B=4)  # three parameters, searched column by column; the first column is noise
+    node = {"group:site", "spatial"}
+    found = f[node]
+    assert found.at_bound[:, 0].any()
+    for b in range(1, 4):
+        alone = Fits(f.response.column(b), f.run)[node]
+        assert found.loglik[b] == pytest.approx(alone.loglik[0], abs=1e-4)
+
+
 def test_blocks_do_not_change_the_grams(monkeypatch):
     f = world("repeats")
     many = reader(f)

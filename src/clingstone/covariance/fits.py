@@ -363,7 +363,8 @@ class Fits:
                 best = one._search(algebra, warm)
                 if not best.converged:
                     best = one._search(algebra)
-                warm = best if warm is None else warm
+                # From a component at zero no search comes back: such an optimum starts no other column.
+                warm = best if warm is None and not best.at_bound.any() else warm
                 gram = algebra.gram(best.theta, one.response)
                 found.append((best, float(reml.scale(gram, self.design.m)[0])))
                 advance(1)
@@ -374,7 +375,7 @@ class Fits:
             np.array([best.value for best, _ in found]),
             np.stack([best.at_bound for best, _ in found], axis=1),
             np.array([best.converged for best, _ in found]),
-            (f"{self.response.B:,} columns of y, each searched from the first one's optimum",),
+            (f"{self.response.B:,} columns of y, each searched from the first inner optimum",),
         )
 
 
