@@ -57,3 +57,15 @@ def test_progress_reports_start_steps_and_is_silent_otherwise():
     assert seen == [("refits", 0, 3), ("refits", 1, 3), ("refits", 3, 3)]
     with Run().progress("refits", 3) as advance:
         advance(1)
+
+
+@pytest.mark.parametrize("name", ["group", "time", "series", "weights", "sampled"])
+def test_a_column_given_in_place_of_its_name_is_refused(name):
+    with pytest.raises(InputError, match=f"{name}= is given a ndarray, and the name of a column") as refused:
+        Settings(**{name: np.arange(3)})
+    assert refused.value.hint == f"Make it a column of the data, and write {name}='column'."
+
+
+def test_a_confidence_in_words_is_refused():
+    with pytest.raises(InputError, match=r"confidence='0\.9' is not a number"):
+        Settings(confidence="0.9")

@@ -6,6 +6,7 @@ import zlib
 from collections.abc import Callable, Iterator, Mapping
 from contextlib import contextmanager
 from dataclasses import dataclass, field
+from numbers import Real
 from typing import TYPE_CHECKING, Any, Literal, Protocol, get_args
 
 from clingstone.needs import InputError, Limits, NotSupported
@@ -77,6 +78,13 @@ class Settings:
     seed: int = 0
 
     def __post_init__(self) -> None:
+        for name in ("time", "series", "weights", "sampled"):
+            _names(name, getattr(self, name), (str,))
+        _names("group", self.group, (str, tuple, list))
+        if not isinstance(self.confidence, Real):
+            raise InputError(
+                f"confidence={self.confidence!r} is not a number", "Write 95 % as confidence=0.95."
+            )
         _one_of("missing", self.missing, get_args(Missing))
         _one_of("ties", self.ties, get_args(Ties))
         _one_of("alternative", self.alternative, get_args(Alternative))
@@ -101,6 +109,15 @@ class Settings:
             _one_of("rehearsal", self.rehearsal, ("auto", "none"))
         if self.seed < 0:
             raise InputError(f"seed={self.seed} is negative", "Use a whole number from 0 upwards.")
+
+
+def _names(name: str, value: object, kinds: tuple[type, ...]) -> None:
+    """Whether columns are named, where a person may well have given the column itself."""
+    if value is not None and not isinstance(value, kinds):
+        raise InputError(
+            f"{name}= is given a {type(value).__name__}, and the name of a column is needed",
+            f"Make it a column of the data, and write {name}='column'.",
+        )
 
 
 def _one_of(name: str, value: str, choices: tuple[str, ...]) -> None:

@@ -88,6 +88,14 @@ def test_lag_sums_equal_the_full_matrix_at_every_correlation(monkeypatch: pytest
             assert at_rho(sums, rho) == pytest.approx(left.T @ full(GAPS, rho) @ right, abs=1e-12)
 
 
+def test_lag_sums_of_no_column_are_empty() -> None:
+    """Residuals alone come without a model, so without a column."""
+    none = np.zeros((len(GAPS), 0))
+    sums = Links(GAPS).lag_sums(none, none)
+    assert sums is not None
+    assert sums.shape[1:] == (0, 0)
+
+
 def test_lags_are_not_summed_one_by_one_where_series_are_long_or_times_uneven() -> None:
     long = np.ones(markov.SHORT + 1)
     long[0] = NAN

@@ -150,7 +150,7 @@ class Links:
             return None
         p, q = left.shape[1], right.shape[1]
         series = np.cumsum(np.isnan(self.steps)) - 1
-        ends, size = np.append(starts, self.n), max(1, BLOCK // (T * (p + q)))
+        ends, size = np.append(starts, self.n), max(1, BLOCK // (T * max(p + q, 1)))
         W = np.zeros((T * p, T * q))
         for first in range(0, len(starts), size):
             last = min(first + size, len(starts))
