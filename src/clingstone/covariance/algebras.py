@@ -29,6 +29,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, reml
 from clingstone.maths.basis import Gram
+from clingstone.maths.field import Field
 from clingstone.maths.groups import Classes, Load
 from clingstone.maths.irregular import Panels
 from clingstone.maths.once import Array, kept, once
@@ -82,7 +83,7 @@ class Layered(Pieces):
 
     def grams(self, thetas: Array, response: Response) -> list[Gram]:
         """As ``gram`` at each column of θ (d, K); places alone share one eigendecomposition per range."""
-        if self.spatial is None or self.serial is not None or self.chain or self.above or response.B == 1:
+        if self.spatial is None or not self.places_alone or response.B == 1:
             return super().grams(thetas, response)
         load = self.forms(response).load(np.ones(1))
         assert load is not None
@@ -94,6 +95,25 @@ class Layered(Pieces):
             for k, ratio in zip(at.tolist(), self.spatial.variance(thetas[:, at]), strict=True):
                 out[k] = spectrum.top(base, float(ratio))
         return out
+
+    @property
+    def places_alone(self) -> bool:
+        """Whether places stand over independent rows and nothing else."""
+        return self.spatial is not None and not (self.serial or self.chain or self.above)
+
+    def field(self, response: Response, m: int, restricted: bool = True) -> Field | None:
+        """The criterion of one column of y with its slopes, where places stand alone."""
+        piece = self.spatial
+        if piece is None or not self.places_alone:
+            return None
+        forms = self.forms(response)
+        load = forms.load(np.ones(1))
+        assert load is not None
+
+        def slope(theta: Array) -> Array:
+            return np.asarray(piece.slope(theta) * float(piece.variance(theta[:, None])[0]))
+
+        return Field(forms.gram(np.ones(1), 0.0), load, self._between, slope, m, restricted)
 
     # ---- rows: I or AR(1) --------------------------------------------------------------
 

@@ -13,6 +13,7 @@ from clingstone.covariance.pieces import GroupPiece, Piece, SerialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths.basis import Gram
+from clingstone.maths.field import Field
 from clingstone.maths.once import Array, once
 from clingstone.maths.search import Optimum
 from clingstone.needs import NotSupported
@@ -131,6 +132,13 @@ class Pieces:
 
     def minimum(self, response: Response, m: int, warm: Optimum | None) -> Optimum | None:
         """The REML optimum for the first column of y where an algebra has a faster way to it; else None."""
+        return None
+
+    def field(self, response: Response, m: int, restricted: bool = True) -> Field | None:
+        """The criterion of one column of y with its slopes, where an algebra has them; else None.
+
+        m : residual df, or n with ``restricted=False`` (maximum likelihood).
+        """
         return None
 
     @property

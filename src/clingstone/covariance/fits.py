@@ -304,7 +304,7 @@ class Fits:
         found = algebra.minimum(column, m, warm)
         if found is not None:
             return found
-        return minimise(value, algebra.parameters, warm=warm, thinned=thinned)
+        return minimise(algebra.field(column, m) or value, algebra.parameters, warm=warm, thinned=thinned)
 
     def _head_start(self, node: Node) -> Optimum | None:
         """The optimum for some of the places, its curvature scaled up to all rows; None if too few."""

@@ -227,6 +227,10 @@ class SpatialPiece:
         """(S, S) correlation at one θ (2,)."""
         return matern.kernel(self.distance, float(np.exp(theta[0])), self.smoothness)
 
+    def slope(self, theta: Array) -> Array:
+        """(S, S) derivative of R in ln φ."""
+        return matern.kernel_slope(self.distance, float(np.exp(theta[0])), self.smoothness)
+
     def variance(self, theta: Array) -> Array:
         return ratio_of(theta[1], self.parameters[1])
 

@@ -83,7 +83,8 @@ def _fitted(fits: Fits, algebra: Layered, smoothness: float, start: Array | None
     def value(theta: Array) -> float:
         return float(reml.criterion(algebra.gram(theta, column), m)[0])
 
-    best = minimise(value, algebra.parameters, warm=None if start is None else _near(value, start))
+    warm = None if start is None else _near(value, start)
+    best = minimise(algebra.field(column, m) or value, algebra.parameters, warm=warm)
     gram = algebra.gram(best.theta, column)
     delta, _, _ = reml.reduced(gram)
     s2 = float(reml.scale(gram, m)[0])

@@ -76,6 +76,9 @@ class Nearest(Layered):
     def grams(self, thetas: Array, response: Response) -> list[Gram]:
         return [self.gram(theta, response) for theta in thetas.T]
 
+    def field(self, response: Response, m: int, restricted: bool = True) -> None:
+        return None
+
     def _top(self, gram: Gram, load: Load, theta: Array) -> Gram:
         piece = self._top_piece
         own = self.own(piece, theta)

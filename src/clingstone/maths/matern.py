@@ -38,6 +38,19 @@ def kernel(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
     raise ValueError(f"smoothness {smoothness:g} is not one of 0.5, 1.5, 2.5")
 
 
+def kernel_slope(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
+    """Derivative of :func:`kernel` in ln φ."""
+    if smoothness == 0.5:
+        x = distance * (1 / reach)
+        return np.asarray(x * np.exp(-x))
+    x = distance * (np.sqrt(2 * smoothness) / reach)
+    if smoothness == 1.5:
+        return np.asarray(x * x * np.exp(-x))
+    if smoothness == 2.5:
+        return np.asarray(x * x * (1 + x) / 3 * np.exp(-x))
+    raise ValueError(f"smoothness {smoothness:g} is not one of 0.5, 1.5, 2.5")
+
+
 def top(gram: Gram, load: Load, K: Array) -> Gram:
     """The Gram once site effects with covariance K (S, S) are added to V. K is overwritten.
 

@@ -1,7 +1,8 @@
 """The minimum of a smooth criterion over a box, with its boundaries told apart.
 
 One coordinate: a scan, then Brent's method in every promising bracket. Several: L-BFGS-B from the
-best of a product of starts, each vanishing component tried at zero, then Newton steps.
+best of a product of starts, each vanishing component tried at zero, then Newton steps. Slopes are central
+differences where the criterion does not bring its own.
 """
 
 from __future__ import annotations
@@ -10,7 +11,7 @@ import itertools
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, field, replace
 from itertools import pairwise
-from typing import Any, Protocol
+from typing import Any, Protocol, runtime_checkable
 
 import numpy as np
 import numpy.typing as npt
@@ -41,6 +42,15 @@ class Axis(Protocol):
     def vanishes(self) -> bool: ...
 
 
+@runtime_checkable
+class Steep(Protocol):
+    """A criterion with its gradient (d,) and a definite (d, d) close to its second derivatives."""
+
+    def __call__(self, theta: Array) -> float: ...
+    def gradient(self, theta: Array) -> Array: ...
+    def information(self, theta: Array) -> Array: ...
+
+
 @dataclass(frozen=True, eq=False)
 class Optimum:
     """θ̂ (d,), the criterion there, which coordinates are at a bound, and how the search ended.
@@ -58,7 +68,7 @@ class Optimum:
     start: Array = field(default_factory=lambda: np.zeros(0), repr=False)
 
 
-Descent = Callable[[Criterion, Array, Flags, Array], tuple[Array, float]]
+Descent = Callable[["_Counted", Array, Flags, Array], tuple[Array, float]]
 
 
 def slack(value: float) -> float:
@@ -67,7 +77,11 @@ def slack(value: float) -> float:
 
 
 def minimise(
-    f: Criterion, axes: Sequence[Axis], *, warm: Optimum | None = None, thinned: bool = False
+    f: Criterion | Steep,
+    axes: Sequence[Axis],
+    *,
+    warm: Optimum | None = None,
+    thinned: bool = False,
 ) -> Optimum:
     """The smallest value of f over the box of the axes.
 
@@ -82,6 +96,20 @@ def minimise(
     if len(axes) == 1:
         return _line(f, axes[0])
     return _several(f, axes, warm, thinned)
+
+
+def nearby(f: Criterion | Steep, axes: Sequence[Axis], start: Array) -> Optimum:
+    """The minimum in the valley of a start that is close to it: the optimum of a criterion much like f."""
+    box = np.array([[a.low, a.high] for a in axes])
+    free = np.ones(len(axes), dtype=bool)
+    counted = _Counted(f, box)
+    H = counted.curvature(start, free)
+    if np.linalg.eigvalsh(H)[0] <= 0:
+        theta, value = _descend(counted, start, free, box)
+    else:
+        theta, value = _Quasi(H)(counted, start, free, box)
+    edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
+    return Optimum(theta, value, edge, True, (f"{counted.calls} evaluations",))
 
 
 def _line(f: Criterion, axis: Axis) -> Optimum:
@@ -126,7 +154,8 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, thinned: 
             runs.append(known or _descend(counted, start, free, box))
     theta, value = min(runs, key=lambda run: float(run[1]))
     if warm is None or thinned:
-        theta, value = _look_around(counted, axes, theta, value, box)
+        # A part has been looked over all around by its own search: what it hides shows from fewer places.
+        theta, value = _look_around(counted, axes, theta, value, box, 4 if thinned else 8)
     theta, value, pinned = _pin(counted, axes, theta, value, box, descend)
     edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
     theta, value, ok, curvature = _polish(counted, theta, value, ~(edge | pinned), box, warm)
@@ -149,6 +178,30 @@ class _Counted:
             return 1e300
         return value if np.isfinite(value) else 1e300
 
+    def gradient(self, theta: Array, free: Flags | None = None) -> Array:
+        """Slopes in the free coordinates."""
+        free = np.ones(len(theta), dtype=bool) if free is None else free
+        if isinstance(self.f, Steep):
+            try:
+                return np.asarray(self.f.gradient(np.clip(theta, self.box[:, 0], self.box[:, 1]))[free])
+            except np.linalg.LinAlgError:
+                return np.zeros(int(free.sum()))
+        return gradient(self._over(theta, free), theta[free])
+
+    def curvature(self, theta: Array, free: Flags, step: float = 1e-3) -> Array:
+        """Second derivatives in the free coordinates, or what the criterion gives for them."""
+        if isinstance(self.f, Steep):
+            return np.asarray(self.f.information(theta)[np.ix_(free, free)])
+        return hessian(self._over(theta, free), theta[free], step)
+
+    def _over(self, theta: Array, free: Flags) -> Criterion:
+        def inner(some: Array) -> float:
+            whole = theta.copy()
+            whole[free] = some
+            return self(whole)
+
+        return inner
+
 
 def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
     grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
@@ -165,17 +218,17 @@ def _valley(f: Criterion, start: Array, theta: Array, value: float) -> bool:
     return all(after < before for before, after in pairwise([*walk, value]))
 
 
-def _best_start(f: Criterion, axes: Sequence[Axis], warm: Optimum) -> Optimum:
+def _best_start(f: _Counted, axes: Sequence[Axis], warm: Optimum) -> Optimum:
     """``warm``, or the best of the axes' starts where that is better, with the curvature found there."""
     (start,) = _starts(f, axes, 1)
     if f(start) >= f(warm.start):
         return warm
-    H = hessian(f, start, 0.05)
+    H = f.curvature(start, np.ones(len(axes), dtype=bool), 0.05)
     bent = bool(np.linalg.eigvalsh(H)[0] > 0)
     return replace(warm, start=start, curvature=H if bent else np.diag(np.maximum(np.abs(np.diag(H)), 1.0)))
 
 
-def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
+def _descend(f: _Counted, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
     """L-BFGS-B over the free coordinates."""
     if not free.any():
         return start, f(start)
@@ -189,7 +242,7 @@ def _descend(f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array
         return f(whole(part))
 
     def slope(part: Array) -> Array:
-        return gradient(inner, part)
+        return f.gradient(whole(part), free)
 
     found = optimize.minimize(
         inner,
@@ -208,13 +261,14 @@ class _Quasi:
     def __init__(self, curvature: Array) -> None:
         self.curvature = curvature
 
-    def __call__(self, f: Criterion, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
+    def __call__(self, f: _Counted, start: Array, free: Flags, box: Array) -> tuple[Array, float]:
         theta, value = start.copy(), f(start)
-        H = self.curvature.copy()
-        slope = gradient(f, theta)
+        slope = f.gradient(theta)
+        H = f.f.information(theta) if isinstance(f.f, Steep) else self.curvature.copy()
         for _ in range(40):
             out = ((theta <= box[:, 0]) & (slope > 0)) | ((theta >= box[:, 1]) & (slope < 0))
-            move = free & ~out
+            # A coordinate of no curvature (the range of a component of zero variance) changes nothing.
+            move = free & ~out & (np.diag(H) > 1e-9 * np.diag(H).max())
             if not move.any():
                 break
             step = np.zeros_like(theta)
@@ -228,8 +282,10 @@ class _Quasi:
                     break
             else:
                 break
-            after = gradient(f, trial)
+            after = f.gradient(trial)
             s, y = trial - theta, after - slope
+            if isinstance(f.f, Steep):
+                H = f.f.information(trial)
             if float(s @ y) > 1e-10:
                 Hs = H @ s
                 H += np.outer(y, y) / float(s @ y) - np.outer(Hs, Hs) / float(s @ Hs)
@@ -238,7 +294,7 @@ class _Quasi:
 
 
 def _pin(
-    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array, descend: Descent
+    f: _Counted, axes: Sequence[Axis], theta: Array, value: float, box: Array, descend: Descent
 ) -> tuple[Array, float, Flags]:
     """Components that are as good left out: their coordinate goes to ``low`` and is kept there.
 
@@ -274,11 +330,11 @@ def _pin(
 
 
 def _look_around(
-    f: Criterion, axes: Sequence[Axis], theta: Array, value: float, box: Array
+    f: _Counted, axes: Sequence[Axis], theta: Array, value: float, box: Array, places: int
 ) -> tuple[Array, float]:
     """Each axis scanned with the others held: a deeper valley elsewhere is followed down."""
     for i, axis in enumerate(axes):
-        elsewhere = _lower(f, axis, i, theta, value)
+        elsewhere = _lower(f, axis, i, theta, value, places)
         if elsewhere is not None:
             found, v = _descend(f, elsewhere, np.ones(len(axes), dtype=bool), box)
             if v < value - slack(value):
@@ -286,10 +342,10 @@ def _look_around(
     return theta, value
 
 
-def _lower(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array | None:
-    """The lowest of eight places along one axis, if it is lower than here."""
+def _lower(f: Criterion, axis: Axis, i: int, at: Array, value: float, places: int = 8) -> Array | None:
+    """The lowest of some places along one axis, if it is lower than here."""
     best = None
-    for x in axis.scan[:: max(1, len(axis.scan) // 8)]:
+    for x in axis.scan[:: max(1, len(axis.scan) // places)]:
         trial = at.copy()
         trial[i] = x
         v = f(trial)
@@ -299,7 +355,7 @@ def _lower(f: Criterion, axis: Axis, i: int, at: Array, value: float) -> Array |
 
 
 def _polish(
-    f: Criterion, theta: Array, value: float, free: Flags, box: Array, warm: Optimum | None
+    f: _Counted, theta: Array, value: float, free: Flags, box: Array, warm: Optimum | None
 ) -> tuple[Array, float, bool, Array]:
     """Newton steps on the free coordinates; converged when the Newton decrement is below 1e-6.
 
@@ -310,7 +366,7 @@ def _polish(
         return theta, value, True, curvature
     decrement = 0.0
     for _ in range(6):
-        slope, H = _differences(f, theta, free)
+        slope, H = f.gradient(theta, free), f.curvature(theta, free)
         # A coordinate that changes nothing (the range of a component of zero variance) is left alone.
         alive = np.diag(H) > 1e-9 * np.abs(H).max(initial=0.0)
         free = free.copy()
@@ -338,18 +394,7 @@ def _polish(
     return theta, value, decrement < 1e-6, curvature
 
 
-def _differences(f: Criterion, theta: Array, free: Flags) -> tuple[Array, Array]:
-    """Gradient and Hessian in the free coordinates."""
-
-    def inner(part: Array) -> float:
-        whole = theta.copy()
-        whole[free] = part
-        return f(whole)
-
-    return gradient(inner, theta[free]), hessian(inner, theta[free])
-
-
-def _arrived(f: Criterion, theta: Array, free: Flags, curvature: Array) -> bool:
+def _arrived(f: _Counted, theta: Array, free: Flags, curvature: Array) -> bool:
     """Whether the gradient alone, measured by a curvature known well enough, says that this is the end."""
-    slope = gradient(f, theta)[free]
+    slope = f.gradient(theta, free)
     return float(slope @ np.linalg.solve(curvature[np.ix_(free, free)], slope)) < 1e-6

@@ -7,7 +7,6 @@ from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, Literal
 
 import numpy as np
-from scipy import optimize
 
 from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import Component, declared
@@ -22,6 +21,7 @@ from clingstone.maths.groups import Expected
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
+from clingstone.maths.search import nearby
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
 from clingstone.remedies.glseach import read_each
@@ -125,7 +125,7 @@ class GlsReady(FittedReady):
 
         restricted = self.remedy.estimation == "REML"
         if not restricted:
-            theta = _most_likely(gram, theta, bound, algebra, self.design.n)
+            theta = _most_likely(y, theta, bound, algebra)
         m = self.design.m if restricted else self.design.n
         here = gram(theta)
         delta, _, _ = reml.reduced(here)
@@ -338,11 +338,13 @@ def _too_few(found: Mapping[str, Component], refused: Mapping[str, Refusal]) -> 
     )
 
 
-def _most_likely(gram: Callable[[Array], Gram], theta: Array, bound: Flags, algebra: Chosen, n: int) -> Array:
-    """θ of maximum likelihood, from the REML estimate; parameters at a bound stay there."""
+def _most_likely(y: Response, theta: Array, bound: Flags, algebra: Chosen) -> Array:
+    """θ of maximum likelihood by steps from the REML estimate; parameters at a bound stay there."""
     free = np.flatnonzero(~bound)
     if not len(free):
         return theta
+    n = algebra.design.n
+    steep = None if bound.any() else algebra.field(y, n, restricted=False)
 
     def whole(part: Array) -> Array:
         out = theta.copy()
@@ -350,11 +352,7 @@ def _most_likely(gram: Callable[[Array], Gram], theta: Array, bound: Flags, alge
         return out
 
     def minus_two(part: Array) -> float:
-        found = gram(whole(part))
+        found = algebra.gram(whole(part), y)
         return float(found.logdet + reml.profiled(reml.rss(found), n)[0])
 
-    box = [(algebra.parameters[i].low, algebra.parameters[i].high) for i in free]
-    found = optimize.minimize(
-        minus_two, theta[free], method="Nelder-Mead", bounds=box, options={"xatol": 1e-7, "fatol": 1e-9}
-    )
-    return whole(np.asarray(found.x))
+    return whole(nearby(steep or minus_two, [algebra.parameters[i] for i in free], theta[free]).theta)
