@@ -237,11 +237,11 @@ def null_table(lines: list[Mapping[str, object]]) -> str:
                     str(line["design"]),
                     key,
                     str(len(p)),
-                    share(Share(k, len(p))),
+                    share(Share(((k, len(p)),))),
                     f"{stats.kstest(p, 'uniform').pvalue:.2f}",
                 ]
             )
-    return table(("design", "primary test", "replicates", "share below 0.05", "uniform? (KS p)"), rows)
+    return table(("design", "primary test", "replicates", "% below 0.05", "uniform? (KS p)"), rows)
 
 
 def promise_table(lines: list[Mapping[str, object]]) -> str:
