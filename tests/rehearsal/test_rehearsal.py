@@ -21,7 +21,7 @@ from clingstone.rehearsal.path import Paths
 from clingstone.rehearsal.rehearsal import Plan, rehearse, settled, stages
 from clingstone.rehearsal.study import FIELDS, Counts, Job
 from clingstone.rehearsal.tallies import binomial, pairs, scores, tallies
-from rehearsal.worlds import study_of, trial, truth_of
+from rehearsal.worlds import study_of, trial, truth_of, wells
 
 PLAIN = (("ordinary", ""), ("cluster-robust", "clinic"), ("mixed-intercept", "clinic"))
 
@@ -290,6 +290,16 @@ def test_a_resampling_must_leave_the_others_enough_replicates(monkeypatch):
         chosen, _, count = cost.affordable(found)
         assert chosen == kept
         assert count >= cost.GOOD // 50 * 50
+
+
+def test_the_correction_of_a_map_finds_room_in_a_short_rehearsal():
+    f = wells(240)
+    at = [("ordinary", ""), ("spatial-gls", ""), ("spatial-hac", "")]
+    found = study_of(f, [truth_of(f, ["spatial"])] * 6, *at)
+    kept, left, count = cost.affordable(found)
+    assert kept == [0, 1, 2]
+    assert not left
+    assert count >= 200
 
 
 # ---- advice ------------------------------------------------------------------------------------
