@@ -16,6 +16,7 @@ DRAWN = 199  # reference draws of the variogram, shared by all columns
 SMOOTH, ROUGH = "x1", "x2"
 
 
+LATTICE = Bound(0.90, 1.0, "an exponential field is no autoregression over neighbours")
 IGNORED = Bound(0.0, 0.92, "dependence between places is ignored")
 
 
@@ -51,7 +52,7 @@ def dependent(layout: Layout, reach: float) -> World:
     found: list[Sized | Covered] = [
         Covered(remedy("ordinary"), {SMOOTH: IGNORED}),
         Covered(remedy("spatial-gls"), both, columns=150, quick=False),
-        Covered(remedy("spatial-error"), both, columns=150, quick=False),
+        Covered(remedy("spatial-error"), dict.fromkeys(both, LATTICE), columns=150, quick=False),
         Covered(remedy("spatial-hac"), both, columns=60, quick=False),
         Covered(remedy("spatial-components"), both, columns=150, quick=False),
     ]

@@ -6,6 +6,7 @@ every world (minutes). ``python -m tests.simulation.write`` puts the same figure
 
 from __future__ import annotations
 
+import numpy as np
 import pytest
 
 from tests.simulation.cells import COVERS, SIZED, Bound, Cell, World
@@ -51,3 +52,21 @@ def test_worlds_have_names_of_their_own_and_reasons_where_a_bound_is_not_nominal
             bounds = method.bounds.values() if hasattr(method, "bounds") else [method.bound]
             for bound in bounds:
                 assert bound.why or (bound.low, bound.high) in ((0.95, 1.0), (0.95, 0.95), (0.05, 0.05))
+
+
+def test_six_point_weights_of_three_and_three_means_reject_too_often() -> None:
+    """The slow twin of a bound: plain means, the null imposed, t of two samples; nothing of this package.
+
+    Restricted wild bootstrap with Webb's weights, 2,000 samples of 3 and 3 normal means, 399 draws each.
+    """
+    rng = np.random.default_rng(12)
+    weights = rng.choice(np.sqrt([0.5, 1.0, 1.5]), (399, 6)) * rng.choice([-1.0, 1.0], (399, 6))
+
+    def t(y: np.ndarray) -> np.ndarray:
+        one, two = y[..., :3], y[..., 3:]
+        return np.abs(one.mean(-1) - two.mean(-1)) / np.sqrt(one.var(-1) + two.var(-1))
+
+    y = rng.standard_normal((2000, 6))
+    drawn = t(weights * (y - y.mean(axis=1, keepdims=True))[:, None])
+    p = (1 + np.sum(drawn >= t(y)[:, None], axis=1)) / 400
+    assert 0.07 < np.mean(p <= 0.05) < 0.11
