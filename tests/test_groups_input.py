@@ -328,7 +328,7 @@ REFUSED: list[tuple[str, pd.DataFrame, str, dict[str, Any], str, str, str]] = [
         "nothing is known to have been assigned",
         "assigned=",
     ),
-    ("nothing crosses", table(), "y ~ x", {}, "multiway-cluster", "of clinic no two do", "side by side"),
+    ("nothing crosses", table(), "y ~ x", {}, "multiway-cluster", "clinic does not", "side by side"),
 ]
 
 

@@ -149,6 +149,27 @@ def test_a_series_stands_in_for_eigenvectors_where_no_cluster_holds_much(power, 
     assert short.lost == pytest.approx(long.lost)
 
 
+@pytest.mark.parametrize("delta", [0, 1, 2])
+def test_rows_in_blocks_are_rows_at_once(delta, monkeypatch):
+    rng = np.random.default_rng(8)
+    X = np.column_stack(
+        [np.ones(50), rng.normal(size=(50, 2)), np.arange(50) == 31]
+    )  # row 31 has leverage one
+    Q, W, E = np.linalg.qr(X)[0], rng.normal(size=(4, 3)), rng.normal(size=(50, 2))
+
+    def read():
+        T, lost, at = sandwich.row_weights(Q, W, delta)
+        return T, lost, at, sandwich.row_df(Q, T), sandwich.row_variance(T, E), sandwich.row_meat(T, E)
+
+    whole = read()
+    assert whole[2].tolist() == [31, 31, 31]
+    np.testing.assert_allclose(whole[5], np.einsum("ib,is,it->stb", E**2, whole[0], whole[0]), rtol=1e-12)
+    np.testing.assert_allclose(np.einsum("ssb->sb", whole[5]), whole[4], rtol=1e-12)
+    monkeypatch.setattr(sandwich, "ROWS", 7)
+    for block, one in zip(read(), whole, strict=True):
+        np.testing.assert_allclose(block, one, rtol=1e-12)
+
+
 def test_factors():
     assert sandwich.cluster_factor("CR1", 5, 40, 3) == pytest.approx(5 / 4)
     assert sandwich.cluster_factor("CR1S", 5, 40, 3) == pytest.approx(5 / 4 * 39 / 37)

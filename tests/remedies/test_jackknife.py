@@ -106,7 +106,7 @@ def test_fewer_clusters_than_coefficients_is_told():
 
 def test_one_row_per_cluster_is_refused():
     X, _, y = clustered()
-    with pytest.raises(NotSupported, match="no level"):
+    with pytest.raises(NotSupported, match="every row is a clinic of its own"):
         refit(JACK, "", fits(design(X, group=np.arange(len(y))), y))
 
 

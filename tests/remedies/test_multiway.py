@@ -146,7 +146,7 @@ def test_nested_groups_have_no_second_way():
     X, firm, year, y = table()
     run = fits(design(X, group=firm * 10 + year, outer=firm), y)
     assert MULTI.abouts(run.design) == ()
-    with pytest.raises(NotSupported, match="no level"):
+    with pytest.raises(NotSupported, match="cross each other are needed; district does not"):
         refit(MULTI, "", run)
     with pytest.raises(NotSupported, match="one way of clustering"):
         refit(MULTI, "firm", fits(crossed(X, firm, year), y))

@@ -10,6 +10,7 @@ Pustejovsky & Tipton (2018) for singular I − M_g and for the joint test.
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass
 from typing import Literal
 
@@ -20,6 +21,7 @@ from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 
 Power = Literal["CR0", "CR2", "CR3"]
+ROWS = 65536  # rows of a block where what is made of each row is larger than the row
 SINGULAR = 1e-10  # 1 − λ below this: a direction of the coefficients that one cluster alone decides
 SLIGHT = 0.1  # trace of M_g below which (I − M_g)^power is summed up as a series,
 SERIES = 1e-17  # until its terms are below this
@@ -166,18 +168,44 @@ def cluster_joint_df(a: Array, b: Array) -> float:
 # ---- rows as their own clusters -------------------------------------------------------
 
 
+def _blocks(n: int) -> Iterator[slice]:
+    return (slice(start, start + ROWS) for start in range(0, n, ROWS))
+
+
 def row_weights(Q: Array, W: Array, delta: int) -> tuple[Array, Array, Array]:
     """(n, k) adjusted weights z_i/(1−h_i)^(δ/2), z = QW; then lost (k,) and at (k,) as in ``adjust``.
 
     δ = 0, 1, 2 gives HC0, HC2, HC3. A row of leverage one has no residual; its term is dropped.
     """
-    left = 1.0 - np.einsum("ij,ij->i", Q, Q)
-    alone = left < SINGULAR
-    Z = Q @ W
-    gone = np.where(alone[:, None], Z**2, 0.0) / np.sum(W**2, axis=0)
-    scale = np.where(alone, 0.0, np.where(alone, 1.0, left) ** (-delta / 2))
-    at = gone.argmax(axis=0)
-    return Z * scale[:, None], gone[at, np.arange(W.shape[1])], at
+    T = Q @ W
+    size, k = np.sum(W**2, axis=0), np.arange(W.shape[1])
+    lost, at = np.zeros(len(k)), np.zeros(len(k), dtype=np.int64)
+    for rows in _blocks(len(Q)):
+        left = 1.0 - np.einsum("ij,ij->i", Q[rows], Q[rows])
+        alone = left < SINGULAR
+        if alone.any():
+            gone = np.where(alone[:, None], T[rows] ** 2, 0.0) / size
+            top = gone.argmax(axis=0)
+            here = gone[top, k]
+            at[here > lost] = rows.start + top[here > lost]
+            lost = np.maximum(lost, here)
+        T[rows] *= np.where(alone, 0.0, np.where(alone, 1.0, left) ** (-delta / 2))[:, None]
+    return T, lost, at
+
+
+def row_variance(T: Array, E: Array) -> Array:
+    """(k, B) Σ_i t_i²e_i² for T (n, k), E (n, B)."""
+    return np.asarray(sum((T[rows] ** 2).T @ E[rows] ** 2 for rows in _blocks(len(T))))
+
+
+def row_meat(T: Array, E: Array) -> Array:
+    """(q, q, B) Σ_i e_i² t_i t_i' for T (n, q), E (n, B); no n × q² array."""
+    q, B = T.shape[1], E.shape[1]
+    out = np.zeros((q * q, B))
+    for rows in _blocks(len(T)):
+        products = T[rows, :, None] * T[rows, None, :]
+        out += products.reshape(-1, q * q).T @ E[rows] ** 2
+    return out.reshape(q, q, B)
 
 
 def row_df(Q: Array, T: Array) -> Array:
@@ -185,15 +213,21 @@ def row_df(Q: Array, T: Array) -> Array:
 
     T (n, k) from ``row_weights``, v = t², r = 1 − h; O(np²) per contrast, no n × n array.
     """
-    h = np.einsum("ij,ij->i", Q, Q)
-    out = np.full(T.shape[1], np.nan)
-    for j in range(T.shape[1]):
-        v = T[:, j] ** 2
-        trace = np.sum(v * (1 - h))
-        square = np.sum(v**2 * (1 - 2 * h)) + np.sum((Q.T @ (v[:, None] * Q)) ** 2)
-        if trace > 1e-12 * v.sum() and square > 0:
-            out[j] = trace**2 / square
-    return out
+    k, p = T.shape[1], Q.shape[1]
+    total, trace, square = np.zeros(k), np.zeros(k), np.zeros(k)
+    inner = np.zeros((k, p, p))
+    for rows in _blocks(len(Q)):
+        q = Q[rows]
+        h = np.einsum("ij,ij->i", q, q)
+        v = T[rows] ** 2
+        total += v.sum(axis=0)
+        trace += (1 - h) @ v
+        square += (1 - 2 * h) @ v**2
+        for j in range(k):
+            inner[j] += q.T @ (v[:, j : j + 1] * q)
+    square += np.einsum("kij,kij->k", inner, inner)
+    sound = (trace > 1e-12 * total) & (square > 0)
+    return np.where(sound, trace**2 / np.where(sound, square, 1.0), np.nan)
 
 
 def row_joint_df(Q: Array, T: Array) -> float:

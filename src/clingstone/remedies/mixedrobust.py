@@ -101,12 +101,8 @@ class MixedRobustReady(FittedReady):
         both = algebra.whiten(theta, np.hstack([self.design.Q, rest]))
         Q, R = np.linalg.qr(both[:, :-1])
         W = np.linalg.solve(R.T, self.W)
-        p = Q.shape[1]
-        i, j = np.triu_indices(p)
-        M = np.empty((self.part.count, p, p))
-        M[:, i, j] = M[:, j, i] = self.part.sums(Q[:, i] * Q[:, j])
         power = self.remedy.kind if self.remedy.kind in ("CR2", "CR3") else "CR0"
-        weights = sandwich.adjust(M, W, power)
+        weights = sandwich.adjust(sandwich.grams(Q, self.part), W, power)
         return Whitened(y.coef[:, 0] + delta, weights, self.part.sums(Q * both[:, -1:]))
 
     def _joint(self, seen: list[Whitened], columns: tuple[int, ...]) -> Joint | None:

@@ -48,9 +48,7 @@ class MultiwayReady(LinearReady):
             if S is not None:
                 out += sign * factor * np.einsum("gpb,gqb->pqb", S, S)
             else:  # every cell holds one row
-                rows = self.design.Q[:, :, None] * self.design.Q[:, None, :]
-                flat = rows.reshape(self.design.n, -1).T @ response.residual**2
-                out += sign * factor * flat.reshape(out.shape)
+                out += sign * factor * sandwich.row_meat(self.design.Q, response.residual)
         return out
 
     def meat(self, response: Response) -> Array:
@@ -158,7 +156,7 @@ class MultiwayCluster(Plain):
 
     def lacking(self, design: Design) -> Refusal:
         keys = group_levels(design)
-        found = f"of {listed(keys)} no two do" if keys else "no group level can serve"
+        found = f"{listed(keys)} {'does' if len(keys) == 1 else 'do'} not" if keys else "no level can serve"
         return Refusal(
             f"two groupings that cross each other are needed; {found}",
             "Use cluster-robust, or declare crossed groups side by side with group=.",

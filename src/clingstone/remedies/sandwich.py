@@ -116,13 +116,10 @@ class RowRobustReady(SandwichReady):
         return self.design.n / self.design.m if self.kind == "HC1" else 1.0
 
     def variance(self, response: Response) -> Array:
-        return self._scale * ((self.T**2).T @ response.residual**2)
+        return self._scale * sandwich.row_variance(self.T, response.residual)
 
     def block(self, response: Response, columns: tuple[int, ...]) -> Array:
-        T = self.T[:, list(columns)]
-        q = T.shape[1]
-        products = (T[:, :, None] * T[:, None, :]).reshape(len(T), q * q)
-        return self._scale * (products.T @ response.residual**2).reshape(q, q, -1)
+        return self._scale * sandwich.row_meat(self.T[:, list(columns)], response.residual)
 
     @once
     def _eta(self, columns: tuple[int, ...]) -> float:
