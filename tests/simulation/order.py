@@ -140,7 +140,11 @@ def shocks(N: int, T: int, rho: float) -> World:
         common = cases.ar1(T, rho, B, rng)[tick]
         return np.asarray(np.sqrt(0.5) * (common + rng.standard_normal((N * T, B))))
 
-    both = {"x": COVERS, "z": Bound(0.86, 1.0, PERIODS) if T == 20 else Bound(0.93, 1.0, PERIODS)}
+    few = T == 20
+    both = {
+        "x": Bound(0.93, 1.0, PERIODS) if few else COVERS,
+        "z": Bound(0.86 if few else 0.93, 1.0, PERIODS),
+    }
     narrow = PanelHac(law="normal", bandwidth="textbook", corrected=False)
     found: list[Sized | Covered] = [
         Covered(remedy("cluster-robust"), {"z": SHARED}, at="series"),
