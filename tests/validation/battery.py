@@ -12,7 +12,7 @@ PANEL: dict[str, Any] = {"model": "y ~ x", "group": "g", "time": "t"}
 PLACE: dict[str, Any] = {"model": "y ~ x", "coords": ("east", "north"), "lonlat": False}
 G, S, P = frozenset({"group"}), frozenset({"serial"}), frozenset({"spatial"})
 W = w.World
-FEW = 10  # columns of y on one design where each is searched by itself
+SOME, FEW = 20, 10  # columns of y on one design where each takes longer
 
 
 def _independent() -> list[w.World]:
@@ -20,12 +20,12 @@ def _independent() -> list[w.World]:
         W("independent, 12 groups of 5, x in rows", w.groups(12, 5, 0.0, "row"), GROUP),
         W("independent, 12 groups of 5, x of groups", w.groups(12, 5, 0.0, "group"), GROUP),
         W("independent, 40 groups of 4, x of groups", w.groups(40, 4, 0.0, "group"), GROUP),
-        W("independent, 40 times, x a trend", w.series(40, 0.0, "trend"), TIME),
-        W("independent, 100 times, x a trend", w.series(100, 0.0, "trend"), TIME),
-        W("independent, 100 times, x autoregressive", w.series(100, 0.0, "ar"), TIME),
+        W("independent, 40 times, x a trend", w.series(40, 0.0, "trend"), TIME, batch=SOME),
+        W("independent, 100 times, x a trend", w.series(100, 0.0, "trend"), TIME, batch=SOME),
+        W("independent, 100 times, x autoregressive", w.series(100, 0.0, "ar"), TIME, batch=SOME),
         W("independent, 60 places, x rough", w.places(60, 20, 0.0, "rough"), PLACE, batch=FEW),
         W("independent, 60 places, x smooth", w.places(60, 20, 0.0, "smooth"), PLACE, batch=FEW),
-        W("independent, 12 series of 6, x in rows", w.panel(12, 6, 0.0, 0.0, "row"), PANEL),
+        W("independent, 12 series of 6, x in rows", w.panel(12, 6, 0.0, 0.0, "row"), PANEL, batch=SOME),
     ]
 
 
@@ -65,13 +65,31 @@ def _times() -> list[w.World]:
     for rho in (0.3, 0.7):
         for n in (40, 100, 300):
             for how, words in (("trend", "x a trend"), ("ar", "x autoregressive")):
-                out.append(W(f"ρ {rho}, {n} times, {words}", w.series(n, rho, how), TIME, S))
+                out.append(W(f"ρ {rho}, {n} times, {words}", w.series(n, rho, how), TIME, S, batch=SOME))
     out += [
-        W("ρ 0.6 in 30 series of 5, x in rows", w.panel(30, 5, 0.0, 0.6, "row"), PANEL, S),
-        W("ρ 0.6 in 30 series of 5, x of groups", w.panel(30, 5, 0.0, 0.6, "group"), PANEL, S),
-        W("ICC 0.3 and ρ 0.5, 15 × 8, x autoregressive", w.panel(15, 8, 0.3, 0.5, "ar"), PANEL, G | S),
-        W("ICC 0.3 and ρ 0.5, 15 × 8, x of groups", w.panel(15, 8, 0.3, 0.5, "group"), PANEL, G | S),
-        W("ICC 0.3 and ρ 0.5, 6 × 12, x of groups", w.panel(6, 12, 0.3, 0.5, "group"), PANEL, G | S),
+        W("ρ 0.6 in 30 series of 5, x in rows", w.panel(30, 5, 0.0, 0.6, "row"), PANEL, S, batch=SOME),
+        W("ρ 0.6 in 30 series of 5, x of groups", w.panel(30, 5, 0.0, 0.6, "group"), PANEL, S, batch=SOME),
+        W(
+            "ICC 0.3 and ρ 0.5, 15 × 8, x autoregressive",
+            w.panel(15, 8, 0.3, 0.5, "ar"),
+            PANEL,
+            G | S,
+            batch=SOME,
+        ),
+        W(
+            "ICC 0.3 and ρ 0.5, 15 × 8, x of groups",
+            w.panel(15, 8, 0.3, 0.5, "group"),
+            PANEL,
+            G | S,
+            batch=SOME,
+        ),
+        W(
+            "ICC 0.3 and ρ 0.5, 6 × 12, x of groups",
+            w.panel(6, 12, 0.3, 0.5, "group"),
+            PANEL,
+            G | S,
+            batch=SOME,
+        ),
     ]
     return out
 
@@ -99,8 +117,14 @@ def _places() -> list[w.World]:
 def _means() -> list[w.World]:
     return [
         W("missed curve in x, 12 groups", w.missed(12, 6, "x"), GROUP, covered=False, wrong=True),
-        W("missed curve in z along time", w.missed(12, 6, "z"), {**TIME, "model": "y ~ x + z"}, wrong=True),
-        W("missed trend, 72 times, x rough", w.missed(12, 6, "trend"), TIME, wrong=True),
+        W(
+            "missed curve in z along time",
+            w.missed(12, 6, "z"),
+            {**TIME, "model": "y ~ x + z"},
+            wrong=True,
+            batch=SOME,
+        ),
+        W("missed trend, 72 times, x rough", w.missed(12, 6, "trend"), TIME, wrong=True, batch=SOME),
     ]
 
 
@@ -112,12 +136,14 @@ def _decoys() -> list[w.World]:
             w.panel(15, 8, 0.3, 0.0, "group"),
             PANEL,
             G,
+            batch=SOME,
         ),
         W(
             "ρ 0.5 alone, groups declared too, 15 × 8, x of groups",
             w.panel(15, 8, 0.0, 0.5, "group"),
             PANEL,
             S,
+            batch=SOME,
         ),
     ]
 
@@ -127,10 +153,28 @@ def _wrong_models() -> list[w.World]:
     return [
         W("spread grows with x, 100 rows in 20 groups", w.fanned(100), GROUP),
         W("group effects go with x, 20 groups of 6", w.endogenous(20, 6, 0.8), GROUP, G),
-        W("slow process under noise, 100 times, x a trend", w.noisy(100, 0.9, 0.5, "trend"), TIME, S),
-        W("slow process under noise, 100 times, x autoregressive", w.noisy(100, 0.9, 0.5, "ar"), TIME, S),
-        W("slow process under noise, 300 times, x a trend", w.noisy(300, 0.9, 0.5, "trend"), TIME, S),
-        W("errors repeat after 12 times, 120 times, x repeats", w.seasonal(120, 12), TIME, S),
+        W(
+            "slow process under noise, 100 times, x a trend",
+            w.noisy(100, 0.9, 0.5, "trend"),
+            TIME,
+            S,
+            batch=SOME,
+        ),
+        W(
+            "slow process under noise, 100 times, x autoregressive",
+            w.noisy(100, 0.9, 0.5, "ar"),
+            TIME,
+            S,
+            batch=SOME,
+        ),
+        W(
+            "slow process under noise, 300 times, x a trend",
+            w.noisy(300, 0.9, 0.5, "trend"),
+            TIME,
+            S,
+            batch=SOME,
+        ),
+        W("errors repeat after 12 times, 120 times, x repeats", w.seasonal(120, 12), TIME, S, batch=SOME),
     ]
 
 

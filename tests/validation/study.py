@@ -5,7 +5,7 @@
 
 appends one JSON line per design of a world to OUT; ``tests.validation.write`` turns them into
 docs/validation.md. The columns of y on one design are examined together, by the rules alone; the first
-columns of some designs go through ``clingstone.examine`` as well, and it is noted whether the two agree.
+column of a first design goes through ``clingstone.examine`` as well, and it is noted whether the two agree.
 With ``--rehearsed`` every table goes through ``clingstone.examine`` with its defaults, one to a design.
 
 Design d of a world has the seed (SEED, crc32 of its name, d), so that a study can be stopped, continued
@@ -44,7 +44,7 @@ from tests.validation.worlds import World
 
 SEED = 20_261_201
 DRAWS = 1000
-CHECKED = 3  # designs of a world whose first column goes through the front door as well
+CHECKED = 1  # designs of a world whose first column goes through the front door as well
 RULES, REHEARSED = "rules", "rehearsed"
 NEAR = 1e-4  # of its width: what two ways to one interval may differ by
 BY_NAME = {world.name: world for world in WORLDS}

@@ -219,7 +219,7 @@ def test_strong_serial_dependence_is_found():
     name = "ρ 0.7, 40 times, x autoregressive"
     found = tally.tally(BY_NAME[name], lines(name, 1))
     assert found.exact.value >= 0.9
-    assert found.advised.value > 0.95 - 4 * np.sqrt(0.95 * 0.05 / 50)
+    assert found.advised.value > 0.95 - 4 * np.sqrt(0.95 * 0.05 / 20)
 
 
 # ---- the page ------------------------------------------------------------------------------------
