@@ -27,12 +27,15 @@ def extend(design: Design, name: str, columns: Array) -> Design:
     rest = design.basis.project(columns)
     size = np.linalg.norm(columns, axis=0)
     rest = rest[:, np.linalg.norm(rest, axis=0) > 1e-9 * np.where(size == 0, 1.0, size)]
-    drop = set(aliased(rest)) if rest.shape[1] else set()
-    keep = [j for j in range(rest.shape[1]) if j not in drop]
-    if not keep:
+    if not rest.shape[1]:
         raise NotSupported(f"the model already spans {name}")
-    p, k = design.p, len(keep)
-    basis = design.basis.extend(rest[:, keep])
+    try:
+        new = Basis.of(rest)
+    except ValueError:  # some columns hang on others
+        drop = aliased(rest)
+        new = Basis.of(np.delete(rest, drop, axis=1))
+    p, k = design.p, new.p
+    basis = design.basis.beside(new)
     names = tuple(f"{name} {j + 1}" for j in range(k)) if k > 1 else (name,)
     term = Term(name, tuple(range(p, p + k)), "numeric")
     pad = (0.0,) * k

@@ -146,15 +146,15 @@ def _reached(design: Design, passed: npt.NDArray[np.int16], K: int, values: Arra
 @once
 def steps(design: Design) -> Steps:
     """The times at which a step is looked for, those left out whose level the model holds already."""
-    time = series_of(design).elapsed
-    distinct, rows = np.unique(time, return_counts=True)
+    distinct, codes = series_of(design).times
+    rows = np.bincount(codes)
     share = (np.cumsum(rows) - rows) / design.n
     inner = distinct[(share >= TRIM) & (share <= 1 - TRIM)]
     if len(inner) < 3:
         raise NotSupported("too few times on which a step could have come", "5 or more would be needed.")
     if len(inner) > TIMES:
         inner = inner[np.unique(np.linspace(0, len(inner) - 1, TIMES).round().astype(int))]
-    passed = np.searchsorted(inner, time, side="right").astype(np.int16)
+    passed = np.searchsorted(inner, distinct, side="right").astype(np.int16)[codes]
     size = _reached(design, passed, len(inner), np.ones(design.n) if design.root is None else design.root)
     cross = _reached(design, passed, len(inner), design.Q).T
     kept = np.sqrt(np.maximum(size - np.sum(cross**2, axis=0), 0.0)) > HELD * np.sqrt(size)

@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 import numpy.typing as npt
@@ -23,13 +23,18 @@ ALONE: frozenset[str] = frozenset()
 
 @dataclass(frozen=True, eq=False)
 class Item:
-    """One test at one place, alone or given other structures: its reading, or why there is none."""
+    """One test at one place, alone or given other structures: its reading, or why there is none.
+
+    curve, more : what figures draw of it, of a test read alone on one column of y.
+    """
 
     test: Test
     about: About
     given: frozenset[str]
     reading: Reading | None
     refusal: Refusal | None = None
+    curve: Curve | None = None
+    more: tuple[Curve, ...] = ()
 
     @property
     def decides(self) -> bool:
@@ -58,7 +63,7 @@ def gather(fits: Fits, tests: Sequence[Test] = TESTS) -> Evidence:
     primary tests over the structures, and the curve tests under dependence over the covariates; the
     others are exploratory and not adjusted. A refusal becomes a Finding ``not applicable``.
     """
-    return told(read_columns(fits, tests), fits)
+    return told(read_columns(fits, tests, drawn=True), fits)
 
 
 def told(columns: Columns, fits: Fits, b: int | None = None) -> Evidence:
@@ -81,19 +86,21 @@ def told(columns: Columns, fits: Fits, b: int | None = None) -> Evidence:
     return Evidence(tuple(out))
 
 
-def read_columns(fits: Fits, tests: Sequence[Test] = TESTS, given: bool | None = None) -> Columns:
+def read_columns(
+    fits: Fits, tests: Sequence[Test] = TESTS, given: bool | None = None, *, drawn: bool = False
+) -> Columns:
     """All tests on all B columns, without words.
 
     given : also read them given the other structures; by default only for a single column, because
     it fits the joint model to every column (seconds per hundred columns with three structures).
     """
     given = fits.response.B == 1 if given is None else given
+    B = fits.response.B
     with fits.run.progress("tests", len(tests)) as advance:
         items: list[Item] = []
         for test in tests:
-            items.extend(_items(fits, test, given))
+            items.extend(_items(fits, test, given, drawn and B == 1))
             advance(1)
-    B = fits.response.B
     p = np.array([_p(item, B) for item in items]).reshape(len(items), B)
     adjusted = p.copy()
     for family in (
@@ -114,7 +121,7 @@ def read_column(fits: Fits, test: Test, about: About, given: frozenset[str] = AL
         return Item(test, about, given, None, Refusal(str(refused), refused.hint))
 
 
-def _items(fits: Fits, test: Test, given: bool) -> Iterable[Item]:
+def _items(fits: Fits, test: Test, given: bool, drawn: bool) -> Iterable[Item]:
     design = fits.design
     if any(getattr(design, part) is None for part in test.needs.parts):
         return
@@ -124,9 +131,18 @@ def _items(fits: Fits, test: Test, given: bool) -> Iterable[Item]:
         yield Item(test, abouts[0], ALONE, None, refusal)
         return
     for about in abouts:
-        yield read_column(fits, test, about)
+        item = read_column(fits, test, about)
+        yield _drawn(fits, item) if drawn and item.reading is not None else item
         for others in test.givens(fits, about) if given else ():
             yield read_column(fits, test, about, others)
+
+
+def _drawn(fits: Fits, item: Item) -> Item:
+    try:
+        curve = item.test.curve(fits, item.about)
+    except NotSupported:
+        curve = None
+    return replace(item, curve=curve, more=item.test.more(fits, item.about))
 
 
 def _p(item: Item, B: int) -> Array:
@@ -179,9 +195,9 @@ def _finding(
         null=test.null,
         given=tuple(sorted(item.given)),
         primary=test.primary and about.primary and not item.given,
-        curve=_curve(fits, item) if words else None,
+        curve=item.curve,
         rows=shown.rows,
-        more=_more(fits, item) if words else (),
+        more=item.more,
     )
 
 
@@ -210,18 +226,3 @@ def _label(fits: Fits, key: str) -> str:
         groups = fits.design.group
         return level_name(level) if groups is None else groups.title(level)
     return {"serial": "order in time", "spatial": "place"}[family]
-
-
-def _more(fits: Fits, item: Item) -> tuple[Curve, ...]:
-    if item.reading is None or item.given or fits.response.B != 1:
-        return ()
-    return item.test.more(fits, item.about)
-
-
-def _curve(fits: Fits, item: Item) -> Curve | None:
-    if item.reading is None or item.given or fits.response.B != 1:
-        return None
-    try:
-        return item.test.curve(fits, item.about)
-    except NotSupported:
-        return None

@@ -2,15 +2,16 @@
 
 from __future__ import annotations
 
+from collections.abc import Iterator
 from dataclasses import dataclass, field
-from typing import TYPE_CHECKING
+from typing import TYPE_CHECKING, Any
 
 import numpy as np
 import numpy.typing as npt
 from scipy import special, stats
 
 from clingstone.design.derived import whole
-from clingstone.design.design import Design
+from clingstone.design.design import Design, rows_of
 from clingstone.design.response import Response
 from clingstone.display import bounds, count, decimals_for, number, p_value, significant
 from clingstone.evidence.finding import About, Reading, column
@@ -284,16 +285,35 @@ def row_codes(design: Design) -> npt.NDArray[np.int64]:
 
     Columns are compared at nine digits of their size: QR leaves rounding in the last few.
     """
-    X = np.column_stack([design.Q @ design.basis.R, *design.covariates.values()])
-    if design.root is not None:
-        X[:, : design.p] /= design.root[:, None]
-    scale = np.abs(X).max(axis=0)
-    grid = np.round(X / np.where(scale > 0, scale, 1.0) * 1e9)
-    ids = [part.codes for part in design.partitions.values()]
+    codes, live, given = np.zeros(design.n, dtype=np.int64), np.arange(design.n), 0
+    for values in _columns(design):
+        # Only rows that are still like another one are looked at again.
+        order = live[np.lexsort((values[live], codes[live]))]
+        new = np.append(True, (np.diff(codes[order]) != 0) | (np.diff(values[order]) != 0))
+        codes[order] = given + np.cumsum(new)
+        given += int(new.sum())
+        live = order[~(new & np.append(new[1:], True))]
+        if not len(live):
+            break
+    return np.unique(codes, return_inverse=True)[1].ravel().astype(np.int64)
+
+
+def _columns(design: Design) -> Iterator[npt.NDArray[Any]]:
+    """What rows are compared by, one (n,) column at a time; structures first, which tell most rows apart."""
+    for part in design.partitions.values():
+        yield part.codes
     if design.serial is not None:
-        ids.append(np.unique(design.serial.elapsed, return_inverse=True)[1].astype(np.int32))
-    keys = np.column_stack([grid, *ids])
-    return np.asarray(np.unique(keys, axis=0, return_inverse=True)[1]).ravel().astype(np.int64)
+        yield design.serial.times[1]
+    for w in design.basis.R.T:
+        yield _digits(rows_of(design, design.Q @ w))
+    for x in design.covariates.values():
+        yield _digits(np.asarray(x, dtype=float))
+
+
+def _digits(x: Array) -> Array:
+    """Nine digits of the size of a column."""
+    scale = float(np.abs(x).max()) or 1.0
+    return np.asarray(np.round(x / scale * 1e9))
 
 
 @dataclass(frozen=True)
@@ -345,7 +365,8 @@ class Duplicates(Plain):
 
 def copies_of(codes: npt.NDArray[np.int64], y: Array) -> npt.NDArray[np.int64]:
     """Rows whose code and y (to nine digits) have occurred in an earlier row."""
-    scale = float(np.abs(y).max()) or 1.0
-    order = np.lexsort((np.arange(len(y)), np.round(y / scale * 1e9), codes))
-    same = (np.diff(codes[order]) == 0) & (np.diff(np.round(y[order] / scale * 1e9)) == 0)
+    shared = np.flatnonzero(np.bincount(codes)[codes] > 1)
+    digits = _digits(y)
+    order = shared[np.lexsort((shared, digits[shared], codes[shared]))]
+    same = (np.diff(codes[order]) == 0) & (np.diff(digits[order]) == 0)
     return np.sort(order[1:][same])

@@ -16,7 +16,7 @@ from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.read import Plain, degenerate, direction
 from clingstone.evidence.serial import series_of
 from clingstone.maths.markov import Links
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, Codes
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -104,7 +104,7 @@ class Table:
 
     rows: npt.NDArray[np.int64]
     series: npt.NDArray[np.int64]
-    time: npt.NDArray[np.int64]
+    time: Codes
     shape: tuple[int, int]
     left_out: int
 
@@ -117,15 +117,12 @@ class Table:
 
 def shared_times(design: Design) -> int:
     """Times at which two series or more have a row."""
-    ticks = series_of(design).tick
-    assert ticks is not None
-    return int(np.sum(np.unique(ticks, return_counts=True)[1] >= 2))
+    return int(np.sum(np.bincount(series_of(design).times[1]) >= 2))
 
 
 def _table(design: Design, rng: np.random.Generator) -> Table:
     series = series_of(design)
-    assert series.tick is not None
-    ticks, time = np.unique(series.tick, return_inverse=True)
+    times, time = series.times
     shared = shared_times(design)
     if shared < TIMES:
         raise NotSupported(
@@ -141,7 +138,7 @@ def _table(design: Design, rng: np.random.Generator) -> Table:
     place = np.full(series.part.count, -1)
     place[chosen] = np.arange(len(chosen))
     rows = np.flatnonzero(place[codes] >= 0)
-    return Table(rows, place[codes[rows]], time[rows], (len(chosen), len(ticks)), len(usable) - len(chosen))
+    return Table(rows, place[codes[rows]], time[rows], (len(chosen), len(times)), len(usable) - len(chosen))
 
 
 def pairs(E: Array) -> tuple[float, float, float, int]:

@@ -76,12 +76,14 @@ class Basis:
 
     def extend(self, columns: Array) -> Basis:
         """Basis of [X, columns], the old columns first and unchanged. Columns (n, k)."""
-        cross = self.Q.T @ columns
-        new = Basis.of(self.project(columns))
-        p, k = self.p, columns.shape[1]
+        return self.beside(Basis.of(self.project(columns)), self.Q.T @ columns)
+
+    def beside(self, rest: Basis, cross: Array | float = 0.0) -> Basis:
+        """Basis of [X, Q cross + columns of rest], where rest is orthogonal to this basis. cross : (p, k)."""
+        p, k = self.p, rest.p
         R = np.zeros((p + k, p + k))
-        R[:p, :p], R[:p, p:], R[p:, p:] = self.R, cross, new.R
-        return Basis(frozen(np.hstack([self.Q, new.Q])), frozen(R))
+        R[:p, :p], R[:p, p:], R[p:, p:] = self.R, cross, rest.R
+        return Basis(frozen(np.hstack([self.Q, rest.Q])), frozen(R))
 
 
 def aliased(X: Array, tolerance: float = RANK_TOLERANCE) -> tuple[int, ...]:

@@ -178,7 +178,10 @@ def _visits(design: Design) -> tuple[npt.NDArray[np.int64], tuple[str, ...]]:
 
 
 def _recurs(part: Partition, visit: npt.NDArray[np.int64]) -> bool:
-    pairs = part.codes.astype(np.int64) * (int(visit.max()) + 1) + visit
+    most = int(visit.max()) + 1
+    pairs = part.codes.astype(np.int64) * most + visit
+    if part.count * most <= 4 * part.n:  # counted, without a sort
+        return bool(np.bincount(pairs).max() > 1)
     return len(np.unique(pairs)) < len(pairs)
 
 

@@ -10,7 +10,7 @@ import numpy as np
 import numpy.typing as npt
 
 from clingstone.display import count, listed, rows
-from clingstone.maths.once import Array, frozen, once
+from clingstone.maths.once import Array, Codes, frozen, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import InputError, NotSupported
 from clingstone.structure.clock import Clock, read
@@ -63,6 +63,21 @@ class Series:
         else:
             out[1:][same] = (np.diff(self.elapsed) / self.step)[same]
         return out
+
+    @property
+    @once
+    def times(self) -> tuple[Array, Codes]:
+        """Distinct elapsed times (T,), rising, and which of them each row has (n,)."""
+        if self.tick is not None:
+            place = self.tick - self.tick.min()
+            if place.max() < 4 * len(place):  # counted, without a sort
+                used = np.bincount(place) > 0
+                codes = (np.cumsum(used) - 1)[place].astype(np.int32)
+                distinct = np.empty(int(used.sum()))
+                distinct[codes] = self.elapsed
+                return frozen(distinct), frozen(codes)
+        distinct, codes = np.unique(self.elapsed, return_inverse=True)
+        return frozen(distinct), frozen(codes.astype(np.int32).ravel())
 
     @property
     @once
