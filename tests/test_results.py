@@ -214,3 +214,13 @@ def test_rounding_noise_beside_large_numbers_is_forgiven_only_in_lists() -> None
 def test_words_and_verdicts_must_be_equal() -> None:
     found = compare(_with(status="ok"), _with(status="boundary"))
     assert found == ("refits[word].intervals[word].status: ok and boundary",)
+
+
+def test_long_texts_are_shown_from_where_they_part() -> None:
+    """A methods section that differs in one number once showed two equal beginnings."""
+    start = "# Methods: y ~ x\n\n" + "Words that agree. " * 20
+    first, second = (replace(plain.results(), methods=start + end) for end in ("It was 3.1.", "It was 3.2."))
+    (told,) = compare(first, second)
+    assert told.startswith("methods: …")
+    assert told.endswith("It was 3.2.")
+    assert "It was 3.1. and …" in told

@@ -257,6 +257,8 @@ def _differences(path: str, a: Any, b: Any, tolerance: float, floor: float) -> I
     elif isinstance(a, list) and isinstance(b, list):
         yield from _in_lists(path, a, b, tolerance)
     elif not _same(a, b, tolerance, floor):
+        if isinstance(a, str) and isinstance(b, str):
+            a, b = _from_first_difference(a, b)
         yield f"{path}: {_brief(a)} and {_brief(b)}"
 
 
@@ -285,6 +287,16 @@ def _same(a: Any, b: Any, tolerance: float, floor: float) -> bool:
     if numbers and (isinstance(a, float) or isinstance(b, float)):
         return math.isclose(a, b, rel_tol=tolerance, abs_tol=max(floor, 1e-300))
     return type(a) is type(b) and a == b
+
+
+def _from_first_difference(a: str, b: str) -> tuple[str, str]:
+    """Two long texts from shortly before they part, in one line each."""
+    if max(len(a), len(b)) <= 60:
+        return a, b
+    parts = (k for k, (x, y) in enumerate(zip(a, b, strict=False)) if x != y)
+    start = max(0, next(parts, min(len(a), len(b))) - 20)
+    cut = [("…" if start else "") + " ".join(text[start : start + 200].split()) for text in (a, b)]
+    return cut[0], cut[1]
 
 
 def _brief(value: Any) -> str:
