@@ -50,6 +50,7 @@ def test_serial_and_spatial_truths_have_their_own_rival():
     have = found(wells())
     assert have[-1].different == "smooth field"
     assert len(have) == 6
+    assert have[0].words.endswith(" map units")
 
 
 def sloped(sd: float, seed: int = 6) -> Fits:

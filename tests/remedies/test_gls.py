@@ -6,12 +6,14 @@ from dataclasses import replace
 
 import numpy as np
 import pytest
+from scipy import optimize
 
 from clingstone.covariance import information
 from clingstone.design.design import Contrast, Term
+from clingstone.maths import reml
 from clingstone.needs import NotSupported
 from clingstone.remedies import explain, refit, remedy
-from clingstone.remedies.gls import TOGETHER
+from clingstone.remedies.gls import TOGETHER, _most_likely
 from tests.remedies.cases import ar1, clustered, design, fits
 
 MIXED, AR1, SPATIAL, JOINT = (remedy(i) for i in ("mixed-intercept", "ar1", "spatial-gls", "joint"))
@@ -215,13 +217,33 @@ def test_too_many_cells_in_one_block_take_satterthwaite_and_say_so(monkeypatch):
     assert "too many groups together" in found.notes[0]
 
 
+def test_maximum_likelihood_of_places_is_where_a_simplex_ends():
+    X, xy, y = field(sites=60, repeats=1)
+    run = fits(design(X, xy=xy), y)
+    algebra, model = run.algebra({"spatial"}), run[{"spatial"}]
+
+    def minus_two(theta):
+        gram = algebra.gram(theta, run.response)
+        return gram.logdet + reml.profiled(reml.rss(gram), run.design.n)[0]
+
+    start = model.theta[:, 0]
+    box = [(axis.low, axis.high) for axis in algebra.parameters]
+    tight = {"xatol": 1e-7, "fatol": 1e-9}
+    simplex = optimize.minimize(minus_two, start, method="Nelder-Mead", bounds=box, options=tight)
+    found = _most_likely(run.response, start, model.at_bound[:, 0], algebra)
+    assert minus_two(found) == pytest.approx(simplex.fun, abs=1e-6)
+    assert minus_two(found) < minus_two(start) - 1e-3
+
+
 def test_sites_with_repeats_take_their_own_intercept_along():
     X, xy, y = field(sites=30, repeats=3)
     run = fits(design(X, xy=xy), y)
     assert SPATIAL.node(run) == {"group:site", "spatial"}
     account = refit(SPATIAL, "", run).account
     assert "variance of place, unstructured" in dict(account.items)
-    assert "practical range (correlation 0.05)" in dict(account.items)
+    assert run.design.spatial is not None
+    said = dict(account.items)["practical range (correlation 0.05)"]
+    assert said.split(" ", 1)[1] == run.design.spatial.unit
     named = fits(design(X, xy=xy, group=np.unique(xy, axis=0, return_inverse=True)[1].ravel()), y)
     assert SPATIAL.node(named) == {"group:clinic", "spatial"}
     assert refit(SPATIAL, "", named).get("x2").se == pytest.approx(

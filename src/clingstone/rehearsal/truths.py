@@ -140,8 +140,9 @@ def _truth(fits: Fits, node: frozenset[str], theta: Array, name: str) -> Truth:
             if not fits.components[key].repeats:
                 continue
         said.append(f"share of {label} {number(float(variances[key][0]) / total, 2)}")
-        if key == "spatial" and np.isfinite(shape["spatial.range"]):
-            said.append(f"practical range {significant(shape['spatial.range'])}")
+        sites = fits.design.spatial
+        if key == "spatial" and sites is not None and np.isfinite(shape["spatial.range"]):
+            said.append(f"practical range {significant(shape['spatial.range'])} {sites.unit}")
     words = "; ".join(said) if said else "independent rows"
     return Truth(name, words, keys, tuple(float(v) for v in theta), sigma2)
 

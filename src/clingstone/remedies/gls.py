@@ -109,7 +109,8 @@ class GlsReady(FittedReady):
 
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
-        found = gls_account(self.remedy.estimation, self.rule, self.components, fits[node])
+        unit = "" if fits.design.spatial is None else fits.design.spatial.unit
+        found = gls_account(self.remedy.estimation, self.rule, self.components, fits[node], unit)
         return replace(found, items=(*found.items, *map_items(fits, node)))
 
     # ---- one column ----------------------------------------------------------------------

@@ -4,6 +4,8 @@ from __future__ import annotations
 
 from typing import TYPE_CHECKING
 
+import numpy as np
+
 from clingstone.covariance.components import Component
 from clingstone.display import number, significant
 from clingstone.remedies.remedy import Account
@@ -24,8 +26,10 @@ _COVARIANCE = {
 }
 
 
-def gls_account(estimation: str, rule: str, components: tuple[Component, ...], model: ErrorModel) -> Account:
-    """Estimator, covariance, factor, df rule and every error parameter of a GLS fit."""
+def gls_account(
+    estimation: str, rule: str, components: tuple[Component, ...], model: ErrorModel, unit: str
+) -> Account:
+    """Estimator, covariance, factor, df rule and every error parameter of a GLS fit; unit : of the map."""
     parts = " and ".join(_part(c) for c in components)
     variances = {key: float(v[0]) for key, v in model.variances.items()}
     # An AR(1) process is the row noise itself: what it shares with its neighbours and the rest are one.
@@ -39,7 +43,10 @@ def gls_account(estimation: str, rule: str, components: tuple[Component, ...], m
     levels = [c.label for c in components if c.family == "group"]
     items += [(f"intraclass correlation of {name}", number(shown[name] / total, 3)) for name in levels]
     known = [key for key in _SHAPES if key in model.shape]
-    items += [(_SHAPES[key], significant(float(model.shape[key][0]), 4)) for key in known]
+    for key in known:
+        value = float(model.shape[key][0])
+        of = f" {unit}" if key == "spatial.range" and np.isfinite(value) else ""
+        items.append((_SHAPES[key], significant(value, 4) + of))
     if bool(model.at_bound.any()):
         named = [n for n, at in zip(model.names, model.at_bound[:, 0], strict=True) if at]
         items.append(("at the end of its range", ", ".join(named)))
