@@ -110,8 +110,8 @@ def levels(N: int, T: int) -> World:
 CR0 = Bound(
     0.05,
     0.11,
-    "a variance over series without small-sample factor and n − 2 df, as the R package plm gives it, rejects too "
-    "often with few series (Cameron & Miller 2015)",
+    "a variance over series without small-sample factor and n − 2 df, as the R package plm gives it, rejects "
+    "too often with few series (Cameron & Miller 2015)",
 )
 FEW_TIMES = Bound(0.03, 0.05, "correlations over eight times are not yet normal (Pesaran 2015)")
 
