@@ -187,9 +187,14 @@ def test_facts_of_places_in_data():
 
 
 def test_an_advice_that_no_rehearsal_tried_says_so():
-    assert "not-rehearsed" in cautions(decide(trial()))
+    assert "not-rehearsed" not in cautions(decide(trial()))  # who asked for none is told nothing new
     tried = Scores((Score("mixed-intercept", "clinic", 0.95, 0.005, 2.0, 0.95, "estimate"),))
     assert "not-rehearsed" not in cautions(decide(trial(), scores=tried))
+    firm = {"unequal_variances": True, "focus_at_group_level": False, "df_of_the_robust_refit": 12.0}
+    left_out = decide(
+        facts(ledger(group="present"), groups=30, effective_clusters=25.0, **firm), scores=tried
+    )
+    assert (left_out.remedy, "not-rehearsed" in cautions(left_out)) == ("cluster-robust", True)
     nothing = decide(facts(ledger(group="not detected")))
     assert "not-rehearsed" not in cautions(nothing)
 

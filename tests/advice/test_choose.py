@@ -78,12 +78,22 @@ def test_which_group_remedy(values, remedy):
         ({"rows_in_the_longest_series": 400, "series": 1, "regular_times": True}, "ar1", "supported"),
         (
             {
-                "rows_in_the_longest_series": 400,
+                "rows_in_the_longest_series": 200,
                 "series": 1,
                 "regular_times": True,
                 "focus_smooth_in_time": True,
             },
             "hac",
+            "supported",
+        ),
+        (
+            {
+                "rows_in_the_longest_series": 400,
+                "series": 1,
+                "regular_times": True,
+                "focus_smooth_in_time": True,
+            },
+            "ar1",
             "supported",
         ),
         (
@@ -344,8 +354,8 @@ def test_a_rehearsal_that_falls_short_lowers_the_state():
     assert not [c for c in held.cautions if c.rule in ("none-held", "rehearsal-fell-short")]
 
 
-def test_a_firm_rule_that_a_rehearsal_speaks_against_says_so():
-    found = facts(
+def firm_rule():
+    return facts(
         ledger(group="present"),
         groups=30,
         effective_clusters=25.0,
@@ -353,9 +363,27 @@ def test_a_firm_rule_that_a_rehearsal_speaks_against_says_so():
         unequal_variances=True,
         df_of_the_robust_refit=12.0,
     )
-    advice = decide(found, scores=scored(cluster_robust=(0.90, 1.4), mixed_intercept=(0.95, 1.0)))
+
+
+def test_a_firm_rule_gives_way_where_its_remedy_falls_clearly_short_and_another_holds():
+    """The floor is 0.95 − 2 · 0.007 − 0.01 = 0.926, and clearly below it 0.912."""
+    advice = decide(firm_rule(), scores=scored(cluster_robust=(0.90, 1.4), mixed_intercept=(0.95, 1.0)))
+    assert (advice.remedy, advice.state) == ("mixed-intercept", "supported")
+    told = advice.because[-1]
+    assert told.rule == "spread-in-groups: gave way"
+    assert "in only 90\u00a0% of replicates" in told.sentence
+
+
+def test_a_firm_rule_that_a_rehearsal_doubts_a_little_stays_and_says_so():
+    advice = decide(firm_rule(), scores=scored(cluster_robust=(0.92, 1.4), mixed_intercept=(0.95, 1.0)))
     assert (advice.remedy, advice.state) == ("cluster-robust", "supported with caveat")
     assert [c.rule for c in advice.cautions if c.rule.startswith("rehearsal")] == ["rehearsal-fell-short"]
+
+
+def test_a_firm_rule_stays_where_no_other_remedy_holds():
+    advice = decide(firm_rule(), scores=scored(cluster_robust=(0.90, 1.4), mixed_intercept=(0.80, 1.0)))
+    assert (advice.remedy, advice.state) == ("cluster-robust", "supported with caveat")
+    assert advice.because[-1].rule == "spread-in-groups"
 
 
 def test_a_rehearsal_at_the_edge_of_its_error_only_warns():

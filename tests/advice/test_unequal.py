@@ -171,3 +171,15 @@ def test_the_robust_pooled_interval_is_not_led_to_where_it_mixes_two_effects():
             **values,
         )
         assert settle(synthetic.shortlist(found, refits), found, refits).remedy == remedy
+
+
+def test_a_season_of_two_calendar_years_comes_first_though_dependence_takes_most_of_it():
+    """730 days are two years of the calendar, and not quite twice 365.25 days."""
+    rng = np.random.default_rng(12)
+    n = 730
+    e = make.ar1(rng, 1, n, 0.7)
+    y = e + 1.5 * e.std() * np.cos(2 * np.pi * np.arange(n) / 365.25)
+    advice = advise(make.fits(make.design({"x": (np.arange(n) >= 365) * 1.0}, tick=np.arange(n)), y))
+    assert advice.state == "mean first"
+    assert advice.because[0].rule == "season-first"
+    assert "season of the year" in advice.headline

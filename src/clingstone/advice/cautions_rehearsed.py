@@ -10,8 +10,8 @@ REHEARSED = (
         "not-rehearsed",
         fact("advised refit not rehearsed"),
         Then("caution"),
-        "No rehearsal tried the advised refit ({name of the advised refit}) on this design: how often its "
-        "interval holds the true value here is not known.",
+        "The rehearsal left out the advised refit ({name of the advised refit}): how often its interval "
+        "holds the true value on this design is not known.",
         "own",
         "convention",
     ),

@@ -99,7 +99,11 @@ class Scores:
     def adequate(self, remedy: str, at: str) -> bool | None:
         """Coverage not below nominal − 2·MCSE − 0.01; None for a remedy that was not rehearsed."""
         row = self.get(remedy, at)
-        return None if row is None else row.coverage >= self.confidence - 2 * row.mcse - 0.01
+        return None if row is None else row.coverage >= self.floor(row)
+
+    def floor(self, row: Score) -> float:
+        """The least coverage that is adequate for a remedy."""
+        return self.confidence - 2 * row.mcse - 0.01
 
     def get(self, remedy: str, at: str) -> Score | None:
         return next((r for r in self.rows if (r.remedy, r.at) == (remedy, at)), None)

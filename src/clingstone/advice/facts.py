@@ -243,7 +243,8 @@ def _told(evidence: Evidence, test: str) -> tuple[list[Finding], Finding | None]
     Those given the dependence stand for those alone, which dependence can disturb.
     """
     found = [f for f in evidence if f.test == test and np.isfinite(f.p)]
-    found = [f for f in found if f.given] or found
+    again = {f.about for f in found if f.given}
+    found = [f for f in found if f.given or f.about not in again]
     best = min(found, key=lambda f: f.p, default=None)
     return found, best if best is not None and best.p * len(found) < LEVEL else None
 

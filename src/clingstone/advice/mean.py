@@ -34,6 +34,10 @@ CURVE = "functional-form"
 # fitted order in time. Their bars are higher, because a season or a step seen by chance changes the advice.
 PATTERNS = ("season", "break")
 CLEAR, HOLDS = 0.01, 0.10  # p, and share of what the model leaves over
+# A season of few cycles passes for strong dependence, which then holds most of it: clearer still, it counts
+# by its share in the ordinary fit. Over two years of days under AR(1) of 0.7 a season of 1.5 times the
+# deviation of the errors was so found in 86 % of 300 draws (by the bar above in none), none in 900 without.
+CLEARER, HOLDS_ALONE = 0.001, 0.50
 AGAIN = (
     "heteroscedasticity",
     "outliers",
@@ -115,7 +119,13 @@ def _patterns(evidence: Evidence, design: Design) -> list[Finding]:
     """Seasons and steps that are clear given the dependence and hold a good share of what is left over."""
     found = [f for f in evidence.of("mean") if f.test in PATTERNS and f.given and np.isfinite(f.p)]
     found = [f for f in found if f.test != "season" or _fixed_season(f, design)]
-    return [f for f in found if f.p * len(found) < CLEAR and f.estimate >= HOLDS]
+    return [f for f in found if _clear(f, f.p * len(found), evidence)]
+
+
+def _clear(finding: Finding, p: float, evidence: Evidence) -> bool:
+    alone = evidence.get(finding.test, finding.about)
+    much = finding.test == "season" and alone is not None and alone.estimate >= HOLDS_ALONE
+    return (p < CLEAR and finding.estimate >= HOLDS) or (p < CLEARER and much)
 
 
 def _family(finding: Finding, design: Design) -> Family | None:

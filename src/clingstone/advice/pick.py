@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from collections.abc import Iterator, Mapping
+from dataclasses import replace
 
 import numpy as np
 
@@ -10,6 +11,7 @@ from clingstone.advice.entries import REPAIRED, Scores
 from clingstone.advice.facts import Facts
 from clingstone.advice.rules import PREFER, Rule
 from clingstone.advice.structures import families, needed
+from clingstone.display import percent
 from clingstone.remedies.remedy import Interval, Refit
 
 # Without a rule that names one, and among equals in a rehearsal: the simplest first.
@@ -67,12 +69,12 @@ def pick(
     need, shown = needed(facts.ledger), needed(facts.ledger, shown=True)
     usable = [r for r in refits if r.remedy != REPAIRED and serves(r, facts)]
     found, rule = _by_rule(facts, usable, twins)
-    if scores is not None and not (rule is not None and rule.then.firm):
+    if scores is not None and not (rule is not None and rule.then.firm and _stands(found, scores)):
         same_question = [r for r in usable if r.estimand == "pooled" and need <= covers(r, facts, reached)]
         first = [r for r in same_question if r.remedy not in SECOND]
         best = _rehearsed(first, scores) or _rehearsed(same_question, scores)
         if best is not None:
-            return best, None
+            return best, _gave_way(rule, found, scores)
     if found is not None:
         return found, rule
     usable = [r for r in usable if r.estimand == "pooled"]  # only a rule may change the question
@@ -85,6 +87,28 @@ def pick(
         if need and families(facts.ledger, need) <= set(fit.covers):
             return fit, None
     return None, None
+
+
+CLEARLY = 2.0  # Monte-Carlo errors below the floor at which a rehearsal speaks against a firm rule
+
+
+def _stands(found: Refit | None, scores: Scores) -> bool:
+    """Whether the remedy of a firm rule did not fall clearly short in the rehearsal."""
+    row = None if found is None else scores.get(found.remedy, found.at)
+    return row is None or row.coverage >= scores.floor(row) - CLEARLY * row.mcse
+
+
+def _gave_way(rule: Rule | None, found: Refit | None, scores: Scores) -> Rule | None:
+    """Why the remedy of a firm rule is not the advised one; None where no firm rule spoke."""
+    row = None if found is None else scores.get(found.remedy, found.at)
+    if rule is None or not rule.then.firm or found is None or row is None:
+        return None
+    because = (
+        f"A rule would prefer {found.name}, but rehearsed on this design its intervals held the true value "
+        f"in only {percent(row.coverage)} of replicates under one of the error models tried, and another "
+        "kept its promise under all of them."
+    )
+    return replace(rule, id=f"{rule.id}: gave way", because=because, source="own")
 
 
 def _by_rule(facts: Facts, usable: list[Refit], twins: Mapping[str, str]) -> tuple[Refit | None, Rule | None]:

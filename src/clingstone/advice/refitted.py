@@ -140,8 +140,10 @@ def rehearsed_facts(scores: Scores | None, chosen: Refit | None) -> dict[str, Fa
     """What a rehearsal found of the advised refit, and of the best; nothing where it was not rehearsed."""
     if chosen is None:
         return {}
-    row = scores.get(chosen.remedy, chosen.at) if scores is not None else None
-    if scores is None or row is None:
+    if scores is None:
+        return {}  # no rehearsal was asked for, which is nothing new to who did not ask
+    row = scores.get(chosen.remedy, chosen.at)
+    if row is None:
         untried = yes("advised refit not rehearsed", chosen.remedy != "ordinary", "no rehearsal tried it")
         return {f.name: f for f in (untried, words("name of the advised refit", chosen.name))}
     held = scores.adequate(row.remedy, row.at)

@@ -23,7 +23,7 @@ class Then:
     kind : "state" and "prefer" decide, the first that holds; "refuse" takes a remedy out; "caveat"
     lowers *supported* to *supported with caveat*; "caution" only warns.
     what : the state, or the remedy id. at : name of the fact that holds its level. firm : it also
-    outranks a rehearsal, which cannot see what the rule rests on.
+    outranks a rehearsal, which cannot see what the rule rests on, unless the remedy falls clearly short.
     """
 
     kind: Kind
@@ -36,7 +36,9 @@ class Then:
         where = f" at the {self.at}" if self.at else ""
         words = {
             "state": f"the state is “{self.what}”",
-            "prefer": f"prefer {self.what}" + where + (", whatever a rehearsal says" if self.firm else ""),
+            "prefer": f"prefer {self.what}"
+            + where
+            + (", unless a rehearsal speaks clearly against it" if self.firm else ""),
             "refuse": f"refuse {self.what}",
             "caveat": "add a caveat",
             "caution": "add a caution",

@@ -54,7 +54,7 @@ CYCLES: dict[str, tuple[tuple[str, float], ...]] = {
     "minute": (("day", 1440.0), ("hour", 60.0)),
     "second": (("hour", 3600.0), ("minute", 60.0)),
 }
-CYCLES_SEEN = 2.0  # full cycles that the times must cover
+CYCLES_SEEN = 1.98  # cycles that the times must cover: two, or two calendar years of 730 days and a week less
 EACH_STEP = 12  # steps in a cycle up to which each has its own level; beyond, waves
 WAVES = 3
 DRAWS = 999

@@ -16,6 +16,7 @@ from clingstone.evidence.anova import absorbed
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import BY, covariate, level_name, moving, row_level
 from clingstone.evidence.read import Plain, by_f, degenerate
+from clingstone.evidence.rough import inner_models, inner_node
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
@@ -25,6 +26,7 @@ if TYPE_CHECKING:
 
 STEPS = 60
 RANK = 1e-9
+HELD = "F, one-sided, group intercepts swept out, dependence fitted without slopes and held"
 
 
 @dataclass(frozen=True)
@@ -35,6 +37,9 @@ class SlopeVariation(Plain):
     intercepts: exact under normal errors for any unbalance, and for any variance of the intercepts and any
     correlation with them. Its size is the standard deviation of slopes, τ² = (MSB − MSW)/n₀ (Henderson's
     third method), with the interval of Wald (1947) and Harville & Fenech (1985) for a variance ratio.
+
+    A process in time, or a finer level, makes slopes that are apparent only. Given them the same F is read on
+    rows whitened by their error model, fitted without slopes and held: see ``clingstone.evidence.rough``.
     """
 
     id: str = "slope-variation"
@@ -51,12 +56,16 @@ class SlopeVariation(Plain):
             for level, term in sloping(design)
         )
 
+    def givens(self, fits: Fits, about: About) -> tuple[frozenset[str], ...]:
+        node = inner_node(fits, _place(fits.design, about)[0])
+        return (node,) if node else ()
+
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design = fits.design
-        part, term = next((v, t) for v, t in sloping(design) if f"{t.name}{BY}{v.key}" == about.key)
+        part, term = _place(design, about)
         x = covariate(design, term)
         assert x is not None
-        table = spread(fits.response, part, term.name, x)
+        table = spread_given(fits, part, x, given) if given else spread(fits.response, part, term.name, x)
         lost = degenerate(fits.response)
         F = np.where(lost, np.nan, table.F)
         sd = np.where(lost, np.nan, table.sd)
@@ -65,7 +74,9 @@ class SlopeVariation(Plain):
             low, high = table.interval(fits.run.settings.confidence)
             low, high = np.minimum(low, sd), np.maximum(high, sd)
         return replace(
-            by_f(F, table.df1, table.df2, "exact F, one-sided, group intercepts swept out"),
+            by_f(
+                F, table.df1, table.df2, HELD if given else "exact F, one-sided, group intercepts swept out"
+            ),
             estimate=sd,
             estimate_name="standard deviation of slopes between groups",
             low=low,
@@ -107,6 +118,10 @@ def sloping(design: Design) -> tuple[tuple[Partition, Term], ...]:
             if covariate(design, term) is not None and moving(design, level, term):
                 out.append((level, term))
     return tuple(out)
+
+
+def _place(design: Design, about: About) -> tuple[Partition, Term]:
+    return next((v, t) for v, t in sloping(design) if f"{t.name}{BY}{v.key}" == about.key)
 
 
 def _beside(design: Design, j: int, response: Response) -> tuple[str, ...]:
@@ -192,17 +207,55 @@ def spread(response: Response, part: Partition, name: str, x: Array) -> Spread:
     u, c, TQ = kept(design, ("slopes", part.key, name), of_design)
     swept = sweep(response, inner, part)
     TE = part.sums(u[:, None] * swept.residual)
+    return compared(part, name, c, TQ, TE, swept.ss, inner.p)
+
+
+def spread_given(fits: Fits, part: Partition, x: Array, given: frozenset[str]) -> Spread:
+    """As ``spread``, on rows freed of what goes on within groups; x (n,) on the scale of the user.
+
+    Whitening row by row keeps to groups, so W1 and Wx cut by group are the intercepts and slopes there.
+    """
+    design, response = fits.design, fits.response
+    root = np.ones(design.n) if design.root is None else design.root
+    models = inner_models(fits, given)
+    tables = []
+    for b in range(response.B):
+        block = np.column_stack([root, x * root, design.Q, response.residual[:, b]])
+        w, *rest = models.white(b, block).T
+        size = part.sums(w * w)
+        u, *rest = (v - w * (part.sums(w * v) / size)[part.codes] for v in rest)
+        raw = part.sums(models.white(b, (x * root)[:, None])[:, 0] ** 2)
+        c = np.where((c := part.sums(u * u)) > 1e-12 * raw, c, 0.0)
+        u = np.where(c[part.codes] > 0, u, 0.0)
+        Q, e = np.column_stack(rest[:-1]), rest[-1]
+        left, size, _ = np.linalg.svd(Q, full_matrices=False)
+        Q = left[:, size > RANK * max(float(size[0]), 1.0)]
+        e = e - Q @ (Q.T @ e)
+        TQ, TE = part.sums(u[:, None] * Q), part.sums(u * e)[:, None]
+        tables.append(compared(part, "the predictor", c, TQ, TE, np.array([e @ e]), Q.shape[1]))
+    first = tables[0]
+    if len(tables) == 1:
+        return first
+    whole, within = (np.concatenate([getattr(t, k) for t in tables]) for k in ("whole", "within"))
+    return replace(first, TE=np.hstack([t.TE for t in tables]), whole=whole, within=within)
+
+
+def compared(part: Partition, name: str, c: Array, TQ: Array, TE: Array, ss: Array, p: int) -> Spread:
+    """One slope against a slope per group, from the sums of (swept) rows. Raises NotSupported.
+
+    ss (B,) : sums of squares with one slope. p : columns that the swept model has left.
+    """
     able = c > 0
     scale = np.where(able, c, 1.0)
-    A = np.eye(inner.p) - TQ.T @ (TQ / scale[:, None])
+    A = np.eye(p) - TQ.T @ (TQ / scale[:, None])
     b = -TQ.T @ (TE / scale[:, None])
     size, U = np.linalg.eigh(A)
     free = size > RANK
     project = U[:, free].T @ b
-    within = swept.ss - np.sum(TE**2 / scale[:, None], axis=0)
+    within = ss - np.sum(TE**2 / scale[:, None], axis=0)
     within = within - np.sum(project**2 / size[free][:, None], axis=0)
     df1 = int(able.sum()) - int(np.sum(~free))
-    df2 = design.n - part.count - inner.p - df1
+    df2 = part.n - part.count - p - df1
     if df1 < 1:
         raise NotSupported(
             f"{name} varies within too few groups of {part.key}, or the model has a slope for each already",
@@ -213,4 +266,4 @@ def spread(response: Response, part: Partition, name: str, x: Array) -> Spread:
             f"a slope for every group of {part.key} leaves no degrees of freedom within groups",
             "Three rows or more in some groups would be needed.",
         )
-    return Spread(c, TQ, TE, df1, df2, np.asarray(swept.ss), np.maximum(within, 0.0))
+    return Spread(c, TQ, TE, df1, df2, np.asarray(ss), np.maximum(within, 0.0))
