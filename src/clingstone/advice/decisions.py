@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from clingstone.advice.expressions import fact
 from clingstone.advice.rule import ANY, GROUP, SERIAL, SLOPES, SPATIAL, SPREAD, Rule, Then
+from clingstone.needs import Limits
 
 PREFER = (
     Rule(
@@ -297,7 +298,7 @@ PREFER = (
         & ~GROUP
         & ~SPATIAL
         & fact("common shocks in time")
-        & (fact("periods") >= 20)
+        & (fact("periods") >= Limits().periods_estimate)
         & fact("focus varies over time"),
         Then("prefer", "panel-hac"),
         "Different series move together at one time, over {periods} times: only the sums over all series at "

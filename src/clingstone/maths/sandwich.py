@@ -172,7 +172,7 @@ def _blocks(n: int) -> Iterator[slice]:
     return (slice(start, start + ROWS) for start in range(0, n, ROWS))
 
 
-def row_weights(Q: Array, W: Array, delta: int) -> tuple[Array, Array, Array]:
+def row_weights(Q: Array, W: Array, delta: int) -> tuple[Array, Array, npt.NDArray[np.int64]]:
     """(n, k) adjusted weights z_i/(1−h_i)^(δ/2), z = QW; then lost (k,) and at (k,) as in ``adjust``.
 
     δ = 0, 1, 2 gives HC0, HC2, HC3. A row of leverage one has no residual; its term is dropped.
