@@ -79,3 +79,13 @@ def test_labels_cannot_steer_the_terminal():
 
 def test_rows_left_out_are_counted_by_reason():
     assert "11 rows left out (pressure missing in 9 and age missing in 2)" in case_line(fixture.trial())
+
+
+def test_notes_on_the_reading_close_the_answer_and_the_rest_is_counted():
+    base = fixture.trial()
+    told = "Noticed: One clinic's label appears with and without a trailing blank; read as one."
+    assert told in " ".join(terminal(base).split("\n\n")[-1].split())
+    many = replace(base, case=replace(base.case, notes=tuple(f"Note {k}." for k in range(6))))
+    last = terminal(many).split("\n\n")[-1].splitlines()
+    assert last[:4] == [f"Noticed: Note {k}." for k in range(4)]
+    assert last[4:] == ["2 more notes on the reading in the report."]

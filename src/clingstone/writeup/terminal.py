@@ -25,6 +25,7 @@ from clingstone.writeup.read import advised, decimals, distinct, level_percent, 
 
 ROWS = 6  # focus rows shown
 REFITS = 6  # refits shown for each
+NOTES = 4  # notes on the reading shown
 
 
 def terminal(results: Results, width: int = COLUMNS) -> str:
@@ -35,6 +36,7 @@ def terminal(results: Results, width: int = COLUMNS) -> str:
         _intervals(results, width),
         _why(results, width),
         _unsettled(results, width),
+        _noticed(results, width),
     ]
     return "\n\n".join("\n".join(lines) for lines in parts if lines)
 
@@ -143,3 +145,12 @@ def _unsettled(results: Results, width: int) -> list[str]:
     if results.advice.mean_in_doubt:
         cautions.append("The mean itself is in doubt; see the curve and trend checks in the report.")
     return [line for c in cautions for line in wrapped(f"Not settled: {c}", width, "", "  ")]
+
+
+def _noticed(results: Results, width: int) -> list[str]:
+    """What was taken for granted or looked odd while reading: a sentinel, a code taken for a number."""
+    notes = [f"Noticed: {clean(note)}" for note in results.case.notes[:NOTES]]
+    more = len(results.case.notes) - NOTES
+    if more > 0:
+        notes.append(f"{count(more, 'more note')} on the reading in the report.")
+    return [line for note in notes for line in wrapped(note, width, "", "  ")]
