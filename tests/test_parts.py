@@ -187,6 +187,8 @@ def test_a_table_that_does_not_fit_is_refused_with_what_can_be_done(
     [
         ({"model": MODEL, "time": "t"}, NotSupported, "one series over all partitions"),
         ({"model": "y ~ poly(x, 2)"}, NotSupported, r"poly\(\) learns from all rows"),
+        ({"model": "y ~ standardize( x )"}, NotSupported, r"standardize\(\) learns from all rows"),
+        ({"model": "y ~ hashed(x, levels=5)"}, NotSupported, r"hashed\(\) learns from all rows"),
         ({"model": "y ~ x", "group": "ward"}, InputError, "no column ‘ward’"),
         ({"model": "y ~ x + I(2 * x)"}, InputError, "linearly dependent"),
     ],

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import re
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import TYPE_CHECKING, Any
@@ -32,7 +33,11 @@ if TYPE_CHECKING:
     import pandas as pd
 
 LAGS = 10  # of Ljung and Box
-STATEFUL = ("center", "scale", "poly", "bs", "cs", "cr", "cc", "standardize", "lag", "hashed")
+# Functions of a formula that make a row's columns from that row alone (with those of numpy, of which a
+# formula may hold nothing else). What is not named here may learn from all rows.
+ROWWISE = frozenset({"I", "Q", "C", "log", "log2", "log10", "exp", "exp2", "exp10"})
+CODINGS = frozenset({"Treatment", "Poly", "Sum", "Helmert", "Diff"})  # of a factor whose levels are known
+_CALLED = re.compile(r"(?<![\w.])([A-Za-z_]\w*)\s*\(")
 
 
 @dataclass(frozen=True)
@@ -87,7 +92,8 @@ class Plan:
         import pandas as pd
 
         parsed = formula.parse(asked.model, [str(c) for c in table.columns])
-        learns = [f for f in STATEFUL if f"{f}(" in parsed.text.replace(" ", "")]
+        called = _CALLED.findall(re.sub(r"`[^`]*`", "", parsed.text))
+        learns = [f for f in called if f not in ROWWISE | CODINGS]
         if learns:
             raise NotSupported(
                 f"{learns[0]}() learns from all rows at once, and they lie in partitions",
