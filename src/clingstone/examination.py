@@ -51,7 +51,6 @@ def examine(
     series: str | None = None,
     coords: tuple[str, str] | list[str] | None = None,
     lonlat: bool | None = None,
-    polygons: str | None = None,
     neighbours: str | None = None,
     weights: str | None = None,
     weights_kind: Weights = "precision",

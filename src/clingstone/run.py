@@ -33,7 +33,6 @@ class Settings:
     time, series : column of time; column that says which rows form one ordered series.
     coords : two columns of coordinates.
     lonlat : whether they are longitude and latitude; left out, names and values decide.
-    polygons : column of shapes, each stood for by a point inside it.
     neighbours : "knn" or "band", with a number after a colon ("knn:6", "band:12.5"), "delaunay", "gabriel",
         "inverse", "contiguity" or "rook" (shapes that touch), or "pairs:FILE".
     weights, weights_kind : column of weights; whether a weight says how exact a row is or counts rows.
@@ -59,7 +58,6 @@ class Settings:
     series: str | None = None
     coords: tuple[str, str] | None = None
     lonlat: bool | None = None
-    polygons: str | None = None
     neighbours: str | None = None
     weights: str | None = None
     weights_kind: Weights = "precision"

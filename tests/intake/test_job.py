@@ -27,7 +27,6 @@ FULL = Settings(
     series="s",
     coords=("lon", "lat"),
     lonlat=True,
-    polygons="shape",
     neighbours="knn:6",
     weights="w",
     weights_kind="frequency",

@@ -18,7 +18,7 @@ from clingstone.intake.model import Blocks, TermBlock
 from clingstone.maths.basis import Basis
 from clingstone.maths.once import Array, frozen
 from clingstone.maths.partition import Partition
-from clingstone.needs import InputError, NotSupported
+from clingstone.needs import InputError
 from clingstone.run import Settings
 from clingstone.structure import group as grouping
 from clingstone.structure import neighbours as neighbourhoods
@@ -74,11 +74,6 @@ class Structures:
 
 def declaration(settings: Settings, table: Table) -> Declaration:
     """Columns by role. InputError for options that have nothing to work on."""
-    if settings.polygons is not None:
-        raise NotSupported(
-            "shapes in a file of their own (polygons=) are not read in this version",
-            "Give a geographic data frame, whose shapes are stood for by a point inside each.",
-        )
     coords = settings.coords or table.place
     group = () if settings.group is None else grouping.paths(settings.group, table.names)
     _idle("series", settings.series, "time", settings.time)
