@@ -20,8 +20,8 @@ from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.bundles import Bundle
 from clingstone.covariance.each import Each, each
 from clingstone.covariance.fits import ErrorModel
-from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.ranges import Ranges
+from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.response import Response
 from clingstone.maths import reml
