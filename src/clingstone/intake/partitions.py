@@ -10,7 +10,7 @@ from clingstone.display import instead
 from clingstone.needs import InputError, NotSupported, memory
 
 T = TypeVar("T")
-COPIES = 4  # times the numeric columns: what an examination in memory holds at its peak, and more
+COPIES = 18  # times the numeric columns: the peak of an examination with group and time, at a million rows
 
 
 def is_parted(data: Any) -> bool:
