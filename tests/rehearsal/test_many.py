@@ -9,6 +9,7 @@ import pytest
 
 from clingstone.advice.choose import Advice, settle
 from clingstone.advice.facts import facts
+from clingstone.advice.refitted import compared
 from clingstone.advice.rules import PREFER, STATES
 from clingstone.advice.shortlist import shortlist_for
 from clingstone.covariance.fits import Fits
@@ -118,3 +119,19 @@ def test_a_batch_is_advised_as_its_columns_alone(kind):
                 assert one.term == other.term
                 assert (one.low, one.high) == pytest.approx((other.low, other.high), abs=1e-5 * other.se)
     assert seen
+
+
+def test_facts_of_some_refits_say_nothing_of_others():
+    """Asked of the robust refit alone, the model of slopes is not thereby said to have failed."""
+    rng = np.random.default_rng(2)
+    group = np.repeat(np.arange(6), [2, 2, 3, 6, 12, 20])
+    x = rng.normal(size=45)
+    of = design(np.column_stack([np.ones(45), x]), group=group)
+    f = fits(of, rng.normal(size=45) + (rng.normal(size=6)[group] + rng.normal(size=6)[group] * x))
+    known = facts(f, evidence := gather(f), weigh(f, evidence))
+    every = {r.remedy: r for r in shortlist_for(known, f).refit(f) if r.at in ("", known.word("group level"))}
+    assert "mixed-slope" in every
+    asked = Asked(known, lambda what, _: iter([every[what]] if what in every else []))
+    wanted = compared(known, tuple(every.values())).known
+    for name in ("df of the robust refit", "robust over mixed standard error", "slope model settled"):
+        assert asked[name].value == wanted[name].value

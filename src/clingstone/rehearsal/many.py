@@ -189,7 +189,9 @@ class Asked(dict[str, Fact]):
             raise KeyError(name)
         self.done.add(needs)
         refits = tuple(found for what in needs for found in self.made(what, ""))
-        self.update(compared(self.facts, refits).known)
+        # Of what these refits tell only what is asked of them: without the others they say "no" of the rest.
+        found = compared(self.facts, refits).known
+        self.update({k: v for k, v in found.items() if COMPARES.get(k) == needs})
         return self[name]
 
 
