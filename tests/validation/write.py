@@ -112,6 +112,11 @@ def row(one: Tally) -> list[str]:
     ]
 
 
+def unmeasured(name: str) -> list[str]:
+    """A world that the study has not come to."""
+    return [name, "0", *["–"] * (len(COLUMNS) - 2)]
+
+
 def advice_table(found: Iterable[Tally]) -> str:
     rows = [
         [
@@ -219,8 +224,12 @@ def short(found: list[Tally]) -> str:
 
 
 def why(aim: str, t: Tally) -> str:
+    """Chance, where the aim lies within two Monte-Carlo errors; else what is known of the world."""
+    of = {"naming": (t.exact, NAMED), "quiet": (t.exact, QUIET), "coverage": (t.advised, COVERED)}
+    if aim in of and not of[aim][0].below(of[aim][1]):
+        return "within two Monte-Carlo errors of the aim"
     found = (words for one, part, words in REASONS if one == aim and part in t.world.name)
-    return next(found, "not explained")
+    return next(found, "not explained yet")
 
 
 # ---- null laws -----------------------------------------------------------------------------------
@@ -271,12 +280,13 @@ def page(lines: list[study.Line], null_file: Path, commit: str = "") -> tuple[st
     null_lines = [json.loads(line) for line in null_file.read_text(encoding="utf-8").splitlines()]
     out = [HEAD.format(checked=checks.n, agreed=checks.k)]
     out += ["## Against the aims\n\n", aims_table(every), "\n## Where it falls short\n\n"]
-    out += ["By what was measured, whether or not chance could explain it.\n\n", short(every)]
+    out += [short(every)]
     out += [
         "\n![Coverage of the advised and of the ordinary interval in every world](images/validation.svg)\n"
     ]
-    for family, found in families.items():
-        out += [f"\n## {family}\n\n", table(COLUMNS, map(row, found))]
+    for family, worlds in battery.FAMILIES.items():
+        rows = [row(rules[w.name]) if w.name in rules else unmeasured(w.name) for w in worlds]
+        out += [f"\n## {family}\n\n", table(COLUMNS, rows)]
     if rehearsed:
         out += ["\n## With a rehearsal\n\n"]
         out += [
