@@ -32,11 +32,6 @@ REASONS: tuple[tuple[str, str, str], ...] = (
     ("width", "outlying row", "the oracle knows the spread of the other rows"),
     ("width", "x a trend", TREND),
     (
-        "width",
-        "x in rows",
-        "the advised interval asks nothing of the dependence inside groups and rests on fewer degrees",
-    ),
-    (
         "coverage",
         "group effects go with x",
         "0.5 is the coefficient within groups; the one that was asked for mixes it with that between them",

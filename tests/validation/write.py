@@ -46,6 +46,10 @@ What stands after ± is the Monte-Carlo standard error, the larger of that of in
 the designs as clusters. All shares are per cent.
 
 """
+PART = """**Not whole.** {left} of {all} worlds have no draws yet, and {few} of the others have fewer than
+{draws:,}. The study goes on where it stopped when its command is given again.
+
+"""
 
 
 def pct(value: float, digits: int = 0) -> str:
@@ -279,6 +283,10 @@ def page(lines: list[study.Line], null_file: Path, commit: str = "") -> tuple[st
     checks = Share(tuple(part for t in every for part in t.agreed.parts))
     null_lines = [json.loads(line) for line in null_file.read_text(encoding="utf-8").splitlines()]
     out = [HEAD.format(checked=checks.n, agreed=checks.k)]
+    few = sum(t.n < study.DRAWS for t in every)
+    if few or len(every) < len(battery.WORLDS):
+        left = len(battery.WORLDS) - len(every)
+        out += [PART.format(left=left, all=len(battery.WORLDS), few=few, draws=study.DRAWS)]
     out += ["## Against the aims\n\n", aims_table(every), "\n## Where it falls short\n\n"]
     out += [short(every)]
     out += [
@@ -307,7 +315,7 @@ def page(lines: list[study.Line], null_file: Path, commit: str = "") -> tuple[st
     out += [f"\n## How it was made\n\nSeeds {study.SEED} and {nulls.SEED}; {built}{state}.\n\n```text\n"]
     out += ["python -m tests.validation.study study.jsonl\n"]
     out += ["python -m tests.validation.study study.jsonl 100 --rehearsed\n"]
-    out += ["python -m tests.validation.nulls nulls.jsonl 500\n"]
+    out += ["python -m tests.validation.nulls nulls.jsonl 300\n"]
     out += ["python -m tests.validation.write study.jsonl nulls.jsonl\n```\n"]
     return "".join(out), families
 
