@@ -53,7 +53,7 @@ def test_wrong_combinations_are_said(trial: Examination) -> None:
     assert "‘arm: visits’" in said.value.hint
     with pytest.raises(InputError, match="weights 0"):
         trial.contrast({"age": 0})
-    with pytest.raises(InputError, match="no refit 'ar1'"):
+    with pytest.raises(InputError, match="'ar1' is not among the refits made here"):
         trial.contrast({"age": 1}, "ar1")
 
 

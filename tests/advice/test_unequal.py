@@ -139,7 +139,7 @@ def test_a_cycle_in_the_errors_is_not_called_corrected():
     assert order.returning(fits.response)[0] == 12
     advice = advise(fits)
     assert advice.state == "not correctable"
-    assert "comes back after 12 steps" in advice.headline
+    assert "comes back after 12 steps" in advice.because[0].sentence
 
 
 def test_covariates_that_bend_like_time_place_or_groups():

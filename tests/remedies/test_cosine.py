@@ -74,6 +74,7 @@ def test_student_t_undercovers_a_trend_where_the_exact_law_does_not():
     assert np.mean(exact.p[1] < 0.05) == pytest.approx(0.05, abs=0.011)
 
 
+@pytest.mark.slow
 def test_with_rho_fitted_the_size_stays_near_nominal():
     # ρ̂ by REML in each of 200 series of 100 rows; a white covariate and a trend. MCSE 0.015.
     n, rho = 100, 0.5

@@ -268,7 +268,7 @@ def test_refusals_come_from_the_covariance_room_with_their_reason():
     X, group, y = clustered(G=4)
     with pytest.raises(NotSupported, match="4 groups"):
         refit(MIXED, "", fits(design(X, group=group), y))
-    with pytest.raises(NotSupported, match="the longest series has 12 rows"):
+    with pytest.raises(NotSupported, match="the longest series has 12 times"):
         refit(AR1, "", fits(design(X[:12], tick=np.arange(12)), y[:12]))
     with pytest.raises(NotSupported, match="distinct places"):
         refit(SPATIAL, "", fits(design(X, xy=np.column_stack([group, group])), y))

@@ -137,6 +137,7 @@ def test_refusals():
         refit(MixedSlope(), "nothing", fits(case(X, group), y))
 
 
+@pytest.mark.slow
 def test_coverage_with_few_unequal_groups():
     X, group, _, _ = panel(G=8, drop=0.25)
     made = case(X, group)
