@@ -210,6 +210,10 @@ def test_copies_of_rows_are_counted_and_kept() -> None:
     got = read(frame)
     assert len(got.kept) == 6
     assert got.notes[0].startswith("2 rows equal another row in every column used (rows 7 and 8)")
+    one = read(pd.concat([flocks(), flocks().iloc[[3]]], ignore_index=True))
+    assert one.notes[0] == (
+        "1 row equals another row in every column used (row 7); it is kept. If it is a copy, n is too large."
+    )
 
 
 @given(

@@ -356,10 +356,14 @@ def _remarks(frame: pd.DataFrame, places: Places) -> list[str]:
     notes = []
     twice = _copies(frame)
     if twice.any():
-        some = rows(places[twice], 3)
+        total, some = int(twice.sum()), rows(places[twice], 3)
+        equal, kept = (
+            ("equals", "it is kept. If it is a copy")
+            if total == 1
+            else ("equal", "they are kept. If they are copies")
+        )
         notes.append(
-            f"{count(int(twice.sum()), 'row')} equal another row in every column used ({some}); "
-            "they are kept. If they are copies, n is too large."
+            f"{count(total, 'row')} {equal} another row in every column used ({some}); {kept}, n is too large."
         )
     for name in frame:
         if pd.api.types.is_numeric_dtype(frame[name].dtype) and not pd.api.types.is_bool_dtype(
