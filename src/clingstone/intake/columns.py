@@ -363,7 +363,8 @@ def _remarks(frame: pd.DataFrame, places: Places) -> list[str]:
             else ("equal", "they are kept. If they are copies")
         )
         notes.append(
-            f"{count(total, 'row')} {equal} another row in every column used ({some}); {kept}, n is too large."
+            f"{count(total, 'row')} {equal} another row in every column used ({some}); "
+            f"{kept}, n is too large."
         )
     for name in frame:
         if pd.api.types.is_numeric_dtype(frame[name].dtype) and not pd.api.types.is_bool_dtype(
