@@ -275,6 +275,7 @@ def test_curves_carry_partial_correlations_and_the_semivariance() -> None:
     assert float(np.mean(curve.lines["semivariance"][1])) == pytest.approx(1.0, abs=0.1)
 
 
+@pytest.mark.slow
 def test_bands_of_irregular_times_hold_what_they_say() -> None:
     """Single bins lie in their band in 95 % of data without dependence, though near pairs share rows."""
     rng = np.random.default_rng(11)

@@ -240,6 +240,7 @@ def test_a_series_that_hangs_together_only_a_season_apart_is_present():
     assert "steps apart its residuals are correlated" in found.because
 
 
+@pytest.mark.slow
 def test_an_independent_series_is_not_present_more_often_than_its_level():
     rng = np.random.default_rng(32)
     d, hits = make.design({"x": rng.standard_normal(60)}, tick=np.arange(60)), 0

@@ -104,7 +104,7 @@ def test_sparse_factorizations_with_cell_means_out():
     assert routes.name(forms.lagged(*twins.step(n), n, "across"), part) == "traces"
 
 
-@pytest.mark.parametrize("n", [50, 500, 2100])
+@pytest.mark.parametrize("n", [50, 500, pytest.param(2100, marks=pytest.mark.slow)])
 def test_a_model_without_columns(n):
     """Every column may be absorbed by the cells; the law then has the form's own spectrum."""
     bare = Basis(np.zeros((n, 0)), np.zeros((0, 0)))

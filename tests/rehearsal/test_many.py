@@ -90,7 +90,7 @@ def test_tests_set_aside_decide_nothing(make):
         assert said(f, ("heteroscedasticity",)) != plain
 
 
-@pytest.mark.parametrize("kind", ["trial", "panel", "stream", "curved"])
+@pytest.mark.parametrize("kind", ["trial", "stream", "curved", pytest.param("panel", marks=pytest.mark.slow)])
 def test_a_batch_is_advised_as_its_columns_alone(kind):
     bend = 0.0
     if kind == "curved":

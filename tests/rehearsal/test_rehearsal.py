@@ -168,6 +168,7 @@ def test_a_stopped_rehearsal_goes_on_where_it_was(tmp_path, monkeypatch):
     assert len(runs) == 7
 
 
+@pytest.mark.slow
 def test_whole_paths_go_on_where_they_were_whoever_walks_them(tmp_path, monkeypatch):
     monkeypatch.setattr("clingstone.rehearsal.path.CHUNK", 3)
     small = plan(20, wanted=PLAIN[:1])

@@ -17,6 +17,7 @@ KINDS = {
     "place": (w.places(60, 30, 0.7, "smooth"), PLACE),
     "nested": (w.nested(6, 3, 3, 0.3, 0.2, "b"), {"model": "y ~ x", "group": "a/b"}),
 }
+NESTED = pytest.param("nested", marks=pytest.mark.slow)  # ten seconds each
 _KNOWN: dict[str, tuple[pd.DataFrame, dict[str, object], clingstone.Examination]] = {}
 
 
@@ -81,20 +82,20 @@ def check_same(kind, frame, y_unit=1.0, x_unit=1.0, skip=()):
     assert words(again) == words(first)
 
 
-@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize("kind", [NESTED if kind == "nested" else kind for kind in KINDS])
 def test_row_order_and_columns_that_no_one_asked_for(kind):
     frame, _, _ = known(kind)
     mixed = frame.assign(spare=frame["x"], word="a").sample(frac=1, random_state=1)
     check_same(kind, mixed)
 
 
-@pytest.mark.parametrize("kind", KINDS)
+@pytest.mark.parametrize("kind", [NESTED if kind == "nested" else kind for kind in KINDS])
 def test_units_of_response_and_predictor(kind):
     frame, _, _ = known(kind)
     check_same(kind, frame.assign(y=frame["y"] * 1e-6, x=frame["x"] * 1e4), y_unit=1e-6, x_unit=1e4)
 
 
-@pytest.mark.parametrize("kind", ["group", "time", "nested"])
+@pytest.mark.parametrize("kind", ["group", "time", NESTED])
 def test_shift_of_the_response_moves_the_constant_alone(kind):
     frame, _, _ = known(kind)
     check_same(kind, frame.assign(y=frame["y"] + 1e4), skip=("constant",))
@@ -112,7 +113,7 @@ def test_unit_and_origin_of_coordinates():
     check_same("place", frame.assign(east=frame["east"] * 1000 + 5e5, north=frame["north"] * 1000 + 4e6))
 
 
-@pytest.mark.parametrize("kind", ["group", "nested"])
+@pytest.mark.parametrize("kind", ["group", NESTED])
 def test_labels_of_groups(kind):
     frame, _, _ = known(kind)
     names = [name for name in ("g", "a", "b") if name in frame]

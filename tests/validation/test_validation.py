@@ -36,7 +36,11 @@ def test_names_are_unique_and_every_covariance_is_one():
 
 @pytest.mark.parametrize(
     "name",
-    ["ICC 0.2, 12 equal groups, x of groups", "ρ 0.7, 40 times, x a trend", "nested 8 × 3 × 4, x of a"],
+    [
+        "ICC 0.2, 12 equal groups, x of groups",
+        "ρ 0.7, 40 times, x a trend",
+        pytest.param("nested 8 × 3 × 4, x of a", marks=pytest.mark.slow),
+    ],
 )
 def test_errors_have_the_covariance_that_is_written_down(name):
     world = BY_NAME[name]

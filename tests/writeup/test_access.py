@@ -50,8 +50,7 @@ def _broken(browser, axe: str) -> list[str]:
     return list(found)
 
 
-@pytest.mark.parametrize("width", [1180, 390])
-@pytest.mark.parametrize("dark", [False, True], ids=["light", "dark"])
+@pytest.mark.parametrize(("width", "dark"), [(1180, False), (390, True)], ids=["wide-light", "phone-dark"])
 def test_no_rule_of_axe_is_broken(browser, axe, page, width, dark):
     open_page(browser, page, width, dark=dark)
     browser.execute_script(UNFOLD)

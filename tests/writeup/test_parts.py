@@ -437,7 +437,7 @@ def test_many_rows_make_no_large_page():
     from clingstone.examination import examine
 
     sizes = []
-    for groups in (50, 500):
+    for groups in (25, 250):
         rng = np.random.default_rng(3)
         g = np.repeat(np.arange(groups), 20)
         frame = pd.DataFrame({"g": [f"g{k}" for k in g], "t": np.tile(np.arange(20), groups)})
