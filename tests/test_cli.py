@@ -20,12 +20,12 @@ import pytest
 import clingstone
 import plain
 from clingstone import cli
-from clingstone.case import CaseSummary
 from clingstone.demo import DEMOS
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import field_help, in_shell, settings_options
 from clingstone.results import from_json, to_json
 from clingstone.run import Settings
+from clingstone.summary import CaseSummary
 
 
 class Verbs:

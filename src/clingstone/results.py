@@ -12,12 +12,12 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from clingstone.advice.choose import Advice
-from clingstone.case import CaseSummary
 from clingstone.evidence.finding import Finding
 from clingstone.ledger.ledger import Ledger
 from clingstone.needs import InputError
 from clingstone.rehearsal.tallies import Rehearsal
 from clingstone.remedies.remedy import Interval, JointTest, Refit
+from clingstone.summary import CaseSummary
 
 if TYPE_CHECKING:
     import cattrs

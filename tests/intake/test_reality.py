@@ -9,9 +9,10 @@ from typing import Any
 import pandas as pd
 import pytest
 
-from clingstone.case import Case, CaseSummary
+from clingstone.case import Case
 from clingstone.needs import InputError, NotSupported
 from clingstone.run import Settings
+from clingstone.summary import CaseSummary
 from tests.intake.reality import TABLE, Row, blood, csv, frame
 
 

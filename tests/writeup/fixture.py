@@ -12,11 +12,11 @@ from dataclasses import replace
 import numpy as np
 
 from clingstone.advice.choose import Advice, Choice, Reason
-from clingstone.case import CaseSummary, GroupSummary, SerialSummary, SpatialSummary
 from clingstone.evidence.finding import Curve, Finding
 from clingstone.ledger.ledger import Detectable, Inflation, Ledger, Parameter, Share, Standing, Tipping
 from clingstone.remedies.remedy import Account, Interval, JointTest, Refit
 from clingstone.results import SCHEMA, Results
+from clingstone.summary import CaseSummary, GroupSummary, SerialSummary, SpatialSummary
 
 NAN = math.nan
 VERSIONS = {"clingstone": "0.1.0", "python": "3.12.4", "numpy": "2.4.0", "scipy": "1.17.0"}

@@ -11,12 +11,12 @@ import pytest
 
 from clingstone.advice.choose import Reason
 from clingstone.advice.entries import Repair, Score, Scores
-from clingstone.case import GroupSummary
 from clingstone.evidence.finding import Curve
 from clingstone.ledger.ledger import Share
 from clingstone.rehearsal.tallies import Left, Rehearsal
 from clingstone.rehearsal.truths import Truth
 from clingstone.remedies.remedy import Convention
+from clingstone.summary import GroupSummary
 from clingstone.writeup import curves, figures, panels, places, rehearsed, tables
 from clingstone.writeup.methods import methods_text, report_this
 from clingstone.writeup.naming import lost, noun, subject, with_rows, words_of_test

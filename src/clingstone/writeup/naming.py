@@ -4,11 +4,11 @@ from __future__ import annotations
 
 import re
 
-from clingstone.case import GroupSummary
 from clingstone.display import clean, listed, plural_of, rows
 from clingstone.evidence.finding import Finding
 from clingstone.results import Results
 from clingstone.structure.group import title_of
+from clingstone.summary import GroupSummary
 
 TESTS = {
     "durbin-watson": "Durbin–Watson",

@@ -9,10 +9,10 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.case import GroupSummary
 from clingstone.display import Cell, Column, Table, count, number
 from clingstone.evidence.finding import Curve
 from clingstone.results import Results
+from clingstone.summary import GroupSummary
 from clingstone.writeup.look import LIGHT, mark
 from clingstone.writeup.naming import noun
 from clingstone.writeup.plate import SMALL, Plate, axes, blank, clip, few_ticks, say

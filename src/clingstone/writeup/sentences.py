@@ -9,7 +9,6 @@ from __future__ import annotations
 import math
 from collections.abc import Iterable
 
-from clingstone.case import GroupSummary
 from clingstone.display import (
     amount,
     count,
@@ -23,6 +22,7 @@ from clingstone.display import (
 )
 from clingstone.ledger.ledger import Parameter, Standing
 from clingstone.results import Results
+from clingstone.summary import GroupSummary
 from clingstone.writeup import strength
 from clingstone.writeup.items import ITEMS, Section, Sentence
 from clingstone.writeup.naming import groups_of, label_of, lost, noun, noun_at, subject
