@@ -6,11 +6,15 @@ The sleep study (lme4) with the last four days of its first five subjects left o
 
 from __future__ import annotations
 
+import re
+
 import numpy as np
 import pytest
+from scipy import optimize, stats
 from tests.outside.test_remedies_outside import columns, data
 from tests.remedies.cases import design, fits
 
+from clingstone.covariance import profile
 from clingstone.remedies import explain, refit, remedy
 
 CR1 = "CR1, factor G/(G − 1), t with G − 1 df"
@@ -128,3 +132,69 @@ def test_mixed_lines_are_lme4s_and_pbkrtests(run) -> None:
     assert found["the same fit, normal quantile"].se == pytest.approx(0.865355200335, rel=1e-6)
     ml = found["maximum likelihood in place of REML, normal quantile"]
     assert ml.se == pytest.approx(0.862185397156, rel=1e-5)
+
+
+def test_profile_interval_of_the_mixed_row_is_where_the_restricted_likelihood_has_risen(frame, run) -> None:
+    # The same walk on the likelihood itself equals lme4's: tests/covariance/test_profile.py.
+    items = dict(refit(remedy("mixed-intercept"), "clinic", run).account.items)
+    words = items["standard deviation of the intercept between clinic"]
+    estimate, low, high = (float(v) for v in re.findall(r"[\d.]+(?= \(| to|\))", words))
+    X, y = columns(frame.Days), frame.Reaction.to_numpy(float)
+    same = np.equal.outer(frame.Subject.to_numpy(), frame.Subject.to_numpy()).astype(float)
+
+    def least(sd: float) -> float:
+        """−2ℓ_R at a standard deviation between subjects, at the best row noise."""
+
+        def value(log_s: float) -> float:
+            V = sd**2 * same + np.exp(2 * log_s) * np.eye(len(y))
+            ViX = np.linalg.solve(V, X)
+            e = y - X @ np.linalg.solve(X.T @ ViX, ViX.T @ y)
+            return np.linalg.slogdet(V)[1] + np.linalg.slogdet(X.T @ ViX)[1] + e @ np.linalg.solve(V, e)
+
+        return float(optimize.minimize_scalar(value, bracket=(3.3, 3.5)).fun)
+
+    for end in (low, high):
+        # Ends are printed to three digits.
+        assert least(end) - least(estimate) == pytest.approx(stats.chi2.isf(0.05, 1), abs=0.05)
+
+
+def test_a_profile_that_is_dear_is_said_to_be_left_out(run, monkeypatch) -> None:
+    monkeypatch.setattr(profile, "WORK", 10)
+    items = dict(refit(remedy("mixed-intercept"), "clinic", run).account.items)
+    assert "all 18 groups" in items["profile intervals of what varies"]
+    assert "profile interval" not in items["standard deviation of row noise"]
+
+
+# clubSandwich 0.5.8, vcovCR(lmer(Reaction ~ Days + (1 | Subject)), type = ...): the slope's standard errors.
+CLUB = {"CR0": 1.53282740909, "CR1": 1.57726639156, "CR2": 1.58742681891, "CR3": 1.64313352561}
+
+
+def test_mixed_robust_lines_are_clubsandwichs(run) -> None:
+    found = {words: rows[1] for words, rows in explain(remedy("mixed-robust"), "clinic", run)}
+    assert found["CR0 with a normal quantile"].se == pytest.approx(CLUB["CR0"], rel=1e-6)
+    assert found["CR1, factor G/(G − 1), t with G − 1 df"].se == pytest.approx(CLUB["CR1"], rel=1e-6)
+    assert found["CR3 with its own Satterthwaite df"].se == pytest.approx(CLUB["CR3"], rel=1e-6)
+
+
+def test_what_clubsandwich_calls_cr2_of_a_mixed_model_takes_another_root(frame, run) -> None:
+    # Any root of the correction is unbiased under V̂. Here it is the symmetric one in the whitened rows;
+    # there, with V̂_g = D'D, it is D'{D(V̂_g − X_g(X'V̂⁻¹X)⁻¹X_g')D'}^{−½}D in the rows themselves.
+    key = frozenset({"group:clinic"})
+    theta = run[key].theta[:, 0]
+    V = run.algebra(key).dense(theta)
+    X, y = columns(frame.Days), frame.Reaction.to_numpy(float)
+    A = np.linalg.inv(X.T @ np.linalg.solve(V, X))
+    e = y - X @ (A @ X.T @ np.linalg.solve(V, y))
+    meat = np.zeros((2, 2))
+    for g in frame.Subject.unique():
+        own = frame.Subject.to_numpy() == g
+        Vg, Xg = V[np.ix_(own, own)], X[own]
+        D = np.linalg.cholesky(Vg).T
+        size, U = np.linalg.eigh(D @ (Vg - Xg @ A @ Xg.T) @ D.T)
+        score = Xg.T @ np.linalg.solve(Vg, D.T @ (U / np.sqrt(size)) @ U.T @ D @ e[own])
+        meat += np.outer(score, score)
+    assert np.sqrt((A @ meat @ A)[1, 1]) == pytest.approx(CLUB["CR2"], rel=1e-6)
+    ours = refit(remedy("mixed-robust"), "clinic", run).intervals[1]
+    assert ours.se == pytest.approx(CLUB["CR2"], rel=5e-4)
+    # coef_test(m, "CR2", test = "Satterthwaite"): 14.0888587711 df, which hardly know the root.
+    assert ours.df == pytest.approx(14.0888587711, rel=1e-4)

@@ -13,6 +13,7 @@ import pytest
 
 from clingstone.case import Case
 from clingstone.covariance.fits import Fits
+from clingstone.evidence.endogeneity import GroupEndogeneity
 from clingstone.evidence.finding import About
 from clingstone.evidence.grouplm import scores
 from clingstone.evidence.restricted import RestrictedLR, null_draws
@@ -20,6 +21,7 @@ from clingstone.remedies import remedy
 from clingstone.remedies.mixed import MixedSlope
 from clingstone.remedies.mixedrobust import MixedRobust
 from clingstone.remedies.refit import refit
+from clingstone.remedies.sandwich import ClusterRobust
 from clingstone.remedies.unstructured import Unstructured
 from clingstone.run import Run
 
@@ -287,3 +289,54 @@ def test_slope_fit_equals_mixedlm_of_statsmodels():
     node = {"group:Subject", "slope:Subject:Days"}
     assert printed(f, node) == pytest.approx(theirs.llf, abs=1e-3)
     np.testing.assert_allclose(refit(MixedSlope(df="normal"), "", f).estimate, theirs.fe_params, rtol=1e-3)
+
+
+# ---- within against between: Produc of plm ----
+
+
+def test_within_against_between_of_produc_equals_plm_and_clubsandwich():
+    d = data("plm", "Produc")
+    logs = {
+        name: np.log(d[column]) for name, column in (("y", "gsp"), ("a", "pcap"), ("b", "pc"), ("c", "emp"))
+    }
+    d = d.assign(**logs)
+    f = fits(d, "y ~ a + b + c + unemp", group="state")
+    test = GroupEndogeneity()
+    (about,) = [a for a in test.abouts(f.design) if a.key.startswith("all predictors")]
+    # Means of the four predictors m_… added to lm(y ~ a + b + c + unemp), then Wald_test(o,
+    # constrain_zero(6:9), vcov = "CR2", cluster = state, test = "HTZ") of clubSandwich 0.5.8.
+    reading = test.read(f, about)
+    assert reading.statistic[0] == pytest.approx(3.9971466908680, rel=1e-9)
+    assert (reading.df, reading.df2) == (4, pytest.approx(25.459793521598, rel=1e-9))
+    assert reading.p[0] == pytest.approx(0.0119483728642939, rel=1e-8)
+    # Without a correction the same Wald statistic is plm's phtest(y ~ …, method = "aux", vcov = vcovHC).
+    X = np.column_stack([np.ones(len(d)), d[["a", "b", "c", "unemp"]]])
+    X = np.column_stack([X, d.groupby("state")[["a", "b", "c", "unemp"]].transform("mean")])
+    A = np.linalg.inv(X.T @ X)
+    e = d["y"].to_numpy() - X @ (A @ X.T @ d["y"].to_numpy())
+    scores = np.stack(
+        [X[own].T @ e[own] for own in (d["state"].to_numpy() == s for s in d["state"].unique())]
+    )
+    plain = refit(
+        ClusterRobust(kind="CR0", df="normal"),
+        "state",
+        fits(
+            d.assign(**{f"m{k}": X[:, 5 + k] for k in range(4)}),
+            "y ~ a + b + c + unemp + m0 + m1 + m2 + m3",
+            group="state",
+        ),
+    )
+    V = np.array(plain.covariance)
+    np.testing.assert_allclose(V, A @ scores.T @ scores @ A, rtol=1e-6)
+    b = np.array(plain.estimate)[5:]
+    assert b @ np.linalg.solve(V[5:, 5:], b) == pytest.approx(19.940194299234, rel=1e-7)
+
+
+def test_fixed_effects_of_produc_equal_plm():
+    d = data("plm", "Produc")
+    f = fits(d, "log(gsp) ~ log(pcap) + log(pc) + log(emp) + unemp", group="state")
+    found = refit(remedy("fixed-effects"), "state", f)
+    # plm(…, model = "within")
+    assert found.get("log(pcap)").estimate == pytest.approx(-0.0261496535946801, rel=1e-7)
+    assert found.get("log(pc)").estimate == pytest.approx(0.292006925084253, rel=1e-8)
+    assert found.get("log(emp)").estimate == pytest.approx(0.768159472598907, rel=1e-8)

@@ -16,7 +16,7 @@ import numpy as np
 import numpy.typing as npt
 from scipy import optimize, stats
 
-from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.algebras import Chosen, Layered
 from clingstone.covariance.bundles import Bundle
 from clingstone.covariance.each import Each, each
 from clingstone.covariance.fits import ErrorModel
@@ -59,7 +59,7 @@ def varying(
     surface = _Surface(algebra, response, restricted)
     x = surface.at(model.theta[:, 0], float(model.sigma2[0]))
     walk = None
-    if _work(algebra) <= WORK:
+    if followed(algebra, response):
         walk = _Walk.of(surface, x, float(stats.chi2.isf(1 - confidence, 1)))
         x = walk.best
     none = (np.nan, np.nan)
@@ -81,12 +81,20 @@ def _sd(variance: float) -> float:
     return float(np.sqrt(max(variance, 0.0)))
 
 
-def _work(algebra: Chosen) -> float:
-    """Multiplications of one evaluation, from the design alone; beyond all bounds with other components."""
+def followed(algebra: Chosen, response: Response) -> bool:
+    """Whether ends are worked out: a profile takes hundreds of evaluations, so each must be cheap."""
+    return _work(algebra, response) <= WORK
+
+
+def _work(algebra: Chosen, response: Response) -> float:
+    """Multiplications of one evaluation; beyond all bounds with other components."""
     p = algebra.design.p
     bundles = [algebra.bundle(key) for key in algebra.level_keys]
     if sum(bundle.q for bundle in bundles) != len(algebra.pieces):
         return np.inf
+    classes = algebra.classes(response) if isinstance(algebra, Layered) else None
+    if classes is not None:  # intercepts of one level: groups of equal load are one
+        return float(len(classes.c) * (p + 2.0) ** 2)
     cells = sorted(bundle.part.count for bundle in bundles)
     nested = all(b.part.relation(a.part) in ("nests", "nested", "same") for a in bundles for b in bundles)
     return sum(b.part.count * (b.q + p + 1.0) ** 2 for b in bundles) + (

@@ -41,7 +41,7 @@ from clingstone.remedies.remedy import (
     Remedy,
     no_level,
 )
-from clingstone.remedies.words import bound_notes, gls_account
+from clingstone.remedies.words import bound_notes, gls_account, profiled
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -111,7 +111,10 @@ class GlsReady(FittedReady):
         node = self.remedy.node(fits)
         unit = "" if fits.design.spatial is None else fits.design.spatial.unit
         found = gls_account(self.remedy.estimation, self.rule, self.components, fits[node], unit)
-        return replace(found, items=(*found.items, *map_items(fits, node)))
+        items = [*found.items, *map_items(fits, node)]
+        if self.remedy.id == "mixed-intercept" and self.remedy.estimation == "REML":
+            items += profiled(fits.algebra(node), fits.response, fits[node], fits.run.settings.confidence)
+        return replace(found, items=tuple(items))
 
     # ---- one column ----------------------------------------------------------------------
 

@@ -10,12 +10,11 @@ import numpy as np
 from clingstone.covariance.algebras import choose
 from clingstone.covariance.components import declared, on_request, slope_key
 from clingstone.covariance.information import affordable, ingredients
-from clingstone.covariance.profile import Varying, varying
 from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.slopedeach import SlopedEach
 from clingstone.design.design import Design, rows_of
 from clingstone.design.response import Response
-from clingstone.display import MINUS, listed, significant
+from clingstone.display import MINUS
 from clingstone.maths import curvature, reml
 from clingstone.maths.kenward import Kenward
 from clingstone.maths.once import Array
@@ -25,6 +24,7 @@ from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, 
 from clingstone.remedies.glseach import read_each
 from clingstone.remedies.linear import positive_m, reported
 from clingstone.remedies.remedy import GROUPED, Account, Estimand, Estimates, Flags, Plain, Price
+from clingstone.remedies.words import profiled
 
 if TYPE_CHECKING:
     from clingstone.covariance.algebras import Chosen
@@ -82,8 +82,7 @@ class SlopeReady(FittedReady):
         node = self.remedy.node(fits)
         model, algebra = fits[node], fits.algebra(node)
         level = fits.run.settings.confidence
-        found = varying(algebra, fits.response, model, level)
-        items = [_item(one, algebra, level) for one in found if np.isfinite(one.estimate)]
+        items = profiled(algebra, fits.response, model, level)
         items.append(("restricted log-likelihood", f"{_printed(self.design, model):.6g}".replace("-", MINUS)))
         df = {"Kenward–Roger": ", kenward-roger-1997", "Satterthwaite": ", giesbrecht-burns-1985"}
         return Account(
@@ -246,23 +245,6 @@ def _parsed(design: Design, at: str) -> tuple[Partition, tuple[str, ...]]:
 
 
 # ---- words ----
-
-
-def _item(one: Varying, algebra: Chosen, confidence: float) -> tuple[str, str]:
-    """A standard deviation or correlation in words, its value, and its profile interval if there is one."""
-    value = (f"{one.estimate:.6g}" if len(one.names) == 1 else f"{one.estimate:.3f}").replace("-", MINUS)
-    if np.isfinite(one.low) and np.isfinite(one.high):
-        ends = f"{significant(one.low, 3)} to {significant(one.high, 3)}"
-        value += f" ({100 * confidence:g} % profile interval {ends})"
-    if one.level == "row":
-        return "standard deviation of row noise", value
-    if len(one.names) == 2:
-        first, second = (name or "intercept" for name in one.names)
-        return f"correlation of {first} and {second} between {one.level}", value
-    (name,) = one.names
-    slopes = [x for x in algebra.bundle(one.level).names if x]
-    what = f"slope of {name}" if name else "intercept" + (f" (at {listed(slopes)} = 0)" if slopes else "")
-    return f"standard deviation of the {what} between {one.level}", value
 
 
 def _printed(design: Design, model: ErrorModel) -> float:

@@ -46,37 +46,21 @@ def at(remedy: Remedy, level: str, fits: Fits) -> Remedy:
 
 def refit(remedy: Remedy, level: str, fits: Fits) -> Refit:
     """Run a remedy at a level on one column of y. Raises NotSupported(reason, hint)."""
-    if fits.response.B != 1:
-        raise ValueError("a Refit is made of one column of y; read many columns with Ready.fit")
+    remedy, ready, found = _run(remedy, level, fits)
     design = fits.design
-    refusal = remedy.needs.check(design)
-    if refusal is not None:
-        raise refusal.error()
-    _stop_if_perfect(fits)
-    remedy = at(remedy, level, fits)
-    ready = remedy.prepare(design, remedy.working(fits))
-    found = ready.fit(fits)
-    boundary = bool(found.boundary[0]) if found.boundary is not None else False
-    converged = bool(found.converged[0]) if found.converged is not None else True
+    plain = read(remedy, ready, found, fits)
     notes = ready.notes + found.notes
-    if not converged:
+    if not plain.converged:
         notes += ("The likelihood search stopped before it settled.",)
-    return Refit(
-        remedy=remedy.id,
-        name=remedy.name,
-        at=remedy.at,
-        covers=tuple(sorted(remedy.covering(fits))),
-        estimand=remedy.estimand,
-        intervals=_intervals(remedy, ready, found, fits),
+    names = _coefficients(found, design)
+    return replace(
+        plain,
         terms=_terms(remedy, found),
         account=ready.account(fits),
-        coefficients=_coefficients(found, design),
-        estimate=tuple(float(v) for v in found.estimate[: len(_coefficients(found, design)), 0]),
+        coefficients=names,
+        estimate=_floats(found.estimate[: len(names), 0]),
         covariance=None if found.covariance is None else tuple(map(_floats, found.covariance)),
-        confidence=fits.run.settings.confidence,
         notes=notes + _unjoined(ready, found, design),
-        boundary=boundary,
-        converged=converged,
     )
 
 
@@ -94,6 +78,7 @@ def read(remedy: Remedy, ready: Ready, found: Estimates, fits: Fits) -> Refit:
         intervals=_intervals(remedy, ready, found, fits),
         terms=(),
         account=Account("", "", "", "", ""),
+        confidence=fits.run.settings.confidence,
         boundary=bool(found.boundary[0]) if found.boundary is not None else False,
         converged=bool(found.converged[0]) if found.converged is not None else True,
     )
@@ -104,10 +89,24 @@ def explain(remedy: Remedy, level: str, fits: Fits) -> tuple[Convention, ...]:
     out = []
     for words, other in remedy.conventions():
         try:
-            out.append(Convention(words, refit(other, level or remedy.at, fits).intervals))
+            chosen, ready, found = _run(other, level or remedy.at, fits)
+            out.append(Convention(words, _intervals(chosen, ready, found, fits)))
         except NotSupported:
             continue  # a convention that these data cannot carry has no number to compare with
     return tuple(out)
+
+
+def _run(remedy: Remedy, level: str, fits: Fits) -> tuple[Remedy, Ready, Estimates]:
+    """The remedy set to its level, prepared, and what it finds in one column of y. Raises NotSupported."""
+    if fits.response.B != 1:
+        raise ValueError("a Refit is made of one column of y; read many columns with Ready.fit")
+    refusal = remedy.needs.check(fits.design)
+    if refusal is not None:
+        raise refusal.error()
+    _stop_if_perfect(fits)
+    chosen = at(remedy, level, fits)
+    ready = chosen.prepare(fits.design, chosen.working(fits))
+    return chosen, ready, ready.fit(fits)
 
 
 def _stop_if_perfect(fits: Fits) -> None:

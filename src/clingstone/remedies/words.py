@@ -7,11 +7,14 @@ from typing import TYPE_CHECKING
 import numpy as np
 
 from clingstone.covariance.components import Component
-from clingstone.display import number, significant
+from clingstone.covariance.profile import Varying, followed, varying
+from clingstone.display import MINUS, listed, number, significant
 from clingstone.remedies.remedy import Account
 
 if TYPE_CHECKING:
+    from clingstone.covariance.algebras import Chosen
     from clingstone.covariance.fits import ErrorModel
+    from clingstone.design.response import Response
 
 _SHAPES = {
     "serial.rho": "ρ per step",
@@ -63,6 +66,39 @@ def gls_account(
         items=tuple(items),
         source=", ".join(sources),
     )
+
+
+def profiled(
+    algebra: Chosen, response: Response, model: ErrorModel, confidence: float
+) -> list[tuple[str, str]]:
+    """What varies between groups, as standard deviations and correlations with their profile intervals."""
+    found = varying(algebra, response, model, confidence)
+    items = [_item(one, algebra, confidence) for one in found if np.isfinite(one.estimate)]
+    if not followed(algebra, response):
+        groups = max(algebra.bundle(key).part.count for key in algebra.level_keys)
+        why = (
+            f"not worked out: they take hundreds of evaluations of the likelihood, and each runs over all "
+            f"{groups:,} groups"
+        )
+        items.append(("profile intervals of what varies", why))
+    return items
+
+
+def _item(one: Varying, algebra: Chosen, confidence: float) -> tuple[str, str]:
+    """A standard deviation or correlation in words, its value, and its profile interval if there is one."""
+    value = (f"{one.estimate:.6g}" if len(one.names) == 1 else f"{one.estimate:.3f}").replace("-", MINUS)
+    if np.isfinite(one.low) and np.isfinite(one.high):
+        ends = f"{significant(one.low, 3)} to {significant(one.high, 3)}"
+        value += f" ({100 * confidence:g} % profile interval {ends})"
+    if one.level == "row":
+        return "standard deviation of row noise", value
+    if len(one.names) == 2:
+        first, second = (name or "intercept" for name in one.names)
+        return f"correlation of {first} and {second} between {one.level}", value
+    (name,) = one.names
+    slopes = [x for x in algebra.bundle(one.level).names if x]
+    what = f"slope of {name}" if name else "intercept" + (f" (at {listed(slopes)} = 0)" if slopes else "")
+    return f"standard deviation of the {what} between {one.level}", value
 
 
 def _part(component: Component) -> str:
