@@ -20,6 +20,7 @@ import pytest
 import clingstone
 import plain
 from clingstone import cli
+from clingstone.cli import screen
 from clingstone.demo import DEMOS
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import field_help, in_shell, settings_options
@@ -342,7 +343,7 @@ def test_progress_counts_and_leaves_standard_output_alone(
     verbs: Verbs, monkeypatch: pytest.MonkeyPatch, capsys: pytest.CaptureFixture[str]
 ) -> None:
     monkeypatch.setattr(sys.stderr, "isatty", lambda: True)
-    with cli._progress(quiet=False) as listen:
+    with screen.progress(quiet=False) as listen:
         assert listen is not None
         for done in range(4):
             listen("heavy fits", done, 3)

@@ -2,19 +2,18 @@
 
 from __future__ import annotations
 
-import inspect
 from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING, Annotated, Any
 
 import typer
 
-from clingstone.needs import InputError
-from clingstone.options import settings_options
+from clingstone.cli import screen
+from clingstone.cli.arguments import ALWAYS, MUST, SAVING, Entries, with_options
+from clingstone.cli.saved import can_be_saved, examination_of, unused
 
 if TYPE_CHECKING:
     from clingstone.examination import Examination
-    from clingstone.run import Progress
 
 Subject = Annotated[
     Path,
@@ -61,10 +60,8 @@ WholePath = Annotated[
 ToTheEnd = Annotated[
     bool, typer.Option("--to-the-end", help="Make all replicates, also when the ranking is settled.")
 ]
-Entries = dict[str, tuple[Any, Any]]  # option → annotation and default
 _OWN: Entries = {
-    "context": (typer.Context, inspect.Parameter.empty),
-    "subject": (Subject, inspect.Parameter.empty),
+    "subject": (Subject, MUST),
     "replicates": (Replicates, 10_000),
     "remedy": (Only, None),
     "engine": (EngineName, "here"),
@@ -76,43 +73,8 @@ _OWN: Entries = {
 }
 
 
-def register(app: typer.Typer) -> None:
-    """Put the commands of this file on the application."""
-    from clingstone import cli
-
-    shared = {"out": (cli.Out, None), "json": (cli.AsJson, False), "overwrite": (cli.Overwrite, False)}
-    shared |= {"quiet": (cli.Quiet, False), "debug": (cli.Debug, False)}
-    app.command("rehearse", short_help="Simulate y on a design and see how each remedy would have done.")(
-        with_options(_rehearse, _OWN, shared)
-    )
-
-
-# ---- rehearse ------------------------------------------------------------------------------------
-
-
-def with_options(command: Any, own: Entries, shared: Entries) -> Any:
-    """The command with its own options, then one for every field of Settings, then the shared ones.
-
-    Both : name → (annotation, default). Settings that the command has an option of its own for are left out.
-    """
-    from clingstone import cli
-
-    entries = dict(own)
-    for option in settings_options():
-        if option.name != "rehearsal" and option.name not in own:
-            entries[option.name] = (Annotated[option.kind, cli._typer_option(option)], option.default)
-    entries |= shared
-    command.__signature__ = inspect.Signature(
-        [
-            inspect.Parameter(name, inspect.Parameter.KEYWORD_ONLY, annotation=kind, default=default)
-            for name, (kind, default) in entries.items()
-        ]
-    )
-    command.__annotations__ = {name: kind for name, (kind, _) in entries.items()}
-    return command
-
-
-def _rehearse(
+@with_options(_OWN, {**SAVING, **ALWAYS}, without=("rehearsal",))
+def command(
     *,
     context: typer.Context,
     subject: Path,
@@ -135,11 +97,10 @@ def _rehearse(
 
     With a saved folder, its report and results.json are written again with the rehearsal in them.
     """
-    from clingstone import cli
     from clingstone.rehearsing import rehearse
 
     folder = _folder(subject, out, overwrite)
-    with cli._progress(quiet) as progress:
+    with screen.progress(quiet) as progress:
         examination = examination_of(subject, given, progress, context)
         found = rehearse(
             examination,
@@ -158,48 +119,16 @@ def _rehearse(
     if json:
         from clingstone.results import to_json
 
-        cli._write(to_json(heard.results))
+        screen.write(to_json(heard.results))
     elif not quiet:
-        cli._write(_printed(heard, folder))
+        screen.write(_printed(heard, folder))
 
 
 def _folder(subject: Path, out: Path | None, overwrite: bool) -> Path:
-    from clingstone import cli
-
-    if out is None:
-        return subject if subject.is_dir() else cli._unused(f"{subject.stem}-clingstone", overwrite)
-    from clingstone.writeup.save import check
-
-    check(out, overwrite)
-    return out
-
-
-def examination_of(
-    subject: Path, given: dict[str, Any], progress: Progress | None, context: typer.Context
-) -> Examination:
-    """The saved examination run again, or a new one of a file; without the short rehearsal."""
-    from clingstone.case import Case
-    from clingstone.examination import examined, settings_of
-    from clingstone.reopened import reopened, saved
-    from clingstone.run import Run, one_thread
-
-    if subject.is_dir():
-        from clingstone import cli
-
-        if any(given.get(o.name, o.default) != o.default for o in settings_options()):
-            raise InputError(
-                f"{subject} is a saved examination, which holds its own settings",
-                "Give the data file instead to examine it with other settings.",
-            )
-        case = reopened(saved(subject), cli._data_of(subject))
-    else:
-        from clingstone import cli
-
-        job = cli.asked(context, subject, given)
-        with one_thread():
-            case = Case.of(job.data, settings_of({**job.arguments, "rehearsal": "none"}))
-    with one_thread():
-        return examined(case, Run(replace(case.settings, rehearsal="none"), report=progress))
+    if out is not None:
+        can_be_saved(out, overwrite)
+        return out
+    return subject if subject.is_dir() else unused(f"{subject.stem}-clingstone", overwrite)
 
 
 def _printed(heard: Examination, folder: Path) -> str:

@@ -2,15 +2,15 @@
 
 from __future__ import annotations
 
-import inspect
 from pathlib import Path
 from typing import Annotated, Any
 
 import typer
 
-from clingstone.cli_rehearse import Entries, examination_of, with_options
+from clingstone.cli import screen
+from clingstone.cli.arguments import ALWAYS, Entries, changed, with_options
+from clingstone.cli.saved import examination_of
 from clingstone.needs import InputError
-from clingstone.options import settings_options
 
 Subject = Annotated[
     Path | None,
@@ -31,7 +31,6 @@ def _text(flag: str, metavar: str, words: str) -> Any:
 
 
 _OWN: Entries = {
-    "context": (typer.Context, inspect.Parameter.empty),
     "subject": (Subject, None),
     "term": (_text("--term", "NAME", "Coefficient; else the first in focus."), None),
     "groups": (_text("--groups", "LIST", "Numbers of groups, such as 12,24,36."), None),
@@ -54,16 +53,8 @@ _OWN: Entries = {
 }
 
 
-def register(app: typer.Typer) -> None:
-    """Put the command on the application."""
-    from clingstone import cli
-
-    app.command("plan", short_help="The interval width to expect with other numbers of groups, rows.")(
-        with_options(_plan, _OWN, {"quiet": (cli.Quiet, False), "debug": (cli.Debug, False)})
-    )
-
-
-def _plan(
+@with_options(_OWN, ALWAYS, without=("rehearsal",))
+def command(
     *,
     context: typer.Context,
     subject: Path | None,
@@ -89,17 +80,16 @@ def _plan(
     From a saved examination or a file, whose design and error model are enlarged; or from stated numbers,
     for two arms of equal size.
     """
-    from clingstone import cli
     from clingstone.rehearsing import plan
 
     if figure is not None and figure.suffix.casefold() not in DRAWN:
         raise InputError(f"a figure cannot be drawn as {figure.name}", "Name it with .svg or .png.")
-    if subject is None and any(given[o.name] != o.default for o in settings_options() if o.name in given):
+    if subject is None and changed(given):
         raise InputError(
             "options of an examination were given, but no data",
             "Name a file or a saved folder, or state --icc, --rho or --range with --groups and --rows.",
         )
-    with cli._progress(quiet) as progress:
+    with screen.progress(quiet) as progress:
         made = plan(
             None if subject is None else examination_of(subject, given, progress, context),
             term=term,
@@ -114,7 +104,7 @@ def _plan(
             cost_row=cost_row,
             confidence=confidence,
         )
-    cli._write(made.table().to_csv() if csv else f"{made}\n")
+    screen.write(made.table().to_csv() if csv else f"{made}\n")
     if figure is not None:
         from clingstone.writeup.planned import plate
 
