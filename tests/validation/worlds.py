@@ -10,13 +10,16 @@ A world is drawn in two steps: a design (x, sizes, places, times) and on it any 
 
 from __future__ import annotations
 
+import zlib
 from collections.abc import Callable, Mapping
 from dataclasses import dataclass
 from typing import Any
 
 import numpy as np
 import pandas as pd
+from scipy import optimize
 
+SEED = 20_261_201
 SLOPE = 0.5
 Array = np.ndarray
 
@@ -26,8 +29,8 @@ class Truth:
     """One design of a world.
 
     mean : what V does not hold, an offset beside x and the constant. noise : draws the errors (n, B)
-    where they are not normal with covariance V. without : V with one structure left out, by family,
-    where that is not the covariance of independent rows.
+    where they are not normal with covariance V. without : by family, the nearest covariance that lacks it,
+    where that is not the one of independent rows.
     """
 
     x: Array
@@ -67,6 +70,11 @@ class World:
     covered: bool = True
     wrong: bool = False
     batch: int = 50
+
+    def design(self, d: int) -> tuple[Truth, np.random.Generator]:
+        """Design d, and the generator that goes on to draw columns of y on it."""
+        rng = np.random.default_rng([SEED, zlib.crc32(self.name.encode()), d])
+        return self.draw(rng), rng
 
     def table(self, rng: np.random.Generator) -> tuple[pd.DataFrame, Truth]:
         """One table of a user, and the truth behind it."""
@@ -113,6 +121,23 @@ def smooth(rng: np.random.Generator, V: Array) -> Array:
     return np.asarray(np.linalg.cholesky(V + 1e-8 * np.eye(len(V))) @ rng.standard_normal(len(V)))
 
 
+def nearest(V: Array, family: Callable[[float], Array]) -> Array:
+    """The covariance of a one-parameter family, at parameters from 0 to 0.95, that is nearest to V.
+
+    Up to scale and in Kullback and Leibler's distance of normal laws, ln|V₀| + n ln tr(V₀⁻¹V): no test of
+    the family has more power against V than the most powerful one against any single member, and against
+    the nearest it has about the least.
+    """
+    n = len(V)
+
+    def distance(value: float) -> float:
+        L = np.linalg.cholesky(family(value))
+        half = np.linalg.solve(L, V)
+        return float(2 * np.log(np.diag(L)).sum() + n * np.log(np.trace(np.linalg.solve(L.T, half))))
+
+    return family(float(optimize.minimize_scalar(distance, bounds=(0.0, 0.95), method="bounded").x))
+
+
 # ---- builders ----------------------------------------------------------------------------------
 
 
@@ -155,11 +180,17 @@ def panel(G: int, T: int, icc: float, rho: float, level: str) -> Callable[..., T
             "row": lambda: rng.standard_normal(G * T),
             "ar": lambda: np.concatenate([ar(rng, T, 0.7) for _ in range(G)]),
         }[level]()
-        inside = np.kron(np.eye(G), toeplitz(T, rho))
-        V = icc * same(g) + (1 - icc) * inside
+
+        def inside(rho: float) -> Array:
+            return np.kron(np.eye(G), toeplitz(T, rho))
+
+        def shared(icc: float) -> Array:
+            return icc * same(g) + (1 - icc) * np.eye(G * T)
+
+        V = icc * same(g) + (1 - icc) * inside(rho)
         without = None
         if icc and rho:
-            without = {"group": inside, "serial": icc * same(g) + (1 - icc) * np.eye(G * T)}
+            without = {"group": nearest(V, inside), "serial": nearest(V, shared)}
         return Truth(x, V, {"g": [f"g{k}" for k in g], "t": t}, without=without)
 
     return draw
