@@ -150,3 +150,17 @@ def test_pairs_skip_gaps_and_series_ends():
     earlier, later = series.pairs(2)
     assert list(zip(earlier, later, strict=True)) == [(1, 2), (4, 6)]
     assert series.runs.sizes.tolist() == [2, 2, 3]
+
+
+@pytest.mark.parametrize("weighted", [False, True])
+def test_y_carried_onto_added_columns_is_that_of_a_fit_from_nothing(weighted):
+    design, _, y, *_ = small(weighted)
+    response = Response.of(design, y)
+    rng = np.random.default_rng(8)
+    once = extend(design, "more", rng.normal(size=(30, 2)))
+    twice = extend(once, "still more", rng.normal(size=30))
+    for derived in (once, twice):
+        there, afresh = onto(response, derived), Response.of(derived, y)
+        np.testing.assert_allclose(there.residual, afresh.residual, atol=1e-8)
+        np.testing.assert_allclose(there.coef, afresh.coef, rtol=1e-9, atol=1e-8)
+        assert np.abs(derived.Q.T @ there.residual).max() < 1e-12

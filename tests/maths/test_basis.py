@@ -70,3 +70,28 @@ def test_the_rank_rule_does_not_depend_on_units(power, seed):
     assert aliased(X) == ()
     both = np.column_stack([X, X[:, 1] + 10.0**-power * X[:, 2]])
     assert len(aliased(both)) == 1
+
+
+def test_a_long_table_is_factored_as_a_short_one():
+    """Cholesky factors taken twice against Householder's, nearly dependent columns included."""
+    rng = np.random.default_rng(3)
+    n = 30_000
+    X = np.column_stack([np.ones(n), rng.standard_normal((n, 3)) * [1e-6, 1.0, 1e4]])
+    for gap in (1.0, 1e-7):
+        wide = np.column_stack([X, X[:, 1] / 1e-6 + gap * rng.standard_normal(n)])
+        basis, (Q, R) = Basis.of(wide), np.linalg.qr(wide)
+        signs = np.sign(np.diag(basis.R) * np.diag(R))
+        assert np.abs(basis.Q.T @ basis.Q - np.eye(5)).max() < 1e-14
+        assert np.allclose(basis.R, signs[:, None] * R, rtol=1e-10, atol=1e-10 * np.abs(R).max())
+        assert np.allclose(basis.Q, Q * signs, atol=1e-10 / gap * 1e-4)
+    with pytest.raises(ValueError, match="dependent"):
+        Basis.of(np.column_stack([X, X[:, 1] + X[:, 2]]))
+
+
+def test_projection_leaves_nothing_in_the_column_space_however_large_the_mean():
+    rng = np.random.default_rng(4)
+    basis = Basis.of(np.column_stack([np.ones(25_000), rng.standard_normal(25_000)]))
+    y = rng.standard_normal((25_000, 2))
+    for Y in (y, y + 1e9):
+        e = basis.project(Y)
+        assert np.abs(basis.Q.T @ e).max() < 1e-12 * np.linalg.norm(e)

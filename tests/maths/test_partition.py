@@ -69,3 +69,16 @@ def test_codes_are_read_only():
     part = Partition.of("g", LABELS)
     with pytest.raises(ValueError, match="read-only"):
         part.codes[0] = 2
+
+
+def test_rows_that_stand_cell_after_cell_add_up_as_scattered_ones_do():
+    rng = np.random.default_rng(1)
+    codes = np.sort(np.append(np.arange(30), rng.integers(0, 30, 500))).astype(np.int32)
+    values, order = rng.standard_normal(530), rng.permutation(530)
+    labels = tuple(str(i) for i in range(30))
+    together, scattered = Partition("g", codes, labels), Partition("g", codes[order], labels)
+    assert together.starts is not None
+    assert scattered.starts is None
+    assert np.allclose(together.sums(values), scattered.sums(values[order]), rtol=1e-13, atol=1e-13)
+    assert together.sums(values > 0).tolist() == np.bincount(codes, values > 0).tolist()
+    assert scattered.take(np.argsort(order)).codes.tolist() == codes.tolist()

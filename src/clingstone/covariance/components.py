@@ -12,7 +12,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import count
 from clingstone.maths.basis import Gram
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, NotSupported, Refusal
 
@@ -84,7 +84,8 @@ class Algebra(Protocol):
         ...
 
 
-def declared(design: Design, limits: Limits) -> tuple[dict[str, Component], dict[str, Refusal]]:
+@once
+def declared(design: Design, limits: Limits) -> tuple[Mapping[str, Component], Mapping[str, Refusal]]:
     """Components that these data can carry, in building order, and why the others cannot be had.
 
     Every declared structure gives one component per group level, one for order and one for place.
@@ -150,6 +151,7 @@ def slope_of(design: Design, key: str) -> tuple[Partition, str, bool] | None:
     return None
 
 
+@once
 def on_request(design: Design, key: str, limits: Limits) -> Component:
     """A component that is fitted only when asked for by its key: slopes. Raises NotSupported."""
     found = slope_of(design, key)

@@ -148,9 +148,16 @@ def whole(response: Response) -> Array:
 
 def onto(response: Response, derived: Design) -> Response:
     """The same y over a derived design of the same rows (``extend`` or ``absorb``)."""
-    Y = whole(response)
-    if derived.swept > response.design.swept:
+    design = response.design
+    if derived.swept > design.swept:
         raise ValueError("use sweep() to carry y onto a design with absorbed groups")
+    if derived.basis is design.basis:
+        return replace(response, design=derived)
+    if derived.basis.holds(design.basis):
+        e = derived.basis.project(response.residual, first=design.p)
+        coef = np.vstack([response.coef, derived.Q[:, design.p :].T @ response.residual])
+        return Response(derived, frozen(coef), frozen(e), frozen(np.einsum("ij,ij->j", e, e)))
+    Y = whole(response)
     e = derived.basis.project(Y)
     return Response(derived, frozen(derived.Q.T @ Y), frozen(e), frozen(np.einsum("ij,ij->j", e, e)))
 

@@ -9,7 +9,7 @@ import numpy as np
 from clingstone.design.design import Design, Term, rows_of
 from clingstone.evidence.finding import About
 from clingstone.evidence.read import Plain
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
 from clingstone.structure.group import title_of
@@ -75,6 +75,7 @@ class BesideOthers(AtLevels):
 # ---- predictors at a level -----------------------------------------------------------------------------
 
 
+@once
 def moving(design: Design, part: Partition, term: Term) -> tuple[int, ...]:
     """Columns of a term that vary within some group of a level."""
     X = rows_of(design, design.Q @ design.basis.R[:, list(term.columns)])
@@ -84,6 +85,7 @@ def moving(design: Design, part: Partition, term: Term) -> tuple[int, ...]:
     return tuple(j for j, yes in zip(term.columns, varies, strict=True) if yes)
 
 
+@once
 def row_level(design: Design) -> tuple[tuple[Partition, Term], ...]:
     """Terms in focus that vary within the groups of a level, finest level first."""
     if design.group is None:
@@ -101,6 +103,7 @@ def found(design: Design, about: About) -> tuple[Partition, Term]:
     return next((v, t) for v, t in row_level(design) if f"{t.name}{BY}{v.key}" == about.key)
 
 
+@once
 def covariate(design: Design, term: Term) -> Array | None:
     """(n,) the raw predictor of a numeric term that enters the model as it is; None for any other."""
     if term.kind != "numeric" or len(term.columns) != 1 or len(term.variables) != 1:

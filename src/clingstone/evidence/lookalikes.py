@@ -222,10 +222,13 @@ class Outliers(GivenAll):
 def _far(rows: npt.NDArray[np.int64], r: Array, m: int) -> tuple[int, ...]:
     """Rows beyond Bonferroni's 5 %, furthest first and at most 20; the furthest one where there are none."""
     size = np.abs(np.nan_to_num(r))
+    most = min(MOST_NAMED, len(size))
+    among = np.flatnonzero(size >= np.partition(size, -most)[-most])  # with all that tie with the last
+    among = among[np.argsort(-size[among], kind="stable")][:most]
     with np.errstate(divide="ignore", invalid="ignore"):
-        t = size * np.sqrt((m - 1) / np.maximum(m - size**2, 0.0))
+        t = size[among] * np.sqrt((m - 1) / np.maximum(m - size[among] ** 2, 0.0))
     far = int(np.sum(2 * len(r) * stats.t.sf(t, m - 1) < ALPHA))
-    return tuple(int(i) for i in rows[np.argsort(-size, kind="stable")[: min(max(far, 1), MOST_NAMED)]])
+    return tuple(int(i) for i in rows[among[: max(far, 1)]])
 
 
 @dataclass(frozen=True)

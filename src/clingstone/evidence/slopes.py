@@ -17,7 +17,7 @@ from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import BY, covariate, level_name, moving, row_level
 from clingstone.evidence.read import Plain, by_f, degenerate
 from clingstone.evidence.rough import inner_models, inner_node
-from clingstone.maths.once import Array, kept
+from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
 
@@ -105,6 +105,7 @@ class SlopeVariation(Plain):
         )
 
 
+@once
 def sloping(design: Design) -> tuple[tuple[Partition, Term], ...]:
     """Numeric terms that vary within a level, in focus or a part of an interaction in focus."""
     if design.group is None:

@@ -17,7 +17,7 @@ from clingstone.design.response import Response
 from clingstone.display import MINUS
 from clingstone.maths import curvature, reml
 from clingstone.maths.kenward import Kenward
-from clingstone.maths.once import Array
+from clingstone.maths.once import Array, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Limits, Needs, NotSupported, Refusal
 from clingstone.remedies.columns import DEAR, FLAT, RULES, Column, FittedReady, Rule, apart, plain_df
@@ -191,6 +191,7 @@ def kenward(algebra: Chosen, theta: Array, sigma2: float) -> Kenward | None:
         return None
 
 
+@once
 def candidates(design: Design, level: Partition) -> tuple[str, ...]:
     """Numeric predictors in focus that enter the model as they are and vary within the level.
 

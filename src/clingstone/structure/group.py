@@ -307,6 +307,8 @@ def _recycled(outer: Partition, inner: Partition) -> list[str]:
 
 def _lookalikes(level: Partition) -> list[str]:
     """A note on labels that differ only by blanks, case or leading zeros; they stay apart."""
+    if all(v.isascii() and v.isdecimal() and (v == "0" or v[0] != "0") for v in level.labels):
+        return []
     alike: dict[str, list[str]] = {}
     for label in level.labels:
         key = re.sub(r"\s+", " ", label.replace(" (text)", "").strip().casefold())

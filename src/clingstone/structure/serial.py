@@ -160,7 +160,7 @@ def build(
     tied = _tied(clock, part)
     if len(tied) and ties == "stop":
         raise _tie_error(name, clock, part, tied, places, groups)
-    order = np.lexsort((clock.counts, part.codes)).astype(np.int64)
+    order = _in_order(clock, part, ties=len(tied) > 0)
     found = part.take(order)
     grid = judge(clock.counts[order], found.codes)
     unit, per = clock.unit_for(grid.step)
@@ -189,9 +189,31 @@ def build(
     )
 
 
+def _line(clock: Clock, part: Partition) -> Rows | None:
+    """(n,) places of the rows on one line of whole numbers, series after series; None where none is made."""
+    counts = clock.counts
+    if not np.issubdtype(counts.dtype, np.integer):
+        return None
+    span = int(counts.max()) - int(counts.min()) + 1
+    if span * part.count >= 2**62:
+        return None
+    return np.asarray(part.codes * np.int64(span) + (counts - counts.min()), dtype=np.int64)
+
+
+def _in_order(clock: Clock, part: Partition, ties: bool = True) -> Rows:
+    """(n,) rows by series and time; equal times stay in the table's order."""
+    line = _line(clock, part)
+    if line is None:
+        return np.lexsort((clock.counts, part.codes)).astype(np.int64)
+    return np.argsort(line, kind="stable" if ties else None)
+
+
 def _tied(clock: Clock, part: Partition) -> Rows:
     """Rows whose series and time an earlier row of the table has already."""
-    order = np.lexsort((clock.counts, part.codes))  # stable: equal times stay in the table's order
+    line = _line(clock, part)
+    if line is not None and np.all(np.diff(np.sort(line))):
+        return np.zeros(0, dtype=np.int64)
+    order = _in_order(clock, part)
     again = (np.diff(part.codes[order]) == 0) & (np.diff(clock.counts[order]) == 0)
     return np.sort(order[1:][again])
 
