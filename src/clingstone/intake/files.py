@@ -5,13 +5,13 @@ from __future__ import annotations
 import gzip
 import json
 import zlib
-from collections.abc import Callable, Collection, Mapping
-from dataclasses import dataclass, field
+from collections.abc import Collection
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from clingstone.display import count, instead, listed, quoted
+from clingstone.display import count, listed, quoted
 from clingstone.intake import delimited, words
+from clingstone.intake.opened import Source, chosen, missing_reader, unreadable
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:
@@ -39,26 +39,6 @@ _FORMATS = {
     ".geojson": "GeoJSON",
     ".shp": "shapefile",
 }
-
-Read = Callable[[Collection[str]], "tuple[pd.DataFrame, list[str]]"]
-
-
-@dataclass(frozen=True, eq=False)
-class Source:
-    """A file that was opened: its columns and rows are known, and none but those asked for is read.
-
-    read : names → a frame of those columns, and notes. origin : file, format, how it was read.
-    geometry : of a geographic file, a frame with its shapes alone. codes : column → label → the number
-    that the label stands for.
-    """
-
-    names: tuple[str, ...]
-    rows: int
-    read: Read = field(repr=False)
-    origin: Mapping[str, str]
-    notes: tuple[str, ...] = ()
-    geometry: pd.DataFrame | None = field(default=None, repr=False)
-    codes: Mapping[str, Mapping[str, float]] = field(default_factory=dict, repr=False)
 
 
 def source(path: str | Path, sheet: str | None = None) -> Source:
@@ -107,32 +87,6 @@ def _opened(path: Path, suffix: str, sheet: str | None) -> Source:
     from clingstone.intake import maps
 
     return maps.opened(path, sheet, origin)
-
-
-def missing_reader(path: Path, package: str, extra: str) -> InputError:
-    """What to install for a file of this kind."""
-    return InputError(
-        f"{path.name} needs {package} to be read, which is not installed",
-        f"Install it with: pip install 'clingstone[{extra}]'.",
-    )
-
-
-def unreadable(path: Path, kind: str, error: Exception) -> InputError:
-    said = " ".join(str(error).split())
-    return InputError(f"{path.name} is not a readable {kind} file: {said}", "Save it again.")
-
-
-def chosen(sheet: str | None, sheets: list[str], path: Path, what: str) -> tuple[str, list[str]]:
-    """The sheet or layer to read, and a note where there are others."""
-    if sheet is not None and sheet not in sheets:
-        raise InputError(f"{path.name} has no {what} ‘{sheet}’", instead(sheet, sheets))
-    if sheet is not None or len(sheets) == 1:
-        return sheet or sheets[0], []
-    others = quoted(sheets[1:], most=6)
-    return sheets[0], [
-        f"{path.name} has {len(sheets)} {what}s; ‘{sheets[0]}’, the first, is read ({others} "
-        f"{'is' if len(sheets) == 2 else 'are'} not). Another is named with sheet=."
-    ]
 
 
 def _suffix(path: Path) -> str:

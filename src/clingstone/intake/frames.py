@@ -11,7 +11,7 @@ import numpy.typing as npt
 
 from clingstone.display import count, instead, rows, significant
 from clingstone.intake.delimited import unique_names
-from clingstone.intake.files import Source
+from clingstone.intake.opened import Source
 from clingstone.needs import InputError
 
 if TYPE_CHECKING:

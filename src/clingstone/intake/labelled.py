@@ -9,7 +9,7 @@ from typing import TYPE_CHECKING, Any
 import numpy as np
 
 from clingstone.display import count, listed, quoted
-from clingstone.intake.files import Source, missing_reader, unreadable
+from clingstone.intake.opened import Source, missing_reader, unreadable
 
 if TYPE_CHECKING:
     import pandas as pd

@@ -7,7 +7,7 @@ from dataclasses import replace
 from pathlib import Path
 from typing import TYPE_CHECKING
 
-from clingstone.intake.files import Source, chosen, missing_reader, unreadable
+from clingstone.intake.opened import Source, chosen, missing_reader, unreadable
 
 if TYPE_CHECKING:
     import pandas as pd
