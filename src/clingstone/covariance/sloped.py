@@ -20,7 +20,8 @@ from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.search import Optimum, slack
 
-ONE_START = 5000  # groups from which the search starts once
+ONE_START = 5000  # groups from which the search starts once, where one over some of them ended
+SOME = 1000  # how many these are, or a few more
 
 
 @dataclass(frozen=True, eq=False)
@@ -111,10 +112,12 @@ class Sloped(Pieces):
         f = one(response.column(0), m)
         unit, diagonal = self._units(response)
         # One start is enough where many cells make the criterion all but quadratic.
-        sizes = (1.0,) if self.levels[0].part.count > ONE_START else (1.0, 0.2)
-        starts = [np.where(diagonal, size * unit, 0.0) for size in sizes]
+        many = self.levels[0].part.count > ONE_START
+        starts = [np.where(diagonal, size * unit, 0.0) for size in ((1.0,) if many else (1.0, 0.2))]
         if warm is not None:
             starts = [self._entries(warm.start)]
+        elif many and len(self.levels) == 1:
+            starts = [newton.descend(self._some(response.column(0)), starts[0], unit).x]
         runs = [newton.descend(f, start, unit) for start in starts]
         best = min(runs, key=lambda run: run.value)
         agree = sum(run.value <= best.value + 1e-3 for run in runs)
@@ -171,6 +174,25 @@ class Sloped(Pieces):
 
         def f(entries: Array) -> tuple[float, Array]:
             value, slope = slopes.criterion(base, block, self._factors(entries)[0], m)
+            return value, slope[self._places[0]]
+
+        return f
+
+    def _some(self, column: Response) -> newton.Function:
+        """The criterion of some cells alone, whose minimum lies near that of all."""
+        part, block = self.levels[0].part, self._block(column)
+        every = part.count // SOME
+        rows = np.flatnonzero(part.codes % every == 0)
+        Q, e = self.design.Q[rows], column.residual[rows]
+        size, turn = np.linalg.eigh(Q.T @ Q)
+        turn = turn[:, size > 1e-8 * size[-1]]  # of columns that vary over other cells alone nothing is left
+        Q = Q @ turn
+        base = Gram(Q.T @ Q, Q.T @ e, np.einsum("ij,ij->j", e, e), 0.0)
+        UQ = np.einsum("qpg,pk->qkg", block.UQ[..., ::every], turn)
+        few = slopes.Block(block.UU[..., ::every], UQ, block.UE[..., ::every])
+
+        def f(entries: Array) -> tuple[float, Array]:
+            value, slope = slopes.criterion(base, few, self._factors(entries)[0], len(rows) - turn.shape[1])
             return value, slope[self._places[0]]
 
         return f

@@ -13,7 +13,7 @@ operation over all cells, whatever their number. Exact, O(cells · q²p) at each
 
 from __future__ import annotations
 
-from collections.abc import Sequence
+from collections.abc import Iterator, Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -22,6 +22,8 @@ from clingstone.maths.basis import Gram
 from clingstone.maths.once import Array
 from clingstone.maths.partition import Partition
 from clingstone.maths.reml import forward
+
+TOGETHER = 2048  # cells
 
 
 @dataclass(frozen=True, eq=False)
@@ -145,14 +147,13 @@ def criterion(gram: Gram, block: Block, L: Array, m: int) -> tuple[float, Array]
     diagonal are not used.
     """
     q, p = L.shape[0], gram.QQ.shape[0]
-    at = range(q)
-    H = np.concatenate([block.UQ, block.UE], axis=1)
-    C = _cholesky(_inner(block, L, at))
-    X = _solve(C, _turned(L, list(H)))
+    some = list(_split(block))
+    halves = [_halved(part, L) for part in some]
     A = np.zeros((p + 1, p + 1))
     A[:p, :p], A[:p, p], A[p, :p], A[p, p] = gram.QQ, gram.QE[:, 0], gram.QE[:, 0], gram.EE[0]
-    for x in X:
-        A -= x @ x.T
+    for _, _, X in halves:
+        for x in X:
+            A -= x @ x.T
     R = np.asarray(np.linalg.cholesky(A[:p, :p]), dtype=float)
     half = forward(R, A[:p, p:])[:, 0]
     c = max(float(A[p, p] - half @ half), 1e-300)
@@ -160,19 +161,41 @@ def criterion(gram: Gram, block: Block, L: Array, m: int) -> tuple[float, Array]
     N = np.zeros((p + 1, p + 1))
     N[:p, :p] = inverse.T
     N[:p, p], N[p, p] = -np.sqrt(m / c) * (inverse.T @ half), np.sqrt(m / c)
-    W = _back(C, X)
-    Y = np.stack([N.T @ w for w in W])
+    gradient = sum(
+        (_pull(part, L, N, *half) for part, half in zip(some, halves, strict=True)), np.zeros((q, q))
+    )
+    value = gram.logdet + sum(_logdet(C) for _, C, _ in halves) + 2 * float(np.log(np.diag(R)).sum())
+    return value + m * (float(np.log(2 * np.pi * c / m)) + 1), gradient
+
+
+def _split(block: Block) -> Iterator[Block]:
+    """The cells in parts that stay in the processor's cache from one step to the next."""
+    for start in range(0, block.UU.shape[-1], TOGETHER):
+        cells = slice(start, start + TOGETHER)
+        yield Block(block.UU[..., cells], block.UQ[..., cells], block.UE[..., cells])
+
+
+def _halved(block: Block, L: Array) -> tuple[Array, Array, Array]:
+    """H, C with CC' = K, and C⁻¹L'H."""
+    H = np.concatenate([block.UQ, block.UE], axis=1)
+    C = _cholesky(_inner(block, L, range(len(L))))
+    return H, C, _solve(C, _turned(L, list(H)))
+
+
+def _pull(block: Block, L: Array, N: Array, H: Array, C: Array, X: Array) -> Array:
+    """(q, q) what some cells add to the gradient, M = NN'."""
+    q = len(L)
+    Y = np.stack([N.T @ w for w in _back(C, X)])
     P = np.stack([N.T @ h for h in H])
-    gradient = np.empty((q, q))
     unit = _back(C, _solve(C, [np.broadcast_to(row[:, None], (q, C.shape[-1])) for row in np.eye(q)]))
     T = [[unit[i, j] + np.einsum("kg,kg->g", Y[i], Y[j]) for j in range(q)] for i in range(q)]
+    out = np.empty((q, q))
     for j in range(q):
         LT = [_mix(L[a], [T[b][j] for b in range(q)]) for a in range(q)]
         for i in range(q):
             curve = sum(float(block.UU[i, a] @ LT[a]) for a in range(q))
-            gradient[i, j] = 2 * curve - 2 * float(np.vdot(P[i], Y[j]))
-    value = gram.logdet + _logdet(C) + 2 * float(np.log(np.diag(R)).sum())
-    return value + m * (float(np.log(2 * np.pi * c / m)) + 1), gradient
+            out[i, j] = 2 * curve - 2 * float(np.vdot(P[i], Y[j]))
+    return out
 
 
 # ---- covariances and their working parameters ----
