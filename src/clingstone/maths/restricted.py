@@ -18,7 +18,7 @@ BINS = 40  # eigenvalues that are kept apart; neighbours share one χ² with the
 GRID = 60  # values of λ
 DIRECT = 400  # groups up to which the eigenproblem is solved as it stands
 CLASSES = 150  # group sizes that are kept apart beyond that
-ROWS = 20_000  # draws at once
+ROWS = 4_000  # draws at once: what a cache holds
 
 
 @dataclass(frozen=True, eq=False)
@@ -78,16 +78,24 @@ def draws(found: Modes, m: int, rng: np.random.Generator, N: int) -> Array:
     # The grid starts lower with more groups: a smaller λ can then be told from zero.
     grid = np.geomspace(0.02 / (scale * np.sqrt(found.rank)), 1e3 / scale, GRID)
     shrink = 1.0 / (1.0 + np.outer(mu, grid))
-    price = df @ np.log(shrink)
+    # With S = N + D, the same at every λ, the ratio is m ln S − m ln min_λ D(λ) Π(1 + λμ)^(1/m): one
+    # logarithm a draw. λ = 0 stands in front.
+    weight = np.exp(-(df @ np.log(shrink)) / m)
+    D = np.vstack([shrink, np.ones(GRID)]) * weight
+    D = np.hstack([np.ones((len(D), 1)), D])
     rest = m - found.rank
+    single = df == 1
     out = np.empty(N)
     for start in range(0, N, ROWS):
         size = min(ROWS, N - start)
-        w2 = rng.chisquare(df, size=(size, len(df)))
-        D = w2 @ shrink + (rng.chisquare(rest, size=size) if rest > 0 else np.zeros(size))[:, None]
-        gain = np.log1p((w2.sum(axis=1)[:, None] - w2 @ shrink) / D)
-        out[start : start + size] = (m * gain + price).max(axis=1)
-    return np.maximum(out, 0.0)
+        w2 = np.zeros((size, len(df) + 1))
+        w2[:, :-1][:, single] = rng.standard_normal((size, int(single.sum()))) ** 2
+        w2[:, :-1][:, ~single] = rng.chisquare(df[~single], size=(size, int((~single).sum())))
+        if rest > 0:
+            w2[:, -1] = rng.chisquare(rest, size=size)
+        at = w2 @ D
+        out[start : start + size] = m * np.log(at[:, 0] / at.min(axis=1))
+    return out
 
 
 def _binned(found: Modes) -> tuple[Array, Array]:
