@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import replace
 
 import numpy as np
@@ -70,23 +71,17 @@ def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
     keep = [j for j in range(design.p) if j not in gone]
     lost = [keep[i] for i in aliased(X[:, keep])] if keep else []
     keep = [j for j in keep if j not in lost]
-    place = {old: new for new, old in enumerate(keep)}
-    terms = []
-    for t in design.terms:
-        columns = tuple(place[j] for j in t.columns if j in place)
-        if columns:
-            terms.append(replace(t, columns=columns))
     contrasts = tuple(
         Contrast(c.name, tuple(c.weights[j] for j in keep), c.kind, c.of)
         for c in design.contrasts
-        if all(c.weights[j] == 0 for j in range(design.p) if j not in place)
+        if all(c.weights[j] == 0 for j in range(design.p) if j not in keep)
     )
     basis = Basis.of(X[:, keep]) if keep else Basis(np.zeros((design.n, 0)), np.zeros((0, 0)))
     derived = replace(
         design,
         basis=basis,
         names=tuple(design.names[j] for j in keep),
-        terms=tuple(terms),
+        terms=_of_columns(design.terms, keep),
         contrasts=contrasts,
         swept=design.swept + part.count,
     )
@@ -96,13 +91,11 @@ def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:
 def only(design: Design, term: Term) -> Design:
     """The design with the constant and one term: for a term's unadjusted estimate."""
     keep = [j for t in design.terms if t.kind == "constant" for j in t.columns] + list(term.columns)
-    place = {old: new for new, old in enumerate(keep)}
-    kept = [t for t in design.terms if t.kind == "constant" or t.name == term.name]
     return replace(
         design,
         basis=Basis.of(design.Q @ design.basis.R[:, keep]),
         names=tuple(design.names[j] for j in keep),
-        terms=tuple(replace(t, columns=tuple(place[j] for j in t.columns)) for t in kept),
+        terms=_of_columns(design.terms, keep),
         contrasts=(),
     )
 
@@ -122,16 +115,10 @@ def collapse(response: Response, part: Partition) -> Response:
     held = None
     if sites is not None and part.relation(sites.part) in ("same", "nested"):
         held = replace(sites, part=Partition("site", frozen(sites.part.codes[part.first]), sites.part.labels))
-    place = {old: new for new, old in enumerate(keep)}
-    terms = []
-    for t in design.terms:
-        columns = tuple(place[j] for j in t.columns if j in place)
-        if columns:
-            terms.append(replace(t, columns=columns))
     small = Design(
         basis=Basis.of(X[:, keep]),
         names=tuple(design.names[j] for j in keep),
-        terms=tuple(terms),
+        terms=_of_columns(design.terms, keep),
         spatial=held,
         neighbours=design.neighbours if held is not None else (),
         covariates={k: part.means(v) for k, v in design.covariates.items()},
@@ -139,6 +126,13 @@ def collapse(response: Response, part: Partition) -> Response:
     )
     Y = part.sums(whole(response) * root[:, None]) / weight[:, None]
     return Response.of(small, Y)
+
+
+def _of_columns(terms: Sequence[Term], keep: Sequence[int]) -> tuple[Term, ...]:
+    """The terms that still have a column when only those kept are left, with the columns' new places."""
+    place = {old: new for new, old in enumerate(keep)}
+    left = ((t, tuple(place[j] for j in t.columns if j in place)) for t in terms)
+    return tuple(replace(t, columns=columns) for t, columns in left if columns)
 
 
 def whole(response: Response) -> Array:
