@@ -304,6 +304,8 @@ class Fits:
         found = algebra.minimum(column, m, warm)
         if found is not None:
             return found
+        if len(algebra.parameters) == 1 and (many := each(algebra, column)) is not None:
+            return many.minima().optimum()
         return minimise(algebra.field(column, m) or value, algebra.parameters, warm=warm, thinned=thinned)
 
     def _head_start(self, node: Node) -> Optimum | None:

@@ -14,7 +14,7 @@ import numpy.typing as npt
 
 from clingstone.maths import reml
 from clingstone.maths.once import Array
-from clingstone.maths.search import Axis, Flags, slack
+from clingstone.maths.search import Axis, Flags, Optimum, slack
 
 Places = npt.NDArray[np.int64]
 # Criteria (K,) at θ (d, K), the k-th for column ``columns[k]`` of y.
@@ -67,6 +67,16 @@ class Minima:
     at_bound: Flags
     converged: Flags
 
+    def optimum(self) -> Optimum:
+        """Of the first column."""
+        return Optimum(
+            self.theta[:, 0],
+            float(self.value[0]),
+            self.at_bound[:, 0],
+            bool(self.converged[0]),
+            ("slope at zero",),
+        )
+
 
 def minimise_each(
     f: Criteria, shared: Shared, axes: Sequence[Axis], B: int, near: Array | None = None
@@ -91,7 +101,10 @@ def minimise_from(f: Criteria, axes: Sequence[Axis], start: Array) -> Minima:
 
 def _line(f: Criteria, shared: Shared, axis: Axis, B: int) -> Minima:
     nodes = np.unique([axis.low, *axis.scan, axis.high])
-    values = np.stack([shared(np.array([x])) for x in nodes])  # (nodes, B)
+    if B == 1:
+        values = f(nodes[None], np.zeros(len(nodes), dtype=np.int64))[:, None]
+    else:
+        values = np.stack([shared(np.array([x])) for x in nodes])  # (nodes, B)
     padded = np.pad(values, ((1, 1), (0, 0)), constant_values=np.inf)
     valley = (values <= padded[:-2]) & (values <= padded[2:])
     # The three deepest valleys of each column are followed, as in a search column by column.
