@@ -151,7 +151,7 @@ def test_the_ellipsoid_of_large_problems_is_near_the_region():
     )
     full = region(f, f.full_node, 0.95)
     walk = module._Walk(f.algebra(f.full_node), f.response, f.full.theta, 2 * CUT)
-    (model,) = module._models(f, f.full_node, walk.ellipsoids())
+    (model,) = module._models(f, f.full_node, walk, walk.ellipsoids())
     rough = module.Region(model, 0.95, "")
     for key in ("group:s", "serial"):
         exact, near = full.interval(full.model.shares()[key]), rough.interval(rough.model.shares()[key])

@@ -88,6 +88,7 @@ class Fits:
     left_out : supported components that the joint model of ``full_node`` does without, with the reason.
     depth : "exact", or "fast" (shared grid, interpolated), the default for many columns of y.
     whole : the fits of many columns of which this is one, and which; its models are theirs.
+    near : the fits of the same y over the design that this one extends, or None.
 
     Notes
     -----
@@ -111,13 +112,15 @@ class Fits:
         *,
         depth: Depth | None = None,
         whole: tuple[Fits, int] | None = None,
+        near: Fits | None = None,
     ) -> None:
-        self.response, self.run, self.whole = response, run, whole
+        self.response, self.run, self.whole, self.near = response, run, whole, near
         self.depth: Depth = depth or ("exact" if response.B == 1 else "fast")
         self.components, self.refused = kept(
             self.design, ("declared", run.limits), lambda: declared(response.design, run.limits)
         )
         self._models: dict[Node, ErrorModel] = {}
+        self._optima: dict[Node, Optimum] = {}  # of searches that another may start from
 
     @property
     def design(self) -> Design:
@@ -214,8 +217,8 @@ class Fits:
         return Fits(_response(self.design, Y), self.run)
 
     def onto(self, derived: Design) -> Fits:
-        """Fits of the same y over an extended design."""
-        return Fits(onto(self.response, derived), self.run, depth=self.depth)
+        """Fits of the same y over an extended design; a heavy search starts where that of this one ended."""
+        return Fits(onto(self.response, derived), self.run, depth=self.depth, near=self)
 
     # ---- one node -----------------------------------------------------------------------
 
@@ -289,6 +292,8 @@ class Fits:
         with self.run.progress("fitting " + ", ".join(sorted(node)), 1) as advance:
             best = self._search(algebra, self._head_start(node) if algebra.heavy else None, thinned=True)
             advance(1)
+        if algebra.heavy:
+            self._optima[node] = best
         sigma2 = reml.scale(algebra.gram(best.theta, self.response), self.design.m)
         theta, bound = best.theta[:, None], best.at_bound[:, None]
         done = np.array([best.converged])
@@ -309,7 +314,12 @@ class Fits:
         return minimise(algebra.field(column, m) or value, algebra.parameters, warm=warm, thinned=thinned)
 
     def _head_start(self, node: Node) -> Optimum | None:
-        """The optimum for some of the places, its curvature scaled up to all rows; None if too few."""
+        """The optimum under the design that this one extends, or else for some of the places.
+
+        Of the latter the curvature is scaled up to all rows; None if they are too few.
+        """
+        if self.near is not None and node in self.near._optima:
+            return self.near._optima[node]
         sites = self.design.spatial
         assert sites is not None  # no other algebra is heavy
         places = min(START_SITES, sites.count // 3)

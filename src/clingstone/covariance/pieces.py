@@ -8,7 +8,6 @@ from typing import Protocol
 
 import numpy as np
 import numpy.typing as npt
-from scipy.spatial.distance import pdist, squareform
 
 from clingstone.covariance.components import Parameter
 from clingstone.design.design import Design
@@ -16,7 +15,6 @@ from clingstone.maths import matern
 from clingstone.maths.markov import Links, at_rho
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
-from clingstone.needs import memory
 from clingstone.structure.serial import Series
 from clingstone.structure.spatial import Sites
 
@@ -194,12 +192,9 @@ class SpatialPiece:
     smoothness: float = 0.5
 
     @property
-    @once
     def distance(self) -> Array:
         """(S, S) straight distances."""
-        S = self.sites.count
-        memory(5 * 8.0 * S * S, f"a covariance of {S:,} places")
-        return squareform(pdist(self.sites.points))
+        return self.sites.distances
 
     @property
     @once

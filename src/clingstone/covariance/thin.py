@@ -14,7 +14,10 @@ from clingstone.structure.spatial import Sites
 
 
 def thin(response: Response, places: int, rng: np.random.Generator) -> Response:
-    """The first column of y at the rows of some places, drawn at random, with every structure.
+    """The first column of y at the rows of some places, with every structure.
+
+    Half of the places are drawn at random, and the nearest other place of each goes with it: so a part
+    shows what is near to each other as the whole does, and what is far.
 
     Columns of the design that those rows cannot tell apart are left out: the covariance, not the mean,
     is wanted of it.
@@ -23,7 +26,9 @@ def thin(response: Response, places: int, rng: np.random.Generator) -> Response:
     sites = design.spatial
     if sites is None:
         raise ValueError("only a design with places can be thinned by place")
-    chosen = np.sort(rng.choice(sites.count, min(places, sites.count), replace=False))
+    drawn = rng.choice(sites.count, min(places, sites.count) // 2, replace=False)
+    near = np.asarray(sites.tree.query(sites.points[drawn], k=2)[1])
+    chosen = np.unique(np.r_[drawn, near.ravel()])
     rows = np.flatnonzero(np.isin(sites.part.codes, chosen))
     X = design.Q[rows]
     drop = set(aliased(X))

@@ -19,14 +19,16 @@ from clingstone.covariance.each import each
 from clingstone.covariance.fits import ErrorModel, Fits
 from clingstone.design.response import Response
 from clingstone.maths import reml
+from clingstone.maths.bracket import Bracket
 from clingstone.maths.each import Grams, Places
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.search import Flags
 
 RAYS = {2: 24, 3: 48}  # directions of the first round, by number of parameters; 64 above
 SECOND = 10  # directions from each extreme point in the second round
+FIRST = 0.4  # first step along a ray, in widths of the region
 BISECTIONS = 9
-CLOSE = 0.01  # of log-likelihood: a point this near the edge is on it
+CLOSE = 0.003  # of log-likelihood: a point this near the edge is on it
 GRID = 61  # values of a single parameter
 HEAVY = 1.5e7  # multiplications per evaluation above which the second round is left out
 TOO_HEAVY = 3e8  # … above which the region is the ellipsoid of the curvature at the estimate
@@ -58,8 +60,16 @@ def loglik(algebra: Chosen, theta: Array, response: Response) -> tuple[float, fl
     return float(value[0]), float(sigma2[0])
 
 
-def logliks(algebra: Chosen, theta: Array, response: Response, owner: Places) -> tuple[Array, Array]:
-    """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y."""
+Known = dict[tuple[int, bytes], tuple[float, float]]
+
+
+def logliks(
+    algebra: Chosen, theta: Array, response: Response, owner: Places, known: Known | None = None
+) -> tuple[Array, Array]:
+    """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y.
+
+    known : what was worked out already by (column, θ); added to where each θ is work of its own.
+    """
     many = each(algebra, response) if len(theta) else None
     if many is not None:
         grams = many.grams(theta, owner)
@@ -70,12 +80,15 @@ def logliks(algebra: Chosen, theta: Array, response: Response, owner: Places) ->
             value, sigma2 = np.full(len(owner), -np.inf), np.full(len(owner), np.nan)
             value[sound], sigma2[sound] = _profiled(grams.only(sound), response.design.m)
         return np.where(np.isfinite(value), value, -np.inf), sigma2
-    out = np.empty((2, theta.shape[1]))
-    for b in np.unique(owner):
-        column = response if response.B == 1 else response.column(int(b))
-        for k in np.flatnonzero(owner == b):
-            out[:, k] = np.ravel(_alone(algebra, theta[:, k], column))
-    return out[0], out[1]
+    known = {} if known is None else known
+    places = [(int(b), at.tobytes()) for b, at in zip(owner, theta.T, strict=True)]
+    for b in np.unique(owner).tolist():
+        column = response if response.B == 1 else response.column(b)
+        for k in np.flatnonzero(owner == b).tolist():
+            if places[k] not in known:
+                known[places[k]] = loglik(algebra, theta[:, k], column)
+    value, sigma2 = np.array([known[place] for place in places]).reshape(-1, 2).T
+    return value, sigma2
 
 
 def _profiled(grams: Grams, m: int) -> tuple[Array, Array]:
@@ -132,7 +145,7 @@ def _sampled(fits: Fits, node: frozenset[str], confidence: float) -> tuple[Regio
         if work <= HEAVY:
             points = walk.outwards(points, aims)
         method = "profile likelihood, region sampled along rays"
-    return tuple(Region(model, confidence, method) for model in _models(fits, node, points))
+    return tuple(Region(model, confidence, method) for model in _models(fits, node, walk, points))
 
 
 def _work(fits: Fits, node: frozenset[str]) -> float:
@@ -144,10 +157,10 @@ def _work(fits: Fits, node: frozenset[str]) -> float:
     return work
 
 
-def _models(fits: Fits, node: frozenset[str], points: Points) -> list[ErrorModel]:
+def _models(fits: Fits, node: frozenset[str], walk: _Walk, points: Points) -> list[ErrorModel]:
     """Per column of y its points as an error model, the estimate first."""
     fit, algebra = fits[node], fits.algebra(node)
-    value, sigma2 = logliks(algebra, points.theta, fits.response, points.owner)
+    value, sigma2 = walk.logliks(*points)
     out = []
     for b in range(fits.response.B):
         mine = points.of(b)
@@ -219,19 +232,28 @@ class _Walk:
         self.low = np.array([q.low for q in algebra.parameters])[:, None]
         self.high = np.array([q.high for q in algebra.parameters])[:, None]
         every = np.arange(self.best.shape[1])
-        self.floor = logliks(algebra, self.best, response, every)[0] - cut / 2
+        self.known: Known = {}
+        self.floor = self.logliks(self.best, every)[0] - cut / 2
         self.centres = Points(self.best, every)
+
+    def logliks(self, theta: Array, owner: Places) -> tuple[Array, Array]:
+        """As ``logliks``, each point once in a walk."""
+        return logliks(self.algebra, theta, self.response, owner, self.known)
 
     def margin(self, theta: Array, owner: Places) -> Array:
         """(K,) how far the log-likelihoods lie above the edge of the region."""
-        return logliks(self.algebra, theta, self.response, owner)[0] - self.floor[owner]
+        return self.logliks(theta, owner)[0] - self.floor[owner]
 
     def inside(self, points: Points) -> Points:
         """Those of the points that lie inside."""
         return points.only(self.margin(*points) >= 0)
 
-    def edge(self, start: Points, direction: Array) -> Array:
-        """(d, K) the last point inside along each ray that leaves ``start``, stopped by the bounds."""
+    def edge(self, start: Points, direction: Array, first: float | None = None) -> Array:
+        """(d, K) the last point inside along each ray that leaves ``start``, stopped by the bounds.
+
+        first : the step, in units of ``direction``, that is tried first; by default a 64th of the way to the
+            bounds.
+        """
         theta, owner = start
         with np.errstate(divide="ignore", invalid="ignore"):
             room = np.where(direction > 0, self.high - theta, self.low - theta)
@@ -240,13 +262,9 @@ class _Walk:
         live = np.flatnonzero(reach > 0)
         if not len(live):
             return end
-        whole = self._at(theta[:, live], direction[:, live], reach[live])
-        out = self.margin(whole, owner[live]) < 0
-        end[:, live[~out]] = whole[:, ~out]
-        live = live[out]
-        if len(live):
-            ray = _Rays(self, theta[:, live], direction[:, live], owner[live])
-            end[:, live] = self._at(ray.start, ray.direction, ray.crossing(reach[live]))
+        ray = _Rays(self, theta[:, live], direction[:, live], owner[live])
+        step = reach[live] / 64 if first is None else np.minimum(first, reach[live])
+        end[:, live] = self._at(ray.start, ray.direction, ray.crossing(reach[live], step))
         return end
 
     def _at(self, start: Array, direction: Array, step: Array) -> Array:
@@ -285,7 +303,7 @@ class _Walk:
         down, up = (width[:, centres.owner][:, None] for width in self._scale)
         direction = np.where(aims < 0, aims * down, aims * up).reshape(d, -1)
         rays = Points(start.reshape(d, -1), np.tile(centres.owner, A))
-        end = self.edge(rays, direction)
+        end = self.edge(rays, direction, FIRST)
         half = rays.theta + (end - rays.theta) / 2
         return self.inside(centres.plus(Points(end, rays.owner)).plus(Points(half, rays.owner)))
 
@@ -342,14 +360,16 @@ class _Walk:
         h = 1e-3 * (self.high - self.low)[:, 0]
         pairs = [(i, j) for i in range(d) for j in range(i + 1)]
         E = np.diag(h)
-        moves = [E[i] * one + E[j] * two for i, j in pairs for one, two in _SIGNS]
+        moves = [side * (E[i] + (E[j] if i != j else 0)) for i, j in pairs for side in (1, -1)]
         theta = np.clip(best + np.array([np.zeros(d), *moves]).T, self.low, self.high)
         owner = np.full(theta.shape[1], b)
-        value = logliks(self.algebra, theta, self.response, owner)[0]
-        rise = (value[0] - value[1:]).reshape(-1, 4)
+        value = self.logliks(theta, owner)[0]
+        rise = (value[0] - value[1:]).reshape(-1, 2).sum(axis=1)
+        bend = dict(zip(pairs, rise.tolist(), strict=True))
         H = np.empty((d, d))
-        for (i, j), four in zip(pairs, rise, strict=True):
-            H[i, j] = H[j, i] = (four[0] - four[1] - four[2] + four[3]) / (4 * h[i] * h[j])
+        for i, j in pairs:
+            both = bend[i, j] - bend[i, i] - bend[j, j]
+            H[i, j] = H[j, i] = bend[i, i] / h[i] ** 2 if i == j else both / (2 * h[i] * h[j])
         values, vectors = np.linalg.eigh(H)
         reach = np.sqrt(2 * (value[0] - self.floor[b]) / np.maximum(values, 1e-12))
         reach = np.minimum(reach, float(np.max(self.high - self.low)))
@@ -357,12 +377,9 @@ class _Walk:
         return np.asarray(np.clip(best + np.array(ends).T, self.low, self.high))
 
 
-_SIGNS = ((1, 1), (1, -1), (-1, 1), (-1, -1))
-
-
 @dataclass(frozen=True, eq=False)
 class _Rays:
-    """Rays whose far end lies outside: start and direction (d, K), owner (K,)."""
+    """Rays: start, inside, and direction (d, K), owner (K,)."""
 
     walk: _Walk
     start: Array
@@ -373,40 +390,26 @@ class _Rays:
         at = self.walk._at(self.start[:, which], self.direction[:, which], step)
         return self.walk.margin(at, self.owner[which])
 
-    def crossing(self, reach: Array) -> Array:
-        """(K,) the step at which each margin reaches zero, from inside.
+    def crossing(self, reach: Array, first: Array) -> Array:
+        """(K,) the step at which each margin reaches zero, from inside; ``reach`` where it never does.
 
         A first step that doubles finds the nearest way out; a search over the whole ray may jump over
         a second piece of the region.
         """
         every = np.arange(len(reach))
-        near, far = np.zeros(len(reach)), reach / 64
+        near, far, last = np.zeros(len(reach)), first.copy(), np.zeros(len(reach))
         above, below = self.margin(every, near), self.margin(every, far)
+        before = np.full(len(reach), np.nan)
         while True:
             live = np.flatnonzero((far < reach) & (below >= 0))
             if not len(live):
-                return self._between(near, above, far, below)
+                break
+            last[live], before[live] = near[live], above[live]
             near[live], above[live] = far[live], below[live]
             far[live] = np.minimum(2 * far[live], reach[live])
             below[live] = self.margin(live, far[live])
-
-    def _between(self, low: Array, above: Array, high: Array, below: Array) -> Array:
-        """False position with Illinois' halving: the end that stays loses half of its pull."""
-        width, up, down = high - low, above.copy(), below.copy()
-        for _ in range(BISECTIONS):
-            live = np.flatnonzero((above > CLOSE) & (high - low > width / 2**BISECTIONS))
-            if not len(live):
-                break
-            fall = up[live] - down[live]
-            sound = np.isfinite(fall) & (fall > 0)
-            part = np.full(len(live), 0.5)
-            part[sound] = np.clip(up[live][sound] / fall[sound], 0.05, 0.95)
-            step = low[live] + (high[live] - low[live]) * part
-            found = self.margin(live, step)
-            ahead = found >= 0
-            i, o = live[ahead], live[~ahead]
-            low[i], above[i], up[i] = step[ahead], found[ahead], found[ahead]
-            down[i] /= 2
-            high[o], down[o] = step[~ahead], found[~ahead]
-            up[o] /= 2
-        return low
+        out = below < 0
+        near[~out] = far[~out]
+        found = Bracket(near[out], above[out], far[out], below[out], last[out], before[out])
+        near[out] = found.closed(lambda which, step: self.margin(every[out][which], step), CLOSE, BISECTIONS)
+        return near

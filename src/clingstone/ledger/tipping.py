@@ -197,11 +197,14 @@ def _field(fits: Fits, reach: float) -> tuple[Array, float, float]:
     if sites.kind != "planar":
         straight = 2 * EARTH_RADIUS_KM * np.sin(min(reach / (2 * EARTH_RADIUS_KM), np.pi / 2))
     length = straight / matern.PRACTICAL[0.5]
-    R = np.exp(-np.linalg.norm(sites.points[:, None] - sites.points[None], axis=2) / length)
+    R = matern.kernel(sites.distances, length)
     T, c = design.sums(sites.part), design.sizes(sites.part)
-    AR = c[:, None] * R - T @ (T.T @ R)
-    spread = T.T @ R @ T
-    return spread, float(np.trace(AR)), float(np.sum(AR * AR.T))
+    RT = R @ T
+    spread = T.T @ RT
+    # tr MKMK = tr CRCR − 2 tr T'RCRT + tr (T'RT)², C = diag(c).
+    R *= R
+    second = c @ (R @ c) - 2 * c @ np.einsum("ij,ij->i", RT, RT) + np.sum(spread * spread)
+    return spread, float(c.sum() - np.trace(spread)), float(second)
 
 
 def _of_squares(s: Array, m: int, first: Array | float, second: Array | float) -> Array:

@@ -9,7 +9,7 @@ from __future__ import annotations
 
 import itertools
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass, field, replace
+from dataclasses import dataclass, field
 from itertools import pairwise
 from typing import Any, Protocol, runtime_checkable
 
@@ -88,8 +88,8 @@ def minimise(
     warm : the optimum of a similar criterion; the search then starts from there alone, with its
     curvature. Without it the best three of the product of the axes' starts are followed, those left out
     that lie in the valley of an optimum already found.
-    thinned : ``warm`` comes from a part of the data, which may not show what all of them show (a range
-    shorter than the part's distances): the starts are tried beside it, and other valleys looked for.
+    thinned : ``warm`` comes from a part of the data or another mean, which may not show all: other valleys
+        are looked for.
     """
     if not axes:
         return Optimum(np.zeros(0), f(np.zeros(0)), np.zeros(0, dtype=bool), True)
@@ -143,7 +143,6 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, thinned: 
     counted = _Counted(f, box)
     free = np.ones(len(axes), dtype=bool)
     if warm is not None:
-        warm = _best_start(counted, axes, warm) if thinned else warm
         descend: Descent = _Quasi(warm.curvature)
         runs = [descend(counted, warm.start, free, box)]
     else:
@@ -155,7 +154,7 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, thinned: 
     theta, value = min(runs, key=lambda run: float(run[1]))
     if warm is None or thinned:
         # A part has been looked over all around by its own search: what it hides shows from fewer places.
-        theta, value = _look_around(counted, axes, theta, value, box, 4 if thinned else 8)
+        theta, value = _look_around(counted, axes, theta, value, box, 3 if thinned else 8)
     theta, value, pinned = _pin(counted, axes, theta, value, box, descend)
     edge = (theta <= box[:, 0] + 1e-6) | (theta >= box[:, 1] - 1e-4)
     theta, value, ok, curvature = _polish(counted, theta, value, ~(edge | pinned), box, warm)
@@ -165,15 +164,28 @@ def _several(f: Criterion, axes: Sequence[Axis], warm: Optimum | None, thinned: 
 
 
 class _Counted:
-    """The criterion, counted, kept inside the box, and infinite where it cannot be evaluated."""
+    """The criterion, counted, kept inside the box, and infinite where it cannot be evaluated.
+
+    What was read at one place is known: a look around and an end of a range are often the same.
+    """
 
     def __init__(self, f: Criterion, box: Array) -> None:
-        self.f, self.box, self.calls = f, box, 0
+        self.f, self.box, self.known = f, box, dict[bytes, float]()
+
+    @property
+    def calls(self) -> int:
+        return len(self.known)
 
     def __call__(self, theta: Array) -> float:
-        self.calls += 1
+        inside = np.clip(theta, self.box[:, 0], self.box[:, 1])
+        place = inside.tobytes()
+        if place not in self.known:
+            self.known[place] = self._read(inside)
+        return self.known[place]
+
+    def _read(self, theta: Array) -> float:
         try:
-            value = self.f(np.clip(theta, self.box[:, 0], self.box[:, 1]))
+            value = self.f(theta)
         except np.linalg.LinAlgError:
             return 1e300
         return value if np.isfinite(value) else 1e300
@@ -203,10 +215,10 @@ class _Counted:
         return inner
 
 
-def _starts(f: Criterion, axes: Sequence[Axis], keep: int = 3) -> list[Array]:
+def _starts(f: Criterion, axes: Sequence[Axis]) -> list[Array]:
     grid = [np.array(s) for s in itertools.islice(itertools.product(*(a.starts for a in axes)), 81)]
     order = np.argsort([f(s) for s in grid], kind="stable")
-    return [grid[i] for i in order[:keep]]
+    return [grid[i] for i in order[:3]]
 
 
 def _valley(f: Criterion, start: Array, theta: Array, value: float) -> bool:
@@ -216,16 +228,6 @@ def _valley(f: Criterion, start: Array, theta: Array, value: float) -> bool:
     """
     walk = [f(start + share * (theta - start)) for share in (0.0, 0.2, 0.4, 0.6, 0.8)]
     return all(after < before for before, after in pairwise([*walk, value]))
-
-
-def _best_start(f: _Counted, axes: Sequence[Axis], warm: Optimum) -> Optimum:
-    """``warm``, or the best of the axes' starts where that is better, with the curvature found there."""
-    (start,) = _starts(f, axes, 1)
-    if f(start) >= f(warm.start):
-        return warm
-    H = f.curvature(start, np.ones(len(axes), dtype=bool), 0.05)
-    bent = bool(np.linalg.eigvalsh(H)[0] > 0)
-    return replace(warm, start=start, curvature=H if bent else np.diag(np.maximum(np.abs(np.diag(H)), 1.0)))
 
 
 def _descend(f: _Counted, start: Array, free: Flags, box: Array) -> tuple[Array, float]:

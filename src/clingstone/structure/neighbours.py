@@ -252,15 +252,13 @@ def _inverse(sites: Sites, power: float) -> Neighbours | None:
 
 
 def _graph(key: str, about: str, edges: Edges, size: int, weight: Array | None = None) -> Neighbours:
-    """Row-standardised weights through libpysal, with its islands and our count of connected parts."""
-    from libpysal.graph import Graph
-
+    """Row-standardised weights, with their islands and connected parts."""
     links = sparse.csr_array(
         (np.ones(len(edges[0])) if weight is None else weight, edges), shape=(size, size)
     )
-    graph: Any = Graph.from_sparse(links).transform("r")
-    W = sparse.csr_array(graph.sparse)
-    W.eliminate_zeros()  # an island comes with a link of weight zero to itself
+    total: Array = np.asarray(links.sum(axis=1)).ravel()
+    W = links.copy()
+    W.data /= np.repeat(total, np.diff(W.indptr))
     parts = int(sparse.csgraph.connected_components(links, directed=True, connection="weak")[0])
     raw = None if weight is None else links
-    return Neighbours(key, about, W, len(graph.isolates), parts, raw)
+    return Neighbours(key, about, W, int(np.sum(total == 0)), parts, raw)

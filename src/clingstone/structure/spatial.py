@@ -13,7 +13,7 @@ from scipy.spatial import cKDTree
 from clingstone.display import count, rows, significant
 from clingstone.maths.once import Array, frozen, once
 from clingstone.maths.partition import Partition
-from clingstone.needs import InputError
+from clingstone.needs import InputError, memory
 
 EARTH_RADIUS_KM = 6371.0088  # mean radius, IUGG
 MAP_UNITS = "map units"  # of coordinates whose unit nobody said
@@ -65,6 +65,15 @@ class Sites:
             return straight
         half = np.clip(straight / (2 * EARTH_RADIUS_KM), 0.0, 1.0)
         return np.asarray(2 * EARTH_RADIUS_KM * np.arcsin(half))
+
+    @property
+    @once
+    def distances(self) -> Array:
+        """(S, S) straight distances, for places few enough to be factored. Raises NotSupported."""
+        from scipy.spatial.distance import pdist, squareform
+
+        memory(5 * 8.0 * self.count**2, f"a covariance of {self.count:,} places")
+        return frozen(squareform(pdist(self.points)))
 
     @property
     @once
