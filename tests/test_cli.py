@@ -199,6 +199,20 @@ def test_a_mapping_that_cannot_be_read_says_how_to_write_it(
 
 
 @pytest.mark.parametrize(
+    "line", ["--coords x,y --focus a", "--coords x y --focus a", "--focus a --coords x,y"]
+)
+def test_two_coordinates_may_be_one_word(verbs: Verbs, run: Run, line: str) -> None:
+    assert run(f"examine a.csv {line}")[0] == 0
+    arguments = verbs.calls[0][1]
+    assert (arguments["coords"], arguments["focus"]) == (("x", "y"), ("a",))
+
+
+def test_a_comma_in_the_name_of_a_column_stays(verbs: Verbs, run: Run) -> None:
+    assert run("examine a.csv --coords 'x,m' 'y,m'")[0] == 0
+    assert verbs.calls[0][1]["coords"] == ("x,m", "y,m")
+
+
+@pytest.mark.parametrize(
     "line",
     [
         "examine a.csv --modle y",

@@ -107,6 +107,19 @@ def _is_mapping(kind: Any) -> bool:
 # ---- from words to values --------------------------------------------------------------------
 
 
+def apart(words: Sequence[str]) -> list[str]:
+    """The words of a call with ``--coords x,y`` as ``--coords x y``, where no second word follows the first."""
+    pairs = {o.flag for o in settings_options() if get_origin(_bare(o.kind)) is tuple}
+    out: list[str] = []
+    for i, word in enumerate(words):
+        alone = i + 1 == len(words) or words[i + 1].startswith("--")
+        if i and words[i - 1] in pairs and alone and word.count(",") == 1:
+            out += [part.strip() for part in word.split(",")]
+        else:
+            out.append(word)
+    return out
+
+
 def _as_given(value: Any) -> Any:
     return value
 

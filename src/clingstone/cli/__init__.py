@@ -15,7 +15,7 @@ import typer
 from clingstone.cli import examine, plan, rehearse, saved
 from clingstone.cli.screen import lines
 from clingstone.needs import InputError, NotSupported
-from clingstone.options import in_shell
+from clingstone.options import apart, in_shell
 
 app = typer.Typer(
     name="clingstone",
@@ -58,7 +58,7 @@ def main(arguments: Sequence[str] | None = None) -> NoReturn:
     """The ``clingstone`` command."""
     words = list(sys.argv[1:] if arguments is None else arguments)
     try:
-        typer.main.get_command(app)(args=words, prog_name="clingstone")
+        typer.main.get_command(app)(args=apart(words), prog_name="clingstone")
     except (InputError, NotSupported) as error:
         _tell(lines(f"clingstone: {in_shell(str(error))}"))
         if error.hint:
