@@ -108,7 +108,7 @@ def _is_mapping(kind: Any) -> bool:
 
 
 def apart(words: Sequence[str]) -> list[str]:
-    """The words of a call with ``--coords x,y`` as ``--coords x y``, where no second word follows the first."""
+    """The words of a call, ``--coords x,y`` as ``--coords x y`` where no second word follows the first."""
     pairs = {o.flag for o in settings_options() if get_origin(_bare(o.kind)) is tuple}
     out: list[str] = []
     for i, word in enumerate(words):
