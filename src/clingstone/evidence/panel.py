@@ -40,7 +40,9 @@ class PanelSerial(Plain):
     of Born & Breitung 2016). A random walk gives no signal: its coming and past changes are unrelated.
 
     within means : residuals from series means on the ones before, whose slope is −1/(T − 1) without
-    dependence, with a variance robust to clusters (Wooldridge 2010); series of one length.
+    dependence (Wooldridge 2010); series of one length. That slope is put into the scores, whose sums over
+    series give t with G − 1 df: a variance at the estimated slope, as plm takes it, rejects in .10 of cases
+    with 10 series of 20 times and in .13 with 10 of 5; so imposed, in .047 and .043.
     """
 
     id: str = "panel-serial"
@@ -74,7 +76,7 @@ class PanelSerial(Plain):
 
     def sentence(self, reading: Reading, about: About) -> str:
         against = "" if about.key == ROBUST else " (below 0 without dependence)"
-        df = freedom(reading.df if about.key == ROBUST else reading.df2)
+        df = freedom(reading.df)
         return (
             f"Within {count(reading.n_used, 'series', 'series')}, {about.words}, residuals go with the ones "
             f"before at a slope of {number(column(reading.estimate), 2)}"
@@ -160,33 +162,52 @@ def _shifted(response: Response, confidence: float, alternative: Alternative) ->
     earlier, later = series.pairs(1)
     y, x = response.residual[later], response.residual[earlier]
     y, x = y - y.mean(axis=0), x - x.mean(axis=0)
-    square = np.einsum("ij,ij->j", x, x)
+    codes = series.part.codes[later]
+
+    def sums(values: Array) -> Array:
+        return np.stack([np.bincount(codes, weights=v, minlength=G) for v in values.T])
+
+    # Scores of a slope β are product − β square, one a series: the value without dependence is put in, and
+    # the interval holds every β whose scores have a mean that t over series does not tell from zero.
+    product, square = sums(x * y), sums(x**2)  # (B, G)
     lost = degenerate(response)
     with np.errstate(divide="ignore", invalid="ignore"):
-        slope = np.einsum("ij,ij->j", x, y) / square
-        scores = x * (y - slope * x)
-        codes = series.part.codes[later]
-        by_series = np.stack([np.bincount(codes, weights=s, minlength=G) for s in scores.T])
-        se = np.sqrt(np.sum(by_series**2, axis=1)) / square
-        t = (slope + 1 / (T - 1)) / se
-    df2 = float(len(later) - 2)
-    p, log_p = _t_tail(np.where(lost, np.nan, t), df2, alternative)
-    half = float(special.stdtrit(df2, 0.5 + confidence / 2)) * se
+        slope = product.sum(axis=1) / square.sum(axis=1)
+        scores = product + square / (T - 1)
+        t = scores.mean(axis=1) / np.sqrt(scores.var(axis=1, ddof=1) / G)
+        low, high = _not_rejected(product, square, float(special.stdtrit(G - 1, 0.5 + confidence / 2)))
+    p, log_p = _t_tail(np.where(lost, np.nan, t), float(G - 1), alternative)
     return Reading(
-        statistic=np.where(lost, np.nan, t**2),
-        statistic_name="F",
-        df=1.0,
-        df2=df2,
+        statistic=np.where(lost, np.nan, t),
+        statistic_name="t",
+        df=float(G - 1),
         p=p,
         log_p=log_p,
-        p_method=f"F, robust to clusters, {direction(alternative)}",
+        p_method=f"t over series, {direction(alternative)}",
         estimate=np.where(lost, np.nan, slope),
         estimate_name=f"slope on the residual before, {number(-1 / (T - 1), 2)} without dependence",
-        low=slope - half,
-        high=slope + half,
+        low=low,
+        high=high,
         n_used=G,
-        caveats=("Variances that change with time can make it reject.",),
+        caveats=("Where the variances of the series differ much it rejects too seldom.",),
     )
+
+
+def _not_rejected(product: Array, square: Array, cut: float) -> tuple[Array, Array]:
+    """β between which |t| of the G scores product − β square stays within the cut; NaN where it always does.
+
+    (ā − β b̄)² ≤ κ (s_aa − 2β s_ab + β² s_bb), κ = cut²/G: a quadratic in β (Fieller 1954).
+    """
+    G = product.shape[1]
+    a, b = product.mean(axis=1), square.mean(axis=1)
+    u, v = product - a[:, None], square - b[:, None]
+    k = cut**2 / (G * (G - 1))
+    bend = b**2 - k * np.sum(v * v, axis=1)
+    middle = a * b - k * np.sum(u * v, axis=1)
+    rest = a**2 - k * np.sum(u * u, axis=1)
+    half = np.sqrt(middle**2 - bend * rest)
+    ends = np.where(bend > 0, [(middle - half) / bend, (middle + half) / bend], np.nan)
+    return ends[0], ends[1]
 
 
 def _t_tail(t: Array, df: float, alternative: Alternative) -> tuple[Array, Array]:
