@@ -168,7 +168,7 @@ def test_what_was_tested_and_what_was_not_are_told_apart():
     text = say.nothing(book)
     assert text.startswith("No dependence was detected")
     assert "What could not be tested is not ruled out: clinic." in text
-    assert text.endswith("is not known for day.")
+    assert text.endswith("between rows that follow each other in time is not known.")
 
 
 def test_what_was_not_seen_is_told_as_room_not_as_a_find():
@@ -190,5 +190,5 @@ def test_every_structure_that_was_not_found_has_its_size_or_a_word():
     blind = replace(book.detectable[0], key="serial", parameter="ρ", value=float("nan"))
     text = say.nothing(replace(book, detectable=(*book.detectable, blind)))
     assert "an intraclass correlation of 0.09" in text
-    assert "For day not even the strongest would have shown in most such data." in text
-    assert "How weak a one could have shown is not known for place." in text
+    assert "Not even the strongest between rows that follow each other in time would have shown" in text
+    assert "How weak a one would have shown between near places is not known." in text

@@ -50,6 +50,7 @@ LATE = {
     "held as fitted",
     "truth of the rehearsed coverage",
     "robust over ordered standard error",
+    "df of the robust refit over places",
     "df of the robust refit over whole series",
 }
 

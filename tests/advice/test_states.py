@@ -186,3 +186,29 @@ def test_lake_huron_by_year():
     assert advice.structures == {"serial"}
     assert {c.remedy for c in advice.alternatives} >= {"ar1"}
     assert "It matters for year" in advice.headline
+
+
+def few_places(rng: np.random.Generator, level: str) -> Fits:
+    """Twelve places of five rows: too few for a range, enough for what the rows of one place share."""
+    place = np.repeat(np.arange(12), 5)
+    x = rng.standard_normal(60) if level == "rows" else rng.standard_normal(12)[place]
+    y = 0.5 * x + rng.standard_normal(12)[place] + rng.standard_normal(60)
+    return make.fits(make.design({"x": x}, xy=rng.uniform(size=(12, 2)), site=place), y)
+
+
+def test_rows_of_few_places_are_clusters_where_the_focus_varies_within_places():
+    advice = advise(few_places(np.random.default_rng(1), "rows"))
+    assert (advice.state, advice.remedy, advice.at) == ("supported with caveat", "cluster-robust", "site")
+    assert advice.structures == {"spatial"}
+    assert advice.because[0].rule == "rows-of-one-place"
+    said = {c.rule for c in advice.cautions}
+    assert "few-places-as-groups" in said
+    assert not said & {"few-sites", "not-covered"}  # no range is fitted, and nothing that shows is left out
+    (silent,) = (c.sentence for c in advice.cautions if c.rule == "not-sized")
+    assert "how strongly near places hang together" in silent
+
+
+def test_few_places_cannot_be_corrected_for_where_the_focus_is_of_places():
+    advice = advise(few_places(np.random.default_rng(1), "places"))
+    assert (advice.state, advice.remedy) == ("not correctable", "")
+    assert "12 distinct sites are too few" in advice.because[0].sentence

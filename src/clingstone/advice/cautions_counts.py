@@ -75,11 +75,20 @@ COUNTS = (
     ),
     Rule(
         "few-sites",
-        SPATIAL & (fact("sites") < 50),
+        SPATIAL & fact("spatial estimable") & (fact("sites") < 50),
         Then("caveat"),
         "With {sites} sites the range of the dependence is known only roughly.",
         "webster-oliver-2007",
         "convention",
+    ),
+    Rule(
+        "few-places-as-groups",
+        SPATIAL & ~fact("spatial estimable") & fact("rows of one place alone"),
+        Then("caveat"),
+        "{sites} places are few, and they are taken as independent of each other: the interval rests on a "
+        "small-sample approximation, and what fades with distance is not allowed for.",
+        "cameron-miller-2015, webster-oliver-2007",
+        "moderate",
     ),
     Rule(
         "long-range",
@@ -102,7 +111,8 @@ COUNTS = (
         "not-sized",
         fact("declared but not sized"),
         Then("caution"),
-        "These data are too few to size {names not sized}; a silent test says little there.",
+        "These data are too few to say how strongly {names not sized} hang together; a silent test says "
+        "little there.",
         "park-mitchell-1980, webster-oliver-2007",
         "strong",
     ),

@@ -384,6 +384,22 @@ PREFER = (
         "moderate",
     ),
     Rule(
+        "rows-of-one-place",
+        SPATIAL
+        & ~GROUP
+        & ~SERIAL
+        & ~fact("spatial estimable")
+        & fact("rows of one place alone")
+        & fact("focus varies within places")
+        & (fact("df of the robust refit over places") >= 4),
+        Then("prefer", "cluster-robust", at="site level", firm=True),
+        "{sites} places are too few to size a dependence that fades with distance, but the focus terms vary "
+        "within places: the robust covariance allows the rows of one place to depend on each other in any "
+        "way.",
+        "barr-2013, cameron-miller-2015, pustejovsky-tipton-2018",
+        "moderate",
+    ),
+    Rule(
         "range-not-found",
         SPATIAL & ~GROUP & ~SERIAL & fact("range at its bound"),
         Then("prefer", "spatial-components"),

@@ -14,7 +14,7 @@ from clingstone.advice.order import order_facts
 from clingstone.advice.places import place_facts
 from clingstone.advice.response import response_facts
 from clingstone.advice.smooth import along_time
-from clingstone.advice.structures import FAMILIES, covered
+from clingstone.advice.structures import FAMILIES, covered, subject
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed, p_value, percent
@@ -126,7 +126,7 @@ def structure_facts(ledger: Ledger) -> list[Fact]:
     out.append(yes("not attributable", len(tied) > 1, f"not told apart: {listed(tied) or 'nothing'}"))
     out.append(words("names not attributable", listed(tied)))
     unsized = [
-        s.label
+        subject(s)
         for s in ledger.standing
         if ledger.share(s.key) is None and s.verdict in ("unclear", "not detected") and not covered(s)
     ]

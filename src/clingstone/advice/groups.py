@@ -42,7 +42,7 @@ def group_facts(design: Design, fits: Fits, ledger: Ledger) -> list[Fact]:
     if not design.known:
         return out
     focus = focus_terms(design)
-    at_level = [t for t in focus if _constant(design, t, part)]
+    at_level = [t for t in focus if constant_in(design, t, part)]
     out.append(
         yes(
             "focus at group level",
@@ -136,7 +136,9 @@ def columns(design: Design, term: Term) -> Array:
     return rows_of(design, design.Q @ design.basis.R[:, list(term.columns)])
 
 
-def _constant(design: Design, term: Term, part: Partition) -> bool:
+def constant_in(design: Design, term: Term, part: Partition) -> bool:
+    """Whether a term has one value in every cell of a partition."""
+
     def found() -> bool:
         X = columns(design, term)
         return bool(np.all(np.abs(X - X[part.first][part.codes]) <= 1e-9 * (np.abs(X).max() + 1e-300)))
@@ -218,7 +220,7 @@ def _between(fits: Fits, part: Partition, focus: tuple[Term, ...], key: str) -> 
     least: tuple[float, str] | None = None
     whole, b = fits.whole or (fits, 0)
     for term in focus:
-        if term.kind != "numeric" or len(term.columns) != 1 or _constant(fits.design, term, part):
+        if term.kind != "numeric" or len(term.columns) != 1 or constant_in(fits.design, term, part):
             continue
         place = ("group means", part.key, term.name, fits.run.limits)
         p = kept(whole.response, place, partial(_means, whole, part, term, key))

@@ -233,10 +233,10 @@ def _without_a_size(ledger: Ledger) -> str:
     """Structures that were tested and not found, of which no size can be named that would have shown."""
     sizes = {d.key: d.value for d in ledger.detectable}
     quiet = [s for s in ledger.standing if s.verdict in ("unclear", "not detected")]
-    blind = listed([s.label for s in quiet if s.key in sizes and not np.isfinite(sizes[s.key])])
-    open_ = listed([s.label for s in quiet if s.key not in sizes])
-    out = f" For {blind} not even the strongest would have shown in most such data." if blind else ""
-    return out + (f" How weak a one could have shown is not known for {open_}." if open_ else "")
+    blind = listed([subject(s) for s in quiet if s.key in sizes and not np.isfinite(sizes[s.key])])
+    open_ = listed([subject(s) for s in quiet if s.key not in sizes])
+    out = f" Not even the strongest between {blind} would have shown in most such data." if blind else ""
+    return out + (f" How weak a one would have shown between {open_} is not known." if open_ else "")
 
 
 def _untested(ledger: Ledger) -> list[str]:

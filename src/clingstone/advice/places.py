@@ -4,12 +4,14 @@ from __future__ import annotations
 
 import numpy as np
 
-from clingstone.advice.named import Fact, named, yes
-from clingstone.advice.structures import covered
+from clingstone.advice.groups import constant_in
+from clingstone.advice.named import Fact, named, words, yes
+from clingstone.advice.structures import covered, needed
+from clingstone.covariance.components import SITE
 from clingstone.covariance.fits import Fits
 from clingstone.display import p_value, percent
 from clingstone.evidence.finding import Evidence
-from clingstone.ledger.ledger import Ledger
+from clingstone.ledger.ledger import Ledger, focus_terms
 from clingstone.ledger.standing import LEVEL
 from clingstone.needs import Limits
 
@@ -28,8 +30,23 @@ def place_facts(fits: Fits, evidence: Evidence, ledger: Ledger, limits: Limits) 
         named("sites", sites),
         yes("spatial estimable", sites >= limits.sites_estimate, "enough sites for a covariance"),
         yes("neighbours by borders or pairs", graph in GIVEN, f"neighbours: {graph or 'none'}"),
+        *_rows_of_places(fits, ledger),
         *_reach(fits, ledger),
         *_seen(evidence),
+    ]
+
+
+def _rows_of_places(fits: Fits, ledger: Ledger) -> list[Fact]:
+    """Whether places are to be covered only as groups of rows, and the focus varies within them."""
+    design = fits.design
+    assert design.spatial is not None
+    part = design.spatial.part
+    alone = "spatial" not in needed(ledger) and SITE in needed(ledger)
+    inside = design.known and not any(constant_in(design, t, part) for t in focus_terms(design))
+    return [
+        yes("rows of one place alone", alone, "of places only the rows of one are to be covered"),
+        yes("focus varies within places", inside, "every focus term varies within places"),
+        words("site level", part.key),
     ]
 
 

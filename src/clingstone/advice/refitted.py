@@ -19,6 +19,7 @@ COMPARES = {
     "slope model settled": (ROBUST, "mixed-slope"),
     "another order fits better": ("arma", "ar1"),
     "robust over ordered standard error": (ROBUST, "joint", "ar1", "car1"),
+    "df of the robust refit over places": (ROBUST,),
     "df of the robust refit over whole series": (ROBUST, "joint", "ar1", "car1"),
 }
 NOTHING = 1e-6  # a share that is estimated at zero
@@ -52,10 +53,14 @@ def compared(facts: Facts, refits: tuple[Refit, ...]) -> Facts:
     """The facts, and how the robust refit at the level of correction compares with the mixed one."""
     level = facts.word("group level")
     facts = facts.plus({f.name: f for f in (*_order(refits), *_against_order(facts, refits))})
+    places = find(refits, ROBUST, facts.word("site level")) if facts.word("site level") else None
+    if places is not None:
+        over = named("df of the robust refit over places", _least_df(places, facts))
+        facts = facts.plus({over.name: over})
     robust = find(refits, ROBUST, level) if level else None
     if robust is None:
         return facts
-    out = [named("df of the robust refit", min((row.df for row in focus_rows(robust, facts)), default=0.0))]
+    out = [named("df of the robust refit", _least_df(robust, facts))]
     mixed = find(refits, "mixed-intercept", facts.word("mixed level"))
     if mixed is not None:
         out.append(yes("mixed refit at its bound", mixed.boundary, "a variance of the mixed refit is zero"))
@@ -73,11 +78,14 @@ def _against_order(facts: Facts, refits: tuple[Refit, ...]) -> list[Fact]:
     model = next((r for name in ("joint", "ar1", "car1") if (r := find(refits, name)) is not None), None)
     if robust is None or model is None:
         return []
-    least = min((row.df for row in focus_rows(robust, facts)), default=0.0)
     return [
         *_ratio("robust over ordered standard error", robust, model, facts),
-        named("df of the robust refit over whole series", least),
+        named("df of the robust refit over whole series", _least_df(robust, facts)),
     ]
+
+
+def _least_df(fit: Refit, facts: Facts) -> float:
+    return min((row.df for row in focus_rows(fit, facts)), default=0.0)
 
 
 def _ratio(name: str, robust: Refit, model: Refit, facts: Facts) -> list[Fact]:

@@ -13,6 +13,7 @@ from clingstone.advice.facts import Facts
 from clingstone.advice.pick import Reached, preferred, rank
 from clingstone.advice.rules import Rule
 from clingstone.advice.structures import needed, reach
+from clingstone.covariance.components import SITE
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.display import listed
@@ -138,6 +139,8 @@ def _purpose(one: Remedy, level: str, fits: Fits) -> str:
         return "the ordinary fit, for comparison"
     declared = _declared(fits.design)
     found = sorted(one.covering(fits) & declared)
+    if not found and SITE in reach(one, fits):
+        return "covers what rows of one place share"
     if not found:
         return "for rows of unequal spread"
     where = f" at the level of {level}" if level else ""

@@ -129,7 +129,9 @@ STATES = (
     ),
     Rule(
         "sites-too-few",
-        SPATIAL & ~fact("spatial estimable"),
+        SPATIAL
+        & ~fact("spatial estimable")
+        & ~(fact("rows of one place alone") & fact("focus varies within places")),
         Then("state", "not correctable", needed="20 distinct sites, better 50"),
         "{sites} distinct sites are too few to size a dependence that fades with distance.",
         "webster-oliver-2007",

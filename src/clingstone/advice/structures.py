@@ -39,14 +39,15 @@ def reach(remedy: Remedy, fits: Fits) -> frozenset[str]:
     """Keys of the structures that a remedy, set to its level, covers in these data.
 
     An error model covers the components in it. A remedy at a level of clusters covers every level
-    that lies within them.
+    that lies within them; the rows of one place are such a level.
     """
     node = getattr(remedy, "node", None)
     if callable(node):
         return frozenset(node(fits))
     found = remedy.covering(fits)
-    keys = {key for key, one in _keys(fits).items() if one in found}
     parts = [fits.design.partitions[k] for k in remedy.at.split(TOGETHER) if k in fits.design.partitions]
+    clusters = bool(parts) and "group" in remedy.covers
+    keys = {key for key, one in _keys(fits).items() if one in found or (clusters and key == SITE)}
     if not parts:
         return frozenset(keys)
     out = set()
