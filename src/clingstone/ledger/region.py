@@ -31,6 +31,7 @@ BISECTIONS = 9
 CLOSE = 0.003  # of log-likelihood: a point this near the edge is on it
 GRID = 61  # values of a single parameter
 HEAVY = 1.5e7  # multiplications per evaluation above which the second round is left out
+HEAVY_AGAIN = 3e6  # … where a wider mean is tried out
 TOO_HEAVY = 3e8  # … above which the region is the ellipsoid of the curvature at the estimate
 
 
@@ -60,16 +61,8 @@ def loglik(algebra: Chosen, theta: Array, response: Response) -> tuple[float, fl
     return float(value[0]), float(sigma2[0])
 
 
-Known = dict[tuple[int, bytes], tuple[float, float]]
-
-
-def logliks(
-    algebra: Chosen, theta: Array, response: Response, owner: Places, known: Known | None = None
-) -> tuple[Array, Array]:
-    """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y.
-
-    known : what was worked out already by (column, θ); added to where each θ is work of its own.
-    """
+def logliks(algebra: Chosen, theta: Array, response: Response, owner: Places) -> tuple[Array, Array]:
+    """The same (K,) at θ (d, K), the k-th for column ``owner[k]`` of y."""
     many = each(algebra, response) if len(theta) else None
     if many is not None:
         grams = many.grams(theta, owner)
@@ -80,15 +73,12 @@ def logliks(
             value, sigma2 = np.full(len(owner), -np.inf), np.full(len(owner), np.nan)
             value[sound], sigma2[sound] = _profiled(grams.only(sound), response.design.m)
         return np.where(np.isfinite(value), value, -np.inf), sigma2
-    known = {} if known is None else known
-    places = [(int(b), at.tobytes()) for b, at in zip(owner, theta.T, strict=True)]
-    for b in np.unique(owner).tolist():
-        column = response if response.B == 1 else response.column(b)
-        for k in np.flatnonzero(owner == b).tolist():
-            if places[k] not in known:
-                known[places[k]] = loglik(algebra, theta[:, k], column)
-    value, sigma2 = np.array([known[place] for place in places]).reshape(-1, 2).T
-    return value, sigma2
+    out = np.empty((2, theta.shape[1]))
+    for b in np.unique(owner):
+        column = response if response.B == 1 else response.column(int(b))
+        for k in np.flatnonzero(owner == b):
+            out[:, k] = np.ravel(_alone(algebra, theta[:, k], column))
+    return out[0], out[1]
 
 
 def _profiled(grams: Grams, m: int) -> tuple[Array, Array]:
@@ -142,7 +132,7 @@ def _sampled(fits: Fits, node: frozenset[str], confidence: float) -> tuple[Regio
     else:
         aims = Aims(d, fits.run.child("likelihood region " + "+".join(sorted(node))))
         points = walk.rays(walk.centres, aims.of(0, RAYS.get(d, 64)))
-        if work <= HEAVY:
+        if work <= (HEAVY if fits.near is None else HEAVY_AGAIN):
             points = walk.outwards(points, aims)
         method = "profile likelihood, region sampled along rays"
     return tuple(Region(model, confidence, method) for model in _models(fits, node, walk, points))
@@ -221,6 +211,9 @@ class Aims:
         return np.vstack([np.eye(self.d), -np.eye(self.d), aims]).T
 
 
+Known = dict[tuple[int, bytes], tuple[float, float]]  # log-likelihood and σ² by (column, θ)
+
+
 class _Walk:
     """Looks for the edge of the region of every column of y, from points inside, all rays in step.
 
@@ -237,8 +230,15 @@ class _Walk:
         self.centres = Points(self.best, every)
 
     def logliks(self, theta: Array, owner: Places) -> tuple[Array, Array]:
-        """As ``logliks``, each point once in a walk."""
-        return logliks(self.algebra, theta, self.response, owner, self.known)
+        """As ``logliks``, each point once in a walk: most are asked for again, as an end and as a model."""
+        places = [(int(b), at.tobytes()) for b, at in zip(owner, theta.T, strict=True)]
+        first = {place: k for k, place in enumerate(places) if place not in self.known}
+        if first:
+            new = list(first.values())
+            found = logliks(self.algebra, theta[:, new], self.response, owner[new])
+            self.known |= zip(first, zip(*(v.tolist() for v in found), strict=True), strict=True)
+        value, sigma2 = np.array([self.known[place] for place in places]).reshape(-1, 2).T
+        return value, sigma2
 
     def margin(self, theta: Array, owner: Places) -> Array:
         """(K,) how far the log-likelihoods lie above the edge of the region."""
