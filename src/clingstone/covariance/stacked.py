@@ -48,8 +48,13 @@ class Forms:
             EE.append(ee)
             if cells is not None:
                 Sz = form.apply(z)
-                TE = cells.sums(Sz[:, None] * response.residual)
-                loads.append((cells.sums(z * Sz), cells.sums(Sz[:, None] * design.Q), TE))
+                loads.append(
+                    (
+                        cells.sums(z * Sz),
+                        cells.products(Sz, design.Q),
+                        cells.products(Sz, response.residual),
+                    )
+                )
         grams = np.stack(QQ), _by_column(QE), np.ascontiguousarray(np.stack(EE).T)
         if not loads:
             return cls(*grams)

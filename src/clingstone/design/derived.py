@@ -10,7 +10,7 @@ import numpy as np
 from clingstone.design.design import Contrast, Design, Term
 from clingstone.design.parted import PartedDesign, PartedResponse
 from clingstone.design.response import Response
-from clingstone.maths.basis import Basis, aliased
+from clingstone.maths.basis import Basis, aliased, lengths
 from clingstone.maths.once import Array, frozen
 from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
@@ -26,8 +26,9 @@ def extend(design: Design, name: str, columns: Array) -> Design:
     if design.root is not None:
         columns = columns * design.root[:, None]
     rest = design.basis.project(columns)
-    size = np.linalg.norm(columns, axis=0)
-    rest = rest[:, np.linalg.norm(rest, axis=0) > 1e-9 * np.where(size == 0, 1.0, size)]
+    size = lengths(columns)
+    some = lengths(rest) > 1e-9 * np.where(size == 0, 1.0, size)
+    rest = rest if some.all() else rest[:, some]
     if not rest.shape[1]:
         raise NotSupported(f"the model already spans {name}")
     try:

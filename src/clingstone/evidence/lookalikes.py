@@ -17,7 +17,7 @@ from clingstone.display import bounds, count, decimals_for, number, p_value, sig
 from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.read import Plain, degenerate, normal_quantile
 from clingstone.evidence.whitened import whitened
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, lately, once
 from clingstone.needs import Family, Needs, NotSupported
 
 if TYPE_CHECKING:
@@ -79,18 +79,18 @@ class Heteroscedasticity(GivenAll):
     def read(self, fits: Fits, about: About, given: frozenset[str] = frozenset()) -> Reading:
         design, response = fits.design, _seen(fits, given)
         squared = about.key.endswith(SQUARE)
-        z = _variable(response, about.key.removesuffix(SQUARE))
-        e2 = response.residual**2
-        lost = degenerate(fits.response) | (np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0))
+        if about.key.removesuffix(SQUARE) == FITTED:
+            along = _Along.of(rows_of(design, design.Q @ response.coef), squared)
+        else:
+            along = _along(design, about.key)
+        lost = degenerate(fits.response) | along.constant
         if lost.all():
             raise NotSupported(f"{about.words} do not vary beyond rounding, or nothing is left over")
-        e2 = np.where(lost, np.nan, e2)
-        r2, df = _r2(e2, z), 2.0 if squared else 1.0
-        if squared:
-            r2 = r2 + _r2(e2, _bent(z))
-            z = np.abs(z - np.median(z, axis=0))
-            z = np.round(z / z.max(axis=0), 9)  # two rows as far apart are tied whatever the order of rows
-        low, estimate, high = _spread_ratio(response.residual, z, normal_quantile(fits))
+        e2 = response.residual**2
+        e2[:, lost] = np.nan
+        r2 = np.sum([_r2(e2, column) for column in along.columns], axis=0)
+        df = float(len(along.columns))
+        low, estimate, high = _spread_ratio(e2, along, normal_quantile(fits))
         return Reading(
             statistic=design.n * r2,
             statistic_name="nR²",
@@ -120,41 +120,66 @@ class Heteroscedasticity(GivenAll):
         )
 
 
-def _variable(response: Response, key: str) -> Array:
-    """(n, B) fitted values per column, or (n, 1) a covariate."""
-    design = response.design
-    if key != FITTED:
-        return np.asarray(design.covariates[key], dtype=float)[:, None]
-    fitted = design.Q @ response.coef
-    return np.asarray(fitted if design.root is None else fitted / design.root[:, None])
+@dataclass(frozen=True, eq=False)
+class _Along:
+    """A variable, (n, B) or (n, 1): what squares of residuals are put against.
 
-
-def _bent(z: Array) -> Array:
-    """The square of a variable without its linear part, column by column."""
-    a = z - z.mean(axis=0)
-    square = a**2 - np.mean(a**2, axis=0)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        return np.asarray(square - a * (np.sum(a * square, axis=0) / np.sum(a * a, axis=0)))
-
-
-def _r2(e2: Array, z: Array) -> Array:
-    a, b = e2 - e2.mean(axis=0), z - z.mean(axis=0)
-    with np.errstate(divide="ignore", invalid="ignore"):
-        cross = np.sum(a * b, axis=0) ** 2
-        return np.asarray(cross / (np.sum(a * a, axis=0) * np.sum(b * b, axis=0)))
-
-
-def _spread_ratio(e: Array, z: Array, quantile: float) -> tuple[Array, Array, Array]:
-    """Low, estimate and high of sd(upper fifth)/sd(lower fifth), each (B,).
-
-    Where one value fills both fifths, it is one end and everything above it (else below) the other.
+    columns : the variable less its mean, and the bent part of its square where that is read too; each is
+    orthogonal to the others. lower, upper : rows of its ends. constant (B,) : it does not vary.
     """
-    low_cut, high_cut = np.quantile(z, [0.2, 0.8], axis=0)
-    tied, top = low_cut == high_cut, high_cut == z.max(axis=0)
-    lower = np.where(tied & top, z < low_cut, z <= low_cut)
-    upper = np.where(tied & ~top, z > high_cut, z >= high_cut)
+
+    columns: tuple[Array, ...]
+    lower: npt.NDArray[np.bool_]
+    upper: npt.NDArray[np.bool_]
+    constant: npt.NDArray[np.bool_]
+
+    @classmethod
+    def of(cls, z: Array, squared: bool) -> _Along:
+        """Ends are fifths of the rows by the variable, or by how far from its middle they are.
+
+        Where one value fills both fifths, it is one end and everything above it (else below) the other.
+        """
+        constant = np.ptp(z, axis=0) <= 1e-12 * np.abs(z).max(axis=0)
+        line = z - z.mean(axis=0)
+        columns = (line, _bent(line)) if squared else (line,)
+        if squared:
+            z = np.abs(z - np.median(z, axis=0))
+            with np.errstate(invalid="ignore"):
+                z = np.round(z / z.max(axis=0), 9)  # rows as far apart are tied whatever the order of rows
+        low_cut, high_cut = np.quantile(z, [0.2, 0.8], axis=0)
+        tied, top = low_cut == high_cut, high_cut == z.max(axis=0)
+        lower = np.where(tied & top, z < low_cut, z <= low_cut)
+        upper = np.where(tied & ~top, z > high_cut, z >= high_cut)
+        return cls(columns, lower, upper, constant)
+
+
+@lately
+def _along(design: Design, key: str) -> _Along:
+    x = np.asarray(design.covariates[key.removesuffix(SQUARE)], dtype=float)
+    return _Along.of(x[:, None], key.endswith(SQUARE))
+
+
+def _bent(line: Array) -> Array:
+    """The square of a variable of mean zero without its linear part, column by column."""
+    square = line**2
+    square -= np.mean(square, axis=0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        square -= line * (np.sum(line * square, axis=0) / np.sum(line * line, axis=0))
+    return square
+
+
+def _r2(e2: Array, line: Array) -> Array:
+    """Of e² on a variable of mean zero, (B,)."""
+    a = e2 - e2.mean(axis=0)
+    with np.errstate(divide="ignore", invalid="ignore"):
+        cross = np.sum(a * line, axis=0) ** 2
+        return np.asarray(cross / (np.sum(a * a, axis=0) * np.sum(line * line, axis=0)))
+
+
+def _spread_ratio(e2: Array, along: _Along, quantile: float) -> tuple[Array, Array, Array]:
+    """Low, estimate and high of sd(upper end)/sd(lower end) from squared residuals, each (B,)."""
+    lower, upper = along.lower, along.upper
     counts = lower.sum(axis=0), upper.sum(axis=0)
-    e2 = e**2
     with np.errstate(divide="ignore", invalid="ignore"):
         log = 0.5 * np.log(
             (np.sum(e2 * upper, axis=0) / counts[1]) / (np.sum(e2 * lower, axis=0) / counts[0])

@@ -317,10 +317,10 @@ def function_curve(fits: Fits, key: str, x: Array, test: str) -> Curve | None:
     added = response.residual[:, 0] - wide.residual[:, 0]
     serial = fits.design.serial
     own = contribution(response, key or (serial.name if serial is not None else ""))
-    values, codes = np.unique(x, return_inverse=True)
-    if len(values) > CURVE_BINS:
+    edges = np.unique(x)
+    if len(edges) > CURVE_BINS:
         edges = np.unique(np.quantile(x, np.linspace(0, 1, CURVE_BINS + 1))[1:-1])
-        codes = np.searchsorted(edges, x, side="left")
+    codes = np.searchsorted(edges, x, side="left")
     size = np.bincount(codes).astype(float)
     filled = np.flatnonzero(size)
     size = size[filled]

@@ -42,7 +42,7 @@ class Basis:
         Columns are scaled to unit length first, so the rank rule does not depend on units. Raises
         ``ValueError`` for an aliased design; ask :func:`aliased` for the columns first.
         """
-        scale = np.linalg.norm(X, axis=0)
+        scale = lengths(X)
         if np.any(scale == 0):
             raise ValueError("a design column is zero in every row")
         Q, R = _factored(X / scale)
@@ -76,7 +76,7 @@ class Basis:
         Q = self.Q[:, first:]
         rest = np.asarray(Q @ (Q.T @ Y))
         np.subtract(Y, rest, out=rest)
-        if self.n >= LONG and np.all(_squares(rest) >= HELD**2 * _squares(Y)):
+        if self.n >= LONG and np.all(lengths(rest) >= HELD * lengths(Y)):
             return rest
         # Twice is enough: a second pass removes what rounding leaves of large means.
         rest -= Q @ (Q.T @ rest)
@@ -98,8 +98,9 @@ class Basis:
         return self is inner or (self.extends is not None and self.extends.holds(inner))
 
 
-def _squares(Y: Array) -> Array:
-    return np.asarray(np.einsum("i...,i...->...", Y, Y))
+def lengths(Y: Array) -> Array:
+    """(k,) lengths of columns (n, k)."""
+    return np.asarray(np.sqrt(np.einsum("i...,i...->...", Y, Y)))
 
 
 def _factored(X: Array) -> tuple[Array, Array]:

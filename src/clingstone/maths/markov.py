@@ -83,12 +83,19 @@ class Links:
 
     def whiten(self, rho: float, block: Array) -> Array:
         """L⁻¹ block with LL' = R; block (n,) or (n, k)."""
-        phi, rest = correlation(rho, self.steps[self.later])
-        shape = (-1,) + (1,) * (block.ndim - 1)
+        phi, root = (v.reshape((-1,) + (1,) * (block.ndim - 1)) for v in self._before(rho))
         out = np.array(block, dtype=float)
-        out[self.later] -= phi.reshape(shape) * block[self.later - 1]
-        out[self.later] /= np.sqrt(rest).reshape(shape)
+        out[1:] -= phi[1:] * block[:-1]
+        out /= root
         return out
+
+    def _before(self, rho: float) -> tuple[Array, Array]:
+        """φ of each row and the row before it (n,), and √(1 − φ²); 0 and 1 at the start of a series."""
+        length = self.lengths[0]
+        own = correlation(rho, length if len(length) == 1 else self.steps[self.later])
+        phi, root = np.zeros(self.n), np.ones(self.n)
+        phi[self.later], root[self.later] = own[0], np.sqrt(own[1])
+        return phi, root
 
     def logdet(self, rho: float) -> float:
         """ln|R|."""

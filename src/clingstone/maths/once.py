@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 import gc
+import weakref
 from collections.abc import Callable, Hashable
 from functools import wraps
 from typing import Any, TypeVar, cast
@@ -53,12 +54,22 @@ def lately(method: F) -> F:
         store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
         place, key = ("latest", name), _keys(args, kwargs)
         if store.get(place, (None,))[0] != key:
-            if store.pop(place, None) is not None:
+            if place in store and _lingers(store.pop(place)[1]):
                 gc.collect()  # a design and its error models know each other, so only this lets them go
             store[place] = key, method(self, *args, **kwargs)
         return store[place][1]
 
     return cast(F, looked_up)
+
+
+def _lingers(value: Any) -> bool:
+    """Whether a value would outlive its last use: something that it leads to leads back to it."""
+    try:
+        watched = weakref.ref(value[0] if isinstance(value, tuple) else value)
+    except TypeError:  # a number
+        return False
+    del value
+    return watched() is not None
 
 
 def _keys(args: tuple[Any, ...], kwargs: dict[str, Any]) -> tuple[Any, ...]:

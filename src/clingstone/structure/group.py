@@ -142,7 +142,12 @@ def cells(key: str, values: Any) -> Partition:
     else:
         codes, uniques = pd.factorize(column)
         distinct = list(uniques)
-        order = sorted(range(len(distinct)), key=lambda i: _natural(distinct[i]))
+        numbers = isinstance(uniques, np.ndarray) and uniques.dtype.kind in "iuf"
+        order = (
+            np.argsort(uniques, kind="stable").tolist()
+            if numbers
+            else sorted(range(len(distinct)), key=lambda i: _natural(distinct[i]))
+        )
     if np.any(codes < 0):
         raise ValueError("a group is missing in some row; settle missing ids first")
     place = np.empty(len(distinct), dtype=np.int32)
