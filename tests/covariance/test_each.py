@@ -98,13 +98,14 @@ def test_blocks_of_columns_change_nothing(monkeypatch):
         assert getattr(cut, name) == pytest.approx(getattr(whole, name), rel=1e-12, abs=1e-12)
 
 
-def test_places_beside_groups_are_left_to_the_search_column_by_column():
+def test_places_beside_an_order_in_time_are_left_to_the_search_column_by_column():
     rng = np.random.default_rng(0)
-    site = np.repeat(np.arange(30), 3)
-    of = design(np.ones((90, 1)), xy=rng.uniform(size=(30, 2))[site], group=site)
-    many = fits(of, rng.normal(size=(90, 3)))
+    site, tick = np.repeat(np.arange(30), 8), np.tile(np.arange(8), 30)
+    of = design(np.ones((240, 1)), xy=rng.uniform(size=(30, 2))[site], series=site, tick=tick)
+    many = fits(of, rng.normal(size=(240, 3)))
     assert each(many.algebra({"spatial"}), many.response) is not None
-    assert each(many.algebra(many.components), many.response) is None
+    assert {"spatial", "serial"} <= many.full_node
+    assert each(many.algebra(many.full_node), many.response) is None
 
 
 def test_correlations_of_every_column_are_those_of_one():

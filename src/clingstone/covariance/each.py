@@ -2,11 +2,13 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
 
 from clingstone.covariance.algebras import Chosen, Layered
+from clingstone.covariance.fieldeach import FieldEach, field_each
 from clingstone.covariance.pieces import SerialPiece
 from clingstone.covariance.ranges import Ranges, ranges
 from clingstone.covariance.stacked import Forms
@@ -14,6 +16,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.each import Grams, Minima, Places, minimise_each
+from clingstone.maths.eachdf import SlopesEach, slopes_each
 from clingstone.maths.groups import Classes
 from clingstone.maths.once import Array, kept
 from clingstone.maths.partition import Partition
@@ -22,10 +25,10 @@ BLOCK = 1_000_000  # doubles in the largest array of one evaluation: what a cach
 SMALL = 100_000  # entries up to which an indicator is kept as a plain matrix
 
 
-def each(algebra: Chosen, response: Response) -> Each | Ranges | None:
+def each(algebra: Chosen, response: Response) -> Each | Ranges | FieldEach | None:
     """What evaluates these components column by column, or None where only one θ for all is at hand."""
     if not isinstance(algebra, Layered) or algebra.spatial is not None or algebra.above:
-        return ranges(algebra, response)
+        return ranges(algebra, response) or field_each(algebra, response)
     serial = algebra.serial
     if serial is not None and (
         type(serial) is not SerialPiece or not serial.links.few or len(serial.parameters) != 1
@@ -73,6 +76,10 @@ class Each:
             np.concatenate([g.EE for g in parts]),
             np.concatenate([g.logdet for g in parts]),
         )
+
+    def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach:
+        """What Satterthwaite's df take, at θ (d, K); free : coordinates that are not at a bound."""
+        return slopes_each(lambda at: self.grams(at, columns), theta, free, self.design.m)
 
     @property
     def _doubles(self) -> int:

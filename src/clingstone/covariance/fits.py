@@ -96,8 +96,9 @@ class Fits:
     of sleepstudy, Dyestuff, Hsb82, LakeHuron, Ovary, Grunfeld, Pastes and the Baltimore houses: shares
     agreed to 3e-5 and log-likelihoods to 2e-5; variances within 1e-4 in −2ℓ_R of being as well left out
     are put at zero (a share of up to 0.003), and a row noise that runs to zero stops at the grid's end
-    (share 0.004, on the Columbus data). Models of three or more working parameters are searched column by
-    column from the first column's optimum; a bootstrap of such a model has at most 200 columns.
+    (share 0.004, on the Columbus data). Models of three or more working parameters are searched for
+    every column, all at once where their algebra can, else from the first column's optimum; a bootstrap of
+    such a model has at most 200 columns.
     """
 
     response: Response
@@ -128,7 +129,12 @@ class Fits:
 
     @property
     def tails(self) -> str:
-        """How tails of a statistic are read (``Ratio.tails``): of many exact columns between exact ones."""
+        """How tails of a statistic are read (``Ratio.tails``): of many exact columns between exact ones.
+
+        Where a wider mean is tried, four moments do for large sparse forms.
+        """
+        if self.near is not None:
+            return "fast"
         return "between" if self.depth == "exact" and self.response.B > 1 else self.depth
 
     def column(self, b: int) -> Fits:
@@ -235,7 +241,10 @@ class Fits:
             return self._exact(node, algebra)
         if self.depth == "exact":
             return self._each(node, algebra)
-        return self._fast(node, algebra) if d <= FACED else self._one_by_one(node, algebra)
+        if d <= FACED:
+            return self._fast(node, algebra)
+        alone = each(algebra, self.response) is None
+        return self._one_by_one(node, algebra) if alone else self._each(node, algebra)
 
     def _check(self) -> None:
         if self.design.m < 1:

@@ -11,6 +11,7 @@ at steps of a tenth the error is below 1e-8 of the entry.
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -23,6 +24,7 @@ from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.maths.basis import Gram
 from clingstone.maths.each import Grams, Minima, Places, minimise_from
+from clingstone.maths.eachdf import SlopesEach, slopes_each
 from clingstone.maths.groups import Load
 from clingstone.maths.once import Array, kept, once
 
@@ -123,6 +125,10 @@ class Ranges:
         i, j = np.triu_indices(p)
         QQ[:, i, j] = QQ[:, j, i] = half
         return Grams(rest.QQ + QQ, rest.QE.T[columns] + QE, rest.EE[columns] + EE, logdet)
+
+    def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach:
+        """What Satterthwaite's df take, at θ (d, K); free : coordinates that are not at a bound."""
+        return slopes_each(lambda at: self.grams(at, columns), theta, free, self.design.m)
 
     # ---- what all columns share --------------------------------------------------------------
 

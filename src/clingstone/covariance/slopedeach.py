@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass
 
 import numpy as np
@@ -13,6 +14,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import slopeseach
 from clingstone.maths.each import Grams, Minima, Places
+from clingstone.maths.eachdf import SlopesEach, slopes_each
 from clingstone.maths.once import Array, once
 from clingstone.maths.search import slack
 from clingstone.maths.slopeseach import Blocks
@@ -62,6 +64,10 @@ class SlopedEach:
             np.concatenate([g.EE for g in parts]),
             np.concatenate([g.logdet for g in parts]),
         )
+
+    def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach:
+        """What Satterthwaite's df take, at θ (d, K); free : coordinates that are not at a bound."""
+        return slopes_each(lambda at: self.grams(at, columns), theta, free, self.design.m)
 
     def _grams(self, theta: Array, columns: Places) -> Grams:
         gram, block = self._base(columns), self._of(columns)

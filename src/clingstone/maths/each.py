@@ -225,7 +225,7 @@ class _Several:
             g, H = self._differences(theta[:, live], columns[live], free[:, live], value[live])
             at = theta[:, live]
             out = ((at <= self.low) & (g > 0)) | ((at >= self.high) & (g < 0)) | ~free[:, live]
-            step = _newton(H, g, out, damp[live])
+            step = newton(H, g, out, damp[live])
             trial = np.clip(at + step, self.low, self.high)
             new = self.f(trial, columns[live])
             fall = np.einsum("ik,ik->k", -g * ~out, step)
@@ -260,7 +260,7 @@ class _Several:
         return g, H
 
 
-def _newton(H: Array, g: Array, held: Flags, damp: Array) -> Array:
+def newton(H: Array, g: Array, held: Flags, damp: Array) -> Array:
     """−(|H| + damp·scale)⁻¹g over the coordinates not held: always downhill; H (d, d, K) → (d, K)."""
     d = len(g)
     free = ~held

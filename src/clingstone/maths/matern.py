@@ -23,7 +23,7 @@ from clingstone.maths.reml import forward
 PRACTICAL = {0.5: 2.99573, 1.5: 2.73887, 2.5: 2.64690}
 
 
-def kernel(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
+def kernel(distance: Array, reach: float | Array, smoothness: float = 0.5) -> Array:
     """Correlation at a distance. ``reach`` is φ: e^{−d/φ} for smoothness ½, and for 3/2 and 5/2 the
     Matérn form in √(2κ)d/φ."""
     if smoothness == 0.5:
@@ -48,6 +48,22 @@ def kernel_slope(distance: Array, reach: float, smoothness: float = 0.5) -> Arra
         return np.asarray(x * x * np.exp(-x))
     if smoothness == 2.5:
         return np.asarray(x * x * (1 + x) / 3 * np.exp(-x))
+    raise ValueError(f"smoothness {smoothness:g} is not one of 0.5, 1.5, 2.5")
+
+
+def kernel_bends(distance: Array, reach: float | Array, smoothness: float = 0.5) -> tuple[Array, ...]:
+    """:func:`kernel` with its first and second derivative in ln φ; reach may be an array that broadcasts."""
+    x = distance * ((1.0 if smoothness == 0.5 else np.sqrt(2 * smoothness)) / reach)
+    e = np.exp(-x)
+    if smoothness == 0.5:
+        first = x * e
+        return e, first, (x - 1) * first
+    if smoothness == 1.5:
+        first = x * x * e
+        return (1 + x) * e, first, (x - 2) * first
+    if smoothness == 2.5:
+        e *= 1 / 3
+        return (3 + x * (3 + x)) * e, x * x * (1 + x) * e, x * x * (x * (x - 2) - 2) * e
     raise ValueError(f"smoothness {smoothness:g} is not one of 0.5, 1.5, 2.5")
 
 

@@ -7,6 +7,7 @@ runs, because its size must be the same on every machine.
 from __future__ import annotations
 
 from clingstone.covariance.each import each
+from clingstone.covariance.fieldeach import FieldEach
 from clingstone.covariance.ranges import Ranges
 from clingstone.rehearsal.study import Contender, Study
 from clingstone.remedies.gls import GlsReady
@@ -16,6 +17,7 @@ from clingstone.remedies.sandwich import ClusterReady, OrdinaryReady
 
 SHORT = 2e6  # µs that a short rehearsal of a small table may take
 LONGER = 5e6  # … of a table of more than SMALL rows, or of places alone, whose own correction is a search
+LONGEST = 6e6  # … of places with levels beside them: three parameters to be searched
 SMALL = 1000
 FEWEST = 100  # replicates per truth below which a contender is not worth starting
 GOOD = 250  # … that a search or a resampling must leave to the others, or it is not worth their precision
@@ -64,6 +66,11 @@ def _of_gls(ready: GlsReady, study: Study) -> float:
         # The shared ranges are made once; their part is that of a column among the fewest.
         made = len(many.nodes) * (30 + 0.0006 * S**3) / (FEWEST * max(1, len(study.truths)))
         return made + 150 + S * (4 + 0.1 * k)
+    if isinstance(many, FieldEach):
+        S, grid = len(many.fields.load.c), many.grid
+        # Ten evaluations with derivatives; the grid of starts is factored once for all columns.
+        made = grid * (100 + 0.0003 * S**3) / (FEWEST * max(1, len(study.truths)))
+        return made + 0.05 * grid * S + 10 * (80 + 0.035 * S**2 + 0.0002 * S**3)
     if many is None:
         S = design.spatial.count if design.spatial is not None else n
         return 40.0 * d * (150 + 0.02 * S**2 + 0.0003 * S**3 + 0.01 * n)
@@ -82,8 +89,10 @@ def drawable(study: Study) -> bool:
 
 def _budget(study: Study) -> float:
     fits = study.fits
-    searched = isinstance(each(fits.algebra(fits.full_node), fits.response), Ranges)
-    return LONGER if searched or fits.design.n > SMALL else SHORT
+    many = each(fits.algebra(fits.full_node), fits.response)
+    if isinstance(many, FieldEach):
+        return LONGEST
+    return LONGER if isinstance(many, Ranges) or fits.design.n > SMALL else SHORT
 
 
 def affordable(study: Study) -> tuple[list[int], list[tuple[str, str, str]], int]:

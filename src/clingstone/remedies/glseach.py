@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+from collections.abc import Sequence
 from dataclasses import dataclass, replace
 from typing import TYPE_CHECKING, Protocol
 
@@ -12,7 +13,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
 from clingstone.maths.each import Grams, Minima, Places
-from clingstone.maths.eachdf import KenwardEach, slopes_each
+from clingstone.maths.eachdf import KenwardEach, SlopesEach
 from clingstone.maths.once import Array
 from clingstone.remedies.columns import Column, Rule, plain_df
 from clingstone.remedies.joint import Joint, f_joint
@@ -52,6 +53,8 @@ class Many(Protocol):
     def minima(self) -> Minima: ...
 
     def grams(self, theta: Array, columns: Places) -> Grams: ...
+
+    def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach: ...
 
 
 @dataclass(eq=False)
@@ -118,13 +121,7 @@ def _satterthwaite(ready: Reading, fits: Fits, many: Many, found: Minima, read: 
     for j in range(patterns.shape[1]):
         columns = np.flatnonzero(which.ravel() == j)
         free = [int(i) for i in np.flatnonzero(~patterns[:, j])]
-
-        slopes = slopes_each(
-            lambda theta, these=columns: many.grams(theta, these),  # type: ignore[misc]
-            found.theta[:, columns],
-            free,
-            ready.design.m,
-        )
+        slopes = many.slopes(found.theta[:, columns], columns, free)
         read.phi[columns] = slopes.phi
         sound = slopes.sound
         good = columns[sound]
