@@ -2,6 +2,8 @@
 
 from __future__ import annotations
 
+from typing import Any
+
 import numpy as np
 from scipy import sparse
 from scipy.sparse.linalg import splu
@@ -10,7 +12,7 @@ from clingstone.design.design import Design
 from clingstone.evidence.serial import series_of
 from clingstone.evidence.spatial import moran_form, neighbours_of, site_design
 from clingstone.maths.markov import Links, at_rho
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, kept, once
 
 # A correlation is scanned on this grid and the factor interpolated: it is smooth and monotone.
 GRID = np.array([0.0, 0.025, 0.05, 0.1, 0.15, 0.2, 0.3, 0.4, 0.5, 0.6, 0.7, 0.8, 0.9, 0.95])
@@ -86,12 +88,18 @@ def spatial_factors(design: Design, key: str, rng: np.random.Generator) -> Array
     form = moran_form(small, key)
     reach = max(abs(form.low), abs(form.high), 1.0)  # keeps I − λW/reach invertible
     probes = np.eye(small.n) if small.n <= 400 else np.where(rng.random((small.n, 30)) < 0.5, -1.0, 1.0)
-    out = np.ones((len(GRID), a.shape[1]))
-    for i, lam in enumerate(GRID):
-        solver = splu(sparse.csc_array(sparse.eye_array(small.n) - (lam / reach) * W.T))
-        mean = float(np.sum(solver.solve(probes) ** 2) / np.sum(probes**2))
-        out[i] = np.sum(solver.solve(a) ** 2, axis=0) / mean
-    return _largest(out)
+    eye = sparse.eye_array(small.n)
+
+    def solver(lam: float) -> Any:
+        return splu(sparse.csc_array(eye - (lam / reach) * W.T))
+
+    def means() -> Array:
+        return np.array([np.sum(solver(lam).solve(probes) ** 2) / np.sum(probes**2) for lam in GRID])
+
+    # The mean is that of the neighbours alone, whatever the columns of the design.
+    mean = kept(neighbours_of(design, key), ("mean variance",), means)
+    out = np.stack([np.sum(solver(lam).solve(a) ** 2, axis=0) for lam in GRID])
+    return _largest(out / mean[:, None])
 
 
 def _largest(squared: Array) -> Array:

@@ -29,6 +29,7 @@ from clingstone.maths.once import Array
 Complex = npt.NDArray[np.complex128]
 LogDet = Callable[[Complex], Complex]
 COMPLEX_STEP = 1e-20
+DEEP = float(np.log(1e-30))
 STEEPEST = 0.6  # sine of the largest bend
 
 
@@ -130,8 +131,12 @@ def _bend(curve: float, third: float, c: float) -> float:
     return float(np.arcsin(np.clip(sine, -STEEPEST, STEEPEST)))
 
 
-def integrate(log_det: LogDet, at: Saddle, tolerance: float = 1e-12, first: float = 0.5) -> Integral:
+def integrate(
+    log_det: LogDet, at: Saddle, tolerance: float = 1e-12, first: float = 0.5, deep: float | None = None
+) -> Integral:
     """The tail on the side of c by the trapezoid rule, halving the step until two answers agree.
+
+    deep : the tolerance of a tail below 10⁻³⁰, by default the same.
 
     The error squares with each halving, so agreement to √tolerance is agreement to the tolerance. Where the
     path leaves what numbers can hold, the integral is not known (accuracy 1); the bound still is.
@@ -139,6 +144,8 @@ def integrate(log_det: LogDet, at: Saddle, tolerance: float = 1e-12, first: floa
     sine, cosine = np.sin(at.bend), np.cos(at.bend)
     base = float((-0.5 * log_det(np.array([at.c + 0j]))).real[0])
 
+    if deep is not None and base < DEEP:
+        tolerance = deep
     outside: list[bool] = []
 
     def terms(u: Array) -> tuple[Array, Array]:

@@ -32,6 +32,7 @@ from clingstone.maths.tails import (
     Tails,
     both,
     collect,
+    nearly,
 )
 from clingstone.maths.traces import covariance, covariances, cross_traces, means, projected, residual_df
 
@@ -161,6 +162,8 @@ class Law:
         long = routes.polynomials(self.basis, self.form, self.swept, t)
         spectrum = long or routes.spectrum(self.basis, self.form, self.swept)
         start = 0.0 if self.form.chains is None else routes.saddle(self.form.chains, t)
+        if way == "factored":
+            start = nearly(surrogate(self.basis, self.form, self.swept, t >= self.mean), t, (first, second))
         found = both(spectrum, t, (first, second), lambda: self.range, start)
         if found.accuracy > 1e-8 and way == "modes" and self.form.order <= routes.DENSE:
             # Near an end of the attainable range the spectrum of S leaves the contour too little room.

@@ -97,7 +97,9 @@ class Law:
         assert self.drawn is not None
         part = self.drawn[:, :, :draws]
         S, k, R = part.shape
-        v = np.einsum("skr,skr->kr", part, (K @ part.reshape(S, k * R)).reshape(S, k, R))
+        # Half of a symmetric K, its diagonal of ones apart.
+        above = (sparse.triu(K, 1, format="csr") @ part.reshape(S, k * R)).reshape(S, k, R)
+        v = np.einsum("skr,skr->kr", part, part + 2 * above)
         return Moments(v.mean(axis=1), v.var(axis=1, ddof=1))
 
 

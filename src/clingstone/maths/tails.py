@@ -89,14 +89,9 @@ def both(
     moments : τ₁ and τ₂ of the spectrum. attainable : asked for the extreme eigenvalues of MSM only where
     the bounds at hand leave doubt. start : a guess of the saddle point, taken if it lies further out.
     """
-    m = spectrum.m
-    mean = moments[0] / m
-    upper = t >= mean
+    upper = t >= moments[0] / spectrum.m
     if (t >= spectrum.high) if upper else (t <= spectrum.low):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    kappa1 = moments[0] - m * t
-    kappa2 = 2.0 * max(moments[1] - 2.0 * t * moments[0] + m * t**2, 1e-300)
-    guess = (abs(kappa1) + np.sqrt(kappa1**2 + 4.0 * kappa2)) / (2.0 * kappa2)
 
     def log_det(z: Complex) -> Complex:
         return spectrum.log_det(z, t)
@@ -104,20 +99,34 @@ def both(
     slow = isinstance(spectrum, Factored)
     at = saddle(
         log_det,
-        max(guess, abs(start)),
+        max(_guess(spectrum.m, t, moments), abs(start)),
         edge(spectrum, t, upper),
         tolerance=0.3 if slow else 0.02,
         most=10 if slow else 60,
     )
     if not at.found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
-    tail = integrate(log_det, at, tolerance=1e-9 if slow else 1e-13)
+    tail = integrate(log_det, at, tolerance=1e-9 if slow else 1e-13, deep=1e-6 if slow else None)
     if tail.accuracy > 1e-6 and at.found and _beyond(t, attainable(), upper):
         return NOTHING_ABOVE if upper else NOTHING_BELOW
     # Where c had to stay far from the saddle, nothing may be left of the integral; e^K(c) still bounds it.
     small = min(tail.log_tail if tail.accuracy < 1e-2 else tail.log_bound, 0.0)
     large = float(np.log1p(-np.exp(small))) if small > -700.0 else 0.0
     return Both(large, small, tail.accuracy) if upper else Both(small, large, tail.accuracy)
+
+
+def nearly(spectrum: Spectrum, t: float, moments: tuple[float, float]) -> float:
+    """The saddle point of a small spectrum, where the search of a larger one with the same traces starts."""
+    upper = t >= moments[0] / spectrum.m
+    guess = _guess(spectrum.m, t, moments)
+    return abs(saddle(lambda z: spectrum.log_det(z, t), guess, edge(spectrum, t, upper)).c)
+
+
+def _guess(m: float, t: float, moments: tuple[float, float]) -> float:
+    """The saddle point by the first two cumulants of Q_t."""
+    kappa1 = moments[0] - m * t
+    kappa2 = 2.0 * max(moments[1] - 2.0 * t * moments[0] + m * t**2, 1e-300)
+    return float((abs(kappa1) + np.sqrt(kappa1**2 + 4.0 * kappa2)) / (2.0 * kappa2))
 
 
 def _beyond(t: float, ends: tuple[float, float], upper: bool) -> bool:
