@@ -128,6 +128,7 @@ def test_every_fact_in_the_table_is_one_that_facts_gives():
         | {
             "range over extent",
             "range at its bound",
+            "focus settled at any range",
             "likeness along one axis",  # more sites than these designs have
         }
     )

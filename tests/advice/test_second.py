@@ -8,6 +8,7 @@ import pytest
 from clingstone.advice.choose import Score, Scores, settle
 from clingstone.advice.pick import same, serves
 from clingstone.advice.shortlist import LEVELS, PLAIN, shortlist_for
+from clingstone.ledger.ledger import Inflation
 from tests.advice.synthetic import facts, ledger, refit, shortlist
 from tests.advice.test_choose import ALL, decide, trial
 from tests.advice.test_repair import walk
@@ -180,6 +181,24 @@ def test_an_estimate_that_moves_is_said():
     advice = decide(trial(), (*without("mixed-intercept"), moved))
     assert "estimate-moves" in {c.rule for c in advice.cautions}
     assert "estimate-moves" not in {c.rule for c in decide(trial()).cautions}
+
+
+def test_a_move_that_weighting_alone_explains_is_none():
+    """An ordinary estimate three times as uncertain as it says may well lie three of its errors away."""
+    from dataclasses import replace
+
+    row = refit("mixed-intercept", "clinic", 2.0).intervals[0]
+    near = replace(
+        refit("mixed-intercept", "clinic", 2.0), intervals=(replace(row, estimate=row.estimate + 3),)
+    )
+
+    def told(factor: float) -> bool:
+        book = replace(trial().ledger, inflation=(Inflation(row.term, "total", factor, factor, factor),))
+        advice = decide(replace(trial(), ledger=book), (*without("mixed-intercept"), near))
+        return "estimate-moves" in {c.rule for c in advice.cautions}
+
+    assert told(1.0)
+    assert not told(3.0)
 
 
 def test_same_and_serves():

@@ -35,6 +35,20 @@ PREFER = (
         "strong",
     ),
     Rule(
+        "slopes-in-groups",
+        GROUP
+        & ~SERIAL
+        & ~SPATIAL
+        & SLOPES
+        & ~fact("focus at group level")
+        & (fact("df of the robust refit") >= 4),
+        Then("prefer", "cluster-robust", at="group level", firm=True),
+        "Slopes of {name of the slope} differ between groups, which a random intercept leaves out; the "
+        "robust covariance allows for that and for rows of a group that go together.",
+        "barr-2013, bell-2019, cameron-miller-2015",
+        "strong",
+    ),
+    Rule(
         "spread-in-groups",
         GROUP
         & ~SERIAL
@@ -397,6 +411,19 @@ PREFER = (
         "within places: the robust covariance allows the rows of one place to depend on each other in any "
         "way.",
         "barr-2013, cameron-miller-2015, pustejovsky-tipton-2018",
+        "moderate",
+    ),
+    Rule(
+        "range-past-the-map",
+        SPATIAL
+        & ~GROUP
+        & ~SERIAL
+        & (fact("range at its bound") | (fact("range over extent") >= 1))
+        & fact("focus settled at any range"),
+        Then("prefer", "spatial-gls"),
+        "The dependence reaches past the map, but the focus terms vary at shorter distances: their standard "
+        "errors hardly move over all ranges that go with these data, so a fitted covariance serves them.",
+        "besag-higdon-1999, stein-1999",
         "moderate",
     ),
     Rule(

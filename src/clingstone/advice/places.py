@@ -11,11 +11,12 @@ from clingstone.covariance.components import SITE
 from clingstone.covariance.fits import Fits
 from clingstone.display import p_value, percent
 from clingstone.evidence.finding import Evidence
-from clingstone.ledger.ledger import Ledger, focus_terms
+from clingstone.ledger.ledger import Ledger, focus_rows, focus_terms
 from clingstone.ledger.standing import LEVEL
 from clingstone.needs import Limits
 
 GIVEN = ("contiguity", "rook", "pairs")  # graphs that say which places touch, not how far apart they are
+SETTLED = 1.25  # by which a standard error may move between the ends of the range's interval and its estimate
 CLEAR = 0.01  # p of a score test of neighbours' outcomes; one of several looks at places
 
 
@@ -66,7 +67,24 @@ def _reach(fits: Fits, ledger: Ledger) -> list[Fact]:
             _at_bound(fits, ledger),
             "the range lies at the end of what is tried",
         ),
+        yes(
+            "focus settled at any range",
+            _settled(fits, ledger),
+            f"the standard errors in focus move by a factor of at most {SETTLED:g} with the range",
+        ),
     ]
+
+
+def _settled(fits: Fits, ledger: Ledger) -> bool:
+    """Whether the focus varies at distances so short that its intervals hardly lean on the range.
+
+    A difference between near places is known as well under a dependence that fades past the map as
+    under one that has no end: only what varies as slowly as the dependence needs the range.
+    """
+    focus = focus_rows(fits)
+    mine = [each for each in ledger.inflation if each.key == "total" and each.term in focus]
+    moved = [max(each.high / each.estimate, each.estimate / each.low) for each in mine]
+    return bool(moved) and max(moved) <= SETTLED
 
 
 def _at_bound(fits: Fits, ledger: Ledger) -> bool:

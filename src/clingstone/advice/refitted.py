@@ -2,12 +2,15 @@
 
 from __future__ import annotations
 
+from scipy import special
+
 from clingstone.advice.entries import Scores
 from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
 from clingstone.advice.pick import SECOND, Reached, covers, same
 from clingstone.advice.structures import subject
 from clingstone.display import listed, percent
+from clingstone.ledger.ledger import Ledger
 from clingstone.remedies.remedy import Interval, Refit
 
 ROBUST = "cluster-robust"
@@ -22,6 +25,7 @@ COMPARES = {
     "df of the robust refit over places": (ROBUST,),
     "df of the robust refit over whole series": (ROBUST, "joint", "ar1", "car1"),
 }
+CLEAR = 0.01  # level, over all focus rows, at which an estimate moves by more than chance
 NOTHING = 1e-6  # a share that is estimated at zero
 ANY_SPREAD = (  # let every row, group or time have its own variance
     "heteroscedasticity-robust",
@@ -180,19 +184,30 @@ def _no_variance(facts: Facts, chosen: Refit, reached: Reached) -> bool:
     return any(share is not None and share.share <= NOTHING for share in found)
 
 
+def _is_moved(ordinary: Interval, chosen: Interval, ledger: Ledger, rows: int) -> bool:
+    """Whether an estimate moves by more than its standard error, and by more than weighting alone explains.
+
+    Of two unbiased estimates of which the second is efficient, the difference has the variance of the first
+    less that of the second (Hausman 1978); the first's own is the ordinary one times the ledger's factor.
+    """
+    gap = abs(chosen.estimate - ordinary.estimate)
+    factor = ledger.factor(ordinary.term)
+    if factor is None or not gap > chosen.se:
+        return gap > chosen.se
+    chance = max((factor.estimate * ordinary.se) ** 2 - chosen.se**2, 0.0) ** 0.5
+    return not gap <= special.ndtri(1 - CLEAR / 2 / rows) * chance
+
+
 def _moved(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
     ordinary = find(refits, "ordinary")
     if ordinary is None:
         return []
     before = {row.term: row for row in ordinary.intervals}
-    moved = [
-        row.term
-        for row in focus_rows(chosen, facts)
-        if row.term in before and abs(row.estimate - before[row.term].estimate) > row.se
-    ]
+    mine = [row for row in focus_rows(chosen, facts) if row.term in before]
+    moved = [row.term for row in mine if _is_moved(before[row.term], row, facts.ledger, len(mine))]
     return [
         yes("coefficient moves", bool(moved), f"moves by more than its error: {listed(moved)}"),
-        words("term that moves", listed(moved)),
+        words("term that moves", listed(moved, most=4)),
     ]
 
 

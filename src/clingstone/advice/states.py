@@ -139,7 +139,11 @@ STATES = (
     ),
     Rule(
         "range-too-long",
-        SPATIAL & fact("spatial present") & (fact("range over extent") >= 1) & ~fact("mean in doubt"),
+        SPATIAL
+        & fact("spatial present")
+        & (fact("range over extent") >= 1)
+        & ~fact("focus settled at any range")
+        & ~fact("mean in doubt"),
         Then(
             "state",
             "not correctable",
