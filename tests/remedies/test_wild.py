@@ -240,3 +240,23 @@ def test_size_with_few_unequal_clusters(G):
     assert np.all(size[1:] > 0.025), size
     outside = np.mean((found.low > 0) | (found.high < 0), axis=1)
     assert outside == pytest.approx(size, abs=0.004)  # p and the interval are one test
+
+
+@pytest.mark.parametrize(("G", "said"), [(5, False), (6, True), (7, True), (8, False)])
+def test_six_and_seven_clusters_are_told_what_the_intervals_are_worth(G, said):
+    rng = np.random.default_rng(1)
+    group = np.repeat(np.arange(G), 6)
+    X = np.column_stack([np.ones(6 * G), rng.normal(size=6 * G)])
+    found = refit(WILD, "clinic", fits(design(X, group=group), rng.normal(size=6 * G)))
+    assert any("too sure of itself" in note and f"With {G} clusters" in note for note in found.notes) == said
+
+
+def test_a_df_that_prints_as_the_floor_is_not_below_it():
+    # Three clinics in each arm: 4 degrees of freedom but for rounding in the last digits.
+    rng = np.random.default_rng(2)
+    group = np.repeat(np.arange(6), 8)
+    X = np.column_stack([np.ones(48), (group >= 3).astype(float)])
+    y = rng.normal(size=6)[group] + rng.normal(size=48)
+    row = refit(remedy("mixed-intercept"), "clinic", fits(design(X, group=group), y)).intervals[1]
+    assert row.df == pytest.approx(4, abs=0.01)
+    assert row.status == "ok"

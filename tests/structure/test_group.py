@@ -103,11 +103,11 @@ def test_plain_groups_need_no_note() -> None:
         (["a", "a", "b", "b", "c"], "1 of 3 groups of clinic holds one row each"),
         (
             ["A", " a", "b", "b"],
-            "Some labels of clinic differ only by blanks, case or leading zeros: ‘ a’ = ‘A’?",
+            "Some labels of clinic differ only by blanks, case or leading zeros: ‘ a’ = ‘A’.",
         ),
         (
             ["01", "1", "2", "2"],
-            "Some labels of clinic differ only by blanks, case or leading zeros: ‘01’ = ‘1’?",
+            "Some labels of clinic differ only by blanks, case or leading zeros: ‘01’ = ‘1’.",
         ),
     ],
 )

@@ -161,7 +161,7 @@ def _status(name: str, df: float, ready: Ready, found: Estimates, remedy: Remedy
         return f"unusable: with {few}, the data cannot tell how long its interval should be"
     if found.boundary is not None and bool(found.boundary[0]):
         return "boundary: a dependence parameter was estimated at the end of its range"
-    if df < remedy.limits.df_floor:
+    if round(df, 1) < remedy.limits.df_floor:  # as it is printed: 3.99996 are 4.0
         return f"caveat: {df:.1f} degrees of freedom, below {remedy.limits.df_floor:g}"
     return "ok"
 

@@ -232,7 +232,7 @@ class WildClusterBootstrap(OverClusters):
             np.full((len(names), 1), np.nan),
             "wild bootstrap",
             unusable,
-            notes + rank_note(part, design.p),
+            notes + rank_note(part, design.p) + _few_note(G),
             at=self.at,
             part=part,
             kind="signs" if signs else "webb",
@@ -246,6 +246,17 @@ class WildClusterBootstrap(OverClusters):
             ("six-point weights (Webb)", replace(self, kind="webb")),
             ("999 resamples", replace(self, draws=999)),
         )
+
+
+def _few_note(G: int) -> tuple[str, ...]:
+    """What few clusters leave of its promise, from equal and lopsided ones in tests/simulation/groups.py."""
+    if not LEAST < G < FEW_SIGNS:
+        return ()
+    return (
+        f"With {G} clusters the bootstrap is too sure of itself: in simulations with 6 and 7 its 95 % "
+        "intervals held the truth in 91 to 93 % for a predictor of whole clusters, in 92 to 95 % for one of "
+        "rows; those of cluster-robust in 94 to 97 %.",
+    )
 
 
 def _affordable(draws: int, G: int, p: int, k: int) -> int:

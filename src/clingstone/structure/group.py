@@ -323,9 +323,9 @@ def _lookalikes(level: Partition) -> list[str]:
     same = [labels for labels in alike.values() if len(labels) > 1]
     if not same:
         return []
-    shown = listed((" = ".join(f"‘{x}’" for x in labels) + "?" for labels in same), most=3)
+    shown = listed((" = ".join(f"‘{x}’" for x in labels) for labels in same), most=3)
     return [
-        f"Some labels of {level.key} differ only by blanks, case or leading zeros: {shown} "
+        f"Some labels of {level.key} differ only by blanks, case or leading zeros: {shown}. "
         "They are kept as different groups."
     ]
 
