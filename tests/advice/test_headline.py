@@ -192,3 +192,11 @@ def test_every_structure_that_was_not_found_has_its_size_or_a_word():
     assert "an intraclass correlation of 0.09" in text
     assert "Not even the strongest between rows that follow each other in time would have shown" in text
     assert "How weak a one would have shown between near places is not known." in text
+
+
+def test_slopes_that_differ_are_told_beside_what_rows_share():
+    book = ledger(group="present")
+    more = {"slopes_differ": True, "name_of_the_slope": "dose", "level_of_the_slopes": "ward/patient"}
+    assert say.doubts(facts(book, **more)) == ["Slopes of dose differ from patient to patient."]
+    assert say.doubts(facts(book, **{**more, "slopes_differ": False})) == []
+    assert say.doubts(facts(ledger(serial="present"), **more)) == []  # then it is all that is to be covered

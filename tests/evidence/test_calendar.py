@@ -6,6 +6,7 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pytest
 
 from clingstone.evidence import breaks
@@ -14,6 +15,7 @@ from clingstone.evidence.breaks import Break, steps
 from clingstone.evidence.season import Season, cycles, fisher_tail, ordinates, with_season
 from clingstone.evidence.serial import DurbinWatson, IrregularSerial
 from clingstone.needs import NotSupported
+from clingstone.structure.serial import build
 from tests.evidence.factories import ar1, design, fits
 
 SEASON, STEP = Season(), Break()
@@ -287,3 +289,16 @@ def test_bands_of_irregular_times_hold_what_they_say() -> None:
         assert curve is not None
         inside.append([low <= y <= high for low, y, high in zip(curve.low, curve.y, curve.high, strict=True)])
     assert float(np.mean(inside)) == pytest.approx(0.95, abs=0.02)  # 1,440 bins
+
+
+def test_a_step_is_told_by_the_time_that_the_user_wrote() -> None:
+    rng = np.random.default_rng(8)
+    years = pd.Series(np.repeat(np.arange(1871, 1971), 2)[::-1])  # backwards, each year twice
+    series, order = build("year", years, ties="replicate")
+    y = 5.0 * (years.to_numpy()[order] >= 1899) + rng.normal(size=200)
+    plain = design(rng.normal(size=200), time=np.arange(200))
+    made = replace(plain, serial=series)
+    found = STEP.read(fits(made, y), STEP.abouts(made)[0])
+    assert ", from 1899 on, would explain" in STEP.sentence(found, STEP.abouts(made)[0])
+    part = series.take(np.arange(40))  # other times than those written down
+    assert part.written == ()

@@ -104,8 +104,8 @@ MEAN = (
         "spatial-confounding",
         SPATIAL & fact("coefficient moves"),
         Then("caution"),
-        "The coefficient of {term that moves} moves by more than its standard error when space enters the "
-        "error: a sign of spatial confounding, not of a cleaned estimate.",
+        "When space enters the error, an estimate moves by more than its standard error ({term that moves}): "
+        "a sign of spatial confounding, not of a cleaned estimate.",
         "hodges-reich-2010, paciorek-2010",
         "strong",
     ),
@@ -113,9 +113,9 @@ MEAN = (
         "estimate-moves",
         (GROUP | SERIAL) & ~SPATIAL & fact("coefficient moves"),
         Then("caution"),
-        "The coefficient of {term that moves} moves by more than its standard error when dependence enters "
-        "the model: what groups or series keep throughout may go with the predictor. Compare its effect "
-        "within them.",
+        "When dependence enters the model, an estimate moves by more than its standard error ({term that "
+        "moves}): what groups or series keep throughout may go with the predictor. Compare its effect within "
+        "them.",
         "mundlak-1978, bell-jones-2015",
         "strong",
     ),

@@ -31,6 +31,7 @@ __all__ = [
 
 SHOWN = 3  # rows of one refit that are named among what is refused; the rest are counted
 MORE = "More groups, or more rows, in which it differs would be needed."
+SLOPED = ("mixed-slope",)
 APART = ("within-between", "fixed-effects")  # tell an effect within groups from one between them
 MEAN = ("mean-first", "mean-then-dependence", "season-first", "mean-alone")
 
@@ -226,17 +227,17 @@ def _alternatives(
 ) -> tuple[Choice, ...]:
     """Refits that cover what has to be covered; with nothing to cover, every correction by the design.
 
-    The repaired mean first, where a part seems to be missing; then, where groups differ otherwise than
-    their rows do, the refits that tell the two apart; then the simpler ones first. Of refits with the
-    same numbers one stands for all.
+    The repaired mean first, where a part seems to be missing; then the model of slopes, where they differ
+    between groups; then, where groups differ otherwise than their rows do, the refits that tell the two
+    apart; then the simpler ones first. Of refits with the same numbers one stands for all.
     """
     whole, need = shortlist.facts, needed(shortlist.facts.ledger)
     made = {(r.remedy, r.at): r for r in refits}
     kept: list[Refit] = [advised] if advised is not None else []
     out = []
     mixed = whole.says("between differs from within") or whole.says("predictors differ together")
-    apart = APART if mixed else ()
-    order = (REPAIRED, *apart)
+    slopes = SLOPED if whole.says("slopes differ") else ()
+    order = (REPAIRED, *slopes, *(APART if mixed else ()))
     ranked = sorted(
         shortlist.candidates,
         key=lambda c: (order.index(c.remedy) if c.remedy in order else len(order), rank(c.remedy)),

@@ -42,6 +42,9 @@ def unequal(facts: Facts) -> str:
 def doubts(facts: Facts) -> list[str]:
     """What a reader of the headline alone should know before the interval is used."""
     out = []
+    if facts.says("group to cover") and facts.says("slopes differ"):
+        level = facts.text("level of the slopes").split("/")[-1]
+        out.append(f"Slopes of {facts.text('name of the slope')} differ from {level} to {level}.")
     if facts.says("group to cover") and facts.says("between differs from within"):
         out.append(f"The pooled coefficient of {_named(facts.text('term that differs'))} mixes two effects, ")
         out[-1] += "one within groups and one between them."

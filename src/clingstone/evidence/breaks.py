@@ -21,6 +21,7 @@ from clingstone.maths.markov import Links
 from clingstone.maths.once import Array, frozen, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
+from clingstone.structure.serial import Series
 
 if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
@@ -31,7 +32,7 @@ TRIM = 0.15  # share of the rows kept on either side of a step (Andrews 1993, Ec
 TIMES = 60  # times looked at, at even numbers of rows
 DRAWS = 999
 HELD = 1e-6  # part of a step's length below which the model holds its level already
-BLOCK = 2_000_000  # numbers of a block of rows
+BLOCK = 500_000  # numbers of a block of rows
 
 
 @dataclass(frozen=True)
@@ -66,8 +67,7 @@ class Break(Plain):
         # No interval: the one for a step at a known time would not know that this time was chosen.
         share = F / (F + fits.design.m - 1)
         scale = float(size[0] / np.sqrt(fits.response.s2[0])) if fits.response.s2[0] > 0 else np.nan
-        unit = series_of(fits.design).unit or "time unit"
-        when = f"{amount(float(times[at[0]]))} {unit}s after the first time"
+        when = _when(series_of(fits.design), float(times[at[0]]))
         caveats = ["The time was chosen as the one that fits best, so the size is on the large side."]
         if not given:
             caveats.append("It takes the rows as independent, so dependence alone can make it reject.")
@@ -104,6 +104,14 @@ class Break(Plain):
             f"A step in the level of {size}, would explain {share} of what the model leaves over (largest "
             f"F = {significant(column(reading.statistic), 3)}, {p_value(column(reading.p))})."
         )
+
+
+def _when(series: Series, time: float) -> str:
+    """ "from 1899 on", as the user wrote the time, or "28 years after the first time" """
+    distinct = series.times[0]
+    if len(series.written) == len(distinct):
+        return f"from {series.written[int(np.searchsorted(distinct, time))]} on"
+    return f"{amount(time)} {series.unit or 'time unit'}s after the first time"
 
 
 @dataclass(frozen=True, eq=False)

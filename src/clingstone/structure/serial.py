@@ -21,6 +21,7 @@ if TYPE_CHECKING:
     import pandas as pd
 
 Rows = npt.NDArray[np.int64]
+WRITTEN = 2000  # distinct times that are kept as text
 WHOLE = "all rows"
 
 
@@ -36,7 +37,8 @@ class Series:
     tick : (n,) whole steps since the first time, or None when the spacing is irregular.
     spacing : judged over all series. gaps : number of missing steps inside series.
     ties : rows that share their series and time with an earlier row.
-    first, last : earliest and latest time, as the user wrote them.
+    first, last : earliest and latest time, as the user wrote them. written : every distinct time so, in
+    order; empty where they are more than WRITTEN.
     """
 
     name: str
@@ -51,6 +53,7 @@ class Series:
     notes: tuple[str, ...] = ()
     first: str = ""
     last: str = ""
+    written: tuple[str, ...] = ()
 
     @property
     @once
@@ -119,7 +122,7 @@ class Series:
     def take(self, rows: npt.NDArray[Any]) -> Series:
         """The same structure on some rows, in their stored order."""
         tick = None if self.tick is None else self.tick[rows]
-        return replace(self, part=self.part.take(rows), elapsed=self.elapsed[rows], tick=tick)
+        return replace(self, part=self.part.take(rows), elapsed=self.elapsed[rows], tick=tick, written=())
 
 
 def build(
@@ -170,23 +173,30 @@ def build(
             f"{count(len(tied), 'row')} share their series and time with another row; they are replicates."
         )
     notes.extend(_grid_notes(name, grid, found, unit, per))
-    return (
-        Series(
-            name=name,
-            part=found,
-            elapsed=frozen(np.asarray((counts - counts.min()) / per, dtype=float)),
-            unit=unit,
-            step=grid.step / per,
-            tick=None if grid.tick is None else frozen(grid.tick),
-            spacing=grid.spacing,
-            gaps=grid.gaps,
-            ties=len(tied),
-            notes=(*clock.notes, *notes),
-            first=clock.show(int(np.argmin(clock.counts))),
-            last=clock.show(int(np.argmax(clock.counts))),
-        ),
-        order,
+    made = Series(
+        name=name,
+        part=found,
+        elapsed=frozen(np.asarray((counts - counts.min()) / per, dtype=float)),
+        unit=unit,
+        step=grid.step / per,
+        tick=None if grid.tick is None else frozen(grid.tick),
+        spacing=grid.spacing,
+        gaps=grid.gaps,
+        ties=len(tied),
+        notes=(*clock.notes, *notes),
+        first=clock.show(int(np.argmin(clock.counts))),
+        last=clock.show(int(np.argmax(clock.counts))),
     )
+    return replace(made, written=_written(made, clock, order)), order
+
+
+def _written(series: Series, clock: Clock, order: Rows) -> tuple[str, ...]:
+    distinct, codes = series.times
+    if len(distinct) > WRITTEN:
+        return ()
+    row = np.zeros(len(distinct), dtype=np.int64)
+    row[codes] = order
+    return tuple(clock.show(int(one)) for one in row)
 
 
 def _line(clock: Clock, part: Partition) -> Rows | None:

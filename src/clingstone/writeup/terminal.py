@@ -81,7 +81,9 @@ def _intervals(results: Results, width: int) -> list[str]:
             lines.append("")
         lines += _block(results, name, shown, width)
     if len(names) > ROWS:
-        lines += ["", *wrapped(f"{len(names) - ROWS} more focus rows stand in the report.", width, "  ")]
+        more = len(names) - ROWS
+        stand = "more focus row stands" if more == 1 else "more focus rows stand"
+        lines += ["", *wrapped(f"{more} {stand} in the report.", width, "  ")]
     if lines:
         key = f"Intervals at {level_percent(results)}; df: degrees of freedom."
         lines += ["", *wrapped(key, width, "  ")]
@@ -142,7 +144,8 @@ def _why(results: Results, width: int) -> list[str]:
 
 def _unsettled(results: Results, width: int) -> list[str]:
     cautions = [with_rows(results, r.sentence, r.rule) for r in results.advice.cautions]
-    if results.advice.mean_in_doubt:
+    told = {r.rule for r in results.advice.cautions} & {"mean-in-doubt", "after-the-repair"}
+    if results.advice.mean_in_doubt and not told:
         cautions.append("The mean itself is in doubt; see the curve and trend checks in the report.")
     return [line for c in cautions for line in wrapped(f"Not settled: {c}", width, "", "  ")]
 
