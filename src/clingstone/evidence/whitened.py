@@ -6,10 +6,12 @@ from functools import partial
 
 import numpy as np
 
+from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.each import each
 from clingstone.covariance.fits import Fits, Node
 from clingstone.design.response import Response
 from clingstone.maths import reml
-from clingstone.maths.once import frozen, kept
+from clingstone.maths.once import Array, frozen, kept
 
 
 def whitened(fits: Fits, node: Node) -> Response:
@@ -19,15 +21,26 @@ def whitened(fits: Fits, node: Node) -> Response:
     row before it, its group and its neighbours say of it), so that each stays with its own row and a spread
     that follows a covariate still does. Raises NotSupported where the algebra cannot whiten rows.
     """
+    if fits.whole is not None:
+        every, b = fits.whole
+        return whitened(every, node).column(b)
     return kept(fits.response, ("whitened", node, fits.run.limits), partial(_whitened, fits, node))
 
 
 def _whitened(fits: Fits, node: Node) -> Response:
     design, response, model, algebra = fits.design, fits.response, fits[node], fits.algebra(node)
-    coef, white = np.empty_like(response.coef), np.empty_like(response.residual)
+    delta = _moved(response, model.theta, algebra)
+    white, left = np.empty_like(response.residual), response.residual - design.Q @ delta
     for b in range(response.B):
-        one, theta = response.column(b), model.theta[:, b]
-        delta = reml.reduced(algebra.gram(theta, one))[0]
-        coef[:, b] = (one.coef + delta)[:, 0]
-        white[:, b] = algebra.whiten(theta, one.residual - design.Q @ delta)[:, 0]
+        white[:, b] = algebra.whiten(model.theta[:, b], left[:, b : b + 1])[:, 0]
+    coef = response.coef + delta
     return Response(design, frozen(coef), frozen(white), frozen(np.einsum("ij,ij->j", white, white)))
+
+
+def _moved(response: Response, theta: Array, algebra: Chosen) -> Array:
+    """(p, B) δ, from ordinary to generalised least squares, each column of y at its own θ (d, B)."""
+    many = each(algebra, response) if response.B > 1 and len(theta) else None
+    if many is not None:
+        return many.grams(theta, np.arange(response.B)).reduced()[0].T
+    found = [reml.reduced(algebra.gram(at, response.column(b)))[0] for b, at in enumerate(theta.T)]
+    return np.hstack(found)
