@@ -23,6 +23,7 @@ ROW_DRAWS = 5e6  # rows × draws in all; fewer draws beyond 25,000 rows
 CHUNK = 4e6  # rows × draws held at a time, 32 MB
 LEVEL = 0.05  # before it is divided among the primary tests
 ACROSS = 1 / 3  # practical range over the map's width of a field whose share is looked for
+VISIT = 0.5  # share of what is left over that runs along time, where rows repeat a visit
 ROUNDS = 3
 SMALLEST, FIRST, LARGEST = 0.001, 0.32, 0.95
 DENSE = 3000  # sites of which a field is drawn by a table of all their distances
@@ -62,6 +63,8 @@ def _entry(fits: Fits, one: Standing, value: float) -> Detectable:
         sites = fits.design.spatial
         reach = in_units(float(f"{ACROSS * sites.extent:.2g}"), sites.unit or "units of place")
         where = f", if it fades over {reach} (a third of the map's width),"
+    if one.structure == "serial" and fits.design.serial is not None and fits.design.serial.repeats:
+        where = ", if half of what the model leaves over is shared by rows of one time,"
     sentence = f"The test for {one.label} would have found {words}{where} in 80 % of such data."
     return Detectable(one.key, name, value, POWER, sentence)
 
@@ -105,6 +108,10 @@ def _groups(part: Partition) -> Drawer:
 
 
 def _series(series: Series) -> Drawer:
+    """A first-order process; under row noise of the same variance where rows share their series and time.
+
+    That share is held, not fitted: where nothing was found the data hardly know it.
+    """
     starts = np.flatnonzero(np.isnan(series.steps))
     place = np.arange(series.part.n) - starts[np.cumsum(np.isnan(series.steps)) - 1]
     by_place = [np.flatnonzero(place == k) for k in range(int(place.max()) + 1)]
@@ -114,6 +121,8 @@ def _series(series: Series) -> Drawer:
         for row in by_place[1:]:
             r = rho ** series.steps[row][:, None]
             Y[row] = r * Y[row - 1] + np.sqrt(1 - r**2) * Y[row]
+        if series.repeats:
+            Y = np.sqrt(VISIT) * Y + np.sqrt(1 - VISIT) * rng.standard_normal(Y.shape)
         return Y
 
     return draw
