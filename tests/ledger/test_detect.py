@@ -60,7 +60,7 @@ def test_rows_of_one_time_are_repeats_not_copies():
     """Half of the variance runs along time: rows of a time correlate ½, rows of the next ρ/2."""
     day = np.repeat(np.arange(20), 2)
     f = make.fits(make.design({}, tick=day), np.zeros(40))
-    assert f.design.serial is not None and f.design.serial.repeats
+    assert f.design.serial.repeats
     Y = _series(f.design.serial)(0.6, np.random.default_rng(3), 40_000)
     found = np.corrcoef(Y)
     assert found[0, 1] == pytest.approx(0.5, abs=0.02)  # 4 standard errors of 0.005
