@@ -230,7 +230,7 @@ class Layered(Pieces):
 
     def white_rows(self, theta: Array, block: Array) -> tuple[Array, Array]:
         """The indicator of any cell, and (n, k) rows, once the noise of rows is whitened."""
-        u, out = self._ones, np.array(block, dtype=float)
+        u, out = self._ones, np.asarray(block, dtype=float)
         if isinstance(self.serial, SerialPiece):
             rho = float(self.serial.rho(self.own(self.serial, theta)))
             return self.serial.links.whiten(rho, u), self.serial.links.whiten(rho, out)

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
     from clingstone.covariance.fits import Fits
 
 TIMES = 8  # times that two series or more share
+STRIP = 128  # series whose correlations with all others are held at once
 OVERLAP = 4  # times that a pair of series must share
 MOST_SERIES = 1_500  # a product of two tables of series × times; beyond, this many at random
 
@@ -148,20 +149,30 @@ def pairs(E: Array) -> tuple[float, float, float, int]:
     """
     held = ~np.isnan(E)
     X, H = np.where(held, E, 0.0), held.astype(float)
-    T = H @ H.T
-    cross, S, square = X @ X.T, X @ H.T, (X * X) @ H.T  # S_ij: sum of i over the times of j
-    with np.errstate(divide="ignore", invalid="ignore"):
-        covariance = cross - S * S.T / T
-        variance = square - S**2 / T
-        r = covariance / np.sqrt(variance * variance.T)
-    upper = np.triu_indices(len(E), 1)
-    r, T = r[upper], T[upper]
-    ok = (T >= OVERLAP) & np.isfinite(r)
-    r, T = r[ok], T[ok]
-    if not len(r):
+    sums, number_of = np.zeros(3), 0
+    for start in range(0, len(E), STRIP):
+        r, T = _correlations(X[start:], H[start:])
+        number_of += len(r)
+        sums += np.sum(np.sqrt(T) * r), np.sum(r), np.sum(np.abs(r))
+    if not number_of:
         return np.nan, np.nan, np.nan, 0
-    cd = float(np.sum(np.sqrt(T) * r) / np.sqrt(len(r)))
-    return cd, float(r.mean()), float(np.abs(r).mean()), len(r)
+    cd, mean, size = sums / (np.sqrt(number_of), number_of, number_of)
+    return float(cd), float(mean), float(size), number_of
+
+
+def _correlations(X: Array, H: Array) -> tuple[Array, Array]:
+    """Correlations of the first series with all after them, and at how many times each.
+
+    X, H (N, T) : values, zero where missing, and whether they are there.
+    """
+    x, h = X[:STRIP], H[:STRIP]
+    T = h @ H.T
+    mine, theirs = x @ H.T, h @ X.T  # sums of i, and of j, over the times of both
+    with np.errstate(divide="ignore", invalid="ignore"):
+        variance = ((x * x) @ H.T - mine**2 / T) * (h @ (X * X).T - theirs**2 / T)
+        r = (x @ X.T - mine * theirs / T) / np.sqrt(variance)
+    ok = (T >= OVERLAP) & np.isfinite(r) & np.triu(np.ones(r.shape, dtype=bool), 1)
+    return r[ok], T[ok]
 
 
 def _whitened(fits: Fits) -> Array:

@@ -17,6 +17,7 @@ from clingstone.evidence.finding import About, Reading, column
 from clingstone.evidence.groups import BY, covariate, level_name, moving, row_level
 from clingstone.evidence.read import Plain, by_f, degenerate
 from clingstone.evidence.rough import inner_models, inner_node
+from clingstone.maths.basis import Basis
 from clingstone.maths.once import Array, kept, once
 from clingstone.maths.partition import Partition
 from clingstone.needs import Family, Needs, NotSupported
@@ -221,18 +222,20 @@ def spread_given(fits: Fits, part: Partition, x: Array, given: frozenset[str]) -
     models = inner_models(fits, given)
     tables = []
     for b in range(response.B):
-        block = np.column_stack([root, x * root, design.Q, response.residual[:, b]])
-        w, *rest = models.white(b, block).T
+        white = models.white(b, np.column_stack([root, x * root, design.Q, response.residual[:, b]]))
+        w, raw = white[:, 0].copy(), part.sums(white[:, 1] ** 2)
         size = part.sums(w * w)
-        u, *rest = (v - w * (part.sums(w * v) / size)[part.codes] for v in rest)
-        raw = part.sums(models.white(b, (x * root)[:, None])[:, 0] ** 2)
+        for j in range(1, white.shape[1]):
+            white[:, j] -= w * (part.sums(w * white[:, j]) / size)[part.codes]
+        u, Q, e = white[:, 1], white[:, 2:-1], white[:, -1]
         c = np.where((c := part.sums(u * u)) > 1e-12 * raw, c, 0.0)
         u = np.where(c[part.codes] > 0, u, 0.0)
-        Q, e = np.column_stack(rest[:-1]), rest[-1]
-        left, size, _ = np.linalg.svd(Q, full_matrices=False)
-        Q = left[:, size > RANK * max(float(size[0]), 1.0)]
+        R = np.linalg.qr(Q, mode="r")
+        _, size, turn = np.linalg.svd(R, full_matrices=False)
+        some = size > RANK * max(float(size[0]), 1.0)
+        Q = Basis.of(Q @ (turn[some].T / size[some])).Q
         e = e - Q @ (Q.T @ e)
-        TQ, TE = part.sums(u[:, None] * Q), part.sums(u * e)[:, None]
+        TQ, TE = part.products(u, Q), part.sums(u * e)[:, None]
         tables.append(compared(part, "the predictor", c, TQ, TE, np.array([e @ e]), Q.shape[1]))
     first = tables[0]
     if len(tables) == 1:

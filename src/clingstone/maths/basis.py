@@ -24,7 +24,8 @@ class Basis:
     ----------
     Q : (n, p), orthonormal columns.
     R : (p, p), so that the design's columns are Q @ R. Upper triangular up to a column order.
-    extends : the basis whose columns are the first of these, where it was made by adding to one.
+    extends : the basis whose columns are the first of these, where it was made by adding to one, at once
+        or in steps; those between are let go.
     """
 
     Q: Array
@@ -86,16 +87,16 @@ class Basis:
         """Basis of [X, columns], the old columns first and unchanged. Columns (n, k)."""
         return self.beside(Basis.of(self.project(columns)), self.Q.T @ columns)
 
-    def beside(self, rest: Basis, cross: Array | float = 0.0) -> Basis:
+    def beside(self, rest: Basis, cross: Array) -> Basis:
         """Basis of [X, Q cross + columns of rest], where rest is orthogonal to this basis. cross : (p, k)."""
         p, k = self.p, rest.p
         R = np.zeros((p + k, p + k))
         R[:p, :p], R[:p, p:], R[p:, p:] = self.R, cross, rest.R
-        return Basis(frozen(np.hstack([self.Q, rest.Q])), frozen(R), self)
+        return Basis(frozen(np.hstack([self.Q, rest.Q])), frozen(R), self.extends or self)
 
     def holds(self, inner: Basis) -> bool:
         """Whether the first columns of Q are those of another basis, to which columns were added."""
-        return self is inner or (self.extends is not None and self.extends.holds(inner))
+        return inner in (self, self.extends)
 
 
 def lengths(Y: Array) -> Array:

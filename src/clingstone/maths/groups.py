@@ -140,7 +140,10 @@ def whiten(part: Partition, u: Array, block: Array, ratio: float) -> tuple[Array
     c = part.sums(u * u)
     shrink = 1 / np.sqrt(1 + ratio * c)
     back = ((1 - shrink) / c)[:, None] * part.products(u, block)
-    return u * shrink[part.codes], block - u[:, None] * back[part.codes]
+    out = back[part.codes]
+    out *= -u[:, None]
+    out += block
+    return u * shrink[part.codes], out
 
 
 @dataclass(frozen=True, eq=False)

@@ -42,8 +42,9 @@ def once(method: F) -> F:
 def lately(method: F) -> F:
     """As :func:`once`, for a value as long as the table (its first argument has ``n`` rows).
 
-    Beyond ``FEW_ROWS`` only the latest value is kept: of a table of a million rows one such value is held
-    at a time, and not one for every argument. The latest is let go before the next is made.
+    Beyond ``FEW_ROWS`` only the latest value of all such methods is kept: of a table of a million rows one
+    such value is held at a time, and not one for every method and argument. It is let go before the next is
+    made.
     """
     name, always = method.__qualname__, once(method)
 
@@ -52,7 +53,7 @@ def lately(method: F) -> F:
         if self.n <= FEW_ROWS:
             return always(self, *args, **kwargs)
         store: dict[Any, Any] = self.__dict__.setdefault("_once", {})
-        place, key = ("latest", name), _keys(args, kwargs)
+        place, key = "latest", (name, *_keys(args, kwargs))
         if store.get(place, (None,))[0] != key:
             if place in store and _lingers(store.pop(place)[1]):
                 gc.collect()  # a design and its error models know each other, so only this lets them go

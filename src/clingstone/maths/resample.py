@@ -121,7 +121,10 @@ def every_sign(G: int) -> Array:
 
 def random_signs(rng: np.random.Generator, d: int, G: int) -> Array:
     """(d, G) independent signs."""
-    return np.asarray(rng.integers(0, 2, (d, G), dtype=np.int8) * 2.0 - 1.0, dtype=float)
+    signs = rng.integers(0, 2, (d, G), dtype=np.int8)
+    signs *= 2
+    signs -= 1
+    return signs.astype(float)
 
 
 def random_webb(rng: np.random.Generator, d: int, G: int) -> Array:
