@@ -64,6 +64,24 @@ def test_row_noise_is_found_where_it_is_and_not_where_it_is_not():
     assert float(items(clean)["likelihood ratio of row noise"].split()[0]) < 2.71
 
 
+def test_each_column_of_a_batch_has_the_process_it_asks_for():
+    """Row noise in some columns, the first and the last without: each as if it were alone."""
+    rng = np.random.default_rng(4)
+    n = 150
+    of = design(np.column_stack([np.ones(n), rng.normal(size=n)]), tick=np.arange(n))
+    Y = ar1(n, 0.9, 6, rng) + rng.normal(size=(n, 6)) * [0, 1, 0, 1, 1, 0]
+    ready = remedy("car1").prepare(of, None)
+    many = ready.fit(fits(of, Y))
+    kinds = set()
+    for b in range(6):
+        alone = fits(of, Y[:, b])
+        one = ready.fit(alone)
+        kinds.add(ready.choose(alone.response).process.key)
+        assert many.se[:, b] == pytest.approx(one.se[:, 0], rel=1e-5)
+        assert many.df[:, b] == pytest.approx(one.df[:, 0], rel=1e-3)
+    assert len(kinds) == 2
+
+
 def test_replicates_of_a_visit_are_carried_and_equal_a_dense_fit():
     rng = np.random.default_rng(5)
     visit = np.sort(rng.integers(0, 30, 60))

@@ -3,8 +3,8 @@
 from __future__ import annotations
 
 from abc import ABC, abstractmethod
-from collections.abc import Mapping
-from dataclasses import dataclass, field
+from collections.abc import Mapping, Sequence
+from dataclasses import dataclass, field, replace
 from typing import TYPE_CHECKING, ClassVar, Literal
 
 import numpy as np
@@ -35,17 +35,21 @@ SIMPLER = 4.0  # AICc by which another order must beat AR(1)
 
 @dataclass(frozen=True, eq=False)
 class Choice:
-    """The process chosen for a response, and the words of the choice."""
+    """The process chosen for a response, and the words of the choice.
+
+    start : an optimum under row noise, where another column's search may start; None where there is none.
+    """
 
     process: Process
     found: Optimum
     items: tuple[tuple[str, str], ...] = ()
     notes: tuple[str, ...] = ()
+    start: Optimum | None = None
 
 
 @dataclass(frozen=True, eq=False, kw_only=True)
 class ProcessReady(FittedReady, ABC):
-    """GLS under a process that is chosen on the first column of y and fitted to each."""
+    """GLS under a process that is chosen on the data and fitted to each column of y."""
 
     @abstractmethod
     def choose(self, response: Response) -> Choice:
@@ -59,17 +63,19 @@ class ProcessReady(FittedReady, ABC):
     @abstractmethod
     def sources(self) -> str: ...
 
+    @abstractmethod
+    def chosen(self, columns: Sequence[Response]) -> list[Choice]:
+        """The process of every column of y."""
+
     def fit(self, fits: Fits) -> Estimates:
         columns = apart(fits.response)
-        first = self.choose(columns[0])
-        found = [first.found]
-        found += [search(first.process, one, first.found) for one in columns[1:]]
+        choices = self.chosen(columns)
         return self.estimates(
-            [self._fitted(first.process, at, one) for at, one in zip(found, columns, strict=True)],
+            [self._fitted(c.process, c.found, one) for c, one in zip(choices, columns, strict=True)],
             fits.run.settings.confidence,
-            np.array([bool(one.at_bound.any()) for one in found]),
-            np.array([one.converged for one in found]),
-            first.notes,
+            np.array([bool(c.found.at_bound.any()) for c in choices]),
+            np.array([c.found.converged for c in choices]),
+            choices[0].notes,
         )
 
     def _fitted(self, process: Process, found: Optimum, y: Response) -> Column:
@@ -153,11 +159,20 @@ class FadingReady(ProcessReady):
 
     noise: Literal["auto", "yes", "no"]
 
-    def choose(self, response: Response) -> Choice:
+    def chosen(self, columns: Sequence[Response]) -> list[Choice]:
+        """Each asks for row noise or not; its search starts from the first that found some."""
+        out: list[Choice] = []
+        for one in columns:
+            near = next((c.start for c in out if c.start is not None and not c.start.at_bound.any()), None)
+            out.append(self.choose(one, near))
+        return out
+
+    def choose(self, response: Response, near: Optimum | None = None) -> Choice:
         series = _series(self.design)
         if series.ties or self.noise == "yes":
             process: Process = Fading(self.design, noise=True)
-            return Choice(process, search(process, response))
+            found = search(process, response, near)
+            return Choice(process, found, start=found)
         plain: Process = Fading(self.design)
         found = search(plain, response)
         if self.noise == "no":
@@ -166,14 +181,14 @@ class FadingReady(ProcessReady):
             note = f"Row noise was not looked for: the table has more than {NOISE_ROWS:,} rows."
             return Choice(plain, found, notes=(note,))
         noisy: Process = Fading(self.design, noise=True)
-        with_noise = search(noisy, response)
+        with_noise = search(noisy, response, near)
         gain = found.value - with_noise.value
         items = (
             ("likelihood ratio of row noise", f"{max(gain, 0.0):.2f} (asked for above {NOISE_ASKED:.2f})"),
         )
         if gain > NOISE_ASKED and not with_noise.at_bound[1]:
-            return Choice(noisy, with_noise, items)
-        return Choice(plain, found, items)
+            return Choice(noisy, with_noise, items, start=with_noise)
+        return Choice(plain, found, items, start=with_noise)
 
     def words(self, choice: Choice) -> str:
         base = "correlation that fades with elapsed time (continuous-time AR(1))"
@@ -244,6 +259,12 @@ class ArmaReady(ProcessReady):
         for p, q in self.orders:
             search_together(ArmaErrors(self.design, p, q), fits)
         return super().fit(fits)
+
+    def chosen(self, columns: Sequence[Response]) -> list[Choice]:
+        """The first chooses the order for all."""
+        first = self.choose(columns[0])
+        rest = [search(first.process, one, first.found) for one in columns[1:]]
+        return [first, *(replace(first, found=one) for one in rest)]
 
     def choose(self, response: Response) -> Choice:
         m = self.design.m
