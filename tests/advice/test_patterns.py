@@ -10,7 +10,7 @@ from scipy.signal import lfilter
 
 from clingstone.advice.mean import missing_part
 from clingstone.covariance.fits import Fits
-from clingstone.design.derived import balanced, onto
+from clingstone.design.derived import onto
 from clingstone.evidence import TESTS, gather
 from clingstone.evidence.breaks import steps, with_step
 from clingstone.evidence.season import with_season
@@ -99,9 +99,50 @@ def test_a_pattern_leaves_the_constant_what_it_was():
         assert np.allclose(extra.sum(axis=0), 0.0, atol=1e-9)
 
 
-def test_balanced_leaves_a_model_without_a_constant_alone():
-    design = make.design({"x": np.arange(6.0)})
-    slope = replace(design, basis=type(design.basis).of(np.arange(1.0, 7.0)[:, None]))
-    columns = np.eye(6)[:, :2]
-    assert np.array_equal(balanced(slope, columns), columns)
-    assert np.allclose(balanced(design, columns).sum(axis=0), 0.0)
+def curved(seed: int, season: float) -> Fits:
+    """Nine years of months: a curve in x, with a season besides or without, over independent errors."""
+    rng = np.random.default_rng([5, seed])
+    t, x = np.arange(MONTHS), rng.standard_normal(MONTHS)
+    y = 2.0 + 0.3 * x + 0.8 * x**2 + season * np.cos(2 * np.pi * (t - 2) / 12) + rng.standard_normal(MONTHS)
+    made = make.design({"x": x}, tick=t)
+    return make.fits(replace(made, serial=replace(made.serial, unit="month")), y)
+
+
+def test_a_second_part_that_shows_with_the_first_in_is_repaired_as_well():
+    found, _short, refits, advice = walk(curved(0, season=1.5))
+    assert found.missing.what == "curve in x, and with it a season of the year,"
+    assert "the second part, once the first is in" in found.missing.sign
+    assert (advice.state, advice.remedy, advice.at) == ("mean first", "repaired-mean", "x + year")
+    assert advice.repair.goes == ("day",)
+    assert advice.structures == frozenset()
+    assert advice.headline.startswith("A curve in x, and with it a season of the year, seems to be missing")
+    repaired = next(r for r in refits if r.remedy == "repaired-mean")
+    assert "curve in x, and with it a season of the year" in repaired.name
+    assert not repaired.name.endswith(",")
+
+
+def test_one_part_is_not_told_as_two():
+    found, _short, _refits, _advice = walk(curved(1, season=0.0))
+    assert found.missing.what == "curve in x"
+
+
+def test_a_predictor_that_follows_the_season_is_adjusted_for_it():
+    """The repaired row is generalised least squares on [1, x, months], at the AR(1) it fitted."""
+    fits = monthly(7, 0.5, season=2.0)
+    t = np.arange(MONTHS)
+    x = np.cos(2 * np.pi * (t - 2) / 12) + 0.5 * np.random.default_rng(9).standard_normal(MONTHS)
+    made = make.design({"x": x}, tick=t)
+    fits = make.fits(replace(made, serial=replace(made.serial, unit="month")), fits.response.residual[:, 0])
+    _found, _short, refits, advice = walk(fits)
+    assert (advice.remedy, advice.at) == ("repaired-mean", "year")
+    months = (t[:, None] % 12 == np.arange(1, 12)).astype(float)
+    X = np.column_stack([np.ones(MONTHS), x, months])
+    rho = 0.0
+    if advice.repair.remedy == "ar1":
+        rho = {q.name: q.estimate for q in advice.repair.parameters if q.key == "serial"}["ρ"]
+    W = np.linalg.inv(rho ** np.abs(np.subtract.outer(t, t)))
+    y = fits.response.residual[:, 0] + fits.design.Q @ fits.response.coef[:, 0]
+    slope = np.linalg.solve(X.T @ W @ X, X.T @ W @ y)[1]
+    row = next(r for r in refits if r.remedy == "repaired-mean").intervals
+    told = next(i for i in row if i.term == "x").estimate
+    assert told == pytest.approx(slope, rel=1e-6)

@@ -49,15 +49,14 @@ AGAIN = (
 class Missing:
     """A part of the mean that seems to be missing, and the structures with it in the model.
 
-    what : words, such as "curve in dose". shows : it shows under the fitted dependence.
-    pattern : a season that does: it comes first also where dependence stays. A step comes first only
-    where the dependence goes with it, because a slow process under noise steps as well.
-    goes : structures that were present and are no longer seen, half of their share or more gone.
-    stays : the other ones that were present. appears : those seen only with the part in.
-    doubt : these data cannot tell the mean from dependence, or what is no longer seen could still
-    widen a focus interval. p : of the test that saw it, adjusted where it is. sign, left : how clearly
-    the part shows, and what is left of the
-    dependence, as half sentences. after : the ledger of the model with the part in; evidence and
+    what : words, such as "curve in dose"; of two parts at once both. shows : it shows under the fitted
+    dependence. pattern : a season that does: it comes first also where dependence stays. A step comes
+    first only where the dependence goes with it, because a slow process under noise steps as well. goes :
+    structures that were present and are no longer seen, half of their share or more gone. stays : the
+    other ones that were present. appears : those seen only with the part in. doubt : these data cannot
+    tell the mean from dependence, or what is no longer seen could still widen a focus interval. p : of
+    the test that saw it, adjusted where it is. sign, left : how clearly the part shows, and what is left
+    of the dependence, as half sentences. after : the ledger of the model with the part in; evidence and
     again : what it was judged by, live.
     """
 
@@ -82,15 +81,14 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     """The most telling missing part of the mean, or None.
 
     A curve in a covariate, a season of the calendar or a step must show under the fitted dependence;
-    the clearest counts. A trend or a surface, which has next to no power there, is looked at when it
-    shows in the ordinary fit and its structure is present; it counts only when it takes at least half
-    of that structure away.
+    the clearest counts, and with it a second one that shows once the first is in. A trend or a surface,
+    which has next to no power there, is looked at when it shows in the ordinary fit and its structure is
+    present; it counts only when it takes at least half of that structure away.
     """
-    shown = [f for f in (_curve(evidence, fits.design), *_patterns(evidence, fits.design)) if f is not None]
-    for finding in sorted(shown, key=_adjusted):
+    for finding in _shown(evidence, fits.design):
         found = _try(fits, finding, ledger, shows=True)
         if found is not None and (found.shows or found.doubt):
-            return found
+            return _second(fits, finding, found, ledger) or found
     for finding in _smooth(evidence, ledger, fits.design):
         found = _try(fits, finding, ledger, shows=False)
         if found is not None and found.doubt:
@@ -98,11 +96,44 @@ def missing_part(fits: Fits, evidence: Evidence, ledger: Ledger) -> Missing | No
     return None
 
 
+def _second(fits: Fits, finding: Finding, first: Missing, ledger: Ledger) -> Missing | None:
+    """The first part and another of another kind or covariate that shows with it in; None where none does.
+
+    It is the second look at these data, so each p counts twice. A third is not looked for.
+    """
+    if not first.shows or first.again is None:
+        return None
+    again = first.again
+    evidence = gather(again, tuple(t for t in TESTS if t.id in (CURVE, *PATTERNS)))
+    for other in _shown(evidence, again.design, looks=2):
+        if (other.test, other.about) == (finding.test, finding.about):
+            continue
+        found = _try(again, other, ledger, shows=True)
+        if found is not None and found.shows:
+            return replace(
+                found,
+                what=f"{first.what.rstrip(',')}, and with it a {found.what.rstrip(',')},",
+                test=finding.test if other.test == CURVE else other.test,
+                about=" + ".join(dict.fromkeys(key for key in (first.about, found.about) if key)),
+                pattern=first.pattern or found.pattern,
+                p=first.p,
+                sign=f"{first.sign}; the second part, once the first is in, {percent(other.estimate)} of the "
+                f"rest, {p_value(other.p)}",
+            )
+    return None
+
+
+def _shown(evidence: Evidence, design: Design, looks: int = 1) -> list[Finding]:
+    """Curves, seasons and steps that show, the clearest first. looks : by which every p is multiplied."""
+    curve = _curve(evidence, design, looks)
+    return sorted([*([] if curve is None else [curve]), *_patterns(evidence, design, looks)], key=_adjusted)
+
+
 def _adjusted(finding: Finding) -> float:
     return finding.p if finding.p_adjusted is None else finding.p_adjusted
 
 
-def _curve(evidence: Evidence, design: Design) -> Finding | None:
+def _curve(evidence: Evidence, design: Design, looks: int) -> Finding | None:
     """The clearest curve: given the dependence where it was so tested, Holm over covariates."""
     found = [f for f in evidence.of("mean") if f.test == CURVE and np.isfinite(f.p)]
     found = [f for f in found if smooth_in(design, f.about) is None]
@@ -112,14 +143,14 @@ def _curve(evidence: Evidence, design: Design) -> Finding | None:
         return None
     best = min(found, key=lambda f: f.p)
     p = _adjusted(best) if best.p_adjusted is not None else min(1.0, best.p * len(found))
-    return best if p < LEVEL else None
+    return best if looks * p < LEVEL else None
 
 
-def _patterns(evidence: Evidence, design: Design) -> list[Finding]:
+def _patterns(evidence: Evidence, design: Design, looks: int) -> list[Finding]:
     """Seasons and steps that are clear given the dependence and hold a good share of what is left over."""
     found = [f for f in evidence.of("mean") if f.test in PATTERNS and f.given and np.isfinite(f.p)]
     found = [f for f in found if f.test != "season" or _fixed_season(f, design)]
-    return [f for f in found if _clear(f, f.p * len(found), evidence)]
+    return [f for f in found if _clear(f, looks * f.p * len(found), evidence)]
 
 
 def _clear(finding: Finding, p: float, evidence: Evidence) -> bool:
