@@ -248,3 +248,22 @@ def test_take_keeps_some_rows() -> None:
     part = found.take(np.array([0, 2, 3]))
     assert part.steps[1:].tolist() == [2, 1]
     assert (part.first, part.last, part.unit) == (found.first, found.last, found.unit)
+
+
+@pytest.mark.parametrize("lag", [1, 2, 5, 8, 9, 12])
+def test_pairs_at_a_lag_are_those_of_a_loop(lag: int) -> None:
+    rng = np.random.default_rng(lag)
+    kept = rng.permutation(6 * 25)[:138]
+    frame = pd.DataFrame({"g": kept // 25, "t": kept % 25})
+    made, _ = build("t", frame.t, group.cells("g", frame.g))
+    assert made.tick is not None
+    codes, tick = made.part.codes, made.tick
+    by_hand = [
+        (i, j)
+        for i in range(len(tick))
+        for j in range(i)
+        if codes[i] == codes[j] and tick[i] - tick[j] == lag
+    ]
+    assert sorted(zip(*(rows.tolist() for rows in made.pairs(lag)), strict=True)) == sorted(
+        (j, i) for i, j in by_hand
+    )

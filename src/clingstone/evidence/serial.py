@@ -23,7 +23,7 @@ from clingstone.evidence.read import Plain, arcsine, direction, normal_quantile,
 from clingstone.evidence.short import half_life, short_series, told_apart
 from clingstone.evidence.traces import traces
 from clingstone.maths.forms import Form, differences, graph, lagged
-from clingstone.maths.once import Array, kept, once
+from clingstone.maths.once import Array, kept, lately, once
 from clingstone.maths.partition import Partition
 from clingstone.maths.ratio import Law
 from clingstone.needs import Family, Limits, Needs, NotSupported
@@ -54,7 +54,7 @@ def step_words(series: Series, lag: int = 1) -> str:
     return f"one {unit} apart" if lag == 1 else f"{lag} {unit}s apart"
 
 
-@once
+@lately
 def form_of(design: Design, kind: str) -> Form:
     """ "differences" (Durbin–Watson), or "lag:k" with e'Se = Σ e_t e_{t−k}, within series only."""
     lag = 1 if kind == "differences" else int(kind.split(":")[1])

@@ -23,6 +23,7 @@ if TYPE_CHECKING:
 Rows = npt.NDArray[np.int64]
 WRITTEN = 2000  # distinct times that are kept as text
 WHOLE = "all rows"
+NEAR = 8  # lags of which pairs are found by looking ahead row by row
 
 
 @dataclass(frozen=True, eq=False)
@@ -88,7 +89,6 @@ class Series:
         """Whether rows share their series and time: they are repeats of one visit."""
         return bool(np.any(self.steps == 0))
 
-    @once
     def pairs(self, lag: int) -> tuple[Rows, Rows]:
         """Rows (earlier, later) of one series exactly ``lag`` base steps apart. Needs ``tick``.
 
@@ -99,6 +99,13 @@ class Series:
         # Series are laid end to end on one integer line, far enough apart never to meet.
         span = int(self.tick.max() - self.tick.min()) + lag + 1
         place = self.part.codes.astype(np.int64) * span + (self.tick - self.tick.min())
+        if lag <= NEAR and not self.repeats:
+            partner = np.full(len(place), -1)  # which is at most so many rows ahead
+            for ahead in range(1, min(lag, len(place) - 1) + 1):
+                rows = np.flatnonzero(place[ahead:] - place[:-ahead] == lag)
+                partner[rows] = rows + ahead
+            earlier = np.flatnonzero(partner >= 0)
+            return earlier, partner[earlier]
         begin = np.searchsorted(place, place + lag)
         found = np.searchsorted(place, place + lag, side="right") - begin
         earlier = np.repeat(np.arange(len(place)), found)
