@@ -41,8 +41,10 @@ def kernel(distance: Array, reach: float | Array, smoothness: float = 0.5) -> Ar
 def kernel_slope(distance: Array, reach: float, smoothness: float = 0.5) -> Array:
     """Derivative of :func:`kernel` in ln φ."""
     if smoothness == 0.5:
-        x = distance * (1 / reach)
-        return np.asarray(x * np.exp(-x))
+        out = distance * (-1 / reach)
+        x = np.exp(out)
+        x *= out
+        return np.asarray(np.negative(x, out=x))
     x = distance * (np.sqrt(2 * smoothness) / reach)
     if smoothness == 1.5:
         return np.asarray(x * x * np.exp(-x))
