@@ -1,5 +1,7 @@
 """Designs, responses and what is derived from them, each against an obvious twin."""
 
+from dataclasses import replace
+
 import numpy as np
 import pytest
 
@@ -90,6 +92,35 @@ def test_extend_keeps_old_columns_and_leaves_out_spanned_ones():
     assert wide.contrasts[0].weights == (0.0, 1.0, -1.0, 0.0)
     with pytest.raises(NotSupported, match="already spans"):
         extend(design, "twice x", 2 * X[:, 1])
+
+
+@pytest.mark.parametrize("weighted", [False, True])
+def test_other_coefficients_are_adjusted_for_added_columns(weighted):
+    """As least squares on all columns gives them; x beside a curve in x is the line through the curve."""
+    design, X, y, _, root = small(weighted)
+    root = np.ones(len(X)) if root is None else root
+    y = y[:, 0] - 1e6
+    x, z = X[:, 1], X[:, 2]
+    S = np.column_stack([np.sin(3 * x) + 0.5 * z, x**3])
+    wide = extend(design, "curve", S, ("x",))
+    b = wide.basis.coefficients(onto(Response.of(design, y), wide).coef)[:, 0]
+    full = np.column_stack([X, S]) * root[:, None]
+    plain = np.linalg.lstsq(full, y * root, rcond=None)[0]
+    line = np.column_stack([np.ones(len(x)), x]) * root[:, None]
+    curve = (plain[0] + plain[1] * x + S @ plain[3:]) * root
+    np.testing.assert_allclose(b[2:], plain[2:], rtol=1e-9)
+    np.testing.assert_allclose(b[:2], np.linalg.lstsq(line, curve, rcond=None)[0], rtol=1e-9)
+
+
+def test_units_of_a_variable_do_not_hide_it_from_its_curve():
+    design, X, *_ = small()
+    S = np.column_stack([np.sin(3 * X[:, 1])])
+    wide = extend(design, "curve", S, ("x",))
+    extra = (wide.Q @ wide.basis.R)[:, design.p :]
+    np.testing.assert_allclose(np.column_stack([np.ones(len(X)), X[:, 1]]).T @ extra, 0.0, atol=1e-9)
+    tiny = replace(design, basis=type(design.basis).of(X * np.array([1.0, 1e-12, 1e9])))
+    again = extend(tiny, "curve", S, ("x",))
+    np.testing.assert_allclose((again.Q @ again.basis.R)[:, design.p :], extra, atol=1e-9)
 
 
 @pytest.mark.parametrize("weighted", [False, True])

@@ -16,8 +16,12 @@ from clingstone.maths.partition import Partition
 from clingstone.needs import NotSupported
 
 
-def extend(design: Design, name: str, columns: Array) -> Design:
+def extend(design: Design, name: str, columns: Array, variables: Sequence[str] = ()) -> Design:
     """The design with further columns (n, k), on the user's scale, as one more term.
+
+    They are taken less what the constant and the terms in one of ``variables`` alone explain of them. Those
+    coefficients so keep a meaning of their own: the constant is not that of one month, the slope of x beside
+    a curve in x is that of the line through the curve. All others are adjusted for the columns.
 
     Columns that the design already spans are left out; NotSupported if none is left.
     """
@@ -27,17 +31,18 @@ def extend(design: Design, name: str, columns: Array) -> Design:
         columns = columns * design.root[:, None]
     rest = design.basis.project(columns)
     size = lengths(columns)
-    some = lengths(rest) > 1e-9 * np.where(size == 0, 1.0, size)
-    rest = rest if some.all() else rest[:, some]
-    if not rest.shape[1]:
+    keep = np.flatnonzero(lengths(rest) > 1e-9 * np.where(size == 0, 1.0, size))
+    if not len(keep):
         raise NotSupported(f"the model already spans {name}")
     try:
-        new = Basis.of(rest)
+        new = Basis.of(rest[:, keep])
     except ValueError:  # some columns hang on others
-        drop = aliased(rest)
-        new = Basis.of(np.delete(rest, drop, axis=1))
+        keep = np.delete(keep, aliased(rest[:, keep]))
+        new = Basis.of(rest[:, keep])
     p, k = design.p, new.p
-    basis = design.basis.beside(new)
+    cross = design.Q.T @ columns[:, keep]
+    own = _own(design, variables)
+    basis = design.basis.beside(new, cross - own @ np.linalg.lstsq(own, cross)[0])
     names = tuple(f"{name} {j + 1}" for j in range(k)) if k > 1 else (name,)
     term = Term(name, tuple(range(p, p + k)), "numeric")
     pad = (0.0,) * k
@@ -50,13 +55,15 @@ def extend(design: Design, name: str, columns: Array) -> Design:
     )
 
 
-def balanced(design: Design, columns: Array) -> Array:
-    """Columns (n, k) less their means where the model holds a constant, which then keeps its meaning."""
-    columns = columns[:, None] if columns.ndim == 1 else columns
-    one = np.ones((design.n, 1)) if design.root is None else design.root[:, None]
-    rest = design.basis.project(one)
-    held = np.linalg.norm(rest) <= 1e-9 * np.linalg.norm(one)
-    return np.asarray(columns - columns.mean(axis=0) if held else columns)
+def _own(design: Design, variables: Sequence[str]) -> Array:
+    """(p, q) unit columns in Q: the constant, where it is spanned, and the terms in one variable alone."""
+    alone = [t for t in design.terms if len(t.variables) == 1 and t.variables[0] in variables]
+    one = np.ones(design.n) if design.root is None else design.root
+    held = design.Q.T @ one
+    spanned = held @ held >= (1 - 1e-12) * (one @ one)
+    own = design.basis.R[:, [j for t in alone for j in t.columns]]
+    own = np.column_stack([*([held] if spanned else []), own])
+    return np.asarray(own / lengths(own))
 
 
 def absorb(design: Design, part: Partition) -> tuple[Design, tuple[str, ...]]:

@@ -10,7 +10,7 @@ import numpy.typing as npt
 
 from clingstone.covariance.algebras import Layered
 from clingstone.covariance.pieces import SerialPiece
-from clingstone.design.derived import balanced, extend
+from clingstone.design.derived import extend
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import amount, number, p_value, percent, significant
@@ -177,8 +177,7 @@ def with_step(fits: Fits, given: frozenset[str] = frozenset()) -> Design:
     F = _f(_moments(fits, given))[0][:, 0]
     at = steps(fits.design).times[int(np.argmax(np.nan_to_num(F)))]
     series = series_of(fits.design)
-    step = balanced(fits.design, (series.elapsed >= at).astype(float))
-    return extend(fits.design, f"step in {series.name}", step)
+    return extend(fits.design, f"step in {series.name}", (series.elapsed >= at).astype(float))
 
 
 class _Moments(NamedTuple):

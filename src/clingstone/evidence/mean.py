@@ -80,15 +80,16 @@ def extension(design: Design, test: str, about: str) -> Design:
     """
     if test == "functional-form":
         x = np.asarray(design.covariates[about], dtype=float)
-        return extend(design, f"curve in {about}", np.column_stack([x, natural_spline(x, KNOTS)]))
+        return extend(design, f"curve in {about}", np.column_stack([x, natural_spline(x, KNOTS)]), (about,))
     if test == "trend":
         assert design.serial is not None
         t = design.serial.elapsed
-        return extend(design, f"trend in {design.serial.name}", np.column_stack([t, _bend(t)]))
+        name = design.serial.name
+        return extend(design, f"trend in {name}", np.column_stack([t, _bend(t)]), (name,))
     assert design.spatial is not None
     x, y = plane(design.spatial)[design.spatial.part.codes].T
     columns = [x, y] if about == "linear" else [x, y, x * x, x * y, y * y]
-    return extend(design, f"{about} surface", np.column_stack(columns))
+    return extend(design, f"{about} surface", np.column_stack(columns), design.spatial.names)
 
 
 def _bend(t: Array) -> Array:

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 import numpy as np
 from scipy import special
 
-from clingstone.design.derived import balanced, extend, onto
+from clingstone.design.derived import extend, onto
 from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.display import (
@@ -81,11 +81,11 @@ def with_season(design: Design, name: str) -> Design:
     if abs(period - round(period)) < 1e-9 and period <= EACH_STEP:
         at = series.tick % round(period)
         levels = (at[:, None] == np.arange(1, round(period))).astype(float)
-        return extend(design, title, balanced(design, levels))
+        return extend(design, title, levels)
     angle = 2 * np.pi * series.tick / period
     waves = range(1, min(WAVES, int((period - 1e-9) // 2)) + 1)
     columns = np.column_stack([f(j * angle) for j in waves for f in (np.cos, np.sin)])
-    return extend(design, title, balanced(design, columns))
+    return extend(design, title, columns)
 
 
 @dataclass(frozen=True)
