@@ -63,6 +63,27 @@ def test_scores_equal_the_dense_formulas() -> None:
     )
 
 
+@pytest.mark.parametrize(("angle", "scale"), [(0.4, 1000.0), (2.0, 0.01), (5.1, 1.0)])
+def test_motions_units_and_order_of_rows_change_no_score_and_no_site(angle: float, scale: float) -> None:
+    rng = np.random.default_rng(11)
+    xy, x = rng.uniform(size=(60, 2)), rng.standard_normal(60)
+    y = x + 2 * field(xy, 0.2, rng, 1)[:, 0] + 0.3 * rng.standard_normal(60)
+    turn = rng.permutation(60)
+    R = np.array([[np.cos(angle), -np.sin(angle)], [np.sin(angle), np.cos(angle)]])
+    moved = scale * (xy @ R.T) + 5
+    one = fits(design(x, xy=xy), y)
+    two = fits(design(x[turn], xy=moved, site=turn, neighbours=(knn(moved, 4),)), 7 * y[turn] - 3)
+    for kind in KINDS:
+        test = Lagrange(kind)  # type: ignore[arg-type]
+        assert test.read(two, NEAR).statistic[0] == pytest.approx(test.read(one, NEAR).statistic[0], rel=1e-8)
+    assert adjusted(at_sites(two.response), NEAR.key) == pytest.approx(
+        adjusted(at_sites(one.response), NEAR.key), rel=1e-6
+    )
+    first, second = Local().read(one, NEAR), Local().read(two, NEAR)
+    assert second.statistic[0] == first.statistic[0]
+    assert sorted(int(turn[r]) for r in second.rows) == sorted(first.rows)
+
+
 def test_sizes_and_what_each_score_answers() -> None:
     rng = np.random.default_rng(2)
     xy, B, S = rng.uniform(size=(144, 2)), 2000, 144
