@@ -22,11 +22,13 @@ import plain
 from clingstone import cli
 from clingstone.cli import screen
 from clingstone.demo import DEMOS
+from clingstone.examination import settings_of
 from clingstone.needs import InputError, NotSupported
 from clingstone.options import field_help, in_shell, settings_options
 from clingstone.results import from_json, to_json
 from clingstone.run import Settings
 from clingstone.summary import CaseSummary
+from tests.intake.test_job import FULL
 
 
 class Verbs:
@@ -111,46 +113,20 @@ def test_left_alone_the_options_are_the_defaults_of_settings(verbs: Verbs, run: 
 
 def test_every_option_reaches_its_setting(verbs: Verbs, run: Run) -> None:
     status, _, err = run(
-        "examine a.csv --model 'y ~ x' --residual e --sheet readings --wide bp --group judge "
-        "--group wine --time t --series s "
+        "examine a.csv --model 'y ~ x + C(arm) + log(\"odd\")' --residual e --sheet readings --wide bp "
+        "--wide hr --group judge --group wine --time t --series s "
         "--coords lon lat --lonlat --neighbours knn:6 --weights w --weights-kind frequency "
-        "--focus x --focus z --contrasts 'late − early: visit[late]=1, visit[early]=-1' "
-        "--contrasts 'half: x=0.5' --means visit --unadjusted "
+        "--focus x --focus 'arm: late' --contrasts 'late − early: visit[late]=1, visit[early]=-1' "
+        "--contrasts 'half \"x\": x=0.5' --means visit --unadjusted "
         "--assigned arm=clinic --assigned 'dose=ward within clinic' --sampled school "
-        "--missing own-group --ties mean --confidence 0.9 --alternative greater --material 0.9 1.2 "
+        "--missing own-group --ties replicate --confidence 0.9 --alternative greater --material 0.9 1.2 "
         "--rehearsal 400 --seed 7"
     )
     assert (status, err) == (0, "")
     arguments = verbs.calls[0][1]
     assert arguments.pop("progress") is None
     assert set(arguments) == {each.name for each in fields(Settings)}
-    assert Settings(**arguments) == Settings(
-        model="y ~ x",
-        residual="e",
-        sheet="readings",
-        wide="bp",
-        group=("judge", "wine"),
-        time="t",
-        series="s",
-        coords=("lon", "lat"),
-        lonlat=True,
-        neighbours="knn:6",
-        weights="w",
-        weights_kind="frequency",
-        focus=("x", "z"),
-        contrasts={"late − early": {"visit[late]": 1.0, "visit[early]": -1.0}, "half": {"x": 0.5}},
-        means=("visit",),
-        unadjusted=True,
-        assigned={"arm": "clinic", "dose": {"unit": "ward", "within": "clinic"}},
-        sampled="school",
-        missing="own-group",
-        ties="mean",
-        confidence=0.9,
-        alternative="greater",
-        material=(0.9, 1.2),
-        rehearsal=400,
-        seed=7,
-    )
+    assert settings_of(arguments) == FULL
 
 
 def test_examine_in_python_has_the_same_arguments() -> None:

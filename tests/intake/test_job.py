@@ -17,6 +17,7 @@ from clingstone.intake.job import read, written
 from clingstone.needs import InputError
 from clingstone.run import Settings
 
+# Every option, away from its default; the command line is asked for the same in tests/test_cli.py.
 FULL = Settings(
     model='y ~ x + C(arm) + log("odd")',
     residual="e",
@@ -31,7 +32,7 @@ FULL = Settings(
     weights="w",
     weights_kind="frequency",
     focus=("x", "arm: late"),
-    contrasts={"late − early": {"visit: late": 1.0, "visit: early": -1.0}, 'half "x"': {"x": 0.5}},
+    contrasts={"late − early": {"visit[late]": 1.0, "visit[early]": -1.0}, 'half "x"': {"x": 0.5}},
     means=("visit",),
     unadjusted=True,
     assigned={"arm": "clinic", "dose": {"unit": "ward", "within": "clinic"}},
