@@ -110,14 +110,14 @@ def curved(seed: int, season: float) -> Fits:
 
 def test_a_second_part_that_shows_with_the_first_in_is_repaired_as_well():
     found, _short, refits, advice = walk(curved(0, season=1.5))
-    assert found.missing.what == "curve in x, and with it a season of the year,"
+    assert found.missing.what == "curve in x, and beside it a season of the year,"
     assert "the second part, once the first is in" in found.missing.sign
     assert (advice.state, advice.remedy, advice.at) == ("mean first", "repaired-mean", "x + year")
     assert advice.repair.goes == ("day",)
     assert advice.structures == frozenset()
-    assert advice.headline.startswith("A curve in x, and with it a season of the year, seems to be missing")
+    assert advice.headline.startswith("A curve in x, and beside it a season of the year, seems to be missing")
     repaired = next(r for r in refits if r.remedy == "repaired-mean")
-    assert "curve in x, and with it a season of the year" in repaired.name
+    assert "curve in x, and beside it a season of the year" in repaired.name
     assert not repaired.name.endswith(",")
 
 

@@ -242,3 +242,15 @@ def test_subjects_of_sentences():
     assert subject(replace(standing("present"), label="farm/pen")) == "rows of one pen"
     assert subject(replace(standing("present"), key="serial")) == "rows that follow each other in time"
     assert subject(replace(standing("present"), key="spatial")) == "near places"
+
+
+def test_a_repair_with_a_robust_covariance_is_not_told_to_assume_equal_spread():
+    """A curve and a spread that grows with x, no structure declared: what is behind the repair counts."""
+    rng = np.random.default_rng(4)
+    x = rng.uniform(0, 3, 300)
+    y = x + 0.8 * x**2 + (0.2 + x) * rng.standard_normal(300)
+    _, short, _refits, advice = walk(make.fits(make.design({"x": x}), y))
+    assert (advice.state, advice.remedy) == ("mean first", "repaired-mean")
+    assert short.inner[0].remedy == "heteroscedasticity-robust"
+    assert "unequal-variances" not in {c.rule for c in advice.cautions}
+    assert "no dependence between rows could be looked for" in advice.headline

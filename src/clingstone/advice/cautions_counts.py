@@ -18,7 +18,8 @@ COUNTS = (
         "few-effective-clusters",
         GROUP & fact("focus at group level") & (fact("effective clusters") < 10) & (fact("groups") >= 10),
         Then("caveat"),
-        "The {groups} groups are so unequal that they count as {effective clusters} for the focus term.",
+        "The {groups} groups carry the focus term so unequally that they count as {effective clusters} for "
+        "it.",
         "carter-schnepel-steigerwald-2017",
         "strong",
     ),
@@ -94,7 +95,8 @@ COUNTS = (
         "long-range",
         SPATIAL & (fact("range over extent") >= 0.25) & (fact("range over extent") < 0.5),
         Then("caveat"),
-        "The dependence reaches over {range over extent} of the map's width; few independent places remain.",
+        "The dependence reaches over {range over extent} of the map's width: few places are independent of one "
+        "another, so its range is only roughly known.",
         "muller-watson-2022, webster-oliver-2007",
         "moderate",
     ),

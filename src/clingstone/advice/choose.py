@@ -58,7 +58,8 @@ def settle(
             state_rule = NO_REMEDY if needed(facts.ledger) else NOTHING
     need = needed(here.ledger)
     known = {} if state == "mean first" else shortlist.reached
-    here = here.plus(advised_facts(here, refits, chosen, need, known))
+    inner = shortlist.inner[0].remedy if shortlist.inner is not None else ""
+    here = here.plus(advised_facts(here, refits, chosen, need, known, inner))
     here = here.plus(rehearsed_facts(scores, chosen))
     beside = _beside(state_rule, here)
     decided = _state(state_rule, beside)

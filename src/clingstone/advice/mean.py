@@ -112,7 +112,7 @@ def _second(fits: Fits, finding: Finding, first: Missing, ledger: Ledger) -> Mis
         if found is not None and found.shows:
             return replace(
                 found,
-                what=f"{first.what.rstrip(',')}, and with it a {found.what.rstrip(',')},",
+                what=f"{first.what.rstrip(',')}, and beside it a {found.what.rstrip(',')},",
                 test=finding.test if other.test == CURVE else other.test,
                 about=" + ".join(dict.fromkeys(key for key in (first.about, found.about) if key)),
                 pattern=first.pattern or found.pattern,
@@ -287,6 +287,8 @@ def _left(
         verb = "still" if now.verdict == "present" else "may still"
         parts.append(f"{subject(now)} {verb} hang together ({_share(after, now.key)})")
     parts += [f"{subject(now)} turn out to hang together ({_share(after, now.key)})" for now in appears]
+    if not before.standing:
+        return "no dependence between rows could be looked for, as no structure was declared"
     if not parts:
         return "rows still show no dependence"
     worst = max((now.worst for now in open_end), key=lambda f: abs(np.log(f)), default=1.0)

@@ -4,7 +4,7 @@ from __future__ import annotations
 
 from scipy import special
 
-from clingstone.advice.entries import Scores
+from clingstone.advice.entries import REPAIRED, Scores
 from clingstone.advice.facts import Facts
 from clingstone.advice.named import Fact, named, words, yes
 from clingstone.advice.pick import SECOND, Reached, covers, same
@@ -100,13 +100,19 @@ def _ratio(name: str, robust: Refit, model: Refit, facts: Facts) -> list[Fact]:
 
 
 def advised_facts(
-    facts: Facts, refits: tuple[Refit, ...], chosen: Refit | None, need: frozenset[str], reached: Reached
+    facts: Facts,
+    refits: tuple[Refit, ...],
+    chosen: Refit | None,
+    need: frozenset[str],
+    reached: Reached,
+    inner: str = "",
 ) -> dict[str, Fact]:
-    """What is to be said of the advised refit; nothing without one."""
+    """What is to be said of the advised refit; nothing without one. inner : the remedy behind a repair."""
     if chosen is None:
         return {}
     missed = need - covers(chosen, facts, reached)
     lost = listed([subject(s) for s in facts.ledger.standing if s.key in missed])
+    remedy = inner if chosen.remedy == REPAIRED else chosen.remedy
     bound, settled = chosen.boundary, chosen.converged
     zero = bound and _no_variance(facts, chosen, reached)
     out = [
@@ -116,12 +122,12 @@ def advised_facts(
         yes("advised refit has no variance between groups", zero, "its variance between groups is zero"),
         yes(
             "advised refit models the order in time",
-            chosen.remedy in ORDERED,
+            remedy in ORDERED,
             "the advised refit fits a correlation along time",
         ),
         yes(
             "advised refit sums over each time",
-            chosen.remedy == "panel-hac",
+            remedy == "panel-hac",
             "the advised refit lets series move together at one time",
         ),
         yes("advised refit did not converge", not settled, "the advised refit's search did not settle"),
@@ -129,7 +135,7 @@ def advised_facts(
         *_second(facts, refits, chosen),
         yes(
             "advised refit allows unequal spread",
-            chosen.remedy in ANY_SPREAD,
+            remedy in ANY_SPREAD,
             "the advised refit does not assume equal spread",
         ),
         yes(
