@@ -6,10 +6,12 @@ from dataclasses import replace
 from typing import Any
 
 import numpy as np
+import pandas as pd
 import pytest
 from scipy import stats
-from scipy.spatial.distance import pdist, squareform
+from scipy.spatial.distance import cdist, pdist, squareform
 
+import clingstone
 from clingstone.covariance.fits import Fits
 from clingstone.design.design import Design
 from clingstone.design.response import Response
@@ -329,3 +331,20 @@ def test_confounding_is_told_where_place_and_predictor_share_a_pattern() -> None
     said = spread.confounded(same, same + far)
     assert len(said) == 1
     assert "Place and x1 carry the same pattern" in said[0]
+
+
+def test_a_predictor_smoother_than_the_residuals_is_told_by_the_whole_examination() -> None:
+    # x carries a smooth surface that moves y as well, unseen; z does not, and nothing is said of it.
+    rng = np.random.default_rng(3)
+    n = 150
+    P = rng.uniform(size=(n, 2)) * 1000
+    D = cdist(P, P)
+    smooth = np.linalg.cholesky(np.exp(-((D / 400) ** 2)) + 1e-6 * np.eye(n)) @ rng.standard_normal(n)
+    rough = np.linalg.cholesky(np.exp(-D / 200) + 1e-9 * np.eye(n)) @ rng.standard_normal(n)
+    x, z = smooth + 0.1 * rng.standard_normal(n), rng.standard_normal(n)
+    y = 1 + 1.5 * smooth + rough + 0.3 * rng.standard_normal(n) + z
+    table = pd.DataFrame({"x": x, "z": z, "y": y, "east": P[:, 0], "north": P[:, 1]})
+    found = clingstone.examine(table, model="y ~ x + z", coords=("east", "north"), rehearsal="none")
+    said = [note for note in found.refit("spatial-gls").notes if "carry the same pattern" in note]
+    assert len(said) == 1
+    assert said[0].startswith("Place and x ")

@@ -95,8 +95,8 @@ COUNTS = (
         "long-range",
         SPATIAL & (fact("range over extent") >= 0.25) & (fact("range over extent") < 0.5),
         Then("caveat"),
-        "The dependence reaches over {range over extent} of the map's width: few places are independent of one "
-        "another, so its range is only roughly known.",
+        "The dependence reaches over {range over extent} of the map's width: few places are independent of "
+        "one another, so its range is only roughly known.",
         "muller-watson-2022, webster-oliver-2007",
         "moderate",
     ),
