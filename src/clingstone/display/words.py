@@ -106,6 +106,8 @@ JOINERS = "\u200c\u200d"  # part of the spelling in Persian, Hindi and of joined
 
 def clean(text: str) -> str:
     """One printable line: control characters of a label never reach a terminal or a page."""
+    if text.isprintable():
+        return text
     spaced = "".join(" " if c in "\t\r\n\v\f" else c for c in text)
     return "".join("\ufffd" if _unseen(c) else c for c in spaced)
 

@@ -11,11 +11,14 @@ from typing import TYPE_CHECKING, Any
 from xml.sax.saxutils import escape
 
 from clingstone.display import Table, clean
+from clingstone.maths.once import kept
 from clingstone.writeup.look import LIGHT
 
 if TYPE_CHECKING:
     from matplotlib.axes import Axes
     from matplotlib.figure import Figure
+
+    from clingstone.results import Results
 
 WIDE = 660.0  # CSS pixels, as wide as the page's column of figures
 NARROW = 336.0  # a phone of 360 pixels less its margins
@@ -70,6 +73,11 @@ class Plate:
         with matplotlib.rc_context(_LOOK), _any_letter():  # type: ignore[arg-type]
             self.paint(width).savefig(out, format="png", dpi=72 * scale, metadata={"Software": None})
         return out.getvalue()
+
+
+def written(results: Results, plate: Plate, width: float = WIDE) -> str:
+    """The SVG of a plate of some results, drawn once for the page and for its file."""
+    return kept(results, ("svg", plate.name, width), lambda: plate.svg(width))
 
 
 @contextmanager

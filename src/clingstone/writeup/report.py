@@ -23,7 +23,7 @@ from clingstone.writeup.naming import label_of, pointed_at, with_rows
 from clingstone.writeup.outcome import USUAL, alternatives, tipping_words
 from clingstone.writeup.panels import timeline, tree
 from clingstone.writeup.places import sites
-from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate
+from clingstone.writeup.plate import NARROW, PAGE_FONT, WIDE, Plate, written
 from clingstone.writeup.read import account_pairs, advised, focus_rows, ordered, served
 from clingstone.writeup.sentences import design, model, sections, standing_words
 from clingstone.writeup.terminal import case_line
@@ -82,7 +82,7 @@ def report(results: Results) -> str:
     view["conventions"] = [
         _table(t) for n in focus_rows(results)[: figures.PANELS] if (t := tables.conventions(results, n))
     ]
-    view["bandwidths"] = [_plate(p) for p in bandwidths.plates(results)]
+    view["bandwidths"] = [_plate(results, p) for p in bandwidths.plates(results)]
     view["checklist"] = [_table(items(view["methods"])), _table(answers(view["methods"]))]
     return _environment().get_template("report.html.j2").render(view)
 
@@ -93,7 +93,7 @@ def fragment(results: Results) -> str:
     view = {
         "results": results,
         "state": STATES[results.advice.state],
-        "plates": [_raw(by_role(p.svg())) for p in drawn],
+        "plates": [_raw(by_role(written(results, p))) for p in drawn],
         "report_this": report_this(results),
         "light": _raw(variables(LIGHT)),
         "dark": _raw(variables(DARK)),
@@ -153,7 +153,7 @@ def _table(table: Table) -> Mapping[str, Any]:
     return {"caption": table.caption, "html": _raw(bare.to_html()), "note": clean(table.note)}
 
 
-def _plate(plate: Plate) -> Mapping[str, Any]:
+def _plate(results: Results, plate: Plate) -> Mapping[str, Any]:
     shown = plate.table
     if len(shown.rows) > curves.TABLED:
         note = f"The first {curves.TABLED} of {len(shown.rows)}; the file of the figure holds them all."
@@ -161,8 +161,8 @@ def _plate(plate: Plate) -> Mapping[str, Any]:
     return {
         "name": plate.name,
         "caption": plate.caption,
-        "wide": _raw(by_role(plate.svg(WIDE))),
-        "narrow": _raw(by_role(plate.svg(NARROW))),
+        "wide": _raw(by_role(written(results, plate, WIDE))),
+        "narrow": _raw(by_role(written(results, plate, NARROW))),
         "table": _table(shown),
         "note": clean(sentence(plate.note)),
     }
@@ -196,8 +196,8 @@ def _answer(results: Results) -> dict[str, Any]:
         "state": STATES[results.advice.state],
         "headline": parts,
         "long": len(parts[0]) > LONG,
-        "ladder": _plate(ladder) if ladder else None,
-        "shares": _plate(shares) if shares else None,
+        "ladder": _plate(results, ladder) if ladder else None,
+        "shares": _plate(results, shares) if shares else None,
         "more_focus": f"{count(hidden, 'more row')} in focus under “Every interval”." if hidden > 0 else "",
         "report_this": report_this(results),
         "how_sure": list(how_sure(results)),
@@ -230,7 +230,7 @@ def _case(results: Results) -> dict[str, Any]:
     return {
         "case_words": words,
         "case_tables": [_table(sizes)] if sizes else [],
-        "drawn": [_plate(p) for p in drawn if p is not None],
+        "drawn": [_plate(results, p) for p in drawn if p is not None],
     }
 
 
@@ -256,8 +256,8 @@ def _evidence(results: Results) -> list[dict[str, Any]]:
                 "silent": "" if first else _silent(found),
                 "others": [_finding(results, f) for f in rest],
                 "looked": _looked(found),
-                "plates": [_plate(p) for p in drawn if not p.quiet],
-                "quiet": [_plate(p) for p in quiet[:QUIET]],
+                "plates": [_plate(results, p) for p in drawn if not p.quiet],
+                "quiet": [_plate(results, p) for p in quiet[:QUIET]],
                 "more": count(max(0, len(quiet) - QUIET), "more figure"),
                 "unshown": len(quiet) > QUIET,
                 "table": _table(tables.evidence(results, structure)),
@@ -318,7 +318,7 @@ def _ledger(results: Results) -> dict[str, Any]:
 def _rehearsal(results: Results) -> dict[str, Any]:
     found, shown = rehearsed.plate(results), rehearsed.table(results)
     return {
-        "rehearsal_plate": _plate(found) if found else None,
+        "rehearsal_plate": _plate(results, found) if found else None,
         "rehearsal_table": _table(shown) if shown else None,
         "rehearsal_words": list(rehearsed.methods_words(results)),
     }
@@ -327,7 +327,7 @@ def _rehearsal(results: Results) -> dict[str, Any]:
 def _intervals(results: Results) -> dict[str, Any]:
     joint = tables.joint(results)
     return {
-        "ladders": [_plate(p) for p in figures.ladders(results)],
+        "ladders": [_plate(results, p) for p in figures.ladders(results)],
         "interval_tables": [_table(tables.intervals(results, n)) for n in focus_rows(results)],
         "other_tables": [_table(tables.intervals(results, n)) for n in tables.other_rows(results)],
         "joint": _table(joint) if joint else None,

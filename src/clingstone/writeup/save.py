@@ -21,7 +21,7 @@ from clingstone.writeup.latex import latex_text
 from clingstone.writeup.methods import methods_text
 from clingstone.writeup.panels import timeline, tree
 from clingstone.writeup.places import sites
-from clingstone.writeup.plate import Plate
+from clingstone.writeup.plate import Plate, written
 from clingstone.writeup.report import report
 
 RESULTS = "results.json"
@@ -98,7 +98,10 @@ def _steps(results: Results, target: Path) -> list[tuple[str, Callable[[Path], N
     steps = [(name, partial(_write_text, name, make)) for name, make in texts.items()]
     steps += [(WORD, partial(_write_word, results))] if word.available() else []
     steps += [(f"table {stem}", partial(_write_table, stem, t)) for stem, t in shown(results).items()]
-    return [*steps, *((f"figure {plate.name}", partial(_write_plate, plate)) for plate in plates(results))]
+    return [
+        *steps,
+        *((f"figure {plate.name}", partial(_write_plate, results, plate)) for plate in plates(results)),
+    ]
 
 
 def _write_text(name: str, make: Callable[[], str], folder: Path) -> None:
@@ -116,10 +119,10 @@ def _write_table(stem: str, table: Table, folder: Path) -> None:
     _write_text(f"{stem}.tex", lambda: table.to_latex() + "\n", inside)
 
 
-def _write_plate(plate: Plate, folder: Path) -> None:
+def _write_plate(results: Results, plate: Plate, folder: Path) -> None:
     inside = folder / FIGURES
     inside.mkdir(exist_ok=True)
-    (inside / f"{plate.name}.svg").write_text(plate.svg(), encoding="utf-8", newline="\n")
+    (inside / f"{plate.name}.svg").write_text(written(results, plate), encoding="utf-8", newline="\n")
     (inside / f"{plate.name}.png").write_bytes(plate.png())
     (inside / f"{plate.name}.csv").write_text(plate.table.to_csv(), encoding="utf-8", newline="\n")
 
