@@ -163,3 +163,14 @@ def test_the_error_model_is_written_out_as_an_equation():
     base = fixture.trial()
     sloped = replace(base, ledger=replace(base.ledger, model=("slope:clinic:age",)))
     assert "As an equation" not in methods_text(sloped)  # not written where a part has no letter
+
+
+def test_one_statistic_of_two_tests_is_told_once_with_both_sources():
+    results = fixture.trial()
+    first = next(f for f in results.evidence if f.structure == "group" and f.verdict != "not applicable")
+    said = "With order in time taken into account, rows of one clinic share 26 %."
+    one = replace(first, primary=False, given=("serial",), sentence=said, source="harville-fenech-1985")
+    both = (one, replace(one, test="restricted-lr", source="greven-2008"))
+    text = methods_text(replace(results, evidence=both))
+    assert text.count("rows of one clinic share 26 % (") == 1
+    assert "(Harville & Fenech 1985; Greven et al. 2008)" in text

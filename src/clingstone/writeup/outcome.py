@@ -54,8 +54,11 @@ def checks(results: Results) -> Iterable[Sentence]:
     if first:
         yield Sentence(_how(results, first), ("M12",))
     given = [f for f in run if not f.primary and f.given and f.structure in STRUCTURES]
+    alike: dict[str, list[str]] = {}  # two tests may come to one statistic, each from its own source
     for f in given:
-        yield Sentence(with_source(f.sentence, f.source), ("M12",))
+        alike.setdefault(f.sentence, []).append(f.source)
+    for said, sources in alike.items():
+        yield Sentence(with_source(said, ", ".join(dict.fromkeys(sources))), ("M12",))
     rest = [f for f in run if not f.primary and f not in given]
     seen = [f for f in with_most_given(rest) if f.verdict in ("present", "unclear")]
     if seen:
