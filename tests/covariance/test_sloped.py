@@ -5,8 +5,10 @@ from __future__ import annotations
 from dataclasses import replace
 
 import numpy as np
+import pandas as pd
 import pytest
 
+from clingstone.case import Case
 from clingstone.covariance import slopedeach
 from clingstone.covariance.algebras import Dense
 from clingstone.covariance.components import slope_key
@@ -259,3 +261,17 @@ def test_slopes_beside_crossed_levels_are_dense_when_small_and_refused_when_larg
     small = Fits(f.response, replace(f.run, limits=Limits(dense_rows=50)))
     with pytest.raises(NotSupported, match="cut across one another"):
         small[node]
+
+
+def test_slopes_beside_order_in_time_are_dense_when_small_and_the_refusal_names_what_allows_for_both():
+    g, x, _, y = table()
+    step = np.array([np.sum(g[:i] == g[i]) for i in range(len(g))])
+    frame = {"y": y, "x1": x, "g": g.astype(str), "t": step}
+    case = Case.from_formula(pd.DataFrame(frame), "y ~ x1", group="g", time="t", series="g")
+    f = Fits(case.response, Run(case.settings))
+    node = {"group:g", "serial", slope_key("g", "x1")}
+    assert isinstance(f.algebra(node), Dense)
+    small = Fits(f.response, replace(f.run, limits=Limits(dense_rows=50)))
+    with pytest.raises(NotSupported, match="only up to 50 rows") as stop:
+        small[node]
+    assert "cluster-robust or mixed-robust" in stop.value.hint

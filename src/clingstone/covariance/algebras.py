@@ -291,6 +291,13 @@ def choose(design: Design, components: Sequence[Component], limits: Limits) -> C
     if design.n <= limits.dense_rows:
         return Dense(design, pieces)
     names = ", ".join(component.label for component in components)
+    if pieces_of(pieces) and any(piece.key == "serial" for piece in pieces):
+        raise NotSupported(
+            f"{names}: slopes that vary and a dependence along time are fitted together only up to "
+            f"{limits.dense_rows:,} rows, and this table has {design.n:,}",
+            "Ask for cluster-robust or mixed-robust by the groups: they allow for slopes that vary and any "
+            "dependence inside a group at once.",
+        )
     raise NotSupported(
         f"{names} cut across one another; fitting them together needs a table of at most "
         f"{limits.dense_rows:,} rows, and this one has {design.n:,}",
