@@ -10,7 +10,7 @@ from clingstone.display import instead
 from clingstone.needs import InputError, NotSupported, memory
 
 T = TypeVar("T")
-COPIES = 18  # times the numeric columns: the peak of an examination with group and time, at a million rows
+COPIES = 14  # times the numeric columns: the peak of an examination with group and time, at a million rows
 
 
 def is_parted(data: Any) -> bool:
