@@ -1,7 +1,7 @@
 """What a replicate costs, from the design alone, and so how many a short rehearsal makes.
 
-Microseconds on one ordinary core, fitted once to measured times; they are never measured while a rehearsal
-runs, because its size must be the same on every machine.
+Microseconds on one ordinary core, set once from measured times (``tests/benchmarks/prices.py`` measures them
+again); never measured while a rehearsal runs, because its size must be the same on every machine.
 """
 
 from __future__ import annotations
@@ -70,7 +70,7 @@ def _of_gls(ready: GlsReady, study: Study) -> float:
         S, grid = len(many.fields.load.c), many.grid
         # Ten evaluations with derivatives; the grid of starts is factored once for all columns.
         made = grid * (100 + 0.0003 * S**3) / (FEWEST * max(1, len(study.truths)))
-        return made + 0.05 * grid * S + 10 * (80 + 0.035 * S**2 + 0.0002 * S**3)
+        return made + 0.05 * grid * S + 10 * (100 + 0.03 * S**2 + 0.0005 * S**3)
     if many is None:
         S = design.spatial.count if design.spatial is not None else n
         return 40.0 * d * (150 + 0.02 * S**2 + 0.0003 * S**3 + 0.01 * n)

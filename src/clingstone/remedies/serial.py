@@ -232,7 +232,7 @@ class Car1(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = DATED
     source: ClassVar[str] = "jones-1980"
-    price: ClassVar[Price | None] = Price(2000.0, 20.0)
+    price: ClassVar[Price | None] = Price(40_000.0, 20.0)
 
     def prepare(self, design: Design, working: ErrorModel | None) -> FadingReady:
         series = enough_times(design, self.limits)
@@ -317,7 +317,7 @@ class Arma(Plain):
     estimand: ClassVar[Estimand] = "pooled"
     needs: ClassVar[Needs] = Needs(parts=frozenset({"serial"}), known_design=True, unweighted=True)
     source: ClassVar[str] = "ansley-1979"
-    price: ClassVar[Price | None] = Price(10000.0, 150.0)
+    price: ClassVar[Price | None] = Price(40_000.0, 50.0)
 
     def prepare(self, design: Design, working: ErrorModel | None) -> ArmaReady:
         series = enough_times(design, self.limits)
