@@ -125,6 +125,13 @@ def _means() -> list[w.World]:
             batch=SOME,
         ),
         W("missed trend, 72 times, x rough", w.missed(12, 6, "trend"), TIME, wrong=True, batch=SOME),
+        W(
+            "missed curve in z that x follows, 12 groups",
+            w.missed(12, 6, "z", follows=True),
+            {**GROUP, "model": "y ~ x + z"},
+            covered=False,
+            wrong=True,
+        ),
     ]
 
 

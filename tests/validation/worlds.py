@@ -211,16 +211,18 @@ def places(n: int, practical: float, share: float, predictor: str, repeats: int 
     return draw
 
 
-def missed(G: int, m: int, what: str) -> Callable[..., Truth]:
-    """Independent rows whose mean lacks a curve in x or in z, or a trend in time."""
+def missed(G: int, m: int, what: str, follows: bool = False) -> Callable[..., Truth]:
+    """Independent rows whose mean lacks a curve in x or z, or a trend in time; x may follow what it lacks."""
 
     def draw(rng: np.random.Generator) -> Truth:
         n = G * m
         g = np.repeat(np.arange(G), m)
         t = np.arange(n)
         x = rng.standard_normal(n)
-        z = np.linspace(-2, 2, n) if what == "z" else rng.standard_normal(n)
+        z = np.linspace(-2, 2, n) if what == "z" and not follows else rng.standard_normal(n)
         add = {"x": 0.6 * (x**2 - 1), "z": 0.8 * (z**2 - np.mean(z**2)), "trend": 1.5 * (t / n - 0.5) * 2}
+        if follows:
+            x = 0.8 * add[what] + 0.6 * x
         return Truth(x, np.eye(n), {"z": z, "g": [f"g{k}" for k in g], "t": t}, mean=add[what])
 
     return draw
