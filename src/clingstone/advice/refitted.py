@@ -206,7 +206,7 @@ def _is_moved(ordinary: Interval, chosen: Interval, ledger: Ledger, rows: int) -
 
 def _moved(facts: Facts, refits: tuple[Refit, ...], chosen: Refit) -> list[Fact]:
     ordinary = find(refits, "ordinary")
-    if ordinary is None:
+    if ordinary is None or chosen.remedy == REPAIRED:  # a part put into the mean may move every estimate
         return []
     before = {row.term: row for row in ordinary.intervals}
     mine = [row for row in focus_rows(chosen, facts) if row.term in before]
