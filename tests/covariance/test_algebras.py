@@ -7,8 +7,9 @@ from collections.abc import Callable
 import numpy as np
 import pytest
 
-from clingstone.covariance.algebras import Dense, Layered
+from clingstone.covariance.algebras import Dense
 from clingstone.covariance.fits import Fits
+from clingstone.covariance.layered import Layered
 from clingstone.design.response import Response
 from clingstone.maths import reml
 from clingstone.needs import Limits, NotSupported

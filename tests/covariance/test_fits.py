@@ -347,7 +347,7 @@ def test_many_places_start_from_some_of_them(monkeypatch: pytest.MonkeyPatch) ->
     y = np.linalg.cholesky(np.exp(-D / 0.1) + 0.3 * np.eye(300)) @ rng.standard_normal(300)
     level = (np.arange(300) == 7).astype(float)  # a column that most subsets of places do not know
     plain = fits(y, level, xy=xy)[{"spatial"}]
-    monkeypatch.setattr("clingstone.covariance.algebras.HEAVY_SITES", 100)
+    monkeypatch.setattr("clingstone.covariance.layered.HEAVY_SITES", 100)
     monkeypatch.setattr("clingstone.covariance.fits.START_SITES", 80)
     started = fits(y, level, xy=xy)[{"spatial"}]
     assert "of 1 starts" in started.history[0]

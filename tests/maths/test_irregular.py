@@ -6,7 +6,7 @@ import numpy as np
 import pytest
 from tests.remedies.cases import design, fits
 
-from clingstone.covariance import algebras
+from clingstone.covariance import layered
 from clingstone.maths import reml
 from clingstone.maths.irregular import Panels
 from clingstone.maths.markov import Links
@@ -57,10 +57,10 @@ def test_the_fit_of_many_irregular_rows_is_the_same_either_way(monkeypatch):
         u[k] = phi[k] * u[k - 1] + np.sqrt(1 - phi[k] ** 2) * rng.normal()
     X = np.column_stack([np.ones(n), rng.normal(size=n)])
     fast = fits(design(X, elapsed=t), u)
-    monkeypatch.setattr(algebras, "MANY_ROWS", 10**9)
+    monkeypatch.setattr(layered, "MANY_ROWS", 10**9)
     slow = fits(design(X, elapsed=t), u)
     one, other = slow[{"serial"}], slow.algebra({"serial"}).gram(slow[{"serial"}].theta[:, 0], slow.response)
-    monkeypatch.setattr(algebras, "MANY_ROWS", 5000)
+    monkeypatch.setattr(layered, "MANY_ROWS", 5000)
     same = fast[{"serial"}]
     assert same.theta == pytest.approx(one.theta, abs=1e-5)
     assert same.loglik == pytest.approx(one.loglik, abs=1e-5)

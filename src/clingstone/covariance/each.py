@@ -7,8 +7,9 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from clingstone.covariance.algebras import Chosen, Layered
+from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.fieldeach import FieldEach, field_each
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import SerialPiece
 from clingstone.covariance.ranges import Ranges, ranges
 from clingstone.covariance.stacked import Forms
@@ -64,18 +65,7 @@ class Each:
 
     def grams(self, theta: Array, columns: Places) -> Grams:
         """Grams of columns (K,) of y, each at its own θ (d, K)."""
-        size = max(1, BLOCK // self._doubles)
-        if len(columns) <= size:
-            return self._grams(theta, columns)
-        parts = [
-            self._grams(theta[:, i : i + size], columns[i : i + size]) for i in range(0, len(columns), size)
-        ]
-        return Grams(
-            np.concatenate([g.QQ for g in parts]),
-            np.concatenate([g.QE for g in parts]),
-            np.concatenate([g.EE for g in parts]),
-            np.concatenate([g.logdet for g in parts]),
-        )
+        return Grams.in_blocks(self._grams, theta, columns, max(1, BLOCK // self._doubles))
 
     def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach:
         """What Satterthwaite's df take, at θ (d, K); free : coordinates that are not at a bound."""

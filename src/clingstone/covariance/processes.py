@@ -12,9 +12,9 @@ from typing import Protocol
 
 import numpy as np
 
-from clingstone.covariance.algebras import Layered
 from clingstone.covariance.components import Parameter
 from clingstone.covariance.fits import Fits
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import RHO_HIGH, SerialPiece
 from clingstone.covariance.visits import VisitPiece
 from clingstone.design.design import Design

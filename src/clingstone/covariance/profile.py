@@ -16,11 +16,12 @@ import numpy as np
 import numpy.typing as npt
 from scipy import optimize, stats
 
-from clingstone.covariance.algebras import Chosen, Layered
+from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.bundles import Bundle
 from clingstone.covariance.each import Each, each
 from clingstone.covariance.fieldeach import FieldEach
 from clingstone.covariance.fits import ErrorModel
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.profileline import Line
 from clingstone.covariance.ranges import Ranges
 from clingstone.covariance.sloped import Sloped

@@ -17,7 +17,8 @@ from dataclasses import dataclass
 import numpy as np
 from scipy import linalg
 
-from clingstone.covariance.algebras import Chosen, Layered
+from clingstone.covariance.algebras import Chosen
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import SpatialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response

@@ -54,16 +54,7 @@ class SlopedEach:
 
     def grams(self, theta: Array, columns: Places) -> Grams:
         """Grams of columns (K,) of y, each at its own θ (d, K)."""
-        size = self._size
-        parts = [
-            self._grams(theta[:, i : i + size], columns[i : i + size]) for i in range(0, len(columns), size)
-        ]
-        return Grams(
-            np.concatenate([g.QQ for g in parts]),
-            np.concatenate([g.QE for g in parts]),
-            np.concatenate([g.EE for g in parts]),
-            np.concatenate([g.logdet for g in parts]),
-        )
+        return Grams.in_blocks(self._grams, theta, columns, self._size)
 
     def slopes(self, theta: Array, columns: Places, free: Sequence[int]) -> SlopesEach:
         """What Satterthwaite's df take, at θ (d, K); free : coordinates that are not at a bound."""

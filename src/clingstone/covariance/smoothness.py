@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 
 import numpy as np
 
-from clingstone.covariance.algebras import Layered, stack
+from clingstone.covariance.layered import Layered, stack
 from clingstone.covariance.pieces import SpatialPiece
 from clingstone.maths import matern, reml
 from clingstone.maths.once import Array, kept

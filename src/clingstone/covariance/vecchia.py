@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from clingstone.covariance.algebras import Layered
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import SpatialPiece, ratio_of
 from clingstone.design.response import Response
 from clingstone.maths import groups, matern, vecchia

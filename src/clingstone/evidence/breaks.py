@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING, NamedTuple
 import numpy as np
 import numpy.typing as npt
 
-from clingstone.covariance.algebras import Layered
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import SerialPiece
 from clingstone.design.derived import extend
 from clingstone.design.design import Design

@@ -7,7 +7,7 @@ they agree; here every step is taken for all columns at once.
 from __future__ import annotations
 
 from collections.abc import Callable, Sequence
-from dataclasses import dataclass
+from dataclasses import dataclass, fields
 
 import numpy as np
 import numpy.typing as npt
@@ -47,6 +47,17 @@ class Grams:
         c = self.EE - np.einsum("kp,kp->k", self.QE, delta)
         logdet = 2 * np.log(np.einsum("kpp->kp", L)).sum(axis=1)
         return delta, c, np.asarray(logdet)
+
+    @classmethod
+    def in_blocks(
+        cls, made: Callable[[Array, Places], Grams], theta: Array, columns: Places, size: int
+    ) -> Grams:
+        """Grams of columns (K,), each at its own θ (d, K), made ``size`` columns at a time."""
+        if len(columns) <= size:
+            return made(theta, columns)
+        starts = range(0, len(columns), size)
+        parts = [made(theta[:, i : i + size], columns[i : i + size]) for i in starts]
+        return cls(*(np.concatenate([getattr(g, each.name) for g in parts]) for each in fields(cls)))
 
     def only(self, which: Places | Flags) -> Grams:
         """Those of some columns."""

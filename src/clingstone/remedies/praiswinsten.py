@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING, ClassVar
 
 import numpy as np
 
-from clingstone.covariance.algebras import Layered
+from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import SerialPiece
 from clingstone.design.design import Design
 from clingstone.design.response import Response
