@@ -102,21 +102,15 @@ class Visits:
         """One pattern's part of Σ_g Z'V_iZ, tr(V⁻¹V_iV⁻¹V_j), tr(V⁻¹V_i) and Q'V⁻¹V_iV⁻¹V_jV⁻¹Q."""
         inverse = np.linalg.inv(sigma[np.ix_(one.at, one.at)])
         S = np.einsum("ik,klab,lj->ijab", inverse, one.moments, inverse, optimize=True)
-        place = {int(v): k for k, v in enumerate(one.at)}
-        own = []
+        C = np.zeros((len(self.pairs), *sigma.shape))  # V_i, an entry of Σ and its mirror
         for index, (i, j) in enumerate(self.pairs):
-            if i in place and j in place:
-                x, y = place[i], place[j]
-                own.append((index, ((x, y),) if x == y else ((x, y), (y, x))))
-        for index, entries in own:
-            for x, y in entries:
-                D[index] += S[x, y]
-                trace[index] += one.count * inverse[y, x]
-            for other, pairs in own:
-                for x, y in entries:
-                    for u, v in pairs:
-                        QQ[index, other] += inverse[y, u] * S[x, v]
-                        t[index, other] += one.count * inverse[v, x] * inverse[y, u]
+            C[index, i, j] = C[index, j, i] = 1.0
+        C = C[:, one.at][:, :, one.at]
+        W = C @ inverse
+        D += np.tensordot(C, S, 2)
+        trace += one.count * np.einsum("ixx->i", W)
+        t += one.count * np.tensordot(W, W, ((1, 2), (2, 1)))
+        QQ += np.tensordot(W, np.tensordot(C, S, (2, 1)), ((1, 2), (2, 1)))
 
 
 @dataclass(frozen=True, eq=False)
