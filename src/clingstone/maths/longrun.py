@@ -7,7 +7,7 @@ Bakirov & Székely (2006) for the law of a ratio with one positive weight.
 
 from __future__ import annotations
 
-from collections.abc import Iterator
+from collections.abc import Callable, Iterator
 from dataclasses import dataclass
 
 import numpy as np
@@ -87,15 +87,42 @@ class Grid:
         return out
 
     def cosines(self) -> Array:
-        """(n, Σν) the same as a matrix C: Λ = C'u. For n small by contract."""
-        C = np.zeros((self.N, int(self.counts.sum())))
-        j = 0
-        for start, N, nu in zip(self.starts, self.lengths, self.counts, strict=True):
-            t = np.arange(N) + 0.5
-            angle = np.outer(t, np.arange(1, nu + 1)) * (np.pi / N)
-            C[start : start + N, j : j + nu] = np.sqrt(2 / nu) * np.cos(angle)
-            j += nu
-        return np.asarray(C[self.place])
+        """(n, max ν) the cosines of each row's own series, zeros beyond its ν: Λ are their sums by series."""
+        series: Places = np.repeat(np.arange(len(self.lengths)), self.lengths)[self.place]
+        N, nu = (np.asarray(each[series])[:, None] for each in (self.lengths, self.counts))
+        t = (self.place - self.starts[series] + 0.5)[:, None]
+        j = np.arange(1, int(self.counts.max()) + 1)
+        return np.where(j <= nu, np.sqrt(2 / np.maximum(nu, 1)) * np.cos(np.pi * j * t / N), 0.0)
+
+    def law(self, Q: Array, a: Array, correlate: Callable[[Array], Array]) -> tuple[Array, Array, Array]:
+        """Covariances of a'ε and F'ε, F = M(a∘C): (q, q), (q, q, r) and (q, r, q, r), r = Σν.
+
+        Q : (n, p) with M = I − QQ'. a : (n, q). correlate : H (n, k) ↦ ΩH. A series has cosines of its own
+        and goes with no other, so all but the projection is a block per series: O(n ν² + r² p).
+        """
+        (n, q), p = a.shape, Q.shape[1]
+        C = self.cosines()
+        U = (a[:, :, None] * C[:, None]).reshape(n, -1)
+        V, Z = correlate(U), correlate(a)
+        r = int(self.counts.sum())
+        own = np.zeros((q, r, q, r))
+        QU, QV, aV = np.zeros((p, q, r)), np.zeros((p, q, r)), np.zeros((q, q, r))
+        rows: Places = np.asarray(np.searchsorted(self.place, np.r_[self.starts, self.N]))
+        ends = np.cumsum(self.counts)
+        for s, nu in enumerate(self.counts):
+            if nu == 0:
+                continue
+            mine, at = slice(rows[s], rows[s + 1]), slice(ends[s] - nu, ends[s])
+            u, v = (block[mine].reshape(-1, q, C.shape[1])[:, :, :nu].reshape(-1, q * nu) for block in (U, V))
+            own[:, at, :, at] = (u.T @ v).reshape(q, nu, q, nu)
+            QU[:, :, at] = (Q[mine].T @ u).reshape(p, q, nu)
+            QV[:, :, at] = (Q[mine].T @ v).reshape(p, q, nu)
+            aV[:, :, at] = (a[mine].T @ v).reshape(q, q, nu)
+        K, KV = QU.reshape(p, q * r), QV.reshape(p, q * r)
+        cross = K.T @ (KV - correlate(Q).T @ Q @ K / 2)
+        FF = own.reshape(q * r, q * r) - cross - cross.T
+        aF = aV - np.tensordot(Z.T @ Q, QU, 1)
+        return a.T @ Z, aF, FF.reshape(q, r, q, r)
 
     def correlate(self, block: Array, rho: float) -> Array:
         """ΩH for Ω_ts = ρ^|t−s| within series, H (n, k): one filter each way on the ticks."""

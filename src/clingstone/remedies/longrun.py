@@ -3,6 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field, replace
+from functools import partial
 from typing import TYPE_CHECKING, ClassVar, Literal, TypeGuard
 
 import numpy as np
@@ -11,7 +12,7 @@ from clingstone.design.design import Design
 from clingstone.design.response import Response
 from clingstone.maths import reference
 from clingstone.maths.longrun import Grid, RatioLaw, joint_law
-from clingstone.maths.once import Array, once
+from clingstone.maths.once import Array, kept, once
 from clingstone.needs import Family, Limits, Needs, NotSupported, memory
 from clingstone.remedies.joint import Joint, hotelling_joint
 from clingstone.remedies.kernel import Bandwidth, KernelReady, by_lags
@@ -23,7 +24,7 @@ from clingstone.structure.serial import Series
 if TYPE_CHECKING:
     from clingstone.covariance.fits import ErrorModel, Fits
 
-EXACT_ROWS = 10_000  # above, t with ν df: the exact law would need an n × ν array
+EXACT_ROWS = 10_000  # above, t with ν df: the law of t needs a table of all cosines by all
 RHO_LIMIT = 0.999  # a working ρ nearer to one has no stationary law to refer to
 
 
@@ -70,11 +71,10 @@ class LongRunReady(LinearReady):
         """η and scale under the working AR(1); Lazarus et al. (2018) take η = ν and a scale of one."""
         a = self.design.Q @ self.W[:, list(columns)]
         q, r = len(columns), int(self.grid.counts.sum())
-        memory(8.0 * self.design.n * q * r * 3, f"the joint law of {q} coefficients with {r} cosines")
-        F = (a[:, :, None] * self.grid.cosines()[:, None, :]).reshape(self.design.n, q * r)
-        F -= self.design.Q @ (self.design.Q.T @ F)
-        G = (F.T @ _correlate(self.grid, F, self.rho, self.noise)).reshape(q, r, q, r)
-        return joint_law(G.transpose(0, 2, 1, 3), a.T @ _correlate(self.grid, a, self.rho, self.noise))
+        memory(8.0 * (q * r) ** 2 * 4, f"the joint law of {q} coefficients with {r} cosines")
+        held = partial(_correlate, self.grid, rho=self.rho, noise=self.noise)
+        aa, _, FF = self.grid.law(self.design.Q, a, held)
+        return joint_law(FF.transpose(0, 2, 1, 3), aa)
 
     def account(self, fits: Fits) -> Account:
         items: list[tuple[str, str]] = [("series", f"{len(self.grid.lengths)}"), ("steps", f"{self.grid.N}")]
@@ -264,15 +264,12 @@ def _correlate(grid: Grid, block: Array, rho: float, noise: float) -> Array:
 
 def _exact_laws(design: Design, grid: Grid, W: Array, rho: float, noise: float = 0.0) -> tuple[RatioLaw, ...]:
     """Per reported row, the law of (a'ε)²/‖F'ε‖², a = Qw, F = MD_aC, under Ω = AR(1) with ρ and row noise."""
-    q = int(grid.counts.sum())
-    memory(8.0 * design.n * q * 4, f"the exact law with {q} cosines")
-    C = grid.cosines()
-    laws = []
-    for w in W.T:
-        a = design.Q @ w
-        F = a[:, None] * C
-        F -= design.Q @ (design.Q.T @ F)
-        H = np.column_stack([a, F])
-        G = H.T @ _correlate(grid, H, rho, noise)
-        laws.append(RatioLaw.of((G + G.T) / 2))
-    return tuple(laws)
+    r = int(grid.counts.sum())
+    memory(8.0 * r**2 * 4, f"the exact law with {r} cosines")
+    held = partial(_correlate, grid, rho=rho, noise=noise)
+
+    def one(w: Array) -> RatioLaw:
+        aa, aF, FF = grid.law(design.Q, (design.Q @ w)[:, None], held)
+        return RatioLaw.of(np.block([[aa, aF[:, 0]], [aF[:, 0].T, FF[0, :, 0]]]))
+
+    return kept(design, ("cosine laws", rho, noise), lambda: tuple(one(w) for w in W.T))
