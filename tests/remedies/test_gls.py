@@ -11,9 +11,10 @@ from scipy import optimize
 from clingstone.covariance import information
 from clingstone.design.design import Contrast, Term
 from clingstone.maths import reml
-from clingstone.needs import NotSupported
+from clingstone.needs import Limits, NotSupported
 from clingstone.remedies import explain, refit, remedy
 from clingstone.remedies.gls import TOGETHER, _most_likely
+from tests.covariance.worlds import fits as world
 from tests.remedies.cases import ar1, clustered, design, fits
 
 MIXED, AR1, SPATIAL, JOINT = (remedy(i) for i in ("mixed-intercept", "ar1", "spatial-gls", "joint"))
@@ -259,6 +260,18 @@ def test_a_level_with_too_few_groups_is_left_out_of_the_default():
     assert MIXED.abouts(of) == ("district/ward",)
     y = rng.normal(size=12)[ward] + rng.normal(size=72)
     assert refit(MIXED, "", fits(of, y)).at == "district/ward"
+
+
+def test_all_together_without_what_cuts_across_names_it_and_accounts_for_the_rest():
+    rng = np.random.default_rng(31)
+    judge, site = rng.integers(0, 12, 180), rng.integers(0, 30, 180)
+    xy = rng.uniform(size=(30, 2))[site]
+    y = rng.normal(size=12)[judge] + rng.normal(size=30)[site] + rng.normal(size=180)
+    made = world(y, rng.normal(size=180), groups={"judge": judge}, xy=xy, limits=Limits(dense_rows=100))
+    assert set(made.left_out) == {"spatial"}
+    found = refit(remedy("joint"), "", made)
+    assert any("Not in this fit" in note and "cut across" in note for note in found.notes)
+    assert {"variance of judge", "variance of row noise"} <= {label for label, _ in found.account.items}
 
 
 # ---- refusals -----------------------------------------------------------------------------

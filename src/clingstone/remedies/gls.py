@@ -90,7 +90,8 @@ class GlsReady(FittedReady):
         model, columns = self.columns(fits)
         notes: tuple[str, ...] = ()
         if len(columns) == 1:
-            notes += bound_notes(self.components, model)
+            notes += bound_notes(self._held(fits), model)
+            notes += tuple(f"Not in this fit: {why.reason}." for why in self._left_out(fits))
             notes += map_notes(fits, self.remedy.node(fits), columns[0].coef)
         return self.estimates(
             columns,
@@ -110,11 +111,19 @@ class GlsReady(FittedReady):
     def account(self, fits: Fits) -> Account:
         node = self.remedy.node(fits)
         unit = "" if fits.design.spatial is None else fits.design.spatial.unit
-        found = gls_account(self.remedy.estimation, self.rule, self.components, fits[node], unit)
+        found = gls_account(self.remedy.estimation, self.rule, self._held(fits), fits[node], unit)
         items = [*found.items, *map_items(fits, node)]
         if self.remedy.id == "mixed-intercept" and self.remedy.estimation == "REML":
             items += profiled(fits.algebra(node), fits.response, fits[node], fits.run.settings.confidence)
         return replace(found, items=tuple(items))
+
+    def _held(self, fits: Fits) -> tuple[Component, ...]:
+        """Those components that the fit holds: of all together, the ones whose algebra the data carry."""
+        node = self.remedy.node(fits)
+        return tuple(one for one in self.components if one.key in node)
+
+    def _left_out(self, fits: Fits) -> list[Refusal]:
+        return list(fits.left_out.values()) if self.remedy.id == "joint" else []
 
     # ---- one column ----------------------------------------------------------------------
 
