@@ -21,7 +21,7 @@ from clingstone.maths.partition import Partition
 from clingstone.maths.search import Optimum, minimise
 from clingstone.needs import NotSupported
 
-NOISE_ROWS = 20_000  # rows up to which row noise is fitted beside the process
+NOISE_ROWS = 5_000  # rows up to which row noise is fitted beside the process
 
 
 def inner_node(fits: Fits, part: Partition) -> Node:
