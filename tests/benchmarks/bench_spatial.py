@@ -47,7 +47,7 @@ def rows(n: int, p: int = 5) -> tuple[Any, Any]:
 def one_fit(X: Any, y: Any) -> Way:
     import statsmodels.api as sm
 
-    return Way(ONE_FIT, lambda: sm.OLS(y, X).fit().bse, floor=True)
+    return Way(ONE_FIT, lambda: sm.OLS(y, X).fit().bse, same=False, floor=True)
 
 
 def moran_p(W: sparse.csr_array, X: Any, y: Any, depth: str = "exact") -> float:
