@@ -21,11 +21,11 @@ import clingstone
 from clingstone.results import to_json
 
 rng = np.random.default_rng(1)
-g, t = np.repeat(np.arange(30), 8), np.tile(np.arange(8), 30)
-x = rng.standard_normal(240)
-y = x + rng.standard_normal(30)[g] + rng.standard_normal(240)
+g, t = np.repeat(np.arange(12), 8), np.tile(np.arange(8), 12)
+x = rng.standard_normal(96)
+y = x + rng.standard_normal(12)[g] + rng.standard_normal(96)
 table = pd.DataFrame({"y": y, "x": x, "g": g, "t": t})
-found = clingstone.examine(table, model="y ~ x", group="g", time="t", rehearsal=20)
+found = clingstone.examine(table, model="y ~ x", group="g", time="t", rehearsal=2)
 sys.stdout.write(to_json(found.results))
 """
 

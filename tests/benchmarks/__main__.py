@@ -5,6 +5,9 @@ python -m tests.benchmarks reml cr2-million   those whose id, file or piece hold
 python -m tests.benchmarks --again [WORD …]   also those measured already
 python -m tests.benchmarks --list | --page    the ids; the page alone, from docs/benchmarks.json
 
+What a reader must know of a run besides (a machine that was not quiet, a row that was broken off) stands as a
+list of sentences in docs/benchmarks.json, under ``remarks``.
+
 A row runs in a process of its own and is kept as soon as it is done, so a run can be broken off and
 taken up again. Ratios are taken within rounds, but a quiet machine gives steadier ones.
 """

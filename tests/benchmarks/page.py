@@ -30,12 +30,11 @@ TOPICS = {
     "bench_examine": "The whole examination",
     "bench_start": "Starting",
     "bench_remedies": "Refits",
-    "bench_group_remedies": "Refits for groups",
-    "bench_mixed": "Mixed models and tests for groups",
-    "bench_reml": "Likelihoods",
+    "bench_groups": "Groups",
     "bench_serial": "Order in time",
     "bench_spatial": "Places",
     "bench_ratio": "Exact tails",
+    "bench_reading": "Reading files",
     "bench_rehearsal": "Rehearsal",
 }
 
@@ -134,6 +133,7 @@ def write(held: Mapping[str, Any], ids: Sequence[str]) -> None:
             "## How it was made\n\n",
             f"{here['processor']}, {here['cores']} cores, {here['memory']}, {here['system']}. {built}. ",
             f"Code {', '.join(codes)} (a fingerprint of the source and of the benchmarks).\n\n",
+            *(f"{line}\n\n" for line in held.get("remarks", ())),
             "```text\npython -m tests.benchmarks\n```\n",
         ]
     PAGE.write_text("".join(out), encoding="utf-8")
