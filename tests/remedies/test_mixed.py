@@ -331,7 +331,7 @@ def test_free_covariance_keeps_its_size():
 # ---- many columns of y with random slopes --------------------------------------------------------------
 
 
-@pytest.mark.parametrize("df", ["kenward-roger", "satterthwaite"])
+@pytest.mark.parametrize("df", ["kenward-roger", pytest.param("satterthwaite", marks=pytest.mark.slow)])
 def test_many_columns_with_slopes_are_read_as_one_by_one(df):
     X, group, _, Y = panel(seed=12, G=20, slope=0.9, drop=0.2, B=8)
     of = case(X, group)

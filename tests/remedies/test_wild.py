@@ -220,7 +220,7 @@ def test_explain_gives_the_other_weights():
 # ---- what it promises ------------------------------------------------------------------------
 
 
-@pytest.mark.parametrize("G", [8, 15])
+@pytest.mark.parametrize("G", [8, pytest.param(15, marks=pytest.mark.slow)])
 def test_size_with_few_unequal_clusters(G):
     # Intraclass correlation 0.3, clusters of 3 to 20 rows, an arm by cluster; 3,000 columns of y: the
     # Monte-Carlo standard error of a size of 0.05 is 0.004. With eight such clusters the restricted bootstrap

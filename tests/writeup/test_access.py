@@ -22,7 +22,10 @@ from tests.writeup.test_browser import open_page
 UNFOLD = "document.querySelectorAll('details').forEach(d => d.open = true);"
 
 
-@pytest.fixture(scope="module", params=["trial", "stream", "wells", "hostile"])
+PAGES = [pytest.param("wells", marks=pytest.mark.slow), "trial", "stream", "hostile"]
+
+
+@pytest.fixture(scope="module", params=PAGES)
 def page(request, tmp_path_factory):
     path = tmp_path_factory.mktemp("page") / f"{request.param}.html"
     path.write_text(report(getattr(fixture, request.param)()), encoding="utf-8")
