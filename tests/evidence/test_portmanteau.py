@@ -74,6 +74,7 @@ def test_exact_moments_equal_dense_ones() -> None:
     assert corrected(e, 3)[0] == pytest.approx(expected)
 
 
+@pytest.mark.slow
 def test_size_in_short_series_with_trend() -> None:
     # 30 rows, trend and a random walk: chi-squared on the plain statistic rejects far too often.
     rng = np.random.default_rng(3)

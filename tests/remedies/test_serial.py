@@ -230,6 +230,7 @@ def test_two_steps_equal_an_obvious_loop():
 # ---- median-unbiased ρ ----------------------------------------------------------------------------
 
 
+@pytest.mark.slow
 def test_median_unbiased_correlation_is_so_and_its_interval_covers():
     """20 rows with a trend and ρ = 0.7: residual correlations are far too low, the exact law is not."""
     rng = np.random.default_rng(13)

@@ -430,6 +430,7 @@ def test_the_places_are_drawn_where_they_lie_and_it_is_said_when_not_all_are():
     assert places.sites(fixture.trial()) is None
 
 
+@pytest.mark.slow
 def test_many_rows_make_no_large_page():
     """Figures draw a bounded number of marks: ten times the rows leave the page less than twice as large."""
     import pandas as pd
