@@ -16,7 +16,7 @@ import numpy as np
 from clingstone.covariance.algebras import Chosen
 from clingstone.covariance.layered import Layered
 from clingstone.covariance.pieces import GroupPiece, SpatialPiece
-from clingstone.design.design import Design
+from clingstone.covariance.ranges import Mapped
 from clingstone.design.response import Response
 from clingstone.maths import matern, reml
 from clingstone.maths.each import Grams, Minima, Places, newton
@@ -52,20 +52,8 @@ def field_each(algebra: Chosen, response: Response) -> FieldEach | None:
 
 
 @dataclass(frozen=True, eq=False)
-class FieldEach:
+class FieldEach(Mapped):
     """A field with levels of whole places over B columns of y; θ as in the algebra."""
-
-    algebra: Layered
-    response: Response
-
-    @property
-    def design(self) -> Design:
-        return self.response.design
-
-    @property
-    def piece(self) -> SpatialPiece:
-        assert isinstance(self.algebra.spatial, SpatialPiece)
-        return self.algebra.spatial
 
     @property
     def levels(self) -> tuple[GroupPiece, ...]:

@@ -56,8 +56,8 @@ class Shared:
 
 
 @dataclass(frozen=True, eq=False)
-class Ranges:
-    """Places alone over B columns of y; θ = (ln φ, ln λ)."""
+class Mapped:
+    """A field, alone or with levels, over B columns of y; θ as in the algebra."""
 
     algebra: Layered
     response: Response
@@ -70,6 +70,11 @@ class Ranges:
     def piece(self) -> SpatialPiece:
         assert isinstance(self.algebra.spatial, SpatialPiece)
         return self.algebra.spatial
+
+
+@dataclass(frozen=True, eq=False)
+class Ranges(Mapped):
+    """Places alone over B columns of y; θ = (ln φ, ln λ)."""
 
     @property
     @once
